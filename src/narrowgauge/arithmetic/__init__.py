@@ -1,0 +1,1 @@
+"""Formats, rounding and elementary operations on bare carrier arrays."""

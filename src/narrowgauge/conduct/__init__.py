@@ -1,0 +1,1 @@
+"""Run, judge, and run again until a stopping rule is content."""

@@ -1,0 +1,1 @@
+"""The duck array: how a kernel's NumPy reaches the emulated arithmetic."""

@@ -1,0 +1,1 @@
+"""Random input: keyed streams, normals, and the coupling of fine and coarse paths."""

@@ -1,0 +1,47 @@
+"""Uniforms of a block: keyed by integers, made once in float64 for all arms.
+
+A block's stream is PCG64DXSM(SeedSequence(seed, spawn_key=(purpose, level, block))). The spawn key keeps streams
+apart where a seed list [seed, level, block] can collide; a uniform is (j + 1/2) / 2^52 with j the upper 52 bits of one
+output, so that it is never 0 or 1 and its normal is finite.
+"""
+
+from __future__ import annotations
+
+from enum import IntEnum
+
+import numpy as np
+import numpy.typing as npt
+
+__all__ = ["Purpose", "block_paths", "uniforms"]
+
+_MOST_DRAWS = 2**22  # of one block: bounds the memory of a block, whatever the level
+_GRAIN = 1024  # paths; a block is a multiple of it and is cut into 32 batches
+
+
+class Purpose(IntEnum):
+    """What a stream is for: the first integer of its key, so that no two uses see the same numbers."""
+
+    AUDIT = 0
+    IDENTITY = 1
+    TRIAL = 2
+
+
+def block_paths(block: int, steps: int, factors: int) -> int:
+    """Return the paths of one block: the largest multiple of 1,024 up to `block` within 2^22 draws, at least 1,024.
+
+    It follows from the audit file alone, never from the machine.
+    """
+    fitting = _MOST_DRAWS // (steps * factors)
+    return max(_GRAIN, min(block, fitting) // _GRAIN * _GRAIN)
+
+
+def uniforms(
+    seed: int, purpose: Purpose, level: int, block: int, shape: tuple[int, ...]
+) -> npt.NDArray[np.float64]:
+    """Return the uniforms of a block in (0, 1), float64 of the given shape, in C order."""
+    key = np.random.SeedSequence(seed, spawn_key=(int(purpose), level, block))
+    words = np.asarray(np.random.PCG64DXSM(key).random_raw(int(np.prod(shape))))
+    values = (words >> np.uint64(12)).astype(np.float64)  # exact: 52 bits
+    values += 0.5  # exact: 53 bits
+    values *= 2.0**-52
+    return values.reshape(shape)

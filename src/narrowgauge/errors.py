@@ -1,0 +1,77 @@
+"""Every error a user can meet: one class for each thing that can go wrong, each with its exit code.
+
+A message says, in this order: where (the call, or the path into the file), what is wrong with the value,
+what is accepted, and, where it helps, what to do.
+"""
+
+from __future__ import annotations
+
+__all__ = [
+    "ArithmeticNotBuiltError",
+    "AuditFileError",
+    "AuditFolderError",
+    "DispatchError",
+    "EscapeError",
+    "KernelError",
+    "NarrowgaugeError",
+    "RefusedError",
+    "SettingsMixedError",
+]
+
+
+class NarrowgaugeError(Exception):
+    """Base of all errors that are the input's fault and not the program's; ends with exit code 2."""
+
+    exit_code = 2
+
+
+class AuditFileError(NarrowgaugeError):
+    """The audit file cannot be used.
+
+    `source` is the file (or "audit" for a mapping handed over from Python), `key` the path into it.
+    """
+
+    def __init__(self, source: str, key: str, problem: str, accepted: str = "") -> None:
+        self.source, self.key, self.problem, self.accepted = source, key, problem, accepted
+        where = f"{source}: {key}" if key else source
+        super().__init__(f"{where}: {problem}" + (f"; accepted: {accepted}" if accepted else ""))
+
+
+class AuditFolderError(NarrowgaugeError):
+    """The folder for the results cannot be used, or holds another audit."""
+
+
+class ArithmeticNotBuiltError(NarrowgaugeError):
+    """A rounding mode, subnormal rule or fused product that this version does not compute."""
+
+
+class KernelError(NarrowgaugeError):
+    """The kernel raised in the reference, returned the wrong thing, or does not reproduce plain NumPy.
+
+    `level` and `arm` name the run. The kernel's own exception, if there is one, is `__cause__`.
+    """
+
+    def __init__(self, message: str, *, level: int | None = None, arm: str | None = None) -> None:
+        self.level, self.arm = level, arm
+        place = "" if level is None else f"level {level}" + (f", arm {arm}" if arm else "") + ": "
+        super().__init__(place + message)
+
+
+class DispatchError(NarrowgaugeError):
+    """Base of what stops a kernel inside the emulated arithmetic; recorded in the run when it is made.
+
+    NumPy swallows TypeError and ValueError in places, and a kernel may swallow anything: the setting keeps
+    each of these, so that a swallowed one still fails the run.
+    """
+
+
+class EscapeError(DispatchError):
+    """A number was about to leave the emulated arithmetic unseen."""
+
+
+class RefusedError(DispatchError):
+    """An operation, argument or type that the emulated arithmetic does not offer."""
+
+
+class SettingsMixedError(DispatchError):
+    """Arrays of two different runs met in one operation."""

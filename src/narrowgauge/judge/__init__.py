@@ -1,0 +1,1 @@
+"""Pure functions: moments in, judgements out."""

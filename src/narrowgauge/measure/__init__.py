@@ -1,0 +1,1 @@
+"""From a kernel and its draws to mergeable moments."""

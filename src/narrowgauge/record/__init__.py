@@ -1,0 +1,1 @@
+"""Documents: their types, their canonical text, their strict reader."""
