@@ -14,7 +14,6 @@ Every array here is (steps, factors, paths).
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Literal
 
@@ -48,12 +47,10 @@ class Draws:
     def of(cls, takes: Takes, uniforms: Doubles, step: float, refinement: int) -> Draws:
         """Return the draws made from a block's uniforms, (steps, factors, paths); `step` is the fine h."""
         normals = exact_normals(uniforms)
-        values = {
-            "increments": lambda: math.sqrt(step) * normals,
-            "normals": lambda: normals,
-            "uniforms": lambda: uniforms,
-        }
-        return cls(takes=takes, values=values[takes](), normals=normals, refinement=refinement)
+        values = {"normals": normals, "uniforms": uniforms}.get(takes)
+        if values is None:
+            values = math.sqrt(step) * normals
+        return cls(takes=takes, values=values, normals=normals, refinement=refinement)
 
 
 def fine_draws(draws: Draws, arithmetic: Arithmetic) -> Floats:

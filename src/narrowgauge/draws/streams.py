@@ -35,9 +35,7 @@ def block_paths(block: int, steps: int, factors: int) -> int:
     return max(_GRAIN, min(block, fitting) // _GRAIN * _GRAIN)
 
 
-def uniforms(
-    seed: int, purpose: Purpose, level: int, block: int, shape: tuple[int, ...]
-) -> npt.NDArray[np.float64]:
+def uniforms(seed: int, purpose: Purpose, level: int, block: int, shape: tuple[int, ...]) -> npt.NDArray[np.float64]:
     """Return the uniforms of a block in (0, 1), float64 of the given shape, in C order."""
     key = np.random.SeedSequence(seed, spawn_key=(int(purpose), level, block))
     words = np.asarray(np.random.PCG64DXSM(key).random_raw(int(np.prod(shape))))

@@ -23,6 +23,4 @@ def pairs_of(arms: Sequence[str], wide: Sequence[str]) -> tuple[tuple[str, str],
     Every arm against the reference, which judges bias, and against each wide format of more precision.
     """
     targets = [*dict.fromkeys([*wide, REFERENCE])]
-    return tuple(
-        (a, b) for a in arms for b in targets if a != b and FORMATS[b].precision > FORMATS[a].precision
-    )
+    return tuple((a, b) for a in arms for b in targets if a != b and FORMATS[b].precision > FORMATS[a].precision)

@@ -59,12 +59,8 @@ class QuantityTally:
         return QuantityTally(
             values={a: s + other.values[a] for a, s in self.values.items() if a in other.values},
             errors={a: s + other.errors[a] for a, s in self.errors.items() if a in other.errors},
-            differences={
-                a: s + other.differences[a] for a, s in self.differences.items() if a in other.differences
-            },
-            corrections={
-                p: s + other.corrections[p] for p, s in self.corrections.items() if p in other.corrections
-            },
+            differences={a: s + other.differences[a] for a, s in self.differences.items() if a in other.differences},
+            corrections={p: s + other.corrections[p] for p, s in self.corrections.items() if p in other.corrections},
             coarse=self.coarse + other.coarse if both else None,  # type: ignore[operator]  # both are there
         )
 
@@ -106,9 +102,8 @@ class _Paths:
         return self.fine[name] - self.coarse[name] if self.coarse else self.fine[name]
 
     def finite(self) -> npt.NDArray[np.bool_]:
-        return np.logical_and.reduce(
-            [np.isfinite(v) for part in (self.fine, self.coarse) for v in part.values()]
-        )
+        parts = (self.fine, self.coarse)
+        return np.asarray(np.logical_and.reduce([np.isfinite(v) for part in parts for v in part.values()]))
 
 
 class BlockRunner:
@@ -130,9 +125,7 @@ class BlockRunner:
         """Whether a level has a coarse path on the same draws."""
         return level > 0 and self._file.kernel.coupling == "sum"
 
-    def draws(
-        self, level: int, block: int, purpose: Purpose = Purpose.AUDIT, paths: int | None = None
-    ) -> Draws:
+    def draws(self, level: int, block: int, purpose: Purpose = Purpose.AUDIT, paths: int | None = None) -> Draws:
         """Return the float64 draws of a block, (steps, factors, paths)."""
         file = self._file
         shape = (file.ladder.steps(level), file.kernel.factors, paths or self.paths(level))

@@ -31,14 +31,12 @@ class Moments:
     m4: Doubles
 
     @classmethod
-    def of(
-        cls, values: Doubles, keep: npt.NDArray[np.bool_] | None = None, batches: int = BATCHES
-    ) -> Moments:
+    def of(cls, values: Doubles, keep: npt.NDArray[np.bool_] | None = None, batches: int = BATCHES) -> Moments:
         """Return the moments of values (paths,) cut into equal batches in order; `keep` leaves paths out."""
         table = values.reshape(batches, -1)
         if keep is None:
             count = np.full(batches, float(table.shape[1]))
-            kept = 1.0
+            kept: Doubles = np.ones(())
         else:
             mask = keep.reshape(batches, -1)
             count = mask.sum(axis=1).astype(np.float64)
@@ -113,7 +111,7 @@ class Moments:
 
     @property
     def kurtosis(self) -> float | None:
-        """n m4 / m2^2 over all batches, 3 for a normal distribution; None without variance."""
+        """Fourth central moment over the squared second, 3 for a normal distribution; None without variance."""
         whole = self.whole()
         return float(whole.count[0] * whole.m4[0] / whole.m2[0] ** 2) if whole.m2[0] > 0 else None
 
@@ -133,9 +131,7 @@ class Moments:
         def pad(values: Doubles) -> Doubles:
             return np.append(values, 0.0)
 
-        return Moments(
-            count=pad(self.count), mean=pad(self.mean), m2=pad(self.m2), m3=pad(self.m3), m4=pad(self.m4)
-        )
+        return Moments(count=pad(self.count), mean=pad(self.mean), m2=pad(self.m2), m3=pad(self.m3), m4=pad(self.m4))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
