@@ -1,3 +1,20 @@
 """narrowgauge measures, level by level, where a Monte Carlo path kernel may run in low precision."""
 
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from narrowgauge.api import Audit, audit
+
+__all__ = ["Audit", "audit"]
 __version__ = "0.1.0"
+
+
+def __getattr__(name: str) -> Any:
+    """Import the audit only when it is asked for, so that `import narrowgauge` costs nothing."""
+    if name in __all__:
+        from narrowgauge import api
+
+        return getattr(api, name)
+    raise AttributeError(f"module 'narrowgauge' has no attribute {name!r}")

@@ -25,13 +25,16 @@ _BATCH_DOF = 31
 class FinestLevel:
     """`level`: the largest l such that the format pays on every level up to l; `possible`: the largest not refuted.
 
-    None where there is no such level; `reason` says why a figure is missing or where it ends.
+    None where there is no such level; `reason` says why a figure is missing or where it ends. An extrapolated level
+    is an estimate: there `possible` takes every bound of the extrapolation in the format's favour, and `cautious`
+    against it, with the drift at its upper bound even where it is not significant.
     """
 
     level: int | None
     possible: int | None
     extrapolated: bool
     reason: str | None
+    cautious: int | None = None
     decided_by: str | None = None
 
 
@@ -78,6 +81,7 @@ def over_quantities(found: Mapping[str, FinestLevel]) -> FinestLevel:
         possible=None if possible in (None, -1) else possible,
         extrapolated=worst.extrapolated,
         reason=worst.reason,
+        cautious=worst.cautious,
         decided_by=decider,
     )
 
@@ -99,26 +103,34 @@ def _extrapolated(finest: int, scheme: Scheme, file: AuditFile, beyond: Beyond, 
         )
     quantile = float(stats.t.ppf(1 - alpha / 2, _BATCH_DOF))
     u = FORMATS[scheme.narrow].unit_roundoff
-    level = possible = finest
-    pays = hopes = True
+    low_factor, high_factor = _walk_factors(beyond.correction)
+    ends = {"cautious": finest, "level": finest, "possible": finest}
+    still = set(ends)
     reason = "extrapolated"
     for further in range(finest + 1, finest + 1 + _FURTHEST):
         steps = file.ladder.steps(further)
         if correction_at(beyond.error, steps, u, with_drift_high=False) > _ERROR_SHARE * beyond.value_variance:
             reason = "extrapolated to where the error is a tenth of the variance"
             break
-        spread = 2.0 ** (quantile * beyond.decay.log2_se(further))
-        signal = beyond.decay.at(further)
-        low_factor, high_factor = _walk_factors(beyond.correction)
-        high_noise = correction_at(beyond.correction, steps, u, with_drift_high=True) * high_factor
-        low_noise = correction_at(beyond.correction, steps, u, with_drift_high=False) * low_factor
-        pays = pays and _edge(scheme, file, further, signal / spread, high_noise) > 1
-        hopes = hopes and _edge(scheme, file, further, signal * spread, low_noise) >= file.worthwhile
-        level = further if pays else level
-        possible = further if hopes else possible
-        if not hopes:
+        signal, spread = beyond.decay.at(further), 2.0 ** (quantile * beyond.decay.log2_se(further))
+        noise = correction_at(beyond.correction, steps, u, with_drift_high=False)
+        worst = correction_at(beyond.correction, steps, u, with_drift_high=True)
+        pays = {
+            "cautious": _edge(scheme, file, further, signal / spread, worst * high_factor) > 1,
+            "level": _edge(scheme, file, further, signal, noise) > 1,
+            "possible": _edge(scheme, file, further, signal * spread, noise * low_factor) >= file.worthwhile,
+        }
+        still = {name for name in still if pays[name]}
+        ends |= dict.fromkeys(still, further)
+        if not still:
             break
-    return FinestLevel(level=level, possible=max(level, possible), extrapolated=True, reason=reason)
+    return FinestLevel(
+        level=ends["level"],
+        possible=max(ends["level"], ends["possible"]),
+        extrapolated=ends["level"] > finest,
+        reason=reason,
+        cautious=min(ends["level"], ends["cautious"]),
+    )
 
 
 def _walk_factors(fit: AccumulationFit) -> tuple[float, float]:

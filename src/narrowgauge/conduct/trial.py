@@ -1,0 +1,162 @@
+"""The identity run, and the trial of every arm: what is rounded, and what would escape.
+
+Before anything is measured the kernel runs once under float64 through the whole machinery and must give plain NumPy's
+bits: what differs went a way of its own.
+"""
+
+from __future__ import annotations
+
+from collections import Counter
+from collections.abc import Sequence
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+
+from narrowgauge.arithmetic.arithmetic import arithmetic_named
+from narrowgauge.dispatch.setting import Place, Route, Setting
+from narrowgauge.draws.coarsen import Draws, fine_draws
+from narrowgauge.draws.streams import Purpose
+from narrowgauge.errors import DispatchError, KernelError
+from narrowgauge.kernel.auditfile import AuditFile
+from narrowgauge.kernel.contract import evaluate
+from narrowgauge.kernel.loading import KernelSource, private_copy
+from narrowgauge.measure.arms import REFERENCE
+from narrowgauge.measure.block import BlockRunner
+from narrowgauge.record.audit import FaultEntry, ReachEntry, ReachLine, TrialEntry
+
+__all__ = ["identity_run", "try_arms"]
+
+_PATHS = 1024
+_LEVEL = 2  # coarse enough to be over at once, fine enough to pass through the time loop more than once
+
+
+class _Count:
+    """An observer that counts operations by line, and the decisions of the control flow."""
+
+    def __init__(self) -> None:
+        self.operations: Counter[tuple[Place | None, str, Route]] = Counter()
+        self.decisions = 0
+
+    def saw(self, setting: Setting, operation: str, route: Route, operands: Sequence[Any], result: Any) -> None:
+        """Count one operation."""
+        self.operations[setting.where(), operation, route] += 1
+
+    def decided(self, setting: Setting) -> None:
+        """Count one decision."""
+        self.decisions += 1
+
+
+def identity_run(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> ReachEntry:
+    """Run the kernel under plain NumPy and under float64 through the whole machinery; return what the latter reached.
+
+    Raises KernelError where the results differ in any bit or the kernel raises, and what the machinery refuses.
+    """
+    level = min(_LEVEL, file.ladder.finest)
+    draws = runner.draws(level, 0, Purpose.IDENTITY, _PATHS)
+    count = _Count()
+    plain = _plainly(file, kernel, draws, level)
+    try:
+        copy = private_copy(kernel, arithmetic_named(REFERENCE), count)
+        with_machinery = evaluate(copy, *_arguments(file, draws, level, REFERENCE))
+    except (DispatchError, KernelError):
+        raise
+    except (Exception, SystemExit) as problem:  # plain NumPy did not raise
+        what = f"the kernel raised {type(problem).__name__}: {problem}, where plain NumPy does not"
+        raise KernelError(what, level=level, arm=REFERENCE) from problem
+    for name in plain | with_machinery:
+        _same_bits(name, plain, with_machinery, level)
+    remarks = (
+        [f"{place}: {text}" if place else text for text, place in copy.setting.remarks.items()] if copy.setting else []
+    )
+    return _reach(count, remarks)
+
+
+def try_arms(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> TrialEntry:
+    """Run the identity run and every narrow arm once on a small sample; return what would be rounded and escape."""
+    faults = []
+    identical = True
+    reach = ReachEntry(operations=0, rounded=0, share=None, decisions=0, lines=[], remarks=[])
+    try:
+        reach = identity_run(file, kernel, runner)
+    except DispatchError as problem:
+        identical = False
+        faults.append(FaultEntry(arm=REFERENCE, message=str(problem)))
+    level = min(_LEVEL, file.ladder.finest)
+    draws = runner.draws(level, 0, Purpose.IDENTITY, _PATHS)
+    for arm in runner.arms[1:]:
+        try:
+            evaluate(private_copy(kernel, arithmetic_named(arm)), *_arguments(file, draws, level, arm))
+        except DispatchError as problem:
+            faults.append(FaultEntry(arm=arm, message=str(problem)))
+        except KernelError as problem:
+            raise KernelError(str(problem), level=level, arm=arm) from problem.__cause__
+        except (Exception, SystemExit) as problem:  # the audit itself keeps what a narrow arm raises as data
+            faults.append(FaultEntry(arm=arm, message=f"the kernel raised {type(problem).__name__}: {problem}"))
+    return TrialEntry(identical=identical, reach=reach, faults=faults)
+
+
+def _plainly(file: AuditFile, kernel: KernelSource, draws: Draws, level: int) -> dict[str, npt.NDArray[np.float64]]:
+    """Run the kernel under plain NumPy; what it raises is a KernelError with the kernel's own as its cause."""
+    arm = "plain NumPy"
+    try:
+        return evaluate(private_copy(kernel, None), *_arguments(file, draws, level, REFERENCE))
+    except KernelError as problem:
+        raise KernelError(str(problem), level=level, arm=arm) from problem.__cause__
+    except (Exception, SystemExit) as problem:  # the reference: its own traceback is shown
+        what = f"the kernel raised {type(problem).__name__}: {problem}"
+        raise KernelError(what, level=level, arm=arm) from problem
+
+
+def _arguments(file: AuditFile, draws: Draws, level: int, arm: str) -> tuple[Any, float, dict[str, object], str]:
+    return (
+        fine_draws(draws, arithmetic_named(arm)),
+        file.ladder.step_size(level),
+        file.keywords(),
+        file.kernel.layout,
+    )
+
+
+def _same_bits(
+    name: str, plain: dict[str, npt.NDArray[np.float64]], other: dict[str, npt.NDArray[np.float64]], level: int
+) -> None:
+    if name not in plain or name not in other:
+        raise KernelError(f"the quantity {name!r} is returned in one of two runs only", level=level)
+    here, there = plain[name], other[name]
+    differs = (here.view(np.int64) != there.view(np.int64)) & ~(np.isnan(here) & np.isnan(there))
+    if not differs.any():
+        return
+    first = int(np.argmax(differs))
+    raise KernelError(
+        f"float64 through the emulation does not give plain NumPy's bits for {name!r}: {int(differs.sum())} of "
+        f"{here.size} paths differ, the first is path {first} with {there[first]!r} for {here[first]!r}. Either the "
+        "kernel is not a function of its draws alone, or an operation of it is not emulated rightly",
+        level=level,
+    )
+
+
+def _reach(count: _Count, remarks: list[str]) -> ReachEntry:
+    lines = [
+        ReachLine(
+            file=place.file if place else None,
+            line=place.line if place else None,
+            operation=operation,
+            route=route,
+            count=number,
+        )
+        for (place, operation, route), number in sorted(count.operations.items(), key=lambda item: _order(item[0]))
+    ]
+    rounded = sum(line.count for line in lines if line.route == "rounded")
+    return ReachEntry(
+        operations=sum(line.count for line in lines),
+        rounded=rounded,
+        share=1.0 if rounded else None,
+        decisions=count.decisions,
+        lines=lines,
+        remarks=remarks,
+    )
+
+
+def _order(key: tuple[Place | None, str, Route]) -> tuple[str, int, str]:
+    place, operation, _ = key
+    return (place.file, place.line, operation) if place else ("", 0, operation)

@@ -1,0 +1,330 @@
+"""The audit file: what to run, on which ladder, to which error, in which formats, at what cost.
+
+A file is TOML; a mapping of the same shape, made in Python, passes the same checks. Whatever is wrong is one
+AuditFileError with the dotted key, what is wrong, and what is accepted.
+"""
+
+from __future__ import annotations
+
+import copy
+import difflib
+import re
+import tomllib
+from collections.abc import Callable, Mapping
+from pathlib import Path
+from typing import TypeVar
+
+import msgspec
+
+from narrowgauge.arithmetic.formats import FORMATS
+from narrowgauge.errors import AuditFileError
+from narrowgauge.kernel.auditparameters import check_parameter, passed, plain
+from narrowgauge.kernel.audittables import (
+    RULES,
+    TABLES,
+    CostTable,
+    FormatsTable,
+    KernelTable,
+    LadderTable,
+    SamplingTable,
+    Table,
+    TableError,
+    TargetTable,
+    check_run,
+    dotted,
+    kind_of,
+    shown,
+)
+
+__all__ = [
+    "AuditFile",
+    "CostTable",
+    "FormatsTable",
+    "KernelTable",
+    "LadderTable",
+    "SamplingTable",
+    "TargetTable",
+    "audit_file_from",
+    "bytes_of",
+    "most_steps",
+    "read_audit_file",
+]
+
+_ORDER = ("kernel", "parameters", "ladder", "target", "formats", "cost", "sampling")
+_REQUIRED = ("kernel", "ladder")
+_BLOCK_DRAWS, _SMALLEST_BLOCK = 2**22, 1024
+_Record = TypeVar("_Record", bound=Table)
+_WORTHWHILE: float = TargetTable(rmse=1.0).worthwhile
+
+
+class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
+    """One audit, with every default filled in.
+
+    `source` is what messages call it, `folder` what paths are relative to, `function` the function that a
+    mapping held at kernel.run, `assumed` the dotted key of every default that was used, in order of the file.
+    """
+
+    kernel: KernelTable
+    parameters: Mapping[str, object]
+    ladder: LadderTable
+    target: TargetTable | None
+    formats: FormatsTable
+    cost: CostTable
+    sampling: SamplingTable
+    source: str
+    folder: Path
+    function: Callable[..., object] | None
+    assumed: tuple[str, ...]
+
+    @property
+    def arms(self) -> tuple[str, ...]:
+        """The formats that are needed, least precise first: narrow, wide, today's and the reference."""
+        needed = {*self.formats.narrow, *self.formats.wide, self.formats.today, "float64"}
+        return tuple(sorted((name for name in FORMATS if name in needed), key=_precision))
+
+    @property
+    def stem(self) -> str:
+        """The file's name without its ending; names the folder of the results."""
+        return Path(self.source).stem or "audit"
+
+    @property
+    def worthwhile(self) -> float:
+        """The edge (a ratio of costs) below which a format is not worth having, with a target or without."""
+        return _WORTHWHILE if self.target is None else self.target.worthwhile
+
+    def keywords(self) -> dict[str, object]:
+        """Return the parameters as a kernel gets them; arrays of numbers are new float64 arrays each call."""
+        return {name: passed(value) for name, value in self.parameters.items()}
+
+    def asked(self) -> dict[str, object]:
+        """Return the file as a plain document with every default filled in; an absent target is None."""
+        tables: dict[str, object] = {
+            "kernel": _document(self.kernel),
+            "parameters": copy.deepcopy(dict(self.parameters)),
+            "ladder": _document(self.ladder),
+            "target": None if self.target is None else _document(self.target),
+            "formats": _document(self.formats),
+            "cost": _document(self.cost),
+            "sampling": _document(self.sampling),
+        }
+        return {**tables, "assumed": list(self.assumed)}
+
+
+def read_audit_file(path: Path) -> AuditFile:
+    """Read and check an audit file; AuditFileError says what is wrong, and where."""
+    source = str(path)
+    data = bytes_of(path, "TOML")
+    try:
+        text = data.decode("utf-8-sig")  # some editors put a byte order mark before UTF-8
+    except UnicodeDecodeError as problem:
+        line = data.count(b"\n", 0, problem.start) + 1
+        what = f"line {line} is not UTF-8 (byte 0x{data[problem.start]:02x})"
+        raise AuditFileError(source, "", what, "TOML in UTF-8") from None
+    try:
+        raw = tomllib.loads(text)
+    except RecursionError:
+        raise AuditFileError(source, "", "arrays or tables are nested too deeply", "TOML in UTF-8") from None
+    except ValueError as problem:  # TOMLDecodeError, or an integer with more digits than Python converts
+        raise AuditFileError(source, "", f"this is not TOML: {problem}", "TOML in UTF-8") from None
+    return _checked(raw, source, Path(path).absolute().parent, None)
+
+
+def bytes_of(path: Path, language: str) -> bytes:
+    """Return what a file holds; AuditFileError says why it cannot be read, and what it should be."""
+    source, accepted = str(path), f"the path of a {language} file"
+    try:
+        return Path(path).read_bytes()
+    except FileNotFoundError:
+        raise AuditFileError(source, "", "there is no such file", accepted) from None
+    except IsADirectoryError:
+        raise AuditFileError(source, "", "this is a folder", accepted) from None
+    except OSError as problem:
+        reason = problem.strerror or str(problem)
+        raise AuditFileError(source, "", f"cannot be read ({reason})", accepted) from None
+
+
+def audit_file_from(mapping: Mapping[str, object], source: str = "audit") -> AuditFile:
+    """Check a mapping in the shape of an audit file; kernel.run may be a function.
+
+    A key of a table whose value is None counts as not given, tuples and NumPy's arrays and scalars count as
+    the arrays and numbers of TOML. Paths are relative to the current folder. Raises AuditFileError.
+    """
+    try:
+        tables = plain(mapping)
+    except TableError as problem:
+        raise AuditFileError(source, problem.key, problem.problem, problem.accepted) from None
+    if not isinstance(tables, dict):
+        raise AuditFileError(source, "", f"{shown(tables)} is {kind_of(tables)}", "a mapping of tables")
+    raw: dict[str, object] = {}
+    for name, table in tables.items():
+        if name in TABLES and isinstance(table, dict):
+            raw[name] = {key: value for key, value in table.items() if value is not None}
+        elif table is not None:
+            raw[name] = table
+    function = None
+    kernel = raw.get("kernel")
+    if isinstance(kernel, dict) and callable(kernel.get("run")):
+        function = kernel["run"]
+        name = getattr(function, "__qualname__", type(function).__qualname__)
+        kernel["run"] = f"{getattr(function, '__module__', None) or type(function).__module__}:{name}"
+    return _checked(raw, source, Path.cwd(), function)
+
+
+def most_steps(factors: int) -> int:
+    """Return the most steps of a level: the smallest block, 1,024 paths, must fit 2^22 draws."""
+    return _BLOCK_DRAWS // _SMALLEST_BLOCK // factors
+
+
+def _precision(name: str) -> int:
+    return FORMATS[name].precision
+
+
+def _document(table: msgspec.Struct) -> dict[str, object]:
+    values = ((name, getattr(table, name)) for name in table.__struct_fields__)
+    return {name: list(value) if isinstance(value, tuple) else copy.copy(value) for name, value in values}
+
+
+def _checked(raw: dict[str, object], source: str, folder: Path, function: Callable[..., object] | None) -> AuditFile:
+    """Return the audit file of a plain mapping; every refusal leaves as an AuditFileError."""
+    try:
+        return _assembled(raw, source, folder, function)
+    except TableError as problem:
+        raise AuditFileError(source, problem.key, problem.problem, problem.accepted) from None
+
+
+def _assembled(raw: dict[str, object], source: str, folder: Path, function: Callable[..., object] | None) -> AuditFile:
+    _check_names(raw)
+    parameters = raw.get("parameters", {})
+    if not isinstance(parameters, dict):
+        raise TableError("parameters", f"{shown(parameters)} is {kind_of(parameters)}", "a table")
+    for name, value in parameters.items():
+        check_parameter(name, value)
+    kernel = raw["kernel"]
+    if function is None and isinstance(kernel, dict) and isinstance(kernel.get("run"), str):
+        check_run(kernel["run"])
+    audit_file = AuditFile(
+        kernel=_table(KernelTable, kernel),
+        parameters=parameters,
+        ladder=_table(LadderTable, raw["ladder"]),
+        target=_table(TargetTable, raw["target"]) if "target" in raw else None,
+        formats=_table(FormatsTable, raw.get("formats", {})),
+        cost=_table(CostTable, raw["cost"]) if "cost" in raw else CostTable.by_storage(),
+        sampling=_table(SamplingTable, raw.get("sampling", {})),
+        source=source,
+        folder=folder,
+        function=function,
+        assumed=_assumed(raw),
+    )
+    _check_ladder(audit_file.kernel, audit_file.ladder)
+    for name in audit_file.arms:
+        if getattr(audit_file.cost, name) is None:
+            key = f"cost.{name}"
+            raise TableError(key, "missing, and the audit uses this format", RULES[key].accepted)
+    return audit_file
+
+
+def _check_names(raw: dict[str, object]) -> None:
+    """Raise a TableError at the first unknown table or key, or at a required table that is not there."""
+    for name, value in raw.items():
+        if name not in _ORDER:
+            homes = [table for table, record in TABLES.items() if name in record.__struct_fields__]
+            if not isinstance(value, dict) and homes:
+                hint = f"a key outside every table, perhaps {shown(f'{homes[0]}.{name}')} is meant"
+            else:
+                hint = "unknown table" + _nearest(name, _ORDER)
+            raise TableError(dotted(name), hint, ", ".join(_ORDER))
+        if name in TABLES and not isinstance(value, dict):
+            keys = ", ".join(TABLES[name].__struct_fields__)
+            raise TableError(name, f"{shown(value)} is {kind_of(value)}", f"a table with keys of {keys}")
+    for name in _REQUIRED:
+        if name not in raw:
+            needed = " and ".join(field.name for field in msgspec.structs.fields(TABLES[name]) if field.required)
+            raise TableError(name, "the table is missing", f"a table [{name}] with {needed}")
+
+
+def _nearest(name: str, known: tuple[str, ...]) -> str:
+    match = difflib.get_close_matches(name, known, n=1)
+    return f", perhaps {shown(match[0])} is meant" if match else ""
+
+
+def _table(record: type[_Record], raw: object) -> _Record:
+    """Return one table as its record; raise a TableError for an unknown, missing or wrong key."""
+    values = raw if isinstance(raw, dict) else {}
+    fields = msgspec.structs.fields(record)
+    known = tuple(field.name for field in fields)
+    for key in values:
+        if key not in known:
+            raise TableError(dotted(record.table, key), "unknown key" + _nearest(key, known), ", ".join(known))
+    for field in fields:
+        if field.required and field.name not in values:
+            key = f"{record.table}.{field.name}"
+            raise TableError(key, "missing", RULES[key].accepted)
+    try:
+        return msgspec.convert(values, record)
+    except msgspec.ValidationError as problem:
+        if isinstance(problem.__cause__, TableError):
+            raise problem.__cause__ from None
+        raise _wrong_type(record.table, values, str(problem)) from None
+
+
+def _wrong_type(table: str, values: dict[str, object], message: str) -> TableError:
+    """Return the refusal of a value of the wrong type; the converter's message only tells where it stands."""
+    place = re.search(r"at `\$\.(\w+)(?:\[(\d+|\.\.\.)\])?`$", message)
+    if place is None:  # its wording is not promised from version to version
+        return TableError(table, message, f"a table with keys of {', '.join(TABLES[table].__struct_fields__)}")
+    name, inside = place[1], place[2]
+    key, value = f"{table}.{name}", values[name]
+    accepted = RULES[key].accepted
+    if inside and isinstance(value, dict):
+        # The converter does not say which key of a free table it was.
+        quantity = next(quantity for quantity, number in value.items() if not _is_number(number))
+        key, value = dotted(table, name, quantity), value[quantity]
+    elif inside and isinstance(value, list):
+        key, value = f"{key}[{inside}]", value[int(inside)]
+    if key == "kernel.takes" and value == "rng":
+        return TableError(key, '"rng" is not supported by this version', accepted)
+    if message.startswith("Invalid enum value"):
+        return TableError(key, f"{shown(value)} is not accepted", accepted)
+    if message.startswith("Number out of range"):
+        return TableError(key, f"{shown(value)} is beyond float64", accepted)
+    return TableError(key, f"{shown(value)} is {kind_of(value)}", accepted)
+
+
+def _is_number(value: object) -> bool:
+    try:
+        msgspec.convert(value, float)
+    except msgspec.ValidationError:
+        return False
+    return True
+
+
+def _check_ladder(kernel: KernelTable, ladder: LadderTable) -> None:
+    """Raise a TableError unless the smallest block fits its draws on the finest level."""
+    most = most_steps(kernel.factors)
+    fits = ladder.finest_within(most)
+    if ladder.finest <= fits:
+        return
+    draws = "one draw a step" if kernel.factors == 1 else f"{kernel.factors} draws a step"
+    why = f"with {draws} a level may have {most} steps, for a block of 1024 paths to fit 2^22 draws"
+    if not most:
+        limit = f"an integer from 1 to {most_steps(1)}"
+        why = f"{kernel.factors} is not accepted, a block of 1024 paths must fit 2^22 draws"
+        raise TableError("kernel.factors", why, limit)
+    if fits < 0:
+        problem = f"{ladder.coarsest_steps} is not accepted, {why}"
+        raise TableError("ladder.coarsest_steps", problem, f"an integer from 1 to {most}")
+    raise TableError("ladder.finest", f"{shown(ladder.finest)} is too fine, {why}", f"an integer from 0 to {fits}")
+
+
+def _assumed(raw: Mapping[str, object]) -> tuple[str, ...]:
+    """Return the dotted keys of all defaults in use, in order of the file."""
+    assumed: list[str] = []
+    for table, record in TABLES.items():
+        given = raw.get(table)
+        keys = [name for name in record.__struct_fields__ if not isinstance(given, dict) or name not in given]
+        if table == "target" and given is None:
+            keys = ["worthwhile"]  # the one key of it that counts without a target
+        if table == "cost" and given is not None:
+            keys = [name for name in keys if name not in FORMATS]  # a format without a cost is not used
+        assumed.extend(f"{table}.{name}" for name in keys)
+    return tuple(assumed)

@@ -1,0 +1,345 @@
+"""The record of an audit: its types, from which the text of audit.json follows.
+
+Figures are finite; one that does not exist is None, and a `reason` beside it says why. Intervals are flat: `gain`,
+`gain_low`, `gain_high`. Variances are in the squared unit of the quantity, coefficients of the law in units of u^2,
+costs in the unit of the audit file's cost table. Only `provenance` may differ between two runs of the same audit.
+"""
+
+from __future__ import annotations
+
+from typing import Literal
+
+import msgspec
+
+__all__ = [
+    "SCHEMA",
+    "AccumulationEntry",
+    "AllocationEntry",
+    "ArmEntry",
+    "AuditRecord",
+    "BestEntry",
+    "CorrectionEntry",
+    "FaultEntry",
+    "FinestEntry",
+    "KernelEntry",
+    "LawEntry",
+    "LevelEntry",
+    "PlanEntry",
+    "QuantityEntry",
+    "RaisedEntry",
+    "ReachEntry",
+    "ReferenceEntry",
+    "SchemeEntry",
+    "TelescopingEntry",
+    "TrialEntry",
+    "VerdictEntry",
+]
+
+SCHEMA = "narrowgauge-audit/1"
+
+
+class _Entry(msgspec.Struct, frozen=True, kw_only=True, forbid_unknown_fields=True):
+    """Base of every part of the record."""
+
+
+class KernelEntry(_Entry, frozen=True, kw_only=True):
+    """Which function was audited; the fingerprint is None for one that has no source file."""
+
+    run: str
+    fingerprint: str | None
+
+
+class ArithmeticEntry(_Entry, frozen=True, kw_only=True):
+    """What one arm computes in, and with which draws."""
+
+    format: str
+    rounding: str
+    subnormals: str
+    fused: bool
+    draws: str
+    widened: list[str]
+
+
+class SchemeEntry(_Entry, frozen=True, kw_only=True):
+    """A way to estimate a level: alone in one arm, or split into a low and a correction branch."""
+
+    kind: Literal["alone", "split"]
+    narrow: str
+    wide: str | None
+
+
+class RaisedEntry(_Entry, frozen=True, kw_only=True):
+    """What the kernel raised in an arm, and the line of the user's code."""
+
+    type: str
+    message: str
+    file: str | None
+    line: int | None
+
+
+class TelescopingEntry(_Entry, frozen=True, kw_only=True):
+    """Mean of the reference's coarse path on this level less that of its fine path one level below, and its error.
+
+    `sound` is whether the difference is within 3.3 standard errors.
+    """
+
+    difference: float | None
+    se: float | None
+    sound: bool
+
+
+class ReferenceEntry(_Entry, frozen=True, kw_only=True):
+    """The reference on one level: P, and D with its standard error; `nonfinite` paths were dropped from all arms."""
+
+    mean: float | None
+    mean_se: float | None
+    variance: float | None
+    level_mean: float | None
+    level_mean_se: float | None
+    level_variance: float | None
+    level_variance_se: float | None
+    level_kurtosis: float | None
+    nonfinite: int
+
+
+class ArmEntry(_Entry, frozen=True, kw_only=True):
+    """One format on one level: the error E, the level difference D, and what the format is worth.
+
+    `bias` is the mean of D^top - D^ref for the scheme's widest arm; `admitted_rmse` the smallest target that it
+    admits (only without a target); `nonfinite_bound` the upper bound of the share of non-finite paths.
+    """
+
+    error_mean: float | None
+    error_mean_se: float | None
+    error_variance: float | None
+    error_variance_se: float | None
+    level_variance: float | None
+    level_kurtosis: float | None
+    nonfinite: int
+    nonfinite_bound: float | None
+    raised: RaisedEntry | None
+    scheme: SchemeEntry | None
+    gain: float | None
+    gain_low: float | None
+    gain_high: float | None
+    edge: float | None
+    edge_low: float | None
+    edge_high: float | None
+    bias: float | None
+    bias_low: float | None
+    bias_high: float | None
+    verdict: Literal["pays", "does not pay", "undecided"] | None
+    reason: str | None
+    paths_needed: int | None
+    admitted_rmse: float | None
+
+
+class CorrectionEntry(_Entry, frozen=True, kw_only=True):
+    """The correction R between two arms; `counted` is whether it takes at most five values."""
+
+    mean: float | None
+    mean_se: float | None
+    variance: float | None
+    variance_se: float | None
+    kurtosis: float | None
+    effective_size: float | None
+    events: int
+    counted: bool
+    breakeven_cost_ratio: float | None
+
+
+class BestEntry(_Entry, frozen=True, kw_only=True):
+    """The admissible scheme with the smallest cost, and its gain over the level as it runs today."""
+
+    kind: Literal["alone", "split"]
+    narrow: str
+    wide: str | None
+    gain: float | None
+    gain_low: float | None
+    gain_high: float | None
+    bias: float | None
+
+
+class LevelEntry(_Entry, frozen=True, kw_only=True):
+    """One level of one quantity."""
+
+    level: int
+    steps: int
+    h: float
+    paths: int
+    blocks: int
+    telescoping: TelescopingEntry | None
+    reference: ReferenceEntry
+    arms: dict[str, ArmEntry]
+    corrections: dict[str, CorrectionEntry]
+    best: BestEntry | None
+
+
+class LawEntry(_Entry, frozen=True, kw_only=True):
+    """The accumulation law fitted to a variance: u^2 (floor + walk n + drift n^2), n steps."""
+
+    floor: float | None
+    floor_low: float | None
+    floor_high: float | None
+    walk: float | None
+    walk_low: float | None
+    walk_high: float | None
+    drift: float | None
+    drift_low: float | None
+    drift_high: float | None
+    slope: float | None
+    slope_low: float | None
+    slope_high: float | None
+    deviation: float | None
+    fit_p: float | None
+    levels: list[int]
+    reason: str | None
+
+
+class AccumulationEntry(_Entry, frozen=True, kw_only=True):
+    """The law of one arm, of the error and of the correction to the reference, and a sentence about the first."""
+
+    error: LawEntry
+    correction: LawEntry
+    sentence: str
+
+
+class FinestEntry(_Entry, frozen=True, kw_only=True):
+    """The finest level where a format still pays; `possible` is the finest that is not refuted.
+
+    `cautious` belongs to an extrapolated level: where it would end with every bound against the format.
+    """
+
+    level: int | None
+    cautious: int | None
+    possible: int | None
+    extrapolated: bool
+    reason: str | None
+
+
+class DecidedEntry(FinestEntry, frozen=True, kw_only=True):
+    """The finest paying level over all quantities, and the quantity that decides it."""
+
+    decided_by: str | None
+
+
+class PlanEntry(_Entry, frozen=True, kw_only=True):
+    """Paths of one level: of its low branch or its only one, and of its correction branch."""
+
+    level: int
+    scheme: SchemeEntry
+    paths: int
+    correction_paths: int | None
+    cost: float
+
+
+class AllocationEntry(_Entry, frozen=True, kw_only=True):
+    """Paths for the target, their cost, and the saving over today and over the reference alone.
+
+    `weak_error` estimates what remains of the discretisation beyond the finest level.
+    """
+
+    rmse: float | None
+    levels: list[PlanEntry]
+    cost: float | None
+    saving: float | None
+    saving_low: float | None
+    saving_high: float | None
+    saving_over_reference: float | None
+    saving_over_reference_low: float | None
+    saving_over_reference_high: float | None
+    weak_error: float | None
+    reason: str | None
+
+
+class OrdersEntry(_Entry, frozen=True, kw_only=True):
+    """Orders in h, from the four finest levels: of V_l and of |mean D_l|; None where they cannot be told."""
+
+    level_variance: float | None
+    level_mean: float | None
+
+
+class AgreementEntry(_Entry, frozen=True, kw_only=True):
+    """Whether walk is the same within 5% in every format: the delta^2 part of the law."""
+
+    agrees: bool | None
+    spread: float | None
+    reason: str | None
+
+
+class QuantityEntry(_Entry, frozen=True, kw_only=True):
+    """Everything about one quantity."""
+
+    levels: list[LevelEntry]
+    accumulation: dict[str, AccumulationEntry]
+    agreement: AgreementEntry
+    orders: OrdersEntry
+    finest_paying_level: dict[str, FinestEntry]
+    allocation: AllocationEntry
+
+
+class VerdictEntry(_Entry, frozen=True, kw_only=True):
+    """The worst quantity decides. `sound` is whether the reference's levels telescope in every quantity."""
+
+    sound: bool
+    finest_paying_level: dict[str, DecidedEntry]
+
+
+class ReachLine(_Entry, frozen=True, kw_only=True):
+    """Operations of one kind on one line of the kernel, in the trial run."""
+
+    file: str | None
+    line: int | None
+    operation: str
+    route: str
+    count: int
+
+
+class ReachEntry(_Entry, frozen=True, kw_only=True):
+    """What the emulation got hold of in the trial run: `share` of the operations that round were rounded one by one."""
+
+    operations: int
+    rounded: int
+    share: float | None
+    decisions: int
+    lines: list[ReachLine]
+    remarks: list[str]
+
+
+class FaultEntry(_Entry, frozen=True, kw_only=True):
+    """An escape or a refusal in one arm of a trial run; the message begins with file and line where they are known."""
+
+    arm: str
+    message: str
+
+
+class TrialEntry(_Entry, frozen=True, kw_only=True):
+    """A trial run: whether float64 through the whole machinery gave plain NumPy's bits, and what stopped any arm."""
+
+    identical: bool
+    reach: ReachEntry
+    faults: list[FaultEntry]
+
+
+class AuditRecord(_Entry, frozen=True, kw_only=True):
+    """The whole audit; parts that a later version fills are None."""
+
+    schema: str
+    kernel: KernelEntry
+    asked: dict[str, object]
+    arms: dict[str, ArithmeticEntry]
+    quantities: dict[str, QuantityEntry]
+    verdict: VerdictEntry
+    reach: ReachEntry | None
+    branches: None = None
+    range: None = None
+    lines: None = None
+    averaging: None = None
+    domain: None = None
+    cautions: list[str]
+    provenance: dict[str, object]
+
+    def document(self) -> dict[str, object]:
+        """Return the record as plain mappings, lists and numbers, in the order of the fields."""
+        plain: dict[str, object] = msgspec.to_builtins(self)
+        return plain
