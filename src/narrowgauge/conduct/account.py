@@ -40,7 +40,7 @@ from narrowgauge.judge.intervals import binomial_upper, jackknife, means, varian
 from narrowgauge.judge.schemes import rmse_of
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.measure.arms import REFERENCE, arms_of
-from narrowgauge.measure.block import LevelTally
+from narrowgauge.measure.tally import LevelTally
 from narrowgauge.record.audit import (
     SCHEMA,
     AccumulationEntry,

@@ -10,8 +10,8 @@ from narrowgauge.judge.gain import LevelView, Scheme, breakeven
 from narrowgauge.judge.intervals import Interval, jackknife, means, variances
 from narrowgauge.judge.schemes import ArmJudgement
 from narrowgauge.measure.arms import REFERENCE
-from narrowgauge.measure.block import LevelTally, Raised
 from narrowgauge.measure.moments import Series
+from narrowgauge.measure.tally import LevelTally, Raised
 from narrowgauge.record.audit import CorrectionEntry, LawEntry, RaisedEntry, ReferenceEntry, SchemeEntry
 
 __all__ = [
@@ -125,7 +125,7 @@ def law_entry(law: AccumulationFit) -> LawEntry:
 
 def finite(value: float | None) -> float | None:
     """Return a figure as a float, or None where it does not exist."""
-    return float(value) if value is not None and math.isfinite(value) else None
+    return float(value) + 0.0 if value is not None and math.isfinite(value) else None  # no negative zero
 
 
 def _enough(series: Series | None) -> bool:

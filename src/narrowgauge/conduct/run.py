@@ -13,7 +13,8 @@ from narrowgauge.conduct.trial import identity_run
 from narrowgauge.judge.schemes import LevelJudgement, judge_level
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.loading import KernelSource
-from narrowgauge.measure.block import BlockRunner, LevelTally
+from narrowgauge.measure.block import BlockRunner
+from narrowgauge.measure.tally import LevelTally
 from narrowgauge.record.audit import ReachEntry
 
 __all__ = ["Outcome", "Plan", "Watcher", "run", "settled_levels"]

@@ -66,10 +66,7 @@ def identity_run(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> 
         raise KernelError(what, level=level, arm=REFERENCE) from problem
     for name in plain | with_machinery:
         _same_bits(name, plain, with_machinery, level)
-    remarks = (
-        [f"{place}: {text}" if place else text for text, place in copy.setting.remarks.items()] if copy.setting else []
-    )
-    return _reach(count, remarks)
+    return _reach(count)
 
 
 def try_arms(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> TrialEntry:
@@ -135,7 +132,7 @@ def _same_bits(
     )
 
 
-def _reach(count: _Count, remarks: list[str]) -> ReachEntry:
+def _reach(count: _Count) -> ReachEntry:
     lines = [
         ReachLine(
             file=place.file if place else None,
@@ -153,7 +150,7 @@ def _reach(count: _Count, remarks: list[str]) -> ReachEntry:
         share=1.0 if rounded else None,
         decisions=count.decisions,
         lines=lines,
-        remarks=remarks,
+        remarks=[],
     )
 
 
