@@ -61,7 +61,9 @@ def tally(file: AuditFile, level: int, paths: int) -> LevelTally:
     return found
 
 
-def log_edges(file: AuditFile, level: int, paths: int, shrink: float = 1.0) -> Iterator[tuple[Cell, float, float, float]]:
+def log_edges(
+    file: AuditFile, level: int, paths: int, shrink: float = 1.0
+) -> Iterator[tuple[Cell, float, float, float]]:
     """Yield cell, log edge and its bounds; `shrink` below 1 makes the bounds too narrow on purpose."""
     measured = tally(file, level, paths)
     for quantity, series in measured.quantities.items():
