@@ -1,6 +1,6 @@
 """A small run of the coverage study, with the rate at which it would fail for nothing."""
 
-import coverage as study
+import edge_coverage as study
 import pytest
 from scipy import stats
 

@@ -109,7 +109,7 @@ def main(seeds: int = 200) -> None:
     (folder / "coverage.md").write_text(
         f"# Coverage of the 95% intervals of the log edge\n\n{(__doc__ or '').split(chr(10), 2)[2].strip()}\n\n"
         f"{seeds} seeds, one look at {PATHS:,} paths a level; pooled coverage {pooled:.4f}, cells from {worst:.3f} to "
-        f"{best:.3f}.\nMade by `python tests/studies/coverage.py`.\n\n"
+        f"{best:.3f}.\nMade by `python tests/studies/edge_coverage.py`.\n\n"
         f"| payoff | level | format | true log edge | coverage |\n|---|---|---|---|---|\n{table}\n",
         encoding="utf-8",
     )
