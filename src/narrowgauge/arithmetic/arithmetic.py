@@ -39,13 +39,9 @@ class Arithmetic:
     def __post_init__(self) -> None:
         """Refuse by name what is not built."""
         if self.rounding != "nearest":
-            raise ArithmeticNotBuiltError(
-                f"rounding = {self.rounding!r} is not built yet; accepted: 'nearest'"
-            )
+            raise ArithmeticNotBuiltError(f"rounding = {self.rounding!r} is not built yet; accepted: 'nearest'")
         if self.subnormals != "kept":
-            raise ArithmeticNotBuiltError(
-                f"subnormals = {self.subnormals!r} is not built yet; accepted: 'kept'"
-            )
+            raise ArithmeticNotBuiltError(f"subnormals = {self.subnormals!r} is not built yet; accepted: 'kept'")
         if self.fused:
             raise ArithmeticNotBuiltError("fused = True is not built yet; accepted: False")
 
@@ -83,7 +79,7 @@ class Arithmetic:
         return result if result.ndim else result[()]
 
     def constant(self, number: float | np.generic) -> Any:
-        """Return a weak scalar as it meets the state: rounded once, as a Python number that NumPy takes as weak.
+        """Return a weak scalar as it meets the state: rounded once, a Python number that NumPy takes as weak.
 
         float64 leaves it as it is, so that plain code's own shortcuts (`x ** 2`) are taken.
         """
@@ -93,14 +89,8 @@ class Arithmetic:
         known = self._constants.get(key)
         if known is None or number == 0:  # 0.0 and -0.0 are one key; neither needs rounding
             integral = isinstance(number, (int, np.integer))
-            known = (
-                narrow_integer(int(number), self.format)
-                if integral
-                else narrow_number(float(number), self.format)
-            )
-            if (
-                len(self._constants) < 4096
-            ):  # a kernel that feeds a new constant each step must not fill memory
+            known = narrow_integer(int(number), self.format) if integral else narrow_number(float(number), self.format)
+            if len(self._constants) < 4096:  # a kernel that feeds a new constant each step must not fill memory
                 self._constants[key] = known
         return known
 
@@ -116,9 +106,7 @@ class Arithmetic:
         ):
             raise ValueError("integers beyond 2**53 cannot be rounded once; accepted: up to 2**53")
         if values.dtype.kind not in "biuf" or values.dtype.itemsize > 8:
-            raise ValueError(
-                f"dtype {values.dtype} cannot be rounded; accepted: booleans, integers, floats to 64 bits"
-            )
+            raise ValueError(f"dtype {values.dtype} cannot be rounded; accepted: booleans, integers, floats to 64 bits")
         return narrow(values.astype(np.float64), self.format)
 
     def holds(self, values: npt.NDArray[Any]) -> bool:

@@ -3,9 +3,10 @@
 carrier    one operation in the float32 carrier, then one rounding (innocuous, see rounding.py)
 exact      the result is a value of the format already: selections, signs, integral parts
 truth      the result is a boolean
-table      one operand: looked up in 65,536 entries made in float64 and rounded once; right to the last bit for
-           every input, checked against MPFR, and the same on every processor
-wide       two operands: computed in float64 and rounded once
+table      one operand: looked up in 65,536 entries made in float64 and rounded once; right to the last bit
+           for every input, checked against MPFR, and the same on every processor
+wide       two operands: computed in float64 and rounded once; not proved right for every pair, but power,
+           arctan2 and hypot equal MPFR on all pairs of 600 edge values and on ten million random pairs
 
 float32 and float64 functions are NumPy's own.
 """
@@ -13,7 +14,7 @@ float32 and float64 functions are NumPy's own.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from functools import lru_cache
+from functools import cache
 from typing import Any, Literal
 
 import numpy as np
@@ -36,9 +37,7 @@ _NAMES: dict[Way, str] = {
     "wide": "power float_power arctan2 hypot remainder floor_divide heaviside logaddexp logaddexp2",
 }
 
-WAYS: dict[np.ufunc, Way] = {
-    getattr(np, name): way for way, names in _NAMES.items() for name in names.split()
-}
+WAYS: dict[np.ufunc, Way] = {getattr(np, name): way for way, names in _NAMES.items() for name in names.split()}
 
 
 def encode(values: Floats, form: Format) -> npt.NDArray[np.uint32]:
@@ -63,7 +62,7 @@ def decode(form: Format) -> npt.NDArray[np.float64]:
     return values
 
 
-@lru_cache(maxsize=None)
+@cache
 def _table(ufunc: np.ufunc, name: str) -> npt.NDArray[np.float32]:
     form = FORMATS[name]
     with np.errstate(all="ignore"):
@@ -73,7 +72,7 @@ def _table(ufunc: np.ufunc, name: str) -> npt.NDArray[np.float32]:
 
 
 def look_up(ufunc: np.ufunc, values: Floats, form: Format, out: Floats | None) -> Floats:
-    """Return ufunc(values) rounded once, for float32-carried values of a 16-bit format; into `out` if given."""
+    """Return ufunc(values) rounded once, for float32 carriers of a 16-bit format; into `out` if given."""
     found = np.take(_table(ufunc, form.name), encode(values, form), mode="wrap")
     if out is None:
         return found
@@ -84,9 +83,9 @@ def look_up(ufunc: np.ufunc, values: Floats, form: Format, out: Floats | None) -
 def compute_wide(ufunc: np.ufunc, operands: Sequence[Any], form: Format) -> Any:
     """Return a function of two carried operands in float64, an array or scalar ready to be rounded once."""
     found = ufunc(*map(np.float64, operands))
-    if ufunc is np.arctan2:
-        # The quotient of two values may lie halfway between subnormals; its arctangent, a little below, then is
-        # the same float64. One float64 towards zero decides that tie: no other result is so close to one.
+    if ufunc is np.arctan2 and form.min_subnormal < 2.0**-27:
+        # A quotient of two values may lie halfway between subnormals. Its arctangent is smaller by a third of
+        # its cube, which float64 does not see. One float64 towards zero decides it; nothing else is so close.
         small = np.abs(found) < form.min_normal
         if small.any():
             return np.where(small, np.nextafter(found, np.copysign(0.0, found)), found)

@@ -2,12 +2,12 @@
 
 Two doors, because they rest on different theorems:
 
-`round_carrier` finishes one operation that was computed in a float32 carrier. For + - * / and the square root of
-16-bit formats the two roundings are innocuous since 24 >= 2 x 11 + 2: "Innocuous Double Rounding of Basic
+`round_carrier` finishes one operation that was computed in a float32 carrier. For + - * / and the square root
+of 16-bit formats the two roundings are innocuous since 24 >= 2 x 11 + 2: "Innocuous Double Rounding of Basic
 Arithmetic Operations", Journal of Formalized Reasoning 7(1), 2014, doi 10.6092/issn.1972-5787/4359, table I.
 
-`narrow` takes float64 values of any origin straight to the format, so that they are rounded once: going through
-float32 would turn 1 + 2^-11 + 2^-30 into 1.0 in binary16, where 1.0009765625 is right.
+`narrow` takes float64 values of any origin straight to the format, so that they are rounded once: going
+through float32 would turn 1 + 2^-11 + 2^-30 into 1.0 in binary16, where 1.0009765625 is right.
 """
 
 from __future__ import annotations
@@ -27,7 +27,7 @@ Doubles = npt.NDArray[np.float64]
 
 
 class _Scratch(threading.local):
-    """Integer work space of each thread, kept between operations: one allocation instead of one per rounding."""
+    """Integer work space of each thread, kept between operations: one allocation, not one per rounding."""
 
     words: npt.NDArray[np.uint32] = np.empty(0, np.uint32)
 
@@ -112,9 +112,10 @@ def narrow_number(number: float, form: Format) -> float:
 def narrow_integer(number: int, form: Format) -> float:
     """Return a Python integer of any size rounded once to `form`; infinite beyond its range.
 
-    Wide integers are cut to 53 bits with their last bit made odd where something was cut off; a second rounding
-    from there is harmless for precisions of 51 bits and less: "Emulation of a FMA and correctly rounded sums:
-    proved algorithms using rounding to odd", IEEE Transactions on Computers 57(4), 2008, doi 10.1109/TC.2007.70819.
+    Wide integers are cut to 53 bits with their last bit made odd where something was cut off; a second
+    rounding from there is harmless for precisions of 51 bits and less: "Emulation of a FMA and correctly
+    rounded sums: proved algorithms using rounding to odd", IEEE Transactions on Computers 57(4), 2008,
+    doi 10.1109/TC.2007.70819.
     """
     size = abs(number)
     excess = size.bit_length() - 53
