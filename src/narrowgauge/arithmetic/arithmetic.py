@@ -99,11 +99,7 @@ class Arithmetic:
 
         Raises ValueError for integers beyond 2^53 and for types that float64 does not hold exactly.
         """
-        if (
-            values.dtype.kind in "iu"
-            and values.size
-            and max(abs(int(values.min())), abs(int(values.max()))) > (_EXACT_INTEGERS)
-        ):
+        if _past_exact_integers(values):
             raise ValueError("integers beyond 2**53 cannot be rounded once; accepted: up to 2**53")
         if values.dtype.kind not in "biuf" or values.dtype.itemsize > 8:
             raise ValueError(f"dtype {values.dtype} cannot be rounded; accepted: booleans, integers, floats to 64 bits")
@@ -111,6 +107,8 @@ class Arithmetic:
 
     def holds(self, values: npt.NDArray[Any]) -> bool:
         """Whether every value of a real array is one of the format's already (NaN is)."""
+        if _past_exact_integers(values):
+            return False
         wide = values.astype(np.float64)
         return bool(np.array_equal(narrow(wide, self.format).astype(np.float64), wide, equal_nan=True))
 
@@ -129,3 +127,10 @@ class Arithmetic:
 def arithmetic_named(name: str) -> Arithmetic:
     """Return the arithmetic of a format: to nearest, subnormals kept, nothing fused."""
     return Arithmetic(format=format_named(name))
+
+
+def _past_exact_integers(values: npt.NDArray[Any]) -> bool:
+    """Whether an array holds integers that float64 may not have."""
+    if values.dtype.kind not in "iu" or values.size == 0:
+        return False
+    return max(abs(int(values.min())), abs(int(values.max()))) > _EXACT_INTEGERS

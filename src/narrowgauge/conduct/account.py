@@ -180,6 +180,8 @@ class _Quantity:
             return TelescopingEntry(difference=None, se=None, sound=True)
         difference = coarse.average - below.average
         se = math.sqrt(coarse.variance / coarse.total + below.variance / below.total)
+        if not math.isfinite(difference + se):  # a variance past float64
+            return TelescopingEntry(difference=finite(difference), se=None, sound=True)
         return TelescopingEntry(difference=difference, se=se, sound=abs(difference) <= _SOUND * se)
 
     def _arm(self, level: int, arm: str) -> ArmEntry:
@@ -285,7 +287,9 @@ class _Quantity:
         schemes = {level: scheme for level, scheme in best.items() if scheme is not None}
         alpha = self._outcome.alpha
         over: dict[str, Any] = {}
-        complete = len(schemes) == len(best)
+        # Levels that are not coupled are alternatives: nothing of them adds up.
+        added_up = self._file.kernel.coupling == "sum" or len(best) == 1
+        complete = added_up and len(schemes) == len(best)
         for label, name in (("saving", self._file.formats.today), ("saving_over_reference", REFERENCE)):
             rival = Scheme(kind="alone", narrow=name)
             usable_rival = complete and all(name in view.tally.differences for view in self._views.values())
@@ -294,6 +298,7 @@ class _Quantity:
         if complete and rmse is not None and self._file.target is not None:
             plan = allocate(self._views, schemes, rmse, self._file.target.bias_share)
         reason = None if plan else "no target" if complete else "a level without a finite scheme"
+        reason = reason if added_up else "levels that are not coupled do not add up"
         return AllocationEntry(
             rmse=rmse,
             levels=[

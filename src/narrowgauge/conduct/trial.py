@@ -17,7 +17,7 @@ from narrowgauge.arithmetic.arithmetic import arithmetic_named
 from narrowgauge.dispatch.setting import Place, Route, Setting
 from narrowgauge.draws.coarsen import Draws, fine_draws
 from narrowgauge.draws.streams import Purpose
-from narrowgauge.errors import DispatchError, KernelError
+from narrowgauge.errors import AuditFileError, DispatchError, KernelError
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.contract import evaluate
 from narrowgauge.kernel.loading import KernelSource, private_copy
@@ -27,8 +27,18 @@ from narrowgauge.record.audit import FaultEntry, ReachEntry, ReachLine, TrialEnt
 
 __all__ = ["identity_run", "try_arms"]
 
+Quantities = dict[str, npt.NDArray[np.float64]]
+
 _PATHS = 1024
 _LEVEL = 2  # coarse enough to be over at once, fine enough to pass through the time loop more than once
+_NOT_REPEATABLE = (
+    "a second call with the same draws does not give the same bits",
+    "The kernel is not a function of its draws alone; accepted: a kernel whose calls leave nothing behind",
+)
+_NOT_IDENTICAL = (
+    "float64 through the emulation does not give plain NumPy's bits",
+    "Either the kernel is not a function of its draws alone, or an operation of it is not emulated rightly",
+)
 
 
 class _Count:
@@ -50,12 +60,13 @@ class _Count:
 def identity_run(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> ReachEntry:
     """Run the kernel under plain NumPy and under float64 through the whole machinery; return what the latter reached.
 
-    Raises KernelError where the results differ in any bit or the kernel raises, and what the machinery refuses.
+    Raises KernelError where the results differ in any bit, of these two runs or of a repeated one, or the kernel
+    raises, and what the machinery refuses.
     """
     level = min(_LEVEL, file.ladder.finest)
     draws = runner.draws(level, 0, Purpose.IDENTITY, _PATHS)
     count = _Count()
-    plain = _plainly(file, kernel, draws, level)
+    plain, repeated = _plainly_twice(file, kernel, draws, level)
     try:
         copy = private_copy(kernel, arithmetic_named(REFERENCE), count)
         with_machinery = evaluate(copy, *_arguments(file, draws, level, REFERENCE))
@@ -64,8 +75,10 @@ def identity_run(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> 
     except (Exception, SystemExit) as problem:  # plain NumPy did not raise
         what = f"the kernel raised {type(problem).__name__}: {problem}, where plain NumPy does not"
         raise KernelError(what, level=level, arm=REFERENCE) from problem
+    for name in plain | repeated:
+        _same_bits(name, plain, repeated, level, _NOT_REPEATABLE)
     for name in plain | with_machinery:
-        _same_bits(name, plain, with_machinery, level)
+        _same_bits(name, plain, with_machinery, level, _NOT_IDENTICAL)
     return _reach(count)
 
 
@@ -78,28 +91,33 @@ def try_arms(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> Tria
         reach = identity_run(file, kernel, runner)
     except DispatchError as problem:
         identical = False
-        faults.append(FaultEntry(arm=REFERENCE, message=str(problem)))
+        faults.append(FaultEntry(arm=REFERENCE, kind="escape", message=str(problem)))
     level = min(_LEVEL, file.ladder.finest)
     draws = runner.draws(level, 0, Purpose.IDENTITY, _PATHS)
     for arm in runner.arms[1:]:
         try:
             evaluate(private_copy(kernel, arithmetic_named(arm)), *_arguments(file, draws, level, arm))
         except DispatchError as problem:
-            faults.append(FaultEntry(arm=arm, message=str(problem)))
+            faults.append(FaultEntry(arm=arm, kind="escape", message=str(problem)))
         except KernelError as problem:
             raise KernelError(str(problem), level=level, arm=arm) from problem.__cause__
         except (Exception, SystemExit) as problem:  # the audit itself keeps what a narrow arm raises as data
-            faults.append(FaultEntry(arm=arm, message=f"the kernel raised {type(problem).__name__}: {problem}"))
+            what = f"the kernel raised {type(problem).__name__}: {problem}"
+            faults.append(FaultEntry(arm=arm, kind="raised", message=what))
     return TrialEntry(identical=identical, reach=reach, faults=faults)
 
 
-def _plainly(file: AuditFile, kernel: KernelSource, draws: Draws, level: int) -> dict[str, npt.NDArray[np.float64]]:
-    """Run the kernel under plain NumPy; what it raises is a KernelError with the kernel's own as its cause."""
+def _plainly_twice(file: AuditFile, kernel: KernelSource, draws: Draws, level: int) -> tuple[Quantities, Quantities]:
+    """Run the kernel twice under plain NumPy; what it raises is a KernelError with the kernel's own as its cause."""
     arm = "plain NumPy"
     try:
-        return evaluate(private_copy(kernel, None), *_arguments(file, draws, level, REFERENCE))
+        copy = private_copy(kernel, None)
+        first = evaluate(copy, *_arguments(file, draws, level, REFERENCE))
+        return first, evaluate(copy, *_arguments(file, draws, level, REFERENCE))
     except KernelError as problem:
         raise KernelError(str(problem), level=level, arm=arm) from problem.__cause__
+    except AuditFileError:  # there is no such function
+        raise
     except (Exception, SystemExit) as problem:  # the reference: its own traceback is shown
         what = f"the kernel raised {type(problem).__name__}: {problem}"
         raise KernelError(what, level=level, arm=arm) from problem
@@ -114,20 +132,17 @@ def _arguments(file: AuditFile, draws: Draws, level: int, arm: str) -> tuple[Any
     )
 
 
-def _same_bits(
-    name: str, plain: dict[str, npt.NDArray[np.float64]], other: dict[str, npt.NDArray[np.float64]], level: int
-) -> None:
+def _same_bits(name: str, plain: Quantities, other: Quantities, level: int, words: tuple[str, str]) -> None:
     if name not in plain or name not in other:
         raise KernelError(f"the quantity {name!r} is returned in one of two runs only", level=level)
     here, there = plain[name], other[name]
     differs = (here.view(np.int64) != there.view(np.int64)) & ~(np.isnan(here) & np.isnan(there))
     if not differs.any():
         return
-    first = int(np.argmax(differs))
+    first, (what, reason) = int(np.argmax(differs)), words
     raise KernelError(
-        f"float64 through the emulation does not give plain NumPy's bits for {name!r}: {int(differs.sum())} of "
-        f"{here.size} paths differ, the first is path {first} with {there[first]!r} for {here[first]!r}. Either the "
-        "kernel is not a function of its draws alone, or an operation of it is not emulated rightly",
+        f"{what} for {name!r}: {int(differs.sum())} of {here.size} paths differ, the first is path {first} with "
+        f"{float(there[first])!r} for {float(here[first])!r}. {reason}",
         level=level,
     )
 

@@ -307,9 +307,13 @@ class ReachEntry(_Entry, frozen=True, kw_only=True):
 
 
 class FaultEntry(_Entry, frozen=True, kw_only=True):
-    """An escape or a refusal in one arm of a trial run; the message begins with file and line where they are known."""
+    """What stopped one arm of a trial run; the message begins with file and line where they are known.
+
+    An `escape` (or a refusal) stops an audit; what the kernel `raised` in a narrow arm only keeps it from paying.
+    """
 
     arm: str
+    kind: Literal["escape", "raised"]
     message: str
 
 

@@ -1,0 +1,228 @@
+"""The command line: audit a kernel, try it out, or draft an audit file; the only module that prints.
+
+Exit codes: 0 done; 2 wrong usage, a wrong file, or a kernel that cannot be audited; 70 a fault of this program;
+130 interrupted; 141 the reader of the output went away. What a command needs is imported when it runs, so that
+--help answers at once.
+"""
+
+from __future__ import annotations
+
+import argparse
+import io
+import os
+import sys
+from collections.abc import Sequence
+from pathlib import Path
+from typing import TYPE_CHECKING, NoReturn, TextIO
+
+from narrowgauge import __version__
+from narrowgauge.errors import NarrowgaugeError
+
+if TYPE_CHECKING:
+    from rich.console import RenderableType
+
+    from narrowgauge.kernel.auditfile import AuditFile
+
+__all__ = ["main"]
+
+_USAGE, _INTERNAL, _INTERRUPTED, _READER_GONE = 2, 70, 130, 141  # the last two are 128 + the signal's number
+
+
+class _OutputError(NarrowgaugeError):
+    """Standard output cannot be written."""
+
+
+class _ReaderGoneError(Exception):
+    """Whatever read standard output has closed it."""
+
+
+class _Parser(argparse.ArgumentParser):
+    """A parser whose refusals look like every other message of the program."""
+
+    def error(self, message: str) -> NoReturn:
+        """Leave with exit code 2."""
+        _say(f"{message}; {self.prog} --help shows what is accepted")
+        raise SystemExit(_USAGE)
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """Run one command, print what it has to say, and return its exit code."""
+    for stream in (sys.stdout, sys.stderr):
+        # A terminal that lacks a character gets a question mark, not a traceback.
+        if isinstance(stream, io.TextIOWrapper):
+            stream.reconfigure(errors="replace")
+    try:
+        return _run(arguments)
+    except NarrowgaugeError as problem:
+        return _refused(problem)
+    except KeyboardInterrupt:
+        _say("interrupted")
+        return _INTERRUPTED
+    except _ReaderGoneError:
+        _silence(sys.stdout)
+        return _READER_GONE
+    # The boundary of the program: exit code 1 would mean that a gate failed, and a kernel that calls sys.exit is
+    # caught where it runs.
+    except (Exception, SystemExit) as problem:
+        return _broken(problem)
+
+
+def _run(arguments: Sequence[str] | None) -> int:
+    try:
+        options = _parser().parse_args(arguments)
+    except SystemExit as leaving:  # after --help, --version or wrong usage
+        _write("")
+        return int(leaving.code or 0)
+    code: int = options.command(options)
+    return code
+
+
+def _parser() -> argparse.ArgumentParser:
+    parser = _Parser(
+        prog="narrowgauge",
+        description="Measures, level by level, where a Monte Carlo path kernel may run in half or single precision.",
+        allow_abbrev=False,
+    )
+    parser.add_argument("--version", action="version", version=f"narrowgauge {__version__}")
+    commands = parser.add_subparsers(title="commands", metavar="COMMAND", required=True, parser_class=_Parser)
+
+    audit = commands.add_parser(
+        "audit",
+        help="measure a kernel and say where low precision pays",
+        description="Measures the kernel that an audit file names, and says on which levels low precision pays.",
+        allow_abbrev=False,
+    )
+    audit.add_argument("file", metavar="AUDIT.toml", help="the audit file; narrowgauge draft makes a first one")
+    audit.add_argument("--out", metavar="DIR", help="folder for the results (default: audits/ and the file's name)")
+    audit.add_argument(
+        "--dry",
+        action="store_true",
+        help="show what would be rounded, line by line, and what would escape (if anything, exit code 2)",
+    )
+    audit.add_argument("--replace", action="store_true", help="overwrite another audit in that folder")
+    audit.add_argument(
+        "--quiet", action="store_true", help="no plan, bar and tables, only what is wrong and the verdict"
+    )
+    audit.set_defaults(command=_audit)
+
+    draft = commands.add_parser(
+        "draft",
+        help="write a first audit file for a kernel",
+        description="Prints an audit file for a kernel, from its source text alone; nothing of it is run.",
+        allow_abbrev=False,
+    )
+    draft.add_argument("kernel", metavar="FILE.py:FUNCTION", help="the file and the function in it")
+    draft.set_defaults(command=_draft)
+    return parser
+
+
+def _audit(options: argparse.Namespace) -> int:
+    from narrowgauge.kernel.auditfile import read_audit_file
+
+    file = read_audit_file(Path(options.file))
+    if options.dry:
+        return _try_out(file)
+    from narrowgauge import api
+    from narrowgauge.report.text import Progress, audit_text, verdict_text
+
+    # A stem of dots alone would lead out of the folder.
+    folder = Path(options.out) if options.out is not None else Path("audits", file.stem.strip(".") or "audit")
+    if options.quiet:
+        done = api.run_audit(file, folder, replace=options.replace, watcher=None)
+    else:
+        with Progress() as watcher:
+            done = api.run_audit(file, folder, replace=options.replace, watcher=watcher)
+    shown = verdict_text if options.quiet else audit_text
+    _show(shown(done.record, done.folder))
+    return 0
+
+
+def _try_out(file: AuditFile) -> int:
+    from narrowgauge import api
+    from narrowgauge.report.text import trial_text
+
+    trial = api.try_out(file)
+    _show(trial_text(trial))
+    escapes = any(fault.kind == "escape" for fault in trial.faults)
+    return _USAGE if escapes or not trial.identical else 0
+
+
+def _draft(options: argparse.Namespace) -> int:
+    from narrowgauge.kernel.draft import draft
+
+    _write(draft(options.kernel))
+    return 0
+
+
+def _show(document: RenderableType) -> None:
+    """Print a document as wide as the terminal, coloured only on a terminal that wants colours."""
+    from rich.console import Console
+
+    console = Console(file=sys.stdout, markup=False, highlight=False, emoji=False)
+    # As one string: a console that meets a closed pipe leaves with exit code 1.
+    with console.capture() as capture:
+        console.print(document)
+    _write("".join(f"{line.rstrip()}\n" for line in capture.get().rstrip().split("\n")))
+
+
+def _write(text: str) -> None:
+    try:
+        sys.stdout.write(text)
+        sys.stdout.flush()
+    except BrokenPipeError:
+        raise _ReaderGoneError from None
+    except OSError as problem:
+        _silence(sys.stdout)
+        raise _OutputError(f"standard output cannot be written: {problem.strerror}") from None
+
+
+def _silence(stream: TextIO) -> None:
+    """Send what is left in a stream nowhere, or Python would fail once more when it ends."""
+    nowhere = os.open(os.devnull, os.O_WRONLY)
+    os.dup2(nowhere, stream.fileno())
+    os.close(nowhere)
+
+
+def _say(message: str) -> None:
+    """Print one line on standard error."""
+    from narrowgauge.report.wording import clean
+
+    print(f"narrowgauge: {clean(message)}", file=sys.stderr)
+
+
+def _refused(problem: NarrowgaugeError) -> int:
+    """Say what is wrong with the input; what the user's own code raised comes with its traceback."""
+    cause = problem.__cause__
+    if cause is not None and not isinstance(cause, NarrowgaugeError):
+        sys.stderr.write(_own_traceback(cause))
+    _say(str(problem))
+    return problem.exit_code
+
+
+def _own_traceback(problem: BaseException) -> str:
+    """Return a traceback without the frames of this package, or "" if none is left."""
+    import traceback
+
+    from narrowgauge.report.wording import clean_lines
+
+    found = traceback.TracebackException.from_exception(problem)
+    here = os.path.join(os.path.dirname(os.path.abspath(__file__)), "")
+    waiting, kept = [found], 0
+    while waiting:
+        one = waiting.pop()
+        one.stack[:] = [frame for frame in one.stack if not os.path.abspath(frame.filename).startswith(here)]
+        kept += len(one.stack)
+        waiting += [
+            linked for linked in (one.__cause__, one.__context__, *(one.exceptions or ())) if linked is not None
+        ]
+    return clean_lines("".join(found.format())) if kept else ""
+
+
+def _broken(problem: BaseException) -> int:
+    """Say that this program has a fault, with all that is needed to find it."""
+    import traceback
+
+    sys.stderr.write("".join(traceback.format_exception(problem)))
+    what = f"internal error: {type(problem).__name__}: {problem}"
+    _say(f"{what}. This is a fault of narrowgauge; please report it with the traceback above and the audit file")
+    return _INTERNAL

@@ -1,0 +1,116 @@
+"""What the audit file asked for, read back from a record."""
+
+from __future__ import annotations
+
+from narrowgauge.record.audit import AuditRecord
+from narrowgauge.report.wording import clean, joined, setting_value
+
+__all__ = [
+    "WORTHWHILE",
+    "arithmetics",
+    "assumed_costs",
+    "assumptions",
+    "bias_share",
+    "confidence",
+    "coupled",
+    "measured_to",
+    "narrow_formats",
+    "setting",
+    "today",
+    "worthwhile",
+]
+
+WORTHWHILE = 1.05  # what target.worthwhile is without a [target]; held against the audit file's default by a test
+
+
+_ROUNDING = {"nearest": "to nearest", "zero": "toward zero", "stochastic": "up or down at random"}
+
+
+def setting(record: AuditRecord, key: str) -> object:
+    """Return the value of a dotted key, or None where the file has no such table or key."""
+    value: object = record.asked
+    for name in key.split("."):
+        value = value.get(name) if isinstance(value, dict) else None
+    return value
+
+
+def narrow_formats(record: AuditRecord) -> list[str]:
+    """Return the formats that were judged, in the order of the audit file."""
+    return list(record.verdict.finest_paying_level)
+
+
+def today(record: AuditRecord) -> str:
+    """Return the format that the kernel runs in now."""
+    return clean(setting(record, "formats.today") or "float64")
+
+
+def worthwhile(record: AuditRecord) -> float:
+    """Return the edge below which a format is not worth having."""
+    return _number(setting(record, "target.worthwhile"), WORTHWHILE)
+
+
+def confidence(record: AuditRecord) -> str:
+    """Return the confidence of all intervals together, such as "99%"."""
+    return f"{100.0 * _number(setting(record, 'sampling.confidence'), 0.0):.10g}%"
+
+
+def coupled(record: AuditRecord) -> bool:
+    """Return whether levels are differences of a fine and a coarse path."""
+    return setting(record, "kernel.coupling") != "none"
+
+
+def measured_to(record: AuditRecord) -> int:
+    """Return the finest level that was measured."""
+    return max(level.level for entry in record.quantities.values() for level in entry.levels)
+
+
+def bias_share(record: AuditRecord, quantity: str) -> float | None:
+    """Return by how much rounding may shift the mean of one level, in the unit of the quantity; None without a target.
+
+    It is bias_share x rmse, shared by the levels where they are added up.
+    """
+    rmse, share = setting(record, "target.rmse"), setting(record, "target.bias_share")
+    if isinstance(rmse, dict):
+        rmse = rmse.get(quantity)
+    if not isinstance(rmse, int | float) or not isinstance(share, int | float):
+        return None
+    return share * rmse / (len(record.quantities[quantity].levels) if coupled(record) else 1)
+
+
+def assumed_costs(record: AuditRecord) -> bool:
+    """Return whether the audit file has no costs of a step, so that storage bits stand for them."""
+    return "cost.float64" in _assumed(record)
+
+
+def assumptions(record: AuditRecord) -> str:
+    """Return every default that was used, with its value, as one sentence a table; "" if the file gave every key."""
+    tables: dict[str, list[str]] = {}
+    for key in _assumed(record):
+        table, _, name = key.partition(".")
+        value = WORTHWHILE if key == "target.worthwhile" and not setting(record, "target") else setting(record, key)
+        tables.setdefault(table, []).append(f"{clean(name)} = {setting_value(value)}")
+    words = [f"[{clean(table)}] {', '.join(keys)}" for table, keys in tables.items()]
+    if assumed_costs(record):
+        words.append("with no [cost], a step costs as much as its format has bits, float64 being 1")
+    return "; ".join(words)
+
+
+def arithmetics(record: AuditRecord) -> str:
+    """Return in what the arms compute, arms of one kind together."""
+    kinds: dict[str, list[str]] = {}
+    for arm, entry in record.arms.items():
+        fused = "products fused into sums" if entry.fused else "products not fused into sums"
+        rounding = _ROUNDING.get(entry.rounding, entry.rounding)
+        words = f"rounding {rounding}, subnormals {entry.subnormals}, {fused}, {entry.draws} draws"
+        words += f", {joined(entry.widened)} in a wider format" if entry.widened else ""
+        kinds.setdefault(clean(words), []).append(clean(arm))
+    return "; ".join(f"{joined(arms)}: {words}" for words, arms in kinds.items())
+
+
+def _assumed(record: AuditRecord) -> list[str]:
+    found = record.asked.get("assumed")
+    return [str(key) for key in found] if isinstance(found, list | tuple) else []
+
+
+def _number(value: object, otherwise: float) -> float:
+    return float(value) if isinstance(value, int | float) else otherwise

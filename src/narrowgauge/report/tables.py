@@ -1,0 +1,196 @@
+"""The tables of one quantity: signal and noise, the cheapest schemes, what each format is worth, paths for the target.
+
+A figure that does not exist is an en dash, and a line below the table says why.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterable, Sequence
+from typing import Literal
+
+from rich.box import Box
+from rich.table import Table
+from rich.text import Text
+
+from narrowgauge.record.audit import AllocationEntry, ArmEntry, AuditRecord, LevelEntry, QuantityEntry
+from narrowgauge.report.settings import assumed_costs, confidence, narrow_formats, today, worthwhile
+from narrowgauge.report.wording import NONE, clean, count, figure, interval, levels_named, percent, scheme_words
+
+__all__ = [
+    "REFUSED",
+    "UNSETTLED",
+    "VERDICT_STYLES",
+    "best_table",
+    "format_table",
+    "missing_figures",
+    "plan_table",
+    "ruled",
+    "signal_table",
+]
+
+# Why a format does not pay on a level, and why that is not known yet.
+REFUSED = {
+    "edge": "edge too small",
+    "bias": "bias too large",
+    "nonfinite": "non-finite values",
+    "raised": "the kernel raised",
+    "branches": "branches differ",
+    "no_variance": "nothing varies",
+    "kurtosis": "rare corrections",
+    "budget": "paths ran out",
+}
+UNSETTLED = {**REFUSED, "edge": "edge not settled", "bias": "bias not settled", "branches": "branches not settled"}
+
+# The words say it all; the colour only finds them sooner.
+VERDICT_STYLES = {"pays": "bold cyan", "does not pay": "yellow", "undecided": "magenta"}
+
+# Nothing but one rule below the headings, the third row of eight.
+_RULE = Box("    \n    \n -  \n    \n    \n    \n    \n    \n", ascii=True)
+
+
+def ruled(*columns: tuple[str, Literal["number", "words", "unbroken"]]) -> Table:
+    """Return an empty table with these headings; numbers stand to the right, and only words may be broken."""
+    table = Table(box=_RULE, show_edge=False, pad_edge=False, padding=(0, 1, 0, 0), header_style="bold")
+    for heading, kind in columns:
+        table.add_column(
+            Text(heading),
+            justify="right" if kind == "number" else "left",
+            overflow="fold",
+            no_wrap=kind == "unbroken",
+        )
+    return table
+
+
+def signal_table(record: AuditRecord, entry: QuantityEntry) -> Table:
+    """Return standard deviations: of the reference's level difference, and of each narrow format's error."""
+    formats = narrow_formats(record)
+    names = ("level", "steps", "paths", "signal", *(f"noise\n{clean(name)}" for name in formats))
+    table = ruled(*((name, "number") for name in names))
+    for level in entry.levels:
+        arms = [level.arms.get(name) for name in formats]
+        table.add_row(
+            *_plain(
+                str(level.level),
+                count(level.steps),
+                count(level.paths),
+                _deviation(level.reference.level_variance, 3),
+                *(_deviation(arm.error_variance if arm else None, 2) for arm in arms),
+            )
+        )
+    return table
+
+
+def best_table(record: AuditRecord, entry: QuantityEntry) -> Table:
+    """Return the cheapest admissible scheme of each level, its gain, and up to which cost ratio it is worth it."""
+    table = ruled(
+        ("level", "number"),
+        ("cheapest\nscheme", "words"),
+        (f"gain over\n{today(record)} alone\n{_inside(record)}", "unbroken"),
+        ("breaks\neven at", "number"),
+    )
+    for level in entry.levels:
+        best = level.best
+        if best is None:
+            table.add_row(*_plain(str(level.level), "none is finite", NONE, NONE))
+            continue
+        correction = level.corrections.get(f"{best.narrow}:{best.wide}")
+        gain = interval(best.gain, best.gain_low, best.gain_high)
+        ratio = correction.breakeven_cost_ratio if correction else None
+        table.add_row(*_plain(str(level.level), scheme_words(best), gain, figure(ratio, 2)))
+    return table
+
+
+def format_table(record: AuditRecord, entry: QuantityEntry, name: str) -> Table:
+    """Return what one narrow format is worth on each level: its best scheme, the edge, the verdict."""
+    table = ruled(
+        ("level", "number"), ("scheme", "words"), (f"edge\n{_inside(record)}", "unbroken"), ("verdict", "words")
+    )
+    thresholds = (1.0, worthwhile(record))
+    for level in entry.levels:
+        arm = level.arms[name]
+        scheme = NONE
+        if arm.scheme is not None:
+            scheme = "alone" if arm.scheme.wide is None else f"with {clean(arm.scheme.wide)}"
+        edge = interval(arm.edge, arm.edge_low, arm.edge_high, thresholds)
+        table.add_row(*_plain(str(level.level), scheme, edge), verdict_words(arm))
+    return table
+
+
+def verdict_words(arm: ArmEntry) -> Text:
+    """Return the verdict of a format on a level, with its reason in words."""
+    if arm.verdict is None:
+        return Text(NONE)
+    words = Text(arm.verdict, style=VERDICT_STYLES[arm.verdict])
+    if arm.reason is not None:
+        table = UNSETTLED if arm.verdict == "undecided" else REFUSED
+        words.append(f": {table.get(arm.reason, clean(arm.reason))}", style="none")
+    return words
+
+
+def plan_table(allocation: AllocationEntry) -> Table:
+    """Return the paths of each branch that reach the target, and each level's share of the cost."""
+    table = ruled(
+        ("level", "number"),
+        ("scheme", "words"),
+        ("paths", "number"),
+        ("correction\npaths", "number"),
+        ("share\nof cost", "number"),
+    )
+    total = sum(plan.cost for plan in allocation.levels)
+    for plan in allocation.levels:
+        few = "" if plan.correction_paths is None else count(plan.correction_paths)
+        share = percent(plan.cost / total) if total > 0 else NONE
+        table.add_row(*_plain(str(plan.level), scheme_words(plan.scheme), count(plan.paths), few, share))
+    return table
+
+
+def missing_figures(record: AuditRecord, entry: QuantityEntry) -> list[str]:
+    """Return why there are en dashes in the first two tables, one sentence for each kind."""
+    found = []
+    lost = [level.level for level in entry.levels if level.reference.level_variance is None]
+    if lost:
+        found.append(f"no signal on {levels_named(lost)}: fewer than two paths are finite in the reference")
+    for name in narrow_formats(record):
+        arms = [(level.level, level.arms.get(name)) for level in entry.levels]
+        dashes = [(level, arm) for level, arm in arms if arm is None or arm.error_variance is None]
+        for words in dict.fromkeys(_why(arm) for _, arm in dashes):
+            levels = levels_named(level for level, arm in dashes if _why(arm) == words)
+            found.append(f"no noise of {clean(name)} on {levels}: {words}")
+    found += _missing_gains(record, entry.levels)
+    return found
+
+
+def _missing_gains(record: AuditRecord, levels: Sequence[LevelEntry]) -> Iterable[str]:
+    """Return why gains and break-even ratios are missing."""
+    nothing = [level.level for level in levels if level.best is not None and level.best.gain is None]
+    if nothing:
+        yield f"no gain on {levels_named(nothing)}: {today(record)} has no finite variance there to compare with"
+    if any(level.best is not None and level.best.wide is None for level in levels):
+        yield "no break-even ratio for a scheme of one format: it has no correction"
+    if any(level.best is None for level in levels):
+        yield "no gain where no scheme is finite"
+
+
+def _why(arm: ArmEntry | None) -> str:
+    """Return why an arm has no error."""
+    if arm is None:
+        return "it was not run"
+    if arm.raised is not None:
+        return REFUSED["raised"]
+    return REFUSED.get(arm.reason or "", "fewer than two paths are finite")
+
+
+def _inside(record: AuditRecord) -> str:
+    """Return what stands below the heading of a figure that has an interval and depends on the costs."""
+    assumed = "\ncosts assumed" if assumed_costs(record) else ""
+    return f"({confidence(record)} interval){assumed}"
+
+
+def _deviation(variance: float | None, digits: int) -> str:
+    return NONE if variance is None else figure(math.sqrt(variance), digits)
+
+
+def _plain(*cells: str) -> list[Text]:
+    """Return cells as text, which a table would otherwise read as markup."""
+    return [Text(cell) for cell in cells]

@@ -1,0 +1,175 @@
+"""An audit and its trial as text for a terminal: what is wrong first, then tables, then the verdict.
+
+Everything is made of text objects, never of markup: a name in the user's code cannot colour or hide anything.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from pathlib import Path
+
+from rich.console import Console, ConsoleOptions, Group, RenderableType, RenderResult
+from rich.rule import Rule
+from rich.text import Text
+
+from narrowgauge.record.audit import AuditRecord, FaultEntry, TrialEntry
+from narrowgauge.report.notes import accumulation, format_notes, nonfinite, orders
+from narrowgauge.report.progress import Progress, planned_text
+from narrowgauge.report.settings import (
+    arithmetics,
+    assumptions,
+    coupled,
+    measured_to,
+    narrow_formats,
+    today,
+    worthwhile,
+)
+from narrowgauge.report.tables import best_table, format_table, missing_figures, plan_table, signal_table
+from narrowgauge.report.trial import reach_summary, reach_table
+from narrowgauge.report.verdict import alarms, finest_words, lead, savings, verdict_sentences
+from narrowgauge.report.wording import NONE, clean, joined, setting_value
+
+__all__ = ["Progress", "audit_text", "planned_text", "trial_text", "verdict_text"]
+
+_FILES = "audit.json (everything), levels.csv (one row per quantity, level and arm)"
+
+
+def audit_text(record: AuditRecord, folder: Path | None) -> Group:
+    """Return the whole audit: alarms, how to read it, each quantity, the verdict, assumptions, cautions, files."""
+    parts: list[RenderableType] = [*_alarms(record), Text(f"Audit of {clean(record.kernel.run)}", style="bold"), Text()]
+    parts += [Text("Words of the tables"), *_legend(record), Text()]
+    for name in record.quantities:
+        parts += _quantity(record, name)
+    parts += _verdict(record)
+    parts += [*_heading("Behind the figures"), _labelled("Arithmetic", f"{arithmetics(record)}.")]
+    if record.reach is not None:
+        parts.append(_labelled("Reach of the emulation, in a trial run", reach_summary(record.reach)))
+        parts += _bullets(record.reach.remarks)
+    assumed = assumptions(record)
+    parts.append(_labelled("Assumed, since the audit file does not say", f"{assumed}." if assumed else "nothing."))
+    parts += [Text(), *_heading("Cautions"), *_bullets(record.cautions)]
+    return Group(*parts, Text(), *_files(folder))
+
+
+def verdict_text(record: AuditRecord, folder: Path | None) -> Group:
+    """Return what is wrong, the verdict in words, and where the files are."""
+    return Group(*_alarms(record), *_verdict(record), *_files(folder))
+
+
+def trial_text(trial: TrialEntry) -> Group:
+    """Return what would be rounded, line by line, what would escape, decisions and remarks."""
+    escapes = [fault for fault in trial.faults if fault.kind == "escape"]
+    parts: list[RenderableType] = [*_heading("What would escape"), *_faults(escapes)]
+    if not escapes:
+        parts.append(Text("Nothing: every operation stays in the emulation."))
+    identical = "float64 through the emulation gives plain NumPy's bits."
+    if any(fault.arm == "float64" for fault in escapes):
+        identical = "float64 through the emulation stops before it can be held against plain NumPy."
+    elif not trial.identical:
+        identical = "float64 through the emulation does not give plain NumPy's bits."
+    parts += [Text(identical, style="none" if trial.identical else "bold red"), Text()]
+    raised = [fault for fault in trial.faults if fault.kind == "raised"]
+    if raised:
+        parts += [*_heading("What the kernel would raise"), *_faults(raised), Text()]
+    parts += _heading("What would be rounded, in float64 on a small sample")
+    if trial.reach.lines:
+        parts += [reach_table(trial.reach), Text(), Text(reach_summary(trial.reach))]
+    else:
+        parts.append(Text("No operation was seen."))
+    if trial.reach.remarks:
+        parts += [Text(), *_heading("Remarks"), *_bullets(trial.reach.remarks)]
+    return Group(*parts)
+
+
+def _faults(faults: Iterable[FaultEntry]) -> list[RenderableType]:
+    """Return one item for each message, with the arms that it stopped."""
+    arms: dict[str, list[str]] = {}
+    for fault in faults:
+        arms.setdefault(fault.message, []).append(clean(fault.arm))
+    return [_Hanging(_labelled(joined(names), message), "- ") for message, names in arms.items()]
+
+
+def _alarms(record: AuditRecord) -> list[RenderableType]:
+    found: list[RenderableType] = [_Hanging(text, mark) for mark, text in alarms(record)]
+    return [*found, Text()] if found else []
+
+
+def _legend(record: AuditRecord) -> list[RenderableType]:
+    measured = "the quantity"
+    if coupled(record):
+        measured = "the level difference (fine less coarse path; on level 0 the quantity itself)"
+    terms = {
+        "signal": f"standard deviation of {measured} in float64, in the unit of the quantity",
+        "noise": "standard deviation of the rounding error, path by path, in the same unit",
+        "with float32": "a scheme of two parts: most paths in the narrow format alone, a few in both to correct them",
+        "gain": f"cost of the level as it runs today, {today(record)} alone, over its cost under the scheme, at equal "
+        "variance",
+        "edge": "cost of the best that wider formats can do, over the cost of the best scheme of this format",
+        "pays": f"the interval of the edge is above 1; does not pay: below {worthwhile(record):g}, or not admissible",
+        "breaks even": "up to this cost of a narrow step, a wide one costing 1, the scheme is worth it",
+    }
+    return [_Hanging(_labelled(term, f"{words}."), "  ") for term, words in terms.items()]
+
+
+def _quantity(record: AuditRecord, name: str) -> list[RenderableType]:
+    """Return the tables and sentences of one quantity."""
+    entry = record.quantities[name]
+    parts: list[RenderableType] = [*_heading(f"Quantity {clean(name)}"), signal_table(record, entry), Text()]
+    parts += [best_table(record, entry), Text()]
+    parts += [Text(f"{NONE} {why}.") for why in missing_figures(record, entry)]
+    parts.append(_labelled("Non-finite values, with bounds at 99%", nonfinite(record, entry)))
+    if measured_to(record) > 0 and coupled(record):
+        parts.append(Text(orders(entry)))
+    parts.append(Text())
+    for arm in narrow_formats(record):
+        parts.append(Text(f"{clean(arm)} for {clean(name)}", style="bold"))
+        parts += [format_table(record, entry, arm), *_bullets(format_notes(record, name, arm))]
+        if len(record.quantities) > 1:
+            finest = finest_words(entry.finest_paying_level[arm], measured_to(record))
+            parts.append(Text(f"Finest level where it still pays, by {clean(name)} alone: {finest}."))
+        parts.append(Text())
+    parts.append(Text("How its rounding errors add up", style="bold"))
+    parts += [*_bullets(accumulation(entry)), Text()]
+    if entry.allocation.levels:
+        title = f"Paths for an RMSE of {setting_value(entry.allocation.rmse)} in {clean(name)}"
+        parts += [Text(title, style="bold"), plan_table(entry.allocation), Text()]
+    return parts
+
+
+def _verdict(record: AuditRecord) -> list[RenderableType]:
+    parts: list[RenderableType] = [*_heading("Verdict"), lead(record)]
+    parts += [_Hanging(one, "- ") for one in verdict_sentences(record)]
+    parts += [Text(), *(_Hanging(one, "- ") for one in savings(record))]
+    if len(record.quantities) > 1:
+        parts.append(
+            Text("A run that serves all quantities takes on each level the most paths that any of them needs.")
+        )
+    return [*parts, Text()]
+
+
+def _files(folder: Path | None) -> list[RenderableType]:
+    return [] if folder is None else [_labelled(f"Written to {folder}", _FILES)]
+
+
+def _heading(words: str) -> list[RenderableType]:
+    return [Text(words, style="bold"), Rule(characters="=", style="none")]
+
+
+def _labelled(label: str, words: str) -> Text:
+    return Text(f"{clean(label)}: ", style="bold").append(clean(words), style="not bold")
+
+
+def _bullets(lines: Iterable[str]) -> list[RenderableType]:
+    return [_Hanging(Text(clean(line)), "- ") for line in lines]
+
+
+class _Hanging:
+    """A paragraph behind a mark, whose further lines stand below its first word."""
+
+    def __init__(self, text: Text, mark: str) -> None:
+        self._text, self._mark = text, mark
+
+    def __rich_console__(self, console: Console, options: ConsoleOptions) -> RenderResult:
+        width = max(1, options.max_width - len(self._mark))
+        for number, line in enumerate(self._text.wrap(console, width, overflow="fold")):
+            yield Text(self._mark if number == 0 else " " * len(self._mark)).append_text(line)

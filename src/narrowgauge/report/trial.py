@@ -1,0 +1,69 @@
+"""What the emulation got hold of: operations by line of the kernel, decisions, and what would escape."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+
+from rich.table import Table
+from rich.text import Text
+
+from narrowgauge.record.audit import ReachEntry, ReachLine
+from narrowgauge.report.tables import ruled
+from narrowgauge.report.wording import clean, count, percent
+
+__all__ = ["decisions", "reach_summary", "reach_table"]
+
+# The routes in the order of their columns, and how a column is called; a route without a row is shown by its name.
+_COLUMNS = {
+    "rounded": "rounded one by one",
+    "accumulated": "rounded, summed in a stated order",
+    "whole": "rounded once as a whole",
+    "exact": "exact, never rounds",
+}
+
+
+def reach_table(reach: ReachEntry) -> Table:
+    """Return one row for each line of the kernel: which operations it ran, how often, and how they were rounded."""
+    order = [*_COLUMNS, *sorted({line.route for line in reach.lines} - set(_COLUMNS))]
+    routes = [route for route in order if any(line.route == route for line in reach.lines)]
+    table = ruled(("line", "words"), *((_COLUMNS.get(route, clean(route)), "words") for route in routes))
+    rows: dict[tuple[str, int], list[ReachLine]] = {}
+    for line in reach.lines:
+        rows.setdefault((line.file or "", line.line or 0), []).append(line)
+    names = _short_names(file for file, _ in rows)
+    for (file, number), found in rows.items():
+        place = f"{names[file]}:{number}" if file else "outside the kernel's file"
+        cells = [
+            ", ".join(f"{clean(one.operation)} {count(one.count)}" for one in found if one.route == route)
+            for route in routes
+        ]
+        table.add_row(*(Text(cell) for cell in (place, *cells)))
+    return table
+
+
+def reach_summary(reach: ReachEntry) -> str:
+    """Return how many operations of the trial run were rounded, and what share of those that round one by one."""
+    exact = sum(line.count for line in reach.lines if line.route == "exact")
+    others = reach.operations - reach.rounded - exact
+    text = f"{count(reach.operations)} operations on arrays, of which {count(reach.rounded)} were rounded one by one"
+    text += f" and {count(exact)} are exact"
+    if others:
+        text += f"; {count(others)} were rounded in another way"
+    if reach.share is not None and others:
+        text += f", so that {percent(reach.share)} of all that rounds was rounded one by one"
+    return f"{text}. {decisions(reach)}"
+
+
+def decisions(reach: ReachEntry) -> str:
+    """Return how often the control flow depended on the state."""
+    if reach.decisions == 0:
+        return "No branch of the control flow depended on the state."
+    times = "once" if reach.decisions == 1 else f"{count(reach.decisions)} times"
+    return f"The control flow took a decision that depends on the state {times}; each format decides for itself."
+
+
+def _short_names(files: Iterable[str]) -> dict[str, str]:
+    """Return the last part of each path, or the whole of it where two paths end alike."""
+    unique = list(dict.fromkeys(files))
+    last = [file.replace("\\", "/").rpartition("/")[2] for file in unique]
+    return {file: clean(name if last.count(name) == 1 else file) for file, name in zip(unique, last, strict=True)}
