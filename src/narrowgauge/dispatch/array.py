@@ -1,0 +1,215 @@
+"""The duck array: a carrier with one door in and one door out, not an ndarray subclass.
+
+`dtype` says float64 and `__class__` says np.ndarray, so that the kernel takes the decisions it takes today. Views
+share the carrier's memory as NumPy's do; booleans that come out of it are masks, integers plain arrays.
+"""
+
+from __future__ import annotations
+
+import operator
+from collections.abc import Callable, Iterator
+from typing import Any
+
+import numpy as np
+
+from narrowgauge.dispatch.mask import Mask, bare
+from narrowgauge.dispatch.routes import ROUTES
+from narrowgauge.dispatch.scalar import Scalar, State, plain_item, refuse_attribute
+from narrowgauge.dispatch.setting import Setting, Wrapped, holds
+from narrowgauge.errors import EscapeError, RefusedError
+
+__all__ = ["Array", "carrier_of", "wrap"]
+
+
+def _in_place(ufunc: np.ufunc, call: Callable[..., Any]) -> Callable[[Any, Any], Any]:
+    """Return the method of an in-place operator."""
+    route = ROUTES[ufunc]
+
+    def method(self: Array, other: Any) -> Any:
+        done = self._setting.operate(ufunc, route, (self, other), out=self._carrier, call=call)
+        return NotImplemented if done is NotImplemented else self
+
+    return method
+
+
+def _by_function(function: Callable[..., Any]) -> Callable[..., Any]:
+    """Return the method that is the same as a function of the table with the array in front."""
+
+    def method(self: Array, *arguments: Any, **keywords: Any) -> Any:
+        return self._setting.function(self._setting, function, (self, *arguments), keywords)
+
+    return method
+
+
+class Array(State):
+    """An array of values of the state, in a float32 or float64 carrier of the same shape and strides."""
+
+    __slots__ = ()
+
+    # isinstance(x, np.ndarray) must decide as it does in plain code
+    __class__ = np.ndarray  # type: ignore[assignment]
+
+    __iadd__ = _in_place(np.add, operator.iadd)
+    __isub__ = _in_place(np.subtract, operator.isub)
+    __imul__ = _in_place(np.multiply, operator.imul)
+    __itruediv__ = _in_place(np.divide, operator.itruediv)
+    __ifloordiv__ = _in_place(np.floor_divide, operator.ifloordiv)
+    __imod__ = _in_place(np.remainder, operator.imod)
+    __ipow__ = _in_place(np.power, operator.ipow)
+
+    all = _by_function(np.all)
+    any = _by_function(np.any)
+    max = _by_function(np.max)
+    min = _by_function(np.min)
+    nonzero = _by_function(np.nonzero)
+    ravel = _by_function(np.ravel)
+    repeat = _by_function(np.repeat)
+    squeeze = _by_function(np.squeeze)
+    swapaxes = _by_function(np.swapaxes)
+    take = _by_function(np.take)
+
+    @property
+    def shape(self) -> tuple[int, ...]:
+        """Shape of the carrier."""
+        return self._carrier.shape  # type: ignore[no-any-return]
+
+    @property
+    def ndim(self) -> int:
+        """Number of axes."""
+        return self._carrier.ndim  # type: ignore[no-any-return]
+
+    @property
+    def size(self) -> int:
+        """Number of values."""
+        return self._carrier.size  # type: ignore[no-any-return]
+
+    @property
+    def flags(self) -> Any:
+        """Memory flags of the carrier."""
+        return self._carrier.flags
+
+    @property
+    def T(self) -> Array:  # noqa: N802  # NumPy's name
+        """Transposed view."""
+        return Array(self._carrier.T, self._setting)
+
+    @property
+    def real(self) -> Array:
+        """The array itself."""
+        return self
+
+    def __len__(self) -> int:
+        return len(self._carrier)
+
+    def __iter__(self) -> Iterator[Any]:
+        return map(self._setting.wrap, self._carrier)
+
+    def __contains__(self, value: Any) -> bool:
+        return bool((self == value).any())
+
+    def __getitem__(self, key: Any) -> Any:
+        return wrap(self._carrier[self._key(key)], self._setting)
+
+    def __setitem__(self, key: Any, value: Any) -> None:
+        self._carrier[self._key(key)] = _stored(value, self._setting)
+
+    def __repr__(self) -> str:
+        return f"{self._carrier!r} in {self._setting.arithmetic.format.name}"
+
+    def __str__(self) -> str:
+        return str(self._carrier)
+
+    def __copy__(self) -> Array:
+        return self.copy("K")
+
+    def __deepcopy__(self, memo: object) -> Array:
+        return self.copy("K")
+
+    def copy(self, order: Any = "C") -> Array:
+        """Return a copy, as ndarray.copy."""
+        return Array(self._carrier.copy(order), self._setting)
+
+    def astype(
+        self, dtype: Any, order: Any = "K", casting: Any = "unsafe", subok: bool = True, copy: bool = True
+    ) -> Any:
+        """Return a copy for float64, plain integers, or a mask; other floats are refused."""
+        if self._setting.float_dtype(dtype) is None:
+            return wrap(self._carrier.astype(dtype, order=order, casting=casting, copy=copy), self._setting)
+        return Array(self._carrier.astype(self._carrier.dtype, order=order, copy=copy), self._setting)
+
+    def reshape(self, *shape: Any, order: Any = "C") -> Array:
+        """Return the values in another shape, a view where NumPy gives one."""
+        return Array(self._carrier.reshape(*shape, order=order), self._setting)
+
+    def flatten(self, order: Any = "C") -> Array:
+        """Return a copy of the values in one axis."""
+        return Array(self._carrier.flatten(order), self._setting)
+
+    def transpose(self, *axes: Any) -> Array:
+        """Return a view with its axes in another order."""
+        return Array(self._carrier.transpose(*axes), self._setting)
+
+    def item(self, *place: Any) -> Any:
+        """Return one value as a 0-d value, held as plain code would hold it."""
+        place_of_all = np.arange(self.size).reshape(self.shape)  # so that NumPy reads the place, and refuses it
+        return wrap(plain_item(self._carrier.flat[place_of_all.item(*place)]), self._setting)
+
+    def clip(self, min: Any = None, max: Any = None, **keywords: Any) -> Any:
+        """Return the values cut to bounds, which are rounded as they meet the state."""
+        return self._setting.function(self._setting, np.clip, (self, min, max), keywords)
+
+    def fill(self, value: Any) -> None:
+        """Set every value."""
+        self[...] = value
+
+    def __getattr__(self, name: str) -> Any:
+        return refuse_attribute(self, name, np.ndarray)
+
+    def _key(self, key: Any) -> Any:
+        if isinstance(key, (int, slice)):  # most of them
+            return key
+        if not holds(key, Wrapped):
+            return key
+        if holds(key, State):
+            raise self._setting.fault(RefusedError, "a value of the state as an index; accepted: integers, booleans")
+        return bare(key, self._setting)
+
+
+def wrap(result: Any, setting: Setting) -> Any:
+    """Return a carrier as an array, a 0-d value or a mask; integers and anything else as they are."""
+    if isinstance(result, np.ndarray):
+        kind = result.dtype.kind
+        return Array(result, setting) if kind == "f" else Mask(result, setting) if kind == "b" else result
+    if isinstance(result, (float, np.floating)):
+        return Scalar(result, setting)
+    if isinstance(result, (bool, np.bool_)):
+        return Mask(result, setting)
+    return result
+
+
+def carrier_of(value: Any, setting: Setting) -> Any:
+    """Return the carrier of a value or of a nest of lists, constants rounded; RefusedError for a foreign type."""
+    if isinstance(value, (list, tuple)):
+        if not holds(value, State):
+            return setting.admit(np.asarray(bare(value, setting)))
+        return np.array([carrier_of(item, setting) for item in value], dtype=setting.arithmetic.format.carrier)
+    carrier = setting.admit(value)
+    if carrier is NotImplemented:
+        raise setting.fault(RefusedError, f"a {type(value).__name__} met the state; accepted: numbers and arrays")
+    return carrier
+
+
+def _stored(value: Any, setting: Setting) -> Any:
+    """Return the carrier of what is stored into a buffer; a plain float array is checked, never rounded silently."""
+    if (
+        isinstance(value, np.ndarray)
+        and not isinstance(value, Wrapped)
+        and value.dtype.kind == "f"
+        and not setting.arithmetic.holds(value)
+    ):
+        raise setting.fault(
+            EscapeError,
+            f"a plain float array is stored whose values {setting.arithmetic.format.name} does not have; "
+            "accepted: np.asarray(values), which rounds constants",
+        )
+    return carrier_of(value, setting)

@@ -1,0 +1,201 @@
+"""Python's operators on the state, and the 0-d value: immutable, without length or items.
+
+It holds a scalar exactly as plain code would hold one (a NumPy scalar, or a Python float out of `math`) and applies
+Python's operators to it. A mutable 0-d value would make `x += dx; path.append(x)` a list of one object.
+"""
+
+from __future__ import annotations
+
+import operator
+from collections.abc import Callable
+from typing import Any
+
+import numpy as np
+
+from narrowgauge.dispatch.routes import ROUTES
+from narrowgauge.dispatch.setting import Wrapped
+from narrowgauge.errors import EscapeError, RefusedError
+
+__all__ = ["Scalar", "State", "plain_item", "refuse_attribute"]
+
+
+def _binary(ufunc: np.ufunc, call: Callable[..., Any]) -> Callable[[Any, Any], Any]:
+    """Return the method of a Python operator: `self` first, computed by the operator itself in the carrier."""
+    route = ROUTES[ufunc]
+
+    def method(self: Wrapped, other: Any) -> Any:
+        return self._setting.operate(ufunc, route, (self, other), call=call)
+
+    return method
+
+
+def _reflected(ufunc: np.ufunc, call: Callable[..., Any]) -> Callable[[Any, Any], Any]:
+    """Return the method of a reflected Python operator: `self` second."""
+    route = ROUTES[ufunc]
+
+    def method(self: Wrapped, other: Any) -> Any:
+        return self._setting.operate(ufunc, route, (other, self), call=call)
+
+    return method
+
+
+def _unary(ufunc: np.ufunc, call: Callable[..., Any]) -> Callable[[Any], Any]:
+    """Return the method of a unary Python operator."""
+    route = ROUTES[ufunc]
+
+    def method(self: Wrapped) -> Any:
+        return self._setting.operate(ufunc, route, (self,), call=call)
+
+    return method
+
+
+class State(Wrapped):
+    """Numbers of the state: Python's operators, shared by the array and the 0-d value, and no way out."""
+
+    __slots__ = ()
+
+    dtype = np.dtype(np.float64)
+
+    __add__ = _binary(np.add, operator.add)
+    __sub__ = _binary(np.subtract, operator.sub)
+    __mul__ = _binary(np.multiply, operator.mul)
+    __truediv__ = _binary(np.divide, operator.truediv)
+    __floordiv__ = _binary(np.floor_divide, operator.floordiv)
+    __mod__ = _binary(np.remainder, operator.mod)
+    __pow__ = _binary(np.power, operator.pow)
+    __radd__ = _reflected(np.add, operator.add)
+    __rsub__ = _reflected(np.subtract, operator.sub)
+    __rmul__ = _reflected(np.multiply, operator.mul)
+    __rtruediv__ = _reflected(np.divide, operator.truediv)
+    __rfloordiv__ = _reflected(np.floor_divide, operator.floordiv)
+    __rmod__ = _reflected(np.remainder, operator.mod)
+    __rpow__ = _reflected(np.power, operator.pow)
+    __neg__ = _unary(np.negative, operator.neg)
+    __pos__ = _unary(np.positive, operator.pos)
+    __abs__ = _unary(np.absolute, operator.abs)
+    __lt__ = _binary(np.less, operator.lt)
+    __le__ = _binary(np.less_equal, operator.le)
+    __gt__ = _binary(np.greater, operator.gt)
+    __ge__ = _binary(np.greater_equal, operator.ge)
+    __eq__ = _binary(np.equal, operator.eq)
+    __ne__ = _binary(np.not_equal, operator.ne)
+
+    def __hash__(self) -> int:
+        return hash(self._carrier)  # raises TypeError for an array, as ndarray does
+
+    def __bool__(self) -> bool:
+        return self._setting.decide(self._carrier)
+
+    def __int__(self) -> int:
+        return int(self._carrier)  # integers are exact
+
+    def __float__(self) -> float:
+        raise self._setting.fault(
+            EscapeError,
+            "float(), or a store into a plain array, takes a value out of the emulated arithmetic; "
+            "accepted: leave it as it is, and arrays that the kernel's own module makes",
+        )
+
+    def __array__(self, dtype: Any = None, copy: bool | None = None) -> Any:
+        raise self._setting.fault(
+            EscapeError,
+            "a function or a plain array that does not know the emulated arithmetic asked for plain numbers; "
+            "accepted: NumPy functions called, and arrays made, in the kernel's own module",
+        )
+
+    def __divmod__(self, other: Any) -> Any:
+        raise self._setting.fault(RefusedError, "divmod is not offered; accepted: // and % one by one")
+
+    def __matmul__(self, other: Any) -> Any:
+        raise self._setting.fault(
+            RefusedError,
+            "@ is not offered by this version: its accumulator must be stated; accepted: * and +",
+        )
+
+    __rdivmod__ = __divmod__
+    __rmatmul__ = __matmul__
+
+
+class Scalar(State):
+    """One value of the state: a NumPy scalar of the carrier's type, or a Python float where plain code has one."""
+
+    __slots__ = ()
+
+    # isinstance(x, float) must decide as it does for the np.float64 that plain code has here
+    __class__ = np.float64  # type: ignore[assignment]
+
+    def __repr__(self) -> str:
+        return f"{float(self._carrier)!r} in {self._setting.arithmetic.format.name}"
+
+    def __str__(self) -> str:
+        return str(float(self._carrier))
+
+    def __format__(self, specification: str) -> str:
+        return format(float(self._carrier), specification)
+
+    def __copy__(self) -> Scalar:
+        return self
+
+    def __deepcopy__(self, memo: object) -> Scalar:
+        return self
+
+    def __round__(self, digits: int | None = None) -> int:
+        if digits is not None:
+            raise self._setting.fault(
+                RefusedError, "round() to digits is not offered by this version; accepted: round(x)"
+            )
+        return round(self._carrier)  # type: ignore[no-any-return]  # an integer, and exact
+
+    shape = ()
+    ndim = 0
+    size = 1
+
+    @property
+    def T(self) -> Scalar:  # noqa: N802  # NumPy's name
+        """The value itself."""
+        return self
+
+    @property
+    def real(self) -> Scalar:
+        """The value itself."""
+        return self
+
+    def copy(self) -> Scalar:
+        """Return the value itself: it is immutable."""
+        return self
+
+    def item(self) -> Any:
+        """Return the value, held as plain code would hold it."""
+        return self._setting.wrap(plain_item(self._carrier))
+
+    def astype(self, dtype: Any) -> Any:
+        """Return the value itself for float64, an integer or a boolean; other floats are refused."""
+        if self._setting.float_dtype(dtype) is not None:
+            return self
+        return self._setting.wrap(np.asarray(self._carrier).astype(dtype)[()])
+
+    def __getattr__(self, name: str) -> Any:
+        return refuse_attribute(self, name, np.float64)
+
+
+def plain_item(carrier: Any) -> Any:
+    """Return what `.item()` gives: a Python float in float64, whose operators differ from NumPy's at zero.
+
+    Narrower formats keep the NumPy scalar, so that a quotient that became x / 0 by rounding is infinite and counted.
+    """
+    return carrier.item() if getattr(carrier, "dtype", None) == np.float64 else carrier
+
+
+def refuse_attribute(value: Wrapped, name: str, plain: type) -> Any:
+    """Refuse what plain code has and the wrapped value does not: a method when it is called, else at once.
+
+    Raises AttributeError for what plain code does not have either, so that `hasattr` answers as it does today.
+    """
+    if name.startswith("__") or not hasattr(plain, name):
+        raise AttributeError(f"{plain.__name__!r} object has no attribute {name!r}")
+    message = f".{name} is not offered by this version on a value of the state"
+
+    def refused(*arguments: Any, **keywords: Any) -> Any:
+        raise value._setting.fault(RefusedError, message)
+
+    return refused if callable(getattr(plain, name)) else refused()

@@ -1,0 +1,221 @@
+"""What every wrapped value points to: its arithmetic, its observer, and where in the user's code it is.
+
+`Setting.operate` is the one place where an operation happens: it admits the operands, has the arithmetic compute
+and round, tells the observer, and wraps the result.
+"""
+
+from __future__ import annotations
+
+import sys
+from collections.abc import Callable, Sequence
+from typing import Any, Literal, NamedTuple, Protocol
+
+import numpy as np
+
+from narrowgauge.arithmetic.arithmetic import Arithmetic
+from narrowgauge.errors import DispatchError, RefusedError, SettingsMixedError
+
+__all__ = ["Observer", "Place", "Route", "Setting", "Wrapped", "holds"]
+
+Route = Literal["exact", "rounded"]
+
+
+class Place(NamedTuple):
+    """A line of the user's code."""
+
+    file: str
+    line: int
+
+    def __str__(self) -> str:
+        return f"{self.file}:{self.line}"
+
+
+class Observer(Protocol):
+    """Sees every operation of a run, after it was computed and rounded."""
+
+    def saw(self, setting: Setting, operation: str, route: Route, operands: Sequence[Any], result: Any) -> None:
+        """Take note of one operation; `operands` and `result` are carriers, to be read only."""
+
+    def decided(self, setting: Setting) -> None:
+        """Take note of a branch in the control flow that depends on the state."""
+
+
+class Wrapped:
+    """Base of the array, the 0-d value and the mask: a carrier and the setting that it belongs to."""
+
+    __slots__ = ("_carrier", "_setting")
+
+    _carrier: Any
+    _setting: Setting
+
+    def __init__(self, carrier: Any, setting: Setting) -> None:
+        self._carrier = carrier
+        self._setting = setting
+
+    def __array_ufunc__(self, ufunc: np.ufunc, method: str, *inputs: Any, **keywords: Any) -> Any:
+        return self._setting.ufunc(self._setting, ufunc, method, inputs, keywords)
+
+    def __array_function__(self, function: Any, types: Any, arguments: Any, keywords: Any) -> Any:
+        return self._setting.function(self._setting, function, arguments, keywords)
+
+
+class Setting:
+    """One run's arithmetic and everything that a wrapped value needs to know.
+
+    `files` are the file names of the user's modules that were executed for this run; `wrap`, `ufunc` and
+    `function` are given by the modules below this one, which know the array and the tables. `faults` keeps every
+    refusal and escape in the order in which they happened, also those that the kernel swallowed.
+    """
+
+    __slots__ = ("_wrap", "arithmetic", "faults", "files", "function", "observer", "ufunc")
+
+    def __init__(
+        self,
+        arithmetic: Arithmetic,
+        *,
+        files: set[str],
+        wrap: Callable[[Any, Setting], Any],
+        ufunc: Callable[[Setting, np.ufunc, str, Sequence[Any], dict[str, Any]], Any],
+        function: Callable[[Setting, Callable[..., Any], Sequence[Any], dict[str, Any]], Any],
+        observer: Observer | None = None,
+    ) -> None:
+        self.arithmetic = arithmetic
+        self.files = files
+        self.observer = observer
+        self.ufunc = ufunc
+        self.function = function
+        self.faults: list[DispatchError] = []
+        self._wrap = wrap
+
+    def where(self) -> Place | None:
+        """Return the innermost line of the user's modules that is being executed, or None outside them."""
+        frame = sys._getframe(1)
+        while frame is not None:
+            if frame.f_code.co_filename in self.files:
+                return Place(frame.f_code.co_filename, frame.f_lineno)
+            frame = frame.f_back  # type: ignore[assignment]  # None ends the loop
+        return None
+
+    def fault(self, kind: type[DispatchError], message: str) -> DispatchError:
+        """Record a fault with its place and return it, to be raised."""
+        place = self.where()
+        error = kind(f"{place}: {message}" if place else message)
+        self.faults.append(error)
+        return error
+
+    def wrap(self, result: Any) -> Any:
+        """Return a carrier as an array, a 0-d value or a mask; integers as they are."""
+        return self._wrap(result, self)
+
+    def admit(self, operand: Any) -> Any:
+        """Return the carrier of an operand: weak scalars and constant arrays are rounded once.
+
+        NotImplemented for a foreign type. Raises SettingsMixedError for a value of another run, RefusedError for
+        numbers that cannot be rounded.
+        """
+        if isinstance(operand, Wrapped):
+            if operand._setting is not self:
+                raise self.fault(
+                    SettingsMixedError,
+                    "arrays of two runs met in one operation; a cache or a global of the kernel outlives the run",
+                )
+            return operand._carrier
+        if isinstance(operand, (float, int, np.floating, np.integer, np.bool_)):
+            if isinstance(operand, np.longdouble):
+                raise self.fault(RefusedError, "a long double met the state; accepted: floats to 64 bits")
+            return self.arithmetic.constant(operand)
+        if isinstance(operand, np.ndarray):
+            return self._constants(operand)
+        if isinstance(operand, (list, tuple)):
+            if holds(operand, Wrapped):
+                raise self.fault(RefusedError, "a list of values of the state as an operand; accepted: np.array(list)")
+            return self._constants(np.asarray(operand))
+        if isinstance(operand, (complex, np.complexfloating)):
+            raise self.fault(RefusedError, "a complex number met the state; accepted: real numbers")
+        return NotImplemented
+
+    def operate(
+        self,
+        ufunc: np.ufunc,
+        route: Route,
+        operands: Sequence[Any],
+        *,
+        out: Any = None,
+        call: Callable[..., Any] | None = None,
+    ) -> Any:
+        """Compute one elementary operation, rounded; the wrapped result, or NotImplemented for a foreign operand.
+
+        `out` is a carrier array. With `call` an in-place operator the caller keeps its own object.
+        """
+        carriers = []
+        for operand in operands:
+            # the two most frequent kinds without the call of `admit`
+            if isinstance(operand, Wrapped) and operand._setting is self:
+                carriers.append(operand._carrier)
+            elif type(operand) is float:
+                carriers.append(self.arithmetic.constant(operand))
+            else:
+                carrier = self.admit(operand)
+                if carrier is NotImplemented:
+                    return NotImplemented
+                carriers.append(carrier)
+        if self.observer is None:
+            return self._wrap(self.arithmetic.apply(ufunc, carriers, out, call), self)
+        seen = carriers if out is None else [_kept(carrier, out) for carrier in carriers]
+        result = self.arithmetic.apply(ufunc, carriers, out, call)
+        self.observer.saw(self, ufunc.__name__, route, seen, result)
+        return self._wrap(result, self)
+
+    def note(self, operation: str, route: Route, operands: Sequence[Any], result: Any) -> None:
+        """Let the observer see an operation that is no ufunc; `operands` and `result` are carriers."""
+        if self.observer is not None:
+            self.observer.saw(self, operation, route, operands, result)
+
+    def decide(self, truth: Any) -> bool:
+        """Return the truth of a carrier that the control flow asks for, and let the observer count it."""
+        answer = bool(truth)
+        if self.observer is not None:
+            self.observer.decided(self)
+        return answer
+
+    def float_dtype(self, dtype: Any) -> np.dtype[Any] | None:
+        """Return float64 where a creator or a cast means the state, None for integers and booleans.
+
+        Raises RefusedError for every other type.
+        """
+        wanted = np.dtype(dtype if dtype is not None else np.float64)
+        if wanted.kind in "biu":
+            return None
+        if wanted == np.float64:
+            return wanted
+        raise self.fault(
+            RefusedError,
+            f"the kernel fixes dtype {wanted}; accepted: float64 or none, since the audit chooses the format",
+        )
+
+    def _constants(self, array: np.ndarray[Any, Any]) -> Any:
+        """Return a plain array as the state meets it: booleans as they are, numbers rounded as constants."""
+        kind = array.dtype.kind
+        if type(array) not in (np.ndarray, np.memmap) or kind == "O":  # a matrix multiplies in its own way
+            what = "an array of Python objects" if kind == "O" else f"a {type(array).__name__}"
+            raise self.fault(RefusedError, f"{what} met the state; accepted: plain arrays of numbers")
+        if kind == "b" or (array.dtype == np.float64 and self.arithmetic.format.name == "float64"):
+            return array
+        try:
+            return self.arithmetic.cast(array)
+        except ValueError as problem:
+            raise self.fault(RefusedError, f"a plain array met the state: {problem}") from None
+
+
+def _kept(carrier: Any, out: Any) -> Any:
+    """Return an operand as it is before `out` is written: a copy where it could lie in the same memory."""
+    return carrier.copy() if isinstance(carrier, np.ndarray) and np.may_share_memory(carrier, out) else carrier
+
+
+def holds(value: Any, kind: type[Wrapped]) -> bool:
+    """Whether a value, or anything inside a nest of lists, tuples and dictionaries, is of that kind."""
+    if isinstance(value, (list, tuple)):
+        return any(holds(item, kind) for item in value)
+    if isinstance(value, dict):
+        return any(holds(item, kind) for item in value.values())
+    return isinstance(value, kind)

@@ -1,0 +1,277 @@
+"""The namespaces that a private copy meets instead of numpy, math and builtins.
+
+Most names are NumPy's own, because its functions hand over to the wrapped array by NumPy's protocols. Only what
+makes arrays out of nothing must differ: a plain buffer would coerce the state that is stored into it. Time grids
+(linspace, arange) and integers stay exact until they meet the state.
+"""
+
+from __future__ import annotations
+
+import builtins
+import dataclasses
+import importlib
+import math
+from collections.abc import Callable
+from types import ModuleType
+from typing import Any
+
+import numpy as np
+
+from narrowgauge.dispatch.array import Array, carrier_of
+from narrowgauge.dispatch.functions import FUNCTIONS
+from narrowgauge.dispatch.mask import bare, is_exact
+from narrowgauge.dispatch.routes import ROUTES
+from narrowgauge.dispatch.scalar import State
+from narrowgauge.dispatch.setting import Setting, Wrapped, holds
+from narrowgauge.errors import RefusedError
+
+__all__ = [
+    "builtins_namespace",
+    "dataclasses_namespace",
+    "math_namespace",
+    "numpy_namespace",
+    "refusing_generator",
+    "refusing_namespace",
+]
+
+_MATH: dict[str, np.ufunc] = {
+    "acos": np.arccos, "acosh": np.arccosh, "asin": np.arcsin, "asinh": np.arcsinh, "atan": np.arctan,
+    "atan2": np.arctan2, "atanh": np.arctanh, "cbrt": np.cbrt, "ceil": np.ceil, "copysign": np.copysign,
+    "cos": np.cos, "cosh": np.cosh, "degrees": np.degrees, "exp": np.exp, "exp2": np.exp2, "expm1": np.expm1,
+    "fabs": np.fabs, "floor": np.floor, "fmod": np.fmod, "hypot": np.hypot, "isfinite": np.isfinite,
+    "isinf": np.isinf, "isnan": np.isnan, "log": np.log, "log10": np.log10, "log1p": np.log1p, "log2": np.log2,
+    "pow": np.power, "radians": np.radians, "sin": np.sin, "sinh": np.sinh, "sqrt": np.sqrt, "tan": np.tan,
+    "tanh": np.tanh, "trunc": np.trunc,
+}  # fmt: skip  # a table reads by row
+_TO_INTEGER = frozenset({"ceil", "floor", "trunc"})
+_NO_DRAWS = "the kernel takes its random numbers as its first argument, so that every format sees the same"
+
+
+class _Namespace(ModuleType):
+    """A module whose missing names are those of the module that it stands for."""
+
+    def __init__(self, plain: ModuleType, names: dict[str, Any]) -> None:
+        super().__init__(plain.__name__, plain.__doc__)
+        public = [name for name in vars(plain) if not name.startswith("_")]
+        self.__dict__.update({"_plain": plain, "__all__": getattr(plain, "__all__", public), **names})
+
+    def __getattr__(self, name: str) -> Any:
+        return getattr(self.__dict__["_plain"], name)
+
+    def __dir__(self) -> list[str]:
+        return dir(self.__dict__["_plain"])
+
+
+class _Refusing(ModuleType):
+    """A module that may be imported, whose every public name is a type that refuses to be called."""
+
+    def __init__(self, plain: ModuleType, setting: Setting) -> None:
+        super().__init__(plain.__name__)
+        public = getattr(plain, "__all__", None) or [name for name in vars(plain) if name[0] != "_"]
+        self.__dict__["__all__"] = public
+        for name in public:  # types, since annotations and isinstance() need some of them
+            self.__dict__[name] = _refusing(f"{plain.__name__}.{name}", setting)
+
+
+def _refusing(name: str, setting: Setting) -> type:
+    def refuse(*arguments: Any, **keywords: Any) -> Any:
+        raise setting.fault(RefusedError, f"{name} is not offered by this version: {_NO_DRAWS}")
+
+    return type(name.rpartition(".")[2], (), {"__new__": refuse})
+
+
+class _RefusedGenerator:
+    """What a generator, or one of its methods, becomes in a function that was handed over from Python."""
+
+    def __init__(self, name: str, setting: Setting) -> None:
+        self._name, self._setting = name, setting
+
+    def __call__(self, *arguments: Any, **keywords: Any) -> Any:
+        raise self._setting.fault(RefusedError, f"{self._name} is not offered by this version: {_NO_DRAWS}")
+
+    def __getattr__(self, name: str) -> Any:
+        if name.startswith("__"):
+            raise AttributeError(name)
+        return _RefusedGenerator(f"{self._name}.{name}", self._setting)
+
+
+def refusing_namespace(name: str, setting: Setting) -> ModuleType:
+    """Return a stand-in for a module of random numbers, whose names are refused when they are called."""
+    return _Refusing(importlib.import_module(name), setting)
+
+
+def refusing_generator(name: str, setting: Setting) -> Any:
+    """Return a stand-in for a generator of random numbers or one of its methods, refused when it is called."""
+    return _RefusedGenerator(name, setting)
+
+
+def math_namespace(setting: Setting) -> ModuleType:
+    """Return a stand-in for `math` whose functions also take 0-d values of the state.
+
+    In a narrower format than float64 a value outside a function's domain gives NumPy's NaN or infinity.
+    """
+
+    def stand_in(name: str, ufunc: np.ufunc) -> Callable[..., Any]:
+        plain: Callable[..., Any] = getattr(math, name)
+        # float64 gives the bits of math's own function; a narrower format rounds NumPy's once
+        call = plain if setting.arithmetic.format.name == "float64" else None
+        route = ROUTES[ufunc]
+
+        def function(*arguments: Any) -> Any:
+            if not any(isinstance(argument, State) for argument in arguments):
+                return plain(*arguments)
+            if any(isinstance(argument, Array) for argument in arguments) or len(arguments) != ufunc.nin:
+                raise setting.fault(
+                    RefusedError, f"math.{name} takes {ufunc.nin} scalar(s); accepted: np.{ufunc.__name__}"
+                )
+            result = setting.operate(ufunc, route, arguments, call=call)
+            return int(result) if name in _TO_INTEGER else result
+
+        return function
+
+    return _Namespace(math, {name: stand_in(name, ufunc) for name, ufunc in _MATH.items()})
+
+
+def dataclasses_namespace(names: dict[str, Any]) -> ModuleType:
+    """Return a stand-in for `dataclasses` for a module of these names that is not in sys.modules.
+
+    Python's own looks the words of `from __future__ import annotations` up there, so they are evaluated beforehand.
+    """
+
+    def evaluated(annotation: Any, cls: type) -> Any:
+        try:
+            return eval(annotation, names, dict(vars(cls))) if isinstance(annotation, str) else annotation
+        except (AttributeError, NameError, SyntaxError, TypeError):  # for type checkers only
+            return Any
+
+    def dataclass(cls: type | None = None, /, **options: Any) -> Any:
+        def decorate(given: type) -> type:
+            known = vars(given).get("__annotations__", {})
+            given.__annotations__ = {name: evaluated(annotation, given) for name, annotation in known.items()}
+            return dataclasses.dataclass(**options)(given)
+
+        return decorate if cls is None else decorate(cls)
+
+    return _Namespace(dataclasses, {"dataclass": dataclass})
+
+
+def builtins_namespace(setting: Setting) -> ModuleType:
+    """Return a stand-in for `builtins` whose `max` and `min` round a constant that they choose over the state."""
+
+    def stand_in(plain: Callable[..., Any]) -> Callable[..., Any]:
+        def function(*arguments: Any, **keywords: Any) -> Any:
+            values = list(arguments[0]) if len(arguments) == 1 else list(arguments)
+            chosen = plain(values, **keywords)
+            if isinstance(chosen, State) or not isinstance(chosen, (float, np.floating)) or not holds(values, State):
+                return chosen
+            constant = setting.admit(chosen)
+            return setting.wrap(constant if constant is chosen else setting.arithmetic.format.carrier.type(constant))
+
+        return function
+
+    return _Namespace(builtins, {"max": stand_in(max), "min": stand_in(min)})
+
+
+def numpy_namespace(setting: Setting) -> ModuleType:
+    """Return a stand-in for `numpy` whose creators give arrays of the state and masks."""
+    names: dict[str, Any] = {
+        "array": _array(setting),
+        "full": _full(setting),
+        "where": _where(setting),
+        "random": refusing_namespace("numpy.random", setting),
+    }
+    for name in ("empty", "ones", "zeros"):
+        names[name] = _creator(setting, getattr(np, name))
+    for name in ("empty_like", "full_like", "ones_like", "zeros_like"):
+        names[name] = _like(setting, getattr(np, name))
+    for name, order, ndmin in (
+        ("asanyarray", None, 0),
+        ("asarray", None, 0),
+        ("ascontiguousarray", "C", 1),
+        ("asfortranarray", "F", 0),
+    ):
+        names[name] = _as_array(names["array"], order, ndmin)
+    return _Namespace(np, names)
+
+
+def _refuse_others(setting: Setting, name: str, others: dict[str, Any]) -> None:
+    for other, value in others.items():
+        if value is not None:
+            raise setting.fault(RefusedError, f"{other}= of np.{name} is not offered by this version")
+
+
+def _creator(setting: Setting, make: Callable[..., Any]) -> Callable[..., Any]:
+    def function(shape: Any, dtype: Any = None, order: Any = "C", **others: Any) -> Any:
+        _refuse_others(setting, make.__name__, others)
+        if setting.float_dtype(dtype) is None:
+            return setting.wrap(make(shape, dtype, order))
+        made = make(shape, setting.arithmetic.format.carrier, order)
+        if make is np.empty:
+            made.fill(np.nan)  # what is read before it is written must not pass for a value of the format
+        return Array(made, setting)
+
+    return function
+
+
+def _full(setting: Setting) -> Callable[..., Any]:
+    def full(shape: Any, fill_value: Any, dtype: Any = None, order: Any = "C", **others: Any) -> Any:
+        _refuse_others(setting, "full", others)
+        # NumPy makes integers or booleans of integers or booleans: they stay exact
+        exact = dtype is None and not holds(fill_value, State) and is_exact(fill_value, setting)
+        if exact or (dtype is not None and setting.float_dtype(dtype) is None):
+            return setting.wrap(np.full(shape, bare(fill_value, setting), dtype, order))
+        value = carrier_of(fill_value, setting)
+        return Array(np.full(shape, value, setting.arithmetic.format.carrier, order), setting)
+
+    return full
+
+
+def _like(setting: Setting, function: Callable[..., Any]) -> Callable[..., Any]:
+    def like(model: Any, *arguments: Any, **keywords: Any) -> Any:
+        return FUNCTIONS[function](setting, (model, *arguments), keywords)
+
+    return like
+
+
+def _array(setting: Setting) -> Callable[..., Any]:
+    def array(
+        value: Any, dtype: Any = None, *, copy: Any = True, order: Any = "K", ndmin: int = 0, **others: Any
+    ) -> Any:
+        _refuse_others(setting, "array", others)
+        if not holds(value, State):
+            plain = np.array(bare(value, setting), dtype, copy=copy, order=order, ndmin=ndmin)
+            if plain.dtype.kind != "f":
+                return setting.wrap(plain)
+            setting.float_dtype(dtype)
+            carrier = setting.admit(plain)
+            return Array(carrier.copy("K") if carrier is plain else carrier, setting)
+        if setting.float_dtype(dtype) is None:
+            wanted = str(np.dtype(dtype))
+            raise setting.fault(
+                RefusedError, f"np.array of the state with dtype {wanted}; accepted: .astype({wanted!r})"
+            )
+        carrier = carrier_of(value, setting)
+        wide = setting.arithmetic.format.carrier
+        made = np.array(carrier, wide, copy=copy, order=order, ndmin=ndmin)
+        return value if made is carrier and isinstance(value, Array) else Array(made, setting)
+
+    return array
+
+
+def _as_array(array: Callable[..., Any], order: Any, ndmin: int) -> Callable[..., Any]:
+    def as_array(value: Any, dtype: Any = None, *placed: Any, **keywords: Any) -> Any:
+        given = dict(zip(("order",), placed, strict=False)) | keywords
+        given.setdefault("copy", None)
+        given["order"] = order or given.get("order") or "K"
+        return array(value, dtype, ndmin=ndmin, **given)
+
+    return as_array
+
+
+def _where(setting: Setting) -> Callable[..., Any]:
+    def where(condition: Any, *values: Any) -> Any:
+        if not holds((condition, *values), Wrapped) and all(is_exact(value, setting) for value in values):
+            return np.where(condition, *values)
+        return FUNCTIONS[np.where](setting, (condition, *values), {})
+
+    return where
