@@ -121,12 +121,13 @@ def _claim(folder: Path, file: AuditFile, kernel: KernelEntry, replace: bool) ->
     try:
         folder.mkdir(parents=True, exist_ok=True)
         path = folder / _RECORD
-        text = path.read_text(encoding="utf-8") if path.exists() else None
+        data = path.read_bytes() if path.exists() else None
     except OSError as problem:
         raise AuditFolderError(f"{folder}: cannot be used for the results: {problem.strerror}") from None
-    if text is None or replace:
+    if data is None or replace:
         return
     accepted = "accepted: --out with another folder, or --replace"
+    text = data.decode("utf-8", "replace")  # what is not UTF-8 is no audit of ours, whatever it says
     try:
         found = read_strict(text, str(path))
     except NarrowgaugeError as problem:

@@ -63,11 +63,14 @@ def combined(levels: Sequence[Doubles], estimate: float, alpha: float) -> Interv
     for replicates in levels:
         g = replicates.size - 1
         deviation = replicates[1:] - replicates[1:].mean()
-        parts.append((float((g - 1) / g * (deviation @ deviation)), g - 1))
+        with np.errstate(over="ignore"):
+            parts.append((float((g - 1) / g * (deviation @ deviation)), g - 1))
     variance = sum(part for part, _ in parts)
     if variance == 0:
         return Interval(estimate=float(estimate), low=float(estimate), high=float(estimate), se=0.0)
-    dof = variance**2 / sum(part**2 / free for part, free in parts)
+    if not math.isfinite(variance):
+        return Interval(estimate=float(estimate), low=-math.inf, high=math.inf, se=math.inf)
+    dof = 1 / sum((part / variance) ** 2 / free for part, free in parts)  # shares: their squares stay in range
     se = math.sqrt(variance)
     reach = float(stats.t.ppf(1 - alpha / 2, dof)) * se
     return Interval(estimate=float(estimate), low=float(estimate - reach), high=float(estimate + reach), se=se)

@@ -11,7 +11,7 @@ import numpy.typing as npt
 from narrowgauge.arithmetic.rounding import Floats
 from narrowgauge.dispatch.copies import PrivateCopy
 from narrowgauge.dispatch.setting import Wrapped
-from narrowgauge.errors import EscapeError, KernelError
+from narrowgauge.errors import EscapeError, KernelError, SettingsMixedError
 
 __all__ = ["SINGLE", "arranged", "evaluate"]
 
@@ -54,9 +54,7 @@ def evaluate(
     quantities = {}
     for name, values in named.items():
         if not isinstance(name, str) or not name:
-            raise KernelError(
-                f"the kernel returned a quantity named {name!r}; accepted: names that are strings"
-            )
+            raise KernelError(f"the kernel returned a quantity named {name!r}; accepted: names that are strings")
         quantities[name] = _column(values, name, paths, copy)
     return quantities
 
@@ -64,6 +62,8 @@ def evaluate(
 def _column(values: Any, name: str, paths: int, copy: PrivateCopy) -> npt.NDArray[np.float64]:
     carrier = values._carrier if isinstance(values, Wrapped) else values
     label = "" if name == SINGLE else f" as {name!r}"
+    if isinstance(values, Wrapped) and values._setting is not copy.setting:
+        raise SettingsMixedError(f"the kernel returned an array of another run{label}: a cache of it outlives the run")
     if not isinstance(carrier, np.ndarray):
         raise KernelError(f"the kernel returned {_described(carrier)}{label}; {_ACCEPTED}")
     if carrier.shape != (paths,):
@@ -71,12 +71,11 @@ def _column(values: Any, name: str, paths: int, copy: PrivateCopy) -> npt.NDArra
             f"the kernel returned an array of shape {carrier.shape}{label} for {paths} paths; {_ACCEPTED}"
         )
     if carrier.dtype.kind not in "biuf":
-        raise KernelError(
-            f"the kernel returned an array of dtype {carrier.dtype}{label}; accepted: real numbers"
-        )
+        raise KernelError(f"the kernel returned an array of dtype {carrier.dtype}{label}; accepted: real numbers")
     if (
         copy.setting is not None
         and not isinstance(values, Wrapped)
+        and carrier.dtype.kind == "f"  # booleans and integers are exact
         and not copy.setting.arithmetic.holds(carrier)
     ):
         raise copy.setting.fault(

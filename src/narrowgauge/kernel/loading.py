@@ -39,31 +39,23 @@ def find_kernel(audit_file: AuditFile) -> KernelSource:
     run, source = audit_file.kernel.run, audit_file.source
     target, _, name = run.rpartition(":")
     if audit_file.function is not None:
-        return KernelSource(
-            run=run, source=source, name=name, code=None, module=target, function=audit_file.function
-        )
+        return KernelSource(run=run, source=source, name=name, code=None, module=target, function=audit_file.function)
     path = _located(target, audit_file)
     try:
         text = path.read_bytes()
         code = compile(text, str(path), "exec", dont_inherit=True)
     except OSError as problem:
-        raise AuditFileError(
-            source, "kernel.run", f"cannot read {path}: {problem.strerror}", "a Python file"
-        ) from None
+        raise AuditFileError(source, "kernel.run", f"cannot read {path}: {problem.strerror}", "a Python file") from None
     except (SyntaxError, ValueError) as problem:
         line = getattr(problem, "lineno", None)
         place = f"{path}:{line}" if line else str(path)
         what = getattr(problem, "msg", str(problem))
-        raise AuditFileError(
-            source, "kernel.run", f"{place} is not Python: {what}", "a Python file"
-        ) from None
+        raise AuditFileError(source, "kernel.run", f"{place} is not Python: {what}", "a Python file") from None
     module = path.stem if target.endswith(".py") else target
     return KernelSource(run=run, source=source, name=name, code=code, module=module, function=None)
 
 
-def private_copy(
-    kernel: KernelSource, arithmetic: Arithmetic | None, observer: Observer | None = None
-) -> PrivateCopy:
+def private_copy(kernel: KernelSource, arithmetic: Arithmetic | None, observer: Observer | None = None) -> PrivateCopy:
     """Return the kernel's function executed anew in `arithmetic`, or under plain NumPy for None.
 
     Raises AuditFileError where the module has no such function, KernelError where executing it raises.
@@ -77,16 +69,12 @@ def private_copy(
         module = copy_module(kernel.code, kernel.module, setting)
     except (DispatchError, KernelError):
         raise
-    except Exception as problem:  # whatever the user's module raises is the user's to see
-        raise KernelError(
-            f"{kernel.run}: executing the module raised {type(problem).__name__}: {problem}"
-        ) from problem
+    except (Exception, SystemExit) as problem:  # whatever the user's module raises is the user's to see
+        raise KernelError(f"{kernel.run}: executing the module raised {type(problem).__name__}: {problem}") from problem
     found = getattr(module, kernel.name, None)
     if not callable(found):
         known = sorted(
-            n
-            for n, v in vars(module).items()
-            if callable(v) and getattr(v, "__module__", "") == kernel.module
+            n for n, v in vars(module).items() if callable(v) and getattr(v, "__module__", "") == kernel.module
         )
         raise AuditFileError(
             kernel.source,
@@ -111,8 +99,9 @@ def _located(target: str, audit_file: AuditFile) -> Path:
         )
     where: list[str] | None = [str(audit_file.folder), *sys.path]
     parts = target.split(".")
-    for depth in range(len(parts)):
-        spec = PathFinder.find_spec(".".join(parts[: depth + 1]), where)
+    for depth, part in enumerate(parts):
+        # By its last name alone: under its full name a package without __init__.py asks sys.modules for its parent.
+        spec = PathFinder.find_spec(part, where)
         if spec is None:
             break
         where = None if spec.submodule_search_locations is None else list(spec.submodule_search_locations)

@@ -1,13 +1,9 @@
-"""One block of one level: the same draws through every arm, reduced to series that add up.
-
-For a quantity P, its value on level l under arm a is P_l^a; the level difference D_l^a = P_l^a - P_(l-1)^a takes both
-from the same draws (D_0 = P_0); the error is E_l^a = P_l^a - P_l^ref; the correction from a to b is D_l^b - D_l^a.
-"""
+"""One block of one level: the same draws through every arm, reduced to series that add up."""
 
 from __future__ import annotations
 
 import traceback
-from collections.abc import Mapping
+from collections.abc import Iterable
 from dataclasses import dataclass
 
 import numpy as np
@@ -17,78 +13,17 @@ from narrowgauge.arithmetic.arithmetic import arithmetic_named
 from narrowgauge.dispatch.copies import PrivateCopy
 from narrowgauge.draws.coarsen import Draws, coarse_draws, fine_draws
 from narrowgauge.draws.streams import Purpose, block_paths, uniforms
-from narrowgauge.errors import DispatchError, KernelError
+from narrowgauge.errors import AuditFileError, DispatchError, KernelError
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.contract import evaluate
 from narrowgauge.kernel.loading import KernelSource, private_copy
 from narrowgauge.measure.arms import REFERENCE, arms_of, pairs_of
 from narrowgauge.measure.moments import Moments, Series
+from narrowgauge.measure.tally import LevelTally, QuantityTally, Raised
 
-__all__ = ["BlockRunner", "LevelTally", "QuantityTally", "Raised"]
+__all__ = ["BlockRunner"]
 
 Values = npt.NDArray[np.float64]
-Pair = tuple[str, str]
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Raised:
-    """What a kernel raised in an arm other than the reference, and where in the user's code."""
-
-    kind: str
-    message: str
-    file: str | None
-    line: int | None
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class QuantityTally:
-    """Series of one quantity on one level: per arm P, E and D, per (narrow, wide) pair R. Adds with `+`.
-
-    `coarse` holds the moments of the reference's coarse path, None on a level without one.
-    """
-
-    values: Mapping[str, Series]
-    errors: Mapping[str, Series]
-    differences: Mapping[str, Series]
-    corrections: Mapping[Pair, Series]
-    coarse: Moments | None
-
-    def __add__(self, other: QuantityTally) -> QuantityTally:
-        """Merge with the tally of further paths; an arm that either side lost is lost."""
-        both = self.coarse is not None and other.coarse is not None
-        return QuantityTally(
-            values={a: s + other.values[a] for a, s in self.values.items() if a in other.values},
-            errors={a: s + other.errors[a] for a, s in self.errors.items() if a in other.errors},
-            differences={a: s + other.differences[a] for a, s in self.differences.items() if a in other.differences},
-            corrections={p: s + other.corrections[p] for p, s in self.corrections.items() if p in other.corrections},
-            coarse=self.coarse + other.coarse if both else None,  # type: ignore[operator]  # both are there
-        )
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class LevelTally:
-    """All that was measured on one level so far. Adds with `+`, in the order of the blocks.
-
-    `paths` were run, `dropped` of them were not finite in the reference and are in no series.
-    """
-
-    level: int
-    paths: int
-    dropped: int
-    blocks: int
-    quantities: Mapping[str, QuantityTally]
-    raised: Mapping[str, Raised]
-
-    def __add__(self, other: LevelTally) -> LevelTally:
-        """Merge with the tally of the following blocks."""
-        return LevelTally(
-            level=self.level,
-            paths=self.paths + other.paths,
-            dropped=self.dropped + other.dropped,
-            blocks=self.blocks + other.blocks,
-            quantities={name: tally + other.quantities[name] for name, tally in self.quantities.items()},
-            raised={**other.raised, **self.raised},
-        )
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -115,6 +50,7 @@ class BlockRunner:
         self._copies: dict[str, PrivateCopy] = {}
         self.arms = arms_of(audit_file.arms)
         self.pairs = pairs_of(self.arms, audit_file.formats.wide)
+        self._names: tuple[int, list[str]] | None = None  # the level first run, and the quantities it has
 
     def paths(self, level: int) -> int:
         """Return the number of paths of one block of a level."""
@@ -142,6 +78,8 @@ class BlockRunner:
         draws = self.draws(level, block)
         reference = self._paths(draws, level, REFERENCE)
         assert isinstance(reference, _Paths)  # what the reference raises is raised
+        first, names = self._names = self._names or (level, list(reference.fine))
+        _same_quantities(reference.fine, names, f"level {first}", level, REFERENCE)
         keep = reference.finite()
         kept = None if keep.all() else keep
         runs: dict[str, _Paths] = {REFERENCE: reference}
@@ -151,7 +89,7 @@ class BlockRunner:
             if isinstance(result, Raised):
                 raised[arm] = result
                 continue
-            _same_quantities(result, reference, level, arm)
+            _same_quantities(result.fine, reference.fine, "the reference", level, arm)
             runs[arm] = result
         with np.errstate(all="ignore"):
             quantities = {name: self._tally(name, runs, kept) for name in reference.fine}
@@ -166,8 +104,7 @@ class BlockRunner:
 
     def _paths(self, draws: Draws, level: int, arm: str) -> _Paths | Raised:
         """Run fine and coarse path in one arm."""
-        file = self._file
-        arithmetic = arithmetic_named(arm)
+        file, arithmetic = self._file, arithmetic_named(arm)
         copy = self._copies.get(arm)
         try:
             if copy is None:
@@ -175,7 +112,7 @@ class BlockRunner:
             fine = fine_draws(draws, arithmetic)
             layout, ladder = file.kernel.layout, file.ladder
             values = evaluate(copy, fine, ladder.step_size(level), file.keywords(), layout)
-            coarse = {}
+            coarse: dict[str, Values] = {}
             if self.coupled(level):
                 drawn = coarse_draws(draws, fine, arithmetic)
                 coarse = evaluate(copy, drawn, ladder.step_size(level - 1), file.keywords(), layout)
@@ -183,11 +120,15 @@ class BlockRunner:
             raise KernelError(str(problem), level=level, arm=arm) from problem.__cause__
         except DispatchError as problem:
             raise type(problem)(f"level {level}, arm {arm}: {problem}") from None
+        except AuditFileError:  # there is no such function
+            raise
         except (Exception, SystemExit) as problem:  # whatever a kernel raises becomes data
             if arm == REFERENCE:
                 what = f"the kernel raised {type(problem).__name__}: {problem}"
                 raise KernelError(what, level=level, arm=arm) from problem
             return _raised(problem, copy)
+        if coarse:
+            _same_quantities(coarse, values, "its fine path", level, arm)
         return _Paths(fine=values, coarse=coarse)
 
     def _tally(self, name: str, runs: dict[str, _Paths], keep: npt.NDArray[np.bool_] | None) -> QuantityTally:
@@ -211,10 +152,11 @@ class BlockRunner:
         )
 
 
-def _same_quantities(result: _Paths, reference: _Paths, level: int, arm: str) -> None:
-    if list(result.fine) != list(reference.fine):
-        here, there = ", ".join(result.fine), ", ".join(reference.fine)
-        raise KernelError(f"the kernel returned {here} where the reference has {there}", level=level, arm=arm)
+def _same_quantities(found: Iterable[str], known: Iterable[str], owner: str, level: int, arm: str) -> None:
+    """Raise KernelError unless a run has the quantities that `owner` has, in whatever order."""
+    if set(found) != set(known):
+        here, there = ", ".join(found), ", ".join(known)
+        raise KernelError(f"the kernel returned {here} where {owner} has {there}", level=level, arm=arm)
 
 
 def _raised(problem: BaseException, copy: PrivateCopy | None) -> Raised:

@@ -7,6 +7,7 @@ are taken about the batch's mean, so that no large mean cancels.
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -16,6 +17,8 @@ __all__ = ["BATCHES", "Moments", "Series"]
 
 BATCHES = 32
 _MOST_DISTINCT = 5  # a correction with at most so many values is counted, not averaged
+# Finite values past 1e77 have fourth powers past float64: such a sum is infinite or NaN, and nothing is known of it.
+_QUIET = np.errstate(all="ignore")
 
 Doubles = npt.NDArray[np.float64]
 
@@ -31,6 +34,7 @@ class Moments:
     m4: Doubles
 
     @classmethod
+    @_QUIET
     def of(cls, values: Doubles, keep: npt.NDArray[np.bool_] | None = None, batches: int = BATCHES) -> Moments:
         """Return the moments of values (paths,) cut into equal batches in order; `keep` leaves paths out."""
         table = values.reshape(batches, -1)
@@ -56,6 +60,7 @@ class Moments:
             m4=(square * square).sum(axis=1),
         )
 
+    @_QUIET
     def __add__(self, other: Moments) -> Moments:
         """Merge batch with batch."""
         na, nb = self.count, other.count
@@ -80,6 +85,7 @@ class Moments:
             parts = parts._slice(slice(0, None, 2)) + parts._slice(slice(1, None, 2))
         return parts
 
+    @_QUIET
     def leave_one_out(self) -> tuple[Doubles, Doubles, Doubles]:
         """Return count, mean and m2 of the whole first, then without each batch: arrays of shape (batches + 1,)."""
         whole = self.whole()
@@ -110,17 +116,19 @@ class Moments:
         return float(self.whole().mean[0])
 
     @property
+    @_QUIET
     def kurtosis(self) -> float | None:
-        """Fourth central moment over the squared second, 3 for a normal distribution; None without variance."""
+        """Fourth central moment over the squared second, 3 for a normal distribution; None where it does not exist."""
         whole = self.whole()
-        return float(whole.count[0] * whole.m4[0] / whole.m2[0] ** 2) if whole.m2[0] > 0 else None
+        ratio = float(whole.count[0] * whole.m4[0] / whole.m2[0] ** 2)
+        return ratio if math.isfinite(ratio) else None
 
+    @_QUIET
     def sums_about_zero(self) -> tuple[float, float]:
         """Return the sums of squares and of fourth powers, about zero, over all batches."""
         whole = self.whole()
-        n, m = float(whole.count[0]), float(whole.mean[0])
-        m2, m3, m4 = float(whole.m2[0]), float(whole.m3[0]), float(whole.m4[0])
-        return m2 + n * m * m, m4 + 4 * m * m3 + 6 * m * m * m2 + n * m**4
+        n, m, m2, m3, m4 = whole.count[0], whole.mean[0], whole.m2[0], whole.m3[0], whole.m4[0]
+        return float(m2 + n * m * m), float(m4 + 4 * m * m3 + 6 * m * m * m2 + n * m**4)
 
     def _slice(self, part: slice) -> Moments:
         return Moments(
@@ -191,9 +199,9 @@ class Series:
 
     @property
     def effective_size(self) -> float:
-        """(sum x^2)^2 / sum x^4: how many paths carry the second moment; 0 without events."""
+        """(sum x^2)^2 / sum x^4: how many paths carry the second moment; 0 without events, or where a sum overflows."""
         second, fourth = self.moments.sums_about_zero()
-        return second * second / fourth if fourth > 0 else 0.0
+        return second * second / fourth if 0 < fourth < math.inf else 0.0
 
 
 def _distinct(seen: Doubles) -> frozenset[float] | None:
