@@ -76,7 +76,7 @@ def saving(
 ) -> Interval | None:
     """Return total cost with `rival` on every level divided by the plan's, at equal variance, with its interval.
 
-    The set of schemes is held fixed. None where the rival has no variance on some level.
+    The set of schemes is held fixed. None where nothing varies on any level, under the rival or under the plan.
     """
     theirs = {level: np.exp(views[level].logarithm(rival) / 2) for level in schemes}
     ours = {level: np.exp(views[level].logarithm(scheme) / 2) for level, scheme in schemes.items()}

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 
@@ -19,6 +20,7 @@ __all__ = ["Beyond", "FinestLevel", "finest_on_ladder", "over_quantities"]
 _FURTHEST = 40  # levels beyond the ladder at which the search ends
 _ERROR_SHARE = 0.1  # of Var P: where the error is no longer small the law ends
 _BATCH_DOF = 31
+_OR_FINER = "or finer"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -65,23 +67,31 @@ def finest_on_ladder(
     if len(levels) == 1:
         return FinestLevel(level=level, possible=possible, extrapolated=False, reason="one level")
     if scheme is None or scheme.wide != REFERENCE:
-        return FinestLevel(level=level, possible=None, extrapolated=False, reason="or finer, not extrapolated")
+        return FinestLevel(level=level, possible=None, extrapolated=False, reason=f"{_OR_FINER}, not extrapolated")
     return _extrapolated(numbers[-1], scheme, file, beyond, alpha)
 
 
 def over_quantities(found: Mapping[str, FinestLevel]) -> FinestLevel:
-    """Return the worst over the quantities, with the name of the one that decides."""
-    decider = min(found, key=lambda name: -1 if found[name].level is None else found[name].level or 0)
+    """Return the worst over the quantities, with the name of the one that decides.
+
+    The smallest level, and of equal ones that with the smallest `possible`; a level "or finer" sets no limit.
+    """
+
+    def limit(one: FinestLevel) -> float:
+        open_ended = one.reason is not None and one.reason.startswith(_OR_FINER)
+        return math.inf if open_ended else -1 if one.possible is None else one.possible
+
+    decider = min(found, key=lambda name: (-1 if found[name].level is None else found[name].level, limit(found[name])))
     worst = found[decider]
-    limits = [one.possible for one in found.values() if one.reason != "or finer, not extrapolated"]
-    known = [-1 if limit is None else limit for limit in limits]
-    possible = min(known) if known else None
+    possible = min(limit(one) for one in found.values())
+    # Where the worst pays on every measured level so do all others, and another one may be the less certain.
+    cautious = [one.cautious for one in found.values() if one.cautious is not None]
     return FinestLevel(
         level=worst.level,
-        possible=None if possible in (None, -1) else possible,
+        possible=int(possible) if 0 <= possible < math.inf else None,
         extrapolated=worst.extrapolated,
         reason=worst.reason,
-        cautious=worst.cautious,
+        cautious=None if worst.cautious is None else min(cautious),
         decided_by=decider,
     )
 
@@ -98,9 +108,8 @@ def _leading(truths: Iterable[bool]) -> int:
 
 def _extrapolated(finest: int, scheme: Scheme, file: AuditFile, beyond: Beyond, alpha: float) -> FinestLevel:
     if beyond.decay is None or beyond.correction.reason or beyond.error.reason:
-        return FinestLevel(
-            level=finest, possible=None, extrapolated=False, reason="or finer, too few levels to extrapolate"
-        )
+        reason = f"{_OR_FINER}, too few levels to extrapolate"
+        return FinestLevel(level=finest, possible=None, extrapolated=False, reason=reason)
     quantile = float(stats.t.ppf(1 - alpha / 2, _BATCH_DOF))
     u = FORMATS[scheme.narrow].unit_roundoff
     low_factor, high_factor = _walk_factors(beyond.correction)
@@ -141,10 +150,23 @@ def _walk_factors(fit: AccumulationFit) -> tuple[float, float]:
 
 
 def _edge(scheme: Scheme, file: AuditFile, level: int, signal: float, noise: float) -> float:
-    """Return the edge of a split over float64 where the low branch has the variance signal + noise."""
-    costs = level_costs(file, level)
-    rivals = {REFERENCE, *(file.formats.wide if "alone" in file.formats.schemes else ())}
-    cheapest = min(costs.path(name) for name in rivals if FORMATS[name].precision > FORMATS[scheme.narrow].precision)
-    low = ((signal + noise) * costs.path(scheme.narrow)) ** 0.5
-    correction = (noise * costs.correction(scheme.narrow, REFERENCE)) ** 0.5
-    return float(signal * cheapest / (low + correction) ** 2)
+    """Return the edge of a split over float64 where the low branch has the variance signal + noise.
+
+    A rival of more precision, alone or split, has the noise that the delta^2 law gives it.
+    """
+    costs, formats = level_costs(file, level), file.formats
+    own = FORMATS[scheme.narrow]
+
+    def split(name: str, correction: float) -> float:
+        low = (signal + correction) * costs.path(name)
+        return (math.sqrt(low) + math.sqrt(correction * costs.correction(name, REFERENCE))) ** 2
+
+    rivals = [signal * costs.path(REFERENCE)]
+    for name in dict.fromkeys([formats.today, *formats.wide]):
+        if FORMATS[name].precision <= own.precision:
+            continue
+        if name == formats.today or "alone" in formats.schemes:
+            rivals.append(signal * costs.path(name))
+        elif name != REFERENCE:
+            rivals.append(split(name, noise * (FORMATS[name].unit_roundoff / own.unit_roundoff) ** 2))
+    return min(rivals) / split(scheme.narrow, noise)

@@ -13,13 +13,12 @@ from typing import Literal
 
 import numpy as np
 import numpy.typing as npt
-from scipy import optimize
 
 from narrowgauge.judge.intervals import Interval, binomial_lower, binomial_upper, jackknife, means, variances
 from narrowgauge.kernel.audittables import CostTable
 from narrowgauge.measure.arms import REFERENCE
-from narrowgauge.measure.block import QuantityTally
 from narrowgauge.measure.moments import Series
+from narrowgauge.measure.tally import QuantityTally
 
 __all__ = ["FEW_EVENTS", "LevelCosts", "LevelView", "Scheme", "breakeven"]
 
@@ -72,17 +71,37 @@ class LevelCosts:
         return self.draws * self.table.draws + self.table.path
 
 
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Side:
+    """One bound of S of a scheme where the reference's variance is v: sqrt(cost max(slope v + offset, 0)) + rest."""
+
+    slope: float
+    offset: float
+    cost: float
+    rest: float
+
+    def at(self, v: float) -> float:
+        return math.sqrt(self.cost * max(self.slope * v + self.offset, 0.0)) + self.rest
+
+
 class LevelView:
     """One quantity on one level: the variances of every arm and pair, with and without each batch.
 
-    `largest_correction` is a declared bound on |R|, or None; then it is taken as twice the largest |P| seen.
+    `largest_correction` is a declared bound on |P^wide - P^narrow|, or None. A level difference has two such changes,
+    so that it is doubled where there is a coarse path to bound |R|. Without it |R| is taken as at most twice the range
+    of the values seen and 0, which is twice the largest |P| for a quantity of one sign.
     """
 
     def __init__(self, tally: QuantityTally, costs: LevelCosts, largest_correction: float | None) -> None:
         self.tally = tally
         self.costs = costs
-        seen = max((series.largest for series in tally.values.values()), default=0.0)
-        self._r_max = largest_correction if largest_correction is not None else 2.0 * seen
+        ranges = [_range(series) for series in tally.values.values()]
+        ranges += [series.largest for series in tally.differences.values()]
+        # Any two level differences lie no further apart than that, hence also the two in R.
+        self._apart = 2.0 * max(ranges, default=0.0)
+        self._r_max = self._apart
+        if largest_correction is not None:
+            self._r_max = largest_correction * (1.0 if tally.coarse is None else 2.0)
 
     def correction(self, scheme: Scheme) -> Series | None:
         """Return the series that a scheme's risk rests on: its correction, or the arm's against the reference."""
@@ -96,7 +115,7 @@ class LevelView:
         `cautious` adds four corrections of the largest size seen to the sum of squares.
         """
         risk = self.correction(scheme)
-        extra = _UNSEEN * risk.largest**2 if cautious and risk is not None else 0.0
+        extra = _unseen(risk) if cautious and risk is not None else 0.0
         difference = self.tally.differences[scheme.narrow]
         if scheme.wide is None:
             s = np.sqrt(variances(difference, extra) * self.costs.path(scheme.narrow))
@@ -109,6 +128,8 @@ class LevelView:
 
     def ratio(self, own: Scheme, rival: Scheme, alpha: float) -> Interval:
         """Return the rival's cost divided by the own scheme's at equal variance, with its interval at 1 - alpha."""
+        if own == rival:
+            return Interval(estimate=1.0, low=1.0, high=1.0, se=0.0)
         with np.errstate(invalid="ignore"):
             point = jackknife(self.logarithm(rival) - self.logarithm(own), alpha)
             if self._few(own) or self._few(rival):
@@ -131,71 +152,117 @@ class LevelView:
         interval = jackknife(-means(series), alpha)
         if not (series.counted and series.events < FEW_EVENTS):
             return interval
-        bound = self._r_max * binomial_upper(series.events, series.moments.total, alpha)
+        bound = max(self._r_max, series.largest) * binomial_upper(series.events, series.moments.total, alpha)
         return Interval(estimate=interval.estimate, low=-bound, high=bound, se=interval.se)
 
     def _few(self, scheme: Scheme) -> bool:
-        """Whether a scheme's correction, or the level difference itself, is counted and has too few events."""
-        found = [self.tally.differences[REFERENCE], self.correction(scheme)]
-        return any(s is not None and s.counted and s.events < FEW_EVENTS for s in found)
+        """Whether a scheme's correction, or a level difference in the comparison, has too few events to average."""
+        found = [self.tally.differences[REFERENCE], self.tally.differences[scheme.narrow], self.correction(scheme)]
+        return any(series is not None and _too_few(series) for series in found)
 
     def _counted_bounds(self, own: Scheme, rival: Scheme, alpha: float) -> tuple[float, float]:
-        """Return bounds of the cost ratio from bounds of every variance in it.
+        """Return bounds of the cost ratio from bounds of every variance in it, which share out alpha / 2.
 
-        The reference's V is bounded once; a narrow arm's variance differs from it by at most the mean squared plus
-        d_max^2 times the probability that the correction is not zero, d_max being half of r_max. Both schemes then
-        depend on V alone, and the ratio is taken at the worst of 33 values of V between its bounds.
+        The reference's V is bounded on both sides, every other variance on the side that counts. What is left depends
+        on V alone: with V - s under the rival's root and V + s' under the own one, the ratio falls up to V = s, where
+        the rival's root is cut at 0; then the sign of its slope, that of s + s' + b' sqrt(V + s') - b sqrt(V - s),
+        changes at most once, from rising to falling. So the worst V is an end of its interval, or such a cut.
         """
-        parts = 1 + sum(1 + (scheme.wide is not None) for scheme in (own, rival) if scheme.narrow != REFERENCE)
+        parts = 2 + sum(1 + (scheme.wide is not None) for scheme in (own, rival) if scheme.narrow != REFERENCE)
         each = alpha / 2 / parts
-        low_v, high_v = self._variance_bounds(self.tally.differences[REFERENCE], self._r_max / 2, each)
-        low, high = math.inf, 0.0
-        for v in np.geomspace(max(low_v, 1e-300), max(high_v, 1e-300), 33):
-            cheap, dear = (self._cost_bounds(scheme, float(v), each) for scheme in (rival, own))
-            low = min(low, cheap[0] / dear[1] if dear[1] > 0 else math.inf)
-            high = max(high, cheap[1] / dear[0] if dear[0] > 0 else math.inf)
+        low_v, high_v = self._variance_bounds(self.tally.differences[REFERENCE], self._apart, each)
+        cheap, dear = self._cost_bounds(rival, each), self._cost_bounds(own, each)
+        cuts = [-side.offset / side.slope for side in (cheap[0], dear[0]) if side.slope > 0]
+        worst = [low_v, high_v, *(min(max(cut, low_v), high_v) for cut in cuts)]
+        low = min(_square_ratio(cheap[0].at(v), dear[1].at(v)) for v in worst)
+        high = max(_square_ratio(cheap[1].at(v), dear[0].at(v)) for v in worst)
         return low, high
 
-    def _cost_bounds(self, scheme: Scheme, v: float, alpha: float) -> tuple[float, float]:
-        """Return bounds of S^2 of a scheme where the reference's variance of D is v."""
-        slack = 0.0
-        if scheme.narrow != REFERENCE:
-            series = self.tally.corrections[scheme.narrow, REFERENCE]
-            if series.counted:
-                moved = binomial_upper(series.events, series.moments.total, alpha)
-                square = self.tally.differences[REFERENCE].moments.average ** 2
-                slack = (self._r_max / 2) ** 2 * moved + square
+    def _cost_bounds(self, scheme: Scheme, alpha: float) -> tuple[_Side, _Side]:
+        """Return the lower and the upper bound of a scheme's S as functions of the reference's V."""
         path = self.costs.path(scheme.narrow)
-        low, high = (math.sqrt(max(v + sign * slack, 0.0) * path) for sign in (-1.0, 1.0))
+        rest = (0.0, 0.0)
         if scheme.wide is not None:
             r = self._variance_bounds(self.tally.corrections[scheme.narrow, scheme.wide], self._r_max, alpha)
             cost = self.costs.correction(scheme.narrow, scheme.wide)
-            low, high = low + math.sqrt(r[0] * cost), high + math.sqrt(r[1] * cost)
-        return low * low, high * high
+            rest = (math.sqrt(r[0] * cost), math.sqrt(r[1] * cost))
+        low, high = self._narrow_bounds(scheme.narrow, alpha)
+        return (
+            _Side(slope=low[0], offset=low[1], cost=path, rest=rest[0]),
+            _Side(slope=high[0], offset=high[1], cost=path, rest=rest[1]),
+        )
+
+    def _narrow_bounds(self, narrow: str, alpha: float) -> tuple[tuple[float, float], tuple[float, float]]:
+        """Return (slope, offset) of a lower and an upper bound of Var D^narrow as a function of the reference's V.
+
+        With few corrections: on a share q of the paths D^narrow = Y and D^ref = X differ, and from any c
+        (Y - c)^2 - (X - c)^2 = (Y - X)(Y + X - 2 c). For c = E X its mean is at least Var Y - V, for c = E Y at most;
+        all of these lie within a width w of each other and |Y - X| <= r, so |Var Y - V| <= w min(w, 2 r) q.
+        """
+        if narrow == REFERENCE:
+            return (1.0, 0.0), (1.0, 0.0)
+        reference, own = self.tally.differences[REFERENCE], self.tally.differences[narrow]
+        correction = self.tally.corrections[narrow, REFERENCE]
+        if _too_few(correction):
+            share = binomial_upper(correction.events, correction.moments.total, alpha)
+            r_max = max(self._r_max, correction.largest)
+            slack = self._apart * min(self._apart, 2 * r_max) * share
+            return (1.0, -slack), (1.0, slack)
+        if _too_few(reference) or _too_few(own):
+            low, high = self._variance_bounds(own, self._apart, alpha)
+            return (0.0, low), (0.0, high)
+        extra = _unseen(correction)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            v = np.log(variances(reference))
+            interval = jackknife(np.log(variances(own)) - v, 2 * alpha).exponential()
+            cautious = jackknife(np.log(variances(own, extra)) - v, 2 * alpha).exponential()
+        return (interval.low, 0.0), (max(interval.high, cautious.high), 0.0)
 
     def _variance_bounds(self, series: Series, largest: float, alpha: float) -> tuple[float, float]:
-        """Return one-sided bounds, each at 1 - alpha, of a variance: counted below 20 events, else the jackknife."""
-        n = series.moments.total
-        if series.counted and series.events < FEW_EVENTS:
-            p = binomial_lower(series.events, n, alpha)
-            return series.smallest**2 * p * (1 - p), largest**2 * binomial_upper(series.events, n, alpha)
+        """Return one-sided bounds, each at 1 - alpha, of a variance: counted below 20 events, else the jackknife.
+
+        Counted, with p the probability that the figure is not 0: at least the square of the smallest size times
+        p (1 - p), which is smallest at one end of p, at most the square of the largest size times p.
+        """
+        n, largest = series.moments.total, max(largest, series.largest)
+        if _too_few(series):
+            p, q = binomial_lower(series.events, n, alpha), binomial_upper(series.events, n, alpha)
+            return series.smallest * series.smallest * min(p * (1 - p), q * (1 - q)), largest * largest * q
         with np.errstate(divide="ignore"):
             interval = jackknife(np.log(variances(series)), 2 * alpha).exponential()
-        return interval.low, min(interval.high, largest**2 if series.counted else math.inf)
+            cautious = jackknife(np.log(variances(series, _unseen(series))), 2 * alpha).exponential()
+        high = max(interval.high, cautious.high)
+        return interval.low, min(high, largest * largest) if series.counted else high
 
 
 def breakeven(narrow: float, wide: float, correction: float) -> float:
     """Return the largest cost ratio x at which a split still costs less than the wide arm alone.
 
     The largest x with sqrt(V_narrow x) + sqrt(Var R (1 + x)) < sqrt(V_wide); 0 if Var R >= V_wide. It does not depend
-    on the cost table.
+    on the cost table. Squared, the equation is quadratic in sqrt(x); this is its least positive root.
     """
     if correction >= wide:
         return 0.0
-    if correction == 0.0:
-        return wide / narrow if narrow > 0 else math.inf
+    if narrow == correction == 0.0:
+        return math.inf
+    roots = math.sqrt(narrow) * math.sqrt(wide) + math.sqrt(correction) * math.sqrt(narrow + (wide - correction))
+    root = (wide - correction) / roots
+    return root * root  # not ** 2, which raises where it overflows
 
-    def excess(x: float) -> float:
-        return math.sqrt(narrow * x) + math.sqrt(correction * (1 + x)) - math.sqrt(wide)
 
-    return float(optimize.brentq(excess, 0.0, wide / correction, xtol=1e-12, rtol=1e-12))
+def _too_few(series: Series) -> bool:
+    return series.counted and series.events < FEW_EVENTS
+
+
+def _unseen(series: Series) -> float:
+    return _UNSEEN * series.largest * series.largest
+
+
+def _range(series: Series) -> float:
+    """Return the range of the values seen and 0; the largest magnitude where single values are not known."""
+    seen: list[float] = [0.0, *(series.distinct or ())]
+    return max(series.largest, max(seen) - min(seen))
+
+
+def _square_ratio(above: float, below: float) -> float:
+    return (above / below) * (above / below) if below > 0 else math.inf

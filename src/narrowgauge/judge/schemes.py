@@ -23,7 +23,8 @@ from narrowgauge.judge.gain import LevelCosts, LevelView, Scheme
 from narrowgauge.judge.intervals import Interval
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.measure.arms import REFERENCE
-from narrowgauge.measure.block import LevelTally
+from narrowgauge.measure.moments import Series
+from narrowgauge.measure.tally import LevelTally
 
 __all__ = ["ArmJudgement", "LevelJudgement", "Reason", "Verdict", "judge_level"]
 
@@ -156,8 +157,8 @@ class _Court:
             reasons: list[Reason] = [a.reason for a in admissions.values() if a.reason is not None]
             return self._refused(quantity, own, reasons[0] if reasons else "edge")
         view = self._views[quantity]
-        variance = view.tally.differences[REFERENCE].moments
-        if variance.variance == 0 or any(view.tally.differences[s.narrow].moments.variance == 0 for s in open_schemes):
+        # A variance of 0, or one past float64, compares with nothing.
+        if not all(0 < view.tally.differences[arm].moments.variance < math.inf for arm in (REFERENCE, name)):
             return self._refused(quantity, own, "no_variance")
         rivals = [s for s in self.rivals(name) if self._rivals(view, s)]
         alpha = self._alpha / len(own)
@@ -200,7 +201,7 @@ class _Court:
             return finite
         # The bias of the widest arm lies inside the level's share of the target, for every quantity.
         found = [self._within_budget(quantity, scheme) for quantity in self._views]
-        found += [self._known_tail(view, scheme) for view in self._views.values()]
+        found += [self._known_tail(series) for view in self._views.values() for series in self._risks(view, scheme)]
         return min(found, key=lambda a: ("no", "unknown", "yes").index(a.standing))
 
     def _within_budget(self, quantity: str, scheme: Scheme) -> Admission:
@@ -214,16 +215,27 @@ class _Court:
         if bias.low > share or bias.high < -share:
             return Admission(standing="no", reason="bias", paths_needed=None)
         room = abs(share - abs(bias.estimate))
-        needed = None if room == 0 else self._grown(max(1.0, bias.half_width / room) ** 2)
+        times = math.inf if room == 0 else max(1.0, bias.half_width / room)
+        needed = self._grown(times * times)
         return Admission(standing="unknown", reason="bias", paths_needed=needed)
 
-    def _known_tail(self, view: LevelView, scheme: Scheme) -> Admission:
+    def _risks(self, view: LevelView, scheme: Scheme) -> list[Series]:
+        """Return the series whose tails a scheme rests on: its correction and, where bias is judged, its top's."""
+        found = [view.correction(scheme)]
+        if self._file.target is not None and scheme.wide is not None and scheme.wide != REFERENCE:
+            found.append(view.tally.corrections[scheme.wide, REFERENCE])
+        return [series for series in found if series is not None]
+
+    def _known_tail(self, risk: Series) -> Admission:
         # A correction carried by few paths: the sample does not know what it misses.
-        risk = view.correction(scheme)
-        if risk is None or risk.counted or risk.effective_size >= _LEAST_EFFECTIVE_SIZE:
+        if risk.counted or risk.effective_size >= _LEAST_EFFECTIVE_SIZE:
             return Admission(standing="yes", reason=None, paths_needed=None)
         needed = self._grown(_LEAST_EFFECTIVE_SIZE / max(risk.effective_size, 1.0))
         return Admission(standing="unknown", reason="kurtosis", paths_needed=needed)
+
+    def _trusted(self, view: LevelView, scheme: Scheme) -> bool:
+        risk = view.correction(scheme)
+        return risk is None or self._known_tail(risk).standing == "yes"
 
     def _grown(self, factor: float) -> int | None:
         return math.ceil(self._tally.paths * factor) if math.isfinite(factor) and factor < 1e9 else None
@@ -232,7 +244,8 @@ class _Court:
         known = [s for s in table if self.admission(s).standing == "yes"]
         sure_rivals = [r for r in next(iter(table.values())) if self.admission(r, rival=True).standing == "yes"]
         low = max((min(i.low for i in table[s].values()) for s in known), default=0.0)
-        trusted = all(self.admission(s).reason != "kurtosis" for s in table)
+        # An upper bound means nothing either where the sample does not know what it misses.
+        trusted = all(self._trusted(self._views[quantity], s) for s in table)
         high = max(min(table[s][r].high for r in sure_rivals) for s in table)
         edges = {s: _worst(row) for s, row in table.items()}
         scheme = max(known or table, key=lambda s: edges[s].estimate)
@@ -256,11 +269,16 @@ class _Court:
 
     def _paths_for(self, edge: Interval) -> int | None:
         """Return the paths at which the interval of the edge would leave 1 or the worthwhile edge behind."""
-        if edge.estimate <= 0 or not math.isfinite(edge.high) or edge.low <= 0:
+        if not 0 < edge.estimate < math.inf:
             return None
-        width = math.log(edge.high / edge.low) / 2
-        margins = [math.log(edge.estimate), math.log(self._file.worthwhile / edge.estimate)]
-        return self._grown(max(1.0, width / max(margins)) ** 2) if max(margins) > 0 else None
+        # How many times the bound on that side must come nearer, by 1 / sqrt(paths), for each way out.
+        sides = [(edge.estimate, 1.0, edge.low), (1 / edge.estimate, 1 / self._file.worthwhile, 1 / edge.high)]
+        factors = [
+            max(1.0, math.log(at / bound) / math.log(at / limit)) ** 2
+            for at, limit, bound in sides
+            if at > limit and bound > 0
+        ]
+        return self._grown(min(factors)) if factors else None
 
     def _made(
         self,
