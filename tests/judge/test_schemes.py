@@ -218,6 +218,15 @@ def test_nothing_that_varies_cannot_be_compared(still):
     assert (found.verdict, found.reason, found.edge) == ("does not pay", "no_variance", None)
 
 
+@pytest.mark.parametrize(("values", "verdict"), [((0.0, 1.0), "undecided"), (None, "does not pay")])
+def test_a_difference_not_seen_yet_is_not_a_difference_of_zero(values, verdict):
+    """A yes/no quantity that varies while fine and coarse path always agree: more paths; a smooth one: no variance."""
+    never = dict.fromkeys(("float64", "float16"), np.zeros(PATHS))
+    value = np.resize(values, PATHS) if values else np.linspace(0.0, 1.0, PATHS)
+    found = judged(level_tally(quantity(never, fine=dict.fromkeys(never, value))), audit(formats=SPLIT_ONLY))
+    assert (found.verdict, found.reason) == (verdict, "budget" if values else "no_variance")
+
+
 @pytest.mark.parametrize("scale", [1e160, 1e300, 1e-200])
 def test_a_variance_out_of_range_cannot_be_compared_either(scale):
     """Values whose squares leave float64, above or below, are finite and have no usable variance."""

@@ -159,7 +159,7 @@ class _Court:
         view = self._views[quantity]
         # A variance of 0, or one past float64, compares with nothing.
         if not all(0 < view.tally.differences[arm].moments.variance < math.inf for arm in (REFERENCE, name)):
-            return self._refused(quantity, own, "no_variance")
+            return self._unseen(quantity, own, name) or self._refused(quantity, own, "no_variance")
         rivals = [s for s in self.rivals(name) if self._rivals(view, s)]
         alpha = self._alpha / len(own)
         table = {s: {r: view.ratio(s, r, alpha) for r in rivals} for s in open_schemes}
@@ -307,6 +307,14 @@ class _Court:
             paths_needed=needed,
             admitted_rmse=admitted,
         )
+
+    def _unseen(self, quantity: str, own: list[Scheme], name: str) -> ArmJudgement | None:
+        """Return `undecided` where a yes/no quantity varies but no path yet made a difference between the levels."""
+        value = self._views[quantity].tally.values[REFERENCE]
+        seen = (self._views[quantity].tally.differences[arm].moments.variance for arm in (REFERENCE, name))
+        if not (value.counted and value.moments.variance > 0 and max(seen) < math.inf):
+            return None
+        return self._made(quantity, own[-1], None, verdict="undecided", reason="budget", needed=None)
 
     def _refused(self, quantity: str, own: list[Scheme], reason: Reason) -> ArmJudgement:
         usable = reason == "bias"
