@@ -1,6 +1,6 @@
 """A particle that diffuses through a membrane: its energy, and whether it got across. INVENTED DATA.
 
-Every figure in audit.toml is made up for this example; nothing comes from a measurement.
+Every figure in membrane.toml is made up for this example; nothing comes from a measurement.
 
 The particle is held in a trap around the membrane's centre, and the membrane pushes it out, which makes two
 wells, one on each side. Inside the membrane it also moves more slowly. With y = x - centre and

@@ -1,6 +1,6 @@
 """A reserve option sold by a small pumped-storage plant, path by path. INVENTED DATA.
 
-The plant, the contract and every figure in audit.toml are made up for this example; nothing comes from a real
+The plant, the contract and every figure in reserve.toml are made up for this example; nothing comes from a real
 plant, river, market or contract.
 
 The plant's upper basin is fed by a river. For a premium paid today the buyer of the option may, at the end of

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import json
+import tempfile
 import time
 from collections.abc import Mapping
 from pathlib import Path
@@ -12,7 +13,7 @@ from typing import TYPE_CHECKING, Any
 from narrowgauge.conduct.account import account
 from narrowgauge.conduct.run import Watcher, run
 from narrowgauge.conduct.trial import try_arms
-from narrowgauge.errors import AuditFolderError, NarrowgaugeError
+from narrowgauge.errors import AuditFileError, AuditFolderError, NarrowgaugeError
 from narrowgauge.kernel.auditfile import AuditFile, audit_file_from, read_audit_file
 from narrowgauge.kernel.loading import KernelSource, find_kernel
 from narrowgauge.measure.block import BlockRunner
@@ -75,6 +76,8 @@ def audit(
             raise NarrowgaugeError(
                 f"audit: {name} = {value!r} is not supported by this version; accepted: {accepted!r}"
             )
+    if not isinstance(source, (str, Path, Mapping)):
+        raise AuditFileError("audit", "", f"{source!r} is no audit file", "a path, or a mapping of its shape")
     file = audit_file_from(source) if isinstance(source, Mapping) else read_audit_file(Path(source))
     folder = None if out is None else Path(out)
     if quiet:
@@ -120,6 +123,8 @@ def _claim(folder: Path, file: AuditFile, kernel: KernelEntry, replace: bool) ->
     """Make the folder, and make sure that it holds no other audit."""
     try:
         folder.mkdir(parents=True, exist_ok=True)
+        with tempfile.TemporaryFile(dir=folder):
+            pass  # better now than when the audit is done
         path = folder / _RECORD
         data = path.read_bytes() if path.exists() else None
     except OSError as problem:

@@ -1,4 +1,4 @@
-"""Every error a user can meet: one class for each thing that can go wrong, each with its exit code.
+"""The errors that a user's input can cause: one class for each thing that can go wrong, each with its exit code.
 
 A message says, in this order: where (the call, or the path into the file), what is wrong with the value,
 what is accepted, and, where it helps, what to do.

@@ -12,7 +12,7 @@ from narrowgauge.api import audit, try_out
 from narrowgauge.conduct.trial import identity_run, try_arms
 from narrowgauge.draws.streams import Purpose
 from narrowgauge.errors import AuditFileError, KernelError, RefusedError
-from narrowgauge.kernel.auditfile import AuditFile
+from narrowgauge.kernel.auditfile import AuditFile, read_audit_file
 from narrowgauge.kernel.loading import find_kernel
 from narrowgauge.measure.block import BlockRunner
 from narrowgauge.record.audit import FaultEntry, ReachEntry, TrialEntry
@@ -40,7 +40,7 @@ def test_reach_counts_the_operations_of_every_line(tmp_path: Path) -> None:
     r h is a product of Python's own numbers and no operation of the state.
     """
     source = GEOMETRIC.replace("    return x\n", "        if x[0] > 1e9:\n            break\n    return x\n")
-    path = str((tmp_path / "kernel.py").resolve())
+    path = "kernel.py"
     reach = identity(file_for(tmp_path, source))
     counts = {(line.file, line.line, line.operation): line.count for line in reach.lines if line.route == "rounded"}
     assert counts == {(path, 6, "add"): 8, (path, 6, "multiply"): 12}
@@ -292,3 +292,62 @@ def test_plain_values_that_only_float64_has_are_a_fault_of_the_narrow_arms(tmp_p
         )
         for arm in ("bfloat16", "float16", "float32")
     ]
+
+
+TWO = "import numpy as np\n\ndef value(dW, h):\n    return {'call': dW[0] + 1.0, 'put': dW[0] * 2.0}\n"
+EACH = "accepted: a table with a number for each of call, put"
+
+
+@pytest.mark.parametrize(
+    ("target", "message"),
+    [
+        ("rmse = 0.1", f"target.rmse: one number for 2 quantities; {EACH}"),
+        ("rmse = {call = 0.1}", f"target.rmse: no number for put; {EACH}"),
+        (
+            "rmse = {call = 0.1, putt = 0.1}",
+            "target.rmse.putt: the kernel returns no such quantity; accepted: call, put",
+        ),
+        (
+            "rmse = {call = 0.1, put = 0.1}\nlargest_correction = {cal = 1.0}",
+            "target.largest_correction.cal: the kernel returns no such quantity; accepted: call, put",
+        ),
+    ],
+)
+def test_a_target_names_the_quantities_that_the_kernel_returns(tmp_path: Path, target: str, message: str) -> None:
+    """A name mistyped or left out would switch the judgement of bias off: refused, with the key."""
+    file = read_audit_file(written_with(tmp_path, TWO, f"[target]\n{target}\n"))
+    with pytest.raises(AuditFileError) as caught:
+        identity(file)
+    assert str(caught.value) == f"{file.source}: {message}"
+
+
+@pytest.mark.parametrize(
+    ("parameters", "signature", "message"),
+    [
+        ("", "dW, h, *, rate", "parameters.rate: missing, and the kernel has no default; accepted: rate"),
+        ("ratee = 1", "dW, h, *, rate=1", "parameters.ratee: the kernel takes no such argument; accepted: rate"),
+        ("rate = 1", "dW, h", "parameters.rate: the kernel takes no such argument; accepted: no parameters"),
+        (
+            "",
+            "dW",
+            "kernel.run: the kernel takes 1 positional arguments; accepted: a function of the draws, the step size "
+            "and parameters",
+        ),
+    ],
+)
+def test_parameters_fit_the_signature(tmp_path: Path, parameters: str, signature: str, message: str) -> None:
+    """A parameter that is missing or unknown is named by its key before anything runs."""
+    source = f"def value({signature}):\n    return dW[0]\n"
+    file = read_audit_file(written_with(tmp_path, source, f"[parameters]\n{parameters}\n"))
+    with pytest.raises(AuditFileError) as caught:
+        identity(file)
+    assert str(caught.value) == f"{file.source}: {message}"
+
+
+def written_with(folder: Path, source: str, tables: str) -> Path:
+    """Write a kernel and an audit file of three levels with further tables, and return the file's path."""
+    (folder / "kernel.py").write_text(source, encoding="utf-8")
+    path = folder / "asked.toml"
+    head = '[kernel]\nrun = "kernel.py:value"\ntakes = "increments"\n[ladder]\nhorizon = 1.0\nfinest = 2\n'
+    path.write_text(head + tables, encoding="utf-8")
+    return path

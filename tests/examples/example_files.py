@@ -26,7 +26,7 @@ STANDARD_ERRORS = 5.0
 
 def audit_file(name: str) -> dict[str, Any]:
     """Return the example's audit file as a mapping."""
-    return tomllib.loads((EXAMPLES / name / "audit.toml").read_text(encoding="utf-8"))
+    return tomllib.loads((EXAMPLES / name / f"{name}.toml").read_text(encoding="utf-8"))
 
 
 def kernel_of(name: str) -> Kernel:

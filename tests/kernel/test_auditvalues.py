@@ -36,9 +36,10 @@ class TestParameters:
 
     @pytest.mark.parametrize(("text", "shape"), [("[]", (0,)), ("[[], []]", (2, 0)), ("[[[1]]]", (1, 1, 1))])
     def test_shapes(self, tmp_path, text, shape):
-        """An array has the shape of its nesting; an empty one is an array of numbers."""
+        """An array has the shape of its nesting; an empty one is an array of float64, one of integers holds indices."""
         value = read(tmp_path, f"{LEAST}[parameters]\na = {text}").keywords()["a"]
-        assert (value.shape, value.dtype) == (shape, np.float64)
+        assert (value.shape, value.dtype) == (shape, np.int64 if value.size else np.float64)
+        assert read(tmp_path, f"{LEAST}[parameters]\na = [1, 2.0]").keywords()["a"].dtype == np.float64
 
     def test_deepest_array(self, tmp_path):
         """An array nested as deep as is accepted is one NumPy can hold."""
@@ -77,16 +78,19 @@ class TestMapping:
         assert mapping["kernel"]["run"] is module_level_kernel
 
     def test_other_callables(self):
-        """A function without a name of its own, or inside another, is accepted all the same."""
-        for function, run in (
-            (lambda dW, h: dW, "TestMapping.test_other_callables.<locals>.<lambda>"),
-            (functools.partial(module_level_kernel, h=1), "partial"),
-        ):
+        """A function without a name of its own is accepted; what has no code of its own to copy is refused."""
+        mapping = least()
+        mapping["kernel"]["run"] = function = lambda dW, h: dW
+        audit_file = audit_file_from(mapping)
+        assert audit_file.kernel.run.split(":")[1] == "TestMapping.test_other_callables.<locals>.<lambda>"
+        assert audit_file.function is function
+        for other, kind in ((functools.partial(module_level_kernel, h=1), "partial"), (np.exp, "ufunc")):
             mapping = least()
-            mapping["kernel"]["run"] = function
-            audit_file = audit_file_from(mapping)
-            assert audit_file.kernel.run.split(":")[1] == run
-            assert audit_file.function is function
+            mapping["kernel"]["run"] = other
+            with pytest.raises(AuditFileError) as caught:
+                audit_file_from(mapping)
+            what = f"audit: kernel.run: a {kind} cannot be copied into another arithmetic"
+            assert str(caught.value) == f"{what}; accepted: a function defined with def, or file.py:function"
 
     def test_values_of_python(self):
         """NumPy's arrays and scalars, tuples and members of enumerations become plain values of TOML."""

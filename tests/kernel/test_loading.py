@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import functools
 import sys
 from pathlib import Path
 from typing import Any
@@ -247,12 +246,3 @@ def test_a_function_of_a_local_scope_is_copied_with_its_cells() -> None:
     third, tenth = (np.float16(number) for number in (1 / 3, 0.1))
     assert result(find_kernel(handed(shifted)), "float16")[0] == float(third + tenth)
     assert result(find_kernel(handed(shifted)))[0] == 1 / 3 + 0.1
-
-
-@pytest.mark.parametrize("function", [functools.partial(scaled, factor=2.0), np.abs])
-def test_what_is_no_python_function_is_refused(function: Any) -> None:
-    """A callable without Python code cannot be copied."""
-    kernel = find_kernel(handed(function))
-    with pytest.raises(KernelError) as caught:
-        private_copy(kernel, NARROW)
-    assert str(caught.value) == f"{function!r} is not a Python function; accepted: a function defined with def"

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import operator
 import time
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
@@ -17,7 +18,7 @@ from narrowgauge.measure.block import BlockRunner
 from narrowgauge.measure.tally import LevelTally
 from narrowgauge.record.audit import ReachEntry
 
-__all__ = ["Outcome", "Plan", "Watcher", "run", "settled_levels"]
+__all__ = ["Outcome", "Plan", "Watcher", "run"]
 
 _TIMED_LEVEL = 3  # its first block is run first, to say how long the rest takes; it is kept
 
@@ -66,21 +67,17 @@ class Outcome:
     reach: ReachEntry
 
 
-def settled_levels(judgement: LevelJudgement) -> bool:
-    """Whether a level needs no more paths for an audit: no format is undecided."""
-    return judgement.settled
-
-
 def run(
     file: AuditFile,
     kernel: KernelSource,
     *,
-    settled: Callable[[LevelJudgement], bool] = settled_levels,
+    settled: Callable[[LevelJudgement], bool] = operator.attrgetter("settled"),
     watcher: Watcher | None = None,
 ) -> Outcome:
-    """Measure and judge every level: at `paths`, twice that, four times ... up to `most_paths`.
+    """Measure and judge every level: at `paths`, twice that, four times ... up to `most_paths`, in whole blocks.
 
-    Levels that are not settled at one look draw more paths for the next; each of J looks has confidence
+    `settled` says whether a level needs no more paths; for an audit, whether no format is undecided on it. Levels that
+    are not settled at one look draw more paths for the next; each of J looks has confidence
     1 - (1 - confidence) / J. Raises what the identity run and the blocks raise.
     """
     with threadpool_limits(limits=1):  # the same sums in the same order, whatever machine
@@ -106,7 +103,7 @@ class _Conductor:
     def run(self) -> Outcome:
         file = self._file
         reach = identity_run(file, self._kernel, self._runner)
-        looks = _looks(file.sampling.paths, file.sampling.most_paths)
+        looks = self._looks()
         alpha = (1 - file.sampling.confidence) / len(looks)
         if self._watcher is not None:
             self._watcher.planned(self._plan(looks))
@@ -121,6 +118,18 @@ class _Conductor:
             if not pending:
                 break
         return Outcome(tallies=self._tallies, judgements=judgements, alpha=alpha, reach=reach)
+
+    def _looks(self) -> list[int]:
+        """Return the paths at which levels are judged: doubled within the budget, each with a block that is new."""
+        sampling, looks = self._file.sampling, []
+        seen: list[int] = []
+        target = sampling.paths
+        while target <= sampling.most_paths:
+            drawn = [self._rounded_up(level, target) for level in self._file.ladder.levels]
+            if drawn != seen:
+                looks.append(target)
+            seen, target = drawn, 2 * target
+        return looks
 
     def _draw(self, level: int, target: int) -> None:
         """Run whole blocks, in the order of their keys, until a level has at least `target` paths."""
@@ -175,11 +184,3 @@ class _Conductor:
             seconds=first * each,
             most_seconds=most * each,
         )
-
-
-def _looks(paths: int, most_paths: int) -> list[int]:
-    """Return the numbers of paths at which a level is judged: doubled while they are within the budget."""
-    looks = [paths]
-    while looks[-1] * 2 <= most_paths:
-        looks.append(looks[-1] * 2)
-    return looks

@@ -19,7 +19,7 @@ from narrowgauge.draws.coarsen import Draws, fine_draws
 from narrowgauge.draws.streams import Purpose
 from narrowgauge.errors import AuditFileError, DispatchError, KernelError
 from narrowgauge.kernel.auditfile import AuditFile
-from narrowgauge.kernel.contract import evaluate
+from narrowgauge.kernel.contract import check_parameters, evaluate
 from narrowgauge.kernel.loading import KernelSource, private_copy
 from narrowgauge.measure.arms import REFERENCE
 from narrowgauge.measure.block import BlockRunner
@@ -61,11 +61,22 @@ def identity_run(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> 
     """Run the kernel under plain NumPy and under float64 through the whole machinery; return what the latter reached.
 
     Raises KernelError where the results differ in any bit, of these two runs or of a repeated one, or the kernel
-    raises, and what the machinery refuses.
+    raises, and what the machinery refuses; AuditFileError where parameters or targets do not fit the kernel.
     """
-    level = min(_LEVEL, file.ladder.finest)
-    draws = runner.draws(level, 0, Purpose.IDENTITY, _PATHS)
-    count = _Count()
+    counts = []
+    for level in _levels(file):
+        counts.append(_Count())
+        _identical(file, kernel, runner.draws(level, 0, Purpose.IDENTITY, _PATHS), level, counts[-1])
+    return _reach(counts[0], file)
+
+
+def _levels(file: AuditFile) -> list[int]:
+    """Return the levels of a trial: one whose time loop is passed through more than once, then the coarsest."""
+    return sorted({min(_LEVEL, file.ladder.finest), 0}, reverse=True)
+
+
+def _identical(file: AuditFile, kernel: KernelSource, draws: Draws, level: int, count: _Count) -> None:
+    """Raise unless plain NumPy, plain NumPy again and float64 through the machinery give the same bits."""
     plain, repeated = _plainly_twice(file, kernel, draws, level)
     try:
         copy = private_copy(kernel, arithmetic_named(REFERENCE), count)
@@ -79,7 +90,7 @@ def identity_run(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> 
         _same_bits(name, plain, repeated, level, _NOT_REPEATABLE)
     for name in plain | with_machinery:
         _same_bits(name, plain, with_machinery, level, _NOT_IDENTICAL)
-    return _reach(count)
+    _check_targets(file, list(plain))
 
 
 def try_arms(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> TrialEntry:
@@ -92,19 +103,27 @@ def try_arms(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> Tria
     except DispatchError as problem:
         identical = False
         faults.append(FaultEntry(arm=REFERENCE, kind="escape", message=str(problem)))
-    level = min(_LEVEL, file.ladder.finest)
-    draws = runner.draws(level, 0, Purpose.IDENTITY, _PATHS)
     for arm in runner.arms[1:]:
-        try:
-            evaluate(private_copy(kernel, arithmetic_named(arm)), *_arguments(file, draws, level, arm))
-        except DispatchError as problem:
-            faults.append(FaultEntry(arm=arm, kind="escape", message=str(problem)))
-        except KernelError as problem:
-            raise KernelError(str(problem), level=level, arm=arm) from problem.__cause__
-        except (Exception, SystemExit) as problem:  # the audit itself keeps what a narrow arm raises as data
-            what = f"the kernel raised {type(problem).__name__}: {problem}"
-            faults.append(FaultEntry(arm=arm, kind="raised", message=what))
+        for level in _levels(file):
+            fault = _fault(file, kernel, runner.draws(level, 0, Purpose.IDENTITY, _PATHS), level, arm)
+            if fault is not None:
+                faults.append(fault)
+                break
     return TrialEntry(identical=identical, reach=reach, faults=faults)
+
+
+def _fault(file: AuditFile, kernel: KernelSource, draws: Draws, level: int, arm: str) -> FaultEntry | None:
+    """Run one arm on one level and return what stops it, or None."""
+    try:
+        evaluate(private_copy(kernel, arithmetic_named(arm)), *_arguments(file, draws, level, arm))
+    except DispatchError as problem:
+        return FaultEntry(arm=arm, kind="escape", message=str(problem))
+    except KernelError as problem:
+        raise KernelError(str(problem), level=level, arm=arm) from problem.__cause__
+    except (Exception, SystemExit) as problem:  # the audit itself keeps what a narrow arm raises as data
+        what = f"the kernel raised {type(problem).__name__}: {problem}"
+        return FaultEntry(arm=arm, kind="raised", message=what)
+    return None
 
 
 def _plainly_twice(file: AuditFile, kernel: KernelSource, draws: Draws, level: int) -> tuple[Quantities, Quantities]:
@@ -112,11 +131,12 @@ def _plainly_twice(file: AuditFile, kernel: KernelSource, draws: Draws, level: i
     arm = "plain NumPy"
     try:
         copy = private_copy(kernel, None)
+        check_parameters(copy.function, file)
         first = evaluate(copy, *_arguments(file, draws, level, REFERENCE))
         return first, evaluate(copy, *_arguments(file, draws, level, REFERENCE))
     except KernelError as problem:
         raise KernelError(str(problem), level=level, arm=arm) from problem.__cause__
-    except AuditFileError:  # there is no such function
+    except AuditFileError:  # there is no such function, or it takes other parameters
         raise
     except (Exception, SystemExit) as problem:  # the reference: its own traceback is shown
         what = f"the kernel raised {type(problem).__name__}: {problem}"
@@ -130,6 +150,27 @@ def _arguments(file: AuditFile, draws: Draws, level: int, arm: str) -> tuple[Any
         file.keywords(),
         file.kernel.layout,
     )
+
+
+def _check_targets(file: AuditFile, quantities: list[str]) -> None:
+    """Raise AuditFileError unless the target names the quantities that the kernel returns."""
+    if file.target is None:
+        return
+    names = ", ".join(quantities)
+    for key in ("rmse", "largest_correction"):
+        figures = getattr(file.target, key)
+        for name in figures if isinstance(figures, dict) else ():
+            if name not in quantities:
+                where = f"target.{key}.{name}"
+                raise AuditFileError(file.source, where, "the kernel returns no such quantity", names)
+    rmse = file.target.rmse
+    accepted = f"a table with a number for each of {names}"
+    if isinstance(rmse, dict):
+        missing = [name for name in quantities if name not in rmse]
+        if missing:
+            raise AuditFileError(file.source, "target.rmse", f"no number for {missing[0]}", accepted)
+    elif len(quantities) > 1:
+        raise AuditFileError(file.source, "target.rmse", f"one number for {len(quantities)} quantities", accepted)
 
 
 def _same_bits(name: str, plain: Quantities, other: Quantities, level: int, words: tuple[str, str]) -> None:
@@ -147,10 +188,10 @@ def _same_bits(name: str, plain: Quantities, other: Quantities, level: int, word
     )
 
 
-def _reach(count: _Count) -> ReachEntry:
+def _reach(count: _Count, file: AuditFile) -> ReachEntry:
     lines = [
         ReachLine(
-            file=place.file if place else None,
+            file=file.shown(place.file) if place else None,
             line=place.line if place else None,
             operation=operation,
             route=route,

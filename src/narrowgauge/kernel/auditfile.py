@@ -9,9 +9,11 @@ from __future__ import annotations
 import copy
 import difflib
 import re
+import sys
 import tomllib
 from collections.abc import Callable, Mapping
 from pathlib import Path
+from types import FunctionType
 from typing import TypeVar
 
 import msgspec
@@ -92,6 +94,21 @@ class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
         """The edge (a ratio of costs) below which a format is not worth having, with a target or without."""
         return _WORTHWHILE if self.target is None else self.target.worthwhile
 
+    def shown(self, file: str) -> str:
+        """Return a source file's path as a record has it: from the audit file's folder or from where it is imported.
+
+        A record must not differ between two checkouts of the same audit.
+        """
+        path = Path(file).resolve()
+        for base in (self.folder, *map(Path, sys.path)):
+            if path.is_relative_to(base.resolve()):
+                return path.relative_to(base.resolve()).as_posix()
+        return path.name
+
+    def coupled(self, level: int) -> bool:
+        """Whether a level is a difference of a fine and a coarse path on the same draws."""
+        return level > 0 and self.kernel.coupling == "sum"
+
     def keywords(self) -> dict[str, object]:
         """Return the parameters as a kernel gets them; arrays of numbers are new float64 arrays each call."""
         return {name: passed(value) for name, value in self.parameters.items()}
@@ -165,6 +182,9 @@ def audit_file_from(mapping: Mapping[str, object], source: str = "audit") -> Aud
     kernel = raw.get("kernel")
     if isinstance(kernel, dict) and callable(kernel.get("run")):
         function = kernel["run"]
+        if not isinstance(function, FunctionType):
+            what = f"a {type(function).__name__} cannot be copied into another arithmetic"
+            raise AuditFileError(source, "kernel.run", what, "a function defined with def, or file.py:function")
         name = getattr(function, "__qualname__", type(function).__qualname__)
         kernel["run"] = f"{getattr(function, '__module__', None) or type(function).__module__}:{name}"
     return _checked(raw, source, Path.cwd(), function)

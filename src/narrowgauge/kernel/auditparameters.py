@@ -34,14 +34,14 @@ def check_parameter(name: str, value: object) -> None:
 
 
 def passed(value: object) -> object:
-    """Return a checked parameter as a kernel gets it: an array of numbers as a new float64 array.
+    """Return a checked parameter as a kernel gets it: an array of numbers as a new float64 or int64 array.
 
-    The shape is that of the nesting; an empty array counts as one of numbers. Arrays of strings or booleans
-    are new lists.
+    It is one of integers where all its numbers are, so that it may hold indices. The shape is that of the nesting; an
+    empty array counts as one of float64. Arrays of strings or booleans are new lists.
     """
     if not isinstance(value, list):
         return value
-    return np.array(value, dtype=np.float64) if _kinds(value, "", 0) <= {"numbers"} else copy.deepcopy(value)
+    return np.array(value) if _kinds(value, "", 0) <= {"numbers"} else copy.deepcopy(value)
 
 
 def plain(value: object, key: str = "", depth: int = 0) -> object:

@@ -213,7 +213,8 @@ class KernelTable(Table, frozen=True, kw_only=True, forbid_unknown_fields=True):
         super().__post_init__()
         default = default_layout(self.factors)
         axes = tuple(axis.strip() for axis in (self.layout or default).split(","))
-        if sorted(axes) != sorted(default.split(", ")):
+        # With one factor its axis may be there, of length one, or not.
+        if sorted(axes) not in (sorted(default.split(", ")), ["factors", "paths", "steps"]):
             draws = "one draw a step" if self.factors == 1 else f"{self.factors} draws a step"
             self.refuse(
                 "layout",

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+import inspect
+from collections.abc import Callable, Mapping
 from typing import Any
 
 import numpy as np
@@ -11,9 +12,10 @@ import numpy.typing as npt
 from narrowgauge.arithmetic.rounding import Floats
 from narrowgauge.dispatch.copies import PrivateCopy
 from narrowgauge.dispatch.setting import Wrapped
-from narrowgauge.errors import EscapeError, KernelError, SettingsMixedError
+from narrowgauge.errors import AuditFileError, EscapeError, KernelError, SettingsMixedError
+from narrowgauge.kernel.auditfile import AuditFile
 
-__all__ = ["SINGLE", "arranged", "evaluate"]
+__all__ = ["SINGLE", "arranged", "check_parameters", "evaluate"]
 
 SINGLE = "value"  # the name of a quantity that is returned as a bare array
 _ACCEPTED = "accepted: an array of shape (paths,), or a mapping of names to such arrays"
@@ -28,6 +30,29 @@ def arranged(draws: Floats, layout: str) -> Floats:
     source = draws if "factors" in axes else draws[:, 0, :]
     names = ["steps", "factors", "paths"] if "factors" in axes else ["steps", "paths"]
     return np.array(source.transpose([names.index(name) for name in axes]), order="C", copy=True)
+
+
+def check_parameters(function: Callable[..., object], file: AuditFile) -> None:
+    """Raise AuditFileError unless a kernel can be called with draws, step size and the audit file's parameters."""
+    try:
+        takes = list(inspect.signature(function).parameters.values())
+    except ValueError:  # a function that does not tell
+        return
+    positional = [one for one in takes if one.kind in (one.POSITIONAL_ONLY, one.POSITIONAL_OR_KEYWORD)]
+    if len(positional) < 2 and not any(one.kind is one.VAR_POSITIONAL for one in takes):
+        what = f"the kernel takes {len(positional)} positional arguments"
+        raise AuditFileError(file.source, "kernel.run", what, "a function of the draws, the step size and parameters")
+    named = [
+        one for one in takes if one not in positional[:2] and one.kind in (one.POSITIONAL_OR_KEYWORD, one.KEYWORD_ONLY)
+    ]
+    known = ", ".join(one.name for one in named) or "no parameters"
+    for one in named:
+        if one.default is one.empty and one.name not in file.parameters:
+            raise AuditFileError(file.source, f"parameters.{one.name}", "missing, and the kernel has no default", known)
+    if not any(one.kind is one.VAR_KEYWORD for one in takes):
+        for name in file.parameters:
+            if name not in {one.name for one in named}:
+                raise AuditFileError(file.source, f"parameters.{name}", "the kernel takes no such argument", known)
 
 
 def evaluate(
@@ -72,15 +97,12 @@ def _column(values: Any, name: str, paths: int, copy: PrivateCopy) -> npt.NDArra
         )
     if carrier.dtype.kind not in "biuf":
         raise KernelError(f"the kernel returned an array of dtype {carrier.dtype}{label}; accepted: real numbers")
-    if (
-        copy.setting is not None
-        and not isinstance(values, Wrapped)
-        and carrier.dtype.kind == "f"  # booleans and integers are exact
-        and not copy.setting.arithmetic.holds(carrier)
-    ):
+    # Booleans and integers are exact; of floats each must be a value of the format, also one that is wrapped.
+    if copy.setting is not None and carrier.dtype.kind == "f" and not copy.setting.arithmetic.holds(carrier):
+        plain = "an array" if isinstance(values, Wrapped) else "a plain array"
         raise copy.setting.fault(
             EscapeError,
-            f"the kernel returned a plain array{label} whose values {copy.setting.arithmetic.format.name} does not "
+            f"the kernel returned {plain}{label} whose values {copy.setting.arithmetic.format.name} does not "
             "have: they did not go through the emulated arithmetic",
         )
     return carrier.astype(np.float64)

@@ -59,7 +59,7 @@ class BlockRunner:
 
     def coupled(self, level: int) -> bool:
         """Whether a level has a coarse path on the same draws."""
-        return level > 0 and self._file.kernel.coupling == "sum"
+        return self._file.coupled(level)
 
     def draws(self, level: int, block: int, purpose: Purpose = Purpose.AUDIT, paths: int | None = None) -> Draws:
         """Return the float64 draws of a block, (steps, factors, paths)."""
@@ -126,10 +126,22 @@ class BlockRunner:
             if arm == REFERENCE:
                 what = f"the kernel raised {type(problem).__name__}: {problem}"
                 raise KernelError(what, level=level, arm=arm) from problem
-            return _raised(problem, copy)
+            return self._raised(problem, copy)
         if coarse:
             _same_quantities(coarse, values, "its fine path", level, arm)
         return _Paths(fine=values, coarse=coarse)
+
+    def _raised(self, problem: BaseException, copy: PrivateCopy | None) -> Raised:
+        """Return an exception as data, with the innermost line in the user's modules."""
+        files = copy.setting.files if copy is not None and copy.setting is not None else set()
+        frames = [f for f in traceback.extract_tb(problem.__traceback__) if f.filename in files]
+        last = frames[-1] if frames else None
+        return Raised(
+            kind=type(problem).__name__,
+            message=str(problem),
+            file=self._file.shown(last.filename) if last else None,
+            line=last.lineno if last else None,
+        )
 
     def _tally(self, name: str, runs: dict[str, _Paths], keep: npt.NDArray[np.bool_] | None) -> QuantityTally:
         differences = {arm: paths.difference(name) for arm, paths in runs.items()}
@@ -157,16 +169,3 @@ def _same_quantities(found: Iterable[str], known: Iterable[str], owner: str, lev
     if set(found) != set(known):
         here, there = ", ".join(found), ", ".join(known)
         raise KernelError(f"the kernel returned {here} where {owner} has {there}", level=level, arm=arm)
-
-
-def _raised(problem: BaseException, copy: PrivateCopy | None) -> Raised:
-    """Return an exception as data, with the innermost line in the user's modules."""
-    files = copy.setting.files if copy is not None and copy.setting is not None else set()
-    frames = [f for f in traceback.extract_tb(problem.__traceback__) if f.filename in files]
-    last = frames[-1] if frames else None
-    return Raised(
-        kind=type(problem).__name__,
-        message=str(problem),
-        file=last.filename if last else None,
-        line=last.lineno if last else None,
-    )
