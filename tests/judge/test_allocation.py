@@ -1,4 +1,4 @@
-"""Paths per branch and the total saving, against the published formula and brute force."""
+"""Paths per branch, for one quantity and for several, against the published formula and brute force."""
 
 from __future__ import annotations
 
@@ -6,12 +6,11 @@ import math
 
 import numpy as np
 import pytest
-from judge_cases import NEAR, PATHS, differences, quantity, shape, uneven, view
+from judge_cases import NEAR, PATHS, differences, quantity, view
 from scipy import stats
 
-from narrowgauge.judge.allocation import Allocation, LevelPlan, allocate, saving
-from narrowgauge.judge.gain import Scheme
-from narrowgauge.kernel.auditfile import CostTable
+from narrowgauge.judge.allocation import Allocation, LevelPlan, allocate, common_plan
+from narrowgauge.judge.gain import FEW_EVENTS, Scheme
 
 ALPHA = 0.01
 REFERENCE = Scheme(kind="alone", narrow="float64")
@@ -30,7 +29,7 @@ def test_paths_are_those_of_the_published_formula():
     doi 10.1017/S096249291500001X, with half of the mean square error for the variance.
     """
     views = {level: view(quantity(differences(4.0**-level)), steps=2**level) for level in range(3)}
-    found = allocate(views, dict.fromkeys(views, REFERENCE), 0.1, HALF)
+    found = allocate(views, dict.fromkeys(views, REFERENCE), 0.1, HALF, ALPHA)
     assert plans(found) == [(442, None), (157, None), (56, None)]
     assert [plan.cost for plan in found.levels] == [442, 157 * 2, 56 * 4]
     assert (found.cost, found.rmse) == (442 + 314 + 224, 0.1)
@@ -44,7 +43,7 @@ def test_both_branches_of_a_split_are_parts_of_one_sum():
         1: view(quantity(differences(0.25)), steps=3),
     }
     budget = (1 - 0.25**2) * 1e-3**2
-    found = allocate(views, {0: SPLIT16, 1: REFERENCE}, 1e-3, 0.25)
+    found = allocate(views, {0: SPLIT16, 1: REFERENCE}, 1e-3, 0.25, ALPHA)
     total = math.sqrt(1.01 * 0.25) + math.sqrt(0.01 * 1.25) + math.sqrt(0.25 * 3)
     wanted = [math.ceil(total * math.sqrt(v / c) / budget) for v, c in ((1.01, 0.25), (0.01, 1.25), (0.25, 3.0))]
     assert plans(found) == [(wanted[0], wanted[1]), (wanted[2], None)]
@@ -57,7 +56,7 @@ def test_both_branches_of_a_split_are_parts_of_one_sum():
 def test_no_other_allocation_of_the_same_variance_is_cheaper():
     """Moving paths between the branches at equal variance raises the cost: Lagrange's condition, by brute force."""
     views = {0: view(quantity(differences(1.0, float16=0.01)))}
-    found = allocate(views, {0: SPLIT16}, 1e-3, 0.25)
+    found = allocate(views, {0: SPLIT16}, 1e-3, 0.25, ALPHA)
     plan = found.levels[0]
     budget = 1.01 / plan.paths + 0.01 / plan.correction_paths
     for factor in (0.9, 0.99, 1.01, 1.1):
@@ -83,6 +82,7 @@ def test_a_correction_with_heavy_tails_has_ten_paths_for_its_kurtosis():
         {0: SPLIT16, 1: SPLIT16, 2: REFERENCE},
         1e3,
         0.25,
+        ALPHA,
     )
     assert plans(loose) == [(32, 640), (32, 32), (32, None)]
 
@@ -90,62 +90,92 @@ def test_a_correction_with_heavy_tails_has_ten_paths_for_its_kurtosis():
 def test_records_are_what_they_say():
     """An allocation holds its levels in the order of the schemes."""
     views = {3: view(quantity(differences(1.0))), 1: view(quantity(differences(1.0)))}
-    found = allocate(views, {3: REFERENCE, 1: REFERENCE}, 1e3, 0.25)
-    expected = [LevelPlan(level=k, scheme=REFERENCE, paths=32, correction_paths=None, cost=32.0) for k in (3, 1)]
+    found = allocate(views, {3: REFERENCE, 1: REFERENCE}, 1e3, 0.25, ALPHA)
+    expected = [
+        LevelPlan(
+            level=k,
+            scheme=REFERENCE,
+            paths=32,
+            correction_paths=None,
+            cost=32.0,
+            bounded=False,
+            path_costs=(1.0,),
+        )
+        for k in (3, 1)
+    ]
     assert found == Allocation(rmse=1e3, levels=tuple(expected), cost=64.0)
 
 
-def test_saving_is_the_square_of_the_ratio_of_sums():
-    """(sum S of the rival / sum S of the plan)^2 over two levels; equal batches leave no doubt about it."""
+def yes_no(events, paths=PATHS):
+    """P is 1 on half of the paths; float16 takes it away from `events` of them."""
+    reference = np.arange(paths) % 2.0
+    narrow = reference.copy()
+    narrow[1 : 2 * events : 2] = 0.0
+    return quantity({"float64": reference, "float16": narrow})
+
+
+@pytest.mark.parametrize("events", [0, 3])
+def test_a_correction_with_too_few_events_is_planned_from_the_upper_bound_of_its_variance(events):
+    """Two levels share alpha: Var R <= 4 p_upper, p_upper = ln(2 / alpha) / N without an event, not 32 paths."""
+    views = {level: view(yes_no(events)) for level in range(2)}
+    found = allocate(views, dict.fromkeys(views, SPLIT16), 1e-3, 0.25, ALPHA)
+    share = ALPHA / 2
+    p = math.log(1 / share) / PATHS if events == 0 else stats.beta.ppf(1 - share, events + 1, PATHS - events)
+    v, r = np.var(np.where(np.arange(PATHS) < 2 * events, 0.0, np.arange(PATHS) % 2), ddof=1), 4 * p
+    total = 2 * (math.sqrt(v * 0.25) + math.sqrt(r * 1.25))
+    wanted = total * math.sqrt(r / 1.25) / ((1 - 0.25**2) * 1e-3**2)
+    for plan in found.levels:
+        assert plan.bounded
+        assert plan.correction_paths == pytest.approx(wanted, abs=1)
+        assert plan.correction_paths > 1000
+    # Negative control: by the sample variance, 0 without an event, 32 paths would be enough.
+    assert events or views[0].tally.corrections["float16", "float64"].moments.variance == 0.0
+
+
+def test_enough_events_are_planned_from_their_own_variance():
+    """From 20 events on the sample variance is that of the plan, and nothing is marked; nor is a level alone."""
+    views = {0: view(yes_no(FEW_EVENTS)), 1: view(yes_no(0))}
+    found = allocate(views, {0: SPLIT16, 1: REFERENCE}, 1e-3, 0.25, ALPHA)
+    assert [plan.bounded for plan in found.levels] == [False, False]
+    low, r = views[0].tally.differences["float16"].moments.variance, np.var(np.arange(PATHS) < FEW_EVENTS, ddof=1)
+    plan = found.levels[0]
+    wanted = math.sqrt(r / 1.25 / (low / 0.25))
+    assert plan.correction_paths / plan.paths == pytest.approx(wanted, rel=2 / plan.correction_paths)
+
+
+def test_a_common_plan_takes_the_most_paths_of_each_branch():
+    """By hand: the quantity of the larger variance needs more of the low branch, that of the noisier R of the other."""
     views = {
-        0: view(quantity(differences(1.0, float16=0.001))),
-        1: view(quantity(differences(0.25, float16=0.002)), steps=3),
+        "a": {0: view(quantity(differences(4.0, float16=0.01))), 1: view(quantity(differences(0.25)), steps=3)},
+        "b": {0: view(quantity(differences(1.0, float16=0.09))), 1: view(quantity(differences(0.25)), steps=3)},
     }
-    found = saving(views, dict.fromkeys(views, SPLIT16), REFERENCE, ALPHA)
-    theirs = 1 + math.sqrt(0.25 * 3)
-    ours = math.sqrt(1.001 * 0.25) + math.sqrt(0.001 * 1.25) + math.sqrt(0.252 * 0.75) + math.sqrt(0.002 * 3.75)
-    for figure in (found.estimate, found.low, found.high):
-        assert figure == pytest.approx((theirs / ours) ** 2, rel=2 * NEAR)
-    same = saving(views, dict.fromkeys(views, REFERENCE), REFERENCE, ALPHA)
-    assert (same.estimate, same.low, same.high) == (1.0, 1.0, 1.0)
+    schemes = {0: SPLIT16, 1: REFERENCE}
+    plans_of = {name: allocate(one, schemes, 1e-2, 0.25, ALPHA) for name, one in views.items()}
+    (a0, a1), (b0, b1) = (plans_of[name].levels for name in "ab")
+    assert a0.paths > b0.paths
+    assert a0.correction_paths < b0.correction_paths
+    assert a1.paths > b1.paths  # the whole of a costs more, so that every level of it needs more
+    found = common_plan(plans_of)
+    first, second = found.levels
+    assert (first.level, first.scheme, first.bounded) == (0, SPLIT16, False)
+    assert (first.low.paths, first.low.decided_by) == (a0.paths, "a")
+    assert (first.correction.paths, first.correction.decided_by) == (b0.correction_paths, "b")
+    assert (second.low.paths, second.low.decided_by, second.correction) == (a1.paths, "a", None)
+    assert first.cost == a0.paths * 0.25 + b0.correction_paths * 1.25
+    assert second.cost == 3 * a1.paths
+    assert found.cost == first.cost + second.cost
+    # Both quantities have what they need, and neither's own plan would do for the other.
+    assert found.cost > max(plan.cost for plan in plans_of.values())
 
 
-def test_the_interval_of_the_saving_is_brute_force_over_batches_of_one_level_at_a_time():
-    """Two levels of different noise: np.var without each batch of one level, the other whole; Satterthwaite's dof."""
-    arms = {}
-    for level, spread in ((0, 0.2), (1, 0.4)):
-        d = 2.0**-level * shape(0) * uneven(spread / 2)
-        arms[level] = {"float64": d, "float16": d - 0.05 * shape(1) * uneven(spread)}
-    steps, batch = {0: 1, 1: 3}, np.arange(PATHS) // (PATHS // 32)
-    views = {level: view(quantity(one), steps=steps[level]) for level, one in arms.items()}
-    schemes = {0: SPLIT16, 1: Scheme(kind="alone", narrow="float16")}
-
-    def figure(left_level, left_batch):
-        theirs = ours = 0.0
-        for level, one in arms.items():
-            kept = (batch != left_batch) | (level != left_level)
-            wide, narrow = (np.var(one[name][kept], ddof=1) * steps[level] for name in ("float64", "float16"))
-            theirs += math.sqrt(wide)
-            ours += math.sqrt(narrow / 4)
-            if level == 0:
-                ours += math.sqrt(np.var((one["float64"] - one["float16"])[kept], ddof=1) * 1.25)
-        return 2 * math.log(theirs / ours)
-
-    parts = []
-    for level in arms:
-        left = np.array([figure(level, k) for k in range(32)])
-        parts.append(31 / 32 * ((left - left.mean()) ** 2).sum())
-    dof = sum(parts) ** 2 / sum(part**2 / 31 for part in parts)
-    half = stats.t.ppf(1 - ALPHA / 2, dof) * math.sqrt(sum(parts))
-    middle = figure(None, None)
-    found = saving(views, schemes, REFERENCE, ALPHA)
-    near = NEAR / math.sqrt(sum(parts))
-    assert found.estimate == pytest.approx(math.exp(middle), rel=NEAR)
-    assert found.se == pytest.approx(math.sqrt(sum(parts)), rel=near)
-    assert (found.low, found.high) == pytest.approx((math.exp(middle - half), math.exp(middle + half)), rel=near)
-
-
-def test_nothing_that_varies_saves_nothing():
-    """Where neither rival nor plan has any variance there is no ratio."""
-    still = {0: view(quantity({"float64": np.ones(PATHS)}), CostTable(float64=1.0))}
-    assert saving(still, {0: REFERENCE}, REFERENCE, ALPHA) is None
+def test_the_common_plan_of_one_quantity_is_its_own():
+    """Nothing is added where there is nothing to share; of equal needs the first quantity is named."""
+    views = {0: view(yes_no(0)), 1: view(quantity(differences(0.25)), steps=3)}
+    own = allocate(views, {0: SPLIT16, 1: REFERENCE}, 1e-2, 0.25, ALPHA)
+    for names in (["a"], ["a", "b"]):
+        found = common_plan(dict.fromkeys(names, own))
+        assert found.cost == own.cost
+        assert [(one.low.paths, one.cost, one.bounded) for one in found.levels] == [
+            (one.paths, one.cost, one.bounded) for one in own.levels
+        ]
+        assert {one.low.decided_by for one in found.levels} == {"a"}

@@ -47,6 +47,7 @@ def judgements(signs, scheme=SPLIT64, name="float16"):
                 }
             },
             best={"value": scheme},
+            joint=scheme,
             views={},
         )
         for level, sign in enumerate(signs)

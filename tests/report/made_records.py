@@ -13,6 +13,8 @@ from narrowgauge.record.audit import (
     ArmEntry,
     AuditRecord,
     BestEntry,
+    CommonLevelEntry,
+    CommonPlanEntry,
     CorrectionEntry,
     DecidedEntry,
     FaultEntry,
@@ -27,6 +29,7 @@ from narrowgauge.record.audit import (
     ReachEntry,
     ReachLine,
     ReferenceEntry,
+    RulesEntry,
     SchemeEntry,
     TelescopingEntry,
     TrialEntry,
@@ -164,6 +167,12 @@ NO_LAW = LawEntry(
 )
 
 
+BRANCHES = [
+    {"level": 0, "scheme": SPLIT["float16"], "paths": 1_175_885, "correction_paths": 1878, "bounded": True},
+    {"level": 1, "scheme": ALONE["float32"], "paths": 228_676, "correction_paths": None, "bounded": False},
+]
+
+
 def quantity_entry():
     finest = {
         "float16": FinestEntry(level=2, cautious=None, possible=3, extrapolated=False, reason="budget"),
@@ -190,8 +199,8 @@ def quantity_entry():
         allocation=AllocationEntry(
             rmse=0.05,
             levels=[
-                PlanEntry(level=0, scheme=SPLIT["float16"], paths=1_175_885, correction_paths=1878, cost=9000.0),
-                PlanEntry(level=1, scheme=ALONE["float32"], paths=228_676, correction_paths=None, cost=0.01),
+                PlanEntry(**BRANCHES[0], cost=9000.0),
+                PlanEntry(**BRANCHES[1], cost=0.01),
             ],
             cost=9000.01,
             saving=3.146,
@@ -210,7 +219,7 @@ ASKED = {
     "kernel": {"run": "reserve.py:value", "takes": "increments", "factors": 1, "coupling": "sum"},
     "parameters": {},
     "ladder": {"horizon": 1.0, "coarsest_steps": 2, "refinement": 2, "finest": 4},
-    "target": {"rmse": 0.005, "bias_share": 0.25, "worthwhile": 1.05, "largest_correction": None},
+    "target": {"rmse": 0.05, "bias_share": 0.025, "worthwhile": 1.05, "largest_correction": None},
     "formats": {"today": "float64", "narrow": list(FORMATS), "wide": ["float32", "float64"], "schemes": ["alone"]},
     "cost": {"float64": 1.0, "float32": 0.5, "float16": 0.25, "bfloat16": 0.25, "draws": 0.0, "path": 0.0},
     "sampling": {"block": 32768, "paths": 32768, "most_paths": 65536, "confidence": 0.99, "seed": 1},
@@ -231,6 +240,26 @@ REACH = ReachEntry(
 )
 
 
+RULES = RulesEntry(
+    telescoping_se=3.3, least_effective_size=50, worthwhile=1.05, bias_share=0.025, levels_sharing=len(LEVELS)
+)
+
+
+def common_plan(quantities):
+    """A plan for all quantities: the last one needs the most corrections, the first one the most of all else."""
+    first, last = next(iter(quantities)), list(quantities)[-1]
+    return CommonPlanEntry(
+        levels=[
+            CommonLevelEntry(**BRANCHES[0], cost=9000.0, paths_decided_by=first, correction_paths_decided_by=last),
+            CommonLevelEntry(**BRANCHES[1], cost=0.01, paths_decided_by=first, correction_paths_decided_by=None),
+        ],
+        cost=9000.01,
+        saving=2.9996,
+        saving_over_reference=3.146,
+        reason=None,
+    )
+
+
 def audit_record(**quantities):
     """A record of the given quantities, or of two."""
     quantities = quantities or {"option": quantity_entry(), "output": quantity_entry()}
@@ -239,6 +268,7 @@ def audit_record(**quantities):
         schema=SCHEMA,
         kernel=KernelEntry(run="reserve.py:value", fingerprint=None),
         asked=ASKED,
+        rules=RULES,
         arms={
             name: ArithmeticEntry(
                 format=name, rounding="nearest", subnormals="kept", fused=False, draws="exact", widened=[]
@@ -251,6 +281,8 @@ def audit_record(**quantities):
             finest_paying_level={
                 name: decided(quantities[decider].finest_paying_level[name], decider) for name in FORMATS
             },
+            schemes=[SPLIT["float16"], *[ALONE["float32"]] * 4],
+            plan=common_plan(quantities),
         ),
         reach=REACH,
         cautions=["A verdict is evidence, not approval.", "The emulation does not know a vendor's instructions."],

@@ -1,4 +1,4 @@
-"""The text of an audit: what stands where, in words, at any width, whatever the user's names are.
+"""The text of an audit: what stands where, in words.
 
 Whole outputs are held against the files in golden/. On a difference the actual output is saved beside them, as
 NAME.actual.txt; look at it, and accept it with NARROWGAUGE_ACCEPT=1 in the environment of pytest.
@@ -6,47 +6,23 @@ NAME.actual.txt; look at it, and accept it with NARROWGAUGE_ACCEPT=1 in the envi
 
 from __future__ import annotations
 
-import io
 import os
-import re
-import subprocess
 import sys
 from pathlib import Path
-from types import SimpleNamespace
 from typing import get_args
 
 import made_records as made
 import pytest
 from msgspec.structs import replace
-from rich.cells import cell_len
-from rich.console import Console
+from rendering import flat, rendered
 
 from narrowgauge.judge.schemes import Reason
-from narrowgauge.kernel.audittables import TargetTable
-from narrowgauge.record.audit import FinestEntry, ReachLine
-from narrowgauge.report import settings, tables
-from narrowgauge.report.text import Progress, audit_text, planned_text, trial_text, verdict_text
+from narrowgauge.record.audit import FinestEntry
+from narrowgauge.report import tables
+from narrowgauge.report.text import audit_text, trial_text, verdict_text
 from narrowgauge.report.verdict import finest_words
 
 GOLDEN = Path(__file__).parent / "golden"
-COLOUR = re.compile(r"\x1b\[[0-9;]*m")
-HOSTILE = "va\x1b[31mlue[red]<script>\u202e\nnext"
-
-
-def rendered(document, width=80, **terminal):
-    """The document as a console of this width prints it, without blanks at the ends of lines."""
-    stream = io.StringIO()
-    environment = {"TERM": "xterm-256color", **terminal.pop("environment", {})}
-    console = Console(
-        file=stream, width=width, markup=False, highlight=False, emoji=False, _environ=environment, **terminal
-    )
-    console.print(document)
-    return "".join(f"{line.rstrip()}\n" for line in stream.getvalue().split("\n")).rstrip() + "\n"
-
-
-def flat(document, width=80):
-    """The document's words on one line."""
-    return " ".join(rendered(document, width).split())
 
 
 def check_golden(name, text):
@@ -166,9 +142,11 @@ class TestFigures:
         """Costs that nobody gave are called assumed beside gains, edges and savings."""
         assert "costs assumed" not in flat(audit_text(made.audit_record(), None))
         asked = {**made.ASKED, "assumed": ["cost.float64"]}
-        text = rendered(audit_text(replace(made.audit_record(), asked=asked), None))
+        document = audit_text(replace(made.audit_record(), asked=asked), None)
+        text = rendered(document)
         assert text.count("costs assumed\n") + text.count("costs assumed  ") == 2 * (1 + 3)
-        assert text.count("(99% interval, costs assumed)") == 2
+        assert flat(document).count("(99% interval, costs assumed)") == 2
+        assert "(by the variances measured, or their upper bounds, costs assumed)" in flat(document)
 
     def test_assumptions(self):
         """Every default that was used is printed with its value."""
@@ -178,9 +156,22 @@ class TestFigures:
         ) in flat(audit_text(made.audit_record(), None))
 
     def test_worthwhile_without_target(self):
-        """What is worthwhile without a target is the default of the audit file, and is printed."""
-        assert TargetTable(rmse=1.0).worthwhile == settings.WORTHWHILE
-        assert "[target] worthwhile = 1.05" in flat(audit_text(made.troubled_record(), None))
+        """What is worthwhile without a target is printed as the record's rules have it."""
+        record = made.troubled_record()
+        assert "[target] worthwhile = 1.05" in flat(audit_text(record, None))
+        other = replace(record, rules=replace(record.rules, worthwhile=1.25))
+        assert "[target] worthwhile = 1.25" in flat(audit_text(other, None))
+
+    def test_rules_are_the_record_s(self):
+        """Limits are printed as the record has them, not as this version of the program would set them."""
+        record = made.troubled_record()
+        rules = replace(record.rules, telescoping_se=4.5, least_effective_size=70)
+        words = flat(audit_text(replace(record, rules=rules), None))
+        assert "They differ by more than 4.5 standard errors" in words
+        assert "(effectively 12.3 of them, 70 are asked for)" in words
+        record = made.audit_record()
+        words = flat(audit_text(replace(record, rules=replace(record.rules, levels_sharing=10)), None))
+        assert "1.25e-04 either way is this level's share of the target" in words
 
     def test_admitted_rmse(self):
         """Without a target, the smallest RMSE that the bias of the paying levels admits is printed."""
@@ -206,6 +197,54 @@ class TestFigures:
         assert "float32 alone costs 3.15 (3.10 to 3.20) times as much and float64 alone costs 3.15" in words
 
 
+class TestPlan:
+    def test_one_plan_for_several_quantities(self):
+        """Several quantities have one table of paths, in the verdict, which says which of them needs so many."""
+        text = rendered(audit_text(made.audit_record(), None))
+        assert text.count("share\n") == 1
+        assert text.index("Paths for all quantities together") > text.index("\nVerdict\n")
+        assert "    0  float16 with float64  1,175,885  option       1,878  output  99.9999%" in text
+        assert "Paths for an RMSE" not in text
+        words = " ".join(text.split())
+        assert (
+            "A run that serves all quantities takes on each level one scheme and the most paths that any of them "
+            "needs. It costs 9,000 in the unit of the cost table; planned likewise, float64 alone costs 3.00 times as "
+            "much (by the variances measured, or their upper bounds)."
+        ) in words
+        assert "as the scheme that serves all quantities on each level (99% interval)." in words
+
+    def test_one_quantity(self):
+        """A single quantity has its plan beside its tables, and nothing is said about others."""
+        text = rendered(audit_text(made.audit_record(value=made.quantity_entry()), None))
+        assert text.index("Paths for an RMSE of 0.05 in value") < text.index("\nVerdict\n")
+        words = " ".join(text.split())
+        assert "all quantities" not in words
+        assert "as the cheapest scheme on each level (99% interval). The cheapest schemes cost 9,000" in words
+
+    @pytest.mark.parametrize(
+        ("reason", "words"),
+        [("no target", "the audit file has no [target]"), ("b: a level without a finite scheme", None)],
+    )
+    def test_no_common_plan(self, reason, words):
+        """Where there is no plan for all quantities the reason is said once."""
+        record = made.audit_record()
+        plan = replace(record.verdict.plan, levels=[], cost=None, saving=None, reason=reason)
+        text = flat(verdict_text(replace(record, verdict=replace(record.verdict, plan=plan)), None))
+        assert text.count("planned") == 1
+        assert f"No run that serves all quantities is planned: {words or reason}." in text
+
+    @pytest.mark.parametrize("several", [True, False])
+    def test_hardly_seen_corrections_are_marked(self, several):
+        """A plan that rests on the upper bound of a variance says on which levels."""
+        entry = made.quantity_entry()
+        record = made.audit_record() if several else made.audit_record(value=entry)
+        said = "On level 0 too few corrections were seen for their variance to be known: their paths follow from its"
+        assert flat(audit_text(record, None)).count(said) == 1
+        sure = [replace(one, bounded=False) for one in entry.allocation.levels]
+        entry = replace(entry, allocation=replace(entry.allocation, levels=sure))
+        assert said not in flat(audit_text(made.audit_record(value=entry), None))
+
+
 class TestFinest:
     @pytest.mark.parametrize(
         ("levels", "extrapolated", "reason", "words"),
@@ -216,6 +255,7 @@ class TestFinest:
             ((5, None, 5), False, "edge", "5"),
             ((5, None, 7), False, "budget", "5 (up to level 7 not refuted)"),
             ((8, None, None), False, "or finer, not extrapolated", "8 or finer, not extrapolated"),
+            ((8, None, None), False, "or finer, the law does not fit", "8 or finer, the law does not fit"),
             ((17, 17, 17), True, "extrapolated", "17 (extrapolated, measured to level 8)"),
             (
                 (17, 14, 19),
@@ -263,127 +303,3 @@ class TestFinest:
     def test_every_reason_has_words(self):
         """Every reason that a judgement can give is put in words."""
         assert set(get_args(Reason)) == set(tables.REFUSED) == set(tables.UNSETTLED)
-
-
-DOCUMENTS = {
-    "audit": lambda: audit_text(made.audit_record(), Path("audits/reserve")),
-    "troubled": lambda: audit_text(made.troubled_record(), None),
-    "trial": lambda: trial_text(made.trial_entry(escapes=True)),
-}
-
-
-class TestTerminal:
-    @pytest.mark.parametrize("width", [60, 80, 120])
-    @pytest.mark.parametrize("name", DOCUMENTS)
-    def test_width(self, name, width):
-        """No line is longer than the terminal is wide."""
-        assert max(cell_len(line) for line in rendered(DOCUMENTS[name](), width).split("\n")) <= width
-
-    @pytest.mark.parametrize("name", DOCUMENTS)
-    def test_words_do_not_need_colour(self, name):
-        """On a terminal the same words appear as in a file, only coloured."""
-        coloured = rendered(DOCUMENTS[name](), force_terminal=True)
-        assert COLOUR.search(coloured)
-        plain = [line.rstrip() for line in COLOUR.sub("", coloured).split("\n")]
-        assert plain == rendered(DOCUMENTS[name]()).split("\n")
-
-    @pytest.mark.parametrize("name", DOCUMENTS)
-    def test_no_colour(self, name):
-        """NO_COLOR takes every colour away; a file gets no escape sequence at all."""
-        text = rendered(DOCUMENTS[name](), force_terminal=True, environment={"NO_COLOR": "1"})
-        codes = {int(code) for found in COLOUR.findall(text) for code in re.findall(r"\d+", found)}
-        assert codes <= {0, 1, 3, 4, 22}  # bold and the like
-        assert "\x1b" not in rendered(DOCUMENTS[name]())
-
-    def test_hostile_names(self):
-        """Names of quantities, kernels, formats and files neither colour, move nor hide anything."""
-        entry = made.with_arm(made.quantity_entry(), 0, "float16", reason=HOSTILE, verdict="does not pay")
-        record = made.audit_record(**{HOSTILE: entry, "[/]": made.quantity_entry(), "\x1b[2J": made.quantity_entry()})
-        record = replace(record, kernel=replace(record.kernel, run=HOSTILE), cautions=[HOSTILE])
-        shown = "va[31mlue[red]<script> next"
-        text = rendered(audit_text(record, Path(HOSTILE)), force_terminal=True, color_system="truecolor")
-        assert all(character.isprintable() for character in COLOUR.sub("", text).replace("\n", ""))
-        words = flat(audit_text(record, Path(HOSTILE)), 200)
-        for place in ("Audit of {}", "Quantity {}", "- {}", "float16 for {}", "does not pay: {}", "Written to {}:"):
-            assert place.format(shown) in words
-        assert "Quantity [/]" in words
-        assert "Quantity [2J" in words
-
-    def test_hostile_trial(self):
-        """Nor do those in a trial run."""
-        line = ReachLine(file=HOSTILE, line=3, operation=HOSTILE, route=HOSTILE, count=1)
-        trial = made.trial_entry(escapes=False)
-        trial = replace(trial, reach=replace(trial.reach, lines=[line, *trial.reach.lines], remarks=[HOSTILE]))
-        text = rendered(trial_text(trial))
-        assert all(character.isprintable() for character in text.replace("\n", ""))
-
-    def test_long_names(self):
-        """A name longer than the terminal is wide is folded, not cut."""
-        name = "x" * 150
-        text = rendered(audit_text(made.audit_record(**{name: made.quantity_entry()}), None), 60)
-        assert f"Quantity{name}" in text.replace("\n", "").replace(" ", "")
-
-
-PLAN = SimpleNamespace(
-    levels=tuple(
-        SimpleNamespace(level=level, steps=2 * 2**level, paths_first_look=32768, paths_most=1048576)
-        for level in range(7)
-    ),
-    path_steps=25_600_000,
-    most_path_steps=819_200_000,
-    seconds=40.4,
-    most_seconds=1292.8,
-)
-
-
-class TestProgress:
-    def test_plan(self):
-        """The plan has levels, paths, steps and time, at the first look and at most."""
-        assert flat(planned_text(PLAN)) == (
-            "Plan: 7 levels of 2 to 128 steps. The first look takes 32,768 paths a level: 25.6 million steps of paths "
-            "in all arms together, about 40 s. Levels that stay undecided go on to at most 1,048,576 paths; if all "
-            "did, that would be 819 million steps, about 22 min."
-        )
-
-    def test_plan_of_one_look(self):
-        """Where the first look is the last, nothing is said about more."""
-        plan = SimpleNamespace(**{**vars(PLAN), "levels": PLAN.levels[:1], "most_path_steps": PLAN.path_steps})
-        assert flat(planned_text(plan)) == (
-            "Plan: 1 level of 2 steps. The first look takes 32,768 paths a level: 25.6 million steps of paths in "
-            "all arms together, about 40 s."
-        )
-
-    def watched(self, *, quiet, terminal):
-        stream = io.StringIO()
-        console = Console(file=stream, width=80, force_terminal=terminal, _environ={"TERM": "xterm"})
-        with Progress(quiet=quiet, console=console) as watcher:
-            watcher.planned(PLAN)
-            watcher.look(1, 2, (0, 1, 2), 100)
-            watcher.advanced(50)
-            watcher.look(2, 2, (1,), 100)
-            watcher.advanced(200)
-        return stream.getvalue()
-
-    def test_terminal(self):
-        """On a terminal the plan is followed by a bar for each look."""
-        text = self.watched(quiet=False, terminal=True)
-        assert "Plan:" in COLOUR.sub("", text)
-        assert "look 1 of 2, levels 0 to 2" in text
-        assert "look 2 of 2, level 1" in text
-        assert "100%" in text
-
-    def test_file(self):
-        """In a file there is the plan alone."""
-        text = self.watched(quiet=False, terminal=False)
-        assert " ".join(text.split()) == flat(planned_text(PLAN))
-
-    def test_quiet(self):
-        """With quiet there is no plan."""
-        assert "Plan" not in self.watched(quiet=True, terminal=True)
-        assert self.watched(quiet=True, terminal=False) == ""
-
-
-def test_no_numpy():
-    """The text needs no numerical library, so that a message appears at once."""
-    code = "import sys, narrowgauge.report.text; sys.exit('numpy' in sys.modules)"
-    subprocess.run([sys.executable, "-c", code], check=True)

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-from typing import Any
 
 import numpy as np
 
@@ -22,6 +21,7 @@ from narrowgauge.conduct.entries import (
     variance_of,
     variance_se_of,
 )
+from narrowgauge.conduct.plans import allocation_entry, common_plan_entry
 from narrowgauge.conduct.run import Outcome
 from narrowgauge.judge.accumulation import (
     AccumulationFit,
@@ -33,11 +33,10 @@ from narrowgauge.judge.accumulation import (
     signal_decay,
     usable,
 )
-from narrowgauge.judge.allocation import allocate, saving
 from narrowgauge.judge.finest import Beyond, FinestLevel, finest_on_ladder, over_quantities
 from narrowgauge.judge.gain import Scheme
 from narrowgauge.judge.intervals import binomial_upper, jackknife, means, variances
-from narrowgauge.judge.schemes import rmse_of
+from narrowgauge.judge.schemes import BIAS_SHARE, LEAST_EFFECTIVE_SIZE, budget_levels
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.measure.arms import REFERENCE, arms_of
 from narrowgauge.measure.tally import LevelTally
@@ -45,7 +44,6 @@ from narrowgauge.record.audit import (
     SCHEMA,
     AccumulationEntry,
     AgreementEntry,
-    AllocationEntry,
     ArithmeticEntry,
     ArmEntry,
     AuditRecord,
@@ -55,8 +53,8 @@ from narrowgauge.record.audit import (
     KernelEntry,
     LevelEntry,
     OrdersEntry,
-    PlanEntry,
     QuantityEntry,
+    RulesEntry,
     TelescopingEntry,
     VerdictEntry,
 )
@@ -83,6 +81,7 @@ def account(file: AuditFile, outcome: Outcome, kernel: KernelEntry, provenance: 
         arm: over_quantities({name: _finest_of(quantities[name].finest_paying_level[arm]) for name in names})
         for arm in file.formats.narrow
     }
+    judged = sorted(outcome.judgements.items())
     sound = all(
         level.telescoping is None or level.telescoping.sound for entry in quantities.values() for level in entry.levels
     )
@@ -90,6 +89,13 @@ def account(file: AuditFile, outcome: Outcome, kernel: KernelEntry, provenance: 
         schema=SCHEMA,
         kernel=kernel,
         asked=file.asked(),
+        rules=RulesEntry(
+            telescoping_se=_SOUND,
+            least_effective_size=LEAST_EFFECTIVE_SIZE,
+            worthwhile=file.worthwhile,
+            bias_share=BIAS_SHARE if file.target is None else file.target.bias_share,
+            levels_sharing=budget_levels(file),
+        ),
         arms={
             arm: ArithmeticEntry(
                 format=arm, rounding="nearest", subnormals="kept", fused=False, draws="exact", widened=[]
@@ -110,6 +116,8 @@ def account(file: AuditFile, outcome: Outcome, kernel: KernelEntry, provenance: 
                 )
                 for arm, one in finest.items()
             },
+            schemes=[None if one.joint is None else scheme_entry(one.joint) for _, one in judged],
+            plan=common_plan_entry(file, outcome),
         ),
         reach=outcome.reach,
         cautions=list(CAUTIONS),
@@ -149,7 +157,7 @@ class _Quantity:
             finest_paying_level={
                 arm: self._finest(arm, errors[arm], corrections[arm], decay) for arm in self._file.formats.narrow
             },
-            allocation=self._allocation(orders.level_mean),
+            allocation=allocation_entry(self._file, self._outcome, self._name, self._weak_error(orders.level_mean)),
         )
 
     def _tally(self, level: int) -> LevelTally:
@@ -279,42 +287,6 @@ class _Quantity:
             possible=found.possible,
             extrapolated=found.extrapolated,
             reason=found.reason,
-        )
-
-    def _allocation(self, mean_order: float | None) -> AllocationEntry:
-        rmse = rmse_of(self._file, self._name)
-        best = {level: self._outcome.judgements[level].best[self._name] for level in self._levels}
-        schemes = {level: scheme for level, scheme in best.items() if scheme is not None}
-        alpha = self._outcome.alpha
-        over: dict[str, Any] = {}
-        # Levels that are not coupled are alternatives: nothing of them adds up.
-        added_up = self._file.kernel.coupling == "sum" or len(best) == 1
-        complete = added_up and len(schemes) == len(best)
-        for label, name in (("saving", self._file.formats.today), ("saving_over_reference", REFERENCE)):
-            rival = Scheme(kind="alone", narrow=name)
-            usable_rival = complete and all(name in view.tally.differences for view in self._views.values())
-            over |= interval_fields(label, saving(self._views, schemes, rival, alpha) if usable_rival else None)
-        plan = None
-        if complete and rmse is not None and self._file.target is not None:
-            plan = allocate(self._views, schemes, rmse, self._file.target.bias_share)
-        reason = None if plan else "no target" if complete else "a level without a finite scheme"
-        reason = reason if added_up else "levels that are not coupled do not add up"
-        return AllocationEntry(
-            rmse=rmse,
-            levels=[
-                PlanEntry(
-                    level=one.level,
-                    scheme=scheme_entry(one.scheme),
-                    paths=one.paths,
-                    correction_paths=one.correction_paths,
-                    cost=one.cost,
-                )
-                for one in (plan.levels if plan else ())
-            ],
-            cost=plan.cost if plan else None,
-            **over,
-            weak_error=self._weak_error(mean_order),
-            reason=reason,
         )
 
     def _weak_error(self, mean_order: float | None) -> float | None:

@@ -28,6 +28,7 @@ __all__ = [
     "agreement",
     "correction_at",
     "fit",
+    "rejected",
     "rules",
     "sentence",
     "signal_decay",
@@ -42,6 +43,7 @@ _LEAST_LEVELS = 4
 _LAW_ERROR = 0.01  # the law itself is good to about 1% of a variance; measured, no source
 _REWEIGHTINGS = 2
 _AGREEMENT = 0.05
+_REJECTED_BELOW = 0.001  # of p: a law that holds is rejected once in a thousand fits
 _DECAY_LEVELS = 4
 _PARTS: tuple[Part, ...] = ("floor", "walk", "drift")  # in order of the power of n
 _WORDS: dict[Part, str] = {
@@ -204,6 +206,11 @@ def fit(
     )
 
 
+def rejected(fit: AccumulationFit) -> bool:
+    """Return whether the chi-square test rejects the law: p below 0.001, which is its false-alarm rate."""
+    return fit.fit_p is not None and fit.fit_p < _REJECTED_BELOW
+
+
 def rules(fit: AccumulationFit, steps: int) -> Part:
     """Return the largest part of the law at a number of steps; a drift that is not significant never rules.
 
@@ -216,8 +223,8 @@ def rules(fit: AccumulationFit, steps: int) -> Part:
 def sentence(fit: AccumulationFit, arm: str, ladder: Sequence[tuple[int, int]]) -> str:
     """Return one sentence that says which part rules on which levels; `ladder` holds (level, steps).
 
-    For example: "float16: rounding of inputs and final operations rules on levels 1-2, the walk of step
-    roundings (delta^2/h) from level 3 on." Raises ValueError for an empty ladder.
+    For example: "float16: rounding of inputs and final operations rules on levels 1-2, the walk of step roundings
+    (delta^2/h) from level 3 on." A rejected law is said to fit badly. Raises ValueError for an empty ladder.
     """
     if not ladder:
         raise ValueError("sentence: the ladder is empty; accepted: at least one (level, steps)")
@@ -230,13 +237,13 @@ def sentence(fit: AccumulationFit, arm: str, ladder: Sequence[tuple[int, int]]) 
     ]
     (first, _), (last, last_levels) = spans[0], spans[-1]
     if len(spans) == 1:
-        return f"{arm}: {first} rules on every level."
+        return f"{arm}: {first} rules on every level{_badly(fit)}."
     clauses = [
         f"{words} on level {levels[0]}" if len(levels) == 1 else f"{words} on levels {levels[0]}-{levels[-1]}"
         for words, levels in spans[:-1]
     ]
     clauses[0] = f"{first} rules{clauses[0].removeprefix(first)}"
-    return f"{arm}: {', '.join(clauses)}, {last} from level {last_levels[0]} on."
+    return f"{arm}: {', '.join(clauses)}, {last} from level {last_levels[0]} on{_badly(fit)}."
 
 
 def agreement(fits: Mapping[str, AccumulationFit]) -> Agreement:
@@ -287,6 +294,11 @@ def signal_decay(levels: Sequence[int], variances: Sequence[float], ses: Sequenc
     a, beta = gains @ np.log2(variance)
     (aa, ab), (ba, bb) = ((gains * errors**2) @ gains.T).tolist()
     return SignalDecay(a=float(a), beta=float(beta), covariance=((aa, ab), (ba, bb)))
+
+
+def _badly(fit: AccumulationFit) -> str:
+    shown = f"= {fit.fit_p:.1e}" if fit.fit_p else "< 1e-300"
+    return f"; the law fits badly (p {shown})" if rejected(fit) else ""
 
 
 def _measurable(point: LawPoint) -> bool:

@@ -1,4 +1,4 @@
-"""How many paths each branch needs for the target, what that costs, and what it saves.
+"""How many paths each branch needs for the target, and what that costs: for one quantity, and for all together.
 
 Allocation as in "Multilevel Monte Carlo methods", Acta Numerica 24, 2015, doi 10.1017/S096249291500001X, with the
 sampling variance set to what the bias budget leaves: (1 - bias_share^2) rmse^2.
@@ -10,29 +10,29 @@ import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
-import numpy as np
-import numpy.typing as npt
-
 from narrowgauge.judge.gain import LevelView, Scheme
-from narrowgauge.judge.intervals import Interval, combined
 
-__all__ = ["Allocation", "LevelPlan", "allocate", "saving"]
+__all__ = ["Allocation", "Branch", "CommonLevel", "CommonPlan", "LevelPlan", "allocate", "common_plan"]
 
 _LEAST_PATHS = 32
 _PATHS_PER_KURTOSIS = 10
 
-Doubles = npt.NDArray[np.float64]
-
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class LevelPlan:
-    """Paths of a level's low branch (or of its only one) and of its correction branch, and their cost together."""
+    """Paths of a level's low branch (or of its only one) and of its correction branch, and their cost together.
+
+    `bounded` is whether the correction has too few events for a sample variance, so that the upper bound of its
+    variance was taken. `path_costs` are the costs of one path of each branch.
+    """
 
     level: int
     scheme: Scheme
     paths: int
     correction_paths: int | None
     cost: float
+    bounded: bool
+    path_costs: tuple[float, ...]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -44,61 +44,120 @@ class Allocation:
     cost: float
 
 
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Branch:
+    """Paths of one branch of a level, and the quantity that needs so many."""
+
+    paths: int
+    decided_by: str
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class CommonLevel:
+    """One level of a plan that serves all quantities; `bounded` as in the plan of the one that decides."""
+
+    level: int
+    scheme: Scheme
+    low: Branch
+    correction: Branch | None
+    bounded: bool
+    cost: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class CommonPlan:
+    """A plan that serves all quantities, and its cost in the unit of the cost table."""
+
+    levels: tuple[CommonLevel, ...]
+    cost: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Part:
+    """One branch: its variance, the cost of a path, the least number of paths, whether the variance is a bound."""
+
+    variance: float
+    cost: float
+    least: int
+    bounded: bool = False
+
+
 def allocate(
-    views: Mapping[int, LevelView], schemes: Mapping[int, Scheme], rmse: float, bias_share: float
+    views: Mapping[int, LevelView], schemes: Mapping[int, Scheme], rmse: float, bias_share: float, alpha: float
 ) -> Allocation:
     """Return the paths per branch that reach `rmse` (in the quantity's unit) at the smallest cost.
 
     N = max(32, 10 x kurtosis of R for a correction branch, ceil(S_total sqrt(V / C) / budget)); branches are
-    independent.
+    independent. A correction with too few events is planned from upper bounds of its variance that hold on all levels
+    together with probability 1 - alpha.
     """
     budget = (1.0 - bias_share**2) * rmse**2
-    parts = {level: _parts(views[level], schemes[level]) for level in schemes}
-    total = sum(math.sqrt(v * c) for branches in parts.values() for v, c, _ in branches)
+    parts = {level: _parts(views[level], schemes[level], alpha / len(schemes)) for level in schemes}
+    total = sum(math.sqrt(part.variance * part.cost) for branches in parts.values() for part in branches)
     plans = []
     for level, branches in parts.items():
-        paths = [max(floor, math.ceil(total * math.sqrt(v / c) / budget)) for v, c, floor in branches]
-        cost = sum(n * c for n, (_, c, _) in zip(paths, branches, strict=True))
+        paths = [max(part.least, math.ceil(total * math.sqrt(part.variance / part.cost) / budget)) for part in branches]
         plans.append(
             LevelPlan(
                 level=level,
                 scheme=schemes[level],
                 paths=paths[0],
                 correction_paths=paths[1] if len(paths) > 1 else None,
-                cost=cost,
+                cost=sum(n * part.cost for n, part in zip(paths, branches, strict=True)),
+                bounded=any(part.bounded for part in branches),
+                path_costs=tuple(part.cost for part in branches),
             )
         )
     return Allocation(rmse=rmse, levels=tuple(plans), cost=sum(plan.cost for plan in plans))
 
 
-def saving(
-    views: Mapping[int, LevelView], schemes: Mapping[int, Scheme], rival: Scheme, alpha: float
-) -> Interval | None:
-    """Return total cost with `rival` on every level divided by the plan's, at equal variance, with its interval.
+def common_plan(allocations: Mapping[str, Allocation]) -> CommonPlan:
+    """Return the plan that takes, per branch, the most paths that any quantity needs.
 
-    The set of schemes is held fixed. None where nothing varies on any level, under the rival or under the plan.
+    The allocations are those of the quantities, by name, all with the same scheme on each level. Of quantities that
+    need the same number the first is named.
     """
-    theirs = {level: np.exp(views[level].logarithm(rival) / 2) for level in schemes}
-    ours = {level: np.exp(views[level].logarithm(scheme) / 2) for level, scheme in schemes.items()}
-    their_total = sum(float(s[0]) for s in theirs.values())
-    our_total = sum(float(s[0]) for s in ours.values())
-    if not their_total > 0 or not our_total > 0:
-        return None
-    # One batch of one level is left out at a time; the other levels stay whole.
-    replicates: Sequence[Doubles] = [
-        2 * np.log(their_total - theirs[level][0] + theirs[level])
-        - 2 * np.log(our_total - ours[level][0] + ours[level])
-        for level in schemes
-    ]
-    return combined(replicates, 2 * math.log(their_total / our_total), alpha).exponential()
+    levels = []
+    for plans in zip(*(one.levels for one in allocations.values()), strict=True):
+        by_name = dict(zip(allocations, plans, strict=True))
+        first = plans[0]
+        low = _most({name: plan.paths for name, plan in by_name.items()})
+        correction, bounded = None, False
+        if first.correction_paths is not None:
+            correction = _most({name: plan.correction_paths or 0 for name, plan in by_name.items()})
+            bounded = by_name[correction.decided_by].bounded
+        branches = [low] if correction is None else [low, correction]
+        levels.append(
+            CommonLevel(
+                level=first.level,
+                scheme=first.scheme,
+                low=low,
+                correction=correction,
+                bounded=bounded,
+                cost=sum(one.paths * cost for one, cost in zip(branches, first.path_costs, strict=True)),
+            )
+        )
+    return CommonPlan(levels=tuple(levels), cost=sum(one.cost for one in levels))
 
 
-def _parts(view: LevelView, scheme: Scheme) -> list[tuple[float, float, int]]:
-    """Return variance, cost and least number of paths of each branch."""
+def _most(paths: Mapping[str, int]) -> Branch:
+    decider = max(paths, key=paths.__getitem__)
+    return Branch(paths=paths[decider], decided_by=decider)
+
+
+def _parts(view: LevelView, scheme: Scheme, alpha: float) -> Sequence[_Part]:
+    """Return the branches of a scheme."""
     low = view.tally.differences[scheme.narrow].moments.variance
-    found = [(low, view.costs.path(scheme.narrow), _LEAST_PATHS)]
+    found = [_Part(variance=low, cost=view.costs.path(scheme.narrow), least=_LEAST_PATHS)]
     if scheme.wide is not None:
         moments = view.tally.corrections[scheme.narrow, scheme.wide].moments
-        least = max(_LEAST_PATHS, math.ceil(_PATHS_PER_KURTOSIS * (moments.kurtosis or 0.0)))
-        found.append((moments.variance, view.costs.correction(scheme.narrow, scheme.wide), least))
+        bound = view.correction_high(scheme, alpha)
+        found.append(
+            _Part(
+                variance=moments.variance if bound is None else max(bound, moments.variance),
+                cost=view.costs.correction(scheme.narrow, scheme.wide),
+                least=max(_LEAST_PATHS, math.ceil(_PATHS_PER_KURTOSIS * (moments.kurtosis or 0.0))),
+                bounded=bound is not None,
+            )
+        )
     return found

@@ -9,7 +9,7 @@ from dataclasses import dataclass
 from scipy import stats
 
 from narrowgauge.arithmetic.formats import FORMATS
-from narrowgauge.judge.accumulation import AccumulationFit, SignalDecay, correction_at
+from narrowgauge.judge.accumulation import AccumulationFit, SignalDecay, correction_at, rejected
 from narrowgauge.judge.gain import Scheme
 from narrowgauge.judge.schemes import LevelJudgement, level_costs
 from narrowgauge.kernel.auditfile import AuditFile
@@ -29,7 +29,8 @@ class FinestLevel:
 
     None where there is no such level; `reason` says why a figure is missing or where it ends. An extrapolated level
     is an estimate: there `possible` takes every bound of the extrapolation in the format's favour, and `cautious`
-    against it, with the drift at its upper bound even where it is not significant.
+    against it, with the drift at its upper bound even where it is not significant; both are wider by the largest
+    deviation of a level from the law. Nothing is extrapolated from a law that is rejected.
     """
 
     level: int | None
@@ -110,9 +111,12 @@ def _extrapolated(finest: int, scheme: Scheme, file: AuditFile, beyond: Beyond, 
     if beyond.decay is None or beyond.correction.reason or beyond.error.reason:
         reason = f"{_OR_FINER}, too few levels to extrapolate"
         return FinestLevel(level=finest, possible=None, extrapolated=False, reason=reason)
+    if rejected(beyond.correction) or rejected(beyond.error):
+        reason = f"{_OR_FINER}, the law does not fit"
+        return FinestLevel(level=finest, possible=None, extrapolated=False, reason=reason)
     quantile = float(stats.t.ppf(1 - alpha / 2, _BATCH_DOF))
     u = FORMATS[scheme.narrow].unit_roundoff
-    low_factor, high_factor = _walk_factors(beyond.correction)
+    low_factor, high_factor = _noise_factors(beyond.correction)
     ends = {"cautious": finest, "level": finest, "possible": finest}
     still = set(ends)
     reason = "extrapolated"
@@ -142,11 +146,15 @@ def _extrapolated(finest: int, scheme: Scheme, file: AuditFile, beyond: Beyond, 
     )
 
 
-def _walk_factors(fit: AccumulationFit) -> tuple[float, float]:
-    """Return by which factors the bounds of the walk move the fitted variance."""
-    if not fit.walk or fit.walk_low is None or fit.walk_high is None:
-        return 1.0, 1.0
-    return fit.walk_low / fit.walk, fit.walk_high / fit.walk
+def _noise_factors(fit: AccumulationFit) -> tuple[float, float]:
+    """Return by which factors the fitted variance may be off: by the bounds of the walk, and by the largest misfit."""
+    low, high = 1.0, 1.0
+    if fit.walk and fit.walk_low is not None and fit.walk_high is not None:
+        low, high = fit.walk_low / fit.walk, fit.walk_high / fit.walk
+    # |fit / measured - 1| = d leaves measured between fit / (1 + d) and fit / (1 - d); from d = 1 on fit was too large.
+    misfit = (fit.deviation or 0.0) / 100.0
+    widest = 1.0 / (1.0 - misfit) if misfit < 1.0 else 1.0 + misfit
+    return low / (1.0 + misfit), high * widest
 
 
 def _edge(scheme: Scheme, file: AuditFile, level: int, signal: float, noise: float) -> float:

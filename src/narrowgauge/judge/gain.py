@@ -14,6 +14,7 @@ from typing import Literal
 import numpy as np
 import numpy.typing as npt
 
+from narrowgauge.judge.costbounds import CostBounds, Side
 from narrowgauge.judge.intervals import Interval, binomial_lower, binomial_upper, jackknife, means, variances
 from narrowgauge.kernel.audittables import CostTable
 from narrowgauge.measure.arms import REFERENCE
@@ -71,19 +72,6 @@ class LevelCosts:
         return self.draws * self.table.draws + self.table.path
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
-class _Side:
-    """One bound of S of a scheme where the reference's variance is v: sqrt(cost max(slope v + offset, 0)) + rest."""
-
-    slope: float
-    offset: float
-    cost: float
-    rest: float
-
-    def at(self, v: float) -> float:
-        return math.sqrt(self.cost * max(self.slope * v + self.offset, 0.0)) + self.rest
-
-
 class LevelView:
     """One quantity on one level: the variances of every arm and pair, with and without each batch.
 
@@ -132,8 +120,8 @@ class LevelView:
             return Interval(estimate=1.0, low=1.0, high=1.0, se=0.0)
         with np.errstate(invalid="ignore"):
             point = jackknife(self.logarithm(rival) - self.logarithm(own), alpha)
-            if self._few(own) or self._few(rival):
-                low, high = self._counted_bounds(own, rival, alpha)
+            if self.few(own) or self.few(rival):
+                low, high = self.bounds(own, rival, alpha).ratio()
                 return Interval(
                     estimate=point.exponential().estimate,
                     low=min(low, point.exponential().estimate),
@@ -155,30 +143,37 @@ class LevelView:
         bound = max(self._r_max, series.largest) * binomial_upper(series.events, series.moments.total, alpha)
         return Interval(estimate=interval.estimate, low=-bound, high=bound, se=interval.se)
 
-    def _few(self, scheme: Scheme) -> bool:
+    def few(self, scheme: Scheme) -> bool:
         """Whether a scheme's correction, or a level difference in the comparison, has too few events to average."""
         found = [self.tally.differences[REFERENCE], self.tally.differences[scheme.narrow], self.correction(scheme)]
         return any(series is not None and _too_few(series) for series in found)
 
-    def _counted_bounds(self, own: Scheme, rival: Scheme, alpha: float) -> tuple[float, float]:
-        """Return bounds of the cost ratio from bounds of every variance in it, which share out alpha / 2.
+    def bounds(self, own: Scheme, rival: Scheme, alpha: float) -> CostBounds:
+        """Return bounds of S of two schemes, from bounds of every variance in them, which share out alpha / 2.
 
-        The reference's V is bounded on both sides, every other variance on the side that counts. What is left depends
-        on V alone: with V - s under the rival's root and V + s' under the own one, the ratio falls up to V = s, where
-        the rival's root is cut at 0; then the sign of its slope, that of s + s' + b' sqrt(V + s') - b sqrt(V - s),
-        changes at most once, from rising to falling. So the worst V is an end of its interval, or such a cut.
+        V is bounded on both sides, every other variance on the side that counts: what is concluded from the bounds
+        holds on each side with probability 1 - alpha / 2.
         """
         parts = 2 + sum(1 + (scheme.wide is not None) for scheme in (own, rival) if scheme.narrow != REFERENCE)
         each = alpha / 2 / parts
-        low_v, high_v = self._variance_bounds(self.tally.differences[REFERENCE], self._apart, each)
-        cheap, dear = self._cost_bounds(rival, each), self._cost_bounds(own, each)
-        cuts = [-side.offset / side.slope for side in (cheap[0], dear[0]) if side.slope > 0]
-        worst = [low_v, high_v, *(min(max(cut, low_v), high_v) for cut in cuts)]
-        low = min(_square_ratio(cheap[0].at(v), dear[1].at(v)) for v in worst)
-        high = max(_square_ratio(cheap[1].at(v), dear[0].at(v)) for v in worst)
-        return low, high
+        return CostBounds(
+            v=self._variance_bounds(self.tally.differences[REFERENCE], self._apart, each),
+            own=self._cost_bounds(own, each),
+            rival=self._cost_bounds(rival, each),
+            same=own == rival,
+        )
 
-    def _cost_bounds(self, scheme: Scheme, alpha: float) -> tuple[_Side, _Side]:
+    def correction_high(self, scheme: Scheme, alpha: float) -> float | None:
+        """Return the upper bound, at 1 - alpha, of the variance of a split's correction with too few events.
+
+        None for a correction with enough of them, whose sample variance is to be trusted, and for a scheme without one.
+        """
+        if scheme.wide is None:
+            return None
+        series = self.tally.corrections[scheme.narrow, scheme.wide]
+        return self._variance_bounds(series, self._r_max, alpha)[1] if _too_few(series) else None
+
+    def _cost_bounds(self, scheme: Scheme, alpha: float) -> tuple[Side, Side]:
         """Return the lower and the upper bound of a scheme's S as functions of the reference's V."""
         path = self.costs.path(scheme.narrow)
         rest = (0.0, 0.0)
@@ -188,8 +183,8 @@ class LevelView:
             rest = (math.sqrt(r[0] * cost), math.sqrt(r[1] * cost))
         low, high = self._narrow_bounds(scheme.narrow, alpha)
         return (
-            _Side(slope=low[0], offset=low[1], cost=path, rest=rest[0]),
-            _Side(slope=high[0], offset=high[1], cost=path, rest=rest[1]),
+            Side(slope=low[0], offset=low[1], cost=path, rest=rest[0]),
+            Side(slope=high[0], offset=high[1], cost=path, rest=rest[1]),
         )
 
     def _narrow_bounds(self, narrow: str, alpha: float) -> tuple[tuple[float, float], tuple[float, float]]:
@@ -262,7 +257,3 @@ def _range(series: Series) -> float:
     """Return the range of the values seen and 0; the largest magnitude where single values are not known."""
     seen: list[float] = [0.0, *(series.distinct or ())]
     return max(series.largest, max(seen) - min(seen))
-
-
-def _square_ratio(above: float, below: float) -> float:
-    return (above / below) * (above / below) if below > 0 else math.inf

@@ -26,13 +26,26 @@ from narrowgauge.measure.arms import REFERENCE
 from narrowgauge.measure.moments import Series
 from narrowgauge.measure.tally import LevelTally
 
-__all__ = ["ArmJudgement", "LevelJudgement", "Reason", "Verdict", "judge_level"]
+__all__ = [
+    "BIAS_SHARE",
+    "LEAST_EFFECTIVE_SIZE",
+    "ArmJudgement",
+    "LevelJudgement",
+    "Reason",
+    "Verdict",
+    "budget_levels",
+    "coupled",
+    "judge_level",
+    "level_costs",
+    "rmse_of",
+]
 
 Verdict = Literal["pays", "does not pay", "undecided"]
 Reason = Literal["edge", "bias", "nonfinite", "raised", "branches", "no_variance", "kurtosis", "budget"]
 Standing = Literal["yes", "no", "unknown"]
 
-_LEAST_EFFECTIVE_SIZE = 50
+LEAST_EFFECTIVE_SIZE = 50
+BIAS_SHARE = 0.25  # the default of the audit file: what a target would allow rounding to shift
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -60,11 +73,15 @@ class ArmJudgement:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class LevelJudgement:
-    """All judgements of one level: per quantity and narrow format, and the best scheme per quantity."""
+    """All judgements of one level: per quantity and narrow format, the best scheme per quantity, and one for all.
+
+    `joint` is the scheme of a run that serves all quantities.
+    """
 
     level: int
     arms: Mapping[str, Mapping[str, ArmJudgement]]
     best: Mapping[str, Scheme | None]
+    joint: Scheme | None
     views: Mapping[str, LevelView] = field(repr=False)
 
     @property
@@ -79,9 +96,8 @@ def judge_level(tally: LevelTally, file: AuditFile, alpha: float) -> LevelJudgem
     court = _Court(tally=tally, file=file, alpha=alpha, views=views)
     formats = list(file.formats.narrow)
     arms = {quantity: {f: court.judge(quantity, f) for f in formats} for quantity in views}
-    return LevelJudgement(
-        level=tally.level, arms=arms, best={quantity: court.best(quantity) for quantity in views}, views=views
-    )
+    best = {quantity: court.best(quantity) for quantity in views}
+    return LevelJudgement(level=tally.level, arms=arms, best=best, joint=court.joint(best), views=views)
 
 
 def coupled(file: AuditFile, level: int) -> bool:
@@ -167,16 +183,33 @@ class _Court:
 
     def best(self, quantity: str) -> Scheme | None:
         """Return the scheme with the smallest cost among all that are admissible, or None if none is finite."""
-        formats, view = self._file.formats, self._views[quantity]
+        view = self._views[quantity]
+        allowed = [scheme for scheme in self._allowed() if self._varies(view, scheme)]
+        return min(allowed, key=lambda s: float(view.logarithm(s)[0]), default=None)
+
+    def joint(self, best: Mapping[str, Scheme | None]) -> Scheme | None:
+        """Return the admissible scheme that is least bad for its worst quantity, or None if none is finite.
+
+        Bad is S^2 over that of the quantity's own best, and a quantity that has none is passed over. For one quantity
+        this is its best.
+        """
+        own = {quantity: scheme for quantity, scheme in best.items() if scheme is not None}
+        if len(own) == 1:
+            return next(iter(own.values()))
+
+        def excess(scheme: Scheme) -> float:
+            views = ((self._views[quantity], least) for quantity, least in own.items())
+            return max(float(view.logarithm(scheme)[0] - view.logarithm(least)[0]) for view, least in views)
+
+        allowed = [s for s in self._allowed() if all(self._varies(self._views[quantity], s) for quantity in own)]
+        return min(allowed, key=excess, default=None) if own else None
+
+    def _allowed(self) -> list[Scheme]:
+        formats = self._file.formats
         schemes = [Scheme(kind="alone", narrow=REFERENCE), Scheme(kind="alone", narrow=formats.today)]
         for name in dict.fromkeys([*formats.wide, *formats.narrow]):
             schemes += self.own(name)
-        allowed = [
-            s
-            for s in dict.fromkeys(schemes)
-            if self.admission(s, rival=True).standing == "yes" and self._varies(view, s)
-        ]
-        return min(allowed, key=lambda s: float(view.logarithm(s)[0]), default=None)
+        return [s for s in dict.fromkeys(schemes) if self.admission(s, rival=True).standing == "yes"]
 
     def _rivals(self, view: LevelView, scheme: Scheme) -> bool:
         return self.admission(scheme, rival=True).standing != "no" and self._varies(view, scheme)
@@ -228,9 +261,9 @@ class _Court:
 
     def _known_tail(self, risk: Series) -> Admission:
         # A correction carried by few paths: the sample does not know what it misses.
-        if risk.counted or risk.effective_size >= _LEAST_EFFECTIVE_SIZE:
+        if risk.counted or risk.effective_size >= LEAST_EFFECTIVE_SIZE:
             return Admission(standing="yes", reason=None, paths_needed=None)
-        needed = self._grown(_LEAST_EFFECTIVE_SIZE / max(risk.effective_size, 1.0))
+        needed = self._grown(LEAST_EFFECTIVE_SIZE / max(risk.effective_size, 1.0))
         return Admission(standing="unknown", reason="kurtosis", paths_needed=needed)
 
     def _trusted(self, view: LevelView, scheme: Scheme) -> bool:
@@ -296,7 +329,7 @@ class _Court:
         bias = view.bias(scheme.top, self._alpha)
         admitted = None
         if self._file.target is None and math.isfinite(bias.high - bias.low):
-            admitted = max(abs(bias.low), abs(bias.high)) * budget_levels(self._file) / _BIAS_SHARE
+            admitted = max(abs(bias.low), abs(bias.high)) * budget_levels(self._file) / BIAS_SHARE
         return ArmJudgement(
             scheme=scheme,
             gain=view.ratio(scheme, today, self._alpha) if fine and edge is not None else None,
@@ -329,9 +362,6 @@ class _Court:
             paths_needed=None,
             admitted_rmse=None,
         )
-
-
-_BIAS_SHARE = 0.25  # the default of the audit file: what a target would allow rounding to shift
 
 
 def budget_levels(file: AuditFile) -> int:

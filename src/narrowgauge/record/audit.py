@@ -11,6 +11,15 @@ from typing import Literal
 
 import msgspec
 
+from narrowgauge.record.plan import (
+    AllocationEntry,
+    CommonLevelEntry,
+    CommonPlanEntry,
+    Entry,
+    PlanEntry,
+    SchemeEntry,
+)
+
 __all__ = [
     "SCHEMA",
     "AccumulationEntry",
@@ -18,6 +27,8 @@ __all__ = [
     "ArmEntry",
     "AuditRecord",
     "BestEntry",
+    "CommonLevelEntry",
+    "CommonPlanEntry",
     "CorrectionEntry",
     "FaultEntry",
     "FinestEntry",
@@ -29,6 +40,7 @@ __all__ = [
     "RaisedEntry",
     "ReachEntry",
     "ReferenceEntry",
+    "RulesEntry",
     "SchemeEntry",
     "TelescopingEntry",
     "TrialEntry",
@@ -38,18 +50,14 @@ __all__ = [
 SCHEMA = "narrowgauge-audit/1"
 
 
-class _Entry(msgspec.Struct, frozen=True, kw_only=True, forbid_unknown_fields=True):
-    """Base of every part of the record."""
-
-
-class KernelEntry(_Entry, frozen=True, kw_only=True):
+class KernelEntry(Entry, frozen=True, kw_only=True):
     """Which function was audited; the fingerprint is None for one that has no source file."""
 
     run: str
     fingerprint: str | None
 
 
-class ArithmeticEntry(_Entry, frozen=True, kw_only=True):
+class ArithmeticEntry(Entry, frozen=True, kw_only=True):
     """What one arm computes in, and with which draws."""
 
     format: str
@@ -60,15 +68,7 @@ class ArithmeticEntry(_Entry, frozen=True, kw_only=True):
     widened: list[str]
 
 
-class SchemeEntry(_Entry, frozen=True, kw_only=True):
-    """A way to estimate a level: alone in one arm, or split into a low and a correction branch."""
-
-    kind: Literal["alone", "split"]
-    narrow: str
-    wide: str | None
-
-
-class RaisedEntry(_Entry, frozen=True, kw_only=True):
+class RaisedEntry(Entry, frozen=True, kw_only=True):
     """What the kernel raised in an arm, and the line of the user's code."""
 
     type: str
@@ -77,10 +77,10 @@ class RaisedEntry(_Entry, frozen=True, kw_only=True):
     line: int | None
 
 
-class TelescopingEntry(_Entry, frozen=True, kw_only=True):
+class TelescopingEntry(Entry, frozen=True, kw_only=True):
     """Mean of the reference's coarse path on this level less that of its fine path one level below, and its error.
 
-    `sound` is whether the difference is within 3.3 standard errors.
+    `sound` is whether the difference is within `rules.telescoping_se` standard errors.
     """
 
     difference: float | None
@@ -88,7 +88,7 @@ class TelescopingEntry(_Entry, frozen=True, kw_only=True):
     sound: bool
 
 
-class ReferenceEntry(_Entry, frozen=True, kw_only=True):
+class ReferenceEntry(Entry, frozen=True, kw_only=True):
     """The reference on one level: P, and D with its standard error; `nonfinite` paths were dropped from all arms."""
 
     mean: float | None
@@ -102,7 +102,7 @@ class ReferenceEntry(_Entry, frozen=True, kw_only=True):
     nonfinite: int
 
 
-class ArmEntry(_Entry, frozen=True, kw_only=True):
+class ArmEntry(Entry, frozen=True, kw_only=True):
     """One format on one level: the error E, the level difference D, and what the format is worth.
 
     `bias` is the mean of D^top - D^ref for the scheme's widest arm; `admitted_rmse` the smallest target that it
@@ -134,7 +134,7 @@ class ArmEntry(_Entry, frozen=True, kw_only=True):
     admitted_rmse: float | None
 
 
-class CorrectionEntry(_Entry, frozen=True, kw_only=True):
+class CorrectionEntry(Entry, frozen=True, kw_only=True):
     """The correction R between two arms; `counted` is whether it takes at most five values."""
 
     mean: float | None
@@ -148,7 +148,7 @@ class CorrectionEntry(_Entry, frozen=True, kw_only=True):
     breakeven_cost_ratio: float | None
 
 
-class BestEntry(_Entry, frozen=True, kw_only=True):
+class BestEntry(Entry, frozen=True, kw_only=True):
     """The admissible scheme with the smallest cost, and its gain over the level as it runs today."""
 
     kind: Literal["alone", "split"]
@@ -160,7 +160,7 @@ class BestEntry(_Entry, frozen=True, kw_only=True):
     bias: float | None
 
 
-class LevelEntry(_Entry, frozen=True, kw_only=True):
+class LevelEntry(Entry, frozen=True, kw_only=True):
     """One level of one quantity."""
 
     level: int
@@ -175,7 +175,7 @@ class LevelEntry(_Entry, frozen=True, kw_only=True):
     best: BestEntry | None
 
 
-class LawEntry(_Entry, frozen=True, kw_only=True):
+class LawEntry(Entry, frozen=True, kw_only=True):
     """The accumulation law fitted to a variance: u^2 (floor + walk n + drift n^2), n steps."""
 
     floor: float | None
@@ -196,7 +196,7 @@ class LawEntry(_Entry, frozen=True, kw_only=True):
     reason: str | None
 
 
-class AccumulationEntry(_Entry, frozen=True, kw_only=True):
+class AccumulationEntry(Entry, frozen=True, kw_only=True):
     """The law of one arm, of the error and of the correction to the reference, and a sentence about the first."""
 
     error: LawEntry
@@ -204,7 +204,7 @@ class AccumulationEntry(_Entry, frozen=True, kw_only=True):
     sentence: str
 
 
-class FinestEntry(_Entry, frozen=True, kw_only=True):
+class FinestEntry(Entry, frozen=True, kw_only=True):
     """The finest level where a format still pays; `possible` is the finest that is not refuted.
 
     `cautious` belongs to an extrapolated level: where it would end with every bound against the format.
@@ -223,43 +223,14 @@ class DecidedEntry(FinestEntry, frozen=True, kw_only=True):
     decided_by: str | None
 
 
-class PlanEntry(_Entry, frozen=True, kw_only=True):
-    """Paths of one level: of its low branch or its only one, and of its correction branch."""
-
-    level: int
-    scheme: SchemeEntry
-    paths: int
-    correction_paths: int | None
-    cost: float
-
-
-class AllocationEntry(_Entry, frozen=True, kw_only=True):
-    """Paths for the target, their cost, and the saving over today and over the reference alone.
-
-    `weak_error` estimates what remains of the discretisation beyond the finest level.
-    """
-
-    rmse: float | None
-    levels: list[PlanEntry]
-    cost: float | None
-    saving: float | None
-    saving_low: float | None
-    saving_high: float | None
-    saving_over_reference: float | None
-    saving_over_reference_low: float | None
-    saving_over_reference_high: float | None
-    weak_error: float | None
-    reason: str | None
-
-
-class OrdersEntry(_Entry, frozen=True, kw_only=True):
+class OrdersEntry(Entry, frozen=True, kw_only=True):
     """Orders in h, from the four finest levels: of V_l and of |mean D_l|; None where they cannot be told."""
 
     level_variance: float | None
     level_mean: float | None
 
 
-class AgreementEntry(_Entry, frozen=True, kw_only=True):
+class AgreementEntry(Entry, frozen=True, kw_only=True):
     """Whether walk is the same within 5% in every format: the delta^2 part of the law."""
 
     agrees: bool | None
@@ -267,7 +238,7 @@ class AgreementEntry(_Entry, frozen=True, kw_only=True):
     reason: str | None
 
 
-class QuantityEntry(_Entry, frozen=True, kw_only=True):
+class QuantityEntry(Entry, frozen=True, kw_only=True):
     """Everything about one quantity."""
 
     levels: list[LevelEntry]
@@ -278,14 +249,20 @@ class QuantityEntry(_Entry, frozen=True, kw_only=True):
     allocation: AllocationEntry
 
 
-class VerdictEntry(_Entry, frozen=True, kw_only=True):
-    """The worst quantity decides. `sound` is whether the reference's levels telescope in every quantity."""
+class VerdictEntry(Entry, frozen=True, kw_only=True):
+    """The worst quantity decides. `sound` is whether the reference's levels telescope in every quantity.
+
+    `schemes` holds, level by level, the scheme of a run that serves all quantities: the admissible one with the
+    smallest worst ratio of its cost to that of a quantity's own best. None where there is none.
+    """
 
     sound: bool
     finest_paying_level: dict[str, DecidedEntry]
+    schemes: list[SchemeEntry | None]
+    plan: CommonPlanEntry
 
 
-class ReachLine(_Entry, frozen=True, kw_only=True):
+class ReachLine(Entry, frozen=True, kw_only=True):
     """Operations of one kind on one line of the kernel, in the trial run."""
 
     file: str | None
@@ -295,7 +272,7 @@ class ReachLine(_Entry, frozen=True, kw_only=True):
     count: int
 
 
-class ReachEntry(_Entry, frozen=True, kw_only=True):
+class ReachEntry(Entry, frozen=True, kw_only=True):
     """What the emulation got hold of in the trial run: `share` of the operations that round were rounded one by one."""
 
     operations: int
@@ -306,7 +283,7 @@ class ReachEntry(_Entry, frozen=True, kw_only=True):
     remarks: list[str]
 
 
-class FaultEntry(_Entry, frozen=True, kw_only=True):
+class FaultEntry(Entry, frozen=True, kw_only=True):
     """What stopped one arm of a trial run; the message begins with file and line where they are known.
 
     An `escape` (or a refusal) stops an audit; what the kernel `raised` in a narrow arm only keeps it from paying.
@@ -317,7 +294,7 @@ class FaultEntry(_Entry, frozen=True, kw_only=True):
     message: str
 
 
-class TrialEntry(_Entry, frozen=True, kw_only=True):
+class TrialEntry(Entry, frozen=True, kw_only=True):
     """A trial run: whether float64 through the whole machinery gave plain NumPy's bits, and what stopped any arm."""
 
     identical: bool
@@ -325,12 +302,28 @@ class TrialEntry(_Entry, frozen=True, kw_only=True):
     faults: list[FaultEntry]
 
 
-class AuditRecord(_Entry, frozen=True, kw_only=True):
+class RulesEntry(Entry, frozen=True, kw_only=True):
+    """The limits by which figures became verdicts.
+
+    `telescoping_se` is how many standard errors apart the reference's levels may lie, `least_effective_size` how many
+    paths must carry a correction, `worthwhile` the edge below which a format does not pay. Rounding may shift the mean
+    of one level by bias_share x rmse / levels_sharing; without a target bias_share is the default.
+    """
+
+    telescoping_se: float
+    least_effective_size: int
+    worthwhile: float
+    bias_share: float
+    levels_sharing: int
+
+
+class AuditRecord(Entry, frozen=True, kw_only=True):
     """The whole audit; parts that a later version fills are None."""
 
     schema: str
     kernel: KernelEntry
     asked: dict[str, object]
+    rules: RulesEntry
     arms: dict[str, ArithmeticEntry]
     quantities: dict[str, QuantityEntry]
     verdict: VerdictEntry

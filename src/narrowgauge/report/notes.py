@@ -20,31 +20,25 @@ from narrowgauge.report.wording import (
 
 __all__ = ["accumulation", "format_notes", "nonfinite", "orders"]
 
-_LEAST_EFFECTIVE_SIZE = 50
-
 
 def format_notes(record: AuditRecord, quantity: str, name: str) -> list[str]:
     """Return what the table of one format leaves open: undecided levels, bias, exceptions, the RMSE it admits."""
     levels = record.quantities[quantity].levels
     share = bias_share(record, quantity)
-    notes = [
-        _undecided(level, name, share, worthwhile(record))
-        for level in levels
-        if level.arms[name].verdict == "undecided"
-    ]
+    notes = [_undecided(record, level, name, share) for level in levels if level.arms[name].verdict == "undecided"]
     notes += [*_biased(levels, name, share), *_raised(levels, name), *_admitted(record, levels, name)]
     return notes
 
 
-def _undecided(level: LevelEntry, name: str, share: float | None, least: float) -> str:
+def _undecided(record: AuditRecord, level: LevelEntry, name: str, share: float | None) -> str:
     """Return a level's estimate, why it is not enough, and the paths that it would need."""
-    arm = level.arms[name]
+    arm, least = level.arms[name], worthwhile(record)
     edge = interval(arm.edge, arm.edge_low, arm.edge_high, (1.0, least))
     known = f"edge {edge}" if arm.edge is not None else "no edge can be told"
     why = {
         "budget": f"the interval is neither above 1 nor below {least:g}, and the paths of the audit file ran out",
         "bias": _bias_unsettled(arm, share),
-        "kurtosis": _rare(level, arm),
+        "kurtosis": _rare(level, arm, record.rules.least_effective_size),
     }.get(arm.reason or "", "the paths ran out")
     needed = "how many paths would settle it cannot be told"
     if arm.paths_needed is not None:
@@ -62,14 +56,14 @@ def _bias_unsettled(arm: ArmEntry, share: float | None) -> str:
     return f"the mean shifts by {shift}, and {figure(share)} either way is this level's share of the target"
 
 
-def _rare(level: LevelEntry, arm: ArmEntry) -> str:
+def _rare(level: LevelEntry, arm: ArmEntry, least: int) -> str:
     why = "so few paths carry a correction that the sample does not know what it misses"
     scheme = arm.scheme
     one = level.corrections.get(f"{scheme.narrow}:{scheme.wide}") if scheme is not None else None
-    if one is None or one.effective_size is None or one.effective_size >= _LEAST_EFFECTIVE_SIZE:
+    if one is None or one.effective_size is None or one.effective_size >= least:
         return why
-    size = shown_edge(one.effective_size, (float(_LEAST_EFFECTIVE_SIZE),))
-    return f"{why} (effectively {size} of them, {_LEAST_EFFECTIVE_SIZE} are asked for)"
+    size = shown_edge(one.effective_size, (float(least),))
+    return f"{why} (effectively {size} of them, {least} are asked for)"
 
 
 def _biased(levels: list[LevelEntry], name: str, share: float | None) -> Iterable[str]:

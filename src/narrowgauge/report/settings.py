@@ -6,7 +6,6 @@ from narrowgauge.record.audit import AuditRecord
 from narrowgauge.report.wording import clean, joined, setting_value
 
 __all__ = [
-    "WORTHWHILE",
     "arithmetics",
     "assumed_costs",
     "assumptions",
@@ -19,11 +18,6 @@ __all__ = [
     "today",
     "worthwhile",
 ]
-
-WORTHWHILE = 1.05  # what target.worthwhile is without a [target]; held against the audit file's default by a test
-
-
-_ROUNDING = {"nearest": "to nearest", "zero": "toward zero", "stochastic": "up or down at random"}
 
 
 def setting(record: AuditRecord, key: str) -> object:
@@ -46,12 +40,13 @@ def today(record: AuditRecord) -> str:
 
 def worthwhile(record: AuditRecord) -> float:
     """Return the edge below which a format is not worth having."""
-    return _number(setting(record, "target.worthwhile"), WORTHWHILE)
+    return record.rules.worthwhile
 
 
 def confidence(record: AuditRecord) -> str:
     """Return the confidence of all intervals together, such as "99%"."""
-    return f"{100.0 * _number(setting(record, 'sampling.confidence'), 0.0):.10g}%"
+    value = setting(record, "sampling.confidence")
+    return f"{100.0 * value if isinstance(value, int | float) else 0.0:.10g}%"
 
 
 def coupled(record: AuditRecord) -> bool:
@@ -69,12 +64,8 @@ def bias_share(record: AuditRecord, quantity: str) -> float | None:
 
     It is bias_share x rmse, shared by the levels where they are added up.
     """
-    rmse, share = setting(record, "target.rmse"), setting(record, "target.bias_share")
-    if isinstance(rmse, dict):
-        rmse = rmse.get(quantity)
-    if not isinstance(rmse, int | float) or not isinstance(share, int | float):
-        return None
-    return share * rmse / (len(record.quantities[quantity].levels) if coupled(record) else 1)
+    rmse = record.quantities[quantity].allocation.rmse
+    return None if rmse is None else record.rules.bias_share * rmse / record.rules.levels_sharing
 
 
 def assumed_costs(record: AuditRecord) -> bool:
@@ -87,7 +78,7 @@ def assumptions(record: AuditRecord) -> str:
     tables: dict[str, list[str]] = {}
     for key in _assumed(record):
         table, _, name = key.partition(".")
-        value = WORTHWHILE if key == "target.worthwhile" and not setting(record, "target") else setting(record, key)
+        value = worthwhile(record) if key == "target.worthwhile" else setting(record, key)
         tables.setdefault(table, []).append(f"{clean(name)} = {setting_value(value)}")
     words = [f"[{clean(table)}] {', '.join(keys)}" for table, keys in tables.items()]
     if assumed_costs(record):
@@ -100,8 +91,7 @@ def arithmetics(record: AuditRecord) -> str:
     kinds: dict[str, list[str]] = {}
     for arm, entry in record.arms.items():
         fused = "products fused into sums" if entry.fused else "products not fused into sums"
-        rounding = _ROUNDING.get(entry.rounding, entry.rounding)
-        words = f"rounding {rounding}, subnormals {entry.subnormals}, {fused}, {entry.draws} draws"
+        words = f"rounding to {entry.rounding}, subnormals {entry.subnormals}, {fused}, {entry.draws} draws"
         words += f", {joined(entry.widened)} in a wider format" if entry.widened else ""
         kinds.setdefault(clean(words), []).append(clean(arm))
     return "; ".join(f"{joined(arms)}: {words}" for words, arms in kinds.items())
@@ -110,7 +100,3 @@ def arithmetics(record: AuditRecord) -> str:
 def _assumed(record: AuditRecord) -> list[str]:
     found = record.asked.get("assumed")
     return [str(key) for key in found] if isinstance(found, list | tuple) else []
-
-
-def _number(value: object, otherwise: float) -> float:
-    return float(value) if isinstance(value, int | float) else otherwise

@@ -7,13 +7,19 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterable, Sequence
-from typing import Literal
 
-from rich.box import Box
-from rich.table import Table
 from rich.text import Text
 
-from narrowgauge.record.audit import AllocationEntry, ArmEntry, AuditRecord, LevelEntry, QuantityEntry
+from narrowgauge.record.audit import (
+    AllocationEntry,
+    ArmEntry,
+    AuditRecord,
+    CommonPlanEntry,
+    LevelEntry,
+    PlanEntry,
+    QuantityEntry,
+)
+from narrowgauge.report.layout import Ruled
 from narrowgauge.report.settings import assumed_costs, confidence, narrow_formats, today, worthwhile
 from narrowgauge.report.wording import NONE, clean, count, figure, interval, levels_named, percent, scheme_words
 
@@ -22,10 +28,11 @@ __all__ = [
     "UNSETTLED",
     "VERDICT_STYLES",
     "best_table",
+    "bounded_levels",
+    "common_table",
     "format_table",
     "missing_figures",
     "plan_table",
-    "ruled",
     "signal_table",
 ]
 
@@ -45,28 +52,12 @@ UNSETTLED = {**REFUSED, "edge": "edge not settled", "bias": "bias not settled", 
 # The words say it all; the colour only finds them sooner.
 VERDICT_STYLES = {"pays": "bold cyan", "does not pay": "yellow", "undecided": "magenta"}
 
-# Nothing but one rule below the headings, the third row of eight.
-_RULE = Box("    \n    \n -  \n    \n    \n    \n    \n    \n", ascii=True)
 
-
-def ruled(*columns: tuple[str, Literal["number", "words", "unbroken"]]) -> Table:
-    """Return an empty table with these headings; numbers stand to the right, and only words may be broken."""
-    table = Table(box=_RULE, show_edge=False, pad_edge=False, padding=(0, 1, 0, 0), header_style="bold")
-    for heading, kind in columns:
-        table.add_column(
-            Text(heading),
-            justify="right" if kind == "number" else "left",
-            overflow="fold",
-            no_wrap=kind == "unbroken",
-        )
-    return table
-
-
-def signal_table(record: AuditRecord, entry: QuantityEntry) -> Table:
+def signal_table(record: AuditRecord, entry: QuantityEntry) -> Ruled:
     """Return standard deviations: of the reference's level difference, and of each narrow format's error."""
     formats = narrow_formats(record)
     names = ("level", "steps", "paths", "signal", *(f"noise\n{clean(name)}" for name in formats))
-    table = ruled(*((name, "number") for name in names))
+    table = Ruled(*((name, "number") for name in names))
     for level in entry.levels:
         arms = [level.arms.get(name) for name in formats]
         table.add_row(
@@ -81,9 +72,9 @@ def signal_table(record: AuditRecord, entry: QuantityEntry) -> Table:
     return table
 
 
-def best_table(record: AuditRecord, entry: QuantityEntry) -> Table:
+def best_table(record: AuditRecord, entry: QuantityEntry) -> Ruled:
     """Return the cheapest admissible scheme of each level, its gain, and up to which cost ratio it is worth it."""
-    table = ruled(
+    table = Ruled(
         ("level", "number"),
         ("cheapest\nscheme", "words"),
         (f"gain over\n{today(record)} alone\n{_inside(record)}", "unbroken"),
@@ -101,9 +92,9 @@ def best_table(record: AuditRecord, entry: QuantityEntry) -> Table:
     return table
 
 
-def format_table(record: AuditRecord, entry: QuantityEntry, name: str) -> Table:
+def format_table(record: AuditRecord, entry: QuantityEntry, name: str) -> Ruled:
     """Return what one narrow format is worth on each level: its best scheme, the edge, the verdict."""
-    table = ruled(
+    table = Ruled(
         ("level", "number"), ("scheme", "words"), (f"edge\n{_inside(record)}", "unbroken"), ("verdict", "words")
     )
     thresholds = (1.0, worthwhile(record))
@@ -128,21 +119,54 @@ def verdict_words(arm: ArmEntry) -> Text:
     return words
 
 
-def plan_table(allocation: AllocationEntry) -> Table:
+def plan_table(allocation: AllocationEntry) -> Ruled:
     """Return the paths of each branch that reach the target, and each level's share of the cost."""
-    table = ruled(
+    table = Ruled(
         ("level", "number"),
         ("scheme", "words"),
         ("paths", "number"),
         ("correction\npaths", "number"),
         ("share\nof cost", "number"),
     )
-    total = sum(plan.cost for plan in allocation.levels)
-    for plan in allocation.levels:
+    for plan, share in zip(allocation.levels, _shares(allocation.levels), strict=True):
         few = "" if plan.correction_paths is None else count(plan.correction_paths)
-        share = percent(plan.cost / total) if total > 0 else NONE
         table.add_row(*_plain(str(plan.level), scheme_words(plan.scheme), count(plan.paths), few, share))
     return table
+
+
+def common_table(plan: CommonPlanEntry) -> Ruled:
+    """Return the paths of each branch that serve all quantities, which quantity needs so many, and shares of cost."""
+    table = Ruled(
+        ("level", "number"),
+        ("scheme", "words"),
+        ("paths", "number"),
+        ("needed\nby", "words"),
+        ("correction\npaths", "number"),
+        ("needed\nby", "words"),
+        ("share\nof cost", "number"),
+    )
+    for one, share in zip(plan.levels, _shares(plan.levels), strict=True):
+        few = "" if one.correction_paths is None else count(one.correction_paths)
+        whose = "" if one.correction_paths_decided_by is None else clean(one.correction_paths_decided_by)
+        paths = (count(one.paths), clean(one.paths_decided_by), few, whose)
+        table.add_row(*_plain(str(one.level), scheme_words(one.scheme), *paths, share))
+    return table
+
+
+def bounded_levels(levels: Sequence[PlanEntry]) -> str:
+    """Return which levels of a plan rest on corrections that were hardly seen, as a sentence; "" if none does."""
+    found = [one.level for one in levels if one.bounded]
+    if not found:
+        return ""
+    return (
+        f"On {levels_named(found)} too few corrections were seen for their variance to be known: their paths follow "
+        "from its upper bound."
+    )
+
+
+def _shares(levels: Sequence[PlanEntry]) -> list[str]:
+    total = sum(one.cost for one in levels)
+    return [percent(one.cost / total) if total > 0 else NONE for one in levels]
 
 
 def missing_figures(record: AuditRecord, entry: QuantityEntry) -> list[str]:

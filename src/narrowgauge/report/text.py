@@ -5,14 +5,15 @@ Everything is made of text objects, never of markup: a name in the user's code c
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from pathlib import Path
 
-from rich.console import Console, ConsoleOptions, Group, RenderableType, RenderResult
+from rich.console import Group, RenderableType
 from rich.rule import Rule
 from rich.text import Text
 
-from narrowgauge.record.audit import AuditRecord, FaultEntry, TrialEntry
+from narrowgauge.record.audit import AuditRecord, FaultEntry, PlanEntry, TrialEntry
+from narrowgauge.report.layout import Hanging
 from narrowgauge.report.notes import accumulation, format_notes, nonfinite, orders
 from narrowgauge.report.progress import Progress, planned_text
 from narrowgauge.report.settings import (
@@ -24,9 +25,17 @@ from narrowgauge.report.settings import (
     today,
     worthwhile,
 )
-from narrowgauge.report.tables import best_table, format_table, missing_figures, plan_table, signal_table
+from narrowgauge.report.tables import (
+    best_table,
+    bounded_levels,
+    common_table,
+    format_table,
+    missing_figures,
+    plan_table,
+    signal_table,
+)
 from narrowgauge.report.trial import reach_summary, reach_table
-from narrowgauge.report.verdict import alarms, finest_words, lead, savings, verdict_sentences
+from narrowgauge.report.verdict import alarms, common_cost, finest_words, lead, savings, verdict_sentences
 from narrowgauge.report.wording import NONE, clean, joined, setting_value
 
 __all__ = ["Progress", "audit_text", "planned_text", "trial_text", "verdict_text"]
@@ -86,11 +95,11 @@ def _faults(faults: Iterable[FaultEntry]) -> list[RenderableType]:
     arms: dict[str, list[str]] = {}
     for fault in faults:
         arms.setdefault(fault.message, []).append(clean(fault.arm))
-    return [_Hanging(_labelled(joined(names), message), "- ") for message, names in arms.items()]
+    return [Hanging(_labelled(joined(names), message), "- ") for message, names in arms.items()]
 
 
 def _alarms(record: AuditRecord) -> list[RenderableType]:
-    found: list[RenderableType] = [_Hanging(text, mark) for mark, text in alarms(record)]
+    found: list[RenderableType] = [Hanging(text, mark) for mark, text in alarms(record)]
     return [*found, Text()] if found else []
 
 
@@ -108,7 +117,7 @@ def _legend(record: AuditRecord) -> list[RenderableType]:
         "pays": f"the interval of the edge is above 1; does not pay: below {worthwhile(record):g}, or not admissible",
         "breaks even": "up to this cost of a narrow step, a wide one costing 1, the scheme is worth it",
     }
-    return [_Hanging(_labelled(term, f"{words}."), "  ") for term, words in terms.items()]
+    return [Hanging(_labelled(term, f"{words}."), "  ") for term, words in terms.items()]
 
 
 def _quantity(record: AuditRecord, name: str) -> list[RenderableType]:
@@ -130,21 +139,28 @@ def _quantity(record: AuditRecord, name: str) -> list[RenderableType]:
         parts.append(Text())
     parts.append(Text("How its rounding errors add up", style="bold"))
     parts += [*_bullets(accumulation(entry)), Text()]
-    if entry.allocation.levels:
+    if entry.allocation.levels and len(record.quantities) == 1:
         title = f"Paths for an RMSE of {setting_value(entry.allocation.rmse)} in {clean(name)}"
-        parts += [Text(title, style="bold"), plan_table(entry.allocation), Text()]
+        parts += [Text(title, style="bold"), plan_table(entry.allocation), *_bounded(entry.allocation.levels), Text()]
     return parts
 
 
 def _verdict(record: AuditRecord) -> list[RenderableType]:
     parts: list[RenderableType] = [*_heading("Verdict"), lead(record)]
-    parts += [_Hanging(one, "- ") for one in verdict_sentences(record)]
-    parts += [Text(), *(_Hanging(one, "- ") for one in savings(record))]
+    parts += [Hanging(one, "- ") for one in verdict_sentences(record)]
+    parts += [Text(), *(Hanging(one, "- ") for one in savings(record))]
+    plan = record.verdict.plan
     if len(record.quantities) > 1:
-        parts.append(
-            Text("A run that serves all quantities takes on each level the most paths that any of them needs.")
-        )
+        if plan.levels:
+            parts += [Text(), Text("Paths for all quantities together", style="bold"), common_table(plan)]
+            parts += _bounded(plan.levels)
+        parts.append(Text(common_cost(record)))
     return [*parts, Text()]
+
+
+def _bounded(levels: Sequence[PlanEntry]) -> list[RenderableType]:
+    words = bounded_levels(levels)
+    return [Text(words)] if words else []
 
 
 def _files(folder: Path | None) -> list[RenderableType]:
@@ -160,16 +176,4 @@ def _labelled(label: str, words: str) -> Text:
 
 
 def _bullets(lines: Iterable[str]) -> list[RenderableType]:
-    return [_Hanging(Text(clean(line)), "- ") for line in lines]
-
-
-class _Hanging:
-    """A paragraph behind a mark, whose further lines stand below its first word."""
-
-    def __init__(self, text: Text, mark: str) -> None:
-        self._text, self._mark = text, mark
-
-    def __rich_console__(self, console: Console, options: ConsoleOptions) -> RenderResult:
-        width = max(1, options.max_width - len(self._mark))
-        for number, line in enumerate(self._text.wrap(console, width, overflow="fold")):
-            yield Text(self._mark if number == 0 else " " * len(self._mark)).append_text(line)
+    return [Hanging(Text(clean(line)), "- ") for line in lines]

@@ -4,11 +4,10 @@ from __future__ import annotations
 
 from collections.abc import Iterable
 
-from rich.table import Table
 from rich.text import Text
 
 from narrowgauge.record.audit import ReachEntry, ReachLine
-from narrowgauge.report.tables import ruled
+from narrowgauge.report.layout import Ruled
 from narrowgauge.report.wording import clean, count, percent
 
 __all__ = ["decisions", "reach_summary", "reach_table"]
@@ -22,11 +21,11 @@ _COLUMNS = {
 }
 
 
-def reach_table(reach: ReachEntry) -> Table:
+def reach_table(reach: ReachEntry) -> Ruled:
     """Return one row for each line of the kernel: which operations it ran, how often, and how they were rounded."""
     order = [*_COLUMNS, *sorted({line.route for line in reach.lines} - set(_COLUMNS))]
     routes = [route for route in order if any(line.route == route for line in reach.lines)]
-    table = ruled(("line", "words"), *((_COLUMNS.get(route, clean(route)), "words") for route in routes))
+    table = Ruled(("line", "words"), *((_COLUMNS.get(route, clean(route)), "words") for route in routes))
     rows: dict[tuple[str, int], list[ReachLine]] = {}
     for line in reach.lines:
         rows.setdefault((line.file or "", line.line or 0), []).append(line)

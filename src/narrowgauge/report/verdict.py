@@ -21,9 +21,7 @@ from narrowgauge.report.wording import (
     shown_edge,
 )
 
-__all__ = ["alarms", "finest_words", "lead", "savings", "verdict_sentences"]
-
-_SOUND = 3.3  # standard errors within which the levels must fit together
+__all__ = ["alarms", "common_cost", "finest_words", "lead", "savings", "verdict_sentences"]
 
 # Why the run of paying levels ends, after "on level 5 ": the format does not pay there, or that is not known.
 _ENDS = {
@@ -47,12 +45,13 @@ def alarms(record: AuditRecord) -> list[tuple[str, Text]]:
     Each paragraph comes with the mark that stands before it.
     """
     found = []
-    broken = [line for name, entry in record.quantities.items() for line in _broken(clean(name), entry)]
+    sound = record.rules.telescoping_se
+    broken = [line for name, entry in record.quantities.items() for line in _broken(clean(name), entry, sound)]
     if broken or not record.verdict.sound:
         text = Text("THE KERNEL OR THE COUPLING OF ITS DRAWS IS WRONG. ", style="bold red")
         text.append(
             "In the reference, the coarse paths of a level and the fine paths of the level below must have the same "
-            f"mean. They differ by more than {_SOUND} standard errors, which is not chance. Until that is put right, "
+            f"mean. They differ by more than {sound:g} standard errors, which is not chance. Until that is put right, "
             "no figure below can be relied on.",
             style="not bold default",
         )
@@ -66,7 +65,7 @@ def alarms(record: AuditRecord) -> list[tuple[str, Text]]:
     return found
 
 
-def _broken(name: str, entry: QuantityEntry) -> Iterable[str]:
+def _broken(name: str, entry: QuantityEntry, sound: float) -> Iterable[str]:
     for level in entry.levels:
         one = level.telescoping
         if one is None or one.sound:
@@ -75,7 +74,7 @@ def _broken(name: str, entry: QuantityEntry) -> Iterable[str]:
         if one.difference is None or one.se is None:
             yield f"{where}: the means cannot be compared."
             continue
-        times = f", so {shown_edge(abs(one.difference) / one.se, (_SOUND,))} of them" if one.se > 0 else ""
+        times = f", so {shown_edge(abs(one.difference) / one.se, (sound,))} of them" if one.se > 0 else ""
         yield f"{where}: difference {figure(one.difference)}, standard error {figure(one.se)}{times}."
 
 
@@ -197,8 +196,25 @@ def savings(record: AuditRecord) -> list[Text]:
     return found
 
 
+def common_cost(record: AuditRecord) -> str:
+    """Return what a run that serves all quantities costs, and what today alone would, or why that is not planned."""
+    plan = record.verdict.plan
+    if plan.cost is None or not plan.levels:
+        why = "the audit file has no [target]" if plan.reason == "no target" else clean(plan.reason)
+        return f"No run that serves all quantities is planned: {why}."
+    text = "A run that serves all quantities takes on each level one scheme and the most paths that any of them needs. "
+    text += f"It costs {million(plan.cost)} in the unit of the cost table"
+    rivals = [(today(record), plan.saving)]
+    if today(record) != "float64":
+        rivals.append(("float64", plan.saving_over_reference))
+    shown = [f"{name} alone costs {shown_edge(saving)} times as much" for name, saving in rivals if saving]
+    by = "by the variances measured" + (", or their upper bounds" if any(one.bounded for one in plan.levels) else "")
+    by += ", costs assumed" if assumed_costs(record) else ""
+    return f"{text}; planned likewise, {joined(shown)} ({by})." if shown else f"{text}."
+
+
 def _saved(record: AuditRecord, entry: QuantityEntry) -> Iterable[str]:
-    plan = entry.allocation
+    plan, several = entry.allocation, len(record.quantities) > 1
     rivals = [(today(record), plan.saving, plan.saving_low, plan.saving_high)]
     if today(record) != "float64":
         over = (plan.saving_over_reference, plan.saving_over_reference_low, plan.saving_over_reference_high)
@@ -211,9 +227,12 @@ def _saved(record: AuditRecord, entry: QuantityEntry) -> Iterable[str]:
         if saving
     ]
     if shown:
-        yield f"{target}{joined(shown)} as the cheapest scheme on each level ({inside})."
-    if plan.cost is not None:
+        ours = "the scheme that serves all quantities" if several else "the cheapest scheme"
+        yield f"{target}{joined(shown)} as {ours} on each level ({inside})."
+    if plan.cost is not None and not several:
         yield f"The cheapest schemes cost {million(plan.cost)} in the unit of the cost table."
+    if several:  # said once, of the plan for all of them
+        return
     if plan.reason == "no target":
         yield "No paths are planned, since the audit file has no [target]."
     elif plan.reason is not None:
