@@ -41,21 +41,25 @@ class Moments:
         if keep is None:
             count = np.full(batches, float(table.shape[1]))
             kept: Doubles = np.ones(())
+            pivot = table[:, 0]
         else:
             mask = keep.reshape(batches, -1)
             count = mask.sum(axis=1).astype(np.float64)
             table = np.where(mask, table, 0.0)
             kept = mask.astype(np.float64)
+            pivot = table[np.arange(batches), mask.argmax(axis=1)]
         some = np.maximum(count, 1.0)
-        mean = table.sum(axis=1) / some
-        offset = (table - mean[:, None]) * kept
+        # From one of the values, so that equal values have exactly no variance, then from the mean.
+        offset = (table - pivot[:, None]) * kept
+        mean = offset.sum(axis=1) / some
+        offset = (offset - mean[:, None]) * kept
         # The mean itself is rounded: what is left of the first moment corrects it and the second.
         left = offset.sum(axis=1) / some
         square = offset * offset
         return cls(
             count=count,
-            mean=mean + left,
-            m2=square.sum(axis=1) - count * left * left,
+            mean=pivot + (mean + left),
+            m2=np.maximum(square.sum(axis=1) - count * left * left, 0.0),
             m3=(square * offset).sum(axis=1),
             m4=(square * square).sum(axis=1),
         )
