@@ -9,6 +9,7 @@ from __future__ import annotations
 import textwrap
 
 import numpy as np
+from exact_kernels import EXACT_SYMBOLS, FUNCTIONS_OF_INTEGERS, IDIOMS, exact_in_place, exact_operators
 from operator_kernels import IN_PLACE, SYMBOLS, in_place, operators
 
 UFUNCS = """
@@ -157,7 +158,7 @@ INDEXING = """
         return [v, w, view, back, z, z[()], z[...], x[1], x[-1], x[1:3], x[::-1], x[::2], x[[0, 2]], x[x > 1], x[...],
                 x[None], x[:, None], a[0], a[0, 1], a[:, 0], a[1:, :2], a[[0, 1], [1, 2]], a[a > 0], a[a[:, 0] > 0],
                 a[np.arange(2)], a[x[:4] > 1, 0], x[np.int64(1)], x[True], x[:0], [i for i in x], [r for r in a],
-                list(reversed(x)), np.linspace(0, 1, 5)[x > 1] * x[0], [0.1, 0.2][int(x[0] > 1)] * x]
+                list(reversed(x)), np.asarray(np.linspace(0, 1, 5))[x > 1] * x[0], [0.1, 0.2][int(x[0] > 1)] * x]
 """
 
 VIEWS = """
@@ -260,12 +261,12 @@ MASKS = """
                 m.astype(bool), m.copy(), m[0], m[1:], m[::-1], m.reshape(5, 1), m.T, m.shape, m.size, len(m), m.ndim,
                 m.dtype, m.nonzero(), m.argmax(), m.cumsum(), np.any(m), np.all(m), np.sum(m), np.sum(a > 0, axis=0),
                 np.cumsum(m), np.argmax(m), np.logical_and(m, k), np.logical_not(m), np.logical_or.reduce(m),
-                np.logical_and.reduce([m, k]), np.concatenate([m, k]), np.stack([m, k]), np.roll(m, 1), np.diff(m),
-                alive,
+                np.logical_and.reduce(np.array([m, k])), np.concatenate([m, k]), np.stack([m, k]), np.roll(m, 1),
+                np.diff(m), alive,
                 hits, total, down, flag, count, np.array([m, k]), np.where(m & k, 0.3, 0.7), x[m & k], x[~m],
                 np.invert(m),
-                m[0] * 0.3, 0.3 * m[0], m[0] + m[1], m[0] & True, m[0] * x, m[0] * x[0], 1 - m[0], x * float(m[0]),
-                int(m[0]),
+                m[0] * 0.3, 0.3 * m[0], m[0] + m[1], m[0] & True, m[0] * x, m[0] * x[0], 1 - m[0],
+                x * m[0].astype(float), int(m[0]),
                 m[0] if m[0] else k[0], not m[0], bool(m[1]), "yes" if m.any() else "no", np.maximum(m, k), m ** 0.5,
                 m & np.array([True] * 5), np.array([True] * 5) & m, np.linspace(0, 1, 5) * m, m * np.arange(5),
                 np.isnan(x) | (x < 0), np.isclose(0.3, 0.3), np.multiply(m, 0.3), np.add(m, 1), np.flatnonzero(m),
@@ -338,9 +339,49 @@ IMPORTS = """
         return out
 """
 
+SUMS = """
+    def kernel(x, y, a):
+        # a: 4 steps of 3 paths; an average over time, moment matching, correlated factors, a path summed up
+        asian = a.mean(axis=0)
+        matched = (a - a.mean(axis=1, keepdims=True)) / a.std(axis=1, ddof=1, keepdims=True)
+        correlation = np.array([[1.0, 0.3, 0.1, 0.2], [0.3, 1.0, 0.4, 0.1], [0.1, 0.4, 1.0, 0.2], [0.2, 0.1, 0.2, 1.0]])
+        root = np.linalg.cholesky(correlation)
+        raw = np.linalg.cholesky(np.eye(4) + np.arange(16).reshape(4, 4) % 3 * 0.0)
+        path = np.cumsum(a, axis=0)
+        bridge = np.concatenate([np.zeros((1, 3)), path])
+        weights = np.linspace(0.1, 0.4, 4)
+        out = [asian, matched, root, raw @ a, a.T @ raw.T, root @ a, a.T @ root, path, bridge, np.diff(bridge, axis=0),
+               np.dot(raw, a), np.dot(root, a), root.dot(a), weights @ a, np.dot(weights, a), a.T.dot(weights),
+               np.einsum("ij,jk->ik", root, a), np.einsum("sp,s->p", a, weights), np.einsum("ij,ij->j", a, a),
+               np.add.reduce(a, axis=0), np.add.reduce(x), np.add.accumulate(a, axis=1), np.multiply.reduce(x),
+               np.sum(a), np.sum(a, axis=0), np.sum(a, axis=1, keepdims=True), a.sum(), np.prod(x),
+               np.cumprod(1 + a, axis=0),
+               np.var(a, axis=0), np.std(x), np.average(a, axis=0, weights=weights), np.mean(x > 1),
+               (a > 0).mean(axis=0),
+               np.trapezoid(a, dx=0.25, axis=0), np.convolve(x, y), np.linalg.solve(correlation, a),
+               np.linalg.inv(root),
+               np.linalg.norm(x), np.outer(x, y), np.inner(x, y), np.vdot(x, y), x @ y, np.tensordot(root, a, 1),
+               np.trace(root), np.linalg.det(root), np.median(a, axis=0), np.percentile(x, 30), np.interp(x,
+               [0, 1, 2], [3, 1, 2]),
+               np.sort(a, axis=0), np.argsort(x), np.searchsorted([0.1, 0.5, 1.5], x), np.round(x, 2), round(x[1], 2),
+               np.linspace(0.0, x[1], 4), np.ptp(a, axis=1), divmod(x, 0.3), np.modf(y), np.nextafter(x, 9.0)]
+        held = np.zeros(5)
+        np.divide(1.0, y, out=held, where=y > 0)
+        np.sqrt(x, out=held, where=x > 1)
+        np.cumsum(x, out=x)
+        np.sum(a, axis=1, out=y[:4])
+        np.copyto(held[:2], [0.5, 0.25])
+        a @= np.eye(3)
+        return out, held
+"""
+
 SOURCES = {
     **{f"operator {symbol}": operators(symbol) for symbol in SYMBOLS},
     **{f"in place {symbol}=": in_place(symbol) for symbol in IN_PLACE},
+    **{f"integers {symbol}": exact_operators(symbol) for symbol in EXACT_SYMBOLS},
+    **{f"integers {symbol}=": exact_in_place(symbol) for symbol in EXACT_SYMBOLS[:12]},
+    "integers": FUNCTIONS_OF_INTEGERS,
+    "idioms of integers": IDIOMS,
     "ufuncs": UFUNCS,
     "out=": OUT,
     "shapes and methods": SHAPES,
@@ -350,6 +391,7 @@ SOURCES = {
     "views": VIEWS,
     "scalars": SCALARS,
     "masks": MASKS,
+    "sums": SUMS,
     "imports": IMPORTS,
 }
 

@@ -10,7 +10,7 @@ import numpy as np
 from narrowgauge.arithmetic.arithmetic import arithmetic_named
 from narrowgauge.dispatch.array import Array
 from narrowgauge.dispatch.copies import copy_module, new_setting
-from narrowgauge.dispatch.mask import Mask
+from narrowgauge.dispatch.exact import Exact
 from narrowgauge.dispatch.scalar import Scalar
 from narrowgauge.dispatch.setting import Wrapped
 
@@ -85,7 +85,7 @@ def unheld(result, setting):
             carrier = np.asarray(value._carrier)
             if value._setting is not setting or carrier.dtype != form.carrier or not setting.arithmetic.holds(carrier):
                 found.append(value)
-        elif not isinstance(value, Mask) and (
+        elif not isinstance(value, Exact) and (
             isinstance(value, float) or getattr(getattr(value, "dtype", None), "kind", "i") not in "iub"
         ):
             found.append(value)

@@ -282,12 +282,12 @@ def test_dataclasses_of_a_module_that_is_not_in_pythons_table():
 
 @pytest.mark.parametrize("form", [None, "float16"])
 @pytest.mark.parametrize(
-    ("statement", "name"),
-    [("import beside", "beside"), ("from beside import f", "beside"), ("from . import beside", "."),
-     ("from .beside import f", ".beside"), ("import folder.part", "folder.part"),
-     ("import package.other", "package.other")],
+    ("statement", "name", "listed"),
+    [("import beside", "beside", "beside"), ("from beside import f", "beside", "beside"),
+     ("from . import beside", ".", "package"), ("from .beside import f", ".beside", "package.beside"),
+     ("import folder.part", "folder.part", "folder.part"), ("import package.other", "package.other", "package.other")],
 )  # fmt: skip
-def test_a_module_beside_the_kernel_is_refused(tmp_path, form, statement, name):
+def test_a_module_beside_the_kernel_is_refused(tmp_path, form, statement, name, listed):
     """In the kernel's folder or its package: refused by name, in plain NumPy too, so that both runs see the same."""
     (tmp_path / "beside.py").write_text("def f(): pass\n")
     (tmp_path / "folder").mkdir()
@@ -295,8 +295,8 @@ def test_a_module_beside_the_kernel_is_refused(tmp_path, form, statement, name):
     setting = None if form is None else new_setting(arithmetic_named(form))
     code = compile(statement, str(tmp_path / "kernel.py"), "exec")
     words = (
-        f"the kernel's module imports {name}, which lies beside it; in this version the kernel is one module: "
-        "its NumPy would not be rounded. Accepted: put what the kernel needs into its own file"
+        f"the kernel imports {name}, which lies beside it and is not listed: its NumPy would not be rounded. "
+        f'Accepted: "{listed}" in kernel.modules, or in kernel.shared to run it as it is'
     )
     with pytest.raises(KernelError if form is None else RefusedError) as raised:
         copy_module(code, "package.kernel", setting)

@@ -2,92 +2,37 @@
 
 from __future__ import annotations
 
+import importlib
 import inspect
 
 import ml_dtypes
 import numpy as np
 import pytest
+from classification import EXACT, NOT_OF_THE_STATE, REFUSED, ROUNDED, ROUTE_OF
 from kernel_runs import NARROW, module_of, owned, same, unheld
+from numpy.testing.overrides import get_overridable_numpy_array_functions, get_overridable_numpy_ufuncs
+from numpy_calls import CALLS, METHODS, UFUNC_CALLS
+from test_dispatch_observer import Log
 
 from narrowgauge.arithmetic.elementary import WAYS
-from narrowgauge.dispatch.functions import FUNCTIONS, JOINED, MOVED
-from narrowgauge.dispatch.routes import ROUTES
+from narrowgauge.dispatch import functions, ufuncs
+from narrowgauge.dispatch.functions import row_for
+from narrowgauge.dispatch.routes import INTEGERS, NEITHER, OTHERS, ROUTES, route_of
 from narrowgauge.dispatch.setting import Wrapped
+from narrowgauge.dispatch.tables import ROWS
 from narrowgauge.errors import RefusedError
 
-# A second statement of the classification, independent of the table that the arithmetic computes by.
-EXACT = (
-    "absolute ceil copysign equal fabs floor fmax fmin fmod greater greater_equal isfinite isinf isnan less less_equal "
-    "logical_and logical_not logical_or logical_xor maximum minimum negative not_equal positive rint sign signbit trunc"
-)
-ROUNDED = (
-    "add arccos arccosh arcsin arcsinh arctan arctan2 arctanh cbrt cos cosh deg2rad degrees divide exp exp2 expm1 "
-    "float_power floor_divide heaviside hypot log log10 log1p log2 logaddexp logaddexp2 multiply power rad2deg radians "
-    "reciprocal remainder sin sinh sqrt square subtract tan tanh"
-)
-
-# One call, or more, of every function: arguments after the state, keywords. `x` is the state, shape (2, 3).
-STATE = object()
-CALLS = {
-    np.all: [((STATE,), {}), ((STATE, 0), {"keepdims": True})],
-    np.amax: [((STATE,), {"axis": 1})],
-    np.amin: [((STATE,), {})],
-    np.any: [((STATE,), {"axis": 1, "keepdims": True})],
-    np.array_split: [((STATE, 2, 1), {})],
-    np.atleast_1d: [((STATE,), {})],
-    np.atleast_2d: [((STATE,), {})],
-    np.broadcast_to: [((STATE, (4, 2, 3)), {"subok": False})],
-    np.clip: [((STATE, 0.1, 0.7), {}), ((STATE,), {"min": 0.3}), ((STATE,), {"a_min": None, "a_max": 0.1})],
-    np.column_stack: [(([STATE, STATE],), {})],
-    np.concatenate: [(([STATE, STATE], 1), {}), (([[[0.1, 0.2, 0.3]], STATE],), {"axis": 0})],
-    np.copy: [((STATE,), {"order": "F", "subok": True})],
-    np.count_nonzero: [((STATE, 0), {"keepdims": True})],
-    np.diff: [((STATE,), {}), ((STATE, 2), {"axis": 1})],
-    np.empty_like: [((STATE, float, "F"), {"subok": True, "shape": 4})],
-    np.expand_dims: [((STATE, 1), {})],
-    np.flatnonzero: [((STATE,), {})],
-    np.flip: [((STATE, 0), {})],
-    np.full_like: [((STATE, 0.1), {}), ((STATE,), {"fill_value": 0.3, "shape": (2,)}), ((STATE, 0.1, int), {})],
-    np.hstack: [(([STATE, STATE],), {})],
-    np.max: [((STATE,), {"axis": 0, "out": None})],
-    np.min: [((STATE, 1), {"keepdims": True})],
-    np.moveaxis: [((STATE, 0, 1), {})],
-    np.ndim: [((STATE,), {})],
-    np.nonzero: [((STATE,), {})],
-    np.ones_like: [((STATE,), {"order": "K"})],
-    np.ravel: [((STATE, "F"), {})],
-    np.real: [((STATE,), {})],
-    np.repeat: [((STATE, 2, 1), {})],
-    np.reshape: [((STATE, (3, 2)), {"order": "F", "copy": True})],
-    np.roll: [((STATE, 1), {"axis": 1})],
-    np.shape: [((STATE,), {})],
-    np.size: [((STATE, 1), {})],
-    np.split: [((STATE, 3, 1), {})],
-    np.squeeze: [((STATE,), {"axis": None})],
-    np.stack: [(([STATE, STATE],), {"axis": -1})],
-    np.swapaxes: [((STATE, 0, 1), {})],
-    np.take: [((STATE, [0, 5]), {"mode": "wrap"}), ((STATE, 1, 1), {})],
-    np.tile: [((STATE, (2, 1)), {})],
-    np.transpose: [((STATE, (1, 0)), {})],
-    np.vstack: [(([STATE, STATE],), {})],
-    np.where: [((STATE, STATE, 0.1), {}), (([[True], [False]], 0.3, STATE), {}), ((STATE,), {})],
-    np.zeros_like: [((STATE,), {"dtype": np.float64, "shape": (2,)}), ((STATE, bool), {})],
-}  # fmt: skip
-
-# What NumPy's signature has and the row refuses by name.
-REFUSED = {
-    np.all: "out where", np.any: "out where", np.amax: "out initial where", np.amin: "out initial where",
-    np.max: "out initial where", np.min: "out initial where", np.take: "out", np.concatenate: "out dtype casting",
-    np.stack: "out dtype casting", np.hstack: "dtype casting", np.vstack: "dtype casting",
-}  # fmt: skip
-
+for _module in ("fft", "strings", "char", "rec", "ma", "polynomial", "linalg", "lib.recfunctions"):
+    importlib.import_module(f"numpy.{_module}")  # what they add to NumPy's own list is there once they are imported
+NEWEST = tuple(map(int, np.__version__.split(".")[:2])) == (2, 4)
+FUNCTIONS = get_overridable_numpy_array_functions()
+UFUNCS = get_overridable_numpy_ufuncs()
 VALUES = np.array([[0.37, -1.21, 2.63], [0.049, 5.9, -0.87]])
+MATRIX = np.array([[2.1, 0.3, 0.2], [0.3, 1.7, -0.4], [0.2, -0.4, 1.3]])
 
 
-def put(value, x):
-    if isinstance(value, list):
-        return [put(item, x) for item in value]
-    return x if value is STATE else value
+def name_of(function):
+    return f"{function.__module__}.{function.__name__}"
 
 
 def operands(ufunc, setting, kind=None):
@@ -98,12 +43,156 @@ def operands(ufunc, setting, kind=None):
     return [owned(array, setting) if kind is None else array.astype(kind).astype(np.float64) for array in pair]
 
 
+def run(call, form, observer=None):
+    """What an expression gives, and what its arguments are afterwards."""
+    text = f"""
+        import numpy as np
+        def kernel(x, q, o):
+            v, w, u = x[0], abs(x[1]), o[0]
+            m, s, k = x > 0, x[0, 0], (abs(x[1]) * 2).astype(int)
+            c = np.linspace(0.1, 0.9, 3)
+            return {call}, x, q, o
+    """
+    module, setting = module_of(text, form, observer)
+    with np.errstate(all="ignore"):
+        return module.kernel(*(owned(array, setting) for array in (VALUES, MATRIX, np.zeros((2, 3))))), setting
+
+
+def check(call):
+    """float64 gives NumPy's own result, narrower formats values of the format, and nothing is a fault."""
+    plain, _ = run(call, None)
+    ours, setting = run(call, "float64")
+    if "empty_like" in call:
+        plain[0][...] = np.nan  # what has not been written must be noticed when it is read
+    assert same(plain, ours), call
+    assert setting.faults == []
+    for form in NARROW:
+        result, setting = run(call, form)
+        assert unheld(result, setting) == [], call
+        assert setting.faults == []
+
+
 def test_the_classification_is_stated_twice():
-    """`exact` and `rounded` name the same ufuncs here and in the table, which covers what the arithmetic computes."""
+    """Every function and ufunc has the same route here and in the tables; the arithmetic computes the elementary."""
     stated = {getattr(np, name): "exact" for name in EXACT.split()}
     stated |= {getattr(np, name): "rounded" for name in ROUNDED.split()}
     assert stated == ROUTES
     assert ROUTES.keys() == WAYS.keys()
+    assert {name.removeprefix("numpy."): row.route for name, row in ROWS.items()} == ROUTE_OF
+
+
+@pytest.mark.skipif(not NEWEST, reason="the tables are those of the newest NumPy that is supported")
+def test_every_function_and_ufunc_of_numpy_is_in_exactly_one_row():
+    """The rows are NumPy's own lists of what an array can override: nothing twice, nothing missing, nothing else."""
+    assert {name_of(function) for function in FUNCTIONS} == ROWS.keys()
+    names = [ufunc.__name__ for ufunc in ROUTES] + [*OTHERS, *INTEGERS, *NEITHER]
+    assert len(names) == len(set(names))
+    assert set(names) == {ufunc.__name__ for ufunc in UFUNCS}
+    assert len(ROWS) == len({name_of(function) for function in FUNCTIONS})
+
+
+def test_an_older_numpy_has_nothing_that_is_in_no_row():
+    """Every version that is supported is covered."""
+    assert {name_of(function) for function in FUNCTIONS} <= ROWS.keys()
+    assert {ufunc.__name__ for ufunc in UFUNCS} <= {
+        u.__name__ for u in ROUTES
+    } | OTHERS.keys() | INTEGERS | NEITHER.keys()
+
+
+def test_every_row_is_exercised():
+    """A row that is added has to be added to the calls; the refused ones are called by another test."""
+    assert CALLS.keys() == {name for name, row in ROWS.items() if row.route != "refused"}
+    assert UFUNC_CALLS.keys() == OTHERS.keys() | INTEGERS
+    assert set(REFUSED) == {name.removeprefix("numpy.") for name, row in ROWS.items() if row.route == "refused"}
+
+
+@pytest.mark.parametrize("name", CALLS)
+def test_every_function_agrees_with_numpy_and_stays_in_the_format(name):
+    """float64 gives NumPy's own result; narrower formats give values of the format; nothing is a fault."""
+    for call in CALLS[name]:
+        check(call)
+
+
+@pytest.mark.parametrize("name", UFUNC_CALLS)
+def test_every_other_ufunc_agrees_with_numpy_and_stays_in_the_format(name):
+    """As the functions, for those that are no elementary operation; a NumPy that lacks one has no test of it."""
+    if not hasattr(np, name):
+        pytest.skip(f"this NumPy has no {name}")
+    for call in UFUNC_CALLS[name]:
+        check(call)
+
+
+@pytest.mark.parametrize("call", METHODS)
+def test_methods_and_keywords_agree_with_numpy_and_stay_in_the_format(call):
+    """As the functions, for the methods of arrays and 0-d values and the methods and keywords of ufuncs."""
+    check(call)
+
+
+@pytest.mark.parametrize("function", FUNCTIONS, ids=name_of)
+def test_every_argument_is_handled_or_refused_by_name(function):
+    """The row names what NumPy's signature names, in its order; what is refused is refused in the stated words."""
+    row = row_for(function)
+    x = owned(VALUES, module_of("", "float16")[1])
+    if row.route == "refused":
+        with pytest.raises(RefusedError, match=" is refused: "):
+            functions.call_function(x._setting, function, (x,), {})
+        return
+    try:
+        parameters = inspect.signature(function).parameters.values()
+    except ValueError:  # a NumPy whose own code does not tell
+        parameters = None
+    if parameters is not None and NEWEST:
+        named = {one.name for one in parameters if one.kind is not one.VAR_KEYWORD}
+        assert named <= {*row.placed, *row.named, row.variadic}
+        if not any(one.kind is one.VAR_KEYWORD for one in parameters):
+            assert {*row.placed, *row.named, row.variadic} - {None} == named
+        assert row.placed == tuple(one.name for one in parameters if one.kind in (0, 1))
+    for name in row.refused | {"an_argument_of_the_future"}:
+        setting = x._setting
+        setting.faults.clear()
+        with pytest.raises(RefusedError, match=f"^{name}= of {row.shown} is not offered by this version$"):
+            functions.call_function(setting, function, (np.arange(3),), {name: 1})
+        assert len(setting.faults) == 1
+
+
+@pytest.mark.parametrize("name", NOT_OF_THE_STATE.split())
+def test_a_ufunc_of_dates_or_text_is_refused_with_its_reason(name):
+    """One call each; no integer ufunc computes on numbers of the state, in NumPy's own words."""
+    (ufunc,) = (ufunc for ufunc in UFUNCS if ufunc.__name__ == name)
+    x = owned(VALUES, module_of("", "float16")[1])
+    with pytest.raises(RefusedError, match=f"^np.{name} is refused: "):
+        ufuncs.call_ufunc(x._setting, ufunc, "__call__", (x,), {})
+    assert route_of(ufunc) == "refused"
+    with pytest.raises(TypeError, match="not supported for the input types"):
+        np.bitwise_and(x, 1)
+
+
+@pytest.mark.parametrize("name", ["numpy.sinc", "numpy.linalg.inv", "numpy.concatenate", "numpy.percentile"])
+def test_what_a_newer_numpy_adds_is_computed_whole_and_said_so(name, monkeypatch):
+    """A function that stands in no row is computed in float64, rounded once, and told the observer as `whole`."""
+    monkeypatch.delitem(ROWS, name)
+    plain, _ = run(CALLS[name][0], None)
+    ours, _ = run(CALLS[name][0], "float64")
+    assert same(plain, ours)
+    for form in NARROW:
+        log = Log()
+        result, setting = run(CALLS[name][0], form, log)
+        assert unheld(result, setting) == []
+        assert log.operations[-1] == (f"{name.removeprefix('numpy.')} (not known to this version)", "whole")
+
+
+@pytest.mark.parametrize("ufunc", [np.cbrt, np.hypot])
+def test_a_ufunc_that_a_newer_numpy_adds_is_computed_whole_and_said_so(ufunc, monkeypatch):
+    """As a function that stands in no row."""
+    monkeypatch.delitem(ROUTES, ufunc)
+    log = Log()
+    _, setting = module_of("", "float16", log)
+    x = owned(np.abs(VALUES), setting)
+    result = ufunc(*[x] * ufunc.nin)
+    expected = ufunc(*[np.abs(VALUES).astype(np.float16).astype(np.float64)] * ufunc.nin).astype(np.float16)
+    assert np.array_equal(result._carrier, expected)
+    assert log.operations == [(f"{ufunc.__name__} (not known to this version)", "whole")]
+    assert route_of(ufunc) == "whole"
 
 
 @pytest.mark.parametrize("form", NARROW)
@@ -145,43 +234,12 @@ def test_every_ufunc_is_rounded_once(ufunc, form):
     assert np.array_equal(result, expected)
 
 
-def test_every_function_has_a_call_here():
-    """A row that is added to the table has to be added to this test."""
-    assert CALLS.keys() == FUNCTIONS.keys()
-
-
-@pytest.mark.parametrize("function", FUNCTIONS, ids=lambda function: function.__name__)
-def test_every_function_agrees_with_numpy_and_stays_in_the_format(function):
-    """float64 gives NumPy's own result; narrower formats give values of the format; nothing is a fault."""
-    for arguments, keywords in CALLS[function]:
-        _, double = module_of("", "float64")
-        plain = function(*(put(argument, VALUES) for argument in arguments), **keywords)
-        ours = function(*(put(argument, owned(VALUES, double)) for argument in arguments), **keywords)
-        if function is np.empty_like:
-            plain[...] = np.nan  # what has not been written must be noticed when it is read
-        assert same(plain, ours)
-        for form in NARROW:
-            _, setting = module_of("", form)
-            x = owned(VALUES, setting)
-            result = function(*(put(argument, x) for argument in arguments), **keywords)
-            assert unheld(result, setting) == []
-            assert setting.faults == []
-
-
-@pytest.mark.parametrize("function", [*MOVED, *JOINED], ids=lambda function: function.__name__)
-def test_every_argument_of_a_row_is_handled_or_refused(function):
-    """What NumPy's signature names is what the row names, or a keyword that is refused by name."""
-    parameters = list(inspect.signature(function).parameters)[1:]
-    row = {**MOVED, **JOINED}[function].replace("|", " ").split()
-    refused = REFUSED.get(function, "").split()
-    assert not set(row) & set(refused)
-    known = set(row) | set(refused)
-    assert set(parameters) - {"newshape"} <= known  # an old name of reshape's `shape`
-    _, setting = module_of("", "float16")
-    first = owned(VALUES, setting)
-    for name in refused:
-        with pytest.raises(RefusedError, match=f"^{name}= of np.{function.__name__} is not offered by this version$"):
-            function(
-                [first] if function in JOINED else first, **({"indices": 0} if function is np.take else {}), **{name: 1}
-            )
-    assert len(setting.faults) == len(refused)
+def test_where_leaves_the_other_places_untouched():
+    """In a 16-bit format too: with out= they keep what they had, without it they are NaN, which nothing hides."""
+    result, setting = run("np.add(x, 0.3, out=np.full((2, 3), 7.0), where=m), np.sqrt(abs(x), where=m)", "float16")
+    kept, blank = result[:2]
+    chosen = VALUES > 0
+    assert (kept._carrier[~chosen] == 7).all()
+    assert np.array_equal(kept._carrier[chosen], (VALUES.astype(np.float16) + np.float16(0.3))[chosen])
+    assert np.array_equal(np.isnan(blank._carrier), ~chosen)
+    assert unheld([kept, blank], setting) == []

@@ -11,7 +11,7 @@ import pytest
 from kernel_runs import module_of, owned
 
 from narrowgauge.dispatch.array import Array
-from narrowgauge.dispatch.mask import Mask
+from narrowgauge.dispatch.exact import Exact
 from narrowgauge.dispatch.scalar import Scalar
 from narrowgauge.errors import RefusedError
 
@@ -62,7 +62,7 @@ def test_a_mask_passes_for_booleans(x):
     assert isinstance(m, np.ndarray)
     assert isinstance(m[0, 0], np.bool_)
     assert m.dtype == bool
-    assert type(m) is type(m[0, 0]) is Mask
+    assert type(m) is type(m[0, 0]) is Exact
 
 
 def test_equality_and_hash(x):
@@ -103,7 +103,7 @@ def test_copies_are_apart_and_of_the_same_run(x):
     m = x > 0
     for made in (copy.copy(m), copy.deepcopy(m)):
         made[0, 0] = False
-        assert type(made) is Mask
+        assert type(made) is Exact
     assert m[0, 0]
     flag = m[0, 0]
     assert copy.deepcopy(flag) == flag

@@ -1,7 +1,7 @@
 """The duck array: a carrier with one door in and one door out, not an ndarray subclass.
 
 `dtype` says float64 and `__class__` says np.ndarray, so that the kernel takes the decisions it takes today. Views
-share the carrier's memory as NumPy's do; booleans that come out of it are masks, integers plain arrays.
+share the carrier's memory as NumPy's do; booleans and integers that come out of it are exact values.
 """
 
 from __future__ import annotations
@@ -12,13 +12,13 @@ from typing import Any
 
 import numpy as np
 
-from narrowgauge.dispatch.mask import Mask, bare
+from narrowgauge.dispatch.exact import Exact, bare
 from narrowgauge.dispatch.routes import ROUTES
 from narrowgauge.dispatch.scalar import Scalar, State, plain_item, refuse_attribute
 from narrowgauge.dispatch.setting import Setting, Wrapped, holds
 from narrowgauge.errors import EscapeError, RefusedError
 
-__all__ = ["Array", "carrier_of", "wrap"]
+__all__ = ["Array", "as_state", "carrier_of", "stored", "wrap"]
 
 
 def _in_place(ufunc: np.ufunc, call: Callable[..., Any]) -> Callable[[Any, Any], Any]:
@@ -28,15 +28,6 @@ def _in_place(ufunc: np.ufunc, call: Callable[..., Any]) -> Callable[[Any, Any],
     def method(self: Array, other: Any) -> Any:
         done = self._setting.operate(ufunc, route, (self, other), out=self._carrier, call=call)
         return NotImplemented if done is NotImplemented else self
-
-    return method
-
-
-def _by_function(function: Callable[..., Any]) -> Callable[..., Any]:
-    """Return the method that is the same as a function of the table with the array in front."""
-
-    def method(self: Array, *arguments: Any, **keywords: Any) -> Any:
-        return self._setting.function(self._setting, function, (self, *arguments), keywords)
 
     return method
 
@@ -57,16 +48,9 @@ class Array(State):
     __imod__ = _in_place(np.remainder, operator.imod)
     __ipow__ = _in_place(np.power, operator.ipow)
 
-    all = _by_function(np.all)
-    any = _by_function(np.any)
-    max = _by_function(np.max)
-    min = _by_function(np.min)
-    nonzero = _by_function(np.nonzero)
-    ravel = _by_function(np.ravel)
-    repeat = _by_function(np.repeat)
-    squeeze = _by_function(np.squeeze)
-    swapaxes = _by_function(np.swapaxes)
-    take = _by_function(np.take)
+    def __imatmul__(self, other: Any) -> Any:
+        self[...] = self @ other
+        return self
 
     @property
     def shape(self) -> tuple[int, ...]:
@@ -111,7 +95,7 @@ class Array(State):
         return wrap(self._carrier[self._key(key)], self._setting)
 
     def __setitem__(self, key: Any, value: Any) -> None:
-        self._carrier[self._key(key)] = _stored(value, self._setting)
+        self._carrier[self._key(key)] = stored(value, self._setting)
 
     def __repr__(self) -> str:
         return f"{self._carrier!r} in {self._setting.arithmetic.format.name}"
@@ -132,7 +116,7 @@ class Array(State):
     def astype(
         self, dtype: Any, order: Any = "K", casting: Any = "unsafe", subok: bool = True, copy: bool = True
     ) -> Any:
-        """Return a copy for float64, plain integers, or a mask; other floats are refused."""
+        """Return a copy for float64, exact values for integers and booleans; other floats are refused."""
         if self._setting.float_dtype(dtype) is None:
             return wrap(self._carrier.astype(dtype, order=order, casting=casting, copy=copy), self._setting)
         return Array(self._carrier.astype(self._carrier.dtype, order=order, copy=copy), self._setting)
@@ -154,19 +138,26 @@ class Array(State):
         place_of_all = np.arange(self.size).reshape(self.shape)  # so that NumPy reads the place, and refuses it
         return wrap(plain_item(self._carrier.flat[place_of_all.item(*place)]), self._setting)
 
-    def clip(self, min: Any = None, max: Any = None, **keywords: Any) -> Any:
-        """Return the values cut to bounds, which are rounded as they meet the state."""
-        return self._setting.function(self._setting, np.clip, (self, min, max), keywords)
-
     def fill(self, value: Any) -> None:
         """Set every value."""
         self[...] = value
+
+    def sort(self, axis: Any = -1, kind: Any = None, order: Any = None, **keywords: Any) -> None:
+        """Sort in place."""
+        if order is not None:
+            raise self._setting.fault(RefusedError, "order= of .sort is not offered by this version")
+        self._carrier.sort(axis, kind, **keywords)
+
+    def partition(self, kth: Any, axis: Any = -1, kind: Any = "introselect") -> None:
+        """Partition in place."""
+        self._carrier.partition(bare(kth, self._setting), axis, kind)
 
     def __getattr__(self, name: str) -> Any:
         return refuse_attribute(self, name, np.ndarray)
 
     def _key(self, key: Any) -> Any:
-        if isinstance(key, (int, slice)):  # most of them
+        kind = type(key)
+        if kind is int or kind is slice:  # most of them
             return key
         if not holds(key, Wrapped):
             return key
@@ -176,15 +167,32 @@ class Array(State):
 
 
 def wrap(result: Any, setting: Setting) -> Any:
-    """Return a carrier as an array, a 0-d value or a mask; integers and anything else as they are."""
+    """Return a carrier as an array, a 0-d value or an exact value; lists and tuples item by item, the rest as it is."""
     if isinstance(result, np.ndarray):
         kind = result.dtype.kind
-        return Array(result, setting) if kind == "f" else Mask(result, setting) if kind == "b" else result
+        return Array(result, setting) if kind == "f" else Exact(result, setting) if kind in "biu" else result
     if isinstance(result, (float, np.floating)):
         return Scalar(result, setting)
-    if isinstance(result, (bool, np.bool_)):
-        return Mask(result, setting)
+    if isinstance(result, (int, np.integer, np.bool_)):
+        return Exact(result, setting)
+    if isinstance(result, (list, tuple)):
+        items = [wrap(item, setting) for item in result]
+        if isinstance(result, list):
+            return items
+        return result._make(items) if hasattr(result, "_make") else tuple(items)
     return result
+
+
+def as_state(value: Any, setting: Setting | None) -> Any:
+    """Return a parameter as the kernel gets it: a copy of a plain float array as an array of the state, rounded once.
+
+    A table that is indexed by places or masks of the state then gives numbers of the state. Numbers, integers and
+    anything else, and everything in plain NumPy (`setting` None), are returned as they are.
+    """
+    if setting is None or not isinstance(value, np.ndarray) or isinstance(value, Wrapped) or value.dtype.kind != "f":
+        return value
+    carrier = setting.admit(value)
+    return Array(value.copy("K") if carrier is value else carrier, setting)
 
 
 def carrier_of(value: Any, setting: Setting) -> Any:
@@ -199,7 +207,7 @@ def carrier_of(value: Any, setting: Setting) -> Any:
     return carrier
 
 
-def _stored(value: Any, setting: Setting) -> Any:
+def stored(value: Any, setting: Setting) -> Any:
     """Return the carrier of what is stored into a buffer; a plain float array is checked, never rounded silently."""
     if (
         isinstance(value, np.ndarray)

@@ -1,94 +1,103 @@
-"""Private copies: the kernel's code executed anew, with stand-ins for numpy and math under every spelling.
+"""Private copies: the kernel's code executed anew, with stand-ins for NumPy and its kin under every spelling.
 
 Nothing in the user's modules or in sys.modules changes, so there is nothing to restore: an alias, a star import, an
 import inside a function, a default argument or a table of functions all meet the stand-ins, because they are made
-while the copy is executed. In this version the kernel's own module is copied; modules beside it are refused.
+while the copy is executed. The listed modules are copied along, one set of copies for each setting.
 """
 
 from __future__ import annotations
 
 import builtins
-import importlib
+import enum
 import math
 import random
-import sys
-import sysconfig
-from collections.abc import Callable, Mapping
-from pathlib import Path
-from types import CellType, CodeType, FunctionType, ModuleType
+from collections.abc import Callable
+from types import CellType, CodeType, FunctionType, MethodType, ModuleType
 from typing import Any
 
 import numpy as np
 
 from narrowgauge.arithmetic.arithmetic import Arithmetic
 from narrowgauge.dispatch.array import Array, wrap
+from narrowgauge.dispatch.compiled import exchanged_compiled, is_compiled
+from narrowgauge.dispatch.feed import Feed
+from narrowgauge.dispatch.foreign import exchanged
 from narrowgauge.dispatch.functions import call_function
+from narrowgauge.dispatch.importing import Copies
+from narrowgauge.dispatch.modules import STOOD_IN, Sources
+from narrowgauge.dispatch.randoms import adopted
 from narrowgauge.dispatch.setting import Observer, Setting
-from narrowgauge.dispatch.standin import (
-    builtins_namespace,
-    dataclasses_namespace,
-    math_namespace,
-    numpy_namespace,
-    refusing_generator,
-    refusing_namespace,
-)
+from narrowgauge.dispatch.standin import refusing_generator
 from narrowgauge.dispatch.ufuncs import call_ufunc
-from narrowgauge.errors import KernelError, RefusedError
+from narrowgauge.errors import KernelError
 
 __all__ = ["PrivateCopy", "copy_function", "copy_module", "new_setting"]
 
-_RANDOM_MODULES = ("random", "secrets")
-_INSTALLED = frozenset(sysconfig.get_paths().values())
 _GENERATORS = (np.random.Generator, np.random.RandomState, np.random.BitGenerator, random.Random)
 
 
 class PrivateCopy:
-    """A function of a private copy with the setting that its operations go through; None for plain NumPy."""
+    """A function of a private copy with the setting that its operations go through; None for plain NumPy.
 
-    __slots__ = ("function", "setting")
+    `copies` is the set of copies that it belongs to; None for a function that runs as it was handed over.
+    """
 
-    def __init__(self, function: Callable[..., Any], setting: Setting | None) -> None:
+    __slots__ = ("copies", "function", "setting")
+
+    def __init__(self, function: Callable[..., Any], setting: Setting | None, copies: Copies | None = None) -> None:
         self.function = function
         self.setting = setting
+        self.copies = copies
+
+    @property
+    def shared(self) -> tuple[str, ...]:
+        """The modules that were imported for real up to now because they are listed as shared."""
+        return () if self.copies is None else tuple(sorted(self.copies.shared))
+
+    @property
+    def compiled(self) -> tuple[str, ...]:
+        """The functions whose Python original has stood in up to now for what numba makes of it."""
+        return () if self.copies is None else tuple(sorted(self.copies.compiled))
 
     def own(self, draws: np.ndarray[Any, Any]) -> Any:
         """Return draws, already rounded carriers, as the kernel's first argument; not copied."""
         return draws if self.setting is None else Array(draws, self.setting)
 
 
-def new_setting(arithmetic: Arithmetic, observer: Observer | None = None) -> Setting:
-    """Return a setting for one run, with no user file in it yet."""
-    return Setting(arithmetic, files=set(), wrap=wrap, ufunc=call_ufunc, function=call_function, observer=observer)
+def new_setting(arithmetic: Arithmetic, observer: Observer | None = None, draws: Feed | None = None) -> Setting:
+    """Return a setting for one run, with no user file in it yet; `draws` is what its numpy.random draws from."""
+    made = Setting(arithmetic, files=set(), wrap=wrap, ufunc=call_ufunc, function=call_function, observer=observer)
+    if draws is not None:
+        made.draws, draws.setting = draws, made
+    return made
 
 
 def copy_module(code: CodeType, name: str, setting: Setting | None) -> ModuleType:
-    """Execute a compiled module anew in a namespace of its own; under stand-ins unless `setting` is None.
+    """Execute a compiled module that lists no other one; under stand-ins unless `setting` is None.
 
     Raises whatever the module raises.
     """
-    file = code.co_filename
-    module = ModuleType(name)
-    module.__file__ = file
-    standins = {} if setting is None else _standins(setting)
-    standins["dataclasses"] = dataclasses_namespace(module.__dict__)
-    package = name.partition(".")[0] if "." in name else None
-    importer = _importer(setting, standins, Path(file).parent, package)
-    module.__dict__["__builtins__"] = _builtins(setting, standins, importer)
-    if setting is not None:
-        setting.files.add(file)
-    exec(code, module.__dict__)
+    module: ModuleType = Copies(setting, Sources.alone(code, name)).load(name)
     return module
 
 
-def copy_function(function: Callable[..., Any], setting: Setting) -> Callable[..., Any]:
+def copy_function(
+    function: Callable[..., Any], setting: Setting | None, copies: Copies | None = None
+) -> Callable[..., Any]:
     """Return a copy of a Python function with new globals, defaults and closure cells under stand-ins.
 
     Functions of the same module that it reaches are copied along, and so are the lists, dictionaries, sets and arrays
-    of numbers that it reaches; other values are shared. Raises KernelError for what is not a plain Python function.
+    of numbers that it reaches; modules, functions, classes and objects of listed modules are exchanged for those of
+    `copies`; other values are shared. A function at the top level of a listed module is the one of its copy.
+    Raises KernelError for what is not a plain Python function.
     """
     if not isinstance(function, FunctionType):
         raise KernelError(f"{function!r} is not a Python function; accepted: a function defined with def")
-    return _FunctionCopies(function.__globals__, setting).copied(function)
+    copies = copies or Copies(setting, Sources())
+    found = copies.counterpart(function)
+    if isinstance(found, FunctionType):
+        return found
+    return _FunctionCopies(function.__globals__, setting, copies).copied(function)
 
 
 class _FunctionCopies:
@@ -97,13 +106,13 @@ class _FunctionCopies:
     `_known` holds what was exchanged by identity, each with the original, which must live as long as its id is used.
     """
 
-    def __init__(self, home: dict[str, Any], setting: Setting) -> None:
+    def __init__(self, home: dict[str, Any], setting: Setting | None, copies: Copies) -> None:
         self._home = home
         self._setting = setting
-        self._standins = _standins(setting)
+        self._copies = copies
         self._known: dict[int, tuple[Any, Any]] = {}
-        importer = _importer(setting, self._standins, None, None)
-        self._names = {**home, "__builtins__": _builtins(setting, self._standins, importer)}
+        self._names = dict(home)
+        self._names["__builtins__"] = copies.builtins(self._names)
         self._reached = {"__builtins__"}
 
     def copied(self, source: FunctionType) -> FunctionType:
@@ -113,7 +122,8 @@ class _FunctionCopies:
         cells = None if closure is None else tuple(self._cell(cell) for cell in closure)
         made = FunctionType(source.__code__, self._names, source.__name__, None, cells)
         self._known[id(source)] = source, made
-        self._setting.files.add(source.__code__.co_filename)
+        if self._setting is not None:
+            self._setting.files.add(source.__code__.co_filename)
         for name in _names(source.__code__) & (self._home.keys() - self._reached):
             self._reached.add(name)
             self._names[name] = self._exchanged(self._home[name])
@@ -153,7 +163,40 @@ class _FunctionCopies:
             return made
         if type(value) is tuple:
             return tuple(map(self._exchanged, value))
-        return _standin_of(value, self._standins, self._setting)
+        if is_compiled(value):
+            original = value.py_func
+            if original.__globals__ is self._home:
+                self._copies.compiled.add(f"{original.__module__}.{original.__qualname__}")
+                return self.copied(original)
+            return exchanged_compiled(value, self._setting, self._copies.counterpart)
+        if isinstance(value, MethodType):
+            owner = self._exchanged(value.__self__)
+            return value if owner is value.__self__ else getattr(owner, value.__name__)
+        made = self._object(value)
+        return _standin_of(value, self._copies, self._setting) if made is None else made
+
+    def _object(self, value: Any) -> Any:
+        """Return what stands in the copies for a function, class or object of a listed module; None for others."""
+        if isinstance(value, (type, FunctionType)):
+            return self._copies.counterpart(value)
+        kind = self._copies.counterpart(type(value))
+        if kind is None:
+            return None
+        if isinstance(value, enum.Enum):
+            return kind[value.name]
+        base: Any = next((base for base in (tuple, list, dict) if isinstance(value, base)), object)
+        try:
+            made = base.__new__(kind, map(self._exchanged, value)) if base is tuple else base.__new__(kind)
+        except TypeError:  # an object that only its own type can make
+            return None
+        self._known[id(value)] = value, made  # before its attributes, which may lead back to it
+        if base is list:
+            list.extend(made, map(self._exchanged, value))
+        elif base is dict:
+            dict.update(made, {key: self._exchanged(item) for key, item in value.items()})
+        for name, item in _attributes(value).items():
+            object.__setattr__(made, name, self._exchanged(item))
+        return made
 
 
 def _container(value: Any) -> Any:
@@ -174,87 +217,40 @@ def _names(code: CodeType) -> set[str]:
     return found
 
 
-def _standin_of(value: Any, standins: Mapping[str, ModuleType], setting: Setting) -> Any:
+def _attributes(value: Any) -> dict[str, Any]:
+    """Return the attributes of an object by name, those in slots included."""
+    slots = [name for base in type(value).__mro__ for name in _slots(base) if hasattr(value, name)]
+    return {name: getattr(value, name) for name in slots} | getattr(value, "__dict__", {})
+
+
+def _slots(base: type) -> tuple[str, ...]:
+    named = vars(base).get("__slots__", ())
+    names = (named,) if isinstance(named, str) else tuple(named)
+    return tuple(name for name in names if not name.startswith("__"))
+
+
+def _standin_of(value: Any, copies: Copies, setting: Setting | None) -> Any:
     """Return the stand-in of a module, of one of its functions or of a generator, or the value itself."""
+    drawn = None if copies.draws is None else adopted(value, copies.draws)
+    if drawn is not None:
+        return drawn
     if isinstance(value, ModuleType):
-        if value.__name__ in _RANDOM_MODULES:
-            return refusing_namespace(value.__name__, setting)
-        return standins.get(value.__name__, value)
+        module = value.__name__
+        if copies.sources.copies(module):
+            return copies.load(module)
+        known = copies.stand_in(module) if module.partition(".")[0] in STOOD_IN - {"sys"} else None
+        return value if known is None else known
+    if setting is None:
+        return value
     if isinstance(value, _GENERATORS):
         return refusing_generator(type(value).__name__, setting)
     name = getattr(value, "__name__", None)
     if not isinstance(name, str) or isinstance(value, (type, np.ufunc)):
-        return value
+        return exchanged(value, setting)
     owner = getattr(value, "__self__", None)
     if isinstance(owner, _GENERATORS):
         return refusing_generator(f"{type(owner).__name__}.{name}", setting)
-    for module in (np, np.random, math, builtins):
-        if getattr(module, name, None) is value:
-            return getattr(standins[module.__name__], name)
-    return value
-
-
-def _standins(setting: Setting) -> dict[str, ModuleType]:
-    numpy = numpy_namespace(setting)
-    return {
-        "numpy": numpy,
-        "numpy.random": numpy.random,
-        "math": math_namespace(setting),
-        "builtins": builtins_namespace(setting),
-    }
-
-
-def _builtins(
-    setting: Setting | None, standins: Mapping[str, ModuleType], importer: Callable[..., Any]
-) -> dict[str, Any]:
-    """Return the `__builtins__` of a private copy."""
-    changed = {} if setting is None else {name: getattr(standins["builtins"], name) for name in ("max", "min")}
-    return {**vars(builtins), **changed, "__import__": importer}
-
-
-def _importer(
-    setting: Setting | None, standins: Mapping[str, ModuleType], folder: Path | None, package: str | None
-) -> Callable[..., Any]:
-    """Return the `__import__` of a private copy that lies in `folder` and belongs to `package`, if any."""
-
-    def hand_out(
-        name: str,
-        globals: Mapping[str, Any] | None = None,
-        locals: Mapping[str, Any] | None = None,
-        fromlist: tuple[str, ...] | None = (),
-        level: int = 0,
-    ) -> Any:
-        top = name.partition(".")[0]
-        if level == 0 and top in standins:
-            importlib.import_module(name)  # its own error where there is no such module
-            if not fromlist:
-                return standins[top]
-            return standins.get(name) or _inside(standins[top], name)
-        if level or top == package or (folder is not None and _beside(folder, top)):
-            raise _refused_module("." * level + name, setting)
-        if setting is not None and name in _RANDOM_MODULES:
-            return refusing_namespace(name, setting)
-        return builtins.__import__(name, globals, locals, fromlist or (), level)
-
-    return hand_out
-
-
-def _inside(module: Any, name: str) -> Any:
-    for part in name.split(".")[1:]:
-        module = getattr(module, part)
-    return module
-
-
-def _beside(folder: Path, name: str) -> bool:
-    """Whether a module of that name lies in the kernel's folder; what is installed there is not the user's."""
-    if name == "numpy" or name in sys.stdlib_module_names or str(folder) in _INSTALLED:
-        return False
-    return (folder / f"{name}.py").is_file() or (folder / name / "__init__.py").is_file()
-
-
-def _refused_module(name: str, setting: Setting | None) -> Exception:
-    message = (
-        f"the kernel's module imports {name}, which lies beside it; in this version the kernel is one module: "
-        "its NumPy would not be rounded. Accepted: put what the kernel needs into its own file"
-    )
-    return KernelError(message) if setting is None else setting.fault(RefusedError, message)
+    for home in (np, np.random, math, builtins):
+        if getattr(home, name, None) is value:
+            return getattr(copies.stand_in(home.__name__), name)
+    return exchanged(value, setting)

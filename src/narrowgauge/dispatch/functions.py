@@ -1,207 +1,196 @@
-"""NumPy's other functions on the state, a row each; what has no row is refused by name.
+"""NumPy's other functions on the state: every call goes by its row in tables.py, or by none and is then `whole`.
 
-Contract of the groups, stated once. `MOVED` takes one array first and moves or selects its values; `JOINED` takes a
-sequence of arrays first. Their rows name the further arguments that are handled: those before the bar also by place,
-every other one is refused by name. The rest are handlers of their own: (setting, arguments, keywords) -> result.
+Where no argument of the state is given, but integers or booleans of it are, NumPy's own function runs on them: what it
+gives stays exact, and floats among it are rounded once. Plain numbers beside the state are constants of the format.
 """
 
 from __future__ import annotations
 
 import operator
 from collections.abc import Callable, Sequence
+from functools import cache
 from typing import Any
 
 import numpy as np
 
-from narrowgauge.dispatch.array import Array, carrier_of, wrap
-from narrowgauge.dispatch.mask import bare, is_exact, settled
+from narrowgauge.dispatch.array import Array, carrier_of, stored, wrap
+from narrowgauge.dispatch.exact import Exact, bare, is_exact, settled
+from narrowgauge.dispatch.reductions import ACCUMULATED, once
+from narrowgauge.dispatch.rows import Row, all_exact, bound, carried, delivered, finished, narrowed, unwrapped, widened
 from narrowgauge.dispatch.scalar import State
-from narrowgauge.dispatch.setting import Setting, holds
-from narrowgauge.errors import RefusedError
+from narrowgauge.dispatch.setting import Number, Setting, Wrapped, holds
+from narrowgauge.dispatch.tables import ABOUT, ROWS, WRITING
+from narrowgauge.errors import EscapeError, RefusedError
 
-__all__ = ["FUNCTIONS", "JOINED", "MOVED", "call_function"]
+__all__ = ["call_function", "row_for"]
 
-MOVED: dict[Callable[..., Any], str] = {
-    np.all: "axis | keepdims",
-    np.amax: "axis | keepdims",
-    np.amin: "axis | keepdims",
-    np.any: "axis | keepdims",
-    np.array_split: "indices_or_sections axis",
-    np.atleast_1d: "",
-    np.atleast_2d: "",
-    np.broadcast_to: "shape subok",
-    np.copy: "order subok",
-    np.count_nonzero: "axis | keepdims",
-    np.expand_dims: "axis",
-    np.flatnonzero: "",
-    np.flip: "axis",
-    np.max: "axis | keepdims",
-    np.min: "axis | keepdims",
-    np.moveaxis: "source destination",
-    np.ndim: "",
-    np.nonzero: "",
-    np.ravel: "order",
-    np.real: "",
-    np.repeat: "repeats axis",
-    np.reshape: "shape order | copy",
-    np.roll: "shift axis",
-    np.shape: "",
-    np.size: "axis",
-    np.split: "indices_or_sections axis",
-    np.squeeze: "axis",
-    np.swapaxes: "axis1 axis2",
-    np.take: "indices axis | mode",
-    np.tile: "reps",
-    np.transpose: "axes",
-}
-JOINED: dict[Callable[..., Any], str] = {
-    np.column_stack: "",
-    np.concatenate: "axis",
-    np.hstack: "",
-    np.stack: "axis",
-    np.vstack: "",
-}
+Handler = Callable[[Setting, Callable[..., Any], Row, dict[str, Any]], Any]
+_PADS = ("constant", "edge", "maximum", "minimum", "reflect", "symmetric", "wrap")
 
-Handler = Callable[[Setting, Sequence[Any], dict[str, Any]], Any]
+
+@cache
+def _name_of(function: Callable[..., Any]) -> str:
+    return f"{function.__module__}.{function.__name__}"
+
+
+def row_for(function: Callable[..., Any]) -> Row | None:
+    """Return the row of one of NumPy's functions, or None for one that this version does not know."""
+    return ROWS.get(_name_of(function))
 
 
 def call_function(
     setting: Setting, function: Callable[..., Any], arguments: Sequence[Any], keywords: dict[str, Any]
 ) -> Any:
-    """Run one NumPy function on the state by its row; RefusedError names a function that has none.
+    """Run one NumPy function on the state by its row; one without a row is computed in float64 and rounded once.
 
-    A function of masks alone runs as it is if booleans or integers come out.
+    RefusedError for a function or an argument that is refused by name; EscapeError where it would write into a plain
+    array.
     """
-    handler = FUNCTIONS.get(function)
-    if handler is not None:
-        return handler(setting, arguments, keywords)
-    name = f"{function.__module__}.{function.__name__}".replace("numpy", "np", 1)
-    if holds([*arguments, keywords], State):
-        raise setting.fault(RefusedError, f"{name} is in no route of this version, so that it cannot be rounded")
-    return settled(function(*bare(list(arguments), setting), **bare(keywords, setting)), name, setting)
+    row = row_for(function)
+    if row is None:
+        return _unknown(setting, function, arguments, keywords)
+    if row.reason:
+        raise setting.fault(RefusedError, f"{row.shown} is refused: {row.reason}")
+    given = bound(setting, row, arguments, keywords)
+    out = given.pop("out", None)
+    if out is not None and not isinstance(out[0] if isinstance(out, tuple) else out, Wrapped):
+        raise setting.fault(EscapeError, f"out= of {row.shown} is a plain array; accepted: an array of the state")
+    handler = _HANDLERS.get(row.name) or ACCUMULATED.get(row.name)
+    own = [given[name] for name in (*row.placed, *row.named, row.variadic) if name in row.state and name in given]
+    if row.variadic:
+        own.append(given[row.variadic])
+    if not holds(own, State) and row.name not in _FOR_ITSELF and all_exact(own, setting):
+        result = _among_exact(setting, function, row, given)
+    else:
+        if row.name not in _FOR_ITSELF:
+            _float64(setting, row, given.pop("dtype", None))
+        result = (handler or (_moved if row.route == "exact" else once))(setting, function, row, given)
+    return delivered(setting, row.shown, out, result)
 
 
-def _further(
-    setting: Setting, function: Callable[..., Any], row: str, further: Sequence[Any], keywords: dict[str, Any]
-) -> dict[str, Any]:
-    """Return the arguments after the first by name; refuse what the row does not name, and values of the state."""
-    placed, _, named = row.partition("|")
-    names = placed.split()
-    if len(further) > len(names):
+def _unknown(setting: Setting, function: Callable[..., Any], arguments: Sequence[Any], keywords: dict[str, Any]) -> Any:
+    """Compute what a newer NumPy has added: numbers of the state in float64, rounded once, and said so."""
+    name = _name_of(function).partition(".")[2]
+    if keywords.get("out") is not None:
+        raise setting.fault(RefusedError, f"out= of np.{name} is not offered by this version")
+    own = [_opened(argument, setting) for argument in arguments]
+    result = function(*own, **{key: _opened(value, setting) for key, value in keywords.items()})
+    result = narrowed(setting, result, f"np.{name}")
+    return finished(setting, f"{name} (not known to this version)", "whole", own, result)
+
+
+def _opened(value: Any, setting: Setting) -> Any:
+    """Return numbers of the state and float constants beside them in float64, everything else as plain code has it."""
+    if isinstance(value, (list, tuple)):
+        items = [_opened(item, setting) for item in value]
+        return items if isinstance(value, list) else tuple(items)
+    if isinstance(value, (Number, float)) or (type(value) is np.ndarray and value.dtype.kind == "f"):
+        return widened(value, setting)
+    return bare(value, setting)
+
+
+def _float64(setting: Setting, row: Row, dtype: Any) -> None:
+    if setting.float_dtype(dtype) is None:
+        wanted = np.dtype(dtype)
+        raise setting.fault(RefusedError, f"dtype={wanted} of {row.shown} on the state; accepted: float64 or none")
+
+
+def _among_exact(setting: Setting, function: Callable[..., Any], row: Row, given: dict[str, Any]) -> Any:
+    """Run a function of booleans and integers as plain code does; numbers among what it gives are rounded once."""
+    own = {name: bare(value, setting) for name, value in given.items()}
+    result = row.call(function, own)
+    if row.name in ABOUT:
+        return result
+    if not _doubles(result):
+        return settled(result, row.shown, setting)
+    return finished(setting, row.short, "whole", list(own.values()), narrowed(setting, result, row.shown))
+
+
+def _doubles(result: Any) -> bool:
+    if isinstance(result, (list, tuple)):
+        return any(map(_doubles, result))
+    return isinstance(result, float) or getattr(result, "dtype", None) == np.float64
+
+
+def _moved(setting: Setting, function: Callable[..., Any], row: Row, given: dict[str, Any]) -> Any:
+    """Move, select or compare carriers; constants are rounded to the format before."""
+    own = {
+        name: carried(value, setting) if name in row.state or name == row.variadic else bare(value, setting)
+        for name, value in given.items()
+    }
+    return wrap(row.call(function, own), setting)
+
+
+def _about(setting: Setting, function: Callable[..., Any], row: Row, given: dict[str, Any]) -> Any:
+    """Tell what plain code would see: the memory of the carriers, otherwise float64."""
+    see = unwrapped if function in (np.may_share_memory, np.shares_memory, np.shape, np.size, np.ndim) else _opened
+    return row.call(function, {name: see(value, setting) for name, value in given.items()})
+
+
+def _written(setting: Setting, function: Callable[..., Any], row: Row, given: dict[str, Any]) -> Any:
+    """Write into the first argument; a plain float array is checked, as in a store."""
+    target = given[row.placed[0]]
+    if not isinstance(target, (Array, Exact)):
         raise setting.fault(
-            RefusedError,
-            f"np.{function.__name__} takes {len(names)} arguments after the state by place in this version",
+            EscapeError,
+            f"{row.shown} writes into a plain array what depends on the state; "
+            "accepted: values[mask] = value on an array that the kernel's own module makes",
         )
-    given = dict(zip(names, further, strict=False))
-    for name, value in keywords.items():
-        if name in names or name in named.split():
-            given[name] = value
-        elif value is not None:
-            raise setting.fault(RefusedError, f"{name}= of np.{function.__name__} is not offered by this version")
-    if holds(given, State):
-        raise setting.fault(
-            RefusedError,
-            f"np.{function.__name__} takes the state as its first argument only in this version",
-        )
-    return {name: bare(value, setting) for name, value in given.items()}
+    own = {name: bare(value, setting) for name, value in given.items()}
+    for name in row.state & given.keys():
+        value = given[name]
+        own[name] = stored(value, setting) if isinstance(target, Array) else unwrapped(value, setting)
+    own[row.placed[0]] = setting.carrier(target)
+    return row.call(function, own)
 
 
-def _moved(function: Callable[..., Any], row: str) -> Handler:
-    def handler(setting: Setting, arguments: Sequence[Any], keywords: dict[str, Any]) -> Any:
-        given = _further(setting, function, row, arguments[1:], keywords)
-        if not arguments or not holds(arguments[0], State):
-            plain = function(*bare(list(arguments[:1]), setting), **given)
-            return settled(plain, f"np.{function.__name__}", setting)
-        result = function(carrier_of(arguments[0], setting), **given)
-        if isinstance(result, (list, tuple)):
-            return type(result)(wrap(part, setting) for part in result)
-        return wrap(result, setting)
-
-    return handler
-
-
-def _joined(function: Callable[..., Any], row: str) -> Handler:
-    def handler(setting: Setting, arguments: Sequence[Any], keywords: dict[str, Any]) -> Any:
-        given = _further(setting, function, row, arguments[1:], keywords)
-        parts = list(arguments[0]) if arguments else []
-        if not holds(parts, State) and all(is_exact(part, setting) for part in parts):
-            return wrap(function(bare(parts, setting), **given), setting)
-        carrier = setting.arithmetic.format.carrier
-        joined = function([np.asarray(carrier_of(part, setting), carrier) for part in parts], **given)
-        return wrap(joined, setting)
-
-    return handler
+def _like(setting: Setting, function: Callable[..., Any], row: Row, given: dict[str, Any]) -> Any:
+    model = given.pop(row.placed[0])
+    dtype = given.pop("dtype", None)
+    value = given.pop("fill_value", None)
+    floats = not is_exact(model, setting)
+    source = np.asarray(carrier_of(model, setting) if holds(model, State) else bare(model, setting))
+    if (dtype is None and not floats) or (dtype is not None and setting.float_dtype(dtype) is None):
+        filling = (bare(value, setting),) if function is np.full_like else ()
+        return wrap(function(source, *filling, dtype=dtype, **given), setting)
+    filling = (carrier_of(value, setting),) if function is np.full_like else ()
+    made = function(source, *filling, dtype=setting.arithmetic.format.carrier, **given)
+    if function is np.empty_like:
+        made.fill(np.nan)  # what is read before it is written must not pass for a value of the format
+    return Array(made, setting)
 
 
-def _like(function: Callable[..., Any], fills: bool) -> Handler:
-    def handler(setting: Setting, arguments: Sequence[Any], keywords: dict[str, Any]) -> Any:
-        model, *rest = arguments
-        given = dict(keywords)
-        value = given.pop("fill_value") if fills and not rest else rest.pop(0) if fills else None
-        given |= zip(("dtype", "order", "subok", "shape"), rest, strict=False)
-        unknown = set(given) - {"dtype", "order", "subok", "shape"}
-        if unknown:
-            raise setting.fault(
-                RefusedError, f"{min(unknown)}= of np.{function.__name__} is not offered by this version"
-            )
-        dtype = given.pop("dtype", None)
-        floats = holds(model, State) or not is_exact(model, setting)
-        source = np.asarray(carrier_of(model, setting) if holds(model, State) else bare(model, setting))
-        if (dtype is None and not floats) or (dtype is not None and setting.float_dtype(dtype) is None):
-            filling = (bare(value, setting),) if fills else ()
-            return wrap(function(source, *filling, dtype=dtype, **given), setting)
-        filling = (carrier_of(value, setting),) if fills else ()
-        made = function(source, *filling, dtype=setting.arithmetic.format.carrier, **given)
-        if function is np.empty_like:
-            made.fill(np.nan)  # what is read before it is written must not pass for a value of the format
-        return Array(made, setting)
-
-    return handler
-
-
-def _where(setting: Setting, arguments: Sequence[Any], keywords: dict[str, Any]) -> Any:
-    if keywords:
-        raise setting.fault(RefusedError, f"{next(iter(keywords))}= of np.where is not offered by this version")
-    condition, *values = arguments
+def _where(setting: Setting, function: Callable[..., Any], row: Row, given: dict[str, Any]) -> Any:
+    condition, *values = (given[name] for name in row.placed if name in given)
     # a plain condition is not rounded: 1e-30 is true in every format
     chooser = carrier_of(condition, setting) if holds(condition, State) else bare(condition, setting)
-    if not holds(values, State) and all(is_exact(value, setting) for value in values):
+    if all(is_exact(value, setting) for value in values):
         return wrap(np.where(chooser, *bare(values, setting)), setting)
     carrier = setting.arithmetic.format.carrier
     return wrap(np.where(chooser, *(np.asarray(carrier_of(value, setting), carrier) for value in values)), setting)
 
 
-def _clip(setting: Setting, arguments: Sequence[Any], keywords: dict[str, Any]) -> Any:
-    value, *placed = arguments
-    given = dict(zip(("a_min", "a_max", "out"), placed, strict=False)) | keywords
-    bounds: dict[str, Any] = {
-        name: None if bound is None else carrier_of(bound, setting)
-        for name, bound in given.items()
-        if name in ("a_min", "a_max", "min", "max")
-    }
-    for name in given.keys() - bounds.keys():
-        if given[name] is not None:
-            raise setting.fault(RefusedError, f"{name}= of np.clip is not offered by this version")
-    carrier = carrier_of(value, setting)
-    if not isinstance(value, State):
-        carrier = np.asarray(carrier, setting.arithmetic.format.carrier)
-    result = np.clip(carrier, **bounds)
-    setting.note("clip", "exact", (carrier, *bounds.values()), result)
-    return wrap(result, setting)
+def _clip(setting: Setting, function: Callable[..., Any], row: Row, given: dict[str, Any]) -> Any:
+    result = _moved(setting, function, row, given)
+    setting.note("clip", "exact", [carried(value, setting) for value in given.values()], setting.carrier(result))
+    return result
 
 
-def _diff(setting: Setting, arguments: Sequence[Any], keywords: dict[str, Any]) -> Any:
-    value, *placed = arguments
-    given = dict(zip(("n", "axis"), placed, strict=False)) | keywords
-    unknown = set(given) - {"n", "axis"}
-    if not holds([*arguments, keywords], State):
-        return settled(np.diff(*bare(list(arguments), setting), **bare(keywords, setting)), "np.diff", setting)
-    if unknown or not isinstance(value, Array):
-        what = f"{min(unknown)}= of np.diff" if unknown else "np.diff of anything but an array of the state"
-        raise setting.fault(RefusedError, f"{what} is not offered by this version")
-    axis, times = operator.index(given.get("axis", -1)), operator.index(given.get("n", 1))
+def _diff(setting: Setting, function: Callable[..., Any], row: Row, given: dict[str, Any]) -> Any:
+    """Subtract neighbours, `n` times: each time one rounded operation, as the observer sees it."""
+    value = wrap(np.asarray(carried(given["a"], setting)), setting)
+    times = operator.index(given.get("n", 1))
     if times < 0:
         raise ValueError(f"order must be non-negative but got {times}")  # as NumPy
+    if value.ndim == 0:
+        raise ValueError("diff requires input that is at least one dimensional")
+    axis = operator.index(given.get("axis", -1))
+    ends = [np.asarray(carried(given[name], setting)) if name in given else None for name in ("prepend", "append")]
+    if times and any(end is not None for end in ends):
+        shape = [1 if place == axis % value.ndim else size for place, size in enumerate(value.shape)]
+        first, last = (end if end is None or end.ndim else np.broadcast_to(end, shape) for end in ends)
+        parts = [part for part in (first, setting.carrier(value), last) if part is not None]
+        value = wrap(np.concatenate(parts, axis), setting)
     later: list[Any] = [slice(None)] * value.ndim
     earlier = list(later)
     later[axis], earlier[axis] = slice(1, None), slice(None, -1)
@@ -210,12 +199,36 @@ def _diff(setting: Setting, arguments: Sequence[Any], keywords: dict[str, Any]) 
     return value
 
 
-FUNCTIONS: dict[Callable[..., Any], Handler] = {
-    **{function: _moved(function, row) for function, row in MOVED.items()},
-    **{function: _joined(function, row) for function, row in JOINED.items()},
-    **{function: _like(function, fills=False) for function in (np.empty_like, np.ones_like, np.zeros_like)},
-    np.full_like: _like(np.full_like, fills=True),
-    np.where: _where,
-    np.clip: _clip,
-    np.diff: _diff,
+def _astype(setting: Setting, function: Callable[..., Any], row: Row, given: dict[str, Any]) -> Any:
+    return given["x"].astype(given["dtype"], copy=given.get("copy", True))
+
+
+def _pad(setting: Setting, function: Callable[..., Any], row: Row, given: dict[str, Any]) -> Any:
+    mode = given.get("mode", "constant")
+    if mode not in _PADS:
+        raise setting.fault(RefusedError, f"mode={mode!r} of np.pad is not offered; accepted: {', '.join(_PADS)}")
+    return _moved(setting, function, row, given)
+
+
+def _nan_to_num(setting: Setting, function: Callable[..., Any], row: Row, given: dict[str, Any]) -> Any:
+    largest = setting.arithmetic.format.max_finite
+    return _moved(setting, function, row, {"posinf": largest, "neginf": -largest, **given})
+
+
+_HANDLERS: dict[str, Handler] = {
+    **dict.fromkeys(ABOUT, _about),
+    **dict.fromkeys(WRITING, _written),
+    **{f"numpy.{name}_like": _like for name in ("empty", "full", "ones", "zeros")},
+    "numpy.astype": _astype,
+    "numpy.clip": _clip,
+    "numpy.diff": _diff,
+    "numpy.nan_to_num": _nan_to_num,
+    "numpy.pad": _pad,
+    "numpy.where": _where,
+}
+# they tell by themselves what is exact, or take integers of the state for what they are
+_FOR_ITSELF = WRITING | {
+    "numpy.astype",
+    "numpy.where",
+    *(f"numpy.{name}_like" for name in ("empty", "full", "ones", "zeros")),
 }

@@ -12,8 +12,9 @@ from typing import Any
 
 import numpy as np
 
+from narrowgauge.dispatch.exact import taken_out
 from narrowgauge.dispatch.routes import ROUTES
-from narrowgauge.dispatch.setting import Wrapped
+from narrowgauge.dispatch.setting import Number, Wrapped
 from narrowgauge.errors import EscapeError, RefusedError
 
 __all__ = ["Scalar", "State", "plain_item", "refuse_attribute"]
@@ -49,7 +50,16 @@ def _unary(ufunc: np.ufunc, call: Callable[..., Any]) -> Callable[[Any], Any]:
     return method
 
 
-class State(Wrapped):
+def _by_function(function: Callable[..., Any]) -> Callable[..., Any]:
+    """Return the method that is the same as a function of the table with the value in front."""
+
+    def method(self: Wrapped, *arguments: Any, **keywords: Any) -> Any:
+        return self._setting.function(self._setting, function, (self, *arguments), keywords)
+
+    return method
+
+
+class State(Number):
     """Numbers of the state: Python's operators, shared by the array and the 0-d value, and no way out."""
 
     __slots__ = ()
@@ -80,6 +90,35 @@ class State(Wrapped):
     __eq__ = _binary(np.equal, operator.eq)
     __ne__ = _binary(np.not_equal, operator.ne)
 
+    # NumPy's functions with the array in front
+    all = _by_function(np.all)
+    any = _by_function(np.any)
+    argmax = _by_function(np.argmax)
+    argmin = _by_function(np.argmin)
+    argpartition = _by_function(np.argpartition)
+    argsort = _by_function(np.argsort)
+    cumprod = _by_function(np.cumprod)
+    cumsum = _by_function(np.cumsum)
+    diagonal = _by_function(np.diagonal)
+    dot = _by_function(np.dot)
+    max = _by_function(np.max)
+    mean = _by_function(np.mean)
+    min = _by_function(np.min)
+    nonzero = _by_function(np.nonzero)
+    prod = _by_function(np.prod)
+    put = _by_function(np.put)
+    ravel = _by_function(np.ravel)
+    repeat = _by_function(np.repeat)
+    round = _by_function(np.round)
+    searchsorted = _by_function(np.searchsorted)
+    squeeze = _by_function(np.squeeze)
+    std = _by_function(np.std)
+    sum = _by_function(np.sum)
+    swapaxes = _by_function(np.swapaxes)
+    take = _by_function(np.take)
+    trace = _by_function(np.trace)
+    var = _by_function(np.var)
+
     def __hash__(self) -> int:
         return hash(self._carrier)  # raises TypeError for an array, as ndarray does
 
@@ -87,7 +126,7 @@ class State(Wrapped):
         return self._setting.decide(self._carrier)
 
     def __int__(self) -> int:
-        return int(self._carrier)  # integers are exact
+        return taken_out(self._carrier, self._setting)
 
     def __float__(self) -> float:
         raise self._setting.fault(
@@ -104,16 +143,30 @@ class State(Wrapped):
         )
 
     def __divmod__(self, other: Any) -> Any:
-        raise self._setting.fault(RefusedError, "divmod is not offered; accepted: // and % one by one")
+        return self._setting.ufunc(self._setting, np.divmod, "__call__", (self, other), {})
+
+    def __rdivmod__(self, other: Any) -> Any:
+        return self._setting.ufunc(self._setting, np.divmod, "__call__", (other, self), {})
 
     def __matmul__(self, other: Any) -> Any:
-        raise self._setting.fault(
-            RefusedError,
-            "@ is not offered by this version: its accumulator must be stated; accepted: * and +",
-        )
+        return self._setting.ufunc(self._setting, np.matmul, "__call__", (self, other), {})
 
-    __rdivmod__ = __divmod__
-    __rmatmul__ = __matmul__
+    def __rmatmul__(self, other: Any) -> Any:
+        return self._setting.ufunc(self._setting, np.matmul, "__call__", (other, self), {})
+
+    def compress(self, condition: Any, axis: Any = None, out: Any = None) -> Any:
+        """Return the values at the places where a condition is true."""
+        return self._setting.function(self._setting, np.compress, (condition, self, axis, out), {})
+
+    def clip(self, min: Any = None, max: Any = None, out: Any = None, **keywords: Any) -> Any:
+        """Return the values cut to bounds, which are rounded as they meet the state."""
+        return self._setting.function(self._setting, np.clip, (self, min, max, out), keywords)
+
+    def conjugate(self) -> Any:
+        """Return the value itself: it is real."""
+        return self
+
+    conj = conjugate
 
 
 class Scalar(State):
@@ -139,12 +192,10 @@ class Scalar(State):
     def __deepcopy__(self, memo: object) -> Scalar:
         return self
 
-    def __round__(self, digits: int | None = None) -> int:
+    def __round__(self, digits: int | None = None) -> Any:
         if digits is not None:
-            raise self._setting.fault(
-                RefusedError, "round() to digits is not offered by this version; accepted: round(x)"
-            )
-        return round(self._carrier)  # type: ignore[no-any-return]  # an integer, and exact
+            return self._setting.function(self._setting, np.round, (self, digits), {})
+        return self._setting.wrap(round(self._carrier))  # an integer, and exact
 
     shape = ()
     ndim = 0
@@ -169,7 +220,7 @@ class Scalar(State):
         return self._setting.wrap(plain_item(self._carrier))
 
     def astype(self, dtype: Any) -> Any:
-        """Return the value itself for float64, an integer or a boolean; other floats are refused."""
+        """Return the value itself for float64, an exact value for integers and booleans; other floats are refused."""
         if self._setting.float_dtype(dtype) is not None:
             return self
         return self._setting.wrap(np.asarray(self._carrier).astype(dtype)[()])

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import sys
 from collections.abc import Callable, Sequence
+from types import FrameType
 from typing import Any, Literal, NamedTuple, Protocol
 
 import numpy as np
@@ -15,9 +16,9 @@ import numpy as np
 from narrowgauge.arithmetic.arithmetic import Arithmetic
 from narrowgauge.errors import DispatchError, RefusedError, SettingsMixedError
 
-__all__ = ["Observer", "Place", "Route", "Setting", "Wrapped", "holds"]
+__all__ = ["Number", "Observer", "Place", "Route", "Setting", "Wrapped", "holds"]
 
-Route = Literal["exact", "rounded"]
+Route = Literal["exact", "rounded", "accumulated", "whole"]
 
 
 class Place(NamedTuple):
@@ -37,11 +38,11 @@ class Observer(Protocol):
         """Take note of one operation; `operands` and `result` are carriers, to be read only."""
 
     def decided(self, setting: Setting) -> None:
-        """Take note of a branch in the control flow that depends on the state."""
+        """Take note of a branch in the control flow that depends on the state, or of an integer that leaves it."""
 
 
 class Wrapped:
-    """Base of the array, the 0-d value and the mask: a carrier and the setting that it belongs to."""
+    """Base of the array, the 0-d value and the exact value: a carrier and the setting that it belongs to."""
 
     __slots__ = ("_carrier", "_setting")
 
@@ -59,6 +60,12 @@ class Wrapped:
         return self._setting.function(self._setting, function, arguments, keywords)
 
 
+class Number(Wrapped):
+    """Base of the array and the 0-d value: its carrier holds numbers that the format has."""
+
+    __slots__ = ()
+
+
 class Setting:
     """One run's arithmetic and everything that a wrapped value needs to know.
 
@@ -67,7 +74,7 @@ class Setting:
     refusal and escape in the order in which they happened, also those that the kernel swallowed.
     """
 
-    __slots__ = ("_wrap", "arithmetic", "faults", "files", "function", "observer", "ufunc")
+    __slots__ = ("_wrap", "arithmetic", "draws", "faults", "files", "function", "observer", "paths", "ufunc")
 
     def __init__(
         self,
@@ -84,17 +91,22 @@ class Setting:
         self.observer = observer
         self.ufunc = ufunc
         self.function = function
+        self.draws: Any = None  # the Feed of a kernel that draws for itself
+        self.paths: int | None = None  # of the call under way: a reduction over an axis of that length is over paths
         self.faults: list[DispatchError] = []
         self._wrap = wrap
 
+    def frame(self) -> FrameType | None:
+        """Return the innermost frame of the user's modules that is being executed, or None outside them."""
+        frame: FrameType | None = sys._getframe(1)
+        while frame is not None and frame.f_code.co_filename not in self.files:
+            frame = frame.f_back
+        return frame
+
     def where(self) -> Place | None:
         """Return the innermost line of the user's modules that is being executed, or None outside them."""
-        frame = sys._getframe(1)
-        while frame is not None:
-            if frame.f_code.co_filename in self.files:
-                return Place(frame.f_code.co_filename, frame.f_lineno)
-            frame = frame.f_back  # type: ignore[assignment]  # None ends the loop
-        return None
+        frame = self.frame()
+        return None if frame is None else Place(frame.f_code.co_filename, frame.f_lineno)
 
     def fault(self, kind: type[DispatchError], message: str) -> DispatchError:
         """Record a fault with its place and return it, to be raised."""
@@ -104,22 +116,27 @@ class Setting:
         return error
 
     def wrap(self, result: Any) -> Any:
-        """Return a carrier as an array, a 0-d value or a mask; integers as they are."""
+        """Return a carrier as an array, a 0-d value or an exact value; lists and tuples item by item."""
         return self._wrap(result, self)
 
+    def carrier(self, value: Wrapped) -> Any:
+        """Return the carrier of a wrapped value as it is; SettingsMixedError for a value of another run."""
+        if value._setting is not self:
+            raise self.fault(
+                SettingsMixedError,
+                "arrays of two runs met in one operation; a cache or a global of the kernel outlives the run",
+            )
+        return value._carrier
+
     def admit(self, operand: Any) -> Any:
-        """Return the carrier of an operand: weak scalars and constant arrays are rounded once.
+        """Return the carrier of an operand: weak scalars, constant arrays and exact values are rounded once.
 
         NotImplemented for a foreign type. Raises SettingsMixedError for a value of another run, RefusedError for
         numbers that cannot be rounded.
         """
         if isinstance(operand, Wrapped):
-            if operand._setting is not self:
-                raise self.fault(
-                    SettingsMixedError,
-                    "arrays of two runs met in one operation; a cache or a global of the kernel outlives the run",
-                )
-            return operand._carrier
+            carrier = self.carrier(operand)
+            return carrier if isinstance(operand, Number) else self._number(carrier)
         if isinstance(operand, (float, int, np.floating, np.integer, np.bool_)):
             if isinstance(operand, np.longdouble):
                 raise self.fault(RefusedError, "a long double met the state; accepted: floats to 64 bits")
@@ -150,7 +167,7 @@ class Setting:
         carriers = []
         for operand in operands:
             # the two most frequent kinds without the call of `admit`
-            if isinstance(operand, Wrapped) and operand._setting is self:
+            if isinstance(operand, Number) and operand._setting is self:
                 carriers.append(operand._carrier)
             elif type(operand) is float:
                 carriers.append(self.arithmetic.constant(operand))
@@ -192,6 +209,15 @@ class Setting:
             RefusedError,
             f"the kernel fixes dtype {wanted}; accepted: float64 or none, since the audit chooses the format",
         )
+
+    def _number(self, carrier: Any) -> Any:
+        """Return booleans or integers of the state as numbers of the format; float64 takes them as plain code does."""
+        form = self.arithmetic.format
+        if form.name == "float64":
+            return carrier
+        if not isinstance(carrier, np.ndarray):
+            return form.carrier.type(self.arithmetic.constant(carrier))
+        return carrier.astype(form.carrier) if carrier.dtype.kind == "b" else self._constants(carrier)
 
     def _constants(self, array: np.ndarray[Any, Any]) -> Any:
         """Return a plain array as the state meets it: booleans as they are, numbers rounded as constants."""

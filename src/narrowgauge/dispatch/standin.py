@@ -2,7 +2,8 @@
 
 Most names are NumPy's own, because its functions hand over to the wrapped array by NumPy's protocols. Only what
 makes arrays out of nothing must differ: a plain buffer would coerce the state that is stored into it. Time grids
-(linspace, arange) and integers stay exact until they meet the state.
+(linspace, arange) and arrays of given integers stay plain, and exact, until they meet the state; buffers of integers
+(zeros, ones, empty, full) belong to the state.
 """
 
 from __future__ import annotations
@@ -17,9 +18,10 @@ from typing import Any
 
 import numpy as np
 
-from narrowgauge.dispatch.array import Array, carrier_of
-from narrowgauge.dispatch.functions import FUNCTIONS
-from narrowgauge.dispatch.mask import bare, is_exact
+from narrowgauge.dispatch.array import Array, as_state, carrier_of
+from narrowgauge.dispatch.exact import Exact, bare, is_exact
+from narrowgauge.dispatch.functions import call_function
+from narrowgauge.dispatch.randoms import random_namespace
 from narrowgauge.dispatch.routes import ROUTES
 from narrowgauge.dispatch.scalar import State
 from narrowgauge.dispatch.setting import Setting, Wrapped, holds
@@ -106,7 +108,7 @@ def refusing_generator(name: str, setting: Setting) -> Any:
 
 
 def math_namespace(setting: Setting) -> ModuleType:
-    """Return a stand-in for `math` whose functions also take 0-d values of the state.
+    """Return a stand-in for `math` whose functions also take 0-d values of the state; integral parts are exact values.
 
     In a narrower format than float64 a value outside a function's domain gives NumPy's NaN or infinity.
     """
@@ -118,14 +120,16 @@ def math_namespace(setting: Setting) -> ModuleType:
         route = ROUTES[ufunc]
 
         def function(*arguments: Any) -> Any:
-            if not any(isinstance(argument, State) for argument in arguments):
+            if not any(isinstance(argument, Wrapped) for argument in arguments):
                 return plain(*arguments)
-            if any(isinstance(argument, Array) for argument in arguments) or len(arguments) != ufunc.nin:
+            if any(isinstance(argument, np.ndarray) for argument in arguments) or len(arguments) != ufunc.nin:
                 raise setting.fault(
                     RefusedError, f"math.{name} takes {ufunc.nin} scalar(s); accepted: np.{ufunc.__name__}"
                 )
+            if name in _TO_INTEGER and isinstance(arguments[0], Exact):
+                return setting.wrap(plain(setting.carrier(arguments[0])))
             result = setting.operate(ufunc, route, arguments, call=call)
-            return int(result) if name in _TO_INTEGER else result
+            return setting.wrap(int(setting.carrier(result))) if name in _TO_INTEGER else result
 
         return function
 
@@ -156,13 +160,20 @@ def dataclasses_namespace(names: dict[str, Any]) -> ModuleType:
 
 
 def builtins_namespace(setting: Setting) -> ModuleType:
-    """Return a stand-in for `builtins` whose `max` and `min` round a constant that they choose over the state."""
+    """Return a stand-in for `builtins` whose `max` and `min` make a constant that they choose over the state its own.
+
+    A float is rounded once, an integer becomes an exact value.
+    """
 
     def stand_in(plain: Callable[..., Any]) -> Callable[..., Any]:
         def function(*arguments: Any, **keywords: Any) -> Any:
             values = list(arguments[0]) if len(arguments) == 1 else list(arguments)
             chosen = plain(values, **keywords)
-            if isinstance(chosen, State) or not isinstance(chosen, (float, np.floating)) or not holds(values, State):
+            if isinstance(chosen, Wrapped) or not holds(values, Wrapped):
+                return chosen
+            if isinstance(chosen, (int, np.integer, np.bool_)):
+                return setting.wrap(chosen)
+            if not isinstance(chosen, (float, np.floating)):
                 return chosen
             constant = setting.admit(chosen)
             return setting.wrap(constant if constant is chosen else setting.arithmetic.format.carrier.type(constant))
@@ -173,12 +184,14 @@ def builtins_namespace(setting: Setting) -> ModuleType:
 
 
 def numpy_namespace(setting: Setting) -> ModuleType:
-    """Return a stand-in for `numpy` whose creators give arrays of the state and masks."""
+    """Return a stand-in for `numpy` whose creators give arrays of the state and exact values."""
     names: dict[str, Any] = {
+        "arange": _arange(setting),
         "array": _array(setting),
         "full": _full(setting),
+        "take": _take(setting),
         "where": _where(setting),
-        "random": refusing_namespace("numpy.random", setting),
+        "random": random_namespace(setting.draws) if setting.draws else refusing_namespace("numpy.random", setting),
     }
     for name in ("empty", "ones", "zeros"):
         names[name] = _creator(setting, getattr(np, name))
@@ -217,7 +230,7 @@ def _full(setting: Setting) -> Callable[..., Any]:
     def full(shape: Any, fill_value: Any, dtype: Any = None, order: Any = "C", **others: Any) -> Any:
         _refuse_others(setting, "full", others)
         # NumPy makes integers or booleans of integers or booleans: they stay exact
-        exact = dtype is None and not holds(fill_value, State) and is_exact(fill_value, setting)
+        exact = dtype is None and is_exact(fill_value, setting)
         if exact or (dtype is not None and setting.float_dtype(dtype) is None):
             return setting.wrap(np.full(shape, bare(fill_value, setting), dtype, order))
         value = carrier_of(fill_value, setting)
@@ -228,7 +241,7 @@ def _full(setting: Setting) -> Callable[..., Any]:
 
 def _like(setting: Setting, function: Callable[..., Any]) -> Callable[..., Any]:
     def like(model: Any, *arguments: Any, **keywords: Any) -> Any:
-        return FUNCTIONS[function](setting, (model, *arguments), keywords)
+        return call_function(setting, function, (model, *arguments), keywords)
 
     return like
 
@@ -240,6 +253,8 @@ def _array(setting: Setting) -> Callable[..., Any]:
         _refuse_others(setting, "array", others)
         if not holds(value, State):
             plain = np.array(bare(value, setting), dtype, copy=copy, order=order, ndmin=ndmin)
+            if plain.dtype.kind in "iu" and not holds(value, Wrapped):
+                return plain
             if plain.dtype.kind != "f":
                 return setting.wrap(plain)
             setting.float_dtype(dtype)
@@ -258,6 +273,29 @@ def _array(setting: Setting) -> Callable[..., Any]:
     return array
 
 
+def _arange(setting: Setting) -> Callable[..., Any]:
+    def arange(*placed: Any, **keywords: Any) -> Any:
+        made = np.arange(*bare(placed, setting), **bare(keywords, setting))
+        if not holds([*placed, keywords], Exact):
+            return made
+        return as_state(made, setting) if made.dtype.kind == "f" else setting.wrap(made)
+
+    return arange
+
+
+def _take(setting: Setting) -> Callable[..., Any]:
+    plain: Callable[..., Any] = np.take
+
+    def take(a: Any, indices: Any, *placed: Any, **keywords: Any) -> Any:
+        if holds(a, Wrapped) or not holds(indices, Exact) or holds(indices, State):
+            return plain(a, indices, *placed, **keywords)
+        table = np.asarray(a)  # constants, which become those of the state by the key
+        own = as_state(table, setting) if table.dtype.kind == "f" else setting.wrap(table)
+        return plain(own, indices, *placed, **keywords)
+
+    return take
+
+
 def _as_array(array: Callable[..., Any], order: Any, ndmin: int) -> Callable[..., Any]:
     def as_array(value: Any, dtype: Any = None, *placed: Any, **keywords: Any) -> Any:
         given = dict(zip(("order",), placed, strict=False)) | keywords
@@ -272,6 +310,6 @@ def _where(setting: Setting) -> Callable[..., Any]:
     def where(condition: Any, *values: Any) -> Any:
         if not holds((condition, *values), Wrapped) and all(is_exact(value, setting) for value in values):
             return np.where(condition, *values)
-        return FUNCTIONS[np.where](setting, (condition, *values), {})
+        return call_function(setting, np.where, (condition, *values), {})
 
     return where
