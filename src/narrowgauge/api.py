@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import hashlib
 import json
 import tempfile
 import time
@@ -15,8 +14,9 @@ from narrowgauge.conduct.run import Watcher, run
 from narrowgauge.conduct.trial import try_arms
 from narrowgauge.errors import AuditFileError, AuditFolderError, NarrowgaugeError
 from narrowgauge.kernel.auditfile import AuditFile, audit_file_from, read_audit_file
-from narrowgauge.kernel.loading import KernelSource, find_kernel
+from narrowgauge.kernel.loading import find_kernel
 from narrowgauge.measure.block import BlockRunner
+from narrowgauge.measure.drawplan import worked_out
 from narrowgauge.measure.provenance import provenance
 from narrowgauge.record.audit import AuditRecord, KernelEntry, TrialEntry
 from narrowgauge.record.canonical import canonical_text, read_strict, write_atomically
@@ -91,11 +91,12 @@ def audit(
 def run_audit(file: AuditFile, out: Path | None, *, replace: bool = False, watcher: Watcher | None = None) -> Audit:
     """Run an audit and write its files into `out`, if given.
 
-    Raises AuditFolderError where `out` holds another audit and `replace` is false, before anything is run.
+    Raises AuditFolderError where `out` holds another audit and `replace` is false, before anything is measured.
     """
     start = time.perf_counter()
     kernel = find_kernel(file)
-    entry = KernelEntry(run=file.kernel.run, fingerprint=_digest(kernel))
+    file = worked_out(file, kernel)
+    entry = KernelEntry(run=file.kernel.run, fingerprint=kernel.digest())
     if out is not None:
         _claim(out, file, entry, replace)
     outcome = run(file, kernel, watcher=watcher)
@@ -109,14 +110,8 @@ def run_audit(file: AuditFile, out: Path | None, *, replace: bool = False, watch
 def try_out(file: AuditFile) -> TrialEntry:
     """Run the identity run and one small run of every arm; nothing is written."""
     kernel = find_kernel(file)
+    file = worked_out(file, kernel)
     return try_arms(file, kernel, BlockRunner(file, kernel))
-
-
-def _digest(kernel: KernelSource) -> str | None:
-    """Return the SHA-256 of the kernel's source text, or None for a function without a file."""
-    if kernel.code is None:
-        return None
-    return "sha256:" + hashlib.sha256(Path(kernel.code.co_filename).read_bytes()).hexdigest()
 
 
 def _claim(folder: Path, file: AuditFile, kernel: KernelEntry, replace: bool) -> None:

@@ -57,7 +57,7 @@ def record_of(outcome, start, ratio):
     file = file_for(start, ratio)
     judgements = {level: judge_level(tally, file, outcome.alpha) for level, tally in outcome.tallies.items()}
     other = dataclasses.replace(outcome, judgements=judgements)
-    return account(file, other, KernelEntry(run="geometric", fingerprint=None), {})
+    return account(file, other, KernelEntry(run="geometric", fingerprint="sha256:none"), {})
 
 
 def exact_level_variance(level):

@@ -18,7 +18,7 @@ from narrowgauge.arithmetic.arithmetic import Arithmetic
 from narrowgauge.arithmetic.rounding import Floats
 from narrowgauge.draws.coarsen import Draws
 from narrowgauge.kernel.loading import find_kernel
-from narrowgauge.measure import block
+from narrowgauge.measure import calls
 from narrowgauge.measure.block import BlockRunner
 from narrowgauge.record.audit import AuditRecord, LawEntry, QuantityEntry, RaisedEntry, TelescopingEntry
 
@@ -279,7 +279,7 @@ def test_a_wrong_coarsening_is_flagged(tmp_path: Path, monkeypatch: pytest.Monke
     def every_second(draws: Draws, fine: Floats, arithmetic: Arithmetic) -> Floats:
         return np.ascontiguousarray(fine[::2])
 
-    monkeypatch.setattr(block, "coarse_draws", every_second)
+    monkeypatch.setattr(calls, "coarse_draws", every_second)
     assert not telescoping(tmp_path, source, 2).sound
 
 

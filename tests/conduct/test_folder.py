@@ -169,9 +169,10 @@ def mapping(run: object) -> dict[str, Any]:
 
 @pytest.mark.parametrize("quiet", [True, False])
 def test_an_audit_of_a_function(tmp_path: Path, quiet: bool, capsys: pytest.CaptureFixture[str]) -> None:
-    """A mapping with a function is audited like a file; without fingerprint; off a terminal nothing is printed."""
+    """A mapping with a function is audited like a file, with a fingerprint; off a terminal nothing is printed."""
     result = audit(mapping(brownian), out=tmp_path / "out", quiet=quiet)
-    assert (result.record.kernel.run, result.record.kernel.fingerprint) == (f"{__name__}:brownian", None)
+    assert result.record.kernel.run == f"{__name__}:brownian"
+    assert result.record.kernel.fingerprint.startswith("sha256:")
     document = read_strict((tmp_path / "out" / "audit.json").read_text("utf-8"), "audit.json")
     assert document == result.record.document()
     assert list(result.record.quantities) == ["end"]
@@ -203,3 +204,20 @@ def test_the_tables_are_made_from_the_record(tmp_path: Path) -> None:
     assert result.record.reach is not None
     assert lines["count"].sum() == result.record.reach.operations
     assert set(lines["line"]) <= {4, 6}
+
+
+def growing(by: float) -> Any:
+    def value(dW: Any, h: float, volatility: float) -> Any:
+        return by + volatility * dW[0]
+
+    return value
+
+
+def test_another_function_of_the_same_name_is_another_audit(tmp_path: Path) -> None:
+    """Two closures that differ in a value only: the second does not replace what the first left."""
+    audit(mapping(growing(0.2)), out=tmp_path / "out", quiet=True)
+    before = (tmp_path / "out" / "audit.json").read_bytes()
+    with pytest.raises(AuditFolderError) as caught:
+        audit(mapping(growing(0.9)), out=tmp_path / "out", quiet=True)
+    assert "holds another audit (another kernel, or another state of it)" in str(caught.value)
+    assert (tmp_path / "out" / "audit.json").read_bytes() == before

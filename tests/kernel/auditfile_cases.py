@@ -24,7 +24,8 @@ takes = "normals"
 factors = 2
 layout = "factors, paths,steps"
 coupling = "none"
-modules = []
+modules = ["plant"]
+shared = ["plant.fast"]
 [parameters]
 volatility = 0.4
 years = 3

@@ -31,6 +31,7 @@ DEFAULTS = {
     "kernel.layout": "steps, paths",
     "kernel.coupling": "sum",
     "kernel.modules": [],
+    "kernel.shared": [],
     "ladder.coarsest_steps": 1,
     "ladder.refinement": 2,
     "target.worthwhile": None,
@@ -51,7 +52,7 @@ DEFAULTS = {
     "sampling.seed": 1,
 }
 ALL_TABLES = "kernel, parameters, ladder, target, formats, cost, sampling"
-KERNEL_KEYS = "run, takes, factors, layout, coupling, modules"
+KERNEL_KEYS = "run, takes, factors, layout, coupling, modules, shared"
 
 
 class TestDefaults:

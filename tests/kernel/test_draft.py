@@ -38,11 +38,12 @@ HESTON_DRAFT = """\
 [kernel]
 # Called as heston(dW, h, **parameters); h is the step size.
 run = "{file}:heston"  # file and function; the path is relative to the folder of this file
-takes = "increments"  # by the name of dW; increments, normals or uniforms
+takes = "increments"  # by the name of dW; increments, normals, uniforms or rng
 factors = 2  # guessed from how dW is taken apart; check
 # layout = "steps, factors, paths"  # order of the axes of the array of draws
 # coupling = "sum"  # "none": levels are measured without their differences
-# modules = []  # further modules whose NumPy is rounded; this version takes none
+# modules = []  # further modules and packages whose NumPy is rounded
+# shared = []  # modules of theirs that cannot be copied, run as they are and not rounded
 
 [parameters]
 # Passed to the kernel by keyword; arrays of numbers arrive as float64 NumPy arrays.
@@ -154,7 +155,7 @@ class TestTakes:
     def test_known_names(self, tmp_path, name, takes):
         """What the first argument is called says what the kernel takes."""
         text = signature(tmp_path, f"{name}, h", "return 0")
-        line = f'takes = "{takes}"  # by the name of {name}; increments, normals or uniforms'
+        line = f'takes = "{takes}"  # by the name of {name}; increments, normals, uniforms or rng'
         assert lines_with(text, "takes") == [line]
 
     @pytest.mark.parametrize("name", ["x", "noise", "drawn", "zeta", "unit", "window"])
@@ -165,15 +166,25 @@ class TestTakes:
 
     @pytest.mark.parametrize("name", ["rng", "generator", "random_state"])
     def test_generators(self, tmp_path, name):
-        """A generator of random numbers is what this version cannot run, and the draft says so."""
-        text = signature(tmp_path, f"{name}, h", "return 0")
-        expected = (
-            f"# {name} looks like a generator of random numbers. This version cannot run such a kernel:\n"
-            "# write an adapter that takes an array of draws instead, and name it in run.\n"
-            'takes = "increments"  # guessed; check\n'
-        )
-        assert expected in text
-        assert read(tmp_path, text).kernel.takes == "increments"
+        """A generator says that the kernel draws for itself: factors and layout are not asked for."""
+        text = signature(tmp_path, f"{name}, h, *, steps, paths, s=0.2", "return 0")
+        assert "(" + f"{name}, h, steps=..., paths=..., **parameters); h is the step size." in text
+        assert lines_with(text, "takes") == ['takes = "rng"  # as it takes paths; increments, normals, uniforms or rng']
+        assert read(tmp_path, text).kernel.takes == "rng"
+        assert read(tmp_path, text).parameters == {"s": 0.2}
+        assert not lines_with(text, "factors")
+        assert not lines_with(text, "layout")
+
+    def test_a_generator_alone(self, tmp_path):
+        """A kernel that cannot be told how many paths to run needs an adapter, and the draft says so."""
+        text = signature(tmp_path, "rng, h, s=0.2", "return 0")
+        assert 'takes = "rng"  # by the name of rng; increments, normals, uniforms or rng' in text
+        assert "takes no number of paths: write an adapter that does, and name it in run.\n" in text
+
+    def test_paths_are_asked_for(self, tmp_path):
+        """A kernel that leaves its first argument be, and asks for the number of paths, draws for itself."""
+        text = signature(tmp_path, "_, h, paths, s=0.2", "return 0")
+        assert read(tmp_path, text).kernel.takes == "rng"
 
 
 class TestFactors:

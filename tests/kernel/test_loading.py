@@ -192,24 +192,24 @@ def test_a_module_that_raises_when_it_is_executed(tmp_path: Path, source: str, r
 
 
 @pytest.mark.parametrize(
-    ("statement", "name"),
+    ("statement", "name", "listed"),
     [
-        ("import beside", "beside"),
-        ("from beside import rate", "beside"),
-        ("import package.inner", "package.inner"),
-        ("from . import beside", "."),
-        ("from .beside import rate", ".beside"),
+        ("import beside", "beside", "beside"),
+        ("from beside import rate", "beside", "beside"),
+        ("import package.inner", "package.inner", "package.inner"),
+        ("from . import beside", ".beside", "beside"),
+        ("from .beside import rate", ".beside", "beside"),
     ],
 )
-def test_a_module_that_imports_one_beside_it_is_refused(tmp_path: Path, statement: str, name: str) -> None:
+def test_a_module_that_imports_one_beside_it_is_refused(tmp_path: Path, statement: str, name: str, listed: str) -> None:
     """A sibling would not be rounded: refused under plain NumPy and in an arithmetic, there with file and line."""
     (tmp_path / "beside.py").write_text("rate = 0.1\n")
     (tmp_path / "package").mkdir()
     (tmp_path / "package" / "__init__.py").touch()
     kernel = found(tmp_path, f"import math\n{statement}\n{VALUE}")
     message = (
-        f"the kernel's module imports {name}, which lies beside it; in this version the kernel is one module: its "
-        "NumPy would not be rounded. Accepted: put what the kernel needs into its own file"
+        f"the kernel imports {name}, which lies beside it and is not listed: its NumPy would not be rounded. "
+        f'Accepted: "{listed}" in kernel.modules, or in kernel.shared to run it as it is'
     )
     with pytest.raises(KernelError) as plain:
         private_copy(kernel, None)

@@ -266,7 +266,7 @@ def audit_record(**quantities):
     decider = next(iter(quantities))
     return AuditRecord(
         schema=SCHEMA,
-        kernel=KernelEntry(run="reserve.py:value", fingerprint=None),
+        kernel=KernelEntry(run="reserve.py:value", fingerprint="sha256:invented"),
         asked=ASKED,
         rules=RULES,
         arms={

@@ -11,23 +11,22 @@ from collections.abc import Sequence
 from typing import Any
 
 import numpy as np
-import numpy.typing as npt
 
 from narrowgauge.arithmetic.arithmetic import arithmetic_named
 from narrowgauge.dispatch.setting import Place, Route, Setting
-from narrowgauge.draws.coarsen import Draws, fine_draws
+from narrowgauge.draws.coarsen import Draws
 from narrowgauge.draws.streams import Purpose
+from narrowgauge.draws.tape import Tape
 from narrowgauge.errors import AuditFileError, DispatchError, KernelError
 from narrowgauge.kernel.auditfile import AuditFile
-from narrowgauge.kernel.contract import check_parameters, evaluate
-from narrowgauge.kernel.loading import KernelSource, private_copy
+from narrowgauge.kernel.contract import check_parameters
+from narrowgauge.kernel.loading import KernelSource
 from narrowgauge.measure.arms import REFERENCE
 from narrowgauge.measure.block import BlockRunner
+from narrowgauge.measure.calls import Caller, Quantities
 from narrowgauge.record.audit import FaultEntry, ReachEntry, ReachLine, TrialEntry
 
 __all__ = ["identity_run", "try_arms"]
-
-Quantities = dict[str, npt.NDArray[np.float64]]
 
 _PATHS = 1024
 _LEVEL = 2  # coarse enough to be over at once, fine enough to pass through the time loop more than once
@@ -64,10 +63,12 @@ def identity_run(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> 
     raises, and what the machinery refuses; AuditFileError where parameters or targets do not fit the kernel.
     """
     counts = []
+    remarks = list(runner.remarks)
     for level in _levels(file):
         counts.append(_Count())
-        _identical(file, kernel, runner.draws(level, 0, Purpose.IDENTITY, _PATHS), level, counts[-1])
-    return _reach(counts[0], file)
+        met = _identical(file, kernel, runner.draws(level, 0, Purpose.IDENTITY, _PATHS), level, counts[-1])
+        remarks += [one for one in met if one not in remarks]
+    return _reach(counts[0], file, remarks)
 
 
 def _levels(file: AuditFile) -> list[int]:
@@ -75,14 +76,19 @@ def _levels(file: AuditFile) -> list[int]:
     return sorted({min(_LEVEL, file.ladder.finest), 0}, reverse=True)
 
 
-def _identical(file: AuditFile, kernel: KernelSource, draws: Draws, level: int, count: _Count) -> None:
-    """Raise unless plain NumPy, plain NumPy again and float64 through the machinery give the same bits."""
+def _identical(file: AuditFile, kernel: KernelSource, draws: Draws | Tape, level: int, count: _Count) -> list[str]:
+    """Raise unless plain NumPy, plain NumPy again and float64 through the machinery give the same bits.
+
+    Returns what there is to say about the kernel's random numbers and about the modules that it used.
+    """
     plain, repeated = _plainly_twice(file, kernel, draws, level)
     try:
-        copy = private_copy(kernel, arithmetic_named(REFERENCE), count)
-        with_machinery = evaluate(copy, *_arguments(file, draws, level, REFERENCE))
-    except (DispatchError, KernelError):
+        caller = Caller(file, kernel, arithmetic_named(REFERENCE), count)
+        with_machinery = caller.fine(draws, level)
+    except DispatchError:
         raise
+    except KernelError as problem:
+        raise KernelError(str(problem), level=level, arm=REFERENCE) from problem.__cause__
     except (Exception, SystemExit) as problem:  # plain NumPy did not raise
         what = f"the kernel raised {type(problem).__name__}: {problem}, where plain NumPy does not"
         raise KernelError(what, level=level, arm=REFERENCE) from problem
@@ -91,6 +97,9 @@ def _identical(file: AuditFile, kernel: KernelSource, draws: Draws, level: int, 
     for name in plain | with_machinery:
         _same_bits(name, plain, with_machinery, level, _NOT_IDENTICAL)
     _check_targets(file, list(plain))
+    said = [f"{file.shown(place.file)}:{place.line}: {text}" if place else text for place, text in caller.remarks]
+    said += [f"the module {name} is shared: it was imported as it is and not rounded" for name in caller.copy.shared]
+    return said + [f"{name} is compiled: it ran as the Python function underneath" for name in caller.copy.compiled]
 
 
 def try_arms(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> TrialEntry:
@@ -112,10 +121,12 @@ def try_arms(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> Tria
     return TrialEntry(identical=identical, reach=reach, faults=faults)
 
 
-def _fault(file: AuditFile, kernel: KernelSource, draws: Draws, level: int, arm: str) -> FaultEntry | None:
+def _fault(file: AuditFile, kernel: KernelSource, draws: Draws | Tape, level: int, arm: str) -> FaultEntry | None:
     """Run one arm on one level and return what stops it, or None."""
+    if isinstance(draws, Tape):
+        _plainly_twice(file, kernel, draws, level)  # writes what the arm has to ask for
     try:
-        evaluate(private_copy(kernel, arithmetic_named(arm)), *_arguments(file, draws, level, arm))
+        Caller(file, kernel, arithmetic_named(arm)).fine(draws, level)
     except DispatchError as problem:
         return FaultEntry(arm=arm, kind="escape", message=str(problem))
     except KernelError as problem:
@@ -126,30 +137,23 @@ def _fault(file: AuditFile, kernel: KernelSource, draws: Draws, level: int, arm:
     return None
 
 
-def _plainly_twice(file: AuditFile, kernel: KernelSource, draws: Draws, level: int) -> tuple[Quantities, Quantities]:
+def _plainly_twice(
+    file: AuditFile, kernel: KernelSource, draws: Draws | Tape, level: int
+) -> tuple[Quantities, Quantities]:
     """Run the kernel twice under plain NumPy; what it raises is a KernelError with the kernel's own as its cause."""
     arm = "plain NumPy"
     try:
-        copy = private_copy(kernel, None)
-        check_parameters(copy.function, file)
-        first = evaluate(copy, *_arguments(file, draws, level, REFERENCE))
-        return first, evaluate(copy, *_arguments(file, draws, level, REFERENCE))
+        caller = Caller(file, kernel, None)
+        check_parameters(caller.copy.function, file)
+        first = caller.fine(draws, level)
+        return first, caller.fine(draws, level)
     except KernelError as problem:
         raise KernelError(str(problem), level=level, arm=arm) from problem.__cause__
-    except AuditFileError:  # there is no such function, or it takes other parameters
+    except (AuditFileError, DispatchError):  # no such function, other parameters, or draws that are not offered
         raise
     except (Exception, SystemExit) as problem:  # the reference: its own traceback is shown
         what = f"the kernel raised {type(problem).__name__}: {problem}"
         raise KernelError(what, level=level, arm=arm) from problem
-
-
-def _arguments(file: AuditFile, draws: Draws, level: int, arm: str) -> tuple[Any, float, dict[str, object], str]:
-    return (
-        fine_draws(draws, arithmetic_named(arm)),
-        file.ladder.step_size(level),
-        file.keywords(),
-        file.kernel.layout,
-    )
 
 
 def _check_targets(file: AuditFile, quantities: list[str]) -> None:
@@ -188,7 +192,7 @@ def _same_bits(name: str, plain: Quantities, other: Quantities, level: int, word
     )
 
 
-def _reach(count: _Count, file: AuditFile) -> ReachEntry:
+def _reach(count: _Count, file: AuditFile, remarks: list[str]) -> ReachEntry:
     lines = [
         ReachLine(
             file=file.shown(place.file) if place else None,
@@ -199,14 +203,16 @@ def _reach(count: _Count, file: AuditFile) -> ReachEntry:
         )
         for (place, operation, route), number in sorted(count.operations.items(), key=lambda item: _order(item[0]))
     ]
-    rounded = sum(line.count for line in lines if line.route == "rounded")
+    # A sum in a stated order rounds each partial result.
+    rounded = sum(line.count for line in lines if line.route in ("rounded", "accumulated"))
+    whole = sum(line.count for line in lines if line.route == "whole")
     return ReachEntry(
         operations=sum(line.count for line in lines),
         rounded=rounded,
-        share=1.0 if rounded else None,
+        share=rounded / (rounded + whole) if rounded + whole else None,
         decisions=count.decisions,
         lines=lines,
-        remarks=[],
+        remarks=remarks,
     )
 
 

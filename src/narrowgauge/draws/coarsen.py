@@ -24,7 +24,7 @@ from narrowgauge.arithmetic.arithmetic import Arithmetic
 from narrowgauge.arithmetic.rounding import Floats
 from narrowgauge.draws.normals import exact_normals, normal_cdf
 
-__all__ = ["Draws", "Takes", "coarse_draws", "fine_draws"]
+__all__ = ["Draws", "Takes", "coarse_draws", "fine_draws", "inside"]
 
 Takes = Literal["increments", "normals", "uniforms"]
 Doubles = npt.NDArray[np.float64]
@@ -56,7 +56,7 @@ class Draws:
 def fine_draws(draws: Draws, arithmetic: Arithmetic) -> Floats:
     """Return the draws of the fine path as carriers, (steps, factors, paths)."""
     rounded = arithmetic.cast(draws.values)
-    return _inside(rounded, arithmetic) if draws.takes == "uniforms" else rounded
+    return inside(rounded, arithmetic) if draws.takes == "uniforms" else rounded
 
 
 def coarse_draws(draws: Draws, fine: Floats, arithmetic: Arithmetic) -> Floats:
@@ -64,7 +64,7 @@ def coarse_draws(draws: Draws, fine: Floats, arithmetic: Arithmetic) -> Floats:
     m = draws.refinement
     if draws.takes == "uniforms":
         total = draws.normals.reshape(-1, m, *draws.normals.shape[1:]).sum(axis=1)
-        return _inside(arithmetic.cast(normal_cdf(total / math.sqrt(m))), arithmetic)
+        return inside(arithmetic.cast(normal_cdf(total / math.sqrt(m))), arithmetic)
     groups = fine.reshape(-1, m, *fine.shape[1:])
     total = groups[:, 0]
     for j in range(1, m):
@@ -74,7 +74,7 @@ def coarse_draws(draws: Draws, fine: Floats, arithmetic: Arithmetic) -> Floats:
     return np.ascontiguousarray(total)
 
 
-def _inside(rounded: Floats, arithmetic: Arithmetic) -> Floats:
+def inside(rounded: Floats, arithmetic: Arithmetic) -> Floats:
     """Move what rounded to 0 or 1 to the nearest value of the format inside (0, 1), in place."""
     form = arithmetic.format
     np.clip(rounded, form.min_subnormal, 1.0 - form.unit_roundoff, out=rounded)

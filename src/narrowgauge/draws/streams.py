@@ -12,7 +12,7 @@ from enum import IntEnum
 import numpy as np
 import numpy.typing as npt
 
-__all__ = ["Purpose", "block_paths", "uniforms"]
+__all__ = ["Purpose", "UniformStream", "block_paths", "uniforms"]
 
 _MOST_DRAWS = 2**22  # of one block: bounds the memory of a block, whatever the level
 _GRAIN = 1024  # paths; a block is a multiple of it and is cut into 32 batches
@@ -35,11 +35,22 @@ def block_paths(block: int, steps: int, factors: int) -> int:
     return max(_GRAIN, min(block, fitting) // _GRAIN * _GRAIN)
 
 
+class UniformStream:
+    """The uniforms of a block, handed out one request after the other."""
+
+    def __init__(self, seed: int, purpose: Purpose, level: int, block: int) -> None:
+        key = np.random.SeedSequence(seed, spawn_key=(int(purpose), level, block))
+        self._source = np.random.PCG64DXSM(key)
+
+    def take(self, shape: tuple[int, ...]) -> npt.NDArray[np.float64]:
+        """Return the next uniforms in (0, 1), float64 of the given shape, in C order."""
+        words = np.asarray(self._source.random_raw(int(np.prod(shape, dtype=np.int64))))
+        values = (words >> np.uint64(12)).astype(np.float64)  # exact: 52 bits
+        values += 0.5  # exact: 53 bits
+        values *= 2.0**-52
+        return values.reshape(shape)
+
+
 def uniforms(seed: int, purpose: Purpose, level: int, block: int, shape: tuple[int, ...]) -> npt.NDArray[np.float64]:
     """Return the uniforms of a block in (0, 1), float64 of the given shape, in C order."""
-    key = np.random.SeedSequence(seed, spawn_key=(int(purpose), level, block))
-    words = np.asarray(np.random.PCG64DXSM(key).random_raw(int(np.prod(shape))))
-    values = (words >> np.uint64(12)).astype(np.float64)  # exact: 52 bits
-    values += 0.5  # exact: 53 bits
-    values *= 2.0**-52
-    return values.reshape(shape)
+    return UniformStream(seed, purpose, level, block).take(shape)

@@ -14,7 +14,7 @@ import tomllib
 from collections.abc import Callable, Mapping
 from pathlib import Path
 from types import FunctionType
-from typing import TypeVar
+from typing import Literal, TypeVar
 
 import msgspec
 
@@ -33,6 +33,7 @@ from narrowgauge.kernel.audittables import (
     TableError,
     TargetTable,
     check_run,
+    default_layout,
     dotted,
     kind_of,
     shown,
@@ -50,6 +51,7 @@ __all__ = [
     "bytes_of",
     "most_steps",
     "read_audit_file",
+    "with_draws",
 ]
 
 _ORDER = ("kernel", "parameters", "ladder", "target", "formats", "cost", "sampling")
@@ -190,6 +192,19 @@ def audit_file_from(mapping: Mapping[str, object], source: str = "audit") -> Aud
     return _checked(raw, source, Path.cwd(), function)
 
 
+def with_draws(file: AuditFile, factors: int, coupling: Literal["sum", "none"]) -> AuditFile:
+    """Return the audit file of a kernel that draws for itself, with what its requests show filled in.
+
+    Raises AuditFileError where a block of the finest level does not fit so many draws.
+    """
+    kernel = msgspec.structs.replace(file.kernel, factors=factors, layout=default_layout(factors), coupling=coupling)
+    try:
+        _check_ladder(kernel, file.ladder)
+    except TableError as problem:
+        raise AuditFileError(file.source, problem.key, problem.problem, problem.accepted) from None
+    return msgspec.structs.replace(file, kernel=kernel)
+
+
 def most_steps(factors: int) -> int:
     """Return the most steps of a level: the smallest block, 1,024 paths, must fit 2^22 draws."""
     return _BLOCK_DRAWS // _SMALLEST_BLOCK // factors
@@ -214,6 +229,7 @@ def _checked(raw: dict[str, object], source: str, folder: Path, function: Callab
 
 def _assembled(raw: dict[str, object], source: str, folder: Path, function: Callable[..., object] | None) -> AuditFile:
     _check_names(raw)
+    _check_drawing(raw["kernel"])
     parameters = raw.get("parameters", {})
     if not isinstance(parameters, dict):
         raise TableError("parameters", f"{shown(parameters)} is {kind_of(parameters)}", "a table")
@@ -262,6 +278,15 @@ def _check_names(raw: dict[str, object]) -> None:
             raise TableError(name, "the table is missing", f"a table [{name}] with {needed}")
 
 
+def _check_drawing(kernel: object) -> None:
+    """Raise a TableError for a key that describes an array of draws where the kernel draws for itself."""
+    if isinstance(kernel, dict) and kernel.get("takes") == "rng":
+        for key in ("factors", "layout"):
+            if key in kernel:
+                problem = f'{shown(kernel[key])} describes an array of draws, which takes = "rng" has not'
+                raise TableError(f"kernel.{key}", problem, "no such key; it is worked out from what the kernel draws")
+
+
 def _nearest(name: str, known: tuple[str, ...]) -> str:
     match = difflib.get_close_matches(name, known, n=1)
     return f", perhaps {shown(match[0])} is meant" if match else ""
@@ -301,8 +326,6 @@ def _wrong_type(table: str, values: dict[str, object], message: str) -> TableErr
         key, value = dotted(table, name, quantity), value[quantity]
     elif inside and isinstance(value, list):
         key, value = f"{key}[{inside}]", value[int(inside)]
-    if key == "kernel.takes" and value == "rng":
-        return TableError(key, '"rng" is not supported by this version', accepted)
     if message.startswith("Invalid enum value"):
         return TableError(key, f"{shown(value)} is not accepted", accepted)
     if message.startswith("Number out of range"):

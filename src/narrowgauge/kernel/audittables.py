@@ -75,11 +75,12 @@ _BY_QUANTITY = "a finite number above 0, or a table of such numbers by quantity"
 
 RULES: dict[str, Rule] = {
     "kernel.run": Rule(accepted='"file.py:function" or "package.module:function"'),
-    "kernel.takes": Rule(accepted='"increments", "normals" or "uniforms"'),
+    "kernel.takes": Rule(accepted='"increments", "normals", "uniforms" or "rng"'),
     "kernel.factors": Rule(accepted="an integer of 1 or more", low=1),
     "kernel.layout": Rule(accepted='the axis names in any order, such as "steps, factors, paths"'),
     "kernel.coupling": Rule(accepted='"sum" or "none"'),
-    "kernel.modules": Rule(accepted="an empty array"),
+    "kernel.modules": Rule(accepted='an array of names such as "package.module", each once'),
+    "kernel.shared": Rule(accepted="names of modules that do not stand in kernel.modules, each once"),
     "ladder.horizon": _POSITIVE,
     "ladder.coarsest_steps": Rule(accepted="an integer of 1 or more", low=1),
     "ladder.refinement": Rule(accepted="an integer of 2 or more", low=2),
@@ -198,16 +199,18 @@ def default_layout(factors: int) -> str:
 class KernelTable(Table, frozen=True, kw_only=True, forbid_unknown_fields=True):
     """`[kernel]`: the function, what it takes, `factors` draws per step in axis order `layout`.
 
-    With `coupling` "none" the levels are measured, their differences are not.
+    With `coupling` "none" the levels are measured, their differences are not. `modules` are copied and rounded along
+    with the kernel's own, `shared` ones are run as they are.
     """
 
     table: ClassVar[str] = "kernel"
     run: str
-    takes: Literal["increments", "normals", "uniforms"]
+    takes: Literal["increments", "normals", "uniforms", "rng"]
     factors: int = 1
     layout: str = ""
     coupling: Literal["sum", "none"] = "sum"
     modules: tuple[str, ...] = ()
+    shared: tuple[str, ...] = ()
 
     def __post_init__(self) -> None:
         super().__post_init__()
@@ -222,8 +225,19 @@ class KernelTable(Table, frozen=True, kw_only=True, forbid_unknown_fields=True):
                 f'"{default}", or the same names in another order',
             )
         msgspec.structs.force_setattr(self, "layout", ", ".join(axes))
-        if self.modules:
-            self.refuse("modules", "listing further modules is not supported by this version")
+        for key in ("modules", "shared"):
+            self._check_names(key)
+
+    def _check_names(self, key: str) -> None:
+        """Refuse a name that is no module's, stands more than once, or lies in a package that is shared."""
+        for name in getattr(self, key):
+            if not all(part.isidentifier() and not keyword.iskeyword(part) for part in name.split(".")):
+                self.refuse(key, f"{shown(name)} is not the name of a module")
+            if (self.modules + self.shared).count(name) > 1:
+                self.refuse(key, f"{shown(name)} stands more than once")
+            above = next((outer for outer in self.shared if name.startswith(f"{outer}.")), None)
+            if key == "modules" and above is not None:
+                self.refuse(key, f"{shown(name)} lies in {shown(above)}, which is shared")
 
 
 class LadderTable(Table, frozen=True, kw_only=True, forbid_unknown_fields=True):

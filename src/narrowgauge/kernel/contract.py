@@ -1,4 +1,16 @@
-"""What a kernel is called with and what it has to return."""
+"""What a kernel is called with and what it has to return.
+
+| takes | called as                                                                          |
+|-------|------------------------------------------------------------------------------------|
+| rng   | kernel(rng, h, steps=..., paths=..., **parameters); `steps` only if it is accepted |
+| else  | kernel(draws, h, **parameters)                                                     |
+
+`rng` stands in for np.random.Generator; a kernel that calls np.random, or makes a generator of its own, leaves it be.
+An adapter turns this call into the one that a function of a library expects:
+
+    def kernel(rng, h, *, steps, paths, volatility):
+        return library.simulate(n_steps=steps, n_paths=paths, dt=h, sigma=volatility)[:, -1]
+"""
 
 from __future__ import annotations
 
@@ -10,14 +22,19 @@ import numpy as np
 import numpy.typing as npt
 
 from narrowgauge.arithmetic.rounding import Floats
+from narrowgauge.dispatch.array import as_state
 from narrowgauge.dispatch.copies import PrivateCopy
+from narrowgauge.dispatch.feed import Feed
+from narrowgauge.dispatch.randoms import generator
 from narrowgauge.dispatch.setting import Wrapped
+from narrowgauge.draws.tape import Reader, TapeError
 from narrowgauge.errors import AuditFileError, EscapeError, KernelError, SettingsMixedError
 from narrowgauge.kernel.auditfile import AuditFile
 
-__all__ = ["SINGLE", "arranged", "check_parameters", "evaluate"]
+__all__ = ["SINGLE", "arranged", "check_parameters", "evaluate", "evaluate_drawing"]
 
 SINGLE = "value"  # the name of a quantity that is returned as a bare array
+_COUNTS = ("steps", "paths")  # what a kernel that draws for itself has to be told
 _ACCEPTED = "accepted: an array of shape (paths,), or a mapping of names to such arrays"
 
 
@@ -45,6 +62,10 @@ def check_parameters(function: Callable[..., object], file: AuditFile) -> None:
     named = [
         one for one in takes if one not in positional[:2] and one.kind in (one.POSITIONAL_OR_KEYWORD, one.KEYWORD_ONLY)
     ]
+    if file.kernel.takes == "rng":
+        open_ended = any(one.kind is one.VAR_KEYWORD for one in takes)
+        _check_counts(file, {one.name for one in named} | (set(_COUNTS) if open_ended else set()))
+        named = [one for one in named if one.name not in _COUNTS]
     known = ", ".join(one.name for one in named) or "no parameters"
     for one in named:
         if one.default is one.empty and one.name not in file.parameters:
@@ -63,13 +84,43 @@ def evaluate(
     Raises EscapeError or RefusedError for what happened inside, also where the kernel swallowed it; KernelError for a
     result of the wrong kind or shape; and whatever the kernel raises.
     """
-    paths = draws.shape[-1]
+    owned = _owned(copy, keywords)
+    return _called(copy, lambda: copy.function(copy.own(arranged(draws, layout)), step, **owned), draws.shape[-1])
+
+
+def evaluate_drawing(
+    copy: PrivateCopy,
+    feed: Feed,
+    reader: Reader,
+    *,
+    step: float,
+    counts: tuple[int, int],
+    keywords: Mapping[str, object],
+) -> dict[str, npt.NDArray[np.float64]]:
+    """Call a kernel that draws for itself, from `reader`; `counts` are steps and paths. Returns as `evaluate` does.
+
+    Raises KernelError besides, where the kernel asks for other random numbers than the run it is compared with, also
+    where it swallowed that.
+    """
+    given = dict(zip(_COUNTS, counts, strict=True))
+    asked = _accepted(copy.function)
+    keywords = {**_owned(copy, keywords), **{name: given[name] for name in _COUNTS if name in asked}}
+    try:
+        with feed.run(reader):
+            return _called(copy, lambda: copy.function(generator(feed), step, **keywords), counts[1])
+    except TapeError as problem:
+        raise KernelError(str(problem)) from None
+
+
+def _called(copy: PrivateCopy, call: Callable[[], Any], paths: int) -> dict[str, npt.NDArray[np.float64]]:
+    """Return the quantities of one call."""
     setting = copy.setting
     if setting is not None:
         setting.faults.clear()
+        setting.paths = paths
     try:
         with np.errstate(all="ignore"):
-            result = copy.function(copy.own(arranged(draws, layout)), step, **keywords)
+            result = call()
     finally:
         if setting is not None and setting.faults:
             raise setting.faults[0]
@@ -82,6 +133,34 @@ def evaluate(
             raise KernelError(f"the kernel returned a quantity named {name!r}; accepted: names that are strings")
         quantities[name] = _column(values, name, paths, copy)
     return quantities
+
+
+def _accepted(function: Callable[..., object]) -> set[str]:
+    """Return which of `steps` and `paths` a kernel accepts by keyword; a function that does not tell accepts both."""
+    try:
+        takes = list(inspect.signature(function).parameters.values())
+    except ValueError:
+        return set(_COUNTS)
+    if any(one.kind is one.VAR_KEYWORD for one in takes):
+        return set(_COUNTS)
+    return {one.name for one in takes if one.kind in (one.POSITIONAL_OR_KEYWORD, one.KEYWORD_ONLY)} & set(_COUNTS)
+
+
+def _check_counts(file: AuditFile, accepted: set[str]) -> None:
+    """Raise AuditFileError unless a kernel that draws for itself can be told how many paths to run."""
+    for name in _COUNTS:
+        if name in file.parameters:
+            what = "the audit gives this number itself, by level and block"
+            raise AuditFileError(file.source, f"parameters.{name}", what, "a parameter of another name")
+    if "paths" not in accepted:
+        what = 'with takes = "rng" the kernel has to take the number of paths'
+        wanted = "a function (rng, h, *, steps, paths, **parameters); steps may be left out"
+        raise AuditFileError(file.source, "kernel.run", what, wanted)
+
+
+def _owned(copy: PrivateCopy, keywords: Mapping[str, object]) -> dict[str, Any]:
+    """Return parameters as the kernel gets them: arrays of floats are constants of the state, rounded once."""
+    return {name: as_state(value, copy.setting) for name, value in keywords.items()}
 
 
 def _column(values: Any, name: str, paths: int, copy: PrivateCopy) -> npt.NDArray[np.float64]:

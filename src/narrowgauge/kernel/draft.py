@@ -1,8 +1,8 @@
 """A first audit file for a kernel, from its source text alone; nothing of it is executed.
 
-A kernel is called as `kernel(draws, h, **parameters)`: the draws, the step size, the parameters by keyword.
-Its signature gives the parameters, the name of its first argument what it takes, its body the draws of a
-step.
+A kernel is called as `kernel(draws, h, **parameters)`: the draws, the step size, the parameters by keyword; one that
+draws for itself as `kernel(rng, h, steps=..., paths=..., **parameters)`. Its signature gives the parameters, the name
+of its first argument what it takes, its body the draws of a step.
 """
 
 from __future__ import annotations
@@ -33,16 +33,18 @@ _TAKES_BY_NAME: tuple[tuple[str, re.Pattern[str]], ...] = (
     ("normals", re.compile(r"zs?|xis?|eps|epsilons?|.*normals?|.*gaussians?")),
     ("uniforms", re.compile(r"us?|.*uniforms?")),
 )
+_COUNTS = ("steps", "paths")  # what a kernel that draws for itself is told
 _STEP_NAMES = re.compile(r"h|dt|delta_?t?|.*step(_?size)?|time_?step|tau")
 
 # One line of meaning for every key; what TABLES has and this has not is found by a test.
 _MEANINGS: dict[str, str] = {
     "kernel.run": "file and function; the path is relative to the folder of this file",
-    "kernel.takes": "increments, normals or uniforms",
+    "kernel.takes": "increments, normals, uniforms or rng",
     "kernel.factors": "draws per step",
     "kernel.layout": "order of the axes of the array of draws",
     "kernel.coupling": '"none": levels are measured without their differences',
-    "kernel.modules": "further modules whose NumPy is rounded; this version takes none",
+    "kernel.modules": "further modules and packages whose NumPy is rounded",
+    "kernel.shared": "modules of theirs that cannot be copied, run as they are and not rounded",
     "ladder.horizon": "time that a path covers; fill in",
     "ladder.coarsest_steps": "steps of a path on level 0",
     "ladder.refinement": "factor from the steps of a level to those of the next",
@@ -89,9 +91,10 @@ def draft(target: str) -> str:
     if not file.endswith(".py"):
         raise AuditFileError(target, "", f'"{file}" is not a .py file', _ACCEPTED)
     function = _function(Path(file), name)
-    positional = [*function.args.posonlyargs, *function.args.args]
+    positional = _positional(function)
     draws = positional[0].arg if positional else ""
-    factors, layout = _factors(function, draws)
+    takes = _takes(function, draws)
+    factors, layout = _factors(function, draws) if takes != "rng" else (1, "")
     run = f"{PurePath(file).as_posix()}:{name}"
     finest = LadderTable(horizon=1.0, finest=0).finest_within(most_steps(factors))
     values = {**_VALUES, "kernel.run": run, "ladder.finest": min(8, finest)}
@@ -101,15 +104,15 @@ def draft(target: str) -> str:
         "# filled in. A key behind a # is optional and shows its default.",
         "",
         "[kernel]",
-        *_contract(function),
+        *_contract(function, takes),
         _line("kernel.run", values),
-        *_takes_lines(draws),
-        *_draws_lines(factors, layout, draws, values),
-        *(_line(f"kernel.{key}", values) for key in ("coupling", "modules")),
+        *_takes_lines(function, draws, takes),
+        *(_draws_lines(factors, layout, draws, values) if takes != "rng" else ()),
+        *(_line(f"kernel.{key}", values) for key in ("coupling", "modules", "shared")),
         "",
         "[parameters]",
         "# Passed to the kernel by keyword; arrays of numbers arrive as float64 NumPy arrays.",
-        *_parameter_lines(function),
+        *_parameter_lines(function, _COUNTS if takes == "rng" else ()),
     ]
     for table, record in TABLES.items():
         if table != "kernel":
@@ -173,7 +176,7 @@ def _line(key: str, values: dict[str, object], note: str = "") -> str:
     return f"{optional}{name} = {_toml(value)}  # {note or _MEANINGS[key]}"
 
 
-def _contract(function: ast.FunctionDef) -> list[str]:
+def _contract(function: ast.FunctionDef, takes: str) -> list[str]:
     """Return comments on how the function will be called, and on what stands against that."""
     arguments = function.args
     names = [argument.arg for argument in (*arguments.posonlyargs, *arguments.args)]
@@ -184,21 +187,35 @@ def _contract(function: ast.FunctionDef) -> list[str]:
         ]
     first = names[0] if names else "draws"
     second = names[1] if len(names) > 1 else "h"
-    lines = [f"# Called as {function.name}({first}, {second}, **parameters); {second} is the step size."]
+    given = [f"{name}=..." for name in _COUNTS if takes == "rng" and name in _named(function)]
+    call = ", ".join([first, second, *given, "**parameters"])
+    lines = [f"# Called as {function.name}({call}); {second} is the step size."]
+    if takes == "rng" and "paths" not in _named(function) and function.args.kwarg is None:
+        lines.append(f"# {function.name} takes no number of paths: write an adapter that does, and name it in run.")
     if not _STEP_NAMES.fullmatch(second.lower()):
         lines.append(f"# That {second} is the step size does not show in its name; check.")
     return lines
 
 
-def _takes_lines(draws: str) -> list[str]:
-    takes = next((takes for takes, names in _TAKES_BY_NAME if names.fullmatch(draws.lower())), None)
-    if takes == "rng":
-        return [
-            f"# {draws} looks like a generator of random numbers. This version cannot run such a kernel:",
-            "# write an adapter that takes an array of draws instead, and name it in run.",
-            _line("kernel.takes", {"kernel.takes": "increments"}, "guessed; check"),
-        ]
-    note = f"by the name of {draws}; {_MEANINGS['kernel.takes']}" if takes else "guessed; check"
+def _takes(function: ast.FunctionDef, draws: str) -> str:
+    """Return what a kernel takes by the name of its first argument, or as it asks for the number of paths; else ""."""
+    if "paths" in _named(function):
+        return "rng"
+    return next((takes for takes, names in _TAKES_BY_NAME if names.fullmatch(draws.lower())), "")
+
+
+def _named(function: ast.FunctionDef) -> set[str]:
+    """Return the names of the arguments after the first two that can be given by keyword."""
+    return {argument.arg for argument in (*_positional(function)[2:], *function.args.kwonlyargs)}
+
+
+def _positional(function: ast.FunctionDef) -> list[ast.arg]:
+    return [*function.args.posonlyargs, *function.args.args]
+
+
+def _takes_lines(function: ast.FunctionDef, draws: str, takes: str) -> list[str]:
+    by = "as it takes paths" if takes == "rng" and "paths" in _named(function) else f"by the name of {draws}"
+    note = f"{by}; {_MEANINGS['kernel.takes']}" if takes else "guessed; check"
     return [_line("kernel.takes", {"kernel.takes": takes or "increments"}, note)]
 
 
@@ -212,16 +229,18 @@ def _draws_lines(factors: int, layout: str, draws: str, values: dict[str, object
     ]
 
 
-def _parameter_lines(function: ast.FunctionDef) -> list[str]:
+def _parameter_lines(function: ast.FunctionDef, left_out: tuple[str, ...]) -> list[str]:
     """Return a line for each argument after the first two: its default, or a comment that asks for one."""
     arguments = function.args
-    positional = [*arguments.posonlyargs, *arguments.args]
+    positional = _positional(function)
     padding: list[ast.expr | None] = [None] * (len(positional) - len(arguments.defaults))
     pairs = [*zip(positional, [*padding, *arguments.defaults], strict=True)][2:]
     pairs += zip(arguments.kwonlyargs, arguments.kw_defaults, strict=True)
     lines = []
     for argument, default in pairs:
         key = dotted(argument.arg)
+        if argument.arg in left_out:
+            continue
         if argument in arguments.posonlyargs:
             lines.append(f"# {key} cannot be passed by keyword: the kernel needs an adapter")
         elif default is None:

@@ -2,26 +2,33 @@
 
 from __future__ import annotations
 
-import sys
 from collections.abc import Callable
 from dataclasses import dataclass
-from importlib.machinery import PathFinder
 from pathlib import Path
-from types import CodeType
+from types import CodeType, FunctionType
 from typing import Any
 
 from narrowgauge.arithmetic.arithmetic import Arithmetic
-from narrowgauge.dispatch.copies import PrivateCopy, copy_function, copy_module, new_setting
+from narrowgauge.dispatch.copies import PrivateCopy, copy_function, new_setting
+from narrowgauge.dispatch.feed import Feed
+from narrowgauge.dispatch.importing import Copies
+from narrowgauge.dispatch.modules import STOOD_IN, Found, Sources
 from narrowgauge.dispatch.setting import Observer
 from narrowgauge.errors import AuditFileError, DispatchError, KernelError
 from narrowgauge.kernel.auditfile import AuditFile
+from narrowgauge.kernel.fingerprint import fingerprint
 
 __all__ = ["KernelSource", "find_kernel", "private_copy"]
+
+_TWICE = "a module that can be executed twice; else list it under kernel.shared, where it is not rounded"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class KernelSource:
-    """A kernel that was found: compiled code and the function's name in it, or a function handed over from Python."""
+    """A kernel that was found: compiled code and the function's name in it, or a function handed over from Python.
+
+    `sources` holds the kernel's module and the listed ones, read and compiled once for all arms.
+    """
 
     run: str
     source: str
@@ -29,60 +36,139 @@ class KernelSource:
     code: CodeType | None
     module: str
     function: Callable[..., Any] | None
+    sources: Sources
+
+    def digest(self) -> str:
+        """Return the fingerprint of all that is copied: source texts, and the function that was handed over.
+
+        Raises AuditFileError where a file of a listed package cannot be read.
+        """
+        try:
+            return fingerprint(self.sources.texts(), self.function)
+        except OSError as problem:
+            what = f"cannot read {problem.filename}: {problem.strerror}"
+            raise AuditFileError(self.source, "kernel.modules", what, "Python files") from None
 
 
 def find_kernel(audit_file: AuditFile) -> KernelSource:
-    """Find and compile the kernel that `[kernel] run` names, without executing it.
+    """Find and compile the kernel that `[kernel] run` names, and find the modules that it lists, executing nothing.
 
     Raises AuditFileError where there is no such file or module, or it is not Python.
     """
     run, source = audit_file.kernel.run, audit_file.source
     target, _, name = run.rpartition(":")
-    if audit_file.function is not None:
-        return KernelSource(run=run, source=source, name=name, code=None, module=target, function=audit_file.function)
-    path = _located(target, audit_file)
-    try:
-        text = path.read_bytes()
-        code = compile(text, str(path), "exec", dont_inherit=True)
-    except OSError as problem:
-        raise AuditFileError(source, "kernel.run", f"cannot read {path}: {problem.strerror}", "a Python file") from None
-    except (SyntaxError, ValueError) as problem:
-        line = getattr(problem, "lineno", None)
-        place = f"{path}:{line}" if line else str(path)
-        what = getattr(problem, "msg", str(problem))
-        raise AuditFileError(source, "kernel.run", f"{place} is not Python: {what}", "a Python file") from None
-    module = path.stem if target.endswith(".py") else target
-    return KernelSource(run=run, source=source, name=name, code=code, module=module, function=None)
+    function, path = audit_file.function, None
+    if function is None:
+        path = _located(target, audit_file)
+    elif isinstance(function, FunctionType):
+        path = Path(function.__code__.co_filename)
+    sources = _sources(audit_file, function, path, target)
+    code, module = None, target
+    if function is None and path is not None:
+        module = sources.name_of(path) or (path.stem if target.endswith(".py") else target)
+        code = _compiled(sources, sources.place(module, str(path)), "kernel.run", source)
+    _check_listed(audit_file, sources)
+    return KernelSource(run=run, source=source, name=name, code=code, module=module, function=function, sources=sources)
 
 
-def private_copy(kernel: KernelSource, arithmetic: Arithmetic | None, observer: Observer | None = None) -> PrivateCopy:
+def private_copy(
+    kernel: KernelSource, arithmetic: Arithmetic | None, observer: Observer | None = None, draws: Feed | None = None
+) -> PrivateCopy:
     """Return the kernel's function executed anew in `arithmetic`, or under plain NumPy for None.
 
-    Raises AuditFileError where the module has no such function, KernelError where executing it raises.
+    With `draws` numpy.random draws from there; else random numbers are refused, except under plain NumPy.
+    Raises AuditFileError where the module has no such function, or a module cannot be copied; KernelError where
+    executing it raises.
     """
-    setting = None if arithmetic is None else new_setting(arithmetic, observer)
-    if kernel.code is None:
-        assert kernel.function is not None  # find_kernel gives one of the two
-        function = kernel.function if setting is None else copy_function(kernel.function, setting)
-        return PrivateCopy(function, setting)
+    setting = None if arithmetic is None else new_setting(arithmetic, observer, draws)
+    copies = Copies(setting, kernel.sources, draws)
     try:
-        module = copy_module(kernel.code, kernel.module, setting)
-    except (DispatchError, KernelError):
-        raise
+        if kernel.function is not None:
+            if setting is None and draws is None:
+                return PrivateCopy(kernel.function, None)
+            return PrivateCopy(copy_function(kernel.function, setting, copies), setting, copies)
+        module = copies.load(kernel.module)
     except (Exception, SystemExit) as problem:  # whatever the user's module raises is the user's to see
+        _raise_uncopied(kernel, copies, problem)
+        if isinstance(problem, (DispatchError, KernelError)):
+            raise
         raise KernelError(f"{kernel.run}: executing the module raised {type(problem).__name__}: {problem}") from problem
+    _raise_uncopied(kernel, copies, None)
+    if setting is not None and setting.faults:  # the module swallowed it
+        raise setting.faults[0]
     found = getattr(module, kernel.name, None)
     if not callable(found):
         known = sorted(
             n for n, v in vars(module).items() if callable(v) and getattr(v, "__module__", "") == kernel.module
         )
+        assert kernel.code is not None  # find_kernel gives one of the two
         raise AuditFileError(
             kernel.source,
             "kernel.run",
             f"{kernel.code.co_filename} has no function {kernel.name!r}",
             "one of " + ", ".join(known) if known else "a file that defines a function",
         )
-    return PrivateCopy(found, setting)
+    return PrivateCopy(found, setting, copies)
+
+
+def _raise_uncopied(kernel: KernelSource, copies: Copies, problem: BaseException | None) -> None:
+    """Raise AuditFileError if a module could not be copied, also where the kernel went on without it."""
+    if copies.refused is not None:
+        name, reason = copies.refused
+    elif copies.failed is not None and copies.failed[1] is problem and not isinstance(problem, DispatchError):
+        name, reason = copies.failed[0], f"executing it anew raised {type(problem).__name__}: {problem}"
+        if name == kernel.module or isinstance(problem, KernelError):
+            return
+    else:
+        return
+    own = name == kernel.module
+    accepted = "a module that can be executed twice" if own else _TWICE
+    key = "kernel.run" if own else "kernel.modules"
+    raise AuditFileError(kernel.source, key, f"{name} cannot be copied: {reason}", accepted) from problem
+
+
+def _sources(audit_file: AuditFile, function: Callable[..., object] | None, path: Path | None, target: str) -> Sources:
+    """Return where listed modules are searched for: the folder of a kernel that is no part of a package comes first."""
+    beside = [] if path is None else [path.parent]
+    inside = "." in function.__module__ if function is not None else not target.endswith(".py")
+    # A package may hold a module of its own name, which must not hide it: its folder comes last.
+    folders = [audit_file.folder] if inside else [*beside, audit_file.folder]
+    return Sources(folders, audit_file.kernel.modules, audit_file.kernel.shared, last=beside)
+
+
+def _check_listed(audit_file: AuditFile, sources: Sources) -> None:
+    """Raise AuditFileError at the first listed module that is not there, or of which no copy can be made."""
+    source = audit_file.source
+    for key, names in (("kernel.modules", sources.listed), ("kernel.shared", sources.shared)):
+        for name in names:
+            found = sources.find(name)
+            if name.partition(".")[0] in STOOD_IN:
+                what = f"{name} belongs to {name.partition('.')[0]}, for which every copy has a stand-in"
+                raise AuditFileError(source, key, what, "modules of the kernel's own")
+            if found is None:
+                what = f"no Python module {name!r}"
+                raise AuditFileError(source, key, what, "a module beside the kernel, or an importable one")
+            if key == "kernel.shared":
+                continue
+            if found.instead:
+                what = f"{name} cannot be copied: it is compiled, without Python source ({found.instead})"
+                raise AuditFileError(source, key, what, _TWICE)
+            if found.file is not None:
+                _compiled(sources, found, key, source)
+
+
+def _compiled(sources: Sources, found: Found, key: str, source: str) -> CodeType:
+    """Return the code of a module; AuditFileError where it cannot be read or is not Python."""
+    path = found.file
+    try:
+        return sources.code(found)
+    except OSError as problem:
+        raise AuditFileError(source, key, f"cannot read {path}: {problem.strerror}", "a Python file") from None
+    except (SyntaxError, ValueError) as problem:
+        line = getattr(problem, "lineno", None)
+        place = f"{path}:{line}" if line else str(path)
+        what = getattr(problem, "msg", str(problem))
+        raise AuditFileError(source, key, f"{place} is not Python: {what}", "a Python file") from None
 
 
 def _located(target: str, audit_file: AuditFile) -> Path:
@@ -97,18 +183,9 @@ def _located(target: str, audit_file: AuditFile) -> Path:
             f"no such file: {path}",
             "a Python file, relative to the audit file",
         )
-    where: list[str] | None = [str(audit_file.folder), *sys.path]
-    parts = target.split(".")
-    for depth, part in enumerate(parts):
-        # By its last name alone: under its full name a package without __init__.py asks sys.modules for its parent.
-        spec = PathFinder.find_spec(part, where)
-        if spec is None:
-            break
-        where = None if spec.submodule_search_locations is None else list(spec.submodule_search_locations)
-        if depth == len(parts) - 1 and spec.origin and spec.origin.endswith(".py"):
-            return Path(spec.origin).resolve()
-        if where is None:
-            break
+    found = Sources([audit_file.folder]).find(target)
+    if found is not None and found.file is not None:
+        return Path(found.file)
     raise AuditFileError(
         audit_file.source,
         "kernel.run",

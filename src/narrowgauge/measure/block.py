@@ -11,13 +11,15 @@ import numpy.typing as npt
 
 from narrowgauge.arithmetic.arithmetic import arithmetic_named
 from narrowgauge.dispatch.copies import PrivateCopy
-from narrowgauge.draws.coarsen import Draws, coarse_draws, fine_draws
-from narrowgauge.draws.streams import Purpose, block_paths, uniforms
+from narrowgauge.draws.coarsen import Draws
+from narrowgauge.draws.streams import Purpose, UniformStream, block_paths, uniforms
+from narrowgauge.draws.tape import Tape
 from narrowgauge.errors import AuditFileError, DispatchError, KernelError
 from narrowgauge.kernel.auditfile import AuditFile
-from narrowgauge.kernel.contract import evaluate
-from narrowgauge.kernel.loading import KernelSource, private_copy
+from narrowgauge.kernel.loading import KernelSource
 from narrowgauge.measure.arms import REFERENCE, arms_of, pairs_of
+from narrowgauge.measure.calls import Caller
+from narrowgauge.measure.drawplan import DrawPlan, plan_draws
 from narrowgauge.measure.moments import Moments, Series
 from narrowgauge.measure.tally import LevelTally, QuantityTally, Raised
 
@@ -47,26 +49,44 @@ class BlockRunner:
     def __init__(self, audit_file: AuditFile, kernel: KernelSource) -> None:
         self._file = audit_file
         self._kernel = kernel
-        self._copies: dict[str, PrivateCopy] = {}
+        self._callers: dict[str, Caller] = {}
+        self._plan: DrawPlan | None = None
         self.arms = arms_of(audit_file.arms)
         self.pairs = pairs_of(self.arms, audit_file.formats.wide)
         self._names: tuple[int, list[str]] | None = None  # the level first run, and the quantities it has
 
+    @property
+    def remarks(self) -> tuple[str, ...]:
+        """What the audit has to say about the draws of a kernel that draws for itself."""
+        return () if self._file.kernel.takes != "rng" else self._drawing().remarks
+
     def paths(self, level: int) -> int:
         """Return the number of paths of one block of a level."""
         file = self._file
-        return block_paths(file.sampling.block, file.ladder.steps(level), file.kernel.factors)
+        factors = file.kernel.factors if file.kernel.takes != "rng" else self._drawing().factors
+        return block_paths(file.sampling.block, file.ladder.steps(level), factors)
 
     def coupled(self, level: int) -> bool:
         """Whether a level has a coarse path on the same draws."""
-        return self._file.coupled(level)
+        coupled = self._file.coupled(level)
+        return coupled and (self._file.kernel.takes != "rng" or self._drawing().layout is not None)
 
-    def draws(self, level: int, block: int, purpose: Purpose = Purpose.AUDIT, paths: int | None = None) -> Draws:
-        """Return the float64 draws of a block, (steps, factors, paths)."""
-        file = self._file
-        shape = (file.ladder.steps(level), file.kernel.factors, paths or self.paths(level))
-        values = uniforms(file.sampling.seed, purpose, level, block, shape)
-        return Draws.of(file.kernel.takes, values, file.ladder.step_size(level), file.ladder.refinement)
+    def draws(self, level: int, block: int, purpose: Purpose = Purpose.AUDIT, paths: int | None = None) -> Draws | Tape:
+        """Return the float64 draws of a block, (steps, factors, paths); a tape where the kernel draws for itself."""
+        file, paths = self._file, paths or self.paths(level)
+        seed, takes, refinement = file.sampling.seed, file.kernel.takes, file.ladder.refinement
+        steps = file.ladder.steps(level)
+        if takes == "rng":
+            stream, layout = UniformStream(seed, purpose, level, block), self._drawing().layout
+            return Tape(stream, paths=paths, steps=steps, refinement=refinement, layout=layout)
+        values = uniforms(seed, purpose, level, block, (steps, file.kernel.factors, paths))
+        return Draws.of(takes, values, file.ladder.step_size(level), refinement)
+
+    def _drawing(self) -> DrawPlan:
+        """Return what the kernel draws, found out once."""
+        if self._plan is None:
+            self._plan = plan_draws(self._file, self._kernel)
+        return self._plan
 
     def run(self, level: int, block: int) -> LevelTally:
         """Run one block of one level through every arm.
@@ -102,20 +122,14 @@ class BlockRunner:
             raised=raised,
         )
 
-    def _paths(self, draws: Draws, level: int, arm: str) -> _Paths | Raised:
+    def _paths(self, draws: Draws | Tape, level: int, arm: str) -> _Paths | Raised:
         """Run fine and coarse path in one arm."""
-        file, arithmetic = self._file, arithmetic_named(arm)
-        copy = self._copies.get(arm)
+        caller = self._callers.get(arm)
         try:
-            if copy is None:
-                copy = self._copies[arm] = private_copy(self._kernel, arithmetic)
-            fine = fine_draws(draws, arithmetic)
-            layout, ladder = file.kernel.layout, file.ladder
-            values = evaluate(copy, fine, ladder.step_size(level), file.keywords(), layout)
-            coarse: dict[str, Values] = {}
-            if self.coupled(level):
-                drawn = coarse_draws(draws, fine, arithmetic)
-                coarse = evaluate(copy, drawn, ladder.step_size(level - 1), file.keywords(), layout)
+            if caller is None:
+                caller = self._callers[arm] = Caller(self._file, self._kernel, arithmetic_named(arm))
+            values = caller.fine(draws, level)
+            coarse = caller.coarse(draws, level) if self.coupled(level) else {}
         except KernelError as problem:
             raise KernelError(str(problem), level=level, arm=arm) from problem.__cause__
         except DispatchError as problem:
@@ -126,7 +140,7 @@ class BlockRunner:
             if arm == REFERENCE:
                 what = f"the kernel raised {type(problem).__name__}: {problem}"
                 raise KernelError(what, level=level, arm=arm) from problem
-            return self._raised(problem, copy)
+            return self._raised(problem, None if caller is None else caller.copy)
         if coarse:
             _same_quantities(coarse, values, "its fine path", level, arm)
         return _Paths(fine=values, coarse=coarse)

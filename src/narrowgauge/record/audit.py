@@ -51,10 +51,13 @@ SCHEMA = "narrowgauge-audit/1"
 
 
 class KernelEntry(Entry, frozen=True, kw_only=True):
-    """Which function was audited; the fingerprint is None for one that has no source file."""
+    """Which function was audited; the fingerprint is the SHA-256 of its source and of all listed modules.
+
+    For a function handed over from Python it is that of its code, defaults and closure.
+    """
 
     run: str
-    fingerprint: str | None
+    fingerprint: str
 
 
 class ArithmeticEntry(Entry, frozen=True, kw_only=True):

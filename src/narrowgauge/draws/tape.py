@@ -1,0 +1,250 @@
+"""The tape: what a block's fine reference run asked for, in order, and the draws that every other run gets for it.
+
+| draws                           | fine, arm a               | coarse, arm a                                          |
+|---------------------------------|---------------------------|--------------------------------------------------------|
+| normal                          | round(z)                  | sum of M rounded draws in the arm's arithmetic, in     |
+|                                 |                           | order of time, times round(1 / sqrt(M))                |
+| uniform                         | round(u); 0 and 1 become  | round(Phi((z_1 + ... + z_M) / sqrt(M))), likewise      |
+|                                 | the nearest value inside  |                                                        |
+| poisson, gamma, whose parameter | counts; round(g)          | sum of M counts; of M rounded draws in the arm's       |
+| is the sum of the fine ones     |                           | arithmetic, in order of time                           |
+| every other one                 | round(quantile(u))        | round(quantile(Phi((z_1 + ... + z_M) / sqrt(M))))      |
+
+u are the block's uniforms, request by request, and z their normals. Whole numbers are exact.
+"""
+
+from __future__ import annotations
+
+import math
+from typing import Any, Protocol
+
+import numpy as np
+import numpy.typing as npt
+
+from narrowgauge.arithmetic.arithmetic import Arithmetic
+from narrowgauge.draws.coarsen import inside
+from narrowgauge.draws.layout import Layout, Request, StepAxis
+from narrowgauge.draws.normals import exact_normals, normal_cdf
+from narrowgauge.draws.quantiles import ADDITIVE, inverted
+from narrowgauge.draws.streams import UniformStream
+
+__all__ = ["ArmDraws", "Reader", "Tape", "TapeError"]
+
+Doubles = npt.NDArray[np.float64]
+Drawn = npt.NDArray[Any]
+
+# A parameter such as rate * dt is taken for a multiple of the step where it is one to eight roundings on either side.
+_SAME_PARAMETER = 16 * 2.0**-53
+_INSIDE = (2.0**-53, 1.0 - 2.0**-53)
+
+
+class TapeError(Exception):
+    """A run asked for other random numbers than the run that it is compared with."""
+
+
+class Reader(Protocol):
+    """Gives a run its draws, request by request."""
+
+    position: int
+
+    def draw(self, request: Request, values: tuple[Any, ...]) -> Drawn:
+        """Return the draws of the next request as new carriers or int64, of its size.
+
+        `values` are all parameters, floats or float64 arrays. Raises TapeError where another request was due, and
+        ValueError for parameters that the distribution does not have.
+        """
+
+    def finish(self) -> None:
+        """Raise TapeError where requests are left over."""
+
+
+class Tape:
+    """The uniforms of a block by request; `steps` and `refinement` are those of the fine run.
+
+    The first run to the end writes the requests, all others must repeat them. A coarse run needs a layout.
+    """
+
+    def __init__(
+        self, stream: UniformStream, *, paths: int, steps: int, refinement: int = 1, layout: Layout | None = None
+    ) -> None:
+        self.paths, self.steps, self.refinement, self.layout = paths, steps, refinement, layout
+        self.requests: list[Request] = []
+        self.closed = False
+        self._stream = stream
+        self._uniforms: list[Doubles] = []
+        self._normals: dict[int, Doubles] = {}
+
+    def write(self, request: Request) -> None:
+        """Take a request down and draw its uniforms."""
+        self.requests.append(request)
+        self._uniforms.append(self._stream.take(request.size))
+
+    def uniforms(self, place: int) -> Doubles:
+        """Return the uniforms of a request, to be read only."""
+        return self._uniforms[place]
+
+    def normals(self, place: int) -> Doubles:
+        """Return the normals behind a request, made once, to be read only."""
+        if place not in self._normals:
+            self._normals[place] = exact_normals(self._uniforms[place])
+        return self._normals[place]
+
+
+class ArmDraws:
+    """A block's draws in one arithmetic: the fine run first, then the coarse one, which sums what the fine one got."""
+
+    def __init__(self, tape: Tape, arithmetic: Arithmetic) -> None:
+        self.tape, self.arithmetic = tape, arithmetic
+        self.drawn: list[Drawn] = []
+
+    def fine(self) -> Reader:
+        """Return the reader of the fine run."""
+        self.drawn.clear()
+        return _Fine(self)
+
+    def coarse(self) -> Reader:
+        """Return the reader of the coarse run; TapeError where the fine one did not keep to the tape's layout."""
+        layout = self.tape.layout
+        assert layout is not None  # levels without a layout are not coupled
+        expected = layout.requests(self.tape.steps)
+        if len(self.tape.requests) != expected:
+            raise TapeError(
+                f"the kernel asked {len(self.tape.requests)} times for random numbers where runs of other numbers of "
+                f"steps let expect {expected}"
+            )
+        return _Coarse(self, layout)
+
+
+class _Fine:
+    """Serves the fine run of an arm, and writes the tape if it is the first."""
+
+    def __init__(self, arm: ArmDraws) -> None:
+        self.position = 0
+        self._arm = arm
+
+    def draw(self, request: Request, values: tuple[Any, ...]) -> Drawn:
+        """Return the draws of the next request."""
+        tape, place, arithmetic = self._arm.tape, self.position, self._arm.arithmetic
+        if not tape.closed:
+            tape.write(request)
+        elif place >= len(tape.requests):
+            raise TapeError(_beyond(len(tape.requests), "the reference"))
+        elif not tape.requests[place].agrees(request):
+            raise TapeError(_other(place, request, tape.requests[place], "the reference"))
+        if request.name == "normal":
+            drawn: Drawn = arithmetic.cast(tape.normals(place))
+        elif request.name == "uniform":
+            drawn = inside(arithmetic.cast(tape.uniforms(place)), arithmetic)
+        else:
+            drawn = _rounded(inverted(request.name, tape.uniforms(place), values), arithmetic)
+        self.position += 1
+        if tape.layout is None:  # no coarse run follows
+            return drawn
+        self._arm.drawn.append(drawn)
+        return drawn.copy()  # the kernel may write into its own
+
+    def finish(self) -> None:
+        """Close the tape, or raise TapeError where requests are left over."""
+        self._arm.tape.closed = True
+        _finished(self.position, len(self._arm.tape.requests), "the reference")
+
+
+class _Coarse:
+    """Serves the coarse run of an arm."""
+
+    def __init__(self, arm: ArmDraws, layout: Layout) -> None:
+        self.position = 0
+        self._arm, self._layout = arm, layout
+        self._steps = arm.tape.steps // arm.tape.refinement
+
+    def draw(self, request: Request, values: tuple[Any, ...]) -> Drawn:
+        """Return the draws of the next request, made from those of the fine run."""
+        tape, arithmetic, m = self._arm.tape, self._arm.arithmetic, self._arm.tape.refinement
+        expected = self._layout.requests(self._steps)
+        if self.position >= expected:
+            raise TapeError(_beyond(expected, "its fine path"))
+        places, axis = self._layout.sources(self.position, self._steps, m)
+        behind = [tape.requests[place] for place in places]
+        for one in behind:
+            if one.name != request.name or _coarsened(one.size, axis, m) != request.size:
+                raise TapeError(_other(self.position, request, one, "its fine path"))
+        self.position += 1
+        if len(places) == 1 and axis is None:  # not of a step: the same in both runs
+            if request.name == "normal":
+                return self._arm.drawn[places[0]].copy()
+            return self._inverted(request.name, tape.uniforms(places[0]), values)
+        if request.name == "normal" or self._adds_up(request, behind, m if axis else 1):
+            total = self._sum([self._arm.drawn[place] for place in places], axis, request.size)
+            if request.name == "normal":
+                return np.asarray(arithmetic.apply(np.multiply, (total, arithmetic.constant(1.0 / math.sqrt(m)))))
+            return total
+        parts = [part for place in places for part in self._parts(tape.normals(place), axis)]
+        normal = parts[0].copy()
+        for part in parts[1:]:
+            normal += part
+        uniforms = normal_cdf(normal / math.sqrt(m)).reshape(request.size)
+        return self._inverted(request.name, np.clip(uniforms, *_INSIDE), values)
+
+    def finish(self) -> None:
+        """Raise TapeError where requests are left over."""
+        _finished(self.position, self._layout.requests(self._steps), "its fine path")
+
+    def _inverted(self, name: str, uniforms: Doubles, values: tuple[Any, ...]) -> Drawn:
+        arithmetic = self._arm.arithmetic
+        if name == "uniform":
+            return inside(arithmetic.cast(uniforms), arithmetic)
+        return _rounded(inverted(name, uniforms, values), arithmetic)
+
+    def _adds_up(self, request: Request, behind: list[Request], each: int) -> bool:
+        """Whether the fine draws add up to a draw with the coarse parameter: it is the sum of the fine ones."""
+        if request.name not in ADDITIVE:
+            return False
+        fine, coarse = [one.parameters[0] for one in behind], request.parameters[0]
+        if coarse is None or any(one is None for one in fine):
+            return False  # from the state, or an array: not known to be in proportion
+        total = math.fsum(one for one in fine if one is not None) * each
+        return abs(total - coarse) <= _SAME_PARAMETER * abs(coarse)
+
+    def _parts(self, values: Drawn, axis: StepAxis | None) -> list[Drawn]:
+        """Return the draws of the M fine steps in a coarse one, in order of time."""
+        if axis is None:
+            return [values]
+        m = self._arm.tape.refinement
+        split = axis.split(values.shape, self._steps, m)
+        assert split is not None  # the layout holds for this size
+        shape, place = split
+        spread = values.reshape(shape)
+        return [spread.take(j, axis=place + 1) for j in range(m)]
+
+    def _sum(self, drawn: list[Drawn], axis: StepAxis | None, size: tuple[int, ...]) -> Drawn:
+        """Return the sum in the arm's arithmetic and in order of time; whole numbers are exact."""
+        total, *rest = [part for values in drawn for part in self._parts(values, axis)]
+        for part in rest:
+            exact = total.dtype.kind == "i"
+            total = total + part if exact else np.asarray(self._arm.arithmetic.apply(np.add, (total, part)))
+        return np.array(total.reshape(size), order="C", copy=True)
+
+
+def _rounded(drawn: Drawn, arithmetic: Arithmetic) -> Drawn:
+    return drawn if drawn.dtype.kind == "i" else arithmetic.cast(drawn)
+
+
+def _coarsened(size: tuple[int, ...], axis: StepAxis | None, refinement: int) -> tuple[int, ...]:
+    """Return the size that a coarse run has where the fine one has `size`."""
+    if axis is None:
+        return size
+    long = size[axis.place]
+    return (*size[: axis.place], long // refinement, *size[axis.place + 1 :])
+
+
+def _beyond(count: int, owner: str) -> str:
+    return f"the kernel asked for random numbers more often than {owner}, which asked {count} times"
+
+
+def _other(place: int, request: Request, due: Request, owner: str) -> str:
+    return f"request {place} for random numbers is {request} where {owner} has {due}"
+
+
+def _finished(position: int, expected: int, owner: str) -> None:
+    if position != expected:
+        raise TapeError(f"the kernel asked {position} times for random numbers where {owner} asked {expected} times")

@@ -1,0 +1,78 @@
+"""A kernel in one arithmetic, called on the draws of a block: an array that it gets, or a tape that it draws from."""
+
+from __future__ import annotations
+
+import numpy as np
+import numpy.typing as npt
+
+from narrowgauge.arithmetic.arithmetic import Arithmetic, arithmetic_named
+from narrowgauge.arithmetic.rounding import Floats
+from narrowgauge.dispatch.copies import PrivateCopy
+from narrowgauge.dispatch.feed import Feed
+from narrowgauge.dispatch.setting import Observer, Place
+from narrowgauge.draws.coarsen import Draws, coarse_draws, fine_draws
+from narrowgauge.draws.tape import ArmDraws, Reader, Tape, TapeError
+from narrowgauge.errors import KernelError
+from narrowgauge.kernel.auditfile import AuditFile
+from narrowgauge.kernel.contract import evaluate, evaluate_drawing
+from narrowgauge.kernel.loading import KernelSource, private_copy
+from narrowgauge.measure.arms import REFERENCE
+
+__all__ = ["Caller", "Quantities"]
+
+Quantities = dict[str, npt.NDArray[np.float64]]
+
+
+class Caller:
+    """A private copy of a kernel in one arithmetic, or in plain NumPy for None; raises what making the copy raises."""
+
+    def __init__(
+        self, file: AuditFile, kernel: KernelSource, arithmetic: Arithmetic | None, observer: Observer | None = None
+    ) -> None:
+        self._file = file
+        self._arithmetic = arithmetic or arithmetic_named(REFERENCE)
+        self._feed = Feed() if file.kernel.takes == "rng" else None
+        self._drawn: Floats | ArmDraws | None = None
+        self.copy: PrivateCopy = private_copy(kernel, arithmetic, observer, self._feed)
+
+    @property
+    def remarks(self) -> list[tuple[Place | None, str]]:
+        """What there is to say about the kernel's random numbers, in the order in which it was met."""
+        return [] if self._feed is None else list(self._feed.remarks)
+
+    def fine(self, draws: Draws | Tape, level: int) -> Quantities:
+        """Return the quantities of the fine path; raises what the kernel raises, and what `evaluate` does."""
+        if isinstance(draws, Tape):
+            self._drawn = ArmDraws(draws, self._arithmetic)
+            return self._on_tape(self._drawn.fine(), level, draws.paths)
+        self._drawn = fine_draws(draws, self._arithmetic)
+        return self._on_array(self._drawn, level)
+
+    def coarse(self, draws: Draws | Tape, level: int) -> Quantities:
+        """Return the quantities of the coarse path below `level`, once, on the draws of the fine path just run."""
+        drawn, self._drawn = self._drawn, None  # a block's draws are large
+        if isinstance(draws, Tape):
+            assert isinstance(drawn, ArmDraws)  # of this block, by `fine`
+            try:
+                reader = drawn.coarse()
+            except TapeError as problem:
+                raise KernelError(str(problem)) from None
+            return self._on_tape(reader, level - 1, draws.paths)
+        assert isinstance(drawn, np.ndarray)  # likewise
+        return self._on_array(coarse_draws(draws, drawn, self._arithmetic), level - 1)
+
+    def _on_array(self, drawn: Floats, level: int) -> Quantities:
+        file = self._file
+        return evaluate(self.copy, drawn, file.ladder.step_size(level), file.keywords(), file.kernel.layout)
+
+    def _on_tape(self, reader: Reader, level: int, paths: int) -> Quantities:
+        assert self._feed is not None  # a tape is drawn from
+        ladder = self._file.ladder
+        return evaluate_drawing(
+            self.copy,
+            self._feed,
+            reader,
+            step=ladder.step_size(level),
+            counts=(ladder.steps(level), paths),
+            keywords=self._file.keywords(),
+        )

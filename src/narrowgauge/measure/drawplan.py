@@ -1,0 +1,156 @@
+"""What a kernel that draws for itself draws, found out by running it: how much per step, and what belongs to a step.
+
+Runs in plain NumPy that differ in steps, and two that differ in paths, are compared by their requests alone.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from narrowgauge.draws.layout import Layout, Request, draws_of, layouts
+from narrowgauge.draws.streams import Purpose, UniformStream
+from narrowgauge.draws.tape import Tape
+from narrowgauge.errors import DispatchError, KernelError
+from narrowgauge.kernel.auditfile import AuditFile, with_draws
+from narrowgauge.kernel.contract import check_parameters
+from narrowgauge.kernel.loading import KernelSource
+from narrowgauge.measure.calls import Caller
+
+__all__ = ["DrawPlan", "plan_draws", "worked_out"]
+
+_PATHS = 1024
+_ARM = "plain NumPy"
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class DrawPlan:
+    """Random numbers per path and step, rounded up, and their layout; None where the levels cannot be coupled."""
+
+    factors: int
+    layout: Layout | None
+    remarks: tuple[str, ...]
+
+
+def worked_out(file: AuditFile, kernel: KernelSource) -> AuditFile:
+    """Return the audit file with factors, and coupling where there can be none, as the kernel's requests show them.
+
+    Any other kernel than one that draws for itself leaves the file as it is. Raises what `plan_draws` raises.
+    """
+    if file.kernel.takes != "rng":
+        return file
+    plan = plan_draws(file, kernel)
+    return with_draws(file, plan.factors, file.kernel.coupling if plan.layout or not file.ladder.finest else "none")
+
+
+def plan_draws(file: AuditFile, kernel: KernelSource) -> DrawPlan:
+    """Run the kernel in plain NumPy on three levels and return what its requests show.
+
+    Raises KernelError where the kernel raises on a level of the ladder, draws nothing, or lets all paths share their
+    draws; AuditFileError where it cannot be called.
+    """
+    caller = Caller(file, kernel, None)
+    check_parameters(caller.copy.function, file)
+    finest = file.ladder.finest
+    levels = (1, 2, 3) if finest >= 3 else (0, 1, 2)
+    remarks: list[str] = []
+    runs: dict[int, list[Request]] = {}
+    reason = ""
+    for level in levels if finest else (0,):
+        try:
+            runs[level] = _requests(caller, file, level, _PATHS)
+        except KernelError:
+            if level <= finest:
+                raise
+            reason = f"the kernel does not run with {file.ladder.steps(level)} steps, which it is tried with"
+    first = min(runs)
+    grows = _growth(runs[first], _requests(caller, file, first, 2 * _PATHS), first, remarks)
+    factors = _factors(runs, file)
+    if not finest:
+        return DrawPlan(factors=factors, layout=None, remarks=tuple(remarks))
+    found = reason or grows or layouts({file.ladder.steps(level): requests for level, requests in runs.items()})
+    layout = None if isinstance(found, str) else found[0]
+    if isinstance(found, str):
+        remarks.append(
+            f"the levels are not coupled: {found}. Each level is measured and judged by itself, without differences "
+            "between levels"
+        )
+    elif len(found) > 1:
+        layout = _closest(found, caller, file, levels[1])
+        remarks.append(
+            f"{len(found)} layouts of the draws fit the kernel's requests; the one that brings fine and coarse paths "
+            "closest is taken"
+        )
+    return DrawPlan(factors=factors, layout=layout, remarks=tuple(remarks))
+
+
+def _requests(caller: Caller, file: AuditFile, level: int, paths: int) -> list[Request]:
+    """Return what one run in plain NumPy asks for."""
+    tape = _tape(file, level, paths, None)
+    try:
+        caller.fine(tape, level)
+    except KernelError as problem:
+        raise KernelError(str(problem), level=level, arm=_ARM) from problem.__cause__
+    except DispatchError:
+        raise
+    except (Exception, SystemExit) as problem:  # the kernel's own: its traceback is shown
+        what = f"the kernel raised {type(problem).__name__}: {problem}"
+        raise KernelError(what, level=level, arm=_ARM) from problem
+    if not draws_of(tape.requests):
+        raise KernelError(
+            "the kernel draws no random numbers from rng or numpy.random; accepted: one that does, or another takes",
+            level=level,
+            arm=_ARM,
+        )
+    return tape.requests
+
+
+def _tape(file: AuditFile, level: int, paths: int, layout: Layout | None) -> Tape:
+    stream = UniformStream(file.sampling.seed, Purpose.TRIAL, level, 0)
+    steps, refinement = file.ladder.steps(level), file.ladder.refinement
+    return Tape(stream, paths=paths, steps=steps, refinement=refinement, layout=layout)
+
+
+def _growth(few: Sequence[Request], many: Sequence[Request], level: int, remarks: list[str]) -> str:
+    """Compare runs of one and of twice as many paths; return what stands against a layout."""
+    if draws_of(few) == draws_of(many):
+        raise KernelError(
+            f"the kernel draws {draws_of(few)} random numbers for {_PATHS} paths and as many for {2 * _PATHS}: its "
+            "paths share them and are not independent; accepted: draws of its own for each path",
+            level=level,
+            arm=_ARM,
+        )
+    if len(few) != len(many):
+        return "the number of requests grows with the number of paths"
+    shared = [one for one, other in zip(few, many, strict=True) if one.size == other.size]
+    if shared:
+        remarks.append(f"all paths of a block share a draw ({shared[0]}): intervals take paths for independent")
+    return ""
+
+
+def _factors(runs: dict[int, list[Request]], file: AuditFile) -> int:
+    """Return the random numbers per path and step, rounded up."""
+    fine, coarse = max(runs), min(runs)
+    steps, drawn = file.ladder.steps(fine), draws_of(runs[fine])
+    if fine != coarse and drawn > draws_of(runs[coarse]):
+        steps, drawn = steps - file.ladder.steps(coarse), drawn - draws_of(runs[coarse])
+    return max(1, math.ceil(drawn / (steps * _PATHS)))
+
+
+def _closest(found: Sequence[Layout], caller: Caller, file: AuditFile, level: int) -> Layout:
+    """Return the layout with the smallest variance of the level difference, as a share, in plain NumPy."""
+    shares = []
+    for layout in found:
+        tape = _tape(file, level, _PATHS, layout)
+        try:
+            fine, coarse = caller.fine(tape, level), caller.coarse(tape, level)
+        except KernelError:  # the coarse run asks for other draws than this layout has
+            shares.append(math.inf)
+            continue
+        with np.errstate(all="ignore"):
+            parts = [np.var(fine[name] - coarse[name]) / np.var(fine[name]) for name in fine if name in coarse]
+        shares.append(float(np.mean(np.nan_to_num(parts, nan=math.inf))))
+    return found[int(np.argmin(shares))]
