@@ -63,7 +63,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
         return _READER_GONE
     # The boundary of the program: exit code 1 would mean that a gate failed, and a kernel that calls sys.exit is
     # caught where it runs.
-    except (Exception, SystemExit) as problem:
+    except BaseException as problem:
         return _broken(problem)
 
 

@@ -50,6 +50,14 @@ def escapes(dW, h):
     return x + float(dW[0, 0])
 
 
+class Bare(BaseException):
+    pass
+
+
+def bare(dW, h):
+    raise Bare("no ordinary exception")
+
+
 def stuck(dW, h):
     x = np.full(dW.shape[1], 1.0)
     if (x + 0.0001 == x).all():
@@ -219,6 +227,13 @@ class TestErrors:
         done = run("audit", written(tmp_path, "leaves"), folder=tmp_path)
         assert done.returncode == 2
         assert done.stderr.endswith("narrowgauge: level 2, arm plain NumPy: the kernel raised SystemExit: 1\n")
+
+    def test_kernel_raises_no_ordinary_exception(self, tmp_path):
+        """What is no Exception is the kernel's all the same: exit code 2, with level and arm."""
+        done = run("audit", written(tmp_path, "bare"), folder=tmp_path)
+        assert done.returncode == 2
+        words = "narrowgauge: level 2, arm plain NumPy: the kernel raised Bare: no ordinary exception\n"
+        assert done.stderr.endswith(words)
 
     @pytest.mark.skipif(sys.platform == "win32", reason="signals are sent otherwise there")
     def test_interrupted_process(self, tmp_path):

@@ -12,6 +12,7 @@ from narrowgauge.arithmetic.arithmetic import arithmetic_named
 from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.draws.layout import Layout, Request, StepAxis, draws_of, layouts
 from narrowgauge.draws.normals import exact_normals
+from narrowgauge.draws.quantiles import inverted
 from narrowgauge.draws.streams import Purpose, UniformStream, uniforms
 from narrowgauge.draws.tape import ArmDraws, Tape, TapeError
 
@@ -345,3 +346,10 @@ class TestLayouts:
     def test_counts_of_draws(self):
         """The draws of a run are the product of each size, added up."""
         assert draws_of([Request(name="normal", size=(3, 4)), Request(name="normal", size=())]) == 13
+
+
+@pytest.mark.parametrize("name", ["pareto", "power", "weibull"])
+def test_a_shape_that_is_not_positive_is_refused(name: str) -> None:
+    """Their formulas give numbers for such shapes too; NumPy refuses them."""
+    with pytest.raises(ValueError, match=f"^parameters outside those of {name}$"):
+        inverted(name, np.array([0.3, 0.7]), (-1.0,))

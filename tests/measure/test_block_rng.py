@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -94,13 +95,15 @@ PLANS = {
     "np.concatenate([(z := rng.normal(size=paths // 2)), -z])": DrawPlan(factors=1, layout=BY_STEP, remarks=()),
 }
 PLANNED = "import numpy as np\ndef value(rng, h, *, steps, paths):\n{}    return x\n"
+NO_CLOSER = "fine and coarse paths draw no closer as the steps get finer"
 LOOP = "    x = np.zeros(paths)\n    for i in range(steps):\n        x = x + {}\n"
 
 
 def plan_of(folder: Path, body: str, **ladder: object) -> DrawPlan:
-    """The plan of a kernel with this body."""
+    """The plan of a kernel with this body, without what it says of noise that is not scaled by the step."""
     file = file_for(written(folder, PLANNED.format(body)), {"kernel": RNG, "ladder": ladder})
-    return plan_draws(file, find_kernel(file))
+    plan = plan_draws(file, find_kernel(file))
+    return replace(plan, remarks=tuple(one for one in plan.remarks if not one.startswith(NO_CLOSER)))
 
 
 @pytest.mark.parametrize("expression", [e for e in PLANS if "axis" not in e])
@@ -296,3 +299,59 @@ def test_refusals_have_level_and_arm(tmp_path: Path) -> None:
     with pytest.raises(RefusedError) as caught:
         plan_draws(file, find_kernel(file))
     assert f"{path}:5: Generator.wald is not offered by this version: the draws" in str(caught.value)
+
+
+FACTORS = """    W = {drawn}
+    s = np.zeros(({factors}, paths))
+    x = np.zeros(paths)
+    for i in range(steps):
+        s = s + W[:, i]
+        x = x + h * s.sum(axis=0) * np.abs(s[0])
+"""
+PASSES = "np.array([[np.sqrt(h) * rng.standard_normal(paths) for i in range(steps)] for f in range({factors})])"
+AT_ONCE = "np.sqrt(h) * rng.standard_normal(({factors}, steps, paths))"
+
+
+@pytest.mark.parametrize("factors", [2, 5])
+def test_draws_made_factor_by_factor(tmp_path: Path, factors: int) -> None:
+    """A pass over the steps for each factor is told from that many draws a step, and couples as one block does."""
+    plans = {}
+    for name, drawn in (("passes", PASSES), ("block", AT_ONCE)):
+        folder = tmp_path / name
+        folder.mkdir()
+        body = FACTORS.format(drawn=drawn.format(factors=factors), factors=factors)
+        plans[name] = plan_of(folder, body, finest=3)
+        file = file_for(folder / "kernel.py", {"kernel": RNG, "ladder": {"finest": 3}})
+        plans[name, "share"] = BlockRunner(file, find_kernel(file)).run(3, 0).quantities["value"]
+    found = plans["passes"]
+    assert (found.factors, found.layout.period, found.layout.runs) == (factors, factors, factors)
+    assert found.remarks == (
+        f"the draws are taken as {factors} passes over the steps, which brings fine and coarse paths closest",
+    )
+    ratio = [plans[name, "share"].differences["float64"].moments.variance for name in ("passes", "block")]
+    assert ratio[0] == ratio[1]
+
+
+def test_blocks_in_mixed_orders(tmp_path: Path) -> None:
+    """Two blocks drawn ahead, one with the steps first and one with the paths first, are coupled each in its order."""
+    body = """    a = rng.normal(0, np.sqrt(h), steps * paths).reshape(steps, paths)
+    b = rng.normal(0, np.sqrt(h), steps * paths).reshape(paths, steps).T
+    x = np.zeros(paths)
+    for i in range(steps):
+        x = x + a[i] + x * b[i]
+"""
+    layout = plan_of(tmp_path, body, finest=3).layout
+    assert layout is not None
+    assert [axis.steps_first for axis in layout.axes] == [True, False]
+
+
+def test_paths_that_no_order_brings_together_are_not_coupled(tmp_path: Path) -> None:
+    """Draws whose signs belong to no step belong together in no order that is known: said, not coupled."""
+    body = """    z = [rng.normal(size=paths) for i in range(steps)]
+    x = np.zeros(paths)
+    for i in range(steps):
+        x = x + np.sqrt(h) * z[i] * (-1.0) ** (i * 7919 % (steps + 3))
+"""
+    plan = plan_of(tmp_path, body, finest=3)
+    assert plan.layout is None
+    assert plan.remarks[0].startswith("the levels are not coupled: in no order of the draws are fine and coarse paths")

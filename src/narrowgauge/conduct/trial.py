@@ -89,7 +89,9 @@ def _identical(file: AuditFile, kernel: KernelSource, draws: Draws | Tape, level
         raise
     except KernelError as problem:
         raise KernelError(str(problem), level=level, arm=REFERENCE) from problem.__cause__
-    except (Exception, SystemExit) as problem:  # plain NumPy did not raise
+    except KeyboardInterrupt:
+        raise
+    except BaseException as problem:  # plain NumPy did not raise
         what = f"the kernel raised {type(problem).__name__}: {problem}, where plain NumPy does not"
         raise KernelError(what, level=level, arm=REFERENCE) from problem
     for name in plain | repeated:
@@ -131,7 +133,9 @@ def _fault(file: AuditFile, kernel: KernelSource, draws: Draws | Tape, level: in
         return FaultEntry(arm=arm, kind="escape", message=str(problem))
     except KernelError as problem:
         raise KernelError(str(problem), level=level, arm=arm) from problem.__cause__
-    except (Exception, SystemExit) as problem:  # the audit itself keeps what a narrow arm raises as data
+    except KeyboardInterrupt:
+        raise
+    except BaseException as problem:  # the audit itself keeps what a narrow arm raises as data
         what = f"the kernel raised {type(problem).__name__}: {problem}"
         return FaultEntry(arm=arm, kind="raised", message=what)
     return None
@@ -151,7 +155,9 @@ def _plainly_twice(
         raise KernelError(str(problem), level=level, arm=arm) from problem.__cause__
     except (AuditFileError, DispatchError):  # no such function, other parameters, or draws that are not offered
         raise
-    except (Exception, SystemExit) as problem:  # the reference: its own traceback is shown
+    except KeyboardInterrupt:
+        raise
+    except BaseException as problem:  # the reference: its own traceback is shown
         what = f"the kernel raised {type(problem).__name__}: {problem}"
         raise KernelError(what, level=level, arm=arm) from problem
 

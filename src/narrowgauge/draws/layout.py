@@ -1,15 +1,17 @@
 """Which requests for random numbers belong to which time step, worked out from runs that differ in steps.
 
 Two forms are known, and may be mixed: requests repeated at each step, and requests made once whose size has an axis of
-the steps. Whichever requests are taken together, a sum of independent draws has the right distribution: a layout that
-is wrong costs coupling between the levels, never truth.
+the steps. Whichever requests are taken together, a sum of independent draws has the right distribution, so that means
+stay right; but a layout that is wrong couples fine and coarse paths badly, which inflates the variance of their
+difference and flatters narrow formats. So the candidates are tried, and the closest is taken, if it is close at all.
 """
 
 from __future__ import annotations
 
 import math
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from itertools import islice, product
 
 __all__ = ["Layout", "Request", "StepAxis", "draws_of", "layouts"]
 
@@ -60,13 +62,15 @@ class StepAxis:
 class Layout:
     """The order of a run's requests: those before the time loop, `period` of them at each step, those after it.
 
-    `axes` belongs to the requests outside the loop, in their order.
+    `axes` belongs to the requests outside the loop, in their order. The loop over the steps is gone through `runs`
+    times, once for each share of the period: factor by factor, for instance.
     """
 
     before: int
     period: int
     after: int
     axes: tuple[StepAxis | None, ...]
+    runs: int = 1
 
     def requests(self, steps: int) -> int:
         """Return how many requests a run of so many steps makes."""
@@ -79,10 +83,12 @@ class Layout:
         """
         if place < self.before:
             return [place], self.axes[place]
-        step, one = divmod(place - self.before, self.period) if self.period else (steps, 0)
-        if step < steps:
-            first = self.before + step * refinement * self.period + one
-            return [first + j * self.period for j in range(refinement)], None
+        each = self.period // self.runs
+        run, inside = divmod(place - self.before, each * steps) if self.period else (self.runs, 0)
+        if run < self.runs:
+            step, one = divmod(inside, each)
+            first = self.before + (run * steps + step) * refinement * each + one
+            return [first + j * each for j in range(refinement)], None
         outside = place - self.period * steps
         return [outside + self.period * steps * refinement], self.axes[outside]
 
@@ -113,7 +119,23 @@ def layouts(runs: Mapping[int, Sequence[Request]]) -> list[Layout] | str:
             reasons.append(fits)
         else:
             found += fits
-    return found[:_MOST_CANDIDATES] or reasons[0]
+    # Several passes over the steps ask as often as one that asks several times at each step.
+    found = found[:_MOST_CANDIDATES]
+    again = [replace(one, runs=count) for one in found for count in range(2, period + 1) if period % count == 0]
+    found += [one for one in again[:_MOST_CANDIDATES] if _repeats(runs, one)]
+    return found or reasons[0]
+
+
+def _repeats(runs: Mapping[int, Sequence[Request]], layout: Layout) -> bool:
+    """Whether each pass over the steps makes the same requests at every step of it."""
+    each = layout.period // layout.runs
+    for n, requests in runs.items():
+        for run in range(layout.runs):
+            start = layout.before + run * each * n
+            asked = [(request.name, request.size) for request in requests[start : start + each * n]]
+            if asked != asked[:each] * n:
+                return False
+    return True
 
 
 def _fitting(runs: Mapping[int, Sequence[Request]], before: int, period: int, after: int) -> list[Layout] | str:
@@ -133,12 +155,11 @@ def _fitting(runs: Mapping[int, Sequence[Request]], before: int, period: int, af
         choices.append(axes)
     if not period and all(axes == [None] for axes in choices):
         return "no request and no size grows with the steps"
-    # All requests ahead are taken the same way round: one kernel, one habit.
+    # One kernel, one habit: all requests ahead the same way round come first, then every mixture.
     ways = max((len(axes) for axes in choices), default=1)
-    return [
-        Layout(before=before, period=period, after=after, axes=tuple(axes[min(way, len(axes) - 1)] for axes in choices))
-        for way in range(ways)
-    ]
+    alike = [tuple(axes[min(way, len(axes) - 1)] for axes in choices) for way in range(ways)]
+    mixed = islice(product(*choices), _MOST_CANDIDATES)
+    return [Layout(before=before, period=period, after=after, axes=axes) for axes in dict.fromkeys([*alike, *mixed])]
 
 
 def _axes(single: Mapping[int, Request]) -> list[StepAxis | None] | str:

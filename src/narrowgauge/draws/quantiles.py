@@ -132,11 +132,16 @@ QUANTILES: dict[str, Quantile] = {
 }
 
 
+_POSITIVE = frozenset({"pareto", "power", "weibull"})
+
+
 def inverted(name: str, uniforms: Doubles, values: tuple[Any, ...]) -> npt.NDArray[Any]:
     """Return the draws of a row for uniforms in (0, 1): float64 or int64 of the same shape.
 
     Raises ValueError for parameters that the distribution does not have.
     """
+    if name in _POSITIVE and not (np.asarray(values[0]) > 0).all():
+        raise ValueError(f"parameters outside those of {name}")  # its formula would give numbers all the same
     with np.errstate(all="ignore"):
         drawn = np.asarray(QUANTILES[name](uniforms, *values))
     if drawn.dtype.kind == "f" and np.isnan(drawn).any():

@@ -88,7 +88,9 @@ def private_copy(
                 return PrivateCopy(kernel.function, None)
             return PrivateCopy(copy_function(kernel.function, setting, copies), setting, copies)
         module = copies.load(kernel.module)
-    except (Exception, SystemExit) as problem:  # whatever the user's module raises is the user's to see
+    except KeyboardInterrupt:
+        raise
+    except BaseException as problem:  # whatever the user's module raises is the user's to see
         _raise_uncopied(kernel, copies, problem)
         if isinstance(problem, (DispatchError, KernelError)):
             raise

@@ -136,7 +136,9 @@ class BlockRunner:
             raise type(problem)(f"level {level}, arm {arm}: {problem}") from None
         except AuditFileError:  # there is no such function
             raise
-        except (Exception, SystemExit) as problem:  # whatever a kernel raises becomes data
+        except KeyboardInterrupt:
+            raise
+        except BaseException as problem:  # whatever a kernel raises becomes data
             if arm == REFERENCE:
                 what = f"the kernel raised {type(problem).__name__}: {problem}"
                 raise KernelError(what, level=level, arm=arm) from problem

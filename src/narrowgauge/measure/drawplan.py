@@ -23,6 +23,9 @@ from narrowgauge.measure.calls import Caller
 __all__ = ["DrawPlan", "plan_draws", "worked_out"]
 
 _PATHS = 1024
+_APART = 0.5  # of the quantity's variance; paths that share nothing differ by twice it
+_ROUNDING = 1e-9  # of it: a difference as small is one of roundings, not of the discretisation
+_SHARE_PATHS = 8192  # its variance is then known to a few per cent
 _ARM = "plain NumPy"
 
 
@@ -78,13 +81,37 @@ def plan_draws(file: AuditFile, kernel: KernelSource) -> DrawPlan:
             f"the levels are not coupled: {found}. Each level is measured and judged by itself, without differences "
             "between levels"
         )
-    elif len(found) > 1:
+    else:
         layout = _closest(found, caller, file, levels[1])
-        remarks.append(
-            f"{len(found)} layouts of the draws fit the kernel's requests; the one that brings fine and coarse paths "
-            "closest is taken"
-        )
+        remarks += _said_of(layout, [one for one in found if one.runs == 1])
+        near, far = (_share(layout, caller, file, level) for level in (levels[2], max(levels[0], 1)))
+        apart = f"the difference has {near:.2g} of the quantity's variance with {file.ladder.steps(levels[2])} steps"
+        if near > _APART:
+            layout = None
+            remarks.append(
+                f"the levels are not coupled: in no order of the draws are fine and coarse paths close, {apart}. "
+                "Each level is measured and judged by itself, without differences between levels"
+            )
+        elif near > max(far, _ROUNDING):
+            remarks.append(
+                f"fine and coarse paths draw no closer as the steps get finer, {apart}: a closer coupling would leave "
+                "less signal for the rounding errors to be small against"
+            )
     return DrawPlan(factors=factors, layout=layout, remarks=tuple(remarks))
+
+
+def _said_of(layout: Layout, usual: Sequence[Layout]) -> list[str]:
+    """Return what is worth knowing about the choice of a layout."""
+    if layout.runs > 1:
+        return [
+            f"the draws are taken as {layout.runs} passes over the steps, which brings fine and coarse paths closest"
+        ]
+    if len(usual) > 1:
+        return [
+            f"{len(usual)} layouts of the draws fit the kernel's requests; the one that brings fine and coarse paths "
+            "closest is taken"
+        ]
+    return []
 
 
 def _requests(caller: Caller, file: AuditFile, level: int, paths: int) -> list[Request]:
@@ -96,7 +123,9 @@ def _requests(caller: Caller, file: AuditFile, level: int, paths: int) -> list[R
         raise KernelError(str(problem), level=level, arm=_ARM) from problem.__cause__
     except DispatchError:
         raise
-    except (Exception, SystemExit) as problem:  # the kernel's own: its traceback is shown
+    except KeyboardInterrupt:
+        raise
+    except BaseException as problem:  # the kernel's own: its traceback is shown
         what = f"the kernel raised {type(problem).__name__}: {problem}"
         raise KernelError(what, level=level, arm=_ARM) from problem
     if not draws_of(tape.requests):
@@ -142,15 +171,18 @@ def _factors(runs: dict[int, list[Request]], file: AuditFile) -> int:
 
 def _closest(found: Sequence[Layout], caller: Caller, file: AuditFile, level: int) -> Layout:
     """Return the layout with the smallest variance of the level difference, as a share, in plain NumPy."""
-    shares = []
-    for layout in found:
-        tape = _tape(file, level, _PATHS, layout)
-        try:
-            fine, coarse = caller.fine(tape, level), caller.coarse(tape, level)
-        except KernelError:  # the coarse run asks for other draws than this layout has
-            shares.append(math.inf)
-            continue
-        with np.errstate(all="ignore"):
-            parts = [np.var(fine[name] - coarse[name]) / np.var(fine[name]) for name in fine if name in coarse]
-        shares.append(float(np.mean(np.nan_to_num(parts, nan=math.inf))))
-    return found[int(np.argmin(shares))]
+    if len(found) == 1:
+        return found[0]
+    return min(found, key=lambda layout: _share(layout, caller, file, level))
+
+
+def _share(layout: Layout, caller: Caller, file: AuditFile, level: int) -> float:
+    """Return Var D / Var P on one level, the mean over quantities; infinite where the layout does not fit."""
+    tape = _tape(file, level, _SHARE_PATHS, layout)
+    try:
+        fine, coarse = caller.fine(tape, level), caller.coarse(tape, level)
+    except KernelError:  # the coarse run asks for other draws than this layout has
+        return math.inf
+    with np.errstate(all="ignore"):
+        parts = [np.var(fine[name] - coarse[name]) / np.var(fine[name]) for name in fine if name in coarse]
+    return float(np.mean(np.nan_to_num(parts, nan=0.0, posinf=math.inf)))  # a quantity that is constant has no say
