@@ -29,6 +29,7 @@ from narrowgauge.dispatch.randoms import adopted
 from narrowgauge.dispatch.setting import Observer, Setting
 from narrowgauge.dispatch.standin import refusing_generator
 from narrowgauge.dispatch.ufuncs import call_ufunc
+from narrowgauge.dispatch.variates import plain_variates
 from narrowgauge.errors import KernelError
 
 __all__ = ["PrivateCopy", "copy_function", "copy_module", "new_setting"]
@@ -241,7 +242,7 @@ def _standin_of(value: Any, copies: Copies, setting: Setting | None) -> Any:
         known = copies.stand_in(module) if module.partition(".")[0] in STOOD_IN - {"sys"} else None
         return value if known is None else known
     if setting is None:
-        return value
+        return value if copies.draws is None else plain_variates(value, copies.draws)
     if isinstance(value, _GENERATORS):
         return refusing_generator(type(value).__name__, setting)
     name = getattr(value, "__name__", None)

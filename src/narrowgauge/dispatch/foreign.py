@@ -1,12 +1,12 @@
 """Stand-ins for scipy.stats and scipy.special: on the state they compute in float64 and are rounded once.
 
 Elementwise functions of scipy.special are `rounded`, everything else is `whole`. Numbers that meet the state are
-rounded as constants first, integers stay. Plain arguments go to the real functions; random numbers are refused.
+rounded as constants first, integers stay. Plain arguments go to the real functions; `rvs` draws from the tape of the
+run, and is refused where the kernel has none.
 """
 
 from __future__ import annotations
 
-import importlib
 import sys
 from collections.abc import Callable
 from types import BuiltinFunctionType, FunctionType, ModuleType
@@ -15,10 +15,11 @@ from typing import Any
 import numpy as np
 
 from narrowgauge.dispatch.array import Array
-from narrowgauge.dispatch.namespaces import Exchanging, Namespace
+from narrowgauge.dispatch.namespaces import Exchanging, scipy_parts
 from narrowgauge.dispatch.scalar import State
 from narrowgauge.dispatch.setting import Route, Setting, Wrapped, holds
 from narrowgauge.dispatch.standin import refusing_generator, refusing_namespace
+from narrowgauge.dispatch.variates import drawing, is_distribution
 from narrowgauge.errors import EscapeError, RefusedError
 
 __all__ = ["exchanged", "scipy_namespace"]
@@ -26,17 +27,19 @@ __all__ = ["exchanged", "scipy_namespace"]
 _MODULES = ("scipy.special", "scipy.stats")
 
 
-def scipy_namespace(setting: Setting) -> ModuleType:
-    """Return a stand-in for `scipy` with stand-ins for its `special` and `stats`, made when they are asked for."""
+def scipy_namespace(setting: Setting, imported: Callable[[str], ModuleType]) -> ModuleType:
+    """Return a stand-in for `scipy` with stand-ins for its `special` and `stats`, made when they are asked for.
+
+    `imported` imports a module for real.
+    """
 
     def special() -> ModuleType:
-        return Exchanging(importlib.import_module("scipy.special"), lambda name, value: _special(name, value, setting))
+        return Exchanging(imported("scipy.special"), lambda name, value: _special(name, value, setting))
 
     def stats() -> ModuleType:
-        plain = importlib.import_module("scipy.stats")
-        return Exchanging(plain, lambda name, value: _stats(f"scipy.stats.{name}", value, setting))
+        return Exchanging(imported("scipy.stats"), lambda name, value: _stats(f"scipy.stats.{name}", value, setting))
 
-    return Namespace(importlib.import_module("scipy"), {}, {"special": special, "stats": stats})
+    return scipy_parts(imported, {"special": special, "stats": stats})
 
 
 def exchanged(value: Any, setting: Setting) -> Any:
@@ -48,7 +51,7 @@ def exchanged(value: Any, setting: Setting) -> Any:
             return (
                 _special(name, value, setting) if module == _MODULES[0] else _stats(f"{module}.{name}", value, setting)
             )
-    if type(value).__module__.startswith("scipy.stats.") and hasattr(value, "rvs") and not isinstance(value, type):
+    if type(value).__module__.startswith("scipy.stats.") and is_distribution(value):
         return _Distribution(value, "scipy.stats distribution", setting)
     return value
 
@@ -68,13 +71,13 @@ def _stats(name: str, value: Any, setting: Setting) -> Any:
         return Exchanging(value, lambda inner, found: _stats(f"{name}.{inner}", found, setting))
     if isinstance(value, FunctionType):
         return _function(value, name, setting, "whole")
-    if hasattr(value, "rvs") and not isinstance(value, type):
+    if is_distribution(value):
         return _Distribution(value, name, setting)
     return value
 
 
 class _Distribution:
-    """A distribution, frozen or not, whose methods take the state; `rvs` is refused.
+    """A distribution, frozen or not, whose methods take the state.
 
     `of_state` says that it was frozen with parameters of the state: whatever it computes is rounded.
     """
@@ -94,11 +97,25 @@ class _Distribution:
 
     def __getattr__(self, name: str) -> Any:
         if name == "rvs":
-            return refusing_generator(f"{self._name}.rvs", self._setting)
+            if self._setting.draws is None:
+                return refusing_generator(f"{self._name}.rvs", self._setting)
+            return self._rvs
         found = getattr(self._plain, name)
         if not callable(found) or name.startswith("__"):
             return found
         return _function(found, f"{self._name}.{name}", self._setting, "whole", always=self._of_state)
+
+    def _rvs(self, *arguments: Any, random_state: Any = None, **keywords: Any) -> Any:
+        """Draw from the tape; parameters are as the format has them, and scaling and shifting are rounded."""
+        setting, name = self._setting, f"{self._name}.rvs"
+        if self._of_state or holds([*arguments, keywords], State):
+            setting.draws.remark(f"a parameter of {name} depends on the state: it enters by its value")
+        draw = drawing(self._plain.rvs, setting.draws)
+        result = draw(*_wide(arguments, setting), random_state=random_state, **_wide(keywords, setting))
+        if not isinstance(result, Wrapped) and _kind(result) not in "biu":
+            what = f"{name} gave plain numbers, which do not come from the audit's own streams"
+            raise setting.fault(RefusedError, f"{what}; accepted: the generator's methods")
+        return setting.wrap(result) if not isinstance(result, Wrapped) else result
 
 
 def _function(

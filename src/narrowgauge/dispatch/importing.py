@@ -33,6 +33,7 @@ from narrowgauge.dispatch.standin import (
     numpy_namespace,
     refusing_namespace,
 )
+from narrowgauge.dispatch.variates import plain_scipy
 from narrowgauge.errors import KernelError, RefusedError
 
 __all__ = ["Copies"]
@@ -159,11 +160,12 @@ class Copies:
         setting, draws = self.setting, self.draws
         if setting is None and draws is not None:  # plain NumPy, on the tape that the other runs draw from
             makers["numpy"] = lambda: Namespace(np, {"random": random_namespace(draws)})
+            makers["scipy"] = lambda: plain_scipy(draws, self._for_real)
         if setting is not None:
             makers["builtins"] = lambda: builtins_namespace(setting)
             makers["math"] = lambda: math_namespace(setting)
             makers["numpy"] = lambda: numpy_namespace(setting)
-            makers["scipy"] = lambda: scipy_namespace(setting)
+            makers["scipy"] = lambda: scipy_namespace(setting, self._for_real)
             makers["random"] = lambda: refusing_namespace("random", setting)
             makers["secrets"] = lambda: refusing_namespace("secrets", setting)
         return makers
@@ -241,6 +243,11 @@ class Copies:
         finally:
             sys.path = path
         return exchanged_module(module, self.setting, self.counterpart)
+
+    def _for_real(self, name: str) -> ModuleType:
+        """Import a module for real, and return the one of the full name."""
+        module: ModuleType = self._tracked(name, _LEAF)
+        return module
 
     def _tracked(self, name: str, fromlist: tuple[str, ...]) -> Any:
         """Import for real, and remember what came into sys.modules with it."""

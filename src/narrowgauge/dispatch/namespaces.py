@@ -2,16 +2,18 @@
 
 from __future__ import annotations
 
+import functools
 import importlib
 import importlib.resources
 import importlib.util
+import pkgutil
 import sys
 import typing
 from collections.abc import Callable, Iterator, Mapping, MutableMapping
 from types import ModuleType
 from typing import Any
 
-__all__ = ["Exchanging", "Namespace", "importlib_namespace", "sys_namespace", "typing_namespace"]
+__all__ = ["Exchanging", "Namespace", "importlib_namespace", "scipy_parts", "sys_namespace", "typing_namespace"]
 
 
 class Namespace(ModuleType):
@@ -44,6 +46,17 @@ class Exchanging(Namespace):
     def __getattr__(self, name: str) -> Any:
         value = getattr(self.__dict__["_plain"], name)
         return value if name.startswith("__") else self.__dict__.setdefault(name, self._exchange(name, value))
+
+
+def scipy_parts(imported: Callable[[str], ModuleType], own: Mapping[str, Callable[[], ModuleType]]) -> ModuleType:
+    """Return a stand-in for `scipy` whose packages are imported by `imported` when asked for; `own` are other ones.
+
+    SciPy itself imports them when they are first looked up, which the copies would take for a change of their own.
+    """
+    plain = imported("scipy")
+    inside = [found.name for found in pkgutil.iter_modules(plain.__path__) if found.ispkg and found.name[0] != "_"]
+    real = {name: functools.partial(imported, f"scipy.{name}") for name in inside}
+    return Namespace(plain, {}, {**real, **own})
 
 
 class _System(Namespace):

@@ -213,9 +213,19 @@ def _refuse_others(setting: Setting, name: str, others: dict[str, Any]) -> None:
             raise setting.fault(RefusedError, f"{other}= of np.{name} is not offered by this version")
 
 
+def _of_objects(dtype: Any) -> bool:
+    """Whether a buffer is to hold Python objects: it stays plain, since values of the state stay in it as they are.
+
+    A conversion of it to floats asks each value for a float, which is refused.
+    """
+    return dtype is not None and np.dtype(dtype) == object
+
+
 def _creator(setting: Setting, make: Callable[..., Any]) -> Callable[..., Any]:
     def function(shape: Any, dtype: Any = None, order: Any = "C", **others: Any) -> Any:
         _refuse_others(setting, make.__name__, others)
+        if make is np.empty and _of_objects(dtype):
+            return make(shape, object, order)
         if setting.float_dtype(dtype) is None:
             return setting.wrap(make(shape, dtype, order))
         made = make(shape, setting.arithmetic.format.carrier, order)
@@ -229,6 +239,8 @@ def _creator(setting: Setting, make: Callable[..., Any]) -> Callable[..., Any]:
 def _full(setting: Setting) -> Callable[..., Any]:
     def full(shape: Any, fill_value: Any, dtype: Any = None, order: Any = "C", **others: Any) -> Any:
         _refuse_others(setting, "full", others)
+        if _of_objects(dtype) or (dtype is None and fill_value is None):
+            return np.full(shape, fill_value, object, order)
         # NumPy makes integers or booleans of integers or booleans: they stay exact
         exact = dtype is None and is_exact(fill_value, setting)
         if exact or (dtype is not None and setting.float_dtype(dtype) is None):
