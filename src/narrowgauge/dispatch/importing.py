@@ -291,7 +291,7 @@ class Copies:
                     self.setting.files.add(found.file)
                 module.__dict__["__builtins__"] = self.builtins(module.__dict__)
                 exec(code, module.__dict__)
-        except BaseException as problem:
+        except BaseException as problem:  # an interrupt, too, must not leave half a module to be found; raised on
             del self.modules[found.name]
             if above is not None:
                 setattr(above, last, had) if had is not None else vars(above).pop(last, None)
