@@ -53,6 +53,8 @@ def same(plain, wrapped):
         alike = type(plain) is type(wrapped) and len(plain) == len(wrapped)
         return alike and all(same(one, other) for one, other in zip(plain, wrapped, strict=True))
     there = wrapped._carrier if isinstance(wrapped, Wrapped) else wrapped
+    if isinstance(plain, str):  # a text of the state knows where it comes from
+        return isinstance(there, str) and plain == there
     if type(plain) is not type(there):
         return False
     if isinstance(plain, np.ndarray):

@@ -14,6 +14,65 @@ from narrowgauge.dispatch.importing import Copies
 from narrowgauge.dispatch.modules import Sources
 
 DRAWS = np.array([0.2, 1.4, 0.75])
+# Nested packages that import each other in every way, and a kernel that reaches them.
+PACKAGE = {
+    "kernel.py": """
+        import pkg
+        import pkg.models.heston as h
+        from pkg import models, scale
+        from pkg.models import *
+        def kernel(x):
+            return [pkg.scale(x), h.step(x), models.heston.step(x), scale(x), local(x), pkg.tools.deep.third(x),
+                    euler.step(x)]
+        def local(x):
+            from pkg.tools import deep as d
+            from pkg.tools.deep import third
+            import pkg.tools.deep
+            assert d.third is third is pkg.tools.deep.third
+            return third(x)
+    """,
+    "pkg/__init__.py": """
+        from .tools import scale
+        from . import tools
+        NAMES = [__name__, __package__]
+    """,
+    "pkg/tools/__init__.py": """
+        import numpy as np
+        def scale(x):
+            v = np.zeros(3)
+            v[:] = x * 0.3
+            return v
+    """,
+    "pkg/tools/deep.py": """
+        from .. import tools
+        from ..tools import scale
+        from . import scale as again
+        def third(x):
+            assert again is scale is tools.scale
+            return again(x) / 3
+    """,
+    "pkg/models/__init__.py": """
+        __all__ = ["euler", "heston"]
+        from pkg.tools import deep
+    """,
+    "pkg/models/euler.py": """
+        from .heston import root
+        from pkg.models import heston
+        def step(x):
+            return root(x) + heston.root(x)
+    """,
+    "pkg/models/heston.py": """
+        import numpy as np
+        def root(x):
+            return np.sqrt(x) * np.full(3, 0.1)
+        from . import euler                 # a circle
+        import pkg.models.euler as other
+        from pkg.models.euler import step as euler_step
+        def step(x):
+            assert euler is other and euler.step is euler_step
+            return euler.step(x)
+    """,
+}
 
 
 def written(folder, files):

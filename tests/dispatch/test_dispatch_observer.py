@@ -17,14 +17,22 @@ class Log:
 
     def __init__(self):
         self.operations, self.carriers, self.places, self.decisions = [], [], [], 0
+        self.constants, self.answers, self.ways = [], [], []
 
     def saw(self, setting, operation, route, operands, result):
         self.operations.append((operation, route))
         self.carriers.append(([np.array(operand) for operand in operands], np.array(result)))
         self.places.append(setting.where())
 
-    def decided(self, setting):
+    def met(self, setting, constant):
+        self.constants.append(constant.tolist() if isinstance(constant, np.ndarray) else constant)
+
+    def decided(self, setting, answer):
         self.decisions += 1
+        self.answers.append(answer)
+
+    def left(self, setting, way):
+        self.ways.append((way, setting.where().line))
 
 
 def logged(body, form="float16"):
@@ -114,6 +122,52 @@ def test_the_observer_gets_operands_as_they_were():
 def test_decisions_on_the_state_are_counted(body, decisions):
     """Control flow that depends on the state is counted each time; selections and plain data are not."""
     assert logged(body)[0].decisions == decisions
+
+
+def test_the_answer_of_a_decision_is_told():
+    """A loop that ends is true until it is not; an integer that is taken out counts as true."""
+    assert logged("while x[0] < 2: x += 1")[0].answers == [True, True, False]
+    assert logged("int(x[1])")[0].answers == [True]
+
+
+# statement, the constants that the observer is told of, as they were before rounding
+MET = {
+    "x + 1e-8": [1e-8],
+    "1e-8 - x[0]": [1e-8],
+    "x * 3": [3],
+    "x * np.float64(0.1)": [0.1],
+    "x * np.linspace(0, 1, 3)": [[0.0, 0.5, 1.0]],
+    "x + [0.1, 0.2, 0.3]": [[0.1, 0.2, 0.3]],
+    "x += 1e-8": [1e-8],
+    "np.maximum(x, 1e-8)": [1e-8],
+    "max(x[0], 1.1e5)": [1.1e5, 1.1e5],  # compared, then chosen
+    "np.minimum(np.maximum(x, 0.1), 0.9)": [0.1, 0.9],
+    "x[0] = 1e-8": [1e-8],
+    "x[:2] = [1e-8, 0.1]": [[1e-8, 0.1]],
+    "np.full(3, 1e-8)": [1e-8],
+    "np.full_like(x, 1e-8)": [1e-8],
+    "np.array([1e-8, 0.1])": [[1e-8, 0.1]],
+    "np.where(x > 0, x, 1e-8)": [0, 1e-8],
+    "x.fill(1e-8)": [1e-8],
+    "math.pow(x[0], 0.3)": [0.3],
+    # plain numbers among themselves, values of the state, and what is stored as an exact value
+    "0.1 * 3; math.exp(0.1); x + x[0]; x * (x > x[0]); np.zeros(3) + x; np.arange(3); np.zeros(3, int)": [],
+}  # fmt: skip
+
+
+@pytest.mark.parametrize("form", ["float64", "float16"])
+@pytest.mark.parametrize("statement", MET)
+def test_each_constant_is_met_once_as_it_was(statement, form):
+    """Scalars, arrays, lists, stores and creators, in any arithmetic; what never meets the state is not told."""
+    assert logged(statement, form)[0].constants == MET[statement]
+
+
+def test_what_leaves_is_told_with_its_way_and_line():
+    """int() and text of any value of the state; range() and branches are decisions alone."""
+    log, _ = logged(
+        "str(x)\nrepr(x[0])\nf'{x[0]:.3f}'\n'%s' % (x > 0)\nint(x[1])\nrange(np.sum(x > 0))\nint(np.sum(x > 0))"
+    )
+    assert log.ways == [("text", 5), ("text", 6), ("text", 7), ("text", 8), ("integer", 9), ("integer", 11)]
 
 
 def test_every_route_reaches_the_observer_under_its_name():

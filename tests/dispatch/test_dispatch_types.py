@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import copy
+import math
 import numbers
 from collections.abc import Hashable
 
@@ -48,12 +49,48 @@ def test_a_0d_value_passes_for_a_float(x):
     assert (s.dtype, s.shape, s.ndim, s.size) == (np.float64, (), 0, 1)
     with pytest.raises(TypeError, match="has no len"):
         len(s)
+    assert not np.iterable(s)
     with pytest.raises(TypeError, match="not iterable"):
         iter(s)
-    with pytest.raises(TypeError, match="not subscriptable"):
+    with pytest.raises(TypeError, match="not iterable"):
+        _ = 0.375 in s
+    with pytest.raises(IndexError, match="invalid index to scalar variable"):
         s[0]
     with pytest.raises(TypeError, match="does not support item assignment"):
         s[0] = 1.0
+
+
+@pytest.mark.parametrize("form", ["float64", "float16"])
+def test_a_0d_value_is_indexed_as_numpys_scalar(form):
+    """x[()] is the value, x[...] an array without axes, x[None] one of one value; a Python float is not indexed."""
+    x = owned(VALUES, module_of("", form)[1])
+    plain = VALUES[0, 0]
+    for key in ((), ..., None, (..., None)):
+        found = x[0, 0][key]
+        assert type(found) is (Scalar if key == () else Array)
+        assert found.shape == np.shape(plain[key])
+        assert np.asarray(found._carrier).tolist() == plain[key].tolist()
+    made = x[0, 0][...]
+    made[()] = 7
+    assert x[0, 0] == 0.375
+    if form == "float64":
+        with pytest.raises(TypeError, match="'float' object is not subscriptable"):
+            x[0, 0].item()[()]
+
+
+@pytest.mark.parametrize("form", ["float64", "float16", "bfloat16"])
+def test_integral_parts_and_questions_about_them(form):
+    """math of a module that knows no state, int-like parts and is_integer give exact values as plain code has them."""
+    x = owned(VALUES * 4, module_of("", form)[1])
+    for value, plain in zip(x[0], VALUES[0] * 4, strict=True):
+        for part in (math.floor, math.ceil, math.trunc):
+            assert type(part(value)) is Exact
+            assert part(value)._carrier == part(plain)
+        assert type(value.is_integer()) is Exact
+        assert bool(value.is_integer()) == plain.is_integer()
+    with pytest.raises(ValueError, match="NaN"):
+        math.floor(x[0, 0] * np.nan)
+    assert x._setting.faults == []
 
 
 def test_a_mask_passes_for_booleans(x):

@@ -37,6 +37,15 @@ OF_REALS = {
     "rng.weibull(1.5, n)": stats.weibull_min(1.5),
     "rng.pareto(3.0, n)": stats.lomax(3.0),
     "rng.power(2.5, n)": stats.powerlaw(2.5),
+    "rng.triangular(-1.0, 0.2, 3.0, n)": stats.triang(0.3, -1.0, 4.0),
+    "rng.triangular(-1.0, 3.0, np.full(n, 3.0))": stats.triang(1.0, -1.0, 4.0),
+    "rng.wald(0.7, 2.0, n)": stats.invgauss(0.35, scale=2.0),
+    "rng.wald(0.7, np.full(n, 2.0))": stats.invgauss(0.35, scale=2.0),
+    "rng.noncentral_f(3.0, 5.0, 1.5, n)": stats.ncf(3.0, 5.0, 1.5),
+    "rng.vonmises(0.0, 0.0, n)": stats.uniform(-np.pi, 2 * np.pi),
+    "rng.vonmises(0.0, 0.8, n)": stats.vonmises(0.8),
+    "rng.vonmises(0.0, np.full(n, 49.0))": stats.vonmises(49.0),
+    "rng.vonmises(0.0, 1e4, n)": stats.vonmises(1e4),
 }
 OF_COUNTS = {
     "rng.poisson(3.3, n)": stats.poisson(3.3),
@@ -51,6 +60,14 @@ OF_COUNTS = {
         values=([0, 1, 2, 3, 4], [0.1, 0.2, 0.3, 0.25, 0.15])
     ),
     "rng.choice([4, 5, 6], n)": stats.randint(4, 7),
+    "rng.negative_binomial(2.5, 0.3, n)": stats.nbinom(2.5, 0.3),
+    "rng.negative_binomial(np.full(n, 4), 0.75)": stats.nbinom(4, 0.75),
+    "rng.hypergeometric(12, 18, 9, n)": stats.hypergeom(30, 12, 9),
+    "rng.hypergeometric(np.full(n, 12), 18, 27)": stats.hypergeom(30, 12, 27),
+    "rng.logseries(0.6, n)": stats.logser(0.6),
+    "rng.logseries(np.full(n, 0.75))": stats.logser(0.75),
+    "rng.zipf(3.0, n)": stats.zipf(3.0),
+    "rng.zipf(np.full(n, 2.5))": stats.zipf(2.5),
 }
 KERNEL = "import numpy as np\ndef kernel(rng, n):\n    return {expression}\n"
 
@@ -133,8 +150,6 @@ def test_permutations():
         assert sorted(x.tolist()) == sorted(y.tolist()) == [i * 0.25 for i in range(64)]
         rounded = np.array([0.1, 0.2]).astype(form)
         assert sorted(np.asarray(pair, np.float64).tolist()) == rounded.astype(np.float64).tolist()
-    with pytest.raises(RefusedError, match="replace=False of choice is not offered by this version"):
-        drawn("def kernel(rng):\n    return rng.choice(5, 2, replace=False)\n", "float16")
 
 
 def test_constants_that_are_drawn_are_of_the_state():
@@ -197,11 +212,11 @@ def test_refused_by_name(name, form):
 @pytest.mark.parametrize(
     ("expression", "words"),
     [
-        ("np.random.multivariate_normal([0.0], [[1.0]])", "numpy.random.multivariate_normal is not offered by this"),
+        ("np.random.bytes(3)", "numpy.random.bytes is not offered by this version: bytes are no random input"),
+        ("rng.dirichlet([[1.0, 2.0]])", "dirichlet takes one row of parameters; accepted: an array of one dimension"),
         ("np.random.PCG64(3).random_raw()", "PCG64.random_raw is not offered by this version: the draws of an audit"),
         ("np.random.get_bit_generator()", "numpy.random.get_bit_generator is not offered by this version"),
         ("rng.standard_normal(3, dtype=np.float32)", "the kernel fixes dtype float32; accepted: float64 or none"),
-        ("rng.permutation(x, axis=1)", "axis= of permutation is not offered by this version; accepted: 0"),
         ("rng.normal([x[0], x[1]], 1.0)", "a list of values of the state as a parameter of a draw"),
     ],
 )

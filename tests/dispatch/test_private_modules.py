@@ -1,15 +1,14 @@
-"""Private copies of listed modules and packages: every spelling, every way to import, nothing changed behind."""
+"""Private copies of listed modules and packages: every spelling and every way to import."""
 
 from __future__ import annotations
 
 import importlib
 import sys
-import threading
 
 import numpy as np
 import pytest
 from kernel_runs import owned, same, unheld
-from private_packages import DRAWS, Watch, copied, run, written
+from private_packages import DRAWS, PACKAGE, Watch, copied, run, written
 
 from narrowgauge.dispatch.array import Array
 from narrowgauge.errors import EscapeError, RefusedError
@@ -43,64 +42,6 @@ SPELLINGS = {
     "    def empty(self): return np.empty(self.n)\n    @classmethod\n    def of(cls, x): return cls(len(x)).empty\n"
     "def f(x):\n    v = Grid.of(x)\n    v[:] = np.sqrt(x)\n    return v * 0.1",
 }  # fmt: skip
-PACKAGE = {
-    "kernel.py": """
-        import pkg
-        import pkg.models.heston as h
-        from pkg import models, scale
-        from pkg.models import *
-        def kernel(x):
-            return [pkg.scale(x), h.step(x), models.heston.step(x), scale(x), local(x), pkg.tools.deep.third(x),
-                    euler.step(x)]
-        def local(x):
-            from pkg.tools import deep as d
-            from pkg.tools.deep import third
-            import pkg.tools.deep
-            assert d.third is third is pkg.tools.deep.third
-            return third(x)
-    """,
-    "pkg/__init__.py": """
-        from .tools import scale
-        from . import tools
-        NAMES = [__name__, __package__]
-    """,
-    "pkg/tools/__init__.py": """
-        import numpy as np
-        def scale(x):
-            v = np.zeros(3)
-            v[:] = x * 0.3
-            return v
-    """,
-    "pkg/tools/deep.py": """
-        from .. import tools
-        from ..tools import scale
-        from . import scale as again
-        def third(x):
-            assert again is scale is tools.scale
-            return again(x) / 3
-    """,
-    "pkg/models/__init__.py": """
-        __all__ = ["euler", "heston"]
-        from pkg.tools import deep
-    """,
-    "pkg/models/euler.py": """
-        from .heston import root
-        from pkg.models import heston
-        def step(x):
-            return root(x) + heston.root(x)
-    """,
-    "pkg/models/heston.py": """
-        import numpy as np
-        def root(x):
-            return np.sqrt(x) * np.full(3, 0.1)
-        from . import euler                 # a circle
-        import pkg.models.euler as other
-        from pkg.models.euler import step as euler_step
-        def step(x):
-            assert euler is other and euler.step is euler_step
-            return euler.step(x)
-    """,
-}
 
 
 @pytest.mark.parametrize("form", ["float64", "float16", "bfloat16", "float32"])
@@ -357,123 +298,6 @@ def test_a_missing_name_or_module_is_pythons_own_error(tmp_path):
             copied(tmp_path, "float16", ["pkg"])
     written(tmp_path, {"kernel.py": "try:\n    import pkg.fast\nexcept ImportError:\n    FAST = False\n"})
     assert copied(tmp_path, "float16", ["pkg"])[0].FAST is False
-
-
-def test_two_settings_in_two_threads_do_not_mix(tmp_path):
-    """Each has its own copies, caches and buffers, also while both are importing and computing."""
-    written(tmp_path, PACKAGE)
-    start = threading.Barrier(2)
-    results = {}
-
-    def work(form):
-        module, copies = copied(tmp_path, form, ["pkg"])
-        start.wait()
-        for _ in range(50):
-            results.setdefault(form, []).append(module.kernel(owned(DRAWS, copies.setting)))
-        results[form, "setting"] = copies.setting
-
-    threads = [threading.Thread(target=work, args=(form,)) for form in ("float16", "bfloat16")]
-    for thread in threads:
-        thread.start()
-    for thread in threads:
-        thread.join()
-    alone = {form: run(tmp_path, form, ["pkg"])[0] for form in ("float16", "bfloat16")}
-    for form in ("float16", "bfloat16"):
-        setting = results[form, "setting"]
-        assert setting.faults == []
-        for result in results[form]:
-            assert unheld(result, setting) == []
-            for one, other in zip(result, alone[form], strict=True):
-                assert one._carrier.tobytes() == other._carrier.tobytes()
-    assert not np.array_equal(alone["float16"][0]._carrier, alone["bfloat16"][0]._carrier)
-
-
-KEPT = """
-    import functools
-    import numpy as np
-    SEEN, TABLE, WEIGHTS = [], {"a": [1]}, np.ones(3)
-    COUNT = 0
-    @functools.lru_cache(maxsize=None)
-    def cached(n):
-        return np.full(3, n / 3)
-    def counter():
-        n = 0
-        def count():
-            nonlocal n
-            n += 1
-            return n
-        return count
-    count = counter()
-    class Model:
-        calls = 0
-        history = []
-    def f(x, seen=[], *, table={"calls": 0}):
-        global COUNT
-        COUNT += 1
-        Model.calls += 1
-        Model.history.append(x)
-        seen.append(x)
-        table["calls"] += 1
-        TABLE["a"].append(x)
-        SEEN.append(count())
-        WEIGHTS[:] = x
-        if RAISES:
-            1 / 0
-        return cached(1) * x
-    RAISES = False
-"""
-
-
-def state(module):
-    """Everything of a module that a copy could have changed, by identity and by value."""
-    held = dict(vars(module))
-    f = module.f
-    values = (list(module.SEEN), module.TABLE["a"][:], module.WEIGHTS.tolist(), module.COUNT, module.Model.calls)
-    more = (module.Model.history[:], f.__defaults__[0][:], dict(f.__kwdefaults__["table"]), module.cached.cache_info())
-    cells = [cell.cell_contents for cell in module.count.__closure__]
-    return held, (*values, *more, cells), (f.__code__, f.__defaults__, f.__kwdefaults__, dict(vars(np)))
-
-
-@pytest.mark.parametrize("raises", [False, True])
-def test_the_users_own_modules_stay_as_they_were(tmp_path, monkeypatch, raises):
-    """With the real module imported: dictionaries, caches, closures and defaults are the same, also after an error."""
-    monkeypatch.syspath_prepend(tmp_path)
-    written(tmp_path, {"kept_users.py": KEPT, "kernel.py": "import kept_users\nkernel = kept_users.f\n"})
-    if raises:
-        text = (tmp_path / "kept_users.py").read_text()
-        (tmp_path / "kept_users.py").write_text(text.replace("RAISES = False", "RAISES = True"))
-    real = importlib.import_module("kept_users")
-    monkeypatch.delitem(sys.modules, "kept_users")
-    monkeypatch.setitem(sys.modules, "kept_users", real)
-    before, watch = state(real), Watch()
-    for form in ("float16", None):
-        module, copies = copied(tmp_path, form, ["kept_users"])
-        for _ in range(2):
-            if raises:
-                with pytest.raises(ZeroDivisionError):
-                    module.kernel(owned(DRAWS, copies.setting))
-            else:
-                module.kernel(owned(DRAWS, copies.setting))
-        assert module.kept_users is not real
-        assert module.kept_users.SEEN == [1, 2]
-    after = state(real)
-    assert after == before
-    assert all(after[0][name] is before[0][name] for name in before[0])
-    assert watch.unchanged()
-
-
-def test_a_module_that_raises_halfway_leaves_nothing_behind(tmp_path):
-    """sys.modules, sys.path and the set of copies are as they were, and a second try executes the module again."""
-    text = "import sys\nsys.path.insert(0, 'x')\nimport pkg.part\n1 / 0\n"
-    written(tmp_path, {"kernel.py": "", "pkg/__init__.py": "", "pkg/part.py": "", "pkg/broken.py": text})
-    _, copies = copied(tmp_path, "float16", ["pkg"])
-    watch = Watch()
-    for _ in range(2):
-        with pytest.raises(ZeroDivisionError):
-            copies.load("pkg.broken")
-        assert watch.unchanged()
-    assert set(copies.modules) == {"kernel", "pkg", "pkg.part"}
-    assert not hasattr(copies.load("pkg"), "broken")
 
 
 def test_the_search_path_of_a_copy_is_its_own(tmp_path):

@@ -7,42 +7,18 @@ import math
 import numpy as np
 import pytest
 from scipy import special, stats
+from tape_cases import PER_STEP, played, request, tape_of
 
 from narrowgauge.arithmetic.arithmetic import arithmetic_named
 from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.draws.layout import Layout, Request, StepAxis, draws_of, layouts
 from narrowgauge.draws.normals import exact_normals
 from narrowgauge.draws.quantiles import inverted
-from narrowgauge.draws.streams import Purpose, UniformStream, uniforms
-from narrowgauge.draws.tape import ArmDraws, Tape, TapeError
+from narrowgauge.draws.streams import Purpose, uniforms
+from narrowgauge.draws.tape import ArmDraws, TapeError
 
 FALSE_ALARM = 1e-6  # of each statistical test
-PER_STEP = Layout(before=0, period=1, after=0, axes=())
 AHEAD = Layout(before=1, period=0, after=0, axes=(StepAxis(place=0),))
-
-
-def request(name, size, *parameters):
-    """A request whose parameters are all plain."""
-    return Request(name=name, size=size, parameters=parameters)
-
-
-def tape_of(steps, m=2, layout=PER_STEP, seed=3):
-    """A tape of a fine run of so many steps."""
-    stream = UniformStream(seed, Purpose.TRIAL, 0, 0)
-    return Tape(stream, paths=0, steps=steps, refinement=m, layout=layout)
-
-
-def played(arm, fine, coarse=()):
-    """What the fine and the coarse run of an arm get for their requests."""
-    reader = arm.fine()
-    first = [reader.draw(one, one.parameters) for one in fine]
-    reader.finish()
-    if not coarse:
-        return first, []
-    reader = arm.coarse()
-    second = [reader.draw(one, one.parameters) for one in coarse]
-    reader.finish()
-    return first, second
 
 
 def summed(parts, form):

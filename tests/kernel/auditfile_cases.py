@@ -26,6 +26,7 @@ layout = "factors, paths,steps"
 coupling = "none"
 modules = ["plant"]
 shared = ["plant.fast"]
+allow = ["models/reserve.py:41", "plant.py:7"]
 [parameters]
 volatility = 0.4
 years = 3

@@ -32,6 +32,7 @@ DEFAULTS = {
     "kernel.coupling": "sum",
     "kernel.modules": [],
     "kernel.shared": [],
+    "kernel.allow": [],
     "ladder.coarsest_steps": 1,
     "ladder.refinement": 2,
     "target.worthwhile": None,
@@ -52,7 +53,7 @@ DEFAULTS = {
     "sampling.seed": 1,
 }
 ALL_TABLES = "kernel, parameters, ladder, target, formats, cost, sampling"
-KERNEL_KEYS = "run, takes, factors, layout, coupling, modules, shared"
+KERNEL_KEYS = "run, takes, factors, layout, coupling, modules, shared, allow"
 
 
 class TestDefaults:

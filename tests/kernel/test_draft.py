@@ -44,6 +44,7 @@ factors = 2  # guessed from how dW is taken apart; check
 # coupling = "sum"  # "none": levels are measured without their differences
 # modules = []  # further modules and packages whose NumPy is rounded
 # shared = []  # modules of theirs that cannot be copied, run as they are and not rounded
+# allow = []  # lines such as "model.py:41" where values may leave and go on unrounded
 
 [parameters]
 # Passed to the kernel by keyword; arrays of numbers arrive as float64 NumPy arrays.

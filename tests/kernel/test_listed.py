@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import codecs
 import importlib.machinery
 import sys
 import textwrap
@@ -58,6 +59,7 @@ HELPER = "import numpy as np\ndef scaled(x):\n    v = np.zeros(x.shape)\n    v[:
 
 def test_a_module_beside_the_kernel(tmp_path: Path) -> None:
     """It is found in the folder of the kernel's file, before Python's path, and rounded; Python's tables stay."""
+    codecs.lookup("utf-8-sig")  # what reading an audit file brings in by itself
     before = dict(sys.modules), sys.path, list(sys.path)
     kernel = found(
         tmp_path, {"models/kernel.py": KERNEL, "models/helper.py": HELPER}, ["helper"], run="models/kernel.py:value"
@@ -101,12 +103,15 @@ def refused(folder: Path, files: dict[str, str], modules: list[str], shared: lis
 
 
 def test_what_can_be_told_without_executing(tmp_path: Path) -> None:
-    """Modules that are not there, have a stand-in, have no source, or are not Python."""
+    """Modules that are not there, are the audit's own, have a stand-in, have no source, or are not Python."""
     kernel = {"kernel.py": KERNEL}
     nowhere = "no Python module 'nowhere'; accepted: a module beside the kernel, or an importable one"
     assert refused(tmp_path, kernel, ["nowhere"]) == f"kernel.modules: {nowhere}"
     assert refused(tmp_path, kernel, [], ["nowhere"]) == f"kernel.shared: {nowhere}"
-    for name in ("numpy.random", "scipy"):
+    for name in ("narrowgauge", "narrowgauge.errors", "narrowgauge.nowhere"):
+        words = f"{name} is part of the audit itself; accepted: modules of the kernel's own"
+        assert refused(tmp_path, kernel, [name]) == f"kernel.modules: {words}"
+    for name in ("numpy.random", "scipy", "pickle"):
         words = f"{name} belongs to {name.split('.')[0]}, for which every copy has a stand-in"
         assert refused(tmp_path, kernel, [name]) == f"kernel.modules: {words}; accepted: modules of the kernel's own"
     fast = {"pkg/__init__.py": "", f"pkg/fast{SUFFIX}": ""}
@@ -118,6 +123,21 @@ def test_what_can_be_told_without_executing(tmp_path: Path) -> None:
     assert refused(tmp_path, {**kernel, "helper.py": "def f(:\n"}, ["helper"]) == (
         f"kernel.modules: {tmp_path.resolve() / 'helper.py'}:1 is not Python: invalid syntax; accepted: a Python file"
     )
+
+
+def test_a_module_of_the_standard_library_may_be_listed(tmp_path: Path) -> None:
+    """It is copied like any other one, and its arithmetic rounded; one that registers itself is refused."""
+    text = "import colorsys\nimport numpy as np\ndef value(z, h):\n    return np.array([{call} for x in z[0]])\n"
+    call = "colorsys.rgb_to_yiq(x, x, x)[0]"  # 0.30 r + 0.59 g + 0.11 b, which the library writes in that order
+    kernel = found(tmp_path, {"kernel.py": text.format(call=call)}, ["colorsys"])
+    half = np.float16
+    expected = [half(half(0.3) * x) + half(half(0.59) * x) + half(half(0.11) * x) for x in half([1 / 3, 0.0, -2.0])]
+    assert result(kernel, "float16") == [float(x) for x in expected]
+    kernel = found(tmp_path, {"kernel.py": "import os\ndef value(z, h):\n    return z[0]\n"}, ["os"])
+    with pytest.raises(
+        AuditFileError, match=r"kernel\.modules: os cannot be copied: it changes sys\.modules\['os\.path'\]"
+    ):
+        private_copy(kernel, arithmetic_named("float16"))
 
 
 @pytest.mark.parametrize(
@@ -180,7 +200,7 @@ def test_a_swallowed_refusal_of_the_kernels_module_is_not_lost(tmp_path: Path) -
 
 
 def test_a_function_handed_over_with_listed_modules(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
-    """Plain NumPy runs the function with its real modules, an arithmetic a copy that meets copies of them."""
+    """Plain NumPy and an arithmetic each run a copy that meets copies of its modules, which stay as they are."""
     monkeypatch.syspath_prepend(tmp_path)
     (tmp_path / "listed_helper.py").write_text(HELPER)
     helper: Any = __import__("listed_helper")
@@ -192,6 +212,9 @@ def test_a_function_handed_over_with_listed_modules(tmp_path: Path, monkeypatch:
 
     table = {"run": value, "takes": "normals", "modules": ["listed_helper"]}
     kernel = find_kernel(audit_file_from({"kernel": table, "ladder": {"horizon": 1.0, "finest": 2}}))
-    assert private_copy(kernel, None).function is value
+    before = dict(vars(helper))
+    assert private_copy(kernel, None).function is not value
     assert result(kernel) == result(kernel, "float64") == [1.0, 0.0, 6.0]
     assert result(kernel, "float16") == EXPECTED
+    assert dict(vars(helper)) == before
+    assert value.__closure__[0].cell_contents is helper

@@ -225,13 +225,15 @@ def scaled(z: Any, h: float, factor: float = 3.0) -> Any:
 
 
 def test_a_function_handed_over() -> None:
-    """It has no file to compile; plain NumPy runs the function itself, an arithmetic a copy of it."""
+    """It has no file to compile; plain NumPy and an arithmetic each run a copy of it, so that nothing of it changes."""
     kernel = find_kernel(handed(scaled))
     assert (kernel.code, kernel.name, kernel.source) == (None, "scaled", "audit")
     assert kernel.run == f"{__name__}:scaled"
     assert kernel.function is scaled
-    assert private_copy(kernel, None).function is scaled
-    assert private_copy(kernel, NARROW).function is not scaled
+    for arithmetic in (None, NARROW):
+        made: Any = private_copy(kernel, arithmetic).function
+        assert made is not scaled
+        assert made.__globals__ is not scaled.__globals__
     assert result(kernel) == result(kernel, "float64") == [1.0, 0.0, 6.0]
     assert result(kernel, "float16") == [float(np.float16(3 * float(np.float16(1 / 3)))), 0.0, 6.0]
 

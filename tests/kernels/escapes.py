@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import pickle
-import struct
 from typing import NamedTuple
 
 from narrowgauge.errors import DispatchError, EscapeError, RefusedError
@@ -40,6 +38,9 @@ def fixes(dtype: str) -> str:
 # A module beside none of the kernel's, which no copy is made of: it has NumPy as it is.
 FOREIGN = """
 import math
+import pickle
+from decimal import Decimal
+from json import dumps
 import numpy as np
 BUFFER = np.zeros(48)
 CACHE = {}
@@ -57,6 +58,9 @@ def stored(x):
     return BUFFER
 def asarray(x): return np.asarray(x, dtype=float) * 0.1
 def written(x): return np.frombuffer(bytes(x))
+def pickled(x): return pickle.loads(pickle.dumps(x))
+def decimal(x): return Decimal(x)
+def json(x): return dumps(x)
 def memory(x): return np.asarray(memoryview(x))
 def interface(x): return np.lib.stride_tricks.as_strided(np.array(x.__array_interface__), (3,))
 def pointer(x): return x.ctypes.data
@@ -116,11 +120,10 @@ ESCAPES = {
         RefusedError,
         "np.fft.fft is refused: it gives complex numbers, which no format holds; accepted: a kernel of real numbers",
     ),
-    "a multivariate draw": Escape(
-        "return rng.multivariate_normal(np.zeros(2), np.eye(2), 48)[:, 0]",
+    "bytes of a generator": Escape(
+        "rng.bytes(3)",
         RefusedError,
-        "Generator.multivariate_normal is not offered by this version: its factor of the covariance is hidden; "
-        "accepted: standard_normal, and the factor in the kernel's own arithmetic",
+        "Generator.bytes is not offered by this version: bytes are no random input of a path; accepted: integers",
     ),
     "a table of objects made numbers": Escape(
         "b = np.empty(2, object); b[0] = x[0]; b[1] = x[1]; return b.astype(float)", EscapeError, FLOAT
@@ -136,6 +139,34 @@ ESCAPES = {
         RefusedError,
         ".as_integer_ratio is not offered by this version on a value of the state",
     ),
+    "a decimal number": Escape(
+        "import decimal; return decimal.Decimal(x[0])",
+        EscapeError,
+        "decimal.Decimal takes a value out of the emulated arithmetic; accepted: leave it as it is",
+    ),
+    "bytes of a struct": Escape("import struct; return struct.pack('d', x[0])", EscapeError, FLOAT),
+    "JSON": Escape(
+        "import json; return json.dumps([x])",
+        RefusedError,
+        "json.dumps of the state writes what nobody rounds; accepted: return the state",
+    ),
+    "pickled by a foreign module": Escape(
+        "return tools.pickled(x)",
+        RefusedError,
+        "a value of the state is pickled where its run is not known; accepted: copy.deepcopy, or pickle imported in "
+        "the kernel's own module",
+    ),
+    "bytes by a foreign module": Escape(
+        "return tools.written(x)",
+        RefusedError,
+        "bytes() is not offered by this version on a value of the state",
+    ),
+    "text and back": Escape(
+        "return np.full(48, float(f'{x[0]:.6f}'))",
+        EscapeError,
+        "a text that was made of the state becomes a number again, which nobody rounds; "
+        "accepted: np.round for a number of digits",
+    ),
     "hexadecimal digits": Escape(
         "return x[0].hex()", RefusedError, ".hex is not offered by this version on a value of the state"
     ),
@@ -143,18 +174,12 @@ ESCAPES = {
 
 # Ways out that Python or NumPy closes by itself: what it says, with the line in the traceback.
 CLOSED = {
-    "return tools.written(x)": (TypeError, "'Scalar' object cannot be interpreted as an integer"),
     "return tools.memory(x)": (TypeError, "memoryview: a bytes-like object is required, not 'Array'"),
     "return tools.interface(x)": (AttributeError, "'ndarray' object has no attribute '__array_interface__'"),
     "return tools.view(x)": (
         TypeError,
         "descriptor 'view' for 'numpy.ndarray' objects doesn't apply to a 'Array' object",
     ),
-    "import struct; return struct.pack('d', x[0])": (struct.error, "required argument is not a float"),
-    "import decimal; return decimal.Decimal(x[0])": (TypeError, "conversion from Scalar to Decimal is not supported"),
-    "import pickle; return pickle.loads(pickle.dumps(x))": (
-        pickle.PicklingError,
-        "args[0] from __newobj__ args has the wrong class",
-    ),
-    "return np.full(48, float(repr(x[0])))": (ValueError, "could not convert string to float: "),
+    "return tools.decimal(x[0])": (TypeError, "conversion from Scalar to Decimal is not supported"),
+    "return tools.json(x[0])": (TypeError, "Object of type float64 is not JSON serializable"),
 }

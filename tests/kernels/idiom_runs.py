@@ -15,7 +15,7 @@ from narrowgauge.dispatch.feed import Feed
 from narrowgauge.dispatch.importing import Copies
 from narrowgauge.dispatch.modules import Sources
 from narrowgauge.dispatch.randoms import generator
-from narrowgauge.dispatch.setting import Observer, Place, Route, Setting, Wrapped
+from narrowgauge.dispatch.setting import Observer, Place, Route, Setting, Way, Wrapped
 from narrowgauge.draws.streams import Purpose, UniformStream
 from narrowgauge.draws.tape import ArmDraws, Tape
 
@@ -49,9 +49,15 @@ class Count:
         """Take note of one operation."""
         self.operations.add((setting.where(), route))
 
-    def decided(self, setting: Setting) -> None:
+    def met(self, setting: Setting, constant: Any) -> None:
+        """Take no note of constants."""
+
+    def decided(self, setting: Setting, answer: bool) -> None:
         """Take note of one decision."""
         self.decisions += 1
+
+    def left(self, setting: Setting, way: Way) -> None:
+        """Take no note of what leaves."""
 
 
 class Bench:
@@ -74,10 +80,12 @@ class Bench:
         if setting is not None:
             setting.paths = PATHS
         draws = ArmDraws(self.tape, arithmetic_named(form or "float64"))
-        with np.errstate(all="ignore"), self.feed.run(draws.fine()):
-            result = made.kernel(generator(self.feed), H)
-        if setting is not None and setting.faults:
-            raise setting.faults[0]
+        try:
+            with np.errstate(all="ignore"), self.feed.run(draws.fine()):
+                result = made.kernel(generator(self.feed), H)
+        finally:  # as an audit does: what the kernel or NumPy made of a fault comes second
+            if setting is not None and setting.faults:
+                raise setting.faults[0]
         carrier = result._carrier if isinstance(result, Wrapped) else result
         if setting is not None and carrier.dtype.kind == "f":
             assert isinstance(result, Wrapped)

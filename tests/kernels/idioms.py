@@ -80,6 +80,13 @@ def centred(r: Any, z: Any) -> Any:
     return r(z[0] - r(z[0].mean()))
 
 
+def vectors(r: Any, z: Any) -> Any:
+    """Rows of two normals times a factor of a covariance, which is computed in float64 and rounded once."""
+    factor = r(np.linalg.cholesky(np.array([[4.0, 1.0], [1.0, 1.25]])))
+    first, second = z.ravel()[:96].reshape(48, 2).T
+    return r(r(factor[0, 0] * first) + sums(r, [r(factor[1, 0] * first), r(factor[1, 1] * second)]))
+
+
 def scored(r: Any, z: Any) -> Any:
     """The normal distribution function of the draws, computed in float64 and rounded once."""
     from scipy.stats import norm
@@ -147,6 +154,20 @@ def kernel(rng, h, draw=OWN.standard_normal):
     return out
 """,
         lambda r, z, s: walk(r, z),
+    ),
+    "single draws in a scalar loop": Idiom(
+        """
+import numpy as np
+def kernel(rng, h):
+    ends = []
+    for p in range(48):
+        x = 1.0
+        for i in range(4):
+            x += 0.1 * rng.standard_normal() if i % 2 else 0.1 * np.random.normal()
+        ends.append(x)
+    return np.array(ends)
+""",
+        lambda r, z, s: walk(r, z.ravel().reshape(48, 4).T),
     ),
     "a list of one moving value": Idiom(
         HEAD
@@ -233,6 +254,15 @@ def kernel(rng, h):
     return x
 """,
         lambda r, z, s: reverted(r, s),
+    ),
+    "vectors of correlated normals": Idiom(
+        """
+import numpy as np
+def kernel(rng, h):
+    x = rng.multivariate_normal(np.zeros(2), [[4.0, 1.0], [1.0, 1.25]], 48, method="cholesky")
+    return x[:, 0] + x[:, 1]
+""",
+        lambda r, z, s: vectors(r, z),
     ),
     "a distribution function": Idiom(
         HEAD + "    from scipy.stats import norm\n    return norm.cdf(z[0])\n", lambda r, z, s: scored(r, z)

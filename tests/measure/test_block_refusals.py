@@ -159,5 +159,5 @@ def test_a_result_of_another_run_is_refused(tmp_path: Path) -> None:
             runner_for(tmp_path, source).run(0, 0)
     finally:
         del sys.modules[shared.__name__]
-    expected = "the kernel returned an array of another run: a cache of it outlives the run"
+    expected = "the kernel returned a value of another run: a cache of it outlives the run"
     assert str(caught.value) == f"level 0, arm bfloat16: {expected}"

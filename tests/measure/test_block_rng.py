@@ -252,12 +252,6 @@ def test_a_draw_that_all_paths_share(tmp_path: Path) -> None:
     ("head", "tables", "message"),
     [
         (
-            "rng, h",
-            {},
-            'kernel.run: with takes = "rng" the kernel has to take the number of paths; accepted: a function',
-        ),
-        ("rng, paths", {}, 'kernel.run: with takes = "rng" the kernel has to take the number of paths'),
-        (
             "rng, h, paths",
             {"parameters": {"paths": 3}},
             "parameters.paths: the audit gives this number itself, by level",
@@ -273,7 +267,7 @@ def test_a_draw_that_all_paths_share(tmp_path: Path) -> None:
 def test_kernels_that_cannot_be_called(
     tmp_path: Path, head: str, tables: dict[str, dict[str, int]], message: str
 ) -> None:
-    """A kernel that draws for itself must take paths by keyword; steps and paths are no parameters of the file."""
+    """A kernel that draws for itself is given steps and paths by the audit: they are no parameters of the file."""
     file = file_for(
         written(tmp_path, f"def value({head}):\n    return rng.normal(size=paths)\n"), {"kernel": RNG, **tables}
     )
@@ -293,12 +287,12 @@ def test_steps_may_be_left_out(tmp_path: Path) -> None:
 
 
 def test_refusals_have_level_and_arm(tmp_path: Path) -> None:
-    """A distribution that is not offered is refused with file and line, in plain NumPy already."""
-    path = written(tmp_path, PLANNED.format(LOOP.format("rng.wald(1.0, 2.0, paths)")))
+    """What is not offered is refused with file and line, in plain NumPy already."""
+    path = written(tmp_path, PLANNED.format(LOOP.format("rng.bytes(paths)")))
     file = file_for(path, {"kernel": RNG})
     with pytest.raises(RefusedError) as caught:
         plan_draws(file, find_kernel(file))
-    assert f"{path}:5: Generator.wald is not offered by this version: the draws" in str(caught.value)
+    assert f"{path}:5: Generator.bytes is not offered by this version: bytes are" in str(caught.value)
 
 
 FACTORS = """    W = {drawn}

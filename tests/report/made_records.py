@@ -15,17 +15,22 @@ from narrowgauge.record.audit import (
     BestEntry,
     CommonLevelEntry,
     CommonPlanEntry,
+    ConstantEntry,
+    ConstantValue,
     CorrectionEntry,
     DecidedEntry,
+    DecisionEntry,
     FaultEntry,
     FinestEntry,
     KernelEntry,
     LawEntry,
     LevelEntry,
+    LineCount,
     OrdersEntry,
     PlanEntry,
     QuantityEntry,
     RaisedEntry,
+    RangeEntry,
     ReachEntry,
     ReachLine,
     ReferenceEntry,
@@ -236,7 +241,41 @@ REACH = ReachEntry(
         ReachLine(file="/home/user/reserve.py", line=12, operation="sum", route="whole", count=2),
         ReachLine(file="/home/user/reserve.py", line=12, operation="maximum", route="exact", count=4),
     ],
+    integers=[LineCount(file="reserve.py", line=8, count=4)],
+    changed_decisions=[
+        DecisionEntry(file="reserve.py", line=8, arm="float16", reference_count=3, reference_true=2, count=4, true=1)
+    ],
+    allowed_escapes=[LineCount(file="reserve.py", line=9, count=1)],
     remarks=["/home/user/reserve.py:12: the sum along the paths stays in float64"],
+)
+
+
+def constant_entry(line, arm, kind, *values, distinct=None, parameter=None):
+    """Constants of one line; each value a pair of it and what it became."""
+    return ConstantEntry(
+        file=None if line is None else "reserve.py",
+        line=line,
+        parameter=parameter,
+        arm=arm,
+        kind=kind,
+        count=2 * (distinct or len(values)),
+        distinct=distinct or len(values),
+        values=[ConstantValue(value=value, became=became, ulps=1.0, count=2) for value, became in values],
+    )
+
+
+RANGE = RangeEntry(
+    constants=[
+        constant_entry(None, "float16", "infinite", (7e4, None), parameter="curve"),
+        constant_entry(7, "float16", "zero", (1e-8, 0.0)),
+        constant_entry(7, "float16", "subnormal", (3e-5, 2.998113632202148e-05)),
+        constant_entry(
+            9, "float16", "zero", *((number * 1e-12, 0.0) for number in (1.5, 3.0, 4.5, 6.0, 7.5)), distinct=4096
+        ),
+        constant_entry(12, "float16", "zero", (1e-45, 0.0)),
+        constant_entry(12, "bfloat16", "zero", (1e-45, 0.0)),
+        constant_entry(12, "float32", "subnormal", (1e-45, 1.401298464324817e-45)),
+    ]
 )
 
 
@@ -285,6 +324,7 @@ def audit_record(**quantities):
             plan=common_plan(quantities),
         ),
         reach=REACH,
+        range=RANGE,
         cautions=["A verdict is evidence, not approval.", "The emulation does not know a vendor's instructions."],
         provenance={},
     )
@@ -331,7 +371,7 @@ def troubled_record():
         value=replace(entry, finest_paying_level=finest, allocation=allocation, agreement=agreement),
     )
     asked = {**ASKED, "target": None, "assumed": ["target.worthwhile", "cost.float64", "cost.float32"]}
-    return replace(record, asked=asked, reach=None, verdict=replace(record.verdict, sound=False))
+    return replace(record, asked=asked, reach=None, range=None, verdict=replace(record.verdict, sound=False))
 
 
 def trial_entry(*, escapes):
@@ -340,4 +380,4 @@ def trial_entry(*, escapes):
         "/home/user/reserve.py:9: float() takes a value out of the emulated arithmetic; accepted: leave it as it is"
     )
     faults = [FaultEntry(arm=name, kind="escape", message=message) for name in ("float16", "float32")]
-    return TrialEntry(identical=True, reach=REACH, faults=faults if escapes else [])
+    return TrialEntry(identical=True, reach=REACH, range=RANGE, faults=faults if escapes else [])

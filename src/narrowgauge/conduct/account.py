@@ -119,7 +119,8 @@ def account(file: AuditFile, outcome: Outcome, kernel: KernelEntry, provenance: 
             schemes=[None if one.joint is None else scheme_entry(one.joint) for _, one in judged],
             plan=common_plan_entry(file, outcome),
         ),
-        reach=outcome.reach,
+        reach=outcome.trial.reach,
+        range=outcome.trial.range,
         cautions=list(CAUTIONS),
         provenance=provenance,
     )

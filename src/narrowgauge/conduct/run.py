@@ -10,17 +10,18 @@ from typing import Protocol
 
 from threadpoolctl import threadpool_limits
 
-from narrowgauge.conduct.trial import identity_run
+from narrowgauge.conduct.trial import examine
 from narrowgauge.judge.schemes import LevelJudgement, judge_level
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.loading import KernelSource
 from narrowgauge.measure.block import BlockRunner
 from narrowgauge.measure.tally import LevelTally
-from narrowgauge.record.audit import ReachEntry
+from narrowgauge.record.audit import TrialEntry
 
 __all__ = ["Outcome", "Plan", "Watcher", "run"]
 
 _TIMED_LEVEL = 3  # its first block is run first, to say how long the rest takes; it is kept
+_TIMED_PATHS = 32  # of a kernel that is run path by path
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -64,7 +65,7 @@ class Outcome:
     tallies: Mapping[int, LevelTally]
     judgements: Mapping[int, LevelJudgement]
     alpha: float
-    reach: ReachEntry
+    trial: TrialEntry
 
 
 def run(
@@ -78,7 +79,7 @@ def run(
 
     `settled` says whether a level needs no more paths; for an audit, whether no format is undecided on it. Levels that
     are not settled at one look draw more paths for the next; each of J looks has confidence
-    1 - (1 - confidence) / J. Raises what the identity run and the blocks raise.
+    1 - (1 - confidence) / J. Raises what the trial before it and the blocks raise.
     """
     with threadpool_limits(limits=1):  # the same sums in the same order, whatever machine
         return _Conductor(file, kernel, settled, watcher).run()
@@ -102,7 +103,7 @@ class _Conductor:
 
     def run(self) -> Outcome:
         file = self._file
-        reach = identity_run(file, self._kernel, self._runner)
+        trial = examine(file, self._kernel, self._runner)
         looks = self._looks()
         alpha = (1 - file.sampling.confidence) / len(looks)
         if self._watcher is not None:
@@ -117,7 +118,7 @@ class _Conductor:
             pending = [level for level in pending if not self._settled(judgements[level])]
             if not pending:
                 break
-        return Outcome(tallies=self._tallies, judgements=judgements, alpha=alpha, reach=reach)
+        return Outcome(tallies=self._tallies, judgements=judgements, alpha=alpha, trial=trial)
 
     def _looks(self) -> list[int]:
         """Return the paths at which levels are judged: doubled within the budget, each with a block that is new."""
@@ -161,7 +162,10 @@ class _Conductor:
         return -(-target // block) * block
 
     def _plan(self, looks: Sequence[int]) -> Plan:
-        """Time the first block of a middle level, which is kept, and say what the rest will take."""
+        """Time the first block of a middle level, which is kept, and say what the rest will take.
+
+        Of a kernel that is run path by path a few paths are timed: a block could take hours.
+        """
         levels = tuple(
             PlannedLevel(
                 level=level,
@@ -172,9 +176,12 @@ class _Conductor:
             for level in self._file.ladder.levels
         )
         timed = min(_TIMED_LEVEL, self._file.ladder.finest)
-        start = time.perf_counter()
-        self._early[timed] = self._runner.run(timed, 0)
-        each = (time.perf_counter() - start) / (self._early[timed].paths * self._steps(timed))
+        if self._runner.singly:
+            each = self._runner.seconds(timed, _TIMED_PATHS) / (_TIMED_PATHS * self._steps(timed))
+        else:
+            start = time.perf_counter()
+            self._early[timed] = self._runner.run(timed, 0)
+            each = (time.perf_counter() - start) / (self._early[timed].paths * self._steps(timed))
         first = sum(one.paths_first_look * self._steps(one.level) for one in levels)
         most = sum(one.paths_most * self._steps(one.level) for one in levels)
         return Plan(

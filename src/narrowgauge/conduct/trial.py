@@ -6,14 +6,13 @@ bits: what differs went a way of its own.
 
 from __future__ import annotations
 
-from collections import Counter
-from collections.abc import Sequence
-from typing import Any
+from collections.abc import Iterable, Sequence
 
 import numpy as np
 
 from narrowgauge.arithmetic.arithmetic import arithmetic_named
-from narrowgauge.dispatch.setting import Place, Route, Setting
+from narrowgauge.conduct.observers import Constants, Notes
+from narrowgauge.conduct.reached import most_of, range_entry, reach_entry, text_remarks
 from narrowgauge.draws.coarsen import Draws
 from narrowgauge.draws.streams import Purpose
 from narrowgauge.draws.tape import Tape
@@ -23,12 +22,13 @@ from narrowgauge.kernel.contract import check_parameters
 from narrowgauge.kernel.loading import KernelSource
 from narrowgauge.measure.arms import REFERENCE
 from narrowgauge.measure.block import BlockRunner
-from narrowgauge.measure.calls import Caller, Quantities
-from narrowgauge.record.audit import FaultEntry, ReachEntry, ReachLine, TrialEntry
+from narrowgauge.measure.calls import Quantities
+from narrowgauge.record.audit import FaultEntry, TrialEntry
 
-__all__ = ["identity_run", "try_arms"]
+__all__ = ["examine", "try_arms"]
 
 _PATHS = 1024
+_FEW = 8  # paths on the finest level, which may have thousands of steps; what is met there does not depend on them
 _LEVEL = 2  # coarse enough to be over at once, fine enough to pass through the time loop more than once
 _NOT_REPEATABLE = (
     "a second call with the same draws does not give the same bits",
@@ -40,35 +40,157 @@ _NOT_IDENTICAL = (
 )
 
 
-class _Count:
-    """An observer that counts operations by line, and the decisions of the control flow."""
+class _Trial:
+    """The runs of one trial, and what was noted of them."""
 
-    def __init__(self) -> None:
-        self.operations: Counter[tuple[Place | None, str, Route]] = Counter()
-        self.decisions = 0
+    def __init__(self, file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> None:
+        self._file, self._kernel, self._runner = file, kernel, runner
+        self._levels = _levels(file)
+        self._draws: dict[int, Draws | Tape] = {}
+        self._reference: dict[int, Notes] = {}
+        self._narrow: dict[str, dict[int, Notes]] = {}
+        self._finest: Notes | None = None
+        self._remarks: list[str] = []
+        self.arms = runner.arms[1:]
 
-    def saw(self, setting: Setting, operation: str, route: Route, operands: Sequence[Any], result: Any) -> None:
-        """Count one operation."""
-        self.operations[setting.where(), operation, route] += 1
+    @property
+    def levels(self) -> list[int]:
+        """The levels on which every arm is tried."""
+        return self._levels
 
-    def decided(self, setting: Setting) -> None:
-        """Count one decision."""
-        self.decisions += 1
+    def identity(self) -> None:
+        """Run the kernel under plain NumPy and under float64 through the whole machinery, on each level.
+
+        The finest level is run on few paths, since the step sizes there are constants too. Raises what `examine`
+        says of the reference.
+        """
+        self._remark(self._runner.remarks)
+        for level in self._levels:
+            notes = Notes(self.arms)
+            self._remark(_identical(self._file, self._runner, self._drawn(level), level, notes))
+            self._reference[level] = notes
+        if self._file.ladder.finest not in self._levels:
+            self._finest = self._noted_on_finest()
+
+    def arm(self, arm: str, level: int) -> FaultEntry | None:
+        """Run one arm on one level, on the reference's draws; what the kernel raises is returned.
+
+        Raises DispatchError for an escape, KernelError for a result of the wrong kind.
+        """
+        notes = Notes([arm])
+        draws = self._drawn(level)
+        if isinstance(draws, Tape) and level not in self._reference:
+            _plainly_twice(self._file, self._runner, draws, level)  # writes what the arm has to ask for
+        try:
+            self._runner.caller(arithmetic_named(arm), notes).fine(draws, level)
+        except DispatchError:
+            raise
+        except KernelError as problem:
+            raise KernelError(str(problem), level=level, arm=arm) from problem.__cause__
+        except KeyboardInterrupt:
+            raise
+        except BaseException as problem:  # the audit itself keeps what a narrow arm raises as data
+            what = f"the kernel raised {type(problem).__name__}: {problem}"
+            return FaultEntry(arm=arm, kind="raised", message=what)
+        self._narrow.setdefault(arm, {})[level] = notes
+        return None
+
+    def entry(self, *, identical: bool, faults: list[FaultEntry]) -> TrialEntry:
+        """Return all that the runs showed; without a reference nothing was reached."""
+        file, main = self._file, self._levels[0]
+        references = [*self._reference.values(), *([] if self._finest is None else [self._finest])]
+        narrow = [notes for levels in self._narrow.values() for notes in levels.values()]
+        reference = self._reference.get(main, Notes(self.arms))
+        compared = {arm: levels[main] for arm, levels in self._narrow.items() if main in levels}
+        runs = [*references, *narrow]
+        remarks = [*self._remarks, *text_remarks(file, runs), *self._unused(runs)]
+        constants = Constants(self.arms)
+        for notes in references:
+            constants.add(notes.constants)
+        for arm in self._narrow:
+            own = Constants(self.arms)
+            for notes in self._narrow[arm].values():
+                own.add(notes.constants)
+            constants.fill_in(own)
+        return TrialEntry(
+            identical=identical,
+            reach=reach_entry(file, reference, compared if self._reference else {}, runs, remarks),
+            range=range_entry(file, constants, self.arms) if identical else None,
+            faults=faults,
+        )
+
+    def _drawn(self, level: int) -> Draws | Tape:
+        if level not in self._draws:
+            self._draws[level] = self._runner.draws(level, 0, Purpose.IDENTITY, _PATHS)
+        return self._draws[level]
+
+    def _noted_on_finest(self) -> Notes:
+        """Run the reference on the finest level: on few paths, or on as many as a block has where those do not do."""
+        level = self._file.ladder.finest
+        for paths in (_FEW, _PATHS):
+            notes = Notes(self.arms)
+            try:
+                draws = self._runner.draws(level, 0, Purpose.IDENTITY, paths)
+                _identical(self._file, self._runner, draws, level, notes)
+                break
+            except (KernelError, DispatchError):  # perhaps a kernel that works on groups of paths
+                if paths == _PATHS or self._runner.singly:
+                    raise
+        return notes
+
+    def _remark(self, texts: Iterable[str]) -> None:
+        self._remarks += [text for text in texts if text not in self._remarks]
+
+    def _unused(self, runs: Sequence[Notes]) -> list[str]:
+        """Say which lines of kernel.allow let nothing out."""
+        found = {place.resolved() for place in most_of(runs, "escape") if place is not None}
+        return [
+            f"kernel.allow: nothing escaped at {entry}"
+            for entry, place in self._kernel.allowed.items()
+            if place not in found
+        ]
 
 
-def identity_run(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> ReachEntry:
-    """Run the kernel under plain NumPy and under float64 through the whole machinery; return what the latter reached.
+def examine(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> TrialEntry:
+    """Run the identity run, and every narrow arm once on a small sample, before anything is measured.
 
-    Raises KernelError where the results differ in any bit, of these two runs or of a repeated one, or the kernel
-    raises, and what the machinery refuses; AuditFileError where parameters or targets do not fit the kernel.
+    Raises KernelError where the results of plain NumPy and of float64 through the machinery differ in any bit, or those
+    of a repeated run, or where the kernel raises in one of them; EscapeError or RefusedError, with level and arm where
+    it is a narrow one; AuditFileError where parameters or targets do not fit the kernel. What the kernel raises in a
+    narrow arm is left to the measurement.
     """
-    counts = []
-    remarks = list(runner.remarks)
-    for level in _levels(file):
-        counts.append(_Count())
-        met = _identical(file, kernel, runner.draws(level, 0, Purpose.IDENTITY, _PATHS), level, counts[-1])
-        remarks += [one for one in met if one not in remarks]
-    return _reach(counts[0], file, remarks)
+    trial = _Trial(file, kernel, runner)
+    trial.identity()
+    for arm in trial.arms:
+        for level in trial.levels:
+            try:
+                raised = trial.arm(arm, level)
+            except DispatchError as problem:
+                raise type(problem)(f"level {level}, arm {arm}: {problem}") from None
+            if raised is not None:
+                break
+    return trial.entry(identical=True, faults=[])
+
+
+def try_arms(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> TrialEntry:
+    """Run the same and return what would be rounded and escape, with what stops the reference or a narrow arm."""
+    trial = _Trial(file, kernel, runner)
+    faults = []
+    try:
+        trial.identity()
+    except DispatchError as problem:
+        faults.append(FaultEntry(arm=REFERENCE, kind="escape", message=str(problem)))
+    identical = not faults
+    for arm in trial.arms:
+        for level in trial.levels:
+            try:
+                fault = trial.arm(arm, level)
+            except DispatchError as problem:
+                fault = FaultEntry(arm=arm, kind="escape", message=str(problem))
+            if fault is not None:
+                faults.append(fault)
+                break
+    return trial.entry(identical=identical, faults=faults)
 
 
 def _levels(file: AuditFile) -> list[int]:
@@ -76,14 +198,14 @@ def _levels(file: AuditFile) -> list[int]:
     return sorted({min(_LEVEL, file.ladder.finest), 0}, reverse=True)
 
 
-def _identical(file: AuditFile, kernel: KernelSource, draws: Draws | Tape, level: int, count: _Count) -> list[str]:
+def _identical(file: AuditFile, runner: BlockRunner, draws: Draws | Tape, level: int, notes: Notes) -> list[str]:
     """Raise unless plain NumPy, plain NumPy again and float64 through the machinery give the same bits.
 
     Returns what there is to say about the kernel's random numbers and about the modules that it used.
     """
-    plain, repeated = _plainly_twice(file, kernel, draws, level)
+    plain, repeated = _plainly_twice(file, runner, draws, level)
     try:
-        caller = Caller(file, kernel, arithmetic_named(REFERENCE), count)
+        caller = runner.caller(arithmetic_named(REFERENCE), notes)
         with_machinery = caller.fine(draws, level)
     except DispatchError:
         raise
@@ -104,50 +226,13 @@ def _identical(file: AuditFile, kernel: KernelSource, draws: Draws | Tape, level
     return said + [f"{name} is compiled: it ran as the Python function underneath" for name in caller.copy.compiled]
 
 
-def try_arms(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> TrialEntry:
-    """Run the identity run and every narrow arm once on a small sample; return what would be rounded and escape."""
-    faults = []
-    identical = True
-    reach = ReachEntry(operations=0, rounded=0, share=None, decisions=0, lines=[], remarks=[])
-    try:
-        reach = identity_run(file, kernel, runner)
-    except DispatchError as problem:
-        identical = False
-        faults.append(FaultEntry(arm=REFERENCE, kind="escape", message=str(problem)))
-    for arm in runner.arms[1:]:
-        for level in _levels(file):
-            fault = _fault(file, kernel, runner.draws(level, 0, Purpose.IDENTITY, _PATHS), level, arm)
-            if fault is not None:
-                faults.append(fault)
-                break
-    return TrialEntry(identical=identical, reach=reach, faults=faults)
-
-
-def _fault(file: AuditFile, kernel: KernelSource, draws: Draws | Tape, level: int, arm: str) -> FaultEntry | None:
-    """Run one arm on one level and return what stops it, or None."""
-    if isinstance(draws, Tape):
-        _plainly_twice(file, kernel, draws, level)  # writes what the arm has to ask for
-    try:
-        Caller(file, kernel, arithmetic_named(arm)).fine(draws, level)
-    except DispatchError as problem:
-        return FaultEntry(arm=arm, kind="escape", message=str(problem))
-    except KernelError as problem:
-        raise KernelError(str(problem), level=level, arm=arm) from problem.__cause__
-    except KeyboardInterrupt:
-        raise
-    except BaseException as problem:  # the audit itself keeps what a narrow arm raises as data
-        what = f"the kernel raised {type(problem).__name__}: {problem}"
-        return FaultEntry(arm=arm, kind="raised", message=what)
-    return None
-
-
 def _plainly_twice(
-    file: AuditFile, kernel: KernelSource, draws: Draws | Tape, level: int
+    file: AuditFile, runner: BlockRunner, draws: Draws | Tape, level: int
 ) -> tuple[Quantities, Quantities]:
     """Run the kernel twice under plain NumPy; what it raises is a KernelError with the kernel's own as its cause."""
     arm = "plain NumPy"
     try:
-        caller = Caller(file, kernel, None)
+        caller = runner.caller(None)
         check_parameters(caller.copy.function, file)
         first = caller.fine(draws, level)
         return first, caller.fine(draws, level)
@@ -196,32 +281,3 @@ def _same_bits(name: str, plain: Quantities, other: Quantities, level: int, word
         f"{float(there[first])!r} for {float(here[first])!r}. {reason}",
         level=level,
     )
-
-
-def _reach(count: _Count, file: AuditFile, remarks: list[str]) -> ReachEntry:
-    lines = [
-        ReachLine(
-            file=file.shown(place.file) if place else None,
-            line=place.line if place else None,
-            operation=operation,
-            route=route,
-            count=number,
-        )
-        for (place, operation, route), number in sorted(count.operations.items(), key=lambda item: _order(item[0]))
-    ]
-    # A sum in a stated order rounds each partial result.
-    rounded = sum(line.count for line in lines if line.route in ("rounded", "accumulated"))
-    whole = sum(line.count for line in lines if line.route == "whole")
-    return ReachEntry(
-        operations=sum(line.count for line in lines),
-        rounded=rounded,
-        share=rounded / (rounded + whole) if rounded + whole else None,
-        decisions=count.decisions,
-        lines=lines,
-        remarks=remarks,
-    )
-
-
-def _order(key: tuple[Place | None, str, Route]) -> tuple[str, int, str]:
-    place, operation, _ = key
-    return (place.file, place.line, operation) if place else ("", 0, operation)

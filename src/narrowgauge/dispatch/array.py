@@ -16,7 +16,7 @@ from narrowgauge.dispatch.exact import Exact, bare
 from narrowgauge.dispatch.routes import ROUTES
 from narrowgauge.dispatch.scalar import Scalar, State, plain_item, refuse_attribute
 from narrowgauge.dispatch.setting import Setting, Wrapped, holds
-from narrowgauge.errors import EscapeError, RefusedError
+from narrowgauge.errors import RefusedError
 
 __all__ = ["Array", "as_state", "carrier_of", "stored", "wrap"]
 
@@ -98,9 +98,11 @@ class Array(State):
         self._carrier[self._key(key)] = stored(value, self._setting)
 
     def __repr__(self) -> str:
+        self._setting.leave("text")
         return f"{self._carrier!r} in {self._setting.arithmetic.format.name}"
 
     def __str__(self) -> str:
+        self._setting.leave("text")
         return str(self._carrier)
 
     def __copy__(self) -> Array:
@@ -208,15 +210,17 @@ def carrier_of(value: Any, setting: Setting) -> Any:
 
 
 def stored(value: Any, setting: Setting) -> Any:
-    """Return the carrier of what is stored into a buffer; a plain float array is checked, never rounded silently."""
+    """Return the carrier of what is stored into a buffer; a plain float array is checked, never rounded silently.
+
+    On a line that may let values leave it is rounded as constants are: values that left come back that way.
+    """
     if (
         isinstance(value, np.ndarray)
         and not isinstance(value, Wrapped)
         and value.dtype.kind == "f"
         and not setting.arithmetic.holds(value)
     ):
-        raise setting.fault(
-            EscapeError,
+        setting.escape(
             f"a plain float array is stored whose values {setting.arithmetic.format.name} does not have; "
             "accepted: np.asarray(values), which rounds constants",
         )

@@ -8,6 +8,7 @@ while the copy is executed. The listed modules are copied along, one set of copi
 from __future__ import annotations
 
 import builtins
+import copy
 import enum
 import math
 import random
@@ -18,7 +19,7 @@ from typing import Any
 import numpy as np
 
 from narrowgauge.arithmetic.arithmetic import Arithmetic
-from narrowgauge.dispatch.array import Array, wrap
+from narrowgauge.dispatch.array import Array, as_state, wrap
 from narrowgauge.dispatch.compiled import exchanged_compiled, is_compiled
 from narrowgauge.dispatch.feed import Feed
 from narrowgauge.dispatch.foreign import exchanged
@@ -40,7 +41,7 @@ _GENERATORS = (np.random.Generator, np.random.RandomState, np.random.BitGenerato
 class PrivateCopy:
     """A function of a private copy with the setting that its operations go through; None for plain NumPy.
 
-    `copies` is the set of copies that it belongs to; None for a function that runs as it was handed over.
+    `copies` is the set of copies that it belongs to, if any.
     """
 
     __slots__ = ("copies", "function", "setting")
@@ -88,8 +89,9 @@ def copy_function(
     """Return a copy of a Python function with new globals, defaults and closure cells under stand-ins.
 
     Functions of the same module that it reaches are copied along, and so are the lists, dictionaries, sets and arrays
-    of numbers that it reaches; modules, functions, classes and objects of listed modules are exchanged for those of
-    `copies`; other values are shared. A function at the top level of a listed module is the one of its copy.
+    that it reaches, those of float64 as constants of the state; modules, functions, classes and objects of listed
+    modules are exchanged for those of `copies`; other values are shared. A function at the top level of a listed module
+    is the one of its copy.
     Raises KernelError for what is not a plain Python function.
     """
     if not isinstance(function, FunctionType):
@@ -154,7 +156,7 @@ class _FunctionCopies:
             return self.copied(value)
         if id(value) in self._known:
             return self._known[id(value)][1]
-        made = _container(value)
+        made = self._container(value)
         if made is not None:
             self._known[id(value)] = value, made  # before its contents, which may hold it
             if isinstance(made, list):
@@ -173,8 +175,24 @@ class _FunctionCopies:
         if isinstance(value, MethodType):
             owner = self._exchanged(value.__self__)
             return value if owner is value.__self__ else getattr(owner, value.__name__)
+        if isinstance(value, _GENERATORS) and self._setting is None and self._copies.draws is None:
+            self._known[id(value)] = value, copy.deepcopy(value)  # so that plain NumPy's run leaves the user's alone
+            return self._known[id(value)][1]
         made = self._object(value)
         return _standin_of(value, self._copies, self._setting) if made is None else made
+
+    def _container(self, value: Any) -> Any:
+        """Return a new empty list or dictionary, or a copy of a set or array; None for what is shared.
+
+        Floats are constants of the state, as what np.array makes of them in a module that is executed anew.
+        """
+        if type(value) in (list, dict):
+            return type(value)()
+        if type(value) is set:
+            return value.copy()
+        if type(value) is not np.ndarray:
+            return None
+        return as_state(value, self._setting) if value.dtype == np.float64 and self._setting else value.copy("K")
 
     def _object(self, value: Any) -> Any:
         """Return what stands in the copies for a function, class or object of a listed module; None for others."""
@@ -198,15 +216,6 @@ class _FunctionCopies:
         for name, item in _attributes(value).items():
             object.__setattr__(made, name, self._exchanged(item))
         return made
-
-
-def _container(value: Any) -> Any:
-    """Return a new empty list or dictionary, or a copy of a set or array; None for what is shared."""
-    if type(value) in (list, dict):
-        return type(value)()
-    if type(value) in (set, np.ndarray):
-        return value.copy()
-    return None
 
 
 def _names(code: CodeType) -> set[str]:

@@ -22,7 +22,7 @@ from narrowgauge.dispatch.routes import ROUTES
 from narrowgauge.dispatch.setting import Number, Setting, Wrapped, holds
 from narrowgauge.errors import EscapeError, RefusedError
 
-__all__ = ["Exact", "as_number", "bare", "compute", "is_exact", "settled", "taken_out"]
+__all__ = ["PICKLED", "Exact", "as_number", "bare", "compute", "is_exact", "plain_copy", "settled", "taken_out"]
 
 _STORE = dis.opmap["STORE_SUBSCR"]
 _SHAPE = frozenset({"dtype", "flags", "itemsize", "nbytes", "ndim", "shape", "size", "strides"})
@@ -36,6 +36,10 @@ _ARRAY = (
     "a plain array, or a function that does not know the emulated arithmetic, asked for integers or booleans of the "
     "state; accepted: np.asarray(table)[key] or np.take(table, key) for a table of constants, np.array(values) for a "
     "list, and buffers that the kernel's own module makes with np.zeros"
+)
+PICKLED = (
+    "a value of the state is pickled where its run is not known; accepted: copy.deepcopy, or pickle imported in the "
+    "kernel's own module"
 )
 _STORED = (
     "an integer of the state is stored into a plain array; accepted: buffers that the kernel's own module makes with "
@@ -144,10 +148,12 @@ class Exact(Wrapped):
         return integer
 
     def __float__(self) -> float:
-        raise self._setting.fault(EscapeError, _FLOAT)
+        self._setting.escape(_FLOAT)
+        return float(self._carrier)
 
     def __array__(self, dtype: Any = None, copy: bool | None = None) -> Any:
-        raise self._setting.fault(EscapeError, _ARRAY)
+        self._setting.escape(_ARRAY)
+        return plain_copy(self._carrier, dtype, copy)
 
     def __round__(self, *digits: Any) -> Any:
         return self._setting.wrap(round(self._carrier, *digits))
@@ -174,13 +180,19 @@ class Exact(Wrapped):
     def __deepcopy__(self, memo: object) -> Exact:
         return self.__copy__()
 
+    def __reduce_ex__(self, protocol: Any) -> Any:
+        raise self._setting.fault(RefusedError, PICKLED)
+
     def __repr__(self) -> str:
+        self._setting.leave("text")
         return repr(self._carrier)
 
     def __str__(self) -> str:
+        self._setting.leave("text")
         return str(self._carrier)
 
     def __format__(self, specification: str) -> str:
+        self._setting.leave("text")
         return format(self._carrier, specification)
 
     def astype(self, dtype: Any, **keywords: Any) -> Any:
@@ -284,9 +296,21 @@ def taken_out(carrier: Any, setting: Setting) -> int:
     integer = int(carrier)
     frame = setting.frame()
     if frame is not None and frame.f_code.co_code[frame.f_lasti] == _STORE:  # no list or dictionary calls int()
-        raise setting.fault(EscapeError, _STORED)
+        setting.escape(_STORED)
+        return integer
     setting.decide(True)
+    setting.leave("integer")
     return integer
+
+
+def plain_copy(carrier: Any, dtype: Any, copy: bool | None) -> np.ndarray[Any, Any]:
+    """Return the plain array that a value leaves as; never the carrier's own memory, which must stay rounded.
+
+    Raises ValueError where NumPy's protocol asks for that memory.
+    """
+    if copy is False:
+        raise ValueError("a value of the emulated arithmetic gives a plain array only as a copy")
+    return np.array(carrier, dtype)
 
 
 def _carrier(value: Any, setting: Setting) -> Any:

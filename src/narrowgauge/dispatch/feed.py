@@ -20,6 +20,7 @@ import numpy as np
 
 from narrowgauge.dispatch.scalar import State, plain_item
 from narrowgauge.dispatch.setting import Place, Setting, Wrapped, holds
+from narrowgauge.draws.columns import across
 from narrowgauge.draws.layout import Request
 from narrowgauge.draws.tape import Reader, TapeError
 from narrowgauge.errors import DispatchError, RefusedError
@@ -47,8 +48,9 @@ class Feed:
     """The random numbers of one private copy: None of a setting for plain NumPy, a reader while a run is on."""
 
     __slots__ = (
-        "__weakref__", "_drawn", "_reader", "_run", "faults", "kinds", "problem", "remarks", "serial", "setting",
-    )  # fmt: skip  # one row
+        "__weakref__", "_drawn", "_reader", "_row", "_run",
+        "faults", "kinds", "problem", "remarks", "serial", "setting",
+    )  # fmt: skip  # two rows
 
     def __init__(self) -> None:
         self.serial = next(_SERIALS)
@@ -58,18 +60,19 @@ class Feed:
         self.faults: list[DispatchError] = []
         self.problem: TapeError | None = None
         self._reader: Reader | None = None
+        self._row: int | None = None
         self._run = 0
         self._drawn: dict[Hashable, dict[Line, int]] = {}
         _ALIVE[self.serial] = self
 
     @contextmanager
-    def run(self, reader: Reader) -> Iterator[None]:
-        """Serve the draws of one run.
+    def run(self, reader: Reader, row: int | None = None) -> Iterator[None]:
+        """Serve the draws of one run; for a `row` of paths where the kernel asks for those of one.
 
         Raises TapeError where the kernel asked for other numbers than it should, and what was refused, also where the
         kernel swallowed it.
         """
-        self._reader, self.problem = reader, None
+        self._reader, self._row, self.problem = reader, row, None
         self._run += 1
         self._drawn.clear()
         self.faults.clear()
@@ -139,11 +142,17 @@ class Feed:
                 f"{name} is drawn while the module is executed, before a path begins; accepted: draws inside the kernel"
             )
         given = [self._parameter(parameter, name) for parameter in parameters]
-        shape = self._shape(size, [np.shape(value) for value, _ in given] + [self.shape_of(one) for one in others])
+        shapes = [np.shape(value) for value, _ in given] + [self.shape_of(one) for one in others]
+        values = (*(value for value, _ in given), *tables)
+        if self._row is None:
+            shape = self._shape(size, shapes)
+        else:  # what has a value for each path is one value to the kernel
+            shape = (*self._shape(size, [() if one == (self._row,) else one for one in shapes]), self._row)
+            values = across(values, len(given), self._row)
         self._check(line)
         request = Request(name=name, size=shape, parameters=tuple(key for _, key in given))
         try:
-            drawn = self._reader.draw(request, (*(value for value, _ in given), *tables))
+            drawn = self._reader.draw(request, values)
         except TapeError as problem:
             place = self.where()
             self.problem = TapeError(f"{place}: {problem}" if place else str(problem))

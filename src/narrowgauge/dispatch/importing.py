@@ -24,6 +24,7 @@ from narrowgauge.dispatch.feed import Feed
 from narrowgauge.dispatch.foreign import scipy_namespace
 from narrowgauge.dispatch.modules import STOOD_IN, Found, Sources
 from narrowgauge.dispatch.namespaces import Namespace, importlib_namespace, sys_namespace, typing_namespace
+from narrowgauge.dispatch.outlets import decimal_namespace, json_namespace, pickle_namespace
 from narrowgauge.dispatch.randoms import random_namespace
 from narrowgauge.dispatch.setting import Setting
 from narrowgauge.dispatch.standin import (
@@ -65,6 +66,8 @@ class Copies:
         self._real: set[str] = set()
         self._standins: dict[str, Any] = {}
         self._makers = self._makers_of_standins()
+        known = None if setting is None else builtins_namespace(setting)
+        self._chosen = {} if known is None else {name: getattr(known, name) for name in ("max", "min")}
 
     def load(self, name: str) -> Any:
         """Return the private copy of a module, executed at the first call, or a shared module for real.
@@ -128,9 +131,7 @@ class Copies:
 
     def builtins(self, names: dict[str, Any]) -> dict[str, Any]:
         """Return the `__builtins__` of a module with these names."""
-        known = self.stand_in("builtins")
-        changed = {} if known is None else {name: getattr(known, name) for name in ("max", "min")}
-        return {**vars(builtins), **changed, "__import__": self.importer(names)}
+        return {**vars(builtins), **self._chosen, "__import__": self.importer(names)}
 
     def refuse(self, name: str, reason: str) -> Exception:
         """Return the error for a module that cannot be copied, to be raised; the first one is kept."""
@@ -152,8 +153,10 @@ class Copies:
     def _makers_of_standins(self) -> dict[str, Callable[[], Any]]:
         """Return what makes the stand-in for each top-level module; those of NumPy's kin only under a setting."""
         makers: dict[str, Callable[[], Any]] = {
+            "builtins": lambda: Namespace(builtins, self.builtins({})),
             "importlib": lambda: importlib_namespace(self._named, self._is_private),
             "numba": lambda: numba_namespace(self.stand_in("numpy"), self.compiled.add),
+            "pickle": lambda: pickle_namespace(self.setting, self.counterpart, self.load),
             "sys": lambda: sys_namespace(self._path, self._looked_up, self._changing),
             "typing": lambda: typing_namespace(lambda name: getattr(self.modules.get(name), "__dict__", None)),
         }
@@ -162,7 +165,8 @@ class Copies:
             makers["numpy"] = lambda: Namespace(np, {"random": random_namespace(draws)})
             makers["scipy"] = lambda: plain_scipy(draws, self._for_real)
         if setting is not None:
-            makers["builtins"] = lambda: builtins_namespace(setting)
+            makers["decimal"] = lambda: decimal_namespace(setting)
+            makers["json"] = lambda: json_namespace(setting)
             makers["math"] = lambda: math_namespace(setting)
             makers["numpy"] = lambda: numpy_namespace(setting)
             makers["scipy"] = lambda: scipy_namespace(setting, self._for_real)

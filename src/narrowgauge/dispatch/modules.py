@@ -15,7 +15,9 @@ from types import CodeType
 __all__ = ["STOOD_IN", "Found", "Sources"]
 
 # Modules that every copy meets as stand-ins, so that they are never copied themselves.
-STOOD_IN = frozenset({"builtins", "importlib", "math", "numba", "numpy", "random", "scipy", "secrets", "sys"})
+STOOD_IN = frozenset({
+    "builtins", "decimal", "importlib", "json", "math", "numba", "numpy", "pickle", "random", "scipy", "secrets", "sys",
+})  # fmt: skip  # one row
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -109,6 +111,10 @@ class Sources:
         """
         files = {found.name: found.file for found in self._copied() if found.file is not None}
         return {name: self.text(files[name]) for name in sorted(files)}
+
+    def files(self) -> list[Path]:
+        """Return the files of the kernel's module and of all that is listed, imported or not."""
+        return [Path(found.file) for found in self._copied() if found.file is not None]
 
     def name_of(self, file: Path) -> str | None:
         """Return the full name of a file that lies inside a listed package, or None."""

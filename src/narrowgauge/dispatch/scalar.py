@@ -12,12 +12,17 @@ from typing import Any
 
 import numpy as np
 
-from narrowgauge.dispatch.exact import taken_out
+from narrowgauge.dispatch.exact import PICKLED, bare, plain_copy, taken_out
 from narrowgauge.dispatch.routes import ROUTES
-from narrowgauge.dispatch.setting import Number, Wrapped
-from narrowgauge.errors import EscapeError, RefusedError
+from narrowgauge.dispatch.setting import Number, Setting, Wrapped
+from narrowgauge.errors import RefusedError
 
-__all__ = ["Scalar", "State", "plain_item", "refuse_attribute"]
+__all__ = ["Scalar", "State", "Text", "plain_item", "refuse_attribute"]
+
+_READ_BACK = (
+    "a text that was made of the state becomes a number again, which nobody rounds; "
+    "accepted: np.round for a number of digits"
+)
 
 
 def _binary(ufunc: np.ufunc, call: Callable[..., Any]) -> Callable[[Any, Any], Any]:
@@ -129,18 +134,24 @@ class State(Number):
         return taken_out(self._carrier, self._setting)
 
     def __float__(self) -> float:
-        raise self._setting.fault(
-            EscapeError,
+        self._setting.escape(
             "float(), or a store into a plain array, takes a value out of the emulated arithmetic; "
             "accepted: leave it as it is, and arrays that the kernel's own module makes",
         )
+        return float(self._carrier)
 
     def __array__(self, dtype: Any = None, copy: bool | None = None) -> Any:
-        raise self._setting.fault(
-            EscapeError,
+        self._setting.escape(
             "a function or a plain array that does not know the emulated arithmetic asked for plain numbers; "
             "accepted: NumPy functions called, and arrays made, in the kernel's own module",
         )
+        return plain_copy(self._carrier, dtype or np.float64, copy)
+
+    def __bytes__(self) -> bytes:
+        raise self._setting.fault(RefusedError, "bytes() is not offered by this version on a value of the state")
+
+    def __reduce_ex__(self, protocol: Any) -> Any:
+        raise self._setting.fault(RefusedError, PICKLED)
 
     def __divmod__(self, other: Any) -> Any:
         return self._setting.ufunc(self._setting, np.divmod, "__call__", (self, other), {})
@@ -177,14 +188,25 @@ class Scalar(State):
     # isinstance(x, float) must decide as it does for the np.float64 that plain code has here
     __class__ = np.float64  # type: ignore[assignment]
 
+    __iter__ = None  # with __getitem__ alone Python would try
+
+    def __getitem__(self, key: Any) -> Any:
+        return self._setting.wrap(self._carrier[bare(key, self._setting)])
+
     def __repr__(self) -> str:
-        return f"{float(self._carrier)!r} in {self._setting.arithmetic.format.name}"
+        return self._text(f"{float(self._carrier)!r} in {self._setting.arithmetic.format.name}")
 
     def __str__(self) -> str:
-        return str(float(self._carrier))
+        return self._text(str(float(self._carrier)))
 
     def __format__(self, specification: str) -> str:
-        return format(float(self._carrier), specification)
+        return self._text(format(float(self._carrier), specification))
+
+    def _text(self, text: str) -> Text:
+        self._setting.leave("text")
+        made = Text(text)
+        made._setting = self._setting
+        return made
 
     def __copy__(self) -> Scalar:
         return self
@@ -196,6 +218,26 @@ class Scalar(State):
         if digits is not None:
             return self._setting.function(self._setting, np.round, (self, digits), {})
         return self._setting.wrap(round(self._carrier))  # an integer, and exact
+
+    def __trunc__(self) -> Any:
+        return self._integral(np.trunc)
+
+    def __floor__(self) -> Any:
+        return self._integral(np.floor)
+
+    def __ceil__(self) -> Any:
+        return self._integral(np.ceil)
+
+    def _integral(self, ufunc: np.ufunc) -> Any:
+        """Return an integer of the state, as Python's `math` gives one."""
+        part = self._setting.operate(ufunc, ROUTES[ufunc], (self,))
+        return self._setting.wrap(int(self._setting.carrier(part)))
+
+    def is_integer(self) -> Any:
+        """Return whether the value is a whole number, a boolean of the state."""
+        answer = float(self._carrier).is_integer()
+        self._setting.note("is_integer", "exact", (self._carrier,), answer)
+        return self._setting.wrap(answer)
 
     shape = ()
     ndim = 0
@@ -227,6 +269,25 @@ class Scalar(State):
 
     def __getattr__(self, name: str) -> Any:
         return refuse_attribute(self, name, np.float64)
+
+
+class Text(str):
+    """A text that was made of a value of the state: a text like any other, except to what makes a number of it."""
+
+    _setting: Setting
+
+    def __float__(self) -> float:
+        self._setting.escape(_READ_BACK)
+        return float(str.__str__(self))
+
+    def __int__(self) -> int:
+        integer = int(str.__str__(self))
+        self._setting.decide(True)
+        self._setting.leave("integer")
+        return integer
+
+    def __reduce_ex__(self, protocol: Any) -> Any:
+        return str, (str.__str__(self),)
 
 
 def plain_item(carrier: Any) -> Any:

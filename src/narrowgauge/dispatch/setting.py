@@ -6,6 +6,7 @@ and round, tells the observer, and wraps the result.
 
 from __future__ import annotations
 
+import os
 import sys
 from collections.abc import Callable, Sequence
 from types import FrameType
@@ -14,11 +15,12 @@ from typing import Any, Literal, NamedTuple, Protocol
 import numpy as np
 
 from narrowgauge.arithmetic.arithmetic import Arithmetic
-from narrowgauge.errors import DispatchError, RefusedError, SettingsMixedError
+from narrowgauge.errors import DispatchError, EscapeError, RefusedError, SettingsMixedError
 
-__all__ = ["Number", "Observer", "Place", "Route", "Setting", "Wrapped", "holds"]
+__all__ = ["Number", "Observer", "Place", "Route", "Setting", "Way", "Wrapped", "holds"]
 
 Route = Literal["exact", "rounded", "accumulated", "whole"]
+Way = Literal["escape", "integer", "text"]  # how a value leaves the emulation and the run goes on
 
 
 class Place(NamedTuple):
@@ -30,6 +32,10 @@ class Place(NamedTuple):
     def __str__(self) -> str:
         return f"{self.file}:{self.line}"
 
+    def resolved(self) -> Place:
+        """Return the same line with the file's path made absolute, links followed."""
+        return Place(os.path.realpath(self.file), self.line)
+
 
 class Observer(Protocol):
     """Sees every operation of a run, after it was computed and rounded."""
@@ -37,8 +43,14 @@ class Observer(Protocol):
     def saw(self, setting: Setting, operation: str, route: Route, operands: Sequence[Any], result: Any) -> None:
         """Take note of one operation; `operands` and `result` are carriers, to be read only."""
 
-    def decided(self, setting: Setting) -> None:
+    def met(self, setting: Setting, constant: Any) -> None:
+        """Take note of a plain number, or an array of them, that met the state, as it was before rounding."""
+
+    def decided(self, setting: Setting, answer: bool) -> None:
         """Take note of a branch in the control flow that depends on the state, or of an integer that leaves it."""
+
+    def left(self, setting: Setting, way: Way) -> None:
+        """Take note of a value that leaves the emulation: on a line that may let it, by int(), or as text."""
 
 
 class Wrapped:
@@ -71,10 +83,11 @@ class Setting:
 
     `files` are the file names of the user's modules that were executed for this run; `wrap`, `ufunc` and
     `function` are given by the modules below this one, which know the array and the tables. `faults` keeps every
-    refusal and escape in the order in which they happened, also those that the kernel swallowed.
+    refusal and escape in the order in which they happened, also those that the kernel swallowed; `allowed` holds the
+    lines, by resolved path, where plain values may leave.
     """
 
-    __slots__ = ("_wrap", "arithmetic", "draws", "faults", "files", "function", "observer", "paths", "ufunc")
+    __slots__ = ("_wrap", "allowed", "arithmetic", "draws", "faults", "files", "function", "observer", "paths", "ufunc")
 
     def __init__(
         self,
@@ -94,6 +107,7 @@ class Setting:
         self.draws: Any = None  # the Feed of a kernel that draws for itself
         self.paths: int | None = None  # of the call under way: a reduction over an axis of that length is over paths
         self.faults: list[DispatchError] = []
+        self.allowed: frozenset[Place] = frozenset()
         self._wrap = wrap
 
     def frame(self) -> FrameType | None:
@@ -114,6 +128,18 @@ class Setting:
         error = kind(f"{place}: {message}" if place else message)
         self.faults.append(error)
         return error
+
+    def escape(self, message: str) -> None:
+        """Let a plain value leave where the line under way is allowed to; on any other, raise the EscapeError."""
+        place = self.where()
+        if place is None or place.resolved() not in self.allowed:
+            raise self.fault(EscapeError, message)
+        self.leave("escape")
+
+    def leave(self, way: Way) -> None:
+        """Let the observer know that a value leaves the emulation."""
+        if self.observer is not None:
+            self.observer.left(self, way)
 
     def wrap(self, result: Any) -> Any:
         """Return a carrier as an array, a 0-d value or an exact value; lists and tuples item by item."""
@@ -140,13 +166,18 @@ class Setting:
         if isinstance(operand, (float, int, np.floating, np.integer, np.bool_)):
             if isinstance(operand, np.longdouble):
                 raise self.fault(RefusedError, "a long double met the state; accepted: floats to 64 bits")
+            if self.observer is not None:
+                self.observer.met(self, operand)
             return self.arithmetic.constant(operand)
         if isinstance(operand, np.ndarray):
-            return self._constants(operand)
+            carrier = self._constants(operand)
+            if self.observer is not None:
+                self.observer.met(self, operand)
+            return carrier
         if isinstance(operand, (list, tuple)):
             if holds(operand, Wrapped):
                 raise self.fault(RefusedError, "a list of values of the state as an operand; accepted: np.array(list)")
-            return self._constants(np.asarray(operand))
+            return self.admit(np.asarray(operand))
         if isinstance(operand, (complex, np.complexfloating)):
             raise self.fault(RefusedError, "a complex number met the state; accepted: real numbers")
         return NotImplemented
@@ -178,6 +209,9 @@ class Setting:
                 carriers.append(carrier)
         if self.observer is None:
             return self._wrap(self.arithmetic.apply(ufunc, carriers, out, call), self)
+        for operand in operands:
+            if type(operand) is float:  # the others were noted by `admit`
+                self.observer.met(self, operand)
         seen = carriers if out is None else [_kept(carrier, out) for carrier in carriers]
         result = self.arithmetic.apply(ufunc, carriers, out, call)
         self.observer.saw(self, ufunc.__name__, route, seen, result)
@@ -192,7 +226,7 @@ class Setting:
         """Return the truth of a carrier that the control flow asks for, and let the observer count it."""
         answer = bool(truth)
         if self.observer is not None:
-            self.observer.decided(self)
+            self.observer.decided(self, answer)
         return answer
 
     def float_dtype(self, dtype: Any) -> np.dtype[Any] | None:

@@ -35,6 +35,11 @@ class Request:
             return False
         return all(a is None or b is None or a == b for a, b in zip(self.parameters, other.parameters, strict=True))
 
+    def shared_with(self, other: Request) -> Request:
+        """Return the request of two paths that differ in nothing but parameters: what differs is None."""
+        pairs = zip(self.parameters, other.parameters, strict=True)
+        return replace(self, parameters=tuple(a if a == b else None for a, b in pairs))
+
     def __str__(self) -> str:
         parameters = ", ".join("array" if p is None else f"{p!r}" for p in self.parameters)
         size = "one" if self.size == () else "size " + str(self.size)

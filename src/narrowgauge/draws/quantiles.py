@@ -2,11 +2,11 @@
 
 A row is the quantile function of the standard form (location 0, scale 1): (uniforms, *parameters) -> float64, or int64
 where the draws are whole numbers. Uniforms lie in (0, 1); parameters are floats, or float64 arrays that broadcast.
+Draws of several numbers at once (orders, shares, counts of categories) have them along the first axis.
 """
 
 from __future__ import annotations
 
-import math
 from collections.abc import Callable
 from typing import Any
 
@@ -14,6 +14,7 @@ import numpy as np
 import numpy.typing as npt
 from scipy import special
 
+from narrowgauge.draws import counts
 from narrowgauge.draws.normals import exact_normals
 
 __all__ = ["ADDITIVE", "QUANTILES", "inverted"]
@@ -21,7 +22,9 @@ __all__ = ["ADDITIVE", "QUANTILES", "inverted"]
 Doubles = npt.NDArray[np.float64]
 Quantile = Callable[..., Any]
 
-_MOST_ROWS = 2**16  # of a table of cumulated probabilities
+_MOST_HALVINGS = 64  # of a bracket of 2 pi: beyond a float64
+_SETTLED = 2.0**-48  # a last step of Newton's method, in radians or in probability
+_SMALL = 2.0**-60
 # Distributions whose independent draws add up to one with the sum of the (single) parameters.
 ADDITIVE = frozenset({"gamma", "poisson"})
 
@@ -40,95 +43,91 @@ def _cauchy(u: Doubles) -> Doubles:
     return np.where(tail > 0.25, np.tan(np.pi * (u - 0.5)), np.copysign(1 / np.tan(np.pi * tail), u - 0.5))
 
 
-def _counted(u: Doubles, cdf: Callable[[Any], Any], guess: Callable[[], Any]) -> npt.NDArray[np.int64]:
-    """Return the smallest k with cdf(k) >= u: `guess` inverts a continuous cdf, whose rounding may be off by one."""
-    k = np.maximum(np.ceil(guess()), 0.0)
-    k = np.where((k > 0) & (cdf(np.maximum(k - 1, 0.0)) >= u), k - 1, k)
-    k = np.where(cdf(k) < u, k + 1, k)
-    return _whole(k)
+def _triangular(u: Doubles, left: Any, mode: Any, right: Any) -> Doubles:
+    width, rise = np.subtract(right, left), np.subtract(mode, left)
+    if np.any(~(rise >= 0)) or np.any(~(np.subtract(right, mode) >= 0)) or np.any(~(width > 0)):
+        raise ValueError("left > mode, mode > right, or left == right")
+    below = u * width <= rise
+    upper = right - np.sqrt((1 - u) * width * (width - rise))
+    return np.asarray(np.where(below, left + np.sqrt(u * width * rise), upper))
 
 
-def _whole(k: Doubles) -> npt.NDArray[np.int64]:
-    if not np.isfinite(k).all():
-        raise ValueError("no whole number has these parameters")
-    return k.astype(np.int64)
+def _vonmises(u: Doubles, concentration: Any) -> Doubles:
+    """Return angles around 0 in [-pi, pi]: the distribution function is inverted by Newton's method in a bracket."""
+    from scipy.stats import vonmises  # heavy, and few need it
+
+    kappa = np.broadcast_to(np.asarray(concentration, np.float64), u.shape)
+    if np.any(~(kappa >= 0)):
+        raise ValueError("kappa < 0 or kappa is NaN")
+    low, high = np.full(u.shape, -np.pi), np.full(u.shape, np.pi)
+    x: Doubles = np.clip(special.ndtri(u) / np.sqrt(kappa + 0.3), -3.0, 3.0)
+    for _ in range(_MOST_HALVINGS):
+        excess = vonmises.cdf(x, kappa) - u
+        low, high = np.where(excess < 0, x, low), np.where(excess < 0, high, x)
+        step = x - excess * 2 * np.pi * special.i0e(kappa) / np.exp(kappa * (np.cos(x) - 1))
+        settled = (np.abs(step - x) <= _SETTLED) | (np.abs(excess) <= _SETTLED)
+        if settled.all():
+            break
+        x = np.where(settled, x, np.where((low < step) & (step < high), step, 0.5 * (low + high)))
+    return x
 
 
-def _poisson(u: Doubles, mean: Any) -> npt.NDArray[np.int64]:
-    if np.any(~(np.asarray(mean) >= 0)):
-        raise ValueError("lam < 0 or lam is NaN")
-    # By Chernoff's bound the count stays below the last row with probability above 1 - 2^-60.
-    rows = int(np.max(mean, initial=0.0) + 10 * math.sqrt(np.max(mean, initial=0.0))) + 64
-    if np.ndim(mean) == 0 and rows <= _MOST_ROWS:
-        return np.searchsorted(special.pdtr(np.arange(rows), mean), u).astype(np.int64)
-    positive = np.where(np.asarray(mean) > 0, mean, 1.0)
-    counts = _counted(u, lambda k: special.pdtr(k, positive), lambda: special.pdtrik(u, positive))
-    return np.asarray(np.where(np.asarray(mean) > 0, counts, 0))
+def _wald(u: Doubles, mean: Any, scale: Any) -> Doubles:
+    if np.any(~(np.asarray(mean) > 0)) or np.any(~(np.asarray(scale) > 0)):
+        raise ValueError("mean <= 0 or scale <= 0")
+    from scipy.stats import invgauss  # heavy, and few need it
+
+    return np.asarray(invgauss.ppf(u, np.divide(mean, scale)) * scale)
 
 
-def _binomial(u: Doubles, trials: Any, chance: Any) -> npt.NDArray[np.int64]:
-    n, p = np.asarray(trials, np.float64), np.asarray(chance, np.float64)
-    if np.any(n < 0) or np.any(n != np.floor(n)) or np.any(~((p >= 0) & (p <= 1))):
-        raise ValueError("n is not a whole number of 0 or more, or p is not within [0, 1]")
-    if n.ndim == p.ndim == 0 and n < _MOST_ROWS:
-        k = np.searchsorted(special.bdtr(np.arange(int(n) + 1), int(n), float(p)), u)
-        return np.minimum(k, int(n)).astype(np.int64)
-    inner = (p > 0) & (p < 1) & (n > 0)
-    chances, tries = np.where(inner, p, 0.5), np.where(inner, n, 1.0)
-
-    def cdf(k: Any) -> Any:
-        below = np.minimum(k, tries - 1)  # the distribution function in its form for whole and other numbers alike
-        return np.where(k >= tries, 1.0, special.betaincc(below + 1, tries - below, chances))
-
-    counts = _counted(u, cdf, lambda: special.bdtrik(u, tries, chances))
-    return np.where(inner, np.minimum(counts, tries), np.where(p == 1, n, 0)).astype(np.int64)
-
-
-def _geometric(u: Doubles, chance: Any) -> npt.NDArray[np.int64]:
-    p = np.asarray(chance, np.float64)
-    if np.any(~((p > 0) & (p <= 1))):
-        raise ValueError("p is not within (0, 1]")
-    with np.errstate(divide="ignore"):  # p = 1: the first try
-        return _whole(np.maximum(np.ceil(np.log1p(-u) / np.log1p(-p)), 1.0))
-
-
-def _integers(u: Doubles, low: Any, high: Any) -> npt.NDArray[np.int64]:
-    """Return whole numbers of [low, high), each with a chance that is off by at most its share of 2^-52."""
-    width = np.asarray(high, np.float64) - low
-    if np.any(width <= 0):
-        raise ValueError("low >= high")
-    return _whole(np.asarray(low) + np.minimum(np.floor(u * width), width - 1))
-
-
-def _chosen(u: Doubles, cumulated: Doubles) -> npt.NDArray[np.int64]:
-    """Return the places of a table of cumulated probabilities, the last of which is 1."""
-    return np.minimum(np.searchsorted(cumulated, u), cumulated.size - 1).astype(np.int64)
+def _dirichlet(u: Doubles, alpha: Any) -> Doubles:
+    """Return shares along the first axis: gamma draws over their sum, by logarithms, so that none is 0 / 0."""
+    shapes = np.broadcast_to(np.asarray(alpha, np.float64), u.shape)
+    if np.any(~(shapes >= 0)):
+        raise ValueError("alpha < 0")
+    inner = np.where(shapes > 0, shapes, 1.0)
+    draws = special.gammaincinv(inner, u)
+    # For small x the distribution function is x^a / gamma(a + 1), to a relative error below x.
+    logs = np.where(draws < _SMALL, (np.log(u) + special.gammaln(inner + 1)) / inner, np.log(draws))
+    shares = np.where(shapes > 0, np.exp(logs - np.where(shapes > 0, logs, -np.inf).max(axis=0)), 0.0)
+    return np.asarray(shares / np.maximum(shares.sum(axis=0), _SMALL))
 
 
 QUANTILES: dict[str, Quantile] = {
     "beta": lambda u, a, b: special.betaincinv(a, b, u),
-    "binomial": _binomial,
+    "binomial": counts.binomial,
     "cauchy": _cauchy,
-    "choice": _chosen,
+    "choice": counts.chosen,
     "chisquare": lambda u, df: 2 * special.gammaincinv(np.multiply(df, 0.5), u),
+    "dirichlet": _dirichlet,
     "exponential": _exponential,
     "f": lambda u, above, below: special.fdtri(above, below, u),
     "gamma": lambda u, shape: np.where(np.equal(shape, 0), 0.0, special.gammaincinv(shape, u)),
-    "geometric": _geometric,
+    "geometric": counts.geometric,
     "gumbel": lambda u: -np.log(_exponential(1 - u)),  # 1 - u is exact; -log(u) without its cancellation at 1
-    "integers": _integers,
+    "hypergeometric": counts.hypergeometric,
+    "integers": counts.integers,
     "laplace": _laplace,
     "logistic": special.logit,
+    "logseries": counts.logseries,
+    "multinomial": counts.multinomial,
+    "multivariate_hypergeometric": counts.multivariate_hypergeometric,
+    "negative_binomial": counts.negative_binomial,
     "noncentral_chisquare": special.chndtrix,
+    "noncentral_f": lambda u, above, below, apart: special.ncfdtri(above, below, apart, u),
     "normal": exact_normals,
-    "order": lambda u: np.argsort(u, kind="stable").astype(np.int64),
+    "order": counts.ordered,
     "pareto": lambda u, a: np.expm1(_exponential(u) / a),
-    "poisson": _poisson,
+    "poisson": counts.poisson,
     "power": lambda u, a: np.power(u, np.divide(1.0, a)),
     "rayleigh": lambda u: np.sqrt(2 * _exponential(u)),
     "t": lambda u, df: special.stdtrit(df, u),
+    "triangular": _triangular,
     "uniform": lambda u: u.copy(),
+    "vonmises": _vonmises,
+    "wald": _wald,
     "weibull": lambda u, a: np.power(_exponential(u), np.divide(1.0, a)),
+    "zipf": counts.zipf,
 }
 
 

@@ -12,10 +12,10 @@ from enum import IntEnum
 import numpy as np
 import numpy.typing as npt
 
-__all__ = ["Purpose", "UniformStream", "block_paths", "uniforms"]
+__all__ = ["GRAIN", "Purpose", "UniformStream", "block_paths", "uniforms"]
 
 _MOST_DRAWS = 2**22  # of one block: bounds the memory of a block, whatever the level
-_GRAIN = 1024  # paths; a block is a multiple of it and is cut into 32 batches
+GRAIN = 1024  # paths; a block is a multiple of it and is cut into 32 batches
 
 
 class Purpose(IntEnum):
@@ -32,7 +32,7 @@ def block_paths(block: int, steps: int, factors: int) -> int:
     It follows from the audit file alone, never from the machine.
     """
     fitting = _MOST_DRAWS // (steps * factors)
-    return max(_GRAIN, min(block, fitting) // _GRAIN * _GRAIN)
+    return max(GRAIN, min(block, fitting) // GRAIN * GRAIN)
 
 
 class UniformStream:

@@ -57,27 +57,57 @@ class Reader(Protocol):
     def finish(self) -> None:
         """Raise TapeError where requests are left over."""
 
+    def column(self, place: int, request: Request, values: tuple[Any, ...], path: int) -> Drawn:
+        """Return one path's draws of a request that has been drawn, with parameters of its own.
+
+        `request` is for all paths, which are its last axis; `values` are those of the path. Raises as `draw` does.
+        """
+
 
 class Tape:
     """The uniforms of a block by request; `steps` and `refinement` are those of the fine run.
 
-    The first run to the end writes the requests, all others must repeat them. A coarse run needs a layout.
+    The first run to the end writes the requests, all others must repeat them. With `singly` each run asks path by path,
+    and the last axis of every request is that of the paths: then a path may stop early, and another one go on, since
+    each keeps to its own column. A coarse run needs a layout.
     """
 
     def __init__(
-        self, stream: UniformStream, *, paths: int, steps: int, refinement: int = 1, layout: Layout | None = None
+        self,
+        stream: UniformStream,
+        *,
+        paths: int,
+        steps: int,
+        refinement: int = 1,
+        layout: Layout | None = None,
+        singly: bool = False,
     ) -> None:
         self.paths, self.steps, self.refinement, self.layout = paths, steps, refinement, layout
+        self.singly = singly
         self.requests: list[Request] = []
         self.closed = False
         self._stream = stream
         self._uniforms: list[Doubles] = []
         self._normals: dict[int, Doubles] = {}
 
-    def write(self, request: Request) -> None:
-        """Take a request down and draw its uniforms."""
-        self.requests.append(request)
-        self._uniforms.append(self._stream.take(request.size))
+    def admit(self, place: int, request: Request) -> None:
+        """Take a request down and draw its uniforms, or raise TapeError where it is not the one that was due."""
+        if place == len(self.requests) and (self.singly or not self.closed):
+            self.requests.append(request)
+            self._uniforms.append(self._stream.take(request.size))
+            return
+        if place >= len(self.requests):
+            raise TapeError(_beyond(len(self.requests), "the reference"))
+        due = self.requests[place]
+        if self.singly and (due.name, due.size) == (request.name, request.size):
+            self.requests[place] = due.shared_with(request)  # each path has parameters of its own
+        elif not due.agrees(request):
+            raise TapeError(_other(place, request, due, "another path" if self.singly else "the reference"))
+
+    def reach(self, count: int, period: int) -> None:
+        """Take further requests down, like those a period earlier, which no path was long enough to make."""
+        while len(self.requests) < count and 0 < period <= len(self.requests):
+            self.admit(len(self.requests), self.requests[-period])
 
     def uniforms(self, place: int) -> Doubles:
         """Return the uniforms of a request, to be read only."""
@@ -95,11 +125,11 @@ class ArmDraws:
 
     def __init__(self, tape: Tape, arithmetic: Arithmetic) -> None:
         self.tape, self.arithmetic = tape, arithmetic
-        self.drawn: list[Drawn] = []
+        self._drawn: dict[int, Drawn] = {}
 
     def fine(self) -> Reader:
         """Return the reader of the fine run."""
-        self.drawn.clear()
+        self._drawn.clear()
         return _Fine(self)
 
     def coarse(self) -> Reader:
@@ -107,12 +137,39 @@ class ArmDraws:
         layout = self.tape.layout
         assert layout is not None  # levels without a layout are not coupled
         expected = layout.requests(self.tape.steps)
+        if self.tape.singly and not layout.after:
+            self.tape.reach(expected, layout.period)
         if len(self.tape.requests) != expected:
             raise TapeError(
                 f"the kernel asked {len(self.tape.requests)} times for random numbers where runs of other numbers of "
                 f"steps let expect {expected}"
             )
         return _Coarse(self, layout)
+
+    def make(self, place: int, values: tuple[Any, ...]) -> Drawn:
+        """Return the draws of a request of the tape, which are kept if a coarse run can follow."""
+        name = self.tape.requests[place].name
+        if name == "normal":
+            drawn: Drawn = self.arithmetic.cast(self.tape.normals(place))
+        else:
+            drawn = self.inverted(name, self.tape.uniforms(place), values)
+        if self.tape.layout is None:
+            return drawn
+        self._drawn[place] = drawn
+        return drawn.copy()  # the kernel may write into its own
+
+    def drawn(self, place: int) -> Drawn:
+        """Return the draws that the fine run got for a request, to be read only."""
+        if place not in self._drawn:  # no path of this arm was long enough
+            self.make(place, self.tape.requests[place].parameters)
+        return self._drawn[place]
+
+    def inverted(self, name: str, uniforms: Doubles, values: tuple[Any, ...]) -> Drawn:
+        """Return the draws behind uniforms, rounded; whole numbers are exact."""
+        if name == "uniform":
+            return inside(self.arithmetic.cast(uniforms), self.arithmetic)
+        drawn = inverted(name, uniforms, values)
+        return drawn if drawn.dtype.kind == "i" else self.arithmetic.cast(drawn)
 
 
 class _Fine:
@@ -124,28 +181,20 @@ class _Fine:
 
     def draw(self, request: Request, values: tuple[Any, ...]) -> Drawn:
         """Return the draws of the next request."""
-        tape, place, arithmetic = self._arm.tape, self.position, self._arm.arithmetic
-        if not tape.closed:
-            tape.write(request)
-        elif place >= len(tape.requests):
-            raise TapeError(_beyond(len(tape.requests), "the reference"))
-        elif not tape.requests[place].agrees(request):
-            raise TapeError(_other(place, request, tape.requests[place], "the reference"))
-        if request.name == "normal":
-            drawn: Drawn = arithmetic.cast(tape.normals(place))
-        elif request.name == "uniform":
-            drawn = inside(arithmetic.cast(tape.uniforms(place)), arithmetic)
-        else:
-            drawn = _rounded(inverted(request.name, tape.uniforms(place), values), arithmetic)
+        self._arm.tape.admit(self.position, request)
         self.position += 1
-        if tape.layout is None:  # no coarse run follows
-            return drawn
-        self._arm.drawn.append(drawn)
-        return drawn.copy()  # the kernel may write into its own
+        return self._arm.make(self.position - 1, values)
+
+    def column(self, place: int, request: Request, values: tuple[Any, ...], path: int) -> Drawn:
+        """Return one path's draws of a request that has been drawn, with parameters of its own."""
+        self._arm.tape.admit(place, request)
+        return self._arm.inverted(request.name, self._arm.tape.uniforms(place)[..., path], values)
 
     def finish(self) -> None:
         """Close the tape, or raise TapeError where requests are left over."""
         self._arm.tape.closed = True
+        if self._arm.tape.singly:  # this path may have stopped before others
+            return
         _finished(self.position, len(self._arm.tape.requests), "the reference")
 
 
@@ -156,50 +205,72 @@ class _Coarse:
         self.position = 0
         self._arm, self._layout = arm, layout
         self._steps = arm.tape.steps // arm.tape.refinement
+        self._spread: dict[int, Doubles] = {}
 
     def draw(self, request: Request, values: tuple[Any, ...]) -> Drawn:
         """Return the draws of the next request, made from those of the fine run."""
-        tape, arithmetic, m = self._arm.tape, self._arm.arithmetic, self._arm.tape.refinement
-        expected = self._layout.requests(self._steps)
-        if self.position >= expected:
-            raise TapeError(_beyond(expected, "its fine path"))
-        places, axis = self._layout.sources(self.position, self._steps, m)
-        behind = [tape.requests[place] for place in places]
-        for one in behind:
-            if one.name != request.name or _coarsened(one.size, axis, m) != request.size:
-                raise TapeError(_other(self.position, request, one, "its fine path"))
+        places, axis = self._behind(self.position, request)
         self.position += 1
+        summed = self._summed(request, places, axis)
+        if summed is not None:
+            return summed
+        return self._arm.inverted(request.name, self._uniforms(places, axis, request.size), values)
+
+    def column(self, place: int, request: Request, values: tuple[Any, ...], path: int) -> Drawn:
+        """Return one path's draws of a request that has been drawn, with parameters of its own."""
+        places, axis = self._behind(place, request)
+        if place not in self._spread:
+            self._spread[place] = self._uniforms(places, axis, request.size)
+        return self._arm.inverted(request.name, self._spread[place][..., path], values)
+
+    def finish(self) -> None:
+        """Raise TapeError where requests are left over."""
+        if self._arm.tape.singly:  # this path may have stopped before others
+            return
+        _finished(self.position, self._layout.requests(self._steps), "its fine path")
+
+    def _behind(self, position: int, request: Request) -> tuple[list[int], StepAxis | None]:
+        """Return the fine run's requests behind one of the coarse run; TapeError where they do not fit it."""
+        expected = self._layout.requests(self._steps)
+        if position >= expected:
+            raise TapeError(_beyond(expected, "its fine path"))
+        tape = self._arm.tape
+        places, axis = self._layout.sources(position, self._steps, tape.refinement)
+        for one in (tape.requests[place] for place in places):
+            if one.name != request.name or _coarsened(one.size, axis, tape.refinement) != request.size:
+                raise TapeError(_other(position, request, one, "its fine path"))
+        return places, axis
+
+    def _summed(self, request: Request, places: list[int], axis: StepAxis | None) -> Drawn | None:
+        """Return draws that are those of the fine run, or sums of them; None where uniforms are inverted."""
+        arithmetic, m = self._arm.arithmetic, self._arm.tape.refinement
+        normal = request.name == "normal"
         if len(places) == 1 and axis is None:  # not of a step: the same in both runs
-            if request.name == "normal":
-                return self._arm.drawn[places[0]].copy()
-            return self._inverted(request.name, tape.uniforms(places[0]), values)
-        if request.name == "normal" or self._adds_up(request, behind, m if axis else 1):
-            total = self._sum([self._arm.drawn[place] for place in places], axis, request.size)
-            if request.name == "normal":
-                return np.asarray(arithmetic.apply(np.multiply, (total, arithmetic.constant(1.0 / math.sqrt(m)))))
+            return self._arm.drawn(places[0]).copy() if normal else None
+        if not normal and not self._adds_up(request, places, m if axis else 1):
+            return None
+        total = self._sum([self._arm.drawn(place) for place in places], axis, request.size)
+        if not normal:
             return total
+        return np.asarray(arithmetic.apply(np.multiply, (total, arithmetic.constant(1.0 / math.sqrt(m)))))
+
+    def _uniforms(self, places: list[int], axis: StepAxis | None, size: tuple[int, ...]) -> Doubles:
+        """Return the uniforms to be inverted for a request, of its size."""
+        tape = self._arm.tape
+        if len(places) == 1 and axis is None:
+            return tape.uniforms(places[0])
         parts = [part for place in places for part in self._parts(tape.normals(place), axis)]
         normal = parts[0].copy()
         for part in parts[1:]:
             normal += part
-        uniforms = normal_cdf(normal / math.sqrt(m)).reshape(request.size)
-        return self._inverted(request.name, np.clip(uniforms, *_INSIDE), values)
+        return np.clip(normal_cdf(normal / math.sqrt(tape.refinement)).reshape(size), *_INSIDE)
 
-    def finish(self) -> None:
-        """Raise TapeError where requests are left over."""
-        _finished(self.position, self._layout.requests(self._steps), "its fine path")
-
-    def _inverted(self, name: str, uniforms: Doubles, values: tuple[Any, ...]) -> Drawn:
-        arithmetic = self._arm.arithmetic
-        if name == "uniform":
-            return inside(arithmetic.cast(uniforms), arithmetic)
-        return _rounded(inverted(name, uniforms, values), arithmetic)
-
-    def _adds_up(self, request: Request, behind: list[Request], each: int) -> bool:
+    def _adds_up(self, request: Request, places: list[int], each: int) -> bool:
         """Whether the fine draws add up to a draw with the coarse parameter: it is the sum of the fine ones."""
         if request.name not in ADDITIVE:
             return False
-        fine, coarse = [one.parameters[0] for one in behind], request.parameters[0]
+        fine = [self._arm.tape.requests[place].parameters[0] for place in places]
+        coarse = request.parameters[0]
         if coarse is None or any(one is None for one in fine):
             return False  # from the state, or an array: not known to be in proportion
         total = math.fsum(one for one in fine if one is not None) * each
@@ -223,10 +294,6 @@ class _Coarse:
             exact = total.dtype.kind == "i"
             total = total + part if exact else np.asarray(self._arm.arithmetic.apply(np.add, (total, part)))
         return np.array(total.reshape(size), order="C", copy=True)
-
-
-def _rounded(drawn: Drawn, arithmetic: Arithmetic) -> Drawn:
-    return drawn if drawn.dtype.kind == "i" else arithmetic.cast(drawn)
 
 
 def _coarsened(size: tuple[int, ...], axis: StepAxis | None, refinement: int) -> tuple[int, ...]:

@@ -77,10 +77,13 @@ RULES: dict[str, Rule] = {
     "kernel.run": Rule(accepted='"file.py:function" or "package.module:function"'),
     "kernel.takes": Rule(accepted='"increments", "normals", "uniforms" or "rng"'),
     "kernel.factors": Rule(accepted="an integer of 1 or more", low=1),
-    "kernel.layout": Rule(accepted='the axis names in any order, such as "steps, factors, paths"'),
+    "kernel.layout": Rule(
+        accepted='the axis names in any order, such as "steps, factors, paths"; no paths: one a call'
+    ),
     "kernel.coupling": Rule(accepted='"sum" or "none"'),
     "kernel.modules": Rule(accepted='an array of names such as "package.module", each once'),
     "kernel.shared": Rule(accepted="names of modules that do not stand in kernel.modules, each once"),
+    "kernel.allow": Rule(accepted='an array of lines such as "model.py:41", each once'),
     "ladder.horizon": _POSITIVE,
     "ladder.coarsest_steps": Rule(accepted="an integer of 1 or more", low=1),
     "ladder.refinement": Rule(accepted="an integer of 2 or more", low=2),
@@ -199,8 +202,9 @@ def default_layout(factors: int) -> str:
 class KernelTable(Table, frozen=True, kw_only=True, forbid_unknown_fields=True):
     """`[kernel]`: the function, what it takes, `factors` draws per step in axis order `layout`.
 
-    With `coupling` "none" the levels are measured, their differences are not. `modules` are copied and rounded along
-    with the kernel's own, `shared` ones are run as they are.
+    A layout without paths says that the kernel takes one path a call. With `coupling` "none" the levels are measured,
+    their differences are not. `modules` are copied and rounded along with the kernel's own, `shared` ones are run as
+    they are; on the lines of `allow` values may leave the emulation.
     """
 
     table: ClassVar[str] = "kernel"
@@ -211,22 +215,29 @@ class KernelTable(Table, frozen=True, kw_only=True, forbid_unknown_fields=True):
     coupling: Literal["sum", "none"] = "sum"
     modules: tuple[str, ...] = ()
     shared: tuple[str, ...] = ()
+    allow: tuple[str, ...] = ()
 
     def __post_init__(self) -> None:
         super().__post_init__()
         default = default_layout(self.factors)
         axes = tuple(axis.strip() for axis in (self.layout or default).split(","))
-        # With one factor its axis may be there, of length one, or not.
-        if sorted(axes) not in (sorted(default.split(", ")), ["factors", "paths", "steps"]):
+        # With one factor its axis may be there, of length one, or not; without paths the kernel takes one a call.
+        whole = axes if "paths" in axes else (*axes, "paths")
+        if sorted(whole) not in (sorted(default.split(", ")), ["factors", "paths", "steps"]):
             draws = "one draw a step" if self.factors == 1 else f"{self.factors} draws a step"
             self.refuse(
                 "layout",
                 f"{shown(self.layout)} does not name each axis of {draws} once",
-                f'"{default}", or the same names in another order',
+                f'"{default}", or the same names in another order, without paths where the kernel takes one a call',
             )
         msgspec.structs.force_setattr(self, "layout", ", ".join(axes))
         for key in ("modules", "shared"):
             self._check_names(key)
+        for entry in self.allow:
+            if not re.fullmatch(r".+:[1-9][0-9]{0,8}", entry):
+                self.refuse("allow", f'{shown(entry)} does not end in ":" and the number of a line')
+            if self.allow.count(entry) > 1:
+                self.refuse("allow", f"{shown(entry)} stands more than once")
 
     def _check_names(self, key: str) -> None:
         """Refuse a name that is no module's, stands more than once, or lies in a package that is shared."""

@@ -5,6 +5,9 @@
 | rng   | kernel(rng, h, steps=..., paths=..., **parameters); `steps` only if it is accepted |
 | else  | kernel(draws, h, **parameters)                                                     |
 
+A kernel whose layout names no axis of paths, or that draws for itself and does not accept `paths`, takes one path a
+call and returns a number, or a mapping of names to numbers.
+
 `rng` stands in for np.random.Generator; a kernel that calls np.random, or makes a generator of its own, leaves it be.
 An adapter turns this call into the one that a function of a library expects:
 
@@ -27,26 +30,39 @@ from narrowgauge.dispatch.copies import PrivateCopy
 from narrowgauge.dispatch.feed import Feed
 from narrowgauge.dispatch.randoms import generator
 from narrowgauge.dispatch.setting import Wrapped
+from narrowgauge.draws.columns import Columns
 from narrowgauge.draws.tape import Reader, TapeError
 from narrowgauge.errors import AuditFileError, EscapeError, KernelError, SettingsMixedError
 from narrowgauge.kernel.auditfile import AuditFile
 
-__all__ = ["SINGLE", "arranged", "check_parameters", "evaluate", "evaluate_drawing"]
+__all__ = ["SINGLE", "arranged", "check_parameters", "evaluate", "evaluate_drawing", "takes_one_path"]
 
 SINGLE = "value"  # the name of a quantity that is returned as a bare array
 _COUNTS = ("steps", "paths")  # what a kernel that draws for itself has to be told
 _ACCEPTED = "accepted: an array of shape (paths,), or a mapping of names to such arrays"
+_ACCEPTED_ONE = (
+    "accepted: a number, or a mapping of names to numbers, since neither layout nor arguments of the kernel name paths"
+)
 
 
 def arranged(draws: Floats, layout: str) -> Floats:
     """Return the kernel's own copy of (steps, factors, paths) draws in the order that `layout` names.
 
-    A layout without "factors" drops that axis, which has length one. The copy is C-contiguous.
+    A layout without "factors" drops that axis, which has length one; where it names no paths they come last. The copy
+    is C-contiguous.
     """
     axes = [name.strip() for name in layout.split(",")]
+    axes += ["paths"] if "paths" not in axes else []
     source = draws if "factors" in axes else draws[:, 0, :]
     names = ["steps", "factors", "paths"] if "factors" in axes else ["steps", "paths"]
     return np.array(source.transpose([names.index(name) for name in axes]), order="C", copy=True)
+
+
+def takes_one_path(function: Callable[..., object], file: AuditFile) -> bool:
+    """Whether a kernel is called once for each path."""
+    if file.kernel.takes == "rng":
+        return "paths" not in _accepted(function)
+    return "paths" not in file.kernel.layout
 
 
 def check_parameters(function: Callable[..., object], file: AuditFile) -> None:
@@ -63,8 +79,7 @@ def check_parameters(function: Callable[..., object], file: AuditFile) -> None:
         one for one in takes if one not in positional[:2] and one.kind in (one.POSITIONAL_OR_KEYWORD, one.KEYWORD_ONLY)
     ]
     if file.kernel.takes == "rng":
-        open_ended = any(one.kind is one.VAR_KEYWORD for one in takes)
-        _check_counts(file, {one.name for one in named} | (set(_COUNTS) if open_ended else set()))
+        _check_counts(file)
         named = [one for one in named if one.name not in _COUNTS]
     known = ", ".join(one.name for one in named) or "no parameters"
     for one in named:
@@ -77,15 +92,22 @@ def check_parameters(function: Callable[..., object], file: AuditFile) -> None:
 
 
 def evaluate(
-    copy: PrivateCopy, draws: Floats, step: float, keywords: Mapping[str, object], layout: str
+    copy: PrivateCopy, draws: Floats, step: float, keywords: Mapping[str, object], layout: str, *, singly: bool = False
 ) -> dict[str, npt.NDArray[np.float64]]:
     """Call a kernel on (steps, factors, paths) carriers and return its quantities, float64 arrays of shape (paths,).
 
-    Raises EscapeError or RefusedError for what happened inside, also where the kernel swallowed it; KernelError for a
-    result of the wrong kind or shape; and whatever the kernel raises.
+    `singly`: one path a call. Raises EscapeError or RefusedError for what happened inside, also where the kernel
+    swallowed it; KernelError for a result of the wrong kind or shape; and whatever the kernel raises.
     """
-    owned = _owned(copy, keywords)
-    return _called(copy, lambda: copy.function(copy.own(arranged(draws, layout)), step, **owned), draws.shape[-1])
+    block = arranged(draws, layout)
+    if not singly:
+        owned = _owned(copy, keywords)
+        return _called(copy, lambda: copy.function(copy.own(block), step, **owned), draws.shape[-1])
+
+    def one(path: int) -> Any:
+        return copy.function(copy.own(np.array(block[..., path])), step, **_owned(copy, keywords))
+
+    return _called_singly(copy, one, draws.shape[-1])
 
 
 def evaluate_drawing(
@@ -96,18 +118,28 @@ def evaluate_drawing(
     step: float,
     counts: tuple[int, int],
     keywords: Mapping[str, object],
+    row: bool = False,
 ) -> dict[str, npt.NDArray[np.float64]]:
     """Call a kernel that draws for itself, from `reader`; `counts` are steps and paths. Returns as `evaluate` does.
 
-    Raises KernelError besides, where the kernel asks for other random numbers than the run it is compared with, also
-    where it swallowed that.
+    A kernel that takes one path a call is called once for each, or once with a `row` of them. Raises KernelError
+    besides, where the kernel asks for other random numbers than the run it is compared with, also where it swallowed
+    that.
     """
     given = dict(zip(_COUNTS, counts, strict=True))
     asked = _accepted(copy.function)
-    keywords = {**_owned(copy, keywords), **{name: given[name] for name in _COUNTS if name in asked}}
+    named = {name: given[name] for name in _COUNTS if name in asked}
+    singly = "paths" not in asked and not row
+    rows = Columns(reader, counts[1]) if singly else None
+
+    def one(path: int | None) -> Any:
+        if rows is not None and path is not None:
+            rows.begin(path)
+        with feed.run(rows or reader, counts[1] if row else None):
+            return copy.function(generator(feed), step, **_owned(copy, keywords), **named)
+
     try:
-        with feed.run(reader):
-            return _called(copy, lambda: copy.function(generator(feed), step, **keywords), counts[1])
+        return _called_singly(copy, one, counts[1]) if singly else _called(copy, lambda: one(None), counts[1])
     except TapeError as problem:
         raise KernelError(str(problem)) from None
 
@@ -124,15 +156,49 @@ def _called(copy: PrivateCopy, call: Callable[[], Any], paths: int) -> dict[str,
     finally:
         if setting is not None and setting.faults:
             raise setting.faults[0]
+    return {name: _column(values, name, paths, copy) for name, values in _named(result).items()}
+
+
+def _called_singly(copy: PrivateCopy, call: Callable[[int], Any], paths: int) -> dict[str, npt.NDArray[np.float64]]:
+    """Return the quantities of one call for each path."""
+    setting = copy.setting
+    if setting is not None:
+        setting.faults.clear()
+        setting.paths = None  # no axis is that of the paths
+    found: dict[str, list[Any]] = {}
+    with np.errstate(all="ignore"):
+        for path in range(paths):
+            try:
+                result = _named(call(path))
+            finally:
+                if setting is not None and setting.faults:
+                    raise setting.faults[0]
+            if path and result.keys() != found.keys():
+                here, before = ", ".join(result), ", ".join(found)
+                raise KernelError(f"the kernel returned {here} for path {path}, {before} for those before it")
+            for name, value in result.items():
+                found.setdefault(name, []).append(_number(value, name, copy))
+    return {name: _column(np.array(values), name, paths, copy) for name, values in found.items()}
+
+
+def _named(result: Any) -> Mapping[str, Any]:
+    """Return what the kernel returned as a mapping of quantities."""
     named = result if isinstance(result, Mapping) else {SINGLE: result}
     if not named:
         raise KernelError(f"the kernel returned an empty mapping; {_ACCEPTED}")
-    quantities = {}
-    for name, values in named.items():
+    for name in named:
         if not isinstance(name, str) or not name:
             raise KernelError(f"the kernel returned a quantity named {name!r}; accepted: names that are strings")
-        quantities[name] = _column(values, name, paths, copy)
-    return quantities
+    return named
+
+
+def _number(value: Any, name: str, copy: PrivateCopy) -> Any:
+    """Return the carrier of one path's quantity: a number, or an array of one."""
+    carrier = _carrier(value, name, copy)
+    if np.size(carrier) != 1 or np.asarray(carrier).dtype.kind not in "biuf":
+        described = f"an array of shape {np.shape(carrier)}" if np.ndim(carrier) else _described(carrier)
+        raise KernelError(f"the kernel returned {described}{_label(name)}; {_ACCEPTED_ONE}")
+    return carrier.item() if isinstance(carrier, np.ndarray) else carrier
 
 
 def _accepted(function: Callable[..., object]) -> set[str]:
@@ -146,16 +212,12 @@ def _accepted(function: Callable[..., object]) -> set[str]:
     return {one.name for one in takes if one.kind in (one.POSITIONAL_OR_KEYWORD, one.KEYWORD_ONLY)} & set(_COUNTS)
 
 
-def _check_counts(file: AuditFile, accepted: set[str]) -> None:
-    """Raise AuditFileError unless a kernel that draws for itself can be told how many paths to run."""
+def _check_counts(file: AuditFile) -> None:
+    """Raise AuditFileError for a parameter that a kernel which draws for itself is given by the audit."""
     for name in _COUNTS:
         if name in file.parameters:
             what = "the audit gives this number itself, by level and block"
             raise AuditFileError(file.source, f"parameters.{name}", what, "a parameter of another name")
-    if "paths" not in accepted:
-        what = 'with takes = "rng" the kernel has to take the number of paths'
-        wanted = "a function (rng, h, *, steps, paths, **parameters); steps may be left out"
-        raise AuditFileError(file.source, "kernel.run", what, wanted)
 
 
 def _owned(copy: PrivateCopy, keywords: Mapping[str, object]) -> dict[str, Any]:
@@ -163,11 +225,21 @@ def _owned(copy: PrivateCopy, keywords: Mapping[str, object]) -> dict[str, Any]:
     return {name: as_state(value, copy.setting) for name, value in keywords.items()}
 
 
+def _carrier(values: Any, name: str, copy: PrivateCopy) -> Any:
+    if not isinstance(values, Wrapped):
+        return values
+    if values._setting is not copy.setting:
+        what = f"the kernel returned a value of another run{_label(name)}: a cache of it outlives the run"
+        raise SettingsMixedError(what)
+    return values._carrier
+
+
+def _label(name: str) -> str:
+    return "" if name == SINGLE else f" as {name!r}"
+
+
 def _column(values: Any, name: str, paths: int, copy: PrivateCopy) -> npt.NDArray[np.float64]:
-    carrier = values._carrier if isinstance(values, Wrapped) else values
-    label = "" if name == SINGLE else f" as {name!r}"
-    if isinstance(values, Wrapped) and values._setting is not copy.setting:
-        raise SettingsMixedError(f"the kernel returned an array of another run{label}: a cache of it outlives the run")
+    carrier, label = _carrier(values, name, copy), _label(name)
     if not isinstance(carrier, np.ndarray):
         raise KernelError(f"the kernel returned {_described(carrier)}{label}; {_ACCEPTED}")
     if carrier.shape != (paths,):

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from types import CodeType, FunctionType
@@ -13,13 +13,15 @@ from narrowgauge.dispatch.copies import PrivateCopy, copy_function, new_setting
 from narrowgauge.dispatch.feed import Feed
 from narrowgauge.dispatch.importing import Copies
 from narrowgauge.dispatch.modules import STOOD_IN, Found, Sources
-from narrowgauge.dispatch.setting import Observer
+from narrowgauge.dispatch.setting import Observer, Place
 from narrowgauge.errors import AuditFileError, DispatchError, KernelError
 from narrowgauge.kernel.auditfile import AuditFile
+from narrowgauge.kernel.audittables import RULES, shown
 from narrowgauge.kernel.fingerprint import fingerprint
 
 __all__ = ["KernelSource", "find_kernel", "private_copy"]
 
+_OWN = __name__.partition(".")[0]
 _TWICE = "a module that can be executed twice; else list it under kernel.shared, where it is not rounded"
 
 
@@ -27,7 +29,8 @@ _TWICE = "a module that can be executed twice; else list it under kernel.shared,
 class KernelSource:
     """A kernel that was found: compiled code and the function's name in it, or a function handed over from Python.
 
-    `sources` holds the kernel's module and the listed ones, read and compiled once for all arms.
+    `sources` holds the kernel's module and the listed ones, read and compiled once for all arms; `allowed` the lines of
+    theirs that may let values leave, by the words of the audit file.
     """
 
     run: str
@@ -37,6 +40,7 @@ class KernelSource:
     module: str
     function: Callable[..., Any] | None
     sources: Sources
+    allowed: Mapping[str, Place]
 
     def digest(self) -> str:
         """Return the fingerprint of all that is copied: source texts, and the function that was handed over.
@@ -68,7 +72,16 @@ def find_kernel(audit_file: AuditFile) -> KernelSource:
         module = sources.name_of(path) or (path.stem if target.endswith(".py") else target)
         code = _compiled(sources, sources.place(module, str(path)), "kernel.run", source)
     _check_listed(audit_file, sources)
-    return KernelSource(run=run, source=source, name=name, code=code, module=module, function=function, sources=sources)
+    return KernelSource(
+        run=run,
+        source=source,
+        name=name,
+        code=code,
+        module=module,
+        function=function,
+        sources=sources,
+        allowed=_allowed(audit_file, sources, path),
+    )
 
 
 def private_copy(
@@ -81,11 +94,11 @@ def private_copy(
     executing it raises.
     """
     setting = None if arithmetic is None else new_setting(arithmetic, observer, draws)
+    if setting is not None:
+        setting.allowed = frozenset(kernel.allowed.values())
     copies = Copies(setting, kernel.sources, draws)
     try:
         if kernel.function is not None:
-            if setting is None and draws is None:
-                return PrivateCopy(kernel.function, None)
             return PrivateCopy(copy_function(kernel.function, setting, copies), setting, copies)
         module = copies.load(kernel.module)
     except KeyboardInterrupt:
@@ -144,6 +157,8 @@ def _check_listed(audit_file: AuditFile, sources: Sources) -> None:
     for key, names in (("kernel.modules", sources.listed), ("kernel.shared", sources.shared)):
         for name in names:
             found = sources.find(name)
+            if name.partition(".")[0] == _OWN and key == "kernel.modules":
+                raise AuditFileError(source, key, f"{name} is part of the audit itself", "modules of the kernel's own")
             if name.partition(".")[0] in STOOD_IN:
                 what = f"{name} belongs to {name.partition('.')[0]}, for which every copy has a stand-in"
                 raise AuditFileError(source, key, what, "modules of the kernel's own")
@@ -157,6 +172,27 @@ def _check_listed(audit_file: AuditFile, sources: Sources) -> None:
                 raise AuditFileError(source, key, what, _TWICE)
             if found.file is not None:
                 _compiled(sources, found, key, source)
+
+
+def _allowed(audit_file: AuditFile, sources: Sources, own: Path | None) -> dict[str, Place]:
+    """Return the lines of kernel.allow; AuditFileError at the first that is no line of a file that is copied."""
+    found = {}
+    if audit_file.kernel.allow:
+        copied = {file.resolve() for file in [*sources.files(), *([] if own is None else [own])]}
+    for entry in audit_file.kernel.allow:
+        name, _, number = entry.rpartition(":")
+        path = (audit_file.folder / name).resolve()
+        what, accepted = "", RULES["kernel.allow"].accepted
+        if not path.is_file():
+            what = f"no such file: {path}"
+        elif path not in copied:
+            what, accepted = "that file is not copied", "lines of the kernel's file and of those in kernel.modules"
+        elif int(number) > (lines := len(sources.text(str(path)).splitlines())):
+            what, accepted = f"the file ends with line {lines}", f"a line from 1 to {lines}"
+        if what:
+            raise AuditFileError(audit_file.source, "kernel.allow", f"{shown(entry)}: {what}", accepted)
+        found[entry] = Place(str(path), int(number))
+    return found
 
 
 def _compiled(sources: Sources, found: Found, key: str, source: str) -> CodeType:

@@ -2,17 +2,20 @@
 
 from __future__ import annotations
 
+import time
 import traceback
 from collections.abc import Iterable
 from dataclasses import dataclass
+from typing import Final, Literal
 
 import numpy as np
 import numpy.typing as npt
 
-from narrowgauge.arithmetic.arithmetic import arithmetic_named
+from narrowgauge.arithmetic.arithmetic import Arithmetic, arithmetic_named
 from narrowgauge.dispatch.copies import PrivateCopy
+from narrowgauge.dispatch.setting import Observer
 from narrowgauge.draws.coarsen import Draws
-from narrowgauge.draws.streams import Purpose, UniformStream, block_paths, uniforms
+from narrowgauge.draws.streams import GRAIN, Purpose, UniformStream, block_paths, uniforms
 from narrowgauge.draws.tape import Tape
 from narrowgauge.errors import AuditFileError, DispatchError, KernelError
 from narrowgauge.kernel.auditfile import AuditFile
@@ -21,9 +24,12 @@ from narrowgauge.measure.arms import REFERENCE, arms_of, pairs_of
 from narrowgauge.measure.calls import Caller
 from narrowgauge.measure.drawplan import DrawPlan, plan_draws
 from narrowgauge.measure.moments import Moments, Series
+from narrowgauge.measure.rows import RowPlan, plan_rows
 from narrowgauge.measure.tally import LevelTally, QuantityTally, Raised
 
 __all__ = ["BlockRunner"]
+
+_UNKNOWN: Final = "unknown"
 
 Values = npt.NDArray[np.float64]
 
@@ -51,18 +57,33 @@ class BlockRunner:
         self._kernel = kernel
         self._callers: dict[str, Caller] = {}
         self._plan: DrawPlan | None = None
+        self._rows: RowPlan | Literal["unknown"] | None = _UNKNOWN
         self.arms = arms_of(audit_file.arms)
         self.pairs = pairs_of(self.arms, audit_file.formats.wide)
         self._names: tuple[int, list[str]] | None = None  # the level first run, and the quantities it has
 
     @property
     def remarks(self) -> tuple[str, ...]:
-        """What the audit has to say about the draws of a kernel that draws for itself."""
-        return () if self._file.kernel.takes != "rng" else self._drawing().remarks
+        """What the audit has to say about the draws of a kernel that draws for itself, and of one path a call."""
+        rows = self._row_plan()
+        drawing = self._drawing().remarks if self._file.kernel.takes == "rng" else ()
+        return drawing if rows is None else (rows.remark, *drawing)
+
+    @property
+    def singly(self) -> bool:
+        """Whether the kernel is run path by path."""
+        rows = self._row_plan()
+        return rows is not None and not rows.rows
+
+    def caller(self, arithmetic: Arithmetic | None, observer: Observer | None = None) -> Caller:
+        """Return a new private copy of the kernel, called as in the blocks; plain NumPy for None."""
+        return Caller(self._file, self._kernel, arithmetic, observer, rows=not self.singly)
 
     def paths(self, level: int) -> int:
-        """Return the number of paths of one block of a level."""
+        """Return the number of paths of one block of a level: the fewest where a kernel is run path by path."""
         file = self._file
+        if self.singly:
+            return GRAIN
         factors = file.kernel.factors if file.kernel.takes != "rng" else self._drawing().factors
         return block_paths(file.sampling.block, file.ladder.steps(level), factors)
 
@@ -77,8 +98,9 @@ class BlockRunner:
         seed, takes, refinement = file.sampling.seed, file.kernel.takes, file.ladder.refinement
         steps = file.ladder.steps(level)
         if takes == "rng":
-            stream, layout = UniformStream(seed, purpose, level, block), self._drawing().layout
-            return Tape(stream, paths=paths, steps=steps, refinement=refinement, layout=layout)
+            stream, drawing = UniformStream(seed, purpose, level, block), self._drawing()
+            singly, layout = drawing.one_path, drawing.layout
+            return Tape(stream, paths=paths, steps=steps, refinement=refinement, layout=layout, singly=singly)
         values = uniforms(seed, purpose, level, block, (steps, file.kernel.factors, paths))
         return Draws.of(takes, values, file.ladder.step_size(level), refinement)
 
@@ -88,6 +110,16 @@ class BlockRunner:
             self._plan = plan_draws(self._file, self._kernel)
         return self._plan
 
+    def _row_plan(self) -> RowPlan | None:
+        """Return how a kernel of one path a call is run, found out once; None for any other kernel."""
+        if self._rows is _UNKNOWN:
+            arms = self.arms[1:]
+            self._rows = plan_rows(
+                self._file, self._kernel, arms, lambda level, paths: self.draws(level, 0, Purpose.TRIAL, paths)
+            )
+        assert not isinstance(self._rows, str)
+        return self._rows
+
     def run(self, level: int, block: int) -> LevelTally:
         """Run one block of one level through every arm.
 
@@ -95,6 +127,7 @@ class BlockRunner:
         RefusedError, with level and arm, for a number that would go unrounded. What the kernel raises in another
         arm is kept in the tally.
         """
+        self._row_plan()  # what stands against running at all is said without level and arm
         draws = self.draws(level, block)
         reference = self._paths(draws, level, REFERENCE)
         assert isinstance(reference, _Paths)  # what the reference raises is raised
@@ -122,12 +155,24 @@ class BlockRunner:
             raised=raised,
         )
 
+    def seconds(self, level: int, paths: int) -> float:
+        """Return how long a few paths of a level take in all arms, once the kernel's copies are made.
+
+        Raises what `run` raises.
+        """
+        for _ in range(2):
+            draws = self.draws(level, 0, Purpose.TRIAL, paths)
+            start = time.perf_counter()
+            for arm in self.arms:
+                self._paths(draws, level, arm)
+        return time.perf_counter() - start
+
     def _paths(self, draws: Draws | Tape, level: int, arm: str) -> _Paths | Raised:
         """Run fine and coarse path in one arm."""
         caller = self._callers.get(arm)
         try:
             if caller is None:
-                caller = self._callers[arm] = Caller(self._file, self._kernel, arithmetic_named(arm))
+                caller = self._callers[arm] = self.caller(arithmetic_named(arm))
             values = caller.fine(draws, level)
             coarse = caller.coarse(draws, level) if self.coupled(level) else {}
         except KernelError as problem:

@@ -14,7 +14,7 @@ from narrowgauge.draws.coarsen import Draws, coarse_draws, fine_draws
 from narrowgauge.draws.tape import ArmDraws, Reader, Tape, TapeError
 from narrowgauge.errors import KernelError
 from narrowgauge.kernel.auditfile import AuditFile
-from narrowgauge.kernel.contract import evaluate, evaluate_drawing
+from narrowgauge.kernel.contract import evaluate, evaluate_drawing, takes_one_path
 from narrowgauge.kernel.loading import KernelSource, private_copy
 from narrowgauge.measure.arms import REFERENCE
 
@@ -24,16 +24,27 @@ Quantities = dict[str, npt.NDArray[np.float64]]
 
 
 class Caller:
-    """A private copy of a kernel in one arithmetic, or in plain NumPy for None; raises what making the copy raises."""
+    """A private copy of a kernel in one arithmetic, or in plain NumPy for None; raises what making the copy raises.
+
+    A kernel that takes one path a call is called for each, or with whole `rows` of them.
+    """
 
     def __init__(
-        self, file: AuditFile, kernel: KernelSource, arithmetic: Arithmetic | None, observer: Observer | None = None
+        self,
+        file: AuditFile,
+        kernel: KernelSource,
+        arithmetic: Arithmetic | None,
+        observer: Observer | None = None,
+        *,
+        rows: bool = False,
     ) -> None:
         self._file = file
         self._arithmetic = arithmetic or arithmetic_named(REFERENCE)
         self._feed = Feed() if file.kernel.takes == "rng" else None
         self._drawn: Floats | ArmDraws | None = None
         self.copy: PrivateCopy = private_copy(kernel, arithmetic, observer, self._feed)
+        self.one_path = takes_one_path(self.copy.function, file)
+        self._rows = rows and self.one_path
 
     @property
     def remarks(self) -> list[tuple[Place | None, str]]:
@@ -63,7 +74,8 @@ class Caller:
 
     def _on_array(self, drawn: Floats, level: int) -> Quantities:
         file = self._file
-        return evaluate(self.copy, drawn, file.ladder.step_size(level), file.keywords(), file.kernel.layout)
+        step, singly = file.ladder.step_size(level), self.one_path and not self._rows
+        return evaluate(self.copy, drawn, step, file.keywords(), file.kernel.layout, singly=singly)
 
     def _on_tape(self, reader: Reader, level: int, paths: int) -> Quantities:
         assert self._feed is not None  # a tape is drawn from
@@ -75,4 +87,5 @@ class Caller:
             step=ladder.step_size(level),
             counts=(ladder.steps(level), paths),
             keywords=self._file.keywords(),
+            row=self._rows,
         )

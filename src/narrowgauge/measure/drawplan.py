@@ -23,19 +23,24 @@ from narrowgauge.measure.calls import Caller
 __all__ = ["DrawPlan", "plan_draws", "worked_out"]
 
 _PATHS = 1024
+_SINGLE_PATHS = 128  # of a kernel that takes one path a call
 _APART = 0.5  # of the quantity's variance; paths that share nothing differ by twice it
 _ROUNDING = 1e-9  # of it: a difference as small is one of roundings, not of the discretisation
-_SHARE_PATHS = 8192  # its variance is then known to a few per cent
+_SHARE_PATHS = 8192  # its variance is then known to a few per cent; of one path a call an eighth
 _ARM = "plain NumPy"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class DrawPlan:
-    """Random numbers per path and step, rounded up, and their layout; None where the levels cannot be coupled."""
+    """Random numbers per path and step, rounded up, and their layout; None where the levels cannot be coupled.
+
+    `one_path`: the kernel takes one path a call.
+    """
 
     factors: int
     layout: Layout | None
     remarks: tuple[str, ...]
+    one_path: bool = False
 
 
 def worked_out(file: AuditFile, kernel: KernelSource) -> AuditFile:
@@ -57,6 +62,7 @@ def plan_draws(file: AuditFile, kernel: KernelSource) -> DrawPlan:
     """
     caller = Caller(file, kernel, None)
     check_parameters(caller.copy.function, file)
+    paths = _SINGLE_PATHS if caller.one_path else _PATHS
     finest = file.ladder.finest
     levels = (1, 2, 3) if finest >= 3 else (0, 1, 2)
     remarks: list[str] = []
@@ -64,16 +70,16 @@ def plan_draws(file: AuditFile, kernel: KernelSource) -> DrawPlan:
     reason = ""
     for level in levels if finest else (0,):
         try:
-            runs[level] = _requests(caller, file, level, _PATHS)
+            runs[level] = _requests(caller, file, level, paths)
         except KernelError:
             if level <= finest:
                 raise
             reason = f"the kernel does not run with {file.ladder.steps(level)} steps, which it is tried with"
     first = min(runs)
-    grows = _growth(runs[first], _requests(caller, file, first, 2 * _PATHS), first, remarks)
-    factors = _factors(runs, file)
+    grows = _growth(runs[first], _requests(caller, file, first, 2 * paths), first, remarks)
+    factors = _factors(runs, file, paths)
     if not finest:
-        return DrawPlan(factors=factors, layout=None, remarks=tuple(remarks))
+        return DrawPlan(factors=factors, layout=None, remarks=tuple(remarks), one_path=caller.one_path)
     found = reason or grows or layouts({file.ladder.steps(level): requests for level, requests in runs.items()})
     layout = None if isinstance(found, str) else found[0]
     if isinstance(found, str):
@@ -97,7 +103,7 @@ def plan_draws(file: AuditFile, kernel: KernelSource) -> DrawPlan:
                 f"fine and coarse paths draw no closer as the steps get finer, {apart}: a closer coupling would leave "
                 "less signal for the rounding errors to be small against"
             )
-    return DrawPlan(factors=factors, layout=layout, remarks=tuple(remarks))
+    return DrawPlan(factors=factors, layout=layout, remarks=tuple(remarks), one_path=caller.one_path)
 
 
 def _said_of(layout: Layout, usual: Sequence[Layout]) -> list[str]:
@@ -116,7 +122,7 @@ def _said_of(layout: Layout, usual: Sequence[Layout]) -> list[str]:
 
 def _requests(caller: Caller, file: AuditFile, level: int, paths: int) -> list[Request]:
     """Return what one run in plain NumPy asks for."""
-    tape = _tape(file, level, paths, None)
+    tape = _tape(file, level, paths, None, caller.one_path)
     try:
         caller.fine(tape, level)
     except KernelError as problem:
@@ -137,10 +143,10 @@ def _requests(caller: Caller, file: AuditFile, level: int, paths: int) -> list[R
     return tape.requests
 
 
-def _tape(file: AuditFile, level: int, paths: int, layout: Layout | None) -> Tape:
+def _tape(file: AuditFile, level: int, paths: int, layout: Layout | None, singly: bool) -> Tape:
     stream = UniformStream(file.sampling.seed, Purpose.TRIAL, level, 0)
     steps, refinement = file.ladder.steps(level), file.ladder.refinement
-    return Tape(stream, paths=paths, steps=steps, refinement=refinement, layout=layout)
+    return Tape(stream, paths=paths, steps=steps, refinement=refinement, layout=layout, singly=singly)
 
 
 def _growth(few: Sequence[Request], many: Sequence[Request], level: int, remarks: list[str]) -> str:
@@ -160,13 +166,13 @@ def _growth(few: Sequence[Request], many: Sequence[Request], level: int, remarks
     return ""
 
 
-def _factors(runs: dict[int, list[Request]], file: AuditFile) -> int:
+def _factors(runs: dict[int, list[Request]], file: AuditFile, paths: int) -> int:
     """Return the random numbers per path and step, rounded up."""
     fine, coarse = max(runs), min(runs)
     steps, drawn = file.ladder.steps(fine), draws_of(runs[fine])
     if fine != coarse and drawn > draws_of(runs[coarse]):
         steps, drawn = steps - file.ladder.steps(coarse), drawn - draws_of(runs[coarse])
-    return max(1, math.ceil(drawn / (steps * _PATHS)))
+    return max(1, math.ceil(drawn / (steps * paths)))
 
 
 def _closest(found: Sequence[Layout], caller: Caller, file: AuditFile, level: int) -> Layout:
@@ -178,7 +184,8 @@ def _closest(found: Sequence[Layout], caller: Caller, file: AuditFile, level: in
 
 def _share(layout: Layout, caller: Caller, file: AuditFile, level: int) -> float:
     """Return Var D / Var P on one level, the mean over quantities; infinite where the layout does not fit."""
-    tape = _tape(file, level, _SHARE_PATHS, layout)
+    paths = _SHARE_PATHS // 8 if caller.one_path else _SHARE_PATHS
+    tape = _tape(file, level, paths, layout, caller.one_path)
     try:
         fine, coarse = caller.fine(tape, level), caller.coarse(tape, level)
     except KernelError:  # the coarse run asks for other draws than this layout has

@@ -19,6 +19,17 @@ from narrowgauge.record.plan import (
     PlanEntry,
     SchemeEntry,
 )
+from narrowgauge.record.reach import (
+    ConstantEntry,
+    ConstantValue,
+    DecisionEntry,
+    FaultEntry,
+    LineCount,
+    RangeEntry,
+    ReachEntry,
+    ReachLine,
+    TrialEntry,
+)
 
 __all__ = [
     "SCHEMA",
@@ -29,16 +40,22 @@ __all__ = [
     "BestEntry",
     "CommonLevelEntry",
     "CommonPlanEntry",
+    "ConstantEntry",
+    "ConstantValue",
     "CorrectionEntry",
+    "DecisionEntry",
     "FaultEntry",
     "FinestEntry",
     "KernelEntry",
     "LawEntry",
     "LevelEntry",
+    "LineCount",
     "PlanEntry",
     "QuantityEntry",
     "RaisedEntry",
+    "RangeEntry",
     "ReachEntry",
+    "ReachLine",
     "ReferenceEntry",
     "RulesEntry",
     "SchemeEntry",
@@ -265,46 +282,6 @@ class VerdictEntry(Entry, frozen=True, kw_only=True):
     plan: CommonPlanEntry
 
 
-class ReachLine(Entry, frozen=True, kw_only=True):
-    """Operations of one kind on one line of the kernel, in the trial run."""
-
-    file: str | None
-    line: int | None
-    operation: str
-    route: str
-    count: int
-
-
-class ReachEntry(Entry, frozen=True, kw_only=True):
-    """What the emulation got hold of in the trial run: `share` of the operations that round were rounded one by one."""
-
-    operations: int
-    rounded: int
-    share: float | None
-    decisions: int
-    lines: list[ReachLine]
-    remarks: list[str]
-
-
-class FaultEntry(Entry, frozen=True, kw_only=True):
-    """What stopped one arm of a trial run; the message begins with file and line where they are known.
-
-    An `escape` (or a refusal) stops an audit; what the kernel `raised` in a narrow arm only keeps it from paying.
-    """
-
-    arm: str
-    kind: Literal["escape", "raised"]
-    message: str
-
-
-class TrialEntry(Entry, frozen=True, kw_only=True):
-    """A trial run: whether float64 through the whole machinery gave plain NumPy's bits, and what stopped any arm."""
-
-    identical: bool
-    reach: ReachEntry
-    faults: list[FaultEntry]
-
-
 class RulesEntry(Entry, frozen=True, kw_only=True):
     """The limits by which figures became verdicts.
 
@@ -332,7 +309,7 @@ class AuditRecord(Entry, frozen=True, kw_only=True):
     verdict: VerdictEntry
     reach: ReachEntry | None
     branches: None = None
-    range: None = None
+    range: RangeEntry | None = None
     lines: None = None
     averaging: None = None
     domain: None = None

@@ -13,6 +13,7 @@ from rich.rule import Rule
 from rich.text import Text
 
 from narrowgauge.record.audit import AuditRecord, FaultEntry, PlanEntry, TrialEntry
+from narrowgauge.report.constants import constant_lines, no_constants
 from narrowgauge.report.layout import Hanging
 from narrowgauge.report.notes import accumulation, format_notes, nonfinite, orders
 from narrowgauge.report.progress import Progress, planned_text
@@ -34,12 +35,13 @@ from narrowgauge.report.tables import (
     plan_table,
     signal_table,
 )
-from narrowgauge.report.trial import reach_summary, reach_table
+from narrowgauge.report.trial import reach_notes, reach_summary, reach_table
 from narrowgauge.report.verdict import alarms, common_cost, finest_words, lead, savings, verdict_sentences
 from narrowgauge.report.wording import NONE, clean, joined, setting_value
 
 __all__ = ["Progress", "audit_text", "planned_text", "trial_text", "verdict_text"]
 
+_CONSTANTS = "Constants that a format cannot take"
 _FILES = "audit.json (everything), levels.csv (one row per quantity, level and arm)"
 
 
@@ -53,7 +55,11 @@ def audit_text(record: AuditRecord, folder: Path | None) -> Group:
     parts += [*_heading("Behind the figures"), _labelled("Arithmetic", f"{arithmetics(record)}.")]
     if record.reach is not None:
         parts.append(_labelled("Reach of the emulation, in a trial run", reach_summary(record.reach)))
-        parts += _bullets(record.reach.remarks)
+        parts += _bullets(reach_notes(record.reach))
+    if record.range is not None:
+        lines = constant_lines(record.range)
+        parts.append(_labelled(_CONSTANTS, "listed by line." if lines else no_constants(record.range)))
+        parts += _bullets(lines)
     assumed = assumptions(record)
     parts.append(_labelled("Assumed, since the audit file does not say", f"{assumed}." if assumed else "nothing."))
     parts += [Text(), *_heading("Cautions"), *_bullets(record.cautions)]
@@ -85,8 +91,11 @@ def trial_text(trial: TrialEntry) -> Group:
         parts += [reach_table(trial.reach), Text(), Text(reach_summary(trial.reach))]
     else:
         parts.append(Text("No operation was seen."))
-    if trial.reach.remarks:
-        parts += [Text(), *_heading("Remarks"), *_bullets(trial.reach.remarks)]
+    lines = constant_lines(trial.range)
+    parts += [Text(), *_heading(_CONSTANTS), *(_bullets(lines) if lines else [Text(no_constants(trial.range))])]
+    notes = reach_notes(trial.reach)
+    if notes:
+        parts += [Text(), *_heading("Remarks"), *_bullets(notes)]
     return Group(*parts)
 
 

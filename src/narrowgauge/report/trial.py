@@ -6,11 +6,13 @@ from collections.abc import Iterable
 
 from rich.text import Text
 
-from narrowgauge.record.audit import ReachEntry, ReachLine
+from narrowgauge.record.audit import DecisionEntry, LineCount, ReachEntry, ReachLine
 from narrowgauge.report.layout import Ruled
 from narrowgauge.report.wording import clean, count, percent
 
-__all__ = ["decisions", "reach_summary", "reach_table"]
+__all__ = ["decisions", "reach_notes", "reach_summary", "reach_table"]
+
+_LINES = 10  # of each kind of note
 
 # The routes in the order of their columns, and how a column is called; a route without a row is shown by its name.
 _COLUMNS = {
@@ -59,6 +61,39 @@ def decisions(reach: ReachEntry) -> str:
         return "No branch of the control flow depended on the state."
     times = "once" if reach.decisions == 1 else f"{count(reach.decisions)} times"
     return f"The control flow took a decision that depends on the state {times}; each format decides for itself."
+
+
+def reach_notes(reach: ReachEntry) -> list[str]:
+    """Return what left the emulation where it may, integers taken out of it, changed decisions, then the remarks."""
+    allowed = [_counted(one, "let out unrounded, as kernel.allow says") for one in reach.allowed_escapes]
+    taken = [_counted(one, "taken out of the state by int()") for one in reach.integers]
+    changed = [_changed(one) for one in reach.changed_decisions]
+    return [*_first(allowed), *_first(taken), *_first(changed), *reach.remarks]
+
+
+def _counted(one: LineCount, words: str) -> str:
+    return f"{_place(one)}: {'a value was' if one.count == 1 else f'{count(one.count)} values were'} {words}"
+
+
+def _changed(one: DecisionEntry) -> str:
+    here = f"{count(one.count)} {'decision' if one.count == 1 else 'decisions'}, {count(one.true)} of them true"
+    there = f"{count(one.reference_count)}, {count(one.reference_true)} of them true"
+    return f"{_place(one)}: {clean(one.arm)} takes {here}, where the reference takes {there}"
+
+
+def _place(one: LineCount | DecisionEntry) -> str:
+    return "outside the kernel's file" if one.file is None else f"{one.file}:{one.line}"
+
+
+def _first(notes: list[str]) -> list[str]:
+    """Return the first notes of a kind, and how many more the record has."""
+    left = len(notes) - _LINES
+    if left <= 0:
+        return notes
+    return [
+        *notes[:_LINES],
+        f"{count(left)} further {'lines' if left > 1 else 'line'} like that; audit.json has them all",
+    ]
 
 
 def _short_names(files: Iterable[str]) -> dict[str, str]:
