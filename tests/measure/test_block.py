@@ -257,12 +257,14 @@ def test_booleans_and_integers_are_taken_as_they_are(tmp_path: Path) -> None:
     assert found["up"].errors["bfloat16"].events == 0
 
 
-def test_a_kernel_may_write_into_its_draws(tmp_path: Path) -> None:
+@pytest.mark.parametrize("takes", ["increments", "normals", "uniforms"])
+def test_a_kernel_may_write_into_its_draws(tmp_path: Path, takes: str) -> None:
     """Each run gets a copy of its own: overwriting it changes neither another arm nor the coarse path."""
-    body = "    x = 1.0 + 0.5 * dW[0]\n    LATER\n    return x * x\n"
-    quiet = runner_for(tmp_path, "def value(dW, h):\n" + body.replace("LATER", "pass"))
+    body, kernel = "    x = 1.0 + 0.5 * dW[0]\n    LATER\n    return x * x\n", {"takes": takes}
+    quiet = runner_for(tmp_path, "def value(dW, h):\n" + body.replace("LATER", "pass"), kernel=kernel)
     expected = [quiet.run(level, 0) for level in range(3)]
-    writing = runner_for(tmp_path, "def value(dW, h):\n" + body.replace("LATER", "dW *= 0.0; dW[...] = 7.0"))
+    loud = "def value(dW, h):\n" + body.replace("LATER", "dW *= 0.0; dW[...] = 7.0")
+    writing = runner_for(tmp_path, loud, kernel=kernel)
     assert all(same(writing.run(level, 0), expected[level]) for level in range(3))
 
 
@@ -312,13 +314,13 @@ def test_layouts_give_the_same_paths(tmp_path: Path, layout: str) -> None:
 
 
 @pytest.mark.parametrize("layout", ["steps, paths", "paths, steps", *LAYOUTS])
-def test_arranged_draws_are_a_contiguous_copy(layout: str) -> None:
-    """Draws are arranged as `layout` says, by index; the copy shares no memory, and one factor may have no axis."""
+def test_arranged_draws_are_contiguous(layout: str) -> None:
+    """Draws are arranged as `layout` says, by index, and one factor may have no axis; only another order is copied."""
     axes = layout.split(", ")
     draws = np.arange(3.0 * 2 * 5).reshape(3, 2, 5) if "factors" in axes else np.arange(15.0).reshape(3, 1, 5)
     found = arranged(draws, layout)
     assert found.flags.c_contiguous
-    assert not np.shares_memory(found, draws)
+    assert np.shares_memory(found, draws) == (layout in ("steps, paths", "steps, factors, paths"))
     for place, value in np.ndenumerate(found):
         at = dict(zip(axes, place, strict=True))
         assert value == draws[at["steps"], at.get("factors", 0), at["paths"]]

@@ -34,23 +34,24 @@ Doubles = npt.NDArray[np.float64]
 class Draws:
     """The float64 draws of one block, before any arm rounds them.
 
-    `values` is what the kernel takes, `normals` the normals behind them, both (steps, factors, paths); `refinement`
+    `values` is what the kernel takes, `normals` the normals behind uniforms, both (steps, factors, paths); `refinement`
     is the number of fine steps in a coarse one.
     """
 
     takes: Takes
     values: Doubles
-    normals: Doubles
+    normals: Doubles | None
     refinement: int
 
     @classmethod
     def of(cls, takes: Takes, uniforms: Doubles, step: float, refinement: int) -> Draws:
-        """Return the draws made from a block's uniforms, (steps, factors, paths); `step` is the fine h."""
-        normals = exact_normals(uniforms)
-        values = {"normals": normals, "uniforms": uniforms}.get(takes)
-        if values is None:
-            values = math.sqrt(step) * normals
-        return cls(takes=takes, values=values, normals=normals, refinement=refinement)
+        """Return the draws made from a block's uniforms, which they may overwrite; `step` is the fine h."""
+        if takes == "uniforms":
+            return cls(takes=takes, values=uniforms, normals=exact_normals(uniforms), refinement=refinement)
+        values = exact_normals(uniforms, out=uniforms)
+        if takes == "increments":
+            values *= math.sqrt(step)
+        return cls(takes=takes, values=values, normals=None, refinement=refinement)
 
 
 def fine_draws(draws: Draws, arithmetic: Arithmetic) -> Floats:
@@ -62,7 +63,7 @@ def fine_draws(draws: Draws, arithmetic: Arithmetic) -> Floats:
 def coarse_draws(draws: Draws, fine: Floats, arithmetic: Arithmetic) -> Floats:
     """Return the draws of the coarse path as carriers, (steps / M, factors, paths), from the arm's fine ones."""
     m = draws.refinement
-    if draws.takes == "uniforms":
+    if draws.normals is not None:
         total = draws.normals.reshape(-1, m, *draws.normals.shape[1:]).sum(axis=1)
         return inside(arithmetic.cast(normal_cdf(total / math.sqrt(m))), arithmetic)
     groups = fine.reshape(-1, m, *fine.shape[1:])

@@ -46,16 +46,16 @@ _ACCEPTED_ONE = (
 
 
 def arranged(draws: Floats, layout: str) -> Floats:
-    """Return the kernel's own copy of (steps, factors, paths) draws in the order that `layout` names.
+    """Return (steps, factors, paths) draws in the order that `layout` names, in their own memory if that is theirs.
 
-    A layout without "factors" drops that axis, which has length one; where it names no paths they come last. The copy
-    is C-contiguous.
+    A layout without "factors" drops that axis, which has length one; where it names no paths they come last. The
+    result is C-contiguous.
     """
     axes = [name.strip() for name in layout.split(",")]
     axes += ["paths"] if "paths" not in axes else []
     source = draws if "factors" in axes else draws[:, 0, :]
     names = ["steps", "factors", "paths"] if "factors" in axes else ["steps", "paths"]
-    return np.array(source.transpose([names.index(name) for name in axes]), order="C", copy=True)
+    return np.ascontiguousarray(source.transpose([names.index(name) for name in axes]))
 
 
 def takes_one_path(function: Callable[..., object], file: AuditFile) -> bool:
@@ -96,8 +96,9 @@ def evaluate(
 ) -> dict[str, npt.NDArray[np.float64]]:
     """Call a kernel on (steps, factors, paths) carriers and return its quantities, float64 arrays of shape (paths,).
 
-    `singly`: one path a call. Raises EscapeError or RefusedError for what happened inside, also where the kernel
-    swallowed it; KernelError for a result of the wrong kind or shape; and whatever the kernel raises.
+    `singly`: one path a call. The kernel may write into the draws. Raises EscapeError or RefusedError for what happened
+    inside, also where the kernel swallowed it; KernelError for a result of the wrong kind or shape; and whatever the
+    kernel raises.
     """
     block = arranged(draws, layout)
     if not singly:

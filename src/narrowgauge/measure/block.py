@@ -173,8 +173,9 @@ class BlockRunner:
         try:
             if caller is None:
                 caller = self._callers[arm] = self.caller(arithmetic_named(arm))
-            values = caller.fine(draws, level)
-            coarse = caller.coarse(draws, level) if self.coupled(level) else {}
+            coupled = self.coupled(level)
+            values = caller.fine(draws, level, coarse_follows=coupled)
+            coarse = caller.coarse(draws, level) if coupled else {}
         except KernelError as problem:
             raise KernelError(str(problem), level=level, arm=arm) from problem.__cause__
         except DispatchError as problem:

@@ -51,13 +51,17 @@ class Caller:
         """What there is to say about the kernel's random numbers, in the order in which it was met."""
         return [] if self._feed is None else list(self._feed.remarks)
 
-    def fine(self, draws: Draws | Tape, level: int) -> Quantities:
-        """Return the quantities of the fine path; raises what the kernel raises, and what `evaluate` does."""
+    def fine(self, draws: Draws | Tape, level: int, *, coarse_follows: bool = False) -> Quantities:
+        """Return the quantities of the fine path; raises what the kernel raises, and what `evaluate` does.
+
+        `coarse_follows`: `coarse` will be called next, and its draws are made before the kernel can write into these.
+        """
         if isinstance(draws, Tape):
             self._drawn = ArmDraws(draws, self._arithmetic)
             return self._on_tape(self._drawn.fine(), level, draws.paths)
-        self._drawn = fine_draws(draws, self._arithmetic)
-        return self._on_array(self._drawn, level)
+        drawn = fine_draws(draws, self._arithmetic)
+        self._drawn = coarse_draws(draws, drawn, self._arithmetic) if coarse_follows else None
+        return self._on_array(drawn, level)
 
     def coarse(self, draws: Draws | Tape, level: int) -> Quantities:
         """Return the quantities of the coarse path below `level`, once, on the draws of the fine path just run."""
@@ -70,7 +74,7 @@ class Caller:
                 raise KernelError(str(problem)) from None
             return self._on_tape(reader, level - 1, draws.paths)
         assert isinstance(drawn, np.ndarray)  # likewise
-        return self._on_array(coarse_draws(draws, drawn, self._arithmetic), level - 1)
+        return self._on_array(drawn, level - 1)
 
     def _on_array(self, drawn: Floats, level: int) -> Quantities:
         file = self._file

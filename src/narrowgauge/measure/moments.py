@@ -23,8 +23,16 @@ _QUIET = np.errstate(all="ignore")
 Doubles = npt.NDArray[np.float64]
 
 
+class _Merged:
+    """A place for the merged moments, which every figure asks for; no field, so neither compared nor stored."""
+
+    __slots__ = ("_whole",)
+
+    _whole: Moments
+
+
 @dataclass(frozen=True, slots=True, kw_only=True)
-class Moments:
+class Moments(_Merged):
     """Count, mean and central sums of powers 2 to 4, each float64 of shape (batches,). Adds with `+`."""
 
     count: Doubles
@@ -82,11 +90,15 @@ class Moments:
 
     def whole(self) -> Moments:
         """Return the moments of all batches together, arrays of shape (1,)."""
-        parts = self
+        try:
+            return self._whole
+        except AttributeError:
+            parts = self
         while parts.count.size > 1:
             if parts.count.size % 2:
                 parts = parts._padded()
             parts = parts._slice(slice(0, None, 2)) + parts._slice(slice(1, None, 2))
+        object.__setattr__(self, "_whole", parts)
         return parts
 
     @_QUIET
