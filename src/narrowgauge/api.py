@@ -2,22 +2,26 @@
 
 from __future__ import annotations
 
+import contextlib
 import json
 import tempfile
 import time
 from collections.abc import Mapping
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, Literal
 
 from narrowgauge.conduct.account import account
 from narrowgauge.conduct.run import Watcher, run
 from narrowgauge.conduct.trial import try_arms
 from narrowgauge.errors import AuditFileError, AuditFolderError, NarrowgaugeError
-from narrowgauge.kernel.auditfile import AuditFile, audit_file_from, read_audit_file
+from narrowgauge.kernel.auditfile import AuditFile, audit_file_from, read_audit_file, with_draws
 from narrowgauge.kernel.loading import find_kernel
 from narrowgauge.measure.block import BlockRunner
 from narrowgauge.measure.drawplan import worked_out
 from narrowgauge.measure.provenance import provenance
+from narrowgauge.measure.store import Identity, Ledger
+from narrowgauge.measure.task import Bench, pinned
+from narrowgauge.measure.workers import Workers, engine_for
 from narrowgauge.record.audit import AuditRecord, KernelEntry, TrialEntry
 from narrowgauge.record.canonical import canonical_text, read_strict, write_atomically
 from narrowgauge.record.table import accumulation_rows, level_rows, levels_csv
@@ -67,44 +71,68 @@ def audit(
     """Audit a kernel and return the result.
 
     `source` is the path of an audit file, or a mapping of its shape whose kernel.run may be a function. With `out` the
-    record and the table of levels are written into that folder, which must not hold another audit. Unless `quiet` a
-    progress bar is shown on a terminal. This version runs in one process: `workers` must be 1, `executor` None and
-    `resume` False. Raises NarrowgaugeError for whatever is wrong with the input.
+    record, the table of levels and the finished blocks are written into that folder, which must not hold another audit;
+    with `resume` an audit that was stopped there goes on. Unless `quiet` a progress bar is shown on a terminal.
+
+    `workers` processes run blocks at a time, or `executor` does, any of concurrent.futures or of its kind; the record
+    is the same whoever does. A function travels to other processes by the name under which it can be imported. Raises
+    NarrowgaugeError for whatever is wrong with the input.
     """
-    for name, value, accepted in (("workers", workers, 1), ("executor", executor, None), ("resume", resume, False)):
-        if value != accepted:
-            raise NarrowgaugeError(
-                f"audit: {name} = {value!r} is not supported by this version; accepted: {accepted!r}"
-            )
+    who = Workers(number=workers, executor=executor)
+    if resume and out is None:
+        raise AuditFolderError("audit: resume = True needs out; accepted: the folder of the audit that was stopped")
     if not isinstance(source, (str, Path, Mapping)):
         raise AuditFileError("audit", "", f"{source!r} is no audit file", "a path, or a mapping of its shape")
     file = audit_file_from(source) if isinstance(source, Mapping) else read_audit_file(Path(source))
     folder = None if out is None else Path(out)
     if quiet:
-        return run_audit(file, folder)
+        return run_audit(file, folder, resume=resume, workers=who)
     from narrowgauge.report.text import Progress  # rich is needed for the bar alone
 
     with Progress(quiet=True) as watcher:
-        return run_audit(file, folder, watcher=watcher)
+        return run_audit(file, folder, resume=resume, workers=who, watcher=watcher)
 
 
-def run_audit(file: AuditFile, out: Path | None, *, replace: bool = False, watcher: Watcher | None = None) -> Audit:
+def run_audit(
+    file: AuditFile,
+    out: Path | None,
+    *,
+    replace: bool = False,
+    resume: bool = False,
+    workers: Workers | None = None,
+    watcher: Watcher | None = None,
+) -> Audit:
     """Run an audit and write its files into `out`, if given.
 
-    Raises AuditFolderError where `out` holds another audit and `replace` is false, before anything is measured.
+    With `resume` the blocks that an audit left there are not run again. Raises AuditFolderError where `out` holds
+    another audit, or an unfinished one that is not resumed, and `replace` is false, before anything is measured.
     """
     start = time.perf_counter()
     kernel = find_kernel(file)
-    file = worked_out(file, kernel)
-    entry = KernelEntry(run=file.kernel.run, fingerprint=kernel.digest())
-    if out is not None:
-        _claim(out, file, entry, replace)
-    outcome = run(file, kernel, watcher=watcher)
-    record = account(file, outcome, entry, provenance(time.perf_counter() - start))
-    if out is not None:
-        _write(out / _RECORD, canonical_text(record.document()))
-        _write(out / _LEVELS, levels_csv(record))
+    with contextlib.ExitStack() as held:
+        engine = held.enter_context(engine_for(file, kernel, workers or Workers()))
+        if file.kernel.takes == "rng":
+            file = with_draws(file, *engine.call(_draws))
+        entry = KernelEntry(run=file.kernel.run, fingerprint=kernel.digest())
+        ledger = None
+        if out is not None:
+            ledger = held.enter_context(_claim(out, file, entry, replace=replace, resume=resume))
+        outcome = run(file, kernel, watcher=watcher, engine=engine, ledger=ledger)
+        resumed = len(ledger.kept) if ledger is not None else 0
+        made = provenance(time.perf_counter() - start, engine.title, outcome.fingerprints, resumed)
+        record = account(file, outcome, entry, made)
+        if out is not None and ledger is not None:
+            _write(out / _RECORD, canonical_text(record.document()))
+            _write(out / _LEVELS, levels_csv(record))
+            ledger.finish()
     return Audit(record, out)
+
+
+def _draws(bench: Bench) -> tuple[int, Literal["sum", "none"]]:
+    """Return what a kernel that draws for itself turns out to draw per step, and whether its levels are coupled."""
+    with pinned():
+        kernel = worked_out(bench.file, bench.kernel).kernel
+    return kernel.factors, kernel.coupling
 
 
 def try_out(file: AuditFile) -> TrialEntry:
@@ -114,8 +142,8 @@ def try_out(file: AuditFile) -> TrialEntry:
     return try_arms(file, kernel, BlockRunner(file, kernel))
 
 
-def _claim(folder: Path, file: AuditFile, kernel: KernelEntry, replace: bool) -> None:
-    """Make the folder, and make sure that it holds no other audit."""
+def _claim(folder: Path, file: AuditFile, kernel: KernelEntry, *, replace: bool, resume: bool) -> Ledger:
+    """Make the folder, make sure that it holds no other audit, and return its ledger, locked."""
     try:
         folder.mkdir(parents=True, exist_ok=True)
         with tempfile.TemporaryFile(dir=folder):
@@ -124,8 +152,23 @@ def _claim(folder: Path, file: AuditFile, kernel: KernelEntry, replace: bool) ->
         data = path.read_bytes() if path.exists() else None
     except OSError as problem:
         raise AuditFolderError(f"{folder}: cannot be used for the results: {problem.strerror}") from None
-    if data is None or replace:
-        return
+    identity = Identity.of(file, kernel.fingerprint)
+    ledger = Ledger(folder, replace=replace)
+    try:
+        # A ledger that is gone on with is this audit's, whatever record an earlier one left beside it.
+        if not ledger.resumes(identity, resume=resume, replace=replace):
+            if data is not None and not replace:
+                _check_record(folder, data, file, kernel)
+            ledger.clear(identity)
+    except BaseException:
+        ledger.close()
+        raise
+    return ledger
+
+
+def _check_record(folder: Path, data: bytes, file: AuditFile, kernel: KernelEntry) -> None:
+    """Raise AuditFolderError unless the record in a folder is of this audit."""
+    path = folder / _RECORD
     accepted = "accepted: --out with another folder, or --replace"
     text = data.decode("utf-8", "replace")  # what is not UTF-8 is no audit of ours, whatever it says
     try:

@@ -8,6 +8,7 @@ Exit codes: 0 done; 2 wrong usage, a wrong file, or a kernel that cannot be audi
 from __future__ import annotations
 
 import argparse
+import contextlib
 import io
 import os
 import sys
@@ -26,10 +27,15 @@ if TYPE_CHECKING:
 __all__ = ["main"]
 
 _USAGE, _INTERNAL, _INTERRUPTED, _READER_GONE = 2, 70, 130, 141  # the last two are 128 + the signal's number
+_LONGEST = 1e6  # seconds, eleven days; the system's clocks do not wait much longer
 
 
 class _OutputError(NarrowgaugeError):
     """Standard output cannot be written."""
+
+
+class _UsageError(NarrowgaugeError):
+    """Options that do not go together."""
 
 
 class _ReaderGoneError(Exception):
@@ -99,7 +105,18 @@ def _parser() -> argparse.ArgumentParser:
         action="store_true",
         help="show what would be rounded, line by line, and what would escape (if anything, exit code 2)",
     )
-    audit.add_argument("--replace", action="store_true", help="overwrite another audit in that folder")
+    present = audit.add_mutually_exclusive_group()
+    present.add_argument("--replace", action="store_true", help="overwrite another audit in that folder")
+    present.add_argument("--resume", action="store_true", help="go on with an audit that was stopped in that folder")
+    who = audit.add_mutually_exclusive_group()
+    who.add_argument("--workers", metavar="N", type=_whole, default=1, help="processes that run blocks (default: 1)")
+    who.add_argument("--cluster", metavar="ADDRESS", help="run blocks on a dask cluster, such as tcp://host:8786")
+    audit.add_argument(
+        "--timeout",
+        metavar="SECONDS",
+        type=_seconds,
+        help="time limit of a block; a worker past it is replaced, and its block run once more",
+    )
     audit.add_argument(
         "--quiet", action="store_true", help="no plan, bar and tables, only what is wrong and the verdict"
     )
@@ -116,22 +133,46 @@ def _parser() -> argparse.ArgumentParser:
     return parser
 
 
+def _whole(text: str) -> int:
+    """Return a whole number of 1 or more."""
+    if text.isdecimal() and int(text) >= 1:
+        return int(text)
+    raise argparse.ArgumentTypeError(f"{text!r} is not accepted; accepted: a whole number of 1 or more")
+
+
+def _seconds(text: str) -> float:
+    """Return a finite number above 0."""
+    try:
+        value = float(text)
+    except ValueError:
+        value = 0.0
+    if 0.0 < value <= _LONGEST:
+        return value
+    raise argparse.ArgumentTypeError(f"{text!r} is not accepted; accepted: seconds, above 0 and at most {_LONGEST:g}")
+
+
 def _audit(options: argparse.Namespace) -> int:
+    if options.cluster is not None and options.timeout is not None:
+        raise _UsageError(
+            "--timeout cannot be held on a cluster, whose workers are not this program's to replace; accepted: one of "
+            "the two"
+        )
     from narrowgauge.kernel.auditfile import read_audit_file
 
     file = read_audit_file(Path(options.file))
     if options.dry:
         return _try_out(file)
     from narrowgauge import api
+    from narrowgauge.measure.workers import Workers
     from narrowgauge.report.text import Progress, audit_text, verdict_text
 
     # A stem of dots alone would lead out of the folder.
     folder = Path(options.out) if options.out is not None else Path("audits", file.stem.strip(".") or "audit")
-    if options.quiet:
-        done = api.run_audit(file, folder, replace=options.replace, watcher=None)
-    else:
-        with Progress() as watcher:
-            done = api.run_audit(file, folder, replace=options.replace, watcher=watcher)
+    workers = Workers(number=options.workers, timeout=options.timeout, cluster=options.cluster)
+    with contextlib.nullcontext() if options.quiet else Progress() as watcher:
+        done = api.run_audit(
+            file, folder, replace=options.replace, resume=options.resume, workers=workers, watcher=watcher
+        )
     shown = verdict_text if options.quiet else audit_text
     _show(shown(done.record, done.folder))
     return 0
@@ -194,28 +235,12 @@ def _refused(problem: NarrowgaugeError) -> int:
     """Say what is wrong with the input; what the user's own code raised comes with its traceback."""
     cause = problem.__cause__
     if cause is not None and not isinstance(cause, NarrowgaugeError):
-        sys.stderr.write(_own_traceback(cause))
+        from narrowgauge.kernel.raised import own_traceback
+        from narrowgauge.report.wording import clean_lines
+
+        sys.stderr.write(clean_lines(own_traceback(cause)))
     _say(str(problem))
     return problem.exit_code
-
-
-def _own_traceback(problem: BaseException) -> str:
-    """Return a traceback without the frames of this package, or "" if none is left."""
-    import traceback
-
-    from narrowgauge.report.wording import clean_lines
-
-    found = traceback.TracebackException.from_exception(problem)
-    here = os.path.join(os.path.dirname(os.path.abspath(__file__)), "")
-    waiting, kept = [found], 0
-    while waiting:
-        one = waiting.pop()
-        one.stack[:] = [frame for frame in one.stack if not os.path.abspath(frame.filename).startswith(here)]
-        kept += len(one.stack)
-        waiting += [
-            linked for linked in (one.__cause__, one.__context__, *(one.exceptions or ())) if linked is not None
-        ]
-    return clean_lines("".join(found.format())) if kept else ""
 
 
 def _broken(problem: BaseException) -> int:

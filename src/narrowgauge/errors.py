@@ -14,8 +14,10 @@ __all__ = [
     "EscapeError",
     "KernelError",
     "NarrowgaugeError",
+    "RaisedElsewhereError",
     "RefusedError",
     "SettingsMixedError",
+    "WorkerError",
 ]
 
 
@@ -55,6 +57,18 @@ class KernelError(NarrowgaugeError):
         self.level, self.arm = level, arm
         place = "" if level is None else f"level {level}" + (f", arm {arm}" if arm else "") + ": "
         super().__init__(place + message)
+
+
+class WorkerError(NarrowgaugeError):
+    """The workers cannot do the work: a process, an executor or a cluster fails, or finds another kernel."""
+
+
+class RaisedElsewhereError(Exception):
+    """What a kernel raised in another process, as the cause of a KernelError; `text` is its traceback."""
+
+    def __init__(self, text: str) -> None:
+        self.text = text
+        super().__init__(text)
 
 
 class DispatchError(NarrowgaugeError):

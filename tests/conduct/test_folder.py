@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import csv
 import hashlib
+from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
 from typing import Any, NoReturn
 
@@ -36,11 +37,11 @@ def refused(file: AuditFile, out: Path, monkeypatch: pytest.MonkeyPatch) -> str:
 
 
 def test_an_audit_writes_its_record_and_its_levels(tmp_path: Path) -> None:
-    """The folder is made, and holds two files: the record, and one row per quantity, level and arm."""
+    """The folder is made, and holds the record, one row per quantity, level and arm, and the finished blocks."""
     result = run_audit(file_for(tmp_path, GEOMETRIC), tmp_path / "new" / "deep")
     assert result.folder == tmp_path / "new" / "deep"
     assert result.folder is not None
-    assert sorted(path.name for path in result.folder.iterdir()) == ["audit.json", "levels.csv"]
+    assert sorted(path.name for path in result.folder.iterdir()) == ["audit.json", "blocks.sqlite", "levels.csv"]
     with (result.folder / "levels.csv").open(newline="") as file:
         rows = list(csv.DictReader(file))
     assert [(row["quantity"], row["level"], row["arm"]) for row in rows] == [
@@ -141,14 +142,31 @@ def test_a_file_that_cannot_be_written(tmp_path: Path, monkeypatch: pytest.Monke
 
 
 @pytest.mark.parametrize(
-    ("option", "value", "accepted"),
-    [("workers", 2, "1"), ("workers", 0, "1"), ("executor", 7, "None"), ("resume", True, "False")],
+    ("options", "message"),
+    [
+        ({"workers": 0}, "audit: workers = 0 is not accepted; accepted: an integer of 1 or more"),
+        ({"workers": 2.0}, "audit: workers = 2.0 is not accepted; accepted: an integer of 1 or more"),
+        ({"workers": True}, "audit: workers = True is not accepted; accepted: an integer of 1 or more"),
+        (
+            {"executor": 7},
+            "audit: executor = 7 has no submit; accepted: an executor of concurrent.futures, or one of its kind",
+        ),
+        ({"resume": True}, "audit: resume = True needs out; accepted: the folder of the audit that was stopped"),
+    ],
 )
-def test_what_this_version_does_not_do_is_refused(option: str, value: Any, accepted: str) -> None:
-    """Options of later versions are refused by name before the audit file is looked at."""
+def test_options_that_make_no_sense_are_refused(options: dict[str, Any], message: str) -> None:
+    """By name, and before the audit file is looked at."""
     with pytest.raises(NarrowgaugeError) as caught:
-        audit("nowhere.toml", **{option: value})
-    assert str(caught.value) == (f"audit: {option} = {value!r} is not supported by this version; accepted: {accepted}")
+        audit("nowhere.toml", **options)
+    assert str(caught.value) == message
+
+
+def test_an_executor_has_workers_of_its_own() -> None:
+    """So that a number of them beside it is refused."""
+    with ThreadPoolExecutor(1) as executor, pytest.raises(NarrowgaugeError) as caught:
+        audit("nowhere.toml", workers=2, executor=executor)
+    message = "audit: workers = 2 and an executor, which has workers of its own; accepted: one of the two"
+    assert str(caught.value) == message
 
 
 def brownian(dW: Any, h: float, *, volatility: float) -> Any:

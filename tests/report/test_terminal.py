@@ -111,6 +111,7 @@ PLAN = SimpleNamespace(
     most_path_steps=819_200_000,
     seconds=40.4,
     most_seconds=1292.8,
+    kept=0,
 )
 
 
@@ -130,6 +131,12 @@ class TestProgress:
             "Plan: 1 level of 2 steps. The first look takes 32,768 paths a level: 25.6 million steps of paths in "
             "all arms together, about 40 s."
         )
+
+    def test_plan_of_an_audit_that_goes_on(self):
+        """What is there from before is told."""
+        for kept, words in ((1, "1 block is"), (1200, "1,200 blocks are")):
+            text = flat(planned_text(SimpleNamespace(**{**vars(PLAN), "kept": kept})))
+            assert text.endswith(f"about 22 min. {words} there from before and will not be run again.")
 
     def watched(self, *, quiet, terminal):
         stream = io.StringIO()

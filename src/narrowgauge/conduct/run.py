@@ -3,25 +3,23 @@
 from __future__ import annotations
 
 import operator
-import time
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Protocol
 
-from threadpoolctl import threadpool_limits
-
-from narrowgauge.conduct.trial import examine
+from narrowgauge.conduct.prepare import prepare
+from narrowgauge.errors import KernelError
 from narrowgauge.judge.schemes import LevelJudgement, judge_level
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.loading import KernelSource
-from narrowgauge.measure.block import BlockRunner
+from narrowgauge.measure.arms import REFERENCE, arms_of
+from narrowgauge.measure.engines import Engine, SerialEngine
+from narrowgauge.measure.store import Ledger
 from narrowgauge.measure.tally import LevelTally
+from narrowgauge.measure.task import Block, Key, pinned
 from narrowgauge.record.audit import TrialEntry
 
 __all__ = ["Outcome", "Plan", "Watcher", "run"]
-
-_TIMED_LEVEL = 3  # its first block is run first, to say how long the rest takes; it is kept
-_TIMED_PATHS = 32  # of a kernel that is run path by path
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -36,13 +34,17 @@ class PlannedLevel:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Plan:
-    """What an audit will run: path steps count fine and coarse steps of every arm; seconds are an estimate."""
+    """What an audit will run: path steps count fine and coarse steps of every arm; seconds are an estimate.
+
+    `kept` blocks are there from before; the seconds leave them out, the path steps do not.
+    """
 
     levels: tuple[PlannedLevel, ...]
     path_steps: int
     most_path_steps: int
     seconds: float
     most_seconds: float
+    kept: int = 0
 
 
 class Watcher(Protocol):
@@ -60,12 +62,16 @@ class Watcher(Protocol):
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Outcome:
-    """All that was measured and judged; `alpha` is 1 - confidence of each look."""
+    """All that was measured and judged; `alpha` is 1 - confidence of each look.
+
+    `fingerprints` are those of the processes that measured, each once and in order.
+    """
 
     tallies: Mapping[int, LevelTally]
     judgements: Mapping[int, LevelJudgement]
     alpha: float
     trial: TrialEntry
+    fingerprints: tuple[str, ...] = ()
 
 
 def run(
@@ -74,36 +80,43 @@ def run(
     *,
     settled: Callable[[LevelJudgement], bool] = operator.attrgetter("settled"),
     watcher: Watcher | None = None,
+    engine: Engine | None = None,
+    ledger: Ledger | None = None,
 ) -> Outcome:
     """Measure and judge every level: at `paths`, twice that, four times ... up to `most_paths`, in whole blocks.
 
     `settled` says whether a level needs no more paths; for an audit, whether no format is undecided on it. Levels that
     are not settled at one look draw more paths for the next; each of J looks has confidence
-    1 - (1 - confidence) / J. Raises what the trial before it and the blocks raise.
+    1 - (1 - confidence) / J. `engine` runs the blocks, one after the other in this process unless given; what the
+    `ledger` has is not run again, and what is finished is put there. Raises what the trial and the blocks raise.
     """
-    with threadpool_limits(limits=1):  # the same sums in the same order, whatever machine
-        return _Conductor(file, kernel, settled, watcher).run()
+    with pinned():  # the same sums in the same order, whatever machine
+        return _Conductor(file, settled, watcher, engine or SerialEngine(file, kernel), ledger).run()
 
 
 class _Conductor:
     def __init__(
         self,
         file: AuditFile,
-        kernel: KernelSource,
         settled: Callable[[LevelJudgement], bool],
         watcher: Watcher | None,
+        engine: Engine,
+        ledger: Ledger | None,
     ) -> None:
         self._file = file
-        self._kernel = kernel
         self._settled = settled
         self._watcher = watcher
-        self._runner = BlockRunner(file, kernel)
+        self._engine = engine
+        self._ledger = ledger
+        self._prepared = engine.call(prepare)
+        self._arms = len(arms_of(file.arms))
         self._tallies: dict[int, LevelTally] = {}
-        self._early: dict[int, LevelTally] = {}
+        self._waiting: dict[Key, Block] = {}  # finished, and before their turn
+        self._fingerprints: set[str] = set()
+        self._names: tuple[int, list[str]] | None = None  # the level of the first block, and its quantities
 
     def run(self) -> Outcome:
         file = self._file
-        trial = examine(file, self._kernel, self._runner)
         looks = self._looks()
         alpha = (1 - file.sampling.confidence) / len(looks)
         if self._watcher is not None:
@@ -112,13 +125,18 @@ class _Conductor:
         pending = list(file.ladder.levels)
         for number, target in enumerate(looks, start=1):
             self._announce(number, len(looks), pending, target)
-            for level in pending:
-                self._draw(level, target)
+            for level in self._drawn(pending, target):
                 judgements[level] = judge_level(self._tallies[level], file, alpha)
             pending = [level for level in pending if not self._settled(judgements[level])]
             if not pending:
                 break
-        return Outcome(tallies=self._tallies, judgements=judgements, alpha=alpha, trial=trial)
+        return Outcome(
+            tallies=self._tallies,
+            judgements=judgements,
+            alpha=alpha,
+            trial=self._prepared.trial,
+            fingerprints=tuple(sorted(self._fingerprints)),
+        )
 
     def _looks(self) -> list[int]:
         """Return the paths at which levels are judged: doubled within the budget, each with a block that is new."""
@@ -132,21 +150,64 @@ class _Conductor:
             seen, target = drawn, 2 * target
         return looks
 
-    def _draw(self, level: int, target: int) -> None:
-        """Run whole blocks, in the order of their keys, until a level has at least `target` paths."""
-        while (done := self._tallies.get(level)) is None or done.paths < target:
-            block = 0 if done is None else done.blocks
-            early = self._early.pop(level, None) if block == 0 else None
-            tally = early if early is not None else self._runner.run(level, block)
+    def _drawn(self, pending: Sequence[int], target: int) -> Iterator[int]:
+        """Run the blocks that levels lack to have `target` paths, and yield each level as soon as it has them.
+
+        All blocks of all levels are asked for at once, so that no worker waits for a level or for a judgement.
+        """
+        last = {level: self._rounded_up(level, target) // self._prepared.paths[level] for level in pending}
+        keys = [(level, block) for level in pending for block in range(self._blocks(level), last[level])]
+        missing = {key: self._size(key) for key in keys if not self._has(key)}
+        for level in pending:
+            if self._merged(level, last[level]):
+                yield level
+        for block in self._engine.blocks(missing) if missing else ():
+            self._keep(block)
+            if self._merged(block.level, last[block.level]):
+                yield block.level
+
+    def _has(self, key: Key) -> bool:
+        return key in self._waiting or (self._ledger is not None and key in self._ledger)
+
+    def _keep(self, block: Block) -> None:
+        if self._ledger is not None:
+            self._ledger.put(block)
+        self._waiting[block.level, block.block] = block
+
+    def _merged(self, level: int, last: int) -> bool:
+        """Add the blocks of a level whose turn has come, in the order of their keys; return whether it has all."""
+        while (number := self._blocks(level)) < last and self._has(key := (level, number)):
+            block = self._waiting.pop(key, None)
+            if block is None:
+                assert self._ledger is not None  # it has the block
+                block = self._ledger.block(key)
+            done, tally = self._tallies.get(level), block.tally
+            self._check_names(tally)
             self._tallies[level] = tally if done is None else done + tally
+            self._fingerprints.add(block.fingerprint)
             if self._watcher is not None:
-                self._watcher.advanced(tally.paths * self._steps(level))
+                self._watcher.advanced(self._size(key))
+        return self._blocks(level) == last
+
+    def _check_names(self, tally: LevelTally) -> None:
+        """Raise KernelError unless a block has the quantities of the first one: a worker knows its own blocks only."""
+        first, known = self._names = self._names or (tally.level, list(tally.quantities))
+        if set(tally.quantities) != set(known):
+            here, there = ", ".join(tally.quantities), ", ".join(known)
+            what = f"the kernel returned {here} where level {first} has {there}"
+            raise KernelError(what, level=tally.level, arm=REFERENCE)
+
+    def _blocks(self, level: int) -> int:
+        return self._tallies[level].blocks if level in self._tallies else 0
+
+    def _size(self, key: Key) -> int:
+        return self._prepared.paths[key[0]] * self._steps(key[0])
 
     def _steps(self, level: int) -> int:
         """Return the steps that one path takes on a level: fine and coarse, in every arm."""
         ladder = self._file.ladder
-        steps = ladder.steps(level) + (ladder.steps(level - 1) if self._runner.coupled(level) else 0)
-        return steps * len(self._runner.arms)
+        steps = ladder.steps(level) + (ladder.steps(level - 1) if self._prepared.coupled[level] else 0)
+        return steps * self._arms
 
     def _announce(self, number: int, looks: int, pending: Sequence[int], target: int) -> None:
         if self._watcher is not None:
@@ -158,14 +219,11 @@ class _Conductor:
         return self._tallies[level].paths if level in self._tallies else 0
 
     def _rounded_up(self, level: int, target: int) -> int:
-        block = self._runner.paths(level)
+        block = self._prepared.paths[level]
         return -(-target // block) * block
 
     def _plan(self, looks: Sequence[int]) -> Plan:
-        """Time the first block of a middle level, which is kept, and say what the rest will take.
-
-        Of a kernel that is run path by path a few paths are timed: a block could take hours.
-        """
+        """Say what the measurement will take, from the first block of a middle level: it is run first, and kept."""
         levels = tuple(
             PlannedLevel(
                 level=level,
@@ -175,19 +233,37 @@ class _Conductor:
             )
             for level in self._file.ladder.levels
         )
-        timed = min(_TIMED_LEVEL, self._file.ladder.finest)
-        if self._runner.singly:
-            each = self._runner.seconds(timed, _TIMED_PATHS) / (_TIMED_PATHS * self._steps(timed))
-        else:
-            start = time.perf_counter()
-            self._early[timed] = self._runner.run(timed, 0)
-            each = (time.perf_counter() - start) / (self._early[timed].paths * self._steps(timed))
+        each = self._seconds()
         first = sum(one.paths_first_look * self._steps(one.level) for one in levels)
         most = sum(one.paths_most * self._steps(one.level) for one in levels)
+        kept = () if self._ledger is None else tuple(self._ledger.kept)
+        at_once = each / self._engine.workers
         return Plan(
             levels=levels,
             path_steps=first,
             most_path_steps=most,
-            seconds=first * each,
-            most_seconds=most * each,
+            seconds=(first - self._known(kept, looks[0])) * at_once,
+            most_seconds=(most - self._known(kept, looks[-1])) * at_once,
+            kept=len(kept),
+        )
+
+    def _seconds(self) -> float:
+        """Return the time of one step of one path."""
+        prepared = self._prepared
+        if prepared.seconds is not None:
+            return prepared.seconds / self._steps(prepared.timed_level)
+        key = (prepared.timed_level, 0)
+        if self._ledger is not None and key in self._ledger:
+            timed = self._ledger.block(key)
+        else:
+            (timed,) = self._engine.blocks({key: self._size(key)})
+            self._keep(timed)
+        return timed.seconds / self._size(key)
+
+    def _known(self, kept: Sequence[Key], target: int) -> int:
+        """Return the path steps up to a look that need not be run again."""
+        return sum(
+            self._size((level, block))
+            for level, block in kept
+            if block * self._prepared.paths[level] < self._rounded_up(level, target)
         )

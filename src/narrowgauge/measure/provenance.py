@@ -3,19 +3,31 @@
 from __future__ import annotations
 
 import datetime
+import functools
+import json
 import os
 import platform
+from collections.abc import Sequence
 from importlib import metadata
 
 import numpy as np
+from threadpoolctl import threadpool_info
 
-__all__ = ["provenance"]
+from narrowgauge import __version__
+
+__all__ = ["fingerprint_of_process", "provenance", "versions"]
 
 _PACKAGES = ("narrowgauge", "numpy", "ml_dtypes", "scipy", "msgspec")
+_COUNTING = ("numpy", "ml_dtypes", "scipy")  # those whose next version may give other bits
+_SMALLEST_NORMAL = np.array([2.0**-1022])
 
 
-def provenance(seconds: float) -> dict[str, object]:
-    """Return versions, machine class, time of day (UTC) and duration in seconds, as plain data."""
+def provenance(seconds: float, engine: str, fingerprints: Sequence[str], resumed: int) -> dict[str, object]:
+    """Return versions, machine class, time of day (UTC), duration in seconds and workers, as plain data.
+
+    `engine` says in words what ran the blocks, `fingerprints` are those of `fingerprint_of_process`, each once;
+    `resumed` is how many blocks were there from before.
+    """
     return {
         "finished": datetime.datetime.now(datetime.UTC).isoformat(timespec="seconds"),
         "seconds": round(seconds, 3),
@@ -25,7 +37,39 @@ def provenance(seconds: float) -> dict[str, object]:
         "machine": platform.machine(),
         "processors": os.cpu_count(),
         "vector_features": _vector_features(),
+        "engine": engine,
+        "resumed_blocks": resumed,
+        "workers": [json.loads(text) for text in fingerprints],
     }
+
+
+def versions() -> dict[str, str]:
+    """Return the versions that the bits of an audit may hang on."""
+    found = {name: metadata.version(name) for name in _COUNTING}
+    return {"narrowgauge": __version__, **found, "python": platform.python_version()}
+
+
+def fingerprint_of_process() -> str:
+    """Return what decides the bits of a worker, as one line of JSON with sorted keys.
+
+    Versions, machine and processor features; whether subnormal numbers are alive in this thread, which a library that
+    a kernel imports may change; the most threads that a library of linear algebra would take.
+    """
+    return _described(bool((_SMALLEST_NORMAL * 0.5 > 0.0).all()))
+
+
+@functools.cache
+def _described(subnormals: bool) -> str:
+    """Return the fingerprint, which takes longer to find out than a small block does."""
+    found: dict[str, object] = {
+        **versions(),
+        "system": platform.system(),
+        "machine": platform.machine(),
+        "vector_features": _vector_features(),
+        "subnormals": subnormals,
+        "threads": max((library["num_threads"] for library in threadpool_info()), default=1),
+    }
+    return json.dumps(found, sort_keys=True)
 
 
 def _vector_features() -> list[str]:

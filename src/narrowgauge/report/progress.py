@@ -34,6 +34,9 @@ def planned_text(plan: Plan) -> Text:
     if plan.most_path_steps > plan.path_steps:
         words += f" Levels that stay undecided go on to at most {most} paths; if all did, that would be "
         words += f"{million(plan.most_path_steps)} steps, {duration(plan.most_seconds)}."
+    if plan.kept:
+        there = "1 block is" if plan.kept == 1 else f"{count(plan.kept)} blocks are"
+        words += f" {there} there from before and will not be run again."
     return text.append(words, style="not bold")
 
 

@@ -20,6 +20,7 @@ from narrowgauge.report.wording import (
     setting_value,
     shown_edge,
 )
+from narrowgauge.report.workers import worker_alarms
 
 __all__ = ["alarms", "common_cost", "finest_words", "lead", "savings", "verdict_sentences"]
 
@@ -40,7 +41,7 @@ _OPEN = {
 
 
 def alarms(record: AuditRecord) -> list[tuple[str, Text]]:
-    """Return what has to be read before anything else: levels that do not fit together, and dropped paths.
+    """Return what has to be read before anything else: levels that do not fit together, dropped paths, odd workers.
 
     Each paragraph comes with the mark that stands before it.
     """
@@ -62,7 +63,7 @@ def alarms(record: AuditRecord) -> list[tuple[str, Text]]:
         words = "The reference is not finite on some paths; they count in no arm: "
         text.append(f"{words}{'; '.join(dropped)}.", style="not bold default")
         found.append(("", text))
-    return found
+    return found + [("", text) for text in worker_alarms(record)]
 
 
 def _broken(name: str, entry: QuantityEntry, sound: float) -> Iterable[str]:

@@ -1,0 +1,44 @@
+"""What is found out before the measurement, where blocks will be run: a kernel may end the process that runs it."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from narrowgauge.conduct.trial import examine
+from narrowgauge.measure.task import Bench, pinned
+from narrowgauge.record.audit import TrialEntry
+
+__all__ = ["Prepared", "prepare"]
+
+
+_TIMED_LEVEL = 3
+_TIMED_PATHS = 32
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Prepared:
+    """What the trial showed, and by level the paths of a block and whether there is a coarse path.
+
+    `seconds` is the time of one path of `timed_level` in all arms, known beforehand where a kernel is run path by path:
+    a block of it could take hours.
+    """
+
+    trial: TrialEntry
+    paths: tuple[int, ...]
+    coupled: tuple[bool, ...]
+    timed_level: int
+    seconds: float | None
+
+
+def prepare(bench: Bench) -> Prepared:
+    """Run the trial at a bench; raises what `examine` raises."""
+    runner, ladder = bench.runner, bench.file.ladder
+    timed = min(_TIMED_LEVEL, ladder.finest)
+    with pinned():
+        return Prepared(
+            trial=examine(bench.file, bench.kernel, runner),
+            paths=tuple(runner.paths(level) for level in ladder.levels),
+            coupled=tuple(runner.coupled(level) for level in ladder.levels),
+            timed_level=timed,
+            seconds=runner.seconds(timed, _TIMED_PATHS) / _TIMED_PATHS if runner.singly else None,
+        )

@@ -1,0 +1,32 @@
+"""Where in Python's code a process crashed, from the stack that the interpreter wrote as its last act."""
+
+from __future__ import annotations
+
+import os
+import re
+from typing import IO
+
+__all__ = ["innermost"]
+
+_FRAME = re.compile(r'^  File "(.+)", line (\d+) in .+$')
+_HERE = os.path.join(os.path.dirname(os.path.dirname(os.path.abspath(__file__))), "")
+
+
+def innermost(trace: IO[bytes]) -> str:
+    """Return " at FILE:LINE" of the innermost frame that is not this package's, and its callers; "" without a stack.
+
+    The file is emptied: the next crash writes it anew.
+    """
+    trace.seek(0)
+    lines = trace.read().decode("utf-8", "replace").splitlines()
+    trace.seek(0)
+    trace.truncate()
+    found: list[str] = []
+    for line in lines:
+        frame = _FRAME.match(line)
+        own = frame is not None and frame[1].startswith(_HERE)
+        if found and own:
+            break
+        if frame is not None and not own:
+            found.append(f"{frame[1]}:{frame[2]}")
+    return f" at {', called from '.join(found)}" if found else ""

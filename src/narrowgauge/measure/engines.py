@@ -1,0 +1,74 @@
+"""Engines: keys of blocks go in, finished blocks come back, in whatever order; and the engine of this process alone.
+
+A block is a function of its key and of the audit file, so that an engine may run it anywhere, and twice.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator, Mapping
+from types import TracebackType
+from typing import Protocol, TypeVar
+
+from narrowgauge.kernel.auditfile import AuditFile
+from narrowgauge.kernel.loading import KernelSource
+from narrowgauge.measure.task import Bench, Block, Key, run_block
+
+__all__ = ["Engine", "SerialEngine", "largest_first"]
+
+T = TypeVar("T")
+
+
+class Engine(Protocol):
+    """Runs tasks of one audit. Use it as a context manager: leaving it stops whatever still runs."""
+
+    title: str  # what ran the blocks, in words
+    workers: int  # how many blocks run at a time, as far as that is known
+
+    def __enter__(self) -> Engine:
+        """Make ready."""
+
+    def __exit__(
+        self, kind: type[BaseException] | None, problem: BaseException | None, trace: TracebackType | None
+    ) -> None:
+        """Stop whatever still runs."""
+
+    def call(self, task: Callable[[Bench], T]) -> T:
+        """Run one task, a module's function, at a bench and return its result; raises what it raises."""
+
+    def blocks(self, sizes: Mapping[Key, int]) -> Iterator[Block]:
+        """Run the blocks of these keys, each with its size in steps, and yield each as it is finished.
+
+        Raises what `BlockRunner.run` raises, at the first block that fails, after all that were finished before.
+        """
+
+
+def largest_first(sizes: Mapping[Key, int]) -> list[Key]:
+    """Return keys in the order in which workers get them: the last ones are small, so that all end about together."""
+    return sorted(sizes, key=lambda key: (-sizes[key], key))
+
+
+class SerialEngine:
+    """Runs one block after the other, in the order of the keys, in this process."""
+
+    title = "one process"
+    workers = 1
+
+    def __init__(self, file: AuditFile, kernel: KernelSource) -> None:
+        self._bench = Bench(file, kernel)
+
+    def __enter__(self) -> SerialEngine:
+        return self
+
+    def __exit__(
+        self, kind: type[BaseException] | None, problem: BaseException | None, trace: TracebackType | None
+    ) -> None:
+        """Leave nothing behind."""
+
+    def call(self, task: Callable[[Bench], T]) -> T:
+        """Run one task; what it raises passes through."""
+        return task(self._bench)
+
+    def blocks(self, sizes: Mapping[Key, int]) -> Iterator[Block]:
+        """Run the blocks in the order of their keys."""
+        for level, block in sorted(sizes):
+            yield run_block(self._bench, level, block)

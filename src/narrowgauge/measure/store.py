@@ -1,0 +1,263 @@
+"""The ledger: finished blocks of one audit in `blocks.sqlite`, so that a killed audit goes on where it stopped.
+
+One process at a time holds it: the file is locked as long as it is open, and the system lets go of the lock when the
+process ends, however it ends. A block that took a second or more is on the disk before the next one is taken; quicker
+ones are written together, at most a second's worth, and no more than those are lost with the power.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import json
+import sqlite3
+import time
+from collections.abc import Iterator, Mapping
+from dataclasses import dataclass
+from pathlib import Path
+from types import TracebackType
+from typing import Any
+
+from narrowgauge.errors import AuditFolderError
+from narrowgauge.kernel.auditfile import AuditFile
+from narrowgauge.measure.provenance import versions
+from narrowgauge.measure.task import Block, Key
+
+__all__ = ["LEDGER", "Identity", "Ledger"]
+
+LEDGER = "blocks.sqlite"
+_SCHEMA = "narrowgauge-blocks/1"
+_TOGETHER = 1.0  # seconds
+_TABLES = """
+CREATE TABLE audit (name TEXT PRIMARY KEY, value TEXT NOT NULL);
+CREATE TABLE blocks (
+    level INTEGER NOT NULL, block INTEGER NOT NULL, seconds REAL NOT NULL,
+    fingerprint TEXT NOT NULL, tally BLOB NOT NULL, PRIMARY KEY (level, block)
+);
+"""
+_OTHERWISE = "accepted: --out with another folder, or --replace"
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Identity:
+    """What makes two audits the same: audit file with defaults, kernel, and the versions their bits may hang on."""
+
+    run: str
+    fingerprint: str
+    asked: str
+    versions: Mapping[str, str]
+
+    @classmethod
+    def of(cls, file: AuditFile, digest: str) -> Identity:
+        """Return the identity of an audit that would begin now."""
+        asked = json.dumps(file.asked(), sort_keys=True)
+        return cls(run=file.kernel.run, fingerprint=digest, asked=asked, versions=versions())
+
+    def rows(self) -> dict[str, str]:
+        """Return it as the ledger keeps it."""
+        return {
+            "schema": _SCHEMA,
+            "run": self.run,
+            "fingerprint": self.fingerprint,
+            "asked": self.asked,
+            "versions": json.dumps(dict(self.versions), sort_keys=True),
+        }
+
+    def changes(self, rows: Mapping[str, str]) -> list[str]:
+        """Return in words what differs from the audit that a ledger was begun with."""
+        if rows["schema"] != _SCHEMA:
+            return [f"its ledger is of another kind ({rows['schema']}, not {_SCHEMA})"]
+        found = []
+        if (rows["run"], rows["fingerprint"]) != (self.run, self.fingerprint):
+            found.append("the kernel has changed")
+        if rows["asked"] != self.asked:
+            keys = ", ".join(_different(json.loads(rows["asked"]), json.loads(self.asked)))
+            found.append(f"the audit file has changed ({keys})")
+        there = json.loads(rows["versions"])
+        for name in sorted(there.keys() | self.versions.keys()):
+            before, now = there.get(name, "none"), self.versions.get(name, "none")
+            if before != now:
+                found.append(f"{name} is {now} and was {before}")
+        return found
+
+
+class Ledger:
+    """The ledger in an audit's folder, locked; first `resumes` or `clear`, then blocks.
+
+    Use it as a context manager. Every use may raise AuditFolderError. With `replace` a file that is no database, or a
+    damaged one, makes room.
+    """
+
+    def __init__(self, folder: Path, *, replace: bool = False) -> None:
+        self._folder, self._path = folder, folder / LEDGER
+        self._written = time.monotonic()
+        self._keys: set[Key] = set()
+        self.kept: frozenset[Key] = frozenset()  # there from before
+        self._connection = self._opened(replace)
+
+    def __enter__(self) -> Ledger:
+        return self
+
+    def __exit__(
+        self, kind: type[BaseException] | None, problem: BaseException | None, trace: TracebackType | None
+    ) -> None:
+        """Write what is waiting, and let go of the folder."""
+        try:
+            # What is being raised came first.
+            with contextlib.nullcontext() if problem is None else contextlib.suppress(AuditFolderError):
+                self._commit()
+        finally:
+            self.close()
+
+    def close(self) -> None:
+        """Let go of the folder."""
+        self._connection.close()
+
+    def __contains__(self, key: Key) -> bool:
+        return key in self._keys
+
+    def resumes(self, identity: Identity, *, resume: bool, replace: bool) -> bool:
+        """Return whether the audit goes on with the blocks that are there.
+
+        Refused are another audit's blocks with `resume`, and those of an unfinished audit with neither `resume` nor
+        `replace`.
+        """
+        if replace:
+            return False
+        with self._telling("cannot be read"):
+            names = self._tables()
+            if names and "audit" not in names:
+                raise AuditFolderError(f"{self._path}: is no ledger of narrowgauge; {_OTHERWISE}")
+            rows: dict[str, str] = dict(self._connection.execute("SELECT name, value FROM audit")) if names else {}
+            blocks = set(self._connection.execute("SELECT level, block FROM blocks")) if names else set()
+        if not blocks:
+            return False
+        self._check(rows, len(blocks), identity.changes(rows), resume)
+        if not resume:
+            return False
+        self._keys, self.kept = blocks, frozenset(blocks)
+        with self._telling("cannot be written"):
+            self._connection.execute("DELETE FROM audit WHERE name = 'finished'")
+        return True
+
+    def clear(self, identity: Identity) -> None:
+        """Begin the ledger of an audit, without any block."""
+        with self._telling("cannot be written"):
+            run = self._connection.execute
+            run("BEGIN")
+            for name in sorted(self._tables()):
+                run(f'DROP TABLE "{name}"')
+            for statement in filter(str.strip, _TABLES.split(";")):
+                run(statement)
+            self._connection.executemany("INSERT INTO audit VALUES (?, ?)", identity.rows().items())
+            run("COMMIT")
+
+    def _tables(self) -> set[str]:
+        return {name for (name,) in self._connection.execute("SELECT name FROM sqlite_master WHERE type = 'table'")}
+
+    def block(self, key: Key) -> Block:
+        """Return a block that is there."""
+        with self._telling("cannot be read"):
+            seconds, fingerprint, data = self._connection.execute(
+                "SELECT seconds, fingerprint, tally FROM blocks WHERE level = ? AND block = ?", key
+            ).fetchone()
+        found = Block(level=key[0], block=key[1], data=data, seconds=seconds, fingerprint=fingerprint)
+        try:
+            found.tally  # noqa: B018  # better now than in the middle of a sum
+        except ValueError as problem:
+            what = f"level {key[0]}, block {key[1]} cannot be read: {problem}"
+            raise AuditFolderError(f"{self._path}: {what}; {_OTHERWISE}") from None
+        return found
+
+    def put(self, block: Block) -> None:
+        """Keep a finished block."""
+        with self._telling("cannot be written"):
+            if not self._connection.in_transaction:
+                self._connection.execute("BEGIN")
+            row = (block.level, block.block, block.seconds, block.fingerprint, block.data)
+            self._connection.execute("INSERT OR REPLACE INTO blocks VALUES (?, ?, ?, ?, ?)", row)
+        self._keys.add((block.level, block.block))
+        if block.seconds >= _TOGETHER or time.monotonic() - self._written >= _TOGETHER:
+            self._commit()
+
+    def finish(self) -> None:
+        """Note that the audit is done and written."""
+        self._commit()
+        with self._telling("cannot be written"):
+            self._connection.execute("INSERT OR REPLACE INTO audit VALUES ('finished', 'yes')")
+
+    def _commit(self) -> None:
+        with self._telling("cannot be written"):
+            if self._connection.in_transaction:
+                self._connection.execute("COMMIT")
+        self._written = time.monotonic()
+
+    def _opened(self, replace: bool) -> sqlite3.Connection:
+        """Return a connection that holds the only lock."""
+        try:
+            return self._locked()
+        except sqlite3.DatabaseError as problem:
+            if _is_busy(problem):
+                what = f"{self._folder}: another audit is running in this folder"
+                raise AuditFolderError(f"{what}; accepted: --out with another folder, or wait") from None
+            if replace and not isinstance(problem, sqlite3.OperationalError):  # it is no database
+                self._path.unlink(missing_ok=True)
+                return self._locked()
+            raise AuditFolderError(f"{self._path}: cannot be used: {problem}; {_OTHERWISE}") from None
+
+    def _locked(self) -> sqlite3.Connection:
+        connection = sqlite3.connect(self._path, timeout=0, isolation_level=None)
+        try:
+            connection.execute("PRAGMA journal_mode = DELETE")
+            connection.execute("PRAGMA synchronous = FULL")
+            connection.execute("PRAGMA locking_mode = EXCLUSIVE")  # kept from the first transaction on
+            connection.execute("BEGIN EXCLUSIVE")
+            connection.execute("SELECT count(*) FROM sqlite_master").fetchone()
+            connection.execute("COMMIT")
+        except BaseException:
+            connection.close()
+            raise
+        return connection
+
+    def _check(self, rows: Mapping[str, str], blocks: int, changes: list[str], resume: bool) -> None:
+        why = "; ".join(changes)
+        if resume and changes:
+            raise AuditFolderError(
+                f"{self._folder}: the audit in this folder cannot be resumed: {why}; accepted: kernel, audit file and "
+                "versions as they were when it began, --out with another folder, or --replace"
+            )
+        if resume or "finished" in rows:
+            return
+        done = "1 block is done" if blocks == 1 else f"{blocks} blocks are done"
+        if changes:
+            raise AuditFolderError(f"{self._folder}: holds another audit, unfinished ({done}; {why}); {_OTHERWISE}")
+        raise AuditFolderError(
+            f"{self._folder}: holds this audit, unfinished ({done}); accepted: --resume to go on with it, --replace to "
+            "begin anew, or --out with another folder"
+        )
+
+    @contextlib.contextmanager
+    def _telling(self, what: str) -> Iterator[None]:
+        """Turn what the database raises into an error that names the file; what was written before stays."""
+        try:
+            yield
+        except sqlite3.Error as problem:
+            if self._connection.in_transaction:
+                self._connection.rollback()
+            kept = "; the blocks that were written before stay, and --resume goes on with them" if self._keys else ""
+            raise AuditFolderError(f"{self._path}: {what}: {problem}{kept}") from None
+
+
+def _is_busy(problem: sqlite3.Error) -> bool:
+    code: Any = getattr(problem, "sqlite_errorcode", 0)
+    return code & 0xFF in (sqlite3.SQLITE_BUSY, sqlite3.SQLITE_LOCKED)
+
+
+def _different(before: Any, now: Any, path: str = "") -> list[str]:
+    """Return the dotted keys at which two documents differ."""
+    if isinstance(before, dict) and isinstance(now, dict):
+        found = []
+        for name in sorted(before.keys() | now.keys()):
+            below = f"{path}.{name}" if path else name
+            found += _different(before.get(name), now.get(name), below)
+        return found
+    return [] if before == now else [path]
