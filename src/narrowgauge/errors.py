@@ -7,7 +7,6 @@ what is accepted, and, where it helps, what to do.
 from __future__ import annotations
 
 __all__ = [
-    "ArithmeticNotBuiltError",
     "AuditFileError",
     "AuditFolderError",
     "DispatchError",
@@ -41,10 +40,6 @@ class AuditFileError(NarrowgaugeError):
 
 class AuditFolderError(NarrowgaugeError):
     """The folder for the results cannot be used, or holds another audit."""
-
-
-class ArithmeticNotBuiltError(NarrowgaugeError):
-    """A rounding mode, subnormal rule or fused product that this version does not compute."""
 
 
 class KernelError(NarrowgaugeError):

@@ -15,17 +15,24 @@ import gmpy2  # type: ignore[import-untyped, import-not-found, unused-ignore]  #
 import numpy as np
 import numpy.typing as npt
 
-from narrowgauge.arithmetic.arithmetic import arithmetic_named
+from narrowgauge.arithmetic.arithmetic import Arithmetic
+from narrowgauge.arithmetic.formats import FORMATS
 
 Doubles = npt.NDArray[np.float64]
 Numbers = npt.NDArray[np.object_]
 Function = Callable[..., Any]
 
 SIXTEEN_BITS = ("float16", "bfloat16")
+EIGHT_BITS = ("e4m3", "e5m2")
 NAMES = ("float16", "bfloat16", "float32", "float64")
+ALL = (*EIGHT_BITS, "float16", "bfloat16", "tf32", "float32", "float64")
 
-# Precision, largest exponent, bits: IEEE 754-2019, table 3.5, and a vendor format; recalled from memory.
+# Precision, largest exponent, bits that differ: IEEE 754-2019, table 3.5, vendor formats, and OCP OFP8 revision 1.0;
+# recalled from memory. E4M3's largest exponent is one more than its bias, since it has no infinities.
 SHAPES = {
+    "e4m3": (4, 8, 8),
+    "e5m2": (3, 15, 8),
+    "tf32": (11, 127, 19),
     "float16": (11, 15, 16),
     "bfloat16": (8, 127, 16),
     "float32": (24, 127, 32),
@@ -52,10 +59,37 @@ UNARY = {
 WIDE = gmpy2.context(precision=400)
 
 
-def context(name: str) -> Any:
+MODES = {
+    "nearest": gmpy2.RoundToNearest,
+    "zero": gmpy2.RoundToZero,
+    "up": gmpy2.RoundUp,
+    "down": gmpy2.RoundDown,
+}
+
+
+def least_exponent(name: str) -> int:
+    """Return the exponent of the smallest normal number."""
+    return -6 if name == "e4m3" else 1 - SHAPES[name][1]
+
+
+def context(name: str, rounding: str = "nearest") -> Any:
     """Return MPFR's context of a format; its exponents are of significands in [1/2, 1): one more than ours."""
     precision, emax, _ = SHAPES[name]
-    return gmpy2.context(precision=precision, emax=emax + 1, emin=3 - emax - precision, subnormalize=True)
+    emin = least_exponent(name) + 2 - precision
+    return gmpy2.context(precision=precision, emax=emax + 1, emin=emin, subnormalize=True, round=MODES[rounding])
+
+
+def fitted(values: Doubles, name: str, rounding: str = "nearest", *, flushed: bool = False) -> Doubles:
+    """Return MPFR's results as the format has them: E4M3 ends at 448 without infinities; subnormals may be flushed."""
+    values = values.copy()
+    if name == "e4m3":
+        over = np.abs(values) > 448.0
+        outward = np.where(values > 0, rounding in ("nearest", "up"), rounding in ("nearest", "down"))
+        values[over] = np.where(outward | np.isinf(values), np.nan, np.copysign(448.0, values))[over]
+    if flushed:
+        small = np.abs(values) < 2.0 ** least_exponent(name)
+        values[small] = np.copysign(0.0, values[small])
+    return values
 
 
 def to_mpfr(values: Doubles, name: str) -> Numbers:
@@ -68,9 +102,12 @@ def reckon(function: Function, *operands: Numbers) -> Doubles:
     return np.fromiter(map(float, map(function, *operands)), np.float64, operands[0].size)
 
 
-def unary(function: str, values: Numbers, name: str) -> Doubles:
-    """Return NumPy's function of that name in a 16-bit format, correctly rounded."""
-    form = context(name)
+def unary(function: str, values: Numbers, name: str, rounding: str = "nearest") -> Doubles:
+    """Return NumPy's function of that name in a format of 8 or 16 bits, correctly rounded."""
+    return fitted(_unary(function, values, context(name, rounding)), name, rounding)
+
+
+def _unary(function: str, values: Numbers, form: Any) -> Doubles:
     if function in UNARY:
         return reckon(getattr(form, UNARY[function]), values)
     special: dict[str, Function] = {
@@ -100,9 +137,9 @@ def differ(got: npt.NDArray[Any], want: Doubles) -> npt.NDArray[np.intp]:
     return np.flatnonzero(unlike)
 
 
-def computed(name: str, function: str, *operands: Doubles) -> npt.NDArray[Any]:
-    """Return what the program computes: `Arithmetic.apply` on the carriers of these values."""
-    arithmetic = arithmetic_named(name)
+def computed(name: str, function: str, *operands: Doubles, **mode: Any) -> npt.NDArray[Any]:
+    """Return what the program computes: `Arithmetic.apply` on the carriers of these values, in a mode if given."""
+    arithmetic = Arithmetic(format=FORMATS[name], **mode)
     with np.errstate(all="ignore"):
         carriers = [operand.astype(arithmetic.format.carrier) for operand in operands]
         result: npt.NDArray[Any] = arithmetic.apply(getattr(np, function), carriers)
@@ -114,27 +151,35 @@ def values_of(patterns: npt.NDArray[np.uint64], name: str) -> Doubles:
     precision, emax, bits = SHAPES[name]
     if name == "float64":
         return patterns.view(np.float64)
+    bias = 1 - least_exponent(name)
     fraction = (patterns & np.uint64((1 << (precision - 1)) - 1)).astype(np.float64)
-    exponent = (patterns >> np.uint64(precision - 1)).astype(np.int64) & (2 * emax + 1)
+    exponent = (patterns >> np.uint64(precision - 1)).astype(np.int64) & (2 * bias + 1)
     hidden = np.where(exponent > 0, 2.0 ** (precision - 1), 0.0)
-    values: Doubles = np.ldexp(fraction + hidden, np.maximum(exponent, 1) - emax - precision + 1)
-    special = exponent == 2 * emax + 1
-    values[special] = np.where(fraction[special] == 0, inf, np.nan)
+    values: Doubles = np.ldexp(fraction + hidden, np.maximum(exponent, 1) - bias - precision + 1)
+    if name == "e4m3":
+        values[values == 480.0] = np.nan
+    else:
+        special = exponent == 2 * emax + 1
+        values[special] = np.where(fraction[special] == 0, inf, np.nan)
     return np.where(patterns >> np.uint64(bits - 1) == 1, -values, values)
 
 
 def all_values(name: str) -> Doubles:
-    """Return the values of all 65,536 patterns of a 16-bit format, in the order of the patterns."""
-    return values_of(np.arange(1 << 16, dtype=np.uint64), name)
+    """Return the values of all patterns of a format of 8 or 16 bits, in the order of the patterns."""
+    return values_of(np.arange(1 << SHAPES[name][2], dtype=np.uint64), name)
 
 
 def edge_values(name: str) -> Doubles:
     """Return 601 to 659 values where rounding can go wrong: 300 or more magnitudes in both signs, and NaN.
 
+    All 256 of an 8-bit format. Of the others:
+
     Zero, infinity, both ends of the subnormals and of the normals, 1 and what is near it, powers of two with
     their neighbours all over the range and closely around 1, and random patterns to make up 300.
     """
-    precision, emax, _ = SHAPES[name]
+    precision, emax, bits = SHAPES[name]
+    if bits == 8:
+        return all_values(name)
     unit = 1 << (precision - 1)
     infinity = (2 * emax + 1) * unit
     patterns = {0, infinity}
@@ -165,8 +210,9 @@ def random_pairs(name: str, count: int, seed: int) -> tuple[Doubles, Doubles]:
     generator = np.random.default_rng(seed)
     wild, tame = count // 2, count - count // 2
     patterns = generator.integers(0, (1 << bits) - 1, (2, wild), dtype=np.uint64, endpoint=True)
-    first = generator.integers(emax - 8, emax + 9, tame)
-    second = np.clip(first + generator.integers(-precision - 2, precision + 3, tame), 0, 2 * emax)
+    bias, last = 1 - least_exponent(name), 2 * emax if name != "e4m3" else 14
+    first = generator.integers(max(bias - 8, 0), min(bias + 9, last + 1), tame)
+    second = np.clip(first + generator.integers(-precision - 2, precision + 3, tame), 0, last)
     sign = generator.integers(0, 2, (2, tame), dtype=np.uint64) << np.uint64(bits - 1)
     fraction = generator.integers(0, 1 << (precision - 1), (2, tame), dtype=np.uint64)
     close = sign | (np.stack([first, second]).astype(np.uint64) << np.uint64(precision - 1)) | fraction

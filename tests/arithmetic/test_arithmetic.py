@@ -16,7 +16,7 @@ import pytest
 from narrowgauge.arithmetic.arithmetic import Arithmetic, arithmetic_named
 from narrowgauge.arithmetic.elementary import WAYS
 from narrowgauge.arithmetic.formats import FORMATS
-from narrowgauge.errors import ArithmeticNotBuiltError, NarrowgaugeError
+from narrowgauge.arithmetic.stochastic import Stochastic
 
 Carrier = npt.NDArray[np.floating[Any]]
 
@@ -26,24 +26,24 @@ def carriers(name: str, *rows: list[float]) -> list[Carrier]:
     return [arithmetic_named(name).cast(np.array(row)) for row in rows]
 
 
-@pytest.mark.parametrize(
-    ("asked", "message"),
-    [
-        ({"rounding": "zero"}, "rounding = 'zero' is not built yet; accepted: 'nearest'"),
-        ({"rounding": "up"}, "rounding = 'up' is not built yet; accepted: 'nearest'"),
-        ({"rounding": "down"}, "rounding = 'down' is not built yet; accepted: 'nearest'"),
-        ({"rounding": "stochastic"}, "rounding = 'stochastic' is not built yet; accepted: 'nearest'"),
-        ({"subnormals": "flushed"}, "subnormals = 'flushed' is not built yet; accepted: 'kept'"),
-        ({"fused": True}, "fused = True is not built yet; accepted: False"),
-    ],
-)
-def test_what_is_not_built_is_refused_by_name(asked: dict[str, Any], message: str) -> None:
-    """The error names the mode, what is accepted, and is the input's fault: exit code 2."""
-    with pytest.raises(ArithmeticNotBuiltError) as caught:
-        Arithmetic(format=FORMATS["float16"], **asked)
+def test_random_numbers_go_with_stochastic_rounding_alone() -> None:
+    """A stream without stochastic rounding, or the reverse, is a mistake of the caller and named."""
+    message = "stochastic rounding, and it alone, takes a stream; accepted: Stochastic(seed, level, block)"
+    with pytest.raises(ValueError, match="stochastic") as caught:
+        Arithmetic(format=FORMATS["float16"], rounding="stochastic")
     assert str(caught.value) == message
-    assert isinstance(caught.value, NarrowgaugeError)
-    assert caught.value.exit_code == 2
+    with pytest.raises(ValueError, match="stochastic"):
+        Arithmetic(format=FORMATS["float16"], rounding="up", stream=Stochastic(1, 2, 3))
+
+
+def test_only_the_plain_arithmetic_of_a_native_format_is_native() -> None:
+    """NumPy may compute as it likes in float32 and float64 to nearest, subnormals kept, nothing fused."""
+    for name in oracle.ALL:
+        form = FORMATS[name]
+        assert Arithmetic(format=form).native == (name in ("float32", "float64"))
+        assert not Arithmetic(format=form, rounding="up").native
+        assert not Arithmetic(format=form, subnormals="flushed").native
+        assert not Arithmetic(format=form, fused=True).native
 
 
 def test_the_named_arithmetic_is_the_plain_one() -> None:

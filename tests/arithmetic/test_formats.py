@@ -14,7 +14,8 @@ from narrowgauge.arithmetic.elementary import decode, encode
 from narrowgauge.arithmetic.formats import FORMATS, Format, format_named
 
 # IEEE 754-2019, table 3.5 (binary16, binary32, binary64), recalled from memory; bfloat16 is a vendor format,
-# binary32's exponents with 8 bits of precision, recalled from memory. The decimals are the shortest possible.
+# binary32's exponents with 8 bits of precision, recalled from memory. The decimals are the shortest possible. TF32 is a
+# vendor format, E4M3 and E5M2 are those of the OCP 8-bit Floating Point Specification 1.0, recalled from memory.
 PUBLISHED = {
     "float16": {
         "precision": 11,
@@ -56,33 +57,66 @@ PUBLISHED = {
         "min_subnormal": 2.0**-1074,
         "unit_roundoff": 2.0**-53,
     },
+    "tf32": {
+        "precision": 11,
+        "emax": 127,
+        "emin": -126,
+        "bits": 32,
+        "max_finite": 3.4011621342146535e38,
+        "min_normal": 2.0**-126,
+        "min_subnormal": 2.0**-136,
+        "unit_roundoff": 2.0**-11,
+    },
+    "e4m3": {
+        "precision": 4,
+        "emax": 8,
+        "emin": -6,
+        "bits": 8,
+        "max_finite": 448.0,
+        "min_normal": 2.0**-6,
+        "min_subnormal": 2.0**-9,
+        "unit_roundoff": 2.0**-4,
+    },
+    "e5m2": {
+        "precision": 3,
+        "emax": 15,
+        "emin": -14,
+        "bits": 8,
+        "max_finite": 57344.0,
+        "min_normal": 2.0**-14,
+        "min_subnormal": 2.0**-16,
+        "unit_roundoff": 2.0**-3,
+    },
 }
 STORAGE = {
     "float16": (np.float32, np.float16),
     "bfloat16": (np.float32, ml_dtypes.bfloat16),
     "float32": (np.float32, np.float32),
     "float64": (np.float64, np.float64),
+    "tf32": (np.float32, np.float32),
+    "e4m3": (np.float32, ml_dtypes.float8_e4m3fn),
+    "e5m2": (np.float32, ml_dtypes.float8_e5m2),
 }
 
 
-def test_the_formats_are_these_four_in_this_order() -> None:
-    """The table holds binary16, bfloat16, binary32 and binary64, each under its own name."""
+def test_the_formats_are_these_seven_in_this_order() -> None:
+    """The table holds binary16, bfloat16, binary32, binary64, TF32, E4M3 and E5M2, each under its own name."""
     assert list(FORMATS) == list(PUBLISHED)
     assert [row.name for row in FORMATS.values()] == list(PUBLISHED)
 
 
 @pytest.mark.parametrize("figure", list(PUBLISHED["float16"]))
-@pytest.mark.parametrize("name", oracle.NAMES)
+@pytest.mark.parametrize("name", oracle.ALL)
 def test_every_figure_is_the_published_one(name: str, figure: str) -> None:
     """Given or derived, each figure of each format equals the standard's."""
     assert getattr(FORMATS[name], figure) == PUBLISHED[name][figure]
 
 
-@pytest.mark.parametrize("name", oracle.NAMES)
+@pytest.mark.parametrize("name", [name for name in oracle.ALL if name != "tf32"])
 def test_figures_agree_with_the_storage_types_own(name: str) -> None:
     """NumPy and ml_dtypes report the same limits, precision and width for the storage type."""
     row = FORMATS[name]
-    types: Any = ml_dtypes if name == "bfloat16" else np
+    types: Any = np if name.startswith("float") else ml_dtypes
     theirs = types.finfo(row.storage)
     assert float(theirs.max) == row.max_finite
     assert float(theirs.smallest_normal) == row.min_normal
@@ -92,14 +126,14 @@ def test_figures_agree_with_the_storage_types_own(name: str) -> None:
     assert theirs.bits == row.bits == 8 * row.storage.itemsize
 
 
-@pytest.mark.parametrize("name", oracle.NAMES)
+@pytest.mark.parametrize("name", oracle.ALL)
 def test_carriers_and_storage_types(name: str) -> None:
-    """16-bit formats travel in float32; the others in their own type, and only those are native."""
+    """Formats narrower than float32 travel in it; the others in their own type, and only those are native."""
     row = FORMATS[name]
     carrier, storage = STORAGE[name]
     assert row.carrier == carrier
     assert row.storage == storage
-    assert row.native == (name not in oracle.SIXTEEN_BITS)
+    assert row.native == (name in ("float32", "float64"))
 
 
 def test_16_bit_formats_meet_the_bound_for_two_roundings() -> None:
@@ -124,7 +158,9 @@ def test_an_unknown_format_is_refused_by_name() -> None:
     """The error names what was asked for and everything that is known."""
     with pytest.raises(KeyError) as caught:
         format_named("float8")
-    assert caught.value.args == ("'float8' is not a format; accepted: float16, bfloat16, float32, float64",)
+    assert caught.value.args == (
+        "'float8' is not a format; accepted: float16, bfloat16, float32, float64, tf32, e4m3, e5m2",
+    )
 
 
 def test_formats_cannot_be_changed() -> None:

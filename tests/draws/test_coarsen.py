@@ -24,7 +24,8 @@ TAKES: tuple[Takes, ...] = ("increments", "normals", "uniforms")
 STEP = 0.3  # no power of two: sqrt(h) z is rounded in float64, too
 FALSE_ALARM = 1e-6
 
-every_format = pytest.mark.parametrize("name", list(FORMATS))
+# TF32 has no type of its own to compare with.
+every_format = pytest.mark.parametrize("name", [name for name in FORMATS if name != "tf32"])
 every_refinement = pytest.mark.parametrize("m", [2, 3])
 
 

@@ -18,6 +18,7 @@ from narrowgauge.draws.streams import Purpose, uniforms
 from narrowgauge.draws.tape import ArmDraws, TapeError
 
 FALSE_ALARM = 1e-6  # of each statistical test
+OF_THEIR_OWN_TYPE = [name for name in FORMATS if name != "tf32"]  # TF32 has none to compare with
 AHEAD = Layout(before=1, period=0, after=0, axes=(StepAxis(place=0),))
 
 
@@ -31,7 +32,7 @@ def summed(parts, form):
 
 
 @pytest.mark.parametrize("m", [2, 3])
-@pytest.mark.parametrize("form", FORMATS)
+@pytest.mark.parametrize("form", OF_THEIR_OWN_TYPE)
 def test_normals_by_step_and_ahead(form, m):
     """Fine draws are the rounded normals of the tape, coarse ones the sum in the format's own type, times 1 / sqrt(M).
 
@@ -93,7 +94,7 @@ def test_requests_outside_the_time_loop_are_the_same():
         assert not np.array_equal(first[1], second[1])
 
 
-@pytest.mark.parametrize("form", FORMATS)
+@pytest.mark.parametrize("form", OF_THEIR_OWN_TYPE)
 def test_poisson_and_gamma_in_proportion_add_up(form):
     """Draws whose parameter is a rate times the step: the coarse draw is the sum of the fine ones, as its type adds."""
     h, m, n = 0.1, 2, 256

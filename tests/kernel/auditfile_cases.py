@@ -54,6 +54,9 @@ float64 = 1.0
 float32 = 0.5
 float16 = 0.3
 bfloat16 = 0.2
+tf32 = 0.45
+e4m3 = 0.1
+e5m2 = 0.15
 draws = 0.1
 path = 2
 [sampling]

@@ -44,6 +44,9 @@ DEFAULTS = {
     "cost.float32": 0.5,
     "cost.float16": 0.25,
     "cost.bfloat16": 0.25,
+    "cost.tf32": 0.5,
+    "cost.e4m3": 0.125,
+    "cost.e5m2": 0.125,
     "cost.draws": 0.0,
     "cost.path": 0.0,
     "sampling.block": 32768,
@@ -111,8 +114,9 @@ class TestDefaults:
     def test_costs_are_storage_bits(self, tmp_path):
         """Without [cost] a step costs what NumPy and ml_dtypes need to store a number, over eight bytes."""
         cost = read(tmp_path, LEAST).cost
+        types = {"bfloat16": ml_dtypes.bfloat16, "e4m3": ml_dtypes.float8_e4m3fn, "e5m2": ml_dtypes.float8_e5m2}
         for name in FORMATS:
-            dtype = np.dtype(ml_dtypes.bfloat16 if name == "bfloat16" else name)
+            dtype = np.dtype(types.get(name, "float32" if name == "tf32" else name))  # TF32 is stored as float32
             assert cost.step(name) == dtype.itemsize / 8
         with pytest.raises(KeyError):
             cost.step("draws")

@@ -9,41 +9,69 @@ from typing import Any, Literal
 import numpy as np
 import numpy.typing as npt
 
-from narrowgauge.arithmetic.elementary import WAYS, compute_wide, look_up
+from narrowgauge.arithmetic import compiled, double, errorterms
+from narrowgauge.arithmetic.elementary import Manner, compute_wide, look_up, look_up_wide, ways
 from narrowgauge.arithmetic.formats import Format, format_named
-from narrowgauge.arithmetic.rounding import Floats, narrow, narrow_integer, narrow_number, round_carrier
-from narrowgauge.errors import ArithmeticNotBuiltError
+from narrowgauge.arithmetic.rounding import (
+    Doubles,
+    Floats,
+    Rounding,
+    flush,
+    narrow,
+    narrow_integer,
+    narrow_number,
+    round_carrier,
+    round_half,
+)
+from narrowgauge.arithmetic.stochastic import Stochastic
 
-__all__ = ["Arithmetic", "arithmetic_named"]
+__all__ = ["Arithmetic", "Rounding", "Subnormals", "arithmetic_named"]
 
-Rounding = Literal["nearest", "zero", "up", "down", "stochastic"]
 Subnormals = Literal["kept", "flushed"]
 
 _EXACT_INTEGERS = 2**53
+_APART = frozenset(("table", "wide", "terms"))  # what does not take place in the carrier
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Arithmetic:
-    """Rounds every elementary operation as `format` does; everything but nearest, kept, unfused is refused.
+    """Rounds every elementary operation as `format` does, from the exact result and never from a rounded one.
 
     Operands are carriers: arrays or scalars of `format.carrier` that hold values of the format, and Python
     numbers from `constant`.
+
+    `rounding`: nearest (ties to even), toward zero, up, down, or stochastic: to one of the two neighbours, to the
+    nearer with more probability, unbiased; that takes a `stream` of random numbers, one for each run of a kernel. A sum
+    that is exactly zero is -0 when rounding down. `subnormals`: kept, or flushed as rounding.py says. `fused`: the
+    caller is to hand products that feed sums to `fma`, which rounds them together once; `apply` sees one operation at a
+    time and rounds each, fused or not.
+
+    Functions: right in every mode for every input of the formats of 8 and 16 bits; for TF32 and float32 in the modes
+    that are not to nearest, computed in float64 and rounded once; in float64 the library's own in every mode.
     """
 
     format: Format
     rounding: Rounding = "nearest"
     subnormals: Subnormals = "kept"
     fused: bool = False
+    stream: Stochastic | None = field(default=None, compare=False)
     _constants: dict[tuple[type, Any], Any] = field(default_factory=dict, compare=False, repr=False)
+    _ways: dict[np.ufunc, Manner] = field(init=False, compare=False, repr=False)
 
     def __post_init__(self) -> None:
-        """Refuse by name what is not built."""
-        if self.rounding != "nearest":
-            raise ArithmeticNotBuiltError(f"rounding = {self.rounding!r} is not built yet; accepted: 'nearest'")
-        if self.subnormals != "kept":
-            raise ArithmeticNotBuiltError(f"subnormals = {self.subnormals!r} is not built yet; accepted: 'kept'")
-        if self.fused:
-            raise ArithmeticNotBuiltError("fused = True is not built yet; accepted: False")
+        """Choose how each function is computed."""
+        if (self.rounding == "stochastic") != (self.stream is not None):
+            raise ValueError(
+                "stochastic rounding, and it alone, takes a stream; accepted: Stochastic(seed, level, block)"
+            )
+        object.__setattr__(self, "_ways", ways(self.format, self.rounding))
+        if not self.native:
+            compiled.kernel("nearest")  # numba is imported here at the latest, not inside a kernel's run
+
+    @property
+    def native(self) -> bool:
+        """Whether the carrier's own operations are this arithmetic's, so that NumPy may compute as it likes."""
+        return self.format.native and self.rounding == "nearest" and self.subnormals == "kept" and not self.fused
 
     def apply(
         self,
@@ -55,41 +83,57 @@ class Arithmetic:
         """Compute `ufunc` on carriers and round the result once; a carrier array, a scalar, or booleans.
 
         `out` is a carrier array that receives the result. `call` is what plain code would have called instead
-        of the ufunc (a Python operator, also an in-place one whose target is the first operand): it is used
+        of the ufunc (a Python operator, also an in-place one whose target is the first operand and `out`): it is used
         wherever the operation takes place in the carrier, so that float64 gives plain code's bits.
         Raises KeyError for a ufunc that `elementary.WAYS` does not list.
         """
-        way = WAYS[ufunc]
-        if self.format.native or way in ("exact", "truth", "carrier"):
-            if call is not None:
-                result = call(*operands)
-            else:
-                result = ufunc(*operands) if out is None else ufunc(*operands, out=out)
-            if self.format.native:
-                return result if way == "truth" else self._same_type(result)
-            return self._rounded(result) if way == "carrier" else result
-        if way == "table":
-            (operand,) = operands
-            found = look_up(ufunc, operand, self.format, out)
-            return found if isinstance(found, np.ndarray) and found.ndim else found[()]
-        result = narrow(compute_wide(ufunc, operands, self.format), self.format)
-        if out is not None:
-            out[...] = result
-            return out
-        return result if result.ndim else result[()]
+        way = self._ways[ufunc]
+        if way in _APART:
+            return self._delivered(self._computed(way, ufunc, operands, out), out)
+        if call is not None:
+            result = call(*operands)
+        elif out is None:
+            result = ufunc(*operands)
+        else:
+            result = ufunc(*operands, out=out)
+        if way == "carrier":
+            result = self._rounded(result)
+        elif way == "native":
+            result = self._same_type(result)
+        elif way == "truth":
+            return result
+        return result if self.subnormals == "kept" else self._flushed(result)
+
+    def fma(self, x: Any, y: Any, z: Any, out: Floats | None = None) -> Any:
+        """Return x y + z rounded once from the exact value, of carriers; into `out` if given.
+
+        A difference is `fma(x, y, -z)` or `fma(-x, y, z)`: changing a sign is exact. Which products of a kernel feed
+        which sums is for the caller to find: it keeps a product unrounded by keeping its two operands.
+        """
+        if self.format.precision == 53:
+            found = double.fused(x, y, z, self.rounding, self._uniforms)
+            result: Floats = flush(found, self.format) if self.subnormals == "flushed" else found
+        else:
+            result = self._narrowed(errorterms.fused(x, y, z, negative_zero=self.rounding == "down"))
+        return self._delivered(result, out)
 
     def constant(self, number: float | np.generic) -> Any:
         """Return a weak scalar as it meets the state: rounded once, a Python number that NumPy takes as weak.
 
-        float64 leaves it as it is, so that plain code's own shortcuts (`x ** 2`) are taken.
+        To nearest in every mode but the directed ones. float64 leaves a number as it is, so that plain code's own
+        shortcuts (`x ** 2`) are taken.
         """
-        if self.format.name == "float64":
+        if self.format.name == "float64" and self.subnormals == "kept":
             return number
         key = (type(number), number)
         known = self._constants.get(key)
         if known is None or number == 0:  # 0.0 and -0.0 are one key; neither needs rounding
-            integral = isinstance(number, (int, np.integer))
-            known = narrow_integer(int(number), self.format) if integral else narrow_number(float(number), self.format)
+            mode: Rounding = "nearest" if self.rounding == "stochastic" else self.rounding
+            flushed = self.subnormals == "flushed"
+            if isinstance(number, (int, np.integer)):
+                known = narrow_integer(int(number), self.format, mode, flushed=flushed)
+            else:
+                known = narrow_number(float(number), self.format, mode, flushed=flushed)
             if len(self._constants) < 4096:  # a kernel that feeds a new constant each step must not fill memory
                 self._constants[key] = known
         return known
@@ -97,25 +141,66 @@ class Arithmetic:
     def cast(self, values: npt.NDArray[Any]) -> Floats:
         """Return a real array of any kind rounded once to the format, as a new carrier array.
 
+        To nearest in every mode but the directed ones.
         Raises ValueError for integers beyond 2^53 and for types that float64 does not hold exactly.
         """
         if _past_exact_integers(values):
             raise ValueError("integers beyond 2**53 cannot be rounded once; accepted: up to 2**53")
         if values.dtype.kind not in "biuf" or values.dtype.itemsize > 8:
             raise ValueError(f"dtype {values.dtype} cannot be rounded; accepted: booleans, integers, floats to 64 bits")
-        return narrow(values.astype(np.float64), self.format)
+        mode: Rounding = "nearest" if self.rounding == "stochastic" else self.rounding
+        wide = values.astype(np.float64, copy=False)
+        return narrow(wide, self.format, mode, flushed=self.subnormals == "flushed")
 
     def holds(self, values: npt.NDArray[Any]) -> bool:
-        """Whether every value of a real array is one of the format's already (NaN is)."""
+        """Whether every value of a real array is one of the arithmetic's already (NaN is)."""
         if _past_exact_integers(values):
             return False
         wide = values.astype(np.float64)
-        return bool(np.array_equal(narrow(wide, self.format).astype(np.float64), wide, equal_nan=True))
+        own = narrow(wide, self.format, flushed=self.subnormals == "flushed").astype(np.float64)
+        return bool(np.array_equal(own, wide, equal_nan=True))
+
+    def _computed(self, way: Manner, ufunc: np.ufunc, operands: Sequence[Any], out: Floats | None) -> Floats:
+        """Compute what does not take place in the carrier."""
+        if way == "table" and self.rounding != "stochastic":
+            flushed = self.subnormals == "flushed"
+            return look_up(ufunc, operands[0], self.format, out, self.rounding, flushed=flushed)
+        if way == "terms" and self.format.precision == 53:
+            found: Floats = double.computed(ufunc, operands, self.rounding, self._uniforms)
+            return flush(found, self.format) if self.subnormals == "flushed" else found
+        if way == "terms":
+            return self._narrowed(errorterms.exact(ufunc, operands, negative_zero=self.rounding == "down"))
+        if ufunc.nin == 1 and self.rounding != "nearest":
+            return self._narrowed(look_up_wide(ufunc, operands[0], self.format))
+        return self._narrowed(np.asarray(compute_wide(ufunc, operands, self.format, self.rounding)))
+
+    def _narrowed(self, values: Doubles) -> Floats:
+        drawn = self._uniforms(values.shape) if self.rounding == "stochastic" else None
+        flushed = self.subnormals == "flushed"
+        return narrow(values, self.format, self.rounding, flushed=flushed, uniforms=drawn)
+
+    def _uniforms(self, shape: tuple[int, ...]) -> Doubles:
+        assert self.stream is not None  # checked when the arithmetic was made
+        return self.stream.uniforms(shape)
+
+    def _delivered(self, found: Floats, out: Floats | None) -> Any:
+        if out is None:
+            return found if found.ndim else found[()]
+        if out is not found:
+            out[...] = found
+        return out
 
     def _rounded(self, result: Any) -> Any:
         if isinstance(result, np.ndarray):
             return round_carrier(result, self.format)
-        return round_carrier(np.array([result], self.format.carrier), self.format)[0]
+        if self.format.name == "float16":
+            return round_half(float(result))
+        return np.float32(narrow_number(float(result), self.format))
+
+    def _flushed(self, result: Any) -> Any:
+        if isinstance(result, np.ndarray):
+            return flush(result, self.format)
+        return flush(np.array([result], self.format.carrier), self.format)[0]
 
     def _same_type(self, result: Any) -> Any:
         """Round what a native operation widened: a Python scalar function, or one that knows float64 only."""

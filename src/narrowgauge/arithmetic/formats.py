@@ -1,12 +1,18 @@
 """The floating-point formats as data: one row a format, everything else derived.
 
-Sources: IEEE 754-2019, table 3.5 (binary16, binary32, binary64), recalled from memory; bfloat16 is a vendor
-format with binary32's exponents and 8 bits of precision, recalled from memory.
+Sources: IEEE 754-2019, table 3.5 (binary16, binary32, binary64), recalled from memory; bfloat16 and TF32 are vendor
+formats with binary32's exponents and 8 and 11 bits of precision, recalled from memory; E4M3 and E5M2 are those of the
+OCP 8-bit Floating Point Specification (OFP8), revision 1.0, recalled from memory.
+
+E4M3 has no infinities: its largest exponent holds numbers, and only the last significand of it is NaN. The
+specification offers two conversions for what is too large; this is the one that does not saturate, as in
+`ml_dtypes.float8_e4m3fn`: an overflow is NaN, and so is what is infinite.
 """
 
 from __future__ import annotations
 
 from dataclasses import dataclass
+from math import inf, nan
 
 import ml_dtypes
 import numpy as np
@@ -16,11 +22,11 @@ __all__ = ["FORMATS", "Format", "format_named"]
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Format:
-    """A binary floating-point format with subnormals, infinities and NaN.
+    """A binary floating-point format with subnormals, NaN and, where `infinite` says so, infinities.
 
     `precision` counts the significand's bits with the hidden one, `emax` is the largest exponent, `bits` the
     width in storage, `carrier` the NumPy type that holds its values during emulation, `storage` the NumPy or
-    ml_dtypes type with exactly these values.
+    ml_dtypes type with exactly these values; TF32 has none, it is stored as float32.
     """
 
     name: str
@@ -29,11 +35,12 @@ class Format:
     bits: int
     carrier: np.dtype[np.float32] | np.dtype[np.float64]
     storage: np.dtype[np.generic]
+    infinite: bool = True
 
     @property
     def emin(self) -> int:
-        """Smallest exponent of a normal number."""
-        return 1 - self.emax
+        """Smallest exponent of a normal number; without infinities one exponent more is used at the top."""
+        return 1 - self.emax if self.infinite else 2 - self.emax
 
     @property
     def unit_roundoff(self) -> float:
@@ -43,7 +50,12 @@ class Format:
     @property
     def max_finite(self) -> float:
         """Largest finite value."""
-        return (2.0 - 2.0 ** (1 - self.precision)) * 2.0**self.emax
+        return (2.0 - 2.0 ** ((1 if self.infinite else 2) - self.precision)) * 2.0**self.emax
+
+    @property
+    def infinity(self) -> float:
+        """What is too large, or infinite: infinity, or NaN in a format without."""
+        return inf if self.infinite else nan
 
     @property
     def min_normal(self) -> float:
@@ -57,8 +69,8 @@ class Format:
 
     @property
     def native(self) -> bool:
-        """Whether the carrier's own arithmetic already is this format's."""
-        return self.carrier == self.storage
+        """Whether the carrier's own arithmetic already is this format's, to nearest with subnormals kept."""
+        return self.precision >= 24
 
 
 _F32, _F64 = np.dtype(np.float32), np.dtype(np.float64)
@@ -77,6 +89,17 @@ FORMATS: dict[str, Format] = {
         ),
         Format(name="float32", precision=24, emax=127, bits=32, carrier=_F32, storage=_F32),
         Format(name="float64", precision=53, emax=1023, bits=64, carrier=_F64, storage=_F64),
+        Format(name="tf32", precision=11, emax=127, bits=32, carrier=_F32, storage=_F32),
+        Format(
+            name="e4m3",
+            precision=4,
+            emax=8,
+            bits=8,
+            carrier=_F32,
+            storage=np.dtype(ml_dtypes.float8_e4m3fn),
+            infinite=False,
+        ),
+        Format(name="e5m2", precision=3, emax=15, bits=8, carrier=_F32, storage=np.dtype(ml_dtypes.float8_e5m2)),
     )
 }
 

@@ -1,162 +1,328 @@
-"""Rounding to nearest, ties to even, with subnormals kept: in place on carriers, and from float64.
+"""Rounding carriers in place, and from float64, to nearest or in any mode; compiled where that is possible.
 
 Two doors, because they rest on different theorems:
 
-`round_carrier` finishes one operation that was computed in a float32 carrier. For + - * / and the square root
-of 16-bit formats the two roundings are innocuous since 24 >= 2 x 11 + 2: "Innocuous Double Rounding of Basic
-Arithmetic Operations", Journal of Formalized Reasoning 7(1), 2014, doi 10.6092/issn.1972-5787/4359, table I.
+`round_carrier` finishes one operation that was computed in a float32 carrier, to nearest. For + - * / and the square
+root of formats of 8 and 16 bits the two roundings are innocuous since 24 >= 2 x 11 + 2: "Innocuous Double Rounding of
+Basic Arithmetic Operations", Journal of Formalized Reasoning 7(1), 2014, doi 10.6092/issn.1972-5787/4359, table I. For
+TF32 that holds while results are normal; its smallest normal number is float32's, which has no bits to spare for
+smaller results, so that products and quotients must come through the other door.
 
 `narrow` takes float64 values of any origin straight to the format, so that they are rounded once: going
 through float32 would turn 1 + 2^-11 + 2^-30 into 1.0 in binary16, where 1.0009765625 is right.
+
+Subnormals are kept or flushed. Flushed: a result is rounded as if they were kept, and becomes a zero of its sign if it
+is subnormal then, as processors do that look for tiny results after rounding. Constants and casts are flushed likewise,
+so that no operand is ever subnormal, which is what processors that take subnormal operands for zeros see.
 """
 
 from __future__ import annotations
 
-import threading
-from typing import Any
+import math
+import struct
+from collections.abc import Callable
+from functools import cache
+from typing import Any, Literal
 
 import numpy as np
 import numpy.typing as npt
 
+from narrowgauge.arithmetic import compiled
 from narrowgauge.arithmetic.formats import Format
+from narrowgauge.arithmetic.scratch import words32, words64
 
-__all__ = ["narrow", "narrow_integer", "narrow_number", "round_carrier"]
+__all__ = [
+    "Doubles",
+    "Floats",
+    "Rounding",
+    "flush",
+    "narrow",
+    "narrow_integer",
+    "narrow_number",
+    "round_carrier",
+    "round_half",
+]
 
+Rounding = Literal["nearest", "zero", "up", "down", "stochastic"]
 Floats = npt.NDArray[np.floating[Any]]
 Doubles = npt.NDArray[np.float64]
 
-
-class _Scratch(threading.local):
-    """Integer work space of each thread, kept between operations: one allocation, not one per rounding."""
-
-    words: npt.NDArray[np.uint32] = np.empty(0, np.uint32)
-
-    def like(self, shape: tuple[int, ...], size: int) -> npt.NDArray[np.uint32]:
-        if self.words.size < size:
-            self.words = np.empty(max(size, 4096), np.uint32)
-        return self.words[:size].reshape(shape)
-
-
-_SCRATCH = _Scratch()
-
-_MAGNITUDE32 = np.uint32(0x7FFFFFFF)
-_MAGNITUDE64 = np.uint64(0x7FFFFFFFFFFFFFFF)
+_SIGN32 = np.uint32(0x80000000)
+_EXPONENT32 = np.uint32(0x7F800000)
+_EXPONENT64 = np.uint64(0x7FF0000000000000)
+_SIGN64 = np.uint64(0x8000000000000000)
+_LOOPS = {"nearest": "nearest", "stochastic": "stochastic"}
+_INTEGRAL: dict[str, Callable[[float], float]] = {
+    "nearest": round,  # ties to even
+    "zero": math.trunc,
+    "up": math.ceil,
+    "down": math.floor,
+}
 
 
 def round_carrier(values: Floats, form: Format) -> Floats:
-    """Round a carrier array to `form` in place and return it; shape and strides are free.
+    """Round a carrier array to nearest in `form`, in place, and return it; shape and strides are free.
 
-    float32 array for the 16-bit formats, each value the correctly rounded float32 result of one operation on
-    values of the format. A native format is returned as it is.
+    float32 array for the formats of 8 and 16 bits and TF32, each value the correctly rounded float32 result of one
+    operation on values of the format. A native format is returned as it is.
     """
     if form.native or values.size == 0:
         return values
-    if values.ndim == 0:
-        round_carrier(values.reshape(1), form)  # a view; np.nonzero takes no 0-d arrays
+    wide = form.emax == 127  # the carrier has the same exponents: subnormals and overflow round like everything else
+    loop = compiled.kernel("words" if wide else "singles")
+    if loop is None:
+        if wide:
+            _round_words(values, form)
+        else:
+            _round_singles(values, form)
         return values
-    bits = values.view(np.uint32)
-    work = _SCRATCH.like(values.shape, values.size)
-    if form.emax == 127:
-        # The carrier has the same exponents: subnormals and overflow round like everything else.
-        _to_nearest_even(bits, work, drop=24 - form.precision)
-        return values
-    small = _subnormals(bits, work, form)
-    saved = None if small is None else values[small]
-    _to_nearest_even(bits, work, drop=24 - form.precision)
-    if small is not None and saved is not None:
-        values[small] = _on_grid(saved, form.min_subnormal, 23)
-    if not (values.max() <= form.max_finite and values.min() >= -form.max_finite):  # also true of NaN
-        _overflow(values, form)
+    flat = _flat(values)
+    loop(flat.view(np.uint32) if wide else flat, *_figures32(form))
+    if flat.base is None:
+        values[...] = flat.reshape(values.shape)
     return values
 
 
-def narrow(values: Doubles, form: Format) -> Floats:
-    """Return float64 `values` rounded once to `form`, as a new carrier array of the same shape."""
-    if form.native:
+def flush(values: Floats, form: Format) -> Floats:
+    """Replace what is subnormal in `form` by a zero of its sign, in place, and return the array."""
+    loop = compiled.kernel("flush32" if values.dtype.itemsize == 4 else "flush64")
+    least = values.dtype.type(form.min_normal)
+    if loop is None:
+        with np.errstate(invalid="ignore"):
+            np.multiply(values, np.abs(values) >= least, out=values)
+        return values
+    flat = _flat(values)
+    loop(flat, least)
+    if flat.base is None:
+        values[...] = flat.reshape(values.shape)
+    return values
+
+
+def narrow(
+    values: Doubles,
+    form: Format,
+    rounding: Rounding = "nearest",
+    *,
+    flushed: bool = False,
+    uniforms: Doubles | None = None,
+) -> Floats:
+    """Return float64 `values` rounded once to `form`, as a new carrier array of the same shape.
+
+    `uniforms` are numbers in [0, 1) of the same shape, for stochastic rounding: a magnitude between two values of the
+    format goes to the larger one with the probability of its distance to the smaller, and beyond the largest finite
+    value as if exponents went on. Toward zero and away from an infinity what is too large becomes the largest finite
+    value; what is infinite stays so.
+    """
+    if form.precision == 53 or (form.native and rounding == "nearest"):
         with np.errstate(over="ignore", under="ignore", invalid="ignore"):  # invalid: a signalling NaN
-            return values.astype(form.storage)
-    rounded = np.array(values, dtype=np.float64, order="K")  # always a copy
-    if rounded.size == 0:
-        return rounded.astype(form.carrier)
-    flat = rounded.reshape(-1) if rounded.ndim == 0 else rounded
-    bits = flat.view(np.uint64)
-    magnitude = bits & _MAGNITUDE64
-    # Zero wraps to the largest integer and so never counts as small.
-    least = np.uint64(np.float64(form.min_normal).view(np.uint64)) - np.uint64(1)
-    magnitude -= np.uint64(1)
-    small = np.nonzero(magnitude < least) if magnitude.min() < least else None
-    saved = None if small is None else flat[small]
-    magnitude = bits >> np.uint64(53 - form.precision)
-    magnitude &= np.uint64(1)
-    magnitude += np.uint64((1 << (52 - form.precision)) - 1)
-    bits += magnitude
-    bits &= ~np.uint64((1 << (53 - form.precision)) - 1)
-    if small is not None and saved is not None:
-        flat[small] = _on_grid(saved, form.min_subnormal, 52)
-    # Asked of the values before rounding, which turns the NaN of all ones into a zero. Also true of NaN.
-    overflowing = form.max_finite + 2.0 ** (form.emax - form.precision)
-    if not (values.max() < overflowing and values.min() > -overflowing):
-        flat[np.isnan(values.reshape(flat.shape))] = np.nan  # one NaN, whatever payload came in
-        _overflow(flat, form)
-    with np.errstate(under="ignore"):  # exact: every value of the format is one of the carrier
-        return rounded.astype(form.carrier)
+            found: Floats = values.astype(form.storage)
+    else:
+        loop = compiled.kernel(_LOOPS.get(rounding, "directed")) if values.size else None
+        if loop is not None:
+            found = _narrow_compiled(loop, values, form, rounding, uniforms)
+        elif rounding == "nearest":
+            found = _narrow_to_nearest(values, form)
+        else:
+            found = _narrow_in_mode(values, form, rounding, uniforms)
+    return flush(found, form) if flushed else found
 
 
-def narrow_number(number: float, form: Format) -> float:
-    """Return a Python float rounded once to `form`."""
-    if form.name == "float64" or number == 0.0:  # a zero keeps its sign
-        return float(number)
-    return float(narrow(np.array([number], np.float64), form)[0])
+def narrow_number(number: float, form: Format, rounding: Rounding = "nearest", *, flushed: bool = False) -> float:
+    """Return a Python float rounded once to `form`, in every mode but the stochastic one."""
+    if number == 0.0 or number != number or math.isinf(number):  # noqa: PLR0124  NaN
+        return number if form.infinite or number == 0.0 else math.nan
+    if form.precision == 53:
+        rounded = number
+    else:
+        unit = math.ldexp(1.0, max(math.frexp(number)[1] - 1, form.emin) - form.precision + 1)
+        rounded = math.copysign(_INTEGRAL[rounding](number / unit) * unit, number)
+    if abs(rounded) > form.max_finite:
+        above, below = _limits(form, rounding)
+        rounded = math.copysign(above if number > 0 else below, number)
+    return math.copysign(0.0, number) if flushed and abs(rounded) < form.min_normal else rounded
 
 
-def narrow_integer(number: int, form: Format) -> float:
-    """Return a Python integer of any size rounded once to `form`; infinite beyond its range.
+def narrow_integer(number: int, form: Format, rounding: Rounding = "nearest", *, flushed: bool = False) -> float:
+    """Return a Python integer of any size rounded once to `form`, in every mode but the stochastic one.
 
     Wide integers are cut to 53 bits with their last bit made odd where something was cut off; a second
     rounding from there is harmless for precisions of 51 bits and less: "Emulation of a FMA and correctly
     rounded sums: proved algorithms using rounding to odd", IEEE Transactions on Computers 57(4), 2008,
     doi 10.1109/TC.2007.70819.
     """
+    try:
+        near = float(number)
+    except OverflowError:
+        near = math.inf if number > 0 else -math.inf
+    if form.precision == 53:
+        return _beside(near, number, rounding)
     size = abs(number)
     excess = size.bit_length() - 53
+    if excess <= 0:
+        return narrow_number(near, form, rounding, flushed=flushed)
+    odd = (size >> excess) | int(size & ((1 << excess) - 1) != 0)
     try:
-        if excess <= 0 or form.name == "float64":
-            return narrow_number(float(number), form)
-        odd = (size >> excess) | int(size & ((1 << excess) - 1) != 0)
         exact = float(odd << excess)
+    except OverflowError:  # finite all the same
+        exact = 1.7976931348623157e308
+    return narrow_number(-exact if number < 0 else exact, form, rounding, flushed=flushed)
+
+
+def round_half(number: float) -> np.float32:
+    """Return one number rounded to nearest in binary16, as a carrier: the hot path of 0-d values."""
+    try:
+        return np.float32(struct.unpack("e", struct.pack("e", number))[0])
     except OverflowError:
-        exact = float("inf")
-    return narrow_number(-exact if number < 0 else exact, form)
+        return np.float32(math.copysign(math.inf, number))
 
 
-def _to_nearest_even(bits: npt.NDArray[np.uint32], work: npt.NDArray[np.uint32], drop: int) -> None:
-    """Clear the last `drop` bits after adding half of their range, one less where the kept part is even."""
-    np.right_shift(bits, np.uint32(drop), out=work)
+def _beside(near: float, number: int, rounding: Rounding) -> float:
+    """Return the float64 that a mode takes for an integer, given the nearest one."""
+    if rounding in ("nearest", "stochastic"):
+        return near
+    over = math.isinf(near)
+    rest = (-1 if near > 0 else 1) if over else (number > int(near)) - (number < int(near))
+    target = {"up": math.inf, "down": -math.inf, "zero": 0.0}[rounding]
+    wanted = -1 if target < near else 1  # the side on which the rounded number may lie
+    return math.nextafter(near, target) if rest and rest == wanted else near
+
+
+def _limits(form: Format, rounding: Rounding) -> tuple[float, float]:
+    """Return the magnitudes that stand for too large a number above and below zero."""
+    top, infinity = form.max_finite, form.infinity
+    return {"zero": (top, top), "up": (infinity, top), "down": (top, infinity)}.get(rounding, (infinity, infinity))
+
+
+def _flat(values: Floats) -> Floats:
+    """Return all values along one axis, a view where memory has no gaps; else a copy in C order, of no base."""
+    if values.flags.c_contiguous:
+        return values.reshape(-1)
+    flat = values.ravel("K")
+    return flat if np.may_share_memory(flat, values) else values.flatten()
+
+
+@cache
+def _figures32(form: Format) -> tuple[Any, ...]:
+    """Return the arguments of the loop over float32 that `form` needs."""
+    if form.emax == 127:
+        drop = 24 - form.precision
+        return np.uint32(drop), np.uint32((1 << (drop - 1)) - 1), np.uint32(0x100000000 - (1 << drop))
+    low, cap, unit = form.min_normal, 2.0 ** (form.emax + 1), 2.0 ** (1 - form.precision)
+    return tuple(map(np.float32, (low, cap, unit * 2.0**23, form.max_finite, form.infinity)))
+
+
+@cache
+def _figures64(form: Format) -> tuple[float, ...]:
+    """Return the figures of every loop over float64: least and greatest power of two, unit, top, infinity."""
+    return form.min_normal, 2.0 ** (form.emax + 1), 2.0 ** (1 - form.precision), form.max_finite, form.infinity
+
+
+def _round_words(values: Floats, form: Format) -> None:
+    """Clear the last bits after adding half of their range, one less where the kept part is even."""
+    bits = values.view(np.uint32)
+    work = words32("work", values.shape, values.size)
+    drop, half, mask = _figures32(form)
+    np.right_shift(bits, drop, out=work)
     np.bitwise_and(work, np.uint32(1), out=work)
-    np.add(work, np.uint32((1 << (drop - 1)) - 1), out=work)
+    np.add(work, half, out=work)
     np.add(bits, work, out=bits)
-    np.bitwise_and(bits, np.uint32(0xFFFFFFFF ^ ((1 << drop) - 1)), out=bits)
+    np.bitwise_and(bits, mask, out=bits)
 
 
-def _subnormals(
-    bits: npt.NDArray[np.uint32], work: npt.NDArray[np.uint32], form: Format
-) -> tuple[npt.NDArray[np.intp], ...] | None:
-    """Return where nonzero magnitudes lie below the smallest normal number, or None where none does."""
-    np.bitwise_and(bits, _MAGNITUDE32, out=work)
-    np.subtract(work, np.uint32(1), out=work)  # zero wraps around to the largest integer
-    least = np.uint32(np.float32(form.min_normal).view(np.uint32)) - np.uint32(1)
-    return np.nonzero(work < least) if work.min() < least else None
+def _round_singles(values: Floats, form: Format) -> None:
+    """Add and subtract a power of two whose last place is the spacing of the values: hardware rounds the sum.
 
-
-def _on_grid(values: Floats, spacing: float, fraction_bits: int) -> Floats:
-    """Round to multiples of `spacing`, ties to even: a sum whose last place is `spacing` does it in hardware.
-
-    `fraction_bits` are those of the array's own type; magnitudes are below 2^fraction_bits x spacing.
+    The power is 2^23 x 1.5 times the spacing, which follows from the exponent and from the smallest normal number.
     """
-    shift = values.dtype.type(spacing * 2.0**fraction_bits)
-    return np.copysign((np.abs(values) + shift) - shift, values)
+    low, cap, factor, top, over = _figures32(form)
+    bits = values.view(np.uint32)
+    work, signs = (words32(place, values.shape, values.size) for place in ("work", "signs"))
+    shift = work.view(np.float32)
+    np.bitwise_and(bits, _EXPONENT32, out=work)
+    np.clip(shift, low, cap, out=shift)
+    np.multiply(shift, np.float32(1.5) * factor, out=shift)
+    np.bitwise_and(bits, _SIGN32, out=signs)
+    np.add(values, shift, out=values)
+    np.subtract(values, shift, out=values)
+    np.bitwise_or(bits, signs, out=bits)
+    if not (values.max() <= top and values.min() >= -top):  # also true of NaN
+        np.copyto(values, np.copysign(over, values), where=np.abs(values) > top)
 
 
-def _overflow(values: Floats, form: Format) -> None:
-    """Turn what rounded beyond the largest finite value into infinities, in place."""
-    np.copyto(values, np.copysign(values.dtype.type(np.inf), values), where=np.abs(values) > form.max_finite)
+def _narrow_compiled(
+    loop: Callable[..., Any], values: Doubles, form: Format, rounding: Rounding, uniforms: Doubles | None
+) -> Floats:
+    """Run a loop over float64; without random numbers the result lies in memory as the argument does."""
+    figures = _figures64(form)
+    if rounding == "stochastic":
+        found: Floats = np.empty(values.shape, np.float32)
+        drawn = np.ascontiguousarray(uniforms).reshape(-1)
+        loop(np.ascontiguousarray(values).reshape(-1), found.reshape(-1), *figures, drawn)
+        return found
+    if not values.flags.forc:
+        values = values.copy("C")
+    found = np.empty_like(values, np.float32)
+    if rounding != "nearest":
+        figures = (*figures, *_limits(form, rounding), float(rounding == "up"), float(rounding == "down"))
+    loop(values.ravel("K"), found.ravel("K"), *figures)
+    return found
+
+
+def _narrow_to_nearest(values: Doubles, form: Format) -> Floats:
+    """Round to nearest through float32, whose last place is made odd where the format could take it for a midpoint.
+
+    A midpoint of the format has a float32 significand that ends in zeros; there alone the second rounding could err.
+    """
+    with np.errstate(over="ignore", under="ignore", invalid="ignore"):
+        single = values.astype(np.float32)
+    single[np.isnan(single)] = np.nan  # of one payload: all ones would round to a zero
+    bits = single.view(np.uint32)
+    tail = bits & np.uint32((1 << (23 - form.precision)) - 1)
+    if not tail.all():
+        places = np.nonzero(np.atleast_1d(tail) == 0)
+        near = np.atleast_1d(single)[places].astype(np.float64)
+        given = np.atleast_1d(values)[places]
+        apart = (near < given) | (near > given)  # neither for NaN
+        if apart.any():
+            chosen = tuple(axis[apart] for axis in places)
+            step = np.where(np.abs(given[apart]) > np.abs(near[apart]), 1, -1).astype(np.int32)
+            np.atleast_1d(bits)[chosen] += step.view(np.uint32)
+    return round_carrier(single, form)
+
+
+def _narrow_in_mode(values: Doubles, form: Format, rounding: Rounding, uniforms: Doubles | None) -> Floats:
+    """Round toward zero on the grid of the value's exponent, then one spacing away from zero where the mode asks."""
+    low, cap, unit, top, infinity = _figures64(form)
+    places = ("size", "spacing", "shift", "rounded")
+    size, spacing, shift, rounded = (words64(place, values.shape, values.size).view(np.float64) for place in places)
+    with np.errstate(all="ignore"):
+        np.abs(values, out=size)
+        np.bitwise_and(size.view(np.uint64), _EXPONENT64, out=spacing.view(np.uint64))
+        np.clip(spacing, low, cap, out=spacing)
+        np.multiply(spacing, unit, out=spacing)
+        np.multiply(spacing, 2.0**52, out=shift)
+        np.add(size, shift, out=rounded)
+        np.subtract(rounded, shift, out=rounded)
+        np.multiply(spacing, rounded > size, out=shift)
+        np.subtract(rounded, shift, out=rounded)
+        if rounding == "stochastic":
+            assert uniforms is not None
+            np.multiply(uniforms, spacing, out=shift)
+            np.subtract(size, rounded, out=size)  # exact
+            np.multiply(spacing, shift < size, out=shift)
+            np.add(rounded, shift, out=rounded)
+        elif rounding != "zero":
+            away = np.asarray(rounded < size)
+            away &= np.signbit(values) == (rounding == "down")
+            np.multiply(spacing, away, out=shift)
+            np.add(rounded, shift, out=rounded)
+        if not (rounded.size == 0 or rounded.max() <= top):  # also true of NaN
+            above, below = _limits(form, rounding)
+            over = np.where(np.isinf(values), infinity, np.where(np.signbit(values), below, above))
+            np.copyto(rounded, over, where=rounded > top)
+            np.copyto(rounded, np.nan, where=np.isnan(values))
+        signs = np.bitwise_and(values.view(np.uint64), _SIGN64, out=shift.view(np.uint64))
+        bits = rounded.view(np.uint64)
+        np.bitwise_and(bits, ~_SIGN64, out=bits)
+        np.bitwise_or(bits, signs, out=bits)
+        return rounded.astype(np.float32)

@@ -74,7 +74,7 @@ def _accumulated(sequence: Callable[..., Any], *, reduces: bool = False, cleaned
                 return once(setting, function, row, given, operation=operation)
         own = _arguments(setting, row, given, carried)
         operands = [own[name] for name in own if name in row.state]
-        if setting.arithmetic.format.native:
+        if setting.arithmetic.native:
             result = _native(setting, row.call(function, own))
         else:
             values = np.asarray(own.pop(first))
@@ -95,8 +95,8 @@ def contracted(
 ) -> Any:
     """Return a product of arrays of the state summed over shared axes; `plainly` is what NumPy does on carriers."""
     own = [carried(operand, setting) for operand in operands]
-    form = setting.arithmetic.format
-    if setting.paths is None and form.native:
+    native = setting.arithmetic.native
+    if setting.paths is None and native:
         return finished(setting, name, "accumulated", own, _native(setting, plainly(*own)))
     stated = plan(*map(np.asarray, own))
     lengths = [stated.length(label) for label in dict.fromkeys(label for part in stated.labels for label in part)]
@@ -104,7 +104,7 @@ def contracted(
     if operation:
         wide = [np.asarray(widened(operand, setting)) for operand in operands]
         return finished(setting, operation, "whole", wide, narrowed(setting, plainly(*wide), f"np.{name}"))
-    result = _native(setting, plainly(*own)) if form.native else contractions.contract(setting.arithmetic, stated)
+    result = _native(setting, plainly(*own)) if native else contractions.contract(setting.arithmetic, stated)
     route: Route = "accumulated" if stated.summed else "rounded"
     return finished(setting, name, route, own, result)
 
@@ -150,7 +150,7 @@ def _factored(sequence: Callable[..., Any]) -> Handler:
     def handler(setting: Setting, function: Callable[..., Any], row: Row, given: dict[str, Any]) -> Any:
         own = _arguments(setting, row, given, carried)
         operands = [own[name] for name in row.placed]
-        if setting.arithmetic.format.native:
+        if setting.arithmetic.native:
             result = _native(setting, row.call(function, own))
         else:
             named = {name: value for name, value in own.items() if name not in row.placed}
@@ -178,7 +178,7 @@ def reduced(setting: Setting, ufunc: np.ufunc, method: str, values: Any, given: 
         if operation:
             wide = widened(values, setting)
             return finished(setting, operation, "whole", [wide], narrowed(setting, plainly(wide, **further), name))
-    if setting.arithmetic.format.native:
+    if setting.arithmetic.native:
         result = _native(setting, plainly(own, **further))
     elif method == "reduce":
         result = folds.sequential(setting.arithmetic, ufunc, own, **{"axis": 0, **further})

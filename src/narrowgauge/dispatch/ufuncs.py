@@ -165,7 +165,7 @@ def _of_numpy(ufunc: np.ufunc) -> bool:
 
 def _divmod(setting: Setting, ufunc: np.ufunc, inputs: Sequence[Any]) -> Any:
     """Two operations, as the observer sees them; in a native format NumPy's own two results."""
-    if not setting.arithmetic.format.native:
+    if not setting.arithmetic.native:
         parts = (np.floor_divide, np.remainder)
         return tuple(setting.operate(part, "rounded", inputs) for part in parts)
     own = [setting.admit(value) for value in inputs]
@@ -183,6 +183,8 @@ def _parted(setting: Setting, ufunc: np.ufunc, inputs: Sequence[Any]) -> Any:
 def _neighbour(setting: Setting, ufunc: np.ufunc, inputs: Sequence[Any]) -> Any:
     """Ask the storage type, which has just the values of the format, for the next one or the distance to it."""
     form = setting.arithmetic.format
+    if form.name == "tf32":
+        raise setting.fault(RefusedError, f"np.{ufunc.__name__} is refused in tf32, which has no type of its own")
     own = [carried(value, setting) for value in inputs]
     if form.native:
         return finished(setting, ufunc.__name__, "exact", own, ufunc(*own))
@@ -194,7 +196,7 @@ def _ldexp(setting: Setting, ufunc: np.ufunc, inputs: Sequence[Any]) -> Any:
     value, exponent = inputs
     if not all_exact(exponent, setting):
         raise setting.fault(RefusedError, "np.ldexp takes integers as its exponents; accepted: x * 2.0**n")
-    native = setting.arithmetic.format.native
+    native = setting.arithmetic.native
     own = (carried if native else widened)(value, setting)
     result = ufunc(own, bare(exponent, setting))
     return finished(setting, "ldexp", "rounded", [own], result if native else narrowed(setting, result, "np.ldexp"))

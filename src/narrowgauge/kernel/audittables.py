@@ -102,6 +102,9 @@ RULES: dict[str, Rule] = {
     "cost.float32": _POSITIVE,
     "cost.float16": _POSITIVE,
     "cost.bfloat16": _POSITIVE,
+    "cost.tf32": _POSITIVE,
+    "cost.e4m3": _POSITIVE,
+    "cost.e5m2": _POSITIVE,
     "cost.draws": _NOT_NEGATIVE,
     "cost.path": _NOT_NEGATIVE,
     "sampling.block": Rule(accepted="a multiple of 1024, at least 1024", low=1024),
@@ -328,6 +331,9 @@ class CostTable(Table, frozen=True, kw_only=True, forbid_unknown_fields=True):
     float32: float | None = None
     float16: float | None = None
     bfloat16: float | None = None
+    tf32: float | None = None
+    e4m3: float | None = None
+    e5m2: float | None = None
     draws: float = 0.0
     path: float = 0.0
 
