@@ -69,7 +69,8 @@ def main(arguments: list[str]) -> None:
 
 def _made_with() -> dict[str, Any]:
     """Return the class of machine and the versions, without the time of day."""
-    found: dict[str, Any] = {key: value for key, value in provenance(0.0).items() if key not in ("finished", "seconds")}
+    of_one_run = ("finished", "seconds", "engine", "resumed_blocks", "workers")
+    found: dict[str, Any] = {key: value for key, value in provenance(0.0, "", (), 0).items() if key not in of_one_run}
     further = {name: metadata.version(name) for name in ("numba", "distributed") if _installed(name)}
     cache = Path("/sys/devices/system/cpu/cpu0/cache/index2/size")
     return {

@@ -22,13 +22,15 @@ from narrowgauge.measure.store import LEDGER, Ledger
 from narrowgauge.measure.workers import Workers
 from narrowgauge.record.canonical import canonical_text
 
-LEVELS, BLOCKS = 3, 16
+LEVELS, BLOCKS = 3, 32
 SLOW = GEOMETRIC.replace("import numpy as np", "import time\nimport numpy as np").replace(
     "    return x", "    time.sleep(0.003)\n    return x"
 )
-# Says how many blocks are there from before, then a dot for each that is added; commits often, to be caught at it.
+# Says how many blocks are there from before, then a dot for each that is added; commits often, to be caught at it. Four
+# blocks after the last dot that is waited for it stands still, so that it cannot be done before it is killed.
 DRIVER = """
 import sys
+import time
 from pathlib import Path
 from narrowgauge.api import run_audit
 from narrowgauge.kernel.auditfile import read_audit_file
@@ -39,11 +41,15 @@ store._TOGETHER = 0.02
 
 class Watcher:
     def planned(self, plan):
+        self.left = plan.kept + int(sys.argv[4]) + 4
         print(plan.kept, flush=True)
     def look(self, *_):
         pass
     def advanced(self, steps):
         print(".", flush=True)
+        self.left -= 1
+        if self.left == 0:
+            time.sleep(600)
 
 file, workers = read_audit_file(Path(sys.argv[1])), Workers(number=int(sys.argv[3]))
 run_audit(file, Path(sys.argv[2]), resume=True, workers=workers, watcher=Watcher())
@@ -52,7 +58,7 @@ needs_signals = pytest.mark.skipif(sys.platform == "win32", reason="signals are 
 
 
 def slow_file(folder: Path) -> AuditFile:
-    """One look of 3 levels of 16 blocks."""
+    """One look of 3 levels of 32 blocks."""
     paths = str(1024 * BLOCKS)
     return file_for(folder, SLOW, sampling={"paths": paths, "most_paths": paths})
 
@@ -66,7 +72,7 @@ def outcome(folder: Path) -> tuple[bytes, bytes]:
 
 def killed(file: AuditFile, out: Path, workers: int, more: int, delay: float) -> int:
     """Run an audit and kill it when so many blocks more are done, and a little later; how many it had from before."""
-    command = [sys.executable, "-c", DRIVER, file.source, str(out), str(workers)]
+    command = [sys.executable, "-c", DRIVER, file.source, str(out), str(workers), str(more)]
     with subprocess.Popen(command, stdout=subprocess.PIPE, text=True) as driver:
         assert driver.stdout is not None
         kept = int(driver.stdout.readline() or 0)

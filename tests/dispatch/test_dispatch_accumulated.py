@@ -11,7 +11,7 @@ import pytest
 from kernel_runs import NARROW, call, module_of, owned, unheld
 from test_dispatch_observer import Log
 
-from narrowgauge.errors import DispatchError
+from narrowgauge.errors import DispatchError, RefusedError
 
 TYPES = {"float16": np.float16, "bfloat16": ml_dtypes.bfloat16}
 
@@ -199,7 +199,6 @@ PATHS = {
     "np.mean(x, axis=0)": ("mean", "accumulated"),
     "np.cumsum(x, axis=1)": ("cumsum", "accumulated"),
     "q @ x": ("matmul", "accumulated"),
-    "np.sum(np.stack([x[0]] * 7), axis=0)": ("sum over paths (several axes have their length, 7)", "whole"),
 }
 
 
@@ -216,6 +215,15 @@ def test_a_reduction_over_paths_stays_in_float64(text, form):
         rounded = [np.asarray(owned(array, setting)._carrier, float) for array in (x, q)]
         plain = eval(text, {"np": np, "x": rounded[0], "q": rounded[1]})
         assert np.array_equal(got, np.asarray(setting.arithmetic.cast(np.asarray(plain)), float))
+
+
+@pytest.mark.parametrize("form", [*NARROW, "float64"])
+def test_a_reduction_that_may_be_over_paths_is_refused(form):
+    """Where two axes are as long as the run has paths nobody can say which of them is theirs."""
+    x = draws(8, 4, 7)
+    with pytest.raises(RefusedError, match="several axes have the length of the paths, 7: whether sum is over paths"):
+        ours("np.sum(np.stack([x[0]] * 7), axis=0)", form, paths=7, x=x)
+    assert ours("np.stack([x[0]] * 7)[0]", form, paths=7, x=x).shape == (7,)
 
 
 def test_a_mean_over_many_paths_does_not_overflow():

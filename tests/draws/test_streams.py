@@ -17,7 +17,7 @@ from hypothesis import strategies as st
 from scipy.stats import chi2, norm
 
 from narrowgauge.draws.normals import exact_normals
-from narrowgauge.draws.streams import Purpose, block_paths, uniforms
+from narrowgauge.draws.streams import Purpose, apart, block_paths, uniforms
 
 Words = npt.NDArray[np.uint64]
 
@@ -121,16 +121,28 @@ def test_a_block_is_the_start_of_a_longer_one() -> None:
 
 
 def test_block_paths_by_brute_force() -> None:
-    """The largest multiple of 1,024, not above `block`, for which steps x factors x paths <= 2^22, at least 1,024."""
+    """The largest multiple of 1,024, not above `block`, for which steps x factors x paths <= 2^22, at least 1,024.
+
+    Where an axis of steps could be as long, of the fine or of the coarse run, 32 less, or 64.
+    """
     for steps, factors, block in itertools.product(
-        [1, 2, 3, 7, 32, 100, 128, 129, 1000, 1024, 2048, 4095, 4096],
+        [1, 2, 3, 7, 32, 100, 128, 129, 1000, 1023, 1024, 2047, 2048, 4095, 4096],
         [1, 2, 3, 5],
         [1024, 2048, 3072, 32768, 33792, 2**20],
     ):
         fitting = [paths for paths in range(1024, block + 1, 1024) if steps * factors * paths <= 2**22]
         size = block_paths(block, steps, factors)
-        assert size == (fitting[-1] if fitting else 1024)
+        lengths = [n + more for n in (steps, steps // 2) for more in (0, 1)]
+        most = fitting[-1] if fitting else 1024
+        assert size == next(paths for paths in range(most, 0, -32) if paths not in lengths)
         assert size % 32 == 0  # the batches of a block are equal
+
+
+def test_a_few_paths_are_no_steps_either() -> None:
+    """Below 1,024 paths their number stays even, for kernels that take them in pairs; one path is left alone."""
+    assert [apart(8, steps, 2) for steps in (4, 7, 8, 16, 100)] == [8, 6, 6, 6, 8]
+    assert [apart(1024, steps, 2) for steps in (1023, 1024, 2048, 512)] == [992, 992, 992, 1024]
+    assert apart(2, 1, 2) == 2
 
 
 def test_streams_of_different_keys_share_no_output() -> None:

@@ -13,6 +13,7 @@ from block_cases import GEOMETRIC, PATHS, runner_for, same
 
 from narrowgauge.arithmetic.arithmetic import arithmetic_named
 from narrowgauge.arithmetic.formats import FORMATS
+from narrowgauge.conduct.observers import Notes
 from narrowgauge.draws.coarsen import coarse_draws, fine_draws
 from narrowgauge.kernel.contract import arranged
 from narrowgauge.measure.block import BlockRunner
@@ -328,10 +329,27 @@ def test_arranged_draws_are_contiguous(layout: str) -> None:
 
 
 def test_paths_of_a_block_follow_from_the_audit_file(tmp_path: Path) -> None:
-    """A block has the paths that fit 2^22 draws of its level, no more than asked for and at least 1,024."""
+    """A block has the paths that fit 2^22 draws of its level, no more than asked for and at least 1,024.
+
+    With 2,048 steps they are 32 fewer, so that the axis of the paths is known by its length.
+    """
     ladder = {"finest": 12, "coarsest_steps": 1}
     runner = runner_for(tmp_path, GEOMETRIC, parameters=RS, ladder=ladder, sampling={"block": 4096})
-    assert [runner.paths(level) for level in (0, 10, 11, 12)] == [4096, 4096, 2048, 1024]
+    assert [runner.paths(level) for level in (0, 10, 11, 12)] == [4096, 4096, 2016, 1024]
     assert runner.draws(0, 0).values.shape == (1, 1, 4096)
     assert runner.draws(2, 0, paths=64).values.shape == (4, 1, 64)
     assert math.isclose(float(runner.draws(2, 0).values.std()), 0.5, rel_tol=0.1)
+
+
+def test_a_sum_over_as_many_steps_as_a_block_has_paths_is_rounded(tmp_path: Path) -> None:
+    """1,024 steps in blocks of 1,024 paths: a sum over the steps stays one, here and in every smaller sample."""
+    runner = runner_for(
+        tmp_path,
+        "import numpy as np\ndef value(dW, h):\n    return np.sum(dW, axis=0)\n",
+        ladder={"coarsest_steps": 1024, "finest": 0},
+    )
+    assert runner.paths(0) == PATHS - 32
+    for paths in (None, 1024, 1026, 8):
+        notes = Notes(["float16"])
+        runner.caller(arithmetic_named("float16"), notes).fine(runner.draws(0, 0, paths=paths), 0)
+        assert [(operation, route) for _, operation, route in notes.operations] == [("sum", "accumulated")]

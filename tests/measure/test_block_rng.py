@@ -92,7 +92,14 @@ PLANS = {
         factors=3, layout=Layout(before=0, period=3, after=0, axes=()), remarks=()
     ),
     "rng.normal(size=(paths, 3)).sum(axis=1)": DrawPlan(factors=3, layout=BY_STEP, remarks=()),
-    "np.concatenate([(z := rng.normal(size=paths // 2)), -z])": DrawPlan(factors=1, layout=BY_STEP, remarks=()),
+    "np.concatenate([(z := rng.normal(size=paths // 2)), -z])": DrawPlan(
+        factors=1,
+        layout=BY_STEP,
+        remarks=(
+            "paths share draws, or take them in parts: for 1024 paths the kernel asks for normal(), size (512,). "
+            "Intervals take paths for independent, which antithetic ones are not",
+        ),
+    ),
 }
 PLANNED = "import numpy as np\ndef value(rng, h, *, steps, paths):\n{}    return x\n"
 NO_CLOSER = "fine and coarse paths draw no closer as the steps get finer"
@@ -185,7 +192,7 @@ def test_a_step_count_beyond_the_ladder(tmp_path: Path) -> None:
     body = "    if steps > 2:\n        raise IndexError(steps)\n" + LOOP.format("rng.normal(size=paths)")
     plan = plan_of(tmp_path, body, finest=1)
     reason = "the kernel does not run with 4 steps, which it is tried with"
-    assert plan == DrawPlan(factors=1, layout=None, remarks=(UNCOUPLED.format(reason),))
+    assert plan == DrawPlan(factors=1, layout=None, remarks=(UNCOUPLED.format(reason),), steady=False)
     with pytest.raises(KernelError, match="level 2, arm plain NumPy: the kernel raised IndexError: 4"):
         plan_of(tmp_path, body)
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from functools import partial
 from pathlib import Path
 
 import pytest
@@ -176,9 +177,18 @@ def test_results_that_are_no_number(tmp_path: Path, body: str, message: str) -> 
 
 def test_an_escape_of_one_path_is_caught(tmp_path: Path) -> None:
     """A plain float that the format lacks is an escape also where it is one path's."""
-    body = "return float(str(dW[0])) * 0.1 if dW[0] > 0 else dW[0]"
-    with pytest.raises(EscapeError):
+    body = "return int(dW[0] * 1e6) / 3.0 if dW[0] > 0 else dW[0]"
+    words = r"kernel.py:3: .* of 1024 paths are \d+ different plain numbers that bfloat16 does not have, .* path \d+"
+    with pytest.raises(EscapeError, match=words):
         runner(tmp_path, body, ARRAY, "dW, h").run(0, 0)
+
+
+@pytest.mark.parametrize("rebate", ["0.1", "np.float64(0.1)", "[0.1, 0.3][0]"])
+def test_a_constant_may_be_a_result(tmp_path: Path, rebate: str) -> None:
+    """A rebate that some paths give is a constant, rounded once, as where it is selected for an array."""
+    one = runner(tmp_path, f"S = 1.0 + dW[0]\nif S < 0.9:\n    return {rebate}\nreturn S", ARRAY, "dW, h")
+    block = runner(tmp_path, "S = 1.0 + dW[0]\nreturn np.where(S < 0.9, 0.1, S)", BLOCKS, "dW, h")
+    assert same(one.run(1, 0), block.run(1, 0))
 
 
 def test_an_array_of_one_is_a_number(tmp_path: Path) -> None:
@@ -196,6 +206,45 @@ def test_requests_that_differ_by_path_are_refused_with_their_line(tmp_path: Path
     )
     with pytest.raises(KernelError, match=r"kernel.py:\d: request \d+ for random numbers is .* where another path has"):
         runner(tmp_path, body, RNG, "rng, h, *, steps").run(2, 0)
+
+
+POLAR = """
+S = 1.0
+for _ in range(steps):
+    while True:
+        u, v = 2.0 * rng.random() - 1.0, 2.0 * rng.random() - 1.0
+        q = u * u + v * v
+        if 0.0 < q < 1.0:
+            break
+    S = S + 0.2 * S * np.sqrt(h) * u * np.sqrt(-2.0 * np.log(q) / q)
+return S
+"""
+
+
+@pytest.mark.parametrize("finest", [0, 2])
+def test_a_path_that_draws_once_more_in_a_format_is_an_error(tmp_path: Path, finest: int) -> None:
+    """By rejection a changed decision shifts the later draws of its path: the format would be blamed for it."""
+    one = runner_for(
+        tmp_path,
+        source("rng, h, *, steps", POLAR.strip()),
+        kernel=RNG,
+        ladder={"coarsest_steps": 16, "finest": finest},
+    )
+    assert one.singly
+    words = (
+        r"arm bfloat16: path \d+ asked \d+ times for random numbers where the reference asked \d+ times, which shifts"
+    )
+    with pytest.raises(KernelError, match=words):
+        list(map(partial(one.run, finest), range(4)))
+
+
+def test_on_one_level_paths_may_stop_early(tmp_path: Path) -> None:
+    """Without a ladder, too, the requests are known to belong to steps: an early exit is none that shifts draws."""
+    single, whole, _ = DRAWN["an early exit"]
+    ladder = {"coarsest_steps": 8, "finest": 0}
+    one = runner_for(tmp_path, source("rng, h, *, steps", single), kernel=RNG, ladder=ladder)
+    block = runner_for(tmp_path, source("rng, h, *, steps, paths", whole), kernel=RNG, ladder=ladder)
+    assert same(one.run(0, 0), block.run(0, 0))
 
 
 def test_a_few_paths_can_be_timed(tmp_path: Path) -> None:

@@ -30,7 +30,7 @@ def test_numbers_of_values():
         "reserve.py:3: 1e-08 and 1e-09 become 0 in float16"
     ]
     assert shown(entry(3, "float16", "subnormal", (2e-5, 2e-5), (3e-5, 3e-5), (4e-5, 4e-5))) == [
-        "reserve.py:3: 2e-05, 3e-05 and 1 further value become subnormal in float16"
+        "reserve.py:3: 2e-05, 3e-05 and 1 further value are subnormal in float16"
     ]
     assert shown(entry(3, "float16", "moved", (6.1033e-5, 2.0**-14))) == [
         "reserve.py:3: 6.1033e-05 becomes 6.104e-05 in float16"

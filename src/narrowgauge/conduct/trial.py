@@ -66,9 +66,8 @@ class _Trial:
         """
         self._remark(self._runner.remarks)
         for level in self._levels:
-            notes = Notes(self.arms)
+            notes = self._reference[level] = Notes(self.arms)  # kept also where the run stops halfway
             self._remark(_identical(self._file, self._runner, self._drawn(level), level, notes))
-            self._reference[level] = notes
         if self._file.ladder.finest not in self._levels:
             self._finest = self._noted_on_finest()
 
@@ -79,7 +78,7 @@ class _Trial:
         """
         notes = Notes([arm])
         draws = self._drawn(level)
-        if isinstance(draws, Tape) and level not in self._reference:
+        if isinstance(draws, Tape) and not draws.closed:
             _plainly_twice(self._file, self._runner, draws, level)  # writes what the arm has to ask for
         try:
             self._runner.caller(arithmetic_named(arm), notes).fine(draws, level)
@@ -114,7 +113,7 @@ class _Trial:
             constants.fill_in(own)
         return TrialEntry(
             identical=identical,
-            reach=reach_entry(file, reference, compared if self._reference else {}, runs, remarks),
+            reach=reach_entry(file, reference, compared if identical else {}, runs, remarks),
             range=range_entry(file, constants, self.arms) if identical else None,
             faults=faults,
         )

@@ -2,7 +2,7 @@
 
 float32 and float64 run NumPy's own function on the carriers; the 16-bit formats run folds.py and contractions.py. A
 reduction over an axis as long as the run has paths is no part of a path's arithmetic: it is computed in float64,
-rounded once, and told the observer as `whole`. Where other axes have that length too it is still taken for one.
+rounded once, and told the observer as `whole`. Where other axes have that length too it cannot be told, and is refused.
 """
 
 from __future__ import annotations
@@ -18,6 +18,7 @@ from narrowgauge.dispatch.contractions import Contraction
 from narrowgauge.dispatch.exact import bare
 from narrowgauge.dispatch.rows import Row, carried, finished, narrowed, widened
 from narrowgauge.dispatch.setting import Route, Setting
+from narrowgauge.errors import RefusedError
 
 __all__ = ["ACCUMULATED", "contracted", "once", "over_paths", "reduced"]
 
@@ -41,11 +42,19 @@ def _arguments(setting: Setting, row: Row, given: Given, convert: Callable[[Any,
 
 
 def over_paths(setting: Setting, name: str, reduced_lengths: Sequence[int], all_lengths: Sequence[int]) -> str:
-    """Return what the observer is told of a reduction over paths, empty for every other one."""
+    """Return what the observer is told of a reduction over paths, empty for every other one.
+
+    Raises RefusedError where an axis of another kind is as long.
+    """
     if setting.paths is None or setting.paths not in reduced_lengths:
         return ""
-    several = list(all_lengths).count(setting.paths) > 1
-    return f"{name} over paths" + (f" (several axes have their length, {setting.paths})" if several else "")
+    if list(all_lengths).count(setting.paths) > 1:
+        raise setting.fault(
+            RefusedError,
+            f"several axes have the length of the paths, {setting.paths}: whether {name} is over paths cannot be told; "
+            "accepted: another sampling.block",
+        )
+    return f"{name} over paths"
 
 
 def _native(setting: Setting, result: Any) -> Any:

@@ -54,6 +54,10 @@ class Columns:
         """Return one path's draws, as the reader of rows does."""
         return self._rows.column(place, request, values, path)
 
+    def ended(self, path: int, count: int) -> None:
+        """Let the reader of rows take note."""
+        self._rows.ended(path, count)
+
     def finish(self) -> None:
-        """Have the reader of rows close its tape."""
-        self._rows.finish()
+        """Tell the reader of rows how often the path asked; it may have stopped before others."""
+        self._rows.ended(self._path, self.position)

@@ -12,10 +12,11 @@ from enum import IntEnum
 import numpy as np
 import numpy.typing as npt
 
-__all__ = ["GRAIN", "Purpose", "UniformStream", "block_paths", "uniforms"]
+__all__ = ["GRAIN", "Purpose", "UniformStream", "apart", "block_paths", "uniforms"]
 
 _MOST_DRAWS = 2**22  # of one block: bounds the memory of a block, whatever the level
 _ONE = np.uint64(0x3FF) << np.uint64(52)  # the bits of 1.0
+_BATCHES = 32
 GRAIN = 1024  # paths; a block is a multiple of it and is cut into 32 batches
 
 
@@ -27,13 +28,28 @@ class Purpose(IntEnum):
     TRIAL = 2
 
 
-def block_paths(block: int, steps: int, factors: int) -> int:
+def block_paths(block: int, steps: int, factors: int, refinement: int = 2) -> int:
     """Return the paths of one block: the largest multiple of 1,024 up to `block` within 2^22 draws, at least 1,024.
 
-    It follows from the audit file alone, never from the machine.
+    A few less where they could be taken for steps, see `apart`. It follows from the audit file alone, never from the
+    machine.
     """
     fitting = _MOST_DRAWS // (steps * factors)
-    return max(GRAIN, min(block, fitting) // GRAIN * GRAIN)
+    return apart(max(GRAIN, min(block, fitting) // GRAIN * GRAIN), steps, refinement)
+
+
+def apart(paths: int, steps: int, refinement: int) -> int:
+    """Return a number of paths, `paths` or a few less, that is no length which the time steps give an array.
+
+    A sum over an axis as long as the paths is taken for one over paths: those of the fine and of the coarse run, with
+    or without the starting point, must be of other lengths. From 1,024 paths on the number stays a multiple of 32.
+    """
+    coarse = steps // refinement
+    taken = {steps, steps + 1, coarse, coarse + 1}
+    less = _BATCHES if paths >= GRAIN else 2
+    while paths in taken and paths > less:
+        paths -= less
+    return paths
 
 
 class UniformStream:

@@ -36,6 +36,7 @@ Drawn = npt.NDArray[Any]
 # A parameter such as rate * dt is taken for a multiple of the step where it is one to eight roundings on either side.
 _SAME_PARAMETER = 16 * 2.0**-53
 _INSIDE = (2.0**-53, 1.0 - 2.0**-53)
+_ALWAYS = "accepted: as many draws of the same kinds whatever the state is, of which some may be left unused"
 
 
 class TapeError(Exception):
@@ -57,6 +58,9 @@ class Reader(Protocol):
     def finish(self) -> None:
         """Raise TapeError where requests are left over."""
 
+    def ended(self, path: int, count: int) -> None:
+        """Take note that one path has asked so often; TapeError where its draws are those of no other run."""
+
     def column(self, place: int, request: Request, values: tuple[Any, ...], path: int) -> Drawn:
         """Return one path's draws of a request that has been drawn, with parameters of its own.
 
@@ -68,8 +72,9 @@ class Tape:
     """The uniforms of a block by request; `steps` and `refinement` are those of the fine run.
 
     The first run to the end writes the requests, all others must repeat them. With `singly` each run asks path by path,
-    and the last axis of every request is that of the paths: then a path may stop early, and another one go on, since
-    each keeps to its own column. A coarse run needs a layout.
+    and the last axis of every request is that of the paths. There a path may stop early, and another one go on, where
+    requests belong to steps: each keeps to its own column. Where they do not, `steady` is false: a path that asks once
+    more in one run than in another gets other draws ever after. A coarse run needs a layout.
     """
 
     def __init__(
@@ -81,9 +86,11 @@ class Tape:
         refinement: int = 1,
         layout: Layout | None = None,
         singly: bool = False,
+        steady: bool = True,
     ) -> None:
         self.paths, self.steps, self.refinement, self.layout = paths, steps, refinement, layout
-        self.singly = singly
+        self.singly, self.steady = singly, steady
+        self._counts: dict[int, int] = {}
         self.requests: list[Request] = []
         self.closed = False
         self._stream = stream
@@ -103,6 +110,15 @@ class Tape:
             self.requests[place] = due.shared_with(request)  # each path has parameters of its own
         elif not due.agrees(request):
             raise TapeError(_other(place, request, due, "another path" if self.singly else "the reference"))
+
+    def ended(self, path: int, count: int) -> None:
+        """Note how often a path asked; TapeError where it was another number in the first run, and that matters."""
+        before = self._counts.setdefault(path, count)
+        if count != before and not self.steady:
+            raise TapeError(
+                f"path {path} asked {count} times for random numbers where the reference asked {before} times, which "
+                f"shifts its draws; {_ALWAYS}"
+            )
 
     def reach(self, count: int, period: int) -> None:
         """Take further requests down, like those a period earlier, which no path was long enough to make."""
@@ -190,11 +206,14 @@ class _Fine:
         self._arm.tape.admit(place, request)
         return self._arm.inverted(request.name, self._arm.tape.uniforms(place)[..., path], values)
 
+    def ended(self, path: int, count: int) -> None:
+        """Close the tape, and hold the path against the first run."""
+        self._arm.tape.closed = True
+        self._arm.tape.ended(path, count)
+
     def finish(self) -> None:
         """Close the tape, or raise TapeError where requests are left over."""
         self._arm.tape.closed = True
-        if self._arm.tape.singly:  # this path may have stopped before others
-            return
         _finished(self.position, len(self._arm.tape.requests), "the reference")
 
 
@@ -223,10 +242,11 @@ class _Coarse:
             self._spread[place] = self._uniforms(places, axis, request.size)
         return self._arm.inverted(request.name, self._spread[place][..., path], values)
 
+    def ended(self, path: int, count: int) -> None:
+        """Leave it: with a layout the requests belong to steps."""
+
     def finish(self) -> None:
         """Raise TapeError where requests are left over."""
-        if self._arm.tape.singly:  # this path may have stopped before others
-            return
         _finished(self.position, self._layout.requests(self._steps), "its fine path")
 
     def _behind(self, position: int, request: Request) -> tuple[list[int], StepAxis | None]:
@@ -309,7 +329,7 @@ def _beyond(count: int, owner: str) -> str:
 
 
 def _other(place: int, request: Request, due: Request, owner: str) -> str:
-    return f"request {place} for random numbers is {request} where {owner} has {due}"
+    return f"request {place} for random numbers is {request} where {owner} has {due}; {_ALWAYS}"
 
 
 def _finished(position: int, expected: int, owner: str) -> None:

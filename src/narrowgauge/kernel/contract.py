@@ -19,7 +19,7 @@ from __future__ import annotations
 
 import inspect
 from collections.abc import Callable, Mapping
-from typing import Any
+from typing import Any, NamedTuple
 
 import numpy as np
 import numpy.typing as npt
@@ -40,6 +40,7 @@ __all__ = ["SINGLE", "arranged", "check_parameters", "evaluate", "evaluate_drawi
 SINGLE = "value"  # the name of a quantity that is returned as a bare array
 _COUNTS = ("steps", "paths")  # what a kernel that draws for itself has to be told
 _ACCEPTED = "accepted: an array of shape (paths,), or a mapping of names to such arrays"
+_MOST_CONSTANTS = 16  # of one quantity, among the plain numbers that single paths return
 _ACCEPTED_ONE = (
     "accepted: a number, or a mapping of names to numbers, since neither layout nor arguments of the kernel name paths"
 )
@@ -179,7 +180,9 @@ def _called_singly(copy: PrivateCopy, call: Callable[[int], Any], paths: int) ->
                 raise KernelError(f"the kernel returned {here} for path {path}, {before} for those before it")
             for name, value in result.items():
                 found.setdefault(name, []).append(_number(value, name, copy))
-    return {name: _column(np.array(values), name, paths, copy) for name, values in found.items()}
+    return {
+        name: _column(np.array(_constants(values, name, copy)), name, paths, copy) for name, values in found.items()
+    }
 
 
 def _named(result: Any) -> Mapping[str, Any]:
@@ -193,13 +196,45 @@ def _named(result: Any) -> Mapping[str, Any]:
     return named
 
 
+def _constants(values: list[Any], name: str, copy: PrivateCopy) -> list[Any]:
+    """Return the results of all paths with those that are plain numbers, such as a rebate, rounded as constants are.
+
+    Raises EscapeError where there are too many of them to be constants.
+    """
+    setting = copy.setting
+    if setting is None:
+        return values
+    plain = {path: value.number for path, value in enumerate(values) if isinstance(value, _Plain)}
+    strange = {path: number for path, number in plain.items() if not setting.arithmetic.holds(np.asarray(number))}
+    different = len(set(strange.values()))
+    if different > _MOST_CONSTANTS:
+        code = getattr(copy.function, "__code__", None)
+        place = f"{code.co_filename}:{code.co_firstlineno}: " if code else ""
+        raise setting.fault(
+            EscapeError,
+            f"{place}results{_label(name)} of {len(values)} paths are {different} different plain numbers that "
+            f"{setting.arithmetic.format.name} does not have, the first is that of path {next(iter(strange))}: "
+            "they did not go through the emulated arithmetic; "
+            f"accepted: values of the state, and at most {_MOST_CONSTANTS} constants",
+        )
+    return [setting.admit(value.number) if isinstance(value, _Plain) else value for value in values]
+
+
+class _Plain(NamedTuple):
+    """One path's result that is no value of the state."""
+
+    number: Any
+
+
 def _number(value: Any, name: str, copy: PrivateCopy) -> Any:
-    """Return the carrier of one path's quantity: a number, or an array of one."""
+    """Return the carrier of one path's quantity, a number or an array of one; marked where it is none of the state."""
     carrier = _carrier(value, name, copy)
     if np.size(carrier) != 1 or np.asarray(carrier).dtype.kind not in "biuf":
         described = f"an array of shape {np.shape(carrier)}" if np.ndim(carrier) else _described(carrier)
         raise KernelError(f"the kernel returned {described}{_label(name)}; {_ACCEPTED_ONE}")
-    return carrier.item() if isinstance(carrier, np.ndarray) else carrier
+    number = carrier.reshape(())[()] if isinstance(carrier, np.ndarray) else carrier
+    plain = copy.setting is not None and not isinstance(value, Wrapped)
+    return _Plain(number) if plain and np.asarray(number).dtype.kind == "f" else number
 
 
 def _accepted(function: Callable[..., object]) -> set[str]:

@@ -15,7 +15,7 @@ from narrowgauge.arithmetic.arithmetic import Arithmetic, arithmetic_named
 from narrowgauge.dispatch.copies import PrivateCopy
 from narrowgauge.dispatch.setting import Observer
 from narrowgauge.draws.coarsen import Draws
-from narrowgauge.draws.streams import GRAIN, Purpose, UniformStream, block_paths, uniforms
+from narrowgauge.draws.streams import GRAIN, Purpose, UniformStream, apart, block_paths, uniforms
 from narrowgauge.draws.tape import Tape
 from narrowgauge.errors import AuditFileError, DispatchError, KernelError
 from narrowgauge.kernel.auditfile import AuditFile
@@ -83,9 +83,9 @@ class BlockRunner:
         """Return the number of paths of one block of a level: the fewest where a kernel is run path by path."""
         file = self._file
         if self.singly:
-            return GRAIN
+            return GRAIN  # no axis is that of the paths
         factors = file.kernel.factors if file.kernel.takes != "rng" else self._drawing().factors
-        return block_paths(file.sampling.block, file.ladder.steps(level), factors)
+        return block_paths(file.sampling.block, file.ladder.steps(level), factors, file.ladder.refinement)
 
     def coupled(self, level: int) -> bool:
         """Whether a level has a coarse path on the same draws."""
@@ -93,14 +93,25 @@ class BlockRunner:
         return coupled and (self._file.kernel.takes != "rng" or self._drawing().layout is not None)
 
     def draws(self, level: int, block: int, purpose: Purpose = Purpose.AUDIT, paths: int | None = None) -> Draws | Tape:
-        """Return the float64 draws of a block, (steps, factors, paths); a tape where the kernel draws for itself."""
-        file, paths = self._file, paths or self.paths(level)
+        """Return the float64 draws of a block, (steps, factors, paths); a tape where the kernel draws for itself.
+
+        Of other numbers of `paths` than a block has there may be a few less.
+        """
+        file = self._file
         seed, takes, refinement = file.sampling.seed, file.kernel.takes, file.ladder.refinement
         steps = file.ladder.steps(level)
+        paths = self.paths(level) if paths is None else apart(paths, steps, refinement)
         if takes == "rng":
             stream, drawing = UniformStream(seed, purpose, level, block), self._drawing()
-            singly, layout = drawing.one_path, drawing.layout
-            return Tape(stream, paths=paths, steps=steps, refinement=refinement, layout=layout, singly=singly)
+            return Tape(
+                stream,
+                paths=paths,
+                steps=steps,
+                refinement=refinement,
+                layout=drawing.layout,
+                singly=drawing.one_path,
+                steady=drawing.steady,
+            )
         values = uniforms(seed, purpose, level, block, (steps, file.kernel.factors, paths))
         return Draws.of(takes, values, file.ladder.step_size(level), refinement)
 

@@ -25,7 +25,7 @@ __all__ = ["DrawPlan", "plan_draws", "worked_out"]
 _PATHS = 1024
 _SINGLE_PATHS = 128  # of a kernel that takes one path a call
 _APART = 0.5  # of the quantity's variance; paths that share nothing differ by twice it
-_ROUNDING = 1e-9  # of it: a difference as small is one of roundings, not of the discretisation
+_CLOSE = 1e-2  # of it: paths that differ by less are close, whatever becomes of the difference
 _SHARE_PATHS = 8192  # its variance is then known to a few per cent; of one path a call an eighth
 _ARM = "plain NumPy"
 
@@ -34,13 +34,14 @@ _ARM = "plain NumPy"
 class DrawPlan:
     """Random numbers per path and step, rounded up, and their layout; None where the levels cannot be coupled.
 
-    `one_path`: the kernel takes one path a call.
+    `one_path`: the kernel takes one path a call. `steady`: the requests follow from the steps, in number and kind.
     """
 
     factors: int
     layout: Layout | None
     remarks: tuple[str, ...]
     one_path: bool = False
+    steady: bool = True
 
 
 def worked_out(file: AuditFile, kernel: KernelSource) -> AuditFile:
@@ -68,7 +69,7 @@ def plan_draws(file: AuditFile, kernel: KernelSource) -> DrawPlan:
     remarks: list[str] = []
     runs: dict[int, list[Request]] = {}
     reason = ""
-    for level in levels if finest else (0,):
+    for level in levels if finest or caller.one_path else (0,):
         try:
             runs[level] = _requests(caller, file, level, paths)
         except KernelError:
@@ -76,11 +77,14 @@ def plan_draws(file: AuditFile, kernel: KernelSource) -> DrawPlan:
                 raise
             reason = f"the kernel does not run with {file.ladder.steps(level)} steps, which it is tried with"
     first = min(runs)
-    grows = _growth(runs[first], _requests(caller, file, first, 2 * paths), first, remarks)
+    grows = _growth(runs[first], _requests(caller, file, first, 2 * paths), paths=paths, level=first, remarks=remarks)
     factors = _factors(runs, file, paths)
+    found: list[Layout] | str = []
+    if len(runs) > 1 or reason:
+        found = reason or grows or layouts({file.ladder.steps(level): requests for level, requests in runs.items()})
+    steady = not isinstance(found, str)
     if not finest:
-        return DrawPlan(factors=factors, layout=None, remarks=tuple(remarks), one_path=caller.one_path)
-    found = reason or grows or layouts({file.ladder.steps(level): requests for level, requests in runs.items()})
+        return DrawPlan(factors=factors, layout=None, remarks=tuple(remarks), one_path=caller.one_path, steady=steady)
     layout = None if isinstance(found, str) else found[0]
     if isinstance(found, str):
         remarks.append(
@@ -98,12 +102,12 @@ def plan_draws(file: AuditFile, kernel: KernelSource) -> DrawPlan:
                 f"the levels are not coupled: in no order of the draws are fine and coarse paths close, {apart}. "
                 "Each level is measured and judged by itself, without differences between levels"
             )
-        elif near > max(far, _ROUNDING):
+        elif near > max(far, _CLOSE):
             remarks.append(
                 f"fine and coarse paths draw no closer as the steps get finer, {apart}: a closer coupling would leave "
                 "less signal for the rounding errors to be small against"
             )
-    return DrawPlan(factors=factors, layout=layout, remarks=tuple(remarks), one_path=caller.one_path)
+    return DrawPlan(factors=factors, layout=layout, remarks=tuple(remarks), one_path=caller.one_path, steady=steady)
 
 
 def _said_of(layout: Layout, usual: Sequence[Layout]) -> list[str]:
@@ -149,11 +153,11 @@ def _tape(file: AuditFile, level: int, paths: int, layout: Layout | None, singly
     return Tape(stream, paths=paths, steps=steps, refinement=refinement, layout=layout, singly=singly)
 
 
-def _growth(few: Sequence[Request], many: Sequence[Request], level: int, remarks: list[str]) -> str:
-    """Compare runs of one and of twice as many paths; return what stands against a layout."""
+def _growth(few: Sequence[Request], many: Sequence[Request], *, paths: int, level: int, remarks: list[str]) -> str:
+    """Compare runs of `paths` and of twice as many; return what stands against a layout."""
     if draws_of(few) == draws_of(many):
         raise KernelError(
-            f"the kernel draws {draws_of(few)} random numbers for {_PATHS} paths and as many for {2 * _PATHS}: its "
+            f"the kernel draws {draws_of(few)} random numbers for {paths} paths and as many for {2 * paths}: its "
             "paths share them and are not independent; accepted: draws of its own for each path",
             level=level,
             arm=_ARM,
@@ -163,6 +167,12 @@ def _growth(few: Sequence[Request], many: Sequence[Request], level: int, remarks
     shared = [one for one, other in zip(few, many, strict=True) if one.size == other.size]
     if shared:
         remarks.append(f"all paths of a block share a draw ({shared[0]}): intervals take paths for independent")
+    fewer = [one for one in few if one not in shared and max(one.size, default=0) < paths]
+    if fewer:
+        remarks.append(
+            f"paths share draws, or take them in parts: for {paths} paths the kernel asks for {fewer[0]}. Intervals "
+            "take paths for independent, which antithetic ones are not"
+        )
     return ""
 
 

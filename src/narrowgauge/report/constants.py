@@ -49,6 +49,8 @@ def _change(entry: ConstantEntry) -> str:
     left = entry.distinct - len(shown)
     if left:
         shown.append(f"{count(left)} further {'values' if left > 1 else 'value'}")
+    if entry.kind == "subnormal" and all(value.became == value.value for value in entry.values):
+        return f"{joined(shown)} {'are' if entry.distinct > 1 else 'is'} subnormal"
     becomes = "become" if entry.distinct > 1 else "becomes"
     whole = {"zero": "0", "infinite": "infinite", "subnormal": "subnormal", "moved": "another number"}[entry.kind]
     if entry.distinct == 1 and entry.kind in ("subnormal", "moved"):

@@ -46,13 +46,17 @@ def reach_summary(reach: ReachEntry) -> str:
     """Return how many operations of the trial run were rounded, and what share of those that round one by one."""
     exact = sum(line.count for line in reach.lines if line.route == "exact")
     others = reach.operations - reach.rounded - exact
-    text = f"{count(reach.operations)} operations on arrays, of which {count(reach.rounded)} were rounded one by one"
-    text += f" and {count(exact)} are exact"
+    text = f"{count(reach.operations)} operations on arrays, of which {_were(reach.rounded)} rounded one by one"
+    text += f" and {count(exact)} {'is' if exact == 1 else 'are'} exact"
     if others:
-        text += f"; {count(others)} were rounded in another way"
+        text += f"; {_were(others)} rounded in another way"
     if reach.share is not None and others:
         text += f", so that {percent(reach.share)} of all that rounds was rounded one by one"
     return f"{text}. {decisions(reach)}"
+
+
+def _were(number: int) -> str:
+    return f"{count(number)} {'was' if number == 1 else 'were'}"
 
 
 def decisions(reach: ReachEntry) -> str:
