@@ -146,14 +146,14 @@ def test_nan_in_both_runs_is_the_same(tmp_path: Path) -> None:
     identity(file_for(tmp_path, source))
 
 
-def test_a_kernel_that_looks_at_the_type_is_caught(tmp_path: Path) -> None:
+def test_a_kernel_that_looks_behind_the_machinery_is_caught(tmp_path: Path) -> None:
     """What the machinery changes is seen in the bits of float64, however small it is."""
     source = """
     import numpy as np
 
     def value(dW, h):
         x = np.zeros(dW.shape[1]) + 1.0
-        x[3:] = x[3:] + (2.0**-52 if type(dW) is np.ndarray else 0.0)
+        x[3:] = x[3:] + (0.0 if hasattr(dW, '_carrier') else 2.0**-52)
         return x
     """
     assert str(refusal(tmp_path, source)) == (
@@ -169,7 +169,7 @@ def test_a_quantity_of_one_run_only(tmp_path: Path) -> None:
     import numpy as np
 
     def value(dW, h):
-        return {"a": dW[0], "plain" if type(dW) is np.ndarray else "other": dW[0]}
+        return {"a": dW[0], "other" if hasattr(dW, "_carrier") else "plain": dW[0]}
     """
     assert str(refusal(tmp_path, source)) == "level 2: the quantity 'plain' is returned in one of two runs only"
 
@@ -190,7 +190,7 @@ def test_a_kernel_that_raises_in_the_machinery_only(tmp_path: Path) -> None:
     import numpy as np
 
     def value(dW, h):
-        if type(dW) is not np.ndarray:
+        if hasattr(dW, '_carrier'):
             raise TypeError("an array, please")
         return dW[0]
     """

@@ -20,7 +20,8 @@ from narrowgauge.errors import AuditFileError, DispatchError, KernelError
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.contract import check_parameters
 from narrowgauge.kernel.loading import KernelSource
-from narrowgauge.measure.arms import REFERENCE
+from narrowgauge.kernel.raised import with_place
+from narrowgauge.measure.arms import PLAIN, REFERENCE
 from narrowgauge.measure.block import BlockRunner
 from narrowgauge.measure.calls import Quantities
 from narrowgauge.record.audit import FaultEntry, TrialEntry
@@ -203,18 +204,9 @@ def _identical(file: AuditFile, runner: BlockRunner, draws: Draws | Tape, level:
     Returns what there is to say about the kernel's random numbers and about the modules that it used.
     """
     plain, repeated = _plainly_twice(file, runner, draws, level)
-    try:
+    with with_place(level, REFERENCE, but=", where plain NumPy does not"):
         caller = runner.caller(arithmetic_named(REFERENCE), notes)
         with_machinery = caller.fine(draws, level)
-    except DispatchError:
-        raise
-    except KernelError as problem:
-        raise KernelError(str(problem), level=level, arm=REFERENCE) from problem.__cause__
-    except KeyboardInterrupt:
-        raise
-    except BaseException as problem:  # plain NumPy did not raise
-        what = f"the kernel raised {type(problem).__name__}: {problem}, where plain NumPy does not"
-        raise KernelError(what, level=level, arm=REFERENCE) from problem
     for name in plain | repeated:
         _same_bits(name, plain, repeated, level, _NOT_REPEATABLE)
     for name in plain | with_machinery:
@@ -229,21 +221,11 @@ def _plainly_twice(
     file: AuditFile, runner: BlockRunner, draws: Draws | Tape, level: int
 ) -> tuple[Quantities, Quantities]:
     """Run the kernel twice under plain NumPy; what it raises is a KernelError with the kernel's own as its cause."""
-    arm = "plain NumPy"
-    try:
+    with with_place(level, PLAIN):
         caller = runner.caller(None)
         check_parameters(caller.copy.function, file)
         first = caller.fine(draws, level)
         return first, caller.fine(draws, level)
-    except KernelError as problem:
-        raise KernelError(str(problem), level=level, arm=arm) from problem.__cause__
-    except (AuditFileError, DispatchError):  # no such function, other parameters, or draws that are not offered
-        raise
-    except KeyboardInterrupt:
-        raise
-    except BaseException as problem:  # the reference: its own traceback is shown
-        what = f"the kernel raised {type(problem).__name__}: {problem}"
-        raise KernelError(what, level=level, arm=arm) from problem
 
 
 def _check_targets(file: AuditFile, quantities: list[str]) -> None:

@@ -1,15 +1,34 @@
-"""What a kernel raised, as the lines of its traceback that are the user's."""
+"""What a kernel raised: as an error with level and arm, and as the lines of its traceback that are the user's."""
 
 from __future__ import annotations
 
 import os
 import traceback
+from collections.abc import Iterator
+from contextlib import contextmanager
 
-from narrowgauge.errors import RaisedElsewhereError
+from narrowgauge.errors import AuditFileError, DispatchError, KernelError, RaisedElsewhereError
 
-__all__ = ["own_traceback"]
+__all__ = ["own_traceback", "with_place"]
 
 _HERE = os.path.join(os.path.dirname(os.path.dirname(os.path.abspath(__file__))), "")
+
+
+@contextmanager
+def with_place(level: int, arm: str, but: str = "") -> Iterator[None]:
+    """Have what a kernel raises inside leave as a KernelError with level and arm, whose cause is the kernel's own.
+
+    `but` ends the message. Wrong audit files, refusals and escapes pass, and so does Ctrl-C.
+    """
+    try:
+        yield
+    except KernelError as problem:
+        raise KernelError(str(problem), level=level, arm=arm) from problem.__cause__
+    except (AuditFileError, DispatchError, KeyboardInterrupt):
+        raise
+    except BaseException as problem:  # whatever it is, it is the kernel's own: its traceback is shown
+        what = f"the kernel raised {type(problem).__name__}: {problem}{but}"
+        raise KernelError(what, level=level, arm=arm) from problem
 
 
 def own_traceback(problem: BaseException) -> str:

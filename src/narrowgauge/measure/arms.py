@@ -6,9 +6,10 @@ from collections.abc import Sequence
 
 from narrowgauge.arithmetic.formats import FORMATS
 
-__all__ = ["REFERENCE", "arms_of", "pairs_of"]
+__all__ = ["PLAIN", "REFERENCE", "arms_of", "pairs_of"]
 
 REFERENCE = "float64"
+PLAIN = "plain NumPy"  # the kernel as it is, without the emulation: no arm
 
 
 def arms_of(names: Sequence[str]) -> tuple[str, ...]:

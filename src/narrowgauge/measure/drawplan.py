@@ -14,10 +14,12 @@ import numpy as np
 from narrowgauge.draws.layout import Layout, Request, draws_of, layouts
 from narrowgauge.draws.streams import Purpose, UniformStream
 from narrowgauge.draws.tape import Tape
-from narrowgauge.errors import DispatchError, KernelError
+from narrowgauge.errors import KernelError
 from narrowgauge.kernel.auditfile import AuditFile, with_draws
 from narrowgauge.kernel.contract import check_parameters
 from narrowgauge.kernel.loading import KernelSource
+from narrowgauge.kernel.raised import with_place
+from narrowgauge.measure.arms import PLAIN
 from narrowgauge.measure.calls import Caller
 
 __all__ = ["DrawPlan", "plan_draws", "worked_out"]
@@ -27,7 +29,6 @@ _SINGLE_PATHS = 128  # of a kernel that takes one path a call
 _APART = 0.5  # of the quantity's variance; paths that share nothing differ by twice it
 _CLOSE = 1e-2  # of it: paths that differ by less are close, whatever becomes of the difference
 _SHARE_PATHS = 8192  # its variance is then known to a few per cent; of one path a call an eighth
-_ARM = "plain NumPy"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -127,22 +128,13 @@ def _said_of(layout: Layout, usual: Sequence[Layout]) -> list[str]:
 def _requests(caller: Caller, file: AuditFile, level: int, paths: int) -> list[Request]:
     """Return what one run in plain NumPy asks for."""
     tape = _tape(file, level, paths, None, caller.one_path)
-    try:
+    with with_place(level, PLAIN):
         caller.fine(tape, level)
-    except KernelError as problem:
-        raise KernelError(str(problem), level=level, arm=_ARM) from problem.__cause__
-    except DispatchError:
-        raise
-    except KeyboardInterrupt:
-        raise
-    except BaseException as problem:  # the kernel's own: its traceback is shown
-        what = f"the kernel raised {type(problem).__name__}: {problem}"
-        raise KernelError(what, level=level, arm=_ARM) from problem
     if not draws_of(tape.requests):
         raise KernelError(
             "the kernel draws no random numbers from rng or numpy.random; accepted: one that does, or another takes",
             level=level,
-            arm=_ARM,
+            arm=PLAIN,
         )
     return tape.requests
 
@@ -160,7 +152,7 @@ def _growth(few: Sequence[Request], many: Sequence[Request], *, paths: int, leve
             f"the kernel draws {draws_of(few)} random numbers for {paths} paths and as many for {2 * paths}: its "
             "paths share them and are not independent; accepted: draws of its own for each path",
             level=level,
-            arm=_ARM,
+            arm=PLAIN,
         )
     if len(few) != len(many):
         return "the number of requests grows with the number of paths"

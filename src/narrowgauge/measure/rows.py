@@ -20,7 +20,8 @@ from narrowgauge.draws.tape import Tape
 from narrowgauge.errors import DispatchError, KernelError
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.loading import KernelSource
-from narrowgauge.measure.arms import REFERENCE
+from narrowgauge.kernel.raised import with_place
+from narrowgauge.measure.arms import PLAIN, REFERENCE
 from narrowgauge.measure.calls import Caller, Quantities
 
 __all__ = ["RowPlan", "plan_rows"]
@@ -29,7 +30,6 @@ __all__ = ["RowPlan", "plan_rows"]
 _LAST_PLACES = 64
 _LEVEL = 2
 _MANY, _FEW = 1024, 32  # paths that are compared in plain NumPy, and in each arm
-_PLAIN = "plain NumPy"
 _BREAK = "\n"
 
 
@@ -117,17 +117,8 @@ class _Trial:
 
     def _plainly(self, draws: Draws | Tape) -> Quantities:
         """Run single paths in plain NumPy; what the kernel raises is a KernelError."""
-        try:
+        with with_place(self._level, PLAIN):
             return self.plain.fine(draws, self._level)
-        except KernelError as problem:
-            raise KernelError(str(problem), level=self._level, arm=_PLAIN) from problem.__cause__
-        except DispatchError:
-            raise
-        except KeyboardInterrupt:
-            raise
-        except BaseException as problem:  # the kernel's own: its traceback is shown
-            what = f"the kernel raised {type(problem).__name__}: {problem}"
-            raise KernelError(what, level=self._level, arm=_PLAIN) from problem
 
     def _differs(self, arithmetic: Arithmetic | None, draws: Draws | Tape, singles: Quantities) -> str:
         """Return what stands against rows in one arithmetic, or in plain NumPy for None; empty if nothing does."""
