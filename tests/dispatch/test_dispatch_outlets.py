@@ -23,7 +23,7 @@ from narrowgauge.errors import DispatchError, EscapeError, RefusedError
 DRAWS = np.array([0.2, 1.4, 0.75])
 FLOAT = (
     "float(), or a store into a plain array, takes a value out of the emulated arithmetic; "
-    "accepted: leave it as it is, and arrays that the kernel's own module makes"
+    "accepted: leave it as it is, arrays that the kernel's own module makes, and f-strings or %s for a text"
 )
 READ_BACK = (
     "a text that was made of the state becomes a number again, which nobody rounds; "

@@ -200,7 +200,7 @@ def test_memory_is_not_handed_out(x, name):
         memoryview(x)
 
 
-@pytest.mark.parametrize("name", ["imag", "strides", "base", "ctypes", "flat", "itemsize", "nbytes"])
+@pytest.mark.parametrize("name", ["imag", "strides", "base", "ctypes", "itemsize", "nbytes"])
 def test_a_property_that_is_not_offered_is_refused_at_once(x, name):
     """What cannot be called later is refused when it is read."""
     with pytest.raises(RefusedError, match=f"^.{name} is not offered by this version on a value of the state$"):

@@ -76,15 +76,6 @@ def test_a_spelling_in_a_module_that_is_not_copied_is_caught(tmp_path, monkeypat
     assert escaped >= 7  # the others return what NumPy's protocols had rounded
 
 
-def test_a_generator_made_at_import_is_refused(tmp_path):
-    """In this version random numbers come with the draws, wherever a generator was made."""
-    written(
-        tmp_path, {"helper.py": "import numpy as np\nRNG = np.random.default_rng(3)\n", "kernel.py": "import helper"}
-    )
-    with pytest.raises(RefusedError, match=r"helper\.py:2: numpy\.random\.default_rng is not offered by this version"):
-        copied(tmp_path, "float16", ["helper"])
-
-
 @pytest.mark.parametrize("form", ["float64", "float16", "bfloat16", "float32"])
 def test_a_package_lists_all_of_it(tmp_path, form):
     """Nested packages, relative and star imports, imports inside functions and circles get the same copies."""

@@ -18,11 +18,16 @@ class Escape(NamedTuple):
 
 FLOAT = (
     "float(), or a store into a plain array, takes a value out of the emulated arithmetic; "
-    "accepted: leave it as it is, and arrays that the kernel's own module makes"
+    "accepted: leave it as it is, arrays that the kernel's own module makes, and f-strings or %s for a text"
 )
 ARRAY = (
     "a function or a plain array that does not know the emulated arithmetic asked for plain numbers; "
-    "accepted: NumPy functions called, and arrays made, in the kernel's own module"
+    "accepted: NumPy functions called, and arrays made, in the kernel's own module, np.array(values) for a list "
+    "of the state, a list for constants, and a @ x for a.dot(x) of a plain array a"
+)
+READ_BACK = (
+    "a text that was made of the state becomes a number again, which nobody rounds; "
+    "accepted: np.round for a number of digits"
 )
 NO_DRAWS = (
     "is not offered by this version: the kernel takes its random numbers as its first argument, "
@@ -81,13 +86,11 @@ ESCAPES = {
     "a foreign module keeps one value": Escape("tools.stored(x)", EscapeError, FLOAT),
     "float()": Escape("return np.full(48, float(x[0]))", EscapeError, FLOAT),
     "float() in a foreign loop": Escape("return np.full(48, tools.looped(x))", EscapeError, FLOAT),
-    "a format of text": Escape("return np.full(48, float('%.17g' % x[0]))", EscapeError, FLOAT),
+    "a format of text": Escape("return np.full(48, float('%.17g' % x[0]))", EscapeError, READ_BACK),
     "__array__ by foreign code": Escape("return tools.asarray(x)", EscapeError, ARRAY),
     "a list made an array by foreign code": Escape("return tools.listed(x)", EscapeError, ARRAY),
     "iteration by a compiled function": Escape("return np.full(48, tools.iterated(x))", EscapeError, FLOAT),
-    "tolist by foreign code": Escape(
-        "return tools.tolist(x)", RefusedError, ".tolist is not offered by this version on a value of the state"
-    ),
+    "tolist, then a plain array by foreign code": Escape("return tools.listed(x.tolist())", EscapeError, ARRAY),
     "scipy outside stats and special": Escape(
         "from scipy.ndimage import gaussian_filter1d as f; return f(x, 1.0)", EscapeError, ARRAY
     ),
@@ -95,7 +98,7 @@ ESCAPES = {
     "pandas": Escape("import pandas as pd; return pd.DataFrame({'x': x})['x'].to_numpy()", EscapeError, ARRAY),
     "Python's random": Escape("import random; x = x + random.gauss(0, 1)", RefusedError, f"random.gauss {NO_DRAWS}"),
     "a generator of Python's": Escape(
-        "from random import Random; Random(3)", RefusedError, f"random.Random {NO_DRAWS}"
+        "from random import Random; Random(3).gauss(0, 1)", RefusedError, f"Random.gauss {NO_DRAWS}"
     ),
     "a store of plain floats": Escape(
         "x[:] = tools.noise(48)",
@@ -131,13 +134,16 @@ ESCAPES = {
     "a pointer": Escape(
         "return tools.pointer(x)", RefusedError, ".ctypes is not offered by this version on a value of the state"
     ),
-    "math of a foreign module": Escape("import cmath; return cmath.exp(x[0]).real", EscapeError, FLOAT),
-    "statistics": Escape("import statistics; return statistics.fmean(x)", EscapeError, FLOAT),
+    "complex functions": Escape(
+        "import cmath; return cmath.exp(x[0]).real",
+        RefusedError,
+        "cmath.exp of the state gives complex numbers, which no format holds; accepted: a kernel of real numbers",
+    ),
     "array": Escape("import array; return array.array('d', x)", EscapeError, FLOAT),
     "a ratio": Escape(
         "import fractions; return fractions.Fraction(x[0])",
-        RefusedError,
-        ".as_integer_ratio is not offered by this version on a value of the state",
+        EscapeError,
+        "fractions.Fraction takes a value out of the emulated arithmetic; accepted: leave it as it is",
     ),
     "a decimal number": Escape(
         "import decimal; return decimal.Decimal(x[0])",
@@ -161,12 +167,7 @@ ESCAPES = {
         RefusedError,
         "bytes() is not offered by this version on a value of the state",
     ),
-    "text and back": Escape(
-        "return np.full(48, float(f'{x[0]:.6f}'))",
-        EscapeError,
-        "a text that was made of the state becomes a number again, which nobody rounds; "
-        "accepted: np.round for a number of digits",
-    ),
+    "text and back": Escape("return np.full(48, float(f'{x[0]:.6f}'))", EscapeError, READ_BACK),
     "hexadecimal digits": Escape(
         "return x[0].hex()", RefusedError, ".hex is not offered by this version on a value of the state"
     ),

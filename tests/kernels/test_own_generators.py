@@ -75,4 +75,4 @@ def test_listed_they_draw_from_the_tape_or_are_refused(folder: Path, takes: str)
     tried = try_out(audit_file_from({"kernel": kernel, "ladder": {"horizon": 1.0, "finest": 1}}))
     assert (tried.faults == []) == (takes == "rng")
     if takes != "rng":
-        assert "own_draws.py:2: numpy.random.default_rng is not offered by this version" in tried.faults[0].message
+        assert "own_draws.py:2: Generator.normal is not offered by this version" in tried.faults[0].message

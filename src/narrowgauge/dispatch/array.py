@@ -18,7 +18,7 @@ from narrowgauge.dispatch.scalar import Scalar, State, plain_item, refuse_attrib
 from narrowgauge.dispatch.setting import Setting, Wrapped, holds
 from narrowgauge.errors import RefusedError
 
-__all__ = ["Array", "as_state", "carrier_of", "stored", "wrap"]
+__all__ = ["Array", "Constant", "Flat", "as_state", "carrier_of", "changing", "constant", "stored", "wrap"]
 
 
 def _in_place(ufunc: np.ufunc, call: Callable[..., Any]) -> Callable[[Any, Any], Any]:
@@ -33,9 +33,12 @@ def _in_place(ufunc: np.ufunc, call: Callable[..., Any]) -> Callable[[Any, Any],
 
 
 class Array(State):
-    """An array of values of the state, in a float32 or float64 carrier of the same shape and strides."""
+    """An array of values of the state, in a float32 or float64 carrier of the same shape and strides.
 
-    __slots__ = ()
+    `_plain` is there in a Constant only; the slot is here so that a constant that is written to can become an array.
+    """
+
+    __slots__ = ("_plain",)
 
     # isinstance(x, np.ndarray) must decide as it does in plain code
     __class__ = np.ndarray  # type: ignore[assignment]
@@ -154,6 +157,20 @@ class Array(State):
         """Partition in place."""
         self._carrier.partition(bare(kth, self._setting), axis, kind)
 
+    def tolist(self) -> Any:
+        """Return nested lists of 0-d values, each held as plain code would hold it; one of no axes as such a value."""
+        return _listed(self._carrier, self._setting)
+
+    @property
+    def flat(self) -> Flat:
+        """The values in C order, to be read and written one by one."""
+        return Flat(self)
+
+    @flat.setter
+    def flat(self, value: Any) -> None:
+        changing(self)
+        self._carrier.flat = stored(value, self._setting)
+
     def __getattr__(self, name: str) -> Any:
         return refuse_attribute(self, name, np.ndarray)
 
@@ -166,6 +183,110 @@ class Array(State):
         if holds(key, State):
             raise self._setting.fault(RefusedError, "a value of the state as an index; accepted: integers, booleans")
         return bare(key, self._setting)
+
+
+class Flat:
+    """What `.flat` of an array is: its values in C order, whatever its layout, in its own memory."""
+
+    __slots__ = ("base",)
+
+    __class__ = np.flatiter  # type: ignore[assignment]
+
+    def __init__(self, base: Array) -> None:
+        changing(base)
+        self.base = base
+
+    def __len__(self) -> int:
+        return self.base.size
+
+    def __iter__(self) -> Iterator[Any]:
+        return map(self.base._setting.wrap, self.base._carrier.flat)
+
+    def __getitem__(self, key: Any) -> Any:
+        return self.base._setting.wrap(self.base._carrier.flat[self.base._key(key)])
+
+    def __setitem__(self, key: Any, value: Any) -> None:
+        self.base._carrier.flat[self.base._key(key)] = stored(value, self.base._setting)
+
+    def __array__(self, dtype: Any = None, copy: bool | None = None) -> Any:
+        return self.copy().__array__(dtype, copy)
+
+    def copy(self) -> Array:
+        """Return the values as an array of one axis."""
+        return self.base.flatten()
+
+
+def _listed(carrier: Any, setting: Setting) -> Any:
+    if carrier.ndim == 0:
+        return wrap(plain_item(carrier[()]), setting)
+    if carrier.ndim > 1:
+        return [_listed(row, setting) for row in carrier]
+    return [Scalar(plain_item(value), setting) for value in carrier]
+
+
+class Constant(Array):
+    """An array that was made of plain numbers alone, and knows them until it, or a view of it, can have been changed.
+
+    What does not know the emulation (an interpolation of SciPy's) gets the plain numbers: they are constants, as if the
+    kernel had handed them over without making an array. In operations it is an array like any other. Whatever writes,
+    or gives a view, makes it one for good.
+    """
+
+    __slots__ = ()
+
+    def __init__(self, carrier: Any, setting: Setting, plain: Any = None) -> None:
+        """Take the numbers, float64, that the carrier holds rounded: an array that nobody else writes to, or one."""
+        self._carrier, self._setting, self._plain = carrier, setting, plain
+
+    def __array__(self, dtype: Any = None, copy: bool | None = None) -> Any:
+        plain = np.empty_like(self._carrier, np.float64)
+        plain[...] = np.nan if self._plain is None else self._plain  # unpickled: the numbers were not written along
+        if not np.array_equal(self._setting.arithmetic.cast(plain), self._carrier, equal_nan=True):
+            return super().__array__(dtype, copy)
+        return plain if dtype is None else plain.astype(dtype)
+
+    def __getitem__(self, key: Any) -> Any:
+        found = super().__getitem__(key)
+        if isinstance(found, Array) and found._carrier.base is not None:
+            changing(self)
+        return found
+
+    def __iter__(self) -> Iterator[Any]:
+        if self.ndim > 1:
+            changing(self)
+        return Array.__iter__(self)
+
+    def copy(self, order: Any = "C") -> Array:
+        """Return a copy that knows the numbers, too."""
+        return Constant(self._carrier.copy(order), self._setting, self._plain)
+
+
+def _changed(name: str) -> Any:
+    """Return a method or property of the array for a constant: it makes an array of it first."""
+    method: Any = vars(Array)[name]
+    call: Callable[..., Any] = getattr(method, "fget", method)
+
+    def changed(self: Array, *arguments: Any, **keywords: Any) -> Any:
+        changing(self)
+        return call(self, *arguments, **keywords)
+
+    return property(changed) if isinstance(method, property) else changed
+
+
+for _name in (
+    "__iadd__", "__isub__", "__imul__", "__itruediv__", "__ifloordiv__", "__imod__", "__ipow__", "__setitem__",
+    "T", "flags", "partition", "reshape", "sort", "transpose",
+):  # fmt: skip
+    setattr(Constant, _name, _changed(_name))
+
+_KIND: Any = vars(object)["__class__"]  # the arrays' own __class__ is what isinstance() sees
+
+
+def changing(value: Any) -> None:
+    """Make an array like any other of a constant that is about to be written to, or to be seen through a view."""
+    if type(value) is Constant:
+        del value._plain
+        _KIND.__set__(value, Array)
 
 
 def wrap(result: Any, setting: Setting) -> Any:
@@ -193,8 +314,17 @@ def as_state(value: Any, setting: Setting | None) -> Any:
     """
     if setting is None or not isinstance(value, np.ndarray) or isinstance(value, Wrapped) or value.dtype.kind != "f":
         return value
+    return constant(value, setting)
+
+
+def constant(value: np.ndarray[Any, Any], setting: Setting, *, kept: bool = False) -> Constant:
+    """Return a plain float array as constants of the state, in memory of its own, rounded once.
+
+    `kept`: nobody else has the array, so that it need not be copied.
+    """
     carrier = setting.admit(value)
-    return Array(value.copy("K") if carrier is value else carrier, setting)
+    own = carrier.copy("K") if carrier is value else carrier
+    return Constant(own, setting, value if kept else value.astype(np.float64))
 
 
 def carrier_of(value: Any, setting: Setting) -> Any:

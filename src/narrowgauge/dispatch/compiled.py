@@ -8,7 +8,6 @@ state.
 from __future__ import annotations
 
 import builtins
-import importlib
 import sys
 from collections.abc import Callable, Sequence
 from types import FunctionType, ModuleType
@@ -64,12 +63,15 @@ class _Guarded:
         return getattr(self._plain, name)
 
 
-def numba_namespace(numpy: ModuleType | None, note: Callable[[str], None]) -> ModuleType:
+def numba_namespace(
+    numpy: ModuleType | None, note: Callable[[str], None], imported: Callable[[str], ModuleType]
+) -> ModuleType:
     """Return a stand-in for `numba` that leaves functions as they are; `note` is told of each one.
 
-    `numpy` is the stand-in that the copies meet, or None for NumPy itself. Raises ImportError without numba.
+    `numpy` is the stand-in that the copies meet, or None for NumPy itself; `imported` imports a module for real.
+    Raises ImportError without numba.
     """
-    plain = importlib.import_module("numba")
+    plain = imported("numba")
     make: Any = np if numpy is None else numpy
 
     def told(function: Any) -> Any:
@@ -96,7 +98,7 @@ def numba_namespace(numpy: ModuleType | None, note: Callable[[str], None]) -> Mo
         return first if isinstance(first, type) else lambda cls: cls
 
     def experimental() -> ModuleType:
-        return Namespace(importlib.import_module("numba.experimental"), {"jitclass": jitclass})
+        return Namespace(imported("numba.experimental"), {"jitclass": jitclass})
 
     names = {"jit": jit, "njit": jit, "prange": range, "vectorize": vectorize, "guvectorize": guvectorize}
     return Namespace(plain, names, {"experimental": experimental})

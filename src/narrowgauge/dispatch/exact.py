@@ -13,6 +13,7 @@ from __future__ import annotations
 
 import dis
 import operator
+import sys
 from collections.abc import Callable, Iterator, Sequence
 from typing import Any
 
@@ -20,17 +21,21 @@ import numpy as np
 
 from narrowgauge.dispatch.routes import ROUTES
 from narrowgauge.dispatch.setting import Number, Setting, Wrapped, holds
+from narrowgauge.dispatch.texts import written_down
 from narrowgauge.errors import EscapeError, RefusedError
 
-__all__ = ["PICKLED", "Exact", "as_number", "bare", "compute", "is_exact", "plain_copy", "settled", "taken_out"]
+__all__ = [
+    "FLOAT", "PICKLED", "Exact", "as_number", "bare", "compute", "is_exact", "plain_copy", "settled", "taken_out",
+]  # fmt: skip
 
 _STORE = dis.opmap["STORE_SUBSCR"]
 _SHAPE = frozenset({"dtype", "flags", "itemsize", "nbytes", "ndim", "shape", "size", "strides"})
 _BY_FUNCTION = frozenset({"dot", "mean", "std", "var"})  # methods that may give numbers
+_WITH_DTYPE = frozenset({"cumprod", "cumsum", "prod", "sum"})  # and those that do where they are asked to
 _SEQUENCES = (list, tuple, str, bytes)
-_FLOAT = (
+FLOAT = (
     "float(), or a store into a plain array, takes a value out of the emulated arithmetic; "
-    "accepted: leave it as it is, and arrays that the kernel's own module makes"
+    "accepted: leave it as it is, arrays that the kernel's own module makes, and f-strings or %s for a text"
 )
 _ARRAY = (
     "a plain array, or a function that does not know the emulated arithmetic, asked for integers or booleans of the "
@@ -148,7 +153,8 @@ class Exact(Wrapped):
         return integer
 
     def __float__(self) -> float:
-        self._setting.escape(_FLOAT)
+        if not written_down(self._setting, sys._getframe(1)):
+            self._setting.escape(FLOAT)
         return float(self._carrier)
 
     def __array__(self, dtype: Any = None, copy: bool | None = None) -> Any:
@@ -211,7 +217,7 @@ class Exact(Wrapped):
             return settled(found, f".{name}", self._setting)
 
         def method(*arguments: Any, **keywords: Any) -> Any:
-            if name in _BY_FUNCTION:
+            if name in _BY_FUNCTION or (name in _WITH_DTYPE and (len(arguments) > 1 or "dtype" in keywords)):
                 return self._setting.function(self._setting, getattr(np, name), (self, *arguments), keywords)
             given = (*arguments, *keywords.values())
             result = found(*bare(arguments, self._setting), **bare(keywords, self._setting))
@@ -294,6 +300,8 @@ def taken_out(carrier: Any, setting: Setting) -> int:
     Raises EscapeError where it is stored into a plain array, which would be lost from sight.
     """
     integer = int(carrier)
+    if written_down(setting, sys._getframe(2)):
+        return integer
     frame = setting.frame()
     if frame is not None and frame.f_code.co_code[frame.f_lasti] == _STORE:  # no list or dictionary calls int()
         setting.escape(_STORED)

@@ -14,6 +14,7 @@ from typing import Any
 
 import numpy as np
 
+from narrowgauge.dispatch import mathematics
 from narrowgauge.dispatch.array import Array
 from narrowgauge.dispatch.namespaces import Exchanging, scipy_parts
 from narrowgauge.dispatch.scalar import State
@@ -43,7 +44,7 @@ def scipy_namespace(setting: Setting, imported: Callable[[str], ModuleType]) -> 
 
 
 def exchanged(value: Any, setting: Setting) -> Any:
-    """Return the stand-in for a function or distribution of scipy.special or scipy.stats, or the value itself."""
+    """Return the stand-in for a function or distribution of SciPy or of Python's statistics, or the value itself."""
     for module in _MODULES:
         name = getattr(value, "__name__", None) or getattr(value, "name", None)
         plain = sys.modules.get(module)
@@ -53,7 +54,7 @@ def exchanged(value: Any, setting: Setting) -> Any:
             )
     if type(value).__module__.startswith("scipy.stats.") and is_distribution(value):
         return _Distribution(value, "scipy.stats distribution", setting)
-    return value
+    return mathematics.exchanged(value, setting)
 
 
 def _special(name: str, value: Any, setting: Setting) -> Any:

@@ -13,13 +13,13 @@ from typing import Any
 
 import numpy as np
 
-from narrowgauge.dispatch.array import Array, carrier_of, stored, wrap
+from narrowgauge.dispatch.array import Array, Constant, carrier_of, changing, stored, wrap
 from narrowgauge.dispatch.exact import Exact, bare, is_exact, settled
 from narrowgauge.dispatch.reductions import ACCUMULATED, once
 from narrowgauge.dispatch.rows import Row, all_exact, bound, carried, delivered, finished, narrowed, unwrapped, widened
 from narrowgauge.dispatch.scalar import State
 from narrowgauge.dispatch.setting import Number, Setting, Wrapped, holds
-from narrowgauge.dispatch.tables import ABOUT, ROWS, WRITING
+from narrowgauge.dispatch.tables import ABOUT, READING, ROWS, WRITING
 from narrowgauge.errors import EscapeError, RefusedError
 
 __all__ = ["call_function", "row_for"]
@@ -53,6 +53,10 @@ def call_function(
         raise setting.fault(RefusedError, f"{row.shown} is refused: {row.reason}")
     given = bound(setting, row, arguments, keywords)
     out = given.pop("out", None)
+    if out is not None or (row.route == "exact" and row.name not in READING):
+        for value in (*arguments, *keywords.values()):
+            if type(value) is Constant:
+                changing(value)
     if out is not None and not isinstance(out[0] if isinstance(out, tuple) else out, Wrapped):
         raise setting.fault(EscapeError, f"out= of {row.shown} is a plain array; accepted: an array of the state")
     handler = _HANDLERS.get(row.name) or ACCUMULATED.get(row.name)
@@ -118,7 +122,10 @@ def _moved(setting: Setting, function: Callable[..., Any], row: Row, given: dict
         name: carried(value, setting) if name in row.state or name == row.variadic else bare(value, setting)
         for name, value in given.items()
     }
-    return wrap(row.call(function, own), setting)
+    result = row.call(function, own)
+    if isinstance(result, np.ndarray) and result.dtype == np.float64:  # of a list without values: np.append([], x)
+        result = result.astype(setting.arithmetic.format.carrier, copy=False)
+    return wrap(result, setting)
 
 
 def _about(setting: Setting, function: Callable[..., Any], row: Row, given: dict[str, Any]) -> Any:

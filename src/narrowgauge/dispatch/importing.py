@@ -7,12 +7,10 @@ Neither sys.modules nor sys.path learns of a copy: what looks itself up there ca
 from __future__ import annotations
 
 import builtins
-import importlib.util
 import sys
 import sysconfig
 import threading
 from collections.abc import Callable, Iterable, Mapping
-from importlib.machinery import ModuleSpec
 from pathlib import Path
 from types import ModuleType
 from typing import Any
@@ -21,8 +19,16 @@ import numpy as np
 
 from narrowgauge.dispatch.compiled import exchanged_module, numba_namespace
 from narrowgauge.dispatch.feed import Feed
+from narrowgauge.dispatch.fixeddraws import FixedDraws
 from narrowgauge.dispatch.foreign import scipy_namespace
-from narrowgauge.dispatch.modules import STOOD_IN, Found, Sources
+from narrowgauge.dispatch.kinds import TYPE
+from narrowgauge.dispatch.mathematics import (
+    cmath_namespace,
+    fractions_namespace,
+    math_namespace,
+    statistics_namespace,
+)
+from narrowgauge.dispatch.modules import STOOD_IN, Found, Sources, absolute_name, listed_name, new_module
 from narrowgauge.dispatch.namespaces import Namespace, importlib_namespace, sys_namespace, typing_namespace
 from narrowgauge.dispatch.outlets import decimal_namespace, json_namespace, pickle_namespace
 from narrowgauge.dispatch.randoms import random_namespace
@@ -30,7 +36,6 @@ from narrowgauge.dispatch.setting import Setting
 from narrowgauge.dispatch.standin import (
     builtins_namespace,
     dataclasses_namespace,
-    math_namespace,
     numpy_namespace,
     refusing_namespace,
 )
@@ -50,7 +55,8 @@ class Copies:
     With `draws` numpy.random is exchanged in either case, and draws from there. `shared` and `compiled` are what was
     met and not copied as it is: modules imported for real, and functions whose Python original runs in place of the
     compiled one. `refused` is the first module that cannot be copied, with the reason; `failed` the module whose
-    execution raised last, with the exception.
+    execution raised last, with the exception. `handed` is the module of a function that was handed over: it is copied
+    without its module, so that nothing may import that.
     """
 
     def __init__(self, setting: Setting | None, sources: Sources, draws: Feed | None = None) -> None:
@@ -60,14 +66,19 @@ class Copies:
         self.modules: dict[str, ModuleType] = {}
         self.shared: set[str] = set()
         self.compiled: set[str] = set()
+        self.handed = ""
         self.refused: tuple[str, str] | None = None
         self.failed: tuple[str, BaseException] | None = None
         self._path = list(sys.path)
         self._real: set[str] = set()
         self._standins: dict[str, Any] = {}
+        self._fixed = FixedDraws(setting, lambda: self._under_way > 0)
+        self._under_way = 0  # modules that are being executed
         self._makers = self._makers_of_standins()
         known = None if setting is None else builtins_namespace(setting)
         self._chosen = {} if known is None else {name: getattr(known, name) for name in ("max", "min")}
+        if setting is not None or draws is not None:  # else nothing stands in for another value
+            self._chosen["type"] = TYPE
 
     def load(self, name: str) -> Any:
         """Return the private copy of a module, executed at the first call, or a shared module for real.
@@ -124,7 +135,7 @@ class Copies:
         ) -> Any:
             if name == "dataclasses" and level == 0:
                 return dataclasses_namespace(names)
-            full = _absolute(name, names if globals is None else globals, level)
+            full = absolute_name(name, names if globals is None else globals, level)
             return self._handed("." * level + name, full, tuple(fromlist or ()), level)
 
         return hand_out
@@ -155,27 +166,36 @@ class Copies:
         makers: dict[str, Callable[[], Any]] = {
             "builtins": lambda: Namespace(builtins, self.builtins({})),
             "importlib": lambda: importlib_namespace(self._named, self._is_private),
-            "numba": lambda: numba_namespace(self.stand_in("numpy"), self.compiled.add),
+            "numba": lambda: numba_namespace(self.stand_in("numpy"), self.compiled.add, self._for_real),
             "pickle": lambda: pickle_namespace(self.setting, self.counterpart, self.load),
             "sys": lambda: sys_namespace(self._path, self._looked_up, self._changing),
             "typing": lambda: typing_namespace(lambda name: getattr(self.modules.get(name), "__dict__", None)),
         }
         setting, draws = self.setting, self.draws
+        makers["random"] = self._fixed.python
+        if draws is None:
+            makers["numpy"] = self._fixed.numpy
         if setting is None and draws is not None:  # plain NumPy, on the tape that the other runs draw from
             makers["numpy"] = lambda: Namespace(np, {"random": random_namespace(draws)})
             makers["scipy"] = lambda: plain_scipy(draws, self._for_real)
         if setting is not None:
+            makers["cmath"] = lambda: cmath_namespace(setting)
             makers["decimal"] = lambda: decimal_namespace(setting)
+            makers["fractions"] = lambda: fractions_namespace(setting)
             makers["json"] = lambda: json_namespace(setting)
             makers["math"] = lambda: math_namespace(setting)
-            makers["numpy"] = lambda: numpy_namespace(setting)
             makers["scipy"] = lambda: scipy_namespace(setting, self._for_real)
-            makers["random"] = lambda: refusing_namespace("random", setting)
+            if draws is not None:
+                makers["numpy"] = lambda: numpy_namespace(setting)
+            makers["statistics"] = lambda: statistics_namespace(setting)
             makers["secrets"] = lambda: refusing_namespace("secrets", setting)
         return makers
 
     def _handed(self, spelled: str, name: str, fromlist: tuple[str, ...], level: int) -> Any:
         """Return what an import statement gets: the top-level module, or with `fromlist` the named one."""
+        if name and name == self.handed and not self.sources.copies(name) and not self.sources.shares(name):
+            what = f"the kernel imports {name}, the module of the function that was handed over without it"
+            raise self._fault(f"{what}. Accepted: {listed_name(name)} in kernel.modules, which executes it anew")
         if not name:  # from . import x, in a module of the kernel's folder
             holder = ModuleType("")
             for item in fromlist:
@@ -280,7 +300,7 @@ class Copies:
 
     def _made(self, found: Found, above: Any) -> ModuleType:
         """Make the module and execute its source, if it has one, with the table of modules watched."""
-        module = _new_module(found)
+        module = new_module(found)
         last = found.name.rpartition(".")[2]
         had = None if above is None else vars(above).get(last)
         self.modules[found.name] = module
@@ -294,7 +314,11 @@ class Copies:
                 if self.setting is not None:
                     self.setting.files.add(found.file)
                 module.__dict__["__builtins__"] = self.builtins(module.__dict__)
-                exec(code, module.__dict__)
+                self._under_way += 1
+                try:
+                    exec(code, module.__dict__)
+                finally:
+                    self._under_way -= 1
         except BaseException as problem:  # an interrupt, too, must not leave half a module to be found; raised on
             del self.modules[found.name]
             if above is not None:
@@ -318,9 +342,8 @@ class Copies:
                 sys.modules[name] = module
                 changed = changed or name
         for name in set(sys.modules) - before.keys() - self._real:
-            module = sys.modules[name]
-            is_copy = any(module is copy for copy in self.modules.values())
-            if is_copy or getattr(getattr(module, "__spec__", None), "name", None) != name:
+            # Anything else is the doing of a real module that was imported late: compiled ones enter odd things.
+            if self._is_private(name) or any(sys.modules[name] is copy for copy in self.modules.values()):
                 del sys.modules[name]
                 changed = changed or name
         return changed
@@ -346,35 +369,3 @@ class Copies:
                 return str(name)
             frame = frame.f_back  # type: ignore[assignment]  # None ends the loop
         return "the kernel"
-
-
-def _new_module(found: Found) -> ModuleType:
-    """Return a new module with the attributes that Python's own import gives."""
-    if found.file is None:
-        spec = ModuleSpec(found.name, None, is_package=True)
-        spec.submodule_search_locations = list(found.folders or ())
-    else:
-        inside = None if found.folders is None else list(found.folders)
-        known = importlib.util.spec_from_file_location(found.name, found.file, submodule_search_locations=inside)
-        assert known is not None  # the name of the file ends in .py
-        spec = known
-    return importlib.util.module_from_spec(spec)
-
-
-def _absolute(name: str, names: Mapping[str, Any], level: int) -> str:
-    """Return the full name of a module that code with these names imports; raises ImportError as Python does.
-
-    The folder of a kernel that is named by its file counts as a package without a name.
-    """
-    if not level:
-        return name
-    package = names.get("__package__")
-    if package is None:
-        package = names.get("__name__", "")
-        if "__path__" not in names:
-            package = package.rpartition(".")[0]
-    parts = package.split(".") if package else []
-    if level - 1 > max(len(parts) - 1, 0):
-        raise ImportError("attempted relative import beyond top-level package")
-    above = parts[: len(parts) - (level - 1)] if parts else []
-    return ".".join([*above, *([name] if name else [])])

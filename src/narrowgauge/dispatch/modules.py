@@ -5,19 +5,22 @@ Nothing is imported to find this out. A package name lists all of it; of two nam
 
 from __future__ import annotations
 
+import importlib.util
 import sys
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from importlib.machinery import ModuleSpec, PathFinder
 from pathlib import Path
-from types import CodeType
+from types import CodeType, ModuleType
+from typing import Any
 
-__all__ = ["STOOD_IN", "Found", "Sources"]
+__all__ = ["STOOD_IN", "Found", "Sources", "absolute_name", "listed_name", "new_module"]
 
 # Modules that every copy meets as stand-ins, so that they are never copied themselves.
 STOOD_IN = frozenset({
-    "builtins", "decimal", "importlib", "json", "math", "numba", "numpy", "pickle", "random", "scipy", "secrets", "sys",
-})  # fmt: skip  # one row
+    "builtins", "cmath", "decimal", "fractions", "importlib", "json", "math", "numba", "numpy", "pickle", "random",
+    "scipy", "secrets", "statistics", "sys",
+})  # fmt: skip  # rows
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -163,6 +166,11 @@ class Sources:
                         yield Found(name=inner, file=str(file.resolve()))
 
 
+def listed_name(name: str) -> str:
+    """Return how a message tells what to list for the module of a function that was handed over."""
+    return "its module, moved into a file," if name == "__main__" else f'"{name}"'
+
+
 def _dotted(package: str, path: Path) -> str:
     """Return the name of the module in a file below a package's folder."""
     parts = path.with_suffix("").parts
@@ -180,3 +188,35 @@ def _found_as(name: str, spec: ModuleSpec | None) -> Found | None:
     if folders and not spec.has_location:  # a package without __init__.py
         return Found(name=name, folders=folders)
     return Found(name=name, folders=folders, instead=origin or "no file")
+
+
+def new_module(found: Found) -> ModuleType:
+    """Return a new module with the attributes that Python's own import gives."""
+    if found.file is None:
+        spec = ModuleSpec(found.name, None, is_package=True)
+        spec.submodule_search_locations = list(found.folders or ())
+    else:
+        inside = None if found.folders is None else list(found.folders)
+        known = importlib.util.spec_from_file_location(found.name, found.file, submodule_search_locations=inside)
+        assert known is not None  # the name of the file ends in .py
+        spec = known
+    return importlib.util.module_from_spec(spec)
+
+
+def absolute_name(name: str, names: Mapping[str, Any], level: int) -> str:
+    """Return the full name of a module that code with these names imports; raises ImportError as Python does.
+
+    The folder of a kernel that is named by its file counts as a package without a name.
+    """
+    if not level:
+        return name
+    package = names.get("__package__")
+    if package is None:
+        package = names.get("__name__", "")
+        if "__path__" not in names:
+            package = package.rpartition(".")[0]
+    parts = package.split(".") if package else []
+    if level - 1 > max(len(parts) - 1, 0):
+        raise ImportError("attempted relative import beyond top-level package")
+    above = parts[: len(parts) - (level - 1)] if parts else []
+    return ".".join([*above, *([name] if name else [])])

@@ -41,6 +41,13 @@ def _arguments(setting: Setting, row: Row, given: Given, convert: Callable[[Any,
     }
 
 
+def _as_array(setting: Setting, values: Any) -> Any:
+    """Return a list of numbers or arrays as one array of the state, anything else as it is."""
+    if not isinstance(values, (list, tuple)):
+        return values
+    return setting.wrap(np.asarray(carried(values, setting), setting.arithmetic.format.carrier))
+
+
 def over_paths(setting: Setting, name: str, reduced_lengths: Sequence[int], all_lengths: Sequence[int]) -> str:
     """Return what the observer is told of a reduction over paths, empty for every other one.
 
@@ -74,8 +81,8 @@ def _accumulated(sequence: Callable[..., Any], *, reduces: bool = False, cleaned
 
     def handler(setting: Setting, function: Callable[..., Any], row: Row, given: dict[str, Any]) -> Any:
         first = row.placed[0]
-        values = given[first]
-        shape = np.shape(setting.admit(values)) if not isinstance(values, (list, tuple)) else ()
+        given[first] = values = _as_array(setting, given[first])
+        shape = np.shape(setting.admit(values))
         if reduces:
             axes = folds.axes_of(len(shape), given.get("axis"))
             operation = over_paths(setting, row.short, [shape[axis] for axis in axes], shape)
@@ -176,6 +183,7 @@ def reduced(setting: Setting, ufunc: np.ufunc, method: str, values: Any, given: 
     """
     axis = given.get("axis", 0)
     name = f"{ufunc.__name__}.{method}"
+    values = _as_array(setting, values)
     shape = np.shape(setting.admit(values))
     plainly = getattr(ufunc, method)
     own = carried(values, setting)

@@ -7,22 +7,19 @@ Python's operators to it. A mutable 0-d value would make `x += dx; path.append(x
 from __future__ import annotations
 
 import operator
+import sys
 from collections.abc import Callable
 from typing import Any
 
 import numpy as np
 
-from narrowgauge.dispatch.exact import PICKLED, bare, plain_copy, taken_out
+from narrowgauge.dispatch.exact import FLOAT, PICKLED, bare, plain_copy, taken_out
 from narrowgauge.dispatch.routes import ROUTES
 from narrowgauge.dispatch.setting import Number, Setting, Wrapped
+from narrowgauge.dispatch.texts import READ_BACK, written_down
 from narrowgauge.errors import RefusedError
 
 __all__ = ["Scalar", "State", "Text", "plain_item", "refuse_attribute"]
-
-_READ_BACK = (
-    "a text that was made of the state becomes a number again, which nobody rounds; "
-    "accepted: np.round for a number of digits"
-)
 
 
 def _binary(ufunc: np.ufunc, call: Callable[..., Any]) -> Callable[[Any, Any], Any]:
@@ -134,16 +131,15 @@ class State(Number):
         return taken_out(self._carrier, self._setting)
 
     def __float__(self) -> float:
-        self._setting.escape(
-            "float(), or a store into a plain array, takes a value out of the emulated arithmetic; "
-            "accepted: leave it as it is, and arrays that the kernel's own module makes",
-        )
+        if not written_down(self._setting, sys._getframe(1)):
+            self._setting.escape(FLOAT)
         return float(self._carrier)
 
     def __array__(self, dtype: Any = None, copy: bool | None = None) -> Any:
         self._setting.escape(
             "a function or a plain array that does not know the emulated arithmetic asked for plain numbers; "
-            "accepted: NumPy functions called, and arrays made, in the kernel's own module",
+            "accepted: NumPy functions called, and arrays made, in the kernel's own module, np.array(values) for a "
+            "list of the state, a list for constants, and a @ x for a.dot(x) of a plain array a",
         )
         return plain_copy(self._carrier, dtype or np.float64, copy)
 
@@ -261,6 +257,8 @@ class Scalar(State):
         """Return the value, held as plain code would hold it."""
         return self._setting.wrap(plain_item(self._carrier))
 
+    tolist = item
+
     def astype(self, dtype: Any) -> Any:
         """Return the value itself for float64, an exact value for integers and booleans; other floats are refused."""
         if self._setting.float_dtype(dtype) is not None:
@@ -277,7 +275,7 @@ class Text(str):
     _setting: Setting
 
     def __float__(self) -> float:
-        self._setting.escape(_READ_BACK)
+        self._setting.escape(READ_BACK)
         return float(str.__str__(self))
 
     def __int__(self) -> int:

@@ -1,6 +1,6 @@
-"""The namespaces that a private copy meets instead of numpy, math and builtins.
+"""The namespaces that a private copy meets instead of numpy, builtins and dataclasses.
 
-Most names are NumPy's own, because its functions hand over to the wrapped array by NumPy's protocols. Only what
+NumPy's functions hand over to the wrapped array by NumPy's protocols; lists.py makes arrays of lists for them. What
 makes arrays out of nothing must differ: a plain buffer would coerce the state that is stored into it. Time grids
 (linspace, arange) and arrays of given integers stay plain, and exact, until they meet the state; buffers of integers
 (zeros, ones, empty, full) belong to the state.
@@ -11,18 +11,19 @@ from __future__ import annotations
 import builtins
 import dataclasses
 import importlib
-import math
 from collections.abc import Callable
 from types import ModuleType
 from typing import Any
 
 import numpy as np
 
-from narrowgauge.dispatch.array import Array, as_state, carrier_of
+from narrowgauge.dispatch.array import Array, Constant, Flat, as_state, carrier_of, constant
+from narrowgauge.dispatch.builders import builders
 from narrowgauge.dispatch.exact import Exact, bare, is_exact
 from narrowgauge.dispatch.functions import call_function
+from narrowgauge.dispatch.lists import taking_lists
+from narrowgauge.dispatch.namespaces import Exchanging, Namespace
 from narrowgauge.dispatch.randoms import random_namespace
-from narrowgauge.dispatch.routes import ROUTES
 from narrowgauge.dispatch.scalar import State
 from narrowgauge.dispatch.setting import Setting, Wrapped, holds
 from narrowgauge.errors import RefusedError
@@ -30,38 +31,12 @@ from narrowgauge.errors import RefusedError
 __all__ = [
     "builtins_namespace",
     "dataclasses_namespace",
-    "math_namespace",
     "numpy_namespace",
     "refusing_generator",
     "refusing_namespace",
 ]
 
-_MATH: dict[str, np.ufunc] = {
-    "acos": np.arccos, "acosh": np.arccosh, "asin": np.arcsin, "asinh": np.arcsinh, "atan": np.arctan,
-    "atan2": np.arctan2, "atanh": np.arctanh, "cbrt": np.cbrt, "ceil": np.ceil, "copysign": np.copysign,
-    "cos": np.cos, "cosh": np.cosh, "degrees": np.degrees, "exp": np.exp, "exp2": np.exp2, "expm1": np.expm1,
-    "fabs": np.fabs, "floor": np.floor, "fmod": np.fmod, "hypot": np.hypot, "isfinite": np.isfinite,
-    "isinf": np.isinf, "isnan": np.isnan, "log": np.log, "log10": np.log10, "log1p": np.log1p, "log2": np.log2,
-    "pow": np.power, "radians": np.radians, "sin": np.sin, "sinh": np.sinh, "sqrt": np.sqrt, "tan": np.tan,
-    "tanh": np.tanh, "trunc": np.trunc,
-}  # fmt: skip  # a table reads by row
-_TO_INTEGER = frozenset({"ceil", "floor", "trunc"})
 _NO_DRAWS = "the kernel takes its random numbers as its first argument, so that every format sees the same"
-
-
-class _Namespace(ModuleType):
-    """A module whose missing names are those of the module that it stands for."""
-
-    def __init__(self, plain: ModuleType, names: dict[str, Any]) -> None:
-        super().__init__(plain.__name__, plain.__doc__)
-        public = [name for name in vars(plain) if not name.startswith("_")]
-        self.__dict__.update({"_plain": plain, "__all__": getattr(plain, "__all__", public), **names})
-
-    def __getattr__(self, name: str) -> Any:
-        return getattr(self.__dict__["_plain"], name)
-
-    def __dir__(self) -> list[str]:
-        return dir(self.__dict__["_plain"])
 
 
 class _Refusing(ModuleType):
@@ -107,35 +82,6 @@ def refusing_generator(name: str, setting: Setting) -> Any:
     return _RefusedGenerator(name, setting)
 
 
-def math_namespace(setting: Setting) -> ModuleType:
-    """Return a stand-in for `math` whose functions also take 0-d values of the state; integral parts are exact values.
-
-    In a narrower format than float64 a value outside a function's domain gives NumPy's NaN or infinity.
-    """
-
-    def stand_in(name: str, ufunc: np.ufunc) -> Callable[..., Any]:
-        plain: Callable[..., Any] = getattr(math, name)
-        # float64 gives the bits of math's own function; a narrower format rounds NumPy's once
-        call = plain if setting.arithmetic.format.name == "float64" else None
-        route = ROUTES[ufunc]
-
-        def function(*arguments: Any) -> Any:
-            if not any(isinstance(argument, Wrapped) for argument in arguments):
-                return plain(*arguments)
-            if any(isinstance(argument, np.ndarray) for argument in arguments) or len(arguments) != ufunc.nin:
-                raise setting.fault(
-                    RefusedError, f"math.{name} takes {ufunc.nin} scalar(s); accepted: np.{ufunc.__name__}"
-                )
-            if name in _TO_INTEGER and isinstance(arguments[0], Exact):
-                return setting.wrap(plain(setting.carrier(arguments[0])))
-            result = setting.operate(ufunc, route, arguments, call=call)
-            return setting.wrap(int(setting.carrier(result))) if name in _TO_INTEGER else result
-
-        return function
-
-    return _Namespace(math, {name: stand_in(name, ufunc) for name, ufunc in _MATH.items()})
-
-
 def dataclasses_namespace(names: dict[str, Any]) -> ModuleType:
     """Return a stand-in for `dataclasses` for a module of these names that is not in sys.modules.
 
@@ -156,7 +102,7 @@ def dataclasses_namespace(names: dict[str, Any]) -> ModuleType:
 
         return decorate if cls is None else decorate(cls)
 
-    return _Namespace(dataclasses, {"dataclass": dataclass})
+    return Namespace(dataclasses, {"dataclass": dataclass})
 
 
 def builtins_namespace(setting: Setting) -> ModuleType:
@@ -180,7 +126,7 @@ def builtins_namespace(setting: Setting) -> ModuleType:
 
         return function
 
-    return _Namespace(builtins, {"max": stand_in(max), "min": stand_in(min)})
+    return Namespace(builtins, {"max": stand_in(max), "min": stand_in(min)})
 
 
 def numpy_namespace(setting: Setting) -> ModuleType:
@@ -204,7 +150,10 @@ def numpy_namespace(setting: Setting) -> ModuleType:
         ("asfortranarray", "F", 0),
     ):
         names[name] = _as_array(names["array"], order, ndmin)
-    return _Namespace(np, names)
+    names |= builders(setting, names["array"])
+    made = Exchanging(np, taking_lists(names["array"]))
+    made.__dict__.update(names)
+    return made
 
 
 def _refuse_others(setting: Setting, name: str, others: dict[str, Any]) -> None:
@@ -231,7 +180,8 @@ def _creator(setting: Setting, make: Callable[..., Any]) -> Callable[..., Any]:
         made = make(shape, setting.arithmetic.format.carrier, order)
         if make is np.empty:
             made.fill(np.nan)  # what is read before it is written must not pass for a value of the format
-        return Array(made, setting)
+            return Array(made, setting)
+        return Constant(made, setting, 1.0 if make is np.ones else 0.0)
 
     return function
 
@@ -245,8 +195,8 @@ def _full(setting: Setting) -> Callable[..., Any]:
         exact = dtype is None and is_exact(fill_value, setting)
         if exact or (dtype is not None and setting.float_dtype(dtype) is None):
             return setting.wrap(np.full(shape, bare(fill_value, setting), dtype, order))
-        value = carrier_of(fill_value, setting)
-        return Array(np.full(shape, value, setting.arithmetic.format.carrier, order), setting)
+        made = np.full(shape, carrier_of(fill_value, setting), setting.arithmetic.format.carrier, order)
+        return Constant(made, setting, fill_value) if isinstance(fill_value, float) else Array(made, setting)
 
     return full
 
@@ -263,6 +213,8 @@ def _array(setting: Setting) -> Callable[..., Any]:
         value: Any, dtype: Any = None, *, copy: Any = True, order: Any = "K", ndmin: int = 0, **others: Any
     ) -> Any:
         _refuse_others(setting, "array", others)
+        if isinstance(value, Flat):
+            value = value.copy()
         if not holds(value, State):
             plain = np.array(bare(value, setting), dtype, copy=copy, order=order, ndmin=ndmin)
             if plain.dtype.kind in "iu" and not holds(value, Wrapped):
@@ -270,8 +222,7 @@ def _array(setting: Setting) -> Callable[..., Any]:
             if plain.dtype.kind != "f":
                 return setting.wrap(plain)
             setting.float_dtype(dtype)
-            carrier = setting.admit(plain)
-            return Array(carrier.copy("K") if carrier is plain else carrier, setting)
+            return constant(plain, setting, kept=isinstance(value, (list, tuple)))
         if setting.float_dtype(dtype) is None:
             wanted = str(np.dtype(dtype))
             raise setting.fault(
@@ -280,7 +231,11 @@ def _array(setting: Setting) -> Callable[..., Any]:
         carrier = carrier_of(value, setting)
         wide = setting.arithmetic.format.carrier
         made = np.array(carrier, wide, copy=copy, order=order, ndmin=ndmin)
-        return value if made is carrier and isinstance(value, Array) else Array(made, setting)
+        if isinstance(value, Array) and made is carrier:
+            return value
+        if type(value) is Constant and made.shape == value.shape:
+            return Constant(made, setting, value._plain)
+        return Array(made, setting)
 
     return array
 

@@ -18,7 +18,7 @@ from typing import Literal
 from narrowgauge.dispatch.rows import Row, row_of
 from narrowgauge.dispatch.setting import Route
 
-__all__ = ["ABOUT", "ROWS", "WRITING"]
+__all__ = ["ABOUT", "READING", "ROWS", "WRITING"]
 
 _EXACT = """
 all a* axis out keepdims | where
@@ -329,6 +329,15 @@ ABOUT = frozenset(
     )
 )
 """What they give is about the array, not of its values."""
+
+READING = ABOUT | frozenset(
+    _names(
+        "all amax amin any append argmax argmin argsort array_equal clip column_stack concatenate copy count_nonzero "
+        "digitize dstack hstack isin max min nanmax nanmin repeat roll searchsorted sort stack take tile unique vstack "
+        "where"
+    )
+)
+"""Exact ones that neither write nor give a view: a constant array stays one."""
 
 WRITING = frozenset(_names("copyto fill_diagonal place put put_along_axis putmask"))
 """They write into their first argument."""

@@ -12,7 +12,7 @@ from typing import Any
 
 import numpy as np
 
-from narrowgauge.dispatch.array import wrap
+from narrowgauge.dispatch.array import changing, wrap
 from narrowgauge.dispatch.contractions import PLANS
 from narrowgauge.dispatch.exact import Exact, bare, compute, is_exact, settled
 from narrowgauge.dispatch.reductions import contracted, reduced
@@ -71,6 +71,8 @@ def _with_keywords(
         if given.pop(name, accepted[0]) not in accepted:
             raise setting.fault(RefusedError, f"{name}= of {shown} is not offered by this version")
     targets = keywords.get("out") or (None,) * ufunc.nout
+    for target in targets:
+        changing(target)
     # an array of its own makes room at once; everything else is computed first, and copied
     own = targets[0] if len(targets) == 1 and given.get("where", True) is True else None
     if own is not None and method == "__call__" and ufunc in ROUTES and _is_array(own) and not given.keys() - {"where"}:
