@@ -6,6 +6,7 @@ import os
 import subprocess
 import sys
 from collections.abc import Callable
+from importlib import import_module
 from pathlib import Path
 from typing import Any
 
@@ -205,8 +206,8 @@ def test_layouts_do_not_matter(view: str, rounding: Rounding, both: Any) -> None
 
 
 def test_every_loop_compiles_and_is_used() -> None:
-    """Each row of the table has a compiled function, and one that is not in the table has none."""
-    for name in LOOPS:
+    """Each row of both tables has a compiled function, and one that is not in the table has none."""
+    for name in (*LOOPS, *import_module("narrowgauge.arithmetic.onepass").PASSES):
         assert compiled.kernel(name) is not None
     with pytest.raises(KeyError):
         compiled.kernel("no such loop")

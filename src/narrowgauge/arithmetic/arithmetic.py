@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
+from functools import partial
 from typing import Any, Literal
 
 import numpy as np
@@ -16,10 +17,12 @@ from narrowgauge.arithmetic.rounding import (
     Doubles,
     Floats,
     Rounding,
+    carrier_rounding,
     flush,
     narrow,
     narrow_integer,
     narrow_number,
+    one_pass,
     round_carrier,
     round_half,
 )
@@ -30,6 +33,7 @@ __all__ = ["Arithmetic", "Rounding", "Subnormals", "arithmetic_named"]
 Subnormals = Literal["kept", "flushed"]
 
 _EXACT_INTEGERS = 2**53
+_MOST_CONSTANTS = 4096  # a kernel that feeds a new constant each step must not fill memory
 _APART = frozenset(("table", "wide", "terms"))  # what does not take place in the carrier
 
 
@@ -56,7 +60,14 @@ class Arithmetic:
     fused: bool = False
     stream: Stochastic | None = field(default=None, compare=False)
     _constants: dict[tuple[type, Any], Any] = field(default_factory=dict, compare=False, repr=False)
+    direct: dict[np.ufunc, Callable[..., Any]] = field(default_factory=dict, init=False, compare=False, repr=False)
+    """What computes and rounds an operation on carrier arrays as `apply` does, called as the ufunc is, also with `out`.
+
+    Only to nearest with subnormals kept and nothing fused, and not for every ufunc. At least one operand is an array;
+    numbers come from `weak`.
+    """
     _ways: dict[np.ufunc, Manner] = field(init=False, compare=False, repr=False)
+    _weak: dict[float | str, Any] = field(default_factory=dict, init=False, compare=False, repr=False)
 
     def __post_init__(self) -> None:
         """Choose how each function is computed."""
@@ -65,8 +76,11 @@ class Arithmetic:
                 "stochastic rounding, and it alone, takes a stream; accepted: Stochastic(seed, level, block)"
             )
         object.__setattr__(self, "_ways", ways(self.format, self.rounding))
-        if not self.native:
-            compiled.kernel("nearest")  # numba is imported here at the latest, not inside a kernel's run
+        if not self.native:  # numba is imported here at the latest, not inside a kernel's run
+            compiled.kernel("nearest")
+            self._in_carrier(np.add)
+        if self.rounding == "nearest" and self.subnormals == "kept" and not self.fused:
+            self.direct.update(self._directly())
 
     @property
     def native(self) -> bool:
@@ -90,6 +104,11 @@ class Arithmetic:
         way = self._ways[ufunc]
         if way in _APART:
             return self._delivered(self._computed(way, ufunc, operands, out), out)
+        arrays = type(operands[0]) is np.ndarray or type(operands[-1]) is np.ndarray
+        if way == "carrier" and arrays and (call is None or out is not None):
+            compute = self.direct.get(ufunc) or self._in_carrier(ufunc)
+            result = compute(*operands, out=out)
+            return result if self.subnormals == "kept" else self._flushed(result)
         if call is not None:
             result = call(*operands)
         elif out is None:
@@ -134,8 +153,24 @@ class Arithmetic:
                 known = narrow_integer(int(number), self.format, mode, flushed=flushed)
             else:
                 known = narrow_number(float(number), self.format, mode, flushed=flushed)
-            if len(self._constants) < 4096:  # a kernel that feeds a new constant each step must not fill memory
+            if len(self._constants) < _MOST_CONSTANTS:
                 self._constants[key] = known
+        return known
+
+    def weak(self, number: float | np.float64) -> Any:
+        """Return a constant for `direct`: an array without axes, which NumPy takes faster than a Python number.
+
+        float64 leaves it as it is.
+        """
+        key = number or repr(float(number))  # 0.0 and -0.0 are equal
+        known = self._weak.get(key)
+        if known is None:
+            if self.format.name == "float64":
+                return number
+            known = np.array(self.constant(number), self.format.carrier)
+            known.setflags(write=False)
+            if len(self._weak) < _MOST_CONSTANTS:
+                self._weak[key] = known
         return known
 
     def cast(self, values: npt.NDArray[Any]) -> Floats:
@@ -159,6 +194,40 @@ class Arithmetic:
         wide = values.astype(np.float64)
         own = narrow(wide, self.format, flushed=self.subnormals == "flushed").astype(np.float64)
         return bool(np.array_equal(own, wide, equal_nan=True))
+
+    def _directly(self) -> dict[np.ufunc, Callable[..., Any]]:
+        """Return the rows of `direct`."""
+        found: dict[np.ufunc, Callable[..., Any]] = {}
+        kind = self.format.carrier.char
+        for ufunc, way in self._ways.items():
+            if way == "carrier":
+                found[ufunc] = partial(self._first, ufunc)
+            elif way == "table":
+                found[ufunc] = partial(self._looked_up, ufunc)
+            elif way in ("exact", "truth", "native") and any(row.startswith(kind) for row in ufunc.types):
+                found[ufunc] = ufunc
+        return found
+
+    def _first(self, ufunc: np.ufunc, *operands: Any, out: Floats | None = None) -> Any:
+        """Compute, and leave in `direct` what computes from now on: what is not asked for is not loaded."""
+        self.direct[ufunc] = self._in_carrier(ufunc)
+        return self.direct[ufunc](*operands, out=out)
+
+    def _in_carrier(self, ufunc: np.ufunc) -> Callable[..., Any]:
+        """Return what computes an operation in the carrier, one operand an array, and rounds the result."""
+        found = one_pass(self.format, ufunc)
+        if found is not None:
+            return found
+        rounding = carrier_rounding(self.format)
+
+        def compute(*operands: Any, out: Floats | None = None) -> Any:
+            result = ufunc(*operands, out=out)
+            return rounding(result) if type(result) is np.ndarray and result.size else self._rounded(result)
+
+        return compute
+
+    def _looked_up(self, ufunc: np.ufunc, operand: Floats, *, out: Floats | None = None) -> Any:
+        return self._delivered(look_up(ufunc, operand, self.format, out), out)
 
     def _computed(self, way: Manner, ufunc: np.ufunc, operands: Sequence[Any], out: Floats | None) -> Floats:
         """Compute what does not take place in the carrier."""

@@ -21,7 +21,7 @@ from __future__ import annotations
 import math
 import struct
 from collections.abc import Callable
-from functools import cache
+from functools import cache, partial
 from typing import Any, Literal
 
 import numpy as np
@@ -29,16 +29,18 @@ import numpy.typing as npt
 
 from narrowgauge.arithmetic import compiled
 from narrowgauge.arithmetic.formats import Format
-from narrowgauge.arithmetic.scratch import words32, words64
+from narrowgauge.arithmetic.scratch import filled32, words32, words64
 
 __all__ = [
     "Doubles",
     "Floats",
     "Rounding",
+    "carrier_rounding",
     "flush",
     "narrow",
     "narrow_integer",
     "narrow_number",
+    "one_pass",
     "round_carrier",
     "round_half",
 ]
@@ -47,10 +49,11 @@ Rounding = Literal["nearest", "zero", "up", "down", "stochastic"]
 Floats = npt.NDArray[np.floating[Any]]
 Doubles = npt.NDArray[np.float64]
 
-_SIGN32 = np.uint32(0x80000000)
-_EXPONENT32 = np.uint32(0x7F800000)
+# Arrays without axes, which NumPy takes faster than scalars.
+_SIGN32, _EXPONENT32, _ONE32 = (np.array(word, np.uint32) for word in (0x80000000, 0x7F800000, 1))
 _EXPONENT64 = np.uint64(0x7FF0000000000000)
 _SIGN64 = np.uint64(0x8000000000000000)
+_IN_ONE_PASS = ("float16", "bfloat16")
 _LOOPS = {"nearest": "nearest", "stochastic": "stochastic"}
 _INTEGRAL: dict[str, Callable[[float], float]] = {
     "nearest": round,  # ties to even
@@ -66,21 +69,35 @@ def round_carrier(values: Floats, form: Format) -> Floats:
     float32 array for the formats of 8 and 16 bits and TF32, each value the correctly rounded float32 result of one
     operation on values of the format. A native format is returned as it is.
     """
-    if form.native or values.size == 0:
-        return values
+    return values if form.native or values.size == 0 else carrier_rounding(form)(values)
+
+
+def carrier_rounding(form: Format) -> Callable[[Floats], Floats]:
+    """Return what `round_carrier` does to an array with elements, chosen once; not for a native format."""
+    rounding = one_pass(form, np.positive)
+    if rounding is not None:
+        return lambda values: rounding(values, out=values)
     wide = form.emax == 127  # the carrier has the same exponents: subnormals and overflow round like everything else
     loop = compiled.kernel("words" if wide else "singles")
-    if loop is None:
-        if wide:
-            _round_words(values, form)
-        else:
-            _round_singles(values, form)
-        return values
+    if loop is not None:
+        return partial(_round_compiled, loop, form)
+    return partial(_round_words if wide else _round_singles, form)
+
+
+def _round_compiled(loop: Callable[..., Any], form: Format, values: Floats) -> Floats:
     flat = _flat(values)
-    loop(flat.view(np.uint32) if wide else flat, *_figures32(form))
+    loop(flat.view(np.uint32) if form.emax == 127 else flat, *_figures32(form))
     if flat.base is None:
         values[...] = flat.reshape(values.shape)
     return values
+
+
+def one_pass(form: Format, ufunc: np.ufunc) -> Callable[..., Any] | None:
+    """Return the ufunc that computes `ufunc` on carriers and rounds to nearest, None where nothing is compiled for it.
+
+    `np.positive` is the rounding alone.
+    """
+    return compiled.kernel(f"{form.name} {ufunc.__name__}") if form.name in _IN_ONE_PASS else None
 
 
 def flush(values: Floats, form: Format) -> Floats:
@@ -212,41 +229,59 @@ def _figures32(form: Format) -> tuple[Any, ...]:
 
 
 @cache
+def _arrays32(form: Format) -> tuple[Any, ...]:
+    """Return the same as arrays without axes, the factor of a power of two with 1.5 in it."""
+    first, second, third, *_ = _figures32(form)
+    return np.array(first), np.array(second), np.array(third if form.emax == 127 else np.float32(1.5) * third)
+
+
+@cache
 def _figures64(form: Format) -> tuple[float, ...]:
     """Return the figures of every loop over float64: least and greatest power of two, unit, top, infinity."""
     return form.min_normal, 2.0 ** (form.emax + 1), 2.0 ** (1 - form.precision), form.max_finite, form.infinity
 
 
-def _round_words(values: Floats, form: Format) -> None:
+def _round_words(form: Format, values: Floats) -> Floats:
     """Clear the last bits after adding half of their range, one less where the kept part is even."""
     bits = values.view(np.uint32)
     work = words32("work", values.shape, values.size)
-    drop, half, mask = _figures32(form)
+    drop, half, mask = _arrays32(form)
     np.right_shift(bits, drop, out=work)
-    np.bitwise_and(work, np.uint32(1), out=work)
+    np.bitwise_and(work, _ONE32, out=work)
     np.add(work, half, out=work)
     np.add(bits, work, out=bits)
     np.bitwise_and(bits, mask, out=bits)
+    return values
 
 
-def _round_singles(values: Floats, form: Format) -> None:
+def _round_singles(form: Format, values: Floats) -> Floats:
     """Add and subtract a power of two whose last place is the spacing of the values: hardware rounds the sum.
 
     The power is 2^23 x 1.5 times the spacing, which follows from the exponent and from the smallest normal number.
     """
-    low, cap, factor, top, over = _figures32(form)
+    low, cap, _, top, over = _figures32(form)
     bits = values.view(np.uint32)
-    work, signs = (words32(place, values.shape, values.size) for place in ("work", "signs"))
+    work = words32("work", values.shape, values.size)
     shift = work.view(np.float32)
+    # Usually nothing is NaN or too large: the power then needs no upper limit. Positive numbers need no sign put back.
+    least = np.minimum.reduce(values, None)
+    usual = bool(np.maximum.reduce(values, None) <= top and least >= -top)
+    signs = None if usual and least > 0 else words32("signs", values.shape, values.size)
     np.bitwise_and(bits, _EXPONENT32, out=work)
-    np.clip(shift, low, cap, out=shift)
-    np.multiply(shift, np.float32(1.5) * factor, out=shift)
-    np.bitwise_and(bits, _SIGN32, out=signs)
+    if usual:
+        np.maximum(shift, filled32(low, values.shape, values.size), out=shift)
+    else:
+        np.clip(shift, low, cap, out=shift)
+    np.multiply(shift, _arrays32(form)[2], out=shift)
+    if signs is not None:
+        np.bitwise_and(bits, _SIGN32, out=signs)
     np.add(values, shift, out=values)
     np.subtract(values, shift, out=values)
-    np.bitwise_or(bits, signs, out=bits)
-    if not (values.max() <= top and values.min() >= -top):  # also true of NaN
+    if signs is not None:
+        np.bitwise_or(bits, signs, out=bits)
+    if not usual:
         np.copyto(values, np.copysign(over, values), where=np.abs(values) > top)
+    return values
 
 
 def _narrow_compiled(

@@ -6,32 +6,21 @@ share the carrier's memory as NumPy's do; booleans and integers that come out of
 
 from __future__ import annotations
 
-import operator
 from collections.abc import Callable, Iterator
 from typing import Any
 
 import numpy as np
 
 from narrowgauge.dispatch.exact import Exact, bare
-from narrowgauge.dispatch.routes import ROUTES
 from narrowgauge.dispatch.scalar import Scalar, State, plain_item, refuse_attribute
 from narrowgauge.dispatch.setting import Setting, Wrapped, holds
+from narrowgauge.dispatch.shortcuts import with_shortcuts
 from narrowgauge.errors import RefusedError
 
 __all__ = ["Array", "Constant", "Flat", "as_state", "carrier_of", "changing", "constant", "stored", "wrap"]
 
 
-def _in_place(ufunc: np.ufunc, call: Callable[..., Any]) -> Callable[[Any, Any], Any]:
-    """Return the method of an in-place operator."""
-    route = ROUTES[ufunc]
-
-    def method(self: Array, other: Any) -> Any:
-        done = self._setting.operate(ufunc, route, (self, other), out=self._carrier, call=call)
-        return NotImplemented if done is NotImplemented else self
-
-    return method
-
-
+@with_shortcuts
 class Array(State):
     """An array of values of the state, in a float32 or float64 carrier of the same shape and strides.
 
@@ -42,14 +31,6 @@ class Array(State):
 
     # isinstance(x, np.ndarray) must decide as it does in plain code
     __class__ = np.ndarray  # type: ignore[assignment]
-
-    __iadd__ = _in_place(np.add, operator.iadd)
-    __isub__ = _in_place(np.subtract, operator.isub)
-    __imul__ = _in_place(np.multiply, operator.imul)
-    __itruediv__ = _in_place(np.divide, operator.itruediv)
-    __ifloordiv__ = _in_place(np.floor_divide, operator.ifloordiv)
-    __imod__ = _in_place(np.remainder, operator.imod)
-    __ipow__ = _in_place(np.power, operator.ipow)
 
     def __imatmul__(self, other: Any) -> Any:
         self[...] = self @ other

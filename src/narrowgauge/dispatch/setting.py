@@ -84,10 +84,13 @@ class Setting:
     `files` are the file names of the user's modules that were executed for this run; `wrap`, `ufunc` and
     `function` are given by the modules below this one, which know the array and the tables. `faults` keeps every
     refusal and escape in the order in which they happened, also those that the kernel swallowed; `allowed` holds the
-    lines, by resolved path, where plain values may leave.
+    lines, by resolved path, where plain values may leave. `direct` are the operations that an array may do without
+    `operate`: those of the arithmetic where there is no observer, none where there is one.
     """
 
-    __slots__ = ("_wrap", "allowed", "arithmetic", "draws", "faults", "files", "function", "observer", "paths", "ufunc")
+    __slots__ = (
+        "_wrap", "allowed", "arithmetic", "direct", "draws", "faults", "files", "function", "observer", "paths", "ufunc"
+    )  # fmt: skip
 
     def __init__(
         self,
@@ -102,6 +105,7 @@ class Setting:
         self.arithmetic = arithmetic
         self.files = files
         self.observer = observer
+        self.direct = arithmetic.direct if observer is None else {}
         self.ufunc = ufunc
         self.function = function
         self.draws: Any = None  # the Feed of a kernel that draws for itself
