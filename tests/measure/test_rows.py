@@ -50,7 +50,7 @@ GIVEN = {
     "math": (
         "x = 0.0\nfor d in dW:\n    x = x + 0.2 * d\nreturn math.exp(x)",
         "x = np.zeros(dW.shape[1])\nfor d in dW:\n    x = x + 0.2 * d\nreturn np.exp(x)",
-        "math.exp takes 1 scalar(s)",
+        "slow: with a row of paths: kernel.py:7: math.exp takes 1 scalar(s)",
     ),
 }
 DRAWN = {

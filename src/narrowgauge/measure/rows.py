@@ -129,7 +129,10 @@ class _Trial:
         except KeyboardInterrupt:
             raise
         except (DispatchError, KernelError) as problem:
-            return f"with a row of paths: {problem}"
+            said = f"with a row of paths: {problem}"
+            for name in caller.copy.setting.files if caller.copy.setting else ():
+                said = said.replace(name, self._file.shown(name))
+            return said
         except BaseException as problem:  # written for numbers, the kernel may raise anything
             said = f"with a row of paths it raises {type(problem).__name__}: {str(problem).partition(_BREAK)[0]}"
             setting = caller.copy.setting
