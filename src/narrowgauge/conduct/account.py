@@ -142,7 +142,9 @@ class _Quantity:
         corrections = {arm: self._law(arm, "corrections") for arm in self._arms[1:]}
         walks = agreement(errors)
         ladder = [(level, self._file.ladder.steps(level)) for level in self._levels]
-        orders = OrdersEntry(level_variance=finite(decay.beta if decay else None), level_mean=self._mean_order())
+        by_step = math.log2(self._file.ladder.refinement)  # of a level, which is what the decay is told by
+        order = decay.beta / by_step if decay else None
+        orders = OrdersEntry(level_variance=finite(order), level_mean=self._mean_order())
         return QuantityEntry(
             levels=[self._level(level) for level in self._levels],
             accumulation={
