@@ -341,3 +341,15 @@ def test_the_least_certain_extrapolation_is_the_cautious_one():
     assert (worst.level, worst.possible, worst.cautious, worst.extrapolated) == (10, 12, 6, True)
     measured = over_quantities({"a": a, "b": one(4, 5)})
     assert (measured.level, measured.possible, measured.cautious, measured.extrapolated) == (4, 5, None, False)
+
+
+def test_nothing_is_extrapolated_from_approximate_draws():
+    """A split over float64 that pays on all levels is followed beyond the ladder with exact draws alone.
+
+    The law of rounding says nothing about the others, even where one is at hand.
+    """
+    file = audit(finest=FINEST, formats=formats(), cost=COSTS, draws={"approximate": "linear"})
+    name = "float16/approximate"
+    cheap = found("+" * (FINEST + 1), file, scheme=replace(SPLIT64, narrow=name), name=name)
+    assert (cheap.level, cheap.extrapolated, cheap.reason) == (FINEST, False, "or finer, not extrapolated")
+    assert found("+" * (FINEST + 1), file).reason.startswith("extrapolat")

@@ -44,6 +44,23 @@ def test_a_path_costs_its_steps_its_draws_and_its_fixed_part():
     assert costs.correction("float16", "float32") == pytest.approx(12 * 0.75 + 16 * 0.1 + 5, rel=4 * EPS)
 
 
+def test_approximate_draws_have_a_cost_of_their_own():
+    """Paid once by a path, and once beside the exact ones in a correction that takes both kinds; the formats' steps."""
+    table = CostTable(float64=1.0, float32=0.5, float16=0.25, draws=0.1, approximate_draws=0.01, path=5.0)
+    costs = LevelCosts(steps=12, draws=16, table=table)
+    assert costs.path("float16/approximate") == pytest.approx(12 * 0.25 + 16 * 0.01 + 5, rel=4 * EPS)
+    assert costs.path("float16") == pytest.approx(12 * 0.25 + 16 * 0.1 + 5, rel=4 * EPS)
+    both = costs.correction("float16/approximate", "float32")
+    assert both == pytest.approx(12 * 0.75 + 16 * 0.11 + 5, rel=4 * EPS)
+    assert costs.correction("float32/approximate", "float32") == pytest.approx(12 + 16 * 0.11 + 5, rel=4 * EPS)
+
+
+def test_approximate_draws_cost_as_much_as_exact_ones_unless_said():
+    """A table made without their cost."""
+    costs = LevelCosts(steps=1, draws=10, table=CostTable(float64=1.0, float16=0.25, draws=0.1))
+    assert costs.path("float16/approximate") == costs.path("float16")
+
+
 def test_a_tenth_of_the_cost_and_a_thousandth_of_the_variance_save_a_factor_of_eight():
     """(sqrt(.1) + sqrt(.001 x 1.1))^-2 = 8.2; a factor of about 8 is common practice, no source."""
     sine, cosine = math.sqrt(0.001) / 2, math.sqrt(1 - 0.001 / 4)

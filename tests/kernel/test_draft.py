@@ -5,6 +5,7 @@ from __future__ import annotations
 import inspect
 import re
 
+import msgspec
 import numpy as np
 import pytest
 from auditfile_cases import LEAST, read
@@ -117,13 +118,15 @@ class TestText:
         text = signature(tmp_path, "dW, h")
         full, plain = read(tmp_path, uncommented(text)), read(tmp_path, text)
         assert full.assumed == ()
-        assert (full.kernel, full.ladder, full.formats, full.cost, full.sampling) == (
+        assert (full.kernel, full.ladder, full.formats, full.sampling) == (
             plain.kernel,
             plain.ladder,
             plain.formats,
-            plain.cost,
             plain.sampling,
         )
+        assert full.cost == msgspec.structs.replace(plain.cost, approximate_draws=plain.cost.draws)
+        assert (full.draws.approximate, full.draws.cells) == ("constant", 1024)
+        assert full.draws.formats == plain.formats.narrow
         least = read(tmp_path, LEAST)
         assert plain.assumed == least.assumed
         assert (full.target.bias_share, full.target.worthwhile) == (0.25, least.worthwhile)
@@ -139,9 +142,17 @@ class TestText:
         for line in signature(tmp_path, "dW, h").splitlines():
             if match := re.fullmatch(r"(?:# )?\[(\w+)\]", line):
                 table = match[1]
-            elif match := re.match(r"(?:# )?(\w+) = ", line):
+            elif match := re.match(r"(?:# ){0,2}(\w+) = ", line):
                 keys.append(f"{table}.{match[1]}")
         assert sorted(keys) == sorted(RULES)
+
+    @pytest.mark.parametrize("name", ["u", "rng"])
+    def test_no_approximate_normals_where_none_are_taken(self, tmp_path, name):
+        """For a kernel of uniforms, or one that draws for itself, the keys that would be refused are left out."""
+        text = uncommented(signature(tmp_path, f"{name}, h", "return 0"))
+        assert "[draws]" not in text
+        assert "approximate_draws = " not in text
+        assert read(tmp_path, text).draws is None
 
 
 class TestTakes:

@@ -57,3 +57,23 @@ def test_pairs_by_their_rule(arms: tuple[str, ...], wide: tuple[str, ...]) -> No
     assert len(found) == len(set(found))
     assert set(found) == wanted
     assert {a for a, b in found if b == "float64"} == runs - {"float64"}
+
+
+def test_arms_with_approximate_draws_come_after_the_exact_ones() -> None:
+    """In the same order; the reference stays first."""
+    names = ["float64/approximate", "float16", "float32/approximate", "bfloat16/approximate", "float64"]
+    wanted = ("float64", "float16", "bfloat16/approximate", "float32/approximate", "float64/approximate")
+    assert arms_of(names) == wanted
+
+
+def test_pairs_of_approximate_draws() -> None:
+    """To the reference, and to each wide format of at least the arm's precision; nothing is corrected to them."""
+    arms = arms_of(["float16", "float32", "float16/approximate", "float32/approximate", "float64/approximate"])
+    found = {(a, b) for a, b in pairs_of(arms, ["float32"]) if "/" in a + b}
+    assert found == {
+        ("float16/approximate", "float32"),
+        ("float16/approximate", "float64"),
+        ("float32/approximate", "float32"),
+        ("float32/approximate", "float64"),
+        ("float64/approximate", "float64"),
+    }

@@ -4,9 +4,9 @@ from __future__ import annotations
 
 import math
 
+import msgspec
 import numpy as np
 
-from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.conduct.entries import (
     correction_entry,
     finite,
@@ -23,6 +23,7 @@ from narrowgauge.conduct.entries import (
 )
 from narrowgauge.conduct.plans import allocation_entry, common_plan_entry
 from narrowgauge.conduct.run import Outcome
+from narrowgauge.conduct.separated import separation_entry
 from narrowgauge.judge.accumulation import (
     AccumulationFit,
     LawPoint,
@@ -37,6 +38,7 @@ from narrowgauge.judge.finest import Beyond, FinestLevel, finest_on_ladder, over
 from narrowgauge.judge.gain import Scheme
 from narrowgauge.judge.intervals import binomial_upper, jackknife, means, variances
 from narrowgauge.judge.schemes import BIAS_SHARE, LEAST_EFFECTIVE_SIZE, budget_levels
+from narrowgauge.kernel.arms import Arm
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.measure.arms import REFERENCE, arms_of
 from narrowgauge.measure.tally import LevelTally
@@ -55,6 +57,7 @@ from narrowgauge.record.audit import (
     OrdersEntry,
     QuantityEntry,
     RulesEntry,
+    SeparationEntry,
     TelescopingEntry,
     VerdictEntry,
 )
@@ -79,7 +82,7 @@ def account(file: AuditFile, outcome: Outcome, kernel: KernelEntry, provenance: 
     quantities = {name: _Quantity(file, outcome, name).entry() for name in names}
     finest = {
         arm: over_quantities({name: _finest_of(quantities[name].finest_paying_level[arm]) for name in names})
-        for arm in file.formats.narrow
+        for arm in file.narrow
     }
     judged = sorted(outcome.judgements.items())
     sound = all(
@@ -97,10 +100,10 @@ def account(file: AuditFile, outcome: Outcome, kernel: KernelEntry, provenance: 
             levels_sharing=budget_levels(file),
         ),
         arms={
-            arm: ArithmeticEntry(
-                format=arm, rounding="nearest", subnormals="kept", fused=False, draws="exact", widened=[]
+            arm.name: ArithmeticEntry(
+                format=arm.format, rounding="nearest", subnormals="kept", fused=False, draws=arm.draws, widened=[]
             )
-            for arm in arms_of(file.arms)
+            for arm in map(Arm.named, arms_of(file.arms))
         },
         quantities=quantities,
         verdict=VerdictEntry(
@@ -123,6 +126,7 @@ def account(file: AuditFile, outcome: Outcome, kernel: KernelEntry, provenance: 
         range=outcome.trial.range,
         cautions=list(CAUTIONS),
         provenance=provenance,
+        draws=outcome.draws or msgspec.UNSET,
     )
 
 
@@ -154,13 +158,15 @@ class _Quantity:
                     sentence=sentence(errors[arm], arm, ladder),
                 )
                 for arm in errors
+                if Arm.named(arm).exact
             },
             agreement=AgreementEntry(agrees=walks["agrees"], spread=finite(walks["spread"]), reason=walks["reason"]),
             orders=orders,
             finest_paying_level={
-                arm: self._finest(arm, errors[arm], corrections[arm], decay) for arm in self._file.formats.narrow
+                arm: self._finest(arm, errors[arm], corrections[arm], decay) for arm in self._file.narrow
             },
             allocation=allocation_entry(self._file, self._outcome, self._name, self._weak_error(orders.level_mean)),
+            separation=self._separation(),
         )
 
     def _tally(self, level: int) -> LevelTally:
@@ -235,15 +241,27 @@ class _Quantity:
         )
 
     def _law(self, arm: str, which: str) -> AccumulationFit:
-        """Fit the law to the error or to the correction of an arm; E decides which levels are usable for both."""
+        """Fit the law to the error or to the correction of an arm; E decides which levels are usable for both.
+
+        It is a law of rounding alone: that of an arm with approximate draws is not fitted.
+        """
+        named = Arm.named(arm)
+        if not named.exact:
+            return AccumulationFit(reason="approximate draws")
         errors = [p for level in self._levels if (p := self._point(level, arm, "errors")) is not None]
         fine = usable(errors)
         confidence = 1 - self._outcome.alpha
-        u = FORMATS[arm].unit_roundoff
+        u = named.form.unit_roundoff
         if which == "errors":
             return fit(fine, u, confidence=confidence)
         points = [p for one in fine if (p := self._point(one.level, arm, "corrections")) is not None]
         return fit(points, u, leave_out_coarsest=True, confidence=confidence)
+
+    def _separation(self) -> SeparationEntry | msgspec.UnsetType:
+        if self._file.draws is None:
+            return msgspec.UNSET
+        tallies = {level: self._tally(level).quantities[self._name] for level in self._levels}
+        return separation_entry(self._file, tallies, self._outcome.alpha)
 
     def _point(self, level: int, arm: str, which: str) -> LawPoint | None:
         tally = self._tally(level).quantities[self._name]

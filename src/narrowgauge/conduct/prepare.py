@@ -4,9 +4,11 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+from narrowgauge.conduct.separated import draws_entry
 from narrowgauge.conduct.trial import examine
 from narrowgauge.measure.task import Bench, pinned
 from narrowgauge.record.audit import TrialEntry
+from narrowgauge.record.draws import DrawsEntry
 
 __all__ = ["Prepared", "prepare"]
 
@@ -20,7 +22,7 @@ class Prepared:
     """What the trial showed, and by level the paths of a block and whether there is a coarse path.
 
     `seconds` is the time of one path of `timed_level` in all arms, known beforehand where a kernel is run path by path:
-    a block of it could take hours.
+    a block of it could take hours. `draws` are the approximate ones, if there are any.
     """
 
     trial: TrialEntry
@@ -28,6 +30,7 @@ class Prepared:
     coupled: tuple[bool, ...]
     timed_level: int
     seconds: float | None
+    draws: DrawsEntry | None
 
 
 def prepare(bench: Bench) -> Prepared:
@@ -41,4 +44,5 @@ def prepare(bench: Bench) -> Prepared:
             coupled=tuple(runner.coupled(level) for level in ladder.levels),
             timed_level=timed,
             seconds=runner.seconds(timed, _TIMED_PATHS) / _TIMED_PATHS if runner.singly else None,
+            draws=draws_entry(bench.file, runner.approximation),
         )

@@ -18,6 +18,7 @@ from narrowgauge.measure.store import Ledger
 from narrowgauge.measure.tally import LevelTally
 from narrowgauge.measure.task import Block, Key, pinned
 from narrowgauge.record.audit import TrialEntry
+from narrowgauge.record.draws import DrawsEntry
 
 __all__ = ["Outcome", "Plan", "Watcher", "run"]
 
@@ -64,7 +65,7 @@ class Watcher(Protocol):
 class Outcome:
     """All that was measured and judged; `alpha` is 1 - confidence of each look.
 
-    `fingerprints` are those of the processes that measured, each once and in order.
+    `fingerprints` are those of the processes that measured, each once and in order; `draws` the approximate ones.
     """
 
     tallies: Mapping[int, LevelTally]
@@ -72,6 +73,7 @@ class Outcome:
     alpha: float
     trial: TrialEntry
     fingerprints: tuple[str, ...] = ()
+    draws: DrawsEntry | None = None
 
 
 def run(
@@ -136,6 +138,7 @@ class _Conductor:
             alpha=alpha,
             trial=self._prepared.trial,
             fingerprints=tuple(sorted(self._fingerprints)),
+            draws=self._prepared.draws,
         )
 
     def _looks(self) -> list[int]:

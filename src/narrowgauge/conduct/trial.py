@@ -17,6 +17,7 @@ from narrowgauge.draws.coarsen import Draws
 from narrowgauge.draws.streams import Purpose
 from narrowgauge.draws.tape import Tape
 from narrowgauge.errors import AuditFileError, DispatchError, KernelError
+from narrowgauge.kernel.arms import Arm
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.contract import check_parameters
 from narrowgauge.kernel.loading import KernelSource
@@ -52,7 +53,7 @@ class _Trial:
         self._narrow: dict[str, dict[int, Notes]] = {}
         self._finest: Notes | None = None
         self._remarks: list[str] = []
-        self.arms = runner.arms[1:]
+        self.arms = [name for name in runner.arms[1:] if Arm.named(name).exact]  # a format is tried once
 
     @property
     def levels(self) -> list[int]:

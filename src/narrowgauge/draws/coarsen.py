@@ -14,7 +14,7 @@ Every array here is (steps, factors, paths).
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Literal
 
 import numpy as np
@@ -22,6 +22,7 @@ import numpy.typing as npt
 
 from narrowgauge.arithmetic.arithmetic import Arithmetic
 from narrowgauge.arithmetic.rounding import Floats
+from narrowgauge.draws.approximate import Approximation
 from narrowgauge.draws.normals import exact_normals, normal_cdf
 
 __all__ = ["Draws", "Takes", "coarse_draws", "fine_draws", "inside"]
@@ -35,23 +36,35 @@ class Draws:
     """The float64 draws of one block, before any arm rounds them.
 
     `values` is what the kernel takes, `normals` the normals behind uniforms, both (steps, factors, paths); `refinement`
-    is the number of fine steps in a coarse one.
+    is the number of fine steps in a coarse one. `approximate` is what the kernel takes with approximate normals of the
+    same uniforms, None where no arm asks for them.
     """
 
     takes: Takes
     values: Doubles
     normals: Doubles | None
     refinement: int
+    approximate: Doubles | None = None
 
     @classmethod
-    def of(cls, takes: Takes, uniforms: Doubles, step: float, refinement: int) -> Draws:
+    def of(
+        cls, takes: Takes, uniforms: Doubles, step: float, refinement: int, approximation: Approximation | None = None
+    ) -> Draws:
         """Return the draws made from a block's uniforms, which they may overwrite; `step` is the fine h."""
+        cheap = None if approximation is None else approximation(uniforms)
         if takes == "uniforms":
             return cls(takes=takes, values=uniforms, normals=exact_normals(uniforms), refinement=refinement)
         values = exact_normals(uniforms, out=uniforms)
         if takes == "increments":
             values *= math.sqrt(step)
-        return cls(takes=takes, values=values, normals=None, refinement=refinement)
+            if cheap is not None:
+                cheap *= math.sqrt(step)
+        return cls(takes=takes, values=values, normals=None, refinement=refinement, approximate=cheap)
+
+    def approximated(self) -> Draws:
+        """Return the draws that an arm with approximate normals sees."""
+        assert self.approximate is not None  # some arm asked for them
+        return replace(self, values=self.approximate, approximate=None)
 
 
 def fine_draws(draws: Draws, arithmetic: Arithmetic) -> Floats:

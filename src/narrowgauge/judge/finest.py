@@ -12,6 +12,7 @@ from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.judge.accumulation import AccumulationFit, SignalDecay, correction_at, rejected
 from narrowgauge.judge.gain import Scheme
 from narrowgauge.judge.schemes import LevelJudgement, level_costs
+from narrowgauge.kernel.arms import Arm
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.measure.arms import REFERENCE
 
@@ -54,7 +55,10 @@ class Beyond:
 def finest_on_ladder(
     levels: Sequence[LevelJudgement], quantity: str, name: str, *, file: AuditFile, beyond: Beyond, alpha: float
 ) -> FinestLevel:
-    """Return the finest paying level of a format for one quantity; beyond the ladder for a split over float64."""
+    """Return the finest paying level of an arm for one quantity; beyond the ladder for a split over float64.
+
+    Not beyond it with approximate draws: the law of rounding says nothing about them.
+    """
     judged = [level.arms[quantity][name] for level in levels]
     paying = _leading(arm.verdict == "pays" for arm in judged)
     open_ended = _leading(arm.verdict != "does not pay" for arm in judged)
@@ -67,7 +71,7 @@ def finest_on_ladder(
     scheme = judged[-1].scheme
     if len(levels) == 1:
         return FinestLevel(level=level, possible=possible, extrapolated=False, reason="one level")
-    if scheme is None or scheme.wide != REFERENCE:
+    if scheme is None or scheme.wide != REFERENCE or not Arm.named(name).exact:
         return FinestLevel(level=level, possible=None, extrapolated=False, reason=f"{_OR_FINER}, not extrapolated")
     return _extrapolated(numbers[-1], scheme, file, beyond, alpha)
 

@@ -16,6 +16,7 @@ import numpy.typing as npt
 
 from narrowgauge.judge.costbounds import CostBounds, Side
 from narrowgauge.judge.intervals import Interval, binomial_lower, binomial_upper, jackknife, means, variances
+from narrowgauge.kernel.arms import Arm
 from narrowgauge.kernel.audittables import CostTable
 from narrowgauge.measure.arms import REFERENCE
 from narrowgauge.measure.moments import Series
@@ -53,7 +54,10 @@ class Scheme:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class LevelCosts:
-    """Costs on one level: `steps` of fine and coarse path together, `draws` of one path, and the cost table."""
+    """Costs on one level: `steps` of fine and coarse path together, `draws` of one path, and the cost table.
+
+    Arms of one kind of draws share them; where a correction branch takes both kinds it pays for both.
+    """
 
     steps: int
     draws: int
@@ -61,15 +65,16 @@ class LevelCosts:
 
     def path(self, arm: str) -> float:
         """Return the cost of one path in one arm."""
-        return self.steps * self.table.step(arm) + self._fixed
+        return self.steps * self.table.step(Arm.named(arm).format) + self._fixed(arm)
 
     def correction(self, narrow: str, wide: str) -> float:
         """Return the cost of one path of a correction branch: both arms' steps, draws and fixed part once."""
-        return self.steps * (self.table.step(narrow) + self.table.step(wide)) + self._fixed
+        steps = self.table.step(Arm.named(narrow).format) + self.table.step(Arm.named(wide).format)
+        return self.steps * steps + self._fixed(narrow, wide)
 
-    @property
-    def _fixed(self) -> float:
-        return self.draws * self.table.draws + self.table.path
+    def _fixed(self, *arms: str) -> float:
+        kinds = dict.fromkeys(Arm.named(arm).draws for arm in arms)
+        return self.draws * sum(self.table.draw(kind) for kind in kinds) + self.table.path
 
 
 class LevelView:

@@ -18,9 +18,9 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Literal
 
-from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.judge.gain import LevelCosts, LevelView, Scheme
 from narrowgauge.judge.intervals import Interval
+from narrowgauge.kernel.arms import wider
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.measure.arms import REFERENCE
 from narrowgauge.measure.moments import Series
@@ -91,11 +91,10 @@ class LevelJudgement:
 
 
 def judge_level(tally: LevelTally, file: AuditFile, alpha: float) -> LevelJudgement:
-    """Judge every narrow format on one level at confidence 1 - alpha."""
+    """Judge every narrow arm on one level at confidence 1 - alpha."""
     views = {name: _view(tally, file, name) for name in tally.quantities}
     court = _Court(tally=tally, file=file, alpha=alpha, views=views)
-    formats = list(file.formats.narrow)
-    arms = {quantity: {f: court.judge(quantity, f) for f in formats} for quantity in views}
+    arms = {quantity: {name: court.judge(quantity, name) for name in file.narrow} for quantity in views}
     best = {quantity: court.best(quantity) for quantity in views}
     return LevelJudgement(level=tally.level, arms=arms, best=best, joint=court.joint(best), views=views)
 
@@ -139,17 +138,17 @@ class _Court:
         if "alone" in formats.schemes:
             schemes.append(Scheme(kind="alone", narrow=name))
         if "split" in formats.schemes:
-            schemes += [Scheme(kind="split", narrow=name, wide=b) for b in formats.wide if _wider(b, name)]
+            schemes += [Scheme(kind="split", narrow=name, wide=b) for b in formats.wide if wider(b, name)]
         return schemes
 
     def rivals(self, name: str) -> list[Scheme]:
         """Return what a format competes with: the best that formats of more precision can do."""
         formats = self._file.formats
         found = [Scheme(kind="alone", narrow=REFERENCE)]
-        if _wider(formats.today, name):
+        if wider(formats.today, name):
             found.append(Scheme(kind="alone", narrow=formats.today))
         for wide in formats.wide:
-            if _wider(wide, name):
+            if wider(wide, name):
                 found += self.own(wide)
         return list(dict.fromkeys(found))
 
@@ -207,7 +206,7 @@ class _Court:
     def _allowed(self) -> list[Scheme]:
         formats = self._file.formats
         schemes = [Scheme(kind="alone", narrow=REFERENCE), Scheme(kind="alone", narrow=formats.today)]
-        for name in dict.fromkeys([*formats.wide, *formats.narrow]):
+        for name in dict.fromkeys([*formats.wide, *self._file.narrow]):
             schemes += self.own(name)
         return [s for s in dict.fromkeys(schemes) if self.admission(s, rival=True).standing == "yes"]
 
@@ -367,10 +366,6 @@ class _Court:
 def budget_levels(file: AuditFile) -> int:
     """Return over how many levels the bias budget is shared: all, or one where levels are not added up."""
     return len(file.ladder.levels) if file.kernel.coupling == "sum" else 1
-
-
-def _wider(name: str, than: str) -> bool:
-    return FORMATS[name].precision > FORMATS[than].precision
 
 
 def _worst(row: Mapping[Scheme, Interval]) -> Interval:

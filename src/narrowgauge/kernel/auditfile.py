@@ -7,7 +7,6 @@ AuditFileError with the dotted key, what is wrong, and what is accepted.
 from __future__ import annotations
 
 import copy
-import difflib
 import re
 import sys
 import tomllib
@@ -20,11 +19,13 @@ import msgspec
 
 from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.errors import AuditFileError
+from narrowgauge.kernel.arms import Arm
 from narrowgauge.kernel.auditparameters import check_parameter, passed, plain
 from narrowgauge.kernel.audittables import (
     RULES,
     TABLES,
     CostTable,
+    DrawsTable,
     FormatsTable,
     KernelTable,
     LadderTable,
@@ -38,10 +39,12 @@ from narrowgauge.kernel.audittables import (
     kind_of,
     shown,
 )
+from narrowgauge.kernel.givenkeys import CHEAP, check_drawing, check_names, defaults_in_use, nearest
 
 __all__ = [
     "AuditFile",
     "CostTable",
+    "DrawsTable",
     "FormatsTable",
     "KernelTable",
     "LadderTable",
@@ -54,8 +57,6 @@ __all__ = [
     "with_draws",
 ]
 
-_ORDER = ("kernel", "parameters", "ladder", "target", "formats", "cost", "sampling")
-_REQUIRED = ("kernel", "ladder")
 _BLOCK_DRAWS, _SMALLEST_BLOCK = 2**22, 1024
 _Record = TypeVar("_Record", bound=Table)
 _WORTHWHILE: float = TargetTable(rmse=1.0).worthwhile
@@ -79,12 +80,28 @@ class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
     folder: Path
     function: Callable[..., object] | None
     assumed: tuple[str, ...]
+    draws: DrawsTable | None = None
+
+    @property
+    def used_formats(self) -> tuple[str, ...]:
+        """The formats that are needed, least precise first: narrow, wide, today's, the reference, and of [draws]."""
+        needed = {*self.formats.narrow, *self.formats.wide, self.formats.today, "float64"}
+        needed |= set(self.draws.formats if self.draws else ())
+        return tuple(sorted((name for name in FORMATS if name in needed), key=_precision))
 
     @property
     def arms(self) -> tuple[str, ...]:
-        """The formats that are needed, least precise first: narrow, wide, today's and the reference."""
-        needed = {*self.formats.narrow, *self.formats.wide, self.formats.today, "float64"}
-        return tuple(sorted((name for name in FORMATS if name in needed), key=_precision))
+        """The names of all arms; with approximate draws those of float64 too, which show what draws alone do."""
+        if self.draws is None:
+            return self.used_formats
+        cheap = [name for name in self.used_formats if name in {*self.draws.formats, "float64"}]
+        return (*self.used_formats, *(Arm(name, "approximate").name for name in cheap))
+
+    @property
+    def narrow(self) -> tuple[str, ...]:
+        """The names of the arms that are judged: the narrow formats, then those with approximate draws."""
+        cheap = self.draws.formats if self.draws else ()
+        return (*self.formats.narrow, *(Arm(name, "approximate").name for name in cheap))
 
     @property
     def stem(self) -> str:
@@ -116,7 +133,10 @@ class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
         return {name: passed(value) for name, value in self.parameters.items()}
 
     def asked(self) -> dict[str, object]:
-        """Return the file as a plain document with every default filled in; an absent target is None."""
+        """Return the file as a plain document with every default filled in; an absent target is None.
+
+        Without [draws] it has neither that table nor the cost of approximate draws.
+        """
         tables: dict[str, object] = {
             "kernel": _document(self.kernel),
             "parameters": copy.deepcopy(dict(self.parameters)),
@@ -125,8 +145,12 @@ class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
             "formats": _document(self.formats),
             "cost": _document(self.cost),
             "sampling": _document(self.sampling),
+            "assumed": list(self.assumed),
         }
-        return {**tables, "assumed": list(self.assumed)}
+        if self.draws is not None:
+            return {**tables, "draws": _document(self.draws)}
+        cost = {name: value for name, value in _document(self.cost).items() if name != CHEAP}
+        return {**tables, "cost": cost}
 
 
 def read_audit_file(path: Path) -> AuditFile:
@@ -228,8 +252,8 @@ def _checked(raw: dict[str, object], source: str, folder: Path, function: Callab
 
 
 def _assembled(raw: dict[str, object], source: str, folder: Path, function: Callable[..., object] | None) -> AuditFile:
-    _check_names(raw)
-    _check_drawing(raw["kernel"])
+    check_names(raw)
+    check_drawing(raw["kernel"])
     parameters = raw.get("parameters", {})
     if not isinstance(parameters, dict):
         raise TableError("parameters", f"{shown(parameters)} is {kind_of(parameters)}", "a table")
@@ -244,52 +268,45 @@ def _assembled(raw: dict[str, object], source: str, folder: Path, function: Call
         ladder=_table(LadderTable, raw["ladder"]),
         target=_table(TargetTable, raw["target"]) if "target" in raw else None,
         formats=_table(FormatsTable, raw.get("formats", {})),
-        cost=_table(CostTable, raw["cost"]) if "cost" in raw else CostTable.by_storage(),
+        cost=_cost(raw),
         sampling=_table(SamplingTable, raw.get("sampling", {})),
         source=source,
         folder=folder,
         function=function,
-        assumed=_assumed(raw),
+        assumed=defaults_in_use(raw),
+        draws=_draws(raw),
     )
     _check_ladder(audit_file.kernel, audit_file.ladder)
-    for name in audit_file.arms:
+    for name in audit_file.used_formats:
         if getattr(audit_file.cost, name) is None:
             key = f"cost.{name}"
             raise TableError(key, "missing, and the audit uses this format", RULES[key].accepted)
     return audit_file
 
 
-def _check_names(raw: dict[str, object]) -> None:
-    """Raise a TableError at the first unknown table or key, or at a required table that is not there."""
-    for name, value in raw.items():
-        if name not in _ORDER:
-            homes = [table for table, record in TABLES.items() if name in record.__struct_fields__]
-            if not isinstance(value, dict) and homes:
-                hint = f"a key outside every table, perhaps {shown(f'{homes[0]}.{name}')} is meant"
-            else:
-                hint = "unknown table" + _nearest(name, _ORDER)
-            raise TableError(dotted(name), hint, ", ".join(_ORDER))
-        if name in TABLES and not isinstance(value, dict):
-            keys = ", ".join(TABLES[name].__struct_fields__)
-            raise TableError(name, f"{shown(value)} is {kind_of(value)}", f"a table with keys of {keys}")
-    for name in _REQUIRED:
-        if name not in raw:
-            needed = " and ".join(field.name for field in msgspec.structs.fields(TABLES[name]) if field.required)
-            raise TableError(name, "the table is missing", f"a table [{name}] with {needed}")
+def _cost(raw: Mapping[str, object]) -> CostTable:
+    """Return the costs; without the table those by storage. An approximate draw costs an exact one's unless it says."""
+    cost = _table(CostTable, raw["cost"]) if "cost" in raw else CostTable.by_storage()
+    if "draws" not in raw or cost.approximate_draws is not None:
+        return cost
+    return msgspec.structs.replace(cost, approximate_draws=cost.draws)
 
 
-def _check_drawing(kernel: object) -> None:
-    """Raise a TableError for a key that describes an array of draws where the kernel draws for itself."""
-    if isinstance(kernel, dict) and kernel.get("takes") == "rng":
-        for key in ("factors", "layout"):
-            if key in kernel:
-                problem = f'{shown(kernel[key])} describes an array of draws, which takes = "rng" has not'
-                raise TableError(f"kernel.{key}", problem, "no such key; it is worked out from what the kernel draws")
-
-
-def _nearest(name: str, known: tuple[str, ...]) -> str:
-    match = difflib.get_close_matches(name, known, n=1)
-    return f", perhaps {shown(match[0])} is meant" if match else ""
+def _draws(raw: Mapping[str, object]) -> DrawsTable | None:
+    """Return the table of approximate draws, tried in the narrow formats unless it says in which; None without one."""
+    kernel, cost = raw["kernel"], raw.get("cost")
+    if "draws" not in raw:
+        if isinstance(cost, dict) and CHEAP in cost:
+            raise TableError(f"cost.{CHEAP}", "there are no approximate draws", "no such key, or a table [draws]")
+        return None
+    draws = _table(DrawsTable, raw["draws"])
+    if isinstance(kernel, dict):
+        draws.check_takes(kernel.get("takes"))
+    if draws.formats:
+        return draws
+    if isinstance(raw["draws"], dict) and "formats" in raw["draws"]:
+        draws.refuse("formats", "the array is empty")
+    return msgspec.structs.replace(draws, formats=_table(FormatsTable, raw.get("formats", {})).narrow)
 
 
 def _table(record: type[_Record], raw: object) -> _Record:
@@ -299,7 +316,7 @@ def _table(record: type[_Record], raw: object) -> _Record:
     known = tuple(field.name for field in fields)
     for key in values:
         if key not in known:
-            raise TableError(dotted(record.table, key), "unknown key" + _nearest(key, known), ", ".join(known))
+            raise TableError(dotted(record.table, key), "unknown key" + nearest(key, known), ", ".join(known))
     for field in fields:
         if field.required and field.name not in values:
             key = f"{record.table}.{field.name}"
@@ -357,17 +374,3 @@ def _check_ladder(kernel: KernelTable, ladder: LadderTable) -> None:
         problem = f"{ladder.coarsest_steps} is not accepted, {why}"
         raise TableError("ladder.coarsest_steps", problem, f"an integer from 1 to {most}")
     raise TableError("ladder.finest", f"{shown(ladder.finest)} is too fine, {why}", f"an integer from 0 to {fits}")
-
-
-def _assumed(raw: Mapping[str, object]) -> tuple[str, ...]:
-    """Return the dotted keys of all defaults in use, in order of the file."""
-    assumed: list[str] = []
-    for table, record in TABLES.items():
-        given = raw.get(table)
-        keys = [name for name in record.__struct_fields__ if not isinstance(given, dict) or name not in given]
-        if table == "target" and given is None:
-            keys = ["worthwhile"]  # the one key of it that counts without a target
-        if table == "cost" and given is not None:
-            keys = [name for name in keys if name not in FORMATS]  # a format without a cost is not used
-        assumed.extend(f"{table}.{name}" for name in keys)
-    return tuple(assumed)

@@ -33,6 +33,8 @@ _TAKES_BY_NAME: tuple[tuple[str, re.Pattern[str]], ...] = (
     ("normals", re.compile(r"zs?|xis?|eps|epsilons?|.*normals?|.*gaussians?")),
     ("uniforms", re.compile(r"us?|.*uniforms?")),
 )
+_OPTIONAL = ("target", "draws", "cost")
+_INSTEAD = ("draws.intervals", "draws.degree")  # not accepted beside the value shown for draws.approximate
 _COUNTS = ("steps", "paths")  # what a kernel that draws for itself is told
 _STEP_NAMES = re.compile(r"h|dt|delta_?t?|.*step(_?size)?|time_?step|tau")
 
@@ -58,6 +60,11 @@ _MEANINGS: dict[str, str] = {
     "formats.narrow": "formats that are tried",
     "formats.wide": "formats that may be the wide half of a split",
     "formats.schemes": "one format alone, or split into a low and a correction branch",
+    "draws.approximate": "approximate normals: constant, linear, polynomial, file.py:function",
+    "draws.cells": "of constant: a power of two",
+    "draws.intervals": "of linear, in place of cells: dyadic intervals on either side of 1/2",
+    "draws.degree": "of polynomial, in place of cells",
+    "draws.formats": "formats that are tried with them too; the default is the narrow ones",
     "cost.float64": "relative cost of one step of one path; the default is storage bits / 64",
     "cost.float32": "the same",
     "cost.float16": "the same",
@@ -66,6 +73,7 @@ _MEANINGS: dict[str, str] = {
     "cost.e4m3": "the same",
     "cost.e5m2": "the same",
     "cost.draws": "one draw",
+    "cost.approximate_draws": "no default; one approximate draw, else as much as an exact one",
     "cost.path": "fixed cost of a path",
     "sampling.block": "most paths of a block, a multiple of 1024",
     "sampling.paths": "paths of a level at the first look",
@@ -78,6 +86,12 @@ _VALUES: dict[str, object] = {
     "ladder.horizon": 1.0,
     "target.rmse": 0.002,
     "target.largest_correction": 1.0,
+    "draws.approximate": "constant",
+    "draws.cells": 1024,
+    "draws.intervals": 16,
+    "draws.degree": 9,
+    "draws.formats": ("float16", "bfloat16", "float32"),
+    "cost.approximate_draws": 0.0,
     **{f"cost.{name}": row.bits / 64 for name, row in FORMATS.items()},
 }
 
@@ -118,11 +132,14 @@ def draft(target: str) -> str:
         "# Passed to the kernel by keyword; arrays of numbers arrive as float64 NumPy arrays.",
         *_parameter_lines(function, _COUNTS if takes == "rng" else ()),
     ]
+    without_normals = takes in ("uniforms", "rng")
     for table, record in TABLES.items():
-        if table != "kernel":
-            # These two need keys of their own once they are there, so that an empty one is not accepted.
-            header = f"# [{table}]" if table in ("target", "cost") else f"[{table}]"
-            lines += ["", header, *(_line(f"{table}.{key}", values) for key in record.__struct_fields__)]
+        if table != "kernel" and not (table == "draws" and without_normals):
+            # These need keys of their own once they are there, so that an empty one is not accepted.
+            header = f"# [{table}]" if table in _OPTIONAL else f"[{table}]"
+            keys = [f"{table}.{key}" for key in record.__struct_fields__]
+            lines += ["", header]
+            lines += [_line(key, values) for key in keys if not (key == "cost.approximate_draws" and without_normals)]
     return "\n".join(lines) + "\n"
 
 
@@ -175,8 +192,8 @@ def _line(key: str, values: dict[str, object], note: str = "") -> str:
     table, name = key.split(".")
     field = next(field for field in msgspec.structs.fields(TABLES[table]) if field.name == name)
     value = values.get(key, field.default)
-    # The whole of [target] is optional, so that its required key is a comment too.
-    optional = "" if note or (field.required and table != "target") else "# "
+    # Where the whole table is optional, its required key is a comment too.
+    optional = "" if note or (field.required and table not in _OPTIONAL) else "# " * (1 + (key in _INSTEAD))
     return f"{optional}{name} = {_toml(value)}  # {note or _MEANINGS[key]}"
 
 

@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterator, Mapping
+from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 from types import CodeType, FunctionType
 from typing import Any
+
+import msgspec
 
 from narrowgauge.arithmetic.arithmetic import Arithmetic
 from narrowgauge.dispatch.copies import PrivateCopy, copy_function, new_setting
@@ -16,10 +19,10 @@ from narrowgauge.dispatch.modules import STOOD_IN, Found, Sources
 from narrowgauge.dispatch.setting import Observer, Place
 from narrowgauge.errors import AuditFileError, DispatchError, KernelError
 from narrowgauge.kernel.auditfile import AuditFile
-from narrowgauge.kernel.audittables import RULES, shown
+from narrowgauge.kernel.audittables import RULES, KernelTable, shown
 from narrowgauge.kernel.fingerprint import fingerprint
 
-__all__ = ["KernelSource", "find_kernel", "private_copy"]
+__all__ = ["KernelSource", "approximation_function", "find_kernel", "private_copy"]
 
 _OWN = __name__.partition(".")[0]
 _TWICE = "a module that can be executed twice; else list it under kernel.shared, where it is not rounded"
@@ -30,7 +33,8 @@ class KernelSource:
     """A kernel that was found: compiled code and the function's name in it, or a function handed over from Python.
 
     `sources` holds the kernel's module and the listed ones, read and compiled once for all arms; `allowed` the lines of
-    theirs that may let values leave, by the words of the audit file.
+    theirs that may let values leave, by the words of the audit file; `approximation` the user's function that makes
+    approximate normals, if there is one.
     """
 
     run: str
@@ -41,14 +45,20 @@ class KernelSource:
     function: Callable[..., Any] | None
     sources: Sources
     allowed: Mapping[str, Place]
+    approximation: KernelSource | None = None
 
     def digest(self) -> str:
         """Return the fingerprint of all that is copied: source texts, and the function that was handed over.
 
+        A function of the user's that makes normals counts too.
+
         Raises AuditFileError where a file of a listed package cannot be read.
         """
         try:
-            return fingerprint(self.sources.texts(), self.function)
+            own = fingerprint(self.sources.texts(), self.function)
+            if self.approximation is None:
+                return own
+            return fingerprint({"kernel": own.encode(), "draws": self.approximation.digest().encode()})
         except OSError as problem:
             what = f"cannot read {problem.filename}: {problem.strerror}"
             raise AuditFileError(self.source, "kernel.modules", what, "Python files") from None
@@ -81,7 +91,40 @@ def find_kernel(audit_file: AuditFile) -> KernelSource:
         function=function,
         sources=sources,
         allowed=_allowed(audit_file, sources, path),
+        approximation=_approximation(audit_file),
     )
+
+
+def _approximation(audit_file: AuditFile) -> KernelSource | None:
+    """Find the user's function that makes approximate normals as a kernel is found; None where there is none."""
+    draws = audit_file.draws
+    if draws is None or draws.built_in:
+        return None
+    table = KernelTable(run=draws.approximate, takes="uniforms")
+    with _blaming_draws():
+        return find_kernel(msgspec.structs.replace(audit_file, kernel=table, function=None, draws=None))
+
+
+def approximation_function(kernel: KernelSource) -> Callable[..., Any] | None:
+    """Return the user's function that makes approximate normals, to be run in plain NumPy; None where there is none.
+
+    Raises what making a copy of a kernel raises.
+    """
+    if kernel.approximation is None:
+        return None
+    with _blaming_draws():
+        return private_copy(kernel.approximation, None).function
+
+
+@contextmanager
+def _blaming_draws() -> Iterator[None]:
+    """Let what is said of kernel.run be said of draws.approximate, where that is what is looked for."""
+    try:
+        yield
+    except AuditFileError as problem:
+        if problem.key != "kernel.run":
+            raise
+        raise AuditFileError(problem.source, "draws.approximate", problem.problem, problem.accepted) from None
 
 
 def private_copy(

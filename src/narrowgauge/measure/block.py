@@ -18,6 +18,8 @@ from narrowgauge.draws.coarsen import Draws
 from narrowgauge.draws.streams import GRAIN, Purpose, UniformStream, apart, block_paths, uniforms
 from narrowgauge.draws.tape import Tape
 from narrowgauge.errors import AuditFileError, DispatchError, KernelError
+from narrowgauge.kernel.approximation import approximation_of
+from narrowgauge.kernel.arms import Arm, Kind
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.loading import KernelSource
 from narrowgauge.measure.arms import REFERENCE, arms_of, pairs_of
@@ -58,6 +60,7 @@ class BlockRunner:
         self._callers: dict[str, Caller] = {}
         self._plan: DrawPlan | None = None
         self._rows: RowPlan | Literal["unknown"] | None = _UNKNOWN
+        self.approximation = approximation_of(audit_file, kernel)
         self.arms = arms_of(audit_file.arms)
         self.pairs = pairs_of(self.arms, audit_file.formats.wide)
         self._names: tuple[int, list[str]] | None = None  # the level first run, and the quantities it has
@@ -75,9 +78,9 @@ class BlockRunner:
         rows = self._row_plan()
         return rows is not None and not rows.rows
 
-    def caller(self, arithmetic: Arithmetic | None, observer: Observer | None = None) -> Caller:
+    def caller(self, arithmetic: Arithmetic | None, observer: Observer | None = None, kind: Kind = "exact") -> Caller:
         """Return a new private copy of the kernel, called as in the blocks; plain NumPy for None."""
-        return Caller(self._file, self._kernel, arithmetic, observer, rows=not self.singly)
+        return Caller(self._file, self._kernel, arithmetic, observer, rows=not self.singly, kind=kind)
 
     def paths(self, level: int) -> int:
         """Return the number of paths of one block of a level: the fewest where a kernel is run path by path."""
@@ -113,7 +116,7 @@ class BlockRunner:
                 steady=drawing.steady,
             )
         values = uniforms(seed, purpose, level, block, (steps, file.kernel.factors, paths))
-        return Draws.of(takes, values, file.ladder.step_size(level), refinement)
+        return Draws.of(takes, values, file.ladder.step_size(level), refinement, self.approximation)
 
     def _drawing(self) -> DrawPlan:
         """Return what the kernel draws, found out once."""
@@ -124,7 +127,7 @@ class BlockRunner:
     def _row_plan(self) -> RowPlan | None:
         """Return how a kernel of one path a call is run, found out once; None for any other kernel."""
         if self._rows is _UNKNOWN:
-            arms = self.arms[1:]
+            arms = [name for name in self.arms[1:] if Arm.named(name).exact]  # draws are no matter of rows
             self._rows = plan_rows(
                 self._file, self._kernel, arms, lambda level, paths: self.draws(level, 0, Purpose.TRIAL, paths)
             )
@@ -183,7 +186,8 @@ class BlockRunner:
         caller = self._callers.get(arm)
         try:
             if caller is None:
-                caller = self._callers[arm] = self.caller(arithmetic_named(arm))
+                named = Arm.named(arm)
+                caller = self._callers[arm] = self.caller(arithmetic_named(named.format), kind=named.draws)
             coupled = self.coupled(level)
             values = caller.fine(draws, level, coarse_follows=coupled)
             coarse = caller.coarse(draws, level) if coupled else {}

@@ -13,6 +13,7 @@ from narrowgauge.dispatch.setting import Observer, Place
 from narrowgauge.draws.coarsen import Draws, coarse_draws, fine_draws
 from narrowgauge.draws.tape import ArmDraws, Reader, Tape, TapeError
 from narrowgauge.errors import KernelError
+from narrowgauge.kernel.arms import Kind
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.contract import evaluate, evaluate_drawing, takes_one_path
 from narrowgauge.kernel.loading import KernelSource, private_copy
@@ -26,7 +27,8 @@ Quantities = dict[str, npt.NDArray[np.float64]]
 class Caller:
     """A private copy of a kernel in one arithmetic, or in plain NumPy for None; raises what making the copy raises.
 
-    A kernel that takes one path a call is called for each, or with whole `rows` of them.
+    A kernel that takes one path a call is called for each, or with whole `rows` of them. `kind` says which draws of a
+    block it sees.
     """
 
     def __init__(
@@ -37,8 +39,10 @@ class Caller:
         observer: Observer | None = None,
         *,
         rows: bool = False,
+        kind: Kind = "exact",
     ) -> None:
         self._file = file
+        self._kind = kind
         self._arithmetic = arithmetic or arithmetic_named(REFERENCE)
         self._feed = Feed() if file.kernel.takes == "rng" else None
         self._drawn: Floats | ArmDraws | None = None
@@ -59,6 +63,8 @@ class Caller:
         if isinstance(draws, Tape):
             self._drawn = ArmDraws(draws, self._arithmetic)
             return self._on_tape(self._drawn.fine(), level, draws.paths)
+        if self._kind == "approximate":
+            draws = draws.approximated()
         drawn = fine_draws(draws, self._arithmetic)
         self._drawn = coarse_draws(draws, drawn, self._arithmetic) if coarse_follows else None
         return self._on_array(drawn, level)

@@ -11,6 +11,7 @@ from typing import Literal
 
 import msgspec
 
+from narrowgauge.record.draws import DrawsEntry, OrderEntry, PartsEntry, SeparationEntry
 from narrowgauge.record.plan import (
     AllocationEntry,
     CommonLevelEntry,
@@ -44,12 +45,15 @@ __all__ = [
     "ConstantValue",
     "CorrectionEntry",
     "DecisionEntry",
+    "DrawsEntry",
     "FaultEntry",
     "FinestEntry",
     "KernelEntry",
     "LawEntry",
     "LevelEntry",
     "LineCount",
+    "OrderEntry",
+    "PartsEntry",
     "PlanEntry",
     "QuantityEntry",
     "RaisedEntry",
@@ -59,6 +63,7 @@ __all__ = [
     "ReferenceEntry",
     "RulesEntry",
     "SchemeEntry",
+    "SeparationEntry",
     "TelescopingEntry",
     "TrialEntry",
     "VerdictEntry",
@@ -259,7 +264,7 @@ class AgreementEntry(Entry, frozen=True, kw_only=True):
 
 
 class QuantityEntry(Entry, frozen=True, kw_only=True):
-    """Everything about one quantity."""
+    """Everything about one quantity; `accumulation` of the arms with exact draws, `separation` with [draws] alone."""
 
     levels: list[LevelEntry]
     accumulation: dict[str, AccumulationEntry]
@@ -267,6 +272,7 @@ class QuantityEntry(Entry, frozen=True, kw_only=True):
     orders: OrdersEntry
     finest_paying_level: dict[str, FinestEntry]
     allocation: AllocationEntry
+    separation: SeparationEntry | msgspec.UnsetType = msgspec.UNSET
 
 
 class VerdictEntry(Entry, frozen=True, kw_only=True):
@@ -298,7 +304,7 @@ class RulesEntry(Entry, frozen=True, kw_only=True):
 
 
 class AuditRecord(Entry, frozen=True, kw_only=True):
-    """The whole audit; parts that a later version fills are None."""
+    """The whole audit; parts that a later version fills are None. `draws` is there with [draws] alone."""
 
     schema: str
     kernel: KernelEntry
@@ -315,6 +321,7 @@ class AuditRecord(Entry, frozen=True, kw_only=True):
     domain: None = None
     cautions: list[str]
     provenance: dict[str, object]
+    draws: DrawsEntry | msgspec.UnsetType = msgspec.UNSET
 
     def document(self) -> dict[str, object]:
         """Return the record as plain mappings, lists and numbers, in the order of the fields."""

@@ -4,9 +4,19 @@ from __future__ import annotations
 
 from collections.abc import Iterable
 
-from narrowgauge.record.audit import AccumulationEntry, ArmEntry, AuditRecord, LevelEntry, QuantityEntry
+from narrowgauge.record.audit import (
+    AccumulationEntry,
+    ArmEntry,
+    AuditRecord,
+    LevelEntry,
+    OrderEntry,
+    PartsEntry,
+    QuantityEntry,
+    SeparationEntry,
+)
 from narrowgauge.report.settings import bias_share, narrow_formats, worthwhile
 from narrowgauge.report.wording import (
+    NONE,
     at_most,
     clean,
     count,
@@ -18,7 +28,7 @@ from narrowgauge.report.wording import (
     shown_edge,
 )
 
-__all__ = ["accumulation", "format_notes", "nonfinite", "orders"]
+__all__ = ["accumulation", "format_notes", "nonfinite", "orders", "separation_notes"]
 
 
 def format_notes(record: AuditRecord, quantity: str, name: str) -> list[str]:
@@ -177,6 +187,31 @@ def orders(entry: QuantityEntry) -> str:
         kurtosis, level = max(known)
         text += f" Their largest kurtosis is {figure(kurtosis)} (level {level})."
     return text
+
+
+def separation_notes(found: SeparationEntry, parts: list[PartsEntry], name: str) -> list[str]:
+    """Return which part costs the accuracy of an arm with approximate draws, and how its correction goes with h."""
+    sides = [
+        f"{words} on {levels_named(levels)}"
+        for side, words in (("draws", "the approximate draws"), ("arithmetic", "the arithmetic"))
+        if (levels := [one.level for one in parts if one.larger == side])
+    ]
+    lines = [f"What puts more into the correction: {joined(sides)}."] if sides else []
+    lost = [one.level for one in parts if None in (one.arithmetic, one.draws, one.both)]
+    if lost:
+        lines.insert(0, f"{NONE} on {levels_named(lost)}: the kernel raised there, or has no finite variance.")
+    draws_alone = "float64/approximate"
+    shown = {"with both": found.orders.get(name), "with draws alone": found.orders.get(draws_alone)}
+    if name == draws_alone:
+        shown = {"with draws alone": found.orders[name]}
+    orders = [f"{words} {_order(one)}" for words, one in shown.items() if one is not None]
+    return [*lines, f"Order in h of the correction's variance: {joined(orders)}."]
+
+
+def _order(one: OrderEntry) -> str:
+    if one.slope is None:
+        return f"not to be told ({clean(one.reason)})"
+    return f"{interval(one.slope, one.slope_low, one.slope_high)} ({levels_named(one.levels)})"
 
 
 def _rounded_up(paths: int) -> str:

@@ -2,16 +2,18 @@
 
 from __future__ import annotations
 
-from narrowgauge.record.audit import AuditRecord
-from narrowgauge.report.wording import clean, joined, setting_value
+from narrowgauge.record.audit import AuditRecord, DrawsEntry
+from narrowgauge.report.wording import clean, count, figure, joined, setting_value
 
 __all__ = [
+    "approximate_draws",
     "arithmetics",
     "assumed_costs",
     "assumptions",
     "bias_share",
     "confidence",
     "coupled",
+    "exact_formats",
     "measured_to",
     "narrow_formats",
     "setting",
@@ -29,8 +31,13 @@ def setting(record: AuditRecord, key: str) -> object:
 
 
 def narrow_formats(record: AuditRecord) -> list[str]:
-    """Return the formats that were judged, in the order of the audit file."""
+    """Return the arms that were judged, in the order of the audit file."""
     return list(record.verdict.finest_paying_level)
+
+
+def exact_formats(record: AuditRecord) -> list[str]:
+    """Return those of them with exact draws, whose error is one of rounding alone."""
+    return [name for name in narrow_formats(record) if record.arms[name].draws == "exact"]
 
 
 def today(record: AuditRecord) -> str:
@@ -95,6 +102,17 @@ def arithmetics(record: AuditRecord) -> str:
         words += f", {joined(entry.widened)} in a wider format" if entry.widened else ""
         kinds.setdefault(clean(words), []).append(clean(arm))
     return "; ".join(f"{joined(arms)}: {words}" for words, arms in kinds.items())
+
+
+def approximate_draws(draws: DrawsEntry) -> str:
+    """Return what approximate normals there are, and how good."""
+    kind = {
+        "constant": f"piecewise constant on {count(draws.cells or 0)} cells",
+        "linear": f"piecewise linear on {count(draws.intervals or 0)} dyadic intervals either side of 1/2",
+        "polynomial": f"a polynomial of degree {count(draws.degree or 0)}",
+    }.get(draws.approximate, f"by {clean(draws.approximate)}")
+    error = f"mean square error {figure(draws.mean_square_error)}"
+    return f"{kind}; {error}, mean {figure(draws.mean)}, variance {figure(draws.variance, 5)}."
 
 
 def _assumed(record: AuditRecord) -> list[str]:

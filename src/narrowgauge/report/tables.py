@@ -16,11 +16,12 @@ from narrowgauge.record.audit import (
     AuditRecord,
     CommonPlanEntry,
     LevelEntry,
+    PartsEntry,
     PlanEntry,
     QuantityEntry,
 )
 from narrowgauge.report.layout import Ruled
-from narrowgauge.report.settings import assumed_costs, confidence, narrow_formats, today, worthwhile
+from narrowgauge.report.settings import assumed_costs, confidence, exact_formats, today, worthwhile
 from narrowgauge.report.wording import NONE, clean, count, figure, interval, levels_named, percent, scheme_words
 
 __all__ = [
@@ -32,6 +33,7 @@ __all__ = [
     "common_table",
     "format_table",
     "missing_figures",
+    "parts_table",
     "plan_table",
     "signal_table",
 ]
@@ -54,8 +56,8 @@ VERDICT_STYLES = {"pays": "bold cyan", "does not pay": "yellow", "undecided": "m
 
 
 def signal_table(record: AuditRecord, entry: QuantityEntry) -> Ruled:
-    """Return standard deviations: of the reference's level difference, and of each narrow format's error."""
-    formats = narrow_formats(record)
+    """Return standard deviations: of the reference's level difference, and of each narrow format's rounding error."""
+    formats = exact_formats(record)
     names = ("level", "steps", "paths", "signal", *(f"noise\n{clean(name)}" for name in formats))
     table = Ruled(*((name, "number") for name in names))
     for level in entry.levels:
@@ -105,6 +107,23 @@ def format_table(record: AuditRecord, entry: QuantityEntry, name: str) -> Ruled:
             scheme = "alone" if arm.scheme.wide is None else f"with {clean(arm.scheme.wide)}"
         edge = interval(arm.edge, arm.edge_low, arm.edge_high, thresholds)
         table.add_row(*_plain(str(level.level), scheme, edge), verdict_words(arm))
+    return table
+
+
+def parts_table(entry: QuantityEntry, parts: Sequence[PartsEntry]) -> Ruled:
+    """Return standard deviations of a format's correction by arithmetic, by draws and by both, and which is larger."""
+    names = ("level", "signal", "arithmetic", "draws", "both")
+    table = Ruled(*((name, "number") for name in names), ("larger", "words"))
+    for level, one in zip(entry.levels, parts, strict=True):
+        known = one.arithmetic is not None and one.draws is not None
+        table.add_row(
+            *_plain(
+                str(level.level),
+                _deviation(level.reference.level_variance, 3),
+                *(_deviation(variance, 2) for variance in (one.arithmetic, one.draws, one.both)),
+                one.larger or ("not settled" if known else NONE),
+            )
+        )
     return table
 
 
@@ -175,7 +194,7 @@ def missing_figures(record: AuditRecord, entry: QuantityEntry) -> list[str]:
     lost = [level.level for level in entry.levels if level.reference.level_variance is None]
     if lost:
         found.append(f"no signal on {levels_named(lost)}: fewer than two paths are finite in the reference")
-    for name in narrow_formats(record):
+    for name in exact_formats(record):
         arms = [(level.level, level.arms.get(name)) for level in entry.levels]
         dashes = [(level, arm) for level, arm in arms if arm is None or arm.error_variance is None]
         for words in dict.fromkeys(_why(arm) for _, arm in dashes):

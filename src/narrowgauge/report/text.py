@@ -8,16 +8,18 @@ from __future__ import annotations
 from collections.abc import Iterable, Sequence
 from pathlib import Path
 
+from msgspec import UnsetType
 from rich.console import Group, RenderableType
 from rich.rule import Rule
 from rich.text import Text
 
-from narrowgauge.record.audit import AuditRecord, FaultEntry, PlanEntry, TrialEntry
+from narrowgauge.record.audit import AuditRecord, FaultEntry, PlanEntry, QuantityEntry, TrialEntry
 from narrowgauge.report.constants import constant_lines, no_constants
 from narrowgauge.report.layout import Hanging
-from narrowgauge.report.notes import accumulation, format_notes, nonfinite, orders
+from narrowgauge.report.notes import accumulation, format_notes, nonfinite, orders, separation_notes
 from narrowgauge.report.progress import Progress, planned_text
 from narrowgauge.report.settings import (
+    approximate_draws,
     arithmetics,
     assumptions,
     coupled,
@@ -32,6 +34,7 @@ from narrowgauge.report.tables import (
     common_table,
     format_table,
     missing_figures,
+    parts_table,
     plan_table,
     signal_table,
 )
@@ -53,6 +56,8 @@ def audit_text(record: AuditRecord, folder: Path | None) -> Group:
         parts += _quantity(record, name)
     parts += _verdict(record)
     parts += [*_heading("Behind the figures"), _labelled("Arithmetic", f"{arithmetics(record)}.")]
+    if not isinstance(record.draws, UnsetType):
+        parts.append(_labelled("Approximate draws", approximate_draws(record.draws)))
     if record.reach is not None:
         parts.append(_labelled("Reach of the emulation, in a trial run", reach_summary(record.reach)))
         parts += _bullets(reach_notes(record.reach))
@@ -126,6 +131,12 @@ def _legend(record: AuditRecord) -> list[RenderableType]:
         "pays": f"the interval of the edge is above 1; does not pay: below {worthwhile(record):g}, or not admissible",
         "breaks even": "up to this cost of a narrow step, a wide one costing 1, the scheme is worth it",
     }
+    if not isinstance(record.draws, UnsetType):
+        terms["float16/approximate"] = "float16 with approximate draws, made from the same uniforms as the exact ones"
+        terms["arithmetic, draws, both"] = (
+            "standard deviation of the correction to float64 from the format with exact draws, from float64 with "
+            "approximate draws, and from the format with approximate draws"
+        )
     return [Hanging(_labelled(term, f"{words}."), "  ") for term, words in terms.items()]
 
 
@@ -142,6 +153,7 @@ def _quantity(record: AuditRecord, name: str) -> list[RenderableType]:
     for arm in narrow_formats(record):
         parts.append(Text(f"{clean(arm)} for {clean(name)}", style="bold"))
         parts += [format_table(record, entry, arm), *_bullets(format_notes(record, name, arm))]
+        parts += _separation(entry, arm)
         if len(record.quantities) > 1:
             finest = finest_words(entry.finest_paying_level[arm], measured_to(record))
             parts.append(Text(f"Finest level where it still pays, by {clean(name)} alone: {finest}."))
@@ -152,6 +164,16 @@ def _quantity(record: AuditRecord, name: str) -> list[RenderableType]:
         title = f"Paths for an RMSE of {setting_value(entry.allocation.rmse)} in {clean(name)}"
         parts += [Text(title, style="bold"), plan_table(entry.allocation), *_bounded(entry.allocation.levels), Text()]
     return parts
+
+
+def _separation(entry: QuantityEntry, arm: str) -> list[RenderableType]:
+    """Return what arithmetic, draws and both do to the correction of an arm with approximate draws."""
+    found = entry.separation
+    if isinstance(found, UnsetType) or arm not in found.orders:
+        return []
+    rows = found.parts.get(arm.partition("/")[0], [])
+    table: list[RenderableType] = [Text(), parts_table(entry, rows)] if rows else []
+    return [*table, *_bullets(separation_notes(found, rows, arm))]
 
 
 def _verdict(record: AuditRecord) -> list[RenderableType]:

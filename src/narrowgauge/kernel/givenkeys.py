@@ -1,0 +1,71 @@
+"""Which tables and keys an audit file gives: unknown ones, missing ones, and the defaults of those it leaves out."""
+
+from __future__ import annotations
+
+import difflib
+from collections.abc import Mapping
+
+import msgspec
+
+from narrowgauge.arithmetic.formats import FORMATS
+from narrowgauge.kernel.audittables import TABLES, TableError, dotted, kind_of, shown
+from narrowgauge.kernel.drawstable import counting_keys
+
+__all__ = ["CHEAP", "check_drawing", "check_names", "defaults_in_use", "nearest"]
+
+CHEAP = "approximate_draws"  # a cost that counts with [draws] alone
+
+_ORDER = ("kernel", "parameters", "ladder", "target", "formats", "draws", "cost", "sampling")
+_REQUIRED = ("kernel", "ladder")
+
+
+def check_names(raw: dict[str, object]) -> None:
+    """Raise a TableError at the first unknown table or key, or at a required table that is not there."""
+    for name, value in raw.items():
+        if name not in _ORDER:
+            homes = [table for table, record in TABLES.items() if name in record.__struct_fields__]
+            if not isinstance(value, dict) and homes:
+                hint = f"a key outside every table, perhaps {shown(f'{homes[0]}.{name}')} is meant"
+            else:
+                hint = "unknown table" + nearest(name, _ORDER)
+            raise TableError(dotted(name), hint, ", ".join(_ORDER))
+        if name in TABLES and not isinstance(value, dict):
+            keys = ", ".join(TABLES[name].__struct_fields__)
+            raise TableError(name, f"{shown(value)} is {kind_of(value)}", f"a table with keys of {keys}")
+    for name in _REQUIRED:
+        if name not in raw:
+            needed = " and ".join(field.name for field in msgspec.structs.fields(TABLES[name]) if field.required)
+            raise TableError(name, "the table is missing", f"a table [{name}] with {needed}")
+
+
+def check_drawing(kernel: object) -> None:
+    """Raise a TableError for a key that describes an array of draws where the kernel draws for itself."""
+    if isinstance(kernel, dict) and kernel.get("takes") == "rng":
+        for key in ("factors", "layout"):
+            if key in kernel:
+                problem = f'{shown(kernel[key])} describes an array of draws, which takes = "rng" has not'
+                raise TableError(f"kernel.{key}", problem, "no such key; it is worked out from what the kernel draws")
+
+
+def nearest(name: str, known: tuple[str, ...]) -> str:
+    """Return the words of a hint at the known name that an unknown one is like, or nothing."""
+    match = difflib.get_close_matches(name, known, n=1)
+    return f", perhaps {shown(match[0])} is meant" if match else ""
+
+
+def defaults_in_use(raw: Mapping[str, object]) -> tuple[str, ...]:
+    """Return the dotted keys of all defaults in use, in order of the file."""
+    assumed: list[str] = []
+    for table, record in TABLES.items():
+        given = raw.get(table)
+        keys = [name for name in record.__struct_fields__ if not isinstance(given, dict) or name not in given]
+        if table == "target" and given is None:
+            keys = ["worthwhile"]  # the one key of it that counts without a target
+        if table == "draws":
+            keys = [name for name in keys if isinstance(given, dict) and name in counting_keys(given)]
+        if table == "cost" and "draws" not in raw:
+            keys = [name for name in keys if name != CHEAP]
+        if table == "cost" and given is not None:
+            keys = [name for name in keys if name not in FORMATS]  # a format without a cost is not used
+        assumed.extend(f"{table}.{name}" for name in keys)
+    return tuple(assumed)
