@@ -24,7 +24,8 @@ from narrowgauge.kernel.auditfile import (
     most_steps,
     read_audit_file,
 )
-from narrowgauge.kernel.audittables import RULES, TABLES, CostTable, TableError, shown
+from narrowgauge.kernel.audittables import CostTable, TableError, shown
+from narrowgauge.kernel.owntables import RULES, TABLES
 
 DEFAULTS = {
     "kernel.factors": 1,
@@ -33,6 +34,7 @@ DEFAULTS = {
     "kernel.modules": [],
     "kernel.shared": [],
     "kernel.allow": [],
+    "kernel.rounds": "emulated",
     "ladder.coarsest_steps": 1,
     "ladder.refinement": 2,
     "target.worthwhile": None,
@@ -49,14 +51,15 @@ DEFAULTS = {
     "cost.e5m2": 0.125,
     "cost.draws": 0.0,
     "cost.path": 0.0,
+    "cost.measured": False,
     "sampling.block": 32768,
     "sampling.paths": 32768,
     "sampling.most_paths": 1048576,
     "sampling.confidence": 0.99,
     "sampling.seed": 1,
 }
-ALL_TABLES = "kernel, parameters, ladder, target, formats, cost, sampling"
-KERNEL_KEYS = "run, takes, factors, layout, coupling, modules, shared, allow"
+ALL_TABLES = "kernel, library, command, parameters, ladder, target, formats, cost, sampling"
+KERNEL_KEYS = "run, takes, factors, layout, coupling, modules, shared, allow, rounds"
 
 
 class TestDefaults:
@@ -76,7 +79,7 @@ class TestDefaults:
         """A file with every key assumes nothing, and its values are those that a TOML reader sees."""
         audit_file = read(tmp_path, FULL)
         assert audit_file.assumed == ()
-        expected = {**tomllib.loads(FULL), "assumed": []}
+        expected = {**tomllib.loads(FULL), "library": None, "command": None, "assumed": []}
         expected["kernel"]["layout"] = "factors, paths, steps"
         assert audit_file.asked() == expected
         assert list(audit_file.asked()) == [*ALL_TABLES.split(", "), "assumed"]
@@ -125,7 +128,11 @@ class TestDefaults:
         """With [cost] a format that the audit does not use needs none, and none is assumed for it."""
         formats = '[formats]\nnarrow = ["float16"]\nwide = ["float64"]\n'
         audit_file = read(tmp_path, LEAST + formats + "[cost]\nfloat64 = 1\nfloat16 = 0.3\n")
-        assert [key for key in audit_file.assumed if key.startswith("cost")] == ["cost.draws", "cost.path"]
+        assert [key for key in audit_file.assumed if key.startswith("cost")] == [
+            "cost.draws",
+            "cost.path",
+            "cost.measured",
+        ]
         assert audit_file.cost.step("float16") == 0.3
         with pytest.raises(KeyError):
             audit_file.cost.step("bfloat16")
@@ -134,7 +141,7 @@ class TestDefaults:
         """Every key of every table has a row with the words of what it accepts, and no row is left over."""
         keys = [f"{name}.{key}" for name, record in TABLES.items() for key in record.__struct_fields__]
         assert sorted(keys) == sorted(RULES)
-        assert set(FORMATS) == set(CostTable.__struct_fields__) - {"draws", "path"}
+        assert set(FORMATS) == set(CostTable.__struct_fields__) - {"draws", "path", "measured"}
 
     def test_records_are_frozen(self, tmp_path):
         """Neither the audit file nor a table can be written to."""

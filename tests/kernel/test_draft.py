@@ -45,6 +45,7 @@ factors = 2  # guessed from how dW is taken apart; check
 # modules = []  # further modules and packages whose NumPy is rounded
 # shared = []  # modules of theirs that cannot be copied, run as they are and not rounded
 # allow = []  # lines such as "model.py:41" where values may leave and go on unrounded
+# rounds = "emulated"  # "itself": not emulated; the kernel gets its draws in the format's own type
 
 [parameters]
 # Passed to the kernel by keyword; arrays of numbers arrive as float64 NumPy arrays.

@@ -2,12 +2,16 @@
 
 from __future__ import annotations
 
+import functools
 import operator
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Protocol
 
+import msgspec
+
 from narrowgauge.conduct.prepare import prepare
+from narrowgauge.conduct.stepcosts import with_costs
 from narrowgauge.errors import KernelError
 from narrowgauge.judge.schemes import LevelJudgement, judge_level
 from narrowgauge.kernel.auditfile import AuditFile
@@ -18,8 +22,11 @@ from narrowgauge.measure.store import Ledger
 from narrowgauge.measure.tally import LevelTally
 from narrowgauge.measure.task import Block, Key, pinned
 from narrowgauge.record.audit import TrialEntry
+from narrowgauge.record.costs import CostEntry
 
 __all__ = ["Outcome", "Plan", "Watcher", "run"]
+
+_COSTS = "costs"  # in the ledger
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -64,7 +71,7 @@ class Watcher(Protocol):
 class Outcome:
     """All that was measured and judged; `alpha` is 1 - confidence of each look.
 
-    `fingerprints` are those of the processes that measured, each once and in order.
+    `fingerprints` are those of the processes that measured, each once and in order. `costs` are measured ones.
     """
 
     tallies: Mapping[int, LevelTally]
@@ -72,6 +79,7 @@ class Outcome:
     alpha: float
     trial: TrialEntry
     fingerprints: tuple[str, ...] = ()
+    costs: dict[str, CostEntry] | None = None
 
 
 def run(
@@ -94,6 +102,12 @@ def run(
         return _Conductor(file, settled, watcher, engine or SerialEngine(file, kernel), ledger).run()
 
 
+def _known_costs(ledger: Ledger | None) -> dict[str, CostEntry] | None:
+    """Return the costs that an audit measured before it was stopped; the schemes that it weighed hang on them."""
+    text = None if ledger is None else ledger.noted(_COSTS)
+    return None if text is None else msgspec.json.decode(text, type=dict[str, CostEntry])
+
+
 class _Conductor:
     def __init__(
         self,
@@ -103,12 +117,14 @@ class _Conductor:
         engine: Engine,
         ledger: Ledger | None,
     ) -> None:
-        self._file = file
         self._settled = settled
         self._watcher = watcher
         self._engine = engine
         self._ledger = ledger
-        self._prepared = engine.call(prepare)
+        self._prepared = engine.call(functools.partial(prepare, costs=_known_costs(ledger)))
+        if ledger is not None and self._prepared.costs is not None:
+            ledger.note(_COSTS, msgspec.json.encode(self._prepared.costs).decode())
+        self._file = with_costs(file, self._prepared.costs)
         self._arms = len(arms_of(file.arms))
         self._tallies: dict[int, LevelTally] = {}
         self._waiting: dict[Key, Block] = {}  # finished, and before their turn
@@ -136,6 +152,7 @@ class _Conductor:
             alpha=alpha,
             trial=self._prepared.trial,
             fingerprints=tuple(sorted(self._fingerprints)),
+            costs=self._prepared.costs,
         )
 
     def _looks(self) -> list[int]:

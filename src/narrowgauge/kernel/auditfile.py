@@ -22,8 +22,6 @@ from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.errors import AuditFileError
 from narrowgauge.kernel.auditparameters import check_parameter, passed, plain
 from narrowgauge.kernel.audittables import (
-    RULES,
-    TABLES,
     CostTable,
     FormatsTable,
     KernelTable,
@@ -38,6 +36,7 @@ from narrowgauge.kernel.audittables import (
     kind_of,
     shown,
 )
+from narrowgauge.kernel.owntables import RULES, TABLES, CommandTable, LibraryTable, check_own, with_run
 
 __all__ = [
     "AuditFile",
@@ -54,8 +53,9 @@ __all__ = [
     "with_draws",
 ]
 
-_ORDER = ("kernel", "parameters", "ladder", "target", "formats", "cost", "sampling")
+_ORDER = ("kernel", "library", "command", "parameters", "ladder", "target", "formats", "cost", "sampling")
 _REQUIRED = ("kernel", "ladder")
+_ABSENT = ("library", "command", "target")  # tables that are None where the file has none
 _BLOCK_DRAWS, _SMALLEST_BLOCK = 2**22, 1024
 _Record = TypeVar("_Record", bound=Table)
 _WORTHWHILE: float = TargetTable(rmse=1.0).worthwhile
@@ -69,6 +69,8 @@ class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
     """
 
     kernel: KernelTable
+    library: LibraryTable | None = None
+    command: CommandTable | None = None
     parameters: Mapping[str, object]
     ladder: LadderTable
     target: TargetTable | None
@@ -79,12 +81,23 @@ class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
     folder: Path
     function: Callable[..., object] | None
     assumed: tuple[str, ...]
+    timed: CostTable | None = None
+
+    @property
+    def costs(self) -> CostTable:
+        """The costs to judge by: those of the file, or once they are measured, the measured ones in `timed`."""
+        return self.timed or self.cost
 
     @property
     def arms(self) -> tuple[str, ...]:
         """The formats that are needed, least precise first: narrow, wide, today's and the reference."""
         needed = {*self.formats.narrow, *self.formats.wide, self.formats.today, "float64"}
         return tuple(sorted((name for name in FORMATS if name in needed), key=_precision))
+
+    @property
+    def foreign(self) -> bool:
+        """Whether the kernel is a library or a command, which a process of its own has to run."""
+        return self.library is not None or self.command is not None
 
     @property
     def stem(self) -> str:
@@ -116,16 +129,11 @@ class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
         return {name: passed(value) for name, value in self.parameters.items()}
 
     def asked(self) -> dict[str, object]:
-        """Return the file as a plain document with every default filled in; an absent target is None."""
-        tables: dict[str, object] = {
-            "kernel": _document(self.kernel),
-            "parameters": copy.deepcopy(dict(self.parameters)),
-            "ladder": _document(self.ladder),
-            "target": None if self.target is None else _document(self.target),
-            "formats": _document(self.formats),
-            "cost": _document(self.cost),
-            "sampling": _document(self.sampling),
-        }
+        """Return the file as a plain document with every default filled in; a table that may be absent is then None."""
+        tables: dict[str, object] = {}
+        for name in _ORDER:
+            table = getattr(self, name)
+            tables[name] = _document(table) if isinstance(table, msgspec.Struct) else copy.deepcopy(table)
         return {**tables, "assumed": list(self.assumed)}
 
 
@@ -235,11 +243,20 @@ def _assembled(raw: dict[str, object], source: str, folder: Path, function: Call
         raise TableError("parameters", f"{shown(parameters)} is {kind_of(parameters)}", "a table")
     for name, value in parameters.items():
         check_parameter(name, value)
-    kernel = raw["kernel"]
-    if function is None and isinstance(kernel, dict) and isinstance(kernel.get("run"), str):
+    library = _table(LibraryTable, raw["library"]) if "library" in raw else None
+    command = _table(CommandTable, raw["command"]) if "command" in raw else None
+    kernel = raw["kernel"] = with_run(raw["kernel"], library, command)
+    if (
+        function is None
+        and isinstance(kernel, dict)
+        and isinstance(kernel.get("run"), str)
+        and not (library or command)
+    ):
         check_run(kernel["run"])
     audit_file = AuditFile(
         kernel=_table(KernelTable, kernel),
+        library=library,
+        command=command,
         parameters=parameters,
         ladder=_table(LadderTable, raw["ladder"]),
         target=_table(TargetTable, raw["target"]) if "target" in raw else None,
@@ -251,9 +268,17 @@ def _assembled(raw: dict[str, object], source: str, folder: Path, function: Call
         function=function,
         assumed=_assumed(raw),
     )
+    check_own(
+        audit_file.kernel,
+        formats=audit_file.formats,
+        cost=audit_file.cost,
+        parameters=parameters,
+        library=library,
+        command=command,
+    )
     _check_ladder(audit_file.kernel, audit_file.ladder)
     for name in audit_file.arms:
-        if getattr(audit_file.cost, name) is None:
+        if getattr(audit_file.cost, name) is None and not audit_file.cost.measured:
             key = f"cost.{name}"
             raise TableError(key, "missing, and the audit uses this format", RULES[key].accepted)
     return audit_file
@@ -365,8 +390,8 @@ def _assumed(raw: Mapping[str, object]) -> tuple[str, ...]:
     for table, record in TABLES.items():
         given = raw.get(table)
         keys = [name for name in record.__struct_fields__ if not isinstance(given, dict) or name not in given]
-        if table == "target" and given is None:
-            keys = ["worthwhile"]  # the one key of it that counts without a target
+        if table in _ABSENT and given is None:
+            keys = ["worthwhile"] if table == "target" else []  # the one key that counts without its table
         if table == "cost" and given is not None:
             keys = [name for name in keys if name not in FORMATS]  # a format without a cost is not used
         assumed.extend(f"{table}.{name}" for name in keys)

@@ -84,6 +84,7 @@ RULES: dict[str, Rule] = {
     "kernel.modules": Rule(accepted='an array of names such as "package.module", each once'),
     "kernel.shared": Rule(accepted="names of modules that do not stand in kernel.modules, each once"),
     "kernel.allow": Rule(accepted='an array of lines such as "model.py:41", each once'),
+    "kernel.rounds": Rule(accepted='"emulated" or "itself"'),
     "ladder.horizon": _POSITIVE,
     "ladder.coarsest_steps": Rule(accepted="an integer of 1 or more", low=1),
     "ladder.refinement": Rule(accepted="an integer of 2 or more", low=2),
@@ -107,6 +108,7 @@ RULES: dict[str, Rule] = {
     "cost.e5m2": _POSITIVE,
     "cost.draws": _NOT_NEGATIVE,
     "cost.path": _NOT_NEGATIVE,
+    "cost.measured": Rule(accepted="a boolean"),
     "sampling.block": Rule(accepted="a multiple of 1024, at least 1024", low=1024),
     "sampling.paths": Rule(accepted="an integer of 1 or more", low=1),
     "sampling.most_paths": Rule(accepted="an integer of sampling.paths or more", low=1),
@@ -163,10 +165,11 @@ class Table(msgspec.Struct, frozen=True, kw_only=True, forbid_unknown_fields=Tru
     """Base of the tables: every number is held against the row of its key."""
 
     table: ClassVar[str] = ""
+    rules: ClassVar[dict[str, Rule]] = RULES
 
     def __post_init__(self) -> None:
         for name in self.__struct_fields__:
-            rule, value = RULES[f"{self.table}.{name}"], getattr(self, name)
+            rule, value = self.rules[f"{self.table}.{name}"], getattr(self, name)
             numbers = value if isinstance(value, dict) else {"": value}
             if not numbers:
                 raise TableError(f"{self.table}.{name}", "the table is empty", rule.accepted)
@@ -179,7 +182,7 @@ class Table(msgspec.Struct, frozen=True, kw_only=True, forbid_unknown_fields=Tru
     def refuse(self, name: str, problem: str, accepted: str = "") -> NoReturn:
         """Raise a TableError for one key, with its row's words unless others are given."""
         key = f"{self.table}.{name}"
-        raise TableError(key, problem, accepted or RULES[key].accepted)
+        raise TableError(key, problem, accepted or self.rules[key].accepted)
 
 
 def check_run(run: str) -> None:
@@ -207,7 +210,8 @@ class KernelTable(Table, frozen=True, kw_only=True, forbid_unknown_fields=True):
 
     A layout without paths says that the kernel takes one path a call. With `coupling` "none" the levels are measured,
     their differences are not. `modules` are copied and rounded along with the kernel's own, `shared` ones are run as
-    they are; on the lines of `allow` values may leave the emulation.
+    they are; on the lines of `allow` values may leave the emulation. A kernel that `rounds` "itself" gets its draws in
+    the format's own type and is not emulated.
     """
 
     table: ClassVar[str] = "kernel"
@@ -219,6 +223,7 @@ class KernelTable(Table, frozen=True, kw_only=True, forbid_unknown_fields=True):
     modules: tuple[str, ...] = ()
     shared: tuple[str, ...] = ()
     allow: tuple[str, ...] = ()
+    rounds: Literal["emulated", "itself"] = "emulated"
 
     def __post_init__(self) -> None:
         super().__post_init__()
@@ -324,7 +329,10 @@ class FormatsTable(Table, frozen=True, kw_only=True, forbid_unknown_fields=True)
 
 
 class CostTable(Table, frozen=True, kw_only=True, forbid_unknown_fields=True):
-    """`[cost]`: relative costs of one step in each format, of one draw, and of a path whatever its steps."""
+    """`[cost]`: relative costs of one step in each format, of one draw, and of a path whatever its steps.
+
+    `measured`: those of a step come from the times of a kernel that rounds for itself, float64 being 1.
+    """
 
     table: ClassVar[str] = "cost"
     float64: float | None = None
@@ -336,11 +344,12 @@ class CostTable(Table, frozen=True, kw_only=True, forbid_unknown_fields=True):
     e5m2: float | None = None
     draws: float = 0.0
     path: float = 0.0
+    measured: bool = False
 
     @classmethod
     def by_storage(cls) -> CostTable:
         """Return the costs that stand in for a table that is not there: storage bits / 64."""
-        return cls(**{name: row.bits / 64 for name, row in FORMATS.items()})
+        return msgspec.convert({name: row.bits / 64 for name, row in FORMATS.items()}, cls)
 
     def step(self, name: str) -> float:
         """Return the cost of one step of one path in the format of that name; a KeyError if there is none."""

@@ -17,7 +17,9 @@ from narrowgauge.dispatch.setting import Observer, Place
 from narrowgauge.errors import AuditFileError, DispatchError, KernelError
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.audittables import RULES, shown
+from narrowgauge.kernel.command import Command
 from narrowgauge.kernel.fingerprint import fingerprint
+from narrowgauge.kernel.library import Library
 
 __all__ = ["KernelSource", "find_kernel", "private_copy"]
 
@@ -27,7 +29,7 @@ _TWICE = "a module that can be executed twice; else list it under kernel.shared,
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class KernelSource:
-    """A kernel that was found: compiled code and the function's name in it, or a function handed over from Python.
+    """A kernel that was found: compiled code and a function's name in it, a function handed over, or what is `foreign`.
 
     `sources` holds the kernel's module and the listed ones, read and compiled once for all arms; `allowed` the lines of
     theirs that may let values leave, by the words of the audit file.
@@ -41,12 +43,15 @@ class KernelSource:
     function: Callable[..., Any] | None
     sources: Sources
     allowed: Mapping[str, Place]
+    foreign: Library | Command | None = None
 
     def digest(self) -> str:
         """Return the fingerprint of all that is copied: source texts, and the function that was handed over.
 
-        Raises AuditFileError where a file of a listed package cannot be read.
+        That of a library or command is the one of its file. Raises AuditFileError where a file cannot be read.
         """
+        if self.foreign is not None:
+            return self.foreign.digest()
         try:
             return fingerprint(self.sources.texts(), self.function)
         except OSError as problem:
@@ -60,6 +65,18 @@ def find_kernel(audit_file: AuditFile) -> KernelSource:
     Raises AuditFileError where there is no such file or module, or it is not Python.
     """
     run, source = audit_file.kernel.run, audit_file.source
+    if (foreign := _foreign(audit_file)) is not None:
+        return KernelSource(
+            run=run,
+            source=source,
+            name="",
+            code=None,
+            module="",
+            function=None,
+            sources=Sources(),
+            allowed={},
+            foreign=foreign,
+        )
     target, _, name = run.rpartition(":")
     function, path = audit_file.function, None
     if function is None:
@@ -124,6 +141,12 @@ def private_copy(
             "one of " + ", ".join(known) if known else "a file that defines a function",
         )
     return PrivateCopy(found, setting, copies)
+
+
+def _foreign(audit_file: AuditFile) -> Library | Command | None:
+    if audit_file.library is not None:
+        return Library(audit_file, audit_file.library)
+    return None if audit_file.command is None else Command(audit_file, audit_file.command)
 
 
 def _raise_uncopied(kernel: KernelSource, copies: Copies, problem: BaseException | None) -> None:

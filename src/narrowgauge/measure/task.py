@@ -26,8 +26,8 @@ from narrowgauge import errors
 from narrowgauge.arithmetic.arithmetic import arithmetic_named
 from narrowgauge.errors import KernelError, NarrowgaugeError, RaisedElsewhereError, WorkerError
 from narrowgauge.kernel.auditfile import AuditFile
-from narrowgauge.kernel.audittables import TABLES
 from narrowgauge.kernel.loading import KernelSource, find_kernel
+from narrowgauge.kernel.owntables import TABLES
 from narrowgauge.kernel.raised import own_traceback
 from narrowgauge.measure.arms import REFERENCE
 from narrowgauge.measure.block import BlockRunner

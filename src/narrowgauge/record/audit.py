@@ -2,7 +2,8 @@
 
 Figures are finite; one that does not exist is None, and a `reason` beside it says why. Intervals are flat: `gain`,
 `gain_low`, `gain_high`. Variances are in the squared unit of the quantity, coefficients of the law in units of u^2,
-costs in the unit of the audit file's cost table. Only `provenance` may differ between two runs of the same audit.
+costs in the unit of the audit file's cost table. Only `provenance` may differ between two runs of the same audit; where
+costs of a step are measured, `costs` does as well, and what follows from it.
 """
 
 from __future__ import annotations
@@ -11,6 +12,8 @@ from typing import Literal
 
 import msgspec
 
+from narrowgauge.record.canary import CanaryEntry
+from narrowgauge.record.costs import CostEntry
 from narrowgauge.record.plan import (
     AllocationEntry,
     CommonLevelEntry,
@@ -38,11 +41,13 @@ __all__ = [
     "ArmEntry",
     "AuditRecord",
     "BestEntry",
+    "CanaryEntry",
     "CommonLevelEntry",
     "CommonPlanEntry",
     "ConstantEntry",
     "ConstantValue",
     "CorrectionEntry",
+    "CostEntry",
     "DecisionEntry",
     "FaultEntry",
     "FinestEntry",
@@ -78,12 +83,12 @@ class KernelEntry(Entry, frozen=True, kw_only=True):
 
 
 class ArithmeticEntry(Entry, frozen=True, kw_only=True):
-    """What one arm computes in, and with which draws."""
+    """What one arm computes in, and with which draws; how a kernel that rounds for itself does it is not known."""
 
     format: str
     rounding: str
-    subnormals: str
-    fused: bool
+    subnormals: str | None
+    fused: bool | None
     draws: str
     widened: list[str]
 
@@ -310,6 +315,8 @@ class AuditRecord(Entry, frozen=True, kw_only=True):
     reach: ReachEntry | None
     branches: None = None
     range: RangeEntry | None = None
+    canary: list[CanaryEntry] | None = None
+    costs: dict[str, CostEntry] | None = None
     lines: None = None
     averaging: None = None
     domain: None = None
