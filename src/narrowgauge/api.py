@@ -11,6 +11,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal
 
 from narrowgauge.conduct.account import account
+from narrowgauge.conduct.owntrial import examine_own
 from narrowgauge.conduct.run import Watcher, run
 from narrowgauge.conduct.trial import try_arms
 from narrowgauge.errors import AuditFileError, AuditFolderError, NarrowgaugeError
@@ -138,8 +139,16 @@ def _draws(bench: Bench) -> tuple[int, Literal["sum", "none"]]:
 def try_out(file: AuditFile) -> TrialEntry:
     """Run the identity run and one small run of every arm; nothing is written."""
     kernel = find_kernel(file)
+    if file.kernel.rounds == "itself":
+        with engine_for(file, kernel, Workers()) as engine:
+            return engine.call(_own_trial)
     file = worked_out(file, kernel)
     return try_arms(file, kernel, BlockRunner(file, kernel))
+
+
+def _own_trial(bench: Bench) -> TrialEntry:
+    with pinned():
+        return examine_own(bench.file, bench.kernel, bench.runner)
 
 
 def _claim(folder: Path, file: AuditFile, kernel: KernelEntry, *, replace: bool, resume: bool) -> Ledger:

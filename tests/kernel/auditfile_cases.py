@@ -27,6 +27,7 @@ coupling = "none"
 modules = ["plant"]
 shared = ["plant.fast"]
 allow = ["models/reserve.py:41", "plant.py:7"]
+rounds = "emulated"
 [parameters]
 volatility = 0.4
 years = 3
@@ -59,6 +60,7 @@ e4m3 = 0.1
 e5m2 = 0.15
 draws = 0.1
 path = 2
+measured = false
 [sampling]
 block = 2048
 paths = 1000

@@ -167,18 +167,20 @@ sys.path.insert(0, sys.argv[2])
 from worker_cases import blocks_until, engine_for
 engine = engine_for(Path(sys.argv[1]), ",,hang")
 engine.__enter__()
-print(engine._slots[0]._began().pid, flush=True)
+print(engine._slots[0]._began().pid, engine._scratch.name, flush=True)
 blocks_until(engine)
 """
 
 
 @pytest.mark.skipif(sys.platform == "win32", reason="processes end otherwise there")
 def test_workers_end_with_a_driver_that_is_killed(tmp_path: Path) -> None:
-    """In the middle of a block, too: within seconds there is no such process."""
+    """In the middle of a block, too: within seconds there is no such process, and no folder of its temporary files."""
     command = [sys.executable, "-c", DRIVER, tmp_path, Path(__file__).parent]
     with subprocess.Popen(command, stdout=subprocess.PIPE, text=True) as driver:
         assert driver.stdout is not None
-        pid = int(driver.stdout.readline())
+        number, scratch = driver.stdout.readline().split()
+        pid = int(number)
+        assert Path(scratch).is_dir()
         time.sleep(0.5)
         driver.kill()
     until = time.monotonic() + 30
@@ -186,6 +188,7 @@ def test_workers_end_with_a_driver_that_is_killed(tmp_path: Path) -> None:
         time.sleep(0.05)
     with pytest.raises(ProcessLookupError):
         os.kill(pid, 0)
+    assert not Path(scratch).exists()
 
 
 def test_a_job_is_plain_data() -> None:

@@ -24,6 +24,7 @@ from narrowgauge.conduct.entries import (
 from narrowgauge.conduct.plans import allocation_entry, common_plan_entry
 from narrowgauge.conduct.run import Outcome
 from narrowgauge.conduct.separated import separation_entry
+from narrowgauge.conduct.stepcosts import with_costs
 from narrowgauge.judge.accumulation import (
     AccumulationFit,
     LawPoint,
@@ -62,7 +63,7 @@ from narrowgauge.record.audit import (
     VerdictEntry,
 )
 
-__all__ = ["CAUTIONS", "account"]
+__all__ = ["CAUTIONS", "OWN_CAUTION", "account"]
 
 CAUTIONS = (
     "A verdict is evidence, not approval: it holds for means, not for quantiles or nested expectations, of the audited "
@@ -73,11 +74,17 @@ CAUTIONS = (
     "change control that the organisation and its local rules require.",
 )
 
+OWN_CAUTION = (
+    "The kernel rounds for itself and was taken at its word: the verdict holds for the code, the compiler and the "
+    "machine that ran it."
+)
+
 _SOUND = 3.3  # standard errors within which the reference's levels must telescope
 
 
 def account(file: AuditFile, outcome: Outcome, kernel: KernelEntry, provenance: dict[str, object]) -> AuditRecord:
     """Return the record of an audit."""
+    file = with_costs(file, outcome.costs)
     names = list(outcome.tallies[0].quantities)
     quantities = {name: _Quantity(file, outcome, name).entry() for name in names}
     finest = {
@@ -88,6 +95,7 @@ def account(file: AuditFile, outcome: Outcome, kernel: KernelEntry, provenance: 
     sound = all(
         level.telescoping is None or level.telescoping.sound for entry in quantities.values() for level in entry.levels
     )
+    own = file.kernel.rounds == "itself"
     return AuditRecord(
         schema=SCHEMA,
         kernel=kernel,
@@ -101,7 +109,12 @@ def account(file: AuditFile, outcome: Outcome, kernel: KernelEntry, provenance: 
         ),
         arms={
             arm.name: ArithmeticEntry(
-                format=arm.format, rounding="nearest", subnormals="kept", fused=False, draws=arm.draws, widened=[]
+                format=arm.format,
+                rounding="the kernel's own" if own else "nearest",
+                subnormals=None if own else "kept",
+                fused=None if own else False,
+                draws=arm.draws,
+                widened=[],
             )
             for arm in map(Arm.named, arms_of(file.arms))
         },
@@ -124,7 +137,9 @@ def account(file: AuditFile, outcome: Outcome, kernel: KernelEntry, provenance: 
         ),
         reach=outcome.trial.reach,
         range=outcome.trial.range,
-        cautions=list(CAUTIONS),
+        canary=outcome.trial.canary or msgspec.UNSET,
+        costs=outcome.costs or msgspec.UNSET,
+        cautions=[OWN_CAUTION if own and caution == CAUTIONS[1] else caution for caution in CAUTIONS],
         provenance=provenance,
         draws=outcome.draws or msgspec.UNSET,
     )

@@ -2,12 +2,16 @@
 
 from __future__ import annotations
 
+import functools
 import operator
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Protocol
 
+import msgspec
+
 from narrowgauge.conduct.prepare import prepare
+from narrowgauge.conduct.stepcosts import with_costs
 from narrowgauge.errors import KernelError
 from narrowgauge.judge.schemes import LevelJudgement, judge_level
 from narrowgauge.kernel.auditfile import AuditFile
@@ -18,9 +22,12 @@ from narrowgauge.measure.store import Ledger
 from narrowgauge.measure.tally import LevelTally
 from narrowgauge.measure.task import Block, Key, pinned
 from narrowgauge.record.audit import TrialEntry
+from narrowgauge.record.costs import CostEntry
 from narrowgauge.record.draws import DrawsEntry
 
 __all__ = ["Outcome", "Plan", "Watcher", "run"]
+
+_COSTS = "costs"  # in the ledger
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -65,7 +72,8 @@ class Watcher(Protocol):
 class Outcome:
     """All that was measured and judged; `alpha` is 1 - confidence of each look.
 
-    `fingerprints` are those of the processes that measured, each once and in order; `draws` the approximate ones.
+    `fingerprints` are those of the processes that measured, each once and in order; `draws` the approximate ones;
+    `costs` are measured ones.
     """
 
     tallies: Mapping[int, LevelTally]
@@ -74,6 +82,7 @@ class Outcome:
     trial: TrialEntry
     fingerprints: tuple[str, ...] = ()
     draws: DrawsEntry | None = None
+    costs: dict[str, CostEntry] | None = None
 
 
 def run(
@@ -96,6 +105,12 @@ def run(
         return _Conductor(file, settled, watcher, engine or SerialEngine(file, kernel), ledger).run()
 
 
+def _known_costs(ledger: Ledger | None) -> dict[str, CostEntry] | None:
+    """Return the costs that an audit measured before it was stopped; the schemes that it weighed hang on them."""
+    text = None if ledger is None else ledger.noted(_COSTS)
+    return None if text is None else msgspec.json.decode(text, type=dict[str, CostEntry])
+
+
 class _Conductor:
     def __init__(
         self,
@@ -105,12 +120,14 @@ class _Conductor:
         engine: Engine,
         ledger: Ledger | None,
     ) -> None:
-        self._file = file
         self._settled = settled
         self._watcher = watcher
         self._engine = engine
         self._ledger = ledger
-        self._prepared = engine.call(prepare)
+        self._prepared = engine.call(functools.partial(prepare, costs=_known_costs(ledger)))
+        if ledger is not None and self._prepared.costs is not None:
+            ledger.note(_COSTS, msgspec.json.encode(self._prepared.costs).decode())
+        self._file = with_costs(file, self._prepared.costs)
         self._arms = len(arms_of(file.arms))
         self._tallies: dict[int, LevelTally] = {}
         self._waiting: dict[Key, Block] = {}  # finished, and before their turn
@@ -139,6 +156,7 @@ class _Conductor:
             trial=self._prepared.trial,
             fingerprints=tuple(sorted(self._fingerprints)),
             draws=self._prepared.draws,
+            costs=self._prepared.costs,
         )
 
     def _looks(self) -> list[int]:

@@ -27,12 +27,12 @@ from narrowgauge.measure.block import BlockRunner
 from narrowgauge.measure.calls import Quantities
 from narrowgauge.record.audit import FaultEntry, TrialEntry
 
-__all__ = ["examine", "try_arms"]
+__all__ = ["NOT_REPEATABLE", "check_targets", "examine", "same_bits", "trial_levels", "try_arms"]
 
 _PATHS = 1024
 _FEW = 8  # paths on the finest level, which may have thousands of steps; what is met there does not depend on them
 _LEVEL = 2  # coarse enough to be over at once, fine enough to pass through the time loop more than once
-_NOT_REPEATABLE = (
+NOT_REPEATABLE = (
     "a second call with the same draws does not give the same bits",
     "The kernel is not a function of its draws alone; accepted: a kernel whose calls leave nothing behind",
 )
@@ -47,7 +47,7 @@ class _Trial:
 
     def __init__(self, file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> None:
         self._file, self._kernel, self._runner = file, kernel, runner
-        self._levels = _levels(file)
+        self._levels = trial_levels(file)
         self._draws: dict[int, Draws | Tape] = {}
         self._reference: dict[int, Notes] = {}
         self._narrow: dict[str, dict[int, Notes]] = {}
@@ -194,7 +194,7 @@ def try_arms(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> Tria
     return trial.entry(identical=identical, faults=faults)
 
 
-def _levels(file: AuditFile) -> list[int]:
+def trial_levels(file: AuditFile) -> list[int]:
     """Return the levels of a trial: one whose time loop is passed through more than once, then the coarsest."""
     return sorted({min(_LEVEL, file.ladder.finest), 0}, reverse=True)
 
@@ -209,10 +209,10 @@ def _identical(file: AuditFile, runner: BlockRunner, draws: Draws | Tape, level:
         caller = runner.caller(arithmetic_named(REFERENCE), notes)
         with_machinery = caller.fine(draws, level)
     for name in plain | repeated:
-        _same_bits(name, plain, repeated, level, _NOT_REPEATABLE)
+        same_bits(name, plain, repeated, level, NOT_REPEATABLE)
     for name in plain | with_machinery:
-        _same_bits(name, plain, with_machinery, level, _NOT_IDENTICAL)
-    _check_targets(file, list(plain))
+        same_bits(name, plain, with_machinery, level, _NOT_IDENTICAL)
+    check_targets(file, list(plain))
     said = [f"{file.shown(place.file)}:{place.line}: {text}" if place else text for place, text in caller.remarks]
     said += [f"the module {name} is shared: it was imported as it is and not rounded" for name in caller.copy.shared]
     return said + [f"{name} is compiled: it ran as the Python function underneath" for name in caller.copy.compiled]
@@ -229,7 +229,7 @@ def _plainly_twice(
         return first, caller.fine(draws, level)
 
 
-def _check_targets(file: AuditFile, quantities: list[str]) -> None:
+def check_targets(file: AuditFile, quantities: list[str]) -> None:
     """Raise AuditFileError unless the target names the quantities that the kernel returns."""
     if file.target is None:
         return
@@ -250,7 +250,8 @@ def _check_targets(file: AuditFile, quantities: list[str]) -> None:
         raise AuditFileError(file.source, "target.rmse", f"one number for {len(quantities)} quantities", accepted)
 
 
-def _same_bits(name: str, plain: Quantities, other: Quantities, level: int, words: tuple[str, str]) -> None:
+def same_bits(name: str, plain: Quantities, other: Quantities, level: int, words: tuple[str, str]) -> None:
+    """Raise KernelError, in these `words`, unless two runs give a quantity the same bits; NaN is NaN."""
     if name not in plain or name not in other:
         raise KernelError(f"the quantity {name!r} is returned in one of two runs only", level=level)
     here, there = plain[name], other[name]

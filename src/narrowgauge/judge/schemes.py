@@ -108,7 +108,7 @@ def level_costs(file: AuditFile, level: int) -> LevelCosts:
     """Return the costs of one level of an audit."""
     steps = file.ladder.steps(level)
     below = file.ladder.steps(level - 1) if coupled(file, level) else 0
-    return LevelCosts(steps=steps + below, draws=steps * file.kernel.factors, table=file.cost)
+    return LevelCosts(steps=steps + below, draws=steps * file.kernel.factors, table=file.costs)
 
 
 def rmse_of(file: AuditFile, quantity: str) -> float | None:

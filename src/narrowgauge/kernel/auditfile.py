@@ -24,11 +24,13 @@ from narrowgauge.kernel.auditparameters import check_parameter, passed, plain
 from narrowgauge.kernel.audittables import (
     RULES,
     TABLES,
+    CommandTable,
     CostTable,
     DrawsTable,
     FormatsTable,
     KernelTable,
     LadderTable,
+    LibraryTable,
     SamplingTable,
     Table,
     TableError,
@@ -39,7 +41,9 @@ from narrowgauge.kernel.audittables import (
     kind_of,
     shown,
 )
-from narrowgauge.kernel.givenkeys import CHEAP, check_drawing, check_names, defaults_in_use, nearest
+from narrowgauge.kernel.givenkeys import CHEAP, check_drawing, check_names, defaults_in_use, document, nearest, useless
+from narrowgauge.kernel.ownlimits import check_own
+from narrowgauge.kernel.owntables import with_run
 
 __all__ = [
     "AuditFile",
@@ -70,6 +74,8 @@ class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
     """
 
     kernel: KernelTable
+    library: LibraryTable | None = None
+    command: CommandTable | None = None
     parameters: Mapping[str, object]
     ladder: LadderTable
     target: TargetTable | None
@@ -81,6 +87,12 @@ class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
     function: Callable[..., object] | None
     assumed: tuple[str, ...]
     draws: DrawsTable | None = None
+    timed: CostTable | None = None
+
+    @property
+    def costs(self) -> CostTable:
+        """The costs to judge by: those of the file, or once they are measured, the measured ones in `timed`."""
+        return self.timed or self.cost
 
     @property
     def used_formats(self) -> tuple[str, ...]:
@@ -102,6 +114,11 @@ class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
         """The names of the arms that are judged: the narrow formats, then those with approximate draws."""
         cheap = self.draws.formats if self.draws else ()
         return (*self.formats.narrow, *(Arm(name, "approximate").name for name in cheap))
+
+    @property
+    def foreign(self) -> bool:
+        """Whether the kernel is a library or a command, which a process of its own has to run."""
+        return self.library is not None or self.command is not None
 
     @property
     def stem(self) -> str:
@@ -135,22 +152,19 @@ class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
     def asked(self) -> dict[str, object]:
         """Return the file as a plain document with every default filled in; an absent target is None.
 
-        Without [draws] it has neither that table nor the cost of approximate draws.
+        Other tables are there where the file has them, and keys that count only with one of them, or only with a kernel
+        that rounds for itself, where they count.
         """
-        tables: dict[str, object] = {
-            "kernel": _document(self.kernel),
-            "parameters": copy.deepcopy(dict(self.parameters)),
-            "ladder": _document(self.ladder),
-            "target": None if self.target is None else _document(self.target),
-            "formats": _document(self.formats),
-            "cost": _document(self.cost),
-            "sampling": _document(self.sampling),
-            "assumed": list(self.assumed),
-        }
-        if self.draws is not None:
-            return {**tables, "draws": _document(self.draws)}
-        cost = {name: value for name, value in _document(self.cost).items() if name != CHEAP}
-        return {**tables, "cost": cost}
+        without = useless(own=self.kernel.rounds == "itself", draws=self.draws is not None)
+        tables: dict[str, object] = {}
+        for name in ("kernel", "library", "command", "parameters", "ladder", "target", "formats", "cost", "sampling"):
+            table = getattr(self, name)
+            if isinstance(table, Table):
+                tables[name] = document(table, without)
+            elif name in ("parameters", "target"):
+                tables[name] = copy.deepcopy(table)
+        tables["assumed"] = list(self.assumed)
+        return tables if self.draws is None else {**tables, "draws": document(self.draws, without)}
 
 
 def read_audit_file(path: Path) -> AuditFile:
@@ -238,11 +252,6 @@ def _precision(name: str) -> int:
     return FORMATS[name].precision
 
 
-def _document(table: msgspec.Struct) -> dict[str, object]:
-    values = ((name, getattr(table, name)) for name in table.__struct_fields__)
-    return {name: list(value) if isinstance(value, tuple) else copy.copy(value) for name, value in values}
-
-
 def _checked(raw: dict[str, object], source: str, folder: Path, function: Callable[..., object] | None) -> AuditFile:
     """Return the audit file of a plain mapping; every refusal leaves as an AuditFileError."""
     try:
@@ -259,11 +268,15 @@ def _assembled(raw: dict[str, object], source: str, folder: Path, function: Call
         raise TableError("parameters", f"{shown(parameters)} is {kind_of(parameters)}", "a table")
     for name, value in parameters.items():
         check_parameter(name, value)
-    kernel = raw["kernel"]
-    if function is None and isinstance(kernel, dict) and isinstance(kernel.get("run"), str):
+    library = _table(LibraryTable, raw["library"]) if "library" in raw else None
+    command = _table(CommandTable, raw["command"]) if "command" in raw else None
+    kernel = raw["kernel"] = with_run(raw["kernel"], library, command)
+    if isinstance(kernel, dict) and isinstance(kernel.get("run"), str) and not (function or library or command):
         check_run(kernel["run"])
     audit_file = AuditFile(
         kernel=_table(KernelTable, kernel),
+        library=library,
+        command=command,
         parameters=parameters,
         ladder=_table(LadderTable, raw["ladder"]),
         target=_table(TargetTable, raw["target"]) if "target" in raw else None,
@@ -276,9 +289,18 @@ def _assembled(raw: dict[str, object], source: str, folder: Path, function: Call
         assumed=defaults_in_use(raw),
         draws=_draws(raw),
     )
+    check_own(
+        audit_file.kernel,
+        formats=audit_file.formats,
+        cost=audit_file.cost,
+        draws=audit_file.draws,
+        parameters=parameters,
+        library=library,
+        command=command,
+    )
     _check_ladder(audit_file.kernel, audit_file.ladder)
     for name in audit_file.used_formats:
-        if getattr(audit_file.cost, name) is None:
+        if getattr(audit_file.cost, name) is None and not audit_file.cost.measured:
             key = f"cost.{name}"
             raise TableError(key, "missing, and the audit uses this format", RULES[key].accepted)
     return audit_file

@@ -15,16 +15,19 @@ import msgspec
 from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.kernel.arms import Kind
 from narrowgauge.kernel.drawstable import DrawsTable
+from narrowgauge.kernel.owntables import CommandTable, LibraryTable
 from narrowgauge.kernel.rules import RULES, Rule, Table, TableError, check_run, dotted, kind_of, shown
 
 __all__ = [
     "RULES",
     "TABLES",
+    "CommandTable",
     "CostTable",
     "DrawsTable",
     "FormatsTable",
     "KernelTable",
     "LadderTable",
+    "LibraryTable",
     "Rule",
     "SamplingTable",
     "Table",
@@ -48,7 +51,8 @@ class KernelTable(Table, frozen=True, kw_only=True, forbid_unknown_fields=True):
 
     A layout without paths says that the kernel takes one path a call. With `coupling` "none" the levels are measured,
     their differences are not. `modules` are copied and rounded along with the kernel's own, `shared` ones are run as
-    they are; on the lines of `allow` values may leave the emulation.
+    they are; on the lines of `allow` values may leave the emulation. A kernel that `rounds` "itself" gets its draws in
+    the format's own type and is not emulated.
     """
 
     table: ClassVar[str] = "kernel"
@@ -60,6 +64,7 @@ class KernelTable(Table, frozen=True, kw_only=True, forbid_unknown_fields=True):
     modules: tuple[str, ...] = ()
     shared: tuple[str, ...] = ()
     allow: tuple[str, ...] = ()
+    rounds: Literal["emulated", "itself"] = "emulated"
 
     def __post_init__(self) -> None:
         super().__post_init__()
@@ -167,7 +172,8 @@ class FormatsTable(Table, frozen=True, kw_only=True, forbid_unknown_fields=True)
 class CostTable(Table, frozen=True, kw_only=True, forbid_unknown_fields=True):
     """`[cost]`: relative costs of one step in each format, of one draw, and of a path whatever its steps.
 
-    An approximate draw costs as much as an exact one unless `approximate_draws` says otherwise.
+    An approximate draw costs as much as an exact one unless `approximate_draws` says otherwise. `measured`: those of a
+    step come from the times of a kernel that rounds for itself, float64 being 1.
     """
 
     table: ClassVar[str] = "cost"
@@ -181,11 +187,12 @@ class CostTable(Table, frozen=True, kw_only=True, forbid_unknown_fields=True):
     draws: float = 0.0
     approximate_draws: float | None = None
     path: float = 0.0
+    measured: bool = False
 
     @classmethod
     def by_storage(cls) -> CostTable:
         """Return the costs that stand in for a table that is not there: storage bits / 64."""
-        return cls(**{name: row.bits / 64 for name, row in FORMATS.items()})
+        return msgspec.convert({name: row.bits / 64 for name, row in FORMATS.items()}, cls)
 
     def step(self, name: str) -> float:
         """Return the cost of one step of one path in the format of that name; a KeyError if there is none."""
@@ -224,5 +231,15 @@ class SamplingTable(Table, frozen=True, kw_only=True, forbid_unknown_fields=True
 # In the order of the file; `parameters` is a free table and has no record.
 TABLES: dict[str, type[Table]] = {
     table.table: table
-    for table in (KernelTable, LadderTable, TargetTable, FormatsTable, DrawsTable, CostTable, SamplingTable)
+    for table in (
+        KernelTable,
+        LibraryTable,
+        CommandTable,
+        LadderTable,
+        TargetTable,
+        FormatsTable,
+        DrawsTable,
+        CostTable,
+        SamplingTable,
+    )
 }

@@ -33,6 +33,7 @@ _TAKES_BY_NAME: tuple[tuple[str, re.Pattern[str]], ...] = (
     ("normals", re.compile(r"zs?|xis?|eps|epsilons?|.*normals?|.*gaussians?")),
     ("uniforms", re.compile(r"us?|.*uniforms?")),
 )
+_ELSEWHERE = ("kernel", "library", "command")  # written first, or in place of a Python function
 _OPTIONAL = ("target", "draws", "cost")
 _INSTEAD = ("draws.intervals", "draws.degree")  # not accepted beside the value shown for draws.approximate
 _COUNTS = ("steps", "paths")  # what a kernel that draws for itself is told
@@ -48,6 +49,7 @@ _MEANINGS: dict[str, str] = {
     "kernel.modules": "further modules and packages whose NumPy is rounded",
     "kernel.shared": "modules of theirs that cannot be copied, run as they are and not rounded",
     "kernel.allow": 'lines such as "model.py:41" where values may leave and go on unrounded',
+    "kernel.rounds": '"itself": not emulated; the kernel gets its draws in the format\'s own type',
     "ladder.horizon": "time that a path covers; fill in",
     "ladder.coarsest_steps": "steps of a path on level 0",
     "ladder.refinement": "factor from the steps of a level to those of the next",
@@ -75,6 +77,7 @@ _MEANINGS: dict[str, str] = {
     "cost.draws": "one draw",
     "cost.approximate_draws": "no default; one approximate draw, else as much as an exact one",
     "cost.path": "fixed cost of a path",
+    "cost.measured": 'costs of a step from measured times, only with rounds = "itself"',
     "sampling.block": "most paths of a block, a multiple of 1024",
     "sampling.paths": "paths of a level at the first look",
     "sampling.most_paths": "paths of a level at which looking ends",
@@ -126,20 +129,19 @@ def draft(target: str) -> str:
         _line("kernel.run", values),
         *_takes_lines(function, draws, takes),
         *(_draws_lines(factors, layout, draws, values) if takes != "rng" else ()),
-        *(_line(f"kernel.{key}", values) for key in ("coupling", "modules", "shared", "allow")),
+        *(_line(f"kernel.{key}", values) for key in ("coupling", "modules", "shared", "allow", "rounds")),
         "",
         "[parameters]",
         "# Passed to the kernel by keyword; arrays of numbers arrive as float64 NumPy arrays.",
         *_parameter_lines(function, _COUNTS if takes == "rng" else ()),
     ]
-    without_normals = takes in ("uniforms", "rng")
+    left_out = {"draws", "cost.approximate_draws"} if takes in ("uniforms", "rng") else set()
     for table, record in TABLES.items():
-        if table != "kernel" and not (table == "draws" and without_normals):
+        if table not in {*_ELSEWHERE, *left_out}:
             # These need keys of their own once they are there, so that an empty one is not accepted.
             header = f"# [{table}]" if table in _OPTIONAL else f"[{table}]"
             keys = [f"{table}.{key}" for key in record.__struct_fields__]
-            lines += ["", header]
-            lines += [_line(key, values) for key in keys if not (key == "cost.approximate_draws" and without_normals)]
+            lines += ["", header, *(_line(key, values) for key in keys if key not in left_out)]
     return "\n".join(lines) + "\n"
 
 

@@ -2,21 +2,23 @@
 
 from __future__ import annotations
 
+import copy
 import difflib
-from collections.abc import Mapping
+from collections.abc import Collection, Mapping
 
 import msgspec
 
 from narrowgauge.arithmetic.formats import FORMATS
-from narrowgauge.kernel.audittables import TABLES, TableError, dotted, kind_of, shown
+from narrowgauge.kernel.audittables import TABLES, Table, TableError, dotted, kind_of, shown
 from narrowgauge.kernel.drawstable import counting_keys
 
-__all__ = ["CHEAP", "check_drawing", "check_names", "defaults_in_use", "nearest"]
+__all__ = ["CHEAP", "check_drawing", "check_names", "defaults_in_use", "document", "nearest", "useless"]
 
 CHEAP = "approximate_draws"  # a cost that counts with [draws] alone
 
-_ORDER = ("kernel", "parameters", "ladder", "target", "formats", "draws", "cost", "sampling")
+_ORDER = ("kernel", "library", "command", "parameters", "ladder", "target", "formats", "draws", "cost", "sampling")
 _REQUIRED = ("kernel", "ladder")
+_OWN = ("kernel.rounds", "cost.measured")  # keys that count for a kernel that rounds for itself alone
 
 
 def check_names(raw: dict[str, object]) -> None:
@@ -53,19 +55,33 @@ def nearest(name: str, known: tuple[str, ...]) -> str:
     return f", perhaps {shown(match[0])} is meant" if match else ""
 
 
+def useless(*, own: bool, draws: bool) -> tuple[str, ...]:
+    """Return the dotted keys that say nothing, whether a kernel rounds on its `own` and whether there are [draws]."""
+    return (*(() if own else _OWN), *(() if draws else (f"cost.{CHEAP}",)))
+
+
+def document(table: Table, without: Collection[str]) -> dict[str, object]:
+    """Return a table as a plain mapping, with every default and `without` some dotted keys."""
+    names = [name for name in table.__struct_fields__ if f"{table.table}.{name}" not in without]
+    values = ((name, getattr(table, name)) for name in names)
+    return {name: list(value) if isinstance(value, tuple) else copy.copy(value) for name, value in values}
+
+
 def defaults_in_use(raw: Mapping[str, object]) -> tuple[str, ...]:
     """Return the dotted keys of all defaults in use, in order of the file."""
-    assumed: list[str] = []
+    kernel, assumed = raw.get("kernel"), list[str]()
+    own = isinstance(kernel, Mapping) and kernel.get("rounds") == "itself"
+    without = useless(own=own, draws="draws" in raw)
     for table, record in TABLES.items():
         given = raw.get(table)
         keys = [name for name in record.__struct_fields__ if not isinstance(given, dict) or name not in given]
         if table == "target" and given is None:
             keys = ["worthwhile"]  # the one key of it that counts without a target
+        if table in ("library", "command") and given is None:
+            keys = []
         if table == "draws":
             keys = [name for name in keys if isinstance(given, dict) and name in counting_keys(given)]
-        if table == "cost" and "draws" not in raw:
-            keys = [name for name in keys if name != CHEAP]
         if table == "cost" and given is not None:
             keys = [name for name in keys if name not in FORMATS]  # a format without a cost is not used
-        assumed.extend(f"{table}.{name}" for name in keys)
+        assumed.extend(key for name in keys if (key := f"{table}.{name}") not in without)
     return tuple(assumed)

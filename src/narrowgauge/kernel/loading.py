@@ -20,7 +20,9 @@ from narrowgauge.dispatch.setting import Observer, Place
 from narrowgauge.errors import AuditFileError, DispatchError, KernelError
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.audittables import RULES, KernelTable, shown
+from narrowgauge.kernel.command import Command
 from narrowgauge.kernel.fingerprint import fingerprint
+from narrowgauge.kernel.library import Library
 
 __all__ = ["KernelSource", "approximation_function", "find_kernel", "private_copy"]
 
@@ -30,7 +32,7 @@ _TWICE = "a module that can be executed twice; else list it under kernel.shared,
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class KernelSource:
-    """A kernel that was found: compiled code and the function's name in it, or a function handed over from Python.
+    """A kernel that was found: compiled code and a function's name in it, a function handed over, or what is `foreign`.
 
     `sources` holds the kernel's module and the listed ones, read and compiled once for all arms; `allowed` the lines of
     theirs that may let values leave, by the words of the audit file; `approximation` the user's function that makes
@@ -46,16 +48,17 @@ class KernelSource:
     sources: Sources
     allowed: Mapping[str, Place]
     approximation: KernelSource | None = None
+    foreign: Library | Command | None = None
 
     def digest(self) -> str:
         """Return the fingerprint of all that is copied: source texts, and the function that was handed over.
 
-        A function of the user's that makes normals counts too.
+        That of a library or command is the one of its file; a function of the user's that makes normals counts too.
 
-        Raises AuditFileError where a file of a listed package cannot be read.
+        Raises AuditFileError where a file cannot be read.
         """
         try:
-            own = fingerprint(self.sources.texts(), self.function)
+            own = fingerprint(self.sources.texts(), self.function) if self.foreign is None else self.foreign.digest()
             if self.approximation is None:
                 return own
             return fingerprint({"kernel": own.encode(), "draws": self.approximation.digest().encode()})
@@ -70,6 +73,19 @@ def find_kernel(audit_file: AuditFile) -> KernelSource:
     Raises AuditFileError where there is no such file or module, or it is not Python.
     """
     run, source = audit_file.kernel.run, audit_file.source
+    if (foreign := _foreign(audit_file)) is not None:
+        return KernelSource(
+            run=run,
+            source=source,
+            name="",
+            code=None,
+            module="",
+            function=None,
+            sources=Sources(),
+            allowed={},
+            approximation=_approximation(audit_file),
+            foreign=foreign,
+        )
     target, _, name = run.rpartition(":")
     function, path = audit_file.function, None
     if function is None:
@@ -102,7 +118,9 @@ def _approximation(audit_file: AuditFile) -> KernelSource | None:
         return None
     table = KernelTable(run=draws.approximate, takes="uniforms")
     with _blaming_draws():
-        return find_kernel(msgspec.structs.replace(audit_file, kernel=table, function=None, draws=None))
+        return find_kernel(
+            msgspec.structs.replace(audit_file, kernel=table, library=None, command=None, function=None, draws=None)
+        )
 
 
 def approximation_function(kernel: KernelSource) -> Callable[..., Any] | None:
@@ -167,6 +185,12 @@ def private_copy(
             "one of " + ", ".join(known) if known else "a file that defines a function",
         )
     return PrivateCopy(found, setting, copies)
+
+
+def _foreign(audit_file: AuditFile) -> Library | Command | None:
+    if audit_file.library is not None:
+        return Library(audit_file, audit_file.library)
+    return None if audit_file.command is None else Command(audit_file, audit_file.command)
 
 
 def _raise_uncopied(kernel: KernelSource, copies: Copies, problem: BaseException | None) -> None:

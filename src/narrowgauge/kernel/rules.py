@@ -53,6 +53,7 @@ class Rule:
 
 _POSITIVE = Rule(accepted="a finite number above 0", low=0.0, open_low=True)
 _NOT_NEGATIVE = Rule(accepted="a finite number of 0 or more", low=0.0)
+_NAMES = "an array of names, each once"
 _BY_QUANTITY = "a finite number above 0, or a table of such numbers by quantity"
 
 RULES: dict[str, Rule] = {
@@ -66,6 +67,14 @@ RULES: dict[str, Rule] = {
     "kernel.modules": Rule(accepted='an array of names such as "package.module", each once'),
     "kernel.shared": Rule(accepted="names of modules that do not stand in kernel.modules, each once"),
     "kernel.allow": Rule(accepted='an array of lines such as "model.py:41", each once'),
+    "kernel.rounds": Rule(accepted='"emulated" or "itself"'),
+    "library.path": Rule(accepted="the path of a shared library, relative to the audit file"),
+    "library.symbol": Rule(accepted='a name in C, such as "value" for the functions value_float16, value_float32 ...'),
+    "library.parameters": Rule(accepted=f"{_NAMES}: the keys of [parameters] in the order in which the library reads"),
+    "library.outputs": Rule(accepted=f"{_NAMES}: the quantities in the order in which the library writes them"),
+    "command.run": Rule(accepted="an array of strings: a program, relative to the audit file, and its arguments"),
+    "command.outputs": Rule(accepted=f"{_NAMES}: the quantities in the order of the rows of result.npy"),
+    "command.seconds": Rule(accepted="a finite number above 0, at most 1e6", low=0.0, open_low=True, high=1e6),
     "ladder.horizon": _POSITIVE,
     "ladder.coarsest_steps": Rule(accepted="an integer of 1 or more", low=1),
     "ladder.refinement": Rule(accepted="an integer of 2 or more", low=2),
@@ -97,6 +106,7 @@ RULES: dict[str, Rule] = {
     "cost.draws": _NOT_NEGATIVE,
     "cost.approximate_draws": _NOT_NEGATIVE,
     "cost.path": _NOT_NEGATIVE,
+    "cost.measured": Rule(accepted="a boolean"),
     "sampling.block": Rule(accepted="a multiple of 1024, at least 1024", low=1024),
     "sampling.paths": Rule(accepted="an integer of 1 or more", low=1),
     "sampling.most_paths": Rule(accepted="an integer of sampling.paths or more", low=1),

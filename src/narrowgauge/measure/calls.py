@@ -17,6 +17,7 @@ from narrowgauge.kernel.arms import Kind
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.contract import evaluate, evaluate_drawing, takes_one_path
 from narrowgauge.kernel.loading import KernelSource, private_copy
+from narrowgauge.kernel.ownrounding import evaluate_own, own_copy, timed_own
 from narrowgauge.measure.arms import REFERENCE
 
 __all__ = ["Caller", "Quantities"]
@@ -28,7 +29,7 @@ class Caller:
     """A private copy of a kernel in one arithmetic, or in plain NumPy for None; raises what making the copy raises.
 
     A kernel that takes one path a call is called for each, or with whole `rows` of them. `kind` says which draws of a
-    block it sees.
+    block it sees. One that rounds for itself is called in the arithmetic's format as it is, in float64 for None.
     """
 
     def __init__(
@@ -46,7 +47,12 @@ class Caller:
         self._arithmetic = arithmetic or arithmetic_named(REFERENCE)
         self._feed = Feed() if file.kernel.takes == "rng" else None
         self._drawn: Floats | ArmDraws | None = None
-        self.copy: PrivateCopy = private_copy(kernel, arithmetic, observer, self._feed)
+        self._own = kernel if file.kernel.rounds == "itself" else None
+        self.copy: PrivateCopy = (
+            private_copy(kernel, arithmetic, observer, self._feed)
+            if self._own is None
+            else own_copy(kernel, self._arithmetic.format)
+        )
         self.one_path = takes_one_path(self.copy.function, file)
         self._rows = rows and self.one_path
 
@@ -67,7 +73,7 @@ class Caller:
             draws = draws.approximated()
         drawn = fine_draws(draws, self._arithmetic)
         self._drawn = coarse_draws(draws, drawn, self._arithmetic) if coarse_follows else None
-        return self._on_array(drawn, level)
+        return self.on_array(drawn, level)
 
     def coarse(self, draws: Draws | Tape, level: int) -> Quantities:
         """Return the quantities of the coarse path below `level`, once, on the draws of the fine path just run."""
@@ -80,12 +86,35 @@ class Caller:
                 raise KernelError(str(problem)) from None
             return self._on_tape(reader, level - 1, draws.paths)
         assert isinstance(drawn, np.ndarray)  # likewise
-        return self._on_array(drawn, level - 1)
+        return self.on_array(drawn, level - 1)
 
-    def _on_array(self, drawn: Floats, level: int) -> Quantities:
+    def on_array(self, drawn: Floats, level: int) -> Quantities:
+        """Return the quantities on draws that are rounded already, carriers of shape (steps, factors, paths)."""
         file = self._file
+        if self._own is not None:
+            return evaluate_own(
+                self._own,
+                self.copy,
+                drawn,
+                form=self._arithmetic.format,
+                step=file.ladder.step_size(level),
+                keywords=file.keywords(),
+                layout=file.kernel.layout,
+            )
         step, singly = file.ladder.step_size(level), self.one_path and not self._rows
         return evaluate(self.copy, drawn, step, file.keywords(), file.kernel.layout, singly=singly)
+
+    def seconds(self, drawn: Floats, level: int) -> float:
+        """Return the time of one call of a kernel that rounds for itself, on draws as `on_array` takes them."""
+        file = self._file
+        return timed_own(
+            self.copy,
+            drawn,
+            form=self._arithmetic.format,
+            step=file.ladder.step_size(level),
+            keywords=file.keywords(),
+            layout=file.kernel.layout,
+        )
 
     def _on_tape(self, reader: Reader, level: int, paths: int) -> Quantities:
         assert self._feed is not None  # a tape is drawn from

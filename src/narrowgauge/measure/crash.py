@@ -8,7 +8,7 @@ from typing import IO
 
 __all__ = ["innermost"]
 
-_FRAME = re.compile(r'^  File "(.+)", line (\d+) in .+$')
+_FRAME = re.compile(r'^  File "(.+)", line (\d+) in (.+)$')
 _HERE = os.path.join(os.path.dirname(os.path.dirname(os.path.abspath(__file__))), "")
 
 
@@ -28,5 +28,7 @@ def innermost(trace: IO[bytes]) -> str:
         if found and own:
             break
         if frame is not None and not own:
-            found.append(f"{frame[1]}:{frame[2]}")
+            # A library's function is there by the name of its file; "<string>" and its like are Python, too.
+            python = frame[1].endswith((".py", ">"))
+            found.append(f"{frame[1]}:{frame[2]}" if python else f"{frame[3]} of {frame[1]}")
     return f" at {', called from '.join(found)}" if found else ""

@@ -36,14 +36,15 @@ T = TypeVar("T")
 _PROGRAM = (
     "import json, signal, sys\n"
     "signal.signal(signal.SIGINT, signal.SIG_IGN)\n"  # Ctrl-C is the driver's to hear
-    "path, trace = sys.argv[1:]\n"
+    "path, trace, driver, scratch = sys.argv[1:]\n"
     "sys.path[:], sys.argv[1:] = json.loads(path), []\n"
     "from narrowgauge.measure.worker import serve\n"
-    "serve(int(trace))\n"
+    "serve(int(trace), int(driver), scratch)\n"
 )
 _ATTEMPTS = 2
 _CUT = (EOFError, OSError, pickle.UnpicklingError)  # what reading or writing a pipe raises that has no other end
 _FALLING = 5.0  # seconds for a process to end once its pipe is cut
+_TEMPORARY = ("TMPDIR", "TEMP", "TMP")
 # Read by libraries that a kernel imports only later, when they can no longer be pinned in time.
 _ONE_THREAD = dict.fromkeys(("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS"), "1")
 
@@ -73,7 +74,8 @@ class ProcessEngine:
         self.title = "1 worker process" if workers == 1 else f"{workers} worker processes"
         self.workers = workers
         self._tasks: queue.SimpleQueue[_Task | None] = queue.SimpleQueue()
-        self._slots = [_Slot(job, timeout, self._tasks) for _ in range(workers)]
+        self._scratch = tempfile.TemporaryDirectory(prefix="narrowgauge-", ignore_cleanup_errors=True)
+        self._slots = [_Slot(job, timeout, self._tasks, self._scratch.name) for _ in range(workers)]
 
     def __enter__(self) -> ProcessEngine:
         for slot in self._slots:
@@ -90,6 +92,7 @@ class ProcessEngine:
             self._tasks.put(None)
         for slot in self._slots:
             slot.join()
+        self._scratch.cleanup()
 
     def call(self, task: Callable[[Bench], T]) -> T:
         """Run one task in one of the processes."""
@@ -136,8 +139,12 @@ class _Slot(threading.Thread):
         job: Job,
         timeout: float | None,
         tasks: queue.SimpleQueue[_Task | None],
+        scratch: str,
     ) -> None:
         super().__init__(daemon=True)
+        # What a worker that is ended leaves in the folder for temporary files goes with the engine.
+        self._scratch = scratch
+        self._environment = {**os.environ, **_ONE_THREAD, **dict.fromkeys(_TEMPORARY, scratch)}
         self._job, self._timeout, self._tasks = job, timeout, tasks
         self._trace = tempfile.TemporaryFile()  # noqa: SIM115  # `run` closes it; without a name, nothing is left of it
         self._lock = threading.Lock()  # around all of the following
@@ -225,7 +232,8 @@ class _Slot(threading.Thread):
                 return self._process
             _ended(self._process)
         files = () if os.name == "nt" else (self._trace.fileno(),)  # there a process inherits no file by its number
-        command = [sys.executable, "-c", _PROGRAM, json.dumps(sys.path), str(sum(files))]
+        own = (str(sum(files)), str(os.getpid()), self._scratch)
+        command = [sys.executable, "-c", _PROGRAM, json.dumps(sys.path), *own]
         with self._lock:
             if self._stopped:
                 raise _StoppedError
@@ -234,7 +242,7 @@ class _Slot(threading.Thread):
                     command,
                     stdin=subprocess.PIPE,
                     stdout=subprocess.PIPE,
-                    env={**os.environ, **_ONE_THREAD},
+                    env=self._environment,
                     pass_fds=files,
                     process_group=0,  # out of reach of the terminal's Ctrl-C
                 )

@@ -179,6 +179,17 @@ class Ledger:
         if block.seconds >= _TOGETHER or time.monotonic() - self._written >= _TOGETHER:
             self._commit()
 
+    def note(self, name: str, value: str) -> None:
+        """Keep something else about the audit, until it is begun anew."""
+        with self._telling("cannot be written"):
+            self._connection.execute("INSERT OR REPLACE INTO audit VALUES (?, ?)", (name, value))
+
+    def noted(self, name: str) -> str | None:
+        """Return what was kept under this name, or None."""
+        with self._telling("cannot be read"):
+            found = self._connection.execute("SELECT value FROM audit WHERE name = ?", (name,)).fetchone()
+        return None if found is None else str(found[0])
+
     def finish(self) -> None:
         """Note that the audit is done and written."""
         self._commit()

@@ -11,12 +11,14 @@ import functools
 import os
 import pickle
 import queue
+import shutil
 import sys
 import threading
 import time
 from collections.abc import Callable
 from typing import Any, BinaryIO
 
+from narrowgauge.kernel.command import abandon
 from narrowgauge.measure.task import Bench, Job, attempted
 
 __all__ = ["READY", "Asked", "serve"]
@@ -27,8 +29,11 @@ READY = "ready"
 _GRACE = 1.0  # seconds that a worker without a driver may take to end by itself
 
 
-def serve(trace: int) -> None:
-    """Serve the driver until it ends; a crash writes the stack of Python calls to the open file `trace`, if not 0."""
+def serve(trace: int, driver: int, scratch: str) -> None:
+    """Serve the driver until it ends; a crash writes the stack of Python calls to the open file `trace`, if not 0.
+
+    The folder `scratch` is the driver's, to be removed by the workers where the process `driver` is gone and cannot.
+    """
     if trace:
         faulthandler.enable(trace, all_threads=False)
     # The pipes move to numbers of their own, so that nothing that a kernel reads or prints gets into them.
@@ -40,8 +45,9 @@ def serve(trace: int) -> None:
         for pipe in (requests, replies):
             os.register_at_fork(after_in_child=functools.partial(os.close, pipe.fileno()))
     waiting: queue.SimpleQueue[Asked | None] = queue.SimpleQueue()
-    threading.Thread(target=_read, args=(requests, waiting), daemon=True).start()
-    _answer(replies, READY)
+    leave = functools.partial(_leave, os.getpid(), driver, scratch)
+    threading.Thread(target=_read, args=(requests, waiting, leave), daemon=True).start()
+    _answer(replies, READY, leave)
     bench: Bench | None = None
     while (asked := waiting.get()) is not None:
         job, task, level = asked
@@ -51,11 +57,12 @@ def serve(trace: int) -> None:
             bench = bench or Bench.opened(job)
             return task(bench)
 
-        _answer(replies, attempted(at_bench, level))
+        _answer(replies, attempted(at_bench, level), leave)
         sys.stdout.flush()
+    leave()
 
 
-def _read(requests: BinaryIO, waiting: queue.SimpleQueue[Asked | None]) -> None:
+def _read(requests: BinaryIO, waiting: queue.SimpleQueue[Asked | None], leave: Callable[[], None]) -> None:
     """Pass on what the driver sends; when it is gone, end this process, also in the middle of a block."""
     while True:
         try:
@@ -64,12 +71,22 @@ def _read(requests: BinaryIO, waiting: queue.SimpleQueue[Asked | None]) -> None:
             break
     waiting.put(None)
     time.sleep(_GRACE)
+    leave()
     os._exit(1)
 
 
-def _answer(replies: BinaryIO, answer: object) -> None:
+def _leave(worker: int, driver: int, scratch: str) -> None:
+    """End a command that still runs, and remove what a driver that is gone has left; in the process `worker` alone."""
+    if os.getpid() == worker:
+        abandon()
+        if os.getppid() != driver:
+            shutil.rmtree(scratch, ignore_errors=True)
+
+
+def _answer(replies: BinaryIO, answer: object, leave: Callable[[], None]) -> None:
     try:
         pickle.dump(answer, replies)
         replies.flush()
     except OSError:  # nobody listens, or this is a fork of the worker that the kernel let go on
+        leave()
         os._exit(1)

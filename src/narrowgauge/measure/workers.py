@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import secrets
 from collections.abc import Iterator
+from concurrent.futures import ThreadPoolExecutor
 from contextlib import contextmanager
 from dataclasses import dataclass
 from typing import Any
@@ -22,7 +23,8 @@ class Workers:
     """Who does the work: `number` processes, `executor`, or the dask cluster at the address `cluster`.
 
     `timeout` is the time limit of a block in seconds, or None; to be able to end a block that is past it, even a single
-    worker is then a process of its own. Raises WorkerError for what does not go together.
+    worker is then a process of its own, as always for a kernel that is a library or a command. Raises WorkerError for
+    what does not go together.
     """
 
     number: int = 1
@@ -58,11 +60,14 @@ def engine_for(file: AuditFile, kernel: KernelSource, workers: Workers) -> Itera
             with ExecutorEngine(file, kernel, executor, token, workers=threads, title=title) as engine:
                 yield engine
     elif workers.executor is not None:
+        if file.foreign and isinstance(workers.executor, ThreadPoolExecutor):
+            what = f"audit: {workers.executor!r} would run {file.kernel.run} in this process, which it may take with it"
+            raise WorkerError(f"{what}; accepted: workers, or an executor of processes")
         from narrowgauge.measure.remote import ExecutorEngine
 
         with ExecutorEngine(file, kernel, workers.executor, token) as engine:
             yield engine
-    elif workers.number > 1 or workers.timeout is not None:
+    elif workers.number > 1 or workers.timeout is not None or file.foreign:
         from narrowgauge.measure.processes import ProcessEngine
 
         with ProcessEngine(job_for(file, kernel, token), workers.number, workers.timeout) as processes:

@@ -2,7 +2,8 @@
 
 Figures are finite; one that does not exist is None, and a `reason` beside it says why. Intervals are flat: `gain`,
 `gain_low`, `gain_high`. Variances are in the squared unit of the quantity, coefficients of the law in units of u^2,
-costs in the unit of the audit file's cost table. Only `provenance` may differ between two runs of the same audit.
+costs in the unit of the audit file's cost table. Only `provenance` may differ between two runs of the same audit; where
+costs of a step are measured, `costs` does as well, and what follows from it.
 """
 
 from __future__ import annotations
@@ -11,6 +12,8 @@ from typing import Literal
 
 import msgspec
 
+from narrowgauge.record.canary import CanaryEntry
+from narrowgauge.record.costs import CostEntry
 from narrowgauge.record.draws import DrawsEntry, OrderEntry, PartsEntry, SeparationEntry
 from narrowgauge.record.plan import (
     AllocationEntry,
@@ -39,11 +42,13 @@ __all__ = [
     "ArmEntry",
     "AuditRecord",
     "BestEntry",
+    "CanaryEntry",
     "CommonLevelEntry",
     "CommonPlanEntry",
     "ConstantEntry",
     "ConstantValue",
     "CorrectionEntry",
+    "CostEntry",
     "DecisionEntry",
     "DrawsEntry",
     "FaultEntry",
@@ -83,12 +88,12 @@ class KernelEntry(Entry, frozen=True, kw_only=True):
 
 
 class ArithmeticEntry(Entry, frozen=True, kw_only=True):
-    """What one arm computes in, and with which draws."""
+    """What one arm computes in, and with which draws; how a kernel that rounds for itself does it is not known."""
 
     format: str
     rounding: str
-    subnormals: str
-    fused: bool
+    subnormals: str | None
+    fused: bool | None
     draws: str
     widened: list[str]
 
@@ -304,7 +309,10 @@ class RulesEntry(Entry, frozen=True, kw_only=True):
 
 
 class AuditRecord(Entry, frozen=True, kw_only=True):
-    """The whole audit; parts that a later version fills are None. `draws` is there with [draws] alone."""
+    """The whole audit; parts that a later version fills are None.
+
+    `draws` is there with [draws] alone, `canary` with a kernel that rounds for itself, `costs` where they are measured.
+    """
 
     schema: str
     kernel: KernelEntry
@@ -316,6 +324,8 @@ class AuditRecord(Entry, frozen=True, kw_only=True):
     reach: ReachEntry | None
     branches: None = None
     range: RangeEntry | None = None
+    canary: list[CanaryEntry] | msgspec.UnsetType = msgspec.UNSET
+    costs: dict[str, CostEntry] | msgspec.UnsetType = msgspec.UNSET
     lines: None = None
     averaging: None = None
     domain: None = None

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from msgspec import UnsetType
+
 from narrowgauge.record.audit import AuditRecord, DrawsEntry
 from narrowgauge.report.wording import clean, count, figure, joined, setting_value
 
@@ -14,6 +16,7 @@ __all__ = [
     "confidence",
     "coupled",
     "exact_formats",
+    "measured_costs",
     "measured_to",
     "narrow_formats",
     "setting",
@@ -80,6 +83,17 @@ def assumed_costs(record: AuditRecord) -> bool:
     return "cost.float64" in _assumed(record)
 
 
+def measured_costs(record: AuditRecord) -> str:
+    """Return the measured costs of a step, float64 being 1, each with its median time and the range of them."""
+    if isinstance(record.costs, UnsetType):
+        return ""
+    shown = []
+    for arm, one in record.costs.items():
+        times = f"{figure(one.nanoseconds)} ns, {figure(one.fastest)} to {figure(one.slowest)}"
+        shown.append(f"{clean(arm)} {figure(one.cost)} ({times})")
+    return f"{joined(shown)}; medians of {next(iter(record.costs.values())).runs} runs in turns on this machine"
+
+
 def assumptions(record: AuditRecord) -> str:
     """Return every default that was used, with its value, as one sentence a table; "" if the file gave every key."""
     tables: dict[str, list[str]] = {}
@@ -99,6 +113,8 @@ def arithmetics(record: AuditRecord) -> str:
     for arm, entry in record.arms.items():
         fused = "products fused into sums" if entry.fused else "products not fused into sums"
         words = f"rounding to {entry.rounding}, subnormals {entry.subnormals}, {fused}, {entry.draws} draws"
+        if entry.subnormals is None:
+            words = f"rounding is {entry.rounding}, {entry.draws} draws"
         words += f", {joined(entry.widened)} in a wider format" if entry.widened else ""
         kinds.setdefault(clean(words), []).append(clean(arm))
     return "; ".join(f"{joined(arms)}: {words}" for words, arms in kinds.items())

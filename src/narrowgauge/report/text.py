@@ -14,6 +14,7 @@ from rich.rule import Rule
 from rich.text import Text
 
 from narrowgauge.record.audit import AuditRecord, FaultEntry, PlanEntry, QuantityEntry, TrialEntry
+from narrowgauge.report.canary import CANNOT_SHOW, canary_lines
 from narrowgauge.report.constants import constant_lines, no_constants
 from narrowgauge.report.layout import Hanging
 from narrowgauge.report.notes import accumulation, format_notes, nonfinite, orders, separation_notes
@@ -23,6 +24,7 @@ from narrowgauge.report.settings import (
     arithmetics,
     assumptions,
     coupled,
+    measured_costs,
     measured_to,
     narrow_formats,
     today,
@@ -45,6 +47,7 @@ from narrowgauge.report.wording import NONE, clean, joined, setting_value
 __all__ = ["Progress", "audit_text", "planned_text", "trial_text", "verdict_text"]
 
 _CONSTANTS = "Constants that a format cannot take"
+_CANARY = "Whether the kernel rounds in the formats it claims"
 _FILES = "audit.json (everything), levels.csv (one row per quantity, level and arm)"
 
 
@@ -65,6 +68,10 @@ def audit_text(record: AuditRecord, folder: Path | None) -> Group:
         lines = constant_lines(record.range)
         parts.append(_labelled(_CONSTANTS, "listed by line." if lines else no_constants(record.range)))
         parts += _bullets(lines)
+    if not isinstance(record.canary, UnsetType):
+        parts += [_labelled(_CANARY, CANNOT_SHOW), *_bullets(canary_lines(record.canary))]
+    if costs := measured_costs(record):
+        parts.append(_labelled("Measured costs of a step of one path, by every audit anew", f"{costs}."))
     assumed = assumptions(record)
     parts.append(_labelled("Assumed, since the audit file does not say", f"{assumed}." if assumed else "nothing."))
     parts += [Text(), *_heading("Cautions"), *_bullets(record.cautions)]
@@ -78,6 +85,8 @@ def verdict_text(record: AuditRecord, folder: Path | None) -> Group:
 
 def trial_text(trial: TrialEntry) -> Group:
     """Return what would be rounded, line by line, what would escape, decisions and remarks."""
+    if trial.reach is None:
+        return _own_text(trial)
     escapes = [fault for fault in trial.faults if fault.kind == "escape"]
     parts: list[RenderableType] = [*_heading("What would escape"), *_faults(escapes)]
     if not escapes:
@@ -88,9 +97,7 @@ def trial_text(trial: TrialEntry) -> Group:
     elif not trial.identical:
         identical = "float64 through the emulation does not give plain NumPy's bits."
     parts += [Text(identical, style="none" if trial.identical else "bold red"), Text()]
-    raised = [fault for fault in trial.faults if fault.kind == "raised"]
-    if raised:
-        parts += [*_heading("What the kernel would raise"), *_faults(raised), Text()]
+    parts += _raised(trial)
     parts += _heading("What would be rounded, in float64 on a small sample")
     if trial.reach.lines:
         parts += [reach_table(trial.reach), Text(), Text(reach_summary(trial.reach))]
@@ -102,6 +109,18 @@ def trial_text(trial: TrialEntry) -> Group:
     if notes:
         parts += [Text(), *_heading("Remarks"), *_bullets(notes)]
     return Group(*parts)
+
+
+def _own_text(trial: TrialEntry) -> Group:
+    """Return what the trial of a kernel that rounds for itself showed."""
+    parts: list[RenderableType] = [Text("A second run gives the same bits in every format."), Text(), *_raised(trial)]
+    parts += [*_heading(_CANARY), *_bullets(canary_lines(trial.canary or ())), Text(), Text(CANNOT_SHOW)]
+    return Group(*parts)
+
+
+def _raised(trial: TrialEntry) -> list[RenderableType]:
+    raised = [fault for fault in trial.faults if fault.kind == "raised"]
+    return [*_heading("What the kernel would raise"), *_faults(raised), Text()] if raised else []
 
 
 def _faults(faults: Iterable[FaultEntry]) -> list[RenderableType]:

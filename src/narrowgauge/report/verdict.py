@@ -4,9 +4,11 @@ from __future__ import annotations
 
 from collections.abc import Iterable
 
+from msgspec import UnsetType
 from rich.text import Text
 
 from narrowgauge.record.audit import AuditRecord, DecidedEntry, FinestEntry, QuantityEntry
+from narrowgauge.report.canary import canary_alarms
 from narrowgauge.report.settings import assumed_costs, confidence, coupled, measured_to, today
 from narrowgauge.report.tables import VERDICT_STYLES
 from narrowgauge.report.wording import (
@@ -41,7 +43,7 @@ _OPEN = {
 
 
 def alarms(record: AuditRecord) -> list[tuple[str, Text]]:
-    """Return what has to be read before anything else: levels that do not fit together, dropped paths, odd workers.
+    """Return what has to be read first: levels that do not fit together, dropped paths, false formats, odd workers.
 
     Each paragraph comes with the mark that stands before it.
     """
@@ -63,6 +65,11 @@ def alarms(record: AuditRecord) -> list[tuple[str, Text]]:
         words = "The reference is not finite on some paths; they count in no arm: "
         text.append(f"{words}{'; '.join(dropped)}.", style="not bold default")
         found.append(("", text))
+    unsound = canary_alarms(() if isinstance(record.canary, UnsetType) else record.canary)
+    if unsound:
+        text = Text("THE KERNEL DOES NOT ROUND IN THE FORMATS IT CLAIMS. ", style="bold red")
+        text.append("What is said below of these formats is said of what was run:", style="not bold default")
+        found += [("", text), *(("- ", Text(line)) for line in unsound)]
     return found + [("", text) for text in worker_alarms(record)]
 
 

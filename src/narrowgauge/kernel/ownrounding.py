@@ -1,0 +1,109 @@
+"""Kernels that round for themselves: called with draws in each format's own type, and taken at their word.
+
+A Python function is executed anew under plain NumPy, so that nothing of the user's changes; whatever arrays it returns,
+np.asarray has to convert. Nothing is emulated and nothing can escape.
+"""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Mapping
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+
+from narrowgauge.arithmetic.formats import FORMATS, Format
+from narrowgauge.arithmetic.rounding import Floats
+from narrowgauge.dispatch.copies import PrivateCopy
+from narrowgauge.errors import KernelError
+from narrowgauge.kernel.contract import SINGLE, arranged
+from narrowgauge.kernel.loading import KernelSource, private_copy
+from narrowgauge.kernel.owntables import OWN_FORMATS
+
+__all__ = ["evaluate_own", "own_copy", "timed_own"]
+
+_ACCEPTED = "accepted: an array of shape (paths,), or a mapping of names to such arrays"
+_TYPES: dict[np.dtype[Any], Format] = {FORMATS[name].storage: FORMATS[name] for name in OWN_FORMATS}
+
+
+def own_copy(kernel: KernelSource, form: Format) -> PrivateCopy:
+    """Return the kernel's function for one format; raises what making the copy raises, and what `function` does."""
+    if kernel.foreign is None:
+        return private_copy(kernel, None)
+    return PrivateCopy(kernel.foreign.function(form), None)
+
+
+def evaluate_own(
+    kernel: KernelSource,
+    copy: PrivateCopy,
+    draws: Floats,
+    *,
+    form: Format,
+    step: float,
+    keywords: Mapping[str, object],
+    layout: str,
+) -> dict[str, npt.NDArray[np.float64]]:
+    """Call a kernel on (steps, factors, paths) carriers that hold values of `form`, in its type and the layout's order.
+
+    Returns the quantities, float64 arrays of shape (paths,). Raises KernelError for a result of the wrong kind or shape
+    or of a type that does not hold the format, for NaN in the reference of a library or command, and whatever the
+    kernel raises.
+    """
+    with np.errstate(all="ignore"):
+        result = copy.function(arranged(draws, layout).astype(form.storage), step, **keywords)
+        named = result if isinstance(result, Mapping) else {SINGLE: result}
+        if not named:
+            raise KernelError(f"the kernel returned an empty mapping; {_ACCEPTED}")
+        found = {name: _column(values, name, draws.shape[-1], form) for name, values in named.items()}
+    if kernel.foreign is not None and form.name == "float64":
+        for name, values in found.items():
+            if (wrong := np.isnan(values)).any():
+                count = f"{int(wrong.sum())} of {wrong.size} paths, the first is path {int(np.argmax(wrong))}"
+                raise KernelError(
+                    f"{kernel.run} gives NaN in the reference for {name!r}: {count}; {kernel.foreign.nan}"
+                )
+    return found
+
+
+def timed_own(
+    copy: PrivateCopy,
+    draws: Floats,
+    *,
+    form: Format,
+    step: float,
+    keywords: Mapping[str, object],
+    layout: str,
+) -> float:
+    """Return the seconds of one call alone, without what it takes to hand it its draws in its type."""
+    given = arranged(draws, layout).astype(form.storage)
+    with np.errstate(all="ignore"):
+        start = time.perf_counter()
+        copy.function(given, step, **keywords)
+        return time.perf_counter() - start
+
+
+def _column(values: Any, name: Any, paths: int, form: Format) -> npt.NDArray[np.float64]:
+    if not isinstance(name, str) or not name:
+        raise KernelError(f"the kernel returned a quantity named {name!r}; accepted: names that are strings")
+    label = "" if name == SINGLE else f" as {name!r}"
+    if values is None:
+        raise KernelError(f"the kernel returned nothing (None){label}; {_ACCEPTED}")
+    try:
+        array = np.asarray(values)
+    except (TypeError, ValueError, RuntimeError) as problem:
+        what = f"the kernel returned a {type(values).__name__}{label} that np.asarray does not convert ({problem})"
+        raise KernelError(f"{what}; {_ACCEPTED}") from None
+    if array.shape != (paths,):
+        raise KernelError(f"the kernel returned an array of shape {array.shape}{label} for {paths} paths; {_ACCEPTED}")
+    if array.dtype.kind not in "biu":
+        held = _TYPES.get(array.dtype.newbyteorder("="))
+        if held is None:
+            raise KernelError(f"the kernel returned an array of dtype {array.dtype}{label}; accepted: real numbers")
+        if held.precision < form.precision or held.emax < form.emax:
+            raise KernelError(
+                f"the kernel got its draws in {form.name} and returned {held.name}{label}, which does not hold all "
+                f"numbers of {form.name}; accepted: {form.name} or a wider type (some array libraries narrow float64 "
+                "to float32 unless they are told not to)"
+            )
+    return array.astype(np.float64)
