@@ -15,7 +15,7 @@ from narrowgauge.draws.tape import ArmDraws, Reader, Tape, TapeError
 from narrowgauge.errors import KernelError
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.contract import evaluate, evaluate_drawing, takes_one_path
-from narrowgauge.kernel.loading import KernelSource, private_copy
+from narrowgauge.kernel.loading import KernelSource, executing, private_copy
 from narrowgauge.measure.arms import REFERENCE
 
 __all__ = ["Caller", "Quantities"]
@@ -79,17 +79,19 @@ class Caller:
     def _on_array(self, drawn: Floats, level: int) -> Quantities:
         file = self._file
         step, singly = file.ladder.step_size(level), self.one_path and not self._rows
-        return evaluate(self.copy, drawn, step, file.keywords(), file.kernel.layout, singly=singly)
+        with executing():
+            return evaluate(self.copy, drawn, step, file.keywords(), file.kernel.layout, singly=singly)
 
     def _on_tape(self, reader: Reader, level: int, paths: int) -> Quantities:
         assert self._feed is not None  # a tape is drawn from
         ladder = self._file.ladder
-        return evaluate_drawing(
-            self.copy,
-            self._feed,
-            reader,
-            step=ladder.step_size(level),
-            counts=(ladder.steps(level), paths),
-            keywords=self._file.keywords(),
-            row=self._rows,
-        )
+        with executing():
+            return evaluate_drawing(
+                self.copy,
+                self._feed,
+                reader,
+                step=ladder.step_size(level),
+                counts=(ladder.steps(level), paths),
+                keywords=self._file.keywords(),
+                row=self._rows,
+            )

@@ -43,6 +43,7 @@ def serve(trace: int) -> None:
     threading.Thread(target=_read, args=(requests, waiting), daemon=True).start()
     _answer(replies, READY)
     bench: Bench | None = None
+    own = os.getpid()
     while (asked := waiting.get()) is not None:
         job, task, level = asked
 
@@ -51,8 +52,14 @@ def serve(trace: int) -> None:
             bench = bench or Bench.opened(job)
             return task(bench)
 
-        _answer(replies, attempted(at_bench, level))
-        sys.stdout.flush()
+        reply = attempted(at_bench, level)
+        if os.getpid() != own:  # a fork that the kernel let go on: the pipes' numbers may be other files' by now
+            os._exit(0)
+        _answer(replies, reply)
+        try:
+            sys.stdout.flush()
+        except BaseException:  # the kernel may have closed it, or put something of its own there
+            continue
 
 
 def _read(requests: BinaryIO, waiting: queue.SimpleQueue[Asked | None]) -> None:
@@ -71,5 +78,5 @@ def _answer(replies: BinaryIO, answer: object) -> None:
     try:
         pickle.dump(answer, replies)
         replies.flush()
-    except OSError:  # nobody listens, or this is a fork of the worker that the kernel let go on
+    except OSError:  # nobody listens
         os._exit(1)
