@@ -9,6 +9,7 @@ kept with a checksum: one that does not match is run again.
 from __future__ import annotations
 
 import contextlib
+import functools
 import hashlib
 import json
 import sqlite3
@@ -249,6 +250,7 @@ class Ledger:
 
     def _locked(self) -> sqlite3.Connection:
         connection = sqlite3.connect(self._file, timeout=0, isolation_level=None)
+        connection.text_factory = functools.partial(str, encoding="utf-8", errors="replace")  # checksums tell
         try:
             connection.execute("PRAGMA journal_mode = DELETE")
             connection.execute("PRAGMA synchronous = FULL")
@@ -296,8 +298,8 @@ def _is_busy(problem: Exception) -> bool:
 
 
 def _is_damage(problem: Exception) -> bool:
-    """Whether the file holds what no ledger does; without a code it is text that cannot be decoded."""
-    return _code(problem) in (sqlite3.SQLITE_CORRUPT, sqlite3.SQLITE_NOTADB, 0)
+    """Whether the file holds what no ledger does: no table of ours, a format unknown, text that has no code at all."""
+    return _code(problem) in (sqlite3.SQLITE_CORRUPT, sqlite3.SQLITE_NOTADB, sqlite3.SQLITE_ERROR, 0)
 
 
 def _code(problem: Exception) -> int:
