@@ -4,9 +4,11 @@ from __future__ import annotations
 
 import contextlib
 import json
+import os
 import tempfile
 import time
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal
 
@@ -16,7 +18,7 @@ from narrowgauge.conduct.run import Watcher, run
 from narrowgauge.conduct.trial import try_arms
 from narrowgauge.errors import AuditFileError, AuditFolderError, NarrowgaugeError
 from narrowgauge.kernel.auditfile import AuditFile, audit_file_from, read_audit_file, with_draws
-from narrowgauge.kernel.loading import find_kernel
+from narrowgauge.kernel.loading import find_kernel, refuse_nested
 from narrowgauge.measure.block import BlockRunner
 from narrowgauge.measure.drawplan import worked_out
 from narrowgauge.measure.provenance import provenance
@@ -102,13 +104,17 @@ def run_audit(
     resume: bool = False,
     workers: Workers | None = None,
     watcher: Watcher | None = None,
+    tell: Callable[[str], None] | None = None,
 ) -> Audit:
     """Run an audit and write its files into `out`, if given.
 
-    With `resume` the blocks that an audit left there are not run again. Raises AuditFolderError where `out` holds
-    another audit, or an unfinished one that is not resumed, and `replace` is false, before anything is measured.
+    With `resume` the blocks that an audit left there are not run again; `tell` hears where that is not as it may be
+    thought. Raises AuditFolderError where `out` holds another audit, or an unfinished one that is not resumed, and
+    `replace` is false, before anything is measured; KernelError inside another audit.
     """
     start = time.perf_counter()
+    refuse_nested(file.source)
+    place = None if out is None else _Folder.of(out)  # a kernel may go to another directory
     kernel = find_kernel(file)
     with contextlib.ExitStack() as held:
         engine = held.enter_context(engine_for(file, kernel, workers or Workers()))
@@ -116,17 +122,44 @@ def run_audit(
             file = with_draws(file, *engine.call(_draws))
         entry = KernelEntry(run=file.kernel.run, fingerprint=kernel.digest())
         ledger = None
-        if out is not None:
-            ledger = held.enter_context(_claim(out, file, entry, replace=replace, resume=resume))
+        if place is not None:
+            ledger = held.enter_context(_claim(place, file, entry, replace=replace, resume=resume))
+            if tell is not None and resume:
+                _tell(tell, place.shown, ledger)
         outcome = run(file, kernel, watcher=watcher, engine=engine, ledger=ledger)
         resumed = len(ledger.kept) if ledger is not None else 0
-        made = provenance(time.perf_counter() - start, engine.title, outcome.fingerprints, resumed)
+        damaged = ledger.damaged if ledger is not None else 0
+        made = provenance(time.perf_counter() - start, engine.title, outcome.fingerprints, resumed, damaged)
         record = account(file, outcome, entry, made)
-        if out is not None and ledger is not None:
-            _write(out / _RECORD, canonical_text(record.document()))
-            _write(out / _LEVELS, levels_csv(record))
+        if place is not None and ledger is not None:
+            _write(place, _RECORD, canonical_text(record.document()))
+            _write(place, _LEVELS, levels_csv(record))
             ledger.finish()
     return Audit(record, out)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Folder:
+    """A folder wherever the process goes, and as messages call it."""
+
+    path: Path
+    shown: Path
+
+    @classmethod
+    def of(cls, out: Path) -> _Folder:
+        try:
+            return cls(path=Path(os.path.abspath(out)), shown=out)
+        except OSError as problem:  # the current directory is gone
+            raise _unusable(out, problem) from None
+
+
+def _tell(tell: Callable[[str], None], folder: Path, ledger: Ledger) -> None:
+    """Tell that there is less to go on with than was asked for."""
+    if ledger.damaged:
+        blocks = "1 block is" if ledger.damaged == 1 else f"{ledger.damaged} blocks are"
+        tell(f"{folder}: {blocks} damaged and run again")
+    elif not ledger.kept:
+        tell(f"{folder}: holds no finished blocks to go on with; the audit begins anew")
 
 
 def _draws(bench: Bench) -> tuple[int, Literal["sum", "none"]]:
@@ -151,8 +184,9 @@ def _own_trial(bench: Bench) -> TrialEntry:
         return examine_own(bench.file, bench.kernel, bench.runner)
 
 
-def _claim(folder: Path, file: AuditFile, kernel: KernelEntry, *, replace: bool, resume: bool) -> Ledger:
+def _claim(place: _Folder, file: AuditFile, kernel: KernelEntry, *, replace: bool, resume: bool) -> Ledger:
     """Make the folder, make sure that it holds no other audit, and return its ledger, locked."""
+    folder = place.path
     try:
         folder.mkdir(parents=True, exist_ok=True)
         with tempfile.TemporaryFile(dir=folder):
@@ -160,14 +194,14 @@ def _claim(folder: Path, file: AuditFile, kernel: KernelEntry, *, replace: bool,
         path = folder / _RECORD
         data = path.read_bytes() if path.exists() else None
     except OSError as problem:
-        raise AuditFolderError(f"{folder}: cannot be used for the results: {problem.strerror}") from None
+        raise _unusable(place.shown, problem) from None
     identity = Identity.of(file, kernel.fingerprint)
-    ledger = Ledger(folder, replace=replace)
+    ledger = Ledger(folder, replace=replace, shown=place.shown)
     try:
         # A ledger that is gone on with is this audit's, whatever record an earlier one left beside it.
         if not ledger.resumes(identity, resume=resume, replace=replace):
             if data is not None and not replace:
-                _check_record(folder, data, file, kernel)
+                _check_record(place.shown, data, file, kernel)
             ledger.clear(identity)
     except BaseException:
         ledger.close()
@@ -192,11 +226,15 @@ def _check_record(folder: Path, data: bytes, file: AuditFile, kernel: KernelEntr
             raise AuditFolderError(f"{folder}: holds another audit ({what}); {accepted}")
 
 
-def _write(path: Path, text: str) -> None:
+def _unusable(folder: Path, problem: OSError) -> AuditFolderError:
+    return AuditFolderError(f"{folder}: cannot be used for the results: {problem.strerror}")
+
+
+def _write(folder: _Folder, name: str, text: str) -> None:
     try:
-        write_atomically(path, text)
+        write_atomically(folder.path / name, text)
     except OSError as problem:
-        raise AuditFolderError(f"{path}: cannot be written: {problem.strerror}") from None
+        raise AuditFolderError(f"{folder.shown / name}: cannot be written: {problem.strerror}") from None
 
 
 def _frame(rows: list[dict[str, object]]) -> pd.DataFrame:

@@ -12,12 +12,13 @@ import contextlib
 import io
 import os
 import sys
+import threading
 from collections.abc import Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, NoReturn, TextIO
 
 from narrowgauge import __version__
-from narrowgauge.errors import NarrowgaugeError
+from narrowgauge.errors import NarrowgaugeError, said
 
 if TYPE_CHECKING:
     from rich.console import RenderableType
@@ -55,8 +56,15 @@ def main(arguments: Sequence[str] | None = None) -> int:
     """Run one command, print what it has to say, and return its exit code."""
     for stream in (sys.stdout, sys.stderr):
         # A terminal that lacks a character gets a question mark, not a traceback.
-        if isinstance(stream, io.TextIOWrapper):
+        if isinstance(stream, io.TextIOWrapper) and not stream.closed:
             stream.reconfigure(errors="replace")
+    code = _guarded(arguments)
+    if arguments is None:
+        _leave_threads(code)
+    return code
+
+
+def _guarded(arguments: Sequence[str] | None) -> int:
     try:
         return _run(arguments)
     except NarrowgaugeError as problem:
@@ -71,6 +79,16 @@ def main(arguments: Sequence[str] | None = None) -> int:
     # caught where it runs.
     except BaseException as problem:
         return _broken(problem)
+
+
+def _leave_threads(code: int) -> None:
+    """End the process at once where the kernel left threads for which Python would wait; all is written by now."""
+    if all(thread.daemon for thread in threading.enumerate() if thread is not threading.main_thread()):
+        return
+    for stream in (sys.stdout, sys.stderr):
+        with contextlib.suppress(AttributeError, ValueError, OSError):
+            stream.flush()
+    os._exit(code)
 
 
 def _run(arguments: Sequence[str] | None) -> int:
@@ -115,7 +133,7 @@ def _parser() -> argparse.ArgumentParser:
         "--timeout",
         metavar="SECONDS",
         type=_seconds,
-        help="time limit of a block; a worker past it is replaced, and its block run once more",
+        help="time limit of the trial run and of each block; a worker past it is replaced, and the block run once more",
     )
     audit.add_argument(
         "--quiet", action="store_true", help="no plan, bar and tables, only what is wrong and the verdict"
@@ -171,7 +189,7 @@ def _audit(options: argparse.Namespace) -> int:
     workers = Workers(number=options.workers, timeout=options.timeout, cluster=options.cluster)
     with contextlib.nullcontext() if options.quiet else Progress() as watcher:
         done = api.run_audit(
-            file, folder, replace=options.replace, resume=options.resume, workers=workers, watcher=watcher
+            file, folder, replace=options.replace, resume=options.resume, workers=workers, watcher=watcher, tell=_say
         )
     shown = verdict_text if options.quiet else audit_text
     _show(shown(done.record, done.folder))
@@ -199,6 +217,7 @@ def _show(document: RenderableType) -> None:
     """Print a document as wide as the terminal, coloured only on a terminal that wants colours."""
     from rich.console import Console
 
+    _write("")  # a console asks a closed stream whether it is a terminal
     console = Console(file=sys.stdout, markup=False, highlight=False, emoji=False)
     # As one string: a console that meets a closed pipe leaves with exit code 1.
     with console.capture() as capture:
@@ -215,12 +234,15 @@ def _write(text: str) -> None:
     except OSError as problem:
         _silence(sys.stdout)
         raise _OutputError(f"standard output cannot be written: {problem.strerror}") from None
+    except (AttributeError, ValueError):  # there was none when the program began, or the kernel closed it
+        raise _OutputError("standard output cannot be written: it is closed") from None
 
 
 def _silence(stream: TextIO) -> None:
     """Send what is left in a stream nowhere, or Python would fail once more when it ends."""
     nowhere = os.open(os.devnull, os.O_WRONLY)
-    os.dup2(nowhere, stream.fileno())
+    with contextlib.suppress(AttributeError, ValueError):  # it is no file
+        os.dup2(nowhere, stream.fileno())
     os.close(nowhere)
 
 
@@ -228,7 +250,14 @@ def _say(message: str) -> None:
     """Print one line on standard error."""
     from narrowgauge.report.wording import clean
 
-    print(f"narrowgauge: {clean(message)}", file=sys.stderr)
+    _complain(f"narrowgauge: {clean(message)}\n")
+
+
+def _complain(text: str) -> None:
+    """Write to standard error, if there is one: the exit code says the rest."""
+    with contextlib.suppress(AttributeError, ValueError, OSError):
+        sys.stderr.write(text)
+        sys.stderr.flush()
 
 
 def _refused(problem: NarrowgaugeError) -> int:
@@ -238,16 +267,16 @@ def _refused(problem: NarrowgaugeError) -> int:
         from narrowgauge.kernel.raised import own_traceback
         from narrowgauge.report.wording import clean_lines
 
-        sys.stderr.write(clean_lines(own_traceback(cause)))
+        _complain(clean_lines(own_traceback(cause)))
     _say(str(problem))
     return problem.exit_code
 
 
 def _broken(problem: BaseException) -> int:
     """Say that this program has a fault, with all that is needed to find it."""
-    import traceback
+    from narrowgauge.kernel.raised import whole_traceback
 
-    sys.stderr.write("".join(traceback.format_exception(problem)))
-    what = f"internal error: {type(problem).__name__}: {problem}"
+    _complain(whole_traceback(problem))
+    what = f"internal error: {type(problem).__name__}: {said(problem)}"
     _say(f"{what}. This is a fault of narrowgauge; please report it with the traceback above and the audit file")
     return _INTERNAL

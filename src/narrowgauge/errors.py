@@ -17,7 +17,19 @@ __all__ = [
     "RefusedError",
     "SettingsMixedError",
     "WorkerError",
+    "said",
 ]
+
+_LONGEST = 8192  # characters of a message that somebody else wrote
+
+
+def said(problem: BaseException) -> str:
+    """Return the text of an exception, whatever its class makes of it: a plain string of some thousand characters."""
+    try:
+        text = "".join([str(problem)])  # no subclass of str, which another process may not know
+    except BaseException:  # the text of a kernel's own exception is made by the kernel's code
+        return "(its text cannot be made)"
+    return text if len(text) <= _LONGEST else f"{text[:_LONGEST]} ... (cut, of {len(text):,} characters)"
 
 
 class NarrowgaugeError(Exception):

@@ -1,13 +1,9 @@
-"""The compiled loops: the bits of NumPy's code on every value and layout; where numba is missing or cannot write."""
+"""The compiled loops: the bits of NumPy's code on every value and layout."""
 
 from __future__ import annotations
 
-import os
-import subprocess
-import sys
 from collections.abc import Callable
 from importlib import import_module
-from pathlib import Path
 from typing import Any
 
 import mpfr_oracle as oracle
@@ -26,7 +22,7 @@ from narrowgauge.arithmetic.stochastic import Stochastic
 NARROW = [name for name in oracle.ALL if name not in ("float32", "float64")]
 MODES: list[Rounding] = ["nearest", "zero", "up", "down", "stochastic"]
 
-numba = pytest.importorskip("numba")
+pytest.importorskip("numba")
 if compiled.kernel("words") is None:
     pytest.skip("NARROWGAUGE_COMPILED=0", allow_module_level=True)
 
@@ -205,79 +201,34 @@ def test_layouts_do_not_matter(view: str, rounding: Rounding, both: Any) -> None
     assert alike(np.array(sum_of(state)), np.array(sum_of(np.array(state, order="C"))))
 
 
+@pytest.mark.parametrize("rounding", MODES)
+@pytest.mark.parametrize("function", [*oracle.BASIC, "square", "reciprocal"])
+def test_layouts_of_float64_do_not_matter(function: str, rounding: Any, both: Any) -> None:
+    """Whole operations in float64 on strided, reversed, broadcast, Fortran and constant operands."""
+    ufunc = getattr(np, function)
+    left, right = np.random.default_rng(58).uniform(0.5, 2.0, (2, 6, 8))
+    pairs = [
+        (left, right), (left[::-1], right), (left[:, ::3], right[:, 1::3]), (left[::-1, ::-2], right[::-1, ::-2]),
+        (np.asfortranarray(left), np.asfortranarray(right)), (left.T, right.T), (np.asfortranarray(left), right),
+        (left, right[:1]), (left[:, :1], right[:1]), (left[0], 0.3), (0.3, left[0, ::-1]),
+        (left[2, 3, ...], right[2, 3, ...]), (np.broadcast_to(left[0, 0], (8,)), right[0]), (left[3:3], right[3:3]),
+    ]  # fmt: skip
+
+    def computed(*given: Any) -> Any:
+        stream = Stochastic(1, 1, 1) if rounding == "stochastic" else None
+        return Arithmetic(format=FORMATS["float64"], rounding=rounding, stream=stream).apply(ufunc, given)
+
+    for pair in pairs:
+        operands = pair[: ufunc.nin]
+        fast, slow = both(lambda operands=operands: computed(*operands))
+        dense = [np.array(operand, order="C") for operand in np.broadcast_arrays(*operands)]
+        assert alike(fast, slow)
+        assert alike(np.ascontiguousarray(fast), np.ascontiguousarray(computed(*dense)))
+
+
 def test_every_loop_compiles_and_is_used() -> None:
     """Each row of both tables has a compiled function, and one that is not in the table has none."""
     for name in (*LOOPS, *import_module("narrowgauge.arithmetic.onepass").PASSES):
         assert compiled.kernel(name) is not None
     with pytest.raises(KeyError):
         compiled.kernel("no such loop")
-
-
-def in_a_new_process(code: str, **environment: str) -> str:
-    """Run a program and return what it printed."""
-    path = os.pathsep.join(filter(None, sys.path))
-    run = subprocess.run(
-        [sys.executable, "-c", code],
-        env={**os.environ, "PYTHONPATH": path, **environment},
-        capture_output=True,
-        text=True,
-        check=True,
-    )
-    return run.stdout.strip()
-
-
-ROUND = """
-import sys, numpy as np
-from narrowgauge.arithmetic.arithmetic import arithmetic_named
-from narrowgauge.arithmetic import compiled
-print("numba" in sys.modules, end=" ")
-print(arithmetic_named("float16").cast(np.array([0.1, 1e-7, 7e4])).tolist(), "numba" in sys.modules, compiled.note())
-"""
-
-
-def test_numba_is_imported_by_the_first_arithmetic_that_rounds() -> None:
-    """Not by an import of the package, and not at all by float64 to nearest."""
-    assert in_a_new_process(ROUND).endswith("[0.0999755859375, 1.1920928955078125e-07, inf] True None")
-    assert in_a_new_process(ROUND).startswith("False ")
-    code = ROUND.replace('"float16"', '"float64"')
-    assert in_a_new_process(code).endswith("[0.1, 1e-07, 70000.0] False None")
-
-
-def test_the_switch_leaves_numba_alone() -> None:
-    """NARROWGAUGE_COMPILED=0: the same numbers, no numba, and a note that says so."""
-    found = in_a_new_process(ROUND, NARROWGAUGE_COMPILED="0")
-    assert found == (
-        "False [0.0999755859375, 1.1920928955078125e-07, inf] False NARROWGAUGE_COMPILED=0: roundings were not compiled"
-    )
-
-
-def test_without_numba_numpy_rounds_and_a_note_says_so() -> None:
-    """The extra is missing: the same numbers."""
-    found = in_a_new_process("import sys; sys.modules['numba'] = None\n" + ROUND)
-    assert "[0.0999755859375, 1.1920928955078125e-07, inf]" in found
-    assert found.endswith(
-        "numba is not installed, or does not go with this NumPy: roundings were not compiled (extra: fast)"
-    )
-
-
-def test_a_temporary_folder_serves_where_the_usual_one_cannot_be_written(tmp_path: Path) -> None:
-    """The same numbers, a note that names the folder, and the folder is gone when the process has ended."""
-    if not hasattr(numba.config, "CACHE_LOCATOR_CLASSES"):
-        pytest.skip("this numba cannot be told to leave out its usual folders")
-    found = in_a_new_process(ROUND, TMPDIR=str(tmp_path), NUMBA_CACHE_LOCATOR_CLASSES="UserProvidedCacheLocator")
-    assert "[0.0999755859375, 1.1920928955078125e-07, inf] True compiled code was kept in a temporary folder" in found
-    assert str(tmp_path) in found
-    assert list(tmp_path.iterdir()) == []
-
-
-def test_a_cache_that_cannot_be_written_after_all_does_not_stop_a_rounding(tmp_path: Path) -> None:
-    """A full disk: compiled for this process alone."""
-    gone = tmp_path / "gone"
-    code = (
-        "import shutil, numba.core.caching as caching\n"
-        "def refuse(*given): raise OSError(28, 'No space left on device')\n"
-        "caching.IndexDataCacheFile.save = refuse\n" + ROUND
-    )
-    assert "[0.0999755859375, 1.1920928955078125e-07, inf] True None" in in_a_new_process(
-        code, NUMBA_CACHE_DIR=str(gone)
-    )

@@ -11,8 +11,11 @@ import numpy as np
 import numpy.typing as npt
 import pytest
 
+from narrowgauge.arithmetic import compiled
+from narrowgauge.arithmetic.arithmetic import Arithmetic
 from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.arithmetic.rounding import narrow, round_carrier
+from narrowgauge.arithmetic.scratch import words32
 
 View = Callable[[npt.NDArray[Any]], npt.NDArray[Any]]
 
@@ -47,7 +50,7 @@ def mixed(name: str, order: Literal["C", "F"]) -> npt.NDArray[np.float64]:
 
 @pytest.mark.parametrize("order", ["C", "F"])
 @pytest.mark.parametrize("view", list(VIEWS))
-@pytest.mark.parametrize("name", ["float16", "bfloat16"])
+@pytest.mark.parametrize("name", ["e4m3", "tf32", "float16", "bfloat16"])
 def test_a_view_is_rounded_in_place_and_nothing_beside_it(name: str, view: str, order: Literal["C", "F"]) -> None:
     """The view holds MPFR's roundings, the rest of its array keeps every bit, the view itself is returned."""
     with np.errstate(over="ignore"):
@@ -58,7 +61,7 @@ def test_a_view_is_rounded_in_place_and_nothing_beside_it(name: str, view: str, 
     part = VIEWS[view](base)
     values = np.array(part, np.float64, order="C").reshape(-1)
     assert round_carrier(part, FORMATS[name]) is part
-    want = oracle.reckon(float, oracle.to_mpfr(values, name))
+    want = oracle.fitted(oracle.reckon(float, oracle.to_mpfr(values, name)), name)
     assert oracle.differ(np.array(part, order="C").reshape(-1), want).size == 0
     assert np.array_equal(base.view(np.uint32)[~mask], before.view(np.uint32)[~mask])
 
@@ -73,6 +76,38 @@ def test_narrowing_keeps_the_shape_whatever_the_strides(name: str, view: str, or
     assert found.shape == values.shape
     want = oracle.reckon(float, oracle.to_mpfr(np.array(values, order="C").reshape(-1), name))
     assert oracle.differ(np.array(found, order="C").reshape(-1), want).size == 0
+
+
+@pytest.mark.parametrize("fast", [True, False], ids=["compiled", "numpy"])
+@pytest.mark.parametrize("order", ["C", "F"])
+@pytest.mark.parametrize("view", list(VIEWS))
+@pytest.mark.parametrize("rounding", list(oracle.MODES))
+def test_float64_is_computed_whatever_the_strides(
+    rounding: Any, view: str, order: Literal["C", "F"], fast: bool, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Operations in every mode on moderate numbers: MPFR's results in the operands' places, also with one constant."""
+    if not fast:
+        monkeypatch.setattr(compiled, "kernel", lambda name: None)
+    base = np.random.default_rng(13).standard_normal((8, 4, 64))
+    left, right = (VIEWS[view](np.array(part, order=order)) for part in (base, np.roll(base, 1)))
+    form = oracle.context("float64", rounding)
+    arithmetic = Arithmetic(format=FORMATS["float64"], rounding=rounding)
+    few = np.broadcast_to(right[:1], left.shape) if left.ndim else right
+    for operands in ((left, right), (left, few), (left, 0.3), (few, left)):
+        flat = [np.array(np.broadcast_to(operand, left.shape), order="C").reshape(-1) for operand in operands]
+        numbers = [oracle.to_mpfr(operand, "float64") for operand in flat]
+        for function, (theirs, count) in oracle.BASIC.items():
+            if function == "sqrt":
+                continue
+            found = arithmetic.apply(getattr(np, function), operands[:count])
+            want = oracle.reckon(getattr(form, theirs), *numbers[:count])
+            assert np.shape(found) == left.shape
+            assert oracle.differ(np.array(found, order="C").reshape(-1), want).size == 0, function
+        for function, call in {"sqrt": lambda x: form.sqrt(abs(x)), "reciprocal": lambda x: form.div(1, x)}.items():
+            operand = np.broadcast_to(operands[0], left.shape)
+            operand = np.abs(operand) if function == "sqrt" else operand
+            found = arithmetic.apply(getattr(np, function), (operand,))
+            assert oracle.differ(np.array(found, order="C").reshape(-1), oracle.reckon(call, numbers[0])).size == 0
 
 
 @pytest.mark.parametrize("shape", [(0,), (0, 3), (3, 0)])
@@ -129,3 +164,15 @@ def test_threads_do_not_share_their_work_space() -> None:
     for thread in threads:
         thread.join()
     assert wrong == []
+
+
+def test_a_place_that_grew_keeps_no_smaller_array() -> None:
+    """Every shape asked of one place is a part of the largest array that was needed, also of shapes known before."""
+    small = words32("growing", (2, 3), 6)
+    assert words32("growing", (2, 3), 6) is small
+    large = words32("growing", (50_000,), 50_000)
+    again = words32("growing", (2, 3), 6)
+    assert np.shares_memory(again, large)
+    assert not np.shares_memory(small, large)
+    many = [words32("growing", (1, count), count) for count in range(1, 600)]
+    assert all(np.shares_memory(part, large) for part in many)

@@ -69,7 +69,7 @@ def test_integers_of_any_size_are_rounded_once_in_the_mode(name: str, rounding: 
         want = oracle.fitted(np.array([float(form.plus(exact))]), name, rounding)
         found = narrow_integer(number, FORMATS[name], rounding)
         assert oracle.differ(np.array([found]), want).size == 0, number
-        if name != "float64":
+        if name != "float64" or rounding != "nearest":  # float64 to nearest leaves an integer as it is
             assert oracle.differ(np.array([arithmetic.constant(number)]), want).size == 0, number
 
 

@@ -166,6 +166,19 @@ def test_functions_of_two_operands_equal_mpfr(name: str, rounding: str, pairs: A
         assert [(function, values[0][i], values[1][i], found[i], want[i]) for i in bad[:3]] == []
 
 
+@every_mode
+@pytest.mark.parametrize("name", [name for name in oracle.ALL if name not in ("float32", "float64")])
+@pytest.mark.parametrize("function", oracle.LOGARITHMS)
+def test_logarithms_of_sums_equal_mpfr(function: str, name: str, rounding: str, pairs: Any) -> None:
+    """Also where one term vanishes beside the other, and where both are equal: log2(2^x + 2^x) is x + 1."""
+    values, numbers = pairs[name]
+    exact, form = oracle.logarithm_of_sum(function), oracle.context(name, rounding)
+    want = oracle.reckon(lambda x, y: form.plus(exact(x, y)), *numbers)
+    found = oracle.computed(name, function, *values, rounding=rounding)
+    bad = oracle.differ(found, oracle.fitted(want, name, rounding))
+    assert [(values[0][i], values[1][i], found[i], want[i]) for i in bad[:3]] == []
+
+
 @pytest.mark.parametrize("name", oracle.SIXTEEN_BITS)
 def test_rounding_up_a_sum_of_float32_does_not_pass(name: str) -> None:
     """Negative control: an upward addition that starts from a float32 sum is told from the right one."""

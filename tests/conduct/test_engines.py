@@ -22,6 +22,7 @@ from audit_cases import GEOMETRIC, file_for
 from rich.console import Console
 
 from narrowgauge.api import Audit, audit, run_audit
+from narrowgauge.arithmetic import compiled
 from narrowgauge.conduct.run import run
 from narrowgauge.errors import AuditFileError, KernelError, WorkerError
 from narrowgauge.kernel.auditfile import AuditFile
@@ -301,6 +302,36 @@ def test_workers_that_differ_are_reported(tmp_path: Path, monkeypatch: pytest.Mo
         "THE WORKERS DIFFER. Blocks were measured by 2 kinds of workers, which differ in numpy, subnormals and" in said
     )
     assert "SUBNORMAL NUMBERS WERE SWITCHED OFF." in said
+    assert text(record) == text(plain)
+
+
+class Uncompiled(SerialEngine):
+    """An engine whose blocks come from two processes with trouble in compiling, and one without."""
+
+    def blocks(self, sizes: Mapping[Key, int]) -> Iterator[Block]:
+        """Run the blocks and forge what was said."""
+        for number, block in enumerate(super().blocks(sizes)):
+            said = (None, "no numba", "no [red]cache")[number % 3]
+            known = json.loads(block.fingerprint) | {"compiling": said}
+            yield replace(block, fingerprint=json.dumps(known))
+
+
+def test_what_made_workers_slower_is_said_and_is_no_difference(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Each note once, by its own words, in provenance and on the terminal; the bits do not hang on it."""
+    file = file_of(tmp_path)
+    monkeypatch.setattr(compiled, "note", lambda: None)
+    plain = run_audit(file, None).record
+    assert "Slower" not in shown(plain)
+    monkeypatch.setattr(compiled, "note", lambda: "no compiler")
+    assert "Slower than it could be, with the same bits: no compiler." in shown(run_audit(file, None).record)
+    monkeypatch.setattr("narrowgauge.measure.workers.SerialEngine", Uncompiled)
+    record = run_audit(file, None).record
+    listed: Any = record.provenance["workers"]
+    assert {one["compiling"] for one in listed} == {None, "no numba", "no [red]cache"}
+    said = shown(record)
+    assert said.count("Slower than it could be, with the same bits: ") == 2
+    assert "bits: no [red]cache." in said
+    assert "WORKERS" not in said
     assert text(record) == text(plain)
 
 

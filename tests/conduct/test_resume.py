@@ -4,9 +4,11 @@ from __future__ import annotations
 
 import random
 import signal
+import sqlite3
 import subprocess
 import sys
 import time
+from contextlib import closing
 from pathlib import Path
 
 import msgspec
@@ -18,11 +20,12 @@ from narrowgauge.api import audit, run_audit
 from narrowgauge.errors import AuditFolderError, KernelError
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.measure import store
+from narrowgauge.measure.packing import unpacked
 from narrowgauge.measure.store import LEDGER, Ledger
 from narrowgauge.measure.workers import Workers
 from narrowgauge.record.canonical import canonical_text
 
-LEVELS, BLOCKS = 3, 32
+LEVELS, BLOCKS = 3, 48
 SLOW = GEOMETRIC.replace("import numpy as np", "import time\nimport numpy as np").replace(
     "    return x", "    time.sleep(0.003)\n    return x"
 )
@@ -58,7 +61,7 @@ needs_signals = pytest.mark.skipif(sys.platform == "win32", reason="signals are 
 
 
 def slow_file(folder: Path) -> AuditFile:
-    """One look of 3 levels of 32 blocks."""
+    """One look of 3 levels of 48 blocks."""
     paths = str(1024 * BLOCKS)
     return file_for(folder, SLOW, sampling={"paths": paths, "most_paths": paths})
 
@@ -145,6 +148,24 @@ def test_what_is_unfinished_is_neither_lost_nor_taken_by_chance(stopped: tuple[A
         "begin anew, or --out with another folder"
     )
     assert run_audit(file, out, replace=True).record.provenance["resumed_blocks"] == 0
+
+
+def test_a_flipped_bit_is_not_gone_on_with(tmp_path: Path, stopped: tuple[AuditFile, Path]) -> None:
+    """A block that is not as it was written is run again and told, and the end is that of an undisturbed audit."""
+    file, out = stopped
+    with closing(sqlite3.connect(out / LEDGER)) as ledger:
+        (data,) = ledger.execute("SELECT tally FROM blocks WHERE level = 2 AND block = 1").fetchone()
+        mean = unpacked(data).quantities["value"].values["float64"].moments.mean.astype("<f8").tobytes()
+        flipped = bytearray(data)
+        flipped[data.index(mean) + 6] ^= 8  # a mean that is as good as any other
+        ledger.execute("UPDATE blocks SET tally = ? WHERE level = 2 AND block = 1", (bytes(flipped),))
+        ledger.commit()
+    told: list[str] = []
+    made = run_audit(file, out, resume=True, tell=told.append).record.provenance
+    assert told == [f"{out}: 1 block is damaged and run again"]
+    assert (made["resumed_blocks"], made["damaged_blocks"]) == (3, 1)
+    run_audit(file, tmp_path / "undisturbed")
+    assert outcome(out) == outcome(tmp_path / "undisturbed")
 
 
 @pytest.mark.parametrize("what", ["kernel", "audit file", "version"])

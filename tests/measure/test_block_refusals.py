@@ -34,6 +34,65 @@ def test_what_a_kernel_raises_in_the_reference_ends_the_run(tmp_path: Path, exce
     assert type(problem.__cause__).__name__ == exception
 
 
+@pytest.mark.parametrize("raised", ["MemoryError('3 GiB')", "PermissionError('3 GiB')", "ValueError('3 GiB')"])
+def test_what_comes_of_the_machine_is_no_property_of_a_format(tmp_path: Path, raised: str) -> None:
+    """Want of memory, disk or files ends the run in a narrow arm, too; anything else is kept as what the arm does."""
+    source = f"""
+    import numpy as np
+
+    def value(dW, h):
+        if np.isinf(dW[0] * 0.0 + 70000.0).any():
+            raise {raised}
+        return dW[0]
+    """
+    kind = raised.partition("(")[0]
+    if kind == "ValueError":
+        kept = runner_for(tmp_path, source).run(0, 0).raised
+        assert [(arm, one.message) for arm, one in kept.items()] == [("float16", "3 GiB")]
+        return
+    problem = refusal(tmp_path, source)
+    assert str(problem) == f"level 0, arm float16: the kernel raised {kind}: 3 GiB"
+    assert type(problem.__cause__).__name__ == kind
+
+
+@pytest.mark.parametrize("text", ["3", "1 / 0", "sys.exit(1)"])
+def test_an_exception_without_a_text_is_still_the_kernels(tmp_path: Path, text: str) -> None:
+    """Whatever its class does when it is asked for a text: in the reference an error, in a narrow arm data."""
+    source = f"""
+    import sys
+
+    import numpy as np
+
+    class Mute(Exception):
+        def __str__(self):
+            return {text}
+
+    def value(dW, h):
+        if CONDITION:
+            raise Mute
+        return dW[0]
+    """
+    problem = refusal(tmp_path, source.replace("CONDITION", "True"))
+    assert str(problem) == "level 0, arm float64: the kernel raised Mute: (its text cannot be made)"
+    kept = (
+        runner_for(tmp_path, source.replace("CONDITION", "np.isinf(dW[0] * 0.0 + 70000.0).any()"))
+        .run(0, 0)
+        .raised["float16"]
+    )
+    assert (kept.kind, kept.message) == ("Mute", "(its text cannot be made)")
+
+
+def test_a_text_without_end_is_cut(tmp_path: Path) -> None:
+    """A message may hold a whole array, and says how much is missing."""
+    source = """
+    def value(dW, h):
+        raise ValueError("x" * 1_000_000)
+    """
+    shown = str(refusal(tmp_path, source))
+    assert shown.endswith("xxx ... (cut, of 1,000,000 characters)")
+    assert len(shown) < 9000
+
+
 RETURNS = [
     ("None", f"the kernel returned nothing (None); {ARRAY}"),
     ("[x, x]", f"the kernel returned a list; {ARRAY}"),

@@ -190,6 +190,72 @@ def test_a_damaged_tally_is_an_error_of_the_file(tmp_path: Path) -> None:
             ledger.block((2, 3))
 
 
+@pytest.mark.parametrize("column", ["level", "seconds", "fingerprint", "tally"])
+def test_a_block_that_is_not_as_it_was_written_is_run_again(tmp_path: Path, column: str) -> None:
+    """One flipped bit anywhere in it, and the block is dropped and counted; the others are taken."""
+    begun(tmp_path, *(block(number, 0.25) for number in range(3)))
+    flipped = {
+        "level": 3,
+        "seconds": 0.5,
+        "fingerprint": "{|",
+        "tally": bytes([packed(EMPTY)[0] ^ 1, *packed(EMPTY)[1:]]),
+    }
+    with closing(sqlite3.connect(tmp_path / LEDGER)) as connection:
+        connection.execute(f"UPDATE blocks SET {column} = ? WHERE block = 1", (flipped[column],))
+        connection.commit()
+    with Ledger(tmp_path) as ledger:
+        assert ledger.resumes(MINE, resume=True, replace=False)
+        assert (ledger.kept, ledger.damaged) == ({(2, 0), (2, 2)}, 1)
+        assert (2, 1) not in ledger
+    assert rows(tmp_path) == [(2, 0), (2, 2)]
+
+
+@pytest.mark.parametrize(
+    ("change", "reason"),
+    [
+        ("UPDATE audit SET value = '{' WHERE name = 'asked'", "its ledger is damaged"),
+        (
+            "UPDATE audit SET name = 'schemb' WHERE name = 'schema'",
+            "its ledger is of another kind (unknown, not narrowgauge-blocks/2)",
+        ),
+    ],
+)
+def test_a_damaged_identity_is_no_identity(tmp_path: Path, change: str, reason: str) -> None:
+    """What cannot be compared is not resumed, and is no fault of the program's."""
+    begun(tmp_path, block(0))
+    with closing(sqlite3.connect(tmp_path / LEDGER)) as connection:
+        connection.execute(change)
+        connection.commit()
+    assert f"cannot be resumed: {reason}; accepted: " in refusal(tmp_path, resume=True)
+
+
+@pytest.mark.parametrize("offset", range(4096, 20480, 4096))
+@pytest.mark.parametrize("byte", [0x00, 0x41, 0xFF])
+def test_a_damaged_ledger_can_be_replaced(tmp_path: Path, offset: int, byte: int) -> None:
+    """Wherever pages were written over: without --replace a message that names it and promises nothing else."""
+    begun(tmp_path, *(replace(block(number), fingerprint="x" * 3000) for number in range(8)))
+    path = tmp_path / LEDGER
+    data = bytearray(path.read_bytes())
+    assert len(data) > offset + 4000
+    data[offset : offset + 4000] = bytes([byte]) * 4000
+    path.write_bytes(data)
+    with Ledger(tmp_path) as ledger:
+        said = ""
+        try:
+            ledger.resumes(MINE, resume=True, replace=False)
+            ledger.put(block(9, 1.0))
+        except AuditFolderError as problem:
+            said = str(problem)
+    assert "--resume goes on" not in said
+    assert not said or said.endswith("--replace")
+    path.write_bytes(data)
+    with Ledger(tmp_path, replace=True) as ledger:
+        ledger.clear(MINE)
+        ledger.put(block(1, 1.0))
+        ledger.finish()
+    assert rows(tmp_path) == [(2, 1)]
+
+
 def test_a_folder_in_its_place_is_refused(tmp_path: Path) -> None:
     """What cannot be opened is an error with the system's reason."""
     (tmp_path / LEDGER).mkdir()

@@ -205,7 +205,7 @@ def test_every_error_that_a_task_may_raise_can_be_made_again() -> None:
     """Each class of errors.py that is an error of the input."""
     for name in errors.__all__:
         made = getattr(errors, name)
-        if issubclass(made, NarrowgaugeError):
+        if isinstance(made, type) and issubclass(made, NarrowgaugeError):
             back = attempted(raising(made.__new__(made, "said"))).failure
             assert back is not None
             assert type(back.raised()) is made
@@ -249,6 +249,23 @@ def test_anything_else_is_a_fault_of_this_program() -> None:
     assert not isinstance(back, NarrowgaugeError)
     assert "AssertionError: why\nTraceback" in str(back)
     assert "attempted" in str(back)
+
+
+class MuteError(Exception):
+    """Has no text."""
+
+    def __str__(self) -> str:
+        raise ZeroDivisionError
+
+
+@pytest.mark.parametrize("leaving", [False, True])
+def test_what_cannot_be_told_is_still_an_outcome(leaving: bool) -> None:
+    """An exception whose text cannot be made comes back, whether it is a fault or the kernel's way to leave."""
+    failure = attempted(raising(SystemExit(MuteError()) if leaving else MuteError())).failure
+    assert failure is not None
+    text = "(its text cannot be made)"
+    assert failure.message == (f"the kernel raised SystemExit: {text}" if leaving else text)
+    assert "in task\n    raise problem" in failure.trace
 
 
 def threads() -> set[int]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 from collections.abc import Sequence
 from pathlib import Path
 
@@ -19,6 +20,9 @@ import sys
 import time
 
 import numpy as np
+
+
+kept = []
 
 
 def value(dW, h, *, how="", flag=""):
@@ -51,6 +55,13 @@ def trouble(how, flag):
         time.sleep(600)
     if how == "fork":
         os.fork()  # and let both go on
+    if how == "fork and write":
+        child = os.fork() == 0
+        kept.extend(open(f"{flag}.{number}", "wb") for number in range(20 * child))  # whatever numbers they get
+    if how == "close":
+        sys.stdout.close()
+    if how == "none":
+        sys.stdout = None
     if how == "print":
         print("printed")
         print(sys.stdin.read(), end="")
@@ -88,3 +99,8 @@ def blocks_until(
 def finest(bench: Bench) -> int:
     """A task: the finest level."""
     return bench.file.ladder.finest
+
+
+def process(bench: Bench) -> int:
+    """A task: the number of the process that does it."""
+    return os.getpid()

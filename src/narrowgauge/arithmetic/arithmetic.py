@@ -50,8 +50,9 @@ class Arithmetic:
     caller is to hand products that feed sums to `fma`, which rounds them together once; `apply` sees one operation at a
     time and rounds each, fused or not.
 
-    Functions: right in every mode for every input of the formats of 8 and 16 bits; for TF32 and float32 in the modes
-    that are not to nearest, computed in float64 and rounded once; in float64 the library's own in every mode.
+    Functions of one operand are right in every mode for every input of the formats of 8 and 16 bits. All others are
+    computed in float64 and rounded once (elementary.py says what is known of them), but float32 to nearest and float64
+    in every mode have the library's own.
     """
 
     format: Format
@@ -78,7 +79,8 @@ class Arithmetic:
         object.__setattr__(self, "_ways", ways(self.format, self.rounding))
         if not self.native:  # numba is imported here at the latest, not inside a kernel's run
             compiled.kernel("nearest")
-            self._in_carrier(np.add)
+            if not self.format.native:
+                self._in_carrier(np.add)
         if self.rounding == "nearest" and self.subnormals == "kept" and not self.fused:
             self.direct.update(self._directly())
 
@@ -140,9 +142,9 @@ class Arithmetic:
         """Return a weak scalar as it meets the state: rounded once, a Python number that NumPy takes as weak.
 
         To nearest in every mode but the directed ones. float64 leaves a number as it is, so that plain code's own
-        shortcuts (`x ** 2`) are taken.
+        shortcuts (`x ** 2`) are taken, unless a directed mode has to round it: an integer that it does not hold.
         """
-        if self.format.name == "float64" and self.subnormals == "kept":
+        if self.format.name == "float64" and self.subnormals == "kept" and not self._to_round(number):
             return number
         key = (type(number), number)
         known = self._constants.get(key)
@@ -270,6 +272,12 @@ class Arithmetic:
         if isinstance(result, np.ndarray):
             return flush(result, self.format)
         return flush(np.array([result], self.format.carrier), self.format)[0]
+
+    def _to_round(self, number: float | np.generic) -> bool:
+        """Whether float64 in a directed mode does not take a number as it is."""
+        if self.rounding in ("nearest", "stochastic") or not isinstance(number, (int, np.integer)):
+            return False
+        return abs(int(number)) > _EXACT_INTEGERS
 
     def _same_type(self, result: Any) -> Any:
         """Round what a native operation widened: a Python scalar function, or one that knows float64 only."""

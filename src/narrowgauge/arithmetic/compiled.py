@@ -4,8 +4,9 @@ The bits are those of NumPy's code.
 
 numba is imported when the first rounding asks for it, never by an import of this package. What is compiled is kept on
 disk where numba keeps it (beside the source, or in the user's cache folder), so that compiling is paid once per
-installation. Where neither can be written a temporary folder serves this process alone, and `note` says so.
-NARROWGAUGE_COMPILED=0 in the environment leaves numba alone.
+installation. Where neither can be written a temporary folder serves this process alone; where what is kept there cannot
+be read, or nothing more be written, a loop is compiled for this process; where it cannot be compiled NumPy computes.
+`note` says so. NARROWGAUGE_COMPILED=0 in the environment leaves numba alone.
 """
 
 from __future__ import annotations
@@ -16,7 +17,9 @@ import importlib
 import os
 import shutil
 import tempfile
-from collections.abc import Callable
+import threading
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
 from functools import cache as once
 from types import ModuleType
 from typing import Any
@@ -29,6 +32,8 @@ __all__ = ["kernel", "note"]
 
 _INNER = "void(CPointer(CPointer(float32)), CPointer(intp), CPointer(intp), voidptr)"  # NumPy's inner loops
 _KEPT: list[Any] = []  # what the ufuncs made here point to
+_NOTES: list[str] = []
+_LOCK = threading.Lock()
 
 
 def kernel(name: str) -> Callable[..., Any] | None:
@@ -40,45 +45,57 @@ def kernel(name: str) -> Callable[..., Any] | None:
 
 
 def note() -> str | None:
-    """Return what a reader of the results should know about compiling here, or None if all is as usual."""
-    if _numba() is None:
-        return _reason()
-    folder = _temporary()
-    if folder is None:
-        return None
-    return f"compiled code was kept in a temporary folder ({folder}), since numba's usual one cannot be written"
+    """Return what a reader of the results should know about compiling in this process so far, None if all is as usual.
+
+    It says nothing about the bits, and the same in all processes that have the same trouble.
+    """
+    return "; ".join(_NOTES) or None
 
 
 @once
 def _numba() -> ModuleType | None:
     if os.environ.get("NARROWGAUGE_COMPILED") == "0":
+        _NOTES.append("NARROWGAUGE_COMPILED=0: roundings were not compiled")
         return None
     try:
         return importlib.import_module("numba")
     except ImportError:
+        why = "numba is not installed, or does not go with this NumPy"
+        _NOTES.append(f"{why}: roundings were not compiled (extra: fast)")
         return None
-
-
-def _reason() -> str:
-    if os.environ.get("NARROWGAUGE_COMPILED") == "0":
-        return "NARROWGAUGE_COMPILED=0: roundings were not compiled"
-    return "numba is not installed, or does not go with this NumPy: roundings were not compiled (extra: fast)"
 
 
 @once
-def _temporary() -> str | None:
-    """Return the folder that serves where numba finds no place for its cache; it goes when the process ends."""
+def _usual() -> str | None:
+    """Return the folder where numba keeps what it compiles of these loops; None if it finds none."""
     numba = _numba()
-    if numba is None:
-        return None
+    assert numba is not None
     try:
-        numba.njit(cache=True)(LOOPS["words"][0])
-    except RuntimeError:  # numba's "no locator available"
-        folder = tempfile.mkdtemp(prefix="narrowgauge-")
-        atexit.register(shutil.rmtree, folder, ignore_errors=True)
-        numba.config.CACHE_DIR = folder
-        return folder
-    return None
+        return str(numba.njit(cache=True)(LOOPS["words"][0]).stats.cache_path)
+    except (RuntimeError, OSError):  # numba's "no locator available"
+        return None
+
+
+@once
+def _temporary() -> str:
+    """Return the folder that serves where numba has none; it goes when the process ends."""
+    folder = tempfile.mkdtemp(prefix="narrowgauge-")
+    atexit.register(shutil.rmtree, folder, ignore_errors=True)
+    _NOTES.append("numba's usual folder cannot be written: each process compiled anew, into a temporary folder")
+    return folder
+
+
+@contextmanager
+def _kept(numba: ModuleType, folder: str | None) -> Iterator[None]:
+    """Have what is declared in this context kept in `folder`, numba's own, or a temporary one; the user's as ever."""
+    if folder is not None:
+        yield
+        return
+    usual, numba.config.CACHE_DIR = numba.config.CACHE_DIR, _temporary()
+    try:
+        yield
+    finally:
+        numba.config.CACHE_DIR = usual
 
 
 @once
@@ -86,25 +103,49 @@ def _compiled(name: str) -> Callable[..., Any] | None:
     numba = _numba()
     if numba is None:
         return None
-    _temporary()
-    try:
-        return _compile(numba, name, cache=True)
-    except OSError:  # a full disk: for this process alone
-        return _compile(numba, name, cache=False)
+    row, folder = _row(name), None
+    # Two broad excepts: what is raised where a file of numba's cache was cut short is whatever its reader raises, and
+    # nothing in a compiler may stop an audit that NumPy can do.
+    with _LOCK:
+        try:
+            folder = _usual()
+            with _kept(numba, folder):
+                return _compile(numba, name, row, cache=True)
+        except Exception as problem:
+            first = problem
+        try:
+            found = _compile(numba, name, row, cache=False)
+        except Exception as problem:
+            _add(f"numba cannot compile here ({type(problem).__name__}): NumPy did some of the roundings")
+            return None
+        trouble = f"numba's cache cannot be used ({type(first).__name__}): each process compiled anew"
+        _add(f"{trouble}; empty {folder}" if folder else trouble)
+        return found
 
 
-def _compile(numba: ModuleType, name: str, *, cache: bool) -> Callable[..., Any]:
+def _add(text: str) -> None:
+    if text not in _NOTES:
+        _NOTES.append(text)
+
+
+def _row(name: str) -> tuple[Any, Any]:
+    """Return a loop and its signature, or the number of its operands where it becomes a ufunc."""
+    row: tuple[Any, Any]
+    row = importlib.import_module("narrowgauge.arithmetic.onepass").PASSES[name] if " " in name else LOOPS[name]
+    return row
+
+
+def _compile(numba: ModuleType, name: str, row: tuple[Any, Any], *, cache: bool) -> Callable[..., Any]:
     found: Callable[..., Any]
+    loop, kind = row
     if " " in name:
-        loop, operands = importlib.import_module("narrowgauge.arithmetic.onepass").PASSES[name]
         compiled = numba.cfunc(_INNER, cache=cache, error_model="numpy")(loop)
         _KEPT.append(compiled)
-        return _ufunc(compiled.address, operands, name)
-    loop, signature = LOOPS[name]
+        return _ufunc(compiled.address, kind, name)
     if name == "odd":
-        found = numba.vectorize([signature], cache=cache)(loop)
+        found = numba.vectorize([kind], cache=cache)(loop)
     else:
-        found = numba.njit(signature, nogil=True, cache=cache, error_model="numpy")(loop)
+        found = numba.njit(kind, nogil=True, cache=cache, error_model="numpy")(loop)
     return found
 
 

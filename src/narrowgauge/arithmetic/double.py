@@ -83,7 +83,8 @@ def _compiled(
         return None
     found = np.empty(shape)
     flat, rest = found.reshape(-1), words64("rest", (found.size,), found.size).view(np.float64)
-    if not loop(*(np.broadcast_to(operand, shape).reshape(-1) for operand in operands), flat, rest):
+    dense = (np.ascontiguousarray(np.broadcast_to(operand, shape)).reshape(-1) for operand in operands)
+    if not loop(*dense, flat, rest):
         return None
     if rounding == "stochastic":
         move(flat, rest, numbers.reshape(-1))

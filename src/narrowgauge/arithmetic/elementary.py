@@ -13,15 +13,16 @@ serve (see `ways`). float32 and float64 functions are NumPy's own to nearest.
 
 In the modes that are not to nearest what is `carrier` is computed with its error term (`terms`); functions of one
 operand are decided beside the values of the format (functions.py), those of two operands are rounded once from float64,
-with what is known of `hypot`, `arctan2` and `remainder` beside values, and `power` of exact results. float64 functions
-stay NumPy's own in every mode: there is nothing wider to round from.
+with what is known of `hypot`, `arctan2`, `remainder`, `logaddexp` and `logaddexp2` beside values, and `power` of exact
+results. float64 functions stay NumPy's own in every mode: there is nothing wider to round from.
 """
 
 from __future__ import annotations
 
+import math
 import struct
 from collections.abc import Callable, Sequence
-from functools import cache
+from functools import cache, partial
 from typing import Any, Literal
 
 import numpy as np
@@ -159,7 +160,12 @@ def _pattern(number: float, form: Format) -> int:
 
 def _apart(values: Floats, out: Floats) -> bool:
     """Whether a loop may write into `out` as it reads: the same places in the same order, or none of them."""
-    return out.flags.c_contiguous and out.shape == values.shape and out.dtype == np.float32
+    if not out.flags.c_contiguous or out.shape != values.shape or out.dtype != np.float32:
+        return False
+    if values is out or not np.may_share_memory(values, out):
+        return True
+    start, other = values.__array_interface__["data"], out.__array_interface__["data"]
+    return bool(start[0] == other[0])
 
 
 def look_up_wide(ufunc: np.ufunc, values: Any, form: Format) -> Doubles:
@@ -221,10 +227,29 @@ def _power(x: Doubles, y: Doubles) -> Doubles:
     return found
 
 
+def _logarithm_of_sum(ufunc: np.ufunc, x: Doubles, y: Doubles) -> Doubles:
+    """Keep it above its larger operand.
+
+    log2(2^x + 2^x) is x + 1, and for small operands it is 1 + (x + y)/2 + (x - y)^2 log(2)/8 + ...: rounded to odd.
+    """
+    found = np.asarray(ufunc(x, y))
+    with np.errstate(all="ignore"):
+        larger = np.maximum(x, y)
+        beside = (found == larger) & np.isfinite(x) & np.isfinite(y)
+        found = np.where(beside, np.nextafter(found, np.inf), found)
+        if ufunc is np.logaddexp2:
+            beside = ((x == y) | (np.maximum(np.abs(x), np.abs(y)) < 2.0**-20)) & np.isfinite(x)
+            more = 0.5 * (x + y) + (math.log(2.0) / 8.0) * np.square(x - y)
+            found = np.where(beside, odd_sum(np.where(beside, more, 0.0), 1.0, np.empty_like(larger)), found)
+    return found
+
+
 _BESIDE: dict[np.ufunc, Callable[[Doubles, Doubles], Doubles]] = {
     np.power: _power,
     np.float_power: _power,
     np.remainder: _remainder,
     np.hypot: _hypotenuse,
     np.arctan2: _angle,
+    np.logaddexp: partial(_logarithm_of_sum, np.logaddexp),
+    np.logaddexp2: partial(_logarithm_of_sum, np.logaddexp2),
 }

@@ -1,4 +1,4 @@
-"""Loops for numba: one pass over words, no branch in it, the operations of `rounding.py` and `directed.py` one by one.
+"""Loops for numba: one pass over words, no branch in it, the operations of the NumPy code beside them one by one.
 
 Nothing here is called as it stands: `compiled.py` compiles it, and only there numba is imported. A loop that has a
 branch, or a division by what might be zero, is not vectorised and costs ten times as much.

@@ -81,7 +81,7 @@ def carrier_rounding(form: Format) -> Callable[[Floats], Floats]:
     loop = compiled.kernel("words" if wide else "singles")
     if loop is not None:
         return partial(_round_compiled, loop, form)
-    return partial(_round_words if wide else _round_singles, form)
+    return _rounding_of_words(form) if wide else partial(_round_singles, form)
 
 
 def _round_compiled(loop: Callable[..., Any], form: Format, values: Floats) -> Floats:
@@ -241,17 +241,26 @@ def _figures64(form: Format) -> tuple[float, ...]:
     return form.min_normal, 2.0 ** (form.emax + 1), 2.0 ** (1 - form.precision), form.max_finite, form.infinity
 
 
-def _round_words(form: Format, values: Floats) -> Floats:
-    """Clear the last bits after adding half of their range, one less where the kept part is even."""
-    bits = values.view(np.uint32)
-    work = words32("work", values.shape, values.size)
+def _rounding_of_words(form: Format) -> Callable[[Floats], Floats]:
+    """Return what clears the last bits after adding half of their range, one less where the kept part is even.
+
+    On a few thousand values finding names and arguments costs as much as the five passes: what can be is found here.
+    """
     drop, half, mask = _arrays32(form)
-    np.right_shift(bits, drop, out=work)
-    np.bitwise_and(work, _ONE32, out=work)
-    np.add(work, half, out=work)
-    np.add(bits, work, out=bits)
-    np.bitwise_and(bits, mask, out=bits)
-    return values
+    one, word = _ONE32, np.dtype(np.uint32)
+    shift, keep, add = np.right_shift, np.bitwise_and, np.add
+
+    def rounding(values: Floats) -> Floats:
+        bits = values.view(word)
+        work = words32("work", values.shape, values.size)
+        shift(bits, drop, work)
+        keep(work, one, work)
+        add(work, half, work)
+        add(bits, work, bits)
+        keep(bits, mask, bits)
+        return values
+
+    return rounding
 
 
 def _round_singles(form: Format, values: Floats) -> Floats:

@@ -13,16 +13,26 @@ import numpy.typing as npt
 
 __all__ = ["filled32", "words32", "words64"]
 
+_MOST_SHAPES = 256
+
 
 class _Space(threading.local):
     def __init__(self) -> None:
         self.kept: dict[str, npt.NDArray[Any]] = {}
+        self.shaped: dict[tuple[str, tuple[int, ...]], npt.NDArray[Any]] = {}  # parts of them, as they were asked for
 
     def take(self, place: str, kind: Any, shape: tuple[int, ...], size: int) -> npt.NDArray[Any]:
+        known = self.shaped.get((place, shape))
+        if known is not None:
+            return known
         found = self.kept.get(place)
-        if found is None or found.size < size:
+        larger = found is None or found.size < size
+        if found is None or larger:
             found = self.kept[place] = np.empty(max(size, 4096), kind)
-        return found[:size].reshape(shape)
+        if larger or len(self.shaped) > _MOST_SHAPES:
+            self.shaped.clear()  # none may keep a smaller array alive
+        self.shaped[place, shape] = found[:size].reshape(shape)
+        return self.shaped[place, shape]
 
 
 _SPACE = _Space()

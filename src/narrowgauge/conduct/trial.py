@@ -16,12 +16,12 @@ from narrowgauge.conduct.reached import most_of, range_entry, reach_entry, text_
 from narrowgauge.draws.coarsen import Draws
 from narrowgauge.draws.streams import Purpose
 from narrowgauge.draws.tape import Tape
-from narrowgauge.errors import AuditFileError, DispatchError, KernelError
+from narrowgauge.errors import AuditFileError, DispatchError, KernelError, said
 from narrowgauge.kernel.arms import Arm
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.contract import check_parameters
 from narrowgauge.kernel.loading import KernelSource
-from narrowgauge.kernel.raised import with_place
+from narrowgauge.kernel.raised import OF_THE_MACHINE, with_place
 from narrowgauge.measure.arms import PLAIN, REFERENCE
 from narrowgauge.measure.block import BlockRunner
 from narrowgauge.measure.calls import Quantities
@@ -76,7 +76,7 @@ class _Trial:
     def arm(self, arm: str, level: int) -> FaultEntry | None:
         """Run one arm on one level, on the reference's draws; what the kernel raises is returned.
 
-        Raises DispatchError for an escape, KernelError for a result of the wrong kind.
+        Raises DispatchError for an escape, KernelError for a result of the wrong kind and for want of memory or files.
         """
         notes = Notes([arm])
         draws = self._drawn(level)
@@ -87,11 +87,13 @@ class _Trial:
         except DispatchError:
             raise
         except KernelError as problem:
-            raise KernelError(str(problem), level=level, arm=arm) from problem.__cause__
+            raise KernelError(said(problem), level=level, arm=arm) from problem.__cause__
         except KeyboardInterrupt:
             raise
         except BaseException as problem:  # the audit itself keeps what a narrow arm raises as data
-            what = f"the kernel raised {type(problem).__name__}: {problem}"
+            what = f"the kernel raised {type(problem).__name__}: {said(problem)}"
+            if isinstance(problem, OF_THE_MACHINE):
+                raise KernelError(what, level=level, arm=arm) from problem
             return FaultEntry(arm=arm, kind="raised", message=what)
         self._narrow.setdefault(arm, {})[level] = notes
         return None
@@ -213,9 +215,9 @@ def _identical(file: AuditFile, runner: BlockRunner, draws: Draws | Tape, level:
     for name in plain | with_machinery:
         same_bits(name, plain, with_machinery, level, _NOT_IDENTICAL)
     check_targets(file, list(plain))
-    said = [f"{file.shown(place.file)}:{place.line}: {text}" if place else text for place, text in caller.remarks]
-    said += [f"the module {name} is shared: it was imported as it is and not rounded" for name in caller.copy.shared]
-    return said + [f"{name} is compiled: it ran as the Python function underneath" for name in caller.copy.compiled]
+    found = [f"{file.shown(place.file)}:{place.line}: {text}" if place else text for place, text in caller.remarks]
+    found += [f"the module {name} is shared: it was imported as it is and not rounded" for name in caller.copy.shared]
+    return found + [f"{name} is compiled: it ran as the Python function underneath" for name in caller.copy.compiled]
 
 
 def _plainly_twice(

@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import os
 from collections.abc import Callable, Iterator, Mapping
 from contextlib import contextmanager
+from contextvars import ContextVar
 from dataclasses import dataclass
 from pathlib import Path
 from types import CodeType, FunctionType
@@ -17,17 +19,27 @@ from narrowgauge.dispatch.feed import Feed
 from narrowgauge.dispatch.importing import Copies
 from narrowgauge.dispatch.modules import STOOD_IN, Found, Sources
 from narrowgauge.dispatch.setting import Observer, Place
-from narrowgauge.errors import AuditFileError, DispatchError, KernelError
+from narrowgauge.errors import AuditFileError, DispatchError, KernelError, said
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.audittables import RULES, KernelTable, shown
 from narrowgauge.kernel.command import Command
 from narrowgauge.kernel.fingerprint import fingerprint
 from narrowgauge.kernel.library import Library
 
-__all__ = ["KernelSource", "approximation_function", "find_kernel", "private_copy"]
+__all__ = [
+    "WORKER",
+    "KernelSource",
+    "approximation_function",
+    "executing",
+    "find_kernel",
+    "private_copy",
+    "refuse_nested",
+]
 
 _OWN = __name__.partition(".")[0]
 _TWICE = "a module that can be executed twice; else list it under kernel.shared, where it is not rounded"
+WORKER = "NARROWGAUGE_WORKER"  # in the environment of a worker process
+_EXECUTING: ContextVar[bool] = ContextVar("_EXECUTING", default=False)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -65,6 +77,25 @@ class KernelSource:
         except OSError as problem:
             what = f"cannot read {problem.filename}: {problem.strerror}"
             raise AuditFileError(self.source, "kernel.modules", what, "Python files") from None
+
+
+@contextmanager
+def executing() -> Iterator[None]:
+    """Note that code of the user's is being executed for an audit, while the context lasts."""
+    token = _EXECUTING.set(True)
+    try:
+        yield
+    finally:
+        _EXECUTING.reset(token)
+
+
+def refuse_nested(source: str) -> None:
+    """Raise KernelError where an audit is about to begin inside another: each would begin the next, without end."""
+    if _EXECUTING.get() or WORKER in os.environ:
+        raise KernelError(
+            f"{source}: an audit was started by a module that is executed for an audit; accepted: guard the call with "
+            "if __name__ == '__main__'"
+        )
 
 
 def find_kernel(audit_file: AuditFile) -> KernelSource:
@@ -159,16 +190,18 @@ def private_copy(
         setting.allowed = frozenset(kernel.allowed.values())
     copies = Copies(setting, kernel.sources, draws)
     try:
-        if kernel.function is not None:
-            return PrivateCopy(copy_function(kernel.function, setting, copies), setting, copies)
-        module = copies.load(kernel.module)
+        with executing():
+            if kernel.function is not None:
+                return PrivateCopy(copy_function(kernel.function, setting, copies), setting, copies)
+            module = copies.load(kernel.module)
     except KeyboardInterrupt:
         raise
     except BaseException as problem:  # whatever the user's module raises is the user's to see
         _raise_uncopied(kernel, copies, problem)
         if isinstance(problem, (DispatchError, KernelError)):
             raise
-        raise KernelError(f"{kernel.run}: executing the module raised {type(problem).__name__}: {problem}") from problem
+        what = f"{kernel.run}: executing the module raised {type(problem).__name__}: {said(problem)}"
+        raise KernelError(what) from problem
     _raise_uncopied(kernel, copies, None)
     if setting is not None and setting.faults:  # the module swallowed it
         raise setting.faults[0]
@@ -198,7 +231,7 @@ def _raise_uncopied(kernel: KernelSource, copies: Copies, problem: BaseException
     if copies.refused is not None:
         name, reason = copies.refused
     elif copies.failed is not None and copies.failed[1] is problem and not isinstance(problem, DispatchError):
-        name, reason = copies.failed[0], f"executing it anew raised {type(problem).__name__}: {problem}"
+        name, reason = copies.failed[0], f"executing it anew raised {type(problem).__name__}: {said(problem)}"
         if name == kernel.module or isinstance(problem, KernelError):
             return
     else:

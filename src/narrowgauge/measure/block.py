@@ -17,11 +17,12 @@ from narrowgauge.dispatch.setting import Observer
 from narrowgauge.draws.coarsen import Draws
 from narrowgauge.draws.streams import GRAIN, Purpose, UniformStream, apart, block_paths, uniforms
 from narrowgauge.draws.tape import Tape
-from narrowgauge.errors import AuditFileError, DispatchError, KernelError
+from narrowgauge.errors import AuditFileError, DispatchError, KernelError, said
 from narrowgauge.kernel.approximation import approximation_of
 from narrowgauge.kernel.arms import Arm, Kind
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.loading import KernelSource
+from narrowgauge.kernel.raised import OF_THE_MACHINE
 from narrowgauge.measure.arms import REFERENCE, arms_of, pairs_of
 from narrowgauge.measure.calls import Caller
 from narrowgauge.measure.drawplan import DrawPlan, plan_draws
@@ -139,7 +140,7 @@ class BlockRunner:
 
         Raises KernelError where the kernel raises in the reference or returns the wrong thing, EscapeError or
         RefusedError, with level and arm, for a number that would go unrounded. What the kernel raises in another
-        arm is kept in the tally.
+        arm is kept in the tally, except what comes of the machine, which is a KernelError in any arm.
         """
         self._row_plan()  # what stands against running at all is said without level and arm
         draws = self.draws(level, block)
@@ -192,16 +193,16 @@ class BlockRunner:
             values = caller.fine(draws, level, coarse_follows=coupled)
             coarse = caller.coarse(draws, level) if coupled else {}
         except KernelError as problem:
-            raise KernelError(str(problem), level=level, arm=arm) from problem.__cause__
+            raise KernelError(said(problem), level=level, arm=arm) from problem.__cause__
         except DispatchError as problem:
-            raise type(problem)(f"level {level}, arm {arm}: {problem}") from None
+            raise type(problem)(f"level {level}, arm {arm}: {said(problem)}") from None
         except AuditFileError:  # there is no such function
             raise
         except KeyboardInterrupt:
             raise
         except BaseException as problem:  # whatever a kernel raises becomes data
-            if arm == REFERENCE:
-                what = f"the kernel raised {type(problem).__name__}: {problem}"
+            if arm == REFERENCE or isinstance(problem, OF_THE_MACHINE):
+                what = f"the kernel raised {type(problem).__name__}: {said(problem)}"
                 raise KernelError(what, level=level, arm=arm) from problem
             return self._raised(problem, None if caller is None else caller.copy)
         if coarse:
@@ -215,7 +216,7 @@ class BlockRunner:
         last = frames[-1] if frames else None
         return Raised(
             kind=type(problem).__name__,
-            message=str(problem),
+            message=said(problem),
             file=self._file.shown(last.filename) if last else None,
             line=last.lineno if last else None,
         )

@@ -16,7 +16,7 @@ from narrowgauge.errors import KernelError
 from narrowgauge.kernel.arms import Kind
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.contract import evaluate, evaluate_drawing, takes_one_path
-from narrowgauge.kernel.loading import KernelSource, private_copy
+from narrowgauge.kernel.loading import KernelSource, executing, private_copy
 from narrowgauge.kernel.ownrounding import evaluate_own, own_copy, timed_own
 from narrowgauge.measure.arms import REFERENCE
 
@@ -102,7 +102,8 @@ class Caller:
                 layout=file.kernel.layout,
             )
         step, singly = file.ladder.step_size(level), self.one_path and not self._rows
-        return evaluate(self.copy, drawn, step, file.keywords(), file.kernel.layout, singly=singly)
+        with executing():
+            return evaluate(self.copy, drawn, step, file.keywords(), file.kernel.layout, singly=singly)
 
     def seconds(self, drawn: Floats, level: int) -> float:
         """Return the time of one call of a kernel that rounds for itself, on draws as `on_array` takes them."""
@@ -119,12 +120,13 @@ class Caller:
     def _on_tape(self, reader: Reader, level: int, paths: int) -> Quantities:
         assert self._feed is not None  # a tape is drawn from
         ladder = self._file.ladder
-        return evaluate_drawing(
-            self.copy,
-            self._feed,
-            reader,
-            step=ladder.step_size(level),
-            counts=(ladder.steps(level), paths),
-            keywords=self._file.keywords(),
-            row=self._rows,
-        )
+        with executing():
+            return evaluate_drawing(
+                self.copy,
+                self._feed,
+                reader,
+                step=ladder.step_size(level),
+                counts=(ladder.steps(level), paths),
+                keywords=self._file.keywords(),
+                row=self._rows,
+            )

@@ -2,7 +2,8 @@
 
 A worker that dies, or is past the time limit, is replaced and its block handed out once more; when that ends in the
 same way the kernel is to blame. Processes are started afresh, not forked, and without the driver's main module, so that
-a script needs no guard around the audit that it starts.
+a script needs a guard around the audit that it starts only where it holds the kernel, too. In a worker no audit can be
+started.
 """
 
 from __future__ import annotations
@@ -24,6 +25,7 @@ from types import TracebackType
 from typing import Any, TypeVar
 
 from narrowgauge.errors import KernelError, WorkerError
+from narrowgauge.kernel.loading import WORKER
 from narrowgauge.measure.crash import innermost
 from narrowgauge.measure.engines import largest_first
 from narrowgauge.measure.task import Bench, Block, Job, Key, Reply, run_block
@@ -149,6 +151,7 @@ class _Slot(threading.Thread):
         self._trace = tempfile.TemporaryFile()  # noqa: SIM115  # `run` closes it; without a name, nothing is left of it
         self._lock = threading.Lock()  # around all of the following
         self._process: subprocess.Popen[bytes] | None = None
+        # `_busy`: the process is at work, or on its way to be ready
         self._busy = self._late = self._stopped = False
 
     def run(self) -> None:
@@ -168,7 +171,7 @@ class _Slot(threading.Thread):
         self._trace.close()
 
     def stop(self) -> None:
-        """Start no more processes, and end one that is at work."""
+        """Start no more processes, and end one that is at work or only starting."""
         with self._lock:
             self._stopped = True
             if self._busy and self._process is not None:
@@ -214,7 +217,10 @@ class _Slot(threading.Thread):
                 watch.cancel()
 
     def _set_busy(self, busy: bool) -> None:
+        """Note that work begins or ends; raises _StoppedError instead of beginning any once the slot is stopped."""
         with self._lock:
+            if busy and self._stopped:
+                raise _StoppedError
             self._busy = busy
             if busy:
                 self._late = False
@@ -232,8 +238,10 @@ class _Slot(threading.Thread):
                 return self._process
             _ended(self._process)
         files = () if os.name == "nt" else (self._trace.fileno(),)  # there a process inherits no file by its number
+        # What is no string there is passed over when a module is searched.
+        path = [entry for entry in sys.path if isinstance(entry, str)]
         own = (str(sum(files)), str(os.getpid()), self._scratch)
-        command = [sys.executable, "-c", _PROGRAM, json.dumps(sys.path), *own]
+        command = [sys.executable, "-c", _PROGRAM, json.dumps(path), *own]
         with self._lock:
             if self._stopped:
                 raise _StoppedError
@@ -242,16 +250,22 @@ class _Slot(threading.Thread):
                     command,
                     stdin=subprocess.PIPE,
                     stdout=subprocess.PIPE,
-                    env=self._environment,
+                    env={**self._environment, WORKER: "1"},
                     pass_fds=files,
                     process_group=0,  # out of reach of the terminal's Ctrl-C
                 )
             except OSError as problem:
                 raise WorkerError(f"a worker process cannot be started: {problem.strerror}") from None
+            self._busy = True
         try:
             ready = _received(process)
         except _CUT:
-            raise WorkerError(f"a worker process {_way(_ended(process))} before it was ready") from None
+            code = _ended(process)
+            if self._stopped:
+                raise _StoppedError from None
+            raise WorkerError(f"a worker process {_way(code)} before it was ready") from None
+        finally:
+            self._set_busy(False)
         assert ready == READY
         return process
 

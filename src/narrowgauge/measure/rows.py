@@ -17,10 +17,10 @@ from narrowgauge.arithmetic.arithmetic import Arithmetic, arithmetic_named
 from narrowgauge.dispatch.setting import Place, Route, Setting, Way
 from narrowgauge.draws.coarsen import Draws
 from narrowgauge.draws.tape import Tape
-from narrowgauge.errors import DispatchError, KernelError
+from narrowgauge.errors import DispatchError, KernelError, said
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.loading import KernelSource
-from narrowgauge.kernel.raised import with_place
+from narrowgauge.kernel.raised import OF_THE_MACHINE, with_place
 from narrowgauge.measure.arms import PLAIN, REFERENCE
 from narrowgauge.measure.calls import Caller, Quantities
 
@@ -96,21 +96,22 @@ class _Trial:
         """Return what stands against rows: first in the reference and in plain NumPy, then in every other arm."""
         many, few = draws_of(self._level, _MANY), draws_of(self._level, _FEW)
         singles = self._plainly(many)
-        reason = self._differs(arithmetic_named(REFERENCE), many, singles) or self._differs(None, many, singles)
+        reason = self._differs(REFERENCE, many, singles) or self._differs(PLAIN, many, singles)
         if reason:
             return reason
         self._plainly(few)  # writes what the arms have to ask for
         for arm in arms:
-            arithmetic = arithmetic_named(arm)
             try:
-                found = Caller(self._file, self._kernel, arithmetic).fine(few, self._level)
+                found = Caller(self._file, self._kernel, arithmetic_named(arm)).fine(few, self._level)
             except (KernelError, DispatchError):
                 raise
             except KeyboardInterrupt:
                 raise
+            except OF_THE_MACHINE as problem:
+                raise _of_the_machine(problem, self._level, arm) from problem
             except BaseException as problem:  # the kernel's own, kept as data by the audit
                 return f"{arm} raised {type(problem).__name__} with single paths"
-            reason = self._differs(arithmetic, few, found)
+            reason = self._differs(arm, few, found)
             if reason:
                 break
         return reason
@@ -120,28 +121,35 @@ class _Trial:
         with with_place(self._level, PLAIN):
             return self.plain.fine(draws, self._level)
 
-    def _differs(self, arithmetic: Arithmetic | None, draws: Draws | Tape, singles: Quantities) -> str:
-        """Return what stands against rows in one arithmetic, or in plain NumPy for None; empty if nothing does."""
+    def _differs(self, arm: str, draws: Draws | Tape, singles: Quantities) -> str:
+        """Return what stands against rows in one arm or in plain NumPy; empty if nothing does."""
         observer = _Decisions()
+        arithmetic = None if arm == PLAIN else arithmetic_named(arm)
         caller = Caller(self._file, self._kernel, arithmetic, observer if arithmetic else None, rows=True)
         try:
             rows = caller.fine(draws, self._level)
         except KeyboardInterrupt:
             raise
         except (DispatchError, KernelError) as problem:
-            said = f"with a row of paths: {problem}"
+            what = f"with a row of paths: {said(problem)}"
             for name in caller.copy.setting.files if caller.copy.setting else ():
-                said = said.replace(name, self._file.shown(name))
-            return said
+                what = what.replace(name, self._file.shown(name))
+            return what
+        except OF_THE_MACHINE as problem:  # says nothing about rows
+            raise _of_the_machine(problem, self._level, arm) from problem
         except BaseException as problem:  # written for numbers, the kernel may raise anything
-            said = f"with a row of paths it raises {type(problem).__name__}: {str(problem).partition(_BREAK)[0]}"
+            what = f"with a row of paths it raises {type(problem).__name__}: {said(problem).partition(_BREAK)[0]}"
             setting = caller.copy.setting
             frames = [f for f in traceback.extract_tb(problem.__traceback__) if setting and f.filename in setting.files]
-            return f"{self._file.shown(frames[-1].filename)}:{frames[-1].lineno}: {said}" if frames else said
+            return f"{self._file.shown(frames[-1].filename)}:{frames[-1].lineno}: {what}" if frames else what
         if observer.count:
             place = f"{self._file.shown(observer.first.file)}:{observer.first.line}: " if observer.first else ""
             return f"{place}a decision depends on the state"
         return _apart(rows, singles, arithmetic)
+
+
+def _of_the_machine(problem: BaseException, level: int, arm: str) -> KernelError:
+    return KernelError(f"the kernel raised {type(problem).__name__}: {said(problem)}", level=level, arm=arm)
 
 
 def _apart(rows: Quantities, singles: Quantities, arithmetic: Arithmetic | None) -> str:

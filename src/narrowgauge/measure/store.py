@@ -2,12 +2,15 @@
 
 One process at a time holds it: the file is locked as long as it is open, and the system lets go of the lock when the
 process ends, however it ends. A block that took a second or more is on the disk before the next one is taken; quicker
-ones are written together, at most a second's worth, and no more than those are lost with the power.
+ones are written together, at most a second's worth, and no more than those are lost with the power. Every block is
+kept with a checksum: one that does not match is run again.
 """
 
 from __future__ import annotations
 
 import contextlib
+import functools
+import hashlib
 import json
 import sqlite3
 import time
@@ -25,16 +28,17 @@ from narrowgauge.measure.task import Block, Key
 __all__ = ["LEDGER", "Identity", "Ledger"]
 
 LEDGER = "blocks.sqlite"
-_SCHEMA = "narrowgauge-blocks/1"
+_SCHEMA = "narrowgauge-blocks/2"
 _TOGETHER = 1.0  # seconds
 _TABLES = """
 CREATE TABLE audit (name TEXT PRIMARY KEY, value TEXT NOT NULL);
 CREATE TABLE blocks (
     level INTEGER NOT NULL, block INTEGER NOT NULL, seconds REAL NOT NULL,
-    fingerprint TEXT NOT NULL, tally BLOB NOT NULL, PRIMARY KEY (level, block)
+    fingerprint TEXT NOT NULL, tally BLOB NOT NULL, checksum TEXT NOT NULL, PRIMARY KEY (level, block)
 );
 """
 _OTHERWISE = "accepted: --out with another folder, or --replace"
+_PROBLEMS = (sqlite3.Error, UnicodeDecodeError)  # the latter where a message quotes what is damaged
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -54,18 +58,22 @@ class Identity:
 
     def rows(self) -> dict[str, str]:
         """Return it as the ledger keeps it."""
-        return {
+        rows = {
             "schema": _SCHEMA,
             "run": self.run,
             "fingerprint": self.fingerprint,
             "asked": self.asked,
             "versions": json.dumps(dict(self.versions), sort_keys=True),
         }
+        return {**rows, "checksum": _checksum(*rows.items())}
 
     def changes(self, rows: Mapping[str, str]) -> list[str]:
         """Return in words what differs from the audit that a ledger was begun with."""
-        if rows["schema"] != _SCHEMA:
-            return [f"its ledger is of another kind ({rows['schema']}, not {_SCHEMA})"]
+        if rows.get("schema") != _SCHEMA:
+            return [f"its ledger is of another kind ({rows.get('schema', 'unknown')}, not {_SCHEMA})"]
+        kept = {name: value for name, value in rows.items() if name not in ("checksum", "finished")}
+        if rows.get("checksum") != _checksum(*kept.items()):
+            return ["its ledger is damaged"]
         found = []
         if (rows["run"], rows["fingerprint"]) != (self.run, self.fingerprint):
             found.append("the kernel has changed")
@@ -83,15 +91,17 @@ class Identity:
 class Ledger:
     """The ledger in an audit's folder, locked; first `resumes` or `clear`, then blocks.
 
-    Use it as a context manager. Every use may raise AuditFolderError. With `replace` a file that is no database, or a
-    damaged one, makes room.
+    Use it as a context manager. Every use may raise AuditFolderError, which calls the folder `shown`. With `replace` a
+    file that is no database, or a damaged one, makes room.
     """
 
-    def __init__(self, folder: Path, *, replace: bool = False) -> None:
-        self._folder, self._path = folder, folder / LEDGER
+    def __init__(self, folder: Path, *, replace: bool = False, shown: Path | None = None) -> None:
+        self._folder, self._file, self._replace = shown or folder, folder / LEDGER, replace
+        self._path = self._folder / LEDGER  # as messages call it
         self._written = time.monotonic()
         self._keys: set[Key] = set()
         self.kept: frozenset[Key] = frozenset()  # there from before
+        self.damaged = 0  # blocks there from before that are to be run again
         self._connection = self._opened(replace)
 
     def __enter__(self) -> Ledger:
@@ -128,28 +138,54 @@ class Ledger:
             if names and "audit" not in names:
                 raise AuditFolderError(f"{self._path}: is no ledger of narrowgauge; {_OTHERWISE}")
             rows: dict[str, str] = dict(self._connection.execute("SELECT name, value FROM audit")) if names else {}
-            blocks = set(self._connection.execute("SELECT level, block FROM blocks")) if names else set()
-        if not blocks:
+            count = self._connection.execute("SELECT count(*) FROM blocks").fetchone()[0] if names else 0
+        if not count:
             return False
-        self._check(rows, len(blocks), identity.changes(rows), resume)
+        self._check(rows, count, identity.changes(rows), resume)
         if not resume:
             return False
-        self._keys, self.kept = blocks, frozenset(blocks)
-        with self._telling("cannot be written"):
-            self._connection.execute("DELETE FROM audit WHERE name = 'finished'")
+        self._take()
         return True
+
+    def _take(self) -> None:
+        """Go on with the blocks that are as they were written, and drop the others."""
+        with self._telling("cannot be read"):
+            found: dict[int, Key | None] = {
+                row: (level, block) if _checksum(level, block, *rest) == checksum else None
+                for row, level, block, *rest, checksum in self._connection.execute("SELECT rowid, * FROM blocks")
+            }
+        self.kept = frozenset(key for key in found.values() if key is not None)
+        self._keys, self.damaged = set(self.kept), len(found) - len(self.kept)
+        with self._telling("cannot be written"):
+            run = self._connection.execute
+            run("BEGIN")
+            self._connection.executemany(
+                "DELETE FROM blocks WHERE rowid = ?", [(row,) for row, key in found.items() if key is None]
+            )
+            run("DELETE FROM audit WHERE name = 'finished'")
+            run("COMMIT")
 
     def clear(self, identity: Identity) -> None:
         """Begin the ledger of an audit, without any block."""
         with self._telling("cannot be written"):
-            run = self._connection.execute
-            run("BEGIN")
-            for name in sorted(self._tables()):
-                run(f'DROP TABLE "{name}"')
-            for statement in filter(str.strip, _TABLES.split(";")):
-                run(statement)
-            self._connection.executemany("INSERT INTO audit VALUES (?, ?)", identity.rows().items())
-            run("COMMIT")
+            try:
+                self._begin(identity)
+            except _PROBLEMS as problem:
+                if not (self._replace and _is_damage(problem)):
+                    raise
+                self._connection.close()
+                self._connection = self._anew()
+                self._begin(identity)
+
+    def _begin(self, identity: Identity) -> None:
+        run = self._connection.execute
+        run("BEGIN")
+        for name in sorted(self._tables()):
+            run(f'DROP TABLE "{name}"')
+        for statement in filter(str.strip, _TABLES.split(";")):
+            run(statement)
+        self._connection.executemany("INSERT INTO audit VALUES (?, ?)", identity.rows().items())
+        run("COMMIT")
 
     def _tables(self) -> set[str]:
         return {name for (name,) in self._connection.execute("SELECT name FROM sqlite_master WHERE type = 'table'")}
@@ -157,11 +193,14 @@ class Ledger:
     def block(self, key: Key) -> Block:
         """Return a block that is there."""
         with self._telling("cannot be read"):
-            seconds, fingerprint, data = self._connection.execute(
+            row = self._connection.execute(
                 "SELECT seconds, fingerprint, tally FROM blocks WHERE level = ? AND block = ?", key
             ).fetchone()
-        found = Block(level=key[0], block=key[1], data=data, seconds=seconds, fingerprint=fingerprint)
         try:
+            if row is None:
+                raise ValueError("it is gone")
+            seconds, fingerprint, data = row
+            found = Block(level=key[0], block=key[1], data=data, seconds=seconds, fingerprint=fingerprint)
             found.tally  # noqa: B018  # better now than in the middle of a sum
         except ValueError as problem:
             what = f"level {key[0]}, block {key[1]} cannot be read: {problem}"
@@ -173,8 +212,8 @@ class Ledger:
         with self._telling("cannot be written"):
             if not self._connection.in_transaction:
                 self._connection.execute("BEGIN")
-            row = (block.level, block.block, block.seconds, block.fingerprint, block.data)
-            self._connection.execute("INSERT OR REPLACE INTO blocks VALUES (?, ?, ?, ?, ?)", row)
+            row = (block.level, block.block, float(block.seconds), block.fingerprint, block.data)
+            self._connection.execute("INSERT OR REPLACE INTO blocks VALUES (?, ?, ?, ?, ?, ?)", (*row, _checksum(*row)))
         self._keys.add((block.level, block.block))
         if block.seconds >= _TOGETHER or time.monotonic() - self._written >= _TOGETHER:
             self._commit()
@@ -206,17 +245,23 @@ class Ledger:
         """Return a connection that holds the only lock."""
         try:
             return self._locked()
-        except sqlite3.DatabaseError as problem:
+        except _PROBLEMS as problem:
             if _is_busy(problem):
                 what = f"{self._folder}: another audit is running in this folder"
                 raise AuditFolderError(f"{what}; accepted: --out with another folder, or wait") from None
-            if replace and not isinstance(problem, sqlite3.OperationalError):  # it is no database
-                self._path.unlink(missing_ok=True)
-                return self._locked()
+            if replace and _is_damage(problem):
+                return self._anew()
             raise AuditFolderError(f"{self._path}: cannot be used: {problem}; {_OTHERWISE}") from None
 
+    def _anew(self) -> sqlite3.Connection:
+        """Return a connection to an empty file in the place of a damaged one."""
+        for path in (self._file, self._file.with_name(f"{LEDGER}-journal")):
+            path.unlink(missing_ok=True)
+        return self._locked()
+
     def _locked(self) -> sqlite3.Connection:
-        connection = sqlite3.connect(self._path, timeout=0, isolation_level=None)
+        connection = sqlite3.connect(self._file, timeout=0, isolation_level=None)
+        connection.text_factory = functools.partial(str, encoding="utf-8", errors="replace")  # checksums tell
         try:
             connection.execute("PRAGMA journal_mode = DELETE")
             connection.execute("PRAGMA synchronous = FULL")
@@ -251,16 +296,31 @@ class Ledger:
         """Turn what the database raises into an error that names the file; what was written before stays."""
         try:
             yield
-        except sqlite3.Error as problem:
-            if self._connection.in_transaction:
+        except _PROBLEMS as problem:
+            with contextlib.suppress(sqlite3.Error):  # of a damaged file even this may fail
                 self._connection.rollback()
             kept = "; the blocks that were written before stay, and --resume goes on with them" if self._keys else ""
-            raise AuditFolderError(f"{self._path}: {what}: {problem}{kept}") from None
+            rest = f"; {_OTHERWISE}" if _is_damage(problem) else kept
+            raise AuditFolderError(f"{self._path}: {what}: {problem}{rest}") from None
 
 
-def _is_busy(problem: sqlite3.Error) -> bool:
-    code: Any = getattr(problem, "sqlite_errorcode", 0)
-    return code & 0xFF in (sqlite3.SQLITE_BUSY, sqlite3.SQLITE_LOCKED)
+def _is_busy(problem: Exception) -> bool:
+    return _code(problem) in (sqlite3.SQLITE_BUSY, sqlite3.SQLITE_LOCKED)
+
+
+def _is_damage(problem: Exception) -> bool:
+    """Whether the file holds what no ledger does: no table of ours, a format unknown, text that has no code at all."""
+    return _code(problem) in (sqlite3.SQLITE_CORRUPT, sqlite3.SQLITE_NOTADB, sqlite3.SQLITE_ERROR, 0)
+
+
+def _code(problem: Exception) -> int:
+    code: int = getattr(problem, "sqlite_errorcode", 0)
+    return code & 0xFF
+
+
+def _checksum(*parts: object) -> str:
+    """Return the SHA-256 of numbers, texts and bytes, each by its representation, in which their order counts."""
+    return hashlib.sha256(repr(parts).encode("utf-8", "surrogatepass")).hexdigest()
 
 
 def _different(before: Any, now: Any, path: str = "") -> list[str]:

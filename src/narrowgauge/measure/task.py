@@ -10,7 +10,6 @@ import importlib
 import operator
 import sys
 import threading
-import traceback
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass
@@ -24,11 +23,11 @@ from threadpoolctl import threadpool_limits
 
 from narrowgauge import errors
 from narrowgauge.arithmetic.arithmetic import arithmetic_named
-from narrowgauge.errors import KernelError, NarrowgaugeError, RaisedElsewhereError, WorkerError
+from narrowgauge.errors import KernelError, NarrowgaugeError, RaisedElsewhereError, WorkerError, said
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.audittables import TABLES
-from narrowgauge.kernel.loading import KernelSource, find_kernel
-from narrowgauge.kernel.raised import own_traceback
+from narrowgauge.kernel.loading import KernelSource, executing, find_kernel
+from narrowgauge.kernel.raised import own_traceback, whole_traceback
 from narrowgauge.measure.arms import REFERENCE
 from narrowgauge.measure.block import BlockRunner
 from narrowgauge.measure.calls import Caller
@@ -156,10 +155,12 @@ def _file_of(job: Job) -> AuditFile:
     function = None
     if job.by_name:
         try:
-            importlib.import_module(run.partition(":")[0])
+            with executing():
+                importlib.import_module(run.partition(":")[0])
             function = _named(run, sys.modules)
         except BaseException as problem:  # whatever the user's module raises is the user's to see
-            raise KernelError(f"{run}: importing the module raised {type(problem).__name__}: {problem}") from problem
+            what = f"{run}: importing the module raised {type(problem).__name__}: {said(problem)}"
+            raise KernelError(what) from problem
         if function is None:
             raise WorkerError(f"{source}: kernel.run: the worker finds no function {run}")
     return AuditFile(
@@ -235,14 +236,13 @@ class Failure:
     @classmethod
     def of(cls, problem: BaseException) -> Failure:
         """Return what was raised as data."""
-        kind, message = type(problem).__name__, str(problem)
+        kind, message = type(problem).__name__, said(problem)
         if isinstance(problem, NarrowgaugeError):
             cause = problem.__cause__
             own = "" if cause is None or isinstance(cause, NarrowgaugeError) else own_traceback(cause)
             plain = {n: v for n, v in vars(problem).items() if isinstance(v, (str, int, float, type(None)))}
             return cls(kind=kind, message=message, attributes=plain, trace=own)
-        trace = "".join(traceback.format_exception(problem))
-        return cls(kind=kind, message=message, attributes={}, trace=trace)
+        return cls(kind=kind, message=message, attributes={}, trace=whole_traceback(problem))
 
     def raised(self) -> BaseException:
         """Return the exception that says the same here: of the same class, with its message and attributes."""
@@ -272,7 +272,7 @@ def attempted(task: Callable[[], T], level: int | None = None) -> Reply[T]:
     try:
         return Reply(value=task())
     except (SystemExit, KeyboardInterrupt, GeneratorExit) as problem:  # no other code than a kernel's raises these
-        what = KernelError(f"the kernel raised {type(problem).__name__}: {problem}", level=level)
+        what = KernelError(f"the kernel raised {type(problem).__name__}: {said(problem)}", level=level)
         what.__cause__ = problem
         return Reply(failure=Failure.of(what))
     except BaseException as problem:  # the one place that turns whatever was raised into data

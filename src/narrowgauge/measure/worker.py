@@ -49,6 +49,7 @@ def serve(trace: int, driver: int, scratch: str) -> None:
     threading.Thread(target=_read, args=(requests, waiting, leave), daemon=True).start()
     _answer(replies, READY, leave)
     bench: Bench | None = None
+    own = os.getpid()
     while (asked := waiting.get()) is not None:
         job, task, level = asked
 
@@ -57,8 +58,14 @@ def serve(trace: int, driver: int, scratch: str) -> None:
             bench = bench or Bench.opened(job)
             return task(bench)
 
-        _answer(replies, attempted(at_bench, level), leave)
-        sys.stdout.flush()
+        reply = attempted(at_bench, level)
+        if os.getpid() != own:  # a fork that the kernel let go on: the pipes' numbers may be other files' by now
+            os._exit(0)
+        _answer(replies, reply, leave)
+        try:
+            sys.stdout.flush()
+        except BaseException:  # the kernel may have closed it, or put something of its own there
+            continue
     leave()
 
 

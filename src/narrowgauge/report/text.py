@@ -43,6 +43,7 @@ from narrowgauge.report.tables import (
 from narrowgauge.report.trial import reach_notes, reach_summary, reach_table
 from narrowgauge.report.verdict import alarms, common_cost, finest_words, lead, savings, verdict_sentences
 from narrowgauge.report.wording import NONE, clean, joined, setting_value
+from narrowgauge.report.workers import speed_notes
 
 __all__ = ["Progress", "audit_text", "planned_text", "trial_text", "verdict_text"]
 
@@ -75,12 +76,12 @@ def audit_text(record: AuditRecord, folder: Path | None) -> Group:
     assumed = assumptions(record)
     parts.append(_labelled("Assumed, since the audit file does not say", f"{assumed}." if assumed else "nothing."))
     parts += [Text(), *_heading("Cautions"), *_bullets(record.cautions)]
-    return Group(*parts, Text(), *_files(folder))
+    return Group(*parts, Text(), *speed_notes(record), *_files(folder))
 
 
 def verdict_text(record: AuditRecord, folder: Path | None) -> Group:
     """Return what is wrong, the verdict in words, and where the files are."""
-    return Group(*_alarms(record), *_verdict(record), *_files(folder))
+    return Group(*_alarms(record), *_verdict(record), *speed_notes(record), *_files(folder))
 
 
 def trial_text(trial: TrialEntry) -> Group:

@@ -1,4 +1,7 @@
-"""What there is to say about the processes that measured: that they differ, or compute without subnormal numbers."""
+"""What there is to say about the processes that measured.
+
+That they differ, or compute without subnormal numbers; and what made them slower than they could be.
+"""
 
 from __future__ import annotations
 
@@ -7,16 +10,15 @@ from rich.text import Text
 from narrowgauge.record.audit import AuditRecord
 from narrowgauge.report.wording import clean, joined
 
-__all__ = ["worker_alarms"]
+__all__ = ["speed_notes", "worker_alarms"]
 
+_SPEED = "compiling"  # the one entry of a worker that decides no bit
 _NAMES = {"vector_features": "processor features", "threads": "threads of linear algebra"}
 
 
 def worker_alarms(record: AuditRecord) -> list[Text]:
     """Return a paragraph for what may make bits differ from worker to worker, and one for what makes them wrong."""
-    listed = record.provenance.get("workers")
-    workers = [one for one in listed if isinstance(one, dict)] if isinstance(listed, list) else []
-    found = []
+    found, workers = [], _workers(record)
     if any(one.get("subnormals") is False for one in workers):
         text = Text("SUBNORMAL NUMBERS WERE SWITCHED OFF. ", style="bold red")
         words = (
@@ -24,7 +26,7 @@ def worker_alarms(record: AuditRecord) -> list[Text]:
             "kernel imports. The emulation is wrong where it meets them: leave that library out and audit again."
         )
         found.append(text.append(words, style="not bold default"))
-    keys = {key for one in workers for key in one}
+    keys = {key for one in workers for key in one} - {_SPEED}
     differing = sorted(key for key in keys if any(one.get(key) != workers[0].get(key) for one in workers))
     if differing:
         text = Text("THE WORKERS DIFFER. ", style="bold")
@@ -35,3 +37,14 @@ def worker_alarms(record: AuditRecord) -> list[Text]:
         )
         found.append(text.append(words, style="not bold"))
     return found
+
+
+def speed_notes(record: AuditRecord) -> list[Text]:
+    """Return a line for each thing that made a worker slower than it could be and changed no bit."""
+    slower = {clean(note) for one in _workers(record) if isinstance(note := one.get(_SPEED), str)}
+    return [Text(f"Slower than it could be, with the same bits: {note}.") for note in sorted(slower)]
+
+
+def _workers(record: AuditRecord) -> list[dict[str, object]]:
+    listed = record.provenance.get("workers")
+    return [one for one in listed if isinstance(one, dict)] if isinstance(listed, list) else []
