@@ -143,8 +143,9 @@ def test_an_interrupted_audit_goes_on(tmp_path: Path, workers: str) -> None:
     if workers == "1":
         command = command[:-4]
     (tmp_path / "wait").touch()
-    # The identity run comes first and would wait, too.
-    (tmp_path / "kernel.py").write_text(KERNEL.replace("dW.shape[0] == 1", "dW.shape == (1, 2048)"))
+    # The identity run comes first and would wait, too. One process begins with level 0, workers end with it.
+    waits = "dW.shape == (2, 2048)" if workers == "1" else "dW.shape == (1, 2048)"
+    (tmp_path / "kernel.py").write_text(KERNEL.replace("dW.shape[0] == 1", waits))
     path = tmp_path / "waits.toml"
     path.write_text(path.read_text().replace("block = 1024", "block = 2048"))
     process = subprocess.Popen(
@@ -158,4 +159,6 @@ def test_an_interrupted_audit_goes_on(tmp_path: Path, workers: str) -> None:
     assert (process.returncode, shown) == (130, "narrowgauge: interrupted\n")
     (tmp_path / "wait").unlink()
     done = run("audit", path, "--quiet", "--resume", folder=tmp_path)
-    assert (done.returncode, done.stderr) == (0, "")
+    assert done.returncode == 0
+    if workers == "1":  # of several, another may still have been at the first block
+        assert done.stderr == ""
