@@ -143,8 +143,9 @@ def test_a_kernel_may_close_standard_output(tmp_path: Path, how: str) -> None:
 
 def test_a_stopped_slot_begins_nothing(tmp_path: Path) -> None:
     """Stopped between a process and its task: the task is not sent, and nobody waits for it."""
-    slot = engine_for(tmp_path, ",,")._slots[0]
-    with closing(slot._trace):
+    engine = engine_for(tmp_path, ",,")
+    slot = engine._slots[0]
+    with engine._scratch, closing(slot._trace):
         begun = slot._began()
         slot.stop()
         task = processes._Task(name="", level=None, run=finest, done=queue.SimpleQueue())
@@ -155,7 +156,8 @@ def test_a_stopped_slot_begins_nothing(tmp_path: Path) -> None:
 
 def test_a_process_that_is_only_starting_is_stopped(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     """Whatever it imports before it is ready is not waited for."""
-    slot, received = engine_for(tmp_path, ",,")._slots[0], processes._received
+    engine, received = engine_for(tmp_path, ",,"), processes._received
+    slot = engine._slots[0]
 
     def stopped(process: subprocess.Popen[bytes]) -> object:
         slot.stop()
@@ -163,7 +165,7 @@ def test_a_process_that_is_only_starting_is_stopped(tmp_path: Path, monkeypatch:
 
     monkeypatch.setattr(processes, "_PROGRAM", "import time; time.sleep(60)")
     monkeypatch.setattr(processes, "_received", stopped)
-    with closing(slot._trace), pytest.raises(processes._StoppedError):
+    with engine._scratch, closing(slot._trace), pytest.raises(processes._StoppedError):
         slot._began()
 
 
