@@ -71,7 +71,7 @@ class Identity:
         """Return in words what differs from the audit that a ledger was begun with."""
         if rows.get("schema") != _SCHEMA:
             return [f"its ledger is of another kind ({rows.get('schema', 'unknown')}, not {_SCHEMA})"]
-        kept = {name: value for name, value in rows.items() if name not in ("checksum", "finished")}
+        kept = {name: value for name, value in rows.items() if name in self.rows() and name != "checksum"}
         if rows.get("checksum") != _checksum(*kept.items()):
             return ["its ledger is damaged"]
         found = []
