@@ -203,7 +203,7 @@ def _claim(place: _Folder, file: AuditFile, kernel: KernelEntry, *, replace: boo
             if data is not None and not replace:
                 _check_record(place.shown, data, file, kernel)
             ledger.clear(identity)
-    except BaseException:
+    except BaseException:  # an interrupt, too, must not leave the ledger locked; raised on
         ledger.close()
         raise
     return ledger

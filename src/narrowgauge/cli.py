@@ -75,9 +75,7 @@ def _guarded(arguments: Sequence[str] | None) -> int:
     except _ReaderGoneError:
         _silence(sys.stdout)
         return _READER_GONE
-    # The boundary of the program: exit code 1 would mean that a gate failed, and a kernel that calls sys.exit is
-    # caught where it runs.
-    except BaseException as problem:
+    except BaseException as problem:  # the boundary of the program: exit code 1 would mean that a gate failed
         return _broken(problem)
 
 

@@ -85,7 +85,9 @@ def test_an_audit_with_approximate_draws(tmp_path: Path) -> None:
     (tmp_path / "model.py").write_text(
         "import numpy as np\ndef cheap(u):\n    return np.where(u < 0.5, -0.8, 0.8)\n", encoding="utf-8"
     )
-    record = audited(tmp_path, SOURCE, kernel=OWN, cost={"measured": "true", "draws": "0.5"}, draws=draws).record
+    asked = {"kernel": OWN, "cost": {"measured": "true", "draws": "0.5"}, "draws": draws}
+    assert try_out(file_for(tmp_path, SOURCE, **asked)).faults == []
+    record = audited(tmp_path, SOURCE, **asked).record
     assert set(record.costs) == {"float16", "bfloat16", "float32", "float64"}  # type: ignore[arg-type]
     assert {entry.arm for entry in record.canary} == set(record.costs)  # type: ignore[arg-type,union-attr]
     assert "float16/approximate" in record.verdict.finest_paying_level
@@ -257,6 +259,25 @@ def test_the_finest_level_is_tried_in_the_reference(tmp_path: Path) -> None:
     source = "def value(dW, h):\n    assert len(dW) < 16, 'too fine'\n    return dW[0]\n"
     with pytest.raises(KernelError, match="level 4, arm float64: the kernel raised AssertionError: too fine"):
         try_out(file_for(tmp_path, source, kernel=OWN, ladder={"finest": "4"}))
+
+
+@pytest.mark.parametrize("tables", [{}, {"cost": {"measured": "true"}}])
+def test_want_of_memory_in_a_format_ends_the_audit(tmp_path: Path, tables: dict[str, dict[str, str]]) -> None:
+    """It is no result of the format: neither in the trial nor where canary and costs run it."""
+    source = "def value(dW, h):\n    if dW.dtype == 'float16':\n        raise MemoryError\n    return dW[0]\n"
+    with pytest.raises(KernelError, match="arm float16: the kernel raised MemoryError"):
+        audited(tmp_path, source, kernel=OWN, **tables)
+
+
+def test_a_kernel_that_takes_no_shrinking_draws_has_no_canary(tmp_path: Path) -> None:
+    """The canary's draws are its own: a kernel that refuses them is audited without one."""
+    source = (
+        "def value(dW, h):\n    if (abs(dW) < 1e-3).mean() > 0.5:\n        raise ValueError\n    return 1 + dW[0]\n"
+    )
+    record = audited(tmp_path, source, kernel=OWN).record
+    assert record.canary == []
+    assert "Not tried: in float64 the kernel raises on draws that shrink" in rendered(audit_text(record, None))
+    assert record.verdict.finest_paying_level
 
 
 @pytest.mark.skipif(sys.platform == "win32", reason="there is no such program")

@@ -104,18 +104,16 @@ def _compiled(name: str) -> Callable[..., Any] | None:
     if numba is None:
         return None
     row, folder = _row(name), None
-    # Two broad excepts: what is raised where a file of numba's cache was cut short is whatever its reader raises, and
-    # nothing in a compiler may stop an audit that NumPy can do.
     with _LOCK:
         try:
             folder = _usual()
             with _kept(numba, folder):
                 return _compile(numba, name, row, cache=True)
-        except Exception as problem:
+        except Exception as problem:  # a file of numba's cache that was cut short: whatever its reader raises
             first = problem
         try:
             found = _compile(numba, name, row, cache=False)
-        except Exception as problem:
+        except Exception as problem:  # nothing in a compiler may stop an audit that NumPy can do
             _add(f"numba cannot compile here ({type(problem).__name__}): NumPy did some of the roundings")
             return None
         trouble = f"numba's cache cannot be used ({type(first).__name__}): each process compiled anew"

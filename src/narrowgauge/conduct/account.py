@@ -137,7 +137,7 @@ def account(file: AuditFile, outcome: Outcome, kernel: KernelEntry, provenance: 
         ),
         reach=outcome.trial.reach,
         range=outcome.trial.range,
-        canary=outcome.trial.canary or msgspec.UNSET,
+        canary=msgspec.UNSET if outcome.trial.canary is None else outcome.trial.canary,
         costs=outcome.costs or msgspec.UNSET,
         cautions=[OWN_CAUTION if own and caution == CAUTIONS[1] else caution for caution in CAUTIONS],
         provenance=provenance,

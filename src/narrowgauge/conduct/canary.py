@@ -20,8 +20,8 @@ import numpy.typing as npt
 from narrowgauge.arithmetic.arithmetic import arithmetic_named
 from narrowgauge.arithmetic.formats import FORMATS, Format
 from narrowgauge.draws.coarsen import Draws, fine_draws, inside
-from narrowgauge.errors import KernelError
 from narrowgauge.kernel.auditfile import AuditFile
+from narrowgauge.kernel.raised import kept_apart
 from narrowgauge.measure.arms import REFERENCE
 from narrowgauge.measure.calls import Caller, Quantities
 from narrowgauge.record.canary import CanaryEntry, Finding
@@ -71,12 +71,10 @@ class Canary:
         """Return what every arm shows, quantity by quantity, least precise first; arms that raise are left out."""
         runs: dict[str, tuple[_Runs, _Runs]] = {}
         for arm in self._callers:
-            try:
+            with kept_apart(self._level, arm):  # an arm that raises is left out: the measurement keeps what it raises
                 runs[arm] = self._runs(arm)
-            except (KernelError, KeyboardInterrupt):
-                raise
-            except BaseException:  # what a kernel raises in an arm is the measurement's to keep
-                continue
+        if REFERENCE not in runs:  # it runs on usual draws, and raises on the shrinking ones of the canary alone
+            return []
         found: dict[tuple[str, str], CanaryEntry] = {}
         for quantity in runs[REFERENCE][0].own:
             errors = {

@@ -13,14 +13,15 @@ from narrowgauge.conduct.canary import Canary, canary_level
 from narrowgauge.conduct.trial import NOT_REPEATABLE, check_targets, same_bits, trial_levels
 from narrowgauge.draws.coarsen import Draws
 from narrowgauge.draws.streams import Purpose
-from narrowgauge.errors import AuditFileError, DispatchError, KernelError
+from narrowgauge.errors import KernelError
 from narrowgauge.kernel.arms import Arm
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.contract import check_parameters
 from narrowgauge.kernel.loading import KernelSource
+from narrowgauge.kernel.raised import kept_apart, raised, with_place
 from narrowgauge.measure.arms import REFERENCE
 from narrowgauge.measure.block import BlockRunner
-from narrowgauge.measure.calls import Caller, Quantities
+from narrowgauge.measure.calls import Caller
 from narrowgauge.record.audit import FaultEntry, TrialEntry
 
 __all__ = ["examine_own"]
@@ -42,26 +43,36 @@ def examine_own(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> T
     callers: dict[str, Caller] = {}
     faults: list[FaultEntry] = []
     for arm in arms:
-        try:
-            callers[arm] = runner.caller(arithmetic_named(arm))
-            if arm == REFERENCE and kernel.foreign is None:
-                check_parameters(callers[arm].copy.function, file)
-            for level in trial_levels(file):
-                _twice(file, runner, callers[arm], level, arm)
-        except (KernelError, DispatchError, AuditFileError, KeyboardInterrupt):
-            raise
-        except BaseException as problem:  # the audit itself keeps what a narrow arm raises as data
+        kept = _tried(file, runner, callers, arm, checked=kernel.foreign is not None)
+        if kept is not None:
             callers.pop(arm, None)
-            what = f"the kernel raised {type(problem).__name__}: {problem}"
-            faults.append(FaultEntry(arm=arm, kind="raised", message=what))
+            faults.append(FaultEntry(arm=arm, kind="raised", message=str(raised(kept))))
     level = canary_level(file)
     canary = Canary(file, _drawn(runner, level, _PATHS), level, callers).entries()
     return TrialEntry(identical=True, reach=None, range=None, canary=canary, faults=faults)
 
 
+def _tried(
+    file: AuditFile, runner: BlockRunner, callers: dict[str, Caller], arm: str, *, checked: bool
+) -> BaseException | None:
+    """Run one arm on every level of the trial; return what the kernel raises in a narrow one."""
+    for level in trial_levels(file):
+        with kept_apart(level, arm) as kept:
+            if arm not in callers:
+                callers[arm] = runner.caller(arithmetic_named(arm))
+            if arm == REFERENCE and not checked:
+                check_parameters(callers[arm].copy.function, file)
+            _twice(file, runner, callers[arm], level, arm)
+        if kept.problem is not None and arm == REFERENCE:
+            raise raised(kept.problem, level, arm) from kept.problem
+        if kept.problem is not None:
+            return kept.problem
+    return None
+
+
 def _twice(file: AuditFile, runner: BlockRunner, caller: Caller, level: int, arm: str) -> None:
     """Run one arm twice on a level, and the reference on the finest level, on few paths."""
-    first, second = _run(runner, caller, level, arm), _run(runner, caller, level, arm)
+    first, second = (caller.fine(_drawn(runner, level, _PATHS), level) for _ in range(2))
     for name in first | second:
         same_bits(name, first, second, level, NOT_REPEATABLE)
     if arm != REFERENCE:
@@ -74,23 +85,11 @@ def _twice(file: AuditFile, runner: BlockRunner, caller: Caller, level: int, arm
     check_targets(file, list(first))
     if level == 0 and (finest := file.ladder.finest) > level:
         try:
-            _run(runner, caller, finest, arm, _FEW)
+            with with_place(finest, arm):
+                caller.fine(_drawn(runner, finest, _FEW), finest)
         except KernelError:  # perhaps a kernel that works on groups of paths
-            _run(runner, caller, finest, arm)
-
-
-def _run(runner: BlockRunner, caller: Caller, level: int, arm: str, paths: int = _PATHS) -> Quantities:
-    try:
-        return caller.fine(_drawn(runner, level, paths), level)
-    except KernelError as problem:
-        raise KernelError(str(problem), level=level, arm=arm) from problem.__cause__
-    except KeyboardInterrupt:
-        raise
-    except BaseException as problem:  # the kernel's own: in the reference its traceback is shown
-        if arm != REFERENCE:
-            raise
-        what = f"the kernel raised {type(problem).__name__}: {problem}"
-        raise KernelError(what, level=level, arm=arm) from problem
+            with with_place(finest, arm):
+                caller.fine(_drawn(runner, finest, _PATHS), finest)
 
 
 def _drawn(runner: BlockRunner, level: int, paths: int) -> Draws:

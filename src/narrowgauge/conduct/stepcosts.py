@@ -15,6 +15,7 @@ from narrowgauge.draws.coarsen import Draws, fine_draws
 from narrowgauge.draws.streams import Purpose
 from narrowgauge.kernel.arms import Arm
 from narrowgauge.kernel.auditfile import AuditFile
+from narrowgauge.kernel.raised import kept_apart, raised
 from narrowgauge.measure.arms import REFERENCE
 from narrowgauge.measure.block import BlockRunner
 from narrowgauge.record.costs import CostEntry
@@ -42,13 +43,10 @@ def step_costs(file: AuditFile, runner: BlockRunner) -> dict[str, CostEntry]:
     times: dict[str, list[float]] = {arm: [] for arm in arms}
     for _ in range(1 + _RUNS):
         for arm, caller in callers.items():
-            try:
+            with kept_apart(level, arm) as kept:  # what it raises in a narrow arm is the measurement's to keep
                 times[arm].append(caller.seconds(drawn[arm], level) / steps * _NANO)
-            except KeyboardInterrupt:
-                raise
-            except BaseException:  # what the kernel raises in an arm is the measurement's to keep
-                if arm == REFERENCE:
-                    raise
+            if kept.problem is not None and arm == REFERENCE:
+                raise raised(kept.problem, level, arm) from kept.problem
     counted = {arm: found[1:] or times[REFERENCE][1:] for arm, found in times.items()}
     unit = median(counted[REFERENCE])
     return {

@@ -16,12 +16,12 @@ from narrowgauge.conduct.reached import most_of, range_entry, reach_entry, text_
 from narrowgauge.draws.coarsen import Draws
 from narrowgauge.draws.streams import Purpose
 from narrowgauge.draws.tape import Tape
-from narrowgauge.errors import AuditFileError, DispatchError, KernelError, said
+from narrowgauge.errors import AuditFileError, DispatchError, KernelError
 from narrowgauge.kernel.arms import Arm
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.contract import check_parameters
 from narrowgauge.kernel.loading import KernelSource
-from narrowgauge.kernel.raised import OF_THE_MACHINE, with_place
+from narrowgauge.kernel.raised import kept_apart, raised, with_place
 from narrowgauge.measure.arms import PLAIN, REFERENCE
 from narrowgauge.measure.block import BlockRunner
 from narrowgauge.measure.calls import Quantities
@@ -82,19 +82,10 @@ class _Trial:
         draws = self._drawn(level)
         if isinstance(draws, Tape) and not draws.closed:
             _plainly_twice(self._file, self._runner, draws, level)  # writes what the arm has to ask for
-        try:
+        with kept_apart(level, arm) as kept:
             self._runner.caller(arithmetic_named(arm), notes).fine(draws, level)
-        except DispatchError:
-            raise
-        except KernelError as problem:
-            raise KernelError(said(problem), level=level, arm=arm) from problem.__cause__
-        except KeyboardInterrupt:
-            raise
-        except BaseException as problem:  # the audit itself keeps what a narrow arm raises as data
-            what = f"the kernel raised {type(problem).__name__}: {said(problem)}"
-            if isinstance(problem, OF_THE_MACHINE):
-                raise KernelError(what, level=level, arm=arm) from problem
-            return FaultEntry(arm=arm, kind="raised", message=what)
+        if kept.problem is not None:
+            return FaultEntry(arm=arm, kind="raised", message=str(raised(kept.problem)))
         self._narrow.setdefault(arm, {})[level] = notes
         return None
 

@@ -50,7 +50,7 @@ from narrowgauge.dispatch.importing import Copies
 from narrowgauge.dispatch.modules import listed_name
 from narrowgauge.dispatch.reached import holds, is_named, reached
 from narrowgauge.dispatch.setting import Setting
-from narrowgauge.errors import KernelError
+from narrowgauge.errors import KernelError, said
 
 __all__ = ["GENERATORS", "HandedOver"]
 
@@ -321,7 +321,7 @@ class HandedOver:
         try:
             return self.keep(value, copy.deepcopy(value, memo))
         except Exception as problem:  # whatever the class of the object raises
-            raise self.refuse(value, f"{type(problem).__name__}: {problem}") from None
+            raise self.refuse(value, f"{type(problem).__name__}: {said(problem)}") from None
 
     def _rebuilt(self, value: Any) -> Any:
         try:
@@ -329,7 +329,7 @@ class HandedOver:
         except KernelError:
             raise
         except Exception as problem:  # whatever the class of the object raises
-            raise self.refuse(value, f"{type(problem).__name__}: {problem}") from None
+            raise self.refuse(value, f"{type(problem).__name__}: {said(problem)}") from None
 
     def _is_met(self, value: Any) -> bool:
         """Whether a value belongs to the function's module or a listed one, or must be the copy's own for its kind."""

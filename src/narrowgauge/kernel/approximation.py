@@ -10,7 +10,7 @@ import numpy.typing as npt
 
 from narrowgauge.draws.approximate import Approximation, Constant, Linear, Polynomial
 from narrowgauge.draws.normals import exact_normals
-from narrowgauge.errors import AuditFileError
+from narrowgauge.errors import AuditFileError, said
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.loading import KernelSource, approximation_function
 
@@ -58,7 +58,7 @@ class _Own:
         except KeyboardInterrupt:
             raise
         except BaseException as problem:  # whatever the user's function raises is the user's to see
-            raise self._error(f"raised {type(problem).__name__}: {problem}") from problem
+            raise self._error(f"raised {type(problem).__name__}: {said(problem)}") from problem
         if not isinstance(found, np.ndarray) or found.dtype.kind != "f":
             what = f"an array of dtype {found.dtype}" if isinstance(found, np.ndarray) else f"a {type(found).__name__}"
             raise self._error(f"returned {what}")

@@ -17,12 +17,12 @@ from narrowgauge.dispatch.setting import Observer
 from narrowgauge.draws.coarsen import Draws
 from narrowgauge.draws.streams import GRAIN, Purpose, UniformStream, apart, block_paths, uniforms
 from narrowgauge.draws.tape import Tape
-from narrowgauge.errors import AuditFileError, DispatchError, KernelError, said
+from narrowgauge.errors import DispatchError, KernelError, said
 from narrowgauge.kernel.approximation import approximation_of
 from narrowgauge.kernel.arms import Arm, Kind
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.loading import KernelSource
-from narrowgauge.kernel.raised import OF_THE_MACHINE
+from narrowgauge.kernel.raised import kept_apart, raised
 from narrowgauge.measure.arms import REFERENCE, arms_of, pairs_of
 from narrowgauge.measure.calls import Caller
 from narrowgauge.measure.drawplan import DrawPlan, plan_draws
@@ -184,30 +184,24 @@ class BlockRunner:
 
     def _paths(self, draws: Draws | Tape, level: int, arm: str) -> _Paths | Raised:
         """Run fine and coarse path in one arm."""
-        caller = self._callers.get(arm)
         try:
-            if caller is None:
-                named = Arm.named(arm)
-                caller = self._callers[arm] = self.caller(arithmetic_named(named.format), kind=named.draws)
-            coupled = self.coupled(level)
-            values = caller.fine(draws, level, coarse_follows=coupled)
-            coarse = caller.coarse(draws, level) if coupled else {}
-        except KernelError as problem:
-            raise KernelError(said(problem), level=level, arm=arm) from problem.__cause__
+            with kept_apart(level, arm) as kept:
+                if arm not in self._callers:
+                    named = Arm.named(arm)
+                    self._callers[arm] = self.caller(arithmetic_named(named.format), kind=named.draws)
+                caller, coupled = self._callers[arm], self.coupled(level)
+                values = caller.fine(draws, level, coarse_follows=coupled)
+                coarse = caller.coarse(draws, level) if coupled else {}
+                if coarse:
+                    _same_quantities(coarse, values, "its fine path", level, arm)
+                return _Paths(fine=values, coarse=coarse)
         except DispatchError as problem:
             raise type(problem)(f"level {level}, arm {arm}: {said(problem)}") from None
-        except AuditFileError:  # there is no such function
-            raise
-        except KeyboardInterrupt:
-            raise
-        except BaseException as problem:  # whatever a kernel raises becomes data
-            if arm == REFERENCE or isinstance(problem, OF_THE_MACHINE):
-                what = f"the kernel raised {type(problem).__name__}: {said(problem)}"
-                raise KernelError(what, level=level, arm=arm) from problem
-            return self._raised(problem, None if caller is None else caller.copy)
-        if coarse:
-            _same_quantities(coarse, values, "its fine path", level, arm)
-        return _Paths(fine=values, coarse=coarse)
+        assert kept.problem is not None  # else the paths are returned
+        if arm == REFERENCE:
+            raise raised(kept.problem, level, arm) from kept.problem
+        known = self._callers.get(arm)
+        return self._raised(kept.problem, None if known is None else known.copy)
 
     def _raised(self, problem: BaseException, copy: PrivateCopy | None) -> Raised:
         """Return an exception as data, with the innermost line in the user's modules."""

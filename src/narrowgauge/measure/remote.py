@@ -14,7 +14,7 @@ from contextlib import ExitStack, contextmanager
 from types import TracebackType
 from typing import Any, TypeVar
 
-from narrowgauge.errors import WorkerError
+from narrowgauge.errors import WorkerError, said
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.loading import KernelSource
 from narrowgauge.measure.engines import largest_first
@@ -117,9 +117,9 @@ class ExecutorEngine:
 
 
 def _unable(name: str, problem: Exception) -> WorkerError:
-    said = f"{type(problem).__name__}: {problem}".rstrip(": ")
+    what = f"{type(problem).__name__}: {said(problem)}".rstrip(": ")
     return WorkerError(
-        f"{name}: the executor could not run it ({said}); accepted: an executor whose workers have narrowgauge "
+        f"{name}: the executor could not run it ({what}); accepted: an executor whose workers have narrowgauge "
         "installed and live until the audit is done. A kernel that ends its process shows like this, too: --workers "
         "finds the block that does"
     )

@@ -20,7 +20,7 @@ from narrowgauge.draws.tape import Tape
 from narrowgauge.errors import DispatchError, KernelError, said
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.loading import KernelSource
-from narrowgauge.kernel.raised import OF_THE_MACHINE, with_place
+from narrowgauge.kernel.raised import OF_THE_MACHINE, kept_apart, raised, with_place
 from narrowgauge.measure.arms import PLAIN, REFERENCE
 from narrowgauge.measure.calls import Caller, Quantities
 
@@ -101,16 +101,10 @@ class _Trial:
             return reason
         self._plainly(few)  # writes what the arms have to ask for
         for arm in arms:
-            try:
+            with kept_apart(self._level, arm) as kept:
                 found = Caller(self._file, self._kernel, arithmetic_named(arm)).fine(few, self._level)
-            except (KernelError, DispatchError):
-                raise
-            except KeyboardInterrupt:
-                raise
-            except OF_THE_MACHINE as problem:
-                raise _of_the_machine(problem, self._level, arm) from problem
-            except BaseException as problem:  # the kernel's own, kept as data by the audit
-                return f"{arm} raised {type(problem).__name__} with single paths"
+            if kept.problem is not None:  # the audit keeps it as data
+                return f"{arm} raised {type(kept.problem).__name__} with single paths"
             reason = self._differs(arm, few, found)
             if reason:
                 break
@@ -136,7 +130,7 @@ class _Trial:
                 what = what.replace(name, self._file.shown(name))
             return what
         except OF_THE_MACHINE as problem:  # says nothing about rows
-            raise _of_the_machine(problem, self._level, arm) from problem
+            raise raised(problem, self._level, arm) from problem
         except BaseException as problem:  # written for numbers, the kernel may raise anything
             what = f"with a row of paths it raises {type(problem).__name__}: {said(problem).partition(_BREAK)[0]}"
             setting = caller.copy.setting
@@ -146,10 +140,6 @@ class _Trial:
             place = f"{self._file.shown(observer.first.file)}:{observer.first.line}: " if observer.first else ""
             return f"{place}a decision depends on the state"
         return _apart(rows, singles, arithmetic)
-
-
-def _of_the_machine(problem: BaseException, level: int, arm: str) -> KernelError:
-    return KernelError(f"the kernel raised {type(problem).__name__}: {said(problem)}", level=level, arm=arm)
 
 
 def _apart(rows: Quantities, singles: Quantities, arithmetic: Arithmetic | None) -> str:

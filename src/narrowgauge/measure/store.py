@@ -269,7 +269,7 @@ class Ledger:
             connection.execute("BEGIN EXCLUSIVE")
             connection.execute("SELECT count(*) FROM sqlite_master").fetchone()
             connection.execute("COMMIT")
-        except BaseException:
+        except BaseException:  # an interrupt, too, must not leave the file locked; raised on
             connection.close()
             raise
         return connection
