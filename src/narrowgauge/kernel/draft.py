@@ -44,7 +44,7 @@ _MEANINGS: dict[str, str] = {
     "kernel.run": "file and function; the path is relative to the folder of this file",
     "kernel.takes": "increments, normals, uniforms or rng",
     "kernel.factors": "draws per step",
-    "kernel.layout": "order of the axes of the array of draws",
+    "kernel.layout": "order of the axes of the array of draws; without paths, one path a call",
     "kernel.coupling": '"none": levels are measured without their differences',
     "kernel.modules": "further modules and packages whose NumPy is rounded",
     "kernel.shared": "modules of theirs that cannot be copied, run as they are and not rounded",
