@@ -64,6 +64,16 @@ def test_competitors_are_what_formats_of_more_precision_can_do(setting):
         assert sorted(map(str, court.rivals(name))) == sorted(map(str, rivals))
 
 
+def test_approximate_draws_compete_with_exact_ones_in_their_format():
+    """What a format can do with exact draws is no merit of the approximate ones; what is wider competes as ever."""
+    formats = ALL | {"wide": ["float32", "float64"]}
+    file = audit(formats=formats, draws={"approximate": "linear", "formats": ["float16"]})
+    tally = level_tally(quantity(differences(1.0, float16=0.01, bfloat16=0.02, float32=1e-8)))
+    found = _Court(tally=tally, file=file, alpha=ALPHA, views={}).rivals("float16/approximate")
+    own = [alone("float16"), split("float16", "float32"), split("float16", "float64")]
+    assert sorted(map(str, found)) == sorted(map(str, [R64, R32, S32, *own]))
+
+
 @pytest.mark.parametrize(
     ("formats", "edge"),
     [

@@ -95,12 +95,20 @@ def test_a_function_may_write_into_its_uniforms(tmp_path: Path) -> None:
         ("return np.where(u < 1e-6, np.nan, u)", "returned nan for the uniform 4.76837158203125e-07"),
         ("return np.log(u - 2**-21)", "returned -inf for the uniform 4.76837158203125e-07"),
         ("return 1 / 0", "raised ZeroDivisionError: division by zero"),
+        (
+            "return np.argsort(np.argsort(u)) / u.size - 0.5",
+            "makes another normal of the uniform 0.1249995231628418 among other uniforms",
+        ),
+        (
+            "SEEN.append(1); return u - 1e-3 * len(SEEN)",
+            "does not give the same normals for the same uniforms a second time",
+        ),
         ("return u - u.mean(axis=0)", "makes another normal of the uniform 4.76837158203125e-07 among other uniforms"),
     ],
 )
 def test_what_a_function_does_wrong_is_said(tmp_path: Path, body: str, message: str) -> None:
     """With the function's name and what is accepted."""
-    source = f"import numpy as np\n\ndef logistic(u):\n    {body}\n"
+    source = f"import numpy as np\nSEEN = []\n\ndef logistic(u):\n    {body}\n"
     assert refusal(tmp_path, source) == f"cheap.py:logistic {message}; accepted: {ACCEPTED}"
 
 

@@ -2,11 +2,11 @@
 
 The bits are those of NumPy's code.
 
-numba is imported when the first rounding asks for it, never by an import of this package. What is compiled is kept on
-disk where numba keeps it (beside the source, or in the user's cache folder), so that compiling is paid once per
-installation. Where neither can be written a temporary folder serves this process alone; where what is kept there cannot
-be read, or nothing more be written, a loop is compiled for this process; where it cannot be compiled NumPy computes.
-`note` says so. NARROWGAUGE_COMPILED=0 in the environment leaves numba alone.
+numba is imported when the first arithmetic that is not native is made, never by an import of this package. What is
+compiled is kept on disk where numba keeps it (beside the source, or in the user's cache folder), so that compiling is
+paid once per installation. Where neither can be written a temporary folder serves this process alone; where what is
+kept there cannot be read, or nothing more be written, a loop is compiled for this process; where it cannot be compiled
+NumPy computes. `note` says so. NARROWGAUGE_COMPILED=0 in the environment leaves numba alone.
 """
 
 from __future__ import annotations

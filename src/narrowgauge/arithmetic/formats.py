@@ -72,6 +72,10 @@ class Format:
         """Whether the carrier's own arithmetic already is this format's, to nearest with subnormals kept."""
         return self.precision >= 24
 
+    def includes(self, other: Format) -> bool:
+        """Whether every finite value of the other format is one of this one."""
+        return self.precision >= other.precision and self.emax >= other.emax
+
 
 _F32, _F64 = np.dtype(np.float32), np.dtype(np.float64)
 

@@ -80,13 +80,14 @@ def carrier_rounding(form: Format) -> Callable[[Floats], Floats]:
     wide = form.emax == 127  # the carrier has the same exponents: subnormals and overflow round like everything else
     loop = compiled.kernel("words" if wide else "singles")
     if loop is not None:
-        return partial(_round_compiled, loop, form)
+        return partial(_over_all, loop, np.dtype(np.uint32 if wide else np.float32), _figures32(form))
     return _rounding_of_words(form) if wide else partial(_round_singles, form)
 
 
-def _round_compiled(loop: Callable[..., Any], form: Format, values: Floats) -> Floats:
+def _over_all(loop: Callable[..., Any], kind: np.dtype[Any], figures: tuple[Any, ...], values: Floats) -> Floats:
+    """Run a loop over all values in place, their memory taken as of a `kind`, and return them."""
     flat = _flat(values)
-    loop(flat.view(np.uint32) if form.emax == 127 else flat, *_figures32(form))
+    loop(flat.view(kind), *figures)
     if flat.base is None:
         values[...] = flat.reshape(values.shape)
     return values
@@ -108,11 +109,7 @@ def flush(values: Floats, form: Format) -> Floats:
         with np.errstate(invalid="ignore"):
             np.multiply(values, np.abs(values) >= least, out=values)
         return values
-    flat = _flat(values)
-    loop(flat, least)
-    if flat.base is None:
-        values[...] = flat.reshape(values.shape)
-    return values
+    return _over_all(loop, values.dtype, (least,), values)
 
 
 def narrow(
@@ -195,7 +192,7 @@ def round_half(number: float) -> np.float32:
 
 def _beside(near: float, number: int, rounding: Rounding) -> float:
     """Return the float64 that a mode takes for an integer, given the nearest one."""
-    if rounding in ("nearest", "stochastic"):
+    if rounding == "nearest":
         return near
     over = math.isinf(near)
     rest = (-1 if near > 0 else 1) if over else (number > int(near)) - (number < int(near))

@@ -26,9 +26,9 @@ from narrowgauge.measure.arms import REFERENCE
 from narrowgauge.measure.calls import Caller, Quantities
 from narrowgauge.record.canary import CanaryEntry, Finding
 
-__all__ = ["Canary"]
+__all__ = ["MOST_STEPS", "Canary"]
 
-_MOST_STEPS = 64
+MOST_STEPS = 64  # of a path on the level of the canary, the finest such: enough for roundings to add up
 # Results of a wider format rounded once agree in all but the few paths where two wider formats round to two sides. A
 # state that is rounded in f at every step agrees where its errors cancel, in well under nine paths of ten. Results that
 # a wider format has in f anyway, such as a payoff of 0, tell nothing and are left out; so many others are needed.
@@ -41,11 +41,6 @@ _NOT_ITS_OWN, _BITS_APART = 1 / 16, 8
 
 Doubles = npt.NDArray[np.float64]
 _Shares = Mapping[str, float | None]
-
-
-def canary_level(file: AuditFile) -> int:
-    """Return the level of the canary run: the finest of at most 64 steps, so that roundings add up, or the coarsest."""
-    return max(0, min(file.ladder.finest, file.ladder.finest_within(_MOST_STEPS)))
 
 
 @dataclass(frozen=True, slots=True)
@@ -91,7 +86,7 @@ class Canary:
 
     def _runs(self, arm: str) -> tuple[_Runs, _Runs]:
         drawn = fine_draws(self._draws, arithmetic_named(arm))
-        wider = [name for name in self._callers if _holds(FORMATS[name], FORMATS[arm]) and name != arm]
+        wider = [name for name in self._callers if FORMATS[name].includes(FORMATS[arm]) and name != arm]
 
         def on(given: npt.NDArray[np.floating]) -> _Runs:
             return _Runs(self._given(arm, given), {name: self._given(name, given) for name in wider})
@@ -128,7 +123,7 @@ class Canary:
         """Return whether results have, or err like, a narrower format, and which; None where nothing says so."""
         if np.unique(values[np.isfinite(values)]).size <= _FEW:
             return "unknown", None
-        narrower = [name for name in self._callers if _holds(FORMATS[arm], FORMATS[name]) and name != arm]
+        narrower = [name for name in self._callers if FORMATS[arm].includes(FORMATS[name]) and name != arm]
         within = [name for name in narrower if _same(_rounded(values, FORMATS[name]), values).all()]
         if within:
             return "narrower", within[0]
@@ -179,10 +174,6 @@ def _finding(shares: tuple[_Shares, _Shares, _Shares], outside: int, error: floa
 
 def _precision(arm: str) -> int:
     return FORMATS[arm].precision
-
-
-def _holds(wide: Format, narrow: Format) -> bool:
-    return wide.precision >= narrow.precision and wide.emax >= narrow.emax
 
 
 def _rounded(values: Doubles, form: Format) -> Doubles:

@@ -9,8 +9,8 @@ from __future__ import annotations
 import numpy as np
 
 from narrowgauge.arithmetic.arithmetic import arithmetic_named
-from narrowgauge.conduct.canary import Canary, canary_level
-from narrowgauge.conduct.trial import NOT_REPEATABLE, check_targets, same_bits, trial_levels
+from narrowgauge.conduct.canary import MOST_STEPS, Canary
+from narrowgauge.conduct.trial import FEW, NOT_REPEATABLE, PATHS, check_targets, same_bits, trial_levels
 from narrowgauge.draws.coarsen import Draws
 from narrowgauge.draws.streams import Purpose
 from narrowgauge.errors import KernelError
@@ -25,9 +25,6 @@ from narrowgauge.measure.calls import Caller
 from narrowgauge.record.audit import FaultEntry, TrialEntry
 
 __all__ = ["examine_own"]
-
-_PATHS = 1024
-_FEW = 8  # on the finest level
 
 
 def examine_own(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> TrialEntry:
@@ -47,8 +44,8 @@ def examine_own(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> T
         if kept is not None:
             callers.pop(arm, None)
             faults.append(FaultEntry(arm=arm, kind="raised", message=str(raised(kept))))
-    level = canary_level(file)
-    canary = Canary(file, _drawn(runner, level, _PATHS), level, callers).entries()
+    level = file.ladder.level_within(MOST_STEPS)
+    canary = Canary(file, _drawn(runner, level, PATHS), level, callers).entries()
     return TrialEntry(identical=True, reach=None, range=None, canary=canary, faults=faults)
 
 
@@ -72,7 +69,7 @@ def _tried(
 
 def _twice(file: AuditFile, runner: BlockRunner, caller: Caller, level: int, arm: str) -> None:
     """Run one arm twice on a level, and the reference on the finest level, on few paths."""
-    first, second = (caller.fine(_drawn(runner, level, _PATHS), level) for _ in range(2))
+    first, second = (caller.fine(_drawn(runner, level, PATHS), level) for _ in range(2))
     for name in first | second:
         same_bits(name, first, second, level, NOT_REPEATABLE)
     if arm != REFERENCE:
@@ -86,10 +83,10 @@ def _twice(file: AuditFile, runner: BlockRunner, caller: Caller, level: int, arm
     if level == 0 and (finest := file.ladder.finest) > level:
         try:
             with with_place(finest, arm):
-                caller.fine(_drawn(runner, finest, _FEW), finest)
+                caller.fine(_drawn(runner, finest, FEW), finest)
         except KernelError:  # perhaps a kernel that works on groups of paths
             with with_place(finest, arm):
-                caller.fine(_drawn(runner, finest, _PATHS), finest)
+                caller.fine(_drawn(runner, finest, PATHS), finest)
 
 
 def _drawn(runner: BlockRunner, level: int, paths: int) -> Draws:

@@ -11,6 +11,7 @@ from statistics import median
 import msgspec
 
 from narrowgauge.arithmetic.arithmetic import arithmetic_named
+from narrowgauge.conduct.canary import MOST_STEPS
 from narrowgauge.draws.coarsen import Draws, fine_draws
 from narrowgauge.draws.streams import Purpose
 from narrowgauge.kernel.arms import Arm
@@ -22,7 +23,6 @@ from narrowgauge.record.costs import CostEntry
 
 __all__ = ["step_costs", "with_costs"]
 
-_MOST_STEPS = 64
 _PATHS = 8192
 _RUNS = 11  # after one that nobody counts
 _NANO = 1e9
@@ -33,7 +33,7 @@ def step_costs(file: AuditFile, runner: BlockRunner) -> dict[str, CostEntry]:
 
     A format in which the kernel raises costs what float64 does; it is not going to be chosen.
     """
-    level = max(0, min(file.ladder.finest, file.ladder.finest_within(_MOST_STEPS)))
+    level = file.ladder.level_within(MOST_STEPS)
     draws = runner.draws(level, 0, Purpose.TRIAL, min(_PATHS, runner.paths(level)))
     assert isinstance(draws, Draws)  # no kernel that rounds for itself draws for itself
     steps = draws.values.shape[0] * draws.values.shape[-1]

@@ -27,10 +27,19 @@ from narrowgauge.measure.block import BlockRunner
 from narrowgauge.measure.calls import Quantities
 from narrowgauge.record.audit import FaultEntry, TrialEntry
 
-__all__ = ["NOT_REPEATABLE", "check_targets", "examine", "same_bits", "trial_levels", "try_arms"]
+__all__ = [
+    "FEW",
+    "NOT_REPEATABLE",
+    "PATHS",
+    "check_targets",
+    "examine",
+    "same_bits",
+    "trial_levels",
+    "try_arms",
+]
 
-_PATHS = 1024
-_FEW = 8  # paths on the finest level, which may have thousands of steps; what is met there does not depend on them
+PATHS = 1024
+FEW = 8  # paths on the finest level, which may have thousands of steps; what is met there does not depend on them
 _LEVEL = 2  # coarse enough to be over at once, fine enough to pass through the time loop more than once
 NOT_REPEATABLE = (
     "a second call with the same draws does not give the same bits",
@@ -47,18 +56,13 @@ class _Trial:
 
     def __init__(self, file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> None:
         self._file, self._kernel, self._runner = file, kernel, runner
-        self._levels = trial_levels(file)
+        self.levels = trial_levels(file)
         self._draws: dict[int, Draws | Tape] = {}
         self._reference: dict[int, Notes] = {}
         self._narrow: dict[str, dict[int, Notes]] = {}
         self._finest: Notes | None = None
         self._remarks: list[str] = []
         self.arms = [name for name in runner.arms[1:] if Arm.named(name).exact]  # a format is tried once
-
-    @property
-    def levels(self) -> list[int]:
-        """The levels on which every arm is tried."""
-        return self._levels
 
     def identity(self) -> None:
         """Run the kernel under plain NumPy and under float64 through the whole machinery, on each level.
@@ -67,10 +71,10 @@ class _Trial:
         says of the reference.
         """
         self._remark(self._runner.remarks)
-        for level in self._levels:
+        for level in self.levels:
             notes = self._reference[level] = Notes(self.arms)  # kept also where the run stops halfway
             self._remark(_identical(self._file, self._runner, self._drawn(level), level, notes))
-        if self._file.ladder.finest not in self._levels:
+        if self._file.ladder.finest not in self.levels:
             self._finest = self._noted_on_finest()
 
     def arm(self, arm: str, level: int) -> FaultEntry | None:
@@ -91,7 +95,7 @@ class _Trial:
 
     def entry(self, *, identical: bool, faults: list[FaultEntry]) -> TrialEntry:
         """Return all that the runs showed; without a reference nothing was reached."""
-        file, main = self._file, self._levels[0]
+        file, main = self._file, self.levels[0]
         references = [*self._reference.values(), *([] if self._finest is None else [self._finest])]
         narrow = [notes for levels in self._narrow.values() for notes in levels.values()]
         reference = self._reference.get(main, Notes(self.arms))
@@ -115,20 +119,20 @@ class _Trial:
 
     def _drawn(self, level: int) -> Draws | Tape:
         if level not in self._draws:
-            self._draws[level] = self._runner.draws(level, 0, Purpose.IDENTITY, _PATHS)
+            self._draws[level] = self._runner.draws(level, 0, Purpose.IDENTITY, PATHS)
         return self._draws[level]
 
     def _noted_on_finest(self) -> Notes:
         """Run the reference on the finest level: on few paths, or on as many as a block has where those do not do."""
         level = self._file.ladder.finest
-        for paths in (_FEW, _PATHS):
+        for paths in (FEW, PATHS):
             notes = Notes(self.arms)
             try:
                 draws = self._runner.draws(level, 0, Purpose.IDENTITY, paths)
                 _identical(self._file, self._runner, draws, level, notes)
                 break
             except (KernelError, DispatchError):  # perhaps a kernel that works on groups of paths
-                if paths == _PATHS or self._runner.singly:
+                if paths == PATHS or self._runner.singly:
                     raise
         return notes
 
@@ -158,10 +162,10 @@ def examine(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> Trial
     for arm in trial.arms:
         for level in trial.levels:
             try:
-                raised = trial.arm(arm, level)
+                fault = trial.arm(arm, level)
             except DispatchError as problem:
                 raise type(problem)(f"level {level}, arm {arm}: {problem}") from None
-            if raised is not None:
+            if fault is not None:
                 break
     return trial.entry(identical=True, faults=[])
 

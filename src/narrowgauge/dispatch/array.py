@@ -316,7 +316,7 @@ def carrier_of(value: Any, setting: Setting) -> Any:
         return np.array([carrier_of(item, setting) for item in value], dtype=setting.arithmetic.format.carrier)
     carrier = setting.admit(value)
     if carrier is NotImplemented:
-        raise setting.fault(RefusedError, f"a {type(value).__name__} met the state; accepted: numbers and arrays")
+        raise setting.strange(value)
     return carrier
 
 

@@ -22,10 +22,10 @@ import numpy as np
 from narrowgauge.dispatch.routes import ROUTES
 from narrowgauge.dispatch.setting import Number, Setting, Wrapped, holds
 from narrowgauge.dispatch.texts import written_down
-from narrowgauge.errors import EscapeError, RefusedError
+from narrowgauge.errors import RefusedError
 
 __all__ = [
-    "FLOAT", "PICKLED", "Exact", "as_number", "bare", "compute", "is_exact", "plain_copy", "settled", "taken_out",
+    "FLOAT", "PICKLED", "Exact", "bare", "compute", "is_exact", "plain_copy", "settled", "taken_out",
 ]  # fmt: skip
 
 _STORE = dis.opmap["STORE_SUBSCR"]
@@ -204,7 +204,7 @@ class Exact(Wrapped):
     def astype(self, dtype: Any, **keywords: Any) -> Any:
         """Return numbers of the state for float64, rounded once, or exact values; other floats are refused."""
         if self._setting.float_dtype(dtype) is not None:
-            return as_number(self, self._setting)
+            return _as_number(self, self._setting)
         return self._setting.wrap(self._carrier.astype(dtype, **keywords))
 
     def __getattr__(self, name: str) -> Any:
@@ -240,7 +240,7 @@ def compute(setting: Setting, ufunc: np.ufunc, operands: Sequence[Any], call: Ca
             setting.float_dtype(operand.dtype)
     route = ROUTES.get(ufunc)
     if route is None:  # not one elementary operation: a product of matrices, two results, or refused
-        return setting.ufunc(setting, ufunc, "__call__", [as_number(operand, setting) for operand in operands], {})
+        return setting.ufunc(setting, ufunc, "__call__", [_as_number(operand, setting) for operand in operands], {})
     return setting.operate(ufunc, route, operands, call=call)
 
 
@@ -265,7 +265,7 @@ def is_exact(value: Any, setting: Setting) -> bool:
     return np.asarray(bare(value, setting)).dtype.kind in "biu"
 
 
-def as_number(value: Any, setting: Setting) -> Any:
+def _as_number(value: Any, setting: Setting) -> Any:
     """Return an exact value as numbers of the state, rounded once; any other value as it is."""
     if not isinstance(value, Exact):
         return value
@@ -287,7 +287,7 @@ def settled(result: Any, name: str, setting: Setting, given: Sequence[Any] = ())
         kind = "numbers" if isinstance(result, float) else f"a {type(result).__name__}"
     elif isinstance(result, int) or result.dtype.kind in "biu":
         if isinstance(result, np.ndarray) and any(result is argument for argument in given):
-            raise setting.fault(EscapeError, f"out= of {name} is a plain array; accepted: an array of the state")
+            raise setting.plain_target(name)
         return setting.wrap(result)
     else:
         kind = "numbers"

@@ -19,7 +19,7 @@ import numpy as np
 from narrowgauge.dispatch.array import as_state
 from narrowgauge.dispatch.namespaces import Namespace
 from narrowgauge.dispatch.setting import Setting
-from narrowgauge.dispatch.standin import numpy_namespace, refusing_namespace
+from narrowgauge.dispatch.standin import NO_DRAWS, numpy_namespace, refusing_generator, refusing_namespace
 from narrowgauge.errors import RefusedError
 
 __all__ = ["FixedDraws"]
@@ -28,7 +28,6 @@ _BIT_GENERATORS = ("MT19937", "PCG64", "PCG64DXSM", "Philox", "SFC64")
 _ALIASES = {"ranf": "random_sample", "sample": "random_sample"}
 _SEEDS = frozenset({"seed", "set_state", "setstate"})
 _QUIET = _SEEDS | {"get_state", "getstate", "jumped", "spawn"}  # methods that draw nothing
-_NO_DRAWS = "the kernel takes its random numbers as its first argument, so that every format sees the same"
 
 
 class _Held:
@@ -95,9 +94,7 @@ class FixedDraws:
     def numpy(self) -> ModuleType:
         """Return the stand-in for numpy."""
         if self.setting is not None:
-            made = numpy_namespace(self.setting)
-            made.__dict__["random"] = self._numpy_random()
-            return made
+            return numpy_namespace(self.setting, self._numpy_random())
         names = {name: value for name, value in vars(np).items() if not name.startswith("__")}  # as fast as NumPy's
         return Namespace(np, {**names, "random": self._numpy_random()})
 
@@ -121,7 +118,7 @@ class FixedDraws:
         """Raise RefusedError unless a module that is being executed draws from a seeded generator."""
         assert self.setting is not None  # under plain NumPy no generator is held
         if not self._importing():
-            raise self.setting.fault(RefusedError, f"{name} is not offered by this version: {_NO_DRAWS}")
+            raise self.setting.fault(RefusedError, f"{name} is not offered by this version: {NO_DRAWS}")
         if not is_seeded:
             what = f"{name} draws while the module is executed, without a seed: each format would get other numbers"
             raise self.setting.fault(RefusedError, f"{what}; accepted: a generator with a seed")
@@ -158,7 +155,8 @@ class FixedDraws:
             for name in ("Generator", "RandomState", *_BIT_GENERATORS):
                 names[name] = self._kind(getattr(np.random, name))
             names |= {"default_rng": self._default_rng, "SeedSequence": self._sequence()}
-            names |= {name: self._refused(name) for name in ("get_bit_generator", "set_bit_generator")}
+            for name in ("get_bit_generator", "set_bit_generator"):
+                names[name] = refusing_generator(f"numpy.random.{name}", self.setting)
             bits = {name: names[name] for name in (*_BIT_GENERATORS, "SeedSequence")}
             names["bit_generator"] = Namespace(np.random.bit_generator, bits)
         return Namespace(np.random, {**names, "mtrand": Namespace(np.random.mtrand, {**names, "_rand": everything})})
@@ -167,13 +165,6 @@ class FixedDraws:
         if isinstance(seed, np.random.Generator):
             return seed
         return self.held(np.random.default_rng(_bare(seed)), self.is_seeded(seed))
-
-    def _refused(self, name: str) -> Callable[..., Any]:
-        def function(*given: Any, **named: Any) -> Any:
-            assert self.setting is not None  # under plain NumPy it is NumPy's own
-            raise self.setting.fault(RefusedError, f"numpy.random.{name} is not offered by this version: {_NO_DRAWS}")
-
-        return function
 
     def _sequence(self) -> type:
         unseeded = self._unseeded

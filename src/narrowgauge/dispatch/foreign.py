@@ -21,7 +21,7 @@ from narrowgauge.dispatch.scalar import State
 from narrowgauge.dispatch.setting import Route, Setting, Wrapped, holds
 from narrowgauge.dispatch.standin import refusing_generator, refusing_namespace
 from narrowgauge.dispatch.variates import drawing, is_distribution
-from narrowgauge.errors import EscapeError, RefusedError
+from narrowgauge.errors import RefusedError
 
 __all__ = ["exchanged", "scipy_namespace"]
 
@@ -178,7 +178,7 @@ def _into(out: Any, result: Any, name: str, setting: Setting) -> Any:
     targets = out if isinstance(out, tuple) else (out,)
     for target, part in zip(targets, result if isinstance(result, tuple) else (result,), strict=True):
         if not isinstance(target, Array):
-            raise setting.fault(EscapeError, f"out= of {name} is a plain array; accepted: an array of the state")
+            raise setting.plain_target(name)
         target[...] = part
     return out
 

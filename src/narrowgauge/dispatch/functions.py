@@ -58,7 +58,7 @@ def call_function(
             if type(value) is Constant:
                 changing(value)
     if out is not None and not isinstance(out[0] if isinstance(out, tuple) else out, Wrapped):
-        raise setting.fault(EscapeError, f"out= of {row.shown} is a plain array; accepted: an array of the state")
+        raise setting.plain_target(row.shown)
     handler = _HANDLERS.get(row.name) or ACCUMULATED.get(row.name)
     own = [given[name] for name in (*row.placed, *row.named, row.variadic) if name in row.state and name in given]
     if row.variadic:

@@ -186,7 +186,7 @@ class Copies:
             makers["math"] = lambda: math_namespace(setting)
             makers["scipy"] = lambda: scipy_namespace(setting, self._for_real)
             if draws is not None:
-                makers["numpy"] = lambda: numpy_namespace(setting)
+                makers["numpy"] = lambda: numpy_namespace(setting, random_namespace(draws))
             makers["statistics"] = lambda: statistics_namespace(setting)
             makers["secrets"] = lambda: refusing_namespace("secrets", setting)
         return makers

@@ -16,7 +16,7 @@ from narrowgauge.dispatch.array import Array
 from narrowgauge.dispatch.exact import Exact, bare, is_exact
 from narrowgauge.dispatch.scalar import State
 from narrowgauge.dispatch.setting import Number, Route, Setting, Wrapped, holds
-from narrowgauge.errors import EscapeError, RefusedError
+from narrowgauge.errors import RefusedError
 
 __all__ = [
     "Row",
@@ -159,7 +159,7 @@ def _converted(value: Any, setting: Setting, kind: np.dtype[Any]) -> Any:
         return value  # a number of bins or a power
     carrier = setting.admit(value)
     if carrier is NotImplemented:
-        raise setting.fault(RefusedError, f"a {type(value).__name__} met the state; accepted: numbers and arrays")
+        raise setting.strange(value)
     if isinstance(carrier, np.ndarray):
         return carrier if carrier.dtype == kind else np.asarray(carrier).astype(kind)
     return kind.type(carrier)
@@ -172,7 +172,7 @@ def _check(value: Any, setting: Setting) -> None:
             for item in value:
                 _check(item, setting)
     elif value is not None and not isinstance(value, str) and setting.admit(value) is NotImplemented:
-        raise setting.fault(RefusedError, f"a {type(value).__name__} met the state; accepted: numbers and arrays")
+        raise setting.strange(value)
 
 
 def narrowed(setting: Setting, result: Any, shown: str) -> Any:
@@ -230,7 +230,7 @@ def delivered(setting: Setting, shown: str, target: Any, result: Any) -> Any:
     if not isinstance(target, (Array, Exact)):
         if isinstance(result, Number) and target.dtype.kind in "biu":
             np.copyto(target, setting.carrier(result), casting="same_kind")  # NumPy's own TypeError
-        raise setting.fault(EscapeError, f"out= of {shown} is a plain array; accepted: an array of the state")
+        raise setting.plain_target(shown)
     carrier = setting.carrier(result) if isinstance(result, Wrapped) else result
     into = setting.carrier(target)
     if isinstance(target, Array) and not isinstance(result, Number):

@@ -133,6 +133,14 @@ class Setting:
         self.faults.append(error)
         return error
 
+    def plain_target(self, name: str) -> DispatchError:
+        """Record and return the fault of an `out=` of `name` that is no array of the state."""
+        return self.fault(EscapeError, f"out= of {name} is a plain array; accepted: an array of the state")
+
+    def strange(self, value: Any) -> DispatchError:
+        """Record and return the fault of an operand of a foreign type."""
+        return self.fault(RefusedError, f"a {type(value).__name__} met the state; accepted: numbers and arrays")
+
     def escape(self, message: str) -> None:
         """Let a plain value leave where the line under way is allowed to; on any other, raise the EscapeError."""
         place = self.where()

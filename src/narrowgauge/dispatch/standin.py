@@ -23,12 +23,12 @@ from narrowgauge.dispatch.exact import Exact, bare, is_exact
 from narrowgauge.dispatch.functions import call_function
 from narrowgauge.dispatch.lists import taking_lists
 from narrowgauge.dispatch.namespaces import Exchanging, Namespace
-from narrowgauge.dispatch.randoms import random_namespace
 from narrowgauge.dispatch.scalar import State
 from narrowgauge.dispatch.setting import Setting, Wrapped, holds
 from narrowgauge.errors import RefusedError
 
 __all__ = [
+    "NO_DRAWS",
     "builtins_namespace",
     "dataclasses_namespace",
     "numpy_namespace",
@@ -36,7 +36,7 @@ __all__ = [
     "refusing_namespace",
 ]
 
-_NO_DRAWS = "the kernel takes its random numbers as its first argument, so that every format sees the same"
+NO_DRAWS = "the kernel takes its random numbers as its first argument, so that every format sees the same"
 
 
 class _Refusing(ModuleType):
@@ -52,7 +52,7 @@ class _Refusing(ModuleType):
 
 def _refusing(name: str, setting: Setting) -> type:
     def refuse(*arguments: Any, **keywords: Any) -> Any:
-        raise setting.fault(RefusedError, f"{name} is not offered by this version: {_NO_DRAWS}")
+        raise setting.fault(RefusedError, f"{name} is not offered by this version: {NO_DRAWS}")
 
     return type(name.rpartition(".")[2], (), {"__new__": refuse})
 
@@ -64,7 +64,7 @@ class _RefusedGenerator:
         self._name, self._setting = name, setting
 
     def __call__(self, *arguments: Any, **keywords: Any) -> Any:
-        raise self._setting.fault(RefusedError, f"{self._name} is not offered by this version: {_NO_DRAWS}")
+        raise self._setting.fault(RefusedError, f"{self._name} is not offered by this version: {NO_DRAWS}")
 
     def __getattr__(self, name: str) -> Any:
         if name.startswith("__"):
@@ -129,15 +129,15 @@ def builtins_namespace(setting: Setting) -> ModuleType:
     return Namespace(builtins, {"max": stand_in(max), "min": stand_in(min)})
 
 
-def numpy_namespace(setting: Setting) -> ModuleType:
-    """Return a stand-in for `numpy` whose creators give arrays of the state and exact values."""
+def numpy_namespace(setting: Setting, random: ModuleType) -> ModuleType:
+    """Return a stand-in for `numpy` with its `random`; its creators give arrays of the state and exact values."""
     names: dict[str, Any] = {
         "arange": _arange(setting),
         "array": _array(setting),
         "full": _full(setting),
         "take": _take(setting),
         "where": _where(setting),
-        "random": random_namespace(setting.draws) if setting.draws else refusing_namespace("numpy.random", setting),
+        "random": random,
     }
     for name in ("empty", "ones", "zeros"):
         names[name] = _creator(setting, getattr(np, name))

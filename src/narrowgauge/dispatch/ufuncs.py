@@ -20,7 +20,7 @@ from narrowgauge.dispatch.routes import INTEGERS, NEITHER, ROUTES
 from narrowgauge.dispatch.rows import all_exact, carried, delivered, finished, narrowed, unwrapped, widened
 from narrowgauge.dispatch.scalar import State
 from narrowgauge.dispatch.setting import Number, Setting, Wrapped
-from narrowgauge.errors import EscapeError, RefusedError
+from narrowgauge.errors import RefusedError
 
 __all__ = ["call_ufunc"]
 
@@ -80,7 +80,7 @@ def _with_keywords(
         return done if done is NotImplemented else own
     for target in targets:
         if target is not None and not isinstance(target, Wrapped) and target.dtype.kind == "f":
-            raise setting.fault(EscapeError, f"out= of {shown} is a plain array; accepted: an array of the state")
+            raise setting.plain_target(shown)
     chosen = given.pop("where", True) if method in ("__call__", "outer") else True
     unknown = given.keys() - _KEYWORDS.get(method, set())
     if unknown:
@@ -111,7 +111,7 @@ def _chosen(setting: Setting, shown: str, target: Any, result: Any, chosen: Any)
         into = np.full(shape, blank, np.asarray(carrier).dtype)
         target = setting.wrap(into)
     elif not isinstance(target, Wrapped):
-        raise setting.fault(EscapeError, f"out= of {shown} is a plain array; accepted: an array of the state")
+        raise setting.plain_target(shown)
     source = setting.admit(result) if isinstance(target, Number) else carrier
     np.copyto(setting.carrier(target), source, casting="same_kind", where=chosen)
     return target if np.ndim(setting.carrier(target)) else setting.wrap(setting.carrier(target)[()])
@@ -233,7 +233,7 @@ def _among_exact(
     out = keywords.get("out", ())
     for target in out or (inputs[:1] if method == "at" else ()):
         if target is not None and not isinstance(target, Exact):
-            raise setting.fault(EscapeError, f"out= of {name} is a plain array; accepted: an array of the state")
+            raise setting.plain_target(name)
     result = getattr(ufunc, method)(*bare(list(inputs), setting), **bare(keywords, setting))
     if out:
         return out[0] if len(out) == 1 else out

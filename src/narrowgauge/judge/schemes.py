@@ -20,7 +20,7 @@ from typing import Literal
 
 from narrowgauge.judge.gain import LevelCosts, LevelView, Scheme
 from narrowgauge.judge.intervals import Interval
-from narrowgauge.kernel.arms import wider
+from narrowgauge.kernel.arms import Arm, wider
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.measure.arms import REFERENCE
 from narrowgauge.measure.moments import Series
@@ -142,7 +142,10 @@ class _Court:
         return schemes
 
     def rivals(self, name: str) -> list[Scheme]:
-        """Return what a format competes with: the best that formats of more precision can do."""
+        """Return what an arm competes with: the best that formats of more precision can do with exact draws.
+
+        Approximate draws compete with exact ones in the same format too: they have to be worth their own error.
+        """
         formats = self._file.formats
         found = [Scheme(kind="alone", narrow=REFERENCE)]
         if wider(formats.today, name):
@@ -150,6 +153,9 @@ class _Court:
         for wide in formats.wide:
             if wider(wide, name):
                 found += self.own(wide)
+        arm = Arm.named(name)
+        if not arm.exact:
+            found += self.own(arm.format)
         return list(dict.fromkeys(found))
 
     def admission(self, scheme: Scheme, *, rival: bool = False) -> Admission:

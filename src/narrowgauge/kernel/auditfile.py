@@ -48,12 +48,8 @@ from narrowgauge.kernel.owntables import with_run
 __all__ = [
     "AuditFile",
     "CostTable",
-    "DrawsTable",
-    "FormatsTable",
     "KernelTable",
     "LadderTable",
-    "SamplingTable",
-    "TargetTable",
     "audit_file_from",
     "bytes_of",
     "most_steps",

@@ -16,7 +16,7 @@ from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.kernel.arms import Kind
 from narrowgauge.kernel.drawstable import DrawsTable
 from narrowgauge.kernel.owntables import CommandTable, LibraryTable
-from narrowgauge.kernel.rules import RULES, Rule, Table, TableError, check_run, dotted, kind_of, shown
+from narrowgauge.kernel.rules import RULES, Table, TableError, check_run, dotted, kind_of, shown
 
 __all__ = [
     "RULES",
@@ -28,11 +28,11 @@ __all__ = [
     "KernelTable",
     "LadderTable",
     "LibraryTable",
-    "Rule",
     "SamplingTable",
     "Table",
     "TableError",
     "TargetTable",
+    "axes_of",
     "check_run",
     "default_layout",
     "dotted",
@@ -44,6 +44,11 @@ __all__ = [
 def default_layout(factors: int) -> str:
     """Return the order of the axes of an array of draws when none is given."""
     return "steps, paths" if factors == 1 else "steps, factors, paths"
+
+
+def axes_of(layout: str) -> list[str]:
+    """Return the names of the axes in the order that a layout has."""
+    return [axis.strip() for axis in layout.split(",")]
 
 
 class KernelTable(Table, frozen=True, kw_only=True, forbid_unknown_fields=True):
@@ -69,9 +74,9 @@ class KernelTable(Table, frozen=True, kw_only=True, forbid_unknown_fields=True):
     def __post_init__(self) -> None:
         super().__post_init__()
         default = default_layout(self.factors)
-        axes = tuple(axis.strip() for axis in (self.layout or default).split(","))
+        axes = axes_of(self.layout or default)
         # With one factor its axis may be there, of length one, or not; without paths the kernel takes one a call.
-        whole = axes if "paths" in axes else (*axes, "paths")
+        whole = axes if "paths" in axes else [*axes, "paths"]
         if sorted(whole) not in (sorted(default.split(", ")), ["factors", "paths", "steps"]):
             draws = "one draw a step" if self.factors == 1 else f"{self.factors} draws a step"
             self.refuse(
@@ -128,6 +133,10 @@ class LadderTable(Table, frozen=True, kw_only=True, forbid_unknown_fields=True):
         while steps <= most_steps:
             level, steps = level + 1, steps * self.refinement
         return level
+
+    def level_within(self, most_steps: int) -> int:
+        """Return the finest level of this ladder of at most `most_steps` steps, the coarsest if it has none."""
+        return max(0, min(self.finest, self.finest_within(most_steps)))
 
 
 class TargetTable(Table, frozen=True, kw_only=True, forbid_unknown_fields=True):

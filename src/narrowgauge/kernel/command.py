@@ -28,9 +28,10 @@ import numpy.typing as npt
 from narrowgauge.arithmetic.formats import Format
 from narrowgauge.errors import AuditFileError, KernelError
 from narrowgauge.kernel.auditfile import AuditFile
+from narrowgauge.kernel.audittables import axes_of
 from narrowgauge.kernel.owntables import CommandTable
 
-__all__ = ["Command", "abandon"]
+__all__ = ["Command", "abandon", "how_ended"]
 
 _RESULT = "result.npy"
 _LAST_WORDS = 65536  # bytes of its output in which a last line is looked for
@@ -45,7 +46,7 @@ class Command:
 
     def __init__(self, file: AuditFile, table: CommandTable) -> None:
         self._table, self._folder, self._layout = table, file.folder, file.kernel.layout
-        self._axes = [axis.strip() for axis in self._layout.split(",")]
+        self._axes = axes_of(self._layout)
         first = table.run[0]
         beside = os.path.basename(first) != first  # has a folder in it
         self._program = str(file.folder / first) if beside else shutil.which(first)
@@ -122,8 +123,7 @@ class Command:
             finally:
                 _kill(process)
             if code:
-                how = f"ended with exit code {code}" if code > 0 else f"was ended by {_signal(-code)}"
-                raise self._failed(how, said)
+                raise self._failed(how_ended(code), said)
 
     def _read(self, path: Path, form: Format, paths: int) -> npt.NDArray[Any]:
         """Return result.npy, (outputs, paths), in the format's type or as it was written."""
@@ -159,6 +159,16 @@ def abandon() -> None:
         if process is not None:
             _kill(process)
         shutil.rmtree(folder, ignore_errors=True)
+
+
+def how_ended(code: int) -> str:
+    """Return in words how a process ended, by its exit code, or minus the number of a signal."""
+    if code >= 0:
+        return f"ended with exit code {code}"
+    try:
+        return f"was ended by {signal.Signals(-code).name}"
+    except ValueError:
+        return f"was ended by signal {-code}"
 
 
 @contextlib.contextmanager
@@ -199,13 +209,6 @@ def _descendants(number: int) -> list[int]:
         with contextlib.suppress(OSError):
             found += [int(word) for word in listed.read_text(encoding="ascii").split()]
     return [*found, *(inner for child in found for inner in _descendants(child))]
-
-
-def _signal(number: int) -> str:
-    try:
-        return signal.Signals(number).name
-    except ValueError:
-        return f"signal {number}"
 
 
 def _stored(form: Format) -> str:

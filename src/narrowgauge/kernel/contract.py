@@ -34,12 +34,25 @@ from narrowgauge.draws.columns import Columns
 from narrowgauge.draws.tape import Reader, TapeError
 from narrowgauge.errors import AuditFileError, EscapeError, KernelError, SettingsMixedError
 from narrowgauge.kernel.auditfile import AuditFile
+from narrowgauge.kernel.audittables import axes_of
 
-__all__ = ["SINGLE", "arranged", "check_parameters", "evaluate", "evaluate_drawing", "takes_one_path"]
+__all__ = [
+    "ACCEPTED",
+    "SINGLE",
+    "arranged",
+    "check_parameters",
+    "check_shape",
+    "described",
+    "evaluate",
+    "evaluate_drawing",
+    "label_of",
+    "quantities_of",
+    "takes_one_path",
+]
 
 SINGLE = "value"  # the name of a quantity that is returned as a bare array
 _COUNTS = ("steps", "paths")  # what a kernel that draws for itself has to be told
-_ACCEPTED = "accepted: an array of shape (paths,), or a mapping of names to such arrays"
+ACCEPTED = "accepted: an array of shape (paths,), or a mapping of names to such arrays"
 _MOST_CONSTANTS = 16  # of one quantity, among the plain numbers that single paths return
 _ACCEPTED_ONE = (
     "accepted: a number, or a mapping of names to numbers, since neither layout nor arguments of the kernel name paths"
@@ -52,7 +65,7 @@ def arranged(draws: Floats, layout: str) -> Floats:
     A layout without "factors" drops that axis, which has length one; where it names no paths they come last. The
     result is C-contiguous.
     """
-    axes = [name.strip() for name in layout.split(",")]
+    axes = axes_of(layout)
     axes += ["paths"] if "paths" not in axes else []
     source = draws if "factors" in axes else draws[:, 0, :]
     names = ["steps", "factors", "paths"] if "factors" in axes else ["steps", "paths"]
@@ -158,7 +171,7 @@ def _called(copy: PrivateCopy, call: Callable[[], Any], paths: int) -> dict[str,
     finally:
         if setting is not None and setting.faults:
             raise setting.faults[0]
-    return {name: _column(values, name, paths, copy) for name, values in _named(result).items()}
+    return {name: _column(values, name, paths, copy) for name, values in quantities_of(result).items()}
 
 
 def _called_singly(copy: PrivateCopy, call: Callable[[int], Any], paths: int) -> dict[str, npt.NDArray[np.float64]]:
@@ -171,7 +184,7 @@ def _called_singly(copy: PrivateCopy, call: Callable[[int], Any], paths: int) ->
     with np.errstate(all="ignore"):
         for path in range(paths):
             try:
-                result = _named(call(path))
+                result = quantities_of(call(path))
             finally:
                 if setting is not None and setting.faults:
                     raise setting.faults[0]
@@ -185,11 +198,11 @@ def _called_singly(copy: PrivateCopy, call: Callable[[int], Any], paths: int) ->
     }
 
 
-def _named(result: Any) -> Mapping[str, Any]:
-    """Return what the kernel returned as a mapping of quantities."""
+def quantities_of(result: Any) -> Mapping[str, Any]:
+    """Return what the kernel returned as a mapping of quantities; KernelError where it is empty or has other names."""
     named = result if isinstance(result, Mapping) else {SINGLE: result}
     if not named:
-        raise KernelError(f"the kernel returned an empty mapping; {_ACCEPTED}")
+        raise KernelError(f"the kernel returned an empty mapping; {ACCEPTED}")
     for name in named:
         if not isinstance(name, str) or not name:
             raise KernelError(f"the kernel returned a quantity named {name!r}; accepted: names that are strings")
@@ -212,7 +225,7 @@ def _constants(values: list[Any], name: str, copy: PrivateCopy) -> list[Any]:
         place = f"{code.co_filename}:{code.co_firstlineno}: " if code else ""
         raise setting.fault(
             EscapeError,
-            f"{place}results{_label(name)} of {len(values)} paths are {different} different plain numbers that "
+            f"{place}results{label_of(name)} of {len(values)} paths are {different} different plain numbers that "
             f"{setting.arithmetic.format.name} does not have, the first is that of path {next(iter(strange))}: "
             "they did not go through the emulated arithmetic; "
             f"accepted: values of the state, and at most {_MOST_CONSTANTS} constants",
@@ -230,8 +243,8 @@ def _number(value: Any, name: str, copy: PrivateCopy) -> Any:
     """Return the carrier of one path's quantity, a number or an array of one; marked where it is none of the state."""
     carrier = _carrier(value, name, copy)
     if np.size(carrier) != 1 or np.asarray(carrier).dtype.kind not in "biuf":
-        described = f"an array of shape {np.shape(carrier)}" if np.ndim(carrier) else _described(carrier)
-        raise KernelError(f"the kernel returned {described}{_label(name)}; {_ACCEPTED_ONE}")
+        what = f"an array of shape {np.shape(carrier)}" if np.ndim(carrier) else described(carrier)
+        raise KernelError(f"the kernel returned {what}{label_of(name)}; {_ACCEPTED_ONE}")
     number = carrier.reshape(())[()] if isinstance(carrier, np.ndarray) else carrier
     plain = copy.setting is not None and not isinstance(value, Wrapped)
     return _Plain(number) if plain and np.asarray(number).dtype.kind == "f" else number
@@ -265,23 +278,27 @@ def _carrier(values: Any, name: str, copy: PrivateCopy) -> Any:
     if not isinstance(values, Wrapped):
         return values
     if values._setting is not copy.setting:
-        what = f"the kernel returned a value of another run{_label(name)}: a cache of it outlives the run"
+        what = f"the kernel returned a value of another run{label_of(name)}: a cache of it outlives the run"
         raise SettingsMixedError(what)
     return values._carrier
 
 
-def _label(name: str) -> str:
+def label_of(name: str) -> str:
+    """Return how a message names a quantity: not at all where it is the only one."""
     return "" if name == SINGLE else f" as {name!r}"
 
 
+def check_shape(values: npt.NDArray[Any], label: str, paths: int) -> None:
+    """Raise KernelError unless a quantity has one value for each path."""
+    if values.shape != (paths,):
+        raise KernelError(f"the kernel returned an array of shape {values.shape}{label} for {paths} paths; {ACCEPTED}")
+
+
 def _column(values: Any, name: str, paths: int, copy: PrivateCopy) -> npt.NDArray[np.float64]:
-    carrier, label = _carrier(values, name, copy), _label(name)
+    carrier, label = _carrier(values, name, copy), label_of(name)
     if not isinstance(carrier, np.ndarray):
-        raise KernelError(f"the kernel returned {_described(carrier)}{label}; {_ACCEPTED}")
-    if carrier.shape != (paths,):
-        raise KernelError(
-            f"the kernel returned an array of shape {carrier.shape}{label} for {paths} paths; {_ACCEPTED}"
-        )
+        raise KernelError(f"the kernel returned {described(carrier)}{label}; {ACCEPTED}")
+    check_shape(carrier, label, paths)
     if carrier.dtype.kind not in "biuf":
         raise KernelError(f"the kernel returned an array of dtype {carrier.dtype}{label}; accepted: real numbers")
     # Booleans and integers are exact; of floats each must be a value of the format, also one that is wrapped.
@@ -295,5 +312,6 @@ def _column(values: Any, name: str, paths: int, copy: PrivateCopy) -> npt.NDArra
     return carrier.astype(np.float64)
 
 
-def _described(value: Any) -> str:
+def described(value: Any) -> str:
+    """Return what a message calls a result of the wrong kind."""
     return "nothing (None)" if value is None else f"a {type(value).__name__}"

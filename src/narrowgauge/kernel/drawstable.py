@@ -53,6 +53,8 @@ class DrawsTable(Table, frozen=True, kw_only=True, forbid_unknown_fields=True):
             msgspec.structs.force_setattr(self, own, default)
         if self.cells is not None and self.cells.bit_count() != 1:
             self.refuse("cells", f"{self.cells} is not a power of two")
+        if self.degree is not None and self.degree % 2 == 0:  # its best polynomial is that of the degree below
+            self.refuse("degree", f"{self.degree} is not odd")
         for name in self.formats:
             if name not in FORMATS:
                 self.refuse("formats", f"{shown(name)} is not a format")

@@ -23,6 +23,7 @@ import numpy.typing as npt
 from narrowgauge.arithmetic.formats import Format
 from narrowgauge.errors import AuditFileError, KernelError
 from narrowgauge.kernel.auditfile import AuditFile
+from narrowgauge.kernel.audittables import axes_of
 from narrowgauge.kernel.owntables import LibraryTable
 
 __all__ = ["Library"]
@@ -41,7 +42,7 @@ class Library:
 
     def __init__(self, file: AuditFile, table: LibraryTable) -> None:
         self._table, self._source = table, file.source
-        self._axes = [axis.strip() for axis in file.kernel.layout.split(",")]
+        self._axes = axes_of(file.kernel.layout)
         self.path = (file.folder / table.path).resolve()
         if not self.path.is_file():
             what = f"no such file: {self.path}"

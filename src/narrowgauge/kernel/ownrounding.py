@@ -17,13 +17,12 @@ from narrowgauge.arithmetic.formats import FORMATS, Format
 from narrowgauge.arithmetic.rounding import Floats
 from narrowgauge.dispatch.copies import PrivateCopy
 from narrowgauge.errors import KernelError
-from narrowgauge.kernel.contract import SINGLE, arranged
+from narrowgauge.kernel.contract import ACCEPTED, arranged, check_shape, described, label_of, quantities_of
 from narrowgauge.kernel.loading import KernelSource, private_copy
 from narrowgauge.kernel.owntables import OWN_FORMATS
 
 __all__ = ["evaluate_own", "own_copy", "timed_own"]
 
-_ACCEPTED = "accepted: an array of shape (paths,), or a mapping of names to such arrays"
 _TYPES: dict[np.dtype[Any], Format] = {FORMATS[name].storage: FORMATS[name] for name in OWN_FORMATS}
 
 
@@ -52,10 +51,7 @@ def evaluate_own(
     """
     with np.errstate(all="ignore"):
         result = copy.function(arranged(draws, layout).astype(form.storage), step, **keywords)
-        named = result if isinstance(result, Mapping) else {SINGLE: result}
-        if not named:
-            raise KernelError(f"the kernel returned an empty mapping; {_ACCEPTED}")
-        found = {name: _column(values, name, draws.shape[-1], form) for name, values in named.items()}
+        found = {name: _column(values, name, draws.shape[-1], form) for name, values in quantities_of(result).items()}
     if kernel.foreign is not None and form.name == "float64":
         for name, values in found.items():
             if (wrong := np.isnan(values)).any():
@@ -83,24 +79,21 @@ def timed_own(
         return time.perf_counter() - start
 
 
-def _column(values: Any, name: Any, paths: int, form: Format) -> npt.NDArray[np.float64]:
-    if not isinstance(name, str) or not name:
-        raise KernelError(f"the kernel returned a quantity named {name!r}; accepted: names that are strings")
-    label = "" if name == SINGLE else f" as {name!r}"
+def _column(values: Any, name: str, paths: int, form: Format) -> npt.NDArray[np.float64]:
+    label = label_of(name)
     if values is None:
-        raise KernelError(f"the kernel returned nothing (None){label}; {_ACCEPTED}")
+        raise KernelError(f"the kernel returned {described(values)}{label}; {ACCEPTED}")
     try:
         array = np.asarray(values)
     except (TypeError, ValueError, RuntimeError) as problem:
-        what = f"the kernel returned a {type(values).__name__}{label} that np.asarray does not convert ({problem})"
-        raise KernelError(f"{what}; {_ACCEPTED}") from None
-    if array.shape != (paths,):
-        raise KernelError(f"the kernel returned an array of shape {array.shape}{label} for {paths} paths; {_ACCEPTED}")
+        what = f"the kernel returned {described(values)}{label} that np.asarray does not convert ({problem})"
+        raise KernelError(f"{what}; {ACCEPTED}") from None
+    check_shape(array, label, paths)
     if array.dtype.kind not in "biu":
         held = _TYPES.get(array.dtype.newbyteorder("="))
         if held is None:
             raise KernelError(f"the kernel returned an array of dtype {array.dtype}{label}; accepted: real numbers")
-        if held.precision < form.precision or held.emax < form.emax:
+        if not held.includes(form):
             raise KernelError(
                 f"the kernel got its draws in {form.name} and returned {held.name}{label}, which does not hold all "
                 f"numbers of {form.name}; accepted: {form.name} or a wider type (some array libraries narrow float64 "

@@ -7,14 +7,25 @@ import traceback
 from collections.abc import Iterator
 from contextlib import contextmanager
 
+from narrowgauge.dispatch.setting import Setting
 from narrowgauge.errors import AuditFileError, DispatchError, KernelError, RaisedElsewhereError, said
 
-__all__ = ["OF_THE_MACHINE", "Kept", "kept_apart", "own_traceback", "raised", "whole_traceback", "with_place"]
+__all__ = [
+    "HERE",
+    "OF_THE_MACHINE",
+    "Kept",
+    "innermost_of",
+    "kept_apart",
+    "own_traceback",
+    "raised",
+    "whole_traceback",
+    "with_place",
+]
 
 # What is for want of memory, disk or files says nothing about a format, and another run may not meet it.
 OF_THE_MACHINE = (MemoryError, OSError)
 _LONGEST = 65536  # characters of a traceback
-_HERE = os.path.join(os.path.dirname(os.path.dirname(os.path.abspath(__file__))), "")
+HERE = os.path.join(os.path.dirname(os.path.dirname(os.path.abspath(__file__))), "")  # this package's folder
 
 
 class Kept:
@@ -65,6 +76,13 @@ def raised(problem: BaseException, level: int | None = None, arm: str | None = N
     return KernelError(f"the kernel raised {type(problem).__name__}: {said(problem)}{but}", level=level, arm=arm)
 
 
+def innermost_of(problem: BaseException, setting: Setting | None) -> traceback.FrameSummary | None:
+    """Return the innermost frame in the user's modules that an exception came through; None without one."""
+    files = setting.files if setting is not None else set()
+    frames = [frame for frame in traceback.extract_tb(problem.__traceback__) if frame.filename in files]
+    return frames[-1] if frames else None
+
+
 def own_traceback(problem: BaseException) -> str:
     """Return a traceback without the frames of this package, or "" if none is left; as it came from another process."""
     if isinstance(problem, RaisedElsewhereError):
@@ -91,7 +109,7 @@ def _own(found: traceback.TracebackException) -> str:
     waiting, kept = [found], 0
     while waiting:
         one = waiting.pop()
-        one.stack[:] = [frame for frame in one.stack if not os.path.abspath(frame.filename).startswith(_HERE)]
+        one.stack[:] = [frame for frame in one.stack if not os.path.abspath(frame.filename).startswith(HERE)]
         kept += len(one.stack)
         waiting += [
             linked for linked in (one.__cause__, one.__context__, *(one.exceptions or ())) if linked is not None

@@ -17,9 +17,9 @@ import msgspec
 
 from narrowgauge.arithmetic.formats import FORMATS
 
-__all__ = ["NARROW_FORMATS", "RULES", "Rule", "Table", "TableError", "check_run", "dotted", "kind_of", "shown"]
+__all__ = ["RULES", "Rule", "Table", "TableError", "check_run", "dotted", "kind_of", "shown"]
 
-NARROW_FORMATS = tuple(name for name in FORMATS if name != "float64")
+_NARROW = tuple(name for name in FORMATS if name != "float64")
 
 
 class TableError(ValueError):
@@ -86,7 +86,7 @@ RULES: dict[str, Rule] = {
     "target.worthwhile": Rule(accepted="a finite number of 1 or more", low=1.0),
     "target.largest_correction": Rule(accepted=_BY_QUANTITY, low=0.0, open_low=True),
     "formats.today": Rule(accepted=", ".join(FORMATS)),
-    "formats.narrow": Rule(accepted=f"an array of one or more of {', '.join(NARROW_FORMATS)}"),
+    "formats.narrow": Rule(accepted=f"an array of one or more of {', '.join(_NARROW)}"),
     "formats.wide": Rule(accepted=f"an array of {', '.join(FORMATS)}"),
     "formats.schemes": Rule(accepted='an array of one or both of "alone", "split"'),
     "draws.approximate": Rule(
@@ -94,7 +94,7 @@ RULES: dict[str, Rule] = {
     ),
     "draws.cells": Rule(accepted=f"a power of two from 2 to {2**20}", low=2, high=2**20),
     "draws.intervals": Rule(accepted="an integer from 1 to 52", low=1, high=52),
-    "draws.degree": Rule(accepted="an integer from 1 to 31", low=1, high=31),
+    "draws.degree": Rule(accepted="an odd integer from 1 to 31", low=1, high=31),
     "draws.formats": Rule(accepted=f"an array of one or more of {', '.join(FORMATS)}"),
     "cost.float64": _POSITIVE,
     "cost.float32": _POSITIVE,

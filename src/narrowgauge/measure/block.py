@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import time
-import traceback
 from collections.abc import Iterable
 from dataclasses import dataclass
 from typing import Final, Literal
@@ -22,7 +21,7 @@ from narrowgauge.kernel.approximation import approximation_of
 from narrowgauge.kernel.arms import Arm, Kind
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.loading import KernelSource
-from narrowgauge.kernel.raised import kept_apart, raised
+from narrowgauge.kernel.raised import innermost_of, kept_apart, raised
 from narrowgauge.measure.arms import REFERENCE, arms_of, pairs_of
 from narrowgauge.measure.calls import Caller
 from narrowgauge.measure.drawplan import DrawPlan, plan_draws
@@ -205,9 +204,7 @@ class BlockRunner:
 
     def _raised(self, problem: BaseException, copy: PrivateCopy | None) -> Raised:
         """Return an exception as data, with the innermost line in the user's modules."""
-        files = copy.setting.files if copy is not None and copy.setting is not None else set()
-        frames = [f for f in traceback.extract_tb(problem.__traceback__) if f.filename in files]
-        last = frames[-1] if frames else None
+        last = innermost_of(problem, None if copy is None else copy.setting)
         return Raised(
             kind=type(problem).__name__,
             message=said(problem),

@@ -2,14 +2,14 @@
 
 from __future__ import annotations
 
-import os
 import re
 from typing import IO
+
+from narrowgauge.kernel.raised import HERE
 
 __all__ = ["innermost"]
 
 _FRAME = re.compile(r'^  File "(.+)", line (\d+) in (.+)$')
-_HERE = os.path.join(os.path.dirname(os.path.dirname(os.path.abspath(__file__))), "")
 
 
 def innermost(trace: IO[bytes]) -> str:
@@ -24,7 +24,7 @@ def innermost(trace: IO[bytes]) -> str:
     found: list[str] = []
     for line in lines:
         frame = _FRAME.match(line)
-        own = frame is not None and frame[1].startswith(_HERE)
+        own = frame is not None and frame[1].startswith(HERE)
         if found and own:
             break
         if frame is not None and not own:

@@ -25,6 +25,7 @@ from types import TracebackType
 from typing import Any, TypeVar
 
 from narrowgauge.errors import KernelError, WorkerError
+from narrowgauge.kernel.command import how_ended
 from narrowgauge.kernel.loading import WORKER
 from narrowgauge.measure.crash import innermost
 from narrowgauge.measure.engines import largest_first
@@ -308,12 +309,6 @@ def _ended(process: subprocess.Popen[bytes]) -> int:
 
 
 def _way(code: int) -> str:
-    """Return how a process ended, by its exit code."""
-    if code >= 0:
-        return f"ended with exit code {code}"
-    try:
-        name = signal.Signals(-code).name
-    except ValueError:
-        name = f"signal {-code}"
-    memory = ", as it is when memory runs out" if name == "SIGKILL" else ""
-    return f"was ended by {name}{memory}"
+    """Return how a process ended, by its exit code, and why that may be."""
+    how = how_ended(code)
+    return f"{how}, as it is when memory runs out" if how.endswith("SIGKILL") else how

@@ -6,7 +6,6 @@ nothing in the control flow depends on the state, and every arm gives with them 
 
 from __future__ import annotations
 
-import traceback
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from typing import Any
@@ -20,7 +19,7 @@ from narrowgauge.draws.tape import Tape
 from narrowgauge.errors import DispatchError, KernelError, said
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.loading import KernelSource
-from narrowgauge.kernel.raised import OF_THE_MACHINE, kept_apart, raised, with_place
+from narrowgauge.kernel.raised import OF_THE_MACHINE, innermost_of, kept_apart, raised, with_place
 from narrowgauge.measure.arms import PLAIN, REFERENCE
 from narrowgauge.measure.calls import Caller, Quantities
 
@@ -133,9 +132,8 @@ class _Trial:
             raise raised(problem, self._level, arm) from problem
         except BaseException as problem:  # written for numbers, the kernel may raise anything
             what = f"with a row of paths it raises {type(problem).__name__}: {said(problem).partition(_BREAK)[0]}"
-            setting = caller.copy.setting
-            frames = [f for f in traceback.extract_tb(problem.__traceback__) if setting and f.filename in setting.files]
-            return f"{self._file.shown(frames[-1].filename)}:{frames[-1].lineno}: {what}" if frames else what
+            last = innermost_of(problem, caller.copy.setting)
+            return f"{self._file.shown(last.filename)}:{last.lineno}: {what}" if last else what
         if observer.count:
             place = f"{self._file.shown(observer.first.file)}:{observer.first.line}: " if observer.first else ""
             return f"{place}a decision depends on the state"

@@ -130,7 +130,7 @@ def job_for(file: AuditFile, kernel: KernelSource, token: str, *, travels: bool 
     Raises AuditFileError where that `travels` to other processes, and they could not find the function by its name.
     """
     by_name = file.function is not None
-    if travels and by_name and _named(file.kernel.run, sys.modules) is not file.function:
+    if travels and by_name and _named(file.kernel.run) is not file.function:
         raise errors.AuditFileError(
             file.source,
             "kernel.run",
@@ -157,7 +157,7 @@ def _file_of(job: Job) -> AuditFile:
         try:
             with executing():
                 importlib.import_module(run.partition(":")[0])
-            function = _named(run, sys.modules)
+            function = _named(run)
         except BaseException as problem:  # whatever the user's module raises is the user's to see
             what = f"{run}: importing the module raised {type(problem).__name__}: {said(problem)}"
             raise KernelError(what) from problem
@@ -173,13 +173,13 @@ def _file_of(job: Job) -> AuditFile:
     )
 
 
-def _named(run: str, modules: dict[str, Any]) -> FunctionType | None:
+def _named(run: str) -> FunctionType | None:
     """Return the function that "module:qualified.name" stands for among imported modules, or None."""
     module, _, name = run.partition(":")
     if module == "__main__":  # every process has its own
         return None
     try:
-        found = operator.attrgetter(name)(modules[module])
+        found = operator.attrgetter(name)(sys.modules[module])
     except (KeyError, AttributeError):
         return None
     return found if isinstance(found, FunctionType) else None

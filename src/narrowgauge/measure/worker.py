@@ -19,7 +19,7 @@ from collections.abc import Callable
 from typing import Any, BinaryIO
 
 from narrowgauge.kernel.command import abandon
-from narrowgauge.measure.task import Bench, Job, attempted
+from narrowgauge.measure.task import Bench, Job, run_task
 
 __all__ = ["READY", "Asked", "serve"]
 
@@ -48,17 +48,9 @@ def serve(trace: int, driver: int, scratch: str) -> None:
     leave = functools.partial(_leave, os.getpid(), driver, scratch)
     threading.Thread(target=_read, args=(requests, waiting, leave), daemon=True).start()
     _answer(replies, READY, leave)
-    bench: Bench | None = None
     own = os.getpid()
     while (asked := waiting.get()) is not None:
-        job, task, level = asked
-
-        def at_bench(job: Job = job, task: Callable[[Bench], object] = task) -> object:
-            nonlocal bench
-            bench = bench or Bench.opened(job)
-            return task(bench)
-
-        reply = attempted(at_bench, level)
+        reply = run_task(*asked)
         if os.getpid() != own:  # a fork that the kernel let go on: the pipes' numbers may be other files' by now
             os._exit(0)
         _answer(replies, reply, leave)

@@ -152,7 +152,9 @@ def _legend(record: AuditRecord) -> list[RenderableType]:
         "breaks even": "up to this cost of a narrow step, a wide one costing 1, the scheme is worth it",
     }
     if not isinstance(record.draws, UnsetType):
-        terms["float16/approximate"] = "float16 with approximate draws, made from the same uniforms as the exact ones"
+        terms["float16/approximate"] = (
+            "float16 with approximate draws, made from the same uniforms as the exact ones, with which it competes"
+        )
         terms["arithmetic, draws, both"] = (
             "standard deviation of the correction to float64 from the format with exact draws, from float64 with "
             "approximate draws, and from the format with approximate draws"

@@ -124,7 +124,7 @@ def _sentence(record: AuditRecord, name: str, entry: DecidedEntry) -> Text:
     finest = measured_to(record)
     text = Text(f"{clean(name)}: ", style="bold")
     text.append(f"finest level where it still pays: {finest_words(entry, finest)}", style="not bold")
-    why = _ending(entry, finest, _undecided_next(record, name, entry))
+    why = _ending(record, name, finest, _undecided_next(record, name, entry))
     text.append(f"; {why}." if why else ".", style="not bold")
     if entry.decided_by is not None and len(record.quantities) > 1:
         text.append(f" The quantity {clean(entry.decided_by)} decides.", style="not bold")
@@ -166,11 +166,14 @@ def _undecided_next(record: AuditRecord, name: str, entry: DecidedEntry) -> bool
     )
 
 
-def _ending(entry: DecidedEntry, measured: int, undecided: bool) -> str:
+def _ending(record: AuditRecord, name: str, measured: int, undecided: bool) -> str:
     """Return why the paying levels end where they do, or "" if nothing is to be said."""
+    entry = record.verdict.finest_paying_level[name]
     reason = entry.reason or ""
     if reason in _ENDS or reason in _OPEN:
         words = (_OPEN if undecided else _ENDS).get(reason) or _ENDS.get(reason) or _OPEN[reason]
+        if record.arms[name].draws == "approximate":
+            words = words.replace("rounding shifts", "approximate draws and rounding shift")
         return f"on level {0 if entry.level is None else entry.level + 1} {words}"
     if reason == "extrapolated to where the error is a tenth of the variance":
         return "extrapolation ends where the variance of the error is a tenth of that of the quantity"
