@@ -12,9 +12,12 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal
 
+import msgspec
+
 from narrowgauge.conduct.account import account
 from narrowgauge.conduct.owntrial import examine_own
 from narrowgauge.conduct.run import Watcher, run
+from narrowgauge.conduct.separated import draws_entry
 from narrowgauge.conduct.trial import try_arms
 from narrowgauge.errors import AuditFileError, AuditFolderError, NarrowgaugeError
 from narrowgauge.kernel.auditfile import AuditFile, audit_file_from, read_audit_file, with_draws
@@ -170,18 +173,23 @@ def _draws(bench: Bench) -> tuple[int, Literal["sum", "none"]]:
 
 
 def try_out(file: AuditFile) -> TrialEntry:
-    """Run the identity run and one small run of every arm; nothing is written."""
+    """Run the identity run and one small run of every format, and make the approximate draws; nothing is written."""
     kernel = find_kernel(file)
     if file.kernel.rounds == "itself":
         with engine_for(file, kernel, Workers()) as engine:
             return engine.call(_own_trial)
     file = worked_out(file, kernel)
-    return try_arms(file, kernel, BlockRunner(file, kernel))
+    runner = BlockRunner(file, kernel)
+    return _with_draws(try_arms(file, kernel, runner), file, runner)
 
 
 def _own_trial(bench: Bench) -> TrialEntry:
     with pinned():
-        return examine_own(bench.file, bench.kernel, bench.runner)
+        return _with_draws(examine_own(bench.file, bench.kernel, bench.runner), bench.file, bench.runner)
+
+
+def _with_draws(trial: TrialEntry, file: AuditFile, runner: BlockRunner) -> TrialEntry:
+    return msgspec.structs.replace(trial, draws=draws_entry(file, runner.approximation))
 
 
 def _claim(place: _Folder, file: AuditFile, kernel: KernelEntry, *, replace: bool, resume: bool) -> Ledger:

@@ -2,17 +2,21 @@
 
 from __future__ import annotations
 
+import io
 import json
 from pathlib import Path
 
 import pytest
 from audit_cases import GEOMETRIC, audited, file_for
+from rich.console import Console
 
 from narrowgauge.api import Audit, audit, run_audit, try_out
 from narrowgauge.draws.approximate import Constant
 from narrowgauge.errors import AuditFileError
 from narrowgauge.measure.workers import Workers
+from narrowgauge.record.audit import TrialEntry
 from narrowgauge.record.canonical import canonical_text
+from narrowgauge.report.text import trial_text
 
 LADDER = {"finest": "4"}
 SAMPLING = {"block": "32768", "paths": "32768", "most_paths": "32768"}
@@ -193,3 +197,19 @@ def test_a_kernel_without_normals_is_refused_from_python_too(tmp_path: Path) -> 
     why = "draws.approximate: a kernel that draws for itself asks for its own distributions"
     with pytest.raises(AuditFileError, match=why):
         audit({"kernel": kernel, "ladder": ladder, "draws": {"approximate": "linear"}})
+
+
+@pytest.mark.parametrize("rounds", ["emulated", "itself"])
+def test_the_trial_run_shows_the_approximate_draws(tmp_path: Path, rounds: str) -> None:
+    """What is going to be tried, and how good it is, before anything is measured; without [draws] nothing is said."""
+    kernel = {} if rounds == "emulated" else {"rounds": '"itself"'}
+    shown = shown_of(try_out(file_for(tmp_path, GEOMETRIC, kernel=kernel, draws=DRAWS)))
+    assert "Approximate draws" in shown
+    assert "piecewise constant on 64 cells; mean square error 0.00391" in shown  # 1 less the variance
+    assert "Approximate draws" not in shown_of(try_out(file_for(tmp_path, GEOMETRIC, kernel=kernel)))
+
+
+def shown_of(trial: TrialEntry) -> str:
+    stream = io.StringIO()
+    Console(file=stream, width=120).print(trial_text(trial))
+    return stream.getvalue()

@@ -70,6 +70,13 @@ def test_a_format_that_is_storage_alone_is_found(tmp_path: Path, wide: str, narr
     assert {name: found[name] for name in narrow} == dict.fromkeys(narrow, ("result only", like))
 
 
+@pytest.mark.parametrize("work", ["own", "np.float32"])
+def test_a_plain_sum_is_told_apart_by_its_accumulator(tmp_path: Path, work: str) -> None:
+    """Nothing but additions, 32 of them: in float16, or in float32 and rounded once."""
+    found = findings(canary(tmp_path, work=work, step="x + dw"))
+    assert found["float16"] == (("rounds", None) if work == "own" else ("result only", "float32"))
+
+
 def test_a_result_that_is_not_rounded_at_all_is_found(tmp_path: Path) -> None:
     """The same without the last cast; the type of the result may be wider, but that it is no format's is said."""
     entries = canary(tmp_path, work="np.float64", end="x")
@@ -105,9 +112,9 @@ def test_a_narrower_state_with_a_wider_end_is_found_by_its_errors(tmp_path: Path
     assert found["float16"] == ("rounds", None)
 
 
-@pytest.mark.parametrize("end", ["(x > one(1)).astype(own)", "dw"])
+@pytest.mark.parametrize("end", ["(x > one(1)).astype(own)", "np.floor(x * one(20))", "dw"])
 def test_where_nothing_rounds_nothing_can_be_told(tmp_path: Path, end: str) -> None:
-    """A yes/no quantity, and one that only moves numbers."""
+    """A yes/no quantity, one that counts to some twenty, and one that only moves numbers."""
     found = findings(canary(tmp_path, end=end))
     assert {found[arm] for arm in ("bfloat16", "float16", "float32")} == {("unknown", None)}
 

@@ -230,6 +230,10 @@ def test_any_array_that_numpy_converts_will_do() -> None:
         ("return {1: dW[0]}", "level 2, arm float64: the kernel returned a quantity named 1; accepted:"),
         ("return dW[0].astype(complex)", "level 2, arm float64: the kernel returned an array of dtype complex128; acc"),
         (
+            "return np.ma.masked_less(dW[0], 0)",
+            "level 2, arm float64: the kernel returned an array with masked values; accepted:",
+        ),
+        (
             "return np.log(dW[0])",
             "level 2, arm float64: the reference is not finite for 'value', first on path ",
         ),

@@ -219,6 +219,13 @@ def test_a_program_that_is_not_there(tmp_path, monkeypatch, run, shown):
     )
 
 
+def test_a_program_that_may_not_be_executed(tmp_path, monkeypatch):
+    """A script without the right to run is there, and that is what is said."""
+    (tmp_path / "plain").write_text("#!/bin/sh\n", encoding="utf-8")
+    with pytest.raises(AuditFileError, match=r"plain may not be executed; accepted: a program that may be executed"):
+        command_for(tmp_path, "work", monkeypatch, run=["./plain"])
+
+
 def test_the_fingerprint_covers_the_files_beside_the_audit_file(tmp_path, monkeypatch):
     """Another script or argument is another kernel; a program of the system counts by its name."""
     first = command_for(tmp_path, "work", monkeypatch).digest()

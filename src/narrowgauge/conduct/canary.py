@@ -33,6 +33,7 @@ MOST_STEPS = 64  # of a path on the level of the canary, the finest such: enough
 # state that is rounded in f at every step agrees where its errors cancel, in well under nine paths of ten. Results that
 # a wider format has in f anyway, such as a payoff of 0, tell nothing and are left out; so many others are needed.
 _ALIKE, _TELLING = 0.99, 32
+_PARTS = 7  # draws of one path in the shrinking ones: as many parts of the largest
 _FEW = 5  # values of a quantity that counts something, such as a yes/no payoff: rounding rarely shows in it
 # Rounding a result once errs by a third of u |P| or so in the median; a kernel in f errs by more.
 _TOO_EXACT = 0.05
@@ -102,7 +103,8 @@ class Canary:
         once, once_small = usual.shares(quantity, form, names), small.shares(quantity, form, names)
         outside = int(np.count_nonzero(~_same(_rounded(values, form), values)))
         error = errors.get(arm, math.nan)
-        finding, like = self._narrower(arm, values, errors)
+        reference = usual.wider.get(REFERENCE, usual.own)[quantity]
+        finding, like = self._narrower(arm, values, errors, counts=_whole(reference))
         if finding is None:
             exact = usual.shares(quantity, None, names)
             finding, like = _finding((once, once_small, exact), outside, error / form.unit_roundoff)
@@ -119,9 +121,14 @@ class Canary:
             error=error / form.unit_roundoff if math.isfinite(error) else None,
         )
 
-    def _narrower(self, arm: str, values: Doubles, errors: Mapping[str, float]) -> tuple[Finding | None, str | None]:
-        """Return whether results have, or err like, a narrower format, and which; None where nothing says so."""
-        if np.unique(values[np.isfinite(values)]).size <= _FEW:
+    def _narrower(
+        self, arm: str, values: Doubles, errors: Mapping[str, float], *, counts: bool
+    ) -> tuple[Finding | None, str | None]:
+        """Return whether results have, or err like, a narrower format, and which; None where nothing says so.
+
+        Of a quantity that `counts`, whole numbers in every format, nothing can be told.
+        """
+        if np.unique(values[np.isfinite(values)]).size <= _FEW or counts:
             return "unknown", None
         narrower = [name for name in self._callers if FORMATS[arm].includes(FORMATS[name]) and name != arm]
         within = [name for name in narrower if _same(_rounded(values, FORMATS[name]), values).all()]
@@ -144,16 +151,19 @@ class Canary:
         return self._callers[arm].on_array(np.array(drawn, carrier), self._level)
 
     def _shrinking(self, arm: str, shape: tuple[int, ...]) -> npt.NDArray[np.floating]:
-        """Return draws that are the same in every step and factor, of either sign, from usual ones down to nothing."""
+        """Return draws that are alike in every step and factor, of either sign, from usual ones down to nothing.
+
+        They differ from step to step, since a number added to itself a power of two times needs no rounding.
+        """
         form, paths = FORMATS[arm], shape[-1]
         bits = form.precision + 6.0
         sizes = np.exp2(-bits * np.arange(paths) / paths) * np.where(np.arange(paths) % 2, -1.0, 1.0)
         takes, arithmetic = self._draws.takes, arithmetic_named(arm)
         if takes == "increments":
             sizes *= math.sqrt(self._file.ladder.step_size(self._level))
-        row = arithmetic.cast(0.5 + 0.5 * sizes if takes == "uniforms" else sizes)
-        row = inside(row, arithmetic) if takes == "uniforms" else row
-        return np.ascontiguousarray(np.broadcast_to(row, shape))
+        parts = 1.0 - np.arange(math.prod(shape[:-1])).reshape(*shape[:-1], 1) % _PARTS / (_PARTS + 1)
+        drawn = arithmetic.cast(0.5 + 0.5 * sizes * parts if takes == "uniforms" else sizes * parts)
+        return inside(drawn, arithmetic) if takes == "uniforms" else drawn
 
 
 def _finding(shares: tuple[_Shares, _Shares, _Shares], outside: int, error: float) -> tuple[Finding, str | None]:
@@ -165,7 +175,7 @@ def _finding(shares: tuple[_Shares, _Shares, _Shares], outside: int, error: floa
     alike = [name for name in once if _alike(once[name]) and _alike(once_small[name])]
     if alike:
         return "result only", max(alike, key=lambda name: once[name] or 0.0)
-    if not once or None in once.values():
+    if not once or None in once.values() or any(_alike(once[name]) and once_small[name] is None for name in once):
         return "unknown", None
     if error < _TOO_EXACT:
         return ("wider", None) if outside else ("unknown", None)
@@ -174,6 +184,10 @@ def _finding(shares: tuple[_Shares, _Shares, _Shares], outside: int, error: floa
 
 def _precision(arm: str) -> int:
     return FORMATS[arm].precision
+
+
+def _whole(values: Doubles) -> bool:
+    return bool(np.all(values[np.isfinite(values)] % 1.0 == 0.0))
 
 
 def _rounded(values: Doubles, form: Format) -> Doubles:

@@ -51,7 +51,8 @@ class Command:
         beside = os.path.basename(first) != first  # has a folder in it
         self._program = str(file.folder / first) if beside else shutil.which(first)
         if self._program is None or not os.access(self._program, os.X_OK) or os.path.isdir(self._program):
-            what = f"no program {self._program or first}"
+            there = self._program is not None and os.path.exists(self._program)
+            what = f"{self._program} may not be executed" if there else f"no program {self._program or first}"
             raise AuditFileError(file.source, "command.run", what, "a program that may be executed, and its arguments")
 
     def digest(self) -> str:

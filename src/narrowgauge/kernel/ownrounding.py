@@ -83,6 +83,8 @@ def _column(values: Any, name: str, paths: int, form: Format) -> npt.NDArray[np.
     label = label_of(name)
     if values is None:
         raise KernelError(f"the kernel returned {described(values)}{label}; {ACCEPTED}")
+    if np.ma.is_masked(values):
+        raise KernelError(f"the kernel returned an array with masked values{label}; {ACCEPTED}")
     try:
         array = np.asarray(values)
     except (TypeError, ValueError, RuntimeError) as problem:

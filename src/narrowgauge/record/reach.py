@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import Literal
 
 from narrowgauge.record.canary import CanaryEntry
+from narrowgauge.record.draws import DrawsEntry
 from narrowgauge.record.plan import Entry
 
 __all__ = [
@@ -124,7 +125,8 @@ class TrialEntry(Entry, frozen=True, kw_only=True):
     """A trial run: whether float64 through the whole machinery gave plain NumPy's bits, and what stopped any arm.
 
     `range` is None where float64 was stopped before it had met all constants. A kernel that rounds for itself has a
-    `canary` and neither reach nor range; `identical` then says that two runs gave the same bits.
+    `canary` and neither reach nor range; `identical` then says that two runs gave the same bits. `draws` are the
+    approximate ones, which are made but not tried.
     """
 
     identical: bool
@@ -132,3 +134,4 @@ class TrialEntry(Entry, frozen=True, kw_only=True):
     range: RangeEntry | None
     canary: list[CanaryEntry] | None = None
     faults: list[FaultEntry]
+    draws: DrawsEntry | None = None

@@ -106,6 +106,7 @@ def trial_text(trial: TrialEntry) -> Group:
         parts.append(Text("No operation was seen."))
     lines = constant_lines(trial.range)
     parts += [Text(), *_heading(_CONSTANTS), *(_bullets(lines) if lines else [Text(no_constants(trial.range))])]
+    parts += _approximate(trial)
     notes = reach_notes(trial.reach)
     if notes:
         parts += [Text(), *_heading("Remarks"), *_bullets(notes)]
@@ -116,7 +117,13 @@ def _own_text(trial: TrialEntry) -> Group:
     """Return what the trial of a kernel that rounds for itself showed."""
     parts: list[RenderableType] = [Text("A second run gives the same bits in every format."), Text(), *_raised(trial)]
     parts += [*_heading(_CANARY), *_bullets(canary_lines(trial.canary or ())), Text(), Text(CANNOT_SHOW)]
-    return Group(*parts)
+    return Group(*parts, *_approximate(trial))
+
+
+def _approximate(trial: TrialEntry) -> list[RenderableType]:
+    if trial.draws is None:
+        return []
+    return [Text(), *_heading("Approximate draws, measured in the audit"), Text(approximate_draws(trial.draws))]
 
 
 def _raised(trial: TrialEntry) -> list[RenderableType]:
