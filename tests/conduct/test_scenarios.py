@@ -12,6 +12,8 @@ from audit_cases import GEOMETRIC, file_for
 from narrowgauge.conduct.scenarios import block_of, looks_of, scenarios_of
 from narrowgauge.draws.streams import Purpose, uniforms
 from narrowgauge.kernel.auditfile import AuditFile
+from narrowgauge.kernel.loading import find_kernel
+from narrowgauge.measure.block import BlockRunner
 
 
 def boxed(folder: Path, sides: int, seed: int = 1, **domain: str) -> AuditFile:
@@ -85,3 +87,29 @@ def test_scenarios_have_draws_of_their_own() -> None:
     audit = {uniforms(1, Purpose.AUDIT, level, block, (4,)).tobytes() for level, block, _ in keys}
     assert len(drawn) == len(keys)
     assert not drawn & audit
+
+
+@pytest.mark.parametrize("takes", ["increments", "rng"])
+def test_a_scenarios_runner_has_draws_and_parameters_of_its_own(tmp_path: Path, takes: str) -> None:
+    """Other numbers than the audit and than any other scenario, the same again for the same one, in smaller blocks."""
+    source = "def value(dW, h, *, p0):\n    return p0 + dW.sum(axis=0)\n"
+    if takes == "rng":
+        source = (
+            "def value(rng, h, *, steps, paths, p0):\n"
+            "    return p0 + sum(h**0.5 * rng.standard_normal(paths) for _ in range(steps))\n"
+        )
+    tables = {"kernel": {"takes": f'"{takes}"'}, "sampling": {"block": "2048"}, "parameters": {"p0": "0.0"}}
+    file = file_for(tmp_path, source, **tables)
+    runner = BlockRunner(file, find_kernel(file))
+    elsewhere = [runner.elsewhere(number, {"p0": 8.0}, 1024) for number in (1, 2, 1)]
+    means = [one.run(2, 0).quantities["value"].values["float64"].moments.mean.tobytes() for one in elsewhere]
+    assert means[0] == means[2] != means[1]
+    assert runner.paths(2) == 2048
+    tally = elsewhere[0].run(2, 1)
+    assert tally.paths == 1024
+    # Of 1,024 standard normals: 5 standard errors either side, a false alarm in 2 million.
+    assert abs(tally.quantities["value"].values["float64"].moments.average - 8.0) < 5 / 32
+    own = runner.run(2, 0).quantities["value"].values["float64"].moments
+    assert abs(own.average) < 5 / 45
+    first = runner.elsewhere(1, {"p0": 0.0}, 2048).run(2, 0).quantities["value"].values["float64"].moments
+    assert first.mean.tobytes() != own.mean.tobytes()
