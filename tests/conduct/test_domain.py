@@ -3,9 +3,11 @@
 from __future__ import annotations
 
 import signal
+import sqlite3
 import subprocess
 import sys
 from collections.abc import Sequence
+from contextlib import closing
 from pathlib import Path
 from typing import Any
 
@@ -17,6 +19,7 @@ from narrowgauge.api import run_audit
 from narrowgauge.conduct.run import Plan
 from narrowgauge.errors import KernelError
 from narrowgauge.kernel.auditfile import AuditFile
+from narrowgauge.measure.store import LEDGER
 from narrowgauge.measure.workers import Workers
 from narrowgauge.record.audit import AuditRecord
 from narrowgauge.record.canonical import canonical_text
@@ -39,7 +42,7 @@ VOLATILITY = "volatility = { low = 0.1, high = 0.4 }"
 needs_signals = pytest.mark.skipif(sys.platform == "win32", reason="signals are sent otherwise there")
 
 
-def boxed(source: str = PRICE, *sides: str, **domain: str) -> dict[str, Any]:
+def boxed(*sides: str, **domain: str) -> dict[str, Any]:
     """Tables of an audit of two levels whose box has these sides, and 8 scenarios beside the corners."""
     return {
         "parameters": {"spot": "100.0", "volatility": "0.2"},
@@ -55,7 +58,7 @@ def domain_of(record: AuditRecord) -> DomainEntry:
 
 
 def explored(folder: Path, source: str, *sides: str, **domain: str) -> DomainEntry:
-    return domain_of(audited(folder, source, **boxed(source, *sides, **domain)).record)
+    return domain_of(audited(folder, source, **boxed(*sides, **domain)).record)
 
 
 def text(record: AuditRecord) -> str:
@@ -142,7 +145,7 @@ def test_what_is_undecided_is_no_pass(tmp_path: Path) -> None:
     source = PRICE.replace("return x / spot", "return np.where(x > spot, 1.0, 0.0)").replace("+ volatility", "+ 0.2")
     source = source.replace("x > spot", "x > volatility * spot")
     sides = "volatility = { low = 0.9, high = 1.9 }"
-    tables = boxed(source, sides)
+    tables = boxed(sides)
     tables |= {"parameters": {"spot": "100.0", "volatility": "1.0"}, "ladder": {"finest": "0"}}
     tables |= {"sampling": {"most_paths": "65536", "paths": "65536", "block": "65536"}}
     domain = domain_of(audited(tmp_path, source, **tables).record)
@@ -158,7 +161,7 @@ def test_what_is_undecided_is_no_pass(tmp_path: Path) -> None:
 
 def test_where_the_verdict_is_open_the_reference_is_tried(tmp_path: Path) -> None:
     """float32 costs here what float64 does, so that nothing pays; the reference alone passes everywhere."""
-    tables = boxed(PRICE, NARROW)
+    tables = boxed(NARROW)
     tables |= {"formats": {"narrow": '["float32"]', "wide": '["float64"]'}, "cost": {"float64": "1", "float32": "1"}}
     domain = domain_of(audited(tmp_path, PRICE, **tables).record)
     assert [(level.scheme.narrow, level.outcome) for level in domain.levels] == [("float64", "passes")] * 2
@@ -166,13 +169,14 @@ def test_where_the_verdict_is_open_the_reference_is_tried(tmp_path: Path) -> Non
 
 def test_without_a_box_there_is_no_domain(tmp_path: Path) -> None:
     """The record has null there."""
-    assert audited(tmp_path, PRICE, parameters={"spot": "100.0", "volatility": "0.2"}).record.domain is None
+    tables = {name: table for name, table in boxed(NARROW).items() if name != "domain"}
+    assert audited(tmp_path, PRICE, **tables).record.domain is None
 
 
 def test_two_workers_give_the_same_bits(tmp_path: Path) -> None:
     """Scenarios included, whichever worker runs which, and a kernel that raises in them too."""
     source = PRICE.replace("    x = np", "    if spot > 5e4:\n        raise ValueError('too dear')\n    x = np")
-    file = file_for(tmp_path, source, **boxed(source, WIDE, VOLATILITY))
+    file = file_for(tmp_path, source, **boxed(WIDE, VOLATILITY))
     alone, two = (run_audit(file, None, workers=Workers(number=number)).record for number in (1, 2))
     assert {one.reason for one in failed(domain_of(alone))} >= {"reference"}
     assert text(alone) == text(two)
@@ -189,7 +193,7 @@ def test_the_scenarios_of_a_generator_couple_as_the_audit_does(tmp_path: Path) -
             x = x + volatility * np.sqrt(h) * x * rng.standard_normal(paths)
         return x / spot
     """
-    tables = boxed(source, NARROW) | {"kernel": {"takes": '"rng"'}}
+    tables = boxed(NARROW) | {"kernel": {"takes": '"rng"'}}
     domain = domain_of(audited(tmp_path, source, **tables).record)
     assert not failed(domain)
 
@@ -198,7 +202,7 @@ def test_want_of_memory_is_no_result(tmp_path: Path) -> None:
     """It ends the audit, as it does at the audited point; nothing is refused for it."""
     source = PRICE.replace("    x = np", "    if spot > 150.0:\n        raise MemoryError\n    x = np")
     with pytest.raises(KernelError, match="MemoryError"):
-        run_audit(file_for(tmp_path, source, **boxed(source, NARROW)), None)
+        run_audit(file_for(tmp_path, source, **boxed(NARROW)), None)
 
 
 class Log:
@@ -225,7 +229,7 @@ class Log:
 def test_a_watcher_hears_of_scenarios(tmp_path: Path) -> None:
     """The plan counts them, each look says how many draw more, and all path steps that it says are done."""
     log = Log()
-    record = run_audit(file_for(tmp_path, PRICE, **boxed(PRICE, WIDE)), None, watcher=log).record
+    record = run_audit(file_for(tmp_path, PRICE, **boxed(WIDE)), None, watcher=log).record
     plan = log.plans[0].domain
     assert plan is not None
     assert (plan.drawn, plan.corners, plan.paths, plan.most_paths, plan.kept) == (8, 2, 1024, 2048, 0)
@@ -270,7 +274,7 @@ run_audit(read_audit_file(Path(sys.argv[1])), Path(sys.argv[2]), resume=True, wa
 @needs_signals
 def test_an_audit_that_is_killed_among_its_scenarios_goes_on_there(tmp_path: Path) -> None:
     """Those that were finished are not run again, and the end is that of an undisturbed audit."""
-    file = file_for(tmp_path, PRICE, **boxed(PRICE, WIDE, VOLATILITY))
+    file = file_for(tmp_path, PRICE, **boxed(WIDE, VOLATILITY))
     out = tmp_path / "out"
     command = [sys.executable, "-c", DRIVER, file.source, str(out), "5"]
     with subprocess.Popen(command, stdout=subprocess.PIPE, text=True) as driver:
@@ -278,12 +282,24 @@ def test_an_audit_that_is_killed_among_its_scenarios_goes_on_there(tmp_path: Pat
         assert driver.stdout.readline() == ".\n"
         driver.kill()
     assert driver.returncode == -signal.SIGKILL
-    log = Log()
+    log, before = Log(), looks(out)
+    assert len(before) == 5
     resumed = run_audit(file, out, resume=True, watcher=log).record
+    # The seconds that a look took are those of its only run.
+    assert before.items() <= looks(out).items()
+    assert len(looks(out)) > 5
     assert resumed.provenance["resumed_looks"] == 5
     assert log.plans[0].domain is not None
     assert log.plans[0].domain.kept == 5
     assert text(resumed) == text(undisturbed(file))
+
+
+def looks(folder: Path) -> dict[tuple[int, int], float]:
+    """Seconds by scenario and look, as the ledger has them."""
+    with closing(sqlite3.connect(folder / LEDGER)) as connection:
+        return {
+            tuple(key): seconds for *key, seconds in connection.execute("SELECT scenario, look, seconds FROM looks")
+        }
 
 
 def undisturbed(file: AuditFile) -> AuditRecord:

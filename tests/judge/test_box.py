@@ -66,6 +66,12 @@ def test_a_point_beside_the_audited_one_is_cut_on_the_other_side() -> None:
     assert claimed([UNIT, UNIT], (0.5, 0.5), [], [(0.5, 1.0)]) == ((0.0, 1.0), (0.0, 0.5))
 
 
+def test_corners_share_their_coordinates() -> None:
+    """A corner that fails is cut off below the corners that pass beside it; of two cuts as good the first is taken."""
+    passing = [(1.0, 0.0), (0.0, 1.0), (0.0, 0.0), (0.9, 0.9)]
+    assert claimed([UNIT, UNIT], (0.5, 0.5), passing, [(1.0, 1.0)]) == ((0.0, 0.9), (0.0, 1.0))
+
+
 def test_hundreds_of_failing_scenarios_are_cut_off_in_time() -> None:
     """The search gives up on the largest box before it gives up on an answer, which is as safe as any other."""
     chance = random.Random(7)
