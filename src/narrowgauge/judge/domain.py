@@ -84,7 +84,7 @@ def judge_scheme(
     tally: LevelTally, judged: LevelJudgement, file: AuditFile, alpha: float, scheme: Scheme
 ) -> SchemeFigures:
     """Return how a scheme does on a level by the table above; `judged` is the judgement of the same tally."""
-    found = admission(tally, file, alpha, scheme)
+    found = admission(tally, judged.views, file, alpha, scheme)
     arms = [arms[scheme.narrow] for arms in judged.arms.values() if scheme.narrow in arms]
     edges = [arm.edge for arm in arms if arm.edge is not None]
     edge = min(edges, key=lambda one: one.low, default=None)

@@ -101,9 +101,10 @@ def judge_level(tally: LevelTally, file: AuditFile, alpha: float) -> LevelJudgem
     return LevelJudgement(level=tally.level, arms=arms, best=best, joint=court.joint(best), views=views)
 
 
-def admission(tally: LevelTally, file: AuditFile, alpha: float, scheme: Scheme) -> Admission:
+def admission(
+    tally: LevelTally, views: Mapping[str, LevelView], file: AuditFile, alpha: float, scheme: Scheme
+) -> Admission:
     """Return whether a scheme may be used on a level; the reference alone and today alone are taken as they are."""
-    views = {name: _view(tally, file, name) for name in tally.quantities}
     return _Court(tally=tally, file=file, alpha=alpha, views=views).admission(scheme, rival=True)
 
 
