@@ -19,7 +19,7 @@ from narrowgauge.record.domain import (
     SpanEntry,
 )
 from narrowgauge.record.plan import SchemeEntry
-from narrowgauge.report.domain import domain_notes, domain_table
+from narrowgauge.report.domain import deciding, domain_notes, domain_table
 
 SCHEME = SchemeEntry(kind="split", narrow="float16", wide="float64")
 PASSED = ("passes", None)
@@ -83,7 +83,7 @@ CASE = domain(
 
 
 def shown(entry: DomainEntry, width: int = 80) -> str:
-    return flat(Group(*map(Text, domain_notes(entry)), domain_table(entry)), width)
+    return flat(Group(*map(Text, domain_notes(entry)), domain_table(entry), *map(Text, deciding(entry))), width)
 
 
 def test_every_scenario_that_fails_is_named() -> None:
@@ -103,6 +103,12 @@ def test_what_is_claimed_never_looks_larger_than_it_is() -> None:
     assert "With 95% confidence less than 8.94% of the box fails: 32 of 32 drawn scenarios pass." in text
     assert "Of what is claimed that is less than 9.56%." in text
     assert "0.9996" in text
+
+
+def test_the_scenario_that_decides_a_level_is_named() -> None:
+    """In the table by its number, below it with its parameters."""
+    text = shown(CASE, 200)
+    assert "0 float16 with float64 0.9996 refused: non-finite values corner 5 corner 5 (spot = 100,000)" in text
 
 
 def test_nothing_claimed_and_all_claimed_are_said() -> None:

@@ -38,7 +38,7 @@ if TYPE_CHECKING:
     from narrowgauge.conduct.run import Plan
     from narrowgauge.kernel.auditfile import AuditFile
 
-__all__ = ["domain_notes", "domain_table", "planned_domain", "scenarios_asked", "scenarios_counted"]
+__all__ = ["deciding", "domain_notes", "domain_table", "planned_domain", "scenarios_asked", "scenarios_counted"]
 
 _SHOWN = 5  # scenarios that do not pass
 _STYLES = {"passes": "bold cyan", "undecided": "magenta", "refused": "yellow"}
@@ -112,10 +112,16 @@ def domain_table(domain: DomainEntry) -> Ruled:
     )
     for level in domain.levels:
         edge = NONE if level.edge_low is None else shown_edge(level.edge_low, (1.0,))
-        by = _named(domain.scenarios[level.decided_by - 1]) if level.decided_by is not None else NONE
+        by = _name(domain.scenarios[level.decided_by - 1]) if level.decided_by is not None else NONE
         outcome = Text(_outcome(level), style=_STYLES[level.outcome])
         table.add_row(Text(str(level.level)), Text(scheme_words(level.scheme)), Text(edge), outcome, Text(by))
     return table
+
+
+def deciding(domain: DomainEntry) -> list[str]:
+    """Return the parameters of the scenarios that decide a level."""
+    numbers = sorted({level.decided_by for level in domain.levels if level.decided_by is not None})
+    return [_named(domain.scenarios[number - 1]) for number in numbers]
 
 
 def _outcome(level: DomainLevelEntry) -> str:
@@ -146,7 +152,11 @@ def _outcomes(lost: Iterable[ScenarioEntry]) -> str:
 
 def _named(scenario: ScenarioEntry) -> str:
     values = ", ".join(f"{clean(name)} = {figure(value, 4)}" for name, value in scenario.parameters.items())
-    return f"{'scenario' if scenario.kind == 'drawn' else 'corner'} {scenario.number} ({values})"
+    return f"{_name(scenario)} ({values})"
+
+
+def _name(scenario: ScenarioEntry) -> str:
+    return f"{'scenario' if scenario.kind == 'drawn' else 'corner'} {scenario.number}"
 
 
 def _lost(scenario: ScenarioEntry) -> str:

@@ -16,7 +16,7 @@ from rich.text import Text
 from narrowgauge.record.audit import AuditRecord, FaultEntry, PlanEntry, QuantityEntry, TrialEntry
 from narrowgauge.report.canary import CANNOT_SHOW, canary_lines
 from narrowgauge.report.constants import constant_lines, no_constants
-from narrowgauge.report.domain import domain_notes, domain_table
+from narrowgauge.report.domain import deciding, domain_notes, domain_table
 from narrowgauge.report.layout import Hanging
 from narrowgauge.report.notes import accumulation, format_notes, nonfinite, orders, separation_notes
 from narrowgauge.report.progress import Progress, planned_text
@@ -217,7 +217,15 @@ def _domain(record: AuditRecord) -> list[RenderableType]:
     found = record.domain
     if found is None:
         return []
-    return [*_heading("Elsewhere in the domain"), *_bullets(domain_notes(found)), Text(), domain_table(found), Text()]
+    notes = _bullets(domain_notes(found))
+    return [
+        *_heading("Elsewhere in the domain"),
+        *notes,
+        Text(),
+        domain_table(found),
+        *_bullets(deciding(found)),
+        Text(),
+    ]
 
 
 def _bounded(levels: Sequence[PlanEntry]) -> list[RenderableType]:
