@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 import signal
 import sqlite3
 import subprocess
@@ -203,6 +204,16 @@ def test_want_of_memory_is_no_result(tmp_path: Path) -> None:
     source = PRICE.replace("    x = np", "    if spot > 150.0:\n        raise MemoryError\n    x = np")
     with pytest.raises(KernelError, match="MemoryError"):
         run_audit(file_for(tmp_path, source, **boxed(NARROW)), None)
+
+
+def test_a_kernel_that_ends_its_worker_is_told_with_the_scenario(tmp_path: Path) -> None:
+    """Where it happened is said in the parameters: at the audited point the kernel does no such thing."""
+    source = PRICE.replace("    x = np", "    import os\n    if spot > 199.0:\n        os._exit(3)\n    x = np")
+    file = file_for(tmp_path, source, **boxed(NARROW))
+    with pytest.raises(KernelError) as caught:
+        run_audit(file, None, workers=Workers(timeout=600.0))
+    where = r"scenario 10 \(spot = 200\), look 1: the process that ran the kernel "
+    assert re.match(where + r".* 3, twice$", str(caught.value)), str(caught.value)
 
 
 class Log:

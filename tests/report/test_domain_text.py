@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+import io
+
 import pytest
 from msgspec.structs import replace
 from rendering import HOSTILE, flat, rendered
-from rich.console import Group
+from rich.console import Console, Group
 from rich.text import Text
 
 from narrowgauge.record.domain import (
@@ -20,6 +22,7 @@ from narrowgauge.record.domain import (
 )
 from narrowgauge.record.plan import SchemeEntry
 from narrowgauge.report.domain import deciding, domain_notes, domain_table
+from narrowgauge.report.progress import Progress
 
 SCHEME = SchemeEntry(kind="split", narrow="float16", wide="float64")
 PASSED = ("passes", None)
@@ -125,6 +128,19 @@ def test_many_that_fail_are_cut_short() -> None:
     many = replace(CASE, scenarios=[scenario(number, 1e5, ("refused", "bias")) for number in range(1, 10)])
     assert shown(many, 200).count("is refused on level 0: bias too large") == 5
     assert "4 more do not pass; audit.json has them all." in shown(many, 200)
+
+
+def test_a_bar_follows_each_look() -> None:
+    """It says how many scenarios draw more paths."""
+    stream = io.StringIO()
+    console = Console(file=stream, width=80, force_terminal=True, _environ={"TERM": "xterm"})
+    with Progress(quiet=True, console=console) as watcher:
+        watcher.scenarios(1, 5, 36, 100)
+        watcher.advanced(100)
+        watcher.scenarios(2, 5, 1, 100)
+        watcher.advanced(100)
+    assert "look 1 of 5, 36 scenarios" in stream.getvalue()
+    assert "look 2 of 5, 1 scenario " in stream.getvalue()
 
 
 @pytest.mark.parametrize("width", [40, 80, 120])
