@@ -15,6 +15,7 @@ from typing import TYPE_CHECKING, Any, Literal
 import msgspec
 
 from narrowgauge.conduct.account import account
+from narrowgauge.conduct.domain import explore
 from narrowgauge.conduct.owntrial import examine_own
 from narrowgauge.conduct.run import Watcher, run
 from narrowgauge.conduct.separated import draws_entry
@@ -132,8 +133,14 @@ def run_audit(
         outcome = run(file, kernel, watcher=watcher, engine=engine, ledger=ledger)
         resumed = len(ledger.kept) if ledger is not None else 0
         damaged = ledger.damaged if ledger is not None else 0
-        made = provenance(time.perf_counter() - start, engine.title, outcome.fingerprints, resumed, damaged)
+        domain = explore(file, outcome, engine=engine, ledger=ledger, watcher=watcher)
+        where = outcome.fingerprints if domain is None else tuple(sorted({*outcome.fingerprints, *domain.fingerprints}))
+        made = provenance(time.perf_counter() - start, engine.title, where, resumed, damaged)
+        if domain is not None:
+            made["resumed_looks"] = len(ledger.kept_looks) if ledger is not None else 0
         record = account(file, outcome, entry, made)
+        if domain is not None:
+            record = msgspec.structs.replace(record, domain=domain.entry)
         if place is not None and ledger is not None:
             _write(place, _RECORD, canonical_text(record.document()))
             _write(place, _LEVELS, levels_csv(record))

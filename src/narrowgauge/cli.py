@@ -196,10 +196,13 @@ def _audit(options: argparse.Namespace) -> int:
 
 def _try_out(file: AuditFile) -> int:
     from narrowgauge import api
+    from narrowgauge.report.domain import scenarios_asked
     from narrowgauge.report.text import trial_text
 
     trial = api.try_out(file)
     _show(trial_text(trial))
+    if file.domain is not None:
+        _show(scenarios_asked(file))
     escapes = any(fault.kind == "escape" for fault in trial.faults)
     return _USAGE if escapes or not trial.identical else 0
 

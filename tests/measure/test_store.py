@@ -216,7 +216,7 @@ def test_a_block_that_is_not_as_it_was_written_is_run_again(tmp_path: Path, colu
         ("UPDATE audit SET value = '{' WHERE name = 'asked'", "its ledger is damaged"),
         (
             "UPDATE audit SET name = 'schemb' WHERE name = 'schema'",
-            "its ledger is of another kind (unknown, not narrowgauge-blocks/2)",
+            "its ledger is of another kind (unknown, not narrowgauge-blocks/3)",
         ),
     ],
 )

@@ -112,6 +112,7 @@ PLAN = SimpleNamespace(
     seconds=40.4,
     most_seconds=1292.8,
     kept=0,
+    domain=None,
 )
 
 

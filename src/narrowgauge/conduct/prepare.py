@@ -8,6 +8,7 @@ from narrowgauge.conduct.owntrial import examine_own
 from narrowgauge.conduct.separated import draws_entry
 from narrowgauge.conduct.stepcosts import step_costs
 from narrowgauge.conduct.trial import examine
+from narrowgauge.measure.scenarios import Speed, speed
 from narrowgauge.measure.task import Bench, pinned
 from narrowgauge.record.audit import TrialEntry
 from narrowgauge.record.costs import CostEntry
@@ -26,7 +27,7 @@ class Prepared:
 
     `seconds` is the time of one path of `timed_level` in all arms, known beforehand where a kernel is run path by path:
     a block of it could take hours. `draws` are the approximate ones, if there are any; `costs` those of a step by
-    format, where they are to be measured.
+    format, where they are to be measured; `speed` that of scenarios, where there are any.
     """
 
     trial: TrialEntry
@@ -36,6 +37,7 @@ class Prepared:
     seconds: float | None
     draws: DrawsEntry | None
     costs: dict[str, CostEntry] | None
+    speed: Speed | None
 
 
 def prepare(bench: Bench, costs: dict[str, CostEntry] | None = None) -> Prepared:
@@ -43,7 +45,7 @@ def prepare(bench: Bench, costs: dict[str, CostEntry] | None = None) -> Prepared
 
     Raises what `examine` raises, or `examine_own`.
     """
-    runner, ladder = bench.runner, bench.file.ladder
+    runner, ladder, domain = bench.runner, bench.file.ladder, bench.file.domain
     timed = min(_TIMED_LEVEL, ladder.finest)
     trial = examine_own if bench.file.kernel.rounds == "itself" else examine
     with pinned():
@@ -55,4 +57,5 @@ def prepare(bench: Bench, costs: dict[str, CostEntry] | None = None) -> Prepared
             seconds=runner.seconds(timed, _TIMED_PATHS) / _TIMED_PATHS if runner.singly else None,
             draws=draws_entry(bench.file, runner.approximation),
             costs=step_costs(bench.file, runner) if bench.file.cost.measured and costs is None else costs,
+            speed=None if domain is None else speed(runner, timed, min(domain.paths, bench.file.sampling.block)),
         )

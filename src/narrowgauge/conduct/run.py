@@ -11,6 +11,7 @@ from typing import Protocol
 import msgspec
 
 from narrowgauge.conduct.prepare import prepare
+from narrowgauge.conduct.scenarios import DomainPlan, domain_plan
 from narrowgauge.conduct.stepcosts import with_costs
 from narrowgauge.errors import KernelError
 from narrowgauge.judge.schemes import LevelJudgement, judge_level
@@ -44,7 +45,8 @@ class PlannedLevel:
 class Plan:
     """What an audit will run: path steps count fine and coarse steps of every arm; seconds are an estimate.
 
-    `kept` blocks are there from before; the seconds leave them out, the path steps do not.
+    `kept` blocks are there from before; the seconds leave them out, the path steps do not. What scenarios take comes on
+    top, as `domain`.
     """
 
     levels: tuple[PlannedLevel, ...]
@@ -53,6 +55,7 @@ class Plan:
     seconds: float
     most_seconds: float
     kept: int = 0
+    domain: DomainPlan | None = None
 
 
 class Watcher(Protocol):
@@ -63,6 +66,9 @@ class Watcher(Protocol):
 
     def look(self, number: int, looks: int, levels: Sequence[int], path_steps: int) -> None:
         """Hear that a look begins: which levels draw more paths, and how many path steps that takes."""
+
+    def scenarios(self, number: int, looks: int, scenarios: int, path_steps: int) -> None:
+        """Hear that a look at so many scenarios begins, and how many path steps that takes."""
 
     def advanced(self, steps: int) -> None:
         """Hear that so many path steps are done."""
@@ -266,6 +272,12 @@ class _Conductor:
             seconds=(first - self._known(kept, looks[0])) * at_once,
             most_seconds=(most - self._known(kept, looks[-1])) * at_once,
             kept=len(kept),
+            domain=domain_plan(
+                self._file,
+                self._prepared.speed,
+                self._engine.workers,
+                () if self._ledger is None else self._ledger.kept_looks,
+            ),
         )
 
     def _seconds(self) -> float:

@@ -1,13 +1,13 @@
 """Uniforms of a block: keyed by integers, made once in float64 for all arms.
 
-A block's stream is PCG64DXSM(SeedSequence(seed, spawn_key=(purpose, level, block))). The spawn key keeps streams
-apart where a seed list [seed, level, block] can collide; a uniform is (j + 1/2) / 2^52 with j the upper 52 bits of one
-output, so that it is never 0 or 1 and its normal is finite.
+A block's stream is PCG64DXSM(SeedSequence(seed, spawn_key=(purpose, level, block))), with the number of a scenario as a
+fourth key. The spawn key keeps streams apart where a seed list [seed, level, block] can collide; a uniform is
+(j + 1/2) / 2^52 with j the upper 52 bits of one output, so that it is never 0 or 1 and its normal is finite.
 """
 
 from __future__ import annotations
 
-from enum import IntEnum
+from enum import IntEnum, unique
 
 import numpy as np
 import numpy.typing as npt
@@ -20,12 +20,14 @@ _BATCHES = 32
 GRAIN = 1024  # paths; a block is a multiple of it and is cut into 32 batches
 
 
+@unique
 class Purpose(IntEnum):
     """What a stream is for: the first integer of its key, so that no two uses see the same numbers."""
 
     AUDIT = 0
     IDENTITY = 1
     TRIAL = 2
+    SCENARIO = 5  # the key of a block, then the number of the scenario; alone it is that of the scenarios themselves
 
 
 def block_paths(block: int, steps: int, factors: int, refinement: int = 2) -> int:
@@ -53,10 +55,10 @@ def apart(paths: int, steps: int, refinement: int) -> int:
 
 
 class UniformStream:
-    """The uniforms of a block, handed out one request after the other."""
+    """The uniforms of a block, handed out one request after the other; `further` is a scenario's number, if any."""
 
-    def __init__(self, seed: int, purpose: Purpose, level: int, block: int) -> None:
-        key = np.random.SeedSequence(seed, spawn_key=(int(purpose), level, block))
+    def __init__(self, seed: int, purpose: Purpose, level: int, block: int, *further: int) -> None:
+        key = np.random.SeedSequence(seed, spawn_key=(int(purpose), level, block, *further))
         self._source = np.random.PCG64DXSM(key)
 
     def take(self, shape: tuple[int, ...]) -> npt.NDArray[np.float64]:
@@ -71,6 +73,8 @@ class UniformStream:
         return values.reshape(shape)
 
 
-def uniforms(seed: int, purpose: Purpose, level: int, block: int, shape: tuple[int, ...]) -> npt.NDArray[np.float64]:
+def uniforms(
+    seed: int, purpose: Purpose, level: int, block: int, shape: tuple[int, ...], *further: int
+) -> npt.NDArray[np.float64]:
     """Return the uniforms of a block in (0, 1), float64 of the given shape, in C order."""
-    return UniformStream(seed, purpose, level, block).take(shape)
+    return UniformStream(seed, purpose, level, block, *further).take(shape)

@@ -88,6 +88,7 @@ class LevelView:
     def __init__(self, tally: QuantityTally, costs: LevelCosts, largest_correction: float | None) -> None:
         self.tally = tally
         self.costs = costs
+        self._logarithms: dict[tuple[Scheme, bool], Doubles] = {}
         ranges = [_range(series) for series in tally.values.values()]
         ranges += [series.largest for series in tally.differences.values()]
         # Any two level differences lie no further apart than that, hence also the two in R.
@@ -105,8 +106,15 @@ class LevelView:
     def logarithm(self, scheme: Scheme, cautious: bool = False) -> Doubles:
         """Return log S^2, the cost at unit variance, over all batches first and then without each batch.
 
-        `cautious` adds four corrections of the largest size seen to the sum of squares.
+        `cautious` adds four corrections of the largest size seen to the sum of squares. Every comparison of the scheme
+        asks for it: it is computed once.
         """
+        key = scheme, cautious
+        if key not in self._logarithms:
+            self._logarithms[key] = self._logarithm(scheme, cautious)
+        return self._logarithms[key]
+
+    def _logarithm(self, scheme: Scheme, cautious: bool) -> Doubles:
         risk = self.correction(scheme)
         extra = _unseen(risk) if cautious and risk is not None else 0.0
         difference = self.tally.differences[scheme.narrow]

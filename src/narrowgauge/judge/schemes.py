@@ -29,10 +29,12 @@ from narrowgauge.measure.tally import LevelTally
 __all__ = [
     "BIAS_SHARE",
     "LEAST_EFFECTIVE_SIZE",
+    "Admission",
     "ArmJudgement",
     "LevelJudgement",
     "Reason",
     "Verdict",
+    "admission",
     "budget_levels",
     "coupled",
     "judge_level",
@@ -97,6 +99,13 @@ def judge_level(tally: LevelTally, file: AuditFile, alpha: float) -> LevelJudgem
     arms = {quantity: {name: court.judge(quantity, name) for name in file.narrow} for quantity in views}
     best = {quantity: court.best(quantity) for quantity in views}
     return LevelJudgement(level=tally.level, arms=arms, best=best, joint=court.joint(best), views=views)
+
+
+def admission(
+    tally: LevelTally, views: Mapping[str, LevelView], file: AuditFile, alpha: float, scheme: Scheme
+) -> Admission:
+    """Return whether a scheme may be used on a level; the reference alone and today alone are taken as they are."""
+    return _Court(tally=tally, file=file, alpha=alpha, views=views).admission(scheme, rival=True)
 
 
 def coupled(file: AuditFile, level: int) -> bool:

@@ -26,6 +26,7 @@ from narrowgauge.kernel.audittables import (
     TABLES,
     CommandTable,
     CostTable,
+    DomainTable,
     DrawsTable,
     FormatsTable,
     KernelTable,
@@ -41,6 +42,7 @@ from narrowgauge.kernel.audittables import (
     kind_of,
     shown,
 )
+from narrowgauge.kernel.domaintable import checked_box
 from narrowgauge.kernel.givenkeys import CHEAP, check_drawing, check_names, defaults_in_use, document, nearest, useless
 from narrowgauge.kernel.ownlimits import check_own
 from narrowgauge.kernel.owntables import with_run
@@ -83,6 +85,7 @@ class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
     function: Callable[..., object] | None
     assumed: tuple[str, ...]
     draws: DrawsTable | None = None
+    domain: DomainTable | None = None
     timed: CostTable | None = None
 
     @property
@@ -160,7 +163,8 @@ class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
             elif name in ("parameters", "target"):
                 tables[name] = copy.deepcopy(table)
         tables["assumed"] = list(self.assumed)
-        return tables if self.draws is None else {**tables, "draws": document(self.draws, without)}
+        rest = {"draws": self.draws, "domain": self.domain}
+        return tables | {name: document(table, without) for name, table in rest.items() if table is not None}
 
 
 def read_audit_file(path: Path) -> AuditFile:
@@ -284,6 +288,7 @@ def _assembled(raw: dict[str, object], source: str, folder: Path, function: Call
         function=function,
         assumed=defaults_in_use(raw),
         draws=_draws(raw),
+        domain=_table(DomainTable, checked_box(raw)) if "domain" in raw else None,
     )
     check_own(
         audit_file.kernel,

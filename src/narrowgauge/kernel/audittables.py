@@ -14,6 +14,7 @@ import msgspec
 
 from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.kernel.arms import Kind
+from narrowgauge.kernel.domaintable import DomainTable
 from narrowgauge.kernel.drawstable import DrawsTable
 from narrowgauge.kernel.owntables import CommandTable, LibraryTable
 from narrowgauge.kernel.rules import RULES, Table, TableError, check_run, dotted, kind_of, shown
@@ -23,6 +24,7 @@ __all__ = [
     "TABLES",
     "CommandTable",
     "CostTable",
+    "DomainTable",
     "DrawsTable",
     "FormatsTable",
     "KernelTable",
@@ -250,5 +252,6 @@ TABLES: dict[str, type[Table]] = {
         DrawsTable,
         CostTable,
         SamplingTable,
+        DomainTable,
     )
 }

@@ -10,6 +10,7 @@ from __future__ import annotations
 import ast
 import json
 import re
+import tomllib
 import warnings
 from collections.abc import Iterator
 from pathlib import Path, PurePath
@@ -21,6 +22,7 @@ from narrowgauge.errors import AuditFileError
 from narrowgauge.kernel.auditfile import bytes_of, most_steps
 from narrowgauge.kernel.auditparameters import check_parameter, plain
 from narrowgauge.kernel.audittables import TABLES, LadderTable, TableError, check_run, default_layout, dotted
+from narrowgauge.kernel.domaintable import domain_lines
 
 __all__ = ["draft"]
 
@@ -33,7 +35,7 @@ _TAKES_BY_NAME: tuple[tuple[str, re.Pattern[str]], ...] = (
     ("normals", re.compile(r"zs?|xis?|eps|epsilons?|.*normals?|.*gaussians?")),
     ("uniforms", re.compile(r"us?|.*uniforms?")),
 )
-_ELSEWHERE = ("kernel", "library", "command")  # written first, or in place of a Python function
+_ELSEWHERE = ("kernel", "library", "command", "domain")  # written first or last, or in place of a Python function
 _OPTIONAL = ("target", "draws", "cost")
 _INSTEAD = ("draws.intervals", "draws.degree")  # not accepted beside the value shown for draws.approximate
 _COUNTS = ("steps", "paths")  # what a kernel that draws for itself is told
@@ -68,12 +70,7 @@ _MEANINGS: dict[str, str] = {
     "draws.degree": "of polynomial, in place of cells",
     "draws.formats": "formats that are tried with them too; the default is the narrow ones",
     "cost.float64": "relative cost of one step of one path; the default is storage bits / 64",
-    "cost.float32": "the same",
-    "cost.float16": "the same",
-    "cost.bfloat16": "the same",
-    "cost.tf32": "the same",
-    "cost.e4m3": "the same",
-    "cost.e5m2": "the same",
+    **{f"cost.{name}": "the same" for name in FORMATS if name != "float64"},
     "cost.draws": "one draw",
     "cost.approximate_draws": "no default; one approximate draw, else as much as an exact one",
     "cost.path": "fixed cost of a path",
@@ -120,6 +117,7 @@ def draft(target: str) -> str:
     finest = LadderTable(horizon=1.0, finest=0).finest_within(most_steps(factors))
     values = {**_VALUES, "kernel.run": run, "ladder.finest": min(8, finest)}
     values["kernel.layout"] = default_layout(factors)
+    parameters = _parameter_lines(function, _COUNTS if takes == "rng" else ())
     lines = [
         f"# Audit file for {name}, drafted from its source: check what is guessed, and supply what is to be",
         "# filled in. A key behind a # is optional and shows its default.",
@@ -133,7 +131,7 @@ def draft(target: str) -> str:
         "",
         "[parameters]",
         "# Passed to the kernel by keyword; arrays of numbers arrive as float64 NumPy arrays.",
-        *_parameter_lines(function, _COUNTS if takes == "rng" else ()),
+        *parameters,
     ]
     left_out = {"draws", "cost.approximate_draws"} if takes in ("uniforms", "rng") else set()
     for table, record in TABLES.items():
@@ -142,7 +140,8 @@ def draft(target: str) -> str:
             header = f"# [{table}]" if table in _OPTIONAL else f"[{table}]"
             keys = [f"{table}.{key}" for key in record.__struct_fields__]
             lines += ["", header, *(_line(key, values) for key in keys if key not in left_out)]
-    return "\n".join(lines) + "\n"
+    floats = {key: value for key, value in tomllib.loads("\n".join(parameters)).items() if isinstance(value, float)}
+    return "\n".join([*lines, *domain_lines(floats)]) + "\n"
 
 
 def _function(path: Path, name: str) -> ast.FunctionDef:

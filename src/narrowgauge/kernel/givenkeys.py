@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import copy
 import difflib
 from collections.abc import Collection, Mapping
 
@@ -10,13 +9,17 @@ import msgspec
 
 from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.kernel.audittables import TABLES, Table, TableError, dotted, kind_of, shown
+from narrowgauge.kernel.domaintable import scales_assumed
 from narrowgauge.kernel.drawstable import counting_keys
 
 __all__ = ["CHEAP", "check_drawing", "check_names", "defaults_in_use", "document", "nearest", "useless"]
 
 CHEAP = "approximate_draws"  # a cost that counts with [draws] alone
 
-_ORDER = ("kernel", "library", "command", "parameters", "ladder", "target", "formats", "draws", "cost", "sampling")
+_ORDER = (
+    *("kernel", "library", "command", "parameters", "ladder", "target", "formats", "draws", "cost", "sampling"),
+    "domain",
+)
 _REQUIRED = ("kernel", "ladder")
 _OWN = ("kernel.rounds", "cost.measured")  # keys that count for a kernel that rounds for itself alone
 
@@ -64,7 +67,7 @@ def document(table: Table, without: Collection[str]) -> dict[str, object]:
     """Return a table as a plain mapping, with every default and `without` some dotted keys."""
     names = [name for name in table.__struct_fields__ if f"{table.table}.{name}" not in without]
     values = ((name, getattr(table, name)) for name in names)
-    return {name: list(value) if isinstance(value, tuple) else copy.copy(value) for name, value in values}
+    return {name: list(value) if isinstance(value, tuple) else msgspec.to_builtins(value) for name, value in values}
 
 
 def defaults_in_use(raw: Mapping[str, object]) -> tuple[str, ...]:
@@ -77,11 +80,13 @@ def defaults_in_use(raw: Mapping[str, object]) -> tuple[str, ...]:
         keys = [name for name in record.__struct_fields__ if not isinstance(given, dict) or name not in given]
         if table == "target" and given is None:
             keys = ["worthwhile"]  # the one key of it that counts without a target
-        if table in ("library", "command") and given is None:
+        if table in ("library", "command", "domain") and given is None:
             keys = []
         if table == "draws":
             keys = [name for name in keys if isinstance(given, dict) and name in counting_keys(given)]
         if table == "cost" and given is not None:
             keys = [name for name in keys if name not in FORMATS]  # a format without a cost is not used
+        if table == "domain":
+            keys += scales_assumed(given)
         assumed.extend(key for name in keys if (key := f"{table}.{name}") not in without)
     return tuple(assumed)

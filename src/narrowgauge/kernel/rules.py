@@ -114,6 +114,12 @@ RULES: dict[str, Rule] = {
         accepted="a number between 0.5 and 1, both excluded", low=0.5, high=1.0, open_low=True, open_high=True
     ),
     "sampling.seed": Rule(accepted=f"an integer from 0 to {2**63 - 1}", low=0, high=2**63 - 1),
+    "domain.parameters": Rule(
+        accepted='a table of sides by parameter, such as { low = 0.1, high = 0.4, scale = "log" }'
+    ),
+    "domain.scenarios": Rule(accepted="a power of two from 2 to 1024", low=2, high=1024),
+    "domain.paths": Rule(accepted="a multiple of 1024, at least 1024", low=1024),
+    "domain.most_paths": Rule(accepted="an integer of domain.paths or more", low=1024),
 }
 
 _KINDS: tuple[tuple[type | tuple[type, ...], str], ...] = (

@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+import copy
 import time
-from collections.abc import Iterable
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 from typing import Final, Literal
 
+import msgspec
 import numpy as np
 import numpy.typing as npt
 
@@ -64,6 +66,23 @@ class BlockRunner:
         self.arms = arms_of(audit_file.arms)
         self.pairs = pairs_of(self.arms, audit_file.formats.wide)
         self._names: tuple[int, list[str]] | None = None  # the level first run, and the quantities it has
+        self._scenario: tuple[int, ...] = ()  # its number, if the runner is one of a scenario
+
+    def elsewhere(self, scenario: int, parameters: Mapping[str, float], block: int) -> BlockRunner:
+        """Return a runner at other parameters, with draws of their own and smaller blocks, and no copies made yet.
+
+        How a kernel that draws for itself shares its draws between levels is found out at the audited point alone.
+        """
+        if self._file.kernel.takes == "rng":
+            self._drawing()
+        found, file = copy.copy(self), self._file
+        found._file = msgspec.structs.replace(
+            file,
+            parameters={**file.parameters, **parameters},
+            sampling=msgspec.structs.replace(file.sampling, block=block),
+        )
+        found._callers, found._rows, found._names, found._scenario = {}, _UNKNOWN, None, (scenario,)
+        return found
 
     @property
     def remarks(self) -> tuple[str, ...]:
@@ -104,8 +123,10 @@ class BlockRunner:
         seed, takes, refinement = file.sampling.seed, file.kernel.takes, file.ladder.refinement
         steps = file.ladder.steps(level)
         paths = self.paths(level) if paths is None else apart(paths, steps, refinement)
+        further = self._scenario if purpose is Purpose.AUDIT else ()
+        purpose = Purpose.SCENARIO if further else purpose
         if takes == "rng":
-            stream, drawing = UniformStream(seed, purpose, level, block), self._drawing()
+            stream, drawing = UniformStream(seed, purpose, level, block, *further), self._drawing()
             return Tape(
                 stream,
                 paths=paths,
@@ -115,7 +136,7 @@ class BlockRunner:
                 singly=drawing.one_path,
                 steady=drawing.steady,
             )
-        values = uniforms(seed, purpose, level, block, (steps, file.kernel.factors, paths))
+        values = uniforms(seed, purpose, level, block, (steps, file.kernel.factors, paths), *further)
         return Draws.of(takes, values, file.ladder.step_size(level), refinement, self.approximation)
 
     def _drawing(self) -> DrawPlan:

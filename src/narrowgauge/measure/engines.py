@@ -5,17 +5,28 @@ A block is a function of its key and of the audit file, so that an engine may ru
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Mapping
+import functools
+from collections.abc import Callable, Iterable, Iterator, Mapping
+from dataclasses import dataclass
 from types import TracebackType
-from typing import Protocol, TypeVar
+from typing import Generic, Protocol, TypeVar
 
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.loading import KernelSource
 from narrowgauge.measure.task import Bench, Block, Key, run_block
 
-__all__ = ["Engine", "SerialEngine", "largest_first"]
+__all__ = ["Engine", "Errand", "SerialEngine", "errand_of", "largest_first"]
 
 T = TypeVar("T")
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Errand(Generic[T]):
+    """A task that travels: what messages call it, its level if it has one, and a module's function of a bench."""
+
+    name: str
+    level: int | None
+    run: Callable[[Bench], T]
 
 
 class Engine(Protocol):
@@ -40,6 +51,18 @@ class Engine(Protocol):
 
         Raises what `BlockRunner.run` raises, at the first block that fails, after all that were finished before.
         """
+
+    def errands(self, wanted: Iterable[Errand[T]]) -> Iterator[T]:
+        """Run tasks, handed out in this order, and yield their results as they are finished.
+
+        Raises what a task raises, at the first one that fails, after all that were finished before.
+        """
+
+
+def errand_of(key: Key) -> Errand[Block]:
+    """Return the task of a block."""
+    level, block = key
+    return Errand(name=f"block {block}", level=level, run=functools.partial(run_block, level=level, block=block))
 
 
 def largest_first(sizes: Mapping[Key, int]) -> list[Key]:
@@ -72,3 +95,8 @@ class SerialEngine:
         """Run the blocks in the order of their keys."""
         for level, block in sorted(sizes):
             yield run_block(self._bench, level, block)
+
+    def errands(self, wanted: Iterable[Errand[T]]) -> Iterator[T]:
+        """Run the tasks one after the other."""
+        for errand in wanted:
+            yield errand.run(self._bench)

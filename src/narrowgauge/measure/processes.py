@@ -9,7 +9,6 @@ started.
 from __future__ import annotations
 
 import contextlib
-import functools
 import json
 import os
 import pickle
@@ -19,7 +18,7 @@ import subprocess
 import sys
 import tempfile
 import threading
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from dataclasses import dataclass
 from types import TracebackType
 from typing import Any, TypeVar
@@ -28,8 +27,8 @@ from narrowgauge.errors import KernelError, WorkerError
 from narrowgauge.kernel.command import how_ended
 from narrowgauge.kernel.loading import WORKER
 from narrowgauge.measure.crash import innermost
-from narrowgauge.measure.engines import largest_first
-from narrowgauge.measure.task import Bench, Block, Job, Key, Reply, run_block
+from narrowgauge.measure.engines import Errand, errand_of, largest_first
+from narrowgauge.measure.task import Bench, Block, Job, Key, Reply
 from narrowgauge.measure.worker import READY, Asked
 
 __all__ = ["ProcessEngine"]
@@ -109,12 +108,16 @@ class ProcessEngine:
 
     def blocks(self, sizes: Mapping[Key, int]) -> Iterator[Block]:
         """Run blocks, the largest first, and yield them as they are finished."""
+        return self.errands(map(errand_of, largest_first(sizes)))
+
+    def errands(self, wanted: Iterable[Errand[T]]) -> Iterator[T]:
+        """Run tasks and yield what they come to as they are finished."""
         waiting: queue.SimpleQueue[_Done] = queue.SimpleQueue()
-        for level, block in largest_first(sizes):
-            run = functools.partial(run_block, level=level, block=block)
-            self._tasks.put(_Task(name=f"block {block}", level=level, run=run, done=waiting))
+        sent = [_Task(name=one.name, level=one.level, run=one.run, done=waiting) for one in wanted]
+        for task in sent:
+            self._tasks.put(task)
         failed: list[BaseException] = []
-        for _ in sizes:
+        for _ in sent:
             try:
                 done = waiting.get(block=not failed)
             except queue.Empty:

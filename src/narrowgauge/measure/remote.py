@@ -6,9 +6,8 @@ affair. It cannot be told to end a block that takes too long, nor to replace a p
 
 from __future__ import annotations
 
-import functools
 import queue
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from concurrent.futures import Executor, Future, ThreadPoolExecutor
 from contextlib import ExitStack, contextmanager
 from types import TracebackType
@@ -17,8 +16,8 @@ from typing import Any, TypeVar
 from narrowgauge.errors import WorkerError, said
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.loading import KernelSource
-from narrowgauge.measure.engines import largest_first
-from narrowgauge.measure.task import Bench, Block, Key, Reply, here, job_for, run_block, run_task
+from narrowgauge.measure.engines import Errand, errand_of, largest_first
+from narrowgauge.measure.task import Bench, Block, Key, Reply, here, job_for, run_task
 
 __all__ = ["ExecutorEngine", "cluster"]
 
@@ -68,15 +67,19 @@ class ExecutorEngine:
 
     def blocks(self, sizes: Mapping[Key, int]) -> Iterator[Block]:
         """Submit all blocks, the largest first, and yield them as they are finished."""
+        return self.errands(map(errand_of, largest_first(sizes)))
+
+    def errands(self, wanted: Iterable[Errand[T]]) -> Iterator[T]:
+        """Submit all tasks, and yield what they come to as they are finished."""
         done: queue.SimpleQueue[Future[Any]] = queue.SimpleQueue()
         names: dict[Future[Any], str] = {}
-        for level, block in largest_first(sizes):
-            name = f"level {level}, block {block}"
-            future = self._submitted(functools.partial(run_block, level=level, block=block), level, name)
+        for one in wanted:
+            name = one.name if one.level is None else f"level {one.level}, {one.name}"
+            future = self._submitted(one.run, one.level, name)
             names[future] = name
             future.add_done_callback(done.put)
         failed: list[BaseException] = []
-        for _ in sizes:
+        for _ in list(names):
             try:
                 future = done.get(block=not failed)
             except queue.Empty:

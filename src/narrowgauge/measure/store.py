@@ -23,18 +23,23 @@ from typing import Any
 from narrowgauge.errors import AuditFolderError
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.measure.provenance import versions
+from narrowgauge.measure.scenarios import Look
 from narrowgauge.measure.task import Block, Key
 
 __all__ = ["LEDGER", "Identity", "Ledger"]
 
 LEDGER = "blocks.sqlite"
-_SCHEMA = "narrowgauge-blocks/2"
+_SCHEMA = "narrowgauge-blocks/3"
 _TOGETHER = 1.0  # seconds
 _TABLES = """
 CREATE TABLE audit (name TEXT PRIMARY KEY, value TEXT NOT NULL);
 CREATE TABLE blocks (
     level INTEGER NOT NULL, block INTEGER NOT NULL, seconds REAL NOT NULL,
     fingerprint TEXT NOT NULL, tally BLOB NOT NULL, checksum TEXT NOT NULL, PRIMARY KEY (level, block)
+);
+CREATE TABLE looks (
+    scenario INTEGER NOT NULL, look INTEGER NOT NULL, seconds REAL NOT NULL,
+    fingerprint TEXT NOT NULL, tallies BLOB NOT NULL, checksum TEXT NOT NULL, PRIMARY KEY (scenario, look)
 );
 """
 _OTHERWISE = "accepted: --out with another folder, or --replace"
@@ -100,7 +105,9 @@ class Ledger:
         self._path = self._folder / LEDGER  # as messages call it
         self._written = time.monotonic()
         self._keys: set[Key] = set()
+        self._looks: set[Key] = set()  # scenario and look
         self.kept: frozenset[Key] = frozenset()  # there from before
+        self.kept_looks: frozenset[Key] = frozenset()  # likewise
         self.damaged = 0  # blocks there from before that are to be run again
         self._connection = self._opened(replace)
 
@@ -148,22 +155,27 @@ class Ledger:
         return True
 
     def _take(self) -> None:
-        """Go on with the blocks that are as they were written, and drop the others."""
+        """Go on with the blocks and looks that are as they were written, and drop the others."""
         with self._telling("cannot be read"):
-            found: dict[int, Key | None] = {
-                row: (level, block) if _checksum(level, block, *rest) == checksum else None
-                for row, level, block, *rest, checksum in self._connection.execute("SELECT rowid, * FROM blocks")
-            }
-        self.kept = frozenset(key for key in found.values() if key is not None)
-        self._keys, self.damaged = set(self.kept), len(found) - len(self.kept)
+            blocks, looks = (self._found(table) for table in ("blocks", "looks"))
+        self.kept, self.kept_looks = (frozenset(filter(None, found.values())) for found in (blocks, looks))
+        self._keys, self._looks = set(self.kept), set(self.kept_looks)
+        self.damaged = len(blocks) - len(self.kept) + len(looks) - len(self.kept_looks)
         with self._telling("cannot be written"):
             run = self._connection.execute
             run("BEGIN")
-            self._connection.executemany(
-                "DELETE FROM blocks WHERE rowid = ?", [(row,) for row, key in found.items() if key is None]
-            )
+            for table, found in (("blocks", blocks), ("looks", looks)):
+                bad = [(row,) for row, key in found.items() if key is None]
+                self._connection.executemany(f"DELETE FROM {table} WHERE rowid = ?", bad)
             run("DELETE FROM audit WHERE name = 'finished'")
             run("COMMIT")
+
+    def _found(self, table: str) -> dict[int, Key | None]:
+        """Return the rows of a table with their keys, None for one that is not as it was written."""
+        return {
+            row: (first, second) if _checksum(first, second, *rest) == checksum else None
+            for row, first, second, *rest, checksum in self._connection.execute(f"SELECT rowid, * FROM {table}")
+        }
 
     def clear(self, identity: Identity) -> None:
         """Begin the ledger of an audit, without any block."""
@@ -209,13 +221,32 @@ class Ledger:
 
     def put(self, block: Block) -> None:
         """Keep a finished block."""
+        self._put("blocks", (block.level, block.block), block)
+        self._keys.add((block.level, block.block))
+
+    def look(self, key: Key) -> Look | None:
+        """Return a finished look at a scenario, by the numbers of both; None where it is not there."""
+        if key not in self._looks:
+            return None
+        with self._telling("cannot be read"):
+            row = self._connection.execute(
+                "SELECT seconds, fingerprint, tallies FROM looks WHERE scenario = ? AND look = ?", key
+            ).fetchone()
+        return Look(scenario=key[0], look=key[1], seconds=row[0], fingerprint=row[1], data=row[2])
+
+    def put_look(self, look: Look) -> None:
+        """Keep a finished look at a scenario."""
+        self._put("looks", (look.scenario, look.look), look)
+        self._looks.add((look.scenario, look.look))
+
+    def _put(self, table: str, key: Key, found: Block | Look) -> None:
         with self._telling("cannot be written"):
             if not self._connection.in_transaction:
                 self._connection.execute("BEGIN")
-            row = (block.level, block.block, float(block.seconds), block.fingerprint, block.data)
-            self._connection.execute("INSERT OR REPLACE INTO blocks VALUES (?, ?, ?, ?, ?, ?)", (*row, _checksum(*row)))
-        self._keys.add((block.level, block.block))
-        if block.seconds >= _TOGETHER or time.monotonic() - self._written >= _TOGETHER:
+            row = (*key, float(found.seconds), found.fingerprint, found.data)
+            run = self._connection.execute
+            run(f"INSERT OR REPLACE INTO {table} VALUES (?, ?, ?, ?, ?, ?)", (*row, _checksum(*row)))
+        if found.seconds >= _TOGETHER or time.monotonic() - self._written >= _TOGETHER:
             self._commit()
 
     def note(self, name: str, value: str) -> None:

@@ -14,6 +14,7 @@ import msgspec
 
 from narrowgauge.record.canary import CanaryEntry
 from narrowgauge.record.costs import CostEntry
+from narrowgauge.record.domain import DomainEntry
 from narrowgauge.record.draws import DrawsEntry, OrderEntry, PartsEntry, SeparationEntry
 from narrowgauge.record.plan import (
     AllocationEntry,
@@ -328,7 +329,7 @@ class AuditRecord(Entry, frozen=True, kw_only=True):
     costs: dict[str, CostEntry] | msgspec.UnsetType = msgspec.UNSET
     lines: None = None
     averaging: None = None
-    domain: None = None
+    domain: DomainEntry | None = None
     cautions: list[str]
     provenance: dict[str, object]
     draws: DrawsEntry | msgspec.UnsetType = msgspec.UNSET

@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING
 from rich.console import Console
 from rich.text import Text
 
+from narrowgauge.report.domain import planned_domain, scenarios_counted
 from narrowgauge.report.wording import count, duration, levels_named, million
 
 if TYPE_CHECKING:
@@ -37,7 +38,7 @@ def planned_text(plan: Plan) -> Text:
     if plan.kept:
         there = "1 block is" if plan.kept == 1 else f"{count(plan.kept)} blocks are"
         words += f" {there} there from before and will not be run again."
-    return text.append(words, style="not bold")
+    return text.append(words + planned_domain(plan), style="not bold")
 
 
 class Progress:
@@ -67,6 +68,13 @@ class Progress:
 
     def look(self, number: int, looks: int, levels: Sequence[int], path_steps: int) -> None:
         """Begin the bar of a look at these levels, which takes so many path steps."""
+        self._begin(f"look {number} of {looks}, {levels_named(levels)}", path_steps)
+
+    def scenarios(self, number: int, looks: int, scenarios: int, path_steps: int) -> None:
+        """Begin the bar of a look at so many scenarios."""
+        self._begin(f"look {number} of {looks}, {scenarios_counted(scenarios)}", path_steps)
+
+    def _begin(self, words: str, path_steps: int) -> None:
         self._stop()
         if not self._console.is_terminal:
             return
@@ -84,7 +92,7 @@ class Progress:
             redirect_stdout=False,  # what a kernel prints goes where it always goes
             redirect_stderr=False,
         )
-        self._task = self._bar.add_task(f"look {number} of {looks}, {levels_named(levels)}", total=path_steps)
+        self._task = self._bar.add_task(words, total=path_steps)
         self._bar.start()
 
     def advanced(self, steps: int) -> None:

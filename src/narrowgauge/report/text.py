@@ -16,6 +16,7 @@ from rich.text import Text
 from narrowgauge.record.audit import AuditRecord, FaultEntry, PlanEntry, QuantityEntry, TrialEntry
 from narrowgauge.report.canary import CANNOT_SHOW, canary_lines
 from narrowgauge.report.constants import constant_lines, no_constants
+from narrowgauge.report.domain import deciding, domain_notes, domain_table
 from narrowgauge.report.layout import Hanging
 from narrowgauge.report.notes import accumulation, format_notes, nonfinite, orders, separation_notes
 from narrowgauge.report.progress import Progress, planned_text
@@ -215,7 +216,23 @@ def _verdict(record: AuditRecord) -> list[RenderableType]:
             parts += [Text(), Text("Paths for all quantities together", style="bold"), common_table(plan)]
             parts += _bounded(plan.levels)
         parts.append(Text(common_cost(record)))
-    return [*parts, Text()]
+    return [*parts, Text(), *_domain(record)]
+
+
+def _domain(record: AuditRecord) -> list[RenderableType]:
+    """Return how the verdict does elsewhere; nothing without [domain]."""
+    found = record.domain
+    if found is None:
+        return []
+    notes = _bullets(domain_notes(found))
+    return [
+        *_heading("Elsewhere in the domain"),
+        *notes,
+        Text(),
+        domain_table(found),
+        *_bullets(deciding(found)),
+        Text(),
+    ]
 
 
 def _bounded(levels: Sequence[PlanEntry]) -> list[RenderableType]:
