@@ -7,13 +7,18 @@ never runs code. Figures are finite; one that does not exist is None. Intervals 
 
 from __future__ import annotations
 
+import re
+from pathlib import Path
 from typing import Annotated, Any, Literal
 
-from msgspec import UNSET, Meta, UnsetType
+from msgspec import UNSET, Meta, UnsetType, to_builtins
 
+from narrowgauge import __version__
 from narrowgauge.record.audit import DecidedEntry
+from narrowgauge.record.canonical import DocumentError, canonical_text, read_strict
 from narrowgauge.record.plan import Entry
 from narrowgauge.record.reach import LineCount
+from narrowgauge.record.reading import converted, shown, text_of
 
 __all__ = [
     "LARGEST",
@@ -35,9 +40,13 @@ __all__ = [
     "PolicyDocument",
     "SharePart",
     "TargetPart",
+    "policy_text",
+    "read_policy",
+    "read_policy_text",
 ]
 
-SCHEMA = "narrowgauge-policy/1"
+_NAME, _VERSION = "narrowgauge-policy", 1
+SCHEMA = f"{_NAME}/{_VERSION}"
 LARGEST = 16 * 2**20  # bytes of a policy
 
 FormatName = Literal["float64", "float32", "float16", "bfloat16", "tf32", "e4m3", "e5m2"]
@@ -105,8 +114,8 @@ class ParameterPart(Entry, frozen=True, kw_only=True):
             raise ValueError("low is not below high")
         if self.scale == "log" and self.low is not None and self.low <= 0:
             raise ValueError("a log scale begins above 0")
-        if isinstance(self.fixed, list) and not _plain(self.fixed):
-            raise ValueError("an array holds numbers, strings, booleans, or arrays of these")
+        if not _plain(self.fixed):
+            raise ValueError("fixed is a number of at most 64 bits, a string, a boolean, or an array of these")
 
 
 class DomainPart(Entry, frozen=True, kw_only=True):
@@ -319,5 +328,43 @@ class PolicyDocument(Entry, frozen=True, kw_only=True):
             raise ValueError("target.rmse, target.bias_budget and each level's measured name different quantities")
 
 
-def _plain(values: list[Any]) -> bool:
-    return all(_plain(one) if isinstance(one, list) else isinstance(one, bool | int | float | str) for one in values)
+def policy_text(document: PolicyDocument) -> str:
+    """Return a policy as canonical text, which `read_policy_text` reads back equal.
+
+    Raises ValueError or TypeError where a figure is not finite or not plain.
+    """
+    return canonical_text(to_builtins(document))
+
+
+def read_policy(path: Path) -> PolicyDocument:
+    """Return the policy in a file; DocumentError says what is wrong with it, and at which path."""
+    return read_policy_text(text_of(Path(path), LARGEST), str(path))
+
+
+def read_policy_text(text: str, source: str) -> PolicyDocument:
+    """Return the policy in a text; DocumentError says what is wrong with it, and at which path.
+
+    Refused is what no strict JSON is, more than 16 MiB or nested more than 64 deep, unknown and missing keys, values of
+    another type or out of bounds, and another version of the schema.
+    """
+    document = read_strict(text, source, LARGEST)
+    if not isinstance(document, dict):
+        raise DocumentError(source, "", f"{shown(document)} is no policy; accepted: an object")
+    schema = document.get("schema")
+    found = re.fullmatch(_NAME + "/([1-9][0-9]{0,8})", schema) if isinstance(schema, str) else None
+    if found is None:
+        raise DocumentError(source, "schema", f"{shown(schema)} is no schema of a policy; accepted: {SCHEMA}")
+    if int(found[1]) > _VERSION:
+        writer = document.get("written_by")
+        by = shown(writer) if isinstance(writer, str) else "a version that it does not name"
+        what = f"{shown(schema)} is newer than what narrowgauge {__version__} reads; the policy was written by {by}"
+        raise DocumentError(source, "schema", f"{what}; accepted: {SCHEMA}, or that version of narrowgauge")
+    return converted(document, PolicyDocument, source)
+
+
+def _plain(value: object) -> bool:
+    if isinstance(value, list):
+        return all(one is not None and _plain(one) for one in value)
+    if isinstance(value, int):
+        return -(2**63) <= value < 2**63
+    return isinstance(value, float | str | None)
