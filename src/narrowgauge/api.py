@@ -12,13 +12,16 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal
 
+import msgspec
+
 from narrowgauge.conduct.account import account
 from narrowgauge.conduct.owntrial import examine_own
 from narrowgauge.conduct.run import Watcher, run
 from narrowgauge.conduct.trial import try_arms
 from narrowgauge.errors import AuditFileError, AuditFolderError, NarrowgaugeError
 from narrowgauge.kernel.auditfile import AuditFile, audit_file_from, read_audit_file, with_draws
-from narrowgauge.kernel.loading import find_kernel, refuse_nested
+from narrowgauge.kernel.identity import versions_of
+from narrowgauge.kernel.loading import KernelSource, find_kernel, refuse_nested
 from narrowgauge.measure.block import BlockRunner
 from narrowgauge.measure.drawplan import worked_out
 from narrowgauge.measure.provenance import provenance
@@ -27,6 +30,7 @@ from narrowgauge.measure.task import Bench, pinned
 from narrowgauge.measure.workers import Workers, engine_for
 from narrowgauge.record.audit import AuditRecord, KernelEntry, TrialEntry
 from narrowgauge.record.canonical import canonical_text, read_strict, write_atomically
+from narrowgauge.record.source import SourceEntry
 from narrowgauge.record.table import accumulation_rows, level_rows, levels_csv
 
 if TYPE_CHECKING:
@@ -130,7 +134,9 @@ def run_audit(
         resumed = len(ledger.kept) if ledger is not None else 0
         damaged = ledger.damaged if ledger is not None else 0
         made = provenance(time.perf_counter() - start, engine.title, outcome.fingerprints, resumed, damaged)
-        record = account(file, outcome, entry, made)
+        source = _source(kernel)
+        made["imported"] = versions_of(source.imports)
+        record = msgspec.structs.replace(account(file, outcome, entry, made), source=source)
         if place is not None and ledger is not None:
             _write(place, _RECORD, canonical_text(record.document()))
             _write(place, _LEVELS, levels_csv(record))
@@ -160,6 +166,17 @@ def _tell(tell: Callable[[str], None], folder: Path, ledger: Ledger) -> None:
         tell(f"{folder}: {blocks} damaged and run again")
     elif not ledger.kept:
         tell(f"{folder}: holds no finished blocks to go on with; the audit begins anew")
+
+
+def _source(kernel: KernelSource) -> SourceEntry:
+    """Return how a policy will know the kernel again."""
+    found = kernel.origin()
+    return SourceEntry(
+        fingerprint=found.fingerprint,
+        covers=found.covers,
+        modules=list(found.modules),
+        imports=list(found.imports),
+    )
 
 
 def _draws(bench: Bench) -> tuple[int, Literal["sum", "none"]]:

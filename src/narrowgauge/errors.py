@@ -13,6 +13,7 @@ __all__ = [
     "EscapeError",
     "KernelError",
     "NarrowgaugeError",
+    "PolicyError",
     "RaisedElsewhereError",
     "RefusedError",
     "SettingsMixedError",
@@ -68,6 +69,10 @@ class KernelError(NarrowgaugeError):
 
 class WorkerError(NarrowgaugeError):
     """The workers cannot do the work: a process, an executor or a cluster fails, or finds another kernel."""
+
+
+class PolicyError(NarrowgaugeError):
+    """No policy can be drawn up from an audit, or a policy does not cover what is asked of it."""
 
 
 class RaisedElsewhereError(Exception):
