@@ -125,6 +125,7 @@ def run_audit(
         if file.kernel.takes == "rng":
             file = with_draws(file, *engine.call(_draws))
         entry = KernelEntry(run=file.kernel.run, fingerprint=kernel.digest())
+        source = _source(kernel)
         ledger = None
         if place is not None:
             ledger = held.enter_context(_claim(place, file, entry, replace=replace, resume=resume))
@@ -134,7 +135,6 @@ def run_audit(
         resumed = len(ledger.kept) if ledger is not None else 0
         damaged = ledger.damaged if ledger is not None else 0
         made = provenance(time.perf_counter() - start, engine.title, outcome.fingerprints, resumed, damaged)
-        source = _source(kernel)
         made["imported"] = versions_of(source.imports)
         record = msgspec.structs.replace(account(file, outcome, entry, made), source=source)
         if place is not None and ledger is not None:
