@@ -22,16 +22,11 @@ _POINT = "Nothing was audited beside the parameters that are written down here: 
 _ASSUMED = "The costs of a step were assumed from the bits of each format: gains, edges and paths rest on them."
 _MEASURED = "The costs of a step were measured on one machine: gains, edges and paths rest on them."
 _UNCLAIMED = {"result only": "rounds its result alone", "wider": "does not round", "narrower": "rounds more than that"}
-# Reasons of an audit's verdicts as they stand behind "is undecided, because" and "does not pay, because".
+# Why a verdict is open.
 _WHY = {
-    "edge": "the edge is too small",
-    "bias": "of what rounding may shift the mean by",
-    "nonfinite": "of values that are not finite",
-    "raised": "the kernel raises an exception",
-    "branches": "its two branches do not agree to the bit",
-    "no_variance": "nothing varies",
-    "kurtosis": "too few paths carry the correction",
-    "budget": "the paths ran out",
+    "bias": "it is not known whether rounding shifts the mean by more than its share of the target",
+    "kurtosis": "too few paths carry the correction for the sample to be trusted",
+    "budget": "the paths ran out before the edge was settled",
 }
 
 

@@ -31,11 +31,11 @@ from narrowgauge.policy.plan import replanned
 from narrowgauge.record import audit as audited
 from narrowgauge.record import policy as made
 from narrowgauge.record.audit import AuditRecord
-from narrowgauge.record.canonical import DocumentError, read_strict
-from narrowgauge.record.policy import PolicyDocument
+from narrowgauge.record.canonical import DocumentError, read_strict, write_atomically
+from narrowgauge.record.policy import PolicyDocument, policy_text
 from narrowgauge.record.reading import converted, shown, text_of
 
-__all__ = ["draw_up", "read_audit"]
+__all__ = ["draw_up", "read_audit", "write_policy"]
 
 _LARGEST = 64 * 2**20  # bytes of an audit.json
 _Table = TypeVar("_Table", bound=Table)
@@ -53,44 +53,55 @@ def read_audit(folder: Path) -> tuple[AuditRecord, str]:
     return converted(document, AuditRecord, str(path)), _sha256(text)
 
 
-def draw_up(record: AuditRecord, digest: str, domain: made.DomainPart | None = None) -> PolicyDocument:
+def draw_up(
+    record: AuditRecord, digest: str, *, source: str = "audit", domain: made.DomainPart | None = None
+) -> PolicyDocument:
     """Return the policy that an audit supports; `digest` is that of its file, `domain` what else it holds for.
 
-    Raises PolicyError, with the reason, where it supports none: no target, a reference that is not finite, levels that
-    do not telescope or are not coupled, an audit that does not say what its kernel was.
+    Raises PolicyError, with what messages call the audit and the reason, where it supports none: no target, a reference
+    that is not finite, levels that do not telescope or are not coupled, an audit that does not say what its kernel was.
     """
-    _refuse(record)
+    reason = _unsupported(record)
+    if reason is not None:
+        raise PolicyError(f"{source}: no policy: {reason}")
     try:
         return _Draft(record, digest, domain).document()
     except (KeyError, IndexError) as problem:
-        raise PolicyError(f"the audit's record is not whole: it lacks {problem.args[0]}") from None
+        raise PolicyError(f"{source}: the record is not whole: it lacks {problem.args[0]}") from None
     except msgspec.ValidationError as problem:
-        raise PolicyError(f"the audit's record cannot be used: {problem}") from None
+        raise PolicyError(f"{source}: the record cannot be used: {problem}") from None
 
 
-def _refuse(record: AuditRecord) -> None:
-    """Raise PolicyError where an audit supports no policy."""
+def write_policy(document: PolicyDocument, path: Path) -> None:
+    """Write a policy so that the file holds either its old content or all of the new; PolicyError where it cannot."""
+    try:
+        write_atomically(path, policy_text(document))
+    except OSError as problem:
+        raise PolicyError(f"{path}: cannot be written: {problem.strerror}") from None
+
+
+def _unsupported(record: AuditRecord) -> str | None:
+    """Return why an audit supports no policy, or None."""
     if record.asked.get("target") is None:
-        raise PolicyError(
-            "no policy without a target: the audit file has no [target], so that nobody knows how much rounding may "
-            "shift the mean and how many paths are needed; accepted: an audit with [target] rmse"
+        return (
+            "the audit file has no [target], so that nobody knows how much rounding may shift the mean and how many "
+            "paths are needed; accepted: an audit with [target] rmse"
         )
     if not record.verdict.sound:
-        raise PolicyError(
-            "no policy from levels that do not fit together: in the reference the coarse and the fine paths of a level "
-            "differ in their mean, so that the kernel or the coupling of its draws is wrong"
+        return (
+            "the levels do not fit together: in the reference the coarse and the fine paths of a level differ in their "
+            "mean, so that the kernel or the coupling of its draws is wrong"
         )
     for name, quantity in record.quantities.items():
         for level in quantity.levels:
             if level.reference.nonfinite or level.reference.level_variance is None:
-                raise PolicyError(
-                    f"no policy from a reference that is not finite: {name}, level {level.level}, "
-                    f"{level.reference.nonfinite} of {level.paths} paths"
-                )
+                dropped = f"{level.reference.nonfinite} of {level.paths} paths"
+                return f"the reference is not finite: {name}, level {level.level}, {dropped}"
     if record.verdict.plan.reason is not None or None in record.verdict.schemes:
-        raise PolicyError(f"no policy without a plan of paths: {record.verdict.plan.reason or 'no finite scheme'}")
+        return f"no paths are planned: {record.verdict.plan.reason or 'a level without a finite scheme'}"
     if isinstance(record.source, msgspec.UnsetType):
-        raise PolicyError("no policy from an audit that does not say what its kernel was; accepted: one made anew")
+        return "the audit does not say what its kernel was; accepted: one made anew"
+    return None
 
 
 class _Draft:

@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import re
 from pathlib import Path
-from typing import Annotated, Any, Literal
+from typing import Annotated, Any, Final, Literal
 
 from msgspec import UNSET, Meta, UnsetType, to_builtins
 
@@ -45,8 +45,8 @@ __all__ = [
     "read_policy_text",
 ]
 
+SCHEMA: Final = "narrowgauge-policy/1"
 _NAME, _VERSION = "narrowgauge-policy", 1
-SCHEMA = f"{_NAME}/{_VERSION}"
 LARGEST = 16 * 2**20  # bytes of a policy
 
 FormatName = Literal["float64", "float32", "float16", "bfloat16", "tf32", "e4m3", "e5m2"]
@@ -98,7 +98,7 @@ class TargetPart(Entry, frozen=True, kw_only=True):
     worthwhile: float
 
 
-class ParameterPart(Entry, frozen=True, kw_only=True):
+class ParameterPart(Entry, frozen=True, kw_only=True, omit_defaults=True):
     """What was audited of one parameter: the one value `fixed`, or all from `low` to `high`, audited on a `scale`."""
 
     fixed: Plain = None
@@ -294,7 +294,7 @@ class EvidencePart(Entry, frozen=True, kw_only=True):
 class PolicyDocument(Entry, frozen=True, kw_only=True):
     """One policy: `levels` holds one entry for each level of the ladder, coarsest first."""
 
-    schema: str
+    schema: Literal["narrowgauge-policy/1"]
     written_by: str
     kernel: KernelPart
     ladder: LadderPart
@@ -312,8 +312,6 @@ class PolicyDocument(Entry, frozen=True, kw_only=True):
     cautions: list[str]
 
     def __post_init__(self) -> None:
-        if self.schema != SCHEMA:
-            raise ValueError(f"schema is not {SCHEMA}")
         if [one.level for one in self.levels] != list(range(self.ladder.finest + 1)):
             raise ValueError("levels is not one entry for each level of the ladder, coarsest first")
         steps = self.ladder.coarsest_steps
