@@ -5,7 +5,7 @@ from __future__ import annotations
 import functools
 import hashlib
 import math
-from collections.abc import Callable, Mapping
+from collections.abc import Mapping
 from pathlib import Path
 from typing import Any, Literal, TypeVar
 
@@ -39,7 +39,7 @@ __all__ = ["draw_up", "read_audit", "write_policy"]
 
 _LARGEST = 64 * 2**20  # bytes of an audit.json
 _Table = TypeVar("_Table", bound=Table)
-_Entry = TypeVar("_Entry")
+_Part = TypeVar("_Part", bound=msgspec.Struct)
 
 
 def read_audit(folder: Path) -> tuple[AuditRecord, str]:
@@ -67,7 +67,8 @@ def draw_up(
     try:
         return _Draft(record, digest, domain).document()
     except (KeyError, IndexError) as problem:
-        raise PolicyError(f"{source}: the record is not whole: it lacks {problem.args[0]}") from None
+        what = problem.args[0] if isinstance(problem, KeyError) else "a level"
+        raise PolicyError(f"{source}: the record is not whole: it lacks {what}") from None
     except msgspec.ValidationError as problem:
         raise PolicyError(f"{source}: the record cannot be used: {problem}") from None
 
@@ -222,7 +223,7 @@ class _Draft:
         if not found:
             same = choice.scheme == REFERENCE and self._formats.today == REFERENCE.narrow
             return None, {name: 1.0 if same and name.startswith("gain") else None for name in names}
-        worst = min(found, key=lambda name: -math.inf if found[name].edge_low is None else found[name].edge_low or 0.0)
+        worst = min(found, key=lambda name: _limit(found[name].edge_low))
         return worst, {name: getattr(found[worst], name) for name in names}
 
     def _measured(self, entry: audited.LevelEntry) -> made.MeasuredPart:
@@ -321,16 +322,20 @@ def _laws(entry: audited.AccumulationEntry) -> made.LawsPart:
     return made.LawsPart(error=_copied(made.LawPart, entry.error), correction=_copied(made.LawPart, entry.correction))
 
 
-def _copied(kind: Callable[..., _Entry], entry: msgspec.Struct, **more: Any) -> _Entry:
+def _copied(kind: type[_Part], entry: msgspec.Struct, **more: Any) -> _Part:
     """Return a part with the fields that an entry of the record has under the same names, and `more`."""
-    names: tuple[str, ...] = kind.__struct_fields__  # type: ignore[attr-defined]  # a class of parts
-    shared = {name: getattr(entry, name) for name in names if name in entry.__struct_fields__}
+    shared = {name: getattr(entry, name) for name in kind.__struct_fields__ if name in entry.__struct_fields__}
     return kind(**{**shared, **more})
 
 
-def _plainly(kind: type[_Entry], **fields: Any) -> _Entry:
+def _plainly(kind: type[_Part], **fields: Any) -> _Part:
     """Return a part of which every field was checked, as that of a policy that is read is; msgspec.ValidationError."""
     return msgspec.convert(msgspec.to_builtins(fields), kind)
+
+
+def _limit(bound: float | None) -> float:
+    """Return a lower bound; where there is none nothing is known."""
+    return -math.inf if bound is None else bound
 
 
 def _times(value: float | None, times: float) -> float | None:

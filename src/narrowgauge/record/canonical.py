@@ -11,6 +11,7 @@ import math
 import os
 import re
 import secrets
+from collections.abc import Iterable
 from pathlib import Path
 from typing import NoReturn
 
@@ -134,10 +135,10 @@ def below(path: str, step: str | int) -> str:
     return f"{path}.{key}" if path else key
 
 
-def _elements(value: object) -> list[tuple[str | int, object]]:
+def _elements(value: object) -> Iterable[tuple[str | int, object]]:
     if isinstance(value, dict):
-        return list(value.items())
-    return list(enumerate(value)) if isinstance(value, list | tuple) else []
+        return value.items()
+    return enumerate(value) if isinstance(value, list | tuple) else ()
 
 
 def _paired(text: str) -> bool:

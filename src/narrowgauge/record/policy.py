@@ -58,7 +58,7 @@ LevelNumber = Annotated[int, Meta(ge=0, le=64)]
 Positive = Annotated[float, Meta(gt=0)]
 NotNegative = Annotated[float, Meta(ge=0)]
 Share = Annotated[float, Meta(ge=0, le=1)]
-Digest = Annotated[str, Meta(pattern="^sha256:[0-9a-f]{64}$")]
+Digest = Annotated[str, Meta(pattern="^sha256:[0-9a-f]{64}$", max_length=71)]
 
 
 class KernelPart(Entry, frozen=True, kw_only=True):
