@@ -86,9 +86,18 @@ def identity_of(kernel: Callable[..., Any] | str | Path, *, run: str, covers: Co
 
 def versions_of(imports: Iterable[str]) -> dict[str, str]:
     """Return the versions of the packages that these top-level modules belong to, as far as they are installed."""
-    wanted = set(imports)
-    owners = metadata.packages_distributions() if wanted else {}
-    return {owner: metadata.version(owner) for name in sorted(wanted) for owner in sorted(set(owners.get(name, ())))}
+    found: dict[str, str] = {}
+    others: list[str] = []
+    for name in sorted(set(imports)):
+        try:
+            found[name] = metadata.version(name)
+        except metadata.PackageNotFoundError:
+            others.append(name)
+    if others:  # of another name than the module's; looking through all that is installed takes a while
+        owners = metadata.packages_distributions()
+        names = sorted({owner for name in others for owner in owners.get(name, ())})
+        found |= {owner: metadata.version(owner) for owner in names}
+    return found
 
 
 def _bytes_of(kernel: object) -> str:
