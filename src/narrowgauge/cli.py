@@ -155,6 +155,7 @@ def _parser() -> argparse.ArgumentParser:
     )
     policy.add_argument("folder", metavar="AUDITDIR", help="the folder that an audit has written")
     policy.add_argument("--out", metavar="FILE", help="where to write it (default: policy.json in that folder)")
+    policy.add_argument("--c-header", metavar="FILE", help="write the same rules as a C header, too")
     policy.set_defaults(command=_policy)
     return parser
 
@@ -229,7 +230,12 @@ def _policy(options: argparse.Namespace) -> int:
     out = Path(options.out) if options.out is not None else folder / "policy.json"
     document = draw_up(*read_audit(folder), source=options.folder)
     write_policy(document, out)
-    _show(policy_lines(document, out))
+    header = None if options.c_header is None else Path(options.c_header)
+    if header is not None:
+        from narrowgauge.policy.cheader import write_c_header
+
+        write_c_header(document, header)
+    _show(policy_lines(document, out, header))
     return 0
 
 

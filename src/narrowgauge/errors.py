@@ -13,6 +13,7 @@ __all__ = [
     "EscapeError",
     "KernelError",
     "NarrowgaugeError",
+    "OutsidePolicyError",
     "PolicyError",
     "RaisedElsewhereError",
     "RefusedError",
@@ -73,6 +74,14 @@ class WorkerError(NarrowgaugeError):
 
 class PolicyError(NarrowgaugeError):
     """No policy can be drawn up from an audit, or a policy does not cover what is asked of it."""
+
+
+class OutsidePolicyError(PolicyError):
+    """A level or a parameter is not what was audited; `reason` is "level", or "parameter" and its name."""
+
+    def __init__(self, message: str, *, reason: str = "") -> None:
+        self.reason = reason
+        super().__init__(message)
 
 
 class RaisedElsewhereError(Exception):

@@ -17,8 +17,8 @@ __all__ = ["policy_lines"]
 _ASSUMED = {"assumed": ", costs assumed", "measured": ", costs measured", "given": ""}
 
 
-def policy_lines(document: PolicyDocument, path: Path) -> Group:
-    """Return the levels as a table, what a run costs, cautions, and where the policy is."""
+def policy_lines(document: PolicyDocument, path: Path, header: Path | None = None) -> Group:
+    """Return the levels as a table, what a run costs, cautions, and where the policy and its C header are."""
     target = joined(f"{clean(name)} {setting_value(rmse)}" for name, rmse in document.target.rmse.items())
     table = Ruled(
         ("level", "number"),
@@ -42,7 +42,7 @@ def policy_lines(document: PolicyDocument, path: Path) -> Group:
         Text("Cautions", style="bold"),
         *(Hanging(Text(clean(caution)), "- ") for caution in document.cautions),
         Text(),
-        Text(f"Written to {clean(path)}"),
+        Text(f"Written to {clean(path)}" + (f", as a C header to {clean(header)}" if header is not None else "")),
     ]
     return Group(*parts)
 
