@@ -92,7 +92,7 @@ class TestOrigin:
 
     def test_a_function_without_a_file_has_its_code(self):
         """What was typed in has no source to read: its fingerprint is the audit's own."""
-        space = {}
+        space = {"__name__": "typed_in"}
         exec("def value(dW, h):\n    return dW.sum(0)", space)
         mapping = {"kernel": {"run": space["value"], "takes": "increments"}, "ladder": {"horizon": 1.0, "finest": 1}}
         found = find_kernel(audit_file_from(mapping)).origin()

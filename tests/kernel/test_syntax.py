@@ -142,16 +142,12 @@ class TestWhatCounts:
             ("{**a}", "{a: a}"),
             ("async def f(): 0", "def f(): 0"),
             ("x = 'a\\nb'", "x = 'a\\r\\nb'"),
-            (f"x = {10**5000}", f"x = {10**5000 + 1}"),
+            (f"x = 0x{'f' * 5000}", f"x = 0x{'f' * 4999}e"),
         ],
     )
-    def test_no_two_meanings_share_a_digest(self, one, other, monkeypatch):
+    def test_no_two_meanings_share_a_digest(self, one, other):
         """Types and exact values of constants, orders and nestings are told apart; huge integers have no limit."""
-        sys.set_int_max_str_digits(0)
-        try:
-            assert digest(one) != digest(other)
-        finally:
-            sys.set_int_max_str_digits(sys.int_info.default_max_str_digits)
+        assert digest(one) != digest(other)
 
 
 class TestWhatDoesNot:

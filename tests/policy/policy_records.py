@@ -44,6 +44,9 @@ finest = 3
 [target]
 rmse = { end = 0.002, call = 0.002 }
 
+[formats]
+schemes = ["split"]
+
 [cost]
 float64 = 1.0
 float32 = 0.5

@@ -139,7 +139,7 @@ def _located(run: str) -> tuple[Path, str]:
         raise PolicyError(f"{run!r} names no function; accepted: file.py:function, or package.module:function")
     if target.endswith(".py"):
         return Path(target), name
-    found = Sources(sys.path[:1]).find(target)
+    found = Sources([Path(folder) for folder in sys.path[:1]]).find(target)
     if found is None or found.file is None:
         raise PolicyError(f"there is no Python module {target!r}; accepted: file.py:function, or an importable module")
     return Path(found.file), name

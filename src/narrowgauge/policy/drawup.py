@@ -174,7 +174,10 @@ class _Draft:
         else:
             schemes = {level: choice.scheme for level, choice in self._choices.items()}
             anew = replanned(self._record, schemes, self._level_costs, self._target.bias_share)
-            paths = {one.level: (one.low.paths, one.correction and one.correction.paths) for one in anew.levels}
+            paths = {
+                one.level: (one.low.paths, None if one.correction is None else one.correction.paths)
+                for one in anew.levels
+            }
             cost, times = anew.cost, (plan.cost or 0.0) / anew.cost if anew.cost else 1.0
         part = made.PlanPart(
             cost=cost,

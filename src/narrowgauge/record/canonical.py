@@ -11,7 +11,7 @@ import math
 import os
 import re
 import secrets
-from collections.abc import Iterable
+from collections.abc import Callable, Iterable
 from pathlib import Path
 from typing import NoReturn
 
@@ -74,17 +74,22 @@ def read_strict(text: str, source: str, largest: int | None = None) -> object:
         problem = f"the document has {size} bytes, at most {most} are accepted"
         raise DocumentError(source, "", problem)
     try:
-        # Problems are left in the document as marks: only the walk over the whole knows their path.
-        document = json.loads(text, object_pairs_hook=_object, parse_constant=_Constant)
+        document = _parsed(text, source)
+    except ValueError:  # an integer with more digits than Python converts
+        document = _parsed(text, source, _integer)
+    _check_read(document, source, "", 0)
+    return document
+
+
+def _parsed(text: str, source: str, parse_int: Callable[[str], object] | None = None) -> object:
+    """Return what the text holds; some problems are left as marks: only the walk over the whole knows their path."""
+    try:
+        return json.loads(text, object_pairs_hook=_object, parse_constant=_Constant, parse_int=parse_int)
     except RecursionError:
         raise DocumentError(source, "", f"nested more than {_DEEPEST} deep") from None
     except json.JSONDecodeError as problem:
         where = f"line {problem.lineno}, column {problem.colno}"
         raise DocumentError(source, "", f"this is not JSON: {problem.msg} ({where})") from None
-    except ValueError:  # an integer with more digits than Python converts
-        document = json.loads(text, object_pairs_hook=_object, parse_constant=_Constant, parse_int=_integer)
-    _check_read(document, source, "", 0)
-    return document
 
 
 class _Constant:

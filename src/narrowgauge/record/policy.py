@@ -321,8 +321,8 @@ class PolicyDocument(Entry, frozen=True, kw_only=True):
             steps *= self.ladder.refinement
         if len(self.evidence.paths) != len(self.levels):
             raise ValueError("evidence.paths has not one number for each level")
-        names = self.target.rmse.keys()
-        if any(found.keys() != names for found in (self.target.bias_budget, *(one.measured for one in self.levels))):
+        named = [set(self.target.rmse), set(self.target.bias_budget), *(set(one.measured) for one in self.levels)]
+        if any(names != named[0] for names in named):
             raise ValueError("target.rmse, target.bias_budget and each level's measured name different quantities")
 
 
