@@ -127,9 +127,9 @@ class Estimator:
                 values = top if len(runs) == 1 else top - runs[0][name]
                 sums[name] = sums.get(name, 0.0) + np.array([values.sum(), (values * values).sum()])
         for name, (total, squares) in sums.items():
-            mean = total / paths
+            mean = float(total) / paths
             found.mean[name] = found.mean.get(name, 0.0) + mean
-            spread = (squares / paths - mean * mean) / max(1, paths - 1)
+            spread = (float(squares) / paths - mean * mean) / max(1, paths - 1)
             found.variance[name] = found.variance.get(name, 0.0) + spread
 
     def _difference(self, found: Estimate, dW: np.ndarray, level: int, name: str) -> dict[str, np.ndarray]:

@@ -8,6 +8,7 @@ from pathlib import Path
 import pytest
 
 from narrowgauge.cli import main
+from narrowgauge.policy.cheader import c_header
 from narrowgauge.record.policy import policy_text, read_policy
 
 KERNEL = """
@@ -81,6 +82,13 @@ def test_another_file(here, capsys):
     assert sorted(path.name for path in (here / "without").iterdir()) == before
 
 
+def test_a_c_header(here, capsys):
+    """--c-header writes the same rules as a C header, too, and the command says where."""
+    assert main(["policy", "with", "--c-header", "model.h"]) == 0
+    assert capsys.readouterr().out.endswith("Written to with/policy.json, as a C header to model.h\n")
+    assert Path("model.h").read_text(encoding="ascii") == c_header(read_policy(here / "with" / "policy.json"))
+
+
 @pytest.mark.parametrize(
     ("arguments", "message"),
     [
@@ -92,6 +100,7 @@ def test_another_file(here, capsys):
         (["with.toml"], "with.toml/audit.json: cannot be read (Not a directory)\n"),
         (["damaged"], "damaged/audit.json: kernel.run: 3 is not accepted; accepted: text\n"),
         (["with", "--out", "none/p.json"], "none/p.json: cannot be written: No such file or directory\n"),
+        (["with", "--c-header", "none/p.h"], "none/p.h: cannot be written: No such file or directory\n"),
         ([], "the following arguments are required: AUDITDIR; narrowgauge policy --help shows what is accepted\n"),
     ],
 )

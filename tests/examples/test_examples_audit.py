@@ -1,27 +1,11 @@
 """The example of the README, audited as a new user does it."""
 
 import hashlib
-import subprocess
-import sys
 
-import pytest
-from example_files import EXAMPLES, kernel_of
+from example_files import kernel_of
 
 from narrowgauge.kernel.identity import identity_of
 from narrowgauge.record.policy import read_policy
-
-
-def run(folder, *words):
-    return subprocess.run(
-        [sys.executable, "-m", "narrowgauge", *words], cwd=folder, check=False, capture_output=True, text=True
-    )
-
-
-@pytest.fixture(scope="module")
-def reserve(tmp_path_factory):
-    """The folder in which the reserve example was audited, and how that ended."""
-    folder = tmp_path_factory.mktemp("reserve")
-    return folder, run(folder, "audit", str(EXAMPLES / "reserve" / "reserve.toml"))
 
 
 def test_the_reserve_example_says_where_each_format_pays(reserve):
@@ -41,7 +25,7 @@ def test_the_reserve_example_says_where_each_format_pays(reserve):
     assert (folder / "audits" / "reserve" / "levels.csv").is_file()
 
 
-def test_the_reserve_example_has_a_policy(reserve):
+def test_the_reserve_example_has_a_policy(reserve, run):
     """float16 over float32 to level 4, float32 alone beyond, and a fingerprint that the kernel itself has."""
     folder, _ = reserve
     done = run(folder, "policy", "audits/reserve", "--out", "reserve.policy.json")

@@ -115,7 +115,11 @@ class TestOutside:
         ("fixed", "same", "others"),
         [
             (0.01, [0.01, np.float64(0.01), decimal.Decimal("0.01")], [0.010000000000000002, np.float32(0.01), "0.01"]),
-            (3, [3, 3.0, np.int8(3), fractions.Fraction(3)], [True, 4, math.nan, [3], np.array([3])]),
+            (
+                3,
+                [3, 3.0, np.int8(3), fractions.Fraction(3), np.array([[3]])],
+                [True, 4, math.nan, [3], np.array([3, 3])],
+            ),
             (1, [1, 1.0], [True, np.True_]),
             (0.0, [0, -0.0], [False, None, ""]),
             (2**53 + 1, [2**53 + 1, np.int64(2**53 + 1)], [2**53, float(2**53)]),

@@ -1,14 +1,16 @@
 """The guard: what running code asks for the scheme of a level, at the parameters that it runs with.
 
 Importing this module imports neither numpy nor pandas nor scipy, and reading a policy runs no code. A question takes a
-microsecond or two where every parameter is a plain number or text; arrays, booleans and NumPy's scalars take longer.
+microsecond or two where no parameter is an array.
 """
 
 from __future__ import annotations
 
 import importlib
+import math
 import operator
 import reprlib
+import struct
 import threading
 from collections.abc import Callable
 from functools import cache
@@ -28,7 +30,7 @@ if TYPE_CHECKING:
 __all__ = ["BEYOND", "Policy", "Rule"]
 
 BEYOND: Final = "level"  # the reason of an answer beyond the ladder
-_PLAIN = frozenset({float, int, str})  # exactly these: what compares as the policy's own values do
+_WHOLE = 2**53  # below it every whole number is a double
 _SHOWN = reprlib.Repr()
 _SHOWN.maxother = _SHOWN.maxstring = 60
 _DTYPES: dict[FormatName, tuple[str, str]] = {
@@ -93,14 +95,22 @@ class Policy:
         self.document = document
         self._source, self._raises = source, outside == "raise"
         self._rules = [_rule(one) for one in document.levels]
-        self._parameters = document.domain.parameters
-        quick = {name: one.fixed for name, one in self._parameters.items() if type(one.fixed) in _PLAIN}
-        self._fixed, self._fixed_of = tuple(quick.values()), _values_of(tuple(quick))
-        self._boxes = [(name, one.low, one.high) for name, one in self._parameters.items() if one.fixed is None]
-        # The quick way looks up every name, or it would pass over an unknown one; with other kinds it is never taken.
-        self._quickly = len(self._parameters) if len(quick) + len(self._boxes) == len(self._parameters) else -1
+        self._parameters = parameters = document.domain.parameters
+        self._limits = [(name, part, *_limits(part)) for name, part in parameters.items()]
+        # A question whose values pack to these bytes has these numbers, whatever their types.
+        packed = {name: part.fixed for name, part in parameters.items() if _packs(part.fixed)}
+        self._pack = struct.Struct(f"{len(packed)}d").pack
+        self._packed, self._packed_of = self._pack(*packed.values()), _values_of(tuple(packed))
+        self._boxes = [(name, low, high) for name, _, low, high in self._limits if low <= high and name not in packed]
+        others = {name: part.fixed for name, part, low, high in self._limits if low > high}
+        self._others = [(name, type(value), value) for name, value in others.items()]
+        # All names are looked up then, so that an unknown one does not pass; arrays are never compared quickly.
+        self._quickly = -1 if any(isinstance(value, list) for value in others.values()) else len(parameters)
         self._lock = threading.Lock()
-        self._fallbacks = dict.fromkeys([BEYOND, *(f"parameter {name}" for name in self._parameters)], 0)
+        self._fallbacks = dict.fromkeys([BEYOND, *(f"parameter {name}" for name in parameters)], 0)
+        self._references = [
+            {reason: _reference(rule.level, rule.paths, reason) for reason in self._fallbacks} for rule in self._rules
+        ]
 
     @classmethod
     def load(
@@ -130,17 +140,20 @@ class Policy:
         try:
             if (
                 type(level) is int
-                and level >= 0
+                and 0 <= level < len(self._rules)
                 and len(parameters) == self._quickly
-                and self._fixed_of(parameters) == self._fixed
-                and _PLAIN.issuperset(map(type, parameters.values()))
+                and self._pack(*self._packed_of(parameters)) == self._packed
             ):
                 for name, low, high in self._boxes:
-                    if not low <= parameters[name] <= high:  # type: ignore[operator]  # a text raises TypeError
-                        break
-                else:
-                    return self._rules[level]
-        except (LookupError, TypeError, ValueError):  # an array has no truth value
+                    value = parameters[name]
+                    if not (isinstance(value, float) or type(value) is int) or not low <= value <= high:
+                        return self._examined(level, parameters)
+                for name, kind, fixed in self._others:
+                    value = parameters[name]
+                    if type(value) is not kind or value != fixed:
+                        return self._examined(level, parameters)
+                return self._rules[level]
+        except (KeyError, struct.error):  # a name that is missing, no number
             pass
         return self._examined(level, parameters)
 
@@ -155,21 +168,15 @@ class Policy:
     def _examined(self, level: object, parameters: dict[str, object]) -> Rule:
         """Return what `at` does, for whatever it is asked."""
         number = self._number(level)
-        for name in parameters:
-            if name not in self._parameters:
-                self._refuse(f"unknown parameter {name!r}; accepted: {', '.join(self._parameters) or 'none'}")
-        for name in self._parameters:
-            if name not in parameters:
-                self._refuse(f"the parameter {name!r} is missing; accepted: {', '.join(self._parameters)}")
+        if parameters.keys() != self._parameters.keys():
+            self._refuse_names(parameters)
         if number >= len(self._rules):
-            last = len(self._rules) - 1
-            return self._answer(number, BEYOND, f"level {number} is beyond the audited ladder; accepted: 0 to {last}")
-        for name, part in self._parameters.items():
+            return self._answer(number, None, None)
+        for name, part, low, high in self._limits:
             value = parameters[name]
-            if not _inside(value, part):
-                accepted = _SHOWN.repr(part.fixed) if part.fixed is not None else f"{part.low!r} to {part.high!r}"
-                what = f"{name} = {_SHOWN.repr(value)} was not audited; accepted: {accepted}"
-                return self._answer(number, f"parameter {name}", what)
+            if low <= value <= high if isinstance(value, float) else _inside(value, part):
+                continue
+            return self._answer(number, name, value)
         return self._rules[number]
 
     def _number(self, level: object) -> int:
@@ -181,24 +188,31 @@ class Policy:
             self._refuse(f"{_SHOWN.repr(level)} is no level; accepted: a whole number from 0")
         return number
 
-    def _answer(self, level: int, reason: str, problem: str) -> Rule:
-        """Answer what the policy does not cover."""
+    def _refuse_names(self, parameters: dict[str, object]) -> NoReturn:
+        accepted = f"accepted: {', '.join(self._parameters) or 'none'}"
+        for name in parameters:
+            if name not in self._parameters:
+                self._refuse(f"unknown parameter {name!r}; {accepted}")
+        missing = next(name for name in self._parameters if name not in parameters)
+        self._refuse(f"the parameter {missing!r} is missing; {accepted}")
+
+    def _answer(self, level: int, name: str | None, value: object) -> Rule:
+        """Answer what the policy does not cover: the value of this parameter, or the level where there is no name."""
+        reason = BEYOND if name is None else f"parameter {name}"
         if self._raises:
-            raise OutsidePolicyError(f"{self._source}: {problem}", reason=reason)
+            what = self._beyond(level) if name is None else self._unaudited(name, value)
+            raise OutsidePolicyError(f"{self._source}: {what}", reason=reason)
         with self._lock:
             self._fallbacks[reason] += 1
-        paths = self._rules[level].paths if level < len(self._rules) else None
-        return Rule(
-            level=level,
-            scheme="alone",
-            narrow="float64",
-            wide=None,
-            draws="exact",
-            rounding="nearest",
-            paths=paths,
-            correction_paths=None,
-            outside=reason,
-        )
+        return self._references[level][reason] if level < len(self._rules) else _reference(level, None, reason)
+
+    def _beyond(self, level: int) -> str:
+        return f"level {level} is beyond the audited ladder; accepted: 0 to {len(self._rules) - 1}"
+
+    def _unaudited(self, name: str, value: object) -> str:
+        part = self._parameters[name]
+        accepted = _SHOWN.repr(part.fixed) if part.fixed is not None else f"{part.low!r} to {part.high!r}"
+        return f"{name} = {_SHOWN.repr(value)} was not audited; accepted: {accepted}"
 
     def _refuse(self, problem: str) -> NoReturn:
         raise PolicyError(f"{self._source}: {problem}")
@@ -207,6 +221,20 @@ class Policy:
 def _rule(one: LevelPart) -> Rule:
     names = [name for name in Rule.__struct_fields__ if name != "outside"]
     return Rule(**{name: getattr(one, name) for name in names})
+
+
+def _reference(level: int, paths: int | None, reason: str) -> Rule:
+    return Rule(
+        level=level,
+        scheme="alone",
+        narrow="float64",
+        wide=None,
+        draws="exact",
+        rounding="nearest",
+        paths=paths,
+        correction_paths=None,
+        outside=reason,
+    )
 
 
 def _values_of(names: tuple[str, ...]) -> Callable[[dict[str, object]], tuple[object, ...]]:
@@ -245,6 +273,22 @@ def _compare(known: KernelPart, kernel: Callable[..., Any] | str | Path, source:
         )
 
 
+def _packs(value: object) -> bool:
+    """Return whether an audited value is the only one that packs to its bytes, 0 and -0, and booleans, aside."""
+    return (
+        isinstance(value, int | float) and not isinstance(value, bool) and value not in (0, 1) and abs(value) < _WHOLE
+    )
+
+
+def _limits(part: ParameterPart) -> tuple[float, float]:
+    """Return between which floats a parameter is inside; between none where it is no number."""
+    if part.low is not None and part.high is not None:
+        return part.low, part.high
+    if isinstance(part.fixed, int | float) and not isinstance(part.fixed, bool):
+        return part.fixed, part.fixed
+    return math.inf, -math.inf
+
+
 def _inside(value: object, part: ParameterPart) -> bool:
     if part.fixed is not None:
         return _same(value, part.fixed)
@@ -254,20 +298,26 @@ def _inside(value: object, part: ParameterPart) -> bool:
 
 def _same(value: object, fixed: object) -> bool:
     """Return whether a value is the one in the policy; its depth is that of the policy's, whatever the value's."""
-    value = _listed(value)
-    if isinstance(fixed, list):
-        return isinstance(value, list | tuple) and len(value) == len(fixed) and all(map(_same, value, fixed))
-    if isinstance(fixed, bool) or isinstance(value, bool):
-        return isinstance(fixed, bool) and isinstance(value, bool) and fixed == value
+    if isinstance(fixed, bool):
+        return isinstance(value := _listed(value), bool) and value == fixed
+    if isinstance(fixed, int | float):
+        return _exact(value) == fixed
     if isinstance(fixed, str):
         return isinstance(value, str) and str.__eq__(value, fixed)
-    return _exact(value) == fixed
+    value = _listed(value)
+    assert isinstance(fixed, list)  # the last of what a parameter may be
+    return isinstance(value, list | tuple) and len(value) == len(fixed) and all(map(_same, value, fixed))
 
 
 def _exact(value: object) -> int | float | None:
-    """Return a number as Python's own, None for what is none; a boolean is none."""
-    value = _listed(value)
-    if isinstance(value, bool | list | tuple):
+    """Return a number as Python's own, with the value that float() or a whole number gives; a boolean is none."""
+    if isinstance(value, float):
+        return float(value)
+    if not isinstance(value, list):
+        value = _listed(value)
+        while isinstance(value, list) and len(value) == 1:  # an array of one number, of which float() makes it
+            value = value[0]
+    if isinstance(value, bool):
         return None
     try:
         if hasattr(value, "__index__"):
@@ -279,7 +329,5 @@ def _exact(value: object) -> int | float | None:
 
 def _listed(value: object) -> object:
     """Return arrays and scalars of NumPy, and of its like, as lists and scalars of Python."""
-    if type(value) in _PLAIN:
-        return value
     made = getattr(value, "tolist", None)
     return made() if callable(made) and not isinstance(value, type) else value
