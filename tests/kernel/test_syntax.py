@@ -178,6 +178,50 @@ class TestWhatDoesNot:
         assert digest("x = 1\n'a'") != digest("x = 1\n'b'")
         assert digest("f'a'") != digest("f'b'")
 
+    @pytest.mark.parametrize("values", [["ab", None], ["a", "b", None], ["", "ab", "", None, ""]])
+    def test_how_an_f_string_is_cut(self, values):
+        """Versions of Python cut the plain text of an f-string differently; neither that nor an empty format counts."""
+        name = ast.Name("x")
+        for spec in (None, ast.JoinedStr([]), ast.JoinedStr([ast.Constant("")])):
+            inner = ast.FormattedValue(name, -1, spec)
+            tree = ast.JoinedStr([inner if value is None else ast.Constant(value) for value in values])
+            expected = ast.JoinedStr([ast.Constant("ab"), ast.FormattedValue(name, -1)])
+            assert list(syntax.tree_words(tree)) == list(syntax.tree_words(expected))
+
+
+def nested(value):
+    """A tree as nested tuples and lists, by a walk of its own."""
+    if isinstance(value, ast.AST):
+        fields = [(f".{field}", nested(inside)) for field, inside in syntax._fields(value)]
+        constant = isinstance(value, ast.Constant)
+        return ("Constant", syntax._constant(value.value)) if constant else (type(value).__name__, fields)
+    return [nested(one) for one in value] if isinstance(value, list) else syntax._constant(value)
+
+
+def rebuilt(words):
+    """What `nested` gives, from the words alone, which are used up."""
+    word = words.pop(0)
+    if word.startswith("list "):
+        return [rebuilt(words) for _ in range(int(word.removeprefix("list ")))]
+    if word == "Constant":
+        return (word, words.pop(0))
+    if " " in word:
+        return word
+    fields = []
+    while words[0] != "end":
+        fields.append((words.pop(0), rebuilt(words)))
+    words.pop(0)
+    return (word, fields)
+
+
+@pytest.mark.parametrize("text", [SOURCE, CORPUS, Path(syntax.__file__).read_text("utf-8")])
+def test_the_words_hold_the_whole_tree(text):
+    """A tree can be built again from its words, so that no two trees have the same: but for what does not count."""
+    tree = syntax._parsed(text.encode())
+    words = list(syntax.tree_words(tree))
+    assert rebuilt(words) == nested(tree)
+    assert not words
+
 
 class TestAnySource:
     def test_what_is_no_python_counts_by_its_bytes(self):

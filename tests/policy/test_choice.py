@@ -129,8 +129,8 @@ class TestPaths:
     def test_a_variance_planned_from_a_bound(self, record):
         """Of a bounded branch the paths say what variance was planned; planned anew it has no fewer than it needs.
 
-        The record is given a plan from a bound ten times the sample variance; the paths worked out anew, with another
-        level changed, are those of that bound to within the rounding of the paths.
+        The record is given a plan from a bound 10,000 times the sample variance; the paths worked out anew, with
+        another level changed, are those of that bound to within the rounding of the paths.
         """
         costs = drawup._Draft(record, "", None)._level_costs
         own = {level: scheme_of(one) for level, one in enumerate(record.verdict.schemes)}
@@ -141,7 +141,7 @@ class TestPaths:
                 Part(variance=entry.arms[scheme.narrow].level_variance, cost=costs[level].path(scheme.narrow), least=32)
             ]
             if scheme.wide is not None:
-                variance = entry.corrections[f"{scheme.narrow}:{scheme.wide}"].variance * (10 if level == 1 else 1)
+                variance = entry.corrections[f"{scheme.narrow}:{scheme.wide}"].variance * (10_000 if level == 1 else 1)
                 found.append(
                     Part(variance=variance, cost=costs[level].correction(scheme.narrow, scheme.wide), least=32)
                 )

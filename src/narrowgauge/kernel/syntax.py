@@ -18,7 +18,7 @@ __all__ = ["imported_names", "syntax_digest", "tree_words"]
 
 _FORM = "narrowgauge-syntax/1"
 # `ctx` follows from where a node stands; `str` is an interpolation's own text, spaces included.
-_LEFT_OUT = frozenset({"ctx", "kind", "str", "type_comment", "type_ignores"})
+_LEFT_OUT = frozenset({"ctx", "str", "type_comment", "type_ignores"})
 _WITH_DOCSTRING = (ast.Module, ast.FunctionDef, ast.AsyncFunctionDef, ast.ClassDef)
 
 
