@@ -39,6 +39,7 @@ class TestChoice:
         assert schemes(document) == [SPLIT, SPLIT, REFERENCE, SPLIT]
         one = document.levels[2]
         assert (one.verdict, one.reason, one.correction_paths) == ("undecided", "budget", None)
+        assert len(said(document, "Level ")) == 1
         assert said(
             document, "Level 2 uses the reference: it is undecided whether low precision pays there, because the"
         )

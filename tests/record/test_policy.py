@@ -136,7 +136,12 @@ class TestReading:
                 "this is not JSON: Expecting property name enclosed in double quotes",
             ),
             ('{"a": [1e999]}', "a[0]", "the number is too large for float64"),
-            ('{"a": {"b": 1, "b": 2}}', "a", 'the key "b" stands more than once'),
+            ('{"a": {"b": 1, "b": 2, "c": 3}}', "a", 'the key "b" stands more than once'),
+            (
+                changed("levels", 0, "measured", "value", "arms", to={"float16": {"lost_additions": {"share": 2}}}),
+                "levels[0].measured.value.arms.float16.lost_additions.share",
+                "2 is not accepted; accepted: a number of at least 0 and of at most 1",
+            ),
         ],
     )
     def test_refused(self, text, path, problem):

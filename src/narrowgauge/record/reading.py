@@ -93,16 +93,8 @@ def _inside(shape: Any, value: object) -> list[tuple[str | int, object, Any]]:
         return [(key, element, get_args(shape)[1]) for key, element in value.items()]
     if isinstance(shape, type) and issubclass(shape, msgspec.Struct) and isinstance(value, dict):
         fields = msgspec.structs.fields(shape)
-        return [(one.name, value[one.name], _given(one.type)) for one in fields if one.name in value]
+        return [(one.name, value[one.name], one.type) for one in fields if one.name in value]
     return []
-
-
-def _given(kind: Any) -> Any:
-    """Return the type of a field that is there, where it may also be left out."""
-    if get_origin(kind) in (Union, types.UnionType):
-        rest = [one for one in get_args(kind) if one is not msgspec.UnsetType]
-        return Union[tuple(rest)]  # noqa: UP007  # the members are known only now
-    return kind
 
 
 def _problem(value: object, kind: Any) -> str:
