@@ -9,6 +9,7 @@ import pickle
 import subprocess
 import sys
 import threading
+import time
 
 import ml_dtypes
 import msgspec
@@ -128,6 +129,7 @@ class TestOutside:
             ([1, 2], [[1, 2], (1.0, 2.0), np.array([1, 2])], [[1], [1, 2, 3], [1, math.nan], np.array([[1, 2]]), 1]),
             ([[0.5], [1.5]], [np.array([[0.5], [1.5]])], [[0.5, 1.5], np.array([0.5, 1.5])]),
             (["a", "b"], [("a", "b")], [["a", "c"], "ab"]),
+            ([0.1, 1.0], [[0.1, 1], (0.1, np.float64(1.0))], [[0.1, True], [np.float32(0.1), 1.0]]),
             ([], [[], (), np.zeros(0)], [[0.0], ""]),
         ],
     )
@@ -176,7 +178,7 @@ class TestOutside:
         class Slow(dict):
             def __getitem__(self, key):
                 value = super().__getitem__(key)
-                threading.Event().wait(0)  # another thread's turn
+                time.sleep(0)  # another thread's turn
                 return value
 
         monkeypatch.setattr(policy, "_fallbacks", Slow(policy.fallbacks()))

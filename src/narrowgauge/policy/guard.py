@@ -107,7 +107,8 @@ class Policy:
         # All names are looked up then, so that an unknown one does not pass; arrays are never compared quickly.
         self._quickly = -1 if any(isinstance(value, list) for value in others.values()) else len(parameters)
         self._lock = threading.Lock()
-        self._fallbacks = dict.fromkeys([BEYOND, *(f"parameter {name}" for name in parameters)], 0)
+        self._reasons = {name: f"parameter {name}" for name in parameters}
+        self._fallbacks = dict.fromkeys([BEYOND, *self._reasons.values()], 0)
         self._references = [
             {reason: _reference(rule.level, rule.paths, reason) for reason in self._fallbacks} for rule in self._rules
         ]
@@ -167,16 +168,16 @@ class Policy:
 
     def _examined(self, level: object, parameters: dict[str, object]) -> Rule:
         """Return what `at` does, for whatever it is asked."""
-        number = self._number(level)
+        number = level if type(level) is int and level >= 0 else self._number(level)
         if parameters.keys() != self._parameters.keys():
             self._refuse_names(parameters)
         if number >= len(self._rules):
-            return self._answer(number, None, None)
+            return self._answer(number, BEYOND, None)
         for name, part, low, high in self._limits:
             value = parameters[name]
             if low <= value <= high if isinstance(value, float) else _inside(value, part):
                 continue
-            return self._answer(number, name, value)
+            return self._answer(number, self._reasons[name], value)
         return self._rules[number]
 
     def _number(self, level: object) -> int:
@@ -196,11 +197,10 @@ class Policy:
         missing = next(name for name in self._parameters if name not in parameters)
         self._refuse(f"the parameter {missing!r} is missing; {accepted}")
 
-    def _answer(self, level: int, name: str | None, value: object) -> Rule:
-        """Answer what the policy does not cover: the value of this parameter, or the level where there is no name."""
-        reason = BEYOND if name is None else f"parameter {name}"
+    def _answer(self, level: int, reason: str, value: object) -> Rule:
+        """Answer what the policy does not cover: the level, or the value of a parameter."""
         if self._raises:
-            what = self._beyond(level) if name is None else self._unaudited(name, value)
+            what = self._beyond(level) if reason == BEYOND else self._unaudited(reason, value)
             raise OutsidePolicyError(f"{self._source}: {what}", reason=reason)
         with self._lock:
             self._fallbacks[reason] += 1
@@ -209,7 +209,8 @@ class Policy:
     def _beyond(self, level: int) -> str:
         return f"level {level} is beyond the audited ladder; accepted: 0 to {len(self._rules) - 1}"
 
-    def _unaudited(self, name: str, value: object) -> str:
+    def _unaudited(self, reason: str, value: object) -> str:
+        name = next(name for name, known in self._reasons.items() if known == reason)
         part = self._parameters[name]
         accepted = _SHOWN.repr(part.fixed) if part.fixed is not None else f"{part.low!r} to {part.high!r}"
         return f"{name} = {_SHOWN.repr(value)} was not audited; accepted: {accepted}"
