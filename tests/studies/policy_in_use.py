@@ -131,7 +131,7 @@ def main() -> int:
     rows = [f"| {' | '.join(headings)} |", "|---" * len(headings) + "|"]
     for name, one in found.items():
         cells = [one.true_se, one.rmse, one.rmse / one.target, one.float64_rmse, one.off, one.near]
-        rows.append(f"| {name} | {one.target:g} | {one.true:.6g} | {' | '.join(f'{cell:.2g}' for cell in cells)} |")
+        rows.append(f"| {name} | {one.target:g} | {one.true:.6g} | {' | '.join(f'{cell:.3g}' for cell in cells)} |")
     answers = kept(document, found, cost)
     head = (__doc__ or "").strip().split("\n\n", 1)
     lines = ["# A policy in use", "", head[0].replace("A policy in use: the", "The"), "", head[1], ""]
@@ -140,9 +140,9 @@ def main() -> int:
         "",
         *rows,
         "",
-        f"A run by the policy costs {cost:,.0f}, counted path by path, where {document.plan.cost:,.0f} were planned "
-        f"({cost / document.plan.cost - 1:+.2%}); float64 costs {float64_cost / cost:.2f} times as much. "
-        f"The paths are those that {deciding(document)} needs.",
+        f"A run by the policy costs {cost:,.0f}, counted path by path, where {document.plan.cost:,.0f} were planned\n"
+        f"({cost / document.plan.cost - 1:+.2%}); float64 costs {float64_cost / cost:.2f} times as much. The paths"
+        f" are those that {deciding(document)} needs.",
         "",
         "All that is asked is so."
         if all(answers.values())
