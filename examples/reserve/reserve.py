@@ -41,12 +41,13 @@ def value(
 ):
     """Return, for each path, what the option pays (EUR/h, discounted) and the turbine's mean output (MW).
 
-    `dW` holds Brownian increments, shaped (steps, 2, paths); `h` is the length of a step, in quarters.
+    `dW` holds Brownian increments, shaped (steps, 2, paths); `h` is the length of a step, in quarters. Every array has
+    the type of `dW`.
     """
     steps, _, paths = dW.shape
-    x = np.full(paths, price_start)
-    q = np.full(paths, inflow_start)
-    total = np.zeros(paths)
+    x = np.full(paths, price_start, dtype=dW.dtype)
+    q = np.full(paths, inflow_start, dtype=dW.dtype)
+    total = np.zeros(paths, dtype=dW.dtype)
     independent = math.sqrt(1.0 - correlation**2)
     for n in range(steps):
         water = np.maximum(q, 0.0)

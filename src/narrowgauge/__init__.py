@@ -6,13 +6,18 @@ from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from narrowgauge.api import Audit, audit
+    from narrowgauge.policy.guard import Policy
 
-__all__ = ["Audit", "audit"]
+__all__ = ["Audit", "Policy", "audit"]
 __version__ = "0.1.0"
 
 
 def __getattr__(name: str) -> Any:
-    """Import the audit only when it is asked for, so that `import narrowgauge` costs nothing."""
+    """Import the audit, or the policy, only when it is asked for, so that `import narrowgauge` costs nothing."""
+    if name == "Policy":
+        from narrowgauge.policy.guard import Policy
+
+        return Policy
     if name in __all__:
         from narrowgauge import api
 

@@ -22,7 +22,8 @@ from narrowgauge.conduct.separated import draws_entry
 from narrowgauge.conduct.trial import try_arms
 from narrowgauge.errors import AuditFileError, AuditFolderError, NarrowgaugeError
 from narrowgauge.kernel.auditfile import AuditFile, audit_file_from, read_audit_file, with_draws
-from narrowgauge.kernel.loading import find_kernel, refuse_nested
+from narrowgauge.kernel.identity import versions_of
+from narrowgauge.kernel.loading import KernelSource, find_kernel, refuse_nested
 from narrowgauge.measure.block import BlockRunner
 from narrowgauge.measure.drawplan import worked_out
 from narrowgauge.measure.provenance import provenance
@@ -31,6 +32,7 @@ from narrowgauge.measure.task import Bench, pinned
 from narrowgauge.measure.workers import Workers, engine_for
 from narrowgauge.record.audit import AuditRecord, KernelEntry, TrialEntry
 from narrowgauge.record.canonical import canonical_text, read_strict, write_atomically
+from narrowgauge.record.source import SourceEntry
 from narrowgauge.record.table import accumulation_rows, level_rows, levels_csv
 
 if TYPE_CHECKING:
@@ -125,6 +127,7 @@ def run_audit(
         if file.kernel.takes == "rng":
             file = with_draws(file, *engine.call(_draws))
         entry = KernelEntry(run=file.kernel.run, fingerprint=kernel.digest())
+        source = _source(kernel)
         ledger = None
         if place is not None:
             ledger = held.enter_context(_claim(place, file, entry, replace=replace, resume=resume))
@@ -136,9 +139,10 @@ def run_audit(
         domain = explore(file, outcome, engine=engine, ledger=ledger, watcher=watcher)
         where = outcome.fingerprints if domain is None else tuple(sorted({*outcome.fingerprints, *domain.fingerprints}))
         made = provenance(time.perf_counter() - start, engine.title, where, resumed, damaged)
+        made["imported"] = versions_of(source.imports)
         if domain is not None:
             made["resumed_looks"] = len(ledger.kept_looks) if ledger is not None else 0
-        record = account(file, outcome, entry, made)
+        record = msgspec.structs.replace(account(file, outcome, entry, made), source=source)
         if domain is not None:
             record = msgspec.structs.replace(record, domain=domain.entry)
         if place is not None and ledger is not None:
@@ -170,6 +174,17 @@ def _tell(tell: Callable[[str], None], folder: Path, ledger: Ledger) -> None:
         tell(f"{folder}: {blocks} damaged and run again")
     elif not ledger.kept:
         tell(f"{folder}: holds no finished blocks to go on with; the audit begins anew")
+
+
+def _source(kernel: KernelSource) -> SourceEntry:
+    """Return how a policy will know the kernel again."""
+    found = kernel.origin()
+    return SourceEntry(
+        fingerprint=found.fingerprint,
+        covers=found.covers,
+        modules=list(found.modules),
+        imports=list(found.imports),
+    )
 
 
 def _draws(bench: Bench) -> tuple[int, Literal["sum", "none"]]:

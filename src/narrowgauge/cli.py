@@ -1,4 +1,4 @@
-"""The command line: audit a kernel, try it out, or draft an audit file; the only module that prints.
+"""The command line: draft an audit file, audit a kernel, draw up a policy; the only module that prints.
 
 Exit codes: 0 done; 2 wrong usage, a wrong file, or a kernel that cannot be audited; 70 a fault of this program;
 130 interrupted; 141 the reader of the output went away. What a command needs is imported when it runs, so that
@@ -146,6 +146,17 @@ def _parser() -> argparse.ArgumentParser:
     )
     draft.add_argument("kernel", metavar="FILE.py:FUNCTION", help="the file and the function in it")
     draft.set_defaults(command=_draft)
+
+    policy = commands.add_parser(
+        "policy",
+        help="draw up the precision policy of an audit",
+        description="Writes what an audit found as a policy, a JSON file that running code can obey.",
+        allow_abbrev=False,
+    )
+    policy.add_argument("folder", metavar="AUDITDIR", help="the folder that an audit has written")
+    policy.add_argument("--out", metavar="FILE", help="where to write it (default: policy.json in that folder)")
+    policy.add_argument("--c-header", metavar="FILE", help="write the same rules as a C header, too")
+    policy.set_defaults(command=_policy)
     return parser
 
 
@@ -211,6 +222,23 @@ def _draft(options: argparse.Namespace) -> int:
     from narrowgauge.kernel.draft import draft
 
     _write(draft(options.kernel))
+    return 0
+
+
+def _policy(options: argparse.Namespace) -> int:
+    from narrowgauge.policy.drawup import draw_up, read_audit, write_policy
+    from narrowgauge.report.policy import policy_lines
+
+    folder = Path(options.folder)
+    out = Path(options.out) if options.out is not None else folder / "policy.json"
+    document = draw_up(*read_audit(folder), source=options.folder)
+    write_policy(document, out)
+    header = None if options.c_header is None else Path(options.c_header)
+    if header is not None:
+        from narrowgauge.policy.cheader import write_c_header
+
+        write_c_header(document, header)
+    _show(policy_lines(document, out, header))
     return 0
 
 

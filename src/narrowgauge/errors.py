@@ -13,6 +13,8 @@ __all__ = [
     "EscapeError",
     "KernelError",
     "NarrowgaugeError",
+    "OutsidePolicyError",
+    "PolicyError",
     "RaisedElsewhereError",
     "RefusedError",
     "SettingsMixedError",
@@ -68,6 +70,18 @@ class KernelError(NarrowgaugeError):
 
 class WorkerError(NarrowgaugeError):
     """The workers cannot do the work: a process, an executor or a cluster fails, or finds another kernel."""
+
+
+class PolicyError(NarrowgaugeError):
+    """No policy can be drawn up from an audit, or a policy does not cover what is asked of it."""
+
+
+class OutsidePolicyError(PolicyError):
+    """A level or a parameter is not what was audited; `reason` is "level", or "parameter" and its name."""
+
+    def __init__(self, message: str, *, reason: str = "") -> None:
+        self.reason = reason
+        super().__init__(message)
 
 
 class RaisedElsewhereError(Exception):

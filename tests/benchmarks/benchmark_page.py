@@ -29,6 +29,10 @@ TITLES: dict[str, tuple[str, str]] = {
     "workers": ("Workers", "In each round the audit with one worker, with two processes, and with two dask workers."),
     "memory": ("Memory", "In each round a process for each number of paths."),
     "start": ("Start-up", "In each round both commands."),
+    "policy": (
+        "A question to a policy",
+        "In each round each kind of question in turn, with the least that a program would do by hand.",
+    ),
 }
 
 

@@ -22,6 +22,7 @@ from benchmark_page import TITLES, page
 from benchmark_sizes import SIZES, Size
 from kernel_alone import kernel_alone, kernel_alone_uncompiled
 from peak_memory import peak_memory
+from policy_questions import policy_questions
 from several_workers import several_workers
 from start_up import start_up
 from threadpoolctl import threadpool_limits
@@ -36,6 +37,7 @@ BENCHMARKS: dict[str, Callable[[Size], Section]] = {
     "workers": several_workers,
     "memory": peak_memory,
     "start": start_up,
+    "policy": policy_questions,
 }
 REPORTS = Path(__file__).parents[2] / "reports"
 

@@ -12,7 +12,18 @@ from dataclasses import dataclass
 
 from narrowgauge.judge.gain import LevelView, Scheme
 
-__all__ = ["Allocation", "Branch", "CommonLevel", "CommonPlan", "LevelPlan", "allocate", "common_plan"]
+__all__ = [
+    "Allocation",
+    "Branch",
+    "CommonLevel",
+    "CommonPlan",
+    "LevelPlan",
+    "Part",
+    "allocate",
+    "common_plan",
+    "least_paths",
+    "planned",
+]
 
 _LEAST_PATHS = 32
 _PATHS_PER_KURTOSIS = 10
@@ -73,7 +84,7 @@ class CommonPlan:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
-class _Part:
+class Part:
     """One branch: its variance, the cost of a path, the least number of paths, whether the variance is a bound."""
 
     variance: float
@@ -91,8 +102,20 @@ def allocate(
     independent. A correction with too few events is planned from upper bounds of its variance that hold on all levels
     together with probability 1 - alpha.
     """
-    budget = (1.0 - bias_share**2) * rmse**2
     parts = {level: _parts(views[level], schemes[level], alpha / len(schemes)) for level in schemes}
+    return planned(parts, schemes, rmse, bias_share)
+
+
+def least_paths(kurtosis: float | None) -> int:
+    """Return the fewest paths of a branch: of a correction branch by the kurtosis of its correction."""
+    return max(_LEAST_PATHS, math.ceil(_PATHS_PER_KURTOSIS * (kurtosis or 0.0)))
+
+
+def planned(
+    parts: Mapping[int, Sequence[Part]], schemes: Mapping[int, Scheme], rmse: float, bias_share: float
+) -> Allocation:
+    """Return the paths of branches whose variances and costs are known; one or two of them a level."""
+    budget = (1.0 - bias_share**2) * rmse**2
     total = sum(math.sqrt(part.variance * part.cost) for branches in parts.values() for part in branches)
     plans = []
     for level, branches in parts.items():
@@ -145,18 +168,18 @@ def _most(paths: Mapping[str, int]) -> Branch:
     return Branch(paths=paths[decider], decided_by=decider)
 
 
-def _parts(view: LevelView, scheme: Scheme, alpha: float) -> Sequence[_Part]:
+def _parts(view: LevelView, scheme: Scheme, alpha: float) -> Sequence[Part]:
     """Return the branches of a scheme."""
     low = view.tally.differences[scheme.narrow].moments.variance
-    found = [_Part(variance=low, cost=view.costs.path(scheme.narrow), least=_LEAST_PATHS)]
+    found = [Part(variance=low, cost=view.costs.path(scheme.narrow), least=least_paths(None))]
     if scheme.wide is not None:
         moments = view.tally.corrections[scheme.narrow, scheme.wide].moments
         bound = view.correction_high(scheme, alpha)
         found.append(
-            _Part(
+            Part(
                 variance=moments.variance if bound is None else max(bound, moments.variance),
                 cost=view.costs.correction(scheme.narrow, scheme.wide),
-                least=max(_LEAST_PATHS, math.ceil(_PATHS_PER_KURTOSIS * (moments.kurtosis or 0.0))),
+                least=least_paths(moments.kurtosis),
                 bounded=bound is not None,
             )
         )

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import os
 from collections.abc import Callable, Iterator, Mapping
 from contextlib import contextmanager
@@ -24,6 +25,7 @@ from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.audittables import RULES, KernelTable, shown
 from narrowgauge.kernel.command import Command
 from narrowgauge.kernel.fingerprint import fingerprint
+from narrowgauge.kernel.identity import Origin, origin_of_sources
 from narrowgauge.kernel.library import Library
 
 __all__ = [
@@ -77,6 +79,24 @@ class KernelSource:
         except OSError as problem:
             what = f"cannot read {problem.filename}: {problem.strerror}"
             raise AuditFileError(self.source, "kernel.modules", what, "Python files") from None
+
+    def origin(self) -> Origin:
+        """Return by what a policy knows the kernel: its syntax trees where it has a file of Python, else `digest`.
+
+        A function of the user's that makes normals counts in `digest` alone. Raises AuditFileError as that does.
+        """
+        own = self.code.co_filename if self.function is None and self.code is not None else ""
+        name = self.name
+        if isinstance(self.function, FunctionType):
+            own, name = self.function.__code__.co_filename, self.function.__qualname__
+        if own.endswith(".py") and Path(own).is_file():
+            with contextlib.suppress(OSError):  # a module that cannot be read, of which `digest` tells
+                return origin_of_sources(Path(own), name, self.sources)
+        return Origin(
+            fingerprint=self.digest(),
+            covers="code" if self.foreign is None else "bytes",
+            modules=self.sources.listed,
+        )
 
 
 @contextmanager

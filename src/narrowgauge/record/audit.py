@@ -35,6 +35,7 @@ from narrowgauge.record.reach import (
     ReachLine,
     TrialEntry,
 )
+from narrowgauge.record.source import SourceEntry
 
 __all__ = [
     "SCHEMA",
@@ -317,6 +318,7 @@ class AuditRecord(Entry, frozen=True, kw_only=True):
 
     schema: str
     kernel: KernelEntry
+    source: SourceEntry | msgspec.UnsetType = msgspec.UNSET
     asked: dict[str, object]
     rules: RulesEntry
     arms: dict[str, ArithmeticEntry]

@@ -11,12 +11,13 @@ import math
 import os
 import re
 import secrets
+from collections.abc import Callable, Iterable
 from pathlib import Path
 from typing import NoReturn
 
 from narrowgauge.errors import NarrowgaugeError
 
-__all__ = ["DocumentError", "canonical_text", "read_strict", "write_atomically"]
+__all__ = ["DocumentError", "below", "canonical_text", "read_strict", "write_atomically"]
 
 _DEEPEST = 64
 _LARGEST = 64 * 2**20
@@ -62,28 +63,33 @@ def write_atomically(path: Path, text: str) -> None:
         raise
 
 
-def read_strict(text: str, source: str) -> object:
+def read_strict(text: str, source: str, largest: int | None = None) -> object:
     """Return the document in JSON text; DocumentError says what is wrong, and at which path.
 
     Refused are duplicate keys, NaN and infinities (also as a number too large for float64), unpaired
-    surrogates, nesting past 64, and text of more than 64 MiB in UTF-8.
+    surrogates, nesting past 64, and text of more than `largest` bytes in UTF-8 (64 MiB).
     """
     size = len(text) if text.isascii() else len(text.encode("utf-8", "surrogatepass"))
-    if size > _LARGEST:
-        problem = f"the document has {size} bytes, at most {_LARGEST} are accepted"
+    if size > (most := _LARGEST if largest is None else largest):
+        problem = f"the document has {size} bytes, at most {most} are accepted"
         raise DocumentError(source, "", problem)
     try:
-        # Problems are left in the document as marks: only the walk over the whole knows their path.
-        document = json.loads(text, object_pairs_hook=_object, parse_constant=_Constant)
+        document = _parsed(text, source)
+    except ValueError:  # an integer with more digits than Python converts
+        document = _parsed(text, source, _integer)
+    _check_read(document, source, "", 0)
+    return document
+
+
+def _parsed(text: str, source: str, parse_int: Callable[[str], object] | None = None) -> object:
+    """Return what the text holds; some problems are left as marks: only the walk over the whole knows their path."""
+    try:
+        return json.loads(text, object_pairs_hook=_object, parse_constant=_Constant, parse_int=parse_int)
     except RecursionError:
         raise DocumentError(source, "", f"nested more than {_DEEPEST} deep") from None
     except json.JSONDecodeError as problem:
         where = f"line {problem.lineno}, column {problem.colno}"
         raise DocumentError(source, "", f"this is not JSON: {problem.msg} ({where})") from None
-    except ValueError as problem:  # an integer with more digits than Python converts
-        raise DocumentError(source, "", f"this cannot be read: {problem}") from None
-    _check_read(document, source, "", 0)
-    return document
 
 
 class _Constant:
@@ -91,6 +97,13 @@ class _Constant:
 
     def __init__(self, name: str) -> None:
         self.name = name
+
+
+class _TooLong:
+    """Stands in a document where the text has an integer with more digits than Python converts."""
+
+    def __init__(self, digits: int) -> None:
+        self.digits = digits
 
 
 class _Duplicate:
@@ -104,11 +117,22 @@ def _object(pairs: list[tuple[str, object]]) -> object:
     document = dict(pairs)
     if len(document) == len(pairs):
         return document
-    keys = [key for key, _ in pairs]
-    return _Duplicate(next(key for place, key in enumerate(keys) if key in keys[:place]))
+    seen: set[str] = set()
+    for key, _ in pairs:
+        if key in seen:
+            break
+        seen.add(key)
+    return _Duplicate(key)
 
 
-def _below(path: str, step: str | int) -> str:
+def _integer(text: str) -> object:
+    try:
+        return int(text)
+    except ValueError:
+        return _TooLong(len(text.lstrip("-")))
+
+
+def below(path: str, step: str | int) -> str:
     """Return the path of an element, such as quantities.value.levels[3].gain; unusual keys are quoted."""
     if isinstance(step, int):
         return f"{path}[{step}]"
@@ -116,10 +140,10 @@ def _below(path: str, step: str | int) -> str:
     return f"{path}.{key}" if path else key
 
 
-def _elements(value: object) -> list[tuple[str | int, object]]:
+def _elements(value: object) -> Iterable[tuple[str | int, object]]:
     if isinstance(value, dict):
-        return list(value.items())
-    return list(enumerate(value)) if isinstance(value, list | tuple) else []
+        return value.items()
+    return enumerate(value) if isinstance(value, list | tuple) else ()
 
 
 def _paired(text: str) -> bool:
@@ -143,7 +167,7 @@ def _check_writable(value: object, path: str, depth: int) -> None:
             raise TypeError(f"{where}: the key {step!r} is of type {type(step).__name__}, not str")
         if isinstance(step, str) and not _paired(step):
             raise ValueError(f"{where}: the key {json.dumps(step)} has an unpaired surrogate")
-        _check_writable(element, _below(path, step), depth + 1)
+        _check_writable(element, below(path, step), depth + 1)
 
 
 def _check_read(value: object, source: str, path: str, depth: int) -> None:
@@ -156,6 +180,8 @@ def _check_read(value: object, source: str, path: str, depth: int) -> None:
         refuse(f"the key {json.dumps(value.key)} stands more than once")
     if isinstance(value, _Constant):
         refuse(f"{value.name} is not a finite number")
+    if isinstance(value, _TooLong):
+        refuse(f"this cannot be read: an integer of {value.digits} digits")
     if isinstance(value, float) and not math.isfinite(value):
         refuse("the number is too large for float64")
     if isinstance(value, str) and not _paired(value):
@@ -163,4 +189,4 @@ def _check_read(value: object, source: str, path: str, depth: int) -> None:
     for step, element in _elements(value):
         if isinstance(step, str) and not _paired(step):
             refuse(f"the key {json.dumps(step)} has an unpaired surrogate")
-        _check_read(element, source, _below(path, step), depth + 1)
+        _check_read(element, source, below(path, step), depth + 1)

@@ -1,0 +1,145 @@
+"""Whether a kernel is the one that was audited: its fingerprint, what that covers, and what it cannot see.
+
+It is that of the syntax trees of the function's file and of the listed modules where there are any, so that formatting
+does not change it and every version of Python gives the same. Importing this module imports neither numpy nor scipy.
+"""
+
+from __future__ import annotations
+
+import functools
+import hashlib
+import sys
+from collections.abc import Callable, Iterable, Sequence
+from dataclasses import dataclass
+from importlib import metadata
+from pathlib import Path
+from types import FunctionType
+from typing import Any, Literal
+
+from narrowgauge.dispatch.modules import Sources
+from narrowgauge.errors import PolicyError
+from narrowgauge.kernel.syntax import imported_names, syntax_digest
+
+__all__ = ["Covers", "Origin", "identity_of", "origin_of_sources", "versions_of"]
+
+Covers = Literal["syntax trees", "bytes", "code"]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Origin:
+    """Where a kernel comes from: `fingerprint` of what it `covers`, `imports` that it does not follow."""
+
+    fingerprint: str
+    covers: Covers
+    modules: tuple[str, ...] = ()
+    imports: tuple[str, ...] = ()
+
+
+def origin_of_sources(own: Path, name: str, sources: Sources) -> Origin:
+    """Return the origin of the function of that name in a file, with the listed modules of `sources`.
+
+    Raises OSError where a file cannot be read.
+    """
+    listed = sources.texts()
+    for known in (None if sources.kernel is None else sources.kernel.name, sources.name_of(own.resolve())):
+        if known is not None:
+            listed.pop(known, None)
+    text = sources.text(str(own))
+    imports = set().union(imported_names(text), *map(imported_names, listed.values()))
+    around = {module.partition(".")[0] for module in listed}
+    return Origin(
+        fingerprint=syntax_digest(text, name, listed),
+        covers="syntax trees",
+        modules=sources.listed,
+        imports=tuple(sorted(imports - around)),
+    )
+
+
+def identity_of(kernel: Callable[..., Any] | str | Path, *, run: str, covers: Covers, modules: Sequence[str]) -> str:
+    """Return the fingerprint of a kernel that is there now, to be compared with that of a policy.
+
+    `kernel` is the function, or what an audit file's kernel.run says ("file.py:function", from the current folder), or
+    the path of a library. `run`, `covers` and `modules` are those of the policy's kernel. Nothing of the kernel's is
+    imported or run. Raises PolicyError where there is nothing to compare with.
+    """
+    try:
+        if covers == "bytes":
+            return _bytes_of(kernel)
+        function = None if isinstance(kernel, str | Path) else _function(kernel)
+        if covers == "code":
+            return _code_of(function, modules)
+        name = run.rpartition(":")[2]
+        if function is None:
+            path, name = _located(str(kernel))
+        else:
+            path = Path(function.__code__.co_filename)
+            # Under another name in its module it is another kernel, whatever its file.
+            name = name if _is_named(kernel, function, name) else function.__qualname__
+        sources = Sources([path.parent], modules, last=[path.parent])
+        missing = next((module for module in modules if sources.find(module) is None), None)
+        if missing is not None:
+            raise PolicyError(f"the module {missing!r}, which the policy's fingerprint covers, is not to be found")
+        return origin_of_sources(path, name, sources).fingerprint
+    except OSError as problem:
+        raise PolicyError(f"the kernel cannot be read: {problem.filename}: {problem.strerror}") from None
+
+
+def versions_of(imports: Iterable[str]) -> dict[str, str]:
+    """Return the versions of the packages that these top-level modules belong to, as far as they are installed."""
+    found: dict[str, str] = {}
+    others: list[str] = []
+    for name in sorted(set(imports)):
+        try:
+            found[name] = metadata.version(name)
+        except metadata.PackageNotFoundError:
+            others.append(name)
+    if others:  # of another name than the module's; looking through all that is installed takes a while
+        owners = metadata.packages_distributions()
+        names = sorted({owner for name in others for owner in owners.get(name, ())})
+        found |= {owner: metadata.version(owner) for owner in names}
+    return found
+
+
+def _bytes_of(kernel: object) -> str:
+    if not isinstance(kernel, str | Path):
+        raise PolicyError("the policy's kernel is a library, not a Python function; accepted: the path of the library")
+    return f"sha256:{hashlib.sha256(Path(kernel).read_bytes()).hexdigest()}"
+
+
+def _code_of(function: FunctionType | None, modules: Sequence[str]) -> str:
+    if function is None:
+        raise PolicyError("the policy's kernel has no file: its code was audited; accepted: the function itself")
+    from narrowgauge.kernel.fingerprint import fingerprint
+
+    return fingerprint(Sources([], modules).texts(), function)
+
+
+def _function(kernel: Any) -> FunctionType:
+    """Return the Python function inside what is called: a partial, a method, or what a compiler made of one."""
+    for _ in range(16):
+        if isinstance(kernel, FunctionType):
+            return kernel
+        if isinstance(kernel, functools.partial):
+            kernel = kernel.func
+        else:
+            kernel = getattr(kernel, "py_func", None) or getattr(kernel, "__func__", None)
+    raise PolicyError("the kernel is no Python function; accepted: a function, or file.py:function")
+
+
+def _is_named(kernel: object, function: FunctionType, name: str) -> bool:
+    """Return whether a function stands in its module under a name, or is what stands there, compiled or wrapped."""
+    there = function.__globals__.get(name)
+    return function.__qualname__ == name or there is kernel or there is function
+
+
+def _located(run: str) -> tuple[Path, str]:
+    """Return the file and the function's name of "file.py:function" or "package.module:function"."""
+    target, _, name = run.rpartition(":")
+    if not target:
+        raise PolicyError(f"{run!r} names no function; accepted: file.py:function, or package.module:function")
+    if target.endswith(".py"):
+        return Path(target), name
+    found = Sources([Path(folder) for folder in sys.path[:1]]).find(target)
+    if found is None or found.file is None:
+        raise PolicyError(f"there is no Python module {target!r}; accepted: file.py:function, or an importable module")
+    return Path(found.file), name

@@ -1,0 +1,1 @@
+"""The precision policy: drawn up from an audit, obeyed by running code, checked by the gate."""
