@@ -17,7 +17,7 @@ from narrowgauge.policy.drawup import draw_up, read_audit, write_policy
 from narrowgauge.record.canary import CanaryEntry
 from narrowgauge.record.canonical import DocumentError
 from narrowgauge.record.costs import CostEntry
-from narrowgauge.record.policy import DomainPart, ParameterPart, policy_text, read_policy, read_policy_text
+from narrowgauge.record.policy import ParameterPart, policy_text, read_policy, read_policy_text
 
 
 class TestContents:
@@ -101,14 +101,6 @@ class TestContents:
         assert policy(record).assumed["kernel.layout"] == "steps, paths"
         assert policy(record).assumed["target.bias_share"] == 0.25
         assert list(policy(record).assumed) == record.asked["assumed"]
-
-    def test_another_domain(self, record):
-        """A domain that was audited takes the place of the single point, and its remarks are cautions."""
-        domain = DomainPart(parameters={}, scenarios=36, failing_below=0.08, remarks=["One corner was refused."])
-        document = policy(record, domain=domain)
-        assert document.domain == domain
-        assert "One corner was refused." in document.cautions
-        assert not any("Nothing was audited beside" in one for one in document.cautions)
 
     def test_approximate_draws(self, record):
         """An arm with approximate draws is a format and a kind of draws."""

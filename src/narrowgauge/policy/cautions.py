@@ -30,10 +30,10 @@ _WHY = {
 }
 
 
-def cautions(record: AuditRecord, choices: Mapping[int, Choice], domain: DomainPart, *, point: bool) -> list[str]:
+def cautions(record: AuditRecord, choices: Mapping[int, Choice], domain: DomainPart) -> list[str]:
     """Return every caution that a policy carries, what holds for all of them first."""
     found = [_EVIDENCE, *(one for one in record.cautions if one != CAUTIONS[0])]
-    found += [_POINT] if point else []
+    found += [_POINT] if record.domain is None else []
     found += domain.remarks
     if not isinstance(record.costs, UnsetType):
         found.append(_MEASURED)
@@ -79,7 +79,9 @@ def _replaced(choices: Mapping[int, Choice]) -> Iterable[str]:
     for level, choice in choices.items():
         if choice.kept or choice.verdict == "undecided":
             continue
-        if choice.reason == "not judged":
+        if choice.reason == "not tried in the domain":
+            why = "the scheme that pays there is not the one that the scenarios of the domain tried"
+        elif choice.reason == "not judged":
             why = f"{choice.asked.narrow}, which the audit planned, is not among formats.narrow and was not judged"
         else:
             why = f"{choice.asked.narrow}, which the audit planned, does not pay for every quantity"

@@ -28,6 +28,7 @@ from narrowgauge.measure.moments import BATCHES
 from narrowgauge.policy.cautions import cautions, unseen
 from narrowgauge.policy.choice import REFERENCE, Choice, chosen
 from narrowgauge.policy.plan import replanned
+from narrowgauge.policy.region import claimed_box, held_in_box, single_point
 from narrowgauge.record import audit as audited
 from narrowgauge.record import policy as made
 from narrowgauge.record.audit import AuditRecord
@@ -53,19 +54,20 @@ def read_audit(folder: Path) -> tuple[AuditRecord, str]:
     return converted(document, AuditRecord, str(path)), _sha256(text)
 
 
-def draw_up(
-    record: AuditRecord, digest: str, *, source: str = "audit", domain: made.DomainPart | None = None
-) -> PolicyDocument:
-    """Return the policy that an audit supports; `digest` is that of its file, `domain` what else it holds for.
+def draw_up(record: AuditRecord, digest: str, *, source: str = "audit") -> PolicyDocument:
+    """Return the policy that an audit supports; `digest` is that of its file.
 
     Raises PolicyError, with what messages call the audit and the reason, where it supports none: no target, a reference
-    that is not finite, levels that do not telescope or are not coupled, an audit that does not say what its kernel was.
+    that is not finite, levels that do not telescope or are not coupled, an audit that does not say what its kernel was,
+    scenarios of which not even the audited point passes.
     """
     reason = _unsupported(record)
     if reason is not None:
         raise PolicyError(f"{source}: no policy: {reason}")
     try:
-        return _Draft(record, digest, domain).document()
+        return _Draft(record, digest).document()
+    except PolicyError as problem:
+        raise PolicyError(f"{source}: no policy: {problem}") from None
     except (KeyError, IndexError) as problem:
         what = problem.args[0] if isinstance(problem, KeyError) else "a level"
         raise PolicyError(f"{source}: the record is not whole: it lacks {what}") from None
@@ -108,8 +110,8 @@ def _unsupported(record: AuditRecord) -> str | None:
 class _Draft:
     """A policy in the making."""
 
-    def __init__(self, record: AuditRecord, digest: str, domain: made.DomainPart | None) -> None:
-        self._record, self._digest, self._given = record, digest, domain
+    def __init__(self, record: AuditRecord, digest: str) -> None:
+        self._record, self._digest = record, digest
         self._kernel, self._ladder = self._asked(KernelTable), self._asked(LadderTable)
         self._target, self._sampling = self._asked(TargetTable), self._asked(SamplingTable)
         self._formats, self._costs = self._asked(FormatsTable), self._asked(CostTable)
@@ -117,13 +119,15 @@ class _Draft:
             steps = {name: one.cost for name, one in record.costs.items()}
             self._costs = msgspec.structs.replace(self._costs, **steps)
         self._level_costs = {level: self._priced(level) for level in self._ladder.levels}
-        self._choices = {level: chosen(record, level, self._level_costs[level]) for level in self._ladder.levels}
+        choices = {level: chosen(record, level, self._level_costs[level]) for level in self._ladder.levels}
+        self._choices = choices if record.domain is None else held_in_box(record.domain, choices)
 
     def document(self) -> PolicyDocument:
         """Return the policy."""
         record, target = self._record, self._target
         plans, plan = self._planned()
-        domain = self._given or self._point()
+        parameters = _mapping(record.asked["parameters"])
+        domain = single_point(parameters) if record.domain is None else claimed_box(record.domain, parameters)
         rmse = {name: one.allocation.rmse or math.nan for name, one in record.quantities.items()}
         laws = {
             name: {arm: _laws(one) for arm, one in quantity.accumulation.items()}
@@ -151,7 +155,7 @@ class _Draft:
             cost=self._cost(),
             evidence=self._evidence(),
             assumed={key: _looked_up(record.asked, key) for key in _texts(record.asked["assumed"])},
-            cautions=cautions(record, self._choices, domain, point=self._given is None),
+            cautions=cautions(record, self._choices, domain),
         )
 
     def _asked(self, kind: type[_Table]) -> _Table:
@@ -261,15 +265,6 @@ class _Draft:
         """Return how many standard errors an interval reaches, at the confidence of one look."""
         looks = max(1, (self._sampling.most_paths // self._sampling.paths).bit_length())
         return _quantile(1 - (1 - self._sampling.confidence) / looks / 2, blocks * BATCHES - 1)
-
-    def _point(self) -> made.DomainPart:
-        parameters = _mapping(self._record.asked["parameters"])
-        return made.DomainPart(
-            parameters={name: _plainly(made.ParameterPart, fixed=value) for name, value in parameters.items()},
-            scenarios=1,
-            failing_below=None,
-            remarks=[],
-        )
 
     def _known(self) -> made.KernelPart:
         source, provenance = self._record.source, self._record.provenance
