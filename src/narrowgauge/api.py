@@ -12,7 +12,10 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal
 
+from msgspec.structs import replace as changed
+
 from narrowgauge.conduct.account import account
+from narrowgauge.conduct.lines import line_study
 from narrowgauge.conduct.owntrial import examine_own
 from narrowgauge.conduct.run import Watcher, run
 from narrowgauge.conduct.trial import try_arms
@@ -27,6 +30,7 @@ from narrowgauge.measure.task import Bench, pinned
 from narrowgauge.measure.workers import Workers, engine_for
 from narrowgauge.record.audit import AuditRecord, KernelEntry, TrialEntry
 from narrowgauge.record.canonical import canonical_text, read_strict, write_atomically
+from narrowgauge.record.linetable import line_rows, lines_csv
 from narrowgauge.record.table import accumulation_rows, level_rows, levels_csv
 
 if TYPE_CHECKING:
@@ -34,7 +38,7 @@ if TYPE_CHECKING:
 
 __all__ = ["Audit", "audit", "run_audit", "try_out"]
 
-_RECORD, _LEVELS = "audit.json", "levels.csv"
+_RECORD, _LEVELS, _LINES = "audit.json", "levels.csv", "lines.csv"
 
 
 class Audit:
@@ -60,6 +64,11 @@ class Audit:
         fields = ("file", "line", "operation", "route", "count")
         found = self.record.reach.lines if self.record.reach is not None else []
         return _frame([{name: getattr(line, name) for name in fields} for line in found])
+
+    @property
+    def shares(self) -> pd.DataFrame:
+        """One row per format, quantity and line or input: its share of the variances; no rows without [lines]."""
+        return _frame(line_rows(self.record))
 
 
 def audit(
@@ -131,9 +140,15 @@ def run_audit(
         damaged = ledger.damaged if ledger is not None else 0
         made = provenance(time.perf_counter() - start, engine.title, outcome.fingerprints, resumed, damaged)
         record = account(file, outcome, entry, made)
+        study = line_study(file, record)
+        if study is not None:
+            record = changed(record, lines=engine.call(study, "the study of the lines"))
         if place is not None and ledger is not None:
             _write(place, _RECORD, canonical_text(record.document()))
             _write(place, _LEVELS, levels_csv(record))
+            (place.path / _LINES).unlink(missing_ok=True)  # of an audit that is replaced
+            if record.lines is not None:
+                _write(place, _LINES, lines_csv(record))
             ledger.finish()
     return Audit(record, out)
 

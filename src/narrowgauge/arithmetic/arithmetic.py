@@ -189,6 +189,10 @@ class Arithmetic:
         wide = values.astype(np.float64, copy=False)
         return narrow(wide, self.format, mode, flushed=self.subnormals == "flushed")
 
+    def constants(self, values: npt.NDArray[Any]) -> Floats:
+        """Return a plain array as it meets the state: what `cast` returns, unless lines have formats of their own."""
+        return self.cast(values)
+
     def holds(self, values: npt.NDArray[Any]) -> bool:
         """Whether every value of a real array is one of the arithmetic's already (NaN is)."""
         if _past_exact_integers(values):

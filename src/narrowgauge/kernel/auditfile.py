@@ -31,6 +31,7 @@ from narrowgauge.kernel.audittables import (
     KernelTable,
     LadderTable,
     LibraryTable,
+    LinesTable,
     SamplingTable,
     Table,
     TableError,
@@ -83,6 +84,7 @@ class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
     function: Callable[..., object] | None
     assumed: tuple[str, ...]
     draws: DrawsTable | None = None
+    lines: LinesTable | None = None
     timed: CostTable | None = None
 
     @property
@@ -160,7 +162,8 @@ class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
             elif name in ("parameters", "target"):
                 tables[name] = copy.deepcopy(table)
         tables["assumed"] = list(self.assumed)
-        return tables if self.draws is None else {**tables, "draws": document(self.draws, without)}
+        rest = {"draws": self.draws, "lines": self.lines}
+        return tables | {name: document(table, without) for name, table in rest.items() if table is not None}
 
 
 def read_audit_file(path: Path) -> AuditFile:
@@ -284,6 +287,7 @@ def _assembled(raw: dict[str, object], source: str, folder: Path, function: Call
         function=function,
         assumed=defaults_in_use(raw),
         draws=_draws(raw),
+        lines=_table(LinesTable, raw["lines"]) if "lines" in raw else None,
     )
     check_own(
         audit_file.kernel,
@@ -295,6 +299,8 @@ def _assembled(raw: dict[str, object], source: str, folder: Path, function: Call
         command=command,
     )
     _check_ladder(audit_file.kernel, audit_file.ladder)
+    if audit_file.lines is not None:
+        audit_file.lines.check(audit_file.kernel.rounds, audit_file.formats.narrow, audit_file.ladder.finest)
     for name in audit_file.used_formats:
         if getattr(audit_file.cost, name) is None and not audit_file.cost.measured:
             key = f"cost.{name}"

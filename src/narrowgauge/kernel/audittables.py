@@ -15,6 +15,7 @@ import msgspec
 from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.kernel.arms import Kind
 from narrowgauge.kernel.drawstable import DrawsTable
+from narrowgauge.kernel.linestable import LinesTable
 from narrowgauge.kernel.owntables import CommandTable, LibraryTable
 from narrowgauge.kernel.rules import RULES, Table, TableError, check_run, dotted, kind_of, shown
 
@@ -28,6 +29,7 @@ __all__ = [
     "KernelTable",
     "LadderTable",
     "LibraryTable",
+    "LinesTable",
     "SamplingTable",
     "Table",
     "TableError",
@@ -250,5 +252,6 @@ TABLES: dict[str, type[Table]] = {
         DrawsTable,
         CostTable,
         SamplingTable,
+        LinesTable,
     )
 }

@@ -21,6 +21,7 @@ from narrowgauge.errors import AuditFileError
 from narrowgauge.kernel.auditfile import bytes_of, most_steps
 from narrowgauge.kernel.auditparameters import check_parameter, plain
 from narrowgauge.kernel.audittables import TABLES, LadderTable, TableError, check_run, default_layout, dotted
+from narrowgauge.kernel.linestable import lines_draft
 
 __all__ = ["draft"]
 
@@ -33,7 +34,7 @@ _TAKES_BY_NAME: tuple[tuple[str, re.Pattern[str]], ...] = (
     ("normals", re.compile(r"zs?|xis?|eps|epsilons?|.*normals?|.*gaussians?")),
     ("uniforms", re.compile(r"us?|.*uniforms?")),
 )
-_ELSEWHERE = ("kernel", "library", "command")  # written first, or in place of a Python function
+_ELSEWHERE = ("kernel", "library", "command", "lines")  # written first or last, or in place of a Python function
 _OPTIONAL = ("target", "draws", "cost")
 _INSTEAD = ("draws.intervals", "draws.degree")  # not accepted beside the value shown for draws.approximate
 _COUNTS = ("steps", "paths")  # what a kernel that draws for itself is told
@@ -68,12 +69,7 @@ _MEANINGS: dict[str, str] = {
     "draws.degree": "of polynomial, in place of cells",
     "draws.formats": "formats that are tried with them too; the default is the narrow ones",
     "cost.float64": "relative cost of one step of one path; the default is storage bits / 64",
-    "cost.float32": "the same",
-    "cost.float16": "the same",
-    "cost.bfloat16": "the same",
-    "cost.tf32": "the same",
-    "cost.e4m3": "the same",
-    "cost.e5m2": "the same",
+    **{f"cost.{name}": "the same" for name in FORMATS if name != "float64"},
     "cost.draws": "one draw",
     "cost.approximate_draws": "no default; one approximate draw, else as much as an exact one",
     "cost.path": "fixed cost of a path",
@@ -142,7 +138,7 @@ def draft(target: str) -> str:
             header = f"# [{table}]" if table in _OPTIONAL else f"[{table}]"
             keys = [f"{table}.{key}" for key in record.__struct_fields__]
             lines += ["", header, *(_line(key, values) for key in keys if key not in left_out)]
-    return "\n".join(lines) + "\n"
+    return "\n".join([*lines, *lines_draft()]) + "\n"
 
 
 def _function(path: Path, name: str) -> ast.FunctionDef:

@@ -16,7 +16,10 @@ __all__ = ["CHEAP", "check_drawing", "check_names", "defaults_in_use", "document
 
 CHEAP = "approximate_draws"  # a cost that counts with [draws] alone
 
-_ORDER = ("kernel", "library", "command", "parameters", "ladder", "target", "formats", "draws", "cost", "sampling")
+_ORDER = (
+    *("kernel", "library", "command", "parameters", "ladder", "target", "formats", "draws", "cost", "sampling"),
+    "lines",
+)
 _REQUIRED = ("kernel", "ladder")
 _OWN = ("kernel.rounds", "cost.measured")  # keys that count for a kernel that rounds for itself alone
 
@@ -77,10 +80,12 @@ def defaults_in_use(raw: Mapping[str, object]) -> tuple[str, ...]:
         keys = [name for name in record.__struct_fields__ if not isinstance(given, dict) or name not in given]
         if table == "target" and given is None:
             keys = ["worthwhile"]  # the one key of it that counts without a target
-        if table in ("library", "command") and given is None:
+        if table in ("library", "command", "lines") and given is None:
             keys = []
         if table == "draws":
             keys = [name for name in keys if isinstance(given, dict) and name in counting_keys(given)]
+        if table == "lines":
+            keys = [name for name in keys if name in ("paths", "search", "what_ifs")]  # what the others are stands with the result
         if table == "cost" and given is not None:
             keys = [name for name in keys if name not in FORMATS]  # a format without a cost is not used
         assumed.extend(key for name in keys if (key := f"{table}.{name}") not in without)

@@ -16,6 +16,7 @@ from narrowgauge.record.canary import CanaryEntry
 from narrowgauge.record.costs import CostEntry
 from narrowgauge.record.draws import DrawsEntry, OrderEntry, PartsEntry, SeparationEntry
 from narrowgauge.record.plan import (
+from narrowgauge.record.lines import LinesEntry
     AllocationEntry,
     CommonLevelEntry,
     CommonPlanEntry,
@@ -326,8 +327,8 @@ class AuditRecord(Entry, frozen=True, kw_only=True):
     range: RangeEntry | None = None
     canary: list[CanaryEntry] | msgspec.UnsetType = msgspec.UNSET
     costs: dict[str, CostEntry] | msgspec.UnsetType = msgspec.UNSET
-    lines: None = None
-    averaging: None = None
+    lines: LinesEntry | None = None
+    averaging: AveragingEntry | None = None
     domain: None = None
     cautions: list[str]
     provenance: dict[str, object]

@@ -18,6 +18,7 @@ from narrowgauge.report.canary import CANNOT_SHOW, canary_lines
 from narrowgauge.report.constants import constant_lines, no_constants
 from narrowgauge.report.layout import Hanging
 from narrowgauge.report.notes import accumulation, format_notes, nonfinite, orders, separation_notes
+from narrowgauge.report.lines import line_hint, line_parts
 from narrowgauge.report.progress import Progress, planned_text
 from narrowgauge.report.settings import (
     approximate_draws,
@@ -54,11 +55,12 @@ _FILES = "audit.json (everything), levels.csv (one row per quantity, level and a
 
 def audit_text(record: AuditRecord, folder: Path | None) -> Group:
     """Return the whole audit: alarms, how to read it, each quantity, the verdict, assumptions, cautions, files."""
+_LINES_FILE = "lines.csv (one row per format, quantity and line)"
     parts: list[RenderableType] = [*_alarms(record), Text(f"Audit of {clean(record.kernel.run)}", style="bold"), Text()]
     parts += [Text("Words of the tables"), *_legend(record), Text()]
     for name in record.quantities:
         parts += _quantity(record, name)
-    parts += _verdict(record)
+    parts += [*_verdict(record), *line_parts(record)]
     parts += [*_heading("Behind the figures"), _labelled("Arithmetic", f"{arithmetics(record)}.")]
     if not isinstance(record.draws, UnsetType):
         parts.append(_labelled("Approximate draws", approximate_draws(record.draws)))
@@ -76,12 +78,12 @@ def audit_text(record: AuditRecord, folder: Path | None) -> Group:
     assumed = assumptions(record)
     parts.append(_labelled("Assumed, since the audit file does not say", f"{assumed}." if assumed else "nothing."))
     parts += [Text(), *_heading("Cautions"), *_bullets(record.cautions)]
-    return Group(*parts, Text(), *speed_notes(record), *_files(folder))
+    return Group(*parts, Text(), *line_hint(record), *speed_notes(record), *_files(folder, record))
 
 
 def verdict_text(record: AuditRecord, folder: Path | None) -> Group:
     """Return what is wrong, the verdict in words, and where the files are."""
-    return Group(*_alarms(record), *_verdict(record), *speed_notes(record), *_files(folder))
+    return Group(*_alarms(record), *_verdict(record), *line_hint(record), *speed_notes(record), *_files(folder, record))
 
 
 def trial_text(trial: TrialEntry) -> Group:
@@ -216,8 +218,9 @@ def _bounded(levels: Sequence[PlanEntry]) -> list[RenderableType]:
     return [Text(words)] if words else []
 
 
-def _files(folder: Path | None) -> list[RenderableType]:
-    return [] if folder is None else [_labelled(f"Written to {folder}", _FILES)]
+def _files(folder: Path | None, record: AuditRecord) -> list[RenderableType]:
+    files = _FILES if record.lines is None else f"{_FILES}, {_LINES_FILE}"
+    return [] if folder is None else [_labelled(f"Written to {folder}", files)]
 
 
 def _heading(words: str) -> list[RenderableType]:
