@@ -122,7 +122,9 @@ class TestAudit:
             ("constants", None, None),
         ]
         assert sum(part.operations for part in found.parts) == pytest.approx(1.0)
-        assert [line.text for line in result.record.lines.source][5] == "        x = x + 0.05 * h * x + 0.2 * x * dW[n]"
+        source = {line.line: line.text for line in result.record.lines.source}
+        assert source[6] == "        x = x + 0.05 * h * x + 0.2 * x * dW[n]"
+        assert list(source) == [4, 5, 6, 7]
         assert found.what_ifs is not None
         names = ["stochastic rounding", "fused products", "flushed subnormals", "carried errors", "wide increments"]
         assert [one.name for one in found.what_ifs] == names

@@ -73,9 +73,12 @@ def test_numpys_own_generator_agrees() -> None:
     assert np.array_equal(ours, np.floor(plain * 2.0**52) * 2.0**-52 + 2.0**-53)
 
 
+PURPOSES = (Purpose.AUDIT, Purpose.IDENTITY, Purpose.TRIAL)
+
+
 def test_purposes_keep_their_integers() -> None:
     """A purpose is part of every key: its integer never changes, or old audits would see other numbers."""
-    assert {purpose.name: int(purpose) for purpose in Purpose} == {"AUDIT": 0, "IDENTITY": 1, "TRIAL": 2}
+    assert {purpose.name: int(purpose) for purpose in Purpose} == {"AUDIT": 0, "IDENTITY": 1, "TRIAL": 2, "LINES": 4}
 
 
 def from_words(monkeypatch: pytest.MonkeyPatch, words: list[int]) -> list[float]:
@@ -151,7 +154,7 @@ def test_streams_of_different_keys_share_no_output() -> None:
     98,304 words of 52 bits: two of independent streams agree by chance in 98304^2 / 2 / 2^52 = 1.1e-6 of seeds.
     Negative control: the same key twice.
     """
-    keys = list(itertools.product((1, 2), Purpose, range(8), range(32)))
+    keys = list(itertools.product((1, 2), PURPOSES, range(8), range(32)))
     drawn = [uniforms(seed, purpose, level, block, (64,)) for seed, purpose, level, block in keys]
     everything = np.concatenate(drawn)
     assert np.unique(everything).size == everything.size == 98304
@@ -173,7 +176,7 @@ def test_streams_of_neighbouring_keys_are_uncorrelated() -> None:
     approximation). Sum of squares: chi-square with 4,560 degrees of freedom, false alarm 1e-6. Negative control: one
     stream shifted by one draw and mixed in by a tenth.
     """
-    keys = list(itertools.product(Purpose, range(4), range(8)))
+    keys = list(itertools.product(PURPOSES, range(4), range(8)))
     normals = np.array([exact_normals(uniforms(11, p, level, block, (4096,))) for p, level, block in keys])
     found = correlations(normals) * 64.0
     largest = norm.isf(1e-6 / 2 / found.size)

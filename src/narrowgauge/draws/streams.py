@@ -26,7 +26,7 @@ class Purpose(IntEnum):
     AUDIT = 0
     IDENTITY = 1
     TRIAL = 2
-    LINES = 3
+    LINES = 4
 
 
 def block_paths(block: int, steps: int, factors: int, refinement: int = 2) -> int:

@@ -162,8 +162,7 @@ class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
             elif name in ("parameters", "target"):
                 tables[name] = copy.deepcopy(table)
         tables["assumed"] = list(self.assumed)
-        rest = {"draws": self.draws, "lines": self.lines}
-        return tables | {name: document(table, without) for name, table in rest.items() if table is not None}
+        return tables | {one.table: document(one, without) for one in (self.draws, self.lines) if one is not None}
 
 
 def read_audit_file(path: Path) -> AuditFile:

@@ -17,6 +17,7 @@ from narrowgauge.record.costs import CostEntry
 from narrowgauge.record.draws import DrawsEntry, OrderEntry, PartsEntry, SeparationEntry
 from narrowgauge.record.plan import (
 from narrowgauge.record.lines import LinesEntry
+from narrowgauge.record.plan import (
     AllocationEntry,
     CommonLevelEntry,
     CommonPlanEntry,

@@ -32,7 +32,8 @@ class Source:
         width = options.max_width
         longest = next((most for least, most in _BARS if width >= least), 0)
         figures = [percent(share) if share is not None else "" for _, share in self._rows]
-        right = max((len(text) for text in figures), default=0) + (longest + 1 if longest else 0)
+        most = max((len(text) for text in figures), default=0)
+        right = most + (longest + 1 if longest else 0)
         left = max(width - right - 2, 1)
         for line in Text(_HEADING, style="bold").wrap(console, width):
             line.align("right", width)
@@ -40,7 +41,7 @@ class Source:
         for (text, share), shown in zip(self._rows, figures, strict=True):
             bar = "#" * max(1, round(longest * min(share, 1.0))) if share is not None and longest else ""
             lines = list(_broken(text, left, console))
-            first = lines[0].plain.ljust(left + 2) + bar.ljust(longest + 1 if longest else 0) + shown
+            first = lines[0].plain.ljust(left + 2) + bar.ljust(longest + 1 if longest else 0) + shown.rjust(most)
             yield Text(first.rstrip() if share is None else first, style="none" if share is None else "bold")
             yield from lines[1:]
 
@@ -80,8 +81,11 @@ def line_hint(record: AuditRecord) -> list[RenderableType]:
     ]
     if not ending:
         return []
-    what = "Which lines cost the accuracy, and what keeping them in a wider format would buy"
-    return [Text(f"{what}, the option --lines finds out, for {joined(ending)}.")]
+    return [Text(f"The option --lines finds out which lines cost {joined(ending)} {_their(ending)} accuracy.")]
+
+
+def _their(names: list[str]) -> str:
+    return "their" if len(names) > 1 else "its"
 
 
 def _study(record: AuditRecord, form: str, study: FormatLines) -> list[RenderableType]:

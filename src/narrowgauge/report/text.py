@@ -19,6 +19,7 @@ from narrowgauge.report.constants import constant_lines, no_constants
 from narrowgauge.report.layout import Hanging
 from narrowgauge.report.notes import accumulation, format_notes, nonfinite, orders, separation_notes
 from narrowgauge.report.lines import line_hint, line_parts
+from narrowgauge.report.notes import accumulation, format_notes, nonfinite, orders, separation_notes
 from narrowgauge.report.progress import Progress, planned_text
 from narrowgauge.report.settings import (
     approximate_draws,
@@ -54,8 +55,8 @@ _FILES = "audit.json (everything), levels.csv (one row per quantity, level and a
 
 
 def audit_text(record: AuditRecord, folder: Path | None) -> Group:
-    """Return the whole audit: alarms, how to read it, each quantity, the verdict, assumptions, cautions, files."""
 _LINES_FILE = "lines.csv (one row per format, quantity and line)"
+    """Return the whole audit: alarms, how to read it, each quantity, the verdict, assumptions, cautions, files."""
     parts: list[RenderableType] = [*_alarms(record), Text(f"Audit of {clean(record.kernel.run)}", style="bold"), Text()]
     parts += [Text("Words of the tables"), *_legend(record), Text()]
     for name in record.quantities:
@@ -74,6 +75,10 @@ _LINES_FILE = "lines.csv (one row per format, quantity and line)"
     if not isinstance(record.canary, UnsetType):
         parts += [_labelled(_CANARY, CANNOT_SHOW), *_bullets(canary_lines(record.canary))]
     if costs := measured_costs(record):
+        parts.append(_labelled(_RANGE, watched_on(record.range.watched)))
+        parts += _bullets(range_lines(record.range.watched))
+    if record.averaging is not None:
+        parts += [_labelled(_SUMS, averaged_over(record.averaging)), *_bullets(averaging_lines(record.averaging))]
         parts.append(_labelled("Measured costs of a step of one path, by every audit anew", f"{costs}."))
     assumed = assumptions(record)
     parts.append(_labelled("Assumed, since the audit file does not say", f"{assumed}." if assumed else "nothing."))
