@@ -12,10 +12,10 @@ from typing import Literal
 
 import msgspec
 
+from narrowgauge.record.averaging import AveragingEntry
 from narrowgauge.record.canary import CanaryEntry
 from narrowgauge.record.costs import CostEntry
 from narrowgauge.record.draws import DrawsEntry, OrderEntry, PartsEntry, SeparationEntry
-from narrowgauge.record.plan import (
 from narrowgauge.record.lines import LinesEntry
 from narrowgauge.record.plan import (
     AllocationEntry,

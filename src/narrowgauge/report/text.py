@@ -14,13 +14,14 @@ from rich.rule import Rule
 from rich.text import Text
 
 from narrowgauge.record.audit import AuditRecord, FaultEntry, PlanEntry, QuantityEntry, TrialEntry
+from narrowgauge.report.averaging import averaged_over, averaging_lines
 from narrowgauge.report.canary import CANNOT_SHOW, canary_lines
 from narrowgauge.report.constants import constant_lines, no_constants
 from narrowgauge.report.layout import Hanging
-from narrowgauge.report.notes import accumulation, format_notes, nonfinite, orders, separation_notes
 from narrowgauge.report.lines import line_hint, line_parts
 from narrowgauge.report.notes import accumulation, format_notes, nonfinite, orders, separation_notes
 from narrowgauge.report.progress import Progress, planned_text
+from narrowgauge.report.range import range_lines, watched_on
 from narrowgauge.report.settings import (
     approximate_draws,
     arithmetics,
@@ -50,12 +51,14 @@ from narrowgauge.report.workers import speed_notes
 __all__ = ["Progress", "audit_text", "planned_text", "trial_text", "verdict_text"]
 
 _CONSTANTS = "Constants that a format cannot take"
+_RANGE = "Range and lost additions"
+_SUMS = "Sums over the paths"
 _CANARY = "Whether the kernel rounds in the formats it claims"
 _FILES = "audit.json (everything), levels.csv (one row per quantity, level and arm)"
+_LINES_FILE = "lines.csv (one row per format, quantity and line)"
 
 
 def audit_text(record: AuditRecord, folder: Path | None) -> Group:
-_LINES_FILE = "lines.csv (one row per format, quantity and line)"
     """Return the whole audit: alarms, how to read it, each quantity, the verdict, assumptions, cautions, files."""
     parts: list[RenderableType] = [*_alarms(record), Text(f"Audit of {clean(record.kernel.run)}", style="bold"), Text()]
     parts += [Text("Words of the tables"), *_legend(record), Text()]
@@ -72,13 +75,13 @@ _LINES_FILE = "lines.csv (one row per format, quantity and line)"
         lines = constant_lines(record.range)
         parts.append(_labelled(_CONSTANTS, "listed by line." if lines else no_constants(record.range)))
         parts += _bullets(lines)
-    if not isinstance(record.canary, UnsetType):
-        parts += [_labelled(_CANARY, CANNOT_SHOW), *_bullets(canary_lines(record.canary))]
-    if costs := measured_costs(record):
         parts.append(_labelled(_RANGE, watched_on(record.range.watched)))
         parts += _bullets(range_lines(record.range.watched))
     if record.averaging is not None:
         parts += [_labelled(_SUMS, averaged_over(record.averaging)), *_bullets(averaging_lines(record.averaging))]
+    if not isinstance(record.canary, UnsetType):
+        parts += [_labelled(_CANARY, CANNOT_SHOW), *_bullets(canary_lines(record.canary))]
+    if costs := measured_costs(record):
         parts.append(_labelled("Measured costs of a step of one path, by every audit anew", f"{costs}."))
     assumed = assumptions(record)
     parts.append(_labelled("Assumed, since the audit file does not say", f"{assumed}." if assumed else "nothing."))
