@@ -15,7 +15,7 @@ from typing import TYPE_CHECKING, Any, Literal
 from msgspec.structs import replace as changed
 
 from narrowgauge.conduct.account import account
-from narrowgauge.conduct.lines import line_study
+from narrowgauge.conduct.lines import line_study, studied
 from narrowgauge.conduct.owntrial import examine_own
 from narrowgauge.conduct.run import Watcher, run
 from narrowgauge.conduct.trial import try_arms
@@ -140,14 +140,12 @@ def run_audit(
         damaged = ledger.damaged if ledger is not None else 0
         made = provenance(time.perf_counter() - start, engine.title, outcome.fingerprints, resumed, damaged)
         record = account(file, outcome, entry, made)
-        study = line_study(file, record)
-        if study is not None:
-            record = changed(record, lines=engine.call(study, "the study of the lines"))
+        record = changed(record, lines=studied(line_study(file, record), engine))
         if place is not None and ledger is not None:
             _write(place, _RECORD, canonical_text(record.document()))
             _write(place, _LEVELS, levels_csv(record))
             (place.path / _LINES).unlink(missing_ok=True)  # of an audit that is replaced
-            if record.lines is not None:
+            if record.lines is not None and record.lines.formats:
                 _write(place, _LINES, lines_csv(record))
             ledger.finish()
     return Audit(record, out)

@@ -10,8 +10,8 @@ import pytest
 from audit_cases import GEOMETRIC, audited, file_for
 
 from narrowgauge.api import run_audit
-from narrowgauge.conduct.lines import LineStudy
-from narrowgauge.errors import AuditFileError
+from narrowgauge.conduct.lines import LineStudy, line_study, studied
+from narrowgauge.errors import AuditFileError, WorkerError
 from narrowgauge.kernel.auditfile import audit_file_from
 from narrowgauge.kernel.linestable import with_lines
 from narrowgauge.kernel.loading import find_kernel
@@ -190,6 +190,22 @@ class TestAudit:
         study_of = found.lines.formats["float16"]
         assert study_of.quantities == {}
         assert study_of.reason == "a run raised ValueError: nothing moves"
+
+
+def test_what_stops_a_study_costs_no_audit(tmp_path: Path) -> None:
+    """A worker that is past its time limit in the study is said, and the rest of the record is there."""
+    file = file_for(tmp_path, GEOMETRIC, lines={"formats": '["float16"]'})
+
+    class Stopped:
+        def call(self, task: Any, name: str) -> Any:
+            raise WorkerError(f"{name}: no worker is left")
+
+    record = run_audit(file, None).record
+    engine: Any = Stopped()
+    found = studied(line_study(file, record), engine)
+    assert found is not None
+    assert (found.formats, found.reason) == ({}, "the study of the lines: no worker is left")
+    assert studied(None, engine) is None
 
 
 @pytest.mark.parametrize(

@@ -66,7 +66,7 @@ def lines_entry(file="kernel.py", source=SOURCE):
         what_ifs=None, reason=None,
     )  # fmt: skip
     lines = [SourceLine(file=file, line=n, text=text) for n, text in enumerate(source, 1)]
-    return LinesEntry(formats={"float16": study}, source=lines)
+    return LinesEntry(formats={"float16": study}, source=lines, reason=None)
 
 
 def record(**changes):
@@ -116,6 +116,11 @@ class TestSource:
         text = rendered(audit_text(record(file=HOSTILE, source=(HOSTILE,) * 6), None))
         assert "\x1b" not in text
         assert "\u202e" not in text
+
+    def test_what_stopped_the_study_is_said(self):
+        """Where there is no study its reason stands in its place."""
+        stopped = replace(made.audit_record(), lines=LinesEntry(formats={}, source=[], reason="kernel.py:4: no"))
+        assert "Which lines cost the accuracy was not found out: kernel.py:4: no" in flat(audit_text(stopped, None))
 
 
 class TestHint:

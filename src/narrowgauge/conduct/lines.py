@@ -15,11 +15,14 @@ from narrowgauge.conduct.widening import Candidates, searched
 from narrowgauge.dispatch.byline import CONSTANTS, DRAWS, STEP, Item, Widths
 from narrowgauge.dispatch.placed import Operation
 from narrowgauge.dispatch.setting import Place
+from narrowgauge.draws.streams import GRAIN
+from narrowgauge.errors import DispatchError, KernelError, WorkerError, said
 from narrowgauge.judge.intervals import Interval
 from narrowgauge.judge.lines import Share, Shares, leading, shares_of
 from narrowgauge.kernel.arms import wider
 from narrowgauge.kernel.auditfile import AuditFile, with_draws
 from narrowgauge.kernel.linestable import LinesTable
+from narrowgauge.measure.engines import Engine
 from narrowgauge.measure.linearms import Errors, LineRunner
 from narrowgauge.measure.tally import Raised
 from narrowgauge.measure.task import Bench, pinned
@@ -36,7 +39,7 @@ from narrowgauge.record.lines import (
     SumEntry,
 )
 
-__all__ = ["LineStudy", "line_study"]
+__all__ = ["LineStudy", "line_study", "studied"]
 
 _FEW = 32  # paths of the runs that are only looked at
 _WORTH_WIDENING = 0.02  # a part that saves less of the variance is no candidate
@@ -74,13 +77,24 @@ class LineStudy:
         with pinned():
             studies = {form: _Study(file, bench, form, level) for form, level in self.finest.items()}
             formats = {form: study.entry() for form, study in studies.items()}
-        return LinesEntry(formats=formats, source=_source(file, [s.places for s in studies.values()]))
+        source = _source(file, [study.places for study in studies.values()])
+        return LinesEntry(formats=formats, source=source, reason=None)
 
 
 def line_study(file: AuditFile, record: AuditRecord) -> LineStudy | None:
     """Return the study that an audit asks for, None where it asks for none or no format is left to study."""
     study = LineStudy.after(file, record)
     return study if study is not None and study.finest else None
+
+
+def studied(study: LineStudy | None, engine: Engine) -> LinesEntry | None:
+    """Run a study on an engine; what stops it is its result: a measured audit is not lost for it."""
+    if study is None:
+        return None
+    try:
+        return engine.call(study, "the study of the lines")
+    except (DispatchError, KernelError, WorkerError) as problem:
+        return LinesEntry(formats={}, source=[], reason=said(problem))
 
 
 def _stops(level: int | None, finest: int) -> bool:
@@ -99,6 +113,9 @@ class _Study:
         self.level = first_refused if table.level is None else table.level
         self._wide = table.wide or _next_wider(file, form)
         self._runner = LineRunner(file, bench.kernel, form, beside=bench.runner)
+        # A kernel that is run path by path takes as long for one run as others for all.
+        few = self._runner.singly and "lines.paths" in file.assumed
+        self._paths = GRAIN if few else table.paths
         self.places: list[Place] = []
         self._items: list[Item] = []
         self._sums: dict[Operation, float] = {}
@@ -164,7 +181,7 @@ class _Study:
             runs[f"saved {place}"] = Widths(rest=self._form, named={item: None})
         total: dict[str, dict[str, Errors]] = {}
         paths = block = 0
-        while paths < self._table.paths:
+        while paths < self._paths:
             found = self._runner.errors(self.level, block, runs)
             if isinstance(found, Raised):
                 return found
@@ -226,7 +243,7 @@ class _Study:
                 items={place: self._items[place] for place in places},
                 operations={place: self._entries[place].operations for place in places},
             )
-            plain, widenings = searched(self._file, self._runner, candidates, self.level, self._table.paths)
+            plain, widenings = searched(self._file, self._runner, candidates, self.level, self._paths)
         tried = None
         if self._table.what_ifs:
             wide = None if self._wide is None else FORMATS[self._wide]

@@ -144,7 +144,8 @@ class FormatLines(Entry, frozen=True, kw_only=True):
 
 
 class LinesEntry(Entry, frozen=True, kw_only=True):
-    """The studies by format, and the source lines around the lines that were found."""
+    """The studies by format, and the source lines around the lines that were found; `reason` is what stopped it."""
 
     formats: dict[str, FormatLines]
     source: list[SourceLine]
+    reason: str | None

@@ -60,6 +60,8 @@ def line_parts(record: AuditRecord) -> list[RenderableType]:
     if record.lines is None:
         return []
     parts: list[RenderableType] = []
+    if record.lines.reason is not None:
+        parts += [Text(f"Which lines cost the accuracy was not found out: {clean(record.lines.reason)}"), Text()]
     for form, study in record.lines.formats.items():
         parts += [
             Text(f"Which lines cost {clean(form)} its accuracy", style="bold"),

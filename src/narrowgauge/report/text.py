@@ -227,7 +227,7 @@ def _bounded(levels: Sequence[PlanEntry]) -> list[RenderableType]:
 
 
 def _files(folder: Path | None, record: AuditRecord) -> list[RenderableType]:
-    files = _FILES if record.lines is None else f"{_FILES}, {_LINES_FILE}"
+    files = _FILES if record.lines is None or not record.lines.formats else f"{_FILES}, {_LINES_FILE}"
     return [] if folder is None else [_labelled(f"Written to {folder}", files)]
 
 
