@@ -11,13 +11,14 @@ import pytest
 from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.conduct.laddered import Changed, on_ladder, pays_fields
 from narrowgauge.conduct.lines import LineStudy
-from narrowgauge.dispatch.byline import Widths
+from narrowgauge.conduct.widening import Candidates, further
+from narrowgauge.dispatch.byline import DRAWS, Widths
 from narrowgauge.dispatch.setting import Place
 from narrowgauge.kernel.auditfile import audit_file_from
 from narrowgauge.kernel.loading import find_kernel
 from narrowgauge.measure.linearms import LineRunner
 from narrowgauge.measure.task import Bench
-from narrowgauge.record.lines import FormatLines
+from narrowgauge.record.lines import FormatLines, WideningEntry
 
 
 def milstein(dW: Any, h: float, rate: float, volatility: float) -> Any:
@@ -106,3 +107,37 @@ def test_with_the_state_wide_the_correction_does_not_grow() -> None:
     found = slopes()
     assert abs(found["state"]) <= 0.1
     assert found["nothing"] == pytest.approx(0.98, abs=0.1)
+
+
+def entry(number: int, operations: float, level: int | None) -> WideningEntry:
+    figures = dict.fromkeys(("possible", "gain", "gain_low", "gain_high", "edge", "edge_low", "edge_high"))
+    return WideningEntry(parts=[number], operations=operations, step_cost=0.3, level=level, **figures)
+
+
+def test_only_sets_that_pay_further_are_listed() -> None:
+    """Each costs more than the one before it and pays further; what pays no further than a cheaper one is left out."""
+    sets = [
+        entry(1, 0.5, 6),
+        entry(2, 0.1, 2),
+        entry(3, 0.2, 4),
+        entry(4, 0.3, 4),
+        entry(5, 0.2, 3),
+        entry(6, 0.6, None),
+    ]
+    assert [one.parts for one in further(entry(0, 0.0, 2), sets)] == [[3], [1]]
+    assert further(entry(0, 0.0, 6), sets) == []
+    assert [one.parts for one in further(entry(0, 0.0, None), sets)] == [[2], [3], [1]]
+
+
+def test_every_set_of_the_best_parts_is_tried() -> None:
+    """All sixteen of the four that save most, the empty one first, then the first five and six."""
+    items = {place: Place("kernel.py", place) for place in (7, 3, 5, 1, 2, 4)}
+    shares = dict.fromkeys(items, 0.1)
+    some = Candidates(form=FORMATS["float16"], wide=FORMATS["float32"], items=items, operations=shares)
+    sets = some.sets()
+    assert sets[0] == ()
+    assert len(sets) == len(set(sets)) == 16 + 2
+    assert sets[-2:] == [(7, 3, 5, 1, 2), (7, 3, 5, 1, 2, 4)]
+    assert some.share((7, 3)) == pytest.approx(0.2)
+    few = Candidates(form=some.form, wide=some.wide, items={0: DRAWS}, operations={0: 0.1})
+    assert few.sets() == [(), (0,)]

@@ -9,7 +9,7 @@ those that are best at their cost each level of the ladder is judged.
 from __future__ import annotations
 
 import itertools
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 from narrowgauge.arithmetic.formats import Format
@@ -19,7 +19,7 @@ from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.measure.linearms import LineRunner
 from narrowgauge.record.lines import WideningEntry
 
-__all__ = ["Candidates", "searched"]
+__all__ = ["Candidates", "further", "searched"]
 
 _TOGETHER = 4  # of the parts that save most every set is tried
 _LONGEST = 8  # parts of the largest set
@@ -82,12 +82,17 @@ def searched(
         )
         for parts in chosen
     ]
+    return plain, further(plain, entries)
+
+
+def further(plain: WideningEntry, entries: Sequence[WideningEntry]) -> list[WideningEntry]:
+    """Return the entries that pay further than the plain format and every cheaper one, from cheapest to best."""
     best, found = _reach(plain), []
     for entry in sorted(entries, key=lambda one: (one.operations, -_reach(one))):
         if _reach(entry) > best:
             best = _reach(entry)
             found.append(entry)
-    return plain, found
+    return found
 
 
 def _reach(entry: WideningEntry) -> int:
