@@ -64,7 +64,7 @@ WATCHED = WatchedEntry(
             arms={
                 "float16": WatchedArmEntry(
                     lost=share(512, 16384, 0.0291, 0.0334),
-                    below=share(64, 32768, 0.00121, 0.00284),
+                    below=share(640, 32768, 0.0121, 0.0284),
                     overflows=1,
                     first_nonfinite=INFINITE,
                     stopped=None,
@@ -100,7 +100,7 @@ WATCHED = WatchedEntry(
                     smallest=-17,
                     largest=16,
                     arms={
-                        "float16": line_arm(-1, -3, subnormals=60, underflows=4, overflows=1),
+                        "float16": line_arm(-1, -3, subnormals=600, underflows=40, overflows=1),
                         "bfloat16": line_arm(111, 109),
                         "float32": line_arm(111, 109),
                     },
@@ -115,8 +115,8 @@ WATCHED = WatchedEntry(
                 ShiftLevelEntry(
                     level=4,
                     overflows=1,
-                    subnormals=60,
-                    underflows=4,
+                    subnormals=600,
+                    underflows=40,
                     error_variance={"value": None, "delta": 2.0},
                     shifted_overflows=0,
                     shifted_subnormals=1100,

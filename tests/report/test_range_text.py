@@ -14,14 +14,14 @@ def test_each_format_with_something_to_say_has_its_lines():
     """Totals with intervals, what is not finite first, the worst lines, a shift; what is quiet is one line."""
     assert range_lines(WATCHED) == [
         "float16: results from 2^-17 to 2^16, 3 bits short below and 1 bit short above; 3.12% (2.91% to 3.34%) of all "
-        "additions are lost on level 4; 0.195% (0.121% to 0.284%) of all results are below the normal numbers on level "
+        "additions are lost on level 4; 1.95% (1.21% to 2.84%) of all results are below the normal numbers on level "
         "4; 1 result is too large on level 4.",
         "float16, level 4: the first result that is infinite is at reserve.py:9, step 4, path 17: multiply of 300 and "
         "400.",
         "float16: reserve.py:7, add: 3.12% lost on level 4, first on step 11.",
-        "float16: reserve.py:9, multiply: 0.391% below the normal numbers on level 4, 4 of them 0.",
+        "float16: reserve.py:9, multiply: 3.91% below the normal numbers on level 4, 40 of them 0.",
         "float16: with all exponents 2 higher, 0 results would be too large (now 1) and 1,144 below the normal numbers "
-        "(now 64); the error variance on level 4 would be 0.75 times what it is.",
+        "(now 640); the error variance on level 4 would be 0.75 times what it is.",
         "bfloat16: results from 2^-17 to 2^16, 109 bits to spare below and 111 bits to spare above; 25.0% (24.4% to "
         "25.6%) of all additions are lost on level 4.",
         "bfloat16, level 4: the kernel raised ValueError: not today.",

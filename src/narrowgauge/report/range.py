@@ -18,7 +18,7 @@ from narrowgauge.report.wording import clean, count, figure, joined, levels_name
 __all__ = ["range_lines", "watched_on"]
 
 _LINES = 3  # of each kind
-_LEAST = 1e-3  # a smaller share of a line's results is left to audit.json
+_LEAST = 1e-2  # a smaller share of a line's results is left to audit.json
 
 
 def watched_on(found: WatchedEntry | None) -> str:
@@ -31,7 +31,7 @@ def watched_on(found: WatchedEntry | None) -> str:
 
 
 def range_lines(found: WatchedEntry | None) -> list[str]:
-    """Return what there is to say of each format; formats without anything to say share a line."""
+    """Return what there is to say of each format, on its worst level; formats without anything to say share a line."""
     if found is None:
         return []
     arms = list(dict.fromkeys(arm for level in found.levels for arm in level.arms))
@@ -70,15 +70,18 @@ def _lines(found: WatchedEntry, arm: str) -> Iterator[tuple[RangeLevelEntry, Lin
 def _arm(found: WatchedEntry, arm: str) -> Iterator[str]:
     name = clean(arm)
     parts = [f"{name}: {_magnitudes(found, arm)}"]
-    for level in found.levels:
-        one = level.arms[arm]
-        if one.lost.count:
-            parts.append(f"{_share(one.lost)} of all additions are lost on level {level.level}")
-        if one.below.count:
-            parts.append(f"{_share(one.below)} of all results are below the normal numbers on level {level.level}")
-        if one.overflows:
-            many = "1 result is" if one.overflows == 1 else f"{count(one.overflows)} results are"
-            parts.append(f"{many} too large on level {level.level}")
+    lost = max(found.levels, key=lambda level: level.arms[arm].lost.share or 0.0)
+    if lost.arms[arm].lost.count:
+        parts.append(f"{_share(lost.arms[arm].lost)} of all additions are lost on level {lost.level}")
+    below = max(found.levels, key=lambda level: level.arms[arm].below.share or 0.0)
+    if below.arms[arm].below.count:
+        parts.append(
+            f"{_share(below.arms[arm].below)} of all results are below the normal numbers on level {below.level}"
+        )
+    large = max(found.levels, key=lambda level: level.arms[arm].overflows)
+    if number := large.arms[arm].overflows:
+        many = "1 result is" if number == 1 else f"{count(number)} results are"
+        parts.append(f"{many} too large on level {large.level}")
     yield "; ".join(parts)
     for level in found.levels:
         one = level.arms[arm]
@@ -176,5 +179,6 @@ def _variances(one: ShiftEntry) -> str:
         ]
         if ratios:
             times = figure(max(ratios), 2)
-            return f"; the error variance on level {level.level} would be {times} times what it is"
+            would = "stay as it is" if times == "1.0" else f"be {times} times what it is"
+            return f"; the error variance on level {level.level} would {would}"
     return ""
