@@ -140,7 +140,10 @@ def run_audit(
         damaged = ledger.damaged if ledger is not None else 0
         made = provenance(time.perf_counter() - start, engine.title, outcome.fingerprints, resumed, damaged)
         record = account(file, outcome, entry, made)
-        record = changed(record, lines=studied(line_study(file, record), engine))
+        study = line_study(file, record)
+        if study is not None and study.finest and tell is not None and watcher is not None:
+            tell(f"all levels are measured; the lines of {', '.join(study.finest)} are studied")
+        record = changed(record, lines=studied(study, engine))
         if place is not None and ledger is not None:
             _write(place, _RECORD, canonical_text(record.document()))
             _write(place, _LEVELS, levels_csv(record))

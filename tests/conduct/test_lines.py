@@ -174,6 +174,23 @@ class TestAudit:
         assert total is not None
         assert total.share == pytest.approx(1.0, abs=0.1)
 
+    def test_a_kernel_that_works_on_groups_of_paths_has_lines_too(self, tmp_path: Path) -> None:
+        """Where a few paths are too few for the kernel, a small block of them is looked at."""
+        source = """
+            import numpy as np
+
+            def value(dW, h):
+                if dW.shape[1] < 64:
+                    raise ValueError("groups of 64 paths")
+                return np.exp(0.2 * dW.sum(axis=0))
+        """
+        found = audited(tmp_path, source, lines={"formats": '["float16"]', "paths": "1024"}).record.lines
+        assert found is not None
+        assert found.reason is None
+        parts = found.formats["float16"].parts
+        assert [part.line for part in parts][:1] == [6]
+        assert sum(part.operations for part in parts) == pytest.approx(1.0)
+
     def test_what_raises_in_a_run_is_said(self, tmp_path: Path) -> None:
         """A kernel that raises where a line is rounded has no shares, and the reason is its exception."""
         source = """
@@ -206,6 +223,17 @@ def test_what_stops_a_study_costs_no_audit(tmp_path: Path) -> None:
     assert found is not None
     assert (found.formats, found.reason) == ({}, "the study of the lines: no worker is left")
     assert studied(None, engine) is None
+
+
+def test_a_study_of_nothing_says_so(tmp_path: Path) -> None:
+    """Where every format pays to the end and none is named there is a reason in place of a study."""
+    cheap = {"float64": "1.0", "float32": "0.01", "float16": "0.001", "bfloat16": "0.001"}
+    found = audited(
+        tmp_path, GEOMETRIC, formats={"narrow": '["float32"]', "wide": "[]"}, cost=cheap, lines={}
+    ).record.lines
+    assert found is not None
+    assert found.reason == "every narrow format pays to the end of the ladder, and lines.formats names none"
+    assert not (tmp_path / "out" / "lines.csv").exists()
 
 
 @pytest.mark.parametrize(

@@ -33,7 +33,6 @@ from narrowgauge.record.lines import (
     LinesEntry,
     PartShare,
     QuantityLines,
-    Role,
     ShareEntry,
     SourceLine,
     SumEntry,
@@ -44,6 +43,7 @@ __all__ = ["LineStudy", "line_study", "studied"]
 _FEW = 32  # paths of the runs that are only looked at
 _WORTH_WIDENING = 0.02  # a part that saves less of the variance is no candidate
 _ALL = "all"
+_NONE_ENDS = "every narrow format pays to the end of the ladder, and lines.formats names none"
 _BESIDE = 2  # source lines kept on either side of a line that was studied
 _FARTHEST = 12  # lines between two that were studied, up to which all of them are kept
 
@@ -59,16 +59,6 @@ class LineStudy:
     factors: int
     coupled: bool
 
-    @classmethod
-    def after(cls, file: AuditFile, record: AuditRecord) -> LineStudy | None:
-        """Return the study that an audit asks for by [lines]: of the formats it names, or that stop paying."""
-        if file.lines is None:
-            return None
-        levels = {arm: one.level for arm, one in record.verdict.finest_paying_level.items()}
-        named = file.lines.formats or [arm for arm in file.formats.narrow if _stops(levels[arm], file.ladder.finest)]
-        chosen = {arm: levels[arm] for arm in named}
-        return cls(finest=chosen, factors=file.kernel.factors, coupled=file.kernel.coupling == "sum")
-
     def __call__(self, bench: Bench) -> LinesEntry:
         """Run the study; raises what running the kernel raises."""
         file = bench.file
@@ -82,15 +72,21 @@ class LineStudy:
 
 
 def line_study(file: AuditFile, record: AuditRecord) -> LineStudy | None:
-    """Return the study that an audit asks for, None where it asks for none or no format is left to study."""
-    study = LineStudy.after(file, record)
-    return study if study is not None and study.finest else None
+    """Return the study that an audit asks for by [lines], of the formats it names or that stop paying; else None."""
+    if file.lines is None:
+        return None
+    levels = {arm: one.level for arm, one in record.verdict.finest_paying_level.items()}
+    named = file.lines.formats or [arm for arm in file.formats.narrow if _stops(levels[arm], file.ladder.finest)]
+    chosen = {arm: levels[arm] for arm in named}
+    return LineStudy(finest=chosen, factors=file.kernel.factors, coupled=file.kernel.coupling == "sum")
 
 
 def studied(study: LineStudy | None, engine: Engine) -> LinesEntry | None:
     """Run a study on an engine; what stops it is its result: a measured audit is not lost for it."""
     if study is None:
         return None
+    if not study.finest:
+        return LinesEntry(formats={}, source=[], reason=_NONE_ENDS)
     try:
         return engine.call(study, "the study of the lines")
     except (DispatchError, KernelError, WorkerError) as problem:
@@ -145,9 +141,8 @@ class _Study:
     def _look(self) -> None:
         """Find the lines, their roles and operations, and the constants that do not depend on the step size."""
         other = 0 if self.level else min(1, self._finest)
-        seen = {level: Seen() for level in {self.level, other}}
-        for level, one in seen.items():
-            self._runner.observed(level, _FEW, one)
+        looked = {level: self._seen(level) for level in sorted({self.level, other})}
+        seen = {level: one for level, (one, _) in looked.items()}
         few, many = seen[min(seen)], seen[max(seen)]
         if len(seen) > 1:
             self._runner.lasting = lasting([few, many])
@@ -155,23 +150,30 @@ class _Study:
         values = {place: count for place, count in seen[self.level].values.items() if count}
         self.places = sorted(values)
         self._items = [*self.places, DRAWS, *([STEP] if len(seen) > 1 else []), CONSTANTS]
-        drawn = self._file.ladder.steps(self.level) * self._file.kernel.factors * _FEW
+        drawn = self._file.ladder.steps(self.level) * self._file.kernel.factors * looked[self.level][1]
         whole = sum(values.values()) + drawn
         # With one step nothing is carried: the other run says which additions are to the state.
         self._sums = {one: count / sum(many.values.values()) for one, count in many.sums.items()}
         for item in self._items:
-            line = isinstance(item, Place)
-            count = values[item] if isinstance(item, Place) else drawn if item == DRAWS else 0
-            role: Role | None = known.get(item) if isinstance(item, Place) else None
-            self._entries.append(
-                LineEntry(
-                    kind=item if not isinstance(item, Place) else "line",
-                    file=self._file.shown(item.file) if isinstance(item, Place) else None,
-                    line=item.line if isinstance(item, Place) else None,
-                    role=role if line else None,
-                    operations=count / whole if whole else 0.0,
-                )
-            )
+            if isinstance(item, Place):
+                file, role = self._file.shown(item.file), known.get(item)
+                entry = LineEntry(kind="line", file=file, line=item.line, role=role, operations=values[item] / whole)
+            else:
+                share = drawn / whole if item == DRAWS else 0.0
+                entry = LineEntry(kind=item, file=None, line=None, role=None, operations=share)
+            self._entries.append(entry)
+
+    def _seen(self, level: int) -> tuple[Seen, int]:
+        """Return what a run of a few paths of a level shows, and their number: a block's where a few do not do."""
+        for paths in (_FEW, GRAIN):
+            one = Seen()
+            try:
+                self._runner.observed(level, paths, one)
+                break
+            except KernelError:  # perhaps a kernel that works on groups of paths
+                if paths == GRAIN or self._runner.singly:
+                    raise
+        return one, paths
 
     def _errors(self) -> tuple[dict[str, dict[str, Errors]], int] | Raised:
         """Run every part alone, all but every part, and all; return the errors by run and quantity, and the paths."""

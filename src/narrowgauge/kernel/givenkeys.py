@@ -85,7 +85,7 @@ def defaults_in_use(raw: Mapping[str, object]) -> tuple[str, ...]:
         if table == "draws":
             keys = [name for name in keys if isinstance(given, dict) and name in counting_keys(given)]
         if table == "lines":
-            keys = [name for name in keys if name in ("paths", "search", "what_ifs")]  # what the others are stands with the result
+            keys = [name for name in keys if name in ("paths", "search", "what_ifs")]  # the result has the rest
         if table == "cost" and given is not None:
             keys = [name for name in keys if name not in FORMATS]  # a format without a cost is not used
         assumed.extend(key for name in keys if (key := f"{table}.{name}") not in without)

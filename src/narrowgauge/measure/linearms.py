@@ -14,6 +14,7 @@ from narrowgauge.draws.streams import Purpose
 from narrowgauge.kernel.arms import wider
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.loading import KernelSource
+from narrowgauge.kernel.raised import with_place
 from narrowgauge.measure.arms import REFERENCE
 from narrowgauge.measure.block import BlockRunner
 from narrowgauge.measure.calls import Caller, Quantities
@@ -76,9 +77,13 @@ class LineRunner(BlockRunner):
         return Caller(self._file, self._kernel, arithmetic, observer, rows=not self.singly, drawn=widths.drawn())
 
     def observed(self, level: int, paths: int, observer: Observer) -> Quantities:
-        """Run a few paths of a level without rounding anything, and let the observer see the run."""
+        """Run a few paths of a level without rounding anything, and let the observer see the run.
+
+        Raises KernelError where the kernel raises.
+        """
         draws = self.draws(level, 0, Purpose.LINES, paths)
-        return self.caller_of(Widths(rest=None), observer).fine(draws, level)
+        with with_place(level, REFERENCE):
+            return self.caller_of(Widths(rest=None), observer).fine(draws, level)
 
     def errors(self, level: int, block: int, runs: Mapping[str, Widths]) -> dict[str, dict[str, Errors]] | Raised:
         """Return the errors by run and quantity; what the kernel raises in a run is returned in place of all."""
