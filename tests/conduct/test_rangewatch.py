@@ -119,3 +119,33 @@ def test_what_never_rounds_is_passed_over_but_for_the_one_that_may_be_nan() -> N
     first = seen(HALF, "fmod", (zeros + 1, zeros), zeros + np.nan, "exact").first
     assert first is not None
     assert (first.kind, first.operands, first.path) == ("not a number", (1.0, 0.0), 0)
+
+
+def calls(watch: RangeWatch, *operations: tuple[str, float, float, float]) -> None:
+    for operation, one, other, result in operations:
+        arrays = (np.array([one], np.float32), np.array([other], np.float32))
+        watch.saw(Somewhere(1), operation, "rounded", arrays, np.array([result], np.float32))  # type: ignore[arg-type]
+
+
+def test_the_first_is_first_in_time_whatever_place_is_looked_at_first() -> None:
+    """The product runs before the sum, and again after it; the sum is infinite before the product is."""
+    watch = RangeWatch(HALF)
+    watch.expect(1)
+    watch.begin()
+    calls(watch, ("multiply", 2.0, 2.0, 4.0), ("add", 65504.0, 65504.0, np.inf), ("multiply", 65504.0, 2.0, np.inf))
+    first = watch.harvest().first
+    assert first is not None
+    assert (first.operation, first.step) == ("add", 0)
+
+
+def test_each_call_counts_its_steps_anew() -> None:
+    """A loss on the second step of the second call is on step 1, after three steps in the first call."""
+    watch = RangeWatch(HALF)
+    watch.expect(2)
+    watch.begin(0)
+    calls(watch, *[("add", 1.0, 1.0, 2.0)] * 3)
+    watch.begin(1)
+    calls(watch, ("add", 1.0, 1.0, 2.0), ("add", 2048.0, 1.0, 2048.0))
+    seen = watch.harvest()
+    assert [line.first_lost for line in seen.lines.values()] == [1]
+    assert seen.lost.tolist() == [0.0, 1.0]
