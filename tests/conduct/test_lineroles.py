@@ -101,3 +101,20 @@ def test_additions_to_the_state_are_told_from_other_sums(tmp_path: Path) -> None
     """
     found = [one.place.line for one in seen(tmp_path, source, 2).sums]
     assert sorted(found) == [8, 9, 9, 10]
+
+
+def test_the_state_of_a_single_path_is_found_too(tmp_path: Path) -> None:
+    """A kernel of one path a call computes with numbers, not with arrays."""
+    source = """
+        def value(dW, h):
+            x = 1.0
+            for dw in dW:
+                shock = 0.2 * dw
+                x = x + x * shock
+            return x
+    """
+    file = file_for(tmp_path, source, kernel={"layout": '"steps"'})
+    few, many = Seen(), Seen()
+    for level, one in ((0, few), (2, many)):
+        LineRunner(file, find_kernel(file), "float16").observed(level, 16, one)
+    assert {place.line: role for place, role in roles(few, many).items()} == {4: "step", 5: "state"}

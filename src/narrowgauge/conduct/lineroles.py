@@ -77,7 +77,7 @@ class Seen:
                 added = True
         if added and operation in _SUMS:
             self._additions[here] += np.size(result)
-        if isinstance(result, np.ndarray):
+        if isinstance(result, (np.ndarray, float, np.floating)):
             self._results.pop(id(result), None)  # so that it stands last
             self._results[id(result)] = _Result(frame.f_code, here, result)
             if len(self._results) > _LATEST:
