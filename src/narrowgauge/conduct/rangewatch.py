@@ -122,7 +122,7 @@ class Seen:
 
 
 class RangeWatch:
-    """Looks at every operation that rounds, in runs of the format `form`.
+    """Looks at every operation that rounds, in runs of the format `form`; in float64 not for lost additions.
 
     A step is how often an operation at its place in the code ran before, in the same call. `expect` comes before the
     calls of a run, `begin` before each of them, with the path where the kernel is called for one at a time. What a
@@ -209,7 +209,10 @@ class RangeWatch:
     def _note(self, met: Any) -> None:
         """Note how large operands are, draws and constants among them."""
         size = np.abs(met)
-        self._largest = max(self._largest, float(np.max(size, initial=0.0, where=np.isfinite(size))))
+        largest = float(np.max(size, initial=0.0))
+        if not largest <= self._most:  # also NaN
+            largest = float(np.max(size, initial=0.0, where=np.isfinite(size)))
+        self._largest = max(self._largest, largest)
 
     def decided(self, setting: Setting, answer: bool) -> None:
         """Pass over a decision."""
@@ -240,11 +243,11 @@ class RangeWatch:
             low, high = self._outside(site, operands, result, size)
         seen.results += size.size
         seen.smallest, seen.largest = min(seen.smallest, low), max(seen.largest, high)
-        if site.operation in _SUMS and operands:
-            self._summed(site, operands, size)
         if self._reference:
             for each in operands:
                 self._note(each)
+        elif site.operation in _SUMS and operands:
+            self._summed(site, operands, size)
         site.marks.clear()
 
     def _outside(self, site: _Site, operands: Sequence[Any], result: Any, size: Any) -> tuple[float, float]:
