@@ -12,10 +12,11 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal
 
-import msgspec
+from msgspec.structs import replace as changed
 
 from narrowgauge.conduct.account import account
 from narrowgauge.conduct.domain import explore
+from narrowgauge.conduct.lines import line_study, studied
 from narrowgauge.conduct.owntrial import examine_own
 from narrowgauge.conduct.run import Watcher, run
 from narrowgauge.conduct.separated import draws_entry
@@ -32,6 +33,7 @@ from narrowgauge.measure.task import Bench, pinned
 from narrowgauge.measure.workers import Workers, engine_for
 from narrowgauge.record.audit import AuditRecord, KernelEntry, TrialEntry
 from narrowgauge.record.canonical import canonical_text, read_strict, write_atomically
+from narrowgauge.record.linetable import line_rows, lines_csv
 from narrowgauge.record.source import SourceEntry
 from narrowgauge.record.table import accumulation_rows, level_rows, levels_csv
 
@@ -40,7 +42,7 @@ if TYPE_CHECKING:
 
 __all__ = ["Audit", "audit", "run_audit", "try_out"]
 
-_RECORD, _LEVELS = "audit.json", "levels.csv"
+_RECORD, _LEVELS, _LINES = "audit.json", "levels.csv", "lines.csv"
 
 
 class Audit:
@@ -66,6 +68,11 @@ class Audit:
         fields = ("file", "line", "operation", "route", "count")
         found = self.record.reach.lines if self.record.reach is not None else []
         return _frame([{name: getattr(line, name) for name in fields} for line in found])
+
+    @property
+    def shares(self) -> pd.DataFrame:
+        """One row per format, quantity and line or input: its share of the variances; no rows without [lines]."""
+        return _frame(line_rows(self.record))
 
 
 def audit(
@@ -142,12 +149,19 @@ def run_audit(
         made["imported"] = versions_of(source.imports)
         if domain is not None:
             made["resumed_looks"] = len(ledger.kept_looks) if ledger is not None else 0
-        record = msgspec.structs.replace(account(file, outcome, entry, made), source=source)
+        record = changed(account(file, outcome, entry, made), source=source)
         if domain is not None:
-            record = msgspec.structs.replace(record, domain=domain.entry)
+            record = changed(record, domain=domain.entry)
+        study = line_study(file, record)
+        if study is not None and study.finest and tell is not None and watcher is not None:
+            tell(f"all levels are measured; the lines of {', '.join(study.finest)} are studied")
+        record = changed(record, lines=studied(study, engine))
         if place is not None and ledger is not None:
             _write(place, _RECORD, canonical_text(record.document()))
             _write(place, _LEVELS, levels_csv(record))
+            (place.path / _LINES).unlink(missing_ok=True)  # of an audit that is replaced
+            if record.lines is not None and record.lines.formats:
+                _write(place, _LINES, lines_csv(record))
             ledger.finish()
     return Audit(record, out)
 
@@ -211,7 +225,7 @@ def _own_trial(bench: Bench) -> TrialEntry:
 
 
 def _with_draws(trial: TrialEntry, file: AuditFile, runner: BlockRunner) -> TrialEntry:
-    return msgspec.structs.replace(trial, draws=draws_entry(file, runner.approximation))
+    return changed(trial, draws=draws_entry(file, runner.approximation))
 
 
 def _claim(place: _Folder, file: AuditFile, kernel: KernelEntry, *, replace: bool, resume: bool) -> Ledger:

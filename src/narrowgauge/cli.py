@@ -131,7 +131,11 @@ def _parser() -> argparse.ArgumentParser:
         "--timeout",
         metavar="SECONDS",
         type=_seconds,
-        help="time limit of the trial run and of each block; a worker past it is replaced, and the block run once more",
+        help="time limit of the trial run, of each block and of the study of the lines; a worker past it is replaced, "
+        "and the block run once more",
+    )
+    audit.add_argument(
+        "--lines", action="store_true", help="find out which lines cost the accuracy, as with a table [lines]"
     )
     audit.add_argument(
         "--quiet", action="store_true", help="no plan, bar and tables, only what is wrong and the verdict"
@@ -187,6 +191,10 @@ def _audit(options: argparse.Namespace) -> int:
     from narrowgauge.kernel.auditfile import read_audit_file
 
     file = read_audit_file(Path(options.file))
+    if options.lines:
+        from narrowgauge.kernel.linestable import with_lines
+
+        file = with_lines(file)
     if options.dry:
         return _try_out(file)
     from narrowgauge import api

@@ -108,7 +108,7 @@ def test_a_scheme_that_no_scenario_tried_is_not_claimed(record: AuditRecord) -> 
 def test_a_domain_from_audit_to_policy(tmp_path_factory: pytest.TempPathFactory) -> None:
     """A box asked for in an audit file: the policy claims what lies above the volatility at which float16 does not pay.
 
-    Of volatilities from .2 to .4, audited at .3, those of the corner .2 and of a scenario near it are refused on level 3.
+    Of volatilities from .2 to .4, audited at .3, the corner .2 and a scenario near it are refused on level 3.
     """
     table = """
 [domain]

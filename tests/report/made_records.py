@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from made_watched import AVERAGING, WATCHED
 from msgspec.structs import replace
 
 from narrowgauge.record.audit import (
@@ -265,6 +266,7 @@ def constant_entry(line, arm, kind, *values, distinct=None, parameter=None):
 
 
 RANGE = RangeEntry(
+    watched=WATCHED,
     constants=[
         constant_entry(None, "float16", "infinite", (7e4, None), parameter="curve"),
         constant_entry(7, "float16", "zero", (1e-8, 0.0)),
@@ -275,7 +277,7 @@ RANGE = RangeEntry(
         constant_entry(12, "float16", "zero", (1e-45, 0.0)),
         constant_entry(12, "bfloat16", "zero", (1e-45, 0.0)),
         constant_entry(12, "float32", "subnormal", (1e-45, 1.401298464324817e-45)),
-    ]
+    ],
 )
 
 
@@ -325,6 +327,7 @@ def audit_record(**quantities):
         ),
         reach=REACH,
         range=RANGE,
+        averaging=AVERAGING,
         cautions=["A verdict is evidence, not approval.", "The emulation does not know a vendor's instructions."],
         provenance={},
     )
@@ -371,7 +374,8 @@ def troubled_record():
         value=replace(entry, finest_paying_level=finest, allocation=allocation, agreement=agreement),
     )
     asked = {**ASKED, "target": None, "assumed": ["target.worthwhile", "cost.float64", "cost.float32"]}
-    return replace(record, asked=asked, reach=None, range=None, verdict=replace(record.verdict, sound=False))
+    unsound = replace(record.verdict, sound=False)
+    return replace(record, asked=asked, reach=None, range=None, averaging=None, verdict=unsound)
 
 
 def trial_entry(*, escapes):

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import operator
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from functools import partial
@@ -34,6 +35,7 @@ Subnormals = Literal["kept", "flushed"]
 
 _EXACT_INTEGERS = 2**53
 _MOST_CONSTANTS = 4096  # a kernel that feeds a new constant each step must not fill memory
+_FRESH = frozenset((operator.add, operator.sub, operator.mul, operator.truediv))  # make a new array, as the ufunc does
 _APART = frozenset(("table", "wide", "terms"))  # what does not take place in the carrier
 
 
@@ -79,7 +81,7 @@ class Arithmetic:
         object.__setattr__(self, "_ways", ways(self.format, self.rounding))
         if not self.native:  # numba is imported here at the latest, not inside a kernel's run
             compiled.kernel("nearest")
-            if not self.format.native:
+            if not self.format.native and not self.format.shift:
                 self._in_carrier(np.add)
         if self.rounding == "nearest" and self.subnormals == "kept" and not self.fused:
             self.direct.update(self._directly())
@@ -107,7 +109,7 @@ class Arithmetic:
         if way in _APART:
             return self._delivered(self._computed(way, ufunc, operands, out), out)
         arrays = type(operands[0]) is np.ndarray or type(operands[-1]) is np.ndarray
-        if way == "carrier" and arrays and (call is None or out is not None):
+        if way == "carrier" and arrays and (call is None or out is not None or call in _FRESH):
             compute = self.direct.get(ufunc) or self._in_carrier(ufunc)
             result = compute(*operands, out=out)
             return result if self.subnormals == "kept" else self._flushed(result)
@@ -188,6 +190,10 @@ class Arithmetic:
         mode: Rounding = "nearest" if self.rounding == "stochastic" else self.rounding
         wide = values.astype(np.float64, copy=False)
         return narrow(wide, self.format, mode, flushed=self.subnormals == "flushed")
+
+    def constants(self, values: npt.NDArray[Any]) -> Floats:
+        """Return a plain array as it meets the state: what `cast` returns, unless lines have formats of their own."""
+        return self.cast(values)
 
     def holds(self, values: npt.NDArray[Any]) -> bool:
         """Whether every value of a real array is one of the arithmetic's already (NaN is)."""

@@ -11,7 +11,7 @@ specification offers two conversions for what is too large; this is the one that
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from math import inf, nan
 
 import ml_dtypes
@@ -26,7 +26,8 @@ class Format:
 
     `precision` counts the significand's bits with the hidden one, `emax` is the largest exponent, `bits` the
     width in storage, `carrier` the NumPy type that holds its values during emulation, `storage` the NumPy or
-    ml_dtypes type with exactly these values; TF32 has none, it is stored as float32.
+    ml_dtypes type with exactly these values; TF32 has none, it is stored as float32. `shift` is by how much the
+    exponents lie higher than in the format of that name proper, `emax` included; see `shifted`.
     """
 
     name: str
@@ -36,11 +37,12 @@ class Format:
     carrier: np.dtype[np.float32] | np.dtype[np.float64]
     storage: np.dtype[np.generic]
     infinite: bool = True
+    shift: int = 0
 
     @property
     def emin(self) -> int:
         """Smallest exponent of a normal number; without infinities one exponent more is used at the top."""
-        return 1 - self.emax if self.infinite else 2 - self.emax
+        return (1 if self.infinite else 2) - self.emax + 2 * self.shift
 
     @property
     def unit_roundoff(self) -> float:
@@ -70,12 +72,38 @@ class Format:
     @property
     def native(self) -> bool:
         """Whether the carrier's own arithmetic already is this format's, to nearest with subnormals kept."""
-        return self.precision >= 24
+        return self.precision >= 24 and not self.shift
+
+    def shifted(self, shift: int) -> Format:
+        """Return a format of this precision all of whose exponents are `shift` higher: 2^shift times its values.
+
+        Its carrier is float64, no type stores it, and `InDouble` computes in it. ValueError for float64, beyond which
+        there is no carrier, for a format that is shifted already, and for a shift past 512 either way.
+        """
+        if self.precision == 53 or self.shift or abs(shift) > _LARGEST_SHIFT:
+            raise ValueError(
+                f"{self.name} cannot be shifted by {shift}; accepted: formats below float64, to {_LARGEST_SHIFT}"
+            )
+        return replace(
+            self,
+            name=f"{self.name}, exponents {shift:+d}",
+            emax=self.emax + shift,
+            carrier=_F64,
+            storage=_F64,
+            shift=shift,
+        )
+
+    @property
+    def proper(self) -> Format:
+        """The format that was shifted; itself if it was not."""
+        return FORMATS[self.name.partition(",")[0]]
 
     def includes(self, other: Format) -> bool:
         """Whether every finite value of the other format is one of this one."""
         return self.precision >= other.precision and self.emax >= other.emax
 
+
+_LARGEST_SHIFT = 512  # products of shifted float32 stay within float64
 
 _F32, _F64 = np.dtype(np.float32), np.dtype(np.float64)
 

@@ -127,9 +127,14 @@ def narrow(
     value as if exponents went on. Toward zero and away from an infinity what is too large becomes the largest finite
     value; what is infinite stays so.
     """
+    found: Floats
+    if form.shift:  # by powers of two, which are exact; what float64 cannot hold is far outside the format
+        scaled = np.multiply(values, 2.0**-form.shift)
+        found = narrow(scaled, form.proper, rounding, flushed=flushed, uniforms=uniforms).astype(np.float64)
+        return np.multiply(found, 2.0**form.shift, out=found)
     if form.precision == 53 or (form.native and rounding == "nearest"):
         with np.errstate(over="ignore", under="ignore", invalid="ignore"):  # invalid: a signalling NaN
-            found: Floats = values.astype(form.storage)
+            found = values.astype(form.storage)
     else:
         loop = compiled.kernel(_LOOPS.get(rounding, "directed")) if values.size else None
         if loop is not None:

@@ -7,6 +7,7 @@ import math
 import msgspec
 import numpy as np
 
+from narrowgauge.conduct.averages import averaging_entry
 from narrowgauge.conduct.entries import (
     correction_entry,
     finite,
@@ -57,6 +58,7 @@ from narrowgauge.record.audit import (
     LevelEntry,
     OrdersEntry,
     QuantityEntry,
+    RangeEntry,
     RulesEntry,
     SeparationEntry,
     TelescopingEntry,
@@ -136,13 +138,22 @@ def account(file: AuditFile, outcome: Outcome, kernel: KernelEntry, provenance: 
             plan=common_plan_entry(file, outcome),
         ),
         reach=outcome.trial.reach,
-        range=outcome.trial.range,
+        range=_range(outcome),
+        averaging=averaging_entry(file, outcome, {name: one.allocation.levels for name, one in quantities.items()}),
         canary=msgspec.UNSET if outcome.trial.canary is None else outcome.trial.canary,
         costs=outcome.costs or msgspec.UNSET,
         cautions=[OWN_CAUTION if own and caution == CAUTIONS[1] else caution for caution in CAUTIONS],
         provenance=provenance,
         draws=outcome.draws or msgspec.UNSET,
     )
+
+
+def _range(outcome: Outcome) -> RangeEntry | None:
+    """Return what the trial found of the constants, with what was seen of all numbers."""
+    found = outcome.trial.range
+    if found is None or outcome.study is None:
+        return found
+    return msgspec.structs.replace(found, watched=outcome.study.watched)
 
 
 class _Quantity:

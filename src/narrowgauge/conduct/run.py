@@ -13,7 +13,8 @@ import msgspec
 from narrowgauge.conduct.prepare import prepare
 from narrowgauge.conduct.scenarios import DomainPlan, domain_plan
 from narrowgauge.conduct.stepcosts import with_costs
-from narrowgauge.errors import KernelError
+from narrowgauge.conduct.study import Study, study
+from narrowgauge.errors import DispatchError, KernelError, WorkerError
 from narrowgauge.judge.schemes import LevelJudgement, judge_level
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.loading import KernelSource
@@ -79,7 +80,7 @@ class Outcome:
     """All that was measured and judged; `alpha` is 1 - confidence of each look.
 
     `fingerprints` are those of the processes that measured, each once and in order; `draws` the approximate ones;
-    `costs` are measured ones.
+    `costs` are measured ones; `study` what was looked at besides, None where that was stopped or not wanted.
     """
 
     tallies: Mapping[int, LevelTally]
@@ -89,6 +90,7 @@ class Outcome:
     fingerprints: tuple[str, ...] = ()
     draws: DrawsEntry | None = None
     costs: dict[str, CostEntry] | None = None
+    study: Study | None = None
 
 
 def run(
@@ -99,16 +101,18 @@ def run(
     watcher: Watcher | None = None,
     engine: Engine | None = None,
     ledger: Ledger | None = None,
+    studied: bool = True,
 ) -> Outcome:
     """Measure and judge every level: at `paths`, twice that, four times ... up to `most_paths`, in whole blocks.
 
     `settled` says whether a level needs no more paths; for an audit, whether no format is undecided on it. Levels that
     are not settled at one look draw more paths for the next; each of J looks has confidence
     1 - (1 - confidence) / J. `engine` runs the blocks, one after the other in this process unless given; what the
-    `ledger` has is not run again, and what is finished is put there. Raises what the trial and the blocks raise.
+    `ledger` has is not run again, and what is finished is put there. `studied`: when all is measured every number of a
+    few paths is looked at. Raises what the trial and the blocks raise.
     """
     with pinned():  # the same sums in the same order, whatever machine
-        return _Conductor(file, settled, watcher, engine or SerialEngine(file, kernel), ledger).run()
+        return _Conductor(file, settled, watcher, engine or SerialEngine(file, kernel), ledger).run(studied=studied)
 
 
 def _known_costs(ledger: Ledger | None) -> dict[str, CostEntry] | None:
@@ -140,7 +144,7 @@ class _Conductor:
         self._fingerprints: set[str] = set()
         self._names: tuple[int, list[str]] | None = None  # the level of the first block, and its quantities
 
-    def run(self) -> Outcome:
+    def run(self, *, studied: bool) -> Outcome:
         file = self._file
         looks = self._looks()
         alpha = (1 - file.sampling.confidence) / len(looks)
@@ -163,7 +167,15 @@ class _Conductor:
             fingerprints=tuple(sorted(self._fingerprints)),
             draws=self._prepared.draws,
             costs=self._prepared.costs,
+            study=self._studied() if studied else None,
         )
+
+    def _studied(self) -> Study | None:
+        """Look at what is no part of the measurement, which nothing that happens here may cost."""
+        try:
+            return self._engine.call(study)
+        except (DispatchError, KernelError, WorkerError):
+            return None
 
     def _looks(self) -> list[int]:
         """Return the paths at which levels are judged: doubled within the budget, each with a block that is new."""

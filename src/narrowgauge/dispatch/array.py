@@ -222,7 +222,7 @@ class Constant(Array):
     def __array__(self, dtype: Any = None, copy: bool | None = None) -> Any:
         plain = np.empty_like(self._carrier, np.float64)
         plain[...] = np.nan if self._plain is None else self._plain  # unpickled: the numbers were not written along
-        if not np.array_equal(self._setting.arithmetic.cast(plain), self._carrier, equal_nan=True):
+        if not np.array_equal(self._setting.arithmetic.constants(plain), self._carrier, equal_nan=True):
             return super().__array__(dtype, copy)
         return plain if dtype is None else plain.astype(dtype)
 

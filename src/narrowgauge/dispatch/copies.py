@@ -23,6 +23,7 @@ from narrowgauge.dispatch.functions import call_function
 from narrowgauge.dispatch.handed import GENERATORS, HandedOver
 from narrowgauge.dispatch.importing import Copies
 from narrowgauge.dispatch.modules import STOOD_IN, Sources
+from narrowgauge.dispatch.placed import Placed
 from narrowgauge.dispatch.randoms import adopted
 from narrowgauge.dispatch.setting import Observer, Setting
 from narrowgauge.dispatch.standin import refusing_generator
@@ -64,6 +65,8 @@ class PrivateCopy:
 def new_setting(arithmetic: Arithmetic, observer: Observer | None = None, draws: Feed | None = None) -> Setting:
     """Return a setting for one run, with no user file in it yet; `draws` is what its numpy.random draws from."""
     made = Setting(arithmetic, files=set(), wrap=wrap, ufunc=call_ufunc, function=call_function, observer=observer)
+    if isinstance(arithmetic, Placed):
+        arithmetic.follow(made)
     if draws is not None:
         made.draws, draws.setting = draws, made
     return made

@@ -43,8 +43,8 @@ def axes_of(ndim: int, axis: Axis) -> tuple[int, ...]:
 def running(arithmetic: Arithmetic, ufunc: np.ufunc, front: Carrier) -> Carrier:
     """Return all partial results along the first axis."""
     form = arithmetic.format
-    plain = arithmetic.rounding == "nearest" and arithmetic.subnormals == "kept" and not arithmetic.fused
-    if plain and ufunc in (np.add, np.multiply) and front.ndim and front[:1].size < _NARROW:
+    stored = bool(arithmetic.direct) and form.name != "tf32"  # which is stored as float32, and no type computes in it
+    if stored and ufunc in (np.add, np.multiply) and front.ndim and front[:1].size < _NARROW:
         # the storage type's own operation rounds each partial result as the loop below does, at a tenth of its cost
         return ufunc.accumulate(front.astype(form.storage), axis=0).astype(form.carrier)
     partial = np.array(front, form.carrier)

@@ -274,7 +274,7 @@ class Setting:
         if kind == "b" or (array.dtype == np.float64 and self.arithmetic.format.name == "float64"):
             return array
         try:
-            return self.arithmetic.cast(array)
+            return self.arithmetic.constants(array)
         except ValueError as problem:
             raise self.fault(RefusedError, f"a plain array met the state: {problem}") from None
 

@@ -185,8 +185,10 @@ def _parted(setting: Setting, ufunc: np.ufunc, inputs: Sequence[Any]) -> Any:
 def _neighbour(setting: Setting, ufunc: np.ufunc, inputs: Sequence[Any]) -> Any:
     """Ask the storage type, which has just the values of the format, for the next one or the distance to it."""
     form = setting.arithmetic.format
-    if form.name == "tf32":
-        raise setting.fault(RefusedError, f"np.{ufunc.__name__} is refused in tf32, which has no type of its own")
+    if form.name == "tf32" or form.shift:
+        raise setting.fault(
+            RefusedError, f"np.{ufunc.__name__} is refused in {form.name}, which has no type of its own"
+        )
     own = [carried(value, setting) for value in inputs]
     if form.native:
         return finished(setting, ufunc.__name__, "exact", own, ufunc(*own))

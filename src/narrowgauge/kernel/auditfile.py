@@ -32,6 +32,7 @@ from narrowgauge.kernel.audittables import (
     KernelTable,
     LadderTable,
     LibraryTable,
+    LinesTable,
     SamplingTable,
     Table,
     TableError,
@@ -86,6 +87,7 @@ class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
     assumed: tuple[str, ...]
     draws: DrawsTable | None = None
     domain: DomainTable | None = None
+    lines: LinesTable | None = None
     timed: CostTable | None = None
 
     @property
@@ -163,8 +165,8 @@ class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
             elif name in ("parameters", "target"):
                 tables[name] = copy.deepcopy(table)
         tables["assumed"] = list(self.assumed)
-        rest = {"draws": self.draws, "domain": self.domain}
-        return tables | {name: document(table, without) for name, table in rest.items() if table is not None}
+        rest = (self.draws, self.domain, self.lines)
+        return tables | {one.table: document(one, without) for one in rest if one is not None}
 
 
 def read_audit_file(path: Path) -> AuditFile:
@@ -289,6 +291,7 @@ def _assembled(raw: dict[str, object], source: str, folder: Path, function: Call
         assumed=defaults_in_use(raw),
         draws=_draws(raw),
         domain=_table(DomainTable, checked_box(raw)) if "domain" in raw else None,
+        lines=_table(LinesTable, raw["lines"]) if "lines" in raw else None,
     )
     check_own(
         audit_file.kernel,
@@ -300,6 +303,8 @@ def _assembled(raw: dict[str, object], source: str, folder: Path, function: Call
         command=command,
     )
     _check_ladder(audit_file.kernel, audit_file.ladder)
+    if audit_file.lines is not None:
+        audit_file.lines.check(audit_file.kernel.rounds, audit_file.formats.narrow, audit_file.ladder.finest)
     for name in audit_file.used_formats:
         if getattr(audit_file.cost, name) is None and not audit_file.cost.measured:
             key = f"cost.{name}"

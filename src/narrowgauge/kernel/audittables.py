@@ -16,6 +16,7 @@ from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.kernel.arms import Kind
 from narrowgauge.kernel.domaintable import DomainTable
 from narrowgauge.kernel.drawstable import DrawsTable
+from narrowgauge.kernel.linestable import LinesTable
 from narrowgauge.kernel.owntables import CommandTable, LibraryTable
 from narrowgauge.kernel.rules import RULES, Table, TableError, check_run, dotted, kind_of, shown
 
@@ -30,6 +31,7 @@ __all__ = [
     "KernelTable",
     "LadderTable",
     "LibraryTable",
+    "LinesTable",
     "SamplingTable",
     "Table",
     "TableError",
@@ -253,5 +255,6 @@ TABLES: dict[str, type[Table]] = {
         CostTable,
         SamplingTable,
         DomainTable,
+        LinesTable,
     )
 }

@@ -23,6 +23,7 @@ from narrowgauge.kernel.auditfile import bytes_of, most_steps
 from narrowgauge.kernel.auditparameters import check_parameter, plain
 from narrowgauge.kernel.audittables import TABLES, LadderTable, TableError, check_run, default_layout, dotted
 from narrowgauge.kernel.domaintable import domain_lines
+from narrowgauge.kernel.linestable import lines_draft
 
 __all__ = ["draft"]
 
@@ -35,7 +36,7 @@ _TAKES_BY_NAME: tuple[tuple[str, re.Pattern[str]], ...] = (
     ("normals", re.compile(r"zs?|xis?|eps|epsilons?|.*normals?|.*gaussians?")),
     ("uniforms", re.compile(r"us?|.*uniforms?")),
 )
-_ELSEWHERE = ("kernel", "library", "command", "domain")  # written first or last, or in place of a Python function
+_ELSEWHERE = ("kernel", "library", "command", "domain", "lines")  # written first or last, or in a function's place
 _OPTIONAL = ("target", "draws", "cost")
 _INSTEAD = ("draws.intervals", "draws.degree")  # not accepted beside the value shown for draws.approximate
 _COUNTS = ("steps", "paths")  # what a kernel that draws for itself is told
@@ -141,7 +142,7 @@ def draft(target: str) -> str:
             keys = [f"{table}.{key}" for key in record.__struct_fields__]
             lines += ["", header, *(_line(key, values) for key in keys if key not in left_out)]
     floats = {key: value for key, value in tomllib.loads("\n".join(parameters)).items() if isinstance(value, float)}
-    return "\n".join([*lines, *domain_lines(floats)]) + "\n"
+    return "\n".join([*lines, *domain_lines(floats), *lines_draft()]) + "\n"
 
 
 def _function(path: Path, name: str) -> ast.FunctionDef:

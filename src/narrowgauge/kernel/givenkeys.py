@@ -19,6 +19,7 @@ CHEAP = "approximate_draws"  # a cost that counts with [draws] alone
 _ORDER = (
     *("kernel", "library", "command", "parameters", "ladder", "target", "formats", "draws", "cost", "sampling"),
     "domain",
+    "lines",
 )
 _REQUIRED = ("kernel", "ladder")
 _OWN = ("kernel.rounds", "cost.measured")  # keys that count for a kernel that rounds for itself alone
@@ -80,10 +81,12 @@ def defaults_in_use(raw: Mapping[str, object]) -> tuple[str, ...]:
         keys = [name for name in record.__struct_fields__ if not isinstance(given, dict) or name not in given]
         if table == "target" and given is None:
             keys = ["worthwhile"]  # the one key of it that counts without a target
-        if table in ("library", "command", "domain") and given is None:
+        if table in ("library", "command", "domain", "lines") and given is None:
             keys = []
         if table == "draws":
             keys = [name for name in keys if isinstance(given, dict) and name in counting_keys(given)]
+        if table == "lines":
+            keys = [name for name in keys if name in ("paths", "search", "what_ifs")]  # the result has the rest
         if table == "cost" and given is not None:
             keys = [name for name in keys if name not in FORMATS]  # a format without a cost is not used
         if table == "domain":

@@ -190,6 +190,20 @@ class BlockRunner:
             raised=raised,
         )
 
+    def differences(self, level: int, paths: int) -> dict[str, dict[str, Values]]:
+        """Return by arm and quantity the level differences of a few paths, (paths,); arms that raise are left out.
+
+        Raises what `run` raises.
+        """
+        draws = self.draws(level, 0, Purpose.IDENTITY, paths)
+        runs = {arm: self._paths(draws, level, arm) for arm in self.arms}
+        with np.errstate(all="ignore"):
+            return {
+                arm: {name: found.difference(name) for name in found.fine}
+                for arm, found in runs.items()
+                if isinstance(found, _Paths)
+            }
+
     def seconds(self, level: int, paths: int) -> float:
         """Return how long a few paths of a level take in all arms, once the kernel's copies are made.
 

@@ -29,7 +29,8 @@ class Caller:
     """A private copy of a kernel in one arithmetic, or in plain NumPy for None; raises what making the copy raises.
 
     A kernel that takes one path a call is called for each, or with whole `rows` of them. `kind` says which draws of a
-    block it sees. One that rounds for itself is called in the arithmetic's format as it is, in float64 for None.
+    block it sees, `drawn` in which arithmetic where that is another one. One that rounds for itself is called in the
+    arithmetic's format as it is, in float64 for None.
     """
 
     def __init__(
@@ -41,10 +42,11 @@ class Caller:
         *,
         rows: bool = False,
         kind: Kind = "exact",
+        drawn: Arithmetic | None = None,
     ) -> None:
         self._file = file
         self._kind = kind
-        self._arithmetic = arithmetic or arithmetic_named(REFERENCE)
+        self._arithmetic = drawn or arithmetic or arithmetic_named(REFERENCE)
         self._feed = Feed() if file.kernel.takes == "rng" else None
         self._drawn: Floats | ArmDraws | None = None
         self._own = kernel if file.kernel.rounds == "itself" else None

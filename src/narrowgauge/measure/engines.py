@@ -15,9 +15,10 @@ from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.loading import KernelSource
 from narrowgauge.measure.task import Bench, Block, Key, run_block
 
-__all__ = ["Engine", "Errand", "SerialEngine", "errand_of", "largest_first"]
+__all__ = ["TRIAL", "Engine", "Errand", "SerialEngine", "errand_of", "largest_first"]
 
 T = TypeVar("T")
+TRIAL = "the trial run"  # what a task is called in messages unless it has a name
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -43,8 +44,11 @@ class Engine(Protocol):
     ) -> None:
         """Stop whatever still runs."""
 
-    def call(self, task: Callable[[Bench], T]) -> T:
-        """Run one task, a module's function, at a bench and return its result; raises what it raises."""
+    def call(self, task: Callable[[Bench], T], name: str = TRIAL) -> T:
+        """Run one task, a module's function, at a bench and return its result; raises what it raises.
+
+        Messages about a worker that crashes or is past its time limit call it by its name.
+        """
 
     def blocks(self, sizes: Mapping[Key, int]) -> Iterator[Block]:
         """Run the blocks of these keys, each with its size in steps, and yield each as it is finished.
@@ -87,7 +91,7 @@ class SerialEngine:
     ) -> None:
         """Leave nothing behind."""
 
-    def call(self, task: Callable[[Bench], T]) -> T:
+    def call(self, task: Callable[[Bench], T], name: str = TRIAL) -> T:
         """Run one task; what it raises passes through."""
         return task(self._bench)
 

@@ -27,7 +27,7 @@ from narrowgauge.errors import KernelError, WorkerError
 from narrowgauge.kernel.command import how_ended
 from narrowgauge.kernel.loading import WORKER
 from narrowgauge.measure.crash import innermost
-from narrowgauge.measure.engines import Errand, errand_of, largest_first
+from narrowgauge.measure.engines import TRIAL, Errand, errand_of, largest_first
 from narrowgauge.measure.task import Bench, Block, Job, Key, Reply
 from narrowgauge.measure.worker import READY, Asked
 
@@ -96,10 +96,10 @@ class ProcessEngine:
             slot.join()
         self._scratch.cleanup()
 
-    def call(self, task: Callable[[Bench], T]) -> T:
+    def call(self, task: Callable[[Bench], T], name: str = TRIAL) -> T:
         """Run one task in one of the processes."""
         waiting: queue.SimpleQueue[_Done] = queue.SimpleQueue()
-        self._tasks.put(_Task(name="the trial run", level=None, run=task, done=waiting))
+        self._tasks.put(_Task(name=name, level=None, run=task, done=waiting))
         done = waiting.get()
         if done.problem is not None:
             raise done.problem

@@ -16,7 +16,7 @@ from typing import Any, TypeVar
 from narrowgauge.errors import WorkerError, said
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.loading import KernelSource
-from narrowgauge.measure.engines import Errand, errand_of, largest_first
+from narrowgauge.measure.engines import TRIAL, Errand, errand_of, largest_first
 from narrowgauge.measure.task import Bench, Block, Key, Reply, here, job_for, run_task
 
 __all__ = ["ExecutorEngine", "cluster"]
@@ -59,10 +59,10 @@ class ExecutorEngine:
         self._withdraw()
         self._held.close()
 
-    def call(self, task: Callable[[Bench], T]) -> T:
+    def call(self, task: Callable[[Bench], T], name: str = TRIAL) -> T:
         """Run one task on the executor."""
-        future = self._submitted(task, None, "the trial run")
-        value: T = self._result(future, "the trial run")
+        future = self._submitted(task, None, name)
+        value: T = self._result(future, name)
         return value
 
     def blocks(self, sizes: Mapping[Key, int]) -> Iterator[Block]:

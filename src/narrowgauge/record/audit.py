@@ -12,10 +12,12 @@ from typing import Literal
 
 import msgspec
 
+from narrowgauge.record.averaging import AveragingEntry
 from narrowgauge.record.canary import CanaryEntry
 from narrowgauge.record.costs import CostEntry
 from narrowgauge.record.domain import DomainEntry
 from narrowgauge.record.draws import DrawsEntry, OrderEntry, PartsEntry, SeparationEntry
+from narrowgauge.record.lines import LinesEntry
 from narrowgauge.record.plan import (
     AllocationEntry,
     CommonLevelEntry,
@@ -329,8 +331,8 @@ class AuditRecord(Entry, frozen=True, kw_only=True):
     range: RangeEntry | None = None
     canary: list[CanaryEntry] | msgspec.UnsetType = msgspec.UNSET
     costs: dict[str, CostEntry] | msgspec.UnsetType = msgspec.UNSET
-    lines: None = None
-    averaging: None = None
+    lines: LinesEntry | None = None
+    averaging: AveragingEntry | None = None
     domain: DomainEntry | None = None
     cautions: list[str]
     provenance: dict[str, object]

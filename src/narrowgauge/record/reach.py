@@ -7,6 +7,7 @@ from typing import Literal
 from narrowgauge.record.canary import CanaryEntry
 from narrowgauge.record.draws import DrawsEntry
 from narrowgauge.record.plan import Entry
+from narrowgauge.record.range import WatchedEntry
 
 __all__ = [
     "ConstantEntry",
@@ -105,9 +106,13 @@ class ConstantEntry(Entry, frozen=True, kw_only=True):
 
 
 class RangeEntry(Entry, frozen=True, kw_only=True):
-    """What the range of a format does to a kernel: its constants, met on the levels of the trial and the finest."""
+    """What the range of a format does to a kernel: its constants, met on the levels of the trial and the finest.
+
+    `watched` is a run on a few paths with every operation looked at; a trial alone has none.
+    """
 
     constants: list[ConstantEntry]
+    watched: WatchedEntry | None = None
 
 
 class FaultEntry(Entry, frozen=True, kw_only=True):

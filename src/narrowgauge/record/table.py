@@ -7,7 +7,7 @@ import io
 
 from narrowgauge.record.audit import AuditRecord
 
-__all__ = ["accumulation_rows", "level_rows", "levels_csv"]
+__all__ = ["Row", "accumulation_rows", "csv_text", "level_rows", "levels_csv"]
 
 Row = dict[str, object]
 
@@ -72,7 +72,11 @@ def accumulation_rows(record: AuditRecord) -> list[Row]:
 
 def levels_csv(record: AuditRecord) -> str:
     """Return levels.csv: a header and the rows of `level_rows`, floats by shortest repr, None as an empty field."""
-    rows = level_rows(record)
+    return csv_text(level_rows(record))
+
+
+def csv_text(rows: list[Row]) -> str:
+    """Return rows as a table with a header: floats by shortest repr, None as an empty field."""
     text = io.StringIO()
     writer = csv.DictWriter(text, fieldnames=list(rows[0]) if rows else [], lineterminator="\n")
     writer.writeheader()

@@ -14,12 +14,15 @@ from rich.rule import Rule
 from rich.text import Text
 
 from narrowgauge.record.audit import AuditRecord, FaultEntry, PlanEntry, QuantityEntry, TrialEntry
+from narrowgauge.report.averaging import averaged_over, averaging_lines
 from narrowgauge.report.canary import CANNOT_SHOW, canary_lines
 from narrowgauge.report.constants import constant_lines, no_constants
 from narrowgauge.report.domain import deciding, domain_notes, domain_table
 from narrowgauge.report.layout import Hanging
+from narrowgauge.report.lines import line_hint, line_parts
 from narrowgauge.report.notes import accumulation, format_notes, nonfinite, orders, separation_notes
 from narrowgauge.report.progress import Progress, planned_text
+from narrowgauge.report.range import range_lines, watched_on
 from narrowgauge.report.settings import (
     approximate_draws,
     arithmetics,
@@ -49,8 +52,11 @@ from narrowgauge.report.workers import speed_notes
 __all__ = ["Progress", "audit_text", "planned_text", "trial_text", "verdict_text"]
 
 _CONSTANTS = "Constants that a format cannot take"
+_RANGE = "Range and lost additions"
+_SUMS = "Sums over the paths"
 _CANARY = "Whether the kernel rounds in the formats it claims"
 _FILES = "audit.json (everything), levels.csv (one row per quantity, level and arm)"
+_LINES_FILE = "lines.csv (one row per format, quantity and line)"
 
 
 def audit_text(record: AuditRecord, folder: Path | None) -> Group:
@@ -59,7 +65,7 @@ def audit_text(record: AuditRecord, folder: Path | None) -> Group:
     parts += [Text("Words of the tables"), *_legend(record), Text()]
     for name in record.quantities:
         parts += _quantity(record, name)
-    parts += _verdict(record)
+    parts += [*_verdict(record), *line_parts(record)]
     parts += [*_heading("Behind the figures"), _labelled("Arithmetic", f"{arithmetics(record)}.")]
     if not isinstance(record.draws, UnsetType):
         parts.append(_labelled("Approximate draws", approximate_draws(record.draws)))
@@ -70,6 +76,10 @@ def audit_text(record: AuditRecord, folder: Path | None) -> Group:
         lines = constant_lines(record.range)
         parts.append(_labelled(_CONSTANTS, "listed by line." if lines else no_constants(record.range)))
         parts += _bullets(lines)
+        parts.append(_labelled(_RANGE, watched_on(record.range.watched)))
+        parts += _bullets(range_lines(record.range.watched))
+    if record.averaging is not None:
+        parts += [_labelled(_SUMS, averaged_over(record.averaging)), *_bullets(averaging_lines(record.averaging))]
     if not isinstance(record.canary, UnsetType):
         parts += [_labelled(_CANARY, CANNOT_SHOW), *_bullets(canary_lines(record.canary))]
     if costs := measured_costs(record):
@@ -77,12 +87,12 @@ def audit_text(record: AuditRecord, folder: Path | None) -> Group:
     assumed = assumptions(record)
     parts.append(_labelled("Assumed, since the audit file does not say", f"{assumed}." if assumed else "nothing."))
     parts += [Text(), *_heading("Cautions"), *_bullets(record.cautions)]
-    return Group(*parts, Text(), *speed_notes(record), *_files(folder))
+    return Group(*parts, Text(), *line_hint(record), *speed_notes(record), *_files(folder, record))
 
 
 def verdict_text(record: AuditRecord, folder: Path | None) -> Group:
     """Return what is wrong, the verdict in words, and where the files are."""
-    return Group(*_alarms(record), *_verdict(record), *speed_notes(record), *_files(folder))
+    return Group(*_alarms(record), *_verdict(record), *line_hint(record), *speed_notes(record), *_files(folder, record))
 
 
 def trial_text(trial: TrialEntry) -> Group:
@@ -240,8 +250,9 @@ def _bounded(levels: Sequence[PlanEntry]) -> list[RenderableType]:
     return [Text(words)] if words else []
 
 
-def _files(folder: Path | None) -> list[RenderableType]:
-    return [] if folder is None else [_labelled(f"Written to {folder}", _FILES)]
+def _files(folder: Path | None, record: AuditRecord) -> list[RenderableType]:
+    files = _FILES if record.lines is None or not record.lines.formats else f"{_FILES}, {_LINES_FILE}"
+    return [] if folder is None else [_labelled(f"Written to {folder}", files)]
 
 
 def _heading(words: str) -> list[RenderableType]:

@@ -1,0 +1,134 @@
+"""Arithmetics that need to know where in the user's code an operation stands: what-ifs that single operations decide.
+
+`Fused` and `Carried` compute as another machine or another source might, without touching the kernel.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence, Set
+from typing import Any, NamedTuple
+
+import numpy as np
+
+from narrowgauge.arithmetic.arithmetic import Arithmetic
+from narrowgauge.arithmetic.formats import Format
+from narrowgauge.arithmetic.rounding import Floats
+from narrowgauge.dispatch.setting import Place, Setting
+
+__all__ = ["Carried", "Fused", "Operation", "Placed"]
+
+_LATEST = 64  # results that are remembered
+
+
+class Operation(NamedTuple):
+    """One operation of the user's code: its line, and which of the line's instructions it is."""
+
+    place: Place
+    instruction: int
+
+
+class Placed(Arithmetic):
+    """An arithmetic that asks a setting which operation is under way."""
+
+    _setting: Setting | None
+
+    def __init__(self, **fields: Any) -> None:
+        object.__setattr__(self, "_setting", None)  # arithmetics are frozen
+        super().__init__(**fields)
+        self.direct.clear()  # what is computed there would not ask
+
+    def follow(self, setting: Setting) -> None:
+        """Ask this setting from now on."""
+        object.__setattr__(self, "_setting", setting)
+
+    def operation(self) -> Operation | None:
+        """Return the operation under way, None outside the user's modules."""
+        frame = None if self._setting is None else self._setting.frame()
+        return None if frame is None else Operation(Place(frame.f_code.co_filename, frame.f_lineno), frame.f_lasti)
+
+
+class Fused(Placed):
+    """Products feed sums of the same line unrounded: one rounding where a machine with fused multiply-add has one.
+
+    Of two products in a sum the left one does, as far as that line's own operations go; compilers differ.
+    """
+
+    _products: dict[int, tuple[Any, Any, Any, Place]]
+
+    def __init__(self, form: Format) -> None:
+        object.__setattr__(self, "_products", {})
+        super().__init__(format=form, fused=True)
+
+    def apply(
+        self,
+        ufunc: np.ufunc,
+        operands: Sequence[Any],
+        out: Floats | None = None,
+        call: Callable[..., Any] | None = None,
+    ) -> Any:
+        """Compute as `Arithmetic.apply` does, a sum of a product of the same line with one rounding."""
+        if ufunc not in (np.add, np.subtract, np.multiply) or (here := self.operation()) is None:
+            return super().apply(ufunc, operands, out, call)
+        if ufunc is np.multiply:
+            result = super().apply(ufunc, operands, out, call)
+            if out is None:
+                _remember(self._products, result, (result, operands[0], operands[1], here.place))
+            return result
+        for side in (0, 1):
+            known = self._products.get(id(operands[side]))
+            if known is not None and known[3] == here.place:
+                _, x, y, _ = known
+                z = operands[1 - side]
+                if ufunc is np.subtract:
+                    x, z = (x, np.negative(z)) if side == 0 else (np.negative(x), z)
+                return self.fma(x, y, z, out)
+        return super().apply(ufunc, operands, out, call)
+
+
+class Carried(Placed):
+    """The error of an addition to the state is carried along and joins what is added next, in the same format.
+
+    `sums` are the additions x = x + e whose result comes back as x. e is first made e plus the error that x carries,
+    rounded; then x + e is rounded, and its own error is carried on. Compensated summation: "Further remarks on reducing
+    truncation errors", Communications of the ACM 8(1), 1965, doi 10.1145/363707.363723 (recalled from memory).
+    """
+
+    _sums: Set[Operation]
+    _errors: dict[int, tuple[Any, Any]]
+
+    def __init__(self, form: Format, sums: Set[Operation]) -> None:
+        object.__setattr__(self, "_sums", sums)
+        object.__setattr__(self, "_errors", {})
+        super().__init__(format=form)
+
+    def apply(
+        self,
+        ufunc: np.ufunc,
+        operands: Sequence[Any],
+        out: Floats | None = None,
+        call: Callable[..., Any] | None = None,
+    ) -> Any:
+        """Compute as `Arithmetic.apply` does, but for the additions to the state."""
+        if ufunc not in (np.add, np.subtract) or self.operation() not in self._sums:
+            return super().apply(ufunc, operands, out, call)
+        x, y = operands
+        swapped = ufunc is np.add and id(x) not in self._errors and id(y) in self._errors
+        state, added = (y, x) if swapped else (x, y)
+        known = self._errors.get(id(state))
+        if known is not None:
+            # x - e carries the error of x in e with the other sign
+            added = super().apply(ufunc, [added, known[1]])
+        with np.errstate(all="ignore"):
+            exact = ufunc(np.asarray(state, np.float64), np.asarray(added, np.float64))
+            result = super().apply(ufunc, [state, added], out)
+            error = self.cast(np.asarray(exact - np.asarray(result, np.float64)))
+        _remember(self._errors, result, (result, error if error.ndim else error[()]))
+        return result
+
+
+def _remember(known: dict[int, Any], result: Any, row: Any) -> None:
+    """Keep what is known of a result, and the result with it, so that no other value gets its id."""
+    known.pop(id(result), None)
+    known[id(result)] = row
+    if len(known) > _LATEST:
+        del known[next(iter(known))]
