@@ -1,0 +1,27 @@
+"""A trace of a function that rounds for itself: arrays that tell what NumPy does with them.
+
+There is no duck array where a kernel is called with plain arrays of its format. For the one run that looks for a
+difference it is called with a subclass of ndarray, which hands every operation to NumPy as plain arrays, of the same
+memory, and tells the trace; the bits are those of the run without.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Collection
+from typing import Any
+
+from narrowgauge.conduct.tracing import Trace
+
+__all__ = ["run_traced"]
+
+
+def run_traced(
+    function: Callable[..., Any], draws: Any, *further: Any, trace: Trace, files: Collection[str], **keywords: Any
+) -> Any:
+    """Return what `function(draws, *further, **keywords)` returns, as plain arrays, and trace the call.
+
+    `draws` is an array of the kernel's own type, in any memory layout, which is kept as it is; it is told to the trace,
+    `gave` is left to the caller. `files` are the file names of the user's modules: a place is the innermost line there.
+    `function` should be one of a private copy (`own_copy`), whose module's names for NumPy are exchanged during the call.
+    """
+    raise NotImplementedError
