@@ -9,6 +9,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from typing import Literal
 
+from narrowgauge.arithmetic.formats import Format
 from narrowgauge.conduct.tracing import Trace
 from narrowgauge.dispatch.setting import Place
 
@@ -63,10 +64,10 @@ class Located:
         raise NotImplementedError
 
 
-def first_difference(low: Trace, correction: Trace, *, precision: int = 53) -> Located | None:
+def first_difference(low: Trace, correction: Trace, *, form: Format) -> Located | None:
     """Return where two traced runs part, or None where both gave the same rows, and where nothing can be found.
 
-    Both traces keep the same paths in the same order. `precision` is that of the low branch's format, for `ulps`.
+    Both traces keep the same paths in the same order. `form` is the low branch's format, for `ulps`.
     Where both ran the same lines in the same order (one function in two batch sizes), operations are compared by
     position, which needs no luck however few the paths.
     """

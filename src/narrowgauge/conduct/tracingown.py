@@ -7,21 +7,19 @@ memory, and tells the trace; the bits are those of the run without.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Collection
 from typing import Any
 
 from narrowgauge.conduct.tracing import Trace
+from narrowgauge.dispatch.copies import PrivateCopy
 
 __all__ = ["run_traced"]
 
 
-def run_traced(
-    function: Callable[..., Any], draws: Any, *further: Any, trace: Trace, files: Collection[str], **keywords: Any
-) -> Any:
-    """Return what `function(draws, *further, **keywords)` returns, as plain arrays, and trace the call.
+def run_traced(copy: PrivateCopy, draws: Any, *further: Any, trace: Trace, **keywords: Any) -> Any:
+    """Return what `copy.function(draws, *further, **keywords)` returns, as plain arrays, and trace the call.
 
-    `draws` is an array of the kernel's own type, in any memory layout, which is kept as it is; it is told to the trace,
-    `gave` is left to the caller. `files` are the file names of the user's modules: a place is the innermost line there.
-    `function` should be one of a private copy (`own_copy`), whose module's names for NumPy are exchanged during the call.
+    `copy` is a fresh one that rounds for itself (`own_copy`); its modules' names for NumPy are exchanged during the
+    call, and a place is the innermost line of its modules. `draws` is an array of the kernel's own type in any memory
+    layout, which is kept as it is; it is told to the trace, `gave` is left to the caller.
     """
     raise NotImplementedError
