@@ -1,21 +1,34 @@
 """The first operation in which two branches differ, found by value.
 
 By position a statement that was moved would look like a difference. By value it is the first operation of each side
-whose operands all occur on the other side, row by row along the paths, and whose result does not.
+whose operands all occur on the other side, row by row along the paths, and whose result does not. It is looked for
+backwards from what was returned, through rows alone that the other side does not have: what is computed beside, or is
+computed in another way and comes out the same, is no difference.
 """
 
 from __future__ import annotations
 
+import os
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
-from typing import Literal
+from math import frexp, ldexp
+from typing import Literal, NamedTuple
+
+import numpy as np
 
 from narrowgauge.arithmetic.formats import Format
-from narrowgauge.conduct.tracing import Trace
+from narrowgauge.arithmetic.rounding import Doubles
+from narrowgauge.conduct.tracing import Kept, Key, Operation, Trace
 from narrowgauge.dispatch.setting import Place
 
 __all__ = ["Kind", "Located", "Side", "first_difference"]
 
 Kind = Literal["operation", "constant", "draws", "untraced"]
+Values = float | tuple[float, ...]
+
+_MOST_SHOWN = 8  # values of an operand that is no single one on a path
+_NEAR = 256  # operations: a selection stands near those that made what it selects from
+_WORST: tuple[Kind, ...] = ("untraced", "draws", "constant", "operation")
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -32,15 +45,25 @@ class Side:
     place: Place | None
     operation: str
     number: int
-    operands: tuple[float | tuple[float, ...], ...]
-    result: float | tuple[float, ...]
+    operands: tuple[Values, ...]
+    result: Values
     strange: float | None
     couples: bool
+
+    def __str__(self) -> str:
+        place = "" if self.place is None else f"{os.path.basename(self.place.file)}:{self.place.line}: "
+        if self.kind == "draws":
+            return f"{place}{self.operation} takes the draw {_shown(self.strange)}"
+        if self.kind == "constant":
+            return f"{place}{self.operation} takes the constant {_shown(self.strange)}"
+        if self.kind == "untraced":
+            return f"{place}{self.operation} takes {_shown(self.strange)}, which was made out of sight"
+        return f"{place}{self.operation} of {', '.join(map(_shown, self.operands))} gives {_shown(self.result)}"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Located:
-    """Where two branches part. A side is None where its trace does not reach so far.
+    """Where two branches part. A side is None where the other side has everything that it computed.
 
     `path` is the example, by its number in the run of the low branch: the first on which what was returned differs, or
     the results of the two operations do. `ulps` is how far the two results are apart on it in ulps of the low branch's
@@ -57,11 +80,21 @@ class Located:
     @property
     def kind(self) -> Kind:
         """What differs first: the draws, a constant, an operation; "untraced" where it cannot be told."""
-        raise NotImplementedError
+        kinds = {side.kind for side in (self.low, self.correction) if side is not None}
+        return next((kind for kind in _WORST if kind in kinds), "untraced")
 
     def __str__(self) -> str:
-        """Return a sentence such as `model.py:14: add gives 1.0009765625 where checks.py:22: add gives 1.0`."""
-        raise NotImplementedError
+        sides = [str(side) for side in (self.low, self.correction) if side is not None]
+        return " where ".join(sides) + ("" if self.incomplete is None else f" ({self.incomplete})")
+
+
+class _Found(NamedTuple):
+    """An operation that a search ended at, and the row of an operand that nothing made, if that is why."""
+
+    number: int
+    kind: Kind
+    row: Key | None
+    strange: Key | None
 
 
 def first_difference(low: Trace, correction: Trace, *, form: Format) -> Located | None:
@@ -71,4 +104,289 @@ def first_difference(low: Trace, correction: Trace, *, form: Format) -> Located 
     Where both ran the same lines in the same order (one function in two batch sizes), operations are compared by
     position, which needs no luck however few the paths.
     """
-    raise NotImplementedError
+    if len(low.kept) != len(correction.kept):
+        raise ValueError(f"{len(low.kept)} paths are to be compared with {len(correction.kept)}")
+    if low.returned and low.returned == correction.returned:
+        return None
+    judges = _ByPosition.of(low, correction) or (_ByValue(low, correction), _ByValue(correction, low))
+    traces = (low, correction)
+    found = [judge.first() for judge in judges]
+    if (low.full or correction.full) and None in found:  # the end of a trace looks like a difference
+        found = [None, None]
+    elif found == [None, None]:
+        return None
+    column, ulps = _example(traces, found, form)
+    sides = [None if one is None else _side(trace, one, column) for trace, one in zip(traces, found, strict=True)]
+    return Located(
+        low=sides[0],
+        correction=sides[1],
+        path=int(low.kept[column]),
+        ulps=ulps,
+        incomplete=_incomplete(traces, found),
+    )
+
+
+class _Judge:
+    """One side of a comparison: which of its rows the other side does not have."""
+
+    def __init__(self, trace: Trace, other: Trace) -> None:
+        self.trace = trace
+        self.other = other
+
+    def strange(self, number: int, operand: Kept, place: int) -> list[Key]:
+        """Return the rows of operand number `place` of an operation that the other side does not have."""
+        raise NotImplementedError
+
+    def differing(self, number: int) -> list[Key]:
+        """Return the rows of an operation's results that the other side does not have."""
+        raise NotImplementedError
+
+    def ends(self) -> list[Key]:
+        """Return the rows that were returned and that the other side does not have."""
+        raise NotImplementedError
+
+    def first(self) -> _Found | None:
+        """Return the first operation at which the two sides part."""
+        trace = self.trace
+        if trace.full or not trace.returned:
+            return next(self._forwards(len(trace.operations)), None)
+        found = min(self._backwards(self.ends()), key=lambda one: one.number, default=None)
+        if found is None or found.kind != "untraced" or trace.lost is not None:
+            return found  # what was not seen must not be blamed on another line
+        return next(self._forwards(found.number), found)
+
+    def _forwards(self, before: int) -> Iterator[_Found]:
+        """Yield the operations, in order, whose operands the other side has and whose results it has not."""
+        for number in range(before):
+            rows = self.differing(number)
+            if rows and not self._strange(number):
+                yield _Found(number, "operation", rows[0], None)
+
+    def _backwards(self, ends: Sequence[Key]) -> Iterator[_Found]:
+        """Yield where rows that the other side does not have come from."""
+        pending: list[tuple[Key, int]] = [(key, len(self.trace.operations)) for key in ends]
+        seen: set[tuple[Key, int]] = set()
+        while pending:
+            key, before = pending.pop()
+            number = self._maker(key, before)
+            if number is None:
+                parts = self._parts(key, before)
+                if parts is None:
+                    yield self._unmade(key, before)
+                pending += [(part, before) for part in parts or () if (part, before) not in seen]
+                seen.update((part, before) for part in parts or ())
+                continue
+            if (key, number) in seen:
+                continue
+            seen.add((key, number))
+            strange = self._strange(number)
+            if not strange:
+                yield _Found(number, "operation", key, None)
+            pending += [(row, number) for row in strange]
+
+    def _strange(self, number: int) -> list[Key]:
+        operands = self.trace.operations[number].operands
+        return [key for place, operand in enumerate(operands) for key in self.strange(number, operand, place)]
+
+    def _maker(self, key: Key, before: int) -> int | None:
+        """Return the last operation before another one that made a row."""
+        return next((n for n in reversed(self.trace.made.get(key, ())) if n < before and self.differing(n)), None)
+
+    def _unmade(self, key: Key, taken: int) -> _Found:
+        trace = self.trace
+        kind: Kind = "untraced"
+        if key in trace.draws_keys:
+            kind = "draws"
+        elif key in trace.constants or len(trace.rows[key]) == 1:
+            kind = "constant"
+        return _Found(taken, kind, None, key)
+
+    def _parts(self, key: Key, before: int) -> list[Key] | None:
+        """Return the rows of which a selection (`np.where`, a mask) can have made a row, if the other side lacks one.
+
+        Those of the operations just before that cover most of its paths, in turn. None where the other side has them all.
+        """
+        trace = self.trace
+        row, open_ = trace.rows[key], np.ones(len(trace.kept), bool)
+        if key in trace.draws_keys or row.shape != trace.kept.shape or len(row) == 1:
+            return None
+        rows = list(dict.fromkeys(
+            made for operation in trace.operations[max(before - _NEAR, 0) : before]
+            for kept in (*operation.operands, *operation.results)
+            if kept.axis is not None for made in kept.keys if made != key
+        ))  # fmt: skip
+        if not rows:
+            return None
+        same = np.array([trace.values(made) for made in rows]).view(np.int64) == row.view(np.int64)
+        parts: list[Key] = []
+        while open_.any():
+            covered = (same & open_).sum(axis=1)
+            best = int(np.argmax(covered))
+            if covered[best] == 0:
+                break
+            parts.append(rows[best])
+            open_ &= ~same[best]
+        return [part for part in parts if self.lacks(part)] or None
+
+    def lacks(self, key: Key) -> bool:
+        """Whether the other side does not have a row anywhere."""
+        return key not in self.other.rows
+
+
+class _ByValue(_Judge):
+    """Rows are looked for anywhere on the other side."""
+
+    def strange(self, number: int, operand: Kept, place: int) -> list[Key]:
+        """Return the rows of an operand that do not occur, however it is cut into rows."""
+        missing = [[key for key in reading if self.lacks(key)] for reading in operand.readings]
+        return min(missing, key=len)
+
+    def differing(self, number: int) -> list[Key]:
+        """Return the rows of the results that do not occur."""
+        return [key for kept in self.trace.operations[number].results for key in kept.keys if self.lacks(key)]
+
+    def ends(self) -> list[Key]:
+        """Return the rows that were returned and do not occur."""
+        return [key for key in self.trace.returned if self.lacks(key)]
+
+
+class _ByPosition(_Judge):
+    """Operations correspond to those of the other side with the same number, of the same line and name."""
+
+    @classmethod
+    def of(cls, low: Trace, correction: Trace) -> tuple[_ByPosition, _ByPosition] | None:
+        """Return the judges of two runs of the same lines in the same order, None for others."""
+        mine, theirs = ([(one.place, one.name) for one in trace.operations] for trace in (low, correction))
+        return (cls(low, correction), cls(correction, low)) if mine and mine == theirs else None
+
+    def strange(self, number: int, operand: Kept, place: int) -> list[Key]:
+        """Return the rows of an operand that are others on the other side."""
+        return _others(operand, self.other.operations[number].operands, place)
+
+    def differing(self, number: int) -> list[Key]:
+        """Return the rows of the results that are others on the other side."""
+        there = self.other.operations[number].results
+        results = enumerate(self.trace.operations[number].results)
+        return [key for place, kept in results for key in _others(kept, there, place)]
+
+    def ends(self) -> list[Key]:
+        """Return the rows that were returned, where the other side returned others."""
+        return [] if self.trace.returned == self.other.returned else list(self.trace.returned)
+
+
+def _others(mine: Kept, theirs: Sequence[Kept], place: int) -> list[Key]:
+    if place >= len(theirs) or len(mine.keys) != len(theirs[place].keys):
+        return list(mine.keys)
+    return [key for key, other in zip(mine.keys, theirs[place].keys, strict=True) if key != other]
+
+
+def _example(traces: Sequence[Trace], found: Sequence[_Found | None], form: Format) -> tuple[int, float | None]:
+    """Return the column of the example path, and how many ulps the two results are apart if their operands are one."""
+    rows = _pair(traces, found)
+    if rows is not None:
+        different = _different(*rows)
+        if different is not None:
+            first, second = (float(row[different]) for row in rows)
+            return different, _ulps(first, second, form)
+    ends = [trace.values(trace.returned[0]) for trace in traces if trace.returned]
+    return (_different(*ends) if len(ends) == 2 else None) or 0, None
+
+
+def _pair(traces: Sequence[Trace], found: Sequence[_Found | None]) -> list[Doubles] | None:
+    """Return the rows that two operations make of the same operands, None for other operands."""
+    operations, places = [], []
+    for trace, one in zip(traces, found, strict=True):
+        if one is None or one.row is None:
+            return None
+        operation = trace.operations[one.number]
+        operations.append(sorted(kept.keys for kept in operation.operands))
+        keys = operation.results[0].keys
+        if one.row not in keys:
+            return None
+        places.append(keys)
+    if operations[0] != operations[1] or len(places[0]) != len(places[1]):
+        return None
+    assert found[0] is not None and found[0].row is not None  # both were looked at
+    index = places[0].index(found[0].row)
+    return [trace.values(keys[index]) for trace, keys in zip(traces, places, strict=True)]
+
+
+def _different(one: Doubles, other: Doubles) -> int | None:
+    """Return the first place with other bits."""
+    if one.shape != other.shape:
+        return None
+    different = np.ascontiguousarray(one).view(np.int64) != np.ascontiguousarray(other).view(np.int64)
+    return int(np.argmax(different)) if different.any() else None
+
+
+def _ulps(one: float, other: float, form: Format) -> float | None:
+    """Return how far apart two numbers are in ulps of the first in a format; None for what is not finite."""
+    if not np.isfinite([one, other]).all():
+        return None
+    exponent = max(frexp(one)[1] - 1, form.emin) if one else form.emin
+    return abs(one - other) / ldexp(1.0, exponent - form.precision + 1)
+
+
+def _side(trace: Trace, found: _Found, column: int) -> Side:
+    """Return what is told of a side."""
+    strange = None if found.strange is None else _at(trace, found.strange, column)
+    if found.number >= len(trace.operations):
+        assert strange is not None  # only what was returned is looked for behind the last operation
+        return Side(
+            kind=found.kind, place=None, operation="return", number=found.number,
+            operands=(), result=strange, strange=strange, couples=False,
+        )  # fmt: skip
+    operation = trace.operations[found.number]
+    result = next((kept for kept in operation.results if found.row in kept.keys), operation.results[0])
+    index = result.keys.index(found.row) if found.row in result.keys else 0
+    return Side(
+        kind=found.kind,
+        place=operation.place,
+        operation=operation.name,
+        number=found.number,
+        operands=tuple(_value(trace, kept, index, len(result.keys), column) for kept in operation.operands),
+        result=_at(trace, result.keys[index], column),
+        strange=strange,
+        couples=_couples(operation),
+    )
+
+
+def _couples(operation: Operation) -> bool:
+    return any(kept.axis is not None for kept in operation.operands) and all(
+        kept.axis is None for kept in operation.results
+    )
+
+
+def _value(trace: Trace, kept: Kept, index: int, count: int, column: int) -> Values:
+    """Return what an operand is on a path: one number, those of all its rows, or those of an array without paths."""
+    keys = kept.keys
+    if kept.axis is None and kept.shape:
+        numbers = [float(number) for key in keys[:_MOST_SHOWN] for number in trace.rows[key][:_MOST_SHOWN]]
+        return tuple(numbers[:_MOST_SHOWN])
+    if len(keys) in (1, count):
+        return _at(trace, keys[index if len(keys) == count else 0], column)
+    return tuple(_at(trace, key, column) for key in keys[:_MOST_SHOWN])
+
+
+def _at(trace: Trace, key: Key, column: int) -> float:
+    row = trace.rows[key]
+    return float(row[column if row.shape == trace.kept.shape else 0])
+
+
+def _incomplete(traces: Sequence[Trace], found: Sequence[_Found | None]) -> str | None:
+    """Return why a side may be wrong or missing."""
+    if any(trace.full for trace in traces):
+        count = max(len(trace.operations) for trace in traces if trace.full)
+        return f"not found within {count} operations" if found == [None, None] else f"of the first {count} operations"
+    for trace, one in zip(traces, found, strict=True):
+        if one is not None and one.kind == "untraced" and trace.lost is not None:
+            place = trace.lost[0]
+            where = "" if place is None else f" at {os.path.basename(place.file)}:{place.line}"
+            return f"the trace is incomplete: what is met{where} was computed out of its sight"
+    if any(one is not None and one.kind == "untraced" for one in found):
+        return "the trace is incomplete: a selection or a store that it does not see comes between"
+    return None
+
+
+def _shown(value: Values | None) -> str:
+    return "(" + ", ".join(map(repr, value)) + ")" if isinstance(value, tuple) else repr(value)
