@@ -9,25 +9,23 @@ computed in another way and comes out the same, is no difference.
 from __future__ import annotations
 
 import os
-from collections.abc import Iterator, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
 from math import frexp, ldexp
-from typing import Literal, NamedTuple
 
 import numpy as np
 
 from narrowgauge.arithmetic.formats import Format
 from narrowgauge.arithmetic.rounding import Doubles
 from narrowgauge.conduct.tracing import Kept, Key, Operation, Trace
+from narrowgauge.conduct.tracingsearch import Found, Kind, searched
 from narrowgauge.dispatch.setting import Place
 
 __all__ = ["Kind", "Located", "Side", "first_difference"]
 
-Kind = Literal["operation", "constant", "draws", "untraced"]
 Values = float | tuple[float, ...]
 
 _MOST_SHOWN = 8  # values of an operand that is no single one on a path
-_NEAR = 256  # operations: a selection stands near those that made what it selects from
 _WORST: tuple[Kind, ...] = ("untraced", "draws", "constant", "operation")
 
 
@@ -88,15 +86,6 @@ class Located:
         return " where ".join(sides) + ("" if self.incomplete is None else f" ({self.incomplete})")
 
 
-class _Found(NamedTuple):
-    """An operation that a search ended at, and the row of an operand that nothing made, if that is why."""
-
-    number: int
-    kind: Kind
-    row: Key | None
-    strange: Key | None
-
-
 def first_difference(low: Trace, correction: Trace, *, form: Format) -> Located | None:
     """Return where two traced runs part, or None where both gave the same rows, and where nothing can be found.
 
@@ -108,9 +97,8 @@ def first_difference(low: Trace, correction: Trace, *, form: Format) -> Located 
         raise ValueError(f"{len(low.kept)} paths are to be compared with {len(correction.kept)}")
     if low.returned and low.returned == correction.returned:
         return None
-    judges = _ByPosition.of(low, correction) or (_ByValue(low, correction), _ByValue(correction, low))
     traces = (low, correction)
-    found = [judge.first() for judge in judges]
+    found = searched(low, correction)
     if (low.full or correction.full) and None in found:  # the end of a trace looks like a difference
         found = [None, None]
     elif found == [None, None]:
@@ -126,161 +114,7 @@ def first_difference(low: Trace, correction: Trace, *, form: Format) -> Located 
     )
 
 
-class _Judge:
-    """One side of a comparison: which of its rows the other side does not have."""
-
-    def __init__(self, trace: Trace, other: Trace) -> None:
-        self.trace = trace
-        self.other = other
-
-    def strange(self, number: int, operand: Kept, place: int) -> list[Key]:
-        """Return the rows of operand number `place` of an operation that the other side does not have."""
-        raise NotImplementedError
-
-    def differing(self, number: int) -> list[Key]:
-        """Return the rows of an operation's results that the other side does not have."""
-        raise NotImplementedError
-
-    def ends(self) -> list[Key]:
-        """Return the rows that were returned and that the other side does not have."""
-        raise NotImplementedError
-
-    def first(self) -> _Found | None:
-        """Return the first operation at which the two sides part."""
-        trace = self.trace
-        if trace.full or not trace.returned:
-            return next(self._forwards(len(trace.operations)), None)
-        found = min(self._backwards(self.ends()), key=lambda one: one.number, default=None)
-        if found is None or found.kind != "untraced" or trace.lost is not None:
-            return found  # what was not seen must not be blamed on another line
-        return next(self._forwards(found.number), found)
-
-    def _forwards(self, before: int) -> Iterator[_Found]:
-        """Yield the operations, in order, whose operands the other side has and whose results it has not."""
-        for number in range(before):
-            rows = self.differing(number)
-            if rows and not self._strange(number):
-                yield _Found(number, "operation", rows[0], None)
-
-    def _backwards(self, ends: Sequence[Key]) -> Iterator[_Found]:
-        """Yield where rows that the other side does not have come from."""
-        pending: list[tuple[Key, int]] = [(key, len(self.trace.operations)) for key in ends]
-        seen: set[tuple[Key, int]] = set()
-        while pending:
-            key, before = pending.pop()
-            number = self._maker(key, before)
-            if number is None:
-                parts = self._parts(key, before)
-                if parts is None:
-                    yield self._unmade(key, before)
-                pending += [(part, before) for part in parts or () if (part, before) not in seen]
-                seen.update((part, before) for part in parts or ())
-                continue
-            if (key, number) in seen:
-                continue
-            seen.add((key, number))
-            strange = self._strange(number)
-            if not strange:
-                yield _Found(number, "operation", key, None)
-            pending += [(row, number) for row in strange]
-
-    def _strange(self, number: int) -> list[Key]:
-        operands = self.trace.operations[number].operands
-        return [key for place, operand in enumerate(operands) for key in self.strange(number, operand, place)]
-
-    def _maker(self, key: Key, before: int) -> int | None:
-        """Return the last operation before another one that made a row."""
-        return next((n for n in reversed(self.trace.made.get(key, ())) if n < before and self.differing(n)), None)
-
-    def _unmade(self, key: Key, taken: int) -> _Found:
-        trace = self.trace
-        kind: Kind = "untraced"
-        if key in trace.draws_keys:
-            kind = "draws"
-        elif key in trace.constants or len(trace.rows[key]) == 1:
-            kind = "constant"
-        return _Found(taken, kind, None, key)
-
-    def _parts(self, key: Key, before: int) -> list[Key] | None:
-        """Return the rows of which a selection (`np.where`, a mask) can have made a row, if the other side lacks one.
-
-        Those of the operations just before that cover most of its paths, in turn. None where the other side has them all.
-        """
-        trace = self.trace
-        row, open_ = trace.rows[key], np.ones(len(trace.kept), bool)
-        if key in trace.draws_keys or row.shape != trace.kept.shape or len(row) == 1:
-            return None
-        rows = list(dict.fromkeys(
-            made for operation in trace.operations[max(before - _NEAR, 0) : before]
-            for kept in (*operation.operands, *operation.results)
-            if kept.axis is not None for made in kept.keys if made != key
-        ))  # fmt: skip
-        if not rows:
-            return None
-        same = np.array([trace.values(made) for made in rows]).view(np.int64) == row.view(np.int64)
-        parts: list[Key] = []
-        while open_.any():
-            covered = (same & open_).sum(axis=1)
-            best = int(np.argmax(covered))
-            if covered[best] == 0:
-                break
-            parts.append(rows[best])
-            open_ &= ~same[best]
-        return [part for part in parts if self.lacks(part)] or None
-
-    def lacks(self, key: Key) -> bool:
-        """Whether the other side does not have a row anywhere."""
-        return key not in self.other.rows
-
-
-class _ByValue(_Judge):
-    """Rows are looked for anywhere on the other side."""
-
-    def strange(self, number: int, operand: Kept, place: int) -> list[Key]:
-        """Return the rows of an operand that do not occur, however it is cut into rows."""
-        missing = [[key for key in reading if self.lacks(key)] for reading in operand.readings]
-        return min(missing, key=len)
-
-    def differing(self, number: int) -> list[Key]:
-        """Return the rows of the results that do not occur."""
-        return [key for kept in self.trace.operations[number].results for key in kept.keys if self.lacks(key)]
-
-    def ends(self) -> list[Key]:
-        """Return the rows that were returned and do not occur."""
-        return [key for key in self.trace.returned if self.lacks(key)]
-
-
-class _ByPosition(_Judge):
-    """Operations correspond to those of the other side with the same number, of the same line and name."""
-
-    @classmethod
-    def of(cls, low: Trace, correction: Trace) -> tuple[_ByPosition, _ByPosition] | None:
-        """Return the judges of two runs of the same lines in the same order, None for others."""
-        mine, theirs = ([(one.place, one.name) for one in trace.operations] for trace in (low, correction))
-        return (cls(low, correction), cls(correction, low)) if mine and mine == theirs else None
-
-    def strange(self, number: int, operand: Kept, place: int) -> list[Key]:
-        """Return the rows of an operand that are others on the other side."""
-        return _others(operand, self.other.operations[number].operands, place)
-
-    def differing(self, number: int) -> list[Key]:
-        """Return the rows of the results that are others on the other side."""
-        there = self.other.operations[number].results
-        results = enumerate(self.trace.operations[number].results)
-        return [key for place, kept in results for key in _others(kept, there, place)]
-
-    def ends(self) -> list[Key]:
-        """Return the rows that were returned, where the other side returned others."""
-        return [] if self.trace.returned == self.other.returned else list(self.trace.returned)
-
-
-def _others(mine: Kept, theirs: Sequence[Kept], place: int) -> list[Key]:
-    if place >= len(theirs) or len(mine.keys) != len(theirs[place].keys):
-        return list(mine.keys)
-    return [key for key, other in zip(mine.keys, theirs[place].keys, strict=True) if key != other]
-
-
-def _example(traces: Sequence[Trace], found: Sequence[_Found | None], form: Format) -> tuple[int, float | None]:
+def _example(traces: Sequence[Trace], found: Sequence[Found | None], form: Format) -> tuple[int, float | None]:
     """Return the column of the example path, and how many ulps the two results are apart if their operands are one."""
     rows = _pair(traces, found)
     if rows is not None:
@@ -292,9 +126,9 @@ def _example(traces: Sequence[Trace], found: Sequence[_Found | None], form: Form
     return (_different(*ends) if len(ends) == 2 else None) or 0, None
 
 
-def _pair(traces: Sequence[Trace], found: Sequence[_Found | None]) -> list[Doubles] | None:
+def _pair(traces: Sequence[Trace], found: Sequence[Found | None]) -> list[Doubles] | None:
     """Return the rows that two operations make of the same operands, None for other operands."""
-    operations, places = [], []
+    operations, places, rows = [], [], []
     for trace, one in zip(traces, found, strict=True):
         if one is None or one.row is None:
             return None
@@ -304,10 +138,10 @@ def _pair(traces: Sequence[Trace], found: Sequence[_Found | None]) -> list[Doubl
         if one.row not in keys:
             return None
         places.append(keys)
+        rows.append(one.row)
     if operations[0] != operations[1] or len(places[0]) != len(places[1]):
         return None
-    assert found[0] is not None and found[0].row is not None  # both were looked at
-    index = places[0].index(found[0].row)
+    index = places[0].index(rows[0])
     return [trace.values(keys[index]) for trace, keys in zip(traces, places, strict=True)]
 
 
@@ -327,7 +161,7 @@ def _ulps(one: float, other: float, form: Format) -> float | None:
     return abs(one - other) / ldexp(1.0, exponent - form.precision + 1)
 
 
-def _side(trace: Trace, found: _Found, column: int) -> Side:
+def _side(trace: Trace, found: Found, column: int) -> Side:
     """Return what is told of a side."""
     strange = None if found.strange is None else _at(trace, found.strange, column)
     if found.number >= len(trace.operations):
@@ -373,7 +207,7 @@ def _at(trace: Trace, key: Key, column: int) -> float:
     return float(row[column if row.shape == trace.kept.shape else 0])
 
 
-def _incomplete(traces: Sequence[Trace], found: Sequence[_Found | None]) -> str | None:
+def _incomplete(traces: Sequence[Trace], found: Sequence[Found | None]) -> str | None:
     """Return why a side may be wrong or missing."""
     if any(trace.full for trace in traces):
         count = max(len(trace.operations) for trace in traces if trace.full)
