@@ -14,6 +14,7 @@ from rich.rule import Rule
 from rich.text import Text
 
 from narrowgauge.record.audit import AuditRecord, FaultEntry, PlanEntry, QuantityEntry, TrialEntry
+from narrowgauge.report.branches import branch_lines, branch_summary
 from narrowgauge.report.canary import CANNOT_SHOW, canary_lines
 from narrowgauge.report.constants import constant_lines, no_constants
 from narrowgauge.report.layout import Hanging
@@ -71,6 +72,8 @@ def audit_text(record: AuditRecord, folder: Path | None) -> Group:
         parts += _bullets(lines)
     if not isinstance(record.canary, UnsetType):
         parts += [_labelled(_CANARY, CANNOT_SHOW), *_bullets(canary_lines(record.canary))]
+    if record.branches is not None:
+        parts += [_labelled("Branches of a split", branch_summary(record.branches)), *_bullets(branch_lines(record))]
     if costs := measured_costs(record):
         parts.append(_labelled("Measured costs of a step of one path, by every audit anew", f"{costs}."))
     assumed = assumptions(record)
