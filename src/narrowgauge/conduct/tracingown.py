@@ -2,8 +2,9 @@
 
 There is no duck array where a kernel is called with plain arrays of its format. For the one run that looks for a
 difference it is called with a subclass of ndarray, which hands every operation to NumPy as plain arrays of the same
-memory and tells the trace; the bits are those of the run without. A subclass can be lost on the way (`np.float16(x)`, a
-buffer that an unlisted module makes): what is computed then is not seen, and the trace says where it comes back.
+memory and tells the trace; the bits are those of the run without. A subclass can be lost on the way (a list of
+numbers, a buffer that an unlisted module makes): what is computed then is not seen, and the trace says where it comes
+back.
 """
 
 from __future__ import annotations
@@ -12,6 +13,7 @@ import sys
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from functools import partial
+from inspect import unwrap
 from types import FrameType, ModuleType
 from typing import Any
 
@@ -27,25 +29,25 @@ _METHODS = (
     "argmax", "argmin", "argsort", "astype", "clip", "compress", "cumprod", "cumsum", "dot", "max", "mean", "min",
     "prod", "repeat", "round", "searchsorted", "std", "sum", "take", "trace", "var",
 )  # fmt: skip
-_MAKERS = (
-    "arange", "array", "asanyarray", "asarray", "ascontiguousarray", "asfortranarray", "empty", "eye", "full",
-    "geomspace", "identity", "linspace", "ones", "zeros",
-)  # fmt: skip
+_CONVERTERS = ("array", "asanyarray", "asarray", "ascontiguousarray", "asfortranarray")
+_MAKERS = (*_CONVERTERS, "arange", "empty", "eye", "full", "geomspace", "identity", "linspace", "ones", "zeros")
 
 
 def run_traced(copy: PrivateCopy, draws: Any, *further: Any, trace: Trace, **keywords: Any) -> Any:
     """Return what `copy.function(draws, *further, **keywords)` returns, as plain arrays, and trace the call.
 
     `copy` is a fresh one that rounds for itself (`own_copy`); its modules' names for NumPy are exchanged during the
-    call, and a place is the innermost line of its modules. `draws` is an array of the kernel's own type in any memory
-    layout, which is kept as it is; it is told to the trace, `gave` is left to the caller.
+    call, and a place is the innermost line of its modules. `draws` are an array of the kernel's own type in any memory
+    layout, which is kept as it is, or a tuple of them; they are told to the trace, `gave` is left to the caller.
     """
     modules = [] if copy.copies is None else copy.copies.modules.values()
-    namespaces = [getattr(copy.function, "__globals__", {}), *map(vars, modules)]
+    function = unwrap(copy.function)
+    namespaces = [getattr(function, "__globals__", {}), *map(vars, modules)]
     files = {str(space["__file__"]) for space in namespaces if space.get("__file__")}
-    code = getattr(copy.function, "__code__", None)
+    code = getattr(function, "__code__", None)
     watch = _Watch(trace, files if code is None else files | {code.co_filename})
-    trace.draws(draws)
+    for array in _numbers(draws):
+        trace.draws(array)
     with np.errstate(all="ignore"), _exchanged(namespaces, watch):
         return _plain(copy.function(watch.wrapped(draws), *further, **keywords))
 
@@ -103,12 +105,11 @@ class _Watch:
         given = list(_numbers((arguments, keywords)))
         if any(isinstance(value, _Traced) for value in given):
             return self.call(name, function, arguments, keywords)
-        arrays = [self.kept(value) for value in given if isinstance(value, np.ndarray)]
-        result = function(*arguments, **keywords)
-        if name != "empty" and not arrays and not self.trace.full:
-            kept = self.trace.keep(result)
-            if kept is not None:
-                self.trace.constants.update(*kept.readings)
+        result, trace = function(*arguments, **keywords), self.trace
+        if name != "empty" and not trace.full:
+            kept = self.kept(result) if name in _CONVERTERS else trace.keep(result)
+            if kept is not None and not (name in _CONVERTERS and trace.varies(kept)):
+                trace.constants.update(*kept.readings)
         return self.wrapped(result)
 
 
