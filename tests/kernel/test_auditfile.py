@@ -55,7 +55,7 @@ DEFAULTS = {
     "sampling.confidence": 0.99,
     "sampling.seed": 1,
 }
-ALL_TABLES = "kernel, library, command, parameters, ladder, target, formats, draws, cost, sampling"
+ALL_TABLES = "kernel, library, command, parameters, ladder, target, formats, draws, branches, cost, sampling"
 KERNEL_KEYS = "run, takes, factors, layout, coupling, modules, shared, allow, rounds"
 
 
