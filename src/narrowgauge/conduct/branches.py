@@ -8,16 +8,19 @@ level; and each function is held against itself with other paths, in other layou
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Sequence
+from collections.abc import Callable, Iterator, Sequence
+from functools import partial
 
 import numpy as np
 
+from narrowgauge.arithmetic.arithmetic import arithmetic_named
 from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.conduct.branchcauses import MOST_STEPS, Causes, Run, explanation, located, where_entry
 from narrowgauge.conduct.branchcomparison import Comparer, Mismatch
 from narrowgauge.conduct.branchvariations import REPEATS, Found, Varied, vary
 from narrowgauge.conduct.entries import finite, interval_fields
 from narrowgauge.conduct.firstdifference import Located
+from narrowgauge.conduct.trial import NOT_IDENTICAL, same_bits
 from narrowgauge.dispatch.setting import Place
 from narrowgauge.draws.coarsen import Draws
 from narrowgauge.draws.streams import GRAIN, Purpose
@@ -34,6 +37,7 @@ from narrowgauge.kernel.raised import kept_apart, raised, with_place
 from narrowgauge.measure.arms import PLAIN, REFERENCE
 from narrowgauge.measure.block import BlockRunner
 from narrowgauge.measure.branchruns import Branch, BranchSource, branch_sources, given
+from narrowgauge.measure.calls import Caller
 from narrowgauge.record.branches import BranchesEntry, MismatchEntry, TriedEntry
 from narrowgauge.record.reach import LineCount
 
@@ -86,9 +90,8 @@ class _Check:
         if self._named:
             self._check_functions()
         for arm in self._formats:
-            problem = self._arm(arm)
-            if problem is not None:
-                self._remarks.append(f"{arm}: {raised(problem)}")
+            for level, problem in self._arm(arm):
+                self._remarks.append(f"level {level}, arm {arm}: {raised(problem)}")
         lines = sorted(self._casts.items(), key=lambda item: (item[0] is None, item[0]))
         return BranchesEntry(
             low=low.source.run,
@@ -109,26 +112,42 @@ class _Check:
                 continue
             try:
                 with with_place(0, PLAIN):
-                    check_parameters(Branch(source, REFERENCE, REFERENCE).copy.function, source.file)
+                    plain = Caller(source.file, source.source, None)
+                    check_parameters(plain.copy.function, source.file)
+                    if source.part is None and source.rounds == "emulated":
+                        self._identical(source, plain)
             except AuditFileError as problem:
                 key = f"branches.{name}" if problem.key == "kernel.run" else problem.key
                 raise AuditFileError(problem.source, key, problem.problem, problem.accepted) from None
 
-    def _arm(self, arm: str) -> BaseException | None:
-        """Try one format; return what a function raises in it, which no scheme of this format survives."""
-        levels = self._file.ladder.levels
-        level = 0
-        with kept_apart(level, arm) as kept:
-            if self._named:
-                for wide in self._wides(arm):
-                    comparer = Comparer(self._runner, self._sources, arm, wide, rows=self._rows)
-                    causes = Causes()
-                    for level in levels:
-                        self._compare(comparer, level, causes)
-                self._high(arm)
-            for level in dict.fromkeys((self._file.ladder.level_within(_STEPS), 0)):
-                self._vary(arm, level)
-        return kept.problem
+    def _identical(self, source: BranchSource, plain: Caller) -> None:
+        """Raise KernelError unless float64 through the emulation gives plain NumPy's bits, as the trial asks of a kernel."""
+        level = self._file.ladder.level_within(_STEPS)
+        draws = self._runner.draws(level, 0, Purpose.IDENTITY, GRAIN)
+        before = plain.fine(draws, level)
+        found = Caller(source.file, source.source, arithmetic_named(REFERENCE)).fine(draws, level)
+        for name in before | found:
+            same_bits(name, before, found, level, NOT_IDENTICAL)
+
+    def _arm(self, arm: str) -> Iterator[tuple[int, BaseException]]:
+        """Try one format; yield what a function raises in it, with the level: no scheme of the format survives that."""
+        ladder = self._file.ladder
+        tasks: list[tuple[int, Callable[[], None]]] = []
+        for wide in self._wides(arm) if self._named else ():
+            comparer, causes = Comparer(self._runner, self._sources, arm, wide, rows=self._rows), Causes()
+            tasks += [(level, partial(self._compare, comparer, level, causes)) for level in ladder.levels]
+        finer = ladder.level_within(_STEPS)
+        if self._named:
+            tasks.append((finer, partial(self._high, arm, finer)))
+        # A program that is started for every call is not started as often.
+        varied = (0,) if self._file.command is not None else (finer, 0)
+        tasks += [(level, partial(self._vary, arm, level)) for level in dict.fromkeys(varied)]
+        for level, task in tasks:
+            with kept_apart(level, arm) as kept:
+                task()
+            if kept.problem is not None:
+                yield level, kept.problem
+                return
 
     def _wides(self, arm: str) -> tuple[str | None, ...]:
         """Return the wide formats that a correction depends on; an emulated one's low part depends on none."""
@@ -173,10 +192,9 @@ class _Check:
         why = explanation(low, correction, case, name, causes)
         return located(low, correction, case.draws, name), why, case.low.size
 
-    def _high(self, arm: str) -> None:
+    def _high(self, arm: str, level: int) -> None:
         """Hold the high part of the correction against what the kernel gives in the wide format."""
         _, correction = self._sources
-        level = self._file.ladder.level_within(_STEPS)
         draws = self._draws(level)
         if correction.part is None or not isinstance(draws, Draws):
             return

@@ -41,7 +41,7 @@ _ROUNDS = 3  # calls of each thread
 class Found:
     """A condition under which a quantity has other bits: all results as they were and as they are then.
 
-    `asked` are the paths that count, by number; `located` is where, `numpys_own` whether NumPy differs from itself there.
+    `located` is where it parts from itself, `numpys_own` whether NumPy does so there, too.
     """
 
     condition: Condition
@@ -79,13 +79,15 @@ class _Variations:
         self._own = run.source.rounds == "itself"
         self._branch = Branch(run.source, run.arm, run.wide, rows=run.rows)
         self._singly = self._branch.one_path and not run.rows
+        self._rounds = 1 if run.source.file.command is not None else _ROUNDS  # each call starts a program
         self._remarks: list[str] = []
         self._base: Quantities = self._branch.on(draws, run.level)
 
     def all(self) -> Varied:
         """Try all conditions."""
         foreign, whole = self._run.source.file.foreign, not self._singly
-        batches = tuple(k for k in BATCHES if k < self._paths) if whole else ()
+        sizes = BATCHES if self._rounds > 1 else BATCHES[:1]
+        batches = tuple(k for k in sizes if k < self._paths) if whole else ()
         orders = ORDERS if whole and not foreign else ()
         found = [*self._repeat(), *self._threads()]
         for k in batches:
@@ -117,7 +119,7 @@ class _Variations:
                 branch = Branch(run.source, run.arm, run.wide, rows=run.rows)
             branch.wide_draws(self._draws)
             found = []
-            for _ in range(_ROUNDS):
+            for _ in range(self._rounds):
                 gate.wait()
                 found.append(branch.on_array(np.array(self._draws.narrow), run.level))
             return found

@@ -83,10 +83,7 @@ class MismatchEntry(Entry, frozen=True, kw_only=True):
 
 
 class BranchesEntry(Entry, frozen=True, kw_only=True):
-    """Which functions are the branches, what was tried, what differed, which casts were ignored, what could not be tried.
-
-    `high` says where the high part of the correction is not what the kernel gives in the wide format.
-    """
+    """Which functions are the branches, what was tried, what differed, which casts were ignored, what could not be tried."""
 
     low: str
     correction: str
