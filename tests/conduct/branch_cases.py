@@ -39,7 +39,7 @@ def low_part(dW, wide, h):
     T = dW.dtype.type
     mu, sigma, dt = T(0.05), T(0.2), T(h)
     s = np.full(dW.shape[-1], T(1.0))
-    for dw in dW:
+    for n, dw in enumerate(dW):
         drift = mu * s * dt
         noise = sigma * s * dw
         s = s + (drift + noise)
@@ -58,12 +58,12 @@ OWN_DEFECTS: dict[str, tuple[str, str]] = {
         "        s = (s.astype(np.float32) + (drift.astype(np.float32) + noise.astype(np.float32))).astype(T)",
     ),
     "float64 constant": ("        drift = mu * s * dt", "        drift = (np.float64(0.05) * s * dt).astype(T)"),
-    "draws not rounded": ("        noise = sigma * s * dw", "        noise = (sigma * s * wide[0]).astype(T)"),
+    "draws not rounded": ("        noise = sigma * s * dw", "        noise = (sigma * s * wide[n]).astype(T)"),
     "step size not cast": ("        drift = mu * s * dt", "        drift = (mu * s * np.float64(h)).astype(T)"),
 }
 LEAST: dict[str, Mapping[str, str]] = {
     "kernel": {"run": '"kernel.py:path"', "takes": '"increments"', "rounds": '"itself"'},
-    "ladder": {"horizon": "1.0", "finest": "3"},
+    "ladder": {"horizon": "0.7", "finest": "3"},
     "target": {"rmse": "0.002"},
     "formats": {"narrow": '["float16"]', "wide": '["float64"]'},
     "branches": {"correction": '"kernel.py:correction"'},

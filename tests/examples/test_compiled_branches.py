@@ -56,7 +56,7 @@ def test_wider_intermediates_break_the_branches_and_are_named(folder: Path) -> N
             scheme = level.arms["float16"].scheme
             assert scheme is None or scheme.kind == "alone"
     assert branch_alarms(record) == ["float16: no split is used on levels 0 to 6"]
-    assert any("Explained by wider intermediates, in float32" in line for line in branch_lines(record))
+    assert any("Explained by wider intermediates, in float32" in line for line in branch_lines(record.branches, record))
 
 
 @needs_half

@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
-from dataclasses import dataclass
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
@@ -13,6 +13,7 @@ from narrowgauge.conduct.firstdifference import Located, Side, first_difference
 from narrowgauge.conduct.tracing import MOST_PATHS, Trace
 from narrowgauge.conduct.tracingown import run_traced
 from narrowgauge.dispatch.looser import Manner
+from narrowgauge.dispatch.setting import Place
 from narrowgauge.errors import NarrowgaugeError
 from narrowgauge.judge.branches import Doubles, differs
 from narrowgauge.kernel.auditfile import AuditFile
@@ -113,16 +114,21 @@ def located(low: Run, correction: Run, draws: Given, quantity: str) -> Located |
     return first_difference(*traces, form=FORMATS[low.arm]) if all(done) else None
 
 
-def explanation(low: Run, correction: Run, case: Case, quantity: str, causes: Causes) -> str | None:
+def explanation(
+    low: Run, correction: Run, case: Case, quantity: str, causes: Causes, found: Located | None
+) -> str | None:
     """Return in words what makes every differing path of one function that of the other; None where nothing does.
 
     Each function with a source in Python is emulated anew with products fused into its sums, or with wider intermediates
-    within an expression, and held against the results of the other one, all bits.
+    within an expression, everywhere or where the two were `found` to part, and held against the results of the other
+    one, all bits.
     """
     count = case.low.size
     draws = Given(case.draws.narrow[..., :count], None)
     sides = ((low, case.correction), (correction, case.low))
-    for manner, side in _manners(low.arm, causes):
+    sides_found = (None, None) if found is None else (found.low, found.correction)
+    places = [None if one is None else one.place for one in sides_found]
+    for manner, side in _manners(low.arm, causes, places):
         run, wanted = sides[side]
         if run.source.python and _gives(run, draws, quantity, manner, wanted):
             causes.known = manner, side
@@ -130,12 +136,15 @@ def explanation(low: Run, correction: Run, case: Case, quantity: str, causes: Ca
     return None
 
 
-def _manners(arm: str, causes: Causes) -> Iterator[tuple[Manner, int]]:
+def _manners(arm: str, causes: Causes, places: Sequence[Place | None]) -> Iterator[tuple[Manner, int]]:
+    """Yield what is tried on which side, 0 or 1: what is known, everywhere, then on the line of `places` alone."""
     manners = [Manner("wider", wide="float32")] if FORMATS[arm].precision < FORMATS["float32"].precision else []
     manners.append(Manner("wider", wide="float64"))
     manners += [Manner("fused", first=first, across=across) for across in (False, True) for first in (True, False)]
     tried = [] if causes.known is None else [causes.known]
-    yield from dict.fromkeys([*tried, *((manner, side) for manner in manners for side in (0, 1))])
+    both = [(manner, side) for manner in manners for side in (0, 1)]
+    alone = [(replace(manner, only=place), side) for manner, side in both if (place := places[side]) is not None]
+    yield from dict.fromkeys([*tried, *both, *alone])
 
 
 def _gives(run: Run, draws: Given, quantity: str, manner: Manner, wanted: Doubles) -> bool:

@@ -38,8 +38,7 @@ from narrowgauge.measure.arms import PLAIN, REFERENCE
 from narrowgauge.measure.block import BlockRunner
 from narrowgauge.measure.branchruns import Branch, BranchSource, branch_sources, given
 from narrowgauge.measure.calls import Caller
-from narrowgauge.record.branches import BranchesEntry, MismatchEntry, TriedEntry
-from narrowgauge.record.reach import LineCount
+from narrowgauge.record.branches import BranchesEntry, CastEntry, MismatchEntry, TriedEntry
 
 __all__ = ["branches_entry", "broken_splits"]
 
@@ -47,14 +46,18 @@ _STEPS = 8  # of the finer level on which conditions are tried: enough to pass t
 _SINGLE = 32  # paths of a kernel that is run path by path
 
 
-def branches_entry(file: AuditFile, kernel: KernelSource, runner: BlockRunner) -> BranchesEntry | None:
+def branches_entry(
+    file: AuditFile, kernel: KernelSource, runner: BlockRunner, *, quick: bool = False
+) -> BranchesEntry | None:
     """Return what the branches of all splits come to, or None where no scheme is a split.
+
+    A `quick` check is one of a few steps and paths.
 
     Raises what the functions of [branches] raise in the reference, AuditFileError where parameters do not fit them, and
     EscapeError or RefusedError for what would go unrounded in them.
     """
     formats = split_formats(file)
-    return _Check(file, kernel, runner, formats).entry() if formats else None
+    return _Check(file, kernel, runner, formats, quick).entry() if formats else None
 
 
 def broken_splits(entry: BranchesEntry | None, level: int) -> frozenset[str]:
@@ -73,11 +76,17 @@ def broken_splits(entry: BranchesEntry | None, level: int) -> frozenset[str]:
 class _Check:
     """The runs of one check, and what was found."""
 
-    def __init__(self, file: AuditFile, kernel: KernelSource, runner: BlockRunner, formats: Sequence[str]) -> None:
+    def __init__(
+        self, file: AuditFile, kernel: KernelSource, runner: BlockRunner, formats: Sequence[str], quick: bool
+    ) -> None:
         self._file, self._kernel, self._runner, self._formats = file, kernel, runner, formats
         self._rows = not runner.singly
         self._sources = branch_sources(file, kernel)
         self._named = file.branches is not None and file.branches.named
+        self._paths = 0 if file.branches is None else file.branches.paths or 0
+        self._compared = range(file.ladder.finest + 1)
+        if quick:
+            self._compared, self._paths = range(file.ladder.level_within(_STEPS) + 1), GRAIN
         self._alpha = 1 - file.sampling.confidence
         self._tried: dict[tuple[str, int], TriedEntry] = {}
         self._mismatches: list[MismatchEntry] = []
@@ -135,7 +144,7 @@ class _Check:
         tasks: list[tuple[int, Callable[[], None]]] = []
         for wide in self._wides(arm) if self._named else ():
             comparer, causes = Comparer(self._runner, self._sources, arm, wide, rows=self._rows), Causes()
-            tasks += [(level, partial(self._compare, comparer, level, causes)) for level in ladder.levels]
+            tasks += [(level, partial(self._compare, comparer, level, causes)) for level in self._compared]
         finer = ladder.level_within(_STEPS)
         if self._named:
             tasks.append((finer, partial(self._high, arm, finer)))
@@ -155,9 +164,8 @@ class _Check:
 
     def _compare(self, comparer: Comparer, level: int, causes: Causes) -> None:
         """Compare the branches on one level, and write down what differs."""
-        branches, arm = self._file.branches, comparer.arm
-        assert branches is not None and branches.paths is not None  # filled in
-        found = comparer.level(level, branches.paths)
+        arm = comparer.arm
+        found = comparer.level(level, self._paths)
         paths = max(one.paths for one in found.values())
         self._try(arm, level, paths=paths)
         intervals = {}
@@ -189,8 +197,8 @@ class _Check:
         if case is None or self._file.ladder.steps(case.level) > MOST_STEPS:
             return None, None, 0
         low, correction = (comparer.run(side, case.level) for side in (0, 1))
-        why = explanation(low, correction, case, name, causes)
-        return located(low, correction, case.draws, name), why, case.low.size
+        where = located(low, correction, case.draws, name)
+        return where, explanation(low, correction, case, name, causes, where), case.low.size
 
     def _high(self, arm: str, level: int) -> None:
         """Hold the high part of the correction against what the kernel gives in the wide format."""
@@ -339,7 +347,7 @@ class _Check:
         return self._runner.draws(level, 0, Purpose.BRANCHES, paths)
 
 
-def _line(file: AuditFile, place: Place | None, count: int) -> LineCount:
+def _line(file: AuditFile, place: Place | None, count: int) -> CastEntry:
     if place is None:
-        return LineCount(file=None, line=None, count=count)
-    return LineCount(file=file.shown(place.file), line=place.line, count=count)
+        return CastEntry(file=None, line=None, count=count)
+    return CastEntry(file=file.shown(place.file), line=place.line, count=count)

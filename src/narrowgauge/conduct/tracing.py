@@ -130,6 +130,8 @@ class Trace:
         """Keep one operation whose operands are kept already; None stands for one that is not of numbers."""
         results = result if isinstance(result, (tuple, list)) else [result]
         kept = tuple(one for one in map(self.keep, results) if one is not None)
+        if not kept:
+            return  # it writes into an array, or asks about one
         whole = call if None not in operands else None
         number = len(self.operations)
         self.operations.append(Operation(place, name, tuple(one for one in operands if one is not None), kept, whole))
@@ -140,6 +142,8 @@ class Trace:
 
     def keep(self, value: Any) -> Kept | None:
         """Return an array or number with its rows kept; None for what is no array of real numbers."""
+        if not isinstance(value, (np.ndarray, np.generic, float, int)):
+            return None
         array = np.array(value, copy=None, subok=False)
         if array.dtype.kind not in "biuf" and array.dtype not in _STORED:
             return None

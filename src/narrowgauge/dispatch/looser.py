@@ -18,7 +18,7 @@ from typing import Any, Literal
 
 import numpy as np
 
-from narrowgauge.dispatch.setting import Route, Setting
+from narrowgauge.dispatch.setting import Place, Route, Setting
 
 __all__ = ["LooserSetting", "Manner"]
 
@@ -31,13 +31,14 @@ class Manner:
     """How a line is computed.
 
     `fused`: a product that feeds a sum is not rounded; of two, the `first` or the last; `across` lines, too. `wider`: all
-    intermediates of an expression in the format `wide`, float32 or float64, and rounded once.
+    intermediates of an expression in the format `wide`, float32 or float64, and rounded once. `only`: on one line alone.
     """
 
     kind: Literal["fused", "wider"]
     first: bool = True
     across: bool = False
     wide: Literal["float32", "float64"] = "float64"
+    only: Place | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -72,13 +73,14 @@ class LooserSetting(Setting):
         call: Callable[..., Any] | None = None,
     ) -> Any:
         """Compute one operation, from what its operands were made of where it stands in one expression with them."""
-        if ufunc not in _KEPT:
+        fused, only = self._manner.kind == "fused", self._manner.only
+        here = only is None or self.where() == only
+        if ufunc not in _KEPT or not (here or fused):
             return super().operate(ufunc, route, operands, out=out, call=call)
         carriers = [self.admit(operand) for operand in operands]
         if any(carrier is NotImplemented for carrier in carriers):
             return NotImplemented
-        fused = self._manner.kind == "fused"
-        rounded, parts = (self._fused if fused else self._widened)(ufunc, carriers)
+        rounded, parts = self._fused(ufunc, carriers, here) if fused else self._widened(ufunc, carriers)
         if out is not None:
             out[...] = rounded
             return self.wrap(out)
@@ -91,10 +93,10 @@ class LooserSetting(Setting):
             self._kept[id(rounded)] = _Kept(rounded, id(frame), code, at, parts)
         return self.wrap(rounded)
 
-    def _fused(self, ufunc: np.ufunc, carriers: list[Any]) -> tuple[Any, tuple[Any, ...]]:
-        """Return a result, and the factors of a product."""
+    def _fused(self, ufunc: np.ufunc, carriers: list[Any], here: bool) -> tuple[Any, tuple[Any, ...]]:
+        """Return a result, and the factors of a product; sums are rounded like any operation unless `here`."""
         arithmetic = self.arithmetic
-        if ufunc in (np.add, np.subtract):
+        if here and ufunc in (np.add, np.subtract):
             products = [place for place, carrier in enumerate(carriers) if self._parts(carrier)]
             if products:
                 place = products[0 if self._manner.first else -1]

@@ -12,7 +12,7 @@ from typing import Literal
 
 import msgspec
 
-from narrowgauge.record.branches import BranchesEntry, MismatchEntry, PointEntry, TriedEntry, WhereEntry
+from narrowgauge.record.branches import BranchesEntry, CastEntry, MismatchEntry, PointEntry, TriedEntry, WhereEntry
 from narrowgauge.record.canary import CanaryEntry
 from narrowgauge.record.costs import CostEntry
 from narrowgauge.record.draws import DrawsEntry, OrderEntry, PartsEntry, SeparationEntry
@@ -45,6 +45,7 @@ __all__ = [
     "BestEntry",
     "BranchesEntry",
     "CanaryEntry",
+    "CastEntry",
     "CommonLevelEntry",
     "CommonPlanEntry",
     "ConstantEntry",

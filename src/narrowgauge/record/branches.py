@@ -5,9 +5,8 @@ from __future__ import annotations
 from typing import Literal
 
 from narrowgauge.record.plan import Entry
-from narrowgauge.record.reach import LineCount
 
-__all__ = ["BranchesEntry", "MismatchEntry", "PointEntry", "TriedEntry", "WhereEntry"]
+__all__ = ["BranchesEntry", "CastEntry", "MismatchEntry", "PointEntry", "TriedEntry", "WhereEntry"]
 
 Condition = Literal["branches", "paths", "layout", "threads", "repeat", "influence"]
 
@@ -82,6 +81,14 @@ class MismatchEntry(Entry, frozen=True, kw_only=True):
     splits: Literal["not admissible", "within budget", "not concerned"]
 
 
+class CastEntry(Entry, frozen=True, kw_only=True):
+    """How often casts of a correction were ignored on one of its lines, in the run that had most of them."""
+
+    file: str | None
+    line: int | None
+    count: int
+
+
 class BranchesEntry(Entry, frozen=True, kw_only=True):
     """Which functions are the branches, what was tried, what differed, which casts were ignored, what could not be tried."""
 
@@ -89,5 +96,5 @@ class BranchesEntry(Entry, frozen=True, kw_only=True):
     correction: str
     tried: list[TriedEntry]
     mismatches: list[MismatchEntry]
-    casts: list[LineCount]
+    casts: list[CastEntry]
     remarks: list[str]

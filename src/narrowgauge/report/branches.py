@@ -24,12 +24,15 @@ def branch_summary(entry: BranchesEntry) -> str:
     return f"{what}; {found}. Compared: {'; '.join(_tried(entry))}."
 
 
-def branch_lines(record: AuditRecord) -> list[str]:
-    """Return a line for each mismatch with its place, cause and bias, then ignored casts and what could not be tried."""
-    entry = record.branches
-    if entry is None:
-        return []
-    lines = [_line(record, one) for one in entry.mismatches[:_MOST]]
+def branch_lines(entry: BranchesEntry, record: AuditRecord | None) -> list[str]:
+    """Return a line for each mismatch with its place, cause and bias, then ignored casts and what could not be tried.
+
+    Without a record it was a trial, of too few paths for a bias.
+    """
+    several = len({one.quantity for one in entry.mismatches} | set(() if record is None else record.quantities)) > 1
+    lines = [
+        _line(one, several=several) + ("" if record is None else _bias(record, one)) for one in entry.mismatches[:_MOST]
+    ]
     if (left := len(entry.mismatches) - _MOST) > 0:
         lines.append(f"{count(left)} further {'mismatches' if left > 1 else 'mismatch'}; audit.json has them all")
     if entry.casts:
@@ -85,9 +88,9 @@ def _conditions(one: TriedEntry) -> str:
     return joined(words)
 
 
-def _line(record: AuditRecord, one: MismatchEntry) -> str:
-    """Return one mismatch in words."""
-    whose = "" if len(record.quantities) == 1 else f" of {clean(one.quantity)}"
+def _line(one: MismatchEntry, *, several: bool) -> str:
+    """Return one mismatch in words; of `several` quantities its own is named."""
+    whose = f" of {clean(one.quantity)}" if several else ""
     pair = "" if one.wide is None else f" beside {clean(one.wide)}"
     text = f"{clean(one.arm)}{pair}, level {one.level}: "
     text += f"{count(one.differing)} of {count(one.paths)} paths{whose} differ" + _condition(one)
@@ -102,7 +105,7 @@ def _line(record: AuditRecord, one: MismatchEntry) -> str:
     if one.numpys_own:
         text += " NumPy itself gives other bits for that operation on the same values"
         text += "; this format is emulated and not concerned." if one.splits == "not concerned" else "."
-    return text + _bias(record, one)
+    return text
 
 
 def _condition(one: MismatchEntry) -> str:
