@@ -43,8 +43,8 @@ DEFECTS = {
         "operation",
     ),
     "hoisted product of constants": (
-        emulated, "float16", kernel("S = S + 0.05 * h * S + S * dw  # here"),
-        kernel("S = S + 0.05 * (h * S) + S * dw  # here"), "constant",
+        emulated, "float16", kernel("S = S + 0.05 * 0.3 * S + S * dw  # here"),
+        kernel("S = S + 0.05 * (0.3 * S) + S * dw  # here"), "constant",
     ),
     "fused multiply-add": (
         itself, "float32", kernel("S = S + S * dw  # here"),

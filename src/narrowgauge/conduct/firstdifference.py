@@ -83,7 +83,9 @@ class Located:
 
     def __str__(self) -> str:
         sides = [str(side) for side in (self.low, self.correction) if side is not None]
-        return " where ".join(sides) + ("" if self.incomplete is None else f" ({self.incomplete})")
+        if self.incomplete is None or not sides:
+            return " where ".join(sides) or str(self.incomplete)
+        return f"{' where '.join(sides)} ({self.incomplete})"
 
 
 def first_difference(low: Trace, correction: Trace, *, form: Format) -> Located | None:

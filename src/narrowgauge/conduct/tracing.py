@@ -108,8 +108,8 @@ class Trace:
     def met(self, setting: Setting, constant: Any) -> None:
         """Keep a constant, rounded as it meets the state."""
         if not self.full:
-            rounded = setting.arithmetic.cast(constant) if isinstance(constant, np.ndarray) else constant
-            kept = self.keep(rounded if rounded is not constant else setting.arithmetic.constant(constant))
+            arithmetic, array = setting.arithmetic, isinstance(constant, np.ndarray)
+            kept = self.keep(arithmetic.cast(constant) if array else arithmetic.constant(constant))
             if kept is not None:
                 self.constants.update(*kept.readings)
 

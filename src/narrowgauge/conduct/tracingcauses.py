@@ -40,17 +40,19 @@ def _is_fused(side: Side | None, trace: Trace, other: Trace, form: Format) -> bo
     """Whether the other side has a product and sum of this side's, rounded once."""
     if side is None or side.kind != "operation":
         return False
-    fma = arithmetic_named(form.name).fma
+    arithmetic = arithmetic_named(form.name)
     for product, total, row in _products(trace, side.number):
         factors = [_row(trace, operand, product, row) for operand in product.operands]
         place = next(place for place, kept in enumerate(total.operands) if row in kept.keys)
-        term = _row(trace, total.operands[1 - place], total, total.results[0].keys[product.results[0].keys.index(row)])
-        if term is None or any(factor is None for factor in factors):
-            continue
-        first, second, third = (np.asarray(value, form.carrier) for value in (*factors, term))
+        given = total.results[0].keys[product.results[0].keys.index(row)]
+        term = _row(trace, total.operands[1 - place], total, given)
+        numbers = [value for value in (*factors, term, trace.rows[row], trace.rows[given]) if value is not None]
+        if len(numbers) < 5 or not all(map(arithmetic.holds, numbers)):
+            continue  # where this side does not round it is the one that rounds less
+        first, second, third = (value.astype(form.carrier) for value in numbers[:3])
         if total.name == "subtract":
-            first, third = (first, -third) if place == 0 else (-first, third)
-        if _occurs(fma(first, second, third), other, trace):
+            first, third = (first, np.negative(third)) if place == 0 else (np.negative(first), third)
+        if _occurs(arithmetic.fma(first, second, third), other, trace):
             return True
     return False
 
@@ -80,6 +82,8 @@ def _is_wider(side: Side | None, trace: Trace, other: Trace, form: Format) -> bo
     if not isinstance(ufunc, np.ufunc) or ufunc.nin != len(operation.operands) or ufunc.nout != 1:
         return False
     for row in operation.results[0].keys:
+        if not arithmetic_named(form.name).holds(trace.rows[row]):
+            continue
         operands = [_row(trace, operand, operation, row) for operand in operation.operands]
         if any(operand is None for operand in operands):
             continue

@@ -157,24 +157,27 @@ for _name in _METHODS:
 class _Numpy(ModuleType):
     """NumPy under the names of the user's module: what it makes is traced, everything else is NumPy's own."""
 
-    def __init__(self, makers: Mapping[str, Callable[..., Any]]) -> None:
-        super().__init__("numpy")
-        vars(self).update(makers)
+    def __init__(self, numpy: ModuleType, makers: Mapping[str, Callable[..., Any]]) -> None:
+        super().__init__(numpy.__name__)
+        vars(self).update(makers, _numpy=numpy)
 
     def __getattr__(self, name: str) -> Any:
-        return getattr(np, name)
+        return getattr(vars(self)["_numpy"], name)
 
 
 @contextmanager
 def _exchanged(namespaces: Sequence[dict[str, Any]], watch: _Watch) -> Iterator[None]:
     """Exchange NumPy, and its functions that make arrays, under every name in some namespaces."""
     makers = {name: partial(watch.made, name) for name in _MAKERS}
-    instead: dict[int, Any] = {id(np): _Numpy(makers)} | {id(getattr(np, name)): makers[name] for name in _MAKERS}
-    before = [
-        (space, name, value) for space in namespaces for name, value in space.items() if id(value) in instead
-    ]  # fmt: skip
-    for space, name, value in before:
-        space[name] = instead[id(value)]
+    functions = {id(getattr(np, name)): maker for name, maker in makers.items()}
+    before: list[tuple[dict[str, Any], str, Any]] = []
+    for space in namespaces:
+        for name, value in list(space.items()):
+            # a private copy has a module of its own for NumPy
+            is_numpy = isinstance(value, ModuleType) and value.__name__ == "numpy"
+            if is_numpy or id(value) in functions:
+                before.append((space, name, value))
+                space[name] = _Numpy(value, makers) if is_numpy else functions[id(value)]
     try:
         yield
     finally:

@@ -49,15 +49,16 @@ def laid_out(array: Array, layout: Layout) -> Array:
     if array.ndim == 0:
         return array
     if layout == "reversed":
-        return np.ascontiguousarray(array[..., ::-1])[..., ::-1]
+        front: Array = np.ascontiguousarray(array[..., ::-1])
+        return front[..., ::-1]
     if layout == "strided":
-        wide = np.zeros((*array.shape[:-1], 2 * array.shape[-1]), array.dtype)
+        wide: Array = np.zeros((*array.shape[:-1], 2 * array.shape[-1]), array.dtype)
         wide[..., ::2] = array
         return wide[..., ::2]
     if layout == "Fortran" and array.ndim == 1:  # a row of an array of steps and paths
-        rows = np.zeros((_APART, array.size), array.dtype, order="F")
+        rows: Array = np.zeros((_APART, array.size), array.dtype, order="F")
         rows[0] = array
-        return rows[0]
+        return rows[0, :]
     return np.asfortranarray(array) if layout == "Fortran" else np.ascontiguousarray(array)
 
 
