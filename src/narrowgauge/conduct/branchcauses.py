@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -22,10 +22,11 @@ from narrowgauge.kernel.raised import kept_apart
 from narrowgauge.measure.branchruns import Branch, BranchSource, Given, Order, laid
 from narrowgauge.record.branches import PointEntry, WhereEntry
 
-__all__ = ["MOST_STEPS", "Case", "Causes", "Run", "explanation", "follow", "located", "where_entry"]
+__all__ = ["MOST_STEPS", "Case", "Causes", "Run", "follow", "located", "narrow_down", "where_entry"]
 
 MOST_STEPS = 256  # of a level on which causes are looked for: all results of a run are kept
-_ENOUGH = 64  # paths that are followed, since rows of fewer are alike by chance
+_MOST_DIFFERING = 192  # of the paths that are followed; the rest agree
+_MOST_OF_EACH = 1024  # paths that differ, and that agree, which an explanation has to give
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -41,36 +42,49 @@ class Run:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Case:
-    """Paths of a block whose results differ, with their draws; `level` is that of the path, fine or coarse.
+    """Paths of a block, of which the first `differing` have other results; `level` is that of the path, fine or coarse.
 
-    `draws` has, after the paths that differ, some that do not where they are few; `low` and `correction` are the results
-    of the quantity on those that differ.
+    Some that agree are among them: what explains the others must leave these alone.
     """
 
     level: int
     draws: Given
     low: Doubles
     correction: Doubles
+    differing: int
 
     @classmethod
     def of(cls, level: int, draws: Given, low: Doubles, correction: Doubles) -> Case:
         """Return the case of a block, whose results differ on some path."""
         differ = differs(low, correction)
-        chosen = np.flatnonzero(differ)[:MOST_PATHS]
-        further = np.flatnonzero(~differ)[: max(0, _ENOUGH - chosen.size)]
+        first = np.flatnonzero(differ)[:_MOST_OF_EACH]
+        chosen = np.concatenate([first, np.flatnonzero(~differ)[:_MOST_OF_EACH]])
         return cls(
-            level=level,
-            draws=draws.of(np.concatenate([chosen, further])),
-            low=low[chosen],
-            correction=correction[chosen],
+            level=level, draws=draws.of(chosen), low=low[chosen], correction=correction[chosen], differing=first.size
         )
+
+    def followed(self) -> Given:
+        """Return the draws of the paths of which all results are kept, to find where the branches part."""
+        first = min(self.differing, _MOST_DIFFERING)
+        further = range(self.differing, min(self.low.size, self.differing + MOST_PATHS - first))
+        return self.draws.of([*range(first), *further])
 
 
 @dataclass(slots=True)
 class Causes:
-    """What explained a difference before, which is tried first."""
+    """What explains every difference of two functions up to now: manners, each with the side, 0 or 1, that has it.
 
-    known: tuple[Manner, int] | None = None
+    None before the first one. What explains some differences and not others does so by chance.
+    """
+
+    left: list[tuple[Manner, int]] | None = None
+
+    def __str__(self) -> str:
+        """Return the first of them in words; empty where nothing explains all."""
+        if not self.left:
+            return ""
+        manner, _ = self.left[0]
+        return "fused multiply-add" if manner.kind == "fused" else f"wider intermediates, in {manner.wide}"
 
 
 def follow(
@@ -93,6 +107,8 @@ def follow(
                 branch.copy, given, file.ladder.step_size(run.level), trace=trace, **file.keywords()
             )
             trace.gave(np.asarray(quantities_of(result)[quantity]))
+            if source.part is not None:
+                _keep_what_leads(trace)
             return True
         branch = Branch(source, run.arm, run.wide, rows=run.rows, observer=trace)
         if branch.one_path and not run.rows:
@@ -100,7 +116,35 @@ def follow(
         trace.draws(draws.narrow)
         found = branch.lying(draws, run.level, order, over_paths=over_paths)
         trace.gave(found[quantity])
+        if source.part is not None:
+            _keep_what_leads(trace)
     return kept.problem is None
+
+
+def _keep_what_leads(trace: Trace) -> None:
+    """Leave out of a trace what does not lead to the quantity that was told: a high part has the rows of a low one.
+
+    Everything stays where some row came about in a way that does not show.
+    """
+    wanted = set(trace.returned)
+    pending, numbers = list(wanted), set[int]()
+    while pending:
+        key = pending.pop()
+        made = trace.made.get(key, ())
+        if not made and key not in trace.draws_keys | trace.constants and len(trace.rows[key]) > 1:
+            return
+        for number in set(made) - numbers:
+            numbers.add(number)
+            keys = {row for one in trace.operations[number].operands for reading in one.readings for row in reading}
+            pending += keys - wanted
+            wanted |= keys
+    trace.operations = [one for number, one in enumerate(trace.operations) if number in numbers]
+    wanted |= {row for one in trace.operations for kept in one.results for reading in kept.readings for row in reading}
+    trace.rows = {key: row for key, row in trace.rows.items() if key in wanted | trace.draws_keys | trace.constants}
+    trace.made = {}
+    for number, one in enumerate(trace.operations):
+        for key in {row for kept in one.results for reading in kept.readings for row in reading}:
+            trace.made.setdefault(key, []).append(number)
 
 
 def located(low: Run, correction: Run, draws: Given, quantity: str) -> Located | None:
@@ -114,41 +158,40 @@ def located(low: Run, correction: Run, draws: Given, quantity: str) -> Located |
     return first_difference(*traces, form=FORMATS[low.arm]) if all(done) else None
 
 
-def explanation(
-    low: Run, correction: Run, case: Case, quantity: str, causes: Causes, found: Located | None
-) -> str | None:
-    """Return in words what makes every differing path of one function that of the other; None where nothing does.
+def narrow_down(
+    causes: Causes, low: Run, correction: Run, case: Case, quantity: str, found: Located | None
+) -> None:
+    """Leave of the causes what makes every path of one function that of the other in this case, too.
 
     Each function with a source in Python is emulated anew with products fused into its sums, or with wider intermediates
     within an expression, everywhere or where the two were `found` to part, and held against the results of the other
-    one, all bits.
+    one, all bits, also on paths that agree as it is. A function whose own bits are not those of its emulation, since it
+    casts to formats of its choice, is not asked.
     """
-    count = case.low.size
-    draws = Given(case.draws.narrow[..., :count], None)
-    sides = ((low, case.correction), (correction, case.low))
+    draws = Given(case.draws.narrow, None)
+    sides = ((low, case.low, case.correction), (correction, case.correction, case.low))
+    usual = [run.source.python and _gives(run, draws, quantity, None, own) for run, own, _ in sides]
     sides_found = (None, None) if found is None else (found.low, found.correction)
     places = [None if one is None else one.place for one in sides_found]
-    for manner, side in _manners(low.arm, causes, places):
-        run, wanted = sides[side]
-        if run.source.python and _gives(run, draws, quantity, manner, wanted):
-            causes.known = manner, side
-            return "fused multiply-add" if manner.kind == "fused" else f"wider intermediates, in {manner.wide}"
-    return None
+    causes.left = [
+        (manner, side)
+        for manner, side in (_manners(low.arm, places) if causes.left is None else causes.left)
+        if usual[side] and _gives(sides[side][0], draws, quantity, manner, sides[side][2])
+    ]
 
 
-def _manners(arm: str, causes: Causes, places: Sequence[Place | None]) -> Iterator[tuple[Manner, int]]:
-    """Yield what is tried on which side, 0 or 1: what is known, everywhere, then on the line of `places` alone."""
+def _manners(arm: str, places: Sequence[Place | None]) -> Sequence[tuple[Manner, int]]:
+    """Return what is tried on which side, 0 or 1: everywhere, then on the line of `places` alone."""
     manners = [Manner("wider", wide="float32")] if FORMATS[arm].precision < FORMATS["float32"].precision else []
     manners.append(Manner("wider", wide="float64"))
     manners += [Manner("fused", first=first, across=across) for across in (False, True) for first in (True, False)]
-    tried = [] if causes.known is None else [causes.known]
     both = [(manner, side) for manner in manners for side in (0, 1)]
     alone = [(replace(manner, only=place), side) for manner, side in both if (place := places[side]) is not None]
-    yield from dict.fromkeys([*tried, *both, *alone])
+    return [*both, *alone]
 
 
-def _gives(run: Run, draws: Given, quantity: str, manner: Manner, wanted: Doubles) -> bool:
-    """Whether a function emulated in some manner gives these results."""
+def _gives(run: Run, draws: Given, quantity: str, manner: Manner | None, wanted: Doubles) -> bool:
+    """Whether a function emulated in some manner, or as usual, gives these results."""
     found: npt.NDArray[np.float64] | None = None
     try:
         with kept_apart(run.level, run.arm):

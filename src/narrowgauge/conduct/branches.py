@@ -11,11 +11,12 @@ from collections import Counter
 from collections.abc import Callable, Iterator, Sequence
 from functools import partial
 
+import msgspec
 import numpy as np
 
 from narrowgauge.arithmetic.arithmetic import arithmetic_named
 from narrowgauge.arithmetic.formats import FORMATS
-from narrowgauge.conduct.branchcauses import MOST_STEPS, Causes, Run, explanation, located, where_entry
+from narrowgauge.conduct.branchcauses import MOST_STEPS, Causes, Run, located, narrow_down, where_entry
 from narrowgauge.conduct.branchcomparison import Comparer, Mismatch
 from narrowgauge.conduct.branchvariations import REPEATS, Found, Varied, vary
 from narrowgauge.conduct.entries import finite, interval_fields
@@ -145,6 +146,7 @@ class _Check:
         for wide in self._wides(arm) if self._named else ():
             comparer, causes = Comparer(self._runner, self._sources, arm, wide, rows=self._rows), Causes()
             tasks += [(level, partial(self._compare, comparer, level, causes)) for level in self._compared]
+            tasks.append((0, partial(self._explain, comparer, causes)))
         finer = ladder.level_within(_STEPS)
         if self._named:
             tasks.append((finer, partial(self._high, arm, finer)))
@@ -175,30 +177,39 @@ class _Check:
         allowed = within(self._file, intervals)
         for name, one in found.items():
             if one.differing:
-                where, why, asked = self._cause(comparer, one, name, causes)
+                where, asked = self._cause(comparer, one, name, causes)
                 self._mismatches.append(
                     self._mismatch(
                         (arm, level, name),
                         one,
                         intervals[name],
                         where=where,
-                        why=why,
                         asked=asked,
                         wide=comparer.wide,
                         splits="within budget" if allowed else "not admissible",
                     )
                 )
 
-    def _cause(
-        self, comparer: Comparer, one: Mismatch, name: str, causes: Causes
-    ) -> tuple[Located | None, str | None, int]:
-        """Return where the branches part, what explains it, and on how many paths."""
+    def _cause(self, comparer: Comparer, one: Mismatch, name: str, causes: Causes) -> tuple[Located | None, int]:
+        """Return where the branches part, and on how many paths that differ an explanation was looked for."""
         case = one.case
         if case is None or self._file.ladder.steps(case.level) > MOST_STEPS:
-            return None, None, 0
+            return None, 0
         low, correction = (comparer.run(side, case.level) for side in (0, 1))
-        where = located(low, correction, case.draws, name)
-        return where, explanation(low, correction, case, name, causes, where), case.low.size
+        where = located(low, correction, case.followed(), name)
+        if causes.left != []:
+            narrow_down(causes, low, correction, case, name, where)
+        return where, case.differing
+
+    def _explain(self, comparer: Comparer, causes: Causes) -> None:
+        """Write down what explains all differences of a comparison on all its levels."""
+        why = str(causes)
+        for place, one in enumerate(self._mismatches):
+            if one.condition == "branches" and (one.arm, one.wide) == (comparer.arm, comparer.wide):
+                asked = one.explained if why else 0
+                self._mismatches[place] = msgspec.structs.replace(
+                    one, explanation=why if asked else None, explained=asked
+                )
 
     def _high(self, arm: str, level: int) -> None:
         """Hold the high part of the correction against what the kernel gives in the wide format."""
@@ -297,7 +308,6 @@ class _Check:
         where: Located | None,
         wide: str | None,
         splits: str,
-        why: str | None = None,
         asked: int = 0,
         found: Found | None = None,
         function: str | None = None,
@@ -321,8 +331,8 @@ class _Check:
             **interval_fields("bias", interval),
             of_rmse=None if rmse is None else finite(interval.estimate / rmse),
             where=where_entry(self._file, where),
-            explanation=why,
-            explained=asked if why is not None else 0,
+            explanation=None,
+            explained=asked,
             numpys_own=found is not None and found.numpys_own,
             splits=splits,  # type: ignore[arg-type]  # one of its words
         )
