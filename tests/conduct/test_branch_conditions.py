@@ -68,7 +68,7 @@ def test_moment_matching_couples_paths(tmp_path: Path, rounds: str) -> None:
     entry = alone(tmp_path, MATCHED, kernel={"rounds": rounds})
     assert {"influence", "paths"} <= conditions(entry)
     found = next(one for one in entry.mismatches if one.condition == "influence" and one.level == 3)
-    assert found.differing > 900
+    assert found.differing > 500
     assert found.where is not None
     assert found.where.low is not None
     assert (found.where.low.file, found.where.low.line) == ("kernel.py", 6)
@@ -106,20 +106,14 @@ def test_a_function_that_reads_memory_is_found_by_layouts(tmp_path: Path) -> Non
 def test_a_buffer_that_calls_share_is_found_by_threads(tmp_path: Path) -> None:
     """Two calls at once write into one module's buffer."""
     source = """
-    import threading
     import time
 
     ROOM = {}
-    LOCK = threading.Lock()
 
     def path(dW, h):
-        with LOCK:
-            ROOM["calls"] = ROOM.get("calls", 0) + 1
+        ROOM["end"] = dW[0] * dW[0]
         time.sleep(0.01)
-        with LOCK:
-            beside = ROOM["calls"]
-            ROOM["calls"] = beside - 1
-        return dW.sum(axis=0) + dW.dtype.type(beside - 1)
+        return ROOM["end"]
     """
     assert conditions(alone(tmp_path, source)) == {"threads"}
 
@@ -142,7 +136,7 @@ def test_what_a_kernel_does_not_take_is_said(tmp_path: Path) -> None:
     import numpy as np
 
     def path(dW, h):
-        return np.sum(dW, axis=0).reshape(-1, 32).reshape(-1)
+        return (dW[0] * dW[0]).reshape(-1, 32).reshape(-1)
     """
     entry = alone(tmp_path, source)
     assert entry.mismatches == []

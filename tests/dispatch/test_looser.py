@@ -13,8 +13,9 @@ from narrowgauge.arithmetic.arithmetic import arithmetic_named
 from narrowgauge.dispatch.array import Array
 from narrowgauge.dispatch.copies import copy_module, new_setting
 from narrowgauge.dispatch.looser import LooserSetting, Manner
+from narrowgauge.dispatch.setting import Place
 
-FIRST, LAST = Manner("fused"), Manner("fused", first=False)
+FIRST, LAST = Manner("fused"), Manner("fused", last=frozenset({Place("looser_kernel.py", 11)}))
 ACROSS, WIDE = Manner("fused", across=True), Manner("wider", wide="float32")
 SOURCE = """
 import numpy as np

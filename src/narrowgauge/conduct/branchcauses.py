@@ -4,28 +4,28 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
+from itertools import combinations
 
 import numpy as np
-import numpy.typing as npt
 
 from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.conduct.firstdifference import Located, Side, first_difference
 from narrowgauge.conduct.tracing import MOST_PATHS, Trace
 from narrowgauge.conduct.tracingown import run_traced
-from narrowgauge.dispatch.looser import Manner
+from narrowgauge.dispatch.looser import LooserSetting, Manner
 from narrowgauge.dispatch.setting import Place
 from narrowgauge.errors import NarrowgaugeError
 from narrowgauge.judge.branches import Doubles, differs
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.contract import quantities_of
-from narrowgauge.kernel.raised import kept_apart
-from narrowgauge.measure.branchruns import Branch, BranchSource, Given, Order, laid
+from narrowgauge.measure.branchruns import Branch, BranchError, BranchSource, Given, Order, its_own, laid
 from narrowgauge.record.branches import PointEntry, WhereEntry
 
 __all__ = ["MOST_STEPS", "Case", "Causes", "Run", "follow", "located", "narrow_down", "where_entry"]
 
 MOST_STEPS = 256  # of a level on which causes are looked for: all results of a run are kept
 _MOST_DIFFERING = 192  # of the paths that are followed; the rest agree
+_MOST_LINES = 5  # with two products in a sum: 32 choices
 _MOST_OF_EACH = 1024  # paths that differ, and that agree, which an explanation has to give
 
 
@@ -97,7 +97,7 @@ def follow(
     source = run.source
     if not source.python:
         return False
-    with kept_apart(run.level, run.arm) as kept:
+    with its_own(run.level, run.arm):
         if source.rounds == "itself":
             branch = Branch(source, run.arm, run.wide)
             branch.wide_draws(draws)
@@ -118,7 +118,8 @@ def follow(
         trace.gave(found[quantity])
         if source.part is not None:
             _keep_what_leads(trace)
-    return kept.problem is None
+        return True
+    raise AssertionError("what it raises is raised")
 
 
 def _keep_what_leads(trace: Trace) -> None:
@@ -153,7 +154,7 @@ def located(low: Run, correction: Run, draws: Given, quantity: str) -> Located |
     traces = Trace(paths), Trace(paths)
     try:
         done = [follow(run, draws, quantity, trace) for run, trace in zip((low, correction), traces, strict=True)]
-    except NarrowgaugeError:  # a trace asks more of a function than a run; its results are there without
+    except (BranchError, NarrowgaugeError):  # a trace asks more of a function than a run
         return None
     return first_difference(*traces, form=FORMATS[low.arm]) if all(done) else None
 
@@ -173,18 +174,38 @@ def narrow_down(
     usual = [run.source.python and _gives(run, draws, quantity, None, own) for run, own, _ in sides]
     sides_found = (None, None) if found is None else (found.low, found.correction)
     places = [None if one is None else one.place for one in sides_found]
+    if causes.left is None:
+        further = [one for run, own in zip((low, correction), usual, strict=True) if own for one in _of_two(run, draws)]
+        causes.left = _manners(low.arm, places, further)
     causes.left = [
         (manner, side)
-        for manner, side in (_manners(low.arm, places) if causes.left is None else causes.left)
+        for manner, side in causes.left
         if usual[side] and _gives(sides[side][0], draws, quantity, manner, sides[side][2])
     ]
 
 
-def _manners(arm: str, places: Sequence[Place | None]) -> Sequence[tuple[Manner, int]]:
-    """Return what is tried on which side, 0 or 1: everywhere, then on the line of `places` alone."""
+def _of_two(run: Run, draws: Given) -> list[Place | None]:
+    """Return the lines of a function that add two products, of which a compiler may fuse either."""
+    try:
+        branch = Branch(run.source.emulated(), run.arm, rows=run.rows, manner=Manner("fused", across=True))
+        branch.on(draws, run.level)
+    except (BranchError, NarrowgaugeError):  # what cannot be emulated explains nothing
+        return []
+    setting = branch.copy.setting
+    return list(setting.of_two) if isinstance(setting, LooserSetting) else []
+
+
+def _manners(arm: str, places: Sequence[Place | None], of_two: Sequence[Place | None]) -> list[tuple[Manner, int]]:
+    """Return what is tried on which side, 0 or 1: everywhere, then on the line of `places` alone.
+
+    Of two products either may be fused, on each of the lines `of_two` for itself.
+    """
     manners = [Manner("wider", wide="float32")] if FORMATS[arm].precision < FORMATS["float32"].precision else []
     manners.append(Manner("wider", wide="float64"))
-    manners += [Manner("fused", first=first, across=across) for across in (False, True) for first in (True, False)]
+    choices = [
+        frozenset(some) for count in range(len(of_two) + 1) for some in combinations(of_two[:_MOST_LINES], count)
+    ]
+    manners += [Manner("fused", last=last, across=across) for across in (False, True) for last in choices]
     both = [(manner, side) for manner in manners for side in (0, 1)]
     alone = [(replace(manner, only=place), side) for manner, side in both if (place := places[side]) is not None]
     return [*both, *alone]
@@ -192,12 +213,10 @@ def _manners(arm: str, places: Sequence[Place | None]) -> Sequence[tuple[Manner,
 
 def _gives(run: Run, draws: Given, quantity: str, manner: Manner | None, wanted: Doubles) -> bool:
     """Whether a function emulated in some manner, or as usual, gives these results."""
-    found: npt.NDArray[np.float64] | None = None
     try:
-        with kept_apart(run.level, run.arm):
-            branch = Branch(run.source.emulated(), run.arm, rows=run.rows, manner=manner)
-            found = branch.on(draws, run.level).get(quantity)
-    except NarrowgaugeError:  # what cannot be emulated explains nothing
+        branch = Branch(run.source.emulated(), run.arm, rows=run.rows, manner=manner)
+        found = branch.on(draws, run.level).get(quantity)
+    except (BranchError, NarrowgaugeError):  # what cannot be emulated explains nothing
         return False
     return found is not None and not differs(found, wanted).any()
 

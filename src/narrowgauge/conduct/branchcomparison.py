@@ -81,7 +81,6 @@ class Comparer:
     def level(self, level: int, paths: int) -> dict[str, Mismatch]:
         """Compare whole blocks of a level, at least so many paths, and return what each quantity differs by."""
         found: dict[str, Mismatch] = {}
-        done = 0
         for block in range(-(-paths // self._runner.paths(level))):
             draws = self._runner.draws(level, block, Purpose.BRANCHES)
             pairs = self._pairs(draws, level)
@@ -94,7 +93,6 @@ class Comparer:
                 one.add(results, self.arm)
                 if one.case is None and one.differing and isinstance(draws, Draws):
                     one.case = self._case(draws, level, results)
-            done += next(iter(low.values())).size
         return found
 
     def _pairs(self, draws: Draws | Tape, level: int) -> list[tuple[Quantities, Quantities]]:
@@ -102,15 +100,9 @@ class Comparer:
         coupled = self._runner.coupled(level)
         if isinstance(draws, Tape):
             if self._first is not None:  # writes what the formats have to ask for
-                self._first.fine(draws, level, coarse_follows=coupled)
-                if coupled:
-                    self._first.coarse(draws, level)
-            runs = []
-            for branch in self._branches:
-                fine = branch.fine(draws, level, coarse_follows=coupled)
-                runs.append((fine, branch.coarse(draws, level) if coupled else None))
-            (low, below), (correction, under) = runs
-            return [(low, correction)] if below is None or under is None else [(low, correction), (below, under)]
+                self._first.taped(draws, level, coupled=coupled)
+            low, correction = (branch.taped(draws, level, coupled=coupled) for branch in self._branches)
+            return list(zip(low, correction, strict=True))
         fine_given, coarse_given = given(draws, self.arm, self.wide, coupled=coupled)
         first, second = self._branches
         pairs = [(first.on(fine_given, level), second.on(fine_given, level))]

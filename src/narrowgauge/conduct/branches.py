@@ -8,7 +8,7 @@ level; and each function is held against itself with other paths, in other layou
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Sequence
 from functools import partial
 
 import msgspec
@@ -26,7 +26,7 @@ from narrowgauge.dispatch.setting import Place
 from narrowgauge.draws.coarsen import Draws
 from narrowgauge.draws.streams import GRAIN, Purpose
 from narrowgauge.draws.tape import Tape
-from narrowgauge.errors import AuditFileError
+from narrowgauge.errors import AuditFileError, DispatchError, said
 from narrowgauge.judge.branches import bias, differs, split_formats, ulps, wide_formats, within
 from narrowgauge.judge.intervals import Interval
 from narrowgauge.judge.schemes import rmse_of
@@ -34,10 +34,10 @@ from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.branchlibrary import PairLibrary
 from narrowgauge.kernel.contract import check_parameters
 from narrowgauge.kernel.loading import KernelSource
-from narrowgauge.kernel.raised import kept_apart, raised, with_place
+from narrowgauge.kernel.raised import with_place
 from narrowgauge.measure.arms import PLAIN, REFERENCE
 from narrowgauge.measure.block import BlockRunner
-from narrowgauge.measure.branchruns import Branch, BranchSource, branch_sources, given
+from narrowgauge.measure.branchruns import Branch, BranchError, BranchSource, branch_sources, given
 from narrowgauge.measure.calls import Caller
 from narrowgauge.record.branches import BranchesEntry, CastEntry, MismatchEntry, TriedEntry
 
@@ -66,12 +66,12 @@ def broken_splits(entry: BranchesEntry | None, level: int) -> frozenset[str]:
 
     Conditions are tried on few levels and hold for all of them.
     """
-    found = [] if entry is None else entry.mismatches
-    return frozenset(
-        one.arm
-        for one in found
-        if one.splits == "not admissible" and (one.condition != "branches" or one.level == level)
-    )
+    if entry is None:
+        return frozenset()
+    refused = [one for one in entry.mismatches if one.splits == "not admissible"]
+    return frozenset(entry.raised) | {
+        one.arm for one in refused if one.condition != "branches" or one.level == level
+    }
 
 
 class _Check:
@@ -93,6 +93,7 @@ class _Check:
         self._mismatches: list[MismatchEntry] = []
         self._casts: Counter[Place | None] = Counter()
         self._remarks: list[str] = []
+        self._raised: dict[str, str] = {}
 
     def entry(self) -> BranchesEntry:
         """Compare, vary, and return all of it."""
@@ -100,8 +101,10 @@ class _Check:
         if self._named:
             self._check_functions()
         for arm in self._formats:
-            for level, problem in self._arm(arm):
-                self._remarks.append(f"level {level}, arm {arm}: {raised(problem)}")
+            try:
+                self._arm(arm)
+            except BranchError as problem:
+                self._raised[arm] = said(problem)
         lines = sorted(self._casts.items(), key=lambda item: (item[0] is None, item[0]))
         return BranchesEntry(
             low=low.source.run,
@@ -109,6 +112,7 @@ class _Check:
             tried=list(self._tried.values()),
             mismatches=self._mismatches,
             casts=[_line(self._file, place, count) for place, count in lines],
+            raised=self._raised,
             remarks=list(dict.fromkeys(self._remarks)),
         )
 
@@ -139,8 +143,8 @@ class _Check:
         for name in before | found:
             same_bits(name, before, found, level, NOT_IDENTICAL)
 
-    def _arm(self, arm: str) -> Iterator[tuple[int, BaseException]]:
-        """Try one format; yield what a function raises in it, with the level: no scheme of the format survives that."""
+    def _arm(self, arm: str) -> None:
+        """Try one format; raises BranchError for what a function raises in it, which no split of it survives."""
         ladder = self._file.ladder
         tasks: list[tuple[int, Callable[[], None]]] = []
         for wide in self._wides(arm) if self._named else ():
@@ -154,11 +158,10 @@ class _Check:
         varied = (0,) if self._file.command is not None else (finer, 0)
         tasks += [(level, partial(self._vary, arm, level)) for level in dict.fromkeys(varied)]
         for level, task in tasks:
-            with kept_apart(level, arm) as kept:
+            try:
                 task()
-            if kept.problem is not None:
-                yield level, kept.problem
-                return
+            except DispatchError as problem:
+                raise type(problem)(f"level {level}, arm {arm}: {said(problem)}") from None
 
     def _wides(self, arm: str) -> tuple[str | None, ...]:
         """Return the wide formats that a correction depends on; an emulated one's low part depends on none."""
@@ -257,9 +260,9 @@ class _Check:
         """Run a kernel that draws for itself twice on the same tape, which fixes the number of paths."""
         for source in dict.fromkeys(self._sources):
             first = Branch(source, REFERENCE, rows=self._rows)
-            first.fine(draws, level)
+            first.taped(draws, level, coupled=False)
             branch = Branch(source, arm, rows=self._rows)
-            before, after = branch.fine(draws, level), branch.fine(draws, level)
+            (before,), (after,) = (branch.taped(draws, level, coupled=False) for _ in range(2))
             self._try(arm, level, varied=draws.paths)
             for name, values in before.items():
                 if differs(values, after[name]).any():

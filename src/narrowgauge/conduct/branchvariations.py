@@ -20,10 +20,9 @@ from narrowgauge.conduct.branchcauses import Run, follow
 from narrowgauge.conduct.firstdifference import Located, first_difference
 from narrowgauge.conduct.tracing import MOST_PATHS, Trace
 from narrowgauge.conduct.tracingrepeats import repeated
-from narrowgauge.errors import DispatchError, KernelError, NarrowgaugeError
+from narrowgauge.errors import DispatchError, KernelError, NarrowgaugeError, said
 from narrowgauge.judge.branches import Doubles, differs
-from narrowgauge.kernel.raised import kept_apart
-from narrowgauge.measure.branchruns import ORDERS, Branch, Given, Order
+from narrowgauge.measure.branchruns import ORDERS, Branch, BranchError, Given, Order
 from narrowgauge.measure.calls import Quantities
 from narrowgauge.record.branches import Condition
 
@@ -110,34 +109,37 @@ class _Variations:
         yield from self._compared("repeat", "a second call", again)
 
     def _threads(self) -> Iterator[Found]:
-        """Two calls at once: of one copy where the function rounds for itself, as deployed code does; else of two."""
-        gate = threading.Barrier(THREADS)
+        """Two calls at once, on the paths as they are and the other way round.
 
-        def calls() -> list[Quantities]:
-            run, branch = self._run, self._branch
-            if not self._own:
-                branch = Branch(run.source, run.arm, run.wide, rows=run.rows)
-            branch.wide_draws(self._draws)
+        Of one copy where the function rounds for itself, as deployed code would; else of one copy each.
+        """
+        run, gate = self._run, threading.Barrier(THREADS)
+        backwards = self._draws.of(slice(None, None, -1))
+        alone = self._attempt("paths the other way round", lambda: self._branch.on(backwards, run.level))
+        if alone is None:
+            return
+
+        def calls(draws: Given) -> list[Quantities]:
+            shared = self._own and run.wide is None
+            branch = self._branch if shared else Branch(run.source, run.arm, run.wide, rows=run.rows)
             found = []
             for _ in range(self._rounds):
                 gate.wait()
-                found.append(branch.on_array(np.array(self._draws.narrow), run.level))
+                found.append(branch.on(draws, run.level))
             return found
 
-        def together() -> list[Quantities]:
+        def together() -> list[list[Quantities]]:
             with ThreadPoolExecutor(THREADS) as pool:
-                try:
-                    waiting = [pool.submit(_guarded, gate, calls) for _ in range(THREADS)]
-                    return [one for job in waiting for one in job.result()]
-                finally:
-                    gate.abort()
+                waiting = [pool.submit(_guarded, gate, partial(calls, draws)) for draws in (self._draws, backwards)]
+                return [job.result() for job in waiting]
 
         found = self._attempt("two threads at once", together)
-        for results in found or ():
-            differing = list(self._compared("threads", "two threads at once", results))
-            if differing:
-                yield from differing
-                return
+        for before, results in zip((self._base, alone), found or (), strict=False):
+            for after in results:
+                differing = list(self._compared("threads", "two threads at once", after, before))
+                if differing:
+                    yield from differing
+                    return
 
     def _batch(self, paths: int) -> Iterator[Found]:
         """Run the first and the last `paths` of a block alone; where they differ, all of it in calls of so many."""
@@ -205,24 +207,27 @@ class _Variations:
             located, _ = self._where(one.quantity, kept.tolist(), draws)
             yield replace(one, located=located)
 
-    def _compared(self, condition: Condition, detail: str, found: Mapping[str, Doubles] | None) -> Iterator[Found]:
-        for name, before in self._base.items():
+    def _compared(
+        self,
+        condition: Condition,
+        detail: str,
+        found: Mapping[str, Doubles] | None,
+        base: Mapping[str, Doubles] | None = None,
+    ) -> Iterator[Found]:
+        for name, before in (base or self._base).items():
             after = None if found is None else found.get(name)
             if after is not None and differs(before, after).any():
                 yield Found(condition=condition, detail=detail, quantity=name, before=before, after=after)
 
     def _attempt(self, what: str, call: Callable[[], T]) -> T | None:
         """Return what a call gives; where the function does not take that, say so and return None."""
-        run = self._run
-        problem: BaseException | None
         try:
-            with kept_apart(run.level, run.arm) as kept:
-                return call()
-            problem = kept.problem
-        except (DispatchError, KernelError) as error:
-            problem = error
-        self._remarks.append(f"{run.arm}: {what} could not be tried, {type(problem).__name__}: {problem}")
-        return None
+            return call()
+        except (BranchError, DispatchError, KernelError) as error:
+            problem = error.problem if isinstance(error, BranchError) else error
+            why = f"{type(problem).__name__}: {said(problem)}"
+            self._remarks.append(f"{self._run.arm}: {what} could not be tried, {why}")
+            return None
 
     def _where(
         self,
@@ -241,7 +246,7 @@ class _Variations:
             done = follow(run, self._draws, quantity, before)
             done = done and follow(run, draws, quantity, after, order=order, over_paths=paths is None)
             found = first_difference(before, after, form=FORMATS[run.arm]) if done else None
-        except NarrowgaugeError:  # a trace asks more of a function than a run; its results are there without
+        except (BranchError, NarrowgaugeError):  # a trace asks more of a function than a run
             return None, False
         if found is None or found.low is None or found.low.kind != "operation":
             return found, False

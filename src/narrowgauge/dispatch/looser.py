@@ -30,12 +30,13 @@ _MOST = 512  # results remembered
 class Manner:
     """How a line is computed.
 
-    `fused`: a product that feeds a sum is not rounded; of two, the `first` or the last; `across` lines, too. `wider`: all
-    intermediates of an expression in the format `wide`, float32 or float64, and rounded once. `only`: on one line alone.
+    `fused`: a product that feeds a sum is not rounded; of two, the first, or the last on the lines of `last`; `across`
+    lines, too. `wider`: all intermediates of an expression in the format `wide`, float32 or float64, and rounded once.
+    `only`: on one line alone.
     """
 
     kind: Literal["fused", "wider"]
-    first: bool = True
+    last: frozenset[Place | None] = frozenset()
     across: bool = False
     wide: Literal["float32", "float64"] = "float64"
     only: Place | None = None
@@ -53,14 +54,18 @@ class _Kept:
 
 
 class LooserSetting(Setting):
-    """A setting whose sums and products are those of a manner."""
+    """A setting whose sums and products are those of a manner.
 
-    __slots__ = ("_kept", "_manner")
+    `of_two` are the lines that added two products of which either could have been fused.
+    """
+
+    __slots__ = ("_kept", "_manner", "of_two")
 
     def __init__(self, *placed: Any, manner: Manner, **named: Any) -> None:
         super().__init__(*placed, **named)
         self.direct = {}
         self._manner = manner
+        self.of_two: dict[Place | None, None] = {}
         self._kept: dict[int, _Kept] = {}
 
     def operate(
@@ -99,7 +104,10 @@ class LooserSetting(Setting):
         if here and ufunc in (np.add, np.subtract):
             products = [place for place, carrier in enumerate(carriers) if self._parts(carrier)]
             if products:
-                place = products[0 if self._manner.first else -1]
+                line = self.where()
+                if len(products) > 1:
+                    self.of_two[line] = None
+                place = products[-1 if line in self._manner.last else 0]
                 (x, y), other = self._parts(carriers[place]), carriers[1 - place]
                 if ufunc is np.subtract:
                     x, other = (x, np.negative(other)) if place == 0 else (np.negative(x), other)

@@ -11,6 +11,8 @@ In an emulated correction casts are ignored, and counted by line.
 
 from __future__ import annotations
 
+from collections.abc import Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass, replace
 from functools import partial
 from typing import Any, Literal, NamedTuple
@@ -26,15 +28,17 @@ from narrowgauge.dispatch.copies import Maker, PrivateCopy, new_setting
 from narrowgauge.dispatch.looser import LooserSetting, Manner
 from narrowgauge.dispatch.setting import Observer
 from narrowgauge.draws.coarsen import Draws, coarse_draws, fine_draws
-from narrowgauge.errors import KernelError
+from narrowgauge.draws.tape import Tape
+from narrowgauge.errors import KernelError, said
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.branchlibrary import PairLibrary
 from narrowgauge.kernel.contract import arranged, described, evaluate_lying
 from narrowgauge.kernel.loading import KernelSource, branch_file, executing
 from narrowgauge.kernel.ownrounding import called_own
+from narrowgauge.kernel.raised import kept_apart
 from narrowgauge.measure.calls import Caller, Quantities
 
-__all__ = ["ORDERS", "Branch", "BranchSource", "Given", "Order", "branch_sources", "given", "laid"]
+__all__ = ["ORDERS", "Branch", "BranchError", "BranchSource", "Given", "Order", "branch_sources", "given", "its_own", "laid"]
 
 Part = Literal["low", "high"]
 Order = Literal["C", "Fortran", "strided", "reversed"]
@@ -52,7 +56,7 @@ class Given(NamedTuple):
         return Given(*(None if part is None else np.array(part[..., paths], order="C") for part in self))  # type: ignore[arg-type]
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class BranchSource:
     """A function of a split: where it comes from, and which part of its result counts, None for all of it.
 
@@ -105,11 +109,28 @@ def given(draws: Draws, narrow: str, wide: str | None, *, coupled: bool) -> tupl
     return Given(fine[0], fine[1]), None if coarse[0] is None else Given(coarse[0], coarse[1])
 
 
+class BranchError(Exception):
+    """What a function of a split raised of its own, in one format on one level."""
+
+    def __init__(self, problem: BaseException, level: int, arm: str) -> None:
+        super().__init__(f"level {level}, arm {arm}: {type(problem).__name__}: {said(problem)}")
+        self.problem = problem
+
+
+@contextmanager
+def its_own(level: int, arm: str) -> Iterator[None]:
+    """Let what a function raises leave as a BranchError, and what this program finds as `kept_apart` says."""
+    with kept_apart(level, arm) as kept:
+        yield
+    if kept.problem is not None:
+        raise BranchError(kept.problem, level, arm) from kept.problem
+
+
 class Branch(Caller):
-    """A function of a split in one format, with a private copy of its own; raises what making the copy raises.
+    """A function of a split in one format, with a private copy of its own.
 
     `wide` is the other format of a correction that rounds for itself. `manner`: its lines are computed as a compiler
-    may, which takes an emulated function.
+    may, which takes an emulated function. Making it and calling it raise BranchError for what the function raises.
     """
 
     def __init__(
@@ -127,7 +148,8 @@ class Branch(Caller):
         casts = source.part is not None and source.rounds == "emulated"
         further: dict[str, Any] = {"casts": casts} if kind is None else {"casts": True, "kind": kind}
         made: Maker = partial(new_setting, **further)
-        super().__init__(source.file, source.source, arithmetic_named(narrow), observer, rows=rows, made=made)
+        with its_own(0, narrow):
+            super().__init__(source.file, source.source, arithmetic_named(narrow), observer, rows=rows, made=made)
 
     def wide_draws(self, draws: Given) -> None:
         """Let the calls that follow have the wide ones of these draws."""
@@ -137,6 +159,19 @@ class Branch(Caller):
         """Return the quantities on draws that are rounded already, which stay as they are."""
         self.wide_draws(draws)
         return self.on_array(np.array(draws.narrow), level)
+
+    def on_array(self, drawn: Floats, level: int) -> Quantities:
+        """Return the quantities on rounded draws, which the function may write into."""
+        with its_own(level, self._arithmetic.format.name):
+            return super().on_array(drawn, level)
+        raise AssertionError("what it raises is raised")
+
+    def taped(self, tape: Tape, level: int, *, coupled: bool) -> list[Quantities]:
+        """Return the quantities of a function that draws for itself, on the fine and on the coarse path."""
+        with its_own(level, self._arithmetic.format.name):
+            fine = self.fine(tape, level, coarse_follows=coupled)
+            return [fine, self.coarse(tape, level)] if coupled else [fine]
+        raise AssertionError("what it raises is raised")
 
     def typed(self, draws: Given) -> tuple[npt.NDArray[Any], npt.NDArray[Any] | None]:
         """Return draws as the function gets them: in the order of its layout, in its types where it rounds for itself."""
@@ -158,16 +193,17 @@ class Branch(Caller):
         low, wide = self.typed(draws)
         file, paths = self.source.file, draws.narrow.shape[-1]
         step, block = file.ladder.step_size(level), laid(low, order)
-        if self._own is None:
-            with executing():
-                return evaluate_lying(self.copy, block, step, file.keywords(), paths, over_paths=over_paths)
-        self._wider.typed = None if wide is None else laid(wide, order)
-        try:
-            return called_own(
-                self.copy, block, paths, form=self._arithmetic.format, step=step, keywords=file.keywords()
-            )
-        finally:
-            self._wider.typed = None
+        form = self._arithmetic.format
+        with its_own(level, form.name):
+            if self._own is None:
+                with executing():
+                    return evaluate_lying(self.copy, block, step, file.keywords(), paths, over_paths=over_paths)
+            self._wider.typed = None if wide is None else laid(wide, order)
+            try:
+                return called_own(self.copy, block, paths, form=form, step=step, keywords=file.keywords())
+            finally:
+                self._wider.typed = None
+        raise AssertionError("what it raises is raised")
 
     def _copied(
         self, kernel: KernelSource, arithmetic: Arithmetic | None, observer: Observer | None, made: Maker

@@ -90,11 +90,15 @@ class CastEntry(Entry, frozen=True, kw_only=True):
 
 
 class BranchesEntry(Entry, frozen=True, kw_only=True):
-    """Which functions are the branches, what was tried, what differed, which casts were ignored, what could not be tried."""
+    """Which functions are the branches, what was tried, what differed, which casts were ignored, what could not be tried.
+
+    `raised` holds, by format, what a function raised in it.
+    """
 
     low: str
     correction: str
     tried: list[TriedEntry]
     mismatches: list[MismatchEntry]
     casts: list[CastEntry]
+    raised: dict[str, str]
     remarks: list[str]

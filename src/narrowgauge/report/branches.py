@@ -38,6 +38,7 @@ def branch_lines(entry: BranchesEntry, record: AuditRecord | None) -> list[str]:
     if entry.casts:
         places = joined(f"{clean(one.file)}:{one.line}" for one in entry.casts if one.file is not None)
         lines.append(f"Casts of the correction that were ignored, since the audit chooses its formats: {places}.")
+    lines += [f"Not compared in {clean(arm)}, since a branch raised: {clean(what)}" for arm, what in entry.raised.items()]
     return [*lines, *map(clean, entry.remarks)]
 
 
