@@ -49,7 +49,7 @@ def test_a_split_whose_branches_differ_is_not_admissible(tmp_path: Path) -> None
 
 
 def test_a_mismatch_within_budget_is_said_and_the_audit_goes_on(tmp_path: Path) -> None:
-    """A target so wide that the interval of the bias lies inside the share of every level; without the key it does not."""
+    """A target so wide that the interval of the bias lies inside every share; without the key that is no help."""
     source, _ = defective("reordered sum")
     record = audited(tmp_path, source, "1.0", allow='"within budget"')
     assert record.branches is not None

@@ -168,4 +168,3 @@ def output(dB, h, *, start, level, reversion, volatility, limit):
         q = q + (reversion * h * (level - water) + volatility * np.sqrt(water) * db)
     return {"output": total / (len(dB) * h)}
 """
-

@@ -52,7 +52,7 @@ def test_an_empty_table_names_nothing(tmp_path: Path) -> None:
     ("text", "message"),
     [
         ('low = "model"', f'branches.low: "model" does not end in ":" and the name of a function; accepted: {RUN}'),
-        ('correction = 7', f"branches.correction: 7 is an integer; accepted: {RUN}"),
+        ("correction = 7", f"branches.correction: 7 is an integer; accepted: {RUN}"),
         ('rounds = "up"', 'branches.rounds: "up" is not accepted; accepted: "emulated" or "itself"'),
         (
             'rounds = "itself"',

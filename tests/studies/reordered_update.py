@@ -1,9 +1,9 @@
 """A reordered sum: what a mismatch of two branches does to the estimate of a split, level by level.
 
-Run as a program it writes reports/reordered_update.md: geometric Brownian motion (r = .05, s = .2, T = 1, S_0 = 1, Euler)
-in float16. The low branch adds drift and noise to the path as S + (r h S + s S dW), the correction as
-(S + r h S) + s S dW: the same in real numbers. Once r h S is below half a unit in the last place of S, the second way
-loses it. The target is an RMSE of 0.002, and its share of the bias of a level is a quarter of that over nine levels.
+Run as a program it writes reports/reordered_update.md: geometric Brownian motion (r = .05, s = .2, T = 1, S_0 = 1,
+Euler) in float16. The low branch adds drift and noise to the path as S + (r h S + s S dW), the correction as (S + r h
+S) + s S dW: the same in real numbers. Once r h S is below half a unit in the last place of S, the second way loses it.
+The target is an RMSE of 0.002, and its share of the bias of a level is a quarter of that over nine levels.
 """
 
 from __future__ import annotations
@@ -70,7 +70,9 @@ def main() -> None:
     lines += ["| level | paths that differ | bias | its 99% interval | bias over the target RMSE |", "|---" * 5 + "|"]
     for level, (share, one) in mismatches(LEVELS, PATHS).items():
         interval = f"{one.low:.3g} to {one.high:.3g}"
-        lines.append(f"| {level} | {100 * share:.1f}% | {one.estimate:.3g} | {interval} | {abs(one.estimate) / RMSE:.3g} |")
+        lines.append(
+            f"| {level} | {100 * share:.1f}% | {one.estimate:.3g} | {interval} | {abs(one.estimate) / RMSE:.3g} |"
+        )
         print(lines[-1], flush=True)
     report = Path(__file__).parents[2] / "reports" / "reordered_update.md"
     report.write_text("\n".join(lines) + "\n", encoding="utf-8")

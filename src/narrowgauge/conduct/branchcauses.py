@@ -1,4 +1,4 @@
-"""Why two runs of branches differ: the first operation in which they part, and whether a compiler's liberty explains it."""
+"""Why two branches differ: the first operation in which they part, and whether a compiler's liberty explains it."""
 
 from __future__ import annotations
 
@@ -87,9 +87,7 @@ class Causes:
         return "fused multiply-add" if manner.kind == "fused" else f"wider intermediates, in {manner.wide}"
 
 
-def follow(
-    run: Run, draws: Given, quantity: str, trace: Trace, *, order: Order = "C", over_paths: bool = True
-) -> bool:
+def follow(run: Run, draws: Given, quantity: str, trace: Trace, *, order: Order = "C", over_paths: bool = True) -> bool:
     """Run a function once more and keep all that it computes in a trace; whether that could be done.
 
     It cannot for a library, a command, or a kernel that is run path by path.
@@ -103,9 +101,7 @@ def follow(
             branch.wide_draws(draws)
             file = source.file
             given = laid(branch.typed(draws)[0], order)
-            result = run_traced(
-                branch.copy, given, file.ladder.step_size(run.level), trace=trace, **file.keywords()
-            )
+            result = run_traced(branch.copy, given, file.ladder.step_size(run.level), trace=trace, **file.keywords())
             trace.gave(np.asarray(quantities_of(result)[quantity]))
             if source.part is not None:
                 _keep_what_leads(trace)
@@ -159,17 +155,15 @@ def located(low: Run, correction: Run, draws: Given, quantity: str) -> Located |
     return first_difference(*traces, form=FORMATS[low.arm]) if all(done) else None
 
 
-def narrow_down(
-    causes: Causes, low: Run, correction: Run, case: Case, quantity: str, found: Located | None
-) -> None:
+def narrow_down(causes: Causes, runs: tuple[Run, Run], case: Case, quantity: str, found: Located | None) -> None:
     """Leave of the causes what makes every path of one function that of the other in this case, too.
 
-    Each function with a source in Python is emulated anew with products fused into its sums, or with wider intermediates
-    within an expression, everywhere or where the two were `found` to part, and held against the results of the other
-    one, all bits, also on paths that agree as it is. A function whose own bits are not those of its emulation, since it
-    casts to formats of its choice, is not asked.
+    Each function with a source in Python is emulated anew with products fused into its sums, or with wider
+    intermediates within an expression, everywhere or where the two were `found` to part, and held against the results
+    of the other one, all bits, also on paths that agree as it is. A function whose own bits are not those of its
+    emulation, since it casts to formats of its choice, is not asked.
     """
-    draws = Given(case.draws.narrow, None)
+    (low, correction), draws = runs, Given(case.draws.narrow, None)
     sides = ((low, case.low, case.correction), (correction, case.correction, case.low))
     usual = [run.source.python and _gives(run, draws, quantity, None, own) for run, own, _ in sides]
     sides_found = (None, None) if found is None else (found.low, found.correction)

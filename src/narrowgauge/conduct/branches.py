@@ -1,8 +1,8 @@
 """Whether the two branches of a split cancel to the bit, before anything is measured.
 
 The low branch run alone must give the numbers that the low part of the correction gives on the same draws: that is the
-cheap and sufficient condition for both to have one mean. Where [branches] names two functions they are compared on every
-level; and each function is held against itself with other paths, in other layouts of memory, and in two threads.
+cheap and sufficient condition for both to have one mean. Where [branches] names two functions they are compared on
+every level; and each function is held against itself with other paths, in other layouts of memory, and in two threads.
 """
 
 from __future__ import annotations
@@ -69,9 +69,7 @@ def broken_splits(entry: BranchesEntry | None, level: int) -> frozenset[str]:
     if entry is None:
         return frozenset()
     refused = [one for one in entry.mismatches if one.splits == "not admissible"]
-    return frozenset(entry.raised) | {
-        one.arm for one in refused if one.condition != "branches" or one.level == level
-    }
+    return frozenset(entry.raised) | {one.arm for one in refused if one.condition != "branches" or one.level == level}
 
 
 class _Check:
@@ -135,7 +133,7 @@ class _Check:
                 raise AuditFileError(problem.source, key, problem.problem, problem.accepted) from None
 
     def _identical(self, source: BranchSource, plain: Caller) -> None:
-        """Raise KernelError unless float64 through the emulation gives plain NumPy's bits, as the trial asks of a kernel."""
+        """Raise KernelError unless float64 through the emulation gives plain NumPy's bits."""
         level = self._file.ladder.level_within(_STEPS)
         draws = self._runner.draws(level, 0, Purpose.IDENTITY, GRAIN)
         before = plain.fine(draws, level)
@@ -201,7 +199,7 @@ class _Check:
         low, correction = (comparer.run(side, case.level) for side in (0, 1))
         where = located(low, correction, case.followed(), name)
         if causes.left != []:
-            narrow_down(causes, low, correction, case, name, where)
+            narrow_down(causes, (low, correction), case, name, where)
         return where, case.differing
 
     def _explain(self, comparer: Comparer, causes: Causes) -> None:
@@ -272,8 +270,8 @@ class _Check:
                     )
                     self._mismatches.append(self._varied(run, one))
         self._remarks.append(
-            "A kernel that draws for itself gets its random numbers in the order in which it asks for them: batch sizes, "
-            "memory layouts, threads and the influence of paths on one another are not tried."
+            "A kernel that draws for itself gets its random numbers in the order in which it asks for them: batch "
+            "sizes, memory layouts, threads and the influence of paths on one another are not tried."
         )
 
     def _varied(self, run: Run, found: Found) -> MismatchEntry:

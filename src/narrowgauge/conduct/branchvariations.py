@@ -192,10 +192,9 @@ class _Variations:
         exchanged = []
         for part in self._draws:
             if part is not None:
-                part = np.array(part)
-                part[..., changed] = factor * part[..., others]
-            exchanged.append(part)
-        draws = Given(*exchanged)
+                exchanged.append(np.array(part))
+                exchanged[-1][..., changed] = factor * part[..., others]
+        draws = Given(exchanged[0], exchanged[1] if len(exchanged) > 1 else None)
         found = self._attempt("other draws on a few paths", lambda: self._branch.on(draws, self._run.level))
         if found is None:
             return
@@ -269,4 +268,3 @@ def _guarded(gate: threading.Barrier, calls: Callable[[], list[Quantities]]) -> 
     except BaseException:  # raised on; the other thread would wait for ever
         gate.abort()
         raise
-

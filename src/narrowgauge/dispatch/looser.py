@@ -1,9 +1,10 @@
 """Settings in which a line of a kernel is computed as a compiler may: products fused into sums, or wider intermediates.
 
 An operation is rounded as ever where its result leaves the expression: where it is stored, returned, or handed to
-anything but + - * / and a change of sign. Within the expression what it was made of is remembered, and the next operation
-starts from there. That is how C computes with products contracted or with excess precision, ISO/IEC 9899:2018, 5.2.4.2.2
-and 6.5 (recalled from memory); a Python expression is told by the instructions between two operations, of which none stores.
+anything but + - * / and a change of sign. Within the expression what it was made of is remembered, and the next
+operation starts from there. That is how C computes with products contracted or with excess precision, ISO/IEC
+9899:2018, 5.2.4.2.2 and 6.5 (recalled from memory); a Python expression is told by the instructions between two
+operations, of which none stores.
 """
 
 from __future__ import annotations

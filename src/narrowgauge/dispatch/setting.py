@@ -93,8 +93,8 @@ class Setting:
     """
 
     __slots__ = (
-        "_wrap", "allowed", "arithmetic", "casts", "direct", "draws", "faults", "files", "function", "observer", "paths",
-        "ufunc",
+        "_wrap", "allowed", "arithmetic", "casts", "direct", "draws", "faults", "files", "function", "observer",
+        "paths", "ufunc",
     )  # fmt: skip
 
     def __init__(

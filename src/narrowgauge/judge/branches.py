@@ -40,13 +40,13 @@ def wide_formats(file: AuditFile, narrow: str) -> tuple[str, ...]:
 
 def differs(here: Doubles, there: Doubles) -> npt.NDArray[np.bool_]:
     """Return where two results have other bits: zeros of two signs differ, NaN and NaN do not."""
-    return (here.view(np.int64) != there.view(np.int64)) & ~(np.isnan(here) & np.isnan(there))
+    return np.asarray((here.view(np.int64) != there.view(np.int64)) & ~(np.isnan(here) & np.isnan(there)))
 
 
 def ulps(here: Doubles, there: Doubles, form: Format) -> Doubles:
-    """Return how far two results are apart, in units in the last place of the larger one; infinite where one is not finite.
+    """Return how far two results are apart in ulps of the larger one; infinite where one of them is not finite.
 
-    For 2^e <= |x| < 2^(e + 1) that unit is 2^(e - p + 1), and never less than the smallest subnormal.
+    For 2^e <= |x| < 2^(e + 1) an ulp is 2^(e - p + 1), and never less than the smallest subnormal.
     """
     with np.errstate(all="ignore"):
         larger = np.maximum(np.abs(here), np.abs(there))
@@ -58,8 +58,8 @@ def ulps(here: Doubles, there: Doubles, form: Format) -> Doubles:
 def bias(mismatch: Series, differing: int, largest: float, alpha: float) -> Interval:
     """Return the mean of a mismatch with its interval at confidence 1 - alpha.
 
-    The jackknife over batches, where the paths that differ are many and none rules; else, since a sample of few does not
-    know what it misses, plus or minus twice the largest size seen times the exact binomial bound of their share.
+    The jackknife over batches, where the paths that differ are many and none rules; else, since a sample of few does
+    not know what it misses, plus or minus twice the largest size seen times the exact binomial bound of their share.
     """
     moments = mismatch.moments
     if mismatch.nonfinite or not math.isfinite(largest):

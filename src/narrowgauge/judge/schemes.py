@@ -93,7 +93,7 @@ class LevelJudgement:
 def judge_level(
     tally: LevelTally, file: AuditFile, alpha: float, broken: Collection[str] = frozenset()
 ) -> LevelJudgement:
-    """Judge every narrow arm on one level at confidence 1 - alpha; splits of the `broken` formats are not admissible."""
+    """Judge every narrow arm on one level at confidence 1 - alpha; no split of a `broken` format is admissible."""
     views = {name: _view(tally, file, name) for name in tally.quantities}
     court = _Court(tally=tally, file=file, alpha=alpha, views=views, broken=broken)
     arms = {quantity: {name: court.judge(quantity, name) for name in file.narrow} for quantity in views}

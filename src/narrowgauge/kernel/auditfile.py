@@ -24,7 +24,6 @@ from narrowgauge.kernel.auditparameters import check_parameter, passed, plain
 from narrowgauge.kernel.audittables import (
     RULES,
     TABLES,
-    BranchesTable,
     CommandTable,
     CostTable,
     DrawsTable,
@@ -42,7 +41,7 @@ from narrowgauge.kernel.audittables import (
     kind_of,
     shown,
 )
-from narrowgauge.kernel.branchestable import filled
+from narrowgauge.kernel.branchestable import BranchesTable, filled
 from narrowgauge.kernel.givenkeys import CHEAP, check_drawing, check_names, defaults_in_use, document, nearest, useless
 from narrowgauge.kernel.ownlimits import check_own
 from narrowgauge.kernel.owntables import with_run
@@ -111,7 +110,8 @@ class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
     @property
     def narrow(self) -> tuple[str, ...]:
         """The names of the arms that are judged: the narrow formats, then those with approximate draws."""
-        return (*self.formats.narrow, *(Arm(name, "approximate").name for name in (self.draws.formats if self.draws else ())))
+        cheap = self.draws.formats if self.draws else ()
+        return (*self.formats.narrow, *(Arm(name, "approximate").name for name in cheap))
 
     @property
     def foreign(self) -> bool:

@@ -77,7 +77,9 @@ def filled(table: BranchesTable, file: AuditFile) -> BranchesTable:
     if "split" not in formats.schemes:
         table.refuse("low", '"split" is not in formats.schemes, and nothing else has branches', "no [branches]")
     if table.allow is not None and file.target is None:
-        table.refuse("allow", "there is no [target], and so no budget for a mismatch", "no such key, or a table [target]")
+        table.refuse(
+            "allow", "there is no [target], and so no budget for a mismatch", "no such key, or a table [target]"
+        )
     if table.rounds is not None and table.low is None and table.correction is None:
         table.refuse("rounds", "[branches] names no function whose rounding it could be", "no such key")
     if table.symbol is not None and library is None:

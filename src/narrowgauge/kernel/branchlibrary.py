@@ -44,8 +44,8 @@ class PairLibrary(Library):
     def pair(self, narrow: Format, wide: Format) -> Callable[..., tuple[Columns, Columns]]:
         """Return the library's function for two formats as one of ((low, high), h, **parameters).
 
-        It returns the quantities of the low and of the high part by name, in the wide type. Raises KernelError where the
-        library reports an error.
+        It returns the quantities of the low and of the high part by name, in the wide type. Raises KernelError where
+        the library reports an error.
         """
         symbol, names = f"{self._table.symbol}_{narrow.name}_{wide.name}", self._table.outputs
         called = getattr(self._opened(), symbol)

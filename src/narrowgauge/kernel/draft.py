@@ -36,7 +36,7 @@ _TAKES_BY_NAME: tuple[tuple[str, re.Pattern[str]], ...] = (
 )
 _ELSEWHERE = ("kernel", "library", "command")  # written first, or in place of a Python function
 _OPTIONAL = ("target", "draws", "branches", "cost")
-_INSTEAD = ("draws.intervals", "draws.degree", "branches.library", "branches.symbol")  # not accepted beside the value shown for draws.approximate
+_INSTEAD = ("draws.intervals", "draws.degree", "branches.library", "branches.symbol")  # not beside what is shown
 _COUNTS = ("steps", "paths")  # what a kernel that draws for itself is told
 _STEP_NAMES = re.compile(r"h|dt|delta_?t?|.*step(_?size)?|time_?step|tau")
 

@@ -195,7 +195,9 @@ def _approximation(audit_file: AuditFile) -> KernelSource | None:
     table = KernelTable(run=draws.approximate, takes="uniforms")
     with _blaming("draws.approximate"):
         return find_kernel(
-            msgspec.structs.replace(audit_file, kernel=table, library=None, command=None, function=None, draws=None, branches=None)
+            msgspec.structs.replace(
+                audit_file, kernel=table, library=None, command=None, function=None, draws=None, branches=None
+            )
         )
 
 

@@ -38,7 +38,18 @@ from narrowgauge.kernel.ownrounding import called_own
 from narrowgauge.kernel.raised import kept_apart
 from narrowgauge.measure.calls import Caller, Quantities
 
-__all__ = ["ORDERS", "Branch", "BranchError", "BranchSource", "Given", "Order", "branch_sources", "given", "its_own", "laid"]
+__all__ = [
+    "ORDERS",
+    "Branch",
+    "BranchError",
+    "BranchSource",
+    "Given",
+    "Order",
+    "branch_sources",
+    "given",
+    "its_own",
+    "laid",
+]
 
 Part = Literal["low", "high"]
 Order = Literal["C", "Fortran", "strided", "reversed"]
@@ -46,7 +57,7 @@ ORDERS: tuple[Order, ...] = ("C", "Fortran", "strided", "reversed")
 
 
 class Given(NamedTuple):
-    """The same draws as carriers of the narrow and of the wide format, (steps, factors, paths); None where not asked."""
+    """The same draws as carriers of the narrow and of the wide format, (steps, factors, paths); None without one."""
 
     narrow: Floats
     wide: Floats | None
@@ -104,7 +115,9 @@ def given(draws: Draws, narrow: str, wide: str | None, *, coupled: bool) -> tupl
         arithmetic = None if name is None else arithmetic_named(name)
         fine.append(None if arithmetic is None else fine_draws(draws, arithmetic))
         last = fine[-1]
-        coarse.append(None if arithmetic is None or last is None or not coupled else coarse_draws(draws, last, arithmetic))
+        coarse.append(
+            None if arithmetic is None or last is None or not coupled else coarse_draws(draws, last, arithmetic)
+        )
     assert fine[0] is not None  # the narrow one
     return Given(fine[0], fine[1]), None if coarse[0] is None else Given(coarse[0], coarse[1])
 
@@ -174,7 +187,7 @@ class Branch(Caller):
         raise AssertionError("what it raises is raised")
 
     def typed(self, draws: Given) -> tuple[npt.NDArray[Any], npt.NDArray[Any] | None]:
-        """Return draws as the function gets them: in the order of its layout, in its types where it rounds for itself."""
+        """Return draws as the function gets them: in its layout's order, in its types where it rounds for itself."""
         layout, own = self.source.file.kernel.layout, self.source.rounds == "itself"
         form = self._arithmetic.format
         low = arranged(draws.narrow, layout)
@@ -269,4 +282,3 @@ def laid(block: npt.NDArray[Any], order: Order) -> npt.NDArray[Any]:
     if order == "reversed":
         return np.array(block[..., ::-1], order="C")[..., ::-1]
     return np.array(block, order="C")
-

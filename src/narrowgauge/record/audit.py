@@ -318,7 +318,8 @@ class RulesEntry(Entry, frozen=True, kw_only=True):
 class AuditRecord(Entry, frozen=True, kw_only=True):
     """The whole audit; parts that a later version fills are None.
 
-    `branches` is None where no scheme is a split. `draws` is there with [draws] alone, `canary` with a kernel that rounds for itself, `costs` where they are measured.
+    `branches` is None where no scheme is a split. `draws` is there with [draws] alone, `canary` with a kernel that
+    rounds for itself, `costs` where they are measured.
     """
 
     schema: str

@@ -30,7 +30,7 @@ class TriedEntry(Entry, frozen=True, kw_only=True):
 
 
 class PointEntry(Entry, frozen=True, kw_only=True):
-    """An operation of one branch: the line, and its values on an example path as text, since they need not be finite."""
+    """An operation of one branch: the line, and its values on an example path as text; they need not be finite."""
 
     kind: str
     file: str | None
@@ -52,11 +52,12 @@ class MismatchEntry(Entry, frozen=True, kw_only=True):
     """Results that are not the same bits, of one quantity in one format on one level.
 
     `condition` says what was compared: the two branches; or one of them, `function`, with itself in another number of
-    `paths` a call, another memory layout, in two threads at once, repeated, or with other paths changed; `detail` says in
-    which. `differing` of `paths` differ, by `ulps_largest` and in the median `ulps_median` units in the last place of the
-    format, None where that is not finite. `bias` is the mean of the mismatch in the unit of the quantity, `of_rmse` that
-    over the target. `explanation` is what explains all `explained` paths that were asked. `numpys_own`: NumPy itself gives
-    other bits for the same operation on the same values. `splits`: whether a split may be used in spite of it.
+    `paths` a call, another memory layout, in two threads at once, repeated, or with other paths changed; `detail` says
+    in which. `differing` of `paths` differ, by `ulps_largest` and in the median `ulps_median` units in the last place
+    of the format, None where that is not finite. `bias` is the mean of the mismatch in the unit of the quantity,
+    `of_rmse` that over the target. `explanation` is what explains all `explained` paths that were asked. `numpys_own`:
+    NumPy itself gives other bits for the same operation on the same values. `splits`: whether a split may be used in
+    spite of it.
     """
 
     arm: str
@@ -90,7 +91,7 @@ class CastEntry(Entry, frozen=True, kw_only=True):
 
 
 class BranchesEntry(Entry, frozen=True, kw_only=True):
-    """Which functions are the branches, what was tried, what differed, which casts were ignored, what could not be tried.
+    """Which functions are the branches, what was tried, differed, was ignored, and could not be tried.
 
     `raised` holds, by format, what a function raised in it.
     """

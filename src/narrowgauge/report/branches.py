@@ -38,7 +38,9 @@ def branch_lines(entry: BranchesEntry, record: AuditRecord | None) -> list[str]:
     if entry.casts:
         places = joined(f"{clean(one.file)}:{one.line}" for one in entry.casts if one.file is not None)
         lines.append(f"Casts of the correction that were ignored, since the audit chooses its formats: {places}.")
-    lines += [f"Not compared in {clean(arm)}, since a branch raised: {clean(what)}" for arm, what in entry.raised.items()]
+    lines += [
+        f"Not compared in {clean(arm)}, since a branch raised: {clean(what)}" for arm, what in entry.raised.items()
+    ]
     return [*lines, *map(clean, entry.remarks)]
 
 
@@ -70,8 +72,8 @@ def _tried(entry: BranchesEntry) -> Iterable[str]:
     for one in varied:
         conditions.setdefault(_conditions(one), []).append(one)
     for words, found in conditions.items():
-        arms = joined(dict.fromkeys(clean(one.arm) for one in found))
-        yield f"{arms} on {levels_named(one.level for one in found)} {words}"
+        names = joined(dict.fromkeys(clean(one.arm) for one in found))
+        yield f"{names} on {levels_named(one.level for one in found)} {words}"
 
 
 def _conditions(one: TriedEntry) -> str:
