@@ -41,6 +41,15 @@ CAUSES = {
         "float32", kernel("S = S * dw * S"), kernel("S = (S.astype(float) * dw * S).astype(S.dtype)"),
         "wider intermediate",
     ),
+    "sum wide, too": (
+        "float16", kernel("T = S + S * dw\nS = T * T"),
+        kernel("T = S.astype('f4') * dw + S\nS = (T * T).astype(S.dtype)"), "wider intermediate",
+    ),
+    "product wide, in a sum that does not feel it": (
+        "float16", kernel("P = 0.3 * dw\nT = P + 4096.0\nS = P * P"),
+        kernel("P = np.float16(0.3) * dw.astype('f4')\nT = (P + 4096.0).astype(S.dtype)\nS = (P * P).astype(S.dtype)"),
+        "wider intermediate",
+    ),
     "exponential": (
         "float16", kernel("S = S * np.exp(dw)"), kernel("S = (S * np.exp(dw.astype('f4'))).astype(S.dtype)"),
         "wider intermediate",
@@ -69,10 +78,7 @@ def test_an_emulated_difference_is_explained_by_neither():
 
 def test_one_path_that_rounds_otherwise_is_not_explained():
     """The rounded row with one path moved is no row of a fused multiply-add: every path has to agree."""
-    moved = kernel(
-        "up = np.where(np.arange(S.size) == 3, 1.01, 1.0).astype('f4')\nS = ((S.astype('f4') * dw + S) * up)\n"
-        "S = S.astype(dw.dtype)"
-    )
+    moved = kernel("S = S.astype('f4') * dw + S\nS[3] *= 2\nS = S.astype(dw.dtype)")
     one, two = traces(itself, LOW, moved, "float16")
     found = first_difference(one, two, form=FORMATS["float16"])
     assert explains(found, one, two, FORMATS["float16"]) == "wider intermediate"

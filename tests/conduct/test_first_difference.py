@@ -24,6 +24,8 @@ MOVED = kernel(
     """
 )
 
+SELECT = "S = np.where(dw > 0, S, T)"
+
 # name: run, format, low branch, correction branch, kind
 DEFECTS = {
     "reordered sum": (
@@ -71,8 +73,12 @@ DEFECTS = {
         kernel("S = S + S * 0.353 * dw  # here"), "constant",
     ),
     "in one arm of a selection": (
-        emulated, "float16", kernel("T = S + S * dw\nT = T + (0.5 * T - 0.3)  # here\nS = np.where(dw > 0, S, T)"),
-        kernel("T = S + S * dw\nT = (T + 0.5 * T) - 0.3  # here\nS = np.where(dw > 0, S, T)"), "operation",
+        emulated, "float16", kernel(f"T = S + S * dw\nT = T + (0.5 * T - 0.3)  # here\n{SELECT}"),
+        kernel(f"T = S + S * dw\nT = (T + 0.5 * T) - 0.3  # here\n{SELECT}"), "operation",
+    ),
+    "in one arm of a selection, beside others": (
+        emulated, "float16", kernel(f"H = dw * dw - 0.1\nT = S + S * dw\nT = T + (0.5 * T - 0.3)  # here\n{SELECT}"),
+        kernel(f"H = dw * dw + 0.1\nT = S + S * dw\nT = (T + 0.5 * T) - 0.3  # here\n{SELECT}"), "operation",
     ),
     "under a mask": (
         emulated, "float16", kernel("S = S * dw\nup = dw > 0\nS[up] = S[up] + (S[up] * 0.3 - dw[up])  # here"),
@@ -160,7 +166,9 @@ def test_the_path_is_numbered_as_in_the_run():
     differing = np.flatnonzero(np.not_equal(*(trace.values(trace.returned[0]) for trace in whole)))
     kept = differing[::-1]
     few = [emulated(source, draws, "float16", name, kept) for source, name in ((low, "low.py"), (correction, "c.py"))]
-    assert first_difference(*few, form=FORMATS["float16"]).path == kept[0]
+    found = first_difference(*few, form=FORMATS["float16"])
+    assert found.path == kept[0]
+    assert found.ulps is None  # two sums of other numbers
 
 
 @pytest.mark.parametrize("run", [emulated, itself])

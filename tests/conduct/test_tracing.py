@@ -182,14 +182,16 @@ def test_a_difference_before_the_limit_is_still_located(monkeypatch):
 
 def test_where_the_traced_class_is_lost_no_line_is_blamed():
     """What is computed on a copy through bytes is not seen: the trace says where it comes back, and names no line."""
-    lost = "T, U = (np.frombuffer(one.tobytes(), one.dtype) for one in (S, dw))\nT = {0}\nS = T * dw  # here"
-    low, other = (kernel(lost.format(text)) for text in ("T * T + U * T", "T * (T + U)"))
+    lost = "H = {1}\nT, U = (np.frombuffer(one.tobytes(), one.dtype) for one in (S, dw))\nT = {0}\nS = T * dw  # here"
+    beside = "S * dw * dw", "dw + dw"
+    texts = zip(("T * T + U * T", "T * (T + U)"), beside, strict=True)
+    low, other = (kernel(lost.format(*pair)) for pair in texts)
     draws = normals("float16")
     pair = [itself(source, draws, "float16", name) for source, name in ((low, "low.py"), (other, "c.py"))]
     found = first_difference(*pair, form=FORMATS["float16"])
     assert found.kind == "untraced"
     assert places(found) == [("low.py", marked(low)[0]), ("c.py", marked(other)[0])]
-    assert found.incomplete == "the trace is incomplete: what is met at low.py:9 was computed out of its sight"
+    assert found.incomplete == "the trace is incomplete: what is met at low.py:10 was computed out of its sight"
 
 
 def test_a_list_of_numbers_that_was_computed_on_is_lost_and_one_that_was_not_is_known():

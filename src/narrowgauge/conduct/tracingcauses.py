@@ -82,8 +82,6 @@ def _is_wider(side: Side | None, trace: Trace, other: Trace, form: Format) -> bo
     if not isinstance(ufunc, np.ufunc) or ufunc.nin != len(operation.operands) or ufunc.nout != 1:
         return False
     for row in operation.results[0].keys:
-        if not arithmetic_named(form.name).holds(trace.rows[row]):
-            continue
         operands = [_row(trace, operand, operation, row) for operand in operation.operands]
         if any(operand is None for operand in operands):
             continue
