@@ -198,6 +198,19 @@ def test_what_is_computed_beside_is_not_named():
     assert places(found) == [("low.py", 7), ("correction.py", 8)]
 
 
+@pytest.mark.parametrize("run", [emulated, itself])
+@pytest.mark.parametrize("select", ["", "; S = np.where(dw > 0.1, S, 0.3)"])
+def test_the_other_half_of_a_correction_does_not_hide_the_defect_of_this_one(run, select):
+    """Where both halves run in one arithmetic the high half has the rows of the low branch, and leads elsewhere."""
+    low = kernel(f"S = S + (0.05 * h * S + 0.2 * S * dw){select}  # here")
+    high = f"H = H + (0.05 * h * H + 0.2 * H * dw){select.replace('S', 'H')}"
+    half = f"S = (S + 0.05 * h * S) + 0.2 * S * dw{select}  # here"
+    correction = kernel(f"{high}\n{half}", before="H = S\n")
+    found = located(run, low, correction, "float16")
+    assert places(found) == [("low.py", marked(low)[0]), ("correction.py", marked(correction)[0])]
+    assert found.kind == "operation"
+
+
 def test_traces_of_other_numbers_of_paths_are_not_compared():
     """The same paths must be kept on both sides."""
     one, two = (emulated(PLAIN, normals("float16", paths=paths), "float16", "low.py") for paths in (8, 9))

@@ -8,6 +8,7 @@ from typing import Literal, NamedTuple
 import numpy as np
 
 from narrowgauge.conduct.tracing import Kept, Key, Trace
+from narrowgauge.dispatch.setting import Place
 
 __all__ = ["Found", "Kind", "searched"]
 
@@ -25,21 +26,32 @@ class Found(NamedTuple):
     strange: Key | None
 
 
+class _Led(NamedTuple):
+    """Rows, and numbers of operations, that lead to what a run returned."""
+
+    rows: set[Key]
+    numbers: frozenset[int]
+
+
 def searched(low: Trace, correction: Trace) -> list[Found | None]:
     """Return where each of two runs parts from the other, None where the other has everything that it returned.
 
-    Of a run that told no quantity everything counts.
+    Of a run that told no quantity everything counts. Two runs of the same lines are compared by position.
     """
-    judges = _ByPosition.of(low, correction) or (_ByValue(low, correction), _ByValue(correction, low))
-    return [judge.first() for judge in judges]
+    same_lines = bool(low.operations) and _lines(low) == _lines(correction)
+    judge = _ByPosition if same_lines else _ByValue
+    led = _leading(low), _leading(correction)
+    return [judge(low, correction, led).first(), judge(correction, low, led[::-1]).first()]
 
 
 class _Judge:
     """One side of a comparison: which of its rows the other side does not have."""
 
-    def __init__(self, trace: Trace, other: Trace) -> None:
+    def __init__(self, trace: Trace, other: Trace, led: tuple[_Led, _Led]) -> None:
         self.trace = trace
         self.other = other
+        self._numbers = led[0].numbers
+        self._there = led[1].rows
 
     def strange(self, number: int, operand: Kept, place: int) -> list[Key]:
         """Return the rows of operand number `place` of an operation that the other side does not have."""
@@ -66,6 +78,8 @@ class _Judge:
     def _forwards(self, before: int) -> Iterator[Found]:
         """Yield the operations, in order, whose operands the other side has and whose results it has not."""
         for number in range(before):
+            if number not in self._numbers:
+                continue
             rows = self.differing(number)
             if rows and not self._strange(number):
                 yield Found(number, "operation", rows[0], None)
@@ -108,35 +122,12 @@ class _Judge:
         return Found(taken, kind, None, key)
 
     def _parts(self, key: Key, before: int) -> list[Key]:
-        """Return the rows of which a selection (`np.where`, a mask) can have made a row, if the other side lacks one.
-
-        Of the operations just before, those that cover most of its paths, in turn. None if the other side has all.
-        """
-        trace = self.trace
-        row, open_ = trace.rows[key], np.ones(len(trace.kept), bool)
-        if key in trace.draws_keys or row.shape != trace.kept.shape or len(row) == 1:
-            return []
-        rows = list(dict.fromkeys(
-            made for operation in trace.operations[max(before - _NEAR, 0) : before]
-            for kept in (*operation.operands, *operation.results)
-            if kept.axis is not None for made in kept.keys if made != key
-        ))  # fmt: skip
-        if not rows:
-            return []
-        same = np.array([trace.values(made) for made in rows]).view(np.int64) == row.view(np.int64)
-        parts: list[Key] = []
-        while open_.any():
-            covered = (same & open_).sum(axis=1)
-            best = int(np.argmax(covered))
-            if covered[best] == 0:
-                break
-            parts.append(rows[best])
-            open_ &= ~same[best]
-        return [part for part in parts if self.lacks(part)]
+        """Return the rows of which a selection can have made a row and that the other side does not have."""
+        return [part for part in _selected(self.trace, key, before)[0] if self.lacks(part)]
 
     def lacks(self, key: Key) -> bool:
-        """Whether the other side does not have a row anywhere."""
-        return key not in self.other.rows
+        """Whether the other side does not have a row in what leads to what it returned."""
+        return key not in self._there
 
 
 class _ByValue(_Judge):
@@ -159,12 +150,6 @@ class _ByValue(_Judge):
 class _ByPosition(_Judge):
     """Operations correspond to those of the other side with the same number, of the same line and name."""
 
-    @classmethod
-    def of(cls, low: Trace, correction: Trace) -> tuple[_ByPosition, _ByPosition] | None:
-        """Return the judges of two runs of the same lines in the same order, None for others."""
-        mine, theirs = ([(one.place, one.name) for one in trace.operations] for trace in (low, correction))
-        return (cls(low, correction), cls(correction, low)) if mine and mine == theirs else None
-
     def strange(self, number: int, operand: Kept, place: int) -> list[Key]:
         """Return the rows of an operand that are others on the other side."""
         return _others(operand, self.other.operations[number].operands, place)
@@ -184,3 +169,65 @@ def _others(mine: Kept, theirs: Sequence[Kept], place: int) -> list[Key]:
     if place >= len(theirs) or len(mine.keys) != len(theirs[place].keys):
         return list(mine.keys)
     return [key for key, other in zip(mine.keys, theirs[place].keys, strict=True) if key != other]
+
+
+def _lines(trace: Trace) -> list[tuple[Place | None, str]]:
+    return [(operation.place, operation.name) for operation in trace.operations]
+
+
+def _leading(trace: Trace) -> _Led:
+    """Return what leads to what a run returned: the other half of a correction can have the rows of this one.
+
+    All that the run has where some row came about in a way that does not show.
+    """
+    rows, numbers = set(trace.draws_keys), set[int]()
+    pending = [(key, len(trace.operations)) for key in trace.returned]
+    seen = set(pending)
+    whole = _Led(set(trace.rows), frozenset(range(len(trace.operations))))
+    if trace.full or not trace.returned:
+        return whole
+    while pending:
+        key, before = pending.pop()
+        rows.add(key)
+        number = next((made for made in reversed(trace.made.get(key, ())) if made < before), None)
+        if number is not None:
+            operation = trace.operations[number]
+            numbers.add(number)
+            rows.update(*(reading for kept in operation.results for reading in kept.readings))
+            further = [(row, number) for kept in operation.operands for reading in kept.readings for row in reading]
+        elif key in trace.draws_keys or key in trace.constants or len(trace.rows[key]) == 1:
+            continue
+        else:
+            parts, complete = _selected(trace, key, before)
+            if not complete:
+                return whole
+            further = [(part, before) for part in parts]
+        pending += [one for one in dict.fromkeys(further) if one not in seen]
+        seen.update(further)
+    return _Led(rows, frozenset(numbers))
+
+
+def _selected(trace: Trace, key: Key, before: int) -> tuple[list[Key], bool]:
+    """Return the rows of which a selection (`np.where`, a mask) can have made a row, and whether they make all of it.
+
+    Of the operations just before, those that cover most of its paths, in turn.
+    """
+    row, open_ = trace.rows[key], np.ones(len(trace.kept), bool)
+    parts: list[Key] = []
+    if key in trace.draws_keys or row.shape != trace.kept.shape or len(row) == 1:
+        return parts, False
+    near = trace.operations[max(before - _NEAR, 0) : before]
+    kept = [one for operation in near for one in (*operation.operands, *operation.results) if one.axis is not None]
+    rows = list(dict.fromkeys(made for one in kept for made in one.keys if made != key))
+    rows += [constant for constant in trace.constants if len(trace.rows[constant]) == 1]
+    if not rows:
+        return parts, False
+    same = np.array([trace.values(made) for made in rows]).view(np.int64) == row.view(np.int64)
+    while open_.any():
+        covered = (same & open_).sum(axis=1)
+        best = int(np.argmax(covered))
+        if covered[best] == 0:
+            return parts, False
+        parts.append(rows[best])
+        open_ &= ~same[best]
+    return parts, True
