@@ -80,7 +80,7 @@ class TestDefaults:
         expected["kernel"]["layout"] = "factors, paths, steps"
         del expected["kernel"]["rounds"], expected["cost"]["measured"]  # which no emulated kernel has otherwise
         assert audit_file.asked() == expected
-        absent = {"library", "command", "draws"}
+        absent = {"library", "command", "draws", "branches"}
         assert list(audit_file.asked()) == [*(n for n in ALL_TABLES.split(", ") if n not in absent), "assumed"]
         assert audit_file.worthwhile == 1.0
 

@@ -137,7 +137,7 @@ class _Court:
         file: AuditFile,
         alpha: float,
         views: Mapping[str, LevelView],
-        broken: Collection[str],
+        broken: Collection[str] = frozenset(),
     ) -> None:
         self._tally, self._file, self._alpha, self._views, self._broken = tally, file, alpha, views, broken
         self._admissions: dict[tuple[Scheme, bool], Admission] = {}

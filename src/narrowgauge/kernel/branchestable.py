@@ -19,12 +19,12 @@ __all__ = ["BRANCH_MEANINGS", "BRANCH_VALUES", "BranchesTable", "defaults_of", "
 # What a draft says of each key, and the values that it shows for keys without a default.
 BRANCH_MEANINGS: dict[str, str] = {
     "branches.low": "no default but kernel.run; file.py:function that computes the many cheap paths",
-    "branches.correction": "no default; file.py:function that returns a pair, its low and its high part",
-    "branches.rounds": 'how these functions round: "emulated" or "itself"; the default is kernel.rounds',
+    "branches.correction": "no default; file.py:function that returns a pair, low and high part",
+    "branches.rounds": 'how these functions round; the default is kernel.rounds',
     "branches.library": "shared library of the correction; the default is library.path",
     "branches.symbol": "in place of correction: its name in C, for symbol_NARROW_WIDE",
-    "branches.allow": 'no default; "within budget": a mismatch may be as large as a level\'s share of the target',
-    "branches.paths": "paths of a level on which the branches are compared; the default is sampling.paths",
+    "branches.allow": 'no default; "within budget": a mismatch may take what rounding may of [target]',
+    "branches.paths": "paths of a level that are compared; the default is sampling.paths",
 }
 BRANCH_VALUES: dict[str, object] = {
     "branches.correction": "model.py:correction",
