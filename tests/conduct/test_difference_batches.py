@@ -34,7 +34,7 @@ def test_a_step_that_couples_paths_is_located(run, form):
 
 def test_numbers_that_occur_elsewhere_do_not_hide_a_difference_of_one_function():
     """Two means that both are constants of the kernel, too, and one path: operations are compared by position."""
-    source = kernel("S = S + dw", before="H = dW * 0.25 + 0.5\ndW = dW - np.mean(dW, axis=1, keepdims=True)  # here\n")
+    source = kernel("S = S * 0.25 + dw * 0.5", before="dW = dW - np.mean(dW, axis=1, keepdims=True)  # here\n")
     draws = np.array([[1.0, 0.0, 0.5]])
     pair = [itself(source, np.append(draws, [[last]], 1), "float16", "kernel.py", [0]) for last in (0.5, -0.5)]
     found = first_difference(*pair, form=FORMATS["float16"])

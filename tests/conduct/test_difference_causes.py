@@ -70,6 +70,18 @@ def test_what_explains_a_difference(name):
         assert explains(found, one, two, FORMATS[form]) == cause
 
 
+def test_a_fused_result_from_out_of_sight_is_explained():
+    """What a foreign function gives is known by its row, though the trace does not see how it is made."""
+    cut = "\nS = np.maximum(S, dw * 0.0 - 9.0)"
+    foreign = "a, b = (np.frombuffer(one.tobytes(), one.dtype).astype('f4') for one in (S, dw))"
+    foreign += "\nS = (a * b + a).astype(S.dtype)"
+    one, two = traces(itself, kernel("S = S + S * dw" + cut), kernel(foreign + cut), "float16")
+    found = first_difference(one, two, form=FORMATS["float16"])
+    assert found.correction.kind == "untraced"
+    assert found.low.operation == "multiply"
+    assert explains(found, one, two, FORMATS["float16"]) == "fused multiply-add"
+
+
 def test_an_emulated_difference_is_explained_by_neither():
     """In an emulated run every operation rounds: a reordered sum there is no wider intermediate."""
     one, two = traces(emulated, LONG, kernel("S = S + 0.2 * (S * dw)"), "float16")

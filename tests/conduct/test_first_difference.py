@@ -4,10 +4,23 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from difference_cases import emulated, itself, kernel, located, marked, normals, places, traces
+from difference_cases import (
+    STEP,
+    emulated,
+    itself,
+    kernel,
+    located,
+    marked,
+    normals,
+    own_function,
+    places,
+    traces,
+)  # fmt: skip
 
 from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.conduct.firstdifference import first_difference
+from narrowgauge.conduct.tracing import Trace
+from narrowgauge.conduct.tracingown import run_traced
 
 PLAIN = kernel(
     """
@@ -76,9 +89,9 @@ DEFECTS = {
         emulated, "float16", kernel(f"T = S + S * dw\nT = T + (0.5 * T - 0.3)  # here\n{SELECT}"),
         kernel(f"T = S + S * dw\nT = (T + 0.5 * T) - 0.3  # here\n{SELECT}"), "operation",
     ),
-    "in one arm of a selection, beside others": (
-        emulated, "float16", kernel(f"H = dw * dw - 0.1\nT = S + S * dw\nT = T + (0.5 * T - 0.3)  # here\n{SELECT}"),
-        kernel(f"H = dw * dw + 0.1\nT = S + S * dw\nT = (T + 0.5 * T) - 0.3  # here\n{SELECT}"), "operation",
+    "in one arm of a selection, after what is spelled in another way": (
+        emulated, "float16", kernel(f"T = S + (dw - 0.3 * S)\nT = T + (0.5 * T - 0.3)  # here\n{SELECT}"),
+        kernel(f"T = S + -(0.3 * S - dw)\nT = (T + 0.5 * T) - 0.3  # here\n{SELECT}"), "operation",
     ),
     "under a mask": (
         emulated, "float16", kernel("S = S * dw\nup = dw > 0\nS[up] = S[up] + (S[up] * 0.3 - dw[up])  # here"),
@@ -121,6 +134,22 @@ def test_draws_that_are_rounded_on_one_side_alone_are_named_as_draws():
         f"low.py:7: multiply takes the draw {found.low.strange!r} where "
         f"correction.py:7: multiply takes the draw {found.correction.strange!r}"
     )
+
+
+def test_a_pair_of_draws_of_which_the_wide_ones_slip_in_is_named_as_draws():
+    """A correction gets its draws in both types; what counts on the other side is what was used there."""
+    low = kernel("S = S + S * dw  # here")
+    pair = kernel("S = (S + S * dw).astype(S.dtype)  # here", before="narrow, dW = dW\n")
+    pair = pair.replace("dW.shape[-1], 1.0, dW.dtype", "dW[0].shape[-1], 1.0, dW[0].dtype")
+    wide = np.random.default_rng(2).normal(0.0, 0.3, (4, 64)).astype(np.float32)
+    narrow = wide.astype(np.float16)
+    one, two = itself(low, narrow, "float16", "low.py"), Trace(64)
+    two.gave(run_traced(own_function(pair, "correction.py"), (narrow, wide), STEP, trace=two))
+    one.draws(wide)
+    found = first_difference(one, two, form=FORMATS["float16"])
+    assert found.kind == "draws"
+    assert places(found) == [("low.py", marked(low)[0]), ("correction.py", marked(pair)[0])]
+    assert found.correction.strange == wide[0, found.path]
 
 
 def test_casting_wide_draws_is_no_difference():

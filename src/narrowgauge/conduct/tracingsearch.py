@@ -26,13 +26,6 @@ class Found(NamedTuple):
     strange: Key | None
 
 
-class _Led(NamedTuple):
-    """Rows, and numbers of operations, that lead to what a run returned."""
-
-    rows: set[Key]
-    numbers: frozenset[int]
-
-
 def searched(low: Trace, correction: Trace) -> list[Found | None]:
     """Return where each of two runs parts from the other, None where the other has everything that it returned.
 
@@ -40,18 +33,16 @@ def searched(low: Trace, correction: Trace) -> list[Found | None]:
     """
     same_lines = bool(low.operations) and _lines(low) == _lines(correction)
     judge = _ByPosition if same_lines else _ByValue
-    led = _leading(low), _leading(correction)
-    return [judge(low, correction, led).first(), judge(correction, low, led[::-1]).first()]
+    return [judge(one, other, _leading(other)).first() for one, other in ((low, correction), (correction, low))]
 
 
 class _Judge:
     """One side of a comparison: which of its rows the other side does not have."""
 
-    def __init__(self, trace: Trace, other: Trace, led: tuple[_Led, _Led]) -> None:
+    def __init__(self, trace: Trace, other: Trace, there: set[Key]) -> None:
         self.trace = trace
         self.other = other
-        self._numbers = led[0].numbers
-        self._there = led[1].rows
+        self._there = there
 
     def strange(self, number: int, operand: Kept, place: int) -> list[Key]:
         """Return the rows of operand number `place` of an operation that the other side does not have."""
@@ -78,8 +69,6 @@ class _Judge:
     def _forwards(self, before: int) -> Iterator[Found]:
         """Yield the operations, in order, whose operands the other side has and whose results it has not."""
         for number in range(before):
-            if number not in self._numbers:
-                continue
             rows = self.differing(number)
             if rows and not self._strange(number):
                 yield Found(number, "operation", rows[0], None)
@@ -175,24 +164,22 @@ def _lines(trace: Trace) -> list[tuple[Place | None, str]]:
     return [(operation.place, operation.name) for operation in trace.operations]
 
 
-def _leading(trace: Trace) -> _Led:
-    """Return what leads to what a run returned: the other half of a correction can have the rows of this one.
+def _leading(trace: Trace) -> set[Key]:
+    """Return the rows that lead to what a run returned: the other half of a correction can have the rows of this one.
 
     All that the run has where some row came about in a way that does not show.
     """
-    rows, numbers = set(trace.draws_keys), set[int]()
+    rows = set[Key]()
     pending = [(key, len(trace.operations)) for key in trace.returned]
     seen = set(pending)
-    whole = _Led(set(trace.rows), frozenset(range(len(trace.operations))))
     if trace.full or not trace.returned:
-        return whole
+        return set(trace.rows)
     while pending:
         key, before = pending.pop()
         rows.add(key)
         number = next((made for made in reversed(trace.made.get(key, ())) if made < before), None)
         if number is not None:
             operation = trace.operations[number]
-            numbers.add(number)
             rows.update(*(reading for kept in operation.results for reading in kept.readings))
             further = [(row, number) for kept in operation.operands for reading in kept.readings for row in reading]
         elif key in trace.draws_keys or key in trace.constants or len(trace.rows[key]) == 1:
@@ -200,11 +187,11 @@ def _leading(trace: Trace) -> _Led:
         else:
             parts, complete = _selected(trace, key, before)
             if not complete:
-                return whole
+                return set(trace.rows)
             further = [(part, before) for part in parts]
         pending += [one for one in dict.fromkeys(further) if one not in seen]
         seen.update(further)
-    return _Led(rows, frozenset(numbers))
+    return rows
 
 
 def _selected(trace: Trace, key: Key, before: int) -> tuple[list[Key], bool]:
