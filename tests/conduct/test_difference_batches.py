@@ -112,6 +112,17 @@ def test_a_layout_changes_memory_and_no_value(layout):
     assert [repeated(trace, number, layout=layout) for number in range(3)] == [False] * 3
 
 
+@pytest.mark.parametrize("name", ["exp", "log1p", "sqrt"])
+def test_a_function_of_a_reversed_view_is_asked_of_numpy(name):
+    """Some processors have other bits for a step of -1: the answer is what plain NumPy shows here for the same row."""
+    draws = np.abs(normals("float64", steps=1, paths=200))
+    function = getattr(np, name)
+    backwards = np.ascontiguousarray(draws[0, ::-1])[::-1]
+    trace = emulated(kernel(f"S = S * np.{name}(dw)"), draws, "float64", "kernel.py")
+    assert trace.operations[0].name == name
+    assert repeated(trace, 0, layout="reversed") == (function(backwards) != function(draws[0])).any()
+
+
 def test_reductions_over_paths_and_strangers_cannot_be_repeated():
     """A mean over the paths has no row, and an operation that NumPy does not have under that name is not asked for."""
     trace = itself(MATCHED, normals("float32", paths=24), "float32", "kernel.py")
