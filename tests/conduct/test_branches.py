@@ -8,6 +8,7 @@ import pytest
 from branch_cases import OWN_DEFECTS, PAIR, PATH, audit_file, checked, defective, entry_for, lines
 
 from narrowgauge.conduct.branches import broken_splits
+from narrowgauge.errors import KernelError
 
 EMULATED = {"kernel": {"rounds": ""}, "branches": {"correction": '"kernel.py:correction"'}}
 ORDERED = """
@@ -117,6 +118,61 @@ def test_a_low_function_of_its_own_is_held_against_the_kernel(tmp_path: Path) ->
     assert checked(tmp_path, PATH + plain, branches=emulated).mismatches == []
     differs = checked(tmp_path, PATH + plain.replace("0.05 * s * h", "0.05 * h * s"), branches=emulated).mismatches
     assert differs[-1].condition == "branches"
+
+
+def test_draws_of_the_wide_format_in_the_low_part_are_told_as_draws(tmp_path: Path) -> None:
+    """They are none of the low branch's, however close."""
+    source, line = defective("draws not rounded")
+    where = checked(tmp_path, source).mismatches[-1].where
+    assert where is not None
+    assert where.correction is not None
+    assert (where.correction.kind, where.correction.line) == ("draws", line)
+
+
+def test_a_correction_that_raises_in_a_format_ends_its_splits(tmp_path: Path) -> None:
+    """Only that format's; what it raised is said."""
+    refusing = PAIR.replace("low_part(low, high, h), ", "low_part(low, high, h / (high.dtype != low.dtype)), ").replace(
+        "    low, high = draws\n", "    low, high = draws\n    if low.dtype == np.float16:\n        raise ArithmeticError('no')\n"
+    )
+    entry = checked(tmp_path, PATH + refusing, formats={"narrow": '["float16", "float32"]'})
+    assert entry.raised == {"float16": "level 0, arm float16: ArithmeticError: no"}
+    assert entry.mismatches == []
+    assert broken_splits(entry, 2) == {"float16"}
+
+
+def test_a_correction_that_returns_no_pair_is_refused(tmp_path: Path) -> None:
+    """With what it returned, and what is accepted."""
+    with pytest.raises(KernelError, match=r"the correction returned a ndarray; accepted: a pair, its low and its high"):
+        checked(tmp_path, PATH + "\ndef correction(draws, h):\n    return path(draws[0], h)\n")
+
+
+def test_functions_that_draw_for_themselves_are_compared_on_one_tape(tmp_path: Path) -> None:
+    """The same requests get the same numbers; a reordered sum shows."""
+    source = """
+    import numpy as np
+
+    def path(rng, h, *, steps, paths):
+        s = np.ones(paths)
+        for n in range(steps):
+            noise = 0.2 * s * (np.sqrt(h) * rng.standard_normal(paths))
+            s = s + (0.05 * h * s + noise)
+        return s
+
+    def correction(rng, h, *, steps, paths):
+        s = np.ones(paths)
+        for n in range(steps):
+            noise = 0.2 * s * (np.sqrt(h) * rng.standard_normal(paths))
+            s = s + (0.05 * h * s + noise)
+        return s, s
+    """
+    kernel = {"rounds": "", "takes": '"rng"'}
+    assert checked(tmp_path, source, kernel=kernel).mismatches == []
+    swapped = "s + 0.05 * h * s + noise\n        return s, s"
+    differs = source.replace("s + (0.05 * h * s + noise)\n        return s, s", swapped)
+    assert differs != source
+    found = checked(tmp_path, differs, kernel=kernel).mismatches
+    assert {one.condition for one in found} == {"branches"}
+    assert found[-1].differing > 500
 
 
 def test_a_finding_is_a_function_of_the_audit_file(tmp_path: Path) -> None:

@@ -100,7 +100,10 @@ def follow(run: Run, draws: Given, quantity: str, trace: Trace, *, order: Order 
             branch = Branch(source, run.arm, run.wide)
             branch.wide_draws(draws)
             file = source.file
-            given = laid(branch.typed(draws)[0], order)
+            low, wide = branch.typed(draws)
+            if wide is not None:
+                trace.draws(wide)
+            given = laid(low, order)
             result = run_traced(branch.copy, given, file.ladder.step_size(run.level), trace=trace, **file.keywords())
             trace.gave(np.asarray(quantities_of(result)[quantity]))
             if source.part is not None:

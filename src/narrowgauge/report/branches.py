@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 
 from narrowgauge.record.audit import AuditRecord, BranchesEntry, MismatchEntry, TriedEntry, WhereEntry
 from narrowgauge.report.settings import bias_share, confidence
@@ -30,10 +30,12 @@ def branch_lines(entry: BranchesEntry, record: AuditRecord | None) -> list[str]:
     Without a record it was a trial, of too few paths for a bias.
     """
     several = len({one.quantity for one in entry.mismatches} | set(() if record is None else record.quantities)) > 1
+    shown = _grouped(entry.mismatches)
     lines = [
-        _line(one, several=several) + ("" if record is None else _bias(record, one)) for one in entry.mismatches[:_MOST]
+        _line(one, several=several) + ("" if record is None else _bias(record, one)) + _alike(alike)
+        for one, alike in shown[:_MOST]
     ]
-    if (left := len(entry.mismatches) - _MOST) > 0:
+    if (left := len(shown) - _MOST) > 0:
         lines.append(f"{count(left)} further {'mismatches' if left > 1 else 'mismatch'}; audit.json has them all")
     if entry.casts:
         places = joined(f"{clean(one.file)}:{one.line}" for one in entry.casts if one.file is not None)
@@ -74,6 +76,22 @@ def _tried(entry: BranchesEntry) -> Iterable[str]:
     for words, found in conditions.items():
         names = joined(dict.fromkeys(clean(one.arm) for one in found))
         yield f"{names} on {levels_named(one.level for one in found)} {words}"
+
+
+def _grouped(mismatches: Sequence[MismatchEntry]) -> list[tuple[MismatchEntry, int]]:
+    """Return the mismatches that are shown, each with how many more are like it.
+
+    All of two branches, and of the tries of one condition in one format the one that differs most.
+    """
+    groups: dict[tuple[object, ...], list[MismatchEntry]] = {}
+    for one in mismatches:
+        own = (one.level, one.wide) if one.condition == "branches" else (one.function, one.numpys_own)
+        groups.setdefault((one.arm, one.condition, one.quantity, *own), []).append(one)
+    return [(max(found, key=lambda one: one.differing / one.paths), len(found) - 1) for found in groups.values()]
+
+
+def _alike(further: int) -> str:
+    return f" {count(further)} further {'tries' if further > 1 else 'try'} of that kind differ, too." if further else ""
 
 
 def _conditions(one: TriedEntry) -> str:
