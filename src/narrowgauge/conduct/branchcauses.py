@@ -106,8 +106,6 @@ def follow(run: Run, draws: Given, quantity: str, trace: Trace, *, order: Order 
             given = laid(low, order)
             result = run_traced(branch.copy, given, file.ladder.step_size(run.level), trace=trace, **file.keywords())
             trace.gave(np.asarray(quantities_of(result)[quantity]))
-            if source.part is not None:
-                _keep_what_leads(trace)
             return True
         branch = Branch(source, run.arm, run.wide, rows=run.rows, observer=trace)
         if branch.one_path and not run.rows:
@@ -115,36 +113,8 @@ def follow(run: Run, draws: Given, quantity: str, trace: Trace, *, order: Order 
         trace.draws(draws.narrow)
         found = branch.lying(draws, run.level, order, over_paths=over_paths)
         trace.gave(found[quantity])
-        if source.part is not None:
-            _keep_what_leads(trace)
         return True
     raise AssertionError("what it raises is raised")
-
-
-def _keep_what_leads(trace: Trace) -> None:
-    """Leave out of a trace what does not lead to the quantity that was told: a high part has the rows of a low one.
-
-    Everything stays where some row came about in a way that does not show.
-    """
-    wanted = set(trace.returned)
-    pending, numbers = list(wanted), set[int]()
-    while pending:
-        key = pending.pop()
-        made = trace.made.get(key, ())
-        if not made and key not in trace.draws_keys | trace.constants and len(trace.rows[key]) > 1:
-            return
-        for number in set(made) - numbers:
-            numbers.add(number)
-            keys = {row for one in trace.operations[number].operands for reading in one.readings for row in reading}
-            pending += keys - wanted
-            wanted |= keys
-    trace.operations = [one for number, one in enumerate(trace.operations) if number in numbers]
-    wanted |= {row for one in trace.operations for kept in one.results for reading in kept.readings for row in reading}
-    trace.rows = {key: row for key, row in trace.rows.items() if key in wanted | trace.draws_keys | trace.constants}
-    trace.made = {}
-    for number, one in enumerate(trace.operations):
-        for key in {row for kept in one.results for reading in kept.readings for row in reading}:
-            trace.made.setdefault(key, []).append(number)
 
 
 def located(low: Run, correction: Run, draws: Given, quantity: str) -> Located | None:
