@@ -132,7 +132,8 @@ def test_draws_of_the_wide_format_in_the_low_part_are_told_as_draws(tmp_path: Pa
 def test_a_correction_that_raises_in_a_format_ends_its_splits(tmp_path: Path) -> None:
     """Only that format's; what it raised is said."""
     refusing = PAIR.replace("low_part(low, high, h), ", "low_part(low, high, h / (high.dtype != low.dtype)), ").replace(
-        "    low, high = draws\n", "    low, high = draws\n    if low.dtype == np.float16:\n        raise ArithmeticError('no')\n"
+        "    low, high = draws\n",
+        "    low, high = draws\n    if low.dtype == np.float16:\n        raise ArithmeticError('no')\n",
     )
     entry = checked(tmp_path, PATH + refusing, formats={"narrow": '["float16", "float32"]'})
     assert entry.raised == {"float16": "level 0, arm float16: ArithmeticError: no"}

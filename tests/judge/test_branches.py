@@ -6,12 +6,13 @@ import math
 
 import numpy as np
 import pytest
-from judge_cases import audit
+from judge_cases import audit, differences, level_tally, quantity
 from scipy import stats
 
 from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.judge.branches import bias, differs, split_formats, ulps, within
 from narrowgauge.judge.intervals import Interval, jackknife, means
+from narrowgauge.judge.schemes import judge_level
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.measure.moments import Series
 
@@ -48,7 +49,7 @@ def mismatches(seed: int, share: float) -> tuple[np.ndarray, float]:
     return np.where(events, size, 0.0), share * (0.7 - 0.6) * 2.0**-10
 
 
-@pytest.mark.parametrize("share", [0.4, 0.05, 0.001])
+@pytest.mark.parametrize("share", [0.4, 0.05, 0.01, 0.001])
 def test_the_interval_misses_as_rarely_as_it_says(share: float) -> None:
     """Of 400 seeds at most as many miss as a rate of 1% gives with a chance of 1e-4: this test's false-alarm rate."""
     missed = 0
@@ -102,6 +103,22 @@ def test_nothing_is_allowed_that_the_file_does_not_allow() -> None:
     """Neither without the key nor without the table."""
     assert not within(asked(), {"value": interval(0.0, 0.0)})
     assert not within(audit(), {"value": interval(0.0, 0.0)})
+
+
+def judged(*broken: str, **formats: object) -> tuple[str, str | None, str | None]:
+    """Verdict, reason and kind of scheme of float16, which is cheap and close enough to pay as a split."""
+    file = audit(formats={"narrow": ["float16"], "wide": ["float64"], **formats})
+    tally = level_tally(quantity(differences(1.0, float16=1e-4)))
+    found = judge_level(tally, file, ALPHA, broken).arms["value"]["float16"]
+    return found.verdict, found.reason, None if found.scheme is None else found.scheme.kind
+
+
+def test_no_split_of_a_broken_format_is_admissible() -> None:
+    """The reason is that its branches differ; one of another format is no matter, and the format alone stands."""
+    assert judged(schemes=["split"]) == ("pays", None, "split")
+    assert judged("float16", schemes=["split"]) == ("does not pay", "branches", None)
+    assert judged("bfloat16", schemes=["split"]) == ("pays", None, "split")
+    assert judged("float16") == ("pays", None, "alone")
 
 
 def test_formats_that_a_split_could_use() -> None:

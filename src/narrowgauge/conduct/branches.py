@@ -347,7 +347,7 @@ class _Check:
             paths=paths or (0 if before is None else before.paths),
             varied=varied,
             batches=[] if found is None else list(found.batches),
-            orders=[] if found is None else list(found.orders),
+            orders=max([] if before is None else before.orders, [] if found is None else list(found.orders), key=len),
             threads=0 if found is None else found.threads,
             repeats=REPEATS if varied else 0,
             changed=0 if found is None else found.changed,

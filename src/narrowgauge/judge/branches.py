@@ -12,10 +12,12 @@ from collections.abc import Mapping
 
 import numpy as np
 import numpy.typing as npt
+from scipy import stats
 
 from narrowgauge.arithmetic.formats import FORMATS, Format
+from narrowgauge.judge.gain import FEW_EVENTS
 from narrowgauge.judge.intervals import Interval, binomial_upper, jackknife, means
-from narrowgauge.judge.schemes import LEAST_EFFECTIVE_SIZE, budget_levels, rmse_of
+from narrowgauge.judge.schemes import budget_levels, rmse_of
 from narrowgauge.kernel.arms import wider
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.measure.moments import Series
@@ -58,20 +60,23 @@ def ulps(here: Doubles, there: Doubles, form: Format) -> Doubles:
 def bias(mismatch: Series, differing: int, largest: float, alpha: float) -> Interval:
     """Return the mean of a mismatch with its interval at confidence 1 - alpha.
 
-    The jackknife over batches, where the paths that differ are many and none rules; else, since a sample of few does
-    not know what it misses, plus or minus twice the largest size seen times the exact binomial bound of their share.
+    From 20 paths that differ on the jackknife over batches, as wide as if the sample had missed four of the `largest`
+    size; below, since so few do not know what they miss, also plus or minus twice that size times the exact binomial
+    bound of their share.
     """
-    moments = mismatch.moments
+    total = mismatch.moments.total
     if mismatch.nonfinite or not math.isfinite(largest):
         return Interval(estimate=math.nan, low=-math.inf, high=math.inf, se=math.inf)
     if not differing:
         return Interval(estimate=0.0, low=0.0, high=0.0, se=0.0)
     found = jackknife(means(mismatch), alpha)
-    if differing >= LEAST_EFFECTIVE_SIZE and mismatch.effective_size >= LEAST_EFFECTIVE_SIZE:
-        return found
-    reach = 2.0 * largest * binomial_upper(differing, moments.total, alpha / 2)
-    low, high = min(found.low, -reach), max(found.high, reach)
-    return Interval(estimate=found.estimate, low=low, high=high, se=found.se)
+    se = math.hypot(found.se, 2.0 * largest / total)
+    reach = float(stats.t.ppf(1 - alpha / 2, mismatch.moments.count.size - 1)) * se
+    low, high = found.estimate - reach, found.estimate + reach
+    if differing < FEW_EVENTS:
+        bound = 2.0 * largest * binomial_upper(differing, total, alpha / 2)
+        low, high = min(low, -bound), max(high, bound)
+    return Interval(estimate=found.estimate, low=low, high=high, se=se)
 
 
 def share_of(file: AuditFile, quantity: str) -> float | None:

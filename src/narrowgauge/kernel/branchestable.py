@@ -20,7 +20,7 @@ __all__ = ["BRANCH_MEANINGS", "BRANCH_VALUES", "BranchesTable", "defaults_of", "
 BRANCH_MEANINGS: dict[str, str] = {
     "branches.low": "no default but kernel.run; file.py:function that computes the many cheap paths",
     "branches.correction": "no default; file.py:function that returns a pair, low and high part",
-    "branches.rounds": 'how these functions round; the default is kernel.rounds',
+    "branches.rounds": "how these functions round; the default is kernel.rounds",
     "branches.library": "shared library of the correction; the default is library.path",
     "branches.symbol": "in place of correction: its name in C, for symbol_NARROW_WIDE",
     "branches.allow": 'no default; "within budget": a mismatch may take what rounding may of [target]',
