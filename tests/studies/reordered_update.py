@@ -22,10 +22,10 @@ from narrowgauge.measure.branchruns import branch_sources
 
 LEVELS, PATHS, RMSE = range(9), 2**18, 2e-3
 _FINDINGS = """\
-What it gave. A tenth to a third of the target RMSE on most coarse levels, nine and eighteen times that on the finest two,
-where the drift alone is lost. The bias is no smooth function of the level: on level 5, where the drift is 1.6 units in the
-last place of S, most of its roundings go one way, and it is 2.5 times the target. With a rate of .06 it is not there, with
-.04 it begins on level 4. So a mismatch is measured on every level and never extrapolated."""
+What it gave. A tenth to a third of the target RMSE on most coarse levels, nine and eighteen times that on the finest
+two, where the drift alone is lost. The bias is no smooth function of the level: on level 5, where the drift is 1.6
+units in the last place of S, most of its roundings go one way, and it is 2.5 times the target. With a rate of .06 it is
+not there, with .04 it begins on level 4. So a mismatch is measured on every level and never extrapolated."""
 _SOURCE = """
 import numpy as np
 
