@@ -4,12 +4,15 @@ from __future__ import annotations
 
 import io
 from pathlib import Path
+from typing import Any
 
 from branch_cases import PAIR, PATH, audit_file, defective
 from rich.console import Console
 
-from narrowgauge.api import run_audit
+from narrowgauge.api import audit, run_audit
+from narrowgauge.measure.workers import Workers
 from narrowgauge.record.audit import AuditRecord
+from narrowgauge.record.canonical import read_strict
 from narrowgauge.report.text import audit_text
 
 FORMATS = {"narrow": '["float16"]', "wide": '["float64"]', "schemes": '["split"]'}
@@ -64,6 +67,42 @@ def test_a_mismatch_past_the_budget_is_not_allowed(tmp_path: Path) -> None:
     """The key alone allows nothing."""
     source, _ = defective("reordered sum")
     assert ("does not pay", "branches") in verdicts(audited(tmp_path, source, "0.0002", allow='"within budget"'))
+
+
+def test_whoever_measures_the_record_is_the_same(tmp_path: Path) -> None:
+    """A worker process finds both functions by their files, and the audit goes on where it stopped."""
+    source, _ = defective("reordered sum")
+    file = audit_file(tmp_path, source, formats=FORMATS)
+    records = []
+    for workers, resume in ((1, False), (2, False), (2, True)):
+        folder = tmp_path / str(workers)
+        record = run_audit(file, folder, workers=Workers(number=workers), resume=resume).record
+        document = record.document()
+        del document["provenance"]
+        records.append(document)
+        assert read_strict((folder / "audit.json").read_text(encoding="utf-8"), "audit.json") == record.document()
+    assert records[0] == records[1] == records[2]
+
+
+def test_a_function_that_was_handed_over_has_a_correction_by_name(tmp_path: Path) -> None:
+    """Paths are relative to the current folder, as for a kernel."""
+    source, _ = defective("reordered sum")
+    (tmp_path / "kernel.py").write_text(source, encoding="utf-8")
+    space: dict[str, Any] = {"__name__": "handed_kernel"}
+    exec(compile(source, str(tmp_path / "kernel.py"), "exec"), space)
+    result = audit(
+        {
+            "kernel": {"run": space["path"], "takes": "increments", "rounds": "itself"},
+            "ladder": {"horizon": 0.7, "finest": 1},
+            "formats": {"narrow": ["float16"], "wide": ["float64"]},
+            "branches": {"correction": f"{tmp_path / 'kernel.py'}:correction"},
+            "sampling": {"block": 1024, "paths": 1024, "most_paths": 1024},
+        },
+        quiet=True,
+    )
+    assert result.record.branches is not None
+    assert {one.level for one in result.record.branches.mismatches} == {0, 1}
+    assert {one.of_rmse for one in result.record.branches.mismatches} == {None}
 
 
 def test_branches_that_agree_take_one_line(tmp_path: Path) -> None:

@@ -62,6 +62,18 @@ def test_nothing_is_named_that_explains_only_some(tmp_path: Path, name: str) -> 
     assert [one.explanation for one in found] == [None]
 
 
+@pytest.mark.parametrize(
+    ("name", "cause"),
+    [("float64 constant", "wider intermediate"), ("step size not cast", "wider intermediate"), ("reordered sum", None)],
+)
+def test_one_rounding_less_is_named_for_the_operation(tmp_path: Path, name: str, cause: str | None) -> None:
+    """Also where no liberty of a compiler makes the whole of one side that of the other."""
+    source, _ = defective(name)
+    where = checked(tmp_path, source).mismatches[-1].where
+    assert where is not None
+    assert where.cause == cause
+
+
 def test_clean_pairs_give_no_finding(tmp_path: Path) -> None:
     """Over 100 seeds: a correction of the same code, and one with its statements in another order. No chance enters."""
     moved = PAIR.replace(

@@ -11,6 +11,7 @@ import numpy as np
 from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.conduct.firstdifference import Located, Side, first_difference
 from narrowgauge.conduct.tracing import MOST_PATHS, Trace
+from narrowgauge.conduct.tracingcauses import Cause, explains
 from narrowgauge.conduct.tracingown import run_traced
 from narrowgauge.dispatch.looser import LooserSetting, Manner
 from narrowgauge.dispatch.setting import Place
@@ -117,15 +118,20 @@ def follow(run: Run, draws: Given, quantity: str, trace: Trace, *, order: Order 
     raise AssertionError("what it raises is raised")
 
 
-def located(low: Run, correction: Run, draws: Given, quantity: str) -> Located | None:
-    """Return where two functions part on the same draws, None where nothing can be found or followed."""
+def located(low: Run, correction: Run, draws: Given, quantity: str) -> tuple[Located | None, Cause | None]:
+    """Return where two functions part on the same draws, and what explains that operation on all of them.
+
+    None where nothing can be found or followed.
+    """
     paths = draws.narrow.shape[-1]
-    traces = Trace(paths), Trace(paths)
+    first, second = Trace(paths), Trace(paths)
     try:
-        done = [follow(run, draws, quantity, trace) for run, trace in zip((low, correction), traces, strict=True)]
+        done = follow(low, draws, quantity, first) and follow(correction, draws, quantity, second)
     except (BranchError, NarrowgaugeError):  # a trace asks more of a function than a run
-        return None
-    return first_difference(*traces, form=FORMATS[low.arm]) if all(done) else None
+        return None, None
+    form = FORMATS[low.arm]
+    found = first_difference(first, second, form=form) if done else None
+    return found, None if found is None else explains(found, first, second, form)
 
 
 def narrow_down(causes: Causes, runs: tuple[Run, Run], case: Case, quantity: str, found: Located | None) -> None:
@@ -188,8 +194,8 @@ def _gives(run: Run, draws: Given, quantity: str, manner: Manner | None, wanted:
     return found is not None and not differs(found, wanted).any()
 
 
-def where_entry(file: AuditFile, found: Located | None) -> WhereEntry | None:
-    """Return a place where two runs part as an entry of the record."""
+def where_entry(file: AuditFile, found: Located | None, cause: Cause | None = None) -> WhereEntry | None:
+    """Return a place where two runs part, and what explains it there, as an entry of the record."""
     if found is None:
         return None
     return WhereEntry(
@@ -197,6 +203,7 @@ def where_entry(file: AuditFile, found: Located | None) -> WhereEntry | None:
         correction=_point(file, found.correction),
         ulps=None if found.ulps is None or not np.isfinite(found.ulps) else float(found.ulps),
         incomplete=found.incomplete,
+        cause=cause,
     )
 
 

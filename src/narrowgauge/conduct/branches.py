@@ -20,7 +20,6 @@ from narrowgauge.conduct.branchcauses import MOST_STEPS, Causes, Run, located, n
 from narrowgauge.conduct.branchcomparison import Comparer, Mismatch
 from narrowgauge.conduct.branchvariations import REPEATS, Found, Varied, vary
 from narrowgauge.conduct.entries import finite, interval_fields
-from narrowgauge.conduct.firstdifference import Located
 from narrowgauge.conduct.trial import NOT_IDENTICAL, same_bits
 from narrowgauge.dispatch.setting import Place
 from narrowgauge.draws.coarsen import Draws
@@ -39,7 +38,7 @@ from narrowgauge.measure.arms import PLAIN, REFERENCE
 from narrowgauge.measure.block import BlockRunner
 from narrowgauge.measure.branchruns import Branch, BranchError, BranchSource, branch_sources, given
 from narrowgauge.measure.calls import Caller
-from narrowgauge.record.branches import BranchesEntry, CastEntry, MismatchEntry, TriedEntry
+from narrowgauge.record.branches import BranchesEntry, CastEntry, MismatchEntry, TriedEntry, WhereEntry
 
 __all__ = ["branches_entry", "broken_splits"]
 
@@ -191,16 +190,16 @@ class _Check:
                     )
                 )
 
-    def _cause(self, comparer: Comparer, one: Mismatch, name: str, causes: Causes) -> tuple[Located | None, int]:
+    def _cause(self, comparer: Comparer, one: Mismatch, name: str, causes: Causes) -> tuple[WhereEntry | None, int]:
         """Return where the branches part, and on how many paths that differ an explanation was looked for."""
         case = one.case
         if case is None or self._file.ladder.steps(case.level) > MOST_STEPS:
             return None, 0
         low, correction = (comparer.run(side, case.level) for side in (0, 1))
-        where = located(low, correction, case.followed(), name)
+        found, cause = located(low, correction, case.followed(), name)
         if causes.left != []:
-            narrow_down(causes, (low, correction), case, name, where)
-        return where, case.differing
+            narrow_down(causes, (low, correction), case, name, found)
+        return where_entry(self._file, found, cause), case.differing
 
     def _explain(self, comparer: Comparer, causes: Causes) -> None:
         """Write down what explains all differences of a comparison on all its levels."""
@@ -292,7 +291,7 @@ class _Check:
             (run.arm, run.level, found.quantity),
             one,
             interval,
-            where=found.located,
+            where=where_entry(self._file, found.located),
             wide=run.wide,
             splits=splits if concerned else "not concerned",
             found=found,
@@ -306,7 +305,7 @@ class _Check:
         one: Mismatch,
         interval: Interval,
         *,
-        where: Located | None,
+        where: WhereEntry | None,
         wide: str | None,
         splits: str,
         asked: int = 0,
@@ -331,7 +330,7 @@ class _Check:
             ulps_median=finite(float(np.median(apart))),
             **interval_fields("bias", interval),
             of_rmse=None if rmse is None else finite(interval.estimate / rmse),
-            where=where_entry(self._file, where),
+            where=where,
             explanation=None,
             explained=asked,
             numpys_own=found is not None and found.numpys_own,

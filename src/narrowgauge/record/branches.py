@@ -40,12 +40,16 @@ class PointEntry(Entry, frozen=True, kw_only=True):
 
 
 class WhereEntry(Entry, frozen=True, kw_only=True):
-    """The first operation of each branch, by value, whose operands the other has and whose result it has not."""
+    """The first operation of each branch, by value, whose operands the other has and whose result it has not.
+
+    `cause` is the one rounding less of one side that explains this operation on all paths that were followed.
+    """
 
     low: PointEntry | None
     correction: PointEntry | None
     ulps: float | None
     incomplete: str | None
+    cause: Literal["fused multiply-add", "wider intermediate"] | None
 
 
 class MismatchEntry(Entry, frozen=True, kw_only=True):

@@ -142,7 +142,8 @@ def _where(where: WhereEntry) -> str:
     if where.low is None and where.correction is None:
         return f"Where they part cannot be told{'' if where.incomplete is None else f': {clean(where.incomplete)}'}."
     sides = [clean(side.text) for side in (where.low, where.correction) if side is not None]
-    return f"First: {'; then against it '.join(sides)}."
+    rounding = "" if where.cause is None else f"; one rounding less explains that, a {clean(where.cause)}"
+    return f"First: {'; against it '.join(sides)}{rounding}."
 
 
 def _bias(record: AuditRecord, one: MismatchEntry) -> str:
