@@ -15,6 +15,7 @@ from typing import TYPE_CHECKING, Any, Literal
 from msgspec.structs import replace as changed
 
 from narrowgauge.conduct.account import account
+from narrowgauge.conduct.branches import branches_entry
 from narrowgauge.conduct.domain import explore
 from narrowgauge.conduct.lines import line_study, studied
 from narrowgauge.conduct.owntrial import examine_own
@@ -216,12 +217,17 @@ def try_out(file: AuditFile) -> TrialEntry:
             return engine.call(_own_trial)
     file = worked_out(file, kernel)
     runner = BlockRunner(file, kernel)
-    return _with_draws(try_arms(file, kernel, runner), file, runner)
+    found = _with_draws(try_arms(file, kernel, runner), file, runner)
+    if found.faults:  # what a branch would meet as well
+        return found
+    with pinned():
+        return changed(found, branches=branches_entry(file, kernel, runner, quick=True))
 
 
 def _own_trial(bench: Bench) -> TrialEntry:
     with pinned():
-        return _with_draws(examine_own(bench.file, bench.kernel, bench.runner), bench.file, bench.runner)
+        found = _with_draws(examine_own(bench.file, bench.kernel, bench.runner), bench.file, bench.runner)
+        return changed(found, branches=branches_entry(bench.file, bench.kernel, bench.runner, quick=True))
 
 
 def _with_draws(trial: TrialEntry, file: AuditFile, runner: BlockRunner) -> TrialEntry:

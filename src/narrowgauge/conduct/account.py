@@ -138,6 +138,7 @@ def account(file: AuditFile, outcome: Outcome, kernel: KernelEntry, provenance: 
             plan=common_plan_entry(file, outcome),
         ),
         reach=outcome.trial.reach,
+        branches=outcome.branches,
         range=_range(outcome),
         averaging=averaging_entry(file, outcome, {name: one.allocation.levels for name, one in quantities.items()}),
         canary=msgspec.UNSET if outcome.trial.canary is None else outcome.trial.canary,

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+from narrowgauge.conduct.branches import branches_entry
 from narrowgauge.conduct.owntrial import examine_own
 from narrowgauge.conduct.separated import draws_entry
 from narrowgauge.conduct.stepcosts import step_costs
@@ -11,6 +12,7 @@ from narrowgauge.conduct.trial import examine
 from narrowgauge.measure.scenarios import Speed, speed
 from narrowgauge.measure.task import Bench, pinned
 from narrowgauge.record.audit import TrialEntry
+from narrowgauge.record.branches import BranchesEntry
 from narrowgauge.record.costs import CostEntry
 from narrowgauge.record.draws import DrawsEntry
 
@@ -27,7 +29,8 @@ class Prepared:
 
     `seconds` is the time of one path of `timed_level` in all arms, known beforehand where a kernel is run path by path:
     a block of it could take hours. `draws` are the approximate ones, if there are any; `costs` those of a step by
-    format, where they are to be measured; `speed` that of scenarios, where there are any.
+    format, where they are to be measured; `speed` that of scenarios, where there are any. `branches` says whether those
+    of a split cancel.
     """
 
     trial: TrialEntry
@@ -38,12 +41,13 @@ class Prepared:
     draws: DrawsEntry | None
     costs: dict[str, CostEntry] | None
     speed: Speed | None
+    branches: BranchesEntry | None
 
 
 def prepare(bench: Bench, costs: dict[str, CostEntry] | None = None) -> Prepared:
     """Run the trial at a bench, and measure costs where they are wanted and not known.
 
-    Raises what `examine` raises, or `examine_own`.
+    Raises what `examine` raises, or `examine_own`, and `branches_entry`.
     """
     runner, ladder, domain = bench.runner, bench.file.ladder, bench.file.domain
     timed = min(_TIMED_LEVEL, ladder.finest)
@@ -58,4 +62,5 @@ def prepare(bench: Bench, costs: dict[str, CostEntry] | None = None) -> Prepared
             draws=draws_entry(bench.file, runner.approximation),
             costs=step_costs(bench.file, runner) if bench.file.cost.measured and costs is None else costs,
             speed=None if domain is None else speed(runner, timed, min(domain.paths, bench.file.sampling.block)),
+            branches=branches_entry(bench.file, bench.kernel, runner),
         )

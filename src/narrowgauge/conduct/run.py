@@ -10,6 +10,7 @@ from typing import Protocol
 
 import msgspec
 
+from narrowgauge.conduct.branches import broken_splits
 from narrowgauge.conduct.prepare import prepare
 from narrowgauge.conduct.scenarios import DomainPlan, domain_plan
 from narrowgauge.conduct.stepcosts import with_costs
@@ -24,6 +25,7 @@ from narrowgauge.measure.store import Ledger
 from narrowgauge.measure.tally import LevelTally
 from narrowgauge.measure.task import Block, Key, pinned
 from narrowgauge.record.audit import TrialEntry
+from narrowgauge.record.branches import BranchesEntry
 from narrowgauge.record.costs import CostEntry
 from narrowgauge.record.draws import DrawsEntry
 
@@ -80,7 +82,8 @@ class Outcome:
     """All that was measured and judged; `alpha` is 1 - confidence of each look.
 
     `fingerprints` are those of the processes that measured, each once and in order; `draws` the approximate ones;
-    `costs` are measured ones; `study` what was looked at besides, None where that was stopped or not wanted.
+    `costs` are measured ones; `branches` is what came of comparing those of a split; `study` is what was looked at
+    besides, None where that was stopped or not wanted.
     """
 
     tallies: Mapping[int, LevelTally]
@@ -90,6 +93,7 @@ class Outcome:
     fingerprints: tuple[str, ...] = ()
     draws: DrawsEntry | None = None
     costs: dict[str, CostEntry] | None = None
+    branches: BranchesEntry | None = None
     study: Study | None = None
 
 
@@ -155,7 +159,8 @@ class _Conductor:
         for number, target in enumerate(looks, start=1):
             self._announce(number, len(looks), pending, target)
             for level in self._drawn(pending, target):
-                judgements[level] = judge_level(self._tallies[level], file, alpha)
+                broken = broken_splits(self._prepared.branches, level)
+                judgements[level] = judge_level(self._tallies[level], file, alpha, broken)
             pending = [level for level in pending if not self._settled(judgements[level])]
             if not pending:
                 break
@@ -167,6 +172,7 @@ class _Conductor:
             fingerprints=tuple(sorted(self._fingerprints)),
             draws=self._prepared.draws,
             costs=self._prepared.costs,
+            branches=self._prepared.branches,
             study=self._studied() if studied else None,
         )
 

@@ -27,6 +27,7 @@ class Purpose(IntEnum):
     AUDIT = 0
     IDENTITY = 1
     TRIAL = 2
+    BRANCHES = 3
     LINES = 4
     SCENARIO = 5  # the key of a block, then the number of the scenario; alone it is that of the scenarios themselves
 

@@ -43,6 +43,7 @@ from narrowgauge.kernel.audittables import (
     kind_of,
     shown,
 )
+from narrowgauge.kernel.branchestable import BranchesTable, filled
 from narrowgauge.kernel.domaintable import checked_box
 from narrowgauge.kernel.givenkeys import CHEAP, check_drawing, check_names, defaults_in_use, document, nearest, useless
 from narrowgauge.kernel.ownlimits import check_own
@@ -89,6 +90,7 @@ class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
     domain: DomainTable | None = None
     lines: LinesTable | None = None
     timed: CostTable | None = None
+    branches: BranchesTable | None = None
 
     @property
     def costs(self) -> CostTable:
@@ -165,7 +167,7 @@ class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
             elif name in ("parameters", "target"):
                 tables[name] = copy.deepcopy(table)
         tables["assumed"] = list(self.assumed)
-        rest = (self.draws, self.domain, self.lines)
+        rest = (self.draws, self.branches, self.domain, self.lines)
         return tables | {one.table: document(one, without) for one in rest if one is not None}
 
 
@@ -293,6 +295,9 @@ def _assembled(raw: dict[str, object], source: str, folder: Path, function: Call
         domain=_table(DomainTable, checked_box(raw)) if "domain" in raw else None,
         lines=_table(LinesTable, raw["lines"]) if "lines" in raw else None,
     )
+    if "branches" in raw:
+        table = filled(_table(BranchesTable, raw["branches"]), audit_file)
+        audit_file = msgspec.structs.replace(audit_file, branches=table)
     check_own(
         audit_file.kernel,
         formats=audit_file.formats,
@@ -340,8 +345,7 @@ def _draws(raw: Mapping[str, object]) -> DrawsTable | None:
 def _table(record: type[_Record], raw: object) -> _Record:
     """Return one table as its record; raise a TableError for an unknown, missing or wrong key."""
     values = raw if isinstance(raw, dict) else {}
-    fields = msgspec.structs.fields(record)
-    known = tuple(field.name for field in fields)
+    fields, known = msgspec.structs.fields(record), record.__struct_fields__
     for key in values:
         if key not in known:
             raise TableError(dotted(record.table, key), "unknown key" + nearest(key, known), ", ".join(known))

@@ -14,6 +14,7 @@ import msgspec
 
 from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.kernel.arms import Kind
+from narrowgauge.kernel.branchestable import BranchesTable
 from narrowgauge.kernel.domaintable import DomainTable
 from narrowgauge.kernel.drawstable import DrawsTable
 from narrowgauge.kernel.linestable import LinesTable
@@ -23,6 +24,7 @@ from narrowgauge.kernel.rules import RULES, Table, TableError, check_run, dotted
 __all__ = [
     "RULES",
     "TABLES",
+    "BranchesTable",
     "CommandTable",
     "CostTable",
     "DomainTable",
@@ -252,6 +254,7 @@ TABLES: dict[str, type[Table]] = {
         TargetTable,
         FormatsTable,
         DrawsTable,
+        BranchesTable,
         CostTable,
         SamplingTable,
         DomainTable,

@@ -22,6 +22,7 @@ from narrowgauge.errors import AuditFileError
 from narrowgauge.kernel.auditfile import bytes_of, most_steps
 from narrowgauge.kernel.auditparameters import check_parameter, plain
 from narrowgauge.kernel.audittables import TABLES, LadderTable, TableError, check_run, default_layout, dotted
+from narrowgauge.kernel.branchestable import BRANCH_MEANINGS, BRANCH_VALUES
 from narrowgauge.kernel.domaintable import domain_lines
 from narrowgauge.kernel.linestable import lines_draft
 
@@ -37,8 +38,8 @@ _TAKES_BY_NAME: tuple[tuple[str, re.Pattern[str]], ...] = (
     ("uniforms", re.compile(r"us?|.*uniforms?")),
 )
 _ELSEWHERE = ("kernel", "library", "command", "domain", "lines")  # written first or last, or in a function's place
-_OPTIONAL = ("target", "draws", "cost")
-_INSTEAD = ("draws.intervals", "draws.degree")  # not accepted beside the value shown for draws.approximate
+_OPTIONAL = ("target", "draws", "branches", "cost")
+_INSTEAD = ("draws.intervals", "draws.degree", "branches.library", "branches.symbol")  # not beside what is shown
 _COUNTS = ("steps", "paths")  # what a kernel that draws for itself is told
 _STEP_NAMES = re.compile(r"h|dt|delta_?t?|.*step(_?size)?|time_?step|tau")
 
@@ -72,6 +73,7 @@ _MEANINGS: dict[str, str] = {
     "draws.formats": "formats that are tried with them too; the default is the narrow ones",
     "cost.float64": "relative cost of one step of one path; the default is storage bits / 64",
     **{f"cost.{name}": "the same" for name in FORMATS if name != "float64"},
+    **BRANCH_MEANINGS,
     "cost.draws": "one draw",
     "cost.approximate_draws": "no default; one approximate draw, else as much as an exact one",
     "cost.path": "fixed cost of a path",
@@ -93,6 +95,7 @@ _VALUES: dict[str, object] = {
     "draws.degree": 9,
     "draws.formats": ("float16", "bfloat16", "float32"),
     "cost.approximate_draws": 0.0,
+    **BRANCH_VALUES,
     **{f"cost.{name}": row.bits / 64 for name, row in FORMATS.items()},
 }
 
@@ -116,7 +119,7 @@ def draft(target: str) -> str:
     factors, layout = _factors(function, draws) if takes != "rng" else (1, "")
     run = f"{PurePath(file).as_posix()}:{name}"
     finest = LadderTable(horizon=1.0, finest=0).finest_within(most_steps(factors))
-    values = {**_VALUES, "kernel.run": run, "ladder.finest": min(8, finest)}
+    values = {**_VALUES, "kernel.run": run, "branches.low": run, "ladder.finest": min(8, finest)}
     values["kernel.layout"] = default_layout(factors)
     parameters = _parameter_lines(function, _COUNTS if takes == "rng" else ())
     lines = [

@@ -9,6 +9,7 @@ import msgspec
 
 from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.kernel.audittables import TABLES, Table, TableError, dotted, kind_of, shown
+from narrowgauge.kernel.branchestable import defaults_of
 from narrowgauge.kernel.domaintable import scales_assumed
 from narrowgauge.kernel.drawstable import counting_keys
 
@@ -17,9 +18,8 @@ __all__ = ["CHEAP", "check_drawing", "check_names", "defaults_in_use", "document
 CHEAP = "approximate_draws"  # a cost that counts with [draws] alone
 
 _ORDER = (
-    *("kernel", "library", "command", "parameters", "ladder", "target", "formats", "draws", "cost", "sampling"),
-    "domain",
-    "lines",
+    *("kernel", "library", "command", "parameters", "ladder", "target", "formats", "draws", "branches", "cost"),
+    *("sampling", "domain", "lines"),
 )
 _REQUIRED = ("kernel", "ladder")
 _OWN = ("kernel.rounds", "cost.measured")  # keys that count for a kernel that rounds for itself alone
@@ -87,6 +87,8 @@ def defaults_in_use(raw: Mapping[str, object]) -> tuple[str, ...]:
             keys = [name for name in keys if isinstance(given, dict) and name in counting_keys(given)]
         if table == "lines":
             keys = [name for name in keys if name in ("paths", "search", "what_ifs")]  # the result has the rest
+        if table == "branches":
+            keys = [name for name in keys if isinstance(given, dict) and name in defaults_of(given)]
         if table == "cost" and given is not None:
             keys = [name for name in keys if name not in FORMATS]  # a format without a cost is not used
         if table == "domain":

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from typing import Literal
 
+from narrowgauge.record.branches import BranchesEntry
 from narrowgauge.record.canary import CanaryEntry
 from narrowgauge.record.draws import DrawsEntry
 from narrowgauge.record.plan import Entry
@@ -131,7 +132,7 @@ class TrialEntry(Entry, frozen=True, kw_only=True):
 
     `range` is None where float64 was stopped before it had met all constants. A kernel that rounds for itself has a
     `canary` and neither reach nor range; `identical` then says that two runs gave the same bits. `draws` are the
-    approximate ones, which are made but not tried.
+    approximate ones, which are made but not tried; `branches` is there where a trial is all that is run.
     """
 
     identical: bool
@@ -140,3 +141,4 @@ class TrialEntry(Entry, frozen=True, kw_only=True):
     canary: list[CanaryEntry] | None = None
     faults: list[FaultEntry]
     draws: DrawsEntry | None = None
+    branches: BranchesEntry | None = None
