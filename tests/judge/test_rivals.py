@@ -9,8 +9,9 @@ import numpy as np
 import pytest
 from judge_cases import NEAR, PATHS, audit, differences, level_tally, quantity
 
+from narrowgauge.judge.asked import coupled, level_costs, rmse_of
 from narrowgauge.judge.gain import Scheme
-from narrowgauge.judge.schemes import _Court, coupled, judge_level, level_costs, rmse_of
+from narrowgauge.judge.schemes import _Court, judge_level
 
 ALPHA = 0.01
 SPLIT_ONLY = {"narrow": ["float16"], "wide": ["float64"], "schemes": ["split"]}

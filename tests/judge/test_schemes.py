@@ -9,8 +9,9 @@ import pytest
 from judge_cases import NEAR, PATHS, audit, differences, level_tally, quantity, shape, uneven
 from scipy import optimize, stats
 
+from narrowgauge.judge.asked import budget_levels
 from narrowgauge.judge.gain import Scheme
-from narrowgauge.judge.schemes import budget_levels, judge_level
+from narrowgauge.judge.schemes import judge_level
 
 ALPHA = 0.01
 SPLIT_ONLY = {"narrow": ["float16"], "wide": ["float64"], "schemes": ["split"]}

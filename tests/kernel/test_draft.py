@@ -137,8 +137,8 @@ class TestText:
 
     def test_every_key_has_a_meaning(self):
         """Each key of the audit file has its one line, and no line is left over."""
-        assert sorted(draft_module._MEANINGS) == [key for key in DRAFTED if not key.startswith("lines.")]
-        assert all(0 < len(meaning) < 80 for meaning in draft_module._MEANINGS.values())
+        assert sorted(draft_module.MEANINGS) == [key for key in DRAFTED if not key.startswith("lines.")]
+        assert all(0 < len(meaning) < 80 for meaning in draft_module.MEANINGS.values())
 
     def test_every_key_is_there_once(self, tmp_path):
         """Each key of the audit file stands in its table of the draft once."""

@@ -14,8 +14,8 @@ from pathlib import Path
 
 import numpy as np
 
+from narrowgauge.judge.asked import level_costs
 from narrowgauge.judge.gain import LevelView, Scheme
-from narrowgauge.judge.schemes import level_costs
 from narrowgauge.kernel.auditfile import AuditFile, audit_file_from
 from narrowgauge.kernel.loading import find_kernel
 from narrowgauge.measure.block import BlockRunner

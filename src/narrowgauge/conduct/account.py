@@ -36,10 +36,11 @@ from narrowgauge.judge.accumulation import (
     signal_decay,
     usable,
 )
+from narrowgauge.judge.asked import budget_levels
 from narrowgauge.judge.finest import Beyond, FinestLevel, finest_on_ladder, over_quantities
 from narrowgauge.judge.gain import Scheme
 from narrowgauge.judge.intervals import binomial_upper, jackknife, means, variances
-from narrowgauge.judge.schemes import BIAS_SHARE, LEAST_EFFECTIVE_SIZE, budget_levels
+from narrowgauge.judge.schemes import BIAS_SHARE, LEAST_EFFECTIVE_SIZE
 from narrowgauge.kernel.arms import Arm
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.measure.arms import REFERENCE, arms_of

@@ -26,9 +26,9 @@ from narrowgauge.draws.coarsen import Draws
 from narrowgauge.draws.streams import GRAIN, Purpose
 from narrowgauge.draws.tape import Tape
 from narrowgauge.errors import AuditFileError, DispatchError, said
+from narrowgauge.judge.asked import rmse_of
 from narrowgauge.judge.branches import bias, differs, split_formats, ulps, wide_formats, within
 from narrowgauge.judge.intervals import Interval
-from narrowgauge.judge.schemes import rmse_of
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.branchlibrary import PairLibrary
 from narrowgauge.kernel.contract import check_parameters

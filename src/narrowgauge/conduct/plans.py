@@ -7,9 +7,9 @@ from typing import Any
 from narrowgauge.conduct.entries import finite, interval_fields, scheme_entry
 from narrowgauge.conduct.run import Outcome
 from narrowgauge.judge.allocation import Allocation, CommonLevel, LevelPlan, allocate, common_plan
+from narrowgauge.judge.asked import rmse_of
 from narrowgauge.judge.gain import LevelView, Scheme
 from narrowgauge.judge.saving import saving
-from narrowgauge.judge.schemes import rmse_of
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.measure.arms import REFERENCE
 from narrowgauge.record.audit import AllocationEntry, CommonLevelEntry, CommonPlanEntry, PlanEntry

@@ -15,9 +15,9 @@ import numpy.typing as npt
 from scipy import stats
 
 from narrowgauge.arithmetic.formats import FORMATS, Format
+from narrowgauge.judge.asked import budget_levels, rmse_of
 from narrowgauge.judge.gain import FEW_EVENTS
 from narrowgauge.judge.intervals import Interval, binomial_upper, jackknife, means
-from narrowgauge.judge.schemes import budget_levels, rmse_of
 from narrowgauge.kernel.arms import wider
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.measure.moments import Series

@@ -18,15 +18,10 @@ import math
 from dataclasses import dataclass
 from typing import Literal
 
+from narrowgauge.judge.asked import budget_levels, rmse_of
 from narrowgauge.judge.gain import Scheme
 from narrowgauge.judge.intervals import Interval
-from narrowgauge.judge.schemes import (
-    ArmJudgement,
-    LevelJudgement,
-    admission,
-    budget_levels,
-    rmse_of,
-)
+from narrowgauge.judge.schemes import ArmJudgement, LevelJudgement, admission
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.measure.arms import REFERENCE
 from narrowgauge.measure.tally import LevelTally

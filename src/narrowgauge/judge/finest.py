@@ -10,8 +10,9 @@ from scipy import stats
 
 from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.judge.accumulation import AccumulationFit, SignalDecay, correction_at, rejected
+from narrowgauge.judge.asked import level_costs
 from narrowgauge.judge.gain import Scheme
-from narrowgauge.judge.schemes import LevelJudgement, level_costs
+from narrowgauge.judge.schemes import LevelJudgement
 from narrowgauge.kernel.arms import Arm
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.measure.arms import REFERENCE

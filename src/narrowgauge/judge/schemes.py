@@ -18,7 +18,8 @@ from collections.abc import Collection, Mapping
 from dataclasses import dataclass, field
 from typing import Literal
 
-from narrowgauge.judge.gain import LevelCosts, LevelView, Scheme
+from narrowgauge.judge.asked import budget_levels, level_costs, rmse_of
+from narrowgauge.judge.gain import LevelView, Scheme
 from narrowgauge.judge.intervals import Interval
 from narrowgauge.kernel.arms import Arm, wider
 from narrowgauge.kernel.auditfile import AuditFile
@@ -35,11 +36,7 @@ __all__ = [
     "Reason",
     "Verdict",
     "admission",
-    "budget_levels",
-    "coupled",
     "judge_level",
-    "level_costs",
-    "rmse_of",
 ]
 
 Verdict = Literal["pays", "does not pay", "undecided"]
@@ -108,26 +105,6 @@ def admission(
 ) -> Admission:
     """Return whether a scheme may be used on a level; the reference alone and today alone are taken as they are."""
     return _Court(tally=tally, file=file, alpha=alpha, views=views).admission(scheme, rival=True)
-
-
-def coupled(file: AuditFile, level: int) -> bool:
-    """Whether a level is a difference of a fine and a coarse path."""
-    return level > 0 and file.kernel.coupling == "sum"
-
-
-def level_costs(file: AuditFile, level: int) -> LevelCosts:
-    """Return the costs of one level of an audit."""
-    steps = file.ladder.steps(level)
-    below = file.ladder.steps(level - 1) if coupled(file, level) else 0
-    return LevelCosts(steps=steps + below, draws=steps * file.kernel.factors, table=file.costs)
-
-
-def rmse_of(file: AuditFile, quantity: str) -> float | None:
-    """Return the target root-mean-square error of a quantity, or None without a target."""
-    if file.target is None:
-        return None
-    rmse = file.target.rmse
-    return rmse.get(quantity) if isinstance(rmse, dict) else rmse
 
 
 def _view(tally: LevelTally, file: AuditFile, quantity: str) -> LevelView:
@@ -390,11 +367,6 @@ class _Court:
             paths_needed=None,
             admitted_rmse=None,
         )
-
-
-def budget_levels(file: AuditFile) -> int:
-    """Return over how many levels the bias budget is shared: all, or one where levels are not added up."""
-    return len(file.ladder.levels) if file.kernel.coupling == "sum" else 1
 
 
 def _worst(row: Mapping[Scheme, Interval]) -> Interval:

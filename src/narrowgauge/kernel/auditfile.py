@@ -7,13 +7,12 @@ AuditFileError with the dotted key, what is wrong, and what is accepted.
 from __future__ import annotations
 
 import copy
-import re
 import sys
 import tomllib
 from collections.abc import Callable, Mapping
 from pathlib import Path
 from types import FunctionType
-from typing import Literal, TypeVar
+from typing import Literal
 
 import msgspec
 
@@ -39,15 +38,15 @@ from narrowgauge.kernel.audittables import (
     TargetTable,
     check_run,
     default_layout,
-    dotted,
     kind_of,
     shown,
 )
 from narrowgauge.kernel.branchestable import BranchesTable, filled
 from narrowgauge.kernel.domaintable import checked_box
-from narrowgauge.kernel.givenkeys import CHEAP, check_drawing, check_names, defaults_in_use, document, nearest, useless
+from narrowgauge.kernel.givenkeys import check_drawing, check_names, defaults_in_use, document, useless
 from narrowgauge.kernel.ownlimits import check_own
 from narrowgauge.kernel.owntables import with_run
+from narrowgauge.kernel.readtable import costs_of, draws_of, table_of
 
 __all__ = [
     "AuditFile",
@@ -62,7 +61,6 @@ __all__ = [
 ]
 
 _BLOCK_DRAWS, _SMALLEST_BLOCK = 2**22, 1024
-_Record = TypeVar("_Record", bound=Table)
 _WORTHWHILE: float = TargetTable(rmse=1.0).worthwhile
 
 
@@ -272,31 +270,31 @@ def _assembled(raw: dict[str, object], source: str, folder: Path, function: Call
         raise TableError("parameters", f"{shown(parameters)} is {kind_of(parameters)}", "a table")
     for name, value in parameters.items():
         check_parameter(name, value)
-    library = _table(LibraryTable, raw["library"]) if "library" in raw else None
-    command = _table(CommandTable, raw["command"]) if "command" in raw else None
+    library = table_of(LibraryTable, raw["library"]) if "library" in raw else None
+    command = table_of(CommandTable, raw["command"]) if "command" in raw else None
     kernel = raw["kernel"] = with_run(raw["kernel"], library, command)
     if isinstance(kernel, dict) and isinstance(kernel.get("run"), str) and not (function or library or command):
         check_run(kernel["run"])
     audit_file = AuditFile(
-        kernel=_table(KernelTable, kernel),
+        kernel=table_of(KernelTable, kernel),
         library=library,
         command=command,
         parameters=parameters,
-        ladder=_table(LadderTable, raw["ladder"]),
-        target=_table(TargetTable, raw["target"]) if "target" in raw else None,
-        formats=_table(FormatsTable, raw.get("formats", {})),
-        cost=_cost(raw),
-        sampling=_table(SamplingTable, raw.get("sampling", {})),
+        ladder=table_of(LadderTable, raw["ladder"]),
+        target=table_of(TargetTable, raw["target"]) if "target" in raw else None,
+        formats=table_of(FormatsTable, raw.get("formats", {})),
+        cost=costs_of(raw),
+        sampling=table_of(SamplingTable, raw.get("sampling", {})),
         source=source,
         folder=folder,
         function=function,
         assumed=defaults_in_use(raw),
-        draws=_draws(raw),
-        domain=_table(DomainTable, checked_box(raw)) if "domain" in raw else None,
-        lines=_table(LinesTable, raw["lines"]) if "lines" in raw else None,
+        draws=draws_of(raw),
+        domain=table_of(DomainTable, checked_box(raw)) if "domain" in raw else None,
+        lines=table_of(LinesTable, raw["lines"]) if "lines" in raw else None,
     )
     if "branches" in raw:
-        table = filled(_table(BranchesTable, raw["branches"]), audit_file)
+        table = filled(table_of(BranchesTable, raw["branches"]), audit_file)
         audit_file = msgspec.structs.replace(audit_file, branches=table)
     check_own(
         audit_file.kernel,
@@ -315,79 +313,6 @@ def _assembled(raw: dict[str, object], source: str, folder: Path, function: Call
             key = f"cost.{name}"
             raise TableError(key, "missing, and the audit uses this format", RULES[key].accepted)
     return audit_file
-
-
-def _cost(raw: Mapping[str, object]) -> CostTable:
-    """Return the costs; without the table those by storage. An approximate draw costs an exact one's unless it says."""
-    cost = _table(CostTable, raw["cost"]) if "cost" in raw else CostTable.by_storage()
-    if "draws" not in raw or cost.approximate_draws is not None:
-        return cost
-    return msgspec.structs.replace(cost, approximate_draws=cost.draws)
-
-
-def _draws(raw: Mapping[str, object]) -> DrawsTable | None:
-    """Return the table of approximate draws, tried in the narrow formats unless it says in which; None without one."""
-    kernel, cost = raw["kernel"], raw.get("cost")
-    if "draws" not in raw:
-        if isinstance(cost, dict) and CHEAP in cost:
-            raise TableError(f"cost.{CHEAP}", "there are no approximate draws", "no such key, or a table [draws]")
-        return None
-    draws = _table(DrawsTable, raw["draws"])
-    if isinstance(kernel, dict):
-        draws.check_takes(kernel.get("takes"))
-    if draws.formats:
-        return draws
-    if isinstance(raw["draws"], dict) and "formats" in raw["draws"]:
-        draws.refuse("formats", "the array is empty")
-    return msgspec.structs.replace(draws, formats=_table(FormatsTable, raw.get("formats", {})).narrow)
-
-
-def _table(record: type[_Record], raw: object) -> _Record:
-    """Return one table as its record; raise a TableError for an unknown, missing or wrong key."""
-    values = raw if isinstance(raw, dict) else {}
-    fields, known = msgspec.structs.fields(record), record.__struct_fields__
-    for key in values:
-        if key not in known:
-            raise TableError(dotted(record.table, key), "unknown key" + nearest(key, known), ", ".join(known))
-    for field in fields:
-        if field.required and field.name not in values:
-            key = f"{record.table}.{field.name}"
-            raise TableError(key, "missing", RULES[key].accepted)
-    try:
-        return msgspec.convert(values, record)
-    except msgspec.ValidationError as problem:
-        if isinstance(problem.__cause__, TableError):
-            raise problem.__cause__ from None
-        raise _wrong_type(record.table, values, str(problem)) from None
-
-
-def _wrong_type(table: str, values: dict[str, object], message: str) -> TableError:
-    """Return the refusal of a value of the wrong type; the converter's message only tells where it stands."""
-    place = re.search(r"at `\$\.(\w+)(?:\[(\d+|\.\.\.)\])?`$", message)
-    if place is None:  # its wording is not promised from version to version
-        return TableError(table, message, f"a table with keys of {', '.join(TABLES[table].__struct_fields__)}")
-    name, inside = place[1], place[2]
-    key, value = f"{table}.{name}", values[name]
-    accepted = RULES[key].accepted
-    if inside and isinstance(value, dict):
-        # The converter does not say which key of a free table it was.
-        quantity = next(quantity for quantity, number in value.items() if not _is_number(number))
-        key, value = dotted(table, name, quantity), value[quantity]
-    elif inside and isinstance(value, list):
-        key, value = f"{key}[{inside}]", value[int(inside)]
-    if message.startswith("Invalid enum value"):
-        return TableError(key, f"{shown(value)} is not accepted", accepted)
-    if message.startswith("Number out of range"):
-        return TableError(key, f"{shown(value)} is beyond float64", accepted)
-    return TableError(key, f"{shown(value)} is {kind_of(value)}", accepted)
-
-
-def _is_number(value: object) -> bool:
-    try:
-        msgspec.convert(value, float)
-    except msgspec.ValidationError:
-        return False
-    return True
 
 
 def _check_ladder(kernel: KernelTable, ladder: LadderTable) -> None:

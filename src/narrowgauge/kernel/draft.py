@@ -17,13 +17,12 @@ from pathlib import Path, PurePath
 
 import msgspec
 
-from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.errors import AuditFileError
 from narrowgauge.kernel.auditfile import bytes_of, most_steps
 from narrowgauge.kernel.auditparameters import check_parameter, plain
 from narrowgauge.kernel.audittables import TABLES, LadderTable, TableError, check_run, default_layout, dotted
-from narrowgauge.kernel.branchestable import BRANCH_MEANINGS, BRANCH_VALUES
 from narrowgauge.kernel.domaintable import domain_lines
+from narrowgauge.kernel.draftwords import MEANINGS, VALUES
 from narrowgauge.kernel.linestable import lines_draft
 
 __all__ = ["draft"]
@@ -42,62 +41,6 @@ _OPTIONAL = ("target", "draws", "branches", "cost")
 _INSTEAD = ("draws.intervals", "draws.degree", "branches.library", "branches.symbol")  # not beside what is shown
 _COUNTS = ("steps", "paths")  # what a kernel that draws for itself is told
 _STEP_NAMES = re.compile(r"h|dt|delta_?t?|.*step(_?size)?|time_?step|tau")
-
-# One line of meaning for every key; what TABLES has and this has not is found by a test.
-_MEANINGS: dict[str, str] = {
-    "kernel.run": "file and function; the path is relative to the folder of this file",
-    "kernel.takes": "increments, normals, uniforms or rng",
-    "kernel.factors": "draws per step",
-    "kernel.layout": "order of the axes of the array of draws; without paths, one path a call",
-    "kernel.coupling": '"none": levels are measured without their differences',
-    "kernel.modules": "further modules and packages whose NumPy is rounded",
-    "kernel.shared": "modules of theirs that cannot be copied, run as they are and not rounded",
-    "kernel.allow": 'lines such as "model.py:41" where values may leave and go on unrounded',
-    "kernel.rounds": '"itself": not emulated; the kernel gets its draws in the format\'s own type',
-    "ladder.horizon": "time that a path covers; fill in",
-    "ladder.coarsest_steps": "steps of a path on level 0",
-    "ladder.refinement": "factor from the steps of a level to those of the next",
-    "ladder.finest": "last level, the first is 0; fill in",
-    "target.rmse": "root mean square error asked for; or a table of one by quantity",
-    "target.bias_share": "share of it that rounding may shift the mean by",
-    "target.worthwhile": "an edge below this ratio of costs is not worth having",
-    "target.largest_correction": "no default; bound on what a wider format changes in a yes/no quantity",
-    "formats.today": "the format the kernel runs in now",
-    "formats.narrow": "formats that are tried",
-    "formats.wide": "formats that may be the wide half of a split",
-    "formats.schemes": "one format alone, or split into a low and a correction branch",
-    "draws.approximate": "approximate normals: constant, linear, polynomial, file.py:function",
-    "draws.cells": "of constant: a power of two",
-    "draws.intervals": "of linear, in place of cells: dyadic intervals on either side of 1/2",
-    "draws.degree": "of polynomial, in place of cells",
-    "draws.formats": "formats that are tried with them too; the default is the narrow ones",
-    "cost.float64": "relative cost of one step of one path; the default is storage bits / 64",
-    **{f"cost.{name}": "the same" for name in FORMATS if name != "float64"},
-    **BRANCH_MEANINGS,
-    "cost.draws": "one draw",
-    "cost.approximate_draws": "no default; one approximate draw, else as much as an exact one",
-    "cost.path": "fixed cost of a path",
-    "cost.measured": 'costs of a step from measured times, only with rounds = "itself"',
-    "sampling.block": "most paths of a block, a multiple of 1024",
-    "sampling.paths": "paths of a level at the first look",
-    "sampling.most_paths": "paths of a level at which looking ends",
-    "sampling.confidence": "confidence of every interval",
-    "sampling.seed": "of the random numbers",
-}
-# Values for keys that have no default; those of the ladder have to be there for the file to be read.
-_VALUES: dict[str, object] = {
-    "ladder.horizon": 1.0,
-    "target.rmse": 0.002,
-    "target.largest_correction": 1.0,
-    "draws.approximate": "constant",
-    "draws.cells": 1024,
-    "draws.intervals": 16,
-    "draws.degree": 9,
-    "draws.formats": ("float16", "bfloat16", "float32"),
-    "cost.approximate_draws": 0.0,
-    **BRANCH_VALUES,
-    **{f"cost.{name}": row.bits / 64 for name, row in FORMATS.items()},
-}
 
 
 def draft(target: str) -> str:
@@ -119,7 +62,7 @@ def draft(target: str) -> str:
     factors, layout = _factors(function, draws) if takes != "rng" else (1, "")
     run = f"{PurePath(file).as_posix()}:{name}"
     finest = LadderTable(horizon=1.0, finest=0).finest_within(most_steps(factors))
-    values = {**_VALUES, "kernel.run": run, "branches.low": run, "ladder.finest": min(8, finest)}
+    values = {**VALUES, "kernel.run": run, "branches.low": run, "ladder.finest": min(8, finest)}
     values["kernel.layout"] = default_layout(factors)
     parameters = _parameter_lines(function, _COUNTS if takes == "rng" else ())
     lines = [
@@ -199,7 +142,7 @@ def _line(key: str, values: dict[str, object], note: str = "") -> str:
     value = values.get(key, field.default)
     # Where the whole table is optional, its required key is a comment too.
     optional = "" if note or (field.required and table not in _OPTIONAL) else "# " * (1 + (key in _INSTEAD))
-    return f"{optional}{name} = {_toml(value)}  # {note or _MEANINGS[key]}"
+    return f"{optional}{name} = {_toml(value)}  # {note or MEANINGS[key]}"
 
 
 def _contract(function: ast.FunctionDef, takes: str) -> list[str]:
@@ -241,7 +184,7 @@ def _positional(function: ast.FunctionDef) -> list[ast.arg]:
 
 def _takes_lines(function: ast.FunctionDef, draws: str, takes: str) -> list[str]:
     by = "as it takes paths" if takes == "rng" and "paths" in _named(function) else f"by the name of {draws}"
-    note = f"{by}; {_MEANINGS['kernel.takes']}" if takes else "guessed; check"
+    note = f"{by}; {MEANINGS['kernel.takes']}" if takes else "guessed; check"
     return [_line("kernel.takes", {"kernel.takes": takes or "increments"}, note)]
 
 

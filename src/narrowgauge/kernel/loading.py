@@ -18,16 +18,17 @@ from narrowgauge.arithmetic.arithmetic import Arithmetic
 from narrowgauge.dispatch.copies import Maker, PrivateCopy, copy_function, new_setting
 from narrowgauge.dispatch.feed import Feed
 from narrowgauge.dispatch.importing import Copies
-from narrowgauge.dispatch.modules import STOOD_IN, Found, Sources
+from narrowgauge.dispatch.modules import Sources
 from narrowgauge.dispatch.setting import Observer, Place
 from narrowgauge.errors import AuditFileError, DispatchError, KernelError, said
 from narrowgauge.kernel.auditfile import AuditFile
-from narrowgauge.kernel.audittables import RULES, KernelTable, LibraryTable, shown
+from narrowgauge.kernel.audittables import KernelTable, LibraryTable
 from narrowgauge.kernel.branchlibrary import PairLibrary
 from narrowgauge.kernel.command import Command
 from narrowgauge.kernel.fingerprint import fingerprint
 from narrowgauge.kernel.identity import Origin, origin_of_sources
 from narrowgauge.kernel.library import Library
+from narrowgauge.kernel.listed import TWICE, allowed_lines, check_listed, compiled_code, located_file, sources_of
 
 __all__ = [
     "WORKER",
@@ -40,8 +41,6 @@ __all__ = [
     "refuse_nested",
 ]
 
-_OWN = __name__.partition(".")[0]
-_TWICE = "a module that can be executed twice; else list it under kernel.shared, where it is not rounded"
 WORKER = "NARROWGAUGE_WORKER"  # in the environment of a worker process
 _EXECUTING: ContextVar[bool] = ContextVar("_EXECUTING", default=False)
 
@@ -144,15 +143,15 @@ def find_kernel(audit_file: AuditFile) -> KernelSource:
     target, _, name = run.rpartition(":")
     function, path = audit_file.function, None
     if function is None:
-        path = _located(target, audit_file)
+        path = located_file(target, audit_file)
     elif isinstance(function, FunctionType):
         path = Path(function.__code__.co_filename)
-    sources = _sources(audit_file, function, path, target)
+    sources = sources_of(audit_file, function, path, target)
     code, module = None, target
     if function is None and path is not None:
         module = sources.name_of(path) or (path.stem if target.endswith(".py") else target)
-        code = _compiled(sources, sources.place(module, str(path)), "kernel.run", source)
-    _check_listed(audit_file, sources)
+        code = compiled_code(sources, sources.place(module, str(path)), "kernel.run", source)
+    check_listed(audit_file, sources)
     return KernelSource(
         run=run,
         source=source,
@@ -161,7 +160,7 @@ def find_kernel(audit_file: AuditFile) -> KernelSource:
         module=module,
         function=function,
         sources=sources,
-        allowed=_allowed(audit_file, sources, path),
+        allowed=allowed_lines(audit_file, sources, path),
         approximation=_approximation(audit_file),
         branches=_branches(audit_file),
     )
@@ -309,96 +308,6 @@ def _raise_uncopied(kernel: KernelSource, copies: Copies, problem: BaseException
     else:
         return
     own = name == kernel.module
-    accepted = "a module that can be executed twice" if own else _TWICE
+    accepted = "a module that can be executed twice" if own else TWICE
     key = "kernel.run" if own else "kernel.modules"
     raise AuditFileError(kernel.source, key, f"{name} cannot be copied: {reason}", accepted) from problem
-
-
-def _sources(audit_file: AuditFile, function: Callable[..., object] | None, path: Path | None, target: str) -> Sources:
-    """Return where listed modules are searched for: the folder of a kernel that is no part of a package comes first."""
-    beside = [] if path is None else [path.parent]
-    inside = "." in function.__module__ if function is not None else not target.endswith(".py")
-    # A package may hold a module of its own name, which must not hide it: its folder comes last.
-    folders = [audit_file.folder] if inside else [*beside, audit_file.folder]
-    return Sources(folders, audit_file.kernel.modules, audit_file.kernel.shared, last=beside)
-
-
-def _check_listed(audit_file: AuditFile, sources: Sources) -> None:
-    """Raise AuditFileError at the first listed module that is not there, or of which no copy can be made."""
-    source = audit_file.source
-    for key, names in (("kernel.modules", sources.listed), ("kernel.shared", sources.shared)):
-        for name in names:
-            found = sources.find(name)
-            if name.partition(".")[0] == _OWN and key == "kernel.modules":
-                raise AuditFileError(source, key, f"{name} is part of the audit itself", "modules of the kernel's own")
-            if name.partition(".")[0] in STOOD_IN:
-                what = f"{name} belongs to {name.partition('.')[0]}, for which every copy has a stand-in"
-                raise AuditFileError(source, key, what, "modules of the kernel's own")
-            if found is None:
-                what = f"no Python module {name!r}"
-                raise AuditFileError(source, key, what, "a module beside the kernel, or an importable one")
-            if key == "kernel.shared":
-                continue
-            if found.instead:
-                what = f"{name} cannot be copied: it is compiled, without Python source ({found.instead})"
-                raise AuditFileError(source, key, what, _TWICE)
-            if found.file is not None:
-                _compiled(sources, found, key, source)
-
-
-def _allowed(audit_file: AuditFile, sources: Sources, own: Path | None) -> dict[str, Place]:
-    """Return the lines of kernel.allow; AuditFileError at the first that is no line of a file that is copied."""
-    found = {}
-    if audit_file.kernel.allow:
-        copied = {file.resolve() for file in [*sources.files(), *([] if own is None else [own])]}
-    for entry in audit_file.kernel.allow:
-        name, _, number = entry.rpartition(":")
-        path = (audit_file.folder / name).resolve()
-        what, accepted = "", RULES["kernel.allow"].accepted
-        if not path.is_file():
-            what = f"no such file: {path}"
-        elif path not in copied:
-            what, accepted = "that file is not copied", "lines of the kernel's file and of those in kernel.modules"
-        elif int(number) > (lines := len(sources.text(str(path)).splitlines())):
-            what, accepted = f"the file ends with line {lines}", f"a line from 1 to {lines}"
-        if what:
-            raise AuditFileError(audit_file.source, "kernel.allow", f"{shown(entry)}: {what}", accepted)
-        found[entry] = Place(str(path), int(number))
-    return found
-
-
-def _compiled(sources: Sources, found: Found, key: str, source: str) -> CodeType:
-    """Return the code of a module; AuditFileError where it cannot be read or is not Python."""
-    path = found.file
-    try:
-        return sources.code(found)
-    except OSError as problem:
-        raise AuditFileError(source, key, f"cannot read {path}: {problem.strerror}", "a Python file") from None
-    except (SyntaxError, ValueError) as problem:
-        line = getattr(problem, "lineno", None)
-        place = f"{path}:{line}" if line else str(path)
-        what = getattr(problem, "msg", str(problem))
-        raise AuditFileError(source, key, f"{place} is not Python: {what}", "a Python file") from None
-
-
-def _located(target: str, audit_file: AuditFile) -> Path:
-    """Return the file of a path or of an importable module; nothing is imported."""
-    if target.endswith(".py"):
-        path = audit_file.folder / target
-        if path.is_file():
-            return path.resolve()
-        raise AuditFileError(
-            audit_file.source,
-            "kernel.run",
-            f"no such file: {path}",
-            "a Python file, relative to the audit file",
-        )
-    found = Sources([audit_file.folder]).find(target)
-    if found is not None and found.file is not None:
-        return Path(found.file)
-    raise AuditFileError(
-        audit_file.source,
-        "kernel.run",
-        f"no Python module {target!r}",
-        "a file ending in .py, or an importable module",
-    )
