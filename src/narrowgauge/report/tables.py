@@ -15,7 +15,6 @@ from narrowgauge.record.audit import (
     ArmEntry,
     AuditRecord,
     CommonPlanEntry,
-    LevelEntry,
     PartsEntry,
     PlanEntry,
     QuantityEntry,
@@ -33,6 +32,8 @@ __all__ = [
     "common_table",
     "format_table",
     "missing_figures",
+    "missing_gains",
+    "missing_noise",
     "parts_table",
     "plan_table",
     "signal_table",
@@ -190,6 +191,11 @@ def _shares(levels: Sequence[PlanEntry]) -> list[str]:
 
 def missing_figures(record: AuditRecord, entry: QuantityEntry) -> list[str]:
     """Return why there are en dashes in the first two tables, one sentence for each kind."""
+    return [*missing_noise(record, entry), *missing_gains(record, entry)]
+
+
+def missing_noise(record: AuditRecord, entry: QuantityEntry) -> list[str]:
+    """Return why there are en dashes in the table of signal and noise."""
     found = []
     lost = [level.level for level in entry.levels if level.reference.level_variance is None]
     if lost:
@@ -200,12 +206,12 @@ def missing_figures(record: AuditRecord, entry: QuantityEntry) -> list[str]:
         for words in dict.fromkeys(_why(arm) for _, arm in dashes):
             levels = levels_named(level for level, arm in dashes if _why(arm) == words)
             found.append(f"no noise of {clean(name)} on {levels}: {words}")
-    found += _missing_gains(record, entry.levels)
     return found
 
 
-def _missing_gains(record: AuditRecord, levels: Sequence[LevelEntry]) -> Iterable[str]:
+def missing_gains(record: AuditRecord, entry: QuantityEntry) -> Iterable[str]:
     """Return why gains and break-even ratios are missing."""
+    levels = entry.levels
     nothing = [level.level for level in levels if level.best is not None and level.best.gain is None]
     if nothing:
         yield f"no gain on {levels_named(nothing)}: {today(record)} has no finite variance there to compare with"
