@@ -24,7 +24,7 @@ class Browser:
     """A browser process; `events` holds what it has told since the last `take`."""
 
     def __init__(self, program):
-        self._folder = tempfile.TemporaryDirectory(prefix="browser-")
+        self._folder = tempfile.TemporaryDirectory(prefix="browser-", ignore_cleanup_errors=True)
         read_here, write_there = os.pipe()
         read_there, write_here = os.pipe()
         options = [
@@ -65,7 +65,8 @@ class Browser:
         return self
 
     def __exit__(self, *_):
-        self._process.terminate()
+        self._session = None
+        self.call("Browser.close")
         self._process.wait(SECONDS)
         os.close(self._read)
         os.close(self._write)

@@ -65,6 +65,13 @@ CUT = """
   }).map(t => t.textContent);
 })
 """
+OVERLAID = """
+[...document.querySelectorAll('figure svg')].filter(s => s.getBoundingClientRect().width > 0).flatMap(s => {
+  const all = [...s.querySelectorAll('text')].map(t => [t.textContent, t.getBoundingClientRect()]);
+  return all.flatMap(([a, p], n) => all.slice(n + 1).filter(([b, q]) => p.left < q.right - 2 && q.left < p.right - 2
+    && p.top < q.bottom - 5 && q.top < p.bottom - 5).map(([b, q]) => a + ' over ' + b));
+})
+"""
 BROKEN_LINKS = """
 [...document.querySelectorAll('a[href]')].map(a => a.getAttribute('href'))
   .filter(h => !h.startsWith('#') || !document.getElementById(h.slice(1)))
@@ -82,7 +89,7 @@ def test_the_page_is_whole_everywhere(browser, opened, scripts, width, dark):
     assert {url for url in requested if not url.startswith("data:")} == {opened.absolute().as_uri()}
     assert browser.told("Log.entryAdded", "Runtime.consoleAPICalled", "Runtime.exceptionThrown") == []
     assert browser.value("document.documentElement.scrollWidth") <= width
-    for expression in (WIDER, NOT_DRAWN, CUT, BROKEN_LINKS, DOUBLE_IDS):
+    for expression in (WIDER, NOT_DRAWN, CUT, OVERLAID, BROKEN_LINKS, DOUBLE_IDS):
         assert browser.value(expression) == [], expression
     ground = browser.value("getComputedStyle(document.body).backgroundColor")
     assert (ground == "rgb(20, 24, 27)") == dark

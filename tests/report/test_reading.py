@@ -122,6 +122,10 @@ def test_a_field_that_nobody_knows():
             lambda found: found["quantities"]["option"]["levels"][0]["best"].update(narrow="float8"),
             "quantities.option.levels[0].best: its scheme names an arm that is not there",
         ),
+        (
+            lambda found: found["rules"].update(levels_sharing=0),
+            "rules.levels_sharing: at least one level shares the target",
+        ),
         (lambda found: found["arms"]["float16"].update(format="half"), "arms.float16.format: 'half' is no format"),
     ],
 )

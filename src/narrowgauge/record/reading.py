@@ -81,6 +81,8 @@ def _dangling(record: AuditRecord) -> Iterator[tuple[str, str]]:
         if arm.format not in _FORMATS:
             yield f"arms.{name}.format", f"{arm.format!r} is no format"
             return
+    if record.rules.levels_sharing < 1:
+        yield "rules.levels_sharing", "at least one level shares the target"
     ladders = {tuple(level.level for level in entry.levels) for entry in record.quantities.values()}
     if len(ladders) > 1 or () in ladders:
         yield "quantities", "they do not have the same levels, at least one"

@@ -57,7 +57,8 @@ def measured(record: AuditRecord) -> list[Block]:
     blocks.append(_listed("The limits by which figures became verdicts", _rules(record)))
 
     def one(name: str, entry: QuantityEntry) -> Iterable[Block]:
-        yield tabled(f"The reference, float64, on each level of {clean(name)}", _reference(record, entry))
+        yield tabled(f"Levels and paths of {clean(name)}", _sample(record, entry))
+        yield tabled(f"The reference, float64, on each level of {clean(name)}", _reference(entry))
         yield tabled(f"Rounding errors of {clean(name)} by format and level", _errors(record, name))
         if any(level.corrections for level in entry.levels):
             yield tabled(f"Corrections of {clean(name)} by pair of formats and level", _corrections(record, entry))
@@ -124,33 +125,57 @@ def _value(value: object) -> str:
     return setting_value(value)
 
 
-def _reference(record: AuditRecord, entry: QuantityEntry) -> Ruled:
+def _sample(record: AuditRecord, entry: QuantityEntry) -> Ruled:
     sound = record.rules.telescoping_se
-    names = ("level", "steps", "h", "paths", "blocks", "mean", "its error", "level mean", "its error")
-    more = ("level variance", "its error", "kurtosis", "apart from below")
-    table = Ruled(*((name, "number") for name in (*names, *more)))
+    names = ("level", "steps", "h", "paths", "blocks", "standard errors apart from the level below")
+    table = Ruled(*((name, "number") for name in names))
     for level in entry.levels:
-        own, below = level.reference, level.telescoping
-        apart = NONE
+        below, apart = level.telescoping, NONE
         if below is not None and below.difference is not None and below.se:
-            apart = f"{shown_edge(below.difference / below.se, (-sound, sound))} se"
-        cells = [
+            apart = shown_edge(below.difference / below.se, (-sound, sound))
+        cells = (
             count(level.level),
             count(level.steps),
             setting_value(level.h),
             count(level.paths),
             count(level.blocks),
-        ]
-        cells += [figure(own.mean, 6), figure(own.mean_se), figure(own.level_mean), figure(own.level_mean_se)]
-        cells += [figure(own.level_variance), figure(own.level_variance_se), figure(own.level_kurtosis), apart]
-        table.add_row(*map(Text, cells))
+        )
+        table.add_row(*map(Text, (*cells, apart)))
+    return table
+
+
+def _reference(entry: QuantityEntry) -> Ruled:
+    names = (
+        "level",
+        "mean",
+        "its error",
+        "mean of the difference",
+        "its error",
+        "variance of it",
+        "its error",
+        "kurtosis",
+    )
+    table = Ruled(*((name, "number") for name in names))
+    for level in entry.levels:
+        own = level.reference
+        cells = [count(level.level), figure(own.mean, 6), figure(own.mean_se), figure(own.level_mean)]
+        cells += [figure(own.level_mean_se), figure(own.level_variance), figure(own.level_variance_se)]
+        table.add_row(*map(Text, (*cells, figure(own.level_kurtosis))))
     return table
 
 
 def _errors(record: AuditRecord, name: str) -> Ruled:
     entry, share = record.quantities[name], bias_share(record, name)
     thresholds = (0.0,) if share is None else (-share, 0.0, share)
-    names = ("level", "mean error", "its error", "error variance", "its error", "shift of the mean", "non-finite")
+    names = (
+        "level",
+        "mean error",
+        "its error",
+        "error variance",
+        "its error",
+        "shift of the mean under its scheme",
+        "non-finite",
+    )
     table = Ruled(("format", "unbroken"), *((name, "number") for name in names))
     arms = dict.fromkeys(arm for level in entry.levels for arm in level.arms)
     for arm in arms:

@@ -14,6 +14,7 @@ from narrowgauge.report.tables import VERDICT_STYLES
 
 __all__ = ["Block", "Cell", "Drawing", "Part", "Points", "Section", "Table", "Words", "points", "tabled", "visible"]
 
+_PHONE = 40  # characters across
 _MARKS = dict(zip(VERDICT_STYLES.values(), ("yes", "no", "open"), strict=True))
 
 
@@ -50,6 +51,15 @@ class Table:
     caption: str
     columns: tuple[tuple[str, str], ...]
     rows: tuple[tuple[Cell, ...], ...]
+
+    @property
+    def slim(self) -> bool:
+        """Whether the table fits a phone as it is; else each of its rows becomes a block there."""
+        widths = []
+        for place, (heading, _) in enumerate(self.columns):
+            words = max(map(len, heading.split()), default=0)
+            widths.append(max(words, *(len(row[place].text) for row in self.rows)) if self.rows else words)
+        return sum(widths) + 2 * len(widths) <= _PHONE
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

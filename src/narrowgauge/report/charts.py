@@ -66,7 +66,11 @@ class Tick:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class LineChart:
-    """Series over ticks; `measured_to` is where extrapolation begins, `guide` a straight line and its name."""
+    """Series over ticks.
+
+    `measured_to` is where extrapolation begins, `rings` go around what is to be found, `guide` is a straight line and
+    its name.
+    """
 
     across: str
     below: str
@@ -74,6 +78,7 @@ class LineChart:
     ticks: tuple[Tick, ...]
     series: tuple[Series, ...]
     measured_to: float | None = None
+    rings: tuple[tuple[float, float], ...] = ()
     guide: tuple[tuple[tuple[float, float], tuple[float, float]], str] | None = None
 
 

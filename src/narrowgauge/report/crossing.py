@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import Literal
 
 from narrowgauge.arithmetic.formats import FORMATS
@@ -16,6 +17,7 @@ from narrowgauge.report.wording import count
 __all__ = ["Crossing", "Signal", "crossing_chart", "crossing_of", "fitted_law", "law_at", "signal_of"]
 
 _FARTHEST = 64  # levels beyond the ladder at which nobody looks any more
+_MOST_STEPS = 500.0  # their logarithm to base two: the square of so many is still a number
 _DRAWN_BEYOND = 6
 _FINEST = 4  # levels by which the signal's decay is known
 _STEPS = 8  # parts of a level between which a law is drawn straight
@@ -80,7 +82,7 @@ def signal_of(record: AuditRecord, entry: QuantityEntry) -> Signal | None:
     if order is None or not levels or not coupled(record):
         return None
     beta = order * math.log2(_refinement(record))
-    heights = [math.log2(v) + beta * one.level for v, one in zip(variances, levels, strict=True) if v]
+    heights = [math.log2(v) + beta * one.level for v, one in zip(variances, levels, strict=True) if v and v > 0.0]
     return Signal(a=sum(heights) / len(heights), beta=beta) if len(heights) == len(levels) else None
 
 
@@ -89,6 +91,8 @@ def law_at(record: AuditRecord, law: LawEntry, arm: str, finest: LevelEntry, lev
     if law.floor is None or law.walk is None or law.drift is None:
         return None
     logarithm = math.log2(finest.steps) + (level - finest.level) * math.log2(_refinement(record))
+    if logarithm > _MOST_STEPS:
+        return None
     n = 2.0**logarithm
     total = law.floor + law.walk * n + law.drift * n**2
     return math.log2(_roundoff(record, arm)) + 0.5 * math.log2(total) if total > 0.0 else None
@@ -125,6 +129,7 @@ def crossing_chart(record: AuditRecord, entry: QuantityEntry) -> LineChart | Non
                 dashed=_curve(record, law, arm, entry, (finest.level, end)) if law and beyond else (),
             )
         )
+    met = [_meeting(lines[0], noise) for noise in lines[1:]]
     levels = range(entry.levels[0].level, end + 1)
     steps = {level.level: level.steps for level in entry.levels}
     return LineChart(
@@ -133,8 +138,31 @@ def crossing_chart(record: AuditRecord, entry: QuantityEntry) -> LineChart | Non
         up="standard deviation, in the unit of the quantity",
         ticks=tuple(Tick(x, str(x), count(steps[x]) if x in steps else "") for x in levels),
         series=tuple(lines),
+        rings=tuple(place for place in met if place is not None),
         measured_to=finest.level if beyond else None,
     )
+
+
+def _meeting(signal: Series, noise: Series) -> tuple[float, float] | None:
+    """Return where the line of the noise first reaches that of the signal from below, both straight between points."""
+    own, other = dict((*signal.solid, *signal.dashed)), dict((*noise.solid, *noise.dashed))
+    if not own or not other:
+        return None
+    first, last = max(min(own), min(other)), min(max(own), max(other))
+    places = sorted(x for x in {*own, *other} if first <= x <= last)
+    gaps = [(x, _height(own, x), _height(own, x) - _height(other, x)) for x in places]
+    for (x0, y0, gap0), (x1, y1, gap1) in pairwise(gaps):
+        if gap0 > 0.0 >= gap1:
+            part = gap0 / (gap0 - gap1)
+            return x0 + part * (x1 - x0), y0 + part * (y1 - y0)
+    return None
+
+
+def _height(line: dict[float, float], x: float) -> float:
+    if x in line:
+        return line[x]
+    x0, x1 = max(place for place in line if place < x), min(place for place in line if place > x)
+    return line[x0] + (line[x1] - line[x0]) * (x - x0) / (x1 - x0)
 
 
 def _end(record: AuditRecord, entry: QuantityEntry) -> int:
@@ -156,7 +184,7 @@ def _dots(record: AuditRecord, entry: QuantityEntry, arm: str | None) -> tuple[D
         own = level.reference if arm is None else level.arms[arm]
         variance = own.level_variance if arm is None else level.arms[arm].error_variance
         se = level.reference.level_variance_se if arm is None else level.arms[arm].error_variance_se
-        if variance:
+        if variance is not None and variance > 0.0:
             low, high = interval_of(record, level, variance, se)
             filled = arm is None or (law is not None and level.level in law.levels)
             found.append(Dot(level.level, 0.5 * math.log2(variance), low, high, filled))

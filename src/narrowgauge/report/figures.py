@@ -10,7 +10,7 @@ import io
 import math
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from itertools import pairwise
 from typing import Any
 
@@ -51,23 +51,16 @@ NARROW = Layout(name="narrow", width=340, height=380, left=44, right=72, top=38,
 
 def lines(chart: LineChart, layout: Layout, prefix: str) -> str:
     """Return a chart of lines as SVG for a page, with ids that begin with `prefix`."""
-    return _drawn(prefix, layout, lambda drawing: _lines(drawing, chart, layout))
+    names = [series.label for series in chart.series]
+    roomy = replace(layout, right=max(layout.right, 26 + math.ceil(0.65 * layout.text * max(map(len, names)))))
+    return _drawn(prefix, roomy, lambda drawing: _lines(drawing, chart, roomy))
 
 
 def gains(chart: GainChart, layout: Layout, prefix: str) -> str:
     """Return a chart of gains, one row a level, as SVG for a page; its height follows the number of rows."""
     row = 30 if layout.name == "wide" else 44
-    tall = Layout(
-        name=layout.name,
-        width=layout.width,
-        height=layout.top + layout.bottom + row * len(chart.rows),
-        left=layout.left,
-        right=190 if layout.name == "wide" else 16,
-        top=layout.top,
-        bottom=layout.bottom,
-        text=layout.text,
-        ticks=layout.ticks,
-    )
+    right = 190 if layout.name == "wide" else 16
+    tall = replace(layout, height=layout.top + layout.bottom + row * len(chart.rows), right=right)
     return _drawn(prefix, tall, lambda drawing: _gains(drawing, chart, tall))
 
 
@@ -135,6 +128,9 @@ def _lines(drawing: Figure, chart: LineChart, layout: Layout) -> None:
         axes.plot(*zip(*chart.guide[0], strict=True), color=LIGHT["muted"], linewidth=1.0, dashes=(2.0, 3.0))
     for series in chart.series:
         _series(axes, series)
+    for x, y in chart.rings:
+        ink = LIGHT["ink"]
+        axes.plot([x], [y], marker="o", color=ink, markersize=17.0, markerfacecolor="none", markeredgecolor=ink)
     _labels(axes, chart, layout)
 
 
@@ -149,27 +145,32 @@ def _heights(chart: LineChart) -> Iterator[float]:
 
 
 def _across(axes: Any, chart: LineChart, layout: Layout) -> None:
-    """Label the ticks across in two rows, as many as fit."""
-    every = math.ceil(len(chart.ticks) / layout.ticks)
-    kept = chart.ticks[::every]
+    """Label the ticks across in two rows, each as often as its labels fit."""
+    kept = chart.ticks[:: max(math.ceil(len(chart.ticks) / layout.ticks), _every(chart, layout, "label"))]
     axes.set_xticks([tick.x for tick in kept], [tick.label for tick in kept])
     base, size = layout.bottom - 38, layout.text
-    for tick in kept:
-        if tick.below and (layout.name == "wide" or len(tick.below) <= 4):
-            axes.annotate(
-                tick.below,
-                (tick.x, 0.0),
-                (0, base - layout.bottom),
-                xycoords=axes.get_xaxis_transform(),
-                textcoords="offset pixels",
-                ha="center",
-                fontsize=size - 1.0,
-                color=LIGHT["muted"],
-            )
+    for tick in chart.ticks[:: _every(chart, layout, "below")]:
+        axes.annotate(
+            tick.below,
+            (tick.x, 0.0),
+            (0, base - layout.bottom),
+            xycoords=axes.get_xaxis_transform(),
+            textcoords="offset pixels",
+            ha="center",
+            fontsize=size - 1.0,
+            color=LIGHT["muted"],
+        )
     x = layout.width - layout.right + 14
     axes.text(x, layout.bottom - 16, chart.across, transform=None, fontsize=size, color=LIGHT["muted"])
     if chart.below:
         axes.text(x, base, chart.below, transform=None, fontsize=size - 1.0, color=LIGHT["muted"])
+
+
+def _every(chart: LineChart, layout: Layout, row: str) -> int:
+    """Return at every which tick a row of labels has room for its longest one."""
+    longest = max(len(getattr(tick, row)) for tick in chart.ticks)
+    needed = 0.62 * layout.text * (longest + 1)
+    return max(1, math.ceil(needed * len(chart.ticks) / (layout.width - layout.left - layout.right)))
 
 
 def _up(axes: Any, low: float, high: float, layout: Layout) -> None:
@@ -287,10 +288,12 @@ def _gains(drawing: Figure, chart: GainChart, layout: Layout) -> None:
             markeredgewidth=1.8,
             clip_on=False,
         )
-        wide = layout.name == "wide"
+        # Beside the drawing where there is room, else above the row, clear of the line of 1 where that is far left.
+        wide, after_one = layout.name == "wide", axes.transData.transform((0.0, 0.0))[0] - layout.left + 6.0
+        x = layout.width - layout.left - layout.right + 14 if wide else after_one if after_one < 60.0 else 0.0
         axes.annotate(
             row.scheme if wide else f"{row.scheme}, {shown_edge(row.gain)}\u00d7",
-            (layout.width - layout.left - layout.right + 14, place) if wide else (0, place - 0.36),
+            (x, place if wide else place - 0.36),
             xycoords=("axes pixels", "data"),
             fontsize=layout.text,
             color=colour,

@@ -116,7 +116,7 @@ def format_rows(record: AuditRecord) -> list[FormatRow]:
                 finest=finest_words(entry, measured_to(record)),
                 levels=levels,
                 spoken=_spoken(levels),
-                why=f"{why} {clean(entry.decided_by)} decides.".strip() if decides else why,
+                why=f"{why} The quantity {clean(entry.decided_by)} decides.".strip() if decides else why,
             )
         )
     return rows

@@ -34,7 +34,7 @@ def law_chart(record: AuditRecord, entry: QuantityEntry) -> LineChart | None:
         law, dots = fitted_law(entry, arm), []
         for level in entry.levels:
             figures = level.arms[arm]
-            if not figures.error_variance:
+            if figures.error_variance is None or figures.error_variance <= 0.0:
                 continue
             scaled = 2.0 * math.log2(form.unit_roundoff)
             low, high = interval_of(record, level, figures.error_variance, figures.error_variance_se)
@@ -99,7 +99,7 @@ def gain_chart(record: AuditRecord, entry: QuantityEntry) -> GainChart | None:
                 split=best.wide is not None,
                 gain=best.gain,
                 low=best.gain_low if best.gain_low is None or best.gain_low > 0.0 else None,
-                high=best.gain_high,
+                high=best.gain_high if best.gain_high is None or best.gain_high > 0.0 else None,
             )
         )
     return GainChart(today=today(record), rows=tuple(rows)) if rows else None
@@ -112,7 +112,7 @@ def draws_chart(record: AuditRecord, entry: QuantityEntry, parts: list[PartsEntr
         dots = []
         for level, one in zip(entry.levels, parts, strict=True):
             variance, se = getattr(one, name), getattr(one, f"{name}_se")
-            if variance:
+            if variance is not None and variance > 0.0:
                 low, high = interval_of(record, level, variance, se)
                 dots.append(Dot(level.level, 0.5 * math.log2(variance), low, high))
         if dots:
@@ -122,7 +122,7 @@ def draws_chart(record: AuditRecord, entry: QuantityEntry, parts: list[PartsEntr
     signal = []
     for level in entry.levels:
         variance = level.reference.level_variance
-        if variance:
+        if variance is not None and variance > 0.0:
             low, high = interval_of(record, level, variance, level.reference.level_variance_se)
             signal.append(Dot(level.level, 0.5 * math.log2(variance), low, high))
     whole = Series(

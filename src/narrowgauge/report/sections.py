@@ -73,7 +73,8 @@ def _crossing_caption(record: AuditRecord) -> str:
     return (
         f"Each mark is a measured standard deviation with its {confidence(record)} interval, often smaller than the "
         "mark. Solid lines of the formats are the fitted law; a filled mark is a level on which the fit rests, a "
-        "hollow one is not. Dashed lines are extrapolated: the law with more steps, the signal by its order in h."
+        "hollow one is not. Dashed lines are extrapolated: the law with more steps, the signal by its order in h. A "
+        "ring shows where a noise crosses the signal."
     )
 
 
