@@ -29,7 +29,7 @@ def hostile_record() -> AuditRecord:
     lines = [ReachLine(file=SCRIPT, line=1, operation=BRACKETS, route="rounded", count=1), *made.REACH.lines]
     return replace(
         record,
-        kernel=replace(record.kernel, run=SCRIPT),
+        kernel=replace(record.kernel, run=SCRIPT + CONTROL),
         asked=asked,
         reach=replace(made.REACH, lines=lines, remarks=[CONTROL]),
         cautions=[SCRIPT, CONTROL],

@@ -11,6 +11,7 @@ import sys
 from functools import cache
 
 import made_records as made
+import numpy as np
 import pages
 import pytest
 import test_approximate_text as approximate
@@ -108,6 +109,11 @@ class TestWhole:
         )
         here = str(pages.__file__).rpartition("/")[0]
         assert subprocess.run([sys.executable, "-c", code, here], check=False).returncode == 0
+
+    def test_a_kernel_that_has_numpy_raise_does_not_stop_it(self):
+        """The audit and its page are made in one process."""
+        with np.errstate(all="raise"):
+            assert page(pages.sound_record()) == built(pages.sound_record)
 
     def test_settings_of_matplotlib_are_put_back(self):
         """Whoever draws in the same process keeps what he set."""

@@ -21,7 +21,10 @@ RECORDS = {
     "hostile": pages.hostile_record,
     **pages.EMPTY,
 }
-SHAPES = [(scripts, width, dark) for scripts in (False, True) for width in (360, 1024, 1920) for dark in (False, True)]
+A4 = 718  # pixels between margins of 1 cm: (210 - 20) mm at 96 an inch
+SHAPES = [
+    (scripts, width, dark) for scripts in (False, True) for width in (360, 720, 1024, 1920) for dark in (False, True)
+]
 
 
 @pytest.fixture(scope="module")
@@ -125,12 +128,13 @@ def test_a_page_that_asks_for_something_is_noticed(browser, tmp_path):
 
 def test_the_printed_page_has_every_section(browser, opened):
     """On paper the list of contents goes, the answers stay, in the colours of a light page."""
-    browser.open(opened, dark=True)
+    browser.open(opened, width=A4, dark=True)
     scheme = {"name": "prefers-color-scheme", "value": "dark"}
     browser.call("Emulation.setEmulatedMedia", media="print", features=[scheme])
     hidden = (
         "[...document.querySelectorAll('main > section')].filter(s => s.getBoundingClientRect().height < 20).length"
     )
     assert browser.value(hidden) == 0
+    assert browser.value("document.documentElement.scrollWidth") <= A4
     assert browser.value("getComputedStyle(document.querySelector('nav')).display") == "none"
     assert browser.value("getComputedStyle(document.body).color") == "rgb(27, 33, 37)"

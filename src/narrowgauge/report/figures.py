@@ -27,7 +27,6 @@ __all__ = ["NARROW", "WIDE", "Layout", "gains", "lines"]
 _DPI = 72  # at which a point is a pixel
 _ROLES = {value: role for role, value in LIGHT.items() if role in ("ink", "muted", "rule", "paper") or role[0] == "s"}
 _WIDEST = 3.0  # half an interval, in powers of two
-_RATIOS = (0.1, 0.2, 0.25, 0.5, 0.75, 1.0, 1.5, 2.0, 3.0, 4.0, 6.0, 8.0, 16.0, 32.0, 64.0)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -250,11 +249,8 @@ def _gains(drawing: Figure, chart: GainChart, layout: Layout) -> None:
     side = 0.05 * (high - low)
     axes.set_xlim(low - side, high + side)
     axes.set_ylim(len(chart.rows) - 0.5, -0.5)
-    kept = [ratio for ratio in _RATIOS if low - side <= math.log2(ratio) <= high + side]
-    every = math.ceil(len(kept) / layout.ticks)
-    one = kept.index(1.0)
-    kept = kept[one % every :: every]
-    axes.set_xticks([math.log2(ratio) for ratio in kept], [f"{ratio:g}\u00d7" for ratio in kept])
+    ticks = _ratios(low - side, high + side, 3.0 if layout.name == "wide" else 1.6, 8 if layout.name == "wide" else 4)
+    axes.set_xticks(ticks, [_times(tick) for tick in ticks])
     axes.set_yticks(range(len(chart.rows)), [str(row.level) for row in chart.rows])
     axes.grid(axis="x", color=LIGHT["rule"], linewidth=0.8)
     axes.set_axisbelow(True)
@@ -300,3 +296,18 @@ def _gains(drawing: Figure, chart: GainChart, layout: Layout) -> None:
             va="center",
             annotation_clip=False,
         )
+
+
+def _ratios(low: float, high: float, near: float, most: int) -> list[float]:
+    """Return ticks of a ratio as exponents of two: halves of the way between powers where the ends are near."""
+    step = max(1, math.ceil((high - low) / most))
+    powers = [float(step * number) for number in range(math.ceil(low / step), math.floor(high / step) + 1)]
+    if high - low > near:
+        return powers
+    between = (number + math.log2(1.5) for number in range(math.floor(low) - 1, math.ceil(high)))
+    return sorted({*powers, *(tick for tick in between if low <= tick <= high)})
+
+
+def _times(exponent: float) -> str:
+    """Return a ratio as a tick names it: 1.5 times, or a power of two where its digits would be many."""
+    return f"{2.0**exponent:g}\u00d7" if -3.0 <= exponent <= 10.0 else f"{power(exponent)}\u00d7"

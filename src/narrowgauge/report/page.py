@@ -61,6 +61,7 @@ def page(record: AuditRecord) -> str:
     """Return the page of an audit; the same record gives the same text."""
     import jinja2
     import markupsafe
+    import numpy as np
 
     from narrowgauge.report import headline
     from narrowgauge.report.blocks import visible
@@ -69,6 +70,8 @@ def page(record: AuditRecord) -> str:
     from narrowgauge.report.settings import terms
     from narrowgauge.report.verdict import alarms
 
+    with np.errstate(all="ignore"):  # a kernel of this process may have asked NumPy to raise
+        sections = _sections(record)
     environment = jinja2.Environment(
         loader=jinja2.FileSystemLoader(_TEMPLATES),
         autoescape=True,
@@ -92,7 +95,7 @@ def page(record: AuditRecord) -> str:
         gauges=headline.gauges(record),
         formats=headline.format_rows(record),
         steps=next_steps(record),
-        sections=_sections(record),
+        sections=sections,
         terms=terms(record),
     )
 
