@@ -238,6 +238,13 @@ class TestSections:
         assert "sampling.seed 1 audit file" in shown
         assert "sha256:invented" in shown
 
+    def test_a_ratio_below_one_is_not_shown_as_one(self):
+        """At a cost ratio of 1 no narrow step is cheaper; 0.9989 is below it."""
+        record = pages.sound_record()
+        near = {"float16:float64": replace(made.CORRECTION, breakeven_cost_ratio=0.9989)}
+        entry = made.with_level(record.quantities["value"], 0, corrections=near)
+        assert "float16 with float64 2.50 (2.40 to 2.60) 0.999 " in section(made.audit_record(value=entry), "schemes")
+
     def test_rounded_edges_stay_on_their_side(self):
         """1.0497 (0.9996 to 1.0501) against 1 and 1.05, as on the terminal."""
         assert "1.0497 (0.9996 to 1.0501)" in section(pages.sound_record, "schemes")

@@ -21,7 +21,17 @@ from narrowgauge.record.audit import (
 )
 from narrowgauge.report.layout import Ruled
 from narrowgauge.report.settings import assumed_costs, confidence, exact_formats, today, worthwhile
-from narrowgauge.report.wording import NONE, clean, count, figure, interval, levels_named, percent, scheme_words
+from narrowgauge.report.wording import (
+    NONE,
+    clean,
+    count,
+    figure,
+    interval,
+    levels_named,
+    percent,
+    scheme_words,
+    shown_edge,
+)
 
 __all__ = [
     "REFUSED",
@@ -91,7 +101,7 @@ def best_table(record: AuditRecord, entry: QuantityEntry) -> Ruled:
         correction = level.corrections.get(f"{best.narrow}:{best.wide}")
         gain = interval(best.gain, best.gain_low, best.gain_high)
         ratio = correction.breakeven_cost_ratio if correction else None
-        table.add_row(*_plain(str(level.level), scheme_words(best), gain, figure(ratio, 2)))
+        table.add_row(*_plain(str(level.level), scheme_words(best), gain, _ratio(ratio)))
     return table
 
 
@@ -228,6 +238,12 @@ def _why(arm: ArmEntry | None) -> str:
     if arm.raised is not None:
         return REFUSED["raised"]
     return REFUSED.get(arm.reason or "", "fewer than two paths are finite")
+
+
+def _ratio(ratio: float | None) -> str:
+    """Return a break-even ratio in two digits, or as many more as keep it below 1, where no narrow step is cheaper."""
+    text = figure(ratio, 2)
+    return shown_edge(ratio) if ratio is not None and ratio < 1.0 <= float(text) else text
 
 
 def _inside(record: AuditRecord) -> str:
