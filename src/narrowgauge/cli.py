@@ -1,4 +1,4 @@
-"""The command line: draft an audit file, audit a kernel, draw up a policy; the only module that prints.
+"""The command line: draft an audit file, audit a kernel, draw up a policy, make a page; the only module that prints.
 
 Exit codes: 0 done; 2 wrong usage, a wrong file, or a kernel that cannot be audited; 70 a fault of this program;
 130 interrupted; 141 the reader of the output went away. What a command needs is imported when it runs, so that
@@ -24,6 +24,7 @@ if TYPE_CHECKING:
     from rich.console import RenderableType
 
     from narrowgauge.kernel.auditfile import AuditFile
+    from narrowgauge.record.audit import AuditRecord
 
 __all__ = ["main"]
 
@@ -142,6 +143,16 @@ def _parser() -> argparse.ArgumentParser:
     )
     audit.set_defaults(command=_audit)
 
+    report = commands.add_parser(
+        "report",
+        help="make the page of an audit that is done",
+        description="Writes an audit as one HTML page that needs no network and no script.",
+        allow_abbrev=False,
+    )
+    report.add_argument("folder", metavar="AUDITDIR", help="the folder that the audit has written")
+    report.add_argument("--out", metavar="FILE", help="the page (default: report.html in that folder)")
+    report.set_defaults(command=_report)
+
     draft = commands.add_parser(
         "draft",
         help="write a first audit file for a kernel",
@@ -203,6 +214,7 @@ def _audit(options: argparse.Namespace) -> int:
 
     # A stem of dots alone would lead out of the folder.
     folder = Path(options.out) if options.out is not None else Path("audits", file.stem.strip(".") or "audit")
+    place = Path(os.path.abspath(folder))  # a kernel may go to another directory
     workers = Workers(number=options.workers, timeout=options.timeout, cluster=options.cluster)
     with contextlib.nullcontext() if options.quiet else Progress() as watcher:
         done = api.run_audit(
@@ -210,7 +222,42 @@ def _audit(options: argparse.Namespace) -> int:
         )
     shown = verdict_text if options.quiet else audit_text
     _show(shown(done.record, done.folder))
+    _add_page(done.record, place, folder)
     return 0
+
+
+def _add_page(record: AuditRecord, place: Path, folder: Path) -> None:
+    """Write the page beside the record where the `report` extra is installed; else say if an older one is there."""
+    from narrowgauge.report.page import PAGE_FILE, missing_packages
+
+    if not missing_packages():
+        _page(record, place / PAGE_FILE, folder / PAGE_FILE)
+    elif (place / PAGE_FILE).exists():
+        _say(f"{folder / PAGE_FILE}: is of an earlier audit; pip install '.[report]' and narrowgauge report renew it")
+
+
+def _report(options: argparse.Namespace) -> int:
+    from narrowgauge.record.auditreading import audit_in
+    from narrowgauge.report.page import PAGE_FILE, need_packages
+
+    need_packages()
+    folder = Path(options.folder)
+    record = audit_in(folder)
+    target = folder / PAGE_FILE if options.out is None else Path(options.out)
+    _page(record, target, target)
+    return 0
+
+
+def _page(record: AuditRecord, target: Path, shown: Path) -> None:
+    """Write the page, and say where it is."""
+    import logging
+
+    from narrowgauge.report.page import write_page
+    from narrowgauge.report.wording import clean
+
+    logging.getLogger("matplotlib").setLevel(logging.ERROR)  # that it looks for fonts is nothing to tell
+    write_page(record, target, str(shown))
+    _write(f"Page to read: {clean(shown)}\n")
 
 
 def _try_out(file: AuditFile) -> int:

@@ -140,7 +140,12 @@ def test_a_kernel_that_goes_elsewhere(tmp_path: Path) -> None:
     path = written(tmp_path, "elsewhere")
     done = run("audit", path, "--out", "results", folder=tmp_path)
     assert done.returncode == 0
-    assert {one.name for one in (tmp_path / "results").iterdir()} == {"audit.json", "levels.csv", "blocks.sqlite"}
+    assert {one.name for one in (tmp_path / "results").iterdir()} == {
+        "audit.json",
+        "levels.csv",
+        "blocks.sqlite",
+        "report.html",
+    }
     assert str(tmp_path / "results") not in done.stdout
     assert "results" in done.stdout
 

@@ -32,26 +32,20 @@ from narrowgauge.policy.region import claimed_box, held_in_box, single_point
 from narrowgauge.record import audit as audited
 from narrowgauge.record import policy as made
 from narrowgauge.record.audit import AuditRecord
-from narrowgauge.record.canonical import DocumentError, read_strict, write_atomically
+from narrowgauge.record.auditreading import RECORD_FILE, audit_record, audit_text_in
+from narrowgauge.record.canonical import read_strict, write_atomically
 from narrowgauge.record.policy import PolicyDocument, policy_text
-from narrowgauge.record.reading import converted, shown, text_of
 
 __all__ = ["draw_up", "read_audit", "write_policy"]
 
-_LARGEST = 64 * 2**20  # bytes of an audit.json
 _Table = TypeVar("_Table", bound=Table)
 _Part = TypeVar("_Part", bound=msgspec.Struct)
 
 
 def read_audit(folder: Path) -> tuple[AuditRecord, str]:
     """Return the record in an audit's folder and the digest of its file; DocumentError says what is wrong with it."""
-    path = Path(folder) / "audit.json"
-    text = text_of(path, _LARGEST)
-    document = read_strict(text, str(path))
-    schema = document.get("schema") if isinstance(document, dict) else None
-    if schema != audited.SCHEMA:
-        raise DocumentError(str(path), "schema", f"{shown(schema)} is not accepted; accepted: {audited.SCHEMA}")
-    return converted(document, AuditRecord, str(path)), _sha256(text)
+    path, text = str(Path(folder) / RECORD_FILE), audit_text_in(Path(folder))
+    return audit_record(read_strict(text, path), path), _sha256(text)
 
 
 def draw_up(record: AuditRecord, digest: str, *, source: str = "audit") -> PolicyDocument:

@@ -43,6 +43,16 @@ class Ruled:
         self._columns = columns
         self._rows: list[tuple[Text, ...]] = []
 
+    @property
+    def columns(self) -> tuple[tuple[str, Kind], ...]:
+        """The headings and kinds of the columns."""
+        return self._columns
+
+    @property
+    def rows(self) -> tuple[tuple[Text, ...], ...]:
+        """The rows so far."""
+        return tuple(self._rows)
+
     def add_row(self, *cells: Text) -> None:
         """Add a row of one cell for each column."""
         self._rows.append(cells)

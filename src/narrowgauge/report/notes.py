@@ -28,7 +28,7 @@ from narrowgauge.report.wording import (
     shown_edge,
 )
 
-__all__ = ["accumulation", "format_notes", "nonfinite", "orders", "separation_notes"]
+__all__ = ["accumulation", "format_notes", "nonfinite", "orders", "rounded_up", "separation_notes"]
 
 
 def format_notes(record: AuditRecord, quantity: str, name: str) -> list[str]:
@@ -52,7 +52,7 @@ def _undecided(record: AuditRecord, level: LevelEntry, name: str, share: float |
     }.get(arm.reason or "", "the paths ran out")
     needed = "how many paths would settle it cannot be told"
     if arm.paths_needed is not None:
-        needed = f"about {_rounded_up(arm.paths_needed)} paths would settle it"
+        needed = f"about {rounded_up(arm.paths_needed)} paths would settle it"
     return f"Level {level.level} is undecided after {count(level.paths)} paths: {known}; {why}; {needed}."
 
 
@@ -214,7 +214,7 @@ def _order(one: OrderEntry) -> str:
     return f"{interval(one.slope, one.slope_low, one.slope_high)} ({levels_named(one.levels)})"
 
 
-def _rounded_up(paths: int) -> str:
+def rounded_up(paths: int) -> str:
     """Return a number of paths with two digits that count, never fewer than asked."""
     size = 10 ** max(0, len(str(paths)) - 2)
     return count(-(-paths // size) * size)

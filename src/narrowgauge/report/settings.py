@@ -20,6 +20,7 @@ __all__ = [
     "measured_to",
     "narrow_formats",
     "setting",
+    "terms",
     "today",
     "worthwhile",
 ]
@@ -129,6 +130,32 @@ def approximate_draws(draws: DrawsEntry) -> str:
     }.get(draws.approximate, f"by {clean(draws.approximate)}")
     error = f"mean square error {figure(draws.mean_square_error)}"
     return f"{kind}; {error}, mean {figure(draws.mean)}, variance {figure(draws.variance, 5)}."
+
+
+def terms(record: AuditRecord) -> dict[str, str]:
+    """Return the words of the tables, each with what it means in this audit."""
+    measured = "the quantity"
+    if coupled(record):
+        measured = "the level difference (fine less coarse path; on level 0 the quantity itself)"
+    found = {
+        "signal": f"standard deviation of {measured} in float64, in the unit of the quantity",
+        "noise": "standard deviation of the rounding error, path by path, in the same unit",
+        "with float32": "a scheme of two parts: most paths in the narrow format alone, a few in both to correct them",
+        "gain": f"cost of the level as it runs today, {today(record)} alone, over its cost under the scheme, at equal "
+        "variance",
+        "edge": "cost of the best that wider formats can do, over the cost of the best scheme of this format",
+        "pays": f"the interval of the edge is above 1; does not pay: below {worthwhile(record):g}, or not admissible",
+        "breaks even": "up to this cost of a narrow step, a wide one costing 1, the scheme is worth it",
+    }
+    if not isinstance(record.draws, UnsetType):
+        found["float16/approximate"] = (
+            "float16 with approximate draws, made from the same uniforms as the exact ones, with which it competes"
+        )
+        found["arithmetic, draws, both"] = (
+            "standard deviation of the correction to float64 from the format with exact draws, from float64 with "
+            "approximate draws, and from the format with approximate draws"
+        )
+    return found
 
 
 def _assumed(record: AuditRecord) -> list[str]:

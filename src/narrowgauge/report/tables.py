@@ -15,14 +15,23 @@ from narrowgauge.record.audit import (
     ArmEntry,
     AuditRecord,
     CommonPlanEntry,
-    LevelEntry,
     PartsEntry,
     PlanEntry,
     QuantityEntry,
 )
 from narrowgauge.report.layout import Ruled
 from narrowgauge.report.settings import assumed_costs, confidence, exact_formats, today, worthwhile
-from narrowgauge.report.wording import NONE, clean, count, figure, interval, levels_named, percent, scheme_words
+from narrowgauge.report.wording import (
+    NONE,
+    clean,
+    count,
+    figure,
+    interval,
+    levels_named,
+    percent,
+    scheme_words,
+    shown_edge,
+)
 
 __all__ = [
     "REFUSED",
@@ -33,6 +42,8 @@ __all__ = [
     "common_table",
     "format_table",
     "missing_figures",
+    "missing_gains",
+    "missing_noise",
     "parts_table",
     "plan_table",
     "signal_table",
@@ -90,7 +101,7 @@ def best_table(record: AuditRecord, entry: QuantityEntry) -> Ruled:
         correction = level.corrections.get(f"{best.narrow}:{best.wide}")
         gain = interval(best.gain, best.gain_low, best.gain_high)
         ratio = correction.breakeven_cost_ratio if correction else None
-        table.add_row(*_plain(str(level.level), scheme_words(best), gain, figure(ratio, 2)))
+        table.add_row(*_plain(str(level.level), scheme_words(best), gain, _ratio(ratio)))
     return table
 
 
@@ -190,6 +201,11 @@ def _shares(levels: Sequence[PlanEntry]) -> list[str]:
 
 def missing_figures(record: AuditRecord, entry: QuantityEntry) -> list[str]:
     """Return why there are en dashes in the first two tables, one sentence for each kind."""
+    return [*missing_noise(record, entry), *missing_gains(record, entry)]
+
+
+def missing_noise(record: AuditRecord, entry: QuantityEntry) -> list[str]:
+    """Return why there are en dashes in the table of signal and noise."""
     found = []
     lost = [level.level for level in entry.levels if level.reference.level_variance is None]
     if lost:
@@ -200,12 +216,12 @@ def missing_figures(record: AuditRecord, entry: QuantityEntry) -> list[str]:
         for words in dict.fromkeys(_why(arm) for _, arm in dashes):
             levels = levels_named(level for level, arm in dashes if _why(arm) == words)
             found.append(f"no noise of {clean(name)} on {levels}: {words}")
-    found += _missing_gains(record, entry.levels)
     return found
 
 
-def _missing_gains(record: AuditRecord, levels: Sequence[LevelEntry]) -> Iterable[str]:
+def missing_gains(record: AuditRecord, entry: QuantityEntry) -> Iterable[str]:
     """Return why gains and break-even ratios are missing."""
+    levels = entry.levels
     nothing = [level.level for level in levels if level.best is not None and level.best.gain is None]
     if nothing:
         yield f"no gain on {levels_named(nothing)}: {today(record)} has no finite variance there to compare with"
@@ -222,6 +238,12 @@ def _why(arm: ArmEntry | None) -> str:
     if arm.raised is not None:
         return REFUSED["raised"]
     return REFUSED.get(arm.reason or "", "fewer than two paths are finite")
+
+
+def _ratio(ratio: float | None) -> str:
+    """Return a break-even ratio in two digits, or as many more as keep it below 1, where no narrow step is cheaper."""
+    text = figure(ratio, 2)
+    return shown_edge(ratio) if ratio is not None and ratio < 1.0 <= float(text) else text
 
 
 def _inside(record: AuditRecord) -> str:

@@ -32,8 +32,7 @@ from narrowgauge.report.settings import (
     measured_costs,
     measured_to,
     narrow_formats,
-    today,
-    worthwhile,
+    terms,
 )
 from narrowgauge.report.tables import (
     best_table,
@@ -167,28 +166,7 @@ def _alarms(record: AuditRecord) -> list[RenderableType]:
 
 
 def _legend(record: AuditRecord) -> list[RenderableType]:
-    measured = "the quantity"
-    if coupled(record):
-        measured = "the level difference (fine less coarse path; on level 0 the quantity itself)"
-    terms = {
-        "signal": f"standard deviation of {measured} in float64, in the unit of the quantity",
-        "noise": "standard deviation of the rounding error, path by path, in the same unit",
-        "with float32": "a scheme of two parts: most paths in the narrow format alone, a few in both to correct them",
-        "gain": f"cost of the level as it runs today, {today(record)} alone, over its cost under the scheme, at equal "
-        "variance",
-        "edge": "cost of the best that wider formats can do, over the cost of the best scheme of this format",
-        "pays": f"the interval of the edge is above 1; does not pay: below {worthwhile(record):g}, or not admissible",
-        "breaks even": "up to this cost of a narrow step, a wide one costing 1, the scheme is worth it",
-    }
-    if not isinstance(record.draws, UnsetType):
-        terms["float16/approximate"] = (
-            "float16 with approximate draws, made from the same uniforms as the exact ones, with which it competes"
-        )
-        terms["arithmetic, draws, both"] = (
-            "standard deviation of the correction to float64 from the format with exact draws, from float64 with "
-            "approximate draws, and from the format with approximate draws"
-        )
-    return [Hanging(_labelled(term, f"{words}."), "  ") for term, words in terms.items()]
+    return [Hanging(_labelled(term, f"{words}."), "  ") for term, words in terms(record).items()]
 
 
 def _quantity(record: AuditRecord, name: str) -> list[RenderableType]:

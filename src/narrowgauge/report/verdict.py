@@ -25,7 +25,7 @@ from narrowgauge.report.wording import (
 )
 from narrowgauge.report.workers import worker_alarms
 
-__all__ = ["alarms", "common_cost", "finest_words", "lead", "savings", "verdict_sentences"]
+__all__ = ["alarms", "common_cost", "ending", "finest_words", "lead", "savings", "verdict_sentences"]
 
 # Why the run of paying levels ends, after "on level 5 ": the format does not pay there, or that is not known.
 _ENDS = {
@@ -126,10 +126,9 @@ def verdict_sentences(record: AuditRecord) -> list[Text]:
 
 
 def _sentence(record: AuditRecord, name: str, entry: DecidedEntry) -> Text:
-    finest = measured_to(record)
     text = Text(f"{clean(name)}: ", style="bold")
-    text.append(f"finest level where it still pays: {finest_words(entry, finest)}", style="not bold")
-    why = _ending(record, name, finest, _undecided_next(record, name, entry))
+    text.append(f"finest level where it still pays: {finest_words(entry, measured_to(record))}", style="not bold")
+    why = ending(record, name)
     text.append(f"; {why}." if why else ".", style="not bold")
     if entry.decided_by is not None and len(record.quantities) > 1:
         text.append(f" The quantity {clean(entry.decided_by)} decides.", style="not bold")
@@ -171,9 +170,10 @@ def _undecided_next(record: AuditRecord, name: str, entry: DecidedEntry) -> bool
     )
 
 
-def _ending(record: AuditRecord, name: str, measured: int, undecided: bool) -> str:
-    """Return why the paying levels end where they do, or "" if nothing is to be said."""
-    entry = record.verdict.finest_paying_level[name]
+def ending(record: AuditRecord, name: str) -> str:
+    """Return why the paying levels of a format end where they do, or "" if nothing is to be said."""
+    entry, measured = record.verdict.finest_paying_level[name], measured_to(record)
+    undecided = _undecided_next(record, name, entry)
     reason = entry.reason or ""
     if reason in _ENDS or reason in _OPEN:
         words = (_OPEN if undecided else _ENDS).get(reason) or _ENDS.get(reason) or _OPEN[reason]

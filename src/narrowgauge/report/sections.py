@@ -1,0 +1,188 @@
+"""The first sections of the page: where noise crosses the signal, and whether the law of rounding holds."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterable, Sequence
+
+from rich.text import Text
+
+from narrowgauge.record.audit import AuditRecord, QuantityEntry
+from narrowgauge.report.blocks import Block, Drawing, Part, Table, Words, points, tabled
+from narrowgauge.report.charts import LineChart, spoken
+from narrowgauge.report.crossing import Crossing, crossing_chart, crossing_of
+from narrowgauge.report.figures import NARROW, WIDE, lines
+from narrowgauge.report.layout import Ruled
+from narrowgauge.report.notes import accumulation, nonfinite, orders
+from narrowgauge.report.parts import law_chart, law_shares
+from narrowgauge.report.settings import confidence, coupled, exact_formats, measured_to
+from narrowgauge.report.tables import missing_noise, signal_table
+from narrowgauge.report.wording import NONE, clean, figure, interval, levels_named, percent, shown_edge
+
+__all__ = ["crossing", "drawn", "law", "per_quantity"]
+
+_REJECTED_BELOW = 0.001  # of p, as `judge.accumulation` has it
+
+
+def per_quantity(record: AuditRecord, blocks: Callable[[str, QuantityEntry], Iterable[Block]]) -> list[Block]:
+    """Return the blocks of the only quantity, or those of several, each below its name."""
+    if len(record.quantities) == 1:
+        return [block for name, entry in record.quantities.items() for block in blocks(name, entry)]
+    return [Part(f"Quantity {clean(name)}", tuple(blocks(name, entry))) for name, entry in record.quantities.items()]
+
+
+def drawn(chart: LineChart, key: str, title: str, caption: str) -> Drawing:
+    """Return the drawing of a chart, with each of its series in words for a listener."""
+    told = " ".join(spoken(series, chart) for series in chart.series)
+    return Drawing(
+        title=title,
+        caption=caption,
+        alternative=f"{title}. Line chart, {chart.up} against {chart.across}. {told} The table below has the figures.",
+        wide=lines(chart, WIDE, f"{key}-wide"),
+        narrow=lines(chart, NARROW, f"{key}-narrow"),
+    )
+
+
+def crossing(record: AuditRecord) -> list[Block]:
+    """Return where rounding noise crosses the level's own signal: the answer, the drawing, the table."""
+
+    def one(name: str, entry: QuantityEntry) -> Iterable[Block]:
+        yield from points(_crossing_words(record, entry, arm) for arm in exact_formats(record))
+        chart = crossing_chart(record, entry)
+        if chart is None:
+            words = "There is nothing to draw along a ladder: fewer than two levels have a signal."
+            yield Words(f"{words} The table has what was measured.", "note")
+        else:
+            key = f"crossing-{_place(record, name)}"
+            yield drawn(chart, key, f"Signal and rounding noise of {clean(name)}", _crossing_caption(record))
+        yield tabled(f"Signal and noise of {clean(name)}: standard deviations", signal_table(record, entry))
+        yield from (Words(f"{NONE} {why}.", "note") for why in missing_noise(record, entry))
+        if measured_to(record) > 0 and coupled(record):
+            yield Words(orders(entry))
+        yield Words(f"Non-finite values, with bounds at 99%: {nonfinite(record, entry)}")
+
+    if not exact_formats(record):
+        return [Words("No format was measured with exact draws, so there is no rounding noise by itself.", "answer")]
+    lead = (
+        "The signal is what a level adds to the estimate; the noise is what a format's rounding does to it, path by "
+        "path. A format has something to offer on the levels where its noise lies well below the signal."
+    )
+    return [Words(lead, "answer"), *per_quantity(record, one)]
+
+
+def _crossing_caption(record: AuditRecord) -> str:
+    return (
+        f"Each mark is a measured standard deviation with its {confidence(record)} interval, often smaller than the "
+        "mark. Solid lines of the formats are the fitted law; a filled mark is a level on which the fit rests, a "
+        "hollow one is not. Dashed lines are extrapolated: the law with more steps, the signal by its order in h. A "
+        "ring shows where a noise crosses the signal."
+    )
+
+
+def _crossing_words(record: AuditRecord, entry: QuantityEntry, arm: str) -> str:
+    found, name = crossing_of(record, entry, arm), clean(arm)
+    finest = entry.levels[-1].level
+    if all(level.arms[arm].error_variance is None for level in entry.levels):
+        return f"{name}: no noise was measured."
+    if all(not level.arms[arm].error_variance for level in entry.levels):
+        return f"{name}: no rounding error was seen on any level."
+    if found.how == "measured":
+        return f"{name}: {_measured_words(entry, found)}"
+    held = f"{name}: on every measured level the noise stays below the signal"
+    if found.how == "unknown":
+        return f"{held}; where they cross beyond cannot be told, since {found.reason}."
+    if found.level is None:
+        return f"{held}; by its law it does so on the next levels too ({found.reason})."
+    span = f"between levels {found.level - 1} and {found.level}"
+    return f"{held}; by its law they cross {span} (extrapolated, measured to level {finest})."
+
+
+def _measured_words(entry: QuantityEntry, found: Crossing) -> str:
+    first = entry.levels[0].level
+    if found.level == first:
+        return f"the noise is above the signal on level {first} already."
+    before = max(level.level for level in entry.levels if found.level is not None and level.level < found.level)
+    return f"the noise crosses the signal between levels {before} and {found.level}, as measured."
+
+
+def law(record: AuditRecord) -> list[Block]:
+    """Return whether rounding follows delta^2/h, and which part of the law rules where."""
+
+    def one(name: str, entry: QuantityEntry) -> Iterable[Block]:
+        yield from points(accumulation(entry))
+        chart = law_chart(record, entry)
+        if chart is None:
+            yield Words("Nothing is drawn: no format has a rounding error on two levels.", "note")
+        else:
+            caption = (
+                "Divided by the square of its unit roundoff u, the error of every format falls on one line where "
+                "rounding scales with u; where independent roundings add up, the line climbs as the dotted one does. "
+                f"Marks are measured, with {confidence(record)} intervals; lines are the fitted law."
+            )
+            title = f"Error variance of {clean(name)} in units of u squared"
+            yield drawn(chart, f"law-{_place(record, name)}", title, caption)
+        if entry.accumulation:
+            yield tabled(f"The fitted law of the error of {clean(name)}", _coefficients(record, entry, "error"))
+            yield from _shares(entry, name)
+            caption = f"The same law for the correction of {clean(name)} to float64"
+            yield tabled(caption, _coefficients(record, entry, "correction"))
+
+    lead = (
+        "Over n steps the error variance is u\u00b2 (floor + walk n + drift n\u00b2). The walk is the \u03b4\u00b2/h "
+        "law of independent roundings; the floor is what inputs and final operations leave at any step; the drift is "
+        "systematic."
+    )
+    return [Words(lead, "answer"), *per_quantity(record, one)]
+
+
+def _coefficients(record: AuditRecord, entry: QuantityEntry, which: str) -> Ruled:
+    bounds = f"({confidence(record)} interval)"
+    table = Ruled(
+        ("format", "unbroken"),
+        (f"floor\n{bounds}", "words"),
+        (f"walk\n{bounds}", "words"),
+        (f"drift\n{bounds}", "words"),
+        ("slope", "words"),
+        ("largest\nmisfit", "number"),
+        ("p", "number"),
+        ("rests on", "words"),
+    )
+    for arm, laws in entry.accumulation.items():
+        one = laws.error if which == "error" else laws.correction
+        if one.reason is not None:
+            cells = (*[NONE] * 6, f"not fitted: {clean(one.reason)}")
+        else:
+            misfit = NONE if one.deviation is None else f"{figure(one.deviation, 2)}%"
+            cells = (
+                *(
+                    interval(getattr(one, part), getattr(one, f"{part}_low"), getattr(one, f"{part}_high"), (0.0,))
+                    for part in ("floor", "walk", "drift", "slope")
+                ),
+                misfit,
+                shown_edge(one.fit_p, (_REJECTED_BELOW,)),
+                levels_named(one.levels),
+            )
+        table.add_row(*map(Text, (clean(arm), *cells)))
+    return table
+
+
+def _shares(entry: QuantityEntry, name: str) -> Iterable[Table]:
+    """Yield a table of the parts of the law by level, a column for each format whose law is fitted."""
+    found = {arm: {level: parts for level, *parts in law_shares(entry, arm)} for arm in entry.accumulation}
+    arms = [arm for arm, rows in found.items() if rows]
+    if not arms:
+        return
+    table = Ruled(("level", "number"), *((clean(arm), "words") for arm in arms))
+    for level in entry.levels:
+        cells = [_parts(found[arm][level.level]) if level.level in found[arm] else NONE for arm in arms]
+        table.add_row(*map(Text, (str(level.level), *cells)))
+    yield tabled(f"Which part rules: shares of the fitted error variance of {clean(name)}", table)
+
+
+def _parts(parts: Sequence[float]) -> str:
+    """Return the parts that are there, the largest first."""
+    named = sorted(zip(parts, ("floor", "walk", "drift"), strict=True), key=lambda one: -one[0])
+    return ", ".join(f"{word} {percent(part, (0.0, 0.5, 1.0))}" for part, word in named if part > 0.0)
+
+
+def _place(record: AuditRecord, name: str) -> int:
+    return list(record.quantities).index(name)
