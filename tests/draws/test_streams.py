@@ -82,6 +82,7 @@ def test_purposes_keep_their_integers() -> None:
         "AUDIT": 0,
         "IDENTITY": 1,
         "TRIAL": 2,
+        "BRANCHES": 3,
         "LINES": 4,
         "SCENARIO": 5,
     }

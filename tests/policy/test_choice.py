@@ -99,7 +99,7 @@ class TestChoice:
 class TestPaths:
     def test_planned_anew_the_audits_plan_is_the_same(self, record):
         """With the audit's own schemes the paths worked out from the record are those of its plan, to the path."""
-        draft = drawup._Draft(record, "", None)
+        draft = drawup._Draft(record, "")
         schemes = {level: scheme_of(one) for level, one in enumerate(record.verdict.schemes)}
         found = replanned(record, schemes, draft._level_costs, 0.25)
         assert [(one.low.paths, one.correction.paths) for one in found.levels] == [
@@ -133,7 +133,7 @@ class TestPaths:
         The record is given a plan from a bound 10,000 times the sample variance; the paths worked out anew, with
         another level changed, are those of that bound to within the rounding of the paths.
         """
-        costs = drawup._Draft(record, "", None)._level_costs
+        costs = drawup._Draft(record, "")._level_costs
         own = {level: scheme_of(one) for level, one in enumerate(record.verdict.schemes)}
 
         def parts(name, level, scheme):

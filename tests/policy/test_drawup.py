@@ -224,8 +224,8 @@ class TestFiles:
         (tmp_path / "audit.json").write_text(text, encoding="utf-8")
         with pytest.raises(DocumentError) as caught:
             read_audit(tmp_path)
-        accepted = "accepted: narrowgauge-audit/1"
-        assert str(caught.value) == f'{tmp_path}/audit.json: schema: "narrowgauge-policy/1" is not accepted; {accepted}'
+        what = '"narrowgauge-policy/1" is not known to this version; accepted: "narrowgauge-audit/1"'
+        assert str(caught.value) == f"{tmp_path}/audit.json: schema: {what}"
 
     def test_a_policy_is_written_whole(self, record, tmp_path):
         """What is written reads back equal, in place of what was there; no folder is a message."""

@@ -62,7 +62,7 @@ def test_a_folder_that_is_none(tmp_path):
         (b'{"schema": ', "this is not JSON: Expecting value (line 1, column 12)"),
         (b"[]", "this is no audit; accepted: an object with a schema"),
         (b'{"schema": 1, "schema": 2}', 'the key "schema" stands more than once'),
-        (b"{}", "schema: is missing; accepted: 'narrowgauge-audit/1'"),
+        (b"{}", 'schema: is missing; accepted: "narrowgauge-audit/1"'),
     ],
 )
 def test_a_file_that_is_no_record(tmp_path, data, words):
@@ -76,7 +76,7 @@ def test_a_file_that_is_no_record(tmp_path, data, words):
 def test_a_newer_record():
     """A schema that this version does not know is named before anything else is looked at."""
     found = {"schema": "narrowgauge-audit/2", "new": 1}
-    words = "audit.json: schema: 'narrowgauge-audit/2' is not known to this version; accepted: 'narrowgauge-audit/1'"
+    words = 'audit.json: schema: "narrowgauge-audit/2" is not known to this version; accepted: "narrowgauge-audit/1"'
     assert refused(found) == words
 
 
@@ -84,16 +84,15 @@ def test_a_field_of_another_type():
     """The path leads to it."""
     found = document()
     found["quantities"]["option"]["levels"][1]["paths"] = "many"
-    assert refused(found).startswith(
-        "audit.json: quantities[...].levels[1].paths: expected `int`, got `str`; accepted:"
-    )
+    words = 'audit.json: quantities.option.levels[1].paths: "many" is not accepted; accepted: a whole number'
+    assert refused(found) == words
 
 
 def test_a_field_that_nobody_knows():
     """It is named, and so is the place."""
     found = document()
     found["kernel"]["speed"] = 1
-    assert refused(found).startswith("audit.json: kernel: object contains unknown field `speed`; accepted:")
+    assert refused(found) == 'audit.json: kernel: unknown key "speed"; accepted: run, fingerprint'
 
 
 @pytest.mark.parametrize(
