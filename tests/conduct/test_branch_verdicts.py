@@ -47,6 +47,7 @@ def test_a_split_whose_branches_differ_is_not_admissible(tmp_path: Path) -> None
         assert (verdict == ("does not pay", "branches")) == (level in differ)
     text = shown(record)
     assert text.startswith("THE BRANCHES OF A SPLIT DO NOT CANCEL.")
+    assert "float16: no split is used on levels 0 to 3, since the two functions give other bits." in text
     assert f"kernel.py:{line}: add of " in text
     assert "of the target RMSE; this level's share of the target is 1.25e-04." in text
 
@@ -103,6 +104,17 @@ def test_a_function_that_was_handed_over_has_a_correction_by_name(tmp_path: Path
     assert result.record.branches is not None
     assert {one.level for one in result.record.branches.mismatches} == {0, 1}
     assert {one.of_rmse for one in result.record.branches.mismatches} == {None}
+
+
+def test_numpys_own_sum_is_named_in_the_alarm(tmp_path: Path) -> None:
+    """A float32 sum over the steps goes pairwise in Fortran's order: the bits of float32 hang on the layout."""
+    source = "import numpy as np\n\ndef path(dW, h):\n    return np.exp(0.2 * dW.sum(axis=0))\n"
+    formats = {"narrow": '["float16", "float32"]', "wide": '["float64"]'}
+    kernel = {"rounds": ""}
+    ladder = {"horizon": "1.0", "finest": "3", "coarsest_steps": "16"}
+    file = audit_file(tmp_path, source, kernel=kernel, branches=None, formats=formats, ladder=ladder)
+    text = shown(run_audit(file, None).record)
+    assert "float32: no split is used on any level, since NumPy's own sum gives other bits by the layout" in text
 
 
 def test_branches_that_agree_take_one_line(tmp_path: Path) -> None:

@@ -47,16 +47,32 @@ def branch_lines(entry: BranchesEntry, record: AuditRecord | None) -> list[str]:
 
 
 def branch_alarms(record: AuditRecord) -> list[str]:
-    """Return which splits must not be used because their branches differ."""
-    found: dict[str, list[int]] = {}
+    """Return which splits must not be used because their branches differ, and what that comes from."""
     entry = record.branches
-    for one in () if entry is None else entry.mismatches:
-        if one.splits == "not admissible":
-            found.setdefault(one.arm, []).append(-1 if one.condition != "branches" else one.level)
-    return [
-        f"{clean(arm)}: no split is used on {'any level' if -1 in levels else levels_named(levels)}"
-        for arm, levels in found.items()
-    ]
+    if entry is None:
+        return []
+    refused = [one for one in entry.mismatches if one.splits == "not admissible"]
+    lines = []
+    for arm in dict.fromkeys(one.arm for one in refused):
+        found = [one for one in refused if one.arm == arm]
+        everywhere = any(one.condition != "branches" for one in found)
+        where = "any level" if everywhere else levels_named(one.level for one in found)
+        why = joined(dict.fromkeys(map(_reason, found)))
+        lines.append(f"{clean(arm)}: no split is used on {where}, since {why}")
+    return lines
+
+
+def _reason(one: MismatchEntry) -> str:
+    if one.numpys_own and one.where is not None and one.where.low is not None:
+        return f"NumPy's own {clean(one.where.low.operation)} gives other bits by the layout or number of paths"
+    return {
+        "branches": "the two functions give other bits",
+        "influence": "paths influence one another",
+        "paths": "bits hang on the number of paths of a call",
+        "layout": "bits hang on the layout of memory",
+        "threads": "two threads at once give other bits",
+        "repeat": "a repeat gives other bits",
+    }[one.condition]
 
 
 def _tried(entry: BranchesEntry) -> Iterable[str]:
