@@ -75,7 +75,8 @@ def test_numpys_own_generator_agrees() -> None:
 
 def test_purposes_keep_their_integers() -> None:
     """A purpose is part of every key: its integer never changes, or old audits would see other numbers."""
-    assert {purpose.name: int(purpose) for purpose in Purpose} == {"AUDIT": 0, "IDENTITY": 1, "TRIAL": 2}
+    known = {"AUDIT": 0, "IDENTITY": 1, "TRIAL": 2, "BRANCHES": 3}
+    assert {purpose.name: int(purpose) for purpose in Purpose} == known
 
 
 def from_words(monkeypatch: pytest.MonkeyPatch, words: list[int]) -> list[float]:
