@@ -38,6 +38,9 @@ most_paths = 4096
 TARGET = "[target]\nrmse = 0.01\n"
 
 
+FOLDER = "accepted: a folder into which narrowgauge audit has written"
+
+
 @pytest.fixture(scope="module")
 def folders(tmp_path_factory):
     """Two audits in a folder: `with` and `without` a target."""
@@ -96,8 +99,11 @@ def test_a_c_header(here, capsys):
             ["without"],
             "without: no policy: the audit file has no [target], so that nobody knows how much rounding may ",
         ),
-        (["nowhere"], "nowhere/audit.json: there is no such file\n"),
-        (["with.toml"], "with.toml/audit.json: cannot be read (Not a directory)\n"),
+        (
+            ["nowhere"],
+            "nowhere: there is no such folder; accepted: a folder into which narrowgauge audit has written\n",
+        ),
+        (["with.toml"], "with.toml: is no folder; accepted: a folder into which narrowgauge audit has written\n"),
         (["damaged"], "damaged/audit.json: kernel.run: 3 is not accepted; accepted: text\n"),
         (["with", "--out", "none/p.json"], "none/p.json: cannot be written: No such file or directory\n"),
         (["with", "--c-header", "none/p.h"], "none/p.h: cannot be written: No such file or directory\n"),

@@ -61,7 +61,8 @@ class MismatchEntry(Entry, frozen=True, kw_only=True):
     of the format, None where that is not finite. `bias` is the mean of the mismatch in the unit of the quantity,
     `of_rmse` that over the target. `explanation` is what explains all `explained` paths that were asked. `numpys_own`:
     NumPy itself gives other bits for the same operation on the same values. `splits`: whether a split may be used in
-    spite of it.
+    spite of it; it is not concerned where NumPy's own differences are not those of the format, or of a layout that one
+    function keeps on both branches.
     """
 
     arm: str

@@ -10,6 +10,10 @@ from narrowgauge.report.wording import clean, count, figure, interval, joined, l
 
 __all__ = ["branch_alarms", "branch_lines", "branch_summary"]
 
+_UNCONCERNED = {
+    True: "hand both branches their draws in the same order",
+    False: "this format is emulated and not concerned",
+}
 _MOST = 12  # mismatches that are shown
 
 
@@ -141,7 +145,7 @@ def _line(one: MismatchEntry, *, several: bool) -> str:
         text += f" Explained by {clean(one.explanation)}, {paths}."
     if one.numpys_own:
         text += " NumPy itself gives other bits for that operation on the same values"
-        text += "; this format is emulated and not concerned." if one.splits == "not concerned" else "."
+        text += f"; {_UNCONCERNED[one.condition == 'layout']}." if one.splits == "not concerned" else "."
     return text
 
 
