@@ -276,8 +276,8 @@ class _Check:
     def _varied(self, run: Run, found: Found) -> MismatchEntry:
         """Return what a condition changes.
 
-        NumPy's own differences break a claim about float32 and float64 alone. Those of another layout break it where two
-        functions are named: these need not get their draws in the same one.
+        NumPy's own differences break a claim about float32 and float64 alone. Those of another layout break it where
+        two functions are named, which need not get their draws in the same one, and nowhere else.
         """
         one = Mismatch()
         size = found.before.size - found.before.size % 32  # moments go by 32 batches
