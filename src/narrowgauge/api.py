@@ -15,6 +15,7 @@ from typing import TYPE_CHECKING, Any, Literal
 import msgspec
 
 from narrowgauge.conduct.account import account
+from narrowgauge.conduct.branches import branches_entry
 from narrowgauge.conduct.owntrial import examine_own
 from narrowgauge.conduct.run import Watcher, run
 from narrowgauge.conduct.trial import try_arms
@@ -193,12 +194,19 @@ def try_out(file: AuditFile) -> TrialEntry:
         with engine_for(file, kernel, Workers()) as engine:
             return engine.call(_own_trial)
     file = worked_out(file, kernel)
-    return try_arms(file, kernel, BlockRunner(file, kernel))
+    runner = BlockRunner(file, kernel)
+    found = try_arms(file, kernel, runner)
+    if found.faults:  # what a branch would meet as well
+        return found
+    with pinned():
+        return msgspec.structs.replace(found, branches=branches_entry(file, kernel, runner, quick=True))
 
 
 def _own_trial(bench: Bench) -> TrialEntry:
     with pinned():
-        return examine_own(bench.file, bench.kernel, bench.runner)
+        found = examine_own(bench.file, bench.kernel, bench.runner)
+        branches = branches_entry(bench.file, bench.kernel, bench.runner, quick=True)
+        return msgspec.structs.replace(found, branches=branches)
 
 
 def _claim(place: _Folder, file: AuditFile, kernel: KernelEntry, *, replace: bool, resume: bool) -> Ledger:

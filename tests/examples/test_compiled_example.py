@@ -6,17 +6,14 @@ rounded for + - * / and square roots (IEEE 754), so that no tolerance is needed.
 
 from __future__ import annotations
 
-import platform
-import re
 import shutil
-import subprocess
 import tomllib
 from pathlib import Path
 from typing import Any
 
-import msgspec
 import numpy as np
 import pytest
+from compiled_builds import FOLDER, built, needs_fma, needs_half, small
 from example_files import EXAMPLES
 
 from narrowgauge.api import run_audit, try_out
@@ -26,20 +23,8 @@ from narrowgauge.kernel.loading import find_kernel
 from narrowgauge.measure.block import BlockRunner
 from narrowgauge.measure.calls import Quantities
 
-FOLDER = EXAMPLES / "compiled"
 PATHS = 20_000
 LEVELS = (0, 4)  # 2 and 32 steps
-
-
-def features() -> str:
-    try:
-        return Path("/proc/cpuinfo").read_text(encoding="utf-8")
-    except OSError:
-        return ""
-
-
-needs_half = pytest.mark.skipif(platform.machine() not in ("x86_64", "AMD64"), reason="GCC's excess precision is x86's")
-needs_fma = pytest.mark.skipif(re.search(r"\bfma\b", features()) is None, reason="this processor has no fused product")
 
 
 @pytest.fixture(scope="module")
@@ -47,25 +32,10 @@ def folder(tmp_path_factory: pytest.TempPathFactory) -> Path:
     return Path(shutil.copytree(FOLDER, tmp_path_factory.mktemp("examples") / "compiled"))
 
 
-def built(folder: Path, name: str) -> AuditFile:
-    """Run the command that an audit file prints in its comments, and return the audit file; skips without gcc."""
-    text = (folder / f"{name}.toml").read_text(encoding="utf-8")
-    command = re.search(r"^# +(g(?:cc|\+\+) .+)$", text, re.MULTILINE)
-    assert command is not None
-    words = command[1].split()
-    if shutil.which(words[0]) is None:
-        pytest.skip(f"{words[0]} is not installed")
-    done = subprocess.run(words, cwd=folder, capture_output=True, text=True, check=False)
-    if "_Float16" in done.stderr:
-        pytest.skip("this gcc has no _Float16")
-    assert done.returncode == 0, done.stderr
-    return read_audit_file(folder / f"{name}.toml")
-
-
 def emulated(folder: Path) -> BlockRunner:
     """The emulated source of the compiled kernel, by the same audit file."""
     asked = tomllib.loads((folder / "rounded.toml").read_text(encoding="utf-8"))
-    del asked["library"]
+    del asked["library"], asked["branches"]
     asked["kernel"]["run"] = f"{folder / 'reserve.py'}:value"
     return runner_of(audit_file_from(asked))
 
@@ -198,9 +168,3 @@ def output(dB, h, *, start, level, reversion, volatility, limit):
         q = q + (reversion * h * (level - water) + volatility * np.sqrt(water) * db)
     return {"output": total / (len(dB) * h)}
 """
-
-
-def small(file: AuditFile) -> AuditFile:
-    """The same audit with one look of 4,096 paths, for the time that a test may take."""
-    sampling = msgspec.structs.replace(file.sampling, block=4096, paths=4096, most_paths=4096)
-    return msgspec.structs.replace(file, sampling=sampling)

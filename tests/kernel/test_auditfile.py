@@ -55,7 +55,7 @@ DEFAULTS = {
     "sampling.confidence": 0.99,
     "sampling.seed": 1,
 }
-ALL_TABLES = "kernel, library, command, parameters, ladder, target, formats, draws, cost, sampling"
+ALL_TABLES = "kernel, library, command, parameters, ladder, target, formats, draws, branches, cost, sampling"
 KERNEL_KEYS = "run, takes, factors, layout, coupling, modules, shared, allow, rounds"
 
 
@@ -80,7 +80,7 @@ class TestDefaults:
         expected["kernel"]["layout"] = "factors, paths, steps"
         del expected["kernel"]["rounds"], expected["cost"]["measured"]  # which no emulated kernel has otherwise
         assert audit_file.asked() == expected
-        absent = {"library", "command", "draws"}
+        absent = {"library", "command", "draws", "branches"}
         assert list(audit_file.asked()) == [*(n for n in ALL_TABLES.split(", ") if n not in absent), "assumed"]
         assert audit_file.worthwhile == 1.0
 

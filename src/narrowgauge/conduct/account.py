@@ -136,6 +136,7 @@ def account(file: AuditFile, outcome: Outcome, kernel: KernelEntry, provenance: 
             plan=common_plan_entry(file, outcome),
         ),
         reach=outcome.trial.reach,
+        branches=outcome.branches,
         range=outcome.trial.range,
         canary=msgspec.UNSET if outcome.trial.canary is None else outcome.trial.canary,
         costs=outcome.costs or msgspec.UNSET,

@@ -10,6 +10,7 @@ from typing import Protocol
 
 import msgspec
 
+from narrowgauge.conduct.branches import broken_splits
 from narrowgauge.conduct.prepare import prepare
 from narrowgauge.conduct.stepcosts import with_costs
 from narrowgauge.errors import KernelError
@@ -22,6 +23,7 @@ from narrowgauge.measure.store import Ledger
 from narrowgauge.measure.tally import LevelTally
 from narrowgauge.measure.task import Block, Key, pinned
 from narrowgauge.record.audit import TrialEntry
+from narrowgauge.record.branches import BranchesEntry
 from narrowgauge.record.costs import CostEntry
 from narrowgauge.record.draws import DrawsEntry
 
@@ -73,7 +75,7 @@ class Outcome:
     """All that was measured and judged; `alpha` is 1 - confidence of each look.
 
     `fingerprints` are those of the processes that measured, each once and in order; `draws` the approximate ones;
-    `costs` are measured ones.
+    `costs` are measured ones, `branches` is what came of comparing those of a split.
     """
 
     tallies: Mapping[int, LevelTally]
@@ -83,6 +85,7 @@ class Outcome:
     fingerprints: tuple[str, ...] = ()
     draws: DrawsEntry | None = None
     costs: dict[str, CostEntry] | None = None
+    branches: BranchesEntry | None = None
 
 
 def run(
@@ -145,7 +148,8 @@ class _Conductor:
         for number, target in enumerate(looks, start=1):
             self._announce(number, len(looks), pending, target)
             for level in self._drawn(pending, target):
-                judgements[level] = judge_level(self._tallies[level], file, alpha)
+                broken = broken_splits(self._prepared.branches, level)
+                judgements[level] = judge_level(self._tallies[level], file, alpha, broken)
             pending = [level for level in pending if not self._settled(judgements[level])]
             if not pending:
                 break
@@ -157,6 +161,7 @@ class _Conductor:
             fingerprints=tuple(sorted(self._fingerprints)),
             draws=self._prepared.draws,
             costs=self._prepared.costs,
+            branches=self._prepared.branches,
         )
 
     def _looks(self) -> list[int]:

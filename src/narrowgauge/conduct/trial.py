@@ -29,6 +29,7 @@ from narrowgauge.record.audit import FaultEntry, TrialEntry
 
 __all__ = [
     "FEW",
+    "NOT_IDENTICAL",
     "NOT_REPEATABLE",
     "PATHS",
     "check_targets",
@@ -45,7 +46,7 @@ NOT_REPEATABLE = (
     "a second call with the same draws does not give the same bits",
     "The kernel is not a function of its draws alone; accepted: a kernel whose calls leave nothing behind",
 )
-_NOT_IDENTICAL = (
+NOT_IDENTICAL = (
     "float64 through the emulation does not give plain NumPy's bits",
     "Either the kernel is not a function of its draws alone, or an operation of it is not emulated rightly",
 )
@@ -208,7 +209,7 @@ def _identical(file: AuditFile, runner: BlockRunner, draws: Draws | Tape, level:
     for name in plain | repeated:
         same_bits(name, plain, repeated, level, NOT_REPEATABLE)
     for name in plain | with_machinery:
-        same_bits(name, plain, with_machinery, level, _NOT_IDENTICAL)
+        same_bits(name, plain, with_machinery, level, NOT_IDENTICAL)
     check_targets(file, list(plain))
     found = [f"{file.shown(place.file)}:{place.line}: {text}" if place else text for place, text in caller.remarks]
     found += [f"the module {name} is shared: it was imported as it is and not rounded" for name in caller.copy.shared]

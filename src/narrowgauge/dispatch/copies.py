@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import builtins
 import math
+from collections import Counter
 from collections.abc import Callable
 from types import CodeType, FunctionType, ModuleType
 from typing import Any
@@ -30,7 +31,9 @@ from narrowgauge.dispatch.ufuncs import call_ufunc
 from narrowgauge.dispatch.variates import plain_variates
 from narrowgauge.errors import KernelError
 
-__all__ = ["PrivateCopy", "copy_function", "copy_module", "new_setting"]
+__all__ = ["Maker", "PrivateCopy", "copy_function", "copy_module", "new_setting"]
+
+Maker = Callable[[Arithmetic, Observer | None, Feed | None], Setting]
 
 
 class PrivateCopy:
@@ -61,9 +64,20 @@ class PrivateCopy:
         return draws if self.setting is None else Array(draws, self.setting)
 
 
-def new_setting(arithmetic: Arithmetic, observer: Observer | None = None, draws: Feed | None = None) -> Setting:
-    """Return a setting for one run, with no user file in it yet; `draws` is what its numpy.random draws from."""
-    made = Setting(arithmetic, files=set(), wrap=wrap, ufunc=call_ufunc, function=call_function, observer=observer)
+def new_setting(
+    arithmetic: Arithmetic,
+    observer: Observer | None = None,
+    draws: Feed | None = None,
+    kind: Callable[..., Setting] = Setting,
+    *,
+    casts: bool = False,
+) -> Setting:
+    """Return a setting for one run, with no user file in it yet; `draws` is what its numpy.random draws from.
+
+    `kind` makes it, `casts` says whether casts are ignored and counted.
+    """
+    made = kind(arithmetic, files=set(), wrap=wrap, ufunc=call_ufunc, function=call_function, observer=observer)
+    made.casts = Counter() if casts else None
     if draws is not None:
         made.draws, draws.setting = draws, made
     return made

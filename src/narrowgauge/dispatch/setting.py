@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import os
 import sys
+from collections import Counter
 from collections.abc import Callable, Sequence
 from types import FrameType
 from typing import Any, Literal, NamedTuple, Protocol
@@ -15,12 +16,14 @@ from typing import Any, Literal, NamedTuple, Protocol
 import numpy as np
 
 from narrowgauge.arithmetic.arithmetic import Arithmetic
+from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.errors import DispatchError, EscapeError, RefusedError, SettingsMixedError
 
 __all__ = ["Number", "Observer", "Place", "Route", "Setting", "Way", "Wrapped", "holds"]
 
 Route = Literal["exact", "rounded", "accumulated", "whole"]
 Way = Literal["escape", "integer", "text"]  # how a value leaves the emulation and the run goes on
+_FLOATS = frozenset(form.storage for form in FORMATS.values())
 
 
 class Place(NamedTuple):
@@ -85,11 +88,13 @@ class Setting:
     `function` are given by the modules below this one, which know the array and the tables. `faults` keeps every
     refusal and escape in the order in which they happened, also those that the kernel swallowed; `allowed` holds the
     lines, by resolved path, where plain values may leave. `direct` are the operations that an array may do without
-    `operate`: those of the arithmetic where there is no observer, none where there is one.
+    `operate`: those of the arithmetic where there is no observer, none where there is one. `casts` is None, or casts to
+    formats of the kernel's own choice are ignored and counted there by line.
     """
 
     __slots__ = (
-        "_wrap", "allowed", "arithmetic", "direct", "draws", "faults", "files", "function", "observer", "paths", "ufunc"
+        "_wrap", "allowed", "arithmetic", "casts", "direct", "draws", "faults", "files", "function", "observer",
+        "paths", "ufunc",
     )  # fmt: skip
 
     def __init__(
@@ -112,6 +117,7 @@ class Setting:
         self.paths: int | None = None  # of the call under way: a reduction over an axis of that length is over paths
         self.faults: list[DispatchError] = []
         self.allowed: frozenset[Place] = frozenset()
+        self.casts: Counter[Place | None] | None = None
         self._wrap = wrap
 
     def frame(self) -> FrameType | None:
@@ -244,11 +250,14 @@ class Setting:
     def float_dtype(self, dtype: Any) -> np.dtype[Any] | None:
         """Return float64 where a creator or a cast means the state, None for integers and booleans.
 
-        Raises RefusedError for every other type.
+        Raises RefusedError for every other type, unless casts are ignored.
         """
         wanted = np.dtype(dtype if dtype is not None else np.float64)
         if wanted.kind in "biu":
             return None
+        if self.casts is not None and dtype is not None and wanted in _FLOATS:
+            self.casts[self.where()] += 1
+            return np.dtype(np.float64)
         if wanted == np.float64:
             return wanted
         raise self.fault(

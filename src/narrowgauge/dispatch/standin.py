@@ -19,6 +19,7 @@ import numpy as np
 
 from narrowgauge.dispatch.array import Array, Constant, Flat, as_state, carrier_of, constant
 from narrowgauge.dispatch.builders import builders
+from narrowgauge.dispatch.casts import ignored_casts
 from narrowgauge.dispatch.exact import Exact, bare, is_exact
 from narrowgauge.dispatch.functions import call_function
 from narrowgauge.dispatch.lists import taking_lists
@@ -150,7 +151,7 @@ def numpy_namespace(setting: Setting, random: ModuleType) -> ModuleType:
         ("asfortranarray", "F", 0),
     ):
         names[name] = _as_array(names["array"], order, ndmin)
-    names |= builders(setting, names["array"])
+    names |= builders(setting, names["array"]) | ignored_casts(setting)
     made = Exchanging(np, taking_lists(names["array"]))
     made.__dict__.update(names)
     return made
@@ -213,6 +214,8 @@ def _array(setting: Setting) -> Callable[..., Any]:
         value: Any, dtype: Any = None, *, copy: Any = True, order: Any = "K", ndmin: int = 0, **others: Any
     ) -> Any:
         _refuse_others(setting, "array", others)
+        if setting.casts is not None and dtype is not None:
+            dtype = setting.float_dtype(dtype) or dtype
         if isinstance(value, Flat):
             value = value.copy()
         if not holds(value, State):

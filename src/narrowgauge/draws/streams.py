@@ -26,6 +26,7 @@ class Purpose(IntEnum):
     AUDIT = 0
     IDENTITY = 1
     TRIAL = 2
+    BRANCHES = 3
 
 
 def block_paths(block: int, steps: int, factors: int, refinement: int = 2) -> int:

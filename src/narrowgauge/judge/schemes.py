@@ -14,7 +14,7 @@ admissible and `high` the upper bound against the rivals that are:
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
+from collections.abc import Collection, Mapping
 from dataclasses import dataclass, field
 from typing import Literal
 
@@ -90,10 +90,12 @@ class LevelJudgement:
         return all(arm.verdict != "undecided" for arms in self.arms.values() for arm in arms.values())
 
 
-def judge_level(tally: LevelTally, file: AuditFile, alpha: float) -> LevelJudgement:
-    """Judge every narrow arm on one level at confidence 1 - alpha."""
+def judge_level(
+    tally: LevelTally, file: AuditFile, alpha: float, broken: Collection[str] = frozenset()
+) -> LevelJudgement:
+    """Judge every narrow arm on one level at confidence 1 - alpha; no split of a `broken` format is admissible."""
     views = {name: _view(tally, file, name) for name in tally.quantities}
-    court = _Court(tally=tally, file=file, alpha=alpha, views=views)
+    court = _Court(tally=tally, file=file, alpha=alpha, views=views, broken=broken)
     arms = {quantity: {name: court.judge(quantity, name) for name in file.narrow} for quantity in views}
     best = {quantity: court.best(quantity) for quantity in views}
     return LevelJudgement(level=tally.level, arms=arms, best=best, joint=court.joint(best), views=views)
@@ -128,8 +130,16 @@ def _view(tally: LevelTally, file: AuditFile, quantity: str) -> LevelView:
 class _Court:
     """The judgement of one level; keeps what several formats ask for."""
 
-    def __init__(self, *, tally: LevelTally, file: AuditFile, alpha: float, views: Mapping[str, LevelView]) -> None:
-        self._tally, self._file, self._alpha, self._views = tally, file, alpha, views
+    def __init__(
+        self,
+        *,
+        tally: LevelTally,
+        file: AuditFile,
+        alpha: float,
+        views: Mapping[str, LevelView],
+        broken: Collection[str] = frozenset(),
+    ) -> None:
+        self._tally, self._file, self._alpha, self._views, self._broken = tally, file, alpha, views, broken
         self._admissions: dict[tuple[Scheme, bool], Admission] = {}
 
     def own(self, name: str) -> list[Scheme]:
@@ -175,8 +185,9 @@ class _Court:
         admissions = {scheme: self.admission(scheme) for scheme in own}
         open_schemes = [scheme for scheme in own if admissions[scheme].standing != "no"]
         if not open_schemes:
-            reasons: list[Reason] = [a.reason for a in admissions.values() if a.reason is not None]
-            return self._refused(quantity, own, reasons[0] if reasons else "edge")
+            reasons: list[Reason] = [a.reason for a in admissions.values() if a.reason is not None] or ["edge"]
+            # Branches that differ can be put right, so that they are named first.
+            return self._refused(quantity, own, "branches" if "branches" in reasons else reasons[0])
         view = self._views[quantity]
         # A variance of 0, or one past float64, compares with nothing.
         if not all(0 < view.tally.differences[arm].moments.variance < math.inf for arm in (REFERENCE, name)):
@@ -237,6 +248,9 @@ class _Court:
         finite = self._finite(scheme)
         if finite.standing == "no":
             return finite
+        # The two branches agree to the bit, or as far as the audit file asks.
+        if scheme.kind == "split" and Arm.named(scheme.narrow).format in self._broken:
+            return Admission(standing="no", reason="branches", paths_needed=None)
         # The bias of the widest arm lies inside the level's share of the target, for every quantity.
         found = [self._within_budget(quantity, scheme) for quantity in self._views]
         found += [self._known_tail(series) for view in self._views.values() for series in self._risks(view, scheme)]

@@ -41,6 +41,7 @@ from narrowgauge.kernel.audittables import (
     kind_of,
     shown,
 )
+from narrowgauge.kernel.branchestable import BranchesTable, filled
 from narrowgauge.kernel.givenkeys import CHEAP, check_drawing, check_names, defaults_in_use, document, nearest, useless
 from narrowgauge.kernel.ownlimits import check_own
 from narrowgauge.kernel.owntables import with_run
@@ -84,6 +85,7 @@ class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
     assumed: tuple[str, ...]
     draws: DrawsTable | None = None
     timed: CostTable | None = None
+    branches: BranchesTable | None = None
 
     @property
     def costs(self) -> CostTable:
@@ -160,7 +162,8 @@ class AuditFile(msgspec.Struct, frozen=True, kw_only=True):
             elif name in ("parameters", "target"):
                 tables[name] = copy.deepcopy(table)
         tables["assumed"] = list(self.assumed)
-        return tables if self.draws is None else {**tables, "draws": document(self.draws, without)}
+        further = {"draws": self.draws, "branches": self.branches}
+        return tables | {name: document(table, without) for name, table in further.items() if table is not None}
 
 
 def read_audit_file(path: Path) -> AuditFile:
@@ -285,6 +288,9 @@ def _assembled(raw: dict[str, object], source: str, folder: Path, function: Call
         assumed=defaults_in_use(raw),
         draws=_draws(raw),
     )
+    if "branches" in raw:
+        table = filled(_table(BranchesTable, raw["branches"]), audit_file)
+        audit_file = msgspec.structs.replace(audit_file, branches=table)
     check_own(
         audit_file.kernel,
         formats=audit_file.formats,
@@ -330,8 +336,7 @@ def _draws(raw: Mapping[str, object]) -> DrawsTable | None:
 def _table(record: type[_Record], raw: object) -> _Record:
     """Return one table as its record; raise a TableError for an unknown, missing or wrong key."""
     values = raw if isinstance(raw, dict) else {}
-    fields = msgspec.structs.fields(record)
-    known = tuple(field.name for field in fields)
+    fields, known = msgspec.structs.fields(record), record.__struct_fields__
     for key in values:
         if key not in known:
             raise TableError(dotted(record.table, key), "unknown key" + nearest(key, known), ", ".join(known))

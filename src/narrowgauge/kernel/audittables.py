@@ -14,6 +14,7 @@ import msgspec
 
 from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.kernel.arms import Kind
+from narrowgauge.kernel.branchestable import BranchesTable
 from narrowgauge.kernel.drawstable import DrawsTable
 from narrowgauge.kernel.owntables import CommandTable, LibraryTable
 from narrowgauge.kernel.rules import RULES, Table, TableError, check_run, dotted, kind_of, shown
@@ -21,6 +22,7 @@ from narrowgauge.kernel.rules import RULES, Table, TableError, check_run, dotted
 __all__ = [
     "RULES",
     "TABLES",
+    "BranchesTable",
     "CommandTable",
     "CostTable",
     "DrawsTable",
@@ -248,6 +250,7 @@ TABLES: dict[str, type[Table]] = {
         TargetTable,
         FormatsTable,
         DrawsTable,
+        BranchesTable,
         CostTable,
         SamplingTable,
     )

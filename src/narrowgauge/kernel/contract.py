@@ -45,6 +45,7 @@ __all__ = [
     "described",
     "evaluate",
     "evaluate_drawing",
+    "evaluate_lying",
     "label_of",
     "quantities_of",
     "takes_one_path",
@@ -125,6 +126,17 @@ def evaluate(
     return _called_singly(copy, one, draws.shape[-1])
 
 
+def evaluate_lying(
+    copy: PrivateCopy, block: Floats, step: float, keywords: Mapping[str, object], paths: int, *, over_paths: bool
+) -> dict[str, npt.NDArray[np.float64]]:
+    """Call a kernel on carriers as they lie in memory, in the order of its layout; returns as `evaluate` does.
+
+    Without `over_paths` no axis counts as that of the paths, which can be as many as steps where they are few.
+    """
+    owned = _owned(copy, keywords)
+    return _called(copy, lambda: copy.function(copy.own(block), step, **owned), paths, over_paths=over_paths)
+
+
 def evaluate_drawing(
     copy: PrivateCopy,
     feed: Feed,
@@ -159,12 +171,14 @@ def evaluate_drawing(
         raise KernelError(str(problem)) from None
 
 
-def _called(copy: PrivateCopy, call: Callable[[], Any], paths: int) -> dict[str, npt.NDArray[np.float64]]:
+def _called(
+    copy: PrivateCopy, call: Callable[[], Any], paths: int, *, over_paths: bool = True
+) -> dict[str, npt.NDArray[np.float64]]:
     """Return the quantities of one call."""
     setting = copy.setting
     if setting is not None:
         setting.faults.clear()
-        setting.paths = paths
+        setting.paths = paths if over_paths else None
     try:
         with np.errstate(all="ignore"):
             result = call()

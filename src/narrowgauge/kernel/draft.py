@@ -21,6 +21,7 @@ from narrowgauge.errors import AuditFileError
 from narrowgauge.kernel.auditfile import bytes_of, most_steps
 from narrowgauge.kernel.auditparameters import check_parameter, plain
 from narrowgauge.kernel.audittables import TABLES, LadderTable, TableError, check_run, default_layout, dotted
+from narrowgauge.kernel.branchestable import BRANCH_MEANINGS, BRANCH_VALUES
 
 __all__ = ["draft"]
 
@@ -34,8 +35,8 @@ _TAKES_BY_NAME: tuple[tuple[str, re.Pattern[str]], ...] = (
     ("uniforms", re.compile(r"us?|.*uniforms?")),
 )
 _ELSEWHERE = ("kernel", "library", "command")  # written first, or in place of a Python function
-_OPTIONAL = ("target", "draws", "cost")
-_INSTEAD = ("draws.intervals", "draws.degree")  # not accepted beside the value shown for draws.approximate
+_OPTIONAL = ("target", "draws", "branches", "cost")
+_INSTEAD = ("draws.intervals", "draws.degree", "branches.library", "branches.symbol")  # not beside what is shown
 _COUNTS = ("steps", "paths")  # what a kernel that draws for itself is told
 _STEP_NAMES = re.compile(r"h|dt|delta_?t?|.*step(_?size)?|time_?step|tau")
 
@@ -68,12 +69,8 @@ _MEANINGS: dict[str, str] = {
     "draws.degree": "of polynomial, in place of cells",
     "draws.formats": "formats that are tried with them too; the default is the narrow ones",
     "cost.float64": "relative cost of one step of one path; the default is storage bits / 64",
-    "cost.float32": "the same",
-    "cost.float16": "the same",
-    "cost.bfloat16": "the same",
-    "cost.tf32": "the same",
-    "cost.e4m3": "the same",
-    "cost.e5m2": "the same",
+    **{f"cost.{name}": "the same" for name in FORMATS if name != "float64"},
+    **BRANCH_MEANINGS,
     "cost.draws": "one draw",
     "cost.approximate_draws": "no default; one approximate draw, else as much as an exact one",
     "cost.path": "fixed cost of a path",
@@ -95,6 +92,7 @@ _VALUES: dict[str, object] = {
     "draws.degree": 9,
     "draws.formats": ("float16", "bfloat16", "float32"),
     "cost.approximate_draws": 0.0,
+    **BRANCH_VALUES,
     **{f"cost.{name}": row.bits / 64 for name, row in FORMATS.items()},
 }
 
@@ -118,7 +116,7 @@ def draft(target: str) -> str:
     factors, layout = _factors(function, draws) if takes != "rng" else (1, "")
     run = f"{PurePath(file).as_posix()}:{name}"
     finest = LadderTable(horizon=1.0, finest=0).finest_within(most_steps(factors))
-    values = {**_VALUES, "kernel.run": run, "ladder.finest": min(8, finest)}
+    values = {**_VALUES, "kernel.run": run, "branches.low": run, "ladder.finest": min(8, finest)}
     values["kernel.layout"] = default_layout(factors)
     lines = [
         f"# Audit file for {name}, drafted from its source: check what is guessed, and supply what is to be",

@@ -10,13 +10,17 @@ import msgspec
 
 from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.kernel.audittables import TABLES, Table, TableError, dotted, kind_of, shown
+from narrowgauge.kernel.branchestable import defaults_of
 from narrowgauge.kernel.drawstable import counting_keys
 
 __all__ = ["CHEAP", "check_drawing", "check_names", "defaults_in_use", "document", "nearest", "useless"]
 
 CHEAP = "approximate_draws"  # a cost that counts with [draws] alone
 
-_ORDER = ("kernel", "library", "command", "parameters", "ladder", "target", "formats", "draws", "cost", "sampling")
+_ORDER = (
+    *("kernel", "library", "command", "parameters", "ladder", "target", "formats", "draws", "branches", "cost"),
+    "sampling",
+)
 _REQUIRED = ("kernel", "ladder")
 _OWN = ("kernel.rounds", "cost.measured")  # keys that count for a kernel that rounds for itself alone
 
@@ -81,6 +85,8 @@ def defaults_in_use(raw: Mapping[str, object]) -> tuple[str, ...]:
             keys = []
         if table == "draws":
             keys = [name for name in keys if isinstance(given, dict) and name in counting_keys(given)]
+        if table == "branches":
+            keys = [name for name in keys if isinstance(given, dict) and name in defaults_of(given)]
         if table == "cost" and given is not None:
             keys = [name for name in keys if name not in FORMATS]  # a format without a cost is not used
         assumed.extend(key for name in keys if (key := f"{table}.{name}") not in without)

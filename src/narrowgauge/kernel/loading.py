@@ -7,7 +7,7 @@ import os
 from collections.abc import Callable, Iterator, Mapping
 from contextlib import contextmanager
 from contextvars import ContextVar
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 from types import CodeType, FunctionType
 from typing import Any
@@ -15,14 +15,15 @@ from typing import Any
 import msgspec
 
 from narrowgauge.arithmetic.arithmetic import Arithmetic
-from narrowgauge.dispatch.copies import PrivateCopy, copy_function, new_setting
+from narrowgauge.dispatch.copies import Maker, PrivateCopy, copy_function, new_setting
 from narrowgauge.dispatch.feed import Feed
 from narrowgauge.dispatch.importing import Copies
 from narrowgauge.dispatch.modules import STOOD_IN, Found, Sources
 from narrowgauge.dispatch.setting import Observer, Place
 from narrowgauge.errors import AuditFileError, DispatchError, KernelError, said
 from narrowgauge.kernel.auditfile import AuditFile
-from narrowgauge.kernel.audittables import RULES, KernelTable, shown
+from narrowgauge.kernel.audittables import RULES, KernelTable, LibraryTable, shown
+from narrowgauge.kernel.branchlibrary import PairLibrary
 from narrowgauge.kernel.command import Command
 from narrowgauge.kernel.fingerprint import fingerprint
 from narrowgauge.kernel.identity import Origin, origin_of_sources
@@ -32,6 +33,7 @@ __all__ = [
     "WORKER",
     "KernelSource",
     "approximation_function",
+    "branch_file",
     "executing",
     "find_kernel",
     "private_copy",
@@ -50,7 +52,7 @@ class KernelSource:
 
     `sources` holds the kernel's module and the listed ones, read and compiled once for all arms; `allowed` the lines of
     theirs that may let values leave, by the words of the audit file; `approximation` the user's function that makes
-    approximate normals, if there is one.
+    approximate normals, if there is one; `branches` the functions of [branches] by "low" and "correction".
     """
 
     run: str
@@ -63,6 +65,7 @@ class KernelSource:
     allowed: Mapping[str, Place]
     approximation: KernelSource | None = None
     foreign: Library | Command | None = None
+    branches: Mapping[str, KernelSource] = field(default_factory=dict)
 
     def digest(self) -> str:
         """Return the fingerprint of all that is copied: source texts, and the function that was handed over.
@@ -73,9 +76,9 @@ class KernelSource:
         """
         try:
             own = fingerprint(self.sources.texts(), self.function) if self.foreign is None else self.foreign.digest()
-            if self.approximation is None:
-                return own
-            return fingerprint({"kernel": own.encode(), "draws": self.approximation.digest().encode()})
+            further = {**({} if self.approximation is None else {"draws": self.approximation}), **self.branches}
+            texts = {name: source.digest().encode() for name, source in further.items()}
+            return fingerprint({"kernel": own.encode(), **texts}) if texts else own
         except OSError as problem:
             what = f"cannot read {problem.filename}: {problem.strerror}"
             raise AuditFileError(self.source, "kernel.modules", what, "Python files") from None
@@ -136,6 +139,7 @@ def find_kernel(audit_file: AuditFile) -> KernelSource:
             allowed={},
             approximation=_approximation(audit_file),
             foreign=foreign,
+            branches=_branches(audit_file),
         )
     target, _, name = run.rpartition(":")
     function, path = audit_file.function, None
@@ -159,7 +163,48 @@ def find_kernel(audit_file: AuditFile) -> KernelSource:
         sources=sources,
         allowed=_allowed(audit_file, sources, path),
         approximation=_approximation(audit_file),
+        branches=_branches(audit_file),
     )
+
+
+def branch_file(audit_file: AuditFile, name: str) -> AuditFile:
+    """Return the audit file by which the function `name` of [branches], "low" or "correction", is found and called."""
+    table, kernel, library = audit_file.branches, audit_file.kernel, audit_file.library
+    assert table is not None  # it names the function
+    run = getattr(table, name)
+    if run is None and library is not None:
+        own = LibraryTable(
+            path=table.library or library.path,
+            symbol=table.symbol or library.symbol,
+            parameters=library.parameters,
+            outputs=library.outputs,
+        )
+        return msgspec.structs.replace(audit_file, library=own, draws=None, branches=None)
+    allow = tuple(line for line in kernel.allow if line.rpartition(":")[0] == run.rpartition(":")[0])
+    changed = msgspec.structs.replace(kernel, run=run, rounds=table.rounds or kernel.rounds, allow=allow)
+    return msgspec.structs.replace(
+        audit_file, kernel=changed, library=None, command=None, function=None, draws=None, branches=None
+    )
+
+
+def _branches(audit_file: AuditFile) -> dict[str, KernelSource]:
+    """Find the functions of [branches] as a kernel is found."""
+    table = audit_file.branches
+    found = {}
+    for name in ("low", "correction") if table is not None else ():
+        if getattr(table, name) is not None:
+            with _blaming(f"branches.{name}"):
+                found[name] = find_kernel(branch_file(audit_file, name))
+    if table is not None and table.symbol is not None:
+        file = branch_file(audit_file, "correction")
+        assert file.library is not None  # of the symbol
+        with _blaming("branches.library", "library.path"):
+            foreign = PairLibrary(file, file.library)
+        found["correction"] = KernelSource(
+            run=file.library.run, source=file.source, name="", code=None, module="", function=None, sources=Sources(),
+            allowed={}, foreign=foreign,
+        )  # fmt: skip
+    return found
 
 
 def _approximation(audit_file: AuditFile) -> KernelSource | None:
@@ -168,9 +213,11 @@ def _approximation(audit_file: AuditFile) -> KernelSource | None:
     if draws is None or draws.built_in:
         return None
     table = KernelTable(run=draws.approximate, takes="uniforms")
-    with _blaming_draws():
+    with _blaming("draws.approximate"):
         return find_kernel(
-            msgspec.structs.replace(audit_file, kernel=table, library=None, command=None, function=None, draws=None)
+            msgspec.structs.replace(
+                audit_file, kernel=table, library=None, command=None, function=None, draws=None, branches=None
+            )
         )
 
 
@@ -181,31 +228,36 @@ def approximation_function(kernel: KernelSource) -> Callable[..., Any] | None:
     """
     if kernel.approximation is None:
         return None
-    with _blaming_draws():
+    with _blaming("draws.approximate"):
         return private_copy(kernel.approximation, None).function
 
 
 @contextmanager
-def _blaming_draws() -> Iterator[None]:
-    """Let what is said of kernel.run be said of draws.approximate, where that is what is looked for."""
+def _blaming(key: str, said_of: str = "kernel.run") -> Iterator[None]:
+    """Let what is said of one key, kernel.run unless told, be said of another, where that is what is looked for."""
     try:
         yield
     except AuditFileError as problem:
-        if problem.key != "kernel.run":
+        if problem.key != said_of:
             raise
-        raise AuditFileError(problem.source, "draws.approximate", problem.problem, problem.accepted) from None
+        raise AuditFileError(problem.source, key, problem.problem, problem.accepted) from None
 
 
 def private_copy(
-    kernel: KernelSource, arithmetic: Arithmetic | None, observer: Observer | None = None, draws: Feed | None = None
+    kernel: KernelSource,
+    arithmetic: Arithmetic | None,
+    observer: Observer | None = None,
+    draws: Feed | None = None,
+    made: Maker = new_setting,
 ) -> PrivateCopy:
     """Return the kernel's function executed anew in `arithmetic`, or under plain NumPy for None.
 
-    With `draws` numpy.random draws from there; else random numbers are refused, except under plain NumPy.
+    With `draws` numpy.random draws from there; else random numbers are refused, except under plain NumPy. `made` makes
+    the setting, where it is to be another than usual.
     Raises AuditFileError where the module has no such function, or a module cannot be copied; KernelError where
     executing it raises.
     """
-    setting = None if arithmetic is None else new_setting(arithmetic, observer, draws)
+    setting = None if arithmetic is None else made(arithmetic, observer, draws)
     if setting is not None:
         setting.allowed = frozenset(kernel.allowed.values())
     copies = Copies(setting, kernel.sources, draws)

@@ -21,7 +21,7 @@ from narrowgauge.kernel.contract import ACCEPTED, arranged, check_shape, describ
 from narrowgauge.kernel.loading import KernelSource, private_copy
 from narrowgauge.kernel.owntables import OWN_FORMATS
 
-__all__ = ["evaluate_own", "own_copy", "timed_own"]
+__all__ = ["called_own", "evaluate_own", "own_copy", "timed_own"]
 
 _TYPES: dict[np.dtype[Any], Format] = {FORMATS[name].storage: FORMATS[name] for name in OWN_FORMATS}
 
@@ -49,9 +49,8 @@ def evaluate_own(
     or of a type that does not hold the format, for NaN in the reference of a library or command, and whatever the
     kernel raises.
     """
-    with np.errstate(all="ignore"):
-        result = copy.function(arranged(draws, layout).astype(form.storage), step, **keywords)
-        found = {name: _column(values, name, draws.shape[-1], form) for name, values in quantities_of(result).items()}
+    given = arranged(draws, layout).astype(form.storage)
+    found = called_own(copy, given, draws.shape[-1], form=form, step=step, keywords=keywords)
     if kernel.foreign is not None and form.name == "float64":
         for name, values in found.items():
             if (wrong := np.isnan(values)).any():
@@ -60,6 +59,15 @@ def evaluate_own(
                     f"{kernel.run} gives NaN in the reference for {name!r}: {count}; {kernel.foreign.nan}"
                 )
     return found
+
+
+def called_own(
+    copy: PrivateCopy, given: Any, paths: int, *, form: Format, step: float, keywords: Mapping[str, object]
+) -> dict[str, npt.NDArray[np.float64]]:
+    """Call a kernel on draws of its own type as they lie in memory; returns and raises as `evaluate_own` does."""
+    with np.errstate(all="ignore"):
+        result = copy.function(given, step, **keywords)
+        return {name: _column(values, name, paths, form) for name, values in quantities_of(result).items()}
 
 
 def timed_own(

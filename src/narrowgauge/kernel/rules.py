@@ -96,6 +96,15 @@ RULES: dict[str, Rule] = {
     "draws.intervals": Rule(accepted="an integer from 1 to 52", low=1, high=52),
     "draws.degree": Rule(accepted="an odd integer from 1 to 31", low=1, high=31),
     "draws.formats": Rule(accepted=f"an array of one or more of {', '.join(FORMATS)}"),
+    "branches.low": Rule(accepted='"file.py:function" or "package.module:function"'),
+    "branches.correction": Rule(accepted='"file.py:function" or "package.module:function"'),
+    "branches.rounds": Rule(accepted='"emulated" or "itself"'),
+    "branches.library": Rule(accepted="the path of a shared library, relative to the audit file"),
+    "branches.symbol": Rule(
+        accepted='a name in C, such as "value" for value_float16_float32, value_float16_float64 ...'
+    ),
+    "branches.allow": Rule(accepted='"within budget"'),
+    "branches.paths": Rule(accepted="an integer of 1 or more", low=1),
     "cost.float64": _POSITIVE,
     "cost.float32": _POSITIVE,
     "cost.float16": _POSITIVE,

@@ -7,7 +7,7 @@ import numpy.typing as npt
 
 from narrowgauge.arithmetic.arithmetic import Arithmetic, arithmetic_named
 from narrowgauge.arithmetic.rounding import Floats
-from narrowgauge.dispatch.copies import PrivateCopy
+from narrowgauge.dispatch.copies import Maker, PrivateCopy, new_setting
 from narrowgauge.dispatch.feed import Feed
 from narrowgauge.dispatch.setting import Observer, Place
 from narrowgauge.draws.coarsen import Draws, coarse_draws, fine_draws
@@ -41,6 +41,7 @@ class Caller:
         *,
         rows: bool = False,
         kind: Kind = "exact",
+        made: Maker = new_setting,
     ) -> None:
         self._file = file
         self._kind = kind
@@ -48,13 +49,16 @@ class Caller:
         self._feed = Feed() if file.kernel.takes == "rng" else None
         self._drawn: Floats | ArmDraws | None = None
         self._own = kernel if file.kernel.rounds == "itself" else None
-        self.copy: PrivateCopy = (
-            private_copy(kernel, arithmetic, observer, self._feed)
-            if self._own is None
-            else own_copy(kernel, self._arithmetic.format)
-        )
+        self.copy = self._copied(kernel, arithmetic, observer, made)
         self.one_path = takes_one_path(self.copy.function, file)
         self._rows = rows and self.one_path
+
+    def _copied(
+        self, kernel: KernelSource, arithmetic: Arithmetic | None, observer: Observer | None, made: Maker
+    ) -> PrivateCopy:
+        if self._own is not None:
+            return own_copy(kernel, self._arithmetic.format)
+        return private_copy(kernel, arithmetic, observer, self._feed, made)
 
     @property
     def remarks(self) -> list[tuple[Place | None, str]]:

@@ -12,6 +12,7 @@ from typing import Literal
 
 import msgspec
 
+from narrowgauge.record.branches import BranchesEntry, CastEntry, MismatchEntry, PointEntry, TriedEntry, WhereEntry
 from narrowgauge.record.canary import CanaryEntry
 from narrowgauge.record.costs import CostEntry
 from narrowgauge.record.draws import DrawsEntry, OrderEntry, PartsEntry, SeparationEntry
@@ -43,7 +44,9 @@ __all__ = [
     "ArmEntry",
     "AuditRecord",
     "BestEntry",
+    "BranchesEntry",
     "CanaryEntry",
+    "CastEntry",
     "CommonLevelEntry",
     "CommonPlanEntry",
     "ConstantEntry",
@@ -58,9 +61,11 @@ __all__ = [
     "LawEntry",
     "LevelEntry",
     "LineCount",
+    "MismatchEntry",
     "OrderEntry",
     "PartsEntry",
     "PlanEntry",
+    "PointEntry",
     "QuantityEntry",
     "RaisedEntry",
     "RangeEntry",
@@ -72,7 +77,9 @@ __all__ = [
     "SeparationEntry",
     "TelescopingEntry",
     "TrialEntry",
+    "TriedEntry",
     "VerdictEntry",
+    "WhereEntry",
 ]
 
 SCHEMA = "narrowgauge-audit/1"
@@ -312,7 +319,8 @@ class RulesEntry(Entry, frozen=True, kw_only=True):
 class AuditRecord(Entry, frozen=True, kw_only=True):
     """The whole audit; parts that a later version fills are None.
 
-    `draws` is there with [draws] alone, `canary` with a kernel that rounds for itself, `costs` where they are measured.
+    `branches` is None where no scheme is a split. `draws` is there with [draws] alone, `canary` with a kernel that
+    rounds for itself, `costs` where they are measured.
     """
 
     schema: str
@@ -324,7 +332,7 @@ class AuditRecord(Entry, frozen=True, kw_only=True):
     quantities: dict[str, QuantityEntry]
     verdict: VerdictEntry
     reach: ReachEntry | None
-    branches: None = None
+    branches: BranchesEntry | None = None
     range: RangeEntry | None = None
     canary: list[CanaryEntry] | msgspec.UnsetType = msgspec.UNSET
     costs: dict[str, CostEntry] | msgspec.UnsetType = msgspec.UNSET

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from typing import Literal
 
+from narrowgauge.record.branches import BranchesEntry
 from narrowgauge.record.canary import CanaryEntry
 from narrowgauge.record.plan import Entry
 
@@ -124,7 +125,8 @@ class TrialEntry(Entry, frozen=True, kw_only=True):
     """A trial run: whether float64 through the whole machinery gave plain NumPy's bits, and what stopped any arm.
 
     `range` is None where float64 was stopped before it had met all constants. A kernel that rounds for itself has a
-    `canary` and neither reach nor range; `identical` then says that two runs gave the same bits.
+    `canary` and neither reach nor range; `identical` then says that two runs gave the same bits. `branches` is there
+    where a trial is all that is run.
     """
 
     identical: bool
@@ -132,3 +134,4 @@ class TrialEntry(Entry, frozen=True, kw_only=True):
     range: RangeEntry | None
     canary: list[CanaryEntry] | None = None
     faults: list[FaultEntry]
+    branches: BranchesEntry | None = None

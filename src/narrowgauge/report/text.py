@@ -13,7 +13,8 @@ from rich.console import Group, RenderableType
 from rich.rule import Rule
 from rich.text import Text
 
-from narrowgauge.record.audit import AuditRecord, FaultEntry, PlanEntry, QuantityEntry, TrialEntry
+from narrowgauge.record.audit import AuditRecord, BranchesEntry, FaultEntry, PlanEntry, QuantityEntry, TrialEntry
+from narrowgauge.report.branches import branch_lines, branch_summary
 from narrowgauge.report.canary import CANNOT_SHOW, canary_lines
 from narrowgauge.report.constants import constant_lines, no_constants
 from narrowgauge.report.layout import Hanging
@@ -71,6 +72,8 @@ def audit_text(record: AuditRecord, folder: Path | None) -> Group:
         parts += _bullets(lines)
     if not isinstance(record.canary, UnsetType):
         parts += [_labelled(_CANARY, CANNOT_SHOW), *_bullets(canary_lines(record.canary))]
+    if record.branches is not None:
+        parts += _branches(record.branches, record)
     if costs := measured_costs(record):
         parts.append(_labelled("Measured costs of a step of one path, by every audit anew", f"{costs}."))
     assumed = assumptions(record)
@@ -109,13 +112,21 @@ def trial_text(trial: TrialEntry) -> Group:
     notes = reach_notes(trial.reach)
     if notes:
         parts += [Text(), *_heading("Remarks"), *_bullets(notes)]
+    if trial.branches is not None:
+        parts += [Text(), *_branches(trial.branches, None)]
     return Group(*parts)
+
+
+def _branches(entry: BranchesEntry, record: AuditRecord | None) -> list[RenderableType]:
+    return [_labelled("Branches of a split", branch_summary(entry)), *_bullets(branch_lines(entry, record))]
 
 
 def _own_text(trial: TrialEntry) -> Group:
     """Return what the trial of a kernel that rounds for itself showed."""
     parts: list[RenderableType] = [Text("A second run gives the same bits in every format."), Text(), *_raised(trial)]
     parts += [*_heading(_CANARY), *_bullets(canary_lines(trial.canary or ())), Text(), Text(CANNOT_SHOW)]
+    if trial.branches is not None:
+        parts += [Text(), *_branches(trial.branches, None)]
     return Group(*parts)
 
 

@@ -8,6 +8,7 @@ from msgspec import UnsetType
 from rich.text import Text
 
 from narrowgauge.record.audit import AuditRecord, DecidedEntry, FinestEntry, QuantityEntry
+from narrowgauge.report.branches import branch_alarms
 from narrowgauge.report.canary import canary_alarms
 from narrowgauge.report.settings import assumed_costs, confidence, coupled, measured_to, today
 from narrowgauge.report.tables import VERDICT_STYLES
@@ -70,6 +71,10 @@ def alarms(record: AuditRecord) -> list[tuple[str, Text]]:
         text = Text("THE KERNEL DOES NOT ROUND IN THE FORMATS IT CLAIMS. ", style="bold red")
         text.append("What is said below of these formats is said of what was run:", style="not bold default")
         found += [("", text), *(("- ", Text(line)) for line in unsound)]
+    if differ := branch_alarms(record):
+        text = Text("THE BRANCHES OF A SPLIT DO NOT CANCEL. ", style="bold red")
+        text.append("What differs, and where, is said behind the figures.", style="not bold default")
+        found += [("", text), *(("- ", Text(f"{line}.")) for line in differ)]
     return found + [("", text) for text in worker_alarms(record)]
 
 
