@@ -27,6 +27,7 @@ class Purpose(IntEnum):
     IDENTITY = 1
     TRIAL = 2
     BRANCHES = 3
+    GATE = 6  # never of uniforms: the seed of a gate's own streams is drawn with it
 
 
 def block_paths(block: int, steps: int, factors: int, refinement: int = 2) -> int:

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import functools
-import hashlib
 import math
 from collections.abc import Mapping
 from pathlib import Path
@@ -31,26 +30,14 @@ from narrowgauge.policy.plan import replanned
 from narrowgauge.record import audit as audited
 from narrowgauge.record import policy as made
 from narrowgauge.record.audit import AuditRecord
-from narrowgauge.record.canonical import DocumentError, read_strict, write_atomically
+from narrowgauge.record.canonical import write_atomically
+from narrowgauge.record.finished import read_audit
 from narrowgauge.record.policy import PolicyDocument, policy_text
-from narrowgauge.record.reading import converted, shown, text_of
 
 __all__ = ["draw_up", "read_audit", "write_policy"]
 
-_LARGEST = 64 * 2**20  # bytes of an audit.json
 _Table = TypeVar("_Table", bound=Table)
 _Part = TypeVar("_Part", bound=msgspec.Struct)
-
-
-def read_audit(folder: Path) -> tuple[AuditRecord, str]:
-    """Return the record in an audit's folder and the digest of its file; DocumentError says what is wrong with it."""
-    path = Path(folder) / "audit.json"
-    text = text_of(path, _LARGEST)
-    document = read_strict(text, str(path))
-    schema = document.get("schema") if isinstance(document, dict) else None
-    if schema != audited.SCHEMA:
-        raise DocumentError(str(path), "schema", f"{shown(schema)} is not accepted; accepted: {audited.SCHEMA}")
-    return converted(document, AuditRecord, str(path)), _sha256(text)
 
 
 def draw_up(
@@ -362,7 +349,3 @@ def _mapping(value: object) -> dict[str, Any]:
 
 def _texts(value: object) -> list[str]:
     return [str(one) for one in value] if isinstance(value, list) else []
-
-
-def _sha256(text: str) -> str:
-    return f"sha256:{hashlib.sha256(text.encode()).hexdigest()}"

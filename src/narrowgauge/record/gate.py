@@ -20,6 +20,7 @@ __all__ = [
     "CHECKS",
     "EXIT_CODES",
     "SCHEMA",
+    "Check",
     "Finding",
     "GateEntry",
     "GateReport",
@@ -73,7 +74,7 @@ CHECKS: Final[dict[str, str]] = {
     "domain": "the corners of the parameters' domain hold",
 }
 
-# 1 before 3: what failed is to be put right, whatever else is open. Wrong usage, 2, leaves as an error and has no entry.
+# 1 before 3: what failed is to be put right, whatever else is open. Wrong usage, 2, leaves as an error.
 EXIT_CODES: Final[dict[Verdict, int]] = {"fail": 1, "inconclusive": 3, "pass": 0}
 
 
@@ -145,7 +146,7 @@ class GateReport(Entry, frozen=True, kw_only=True):
 def report_of(gates: Sequence[GateEntry], written_by: str) -> GateReport:
     """Return the report on some audit files; fail is worse than inconclusive, and that worse than pass."""
     verdicts = {one.verdict for one in gates}
-    worst = next((one for one in EXIT_CODES if one in verdicts), "pass")
+    worst: Verdict = "fail" if "fail" in verdicts else "inconclusive" if "inconclusive" in verdicts else "pass"
     return GateReport(
         schema=SCHEMA, written_by=written_by, verdict=worst, exit_code=EXIT_CODES[worst], gates=list(gates)
     )
