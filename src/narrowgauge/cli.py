@@ -1,8 +1,8 @@
 """The command line: draft an audit file, audit a kernel, draw up a policy, gate; the only module that prints.
 
 Exit codes: 0 done; 1 a gate failed; 2 wrong usage, a wrong file, or a kernel that cannot be audited; 3 a gate was
-inconclusive; 70 a fault of this program; 130 interrupted; 141 the reader of the output went away. What a command needs is imported when it runs, so that
---help answers at once.
+inconclusive; 70 a fault of this program; 130 interrupted; 141 the reader of the output went away. What a command needs
+is imported when it runs, so that --help answers at once.
 """
 
 from __future__ import annotations

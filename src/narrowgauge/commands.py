@@ -1,4 +1,4 @@
-"""What the command gate does and takes, and how a policy is renewed; `cli` prints, and what is heavy is imported late."""
+"""What the command gate takes and does, and how a policy is renewed; `cli` prints, heavy modules are imported late."""
 
 from __future__ import annotations
 

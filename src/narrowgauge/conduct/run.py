@@ -107,7 +107,9 @@ def run(
     `ledger` has is not run again, and what is finished is put there. Raises what the trial and the blocks raise.
     """
     with pinned():  # the same sums in the same order, whatever machine
-        return _Conductor(file, settled, open_levels, watcher, engine or SerialEngine(file, kernel), ledger).run()
+        return _Conductor(
+            file, settled, watcher, engine or SerialEngine(file, kernel), ledger, open_levels=open_levels
+        ).run()
 
 
 def _known_costs(ledger: Ledger | None) -> dict[str, CostEntry] | None:
@@ -121,10 +123,11 @@ class _Conductor:
         self,
         file: AuditFile,
         settled: Callable[[LevelJudgement], bool],
-        open_levels: Callable[[Outcome], Collection[int]] | None,
         watcher: Watcher | None,
         engine: Engine,
         ledger: Ledger | None,
+        *,
+        open_levels: Callable[[Outcome], Collection[int]] | None,
     ) -> None:
         self._settled, self._open_levels = settled, open_levels
         self._watcher = watcher

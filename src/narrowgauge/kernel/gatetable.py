@@ -17,7 +17,7 @@ from narrowgauge.errors import AuditFileError
 
 __all__ = ["GateSettings", "audit_files_of", "gate_settings", "project_file", "refusal_of"]
 
-_PATHS, _MOST = 4096, 2**40  # of a level at the first look, and the most that can be asked for
+_PATHS, _MOST = 8192, 2**40  # of a level at the first look, and the most that can be asked for
 _PROJECT = "pyproject.toml"
 
 
@@ -99,7 +99,7 @@ def project_file(folder: Path) -> Path | None:
 
 
 def audit_files_of(project: Path) -> list[Path]:
-    """Return the audit files that [tool.narrowgauge] names, relative to its folder; AuditFileError for a wrong table."""
+    """Return the audit files that [tool.narrowgauge] names, relative to its folder; AuditFileError if it is wrong."""
     table = _toml(project)["tool"]["narrowgauge"]
     key, accepted = "tool.narrowgauge", 'audits = ["path/of/audit.toml", ...]'
     unknown = next((name for name in table if name != "audits"), None)

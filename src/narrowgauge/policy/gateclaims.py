@@ -73,7 +73,7 @@ def claims_of(policy: PolicyDocument, record: AuditRecord) -> Iterator[Claim]:
     for name, quantity in record.quantities.items():
         reaches = [_Reach(level) for level in quantity.levels]
         for plan, level, reach in zip(policy.levels, quantity.levels, reaches, strict=True):
-            view = _Level(policy, record, plan, level, name, reach)
+            view = _Level(policy, record, plan, level, name=name, reach=reach)
             below = quantity.levels[level.level - 1].steps if level.level else 0
             yield from view.telescoping()
             for arm in arms_of(plan):
@@ -129,6 +129,7 @@ class _Level:
         record: AuditRecord,
         plan: LevelPart,
         level: LevelEntry,
+        *,
         name: str,
         reach: _Reach,
     ) -> None:
@@ -204,7 +205,7 @@ class _Level:
 
     def _spreads(self, entry: ArmEntry, known: ArmPart, arm: str) -> tuple[Spread, Spread]:
         was = known.error_variance or 0.0
-        # The policy's bounds lie at least this many standard errors of the logarithm away: never more certain than it was.
+        # Its bounds lie at least this many standard errors of the logarithm away: it is not taken as surer than it was.
         reach = quantile(1 - self._policy.evidence.confidence, 10**6)
         se = math.log(known.error_variance_high / was) / reach * was if was and known.error_variance_high else 0.0
         before = Spread.of(was, se, known.effective_size, self._measured.paths)
@@ -270,7 +271,7 @@ class _Level:
             return
 
         def gains(alpha: float) -> Bounds | None:
-            return gain(self._plan, self._level, below, today, costs, self._reach.of(alpha))
+            return gain(self._plan, self._level, below, today, costs=costs, reach=self._reach.of(alpha))
 
         yield self._claim("gain", "its gain", known.gain_low, gains, arm=arm, at_least=True)
         entry, own = self._level.arms[arm], gains(0.5)

@@ -1,4 +1,4 @@
-"""The facts of a gate: what is so or is not, whatever the sample; settings, kernel, escapes, branches, finite values."""
+"""The facts of a gate, whatever the sample: settings, kernel, escapes, branches, finite values."""
 
 from __future__ import annotations
 

@@ -109,7 +109,7 @@ class Costs:
         return steps * each + level.steps * self._factors * sum(draws[kind] for kind in kinds) + cost.path
 
 
-def gain(planned: LevelPart, level: LevelEntry, below: int, today: str, costs: Costs, reach: float) -> Bounds | None:
+def gain(planned: LevelPart, level: LevelEntry, below: int, today: str, *, costs: Costs, reach: float) -> Bounds | None:
     """Return what a level costs today over what it costs by the policy's scheme, at equal variance.
 
     With S = sqrt(V C) summed over the branches and w the correction's share of S, log of the gain moves by
