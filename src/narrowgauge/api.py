@@ -43,12 +43,10 @@ from narrowgauge.record.table import accumulation_rows, level_rows, levels_csv
 if TYPE_CHECKING:
     import pandas as pd
 
-__all__ = ["Audit", "audit", "gate", "gate_held", "run_audit", "try_out"]
+__all__ = ["Audit", "audit", "gate", "gate_held", "gate_workers", "run_audit", "try_out"]
 
 _RECORD, _LEVELS = "audit.json", "levels.csv"
-_LONGEST_BLOCK = (
-    3600.0  # seconds of a gate's block, which has few paths; with a limit a single worker is a process, too
-)
+_LONGEST_BLOCK = 3600.0  # seconds of a gate's block, which has few paths
 
 
 class Audit:
@@ -292,10 +290,15 @@ def gate(audit: str | Path, *, seed: int | None = None, workers: int = 2) -> Gat
     its process cannot end the gate. What it raises, and a value that leaves the emulation, are findings that fail;
     AuditFileError and DocumentError say what is wrong with a file.
     """
-    return gate_held(held_to(Path(audit)), seed=seed, workers=workers)
+    return gate_held(held_to(Path(audit)), seed=seed, who=gate_workers(workers))
 
 
-def gate_held(held: Held, *, seed: int | None = None, workers: int = 2) -> GateEntry:
+def gate_workers(number: int) -> Workers:
+    """Return the workers of a gate: processes, also where it is one, which a time limit makes sure of."""
+    return Workers(number=number, timeout=_LONGEST_BLOCK)
+
+
+def gate_held(held: Held, *, seed: int | None = None, who: Workers) -> GateEntry:
     """Do what `gate` does for an audit file that was read together with its policy."""
     file = read_audit_file(held.audit)
     policy, stale = held.policy, held.settings.stale
@@ -304,7 +307,6 @@ def gate_held(held: Held, *, seed: int | None = None, workers: int = 2) -> GateE
     if any(one.state == "fails" for one in settings):  # figures of other settings say nothing of these
         return held.entry(settings, None, seed=own)
     arms = {arm for level in policy.levels for arm in arms_of(level)}
-    who = Workers(number=workers, timeout=_LONGEST_BLOCK)
     levels = [level.level for level in policy.levels]
     findings: list[Finding] = []
     paths = [0] * len(levels)

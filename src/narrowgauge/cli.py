@@ -256,9 +256,7 @@ def _policy(options: argparse.Namespace) -> int:
 def _gate(options: argparse.Namespace) -> int:
     from narrowgauge.commands import gated
 
-    text, code = gated(options)
-    _write(text)
-    return code
+    return gated(options, _write)
 
 
 def _show(document: RenderableType) -> None:

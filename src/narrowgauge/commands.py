@@ -32,16 +32,28 @@ def add_gate(commands: Any, whole: Callable[[str], int], run: Callable[[argparse
     )
     gate.add_argument("--workers", metavar="N", type=whole, default=2, help="processes that run blocks (default: 2)")
     gate.add_argument("--measured", metavar="AUDITDIR", help="judge this finished audit of the one audit file")
+    gate.add_argument("--junit", metavar="FILE", help="write a testcase for each level and check, as JUnit XML")
+    gate.add_argument("--sarif", metavar="FILE", help="write what does not hold, at the kernel's lines, as SARIF 2.1.0")
+    gate.add_argument(
+        "--summary",
+        metavar="FILE",
+        nargs="?",
+        const="",
+        help="write a page in Markdown; without FILE append it to the one that GITHUB_STEP_SUMMARY names, where a "
+        "hosting service sets it",
+    )
+    gate.add_argument("--json", metavar="FILE", help="write every figure, as canonical JSON")
     gate.set_defaults(command=run)
 
 
-def gated(options: argparse.Namespace) -> tuple[str, int]:
-    """Hold a gate and return what a person reads of it, and the exit code.
+def gated(options: argparse.Namespace, show: Callable[[str], None]) -> int:
+    """Hold a gate, show what a person reads of it, write the files that were asked for, and return the exit code.
 
     All files are read before anything is measured, so that what is wrong with one is said at once.
     """
     from narrowgauge.errors import AuditFileError
     from narrowgauge.policy.gatefile import audit_files, held_to, judge_finished
+    from narrowgauge.policy.gateoutputs import GateFiles
     from narrowgauge.record.gate import report_of
     from narrowgauge.report.gate import gate_lines
 
@@ -49,14 +61,18 @@ def gated(options: argparse.Namespace) -> tuple[str, int]:
     if options.measured is not None and (len(files) > 1 or options.seed is not None):
         raise AuditFileError("gate", "", "--measured judges one audit that is there", "one AUDIT.toml, and no --seed")
     held = [held_to(path) for path in files]
+    asked = {form: getattr(options, form) for form in ("junit", "sarif", "summary", "json")}
+    outputs = GateFiles.of(asked, [path for one in held for path in (one.audit, one.settings.policy)])
     if options.measured is not None:
         entries = [judge_finished(held[0], Path(options.measured))]
     else:
-        from narrowgauge.api import gate_held
+        from narrowgauge.api import gate_held, gate_workers
 
-        entries = [gate_held(one, seed=options.seed, workers=options.workers) for one in held]
+        entries = [gate_held(one, seed=options.seed, who=gate_workers(options.workers)) for one in held]
     report = report_of(entries, f"narrowgauge {__version__}")
-    return gate_lines(report), report.exit_code
+    show(gate_lines(report))
+    outputs.write(report)
+    return report.exit_code
 
 
 def audited_anew(path: Path, workers: int, tell: Callable[[str], None]) -> tuple[Path, Path]:

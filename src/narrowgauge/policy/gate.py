@@ -19,8 +19,8 @@ A claim has a fresh figure with bounds, and a limit that follows from the policy
 False alarms. A claim fails at 1 in 1,000 and is then measured again, on fresh draws (`second`), where it has to fail
 once more: 1 in a million for a claim that is just at its limit, 1 in 10,000 for a gate of a hundred such claims. With
 more claims each has the share that keeps m alpha^2 at 1 in 10,000, and each of J looks alpha / J of that. An unchanged
-kernel is far from most limits: a ratio of variances is 1 where 1.5 is the limit, which is four standard errors of its
-logarithm away or more once it is decided. The limit of gains and edges has no such room: it is the policy's own lower
+kernel is far from most limits: its error variance is below the policy's bound of it where 1.5 times that is the limit,
+which is four standard errors of its logarithm away or more once it is decided. The limit of gains and edges has no such room: it is the policy's own lower
 bound. With s the standard error of the fresh one and p that of the policy's, a failure needs the two to be 3.3 s + 2.6 p
 apart, which is at least 3.8 of sqrt(s^2 + p^2) for s and p of which neither is below half of the other: less than 1 of
 10,000 for a stage. A policy that is unlucky in that way fails its gate again and again, and is to be renewed. A finished
@@ -98,7 +98,13 @@ def concerned(fresh: Iterable[Finding], before: Sequence[Finding]) -> list[Findi
 
 
 def levels_open(findings: Iterable[Finding], levels: Sequence[int]) -> list[int]:
-    """Return the levels whose undecided claims need more paths; a claim on all levels needs them on each."""
+    """Return the levels whose undecided claims need more paths; a claim on all levels needs them on each.
+
+    None where a fact fails: nothing that more paths show would change the verdict.
+    """
+    findings = list(findings)
+    if any(one.state == "fails" and one.check in FACTS for one in findings):
+        return []
     waiting = {one.level for one in findings if one.state == "undecided" and one.check not in FACTS}
     return [level for level in levels if level in waiting or None in waiting]
 

@@ -19,6 +19,7 @@ RESOLUTION = 0.9  # of a gain or an edge: how near to its limit the lower bound 
 _TIMES, _TIMES_FEW, _FEW = 1.5, 2.0, 200  # the ratio of error variances, and the effective size below which it is 2
 _OF_SPREAD = 0.1  # of the error's standard deviation: a mean error below that is not told from none
 _TIMES_TARGET = 1.1
+_MANY = 10**6  # degrees of freedom that make no difference any more
 _NONE_SEEN = 10.0  # events of which none is seen in 1 of 20,000 samples
 
 
@@ -182,11 +183,12 @@ class _Level:
         spread, before = self._spreads(entry, known, arm)
         if before.variance:
             few = any(one is not None and one < _FEW for one in (mine, was))
+            most = before.bounds(quantile(1 - self._policy.evidence.confidence, _MANY)).high
             yield self._claim(
                 "error variance",
-                "its error variance over the policy's",
+                "its error variance over the policy's bound of it",
                 _TIMES_FEW if few else _TIMES,
-                lambda alpha: _over(spread, before, self._reach.of(alpha)),
+                lambda alpha: _times(spread.bounds(self._reach.of(alpha)), 1 / most),
                 arm=arm,
             )
             yield from self._mean(entry, known, arm, before)
@@ -206,7 +208,7 @@ class _Level:
     def _spreads(self, entry: ArmEntry, known: ArmPart, arm: str) -> tuple[Spread, Spread]:
         was = known.error_variance or 0.0
         # Its bounds lie at least this many standard errors of the logarithm away: it is not taken as surer than it was.
-        reach = quantile(1 - self._policy.evidence.confidence, 10**6)
+        reach = quantile(1 - self._policy.evidence.confidence, _MANY)
         se = math.log(known.error_variance_high / was) / reach * was if was and known.error_variance_high else 0.0
         before = Spread.of(was, se, known.effective_size, self._measured.paths)
         like = before.size * self._measured.paths
@@ -292,21 +294,6 @@ class _Level:
             return _times(Bounds(estimate=entry.edge, low=low, high=high), by)
 
         yield self._claim("edge", "its edge", known.edge_low, edges, arm=arm, at_least=True)
-
-
-def _over(fresh: Spread, before: Spread, reach: float) -> Bounds:
-    """Return the ratio of two variances; their logarithms are independent, so that squares of reaches add."""
-    above, below = fresh.bounds(reach), before.bounds(reach)
-    ratio = fresh.variance / before.variance
-    if not fresh.variance:
-        return Bounds(estimate=0.0, low=0.0, high=above.high / before.variance)
-    up = math.hypot(math.log(above.high / fresh.variance), _log(before.variance, below.low))
-    down = math.hypot(_log(fresh.variance, above.low), math.log(below.high / before.variance))
-    return Bounds(estimate=ratio, low=ratio * math.exp(-min(down, 700.0)), high=ratio * math.exp(min(up, 700.0)))
-
-
-def _log(over: float, under: float) -> float:
-    return math.log(over / under) if under > 0 else math.inf
 
 
 def _times(bounds: Bounds, by: float) -> Bounds:
