@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import argparse
+import shutil
 from collections.abc import Callable
 from pathlib import Path
 from typing import Any
@@ -70,7 +71,7 @@ def gated(options: argparse.Namespace, show: Callable[[str], None]) -> int:
 
         entries = [gate_held(one, seed=options.seed, who=gate_workers(options.workers)) for one in held]
     report = report_of(entries, f"narrowgauge {__version__}")
-    show(gate_lines(report))
+    show(gate_lines(report, shutil.get_terminal_size((100, 24)).columns))
     outputs.write(report)
     return report.exit_code
 

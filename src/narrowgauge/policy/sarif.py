@@ -21,7 +21,7 @@ from narrowgauge.record.printable import clean
 __all__ = ["sarif_text"]
 
 _SCHEMA: Final = "https://docs.oasis-open.org/sarif/sarif/v2.1.0/errata01/os/schemas/sarif-schema-2.1.0.json"
-_ROOT: Final = "SRCROOT"  # what paths are relative to: the root of the repository, wherever it is checked out
+_ROOT: Final = "%SRCROOT%"  # what paths are relative to: the root of the repository, wherever it is checked out
 _FINGERPRINT: Final = "narrowgaugeClaim/v1"
 _KINDS: Final[dict[State, tuple[str, str]]] = {
     "fails": ("fail", "error"),

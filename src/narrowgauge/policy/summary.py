@@ -1,7 +1,7 @@
 """The report of a gate in Markdown, for the page that a hosting service shows of a run.
 
-Text of users and kernels is escaped: it makes no link, no tag, no mention and no further column. A page has a limit (one
-mebibyte, where a service says one), so that long messages and long lists are cut, and say so.
+Text of users and kernels is escaped: it makes no link, no tag and no further column. A page has a limit (one mebibyte,
+where a service says one), so that long messages and long lists are cut, and say so.
 """
 
 from __future__ import annotations
@@ -18,8 +18,8 @@ _STATES: tuple[State, ...] = ("fails", "undecided", "note", "holds")
 _WORDS = {"pass": "passes", "fail": "**fails**", "inconclusive": "is **inconclusive**, which is no pass"}
 _MOST_ROWS, _MOST_CHARACTERS = 50, 400
 _MOST_GATES = 50
-# What begins an emphasis, code, link, image, column, formula, mention, reference, emoji or address: "CommonMark", version
-# 0.31.2, 2024, sections 2.4 and 6, and what hosting services add to it.
+# What begins an emphasis, code, link, image, column, formula, reference, emoji or address: "CommonMark", version
+# 0.31.2, 2024, sections 2.4 and 6 (from memory), and what hosting services add to it.
 _SPECIAL = re.compile(r"[!#$*@\[\\\]^_`|~]|:(?=\S)|(?<=www)\.", re.IGNORECASE)
 
 
