@@ -20,11 +20,12 @@ False alarms. A claim fails at 1 in 1,000 and is then measured again, on fresh d
 once more: 1 in a million for a claim that is just at its limit, 1 in 10,000 for a gate of a hundred such claims. With
 more claims each has the share that keeps m alpha^2 at 1 in 10,000, and each of J looks alpha / J of that. An unchanged
 kernel is far from most limits: its error variance is below the policy's bound of it where 1.5 times that is the limit,
-which is four standard errors of its logarithm away or more once it is decided. The limit of gains and edges has no such room: it is the policy's own lower
-bound. With s the standard error of the fresh one and p that of the policy's, a failure needs the two to be 3.3 s + 2.6 p
-apart, which is at least 3.8 of sqrt(s^2 + p^2) for s and p of which neither is below half of the other: less than 1 of
-10,000 for a stage. A policy that is unlucky in that way fails its gate again and again, and is to be renewed. A finished
-audit cannot be drawn again: it is judged at 1 in a million at once (`alone`).
+which is four standard errors of its logarithm away or more once it is decided. The limit of gains and edges has no
+such room: it is the policy's own lower bound. With s the standard error of the fresh one and p that of the policy's, a
+failure needs the two to be 3.3 s + 2.6 p apart, which is at least 3.8 of sqrt(s^2 + p^2) for s and p of which neither
+is below half of the other: less than 1 of 10,000 for a claim at one stage. A policy that is unlucky in that way fails
+its gate again and again, and is to be renewed. A finished audit cannot be drawn again: it is judged at 1 in a million
+at once, and what it decided at its own confidence holds (`alone`).
 
 What writes a verdict down takes the report as `record.gate` has it:
 
@@ -46,7 +47,7 @@ import msgspec
 
 from narrowgauge.policy.gateclaims import RESOLUTION, Claim, claims_of
 from narrowgauge.policy.gatefacts import FACTS, facts_of
-from narrowgauge.policy.gatefigures import looks_of
+from narrowgauge.policy.gatefigures import confidence_of, looks_of
 from narrowgauge.record.audit import AuditRecord
 from narrowgauge.record.gate import Finding, Verdict
 from narrowgauge.record.policy import PolicyDocument
@@ -131,7 +132,9 @@ def _key(finding: Finding) -> tuple[str, int | None, str | None, str | None]:
 def _sides(record: AuditRecord, claims: int, *, alone: bool) -> _Sides:
     looks = looks_of(record)
     each = min(ALPHA, math.sqrt(FALSE_ALARMS / max(1, claims)))
-    return _Sides(fails=each**2 / looks if alone else each / looks, holds=each / looks)
+    if alone:
+        return _Sides(fails=each**2 / looks, holds=max(each, 1 - confidence_of(record)) / looks)
+    return _Sides(fails=each / looks, holds=each / looks)
 
 
 def _found(claim: Claim, sides: _Sides) -> Finding:

@@ -7,7 +7,18 @@ import math
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 
-from narrowgauge.policy.gatefigures import REFERENCE, Bounds, Costs, Spread, arms_of, gain, looks_of, quantile, rmse
+from narrowgauge.policy.gatefigures import (
+    REFERENCE,
+    Bounds,
+    Costs,
+    Spread,
+    arms_of,
+    confidence_of,
+    gain,
+    looks_of,
+    quantile,
+    rmse,
+)
 from narrowgauge.record.audit import ArmEntry, AuditRecord, LevelEntry
 from narrowgauge.record.gate import Check, Finding, State
 from narrowgauge.record.policy import ArmPart, LevelPart, PolicyDocument
@@ -262,7 +273,7 @@ class _Level:
         ]
         if not ends:
             return None
-        alpha_of_record = (1 - _confidence(self._record)) / looks_of(self._record)
+        alpha_of_record = (1 - confidence_of(self._record)) / looks_of(self._record)
         return lambda alpha: ends[0] * max(1.0, math.log(alpha) / math.log(alpha_of_record))
 
     def gains(self, costs: Costs, below: int) -> Iterator[Claim]:
@@ -281,7 +292,7 @@ class _Level:
             return
         # Where the fresh audit weighs another scheme the edge is brought to the policy's by their gains.
         by = own.estimate / entry.gain
-        of_record = self._reach.of((1 - _confidence(self._record)) / looks_of(self._record))
+        of_record = self._reach.of((1 - confidence_of(self._record)) / looks_of(self._record))
 
         def edges(alpha: float) -> Bounds | None:
             if not entry.edge or not entry.edge_low or not entry.edge_high:
@@ -298,11 +309,6 @@ class _Level:
 
 def _times(bounds: Bounds, by: float) -> Bounds:
     return Bounds(estimate=bounds.estimate * by, low=bounds.low * by, high=bounds.high * by)
-
-
-def _confidence(record: AuditRecord) -> float:
-    sampling = record.asked.get("sampling")
-    return float(sampling["confidence"]) if isinstance(sampling, dict) and "confidence" in sampling else 0.99
 
 
 def _finite(value: float) -> float | None:

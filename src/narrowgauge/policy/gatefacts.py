@@ -108,6 +108,10 @@ def _run(policy: PolicyDocument, record: AuditRecord) -> Finding:
     missing = {arm for level in policy.levels for arm in arms_of(level)} - set(record.arms)
     if missing:
         return fact("run", "fails", f"the audit has no {', '.join(sorted(missing))}, which the policy uses")
+    pairs = {":".join(arms_of(level)) for level in policy.levels if level.wide is not None}
+    lacking = pairs - set(next(iter(record.quantities.values())).levels[0].corrections)
+    if lacking:
+        return fact("run", "fails", f"the audit has no correction {', '.join(sorted(lacking))}, which the policy uses")
     lengths = {len(quantity.levels) for quantity in record.quantities.values()}
     if lengths != {len(policy.levels)}:
         return fact("run", "fails", "the audit has not the levels of the policy")

@@ -12,11 +12,24 @@ import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 from statistics import NormalDist
+from typing import Any
 
 from narrowgauge.record.audit import AuditRecord, CorrectionEntry, LevelEntry
 from narrowgauge.record.policy import CostPart, LevelPart
 
-__all__ = ["REFERENCE", "Bounds", "Costs", "Spread", "arms_of", "gain", "looks_of", "quantile", "rmse", "spread_of"]
+__all__ = [
+    "REFERENCE",
+    "Bounds",
+    "Costs",
+    "Spread",
+    "arms_of",
+    "confidence_of",
+    "gain",
+    "looks_of",
+    "quantile",
+    "rmse",
+    "spread_of",
+]
 
 REFERENCE = "float64"
 _MOST = 700.0  # exp of more is infinite
@@ -103,7 +116,8 @@ class Costs:
         """Return the cost of one path in these arms at once; `below` is the number of steps one level below."""
         steps = level.steps + (below if self._coupled else 0)
         cost = self._cost
-        draws = {"exact": cost.draws, "approximate": cost.approximate_draws or cost.draws}
+        cheap = cost.draws if cost.approximate_draws is None else cost.approximate_draws
+        draws = {"exact": cost.draws, "approximate": cheap}
         kinds = {"approximate" if arm.endswith("/approximate") else "exact" for arm in arms}
         each = sum(cost.steps[arm.partition("/")[0]] for arm in arms)
         return steps * each + level.steps * self._factors * sum(draws[kind] for kind in kinds) + cost.path
@@ -182,9 +196,18 @@ def spread_of(entry: CorrectionEntry, paths: int) -> Spread:
 
 def looks_of(record: AuditRecord) -> int:
     """Return how many looks the record's audit could take, which share its confidence."""
-    sampling = record.asked.get("sampling")
-    known = sampling if isinstance(sampling, dict) else {}
+    known = _sampling(record)
     return max(1, (int(known.get("most_paths", 1)) // max(1, int(known.get("paths", 1)))).bit_length())
+
+
+def confidence_of(record: AuditRecord) -> float:
+    """Return the confidence of the record's audit, which its looks share."""
+    return float(_sampling(record).get("confidence", 0.99))
+
+
+def _sampling(record: AuditRecord) -> dict[str, Any]:
+    sampling = record.asked.get("sampling")
+    return sampling if isinstance(sampling, dict) else {}
 
 
 def _ratio_se(level: LevelEntry, narrow: str, today: str) -> float:
