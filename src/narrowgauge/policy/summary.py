@@ -16,8 +16,7 @@ __all__ = ["summary_text"]
 
 _STATES: tuple[State, ...] = ("fails", "undecided", "note", "holds")
 _WORDS = {"pass": "passes", "fail": "**fails**", "inconclusive": "is **inconclusive**, which is no pass"}
-_MOST_ROWS, _MOST_CHARACTERS = 50, 400
-_MOST_GATES = 50
+_MOST_ROWS, _MOST_CHARACTERS, _MOST_BYTES = 50, 400, 2**19
 # What begins an emphasis, code, link, image, column, formula, reference, emoji or address: "CommonMark", version
 # 0.31.2, 2024, sections 2.4 and 6 (from memory), and what hosting services add to it.
 _SPECIAL = re.compile(r"[!#$*@\[\\\]^_`|~]|:(?=\S)|(?<=www)\.", re.IGNORECASE)
@@ -25,7 +24,14 @@ _SPECIAL = re.compile(r"[!#$*@\[\\\]^_`|~]|:(?=\S)|(?<=www)\.", re.IGNORECASE)
 
 def summary_text(report: GateReport) -> str:
     """Return a report as Markdown with tables: each audit file in a row, then all that does not hold."""
-    return "\n".join(_lines(report)) + "\n"
+    kept, size = [], 0
+    for line in _lines(report):
+        size += len(line.encode("utf-8")) + 1
+        if size > _MOST_BYTES:
+            kept += ["", "The page ends here, at its limit; the report in JSON has the rest."]
+            break
+        kept.append(line)
+    return "\n".join(kept) + "\n"
 
 
 def _lines(report: GateReport) -> Iterator[str]:
@@ -37,12 +43,9 @@ def _lines(report: GateReport) -> Iterator[str]:
         counts = [sum(one.state == state for one in entry.findings) for state in _STATES]
         cells = [_name(entry.audit), _name(entry.kernel), _WORDS[entry.verdict], *(f"{one:,}" for one in counts)]
         yield _row(cells)
-    shown = [entry for entry in report.gates if any(one.state != "holds" for one in entry.findings)]
-    for entry in shown[:_MOST_GATES]:
-        yield from _entry(entry)
-    if len(shown) > _MOST_GATES:
-        yield ""
-        yield f"{len(shown) - _MOST_GATES:,} further audit files with findings are not shown."
+    for entry in report.gates:
+        if any(one.state != "holds" for one in entry.findings):
+            yield from _entry(entry)
 
 
 def _entry(entry: GateEntry) -> Iterator[str]:
