@@ -71,8 +71,9 @@ class GateFiles:
                 raise GateFileError(
                     f"--{form} {given}: this would overwrite another file of the gate; {_accepted(form)}"
                 )
-            if not given or path.is_dir() or not path.parent.is_dir():
-                raise GateFileError(f"--{form} {given}: there is no such folder, or this is one; {_accepted(form)}")
+            if path.is_dir() or not path.parent.is_dir():
+                what = "this is a folder" if path.is_dir() else f"there is no folder {path.parent}"
+                raise GateFileError(f"--{form} {given}: {what}; {_accepted(form)}")
             taken.add(path.resolve())
             files[form] = path
         return cls(files, _step() if asked.get("summary") == STEP else None)
