@@ -42,7 +42,8 @@ def prepared(base, folder):
     folder.mkdir(parents=True, exist_ok=True)
     source = (EXAMPLES / example / f"{example}.py").read_text(encoding="utf-8")
     if base == "branched":  # the low branch is a function of its own, with a name of its own for the water
-        source += f"\n\n{source[source.index('def value(') :]}".replace("def value(", "def cheap(").replace("water", "flow")
+        low = source[source.index("def value(") :].replace("def value(", "def cheap(").replace("water", "flow")
+        source += f"\n\n{low}"
     (folder / f"{example}.py").write_text(changed(source, changes), encoding="utf-8")
     text = (EXAMPLES / example / f"{example}.toml").read_text(encoding="utf-8")
     values = {"finest": finest, "rmse": rmse, **_SAMPLING, "narrow": '["float16", "float32"]'}
@@ -119,7 +120,8 @@ MISTAKES = {
         "reserve",
         (
             _STEP,
-            "        x = x + price_reversion * h * price_level - price_reversion * h * x + price_volatility * dW[n, 0]\n",
+            "        x = x + price_reversion * h * price_level - price_reversion * h * x\n"
+            "        x = x + price_volatility * dW[n, 0]\n",
         ),
         by=("error variance",),
     ),
