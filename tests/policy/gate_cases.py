@@ -51,7 +51,7 @@ def prepared(base, folder):
         text, found = re.subn(rf"^{key} = [^#\n]*", f"{key} = {value}", text, flags=re.MULTILINE)
         assert found == 1, key
     audit = folder / "audit.toml"
-    text += '\n[policy]\nfile = "held.policy.json"\n'
+    text = text.partition("\n[policy]\n")[0] + '\n[policy]\nfile = "held.policy.json"\n'
     text += '\n[branches]\nlow = "reserve.py:cheap"\n' if base == "branched" else ""
     audit.write_text(text, encoding="utf-8")
     run_audit(read_audit_file(audit), folder / "out")
