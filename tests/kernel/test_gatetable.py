@@ -1,5 +1,7 @@
 """The tables [policy] and [gate] of an audit file, and [tool.narrowgauge] of a project."""
 
+import dataclasses
+import re
 import subprocess
 import sys
 
@@ -7,7 +9,8 @@ import pytest
 
 from narrowgauge.errors import AuditFileError
 from narrowgauge.kernel.auditfile import audit_file_from, read_audit_file
-from narrowgauge.kernel.gatetable import audit_files_of, gate_settings, project_file
+from narrowgauge.kernel.audittables import SamplingTable
+from narrowgauge.kernel.gatetable import GATE_LINES, audit_files_of, gate_settings, project_file
 
 POLICY = "the path of a policy, relative to the audit file"
 AUDIT = """
@@ -130,3 +133,16 @@ def test_reading_them_needs_no_numpy():
     """A finished audit is judged in the time that a commit hook has."""
     code = "import narrowgauge.kernel.gatetable, sys; sys.exit('numpy' in sys.modules)"
     assert subprocess.run([sys.executable, "-c", code], check=False).returncode == 0
+
+
+def test_a_draft_shows_every_key_with_its_default(tmp_path):
+    """Behind a #; without it what it shows is accepted, and is what counts anyway."""
+    text = "\n".join(GATE_LINES)
+    shown = re.findall(r"^# (\w+) = ", text, flags=re.MULTILINE)
+    assert shown == ["file", "stale", "paths", "most_paths"]
+    path = tmp_path / "audit.toml"
+    path.write_text(AUDIT + re.sub(r"^# ", "", text, flags=re.MULTILINE), encoding="utf-8")
+    given = gate_settings(path)
+    path.write_text(AUDIT + text, encoding="utf-8")
+    assert dataclasses.replace(given, most_paths=None) == gate_settings(path)
+    assert given.most_paths == SamplingTable().most_paths

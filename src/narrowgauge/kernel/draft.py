@@ -22,6 +22,7 @@ from narrowgauge.kernel.auditfile import bytes_of, most_steps
 from narrowgauge.kernel.auditparameters import check_parameter, plain
 from narrowgauge.kernel.audittables import TABLES, LadderTable, TableError, check_run, default_layout, dotted
 from narrowgauge.kernel.branchestable import BRANCH_MEANINGS, BRANCH_VALUES
+from narrowgauge.kernel.gatetable import GATE_LINES
 
 __all__ = ["draft"]
 
@@ -140,6 +141,7 @@ def draft(target: str) -> str:
             header = f"# [{table}]" if table in _OPTIONAL else f"[{table}]"
             keys = [f"{table}.{key}" for key in record.__struct_fields__]
             lines += ["", header, *(_line(key, values) for key in keys if key not in left_out)]
+    lines += ["", *GATE_LINES]
     return "\n".join(lines) + "\n"
 
 

@@ -15,7 +15,7 @@ from typing import Any, Final, Literal
 
 from narrowgauge.errors import AuditFileError
 
-__all__ = ["GateSettings", "audit_files_of", "gate_settings", "project_file", "refusal_of"]
+__all__ = ["GATE_LINES", "GateSettings", "audit_files_of", "gate_settings", "project_file", "refusal_of"]
 
 _PATHS, _MOST = 8192, 2**40  # of a level at the first look, and the most that can be asked for
 _PROJECT = "pyproject.toml"
@@ -39,6 +39,16 @@ _ROWS: Final = {
     "gate.paths": _Row(accepted=f"an integer from 1 to {_MOST}", holds=_count),
     "gate.most_paths": _Row(accepted=f"an integer from gate.paths to {_MOST}", holds=_count),
 }
+# What a draft says of them.
+GATE_LINES: Final = (
+    "[policy]",
+    '# file = "audit.policy.json"  # what narrowgauge gate holds the kernel to; the default is this file\'s name',
+    "",
+    "[gate]",
+    '# stale = "note"  # what a kernel is that changed and still holds, or "fail"',
+    f"# paths = {_PATHS}  # paths of a level at the gate's first look",
+    "# most_paths = 1048576  # the most that a level gets; the default is sampling.most_paths",
+)
 _TABLES = tuple(dict.fromkeys(key.partition(".")[0] for key in _ROWS))
 
 
