@@ -97,11 +97,11 @@ def test_a_c_header(here, capsys):
             "without: no policy: the audit file has no [target], so that nobody knows how much rounding may ",
         ),
         (["nowhere"], "nowhere/audit.json: there is no such file\n"),
-        (["with.toml"], "with.toml/audit.json: cannot be read (Not a directory)\n"),
+        (["with.json"], "with.json/audit.json: there is no such file\n"),
         (["damaged"], "damaged/audit.json: kernel.run: 3 is not accepted; accepted: text\n"),
         (["with", "--out", "none/p.json"], "none/p.json: cannot be written: No such file or directory\n"),
         (["with", "--c-header", "none/p.h"], "none/p.h: cannot be written: No such file or directory\n"),
-        ([], "the following arguments are required: AUDITDIR; narrowgauge policy --help shows what is accepted\n"),
+        ([], "the following arguments are required: AUDITDIR|AUDIT.toml; narrowgauge policy --help shows "),
     ],
 )
 def test_no_policy(here, capsys, arguments, message):

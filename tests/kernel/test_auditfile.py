@@ -55,7 +55,8 @@ DEFAULTS = {
     "sampling.confidence": 0.99,
     "sampling.seed": 1,
 }
-ALL_TABLES = "kernel, library, command, parameters, ladder, target, formats, draws, branches, cost, sampling"
+ALL_TABLES = "kernel, library, command, parameters, ladder, target, formats, draws, branches, cost, sampling, "
+ALL_TABLES += "policy, gate"
 KERNEL_KEYS = "run, takes, factors, layout, coupling, modules, shared, allow, rounds"
 
 
@@ -80,7 +81,7 @@ class TestDefaults:
         expected["kernel"]["layout"] = "factors, paths, steps"
         del expected["kernel"]["rounds"], expected["cost"]["measured"]  # which no emulated kernel has otherwise
         assert audit_file.asked() == expected
-        absent = {"library", "command", "draws", "branches"}
+        absent = {"library", "command", "draws", "branches", "policy", "gate"}
         assert list(audit_file.asked()) == [*(n for n in ALL_TABLES.split(", ") if n not in absent), "assumed"]
         assert audit_file.worthwhile == 1.0
 
