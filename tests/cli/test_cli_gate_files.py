@@ -99,6 +99,25 @@ def test_a_failing_gate_writes_them_too(judge, tmp_path, audited):
     assert json.loads((tmp_path / "gate.json").read_text(encoding="utf-8"))["verdict"] == "fail"
 
 
+def test_a_kernel_that_raises_anything_still_fails_in_every_file(audited, tmp_path, monkeypatch, capsys):
+    """Control characters, markup and half a surrogate pair in its message are no fault of this program."""
+    monkeypatch.chdir(tmp_path)
+    for name in ("model.toml", "model.policy.json"):
+        (tmp_path / name).write_bytes((audited / name).read_bytes())
+    raising = KERNEL.replace(
+        "    for dw in dW:\n", '    raise ValueError("\\ud800\\x1b[31m\\0|<b>]]>\\n{0}")\n    for dw in dW:\n'
+    )
+    (tmp_path / "model.py").write_text(raising, encoding="utf-8")
+    files = [part for pair in FORMS.items() for part in pair]
+    assert main(["gate", "model.toml", "--workers", "1", *files]) == 1
+    assert "\x1b" not in capsys.readouterr().out
+    assert ElementTree.parse(tmp_path / "gate.xml").getroot().get("failures") == "1"
+    found = json.loads((tmp_path / "gate.json").read_text(encoding="utf-8"))["gates"][0]["findings"]
+    assert r"ValueError: \ud800" in found[-1]["message"]
+    assert len(json.loads((tmp_path / "gate.sarif").read_text(encoding="utf-8"))["runs"][0]["results"]) == 1
+    assert "&lt;b&gt;" in (tmp_path / "gate.md").read_text(encoding="utf-8")
+
+
 def test_the_page_is_appended_to_the_steps_own(judge, tmp_path, monkeypatch):
     """What earlier steps said stays; without the option nothing is added."""
     page = tmp_path / "step.md"

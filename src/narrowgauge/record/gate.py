@@ -8,7 +8,7 @@ text.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from typing import Final, Literal
+from typing import Any, Final, Literal
 
 from msgspec import to_builtins
 
@@ -153,5 +153,16 @@ def report_of(gates: Sequence[GateEntry], written_by: str) -> GateReport:
 
 
 def gate_text(report: GateReport) -> str:
-    """Return a report as canonical text; raises ValueError or TypeError where a figure is not finite or not plain."""
-    return canonical_text(to_builtins(report))
+    """Return a report as canonical text; raises ValueError or TypeError where a figure is not finite or not plain.
+
+    What UTF-8 cannot hold, in what a kernel raised or in a file's name, is written as an escape.
+    """
+    return canonical_text(_encodable(to_builtins(report)))
+
+
+def _encodable(value: Any) -> Any:
+    if isinstance(value, str):
+        return value.encode("utf-8", "backslashreplace").decode("utf-8")
+    if isinstance(value, dict):
+        return {name: _encodable(element) for name, element in value.items()}
+    return [_encodable(element) for element in value] if isinstance(value, list) else value
