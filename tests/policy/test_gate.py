@@ -2,6 +2,7 @@
 
 import subprocess
 import sys
+from types import SimpleNamespace
 
 import msgspec
 import pytest
@@ -10,7 +11,7 @@ from policy_records import changed, policy
 from narrowgauge.policy.gate import concerned, fails_for_now, judge, levels_open, second, verdict_of
 from narrowgauge.record.gate import EXIT_CODES, Finding, report_of
 from narrowgauge.record.plan import SchemeEntry
-from narrowgauge.record.policy import ParameterPart
+from narrowgauge.record.policy import ParameterPart, SharePart
 from narrowgauge.record.reach import LineCount
 
 ARM = ("quantities", "call", "levels", 2, "arms", "float16")
@@ -270,6 +271,26 @@ def test_a_new_line_where_values_leave_fails_and_one_that_moved_does_not(record,
     found = judge(known, changed(record, "reach", "allowed_escapes", to=[one, other]))
     assert failing(found) == {("escapes", None, None)}
     assert "model.py:9" in next(f.message for f in found if f.state == "fails")
+
+
+@pytest.mark.parametrize(("low", "state"), [(0.0124, "holds"), (0.0126, "fails")])
+@pytest.mark.parametrize("names", [("lost additions", "lost_additions", "lost"), ("subnormals", "subnormals", "below")])
+def test_a_share_fails_where_its_lower_bound_is_above_one_and_a_quarter_of_the_policys_upper(
+    record, held, low, state, names
+):
+    """Where both have counted; once for all quantities. Records that count stand in for those of a later version."""
+    check, known, fresh = names
+    part = SharePart(share=0.008, low=0.006, high=0.01, operations=10**6)
+    counted = changed(held, "levels", 2, "measured", "end", "arms", "float16", known, to=part)
+    none = SimpleNamespace(share=None)
+    share = SimpleNamespace(share=0.013, share_low=low, share_high=0.014)
+    arm = SimpleNamespace(**{"lost": none, "below": none, fresh: share})
+    levels = [SimpleNamespace(level=2, arms={"float16": arm, "bfloat16": arm})]
+    found = judge(counted, msgspec.structs.replace(record, range=SimpleNamespace(levels=levels)))
+    assert [(one.check, one.level, one.arm, one.state) for one in found if one.check == check] == [
+        (check, 2, "float16", state)
+    ]
+    assert not [one for one in judge(counted, record) if one.check == check]
 
 
 def test_splits_without_a_comparison_of_branches_are_undecided(record, held):

@@ -6,6 +6,7 @@ import functools
 import math
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
+from typing import Any, Final
 
 from narrowgauge.policy.gatefigures import (
     REFERENCE,
@@ -21,7 +22,7 @@ from narrowgauge.policy.gatefigures import (
 )
 from narrowgauge.record.audit import ArmEntry, AuditRecord, LevelEntry
 from narrowgauge.record.gate import Check, Finding, State
-from narrowgauge.record.policy import ArmPart, LevelPart, PolicyDocument
+from narrowgauge.record.policy import ArmPart, LevelPart, PolicyDocument, SharePart
 
 __all__ = ["BATCHES", "RESOLUTION", "Claim", "claims_of"]
 
@@ -29,7 +30,11 @@ BATCHES = 32  # of a block: what a standard error of the record rests on
 RESOLUTION = 0.9  # of a gain or an edge: how near to its limit the lower bound has to come
 _TIMES, _TIMES_FEW, _FEW = 1.5, 2.0, 200  # the ratio of error variances, and the effective size below which it is 2
 _OF_SPREAD = 0.1  # of the error's standard deviation: a mean error below that is not told from none
-_TIMES_TARGET = 1.1
+_TIMES_TARGET, _TIMES_SHARE = 1.1, 1.25
+_SHARES: Final[tuple[tuple[Check, str, str], ...]] = (
+    ("lost additions", "lost_additions", "lost"),
+    ("subnormals", "subnormals", "below"),
+)
 _MANY = 10**6  # degrees of freedom that make no difference any more
 _NONE_SEEN = 10.0  # events of which none is seen in 1 of 20,000 samples
 
@@ -81,13 +86,15 @@ class Claim:
 
 def claims_of(policy: PolicyDocument, record: AuditRecord) -> Iterator[Claim]:
     """Return every claim of a policy, quantity by quantity and level by level; the whole of a quantity comes last."""
-    costs = Costs(policy.cost, record.asked)
+    costs, first = Costs(policy.cost, record.asked), next(iter(record.quantities))
     for name, quantity in record.quantities.items():
         reaches = [_Reach(level) for level in quantity.levels]
         for plan, level, reach in zip(policy.levels, quantity.levels, reaches, strict=True):
             view = _Level(policy, record, plan, level, name=name, reach=reach)
             below = quantity.levels[level.level - 1].steps if level.level else 0
             yield from view.telescoping()
+            if name == first:  # operations are those of all quantities
+                yield from view.shares()
             for arm in arms_of(plan):
                 if arm != REFERENCE:
                     yield from view.errors(arm)
@@ -184,6 +191,21 @@ class _Level:
 
         figure = "what the mean of its coarse paths is off that of the fine ones below, in standard errors past chance,"
         yield self._claim("levels", figure, 0.0, bounds)
+
+    def shares(self) -> Iterator[Claim]:
+        """Yield the claims on lost additions and subnormals of each arm, where policy and record have counted them."""
+        counted = getattr(self._record.range, "levels", ())  # records of this version count none
+        watched: Mapping[str, Any] = next((one.arms for one in counted if one.level == self._level.level), {})
+        for arm in (one for one in arms_of(self._plan) if one in watched and one in self._measured.arms):
+            part, entry = self._measured.arms[arm], watched[arm]
+            for check, known, fresh in _SHARES:
+                before, now = getattr(part, known), getattr(entry, fresh)
+                if isinstance(before, SharePart) and now.share is not None:
+                    # Above its limit for certain or not: what a few paths show of it is all that is asked.
+                    high = now.share_low if now.share_low <= _TIMES_SHARE * before.high else now.share_high
+                    found = Bounds(estimate=now.share, low=now.share_low, high=high)
+                    figure = f"its share of {check}, by its lower bound,"
+                    yield self._claim(check, figure, _TIMES_SHARE * before.high, _constant(found), arm=arm)
 
     def errors(self, arm: str) -> Iterator[Claim]:
         """Yield the claims on the variance and on the mean of the rounding error of one arm."""
@@ -305,6 +327,10 @@ class _Level:
             return _times(Bounds(estimate=entry.edge, low=low, high=high), by)
 
         yield self._claim("edge", "its edge", known.edge_low, edges, arm=arm, at_least=True)
+
+
+def _constant(bounds: Bounds) -> Callable[[float], Bounds]:
+    return lambda alpha: bounds
 
 
 def _times(bounds: Bounds, by: float) -> Bounds:
