@@ -10,7 +10,7 @@ import pytest
 ROOT = Path(__file__).parents[1]
 SOURCE = ROOT / "src" / "narrowgauge"
 DOCUMENTS = ["errors", "arithmetic", "draws", "dispatch", "kernel", "record"]
-ORDER = [*DOCUMENTS, "measure", "judge", "conduct", "policy", "report", "api", "cli"]
+ORDER = [*DOCUMENTS, "measure", "judge", "conduct", "policy", "report", "api", "commands", "cli"]
 MODULES = sorted(SOURCE.rglob("*.py"))
 TESTS = sorted((ROOT / "tests").rglob("*.py"))
 

@@ -7,7 +7,7 @@ import json
 import os
 import tempfile
 import time
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Collection, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal
@@ -17,12 +17,13 @@ from msgspec.structs import replace as changed
 from narrowgauge.conduct.account import account
 from narrowgauge.conduct.branches import branches_entry
 from narrowgauge.conduct.domain import explore
+from narrowgauge.conduct.gate import gate_seed, reduced
 from narrowgauge.conduct.lines import line_study, studied
 from narrowgauge.conduct.owntrial import examine_own
-from narrowgauge.conduct.run import Watcher, run
+from narrowgauge.conduct.run import Outcome, Watcher, run
 from narrowgauge.conduct.separated import draws_entry
 from narrowgauge.conduct.trial import try_arms
-from narrowgauge.errors import AuditFileError, AuditFolderError, NarrowgaugeError
+from narrowgauge.errors import AuditFileError, AuditFolderError, DispatchError, KernelError, NarrowgaugeError
 from narrowgauge.kernel.auditfile import AuditFile, audit_file_from, read_audit_file, with_draws
 from narrowgauge.kernel.identity import versions_of
 from narrowgauge.kernel.loading import KernelSource, find_kernel, refuse_nested
@@ -32,8 +33,13 @@ from narrowgauge.measure.provenance import provenance
 from narrowgauge.measure.store import Identity, Ledger
 from narrowgauge.measure.task import Bench, pinned
 from narrowgauge.measure.workers import Workers, engine_for
+from narrowgauge.policy.gate import ALPHA, concerned, fails_for_now, judge, levels_open, second
+from narrowgauge.policy.gatefacts import settings_facts
+from narrowgauge.policy.gatefigures import arms_of
+from narrowgauge.policy.gatefile import Held, held_to, stopped
 from narrowgauge.record.audit import AuditRecord, KernelEntry, TrialEntry
 from narrowgauge.record.canonical import canonical_text, read_strict, write_atomically
+from narrowgauge.record.gate import Finding, GateEntry
 from narrowgauge.record.linetable import line_rows, lines_csv
 from narrowgauge.record.source import SourceEntry
 from narrowgauge.record.table import accumulation_rows, level_rows, levels_csv
@@ -41,9 +47,10 @@ from narrowgauge.record.table import accumulation_rows, level_rows, levels_csv
 if TYPE_CHECKING:
     import pandas as pd
 
-__all__ = ["Audit", "audit", "run_audit", "try_out"]
+__all__ = ["Audit", "audit", "gate", "gate_held", "gate_workers", "run_audit", "try_out"]
 
 _RECORD, _LEVELS, _LINES = "audit.json", "levels.csv", "lines.csv"
+_LONGEST_BLOCK = 3600.0  # seconds of a gate's block, which has few paths
 
 
 class Audit:
@@ -119,11 +126,13 @@ def run_audit(
     workers: Workers | None = None,
     watcher: Watcher | None = None,
     tell: Callable[[str], None] | None = None,
+    open_levels: Callable[[AuditRecord], Collection[int]] | None = None,
 ) -> Audit:
     """Run an audit and write its files into `out`, if given.
 
     With `resume` the blocks that an audit left there are not run again; `tell` hears where that is not as it may be
-    thought. Raises AuditFolderError where `out` holds another audit, or an unfinished one that is not resumed, and
+    thought. The levels that `open_levels` returns of a record draw more paths; without it those that are undecided.
+    Raises AuditFolderError where `out` holds another audit, or an unfinished one that is not resumed, and
     `replace` is false, before anything is measured; KernelError inside another audit.
     """
     start = time.perf_counter()
@@ -141,7 +150,13 @@ def run_audit(
             ledger = held.enter_context(_claim(place, file, entry, replace=replace, resume=resume))
             if tell is not None and resume:
                 _tell(tell, place.shown, ledger)
-        outcome = run(file, kernel, watcher=watcher, engine=engine, ledger=ledger)
+        rule = None
+        if open_levels is not None:
+
+            def rule(so_far: Outcome) -> Collection[int]:
+                return open_levels(account(file, so_far, entry, {}))
+
+        outcome = run(file, kernel, watcher=watcher, engine=engine, ledger=ledger, open_levels=rule)
         resumed = len(ledger.kept) if ledger is not None else 0
         damaged = ledger.damaged if ledger is not None else 0
         domain = explore(file, outcome, engine=engine, ledger=ledger, watcher=watcher)
@@ -291,3 +306,49 @@ def _frame(rows: list[dict[str, object]]) -> pd.DataFrame:
     import pandas as pd  # only when a table is asked for
 
     return pd.DataFrame(rows)
+
+
+def gate(audit: str | Path, *, seed: int | None = None, workers: int = 2) -> GateEntry:
+    """Measure the kernel of an audit file afresh and return whether its policy still holds.
+
+    The draws follow from the policy's seed, or from `seed`. The kernel runs in worker processes alone: one that ends
+    its process cannot end the gate. What it raises, and a value that leaves the emulation, are findings that fail;
+    AuditFileError and DocumentError say what is wrong with a file.
+    """
+    return gate_held(held_to(Path(audit)), seed=seed, who=gate_workers(workers))
+
+
+def gate_workers(number: int) -> Workers:
+    """Return the workers of a gate: processes, also where it is one, which a time limit makes sure of."""
+    return Workers(number=number, timeout=_LONGEST_BLOCK)
+
+
+def gate_held(held: Held, *, seed: int | None = None, who: Workers) -> GateEntry:
+    """Do what `gate` does for an audit file that was read together with its policy."""
+    file = read_audit_file(held.audit)
+    policy, stale = held.policy, held.settings.stale
+    own = policy.evidence.seed if seed is None else seed
+    settings = settings_facts(policy, file.asked())
+    if any(one.state == "fails" for one in settings):  # figures of other settings say nothing of these
+        return held.entry(settings, None, seed=own)
+    arms = {arm for level in policy.levels for arm in arms_of(level)}
+    levels = [level.level for level in policy.levels]
+    findings: list[Finding] = []
+    paths = [0] * len(levels)
+    for stage in (1, 2):
+        smaller = reduced(file, arms, held.settings, seed=gate_seed(own, stage), confidence=1 - ALPHA)
+
+        def rule(record: AuditRecord, before: Sequence[Finding] = tuple(findings)) -> Collection[int]:
+            return levels_open(concerned(judge(policy, record, stale=stale), before), levels)
+
+        try:
+            record = run_audit(smaller, None, workers=who, open_levels=rule).record
+        except (KernelError, DispatchError) as problem:
+            return held.entry([*findings, stopped(problem)], None, seed=own, paths=paths)
+        fresh = judge(policy, record, stale=stale)
+        findings = second(findings, fresh) if findings else fresh
+        drawn = next(iter(record.quantities.values())).levels
+        paths = [before + level.paths for before, level in zip(paths, drawn, strict=True)]
+        if not fails_for_now(findings):
+            break
+    return held.entry(findings, record, seed=own, paths=paths)

@@ -1,8 +1,8 @@
-"""The command line: draft an audit file, audit a kernel, draw up a policy, make a page; the only module that prints.
+"""The command line: draft an audit file, audit, draw up a policy, gate, make a page; the only module that prints.
 
-Exit codes: 0 done; 2 wrong usage, a wrong file, or a kernel that cannot be audited; 70 a fault of this program;
-130 interrupted; 141 the reader of the output went away. What a command needs is imported when it runs, so that
---help answers at once.
+Exit codes: 0 done; 1 a gate failed; 2 wrong usage, a wrong file, or a kernel that cannot be audited; 3 a gate was
+inconclusive; 70 a fault of this program; 130 interrupted; 141 the reader of the output went away. What a command needs
+is imported when it runs, so that --help answers at once.
 """
 
 from __future__ import annotations
@@ -18,6 +18,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, NoReturn, TextIO
 
 from narrowgauge import __version__
+from narrowgauge.commands import add_gate
 from narrowgauge.errors import NarrowgaugeError, said
 
 if TYPE_CHECKING:
@@ -164,14 +165,23 @@ def _parser() -> argparse.ArgumentParser:
 
     policy = commands.add_parser(
         "policy",
-        help="draw up the precision policy of an audit",
-        description="Writes what an audit found as a policy, a JSON file that running code can obey.",
+        help="draw up the precision policy of an audit, or renew that of an audit file",
+        description="Writes what an audit found as a policy, a JSON file that running code can obey. Of an audit file "
+        "the audit is run first, anew, and the policy that the file names is renewed.",
         allow_abbrev=False,
     )
-    policy.add_argument("folder", metavar="AUDITDIR", help="the folder that an audit has written")
-    policy.add_argument("--out", metavar="FILE", help="where to write it (default: policy.json in that folder)")
+    policy.add_argument(
+        "folder", metavar="AUDITDIR|AUDIT.toml", help="the folder that an audit has written, or an audit file"
+    )
+    policy.add_argument(
+        "--out",
+        metavar="FILE",
+        help="where to write it (default: policy.json in that folder, or the file's own policy)",
+    )
+    policy.add_argument("--workers", metavar="N", type=_whole, default=1, help="processes of the audit (default: 1)")
     policy.add_argument("--c-header", metavar="FILE", help="write the same rules as a C header, too")
     policy.set_defaults(command=_policy)
+    add_gate(commands, _whole, _gate)
     return parser
 
 
@@ -284,9 +294,13 @@ def _policy(options: argparse.Namespace) -> int:
     from narrowgauge.policy.drawup import draw_up, read_audit, write_policy
     from narrowgauge.report.policy import policy_lines
 
-    folder = Path(options.folder)
-    out = Path(options.out) if options.out is not None else folder / "policy.json"
-    document = draw_up(*read_audit(folder), source=options.folder)
+    folder, out = Path(options.folder), Path(options.folder, "policy.json")
+    if folder.suffix == ".toml":
+        from narrowgauge.commands import audited_anew
+
+        folder, out = audited_anew(folder, options.workers, _say)
+    out = out if options.out is None else Path(options.out)
+    document = draw_up(*read_audit(folder), source=str(folder))
     write_policy(document, out)
     header = None if options.c_header is None else Path(options.c_header)
     if header is not None:
@@ -295,6 +309,12 @@ def _policy(options: argparse.Namespace) -> int:
         write_c_header(document, header)
     _show(policy_lines(document, out, header))
     return 0
+
+
+def _gate(options: argparse.Namespace) -> int:
+    from narrowgauge.commands import gated
+
+    return gated(options, _write)
 
 
 def _show(document: RenderableType) -> None:

@@ -56,7 +56,8 @@ DEFAULTS = {
     "sampling.seed": 1,
 }
 ALL_TABLES = (
-    "kernel, library, command, parameters, ladder, target, formats, draws, branches, cost, sampling, domain, lines"
+    "kernel, library, command, parameters, ladder, target, formats, draws, branches, cost, sampling, domain, lines, "
+    "policy, gate"
 )
 KERNEL_KEYS = "run, takes, factors, layout, coupling, modules, shared, allow, rounds"
 
@@ -82,7 +83,7 @@ class TestDefaults:
         expected["kernel"]["layout"] = "factors, paths, steps"
         del expected["kernel"]["rounds"], expected["cost"]["measured"]  # which no emulated kernel has otherwise
         assert audit_file.asked() == expected
-        absent = {"library", "command", "draws", "branches", "domain", "lines"}
+        absent = {"library", "command", "draws", "branches", "domain", "lines", "policy", "gate"}
         assert list(audit_file.asked()) == [*(n for n in ALL_TABLES.split(", ") if n not in absent), "assumed"]
         assert audit_file.worthwhile == 1.0
 

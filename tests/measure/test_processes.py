@@ -6,6 +6,7 @@ import os
 import queue
 import subprocess
 import sys
+import tempfile
 import time
 from contextlib import closing
 from pathlib import Path
@@ -38,6 +39,17 @@ def test_blocks_come_back_from_two_processes(tmp_path: Path) -> None:
     assert len(fingerprints) == 1
     assert len(pids) == 2
     assert alive(engine) == []
+
+
+def test_without_a_folder_for_temporary_files_it_says_so(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """As in a container that is read-only: what to set is said, and no fault of the program."""
+    monkeypatch.setattr(tempfile, "tempdir", str(tmp_path / "nowhere"))
+    with pytest.raises(WorkerError) as caught:
+        engine_for(tmp_path, ",,")
+    assert str(caught.value) == (
+        "worker processes need a folder for temporary files: No such file or directory; accepted: TMPDIR in the "
+        "environment naming one that can be written"
+    )
 
 
 def test_what_a_kernel_raises_is_its_error(tmp_path: Path) -> None:

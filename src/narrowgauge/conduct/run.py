@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import functools
 import operator
-from collections.abc import Callable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Collection, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Protocol
 
@@ -106,17 +106,22 @@ def run(
     engine: Engine | None = None,
     ledger: Ledger | None = None,
     studied: bool = True,
+    open_levels: Callable[[Outcome], Collection[int]] | None = None,
 ) -> Outcome:
     """Measure and judge every level: at `paths`, twice that, four times ... up to `most_paths`, in whole blocks.
 
     `settled` says whether a level needs no more paths; for an audit, whether no format is undecided on it. Levels that
     are not settled at one look draw more paths for the next; each of J looks has confidence
-    1 - (1 - confidence) / J. `engine` runs the blocks, one after the other in this process unless given; what the
-    `ledger` has is not run again, and what is finished is put there. `studied`: when all is measured every number of a
-    few paths is looked at. Raises what the trial and the blocks raise.
+    1 - (1 - confidence) / J. With `open_levels`, which is told all that is there so far, those that it returns draw
+    more instead. `engine` runs the blocks, one after the other in this process unless given; what the `ledger` has is
+    not run again, and what is finished is put there. `studied`: when all is measured every number of a few paths is
+    looked at. Raises what the trial and the blocks raise.
     """
     with pinned():  # the same sums in the same order, whatever machine
-        return _Conductor(file, settled, watcher, engine or SerialEngine(file, kernel), ledger).run(studied=studied)
+        conductor = _Conductor(
+            file, settled, watcher, engine or SerialEngine(file, kernel), ledger, open_levels=open_levels
+        )
+        return conductor.run(studied=studied)
 
 
 def _known_costs(ledger: Ledger | None) -> dict[str, CostEntry] | None:
@@ -133,8 +138,10 @@ class _Conductor:
         watcher: Watcher | None,
         engine: Engine,
         ledger: Ledger | None,
+        *,
+        open_levels: Callable[[Outcome], Collection[int]] | None,
     ) -> None:
-        self._settled = settled
+        self._settled, self._open_levels = settled, open_levels
         self._watcher = watcher
         self._engine = engine
         self._ledger = ledger
@@ -161,9 +168,15 @@ class _Conductor:
             for level in self._drawn(pending, target):
                 broken = broken_splits(self._prepared.branches, level)
                 judgements[level] = judge_level(self._tallies[level], file, alpha, broken)
-            pending = [level for level in pending if not self._settled(judgements[level])]
+            if self._open_levels is None:
+                pending = [level for level in pending if not self._settled(judgements[level])]
+            else:
+                pending = sorted(self._open_levels(self._outcome(judgements, alpha)))
             if not pending:
                 break
+        return self._outcome(judgements, alpha, studied=studied)
+
+    def _outcome(self, judgements: Mapping[int, LevelJudgement], alpha: float, *, studied: bool = False) -> Outcome:
         return Outcome(
             tallies=self._tallies,
             judgements=judgements,

@@ -30,6 +30,7 @@ class Purpose(IntEnum):
     BRANCHES = 3
     LINES = 4
     SCENARIO = 5  # the key of a block, then the number of the scenario; alone it is that of the scenarios themselves
+    GATE = 6  # never of uniforms: the seed of a gate's own streams is drawn with it
 
 
 def block_paths(block: int, steps: int, factors: int, refinement: int = 2) -> int:

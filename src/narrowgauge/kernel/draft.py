@@ -23,6 +23,7 @@ from narrowgauge.kernel.auditparameters import check_parameter, plain
 from narrowgauge.kernel.audittables import TABLES, LadderTable, TableError, check_run, default_layout, dotted
 from narrowgauge.kernel.domaintable import domain_lines
 from narrowgauge.kernel.draftwords import MEANINGS, VALUES
+from narrowgauge.kernel.gatetable import GATE_LINES
 from narrowgauge.kernel.linestable import lines_draft
 
 __all__ = ["draft"]
@@ -88,7 +89,7 @@ def draft(target: str) -> str:
             keys = [f"{table}.{key}" for key in record.__struct_fields__]
             lines += ["", header, *(_line(key, values) for key in keys if key not in left_out)]
     floats = {key: value for key, value in tomllib.loads("\n".join(parameters)).items() if isinstance(value, float)}
-    return "\n".join([*lines, *domain_lines(floats), *lines_draft()]) + "\n"
+    return "\n".join([*lines, *domain_lines(floats), *lines_draft(), "", *GATE_LINES]) + "\n"
 
 
 def _function(path: Path, name: str) -> ast.FunctionDef:

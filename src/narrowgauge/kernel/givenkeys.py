@@ -12,6 +12,7 @@ from narrowgauge.kernel.audittables import TABLES, Table, TableError, dotted, ki
 from narrowgauge.kernel.branchestable import defaults_of
 from narrowgauge.kernel.domaintable import scales_assumed
 from narrowgauge.kernel.drawstable import counting_keys
+from narrowgauge.kernel.gatetable import refusal_of
 
 __all__ = ["CHEAP", "check_drawing", "check_names", "defaults_in_use", "document", "nearest", "useless"]
 
@@ -19,7 +20,7 @@ CHEAP = "approximate_draws"  # a cost that counts with [draws] alone
 
 _ORDER = (
     *("kernel", "library", "command", "parameters", "ladder", "target", "formats", "draws", "branches", "cost"),
-    *("sampling", "domain", "lines"),
+    *("sampling", "domain", "lines", "policy", "gate"),  # the last two are the gate's
 )
 _REQUIRED = ("kernel", "ladder")
 _OWN = ("kernel.rounds", "cost.measured")  # keys that count for a kernel that rounds for itself alone
@@ -38,6 +39,8 @@ def check_names(raw: dict[str, object]) -> None:
         if name in TABLES and not isinstance(value, dict):
             keys = ", ".join(TABLES[name].__struct_fields__)
             raise TableError(name, f"{shown(value)} is {kind_of(value)}", f"a table with keys of {keys}")
+    if (refusal := refusal_of(raw)) is not None:
+        raise TableError(*refusal)
     for name in _REQUIRED:
         if name not in raw:
             needed = " and ".join(field.name for field in msgspec.structs.fields(TABLES[name]) if field.required)

@@ -76,7 +76,11 @@ class ProcessEngine:
         self.title = "1 worker process" if workers == 1 else f"{workers} worker processes"
         self.workers = workers
         self._tasks: queue.SimpleQueue[_Task | None] = queue.SimpleQueue()
-        self._scratch = tempfile.TemporaryDirectory(prefix="narrowgauge-", ignore_cleanup_errors=True)
+        try:
+            self._scratch = tempfile.TemporaryDirectory(prefix="narrowgauge-", ignore_cleanup_errors=True)
+        except OSError as problem:  # none of the usual places can be written, as in a container that is read-only
+            what = f"worker processes need a folder for temporary files: {problem.strerror}"
+            raise WorkerError(f"{what}; accepted: TMPDIR in the environment naming one that can be written") from None
         self._slots = [_Slot(job, timeout, self._tasks, self._scratch.name) for _ in range(workers)]
 
     def __enter__(self) -> ProcessEngine:

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import functools
-import hashlib
 import math
 from collections.abc import Mapping
 from pathlib import Path
@@ -32,20 +31,14 @@ from narrowgauge.policy.region import claimed_box, held_in_box, single_point
 from narrowgauge.record import audit as audited
 from narrowgauge.record import policy as made
 from narrowgauge.record.audit import AuditRecord
-from narrowgauge.record.auditreading import RECORD_FILE, audit_record, audit_text_in
-from narrowgauge.record.canonical import read_strict, write_atomically
+from narrowgauge.record.auditreading import read_audit
+from narrowgauge.record.canonical import write_atomically
 from narrowgauge.record.policy import PolicyDocument, policy_text
 
 __all__ = ["draw_up", "read_audit", "write_policy"]
 
 _Table = TypeVar("_Table", bound=Table)
 _Part = TypeVar("_Part", bound=msgspec.Struct)
-
-
-def read_audit(folder: Path) -> tuple[AuditRecord, str]:
-    """Return the record in an audit's folder and the digest of its file; DocumentError says what is wrong with it."""
-    path, text = str(Path(folder) / RECORD_FILE), audit_text_in(Path(folder))
-    return audit_record(read_strict(text, path), path), _sha256(text)
 
 
 def draw_up(record: AuditRecord, digest: str, *, source: str = "audit") -> PolicyDocument:
@@ -351,7 +344,3 @@ def _mapping(value: object) -> dict[str, Any]:
 
 def _texts(value: object) -> list[str]:
     return [str(one) for one in value] if isinstance(value, list) else []
-
-
-def _sha256(text: str) -> str:
-    return f"sha256:{hashlib.sha256(text.encode()).hexdigest()}"

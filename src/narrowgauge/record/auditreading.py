@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import hashlib
 from collections.abc import Iterator
 from pathlib import Path
 
@@ -11,7 +12,7 @@ from narrowgauge.record.audit import SCHEMA, AuditRecord, LevelEntry, QuantityEn
 from narrowgauge.record.canonical import DocumentError, read_strict
 from narrowgauge.record.reading import converted, shown, text_of
 
-__all__ = ["RECORD_FILE", "audit_in", "audit_record", "audit_text_in"]
+__all__ = ["RECORD_FILE", "audit_in", "audit_record", "read_audit"]
 
 RECORD_FILE = "audit.json"
 _LARGEST = 64 * 2**20  # bytes
@@ -24,11 +25,16 @@ def audit_in(folder: Path) -> AuditRecord:
 
     Raises DocumentError, which names the folder or the file, the path into it, and what is accepted.
     """
-    path = str(folder / RECORD_FILE)
-    return audit_record(read_strict(audit_text_in(folder), path), path)
+    return read_audit(folder)[0]
 
 
-def audit_text_in(folder: Path) -> str:
+def read_audit(folder: Path) -> tuple[AuditRecord, str]:
+    """Return the record in an audit's folder and the digest of its file; raises as `audit_in` does."""
+    path, text = str(folder / RECORD_FILE), _text_in(folder)
+    return audit_record(read_strict(text, path), path), f"sha256:{hashlib.sha256(text.encode()).hexdigest()}"
+
+
+def _text_in(folder: Path) -> str:
     """Return the text of the record in a folder; DocumentError where there is none that can be read."""
     path = folder / RECORD_FILE
     try:

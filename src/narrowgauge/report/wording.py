@@ -8,6 +8,8 @@ from collections.abc import Iterable, Sequence
 from itertools import pairwise
 from typing import TYPE_CHECKING
 
+from narrowgauge.record.printable import clean, clean_lines
+
 if TYPE_CHECKING:
     from narrowgauge.record.audit import BestEntry, SchemeEntry
 
@@ -37,22 +39,6 @@ _EXACT_DIGITS = 17  # a float64 is told apart from every other by this many
 # Up to how many seconds a unit is used, how many it has, and its name.
 _UNITS_OF_TIME = ((90.0, 1.0, "s"), (90 * 60.0, 60.0, "min"), (48 * 3600.0, 3600.0, "h"), (math.inf, 86400.0, "days"))
 _SMALLEST_FIXED, _LARGEST_FIXED = -3, 6  # exponents of ten between which a figure is written without one
-
-
-def clean(text: object) -> str:
-    """Return text for one line: line ends and tabs become spaces; control and format characters are dropped.
-
-    What would move the cursor, change colours, or turn the direction of writing does not reach a terminal.
-    """
-    shown = "".join(
-        character if character.isprintable() else " " if character.isspace() else "" for character in str(text)
-    )
-    return shown or "(no printable name)"
-
-
-def clean_lines(text: str) -> str:
-    """Return text of several lines, each of them clean; blanks at their beginnings stay."""
-    return "\n".join(clean(line) if line.strip() else "" for line in text.split("\n"))
 
 
 def figure(value: float | None, digits: int = _DIGITS) -> str:

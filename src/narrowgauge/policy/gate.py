@@ -1,0 +1,169 @@
+"""The gate: whether a fresh audit of a kernel still supports its policy; pure, and without numpy.
+
+The verdict follows from the findings, facts and claims alike:
+
+| any fails | any undecided | verdict      |
+|-----------|---------------|--------------|
+| yes       | yes or no     | fail         |
+| no        | yes           | inconclusive |
+| no        | no            | pass         |
+
+A claim has a fresh figure with bounds, and a limit that follows from the policy:
+
+| bounds against the limit "at most"      | state     | "at least"                                  |
+|-----------------------------------------|-----------|---------------------------------------------|
+| the lower one above it                  | fails     | the upper one below it                      |
+| the upper one not above it              | holds     | the lower one above nine tenths of it       |
+| else                                    | undecided | else                                        |
+
+False alarms. A claim fails at 1 in 1,000 and is then measured again, on fresh draws (`second`), where it has to fail
+once more: 1 in a million for a claim that is just at its limit, 1 in 10,000 for a gate of a hundred such claims. With
+more claims each has the share that keeps m alpha^2 at 1 in 10,000, and each of J looks alpha / J of that. An unchanged
+kernel is far from most limits: its error variance is below the policy's bound of it where 1.5 times that is the limit,
+which is four standard errors of its logarithm away or more once it is decided. The limit of gains and edges has no
+such room: it is the policy's own lower bound. With s the standard error of the fresh one and p that of the policy's, a
+failure needs the two to be 3.3 s + 2.6 p apart, which is at least 3.8 of sqrt(s^2 + p^2) for s and p of which neither
+is below half of the other: less than 1 of 10,000 for a claim at one stage. A policy that is unlucky in that way fails
+its gate again and again, and is to be renewed. A finished audit cannot be drawn again: it is judged at 1 in a million
+at once, and what it decided at its own confidence holds (`alone`).
+
+What writes a verdict down takes the report as `record.gate` has it:
+
+    policy/junit.py     junit_text(report: GateReport) -> str
+    policy/sarif.py     sarif_text(report: GateReport) -> str
+    policy/summary.py   summary_text(report: GateReport) -> str
+    record/gate.py      gate_text(report: GateReport) -> str         the JSON
+
+From Python, `api.gate(audit: Path, *, seed=None, workers=2) -> GateEntry` measures and judges one audit file.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass
+
+import msgspec
+
+from narrowgauge.policy.gateclaims import RESOLUTION, Claim, claims_of
+from narrowgauge.policy.gatefacts import FACTS, facts_of
+from narrowgauge.policy.gatefigures import confidence_of, looks_of
+from narrowgauge.record.audit import AuditRecord
+from narrowgauge.record.gate import Finding, Verdict
+from narrowgauge.record.policy import PolicyDocument
+
+__all__ = ["ALPHA", "FALSE_ALARMS", "concerned", "fails_for_now", "judge", "levels_open", "second", "verdict_of"]
+
+ALPHA = 1e-3  # of a claim, at one stage
+FALSE_ALARMS = 1e-4  # of a gate
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Sides:
+    """The two-sided error rates at which a claim fails, and at which it holds."""
+
+    fails: float
+    holds: float
+
+
+def judge(policy: PolicyDocument, record: AuditRecord, *, stale: str = "note", alone: bool = False) -> list[Finding]:
+    """Return a finding for each fact and each claim of a policy, from a fresh record of its kernel.
+
+    `stale` says whether a kernel that changed and still holds is a "note" or has to "fail"; with `alone` a claim that
+    fails cannot be measured again, and fails at 1 in a million only.
+    """
+    facts = facts_of(policy, record, stale)
+    if any(one.check in ("settings", "run") and one.state == "fails" for one in facts):
+        return facts
+    claims = list(claims_of(policy, record))
+    sides = _sides(record, len(claims), alone=alone)
+    return [*facts, *(_found(claim, sides) for claim in claims)]
+
+
+def second(first: Sequence[Finding], fresh: Sequence[Finding]) -> list[Finding]:
+    """Return the findings of both stages: of the claims that failed at the first, what the fresh draws show.
+
+    Facts and claims that did not fail stay as they are. Both lists are of one policy, in the same order.
+    """
+    again = {_key(one): one for one in fresh}
+    return [
+        msgspec.structs.replace(again[_key(one)], stages=2) if _repeats(one) and _key(one) in again else one
+        for one in first
+    ]
+
+
+def concerned(fresh: Iterable[Finding], before: Sequence[Finding]) -> list[Finding]:
+    """Return the findings that a stage is run for: all at the first, then those of the claims that failed `before`."""
+    again = {_key(one) for one in before if _repeats(one)}
+    return [one for one in fresh if not before or _key(one) in again]
+
+
+def levels_open(findings: Iterable[Finding], levels: Sequence[int]) -> list[int]:
+    """Return the levels whose undecided claims need more paths; a claim on all levels needs them on each.
+
+    None where a fact fails: nothing that more paths show would change the verdict.
+    """
+    findings = list(findings)
+    if any(one.state == "fails" and one.check in FACTS for one in findings):
+        return []
+    waiting = {one.level for one in findings if one.state == "undecided" and one.check not in FACTS}
+    return [level for level in levels if level in waiting or None in waiting]
+
+
+def verdict_of(findings: Iterable[Finding]) -> Verdict:
+    """Return the verdict of the truth table above."""
+    states = {one.state for one in findings}
+    return "fail" if "fails" in states else "inconclusive" if "undecided" in states else "pass"
+
+
+def fails_for_now(findings: Iterable[Finding]) -> bool:
+    """Return whether a claim failed that has to be measured again."""
+    return any(_repeats(one) for one in findings)
+
+
+def _repeats(finding: Finding) -> bool:
+    return finding.state == "fails" and finding.check not in FACTS
+
+
+def _key(finding: Finding) -> tuple[str, int | None, str | None, str | None]:
+    return finding.check, finding.level, finding.quantity, finding.arm
+
+
+def _sides(record: AuditRecord, claims: int, *, alone: bool) -> _Sides:
+    looks = looks_of(record)
+    each = min(ALPHA, math.sqrt(FALSE_ALARMS / max(1, claims)))
+    if alone:
+        return _Sides(fails=each**2 / looks, holds=max(each, 1 - confidence_of(record)) / looks)
+    return _Sides(fails=each / looks, holds=each / looks)
+
+
+def _found(claim: Claim, sides: _Sides) -> Finding:
+    """Decide one claim by the table above."""
+    strict, bounds = claim.bounds(sides.fails), claim.bounds(sides.holds)
+    if strict is None or bounds is None:
+        return claim.finding(state="undecided", bounds=None, paths_needed=None)
+    if claim.at_least:
+        fails, holds = strict.high < claim.limit, bounds.low >= RESOLUTION * claim.limit
+        room = _log(bounds.estimate, RESOLUTION * claim.limit)
+        width = _log(bounds.estimate, bounds.low)
+    else:
+        fails, holds = strict.low > claim.limit, bounds.high <= claim.limit
+        room, width = claim.limit - bounds.estimate, bounds.high - bounds.estimate
+    if fails:
+        return claim.finding(state="fails", bounds=strict, paths_needed=None)
+    if holds:
+        return claim.finding(state="holds", bounds=bounds, paths_needed=None)
+    return claim.finding(state="undecided", bounds=bounds, paths_needed=_needed(claim.paths, width, room))
+
+
+def _log(over: float, under: float) -> float:
+    return math.log(over / under) if under > 0 else math.inf
+
+
+def _needed(paths: int, width: float, room: float) -> int | None:
+    """Return the paths at which bounds this wide, which narrow as 1 / sqrt(paths), fit the room; None: never, or many.
+
+    Beyond its limit a claim has as far to go to fail.
+    """
+    times = (width / abs(room)) ** 2 if room else math.inf
+    return math.ceil(paths * times) if 1.0 <= times < 1e9 else None
