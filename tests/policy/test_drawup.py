@@ -85,7 +85,6 @@ class TestContents:
         assert found.error_variance_high == pytest.approx(entry.error_variance * times, rel=1e-12)
         assert found.error_variance_low == pytest.approx(entry.error_variance / times, rel=1e-12)
         assert found.effective_size == level.corrections["bfloat16:float64"].effective_size
-        assert "lost_additions" not in policy_text(policy(record))
 
     def test_the_law(self, record):
         """The three coefficients with their intervals, of the error and of the correction, by quantity and arm."""
@@ -247,3 +246,22 @@ def test_an_unjudged_arm_has_no_verdict(record):
     """An arm that is only wide is written down as it was measured, without a verdict."""
     made = judged(record, 0, "bfloat16", None)
     assert policy(made).levels[0].measured["end"].arms["bfloat16"].verdict is None
+
+
+def test_shares_of_lost_additions_and_subnormals(record):
+    """Those of the levels whose numbers were looked at; on the others a policy says nothing of them."""
+    watched = record.range.watched
+    assert watched is not None
+    seen = {one.level: one.arms for one in watched.levels}
+    assert 0 < len(seen) < len(record.quantities["end"].levels)
+    for level in policy(record).levels:
+        for name, arm in level.measured["end"].arms.items():
+            if level.level not in seen:
+                assert (arm.lost_additions, arm.subnormals) == (UNSET, UNSET)
+                continue
+            lost = seen[level.level][name].lost
+            assert lost.share is not None
+            found = arm.lost_additions
+            assert (found.share, found.low, found.high) == (lost.share, lost.share_low, lost.share_high)
+            assert found.operations == lost.of > 0
+            assert arm.subnormals.share == seen[level.level][name].below.share

@@ -34,6 +34,7 @@ from narrowgauge.record.audit import AuditRecord
 from narrowgauge.record.auditreading import read_audit
 from narrowgauge.record.canonical import write_atomically
 from narrowgauge.record.policy import PolicyDocument, policy_text
+from narrowgauge.record.range import ShareEntry
 
 __all__ = ["draw_up", "read_audit", "write_policy"]
 
@@ -108,6 +109,8 @@ class _Draft:
         self._level_costs = {level: self._priced(level) for level in self._ladder.levels}
         choices = {level: chosen(record, level, self._level_costs[level]) for level in self._ladder.levels}
         self._choices = choices if record.domain is None else held_in_box(record.domain, choices)
+        levels = record.range.watched.levels if record.range is not None and record.range.watched is not None else []
+        self._watched = {(level.level, arm): entry for level in levels for arm, entry in level.arms.items()}
 
     def document(self) -> PolicyDocument:
         """Return the policy."""
@@ -238,6 +241,7 @@ class _Draft:
             times = math.exp(min(reach * variance_se / variance, 700.0)) if variance > 0 else 1.0
             bounds = variance / times, variance * times
         correction = entry.corrections.get(f"{name}:{REFERENCE.narrow}")
+        watched = self._watched.get((entry.level, name))
         return _copied(
             made.ArmPart,
             arm,
@@ -246,6 +250,8 @@ class _Draft:
             error_variance_low=bounds[0],
             error_variance_high=None if bounds[1] is None or math.isinf(bounds[1]) else bounds[1],
             effective_size=None if correction is None else correction.effective_size,
+            lost_additions=msgspec.UNSET if watched is None else _share(watched.lost),
+            subnormals=msgspec.UNSET if watched is None else _share(watched.below),
         )
 
     def _reach(self, blocks: int) -> float:
@@ -344,3 +350,9 @@ def _mapping(value: object) -> dict[str, Any]:
 
 def _texts(value: object) -> list[str]:
     return [str(one) for one in value] if isinstance(value, list) else []
+
+
+def _share(entry: ShareEntry) -> made.SharePart | msgspec.UnsetType:
+    if entry.share is None or entry.share_low is None or entry.share_high is None:
+        return msgspec.UNSET
+    return made.SharePart(share=entry.share, low=entry.share_low, high=entry.share_high, operations=entry.of)
