@@ -75,8 +75,8 @@ def _allowed(one: SumEntry, planned: int | None) -> Text:
     if one.largest is None:
         return Text("any number")
     if planned is not None and one.largest < planned:
-        return Text(f"{_rounded_down(one.largest)}, too few", style=VERDICT_STYLES["does not pay"])
-    return Text(_rounded_down(one.largest))
+        return Text(f"{figure(_rounded_down(one.largest), 2)}, too few", style=VERDICT_STYLES["does not pay"])
+    return Text(figure(_rounded_down(one.largest), 2))
 
 
 def _format(entries: list[AveragedEntry], name: str, share: float, *, planned: bool) -> str:
@@ -115,10 +115,10 @@ def _harm(one: _Worst) -> str:
 
 
 def _paths(number: int) -> str:
-    return f"at most {_rounded_down(number)}"
+    return f"at most {count(_rounded_down(number))}"
 
 
-def _rounded_down(number: int) -> str:
+def _rounded_down(number: int) -> int:
     """Return a number of paths with two digits that count, rounded down."""
     size = 10 ** max(0, len(str(number)) - 2)
-    return count(number // size * size)
+    return number // size * size

@@ -146,7 +146,7 @@ def box_table(domain: DomainEntry) -> Ruled:
 def lost_table(domain: DomainEntry) -> Ruled:
     """Return the scenarios that do not pass, the refused before the undecided: where, how and why."""
     table = Ruled(
-        ("scenario", "words"), ("parameters", "words"), ("outcome", "words"), ("levels", "words"), ("why", "words")
+        ("scenario", "words"), ("parameters", "words"), ("outcome", "unbroken"), ("levels", "words"), ("why", "words")
     )
     for one in sorted(_not_passing(domain), key=lambda one: one.outcome != "refused"):
         levels = [level.level for level in one.levels if level.outcome == one.outcome]

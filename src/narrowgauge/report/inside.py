@@ -59,7 +59,7 @@ def ranges(record: AuditRecord) -> list[Block]:
 def _magnitudes(record: AuditRecord, found: WatchedEntry) -> Iterable[Block]:
     chart = _chart(record, found)
     caption = (
-        "Results of each line in float64, and the bits to spare below and above them (negative: short) in each format"
+        "Results of each line in float64; in each format bits to spare below, bits to spare above (negative: short)"
     )
     if chart is None:
         yield Words("No line has a result of float64 that is not zero, so there is no magnitude to draw.", "note")
@@ -71,8 +71,8 @@ def _magnitudes(record: AuditRecord, found: WatchedEntry) -> Iterable[Block]:
         yield Drawing(
             title=title,
             caption="Thick bars are the normal numbers of a format, the thin piece before them its subnormals; an "
-            "arrow says that a bar goes on beyond the drawing. Below them, the results of each line in float64. Dashed "
-            f"lines carry the ends of a format down to the lines.{few}",
+            "arrow says that a bar goes on beyond the drawing. Below them, the results of each line in float64, with "
+            f"marks where a format ends.{few}",
             alternative=f"{title}. Bars over powers of two. {'; '.join(told)}. The table below has the figures.",
             wide=spans(chart, WIDE, "range-wide"),
             narrow=spans(chart, NARROW, "range-narrow"),

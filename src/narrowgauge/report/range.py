@@ -166,7 +166,7 @@ def _together(lines: Sequence[LineRangeEntry]) -> Magnitudes:
 def room_table(found: WatchedEntry) -> Ruled:
     """Return, line by line, the magnitudes of results and the bits that each format leaves below and above them."""
     arms = _arms(found)
-    columns: list[tuple[str, Kind]] = [(f"{clean(arm)}\nbelow, above", "number") for arm in arms]
+    columns: list[tuple[str, Kind]] = [(clean(arm), "number") for arm in arms]
     table = Ruled(("line", "words"), ("smallest", "number"), ("largest", "number"), *columns)
     for one in magnitudes(found):
         ends = (NONE if end is None else f"2^{end}" for end in (one.smallest, one.largest))
