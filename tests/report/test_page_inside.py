@@ -152,6 +152,10 @@ class TestDomain:
         """Named, with how many more there are."""
         assert "corner 35 (reserve.py = 0.4500, spot fine = 85.00) and 1 more are refused." in words(pages.full_record)
 
+    def test_what_would_settle_a_scenario(self):
+        """With how many there are."""
+        assert "To settle 1 scenario of [domain] left undecided, raise [domain] most_paths." in words(pages.full_record)
+
     def test_nothing_claimed(self):
         """Leaves the columns of the claim empty."""
         found = replace(inside.domain(5, 32), claimed=None)

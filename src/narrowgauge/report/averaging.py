@@ -120,5 +120,5 @@ def _paths(number: int) -> str:
 
 def _rounded_down(number: int) -> int:
     """Return a number of paths with two digits that count, rounded down."""
-    size = 10 ** max(0, len(str(number)) - 2)
+    size: int = 10 ** max(0, len(str(number)) - 2)
     return number // size * size

@@ -136,11 +136,15 @@ def box_table(domain: DomainEntry) -> Ruled:
         claimed = None if domain.claimed is None else domain.claimed.parameters.get(name)
         low = high = NONE
         if claimed is not None:
-            low = setting_value(side.low) if claimed.low == side.low else _end(claimed.low, 1)
-            high = setting_value(side.high) if claimed.high == side.high else _end(claimed.high, -1)
+            low, high = _claimed_end(claimed.low, side, 1), _claimed_end(claimed.high, side, -1)
         cells = (clean(name), *map(setting_value, (side.audited, side.low, side.high)), low, high, side.scale)
         table.add_row(*map(Text, cells))
     return table
+
+
+def _claimed_end(value: float, side: SideEntry, inwards: int) -> str:
+    """Return an end as the audit file writes it where it is one of the file's, else rounded inwards."""
+    return setting_value(value) if value in (side.low, side.high, side.audited) else _end(value, inwards)
 
 
 def lost_table(domain: DomainEntry) -> Ruled:

@@ -9,7 +9,7 @@ from msgspec import UnsetType
 from narrowgauge.record.audit import AuditRecord
 from narrowgauge.report.branches import branch_alarms
 from narrowgauge.report.canary import canary_alarms
-from narrowgauge.report.domain import refused_corners
+from narrowgauge.report.domain import refused_corners, scenarios_counted
 from narrowgauge.report.lines import best_widening, line_hint
 from narrowgauge.report.notes import rounded_up
 from narrowgauge.report.settings import assumed_costs, coupled, measured_to, narrow_formats, setting
@@ -114,6 +114,11 @@ def _elsewhere(record: AuditRecord) -> Iterable[str]:
             f"Keep to the parameters that are claimed, or audit where the verdict fails: {found[0]}{most} "
             f"{'are' if most else 'is'} refused."
         )
+    open_ones = sum(one.outcome == "undecided" for one in record.domain.scenarios)
+    most_paths = setting(record, "domain.most_paths")
+    if open_ones:
+        now = f" (now {count(most_paths)})" if isinstance(most_paths, int) else ""
+        yield f"To settle {scenarios_counted(open_ones)} of [domain] left undecided, raise [domain] most_paths{now}."
 
 
 def _farther(record: AuditRecord) -> Iterable[str]:

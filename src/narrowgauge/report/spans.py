@@ -92,5 +92,5 @@ def _named(axes: Any, row: SpanRow, place: int, layout: Layout) -> None:
 
 
 def _ticks(low: float, high: float, most: int) -> Iterator[int]:
-    step = max(1, math.ceil((high - low) / most))
+    step = 2 ** max(0, math.ceil(math.log2((high - low) / most)))
     yield from (step * number for number in range(math.ceil(low / step), math.floor(high / step) + 1))
