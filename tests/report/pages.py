@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import made_inside as inside
 import made_records as made
 from msgspec.structs import replace
 
@@ -28,7 +29,7 @@ def hostile_record() -> AuditRecord:
     asked = {**made.ASKED, "parameters": {SCRIPT: CONTROL, BRACKETS: [1.5, CONTROL]}}
     lines = [ReachLine(file=SCRIPT, line=1, operation=BRACKETS, route="rounded", count=1), *made.REACH.lines]
     return replace(
-        record,
+        inside.filled(record, hostile=(SCRIPT, CONTROL)),
         kernel=replace(record.kernel, run=SCRIPT + CONTROL),
         asked=asked,
         reach=replace(made.REACH, lines=lines, remarks=[CONTROL]),
@@ -111,7 +112,7 @@ def nonfinite_record() -> AuditRecord:
 
 
 def large_record(levels: int = 12, lines: int = 60) -> AuditRecord:
-    """Two quantities on twelve levels in four formats, and sixty lines of source."""
+    """Two quantities on twelve levels in four formats, sixty lines of source, thirty-two scenarios."""
     entry = made.quantity_entry()
     ladder = []
     for number in range(levels):
@@ -136,12 +137,18 @@ def large_record(levels: int = 12, lines: int = 60) -> AuditRecord:
         for name, route in (("add", "rounded"), ("multiply", "rounded"), ("maximum", "exact"))
     ]
     verdict = {**record.verdict.finest_paying_level, "tf32": record.verdict.finest_paying_level["float16"]}
-    return replace(
+    record = replace(
         record,
         arms={**record.arms, "tf32": replace(record.arms["float16"], format="tf32")},
         verdict=replace(record.verdict, finest_paying_level=verdict),
         reach=replace(made.REACH, lines=reach),
     )
+    return inside.filled(record, levels=levels, lines=lines)
+
+
+def full_record() -> AuditRecord:
+    """One quantity, and something to say in every section."""
+    return inside.filled(sound_record())
 
 
 EMPTY = {

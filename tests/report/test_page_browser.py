@@ -15,6 +15,7 @@ from narrowgauge.report.page import page
 
 RECORDS = {
     "sound": pages.sound_record,
+    "full": pages.full_record,
     "two quantities": made.audit_record,
     "approximate draws": approximate.record,
     "large": pages.large_record,

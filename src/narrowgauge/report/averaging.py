@@ -4,10 +4,14 @@ from __future__ import annotations
 
 from typing import NamedTuple
 
-from narrowgauge.record.averaging import AveragedEntry, AveragingEntry, FormatSumsEntry, SumEntry
-from narrowgauge.report.wording import clean, count, figure, joined
+from rich.text import Text
 
-__all__ = ["averaged_over", "averaging_lines"]
+from narrowgauge.record.averaging import AveragedEntry, AveragingEntry, FormatSumsEntry, SumEntry
+from narrowgauge.report.layout import Ruled
+from narrowgauge.report.tables import VERDICT_STYLES
+from narrowgauge.report.wording import NONE, clean, count, figure, joined
+
+__all__ = ["averaged_over", "averaging_lines", "sums_tables"]
 
 _ORDERS = {"running": "one after the other", "pairwise": "in pairs, as NumPy adds"}
 
@@ -41,6 +45,38 @@ def averaging_lines(found: AveragingEntry) -> list[str]:
     elif quiet:
         lines.append(f"{joined(quiet)}: sums of any number of paths err by less than {share} of their standard error.")
     return lines
+
+
+def sums_tables(found: AveragingEntry, quantity: str) -> dict[str, Ruled]:
+    """Return, by the order of adding in words, how many paths each sum of a quantity may take in each format.
+
+    A number below the plan's is marked like a format that does not pay.
+    """
+    entries = [entry for entry in found.quantities[quantity] if entry.formats]
+    formats = list(dict.fromkeys(name for entry in entries for name in entry.formats))
+    tables = {}
+    for order, words in _ORDERS.items() if entries else ():
+        table = Ruled(
+            ("level", "number"), ("sum of", "unbroken"), ("planned", "number"), *((clean(f), "words") for f in formats)
+        )
+        for entry in entries:
+            planned = NONE if entry.paths is None else count(entry.paths)
+            branch = "corrections" if entry.branch == "correction" else "paths"
+            cells = [Text(one) for one in (str(entry.level), branch, planned)]
+            for name in formats:
+                one = entry.formats.get(name)
+                cells.append(Text(NONE) if one is None else _allowed(_sums(one, order), entry.paths))
+            table.add_row(*cells)
+        tables[words] = table
+    return tables
+
+
+def _allowed(one: SumEntry, planned: int | None) -> Text:
+    if one.largest is None:
+        return Text("any number")
+    if planned is not None and one.largest < planned:
+        return Text(f"{figure(_rounded_down(one.largest), 2)}, too few", style=VERDICT_STYLES["does not pay"])
+    return Text(figure(_rounded_down(one.largest), 2))
 
 
 def _format(entries: list[AveragedEntry], name: str, share: float, *, planned: bool) -> str:
@@ -79,6 +115,10 @@ def _harm(one: _Worst) -> str:
 
 
 def _paths(number: int) -> str:
+    return f"at most {count(_rounded_down(number))}"
+
+
+def _rounded_down(number: int) -> int:
     """Return a number of paths with two digits that count, rounded down."""
-    size = 10 ** max(0, len(str(number)) - 2)
-    return f"at most {count(number // size * size)}"
+    size: int = 10 ** max(0, len(str(number)) - 2)
+    return number // size * size

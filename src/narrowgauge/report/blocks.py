@@ -12,7 +12,21 @@ from typing import ClassVar
 from narrowgauge.report.layout import Ruled
 from narrowgauge.report.tables import VERDICT_STYLES
 
-__all__ = ["Block", "Cell", "Drawing", "Part", "Points", "Section", "Table", "Words", "points", "tabled", "visible"]
+__all__ = [
+    "Block",
+    "Cell",
+    "Drawing",
+    "Part",
+    "Points",
+    "Section",
+    "Source",
+    "SourceRow",
+    "Table",
+    "Words",
+    "points",
+    "tabled",
+    "visible",
+]
 
 _PHONE = 40  # characters across
 _MARKS = dict(zip(VERDICT_STYLES.values(), ("yes", "no", "open"), strict=True))
@@ -75,6 +89,28 @@ class Drawing:
 
 
 @dataclass(frozen=True, slots=True)
+class SourceRow:
+    """A line of source: blanks before it, the rest, and its share from 0 to 1 with the figure; or a gap before it."""
+
+    indent: int
+    text: str
+    share: float | None = None
+    figure: str = ""
+    gap: bool = False
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Source:
+    """Lines of source with a bar and a figure, below one heading, to the right of those that matter."""
+
+    kind: ClassVar[str] = "source"
+    caption: str
+    first: str
+    heading: str
+    rows: tuple[SourceRow, ...]
+
+
+@dataclass(frozen=True, slots=True)
 class Part:
     """Blocks below a heading of their own."""
 
@@ -83,7 +119,7 @@ class Part:
     blocks: tuple[Block, ...]
 
 
-Block = Words | Points | Table | Drawing | Part
+Block = Words | Points | Table | Drawing | Source | Part
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -119,7 +119,7 @@ def _conditions(one: TriedEntry) -> str:
     if one.batches:
         words.append(f"with {joined(map(count, [*one.batches, one.varied]), 'or')} paths a call")
     if one.orders:
-        words.append(f"in {count(len(one.orders))} memory layouts")
+        words.append(f"in {count(len(one.orders))} memory layout{'' if len(one.orders) == 1 else 's'}")
     if one.threads:
         words.append(f"in {count(one.threads)} threads at once")
     if one.repeats:

@@ -21,6 +21,8 @@ __all__ = [
     "GainRow",
     "LineChart",
     "Series",
+    "SpanChart",
+    "SpanRow",
     "Tick",
     "extent",
     "interval_of",
@@ -101,6 +103,26 @@ class GainChart:
 
     today: str
     rows: tuple[GainRow, ...]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class SpanRow:
+    """Magnitudes from 2^low to 2^high, both ends of the bar; `faint` is where a thinner bar before it begins."""
+
+    label: str
+    words: str
+    look: Look
+    low: float
+    high: float
+    faint: float | None = None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class SpanChart:
+    """The normal numbers of formats, with their subnormals as thinner bars, above the magnitudes of lines."""
+
+    formats: tuple[SpanRow, ...]
+    lines: tuple[SpanRow, ...]
 
 
 def interval_of(record: AuditRecord, level: LevelEntry, variance: float, se: float | None) -> tuple[float, float]:

@@ -38,7 +38,19 @@ if TYPE_CHECKING:
     from narrowgauge.conduct.run import Plan
     from narrowgauge.kernel.auditfile import AuditFile
 
-__all__ = ["deciding", "domain_notes", "domain_table", "planned_domain", "scenarios_asked", "scenarios_counted"]
+__all__ = [
+    "box_table",
+    "deciding",
+    "domain_notes",
+    "domain_summary",
+    "domain_table",
+    "lost_table",
+    "passing_table",
+    "planned_domain",
+    "refused_corners",
+    "scenarios_asked",
+    "scenarios_counted",
+]
 
 _SHOWN = 5  # scenarios that do not pass
 _STYLES = {"passes": "bold cyan", "undecided": "magenta", "refused": "yellow"}
@@ -82,23 +94,84 @@ def scenarios_counted(number: int) -> str:
 
 def domain_notes(domain: DomainEntry) -> list[str]:
     """Return the box, what became of the scenarios, which do not pass, what is claimed, and what that proves."""
-    drawn = sum(one.kind == "drawn" for one in domain.scenarios)
-    passed = sum(one.outcome == "passes" for one in domain.scenarios)
-    lost = [one for one in domain.scenarios if one.outcome != "passes"]
-    box = joined(_side(clean(name), side) for name, side in domain.sides.items())
-    share = percent(domain.share_of_audit, (0.0, 1.0))
-    notes = [
-        f"The schemes of the verdict were tried at other parameters: {box}. On levels where the verdict is open, the "
-        "reference alone was.",
-        f"Of {_counted(drawn, len(domain.scenarios) - drawn)}, {count(passed)} "
-        f"{'passes' if passed == 1 else 'pass'}, {_outcomes(lost)}. They took {share} of the steps of the audit "
-        "itself.",
-        *(_lost(one) for one in lost[:_SHOWN]),
-    ]
+    before, after = domain_summary(domain)
+    lost = _not_passing(domain)
+    notes = [*before, *(_lost(one) for one in lost[:_SHOWN])]
     if len(lost) > _SHOWN:
         rest = len(lost) - _SHOWN
         notes.append(f"{count(rest)} more {'does' if rest == 1 else 'do'} not pass; audit.json has them all.")
-    return [*notes, _claim(domain.claimed, domain.sides), _proof(domain.proof, domain.claimed)]
+    return [*notes, *after]
+
+
+def domain_summary(domain: DomainEntry) -> tuple[list[str], list[str]]:
+    """Return the box and what became of the scenarios; and what is claimed, and what that proves."""
+    drawn = sum(one.kind == "drawn" for one in domain.scenarios)
+    passed = sum(one.outcome == "passes" for one in domain.scenarios)
+    box = joined(_side(clean(name), side) for name, side in domain.sides.items())
+    share = percent(domain.share_of_audit, (0.0, 1.0))
+    before = [
+        f"The schemes of the verdict were tried at other parameters: {box}. On levels where the verdict is open, the "
+        "reference alone was.",
+        f"Of {_counted(drawn, len(domain.scenarios) - drawn)}, {count(passed)} "
+        f"{'passes' if passed == 1 else 'pass'}, {_outcomes(_not_passing(domain))}. They took {share} of the steps of "
+        "the audit itself.",
+    ]
+    return before, [_claim(domain.claimed, domain.sides), _proof(domain.proof, domain.claimed)]
+
+
+def _not_passing(domain: DomainEntry) -> list[ScenarioEntry]:
+    return [one for one in domain.scenarios if one.outcome != "passes"]
+
+
+def refused_corners(domain: DomainEntry) -> list[str]:
+    """Return the corners that are refused, with their parameters."""
+    return [_named(one) for one in domain.scenarios if one.kind == "corner" and one.outcome == "refused"]
+
+
+def box_table(domain: DomainEntry) -> Ruled:
+    """Return, parameter by parameter, where the audit was made, what was tried and what is claimed."""
+    headings = ("audited at", "tried from", "tried to", "claimed from", "claimed to")
+    table = Ruled(("parameter", "words"), *((name, "number") for name in headings), ("scale", "words"))
+    for name, side in domain.sides.items():
+        claimed = None if domain.claimed is None else domain.claimed.parameters.get(name)
+        low = high = NONE
+        if claimed is not None:
+            low, high = _claimed_end(claimed.low, side, 1), _claimed_end(claimed.high, side, -1)
+        cells = (clean(name), *map(setting_value, (side.audited, side.low, side.high)), low, high, side.scale)
+        table.add_row(*map(Text, cells))
+    return table
+
+
+def _claimed_end(value: float, side: SideEntry, inwards: int) -> str:
+    """Return an end as the audit file writes it where it is one of the file's, else rounded inwards."""
+    return setting_value(value) if value in (side.low, side.high, side.audited) else _end(value, inwards)
+
+
+def lost_table(domain: DomainEntry) -> Ruled:
+    """Return the scenarios that do not pass, the refused before the undecided: where, how and why."""
+    table = Ruled(
+        ("scenario", "words"), ("parameters", "words"), ("outcome", "unbroken"), ("levels", "words"), ("why", "words")
+    )
+    for one in sorted(_not_passing(domain), key=lambda one: one.outcome != "refused"):
+        levels = [level.level for level in one.levels if level.outcome == one.outcome]
+        words = ", ".join(map(str, levels)) or NONE
+        why = f"the kernel cannot do it: {clean(one.message)}" if one.message is not None else _scenario_why(one)
+        outcome = Text(one.outcome, style=_STYLES[one.outcome])
+        table.add_row(Text(_name(one)), Text(_values(one)), outcome, Text(words), Text(why))
+    return table
+
+
+def passing_table(domain: DomainEntry) -> Ruled:
+    """Return the scenarios that pass, each with the lowest edge of a format that it recommends."""
+    table = Ruled(("scenario", "words"), ("parameters", "words"), ("lowest edge", "number"), ("on level", "number"))
+    for one in domain.scenarios:
+        if one.outcome != "passes":
+            continue
+        edges = [(level.edge_low, level.level) for level in one.levels if level.edge_low is not None]
+        edge, level = min(edges, default=(None, None))
+        shown = NONE if level is None else str(level)
+        table.add_row(*map(Text, (_name(one), _values(one), shown_edge(edge, (1.0,)), shown)))
+    return table
 
 
 def domain_table(domain: DomainEntry) -> Ruled:
@@ -151,8 +224,11 @@ def _outcomes(lost: Iterable[ScenarioEntry]) -> str:
 
 
 def _named(scenario: ScenarioEntry) -> str:
-    values = ", ".join(f"{clean(name)} = {figure(value, 4)}" for name, value in scenario.parameters.items())
-    return f"{_name(scenario)} ({values})"
+    return f"{_name(scenario)} ({_values(scenario)})"
+
+
+def _values(scenario: ScenarioEntry) -> str:
+    return ", ".join(f"{clean(name)} = {figure(value, 4)}" for name, value in scenario.parameters.items())
 
 
 def _name(scenario: ScenarioEntry) -> str:
@@ -166,8 +242,11 @@ def _lost(scenario: ScenarioEntry) -> str:
     name = _named(scenario)
     if scenario.message is not None:
         return f"{name} is refused, the kernel cannot do it: {clean(scenario.message)}."
-    why = _why(scenario.outcome, scenario.reason or "budget")
-    return f"{name} is {scenario.outcome}{where}: {why}."
+    return f"{name} is {scenario.outcome}{where}: {_scenario_why(scenario)}."
+
+
+def _scenario_why(scenario: ScenarioEntry) -> str:
+    return _why(scenario.outcome, scenario.reason or "budget")
 
 
 def _side(name: str, side: SideEntry) -> str:

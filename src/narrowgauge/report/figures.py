@@ -22,7 +22,7 @@ from narrowgauge.report.palette import LIGHT
 from narrowgauge.report.svg import page_svg
 from narrowgauge.report.wording import shown_edge
 
-__all__ = ["NARROW", "WIDE", "Layout", "gains", "lines"]
+__all__ = ["NARROW", "WIDE", "Layout", "drawing_of", "gains", "lines", "plain_axes"]
 
 _DPI = 72  # at which a point is a pixel
 _ROLES = {value: role for role, value in LIGHT.items() if role in ("ink", "muted", "rule", "paper") or role[0] == "s"}
@@ -52,7 +52,7 @@ def lines(chart: LineChart, layout: Layout, prefix: str) -> str:
     """Return a chart of lines as SVG for a page, with ids that begin with `prefix`."""
     names = [series.label for series in chart.series]
     roomy = replace(layout, right=max(layout.right, 26 + math.ceil(0.65 * layout.text * max(map(len, names)))))
-    return _drawn(prefix, roomy, lambda drawing: _lines(drawing, chart, roomy))
+    return drawing_of(prefix, roomy, lambda drawing: _lines(drawing, chart, roomy))
 
 
 def gains(chart: GainChart, layout: Layout, prefix: str) -> str:
@@ -60,10 +60,11 @@ def gains(chart: GainChart, layout: Layout, prefix: str) -> str:
     row = 30 if layout.name == "wide" else 44
     right = 190 if layout.name == "wide" else 16
     tall = replace(layout, height=layout.top + layout.bottom + row * len(chart.rows), right=right)
-    return _drawn(prefix, tall, lambda drawing: _gains(drawing, chart, tall))
+    return drawing_of(prefix, tall, lambda drawing: _gains(drawing, chart, tall))
 
 
-def _drawn(prefix: str, layout: Layout, draw: Callable[[Figure], None]) -> str:
+def drawing_of(prefix: str, layout: Layout, draw: Callable[[Figure], None]) -> str:
+    """Return what a function draws on a figure of this size as SVG for a page, with ids that begin with `prefix`."""
     with _settings(prefix):
         drawing = Figure(figsize=(layout.width / _DPI, layout.height / _DPI), dpi=_DPI)
         drawing.patch.set_visible(False)
@@ -82,7 +83,8 @@ def _settings(prefix: str) -> Iterator[None]:
         yield
 
 
-def _axes(drawing: Figure, layout: Layout) -> Any:
+def plain_axes(drawing: Figure, layout: Layout) -> Any:
+    """Return axes inside the margins, with one line below them and labels without ticks."""
     box = (
         layout.left / layout.width,
         layout.bottom / layout.height,
@@ -99,7 +101,7 @@ def _axes(drawing: Figure, layout: Layout) -> Any:
 
 
 def _lines(drawing: Figure, chart: LineChart, layout: Layout) -> None:
-    axes = _axes(drawing, layout)
+    axes = plain_axes(drawing, layout)
     heights = list(_heights(chart))
     low, high = extent(heights, 2.0)
     margin = 0.04 * (high - low)
@@ -243,7 +245,7 @@ def _apart(places: Sequence[float], gap: float, low: float, high: float) -> list
 
 
 def _gains(drawing: Figure, chart: GainChart, layout: Layout) -> None:
-    axes = _axes(drawing, layout)
+    axes = plain_axes(drawing, layout)
     bounds = [v for row in chart.rows for v in (row.gain, row.low, row.high) if v is not None and v > 0.0]
     low, high = extent([math.log2(v) for v in (*bounds, 1.0)], 1.0)
     side = 0.05 * (high - low)

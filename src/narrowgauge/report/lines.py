@@ -4,22 +4,67 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from itertools import groupby
+from typing import NamedTuple
 
 from rich.console import Console, ConsoleOptions, RenderableType, RenderResult
 from rich.text import Text
 
 from narrowgauge.record.audit import AuditRecord
-from narrowgauge.record.lines import FormatLines, LineEntry, PartShare, PaysEntry, SumEntry, WideningEntry
-from narrowgauge.report.layout import Hanging
-from narrowgauge.report.wording import clean, count, figure, interval, joined, percent
+from narrowgauge.record.lines import (
+    FormatLines,
+    LineEntry,
+    PaysEntry,
+    QuantityLines,
+    ShareEntry,
+    SumEntry,
+    WideningEntry,
+)
+from narrowgauge.report.layout import Hanging, Kind, Ruled
+from narrowgauge.report.settings import confidence
+from narrowgauge.report.wording import NONE, clean, count, figure, interval, joined, percent
 
-__all__ = ["line_hint", "line_parts"]
+__all__ = [
+    "HEADING",
+    "ListedLine",
+    "Listing",
+    "best_widening",
+    "line_hint",
+    "line_parts",
+    "listings",
+    "shares_table",
+    "shown_quantity",
+    "study_words",
+    "unfinished",
+    "what_if_table",
+    "widening_note",
+    "widening_table",
+]
 
 _MATTERS = 0.01  # of the variance: smaller shares stand in lines.csv alone
-_HEADING = "share of error variance"
+HEADING = "share of error variance"
 _BARS = ((80, 20), (60, 10))  # from which width on a bar is how long at most
+_PAYS: tuple[tuple[str, Kind], ...] = (
+    ("pays to level", "words"),
+    ("gain there", "words"),
+    ("cost of a step", "number"),
+)
 _FURTHER = 4  # blanks before the rest of a line that is broken
 _INPUTS = {"draws": "the draws", "step size": "the step size", "constants": "all other constants"}
+
+
+class ListedLine(NamedTuple):
+    """A line of source or an input by name, with its share of a variance where that matters."""
+
+    line: int | None
+    text: str
+    share: float | None
+
+
+class Listing(NamedTuple):
+    """Lines of one file, or the inputs of the kernel, whose file is None."""
+
+    file: str | None
+    lines: list[ListedLine]
 
 
 class Source:
@@ -35,7 +80,7 @@ class Source:
         most = max((len(text) for text in figures), default=0)
         right = most + (longest + 1 if longest else 0)
         left = max(width - right - 2, 1)
-        for line in Text(_HEADING, style="bold").wrap(console, width):
+        for line in Text(HEADING, style="bold").wrap(console, width):
             line.align("right", width)
             yield line
         for (text, share), shown in zip(self._rows, figures, strict=True):
@@ -61,7 +106,7 @@ def line_parts(record: AuditRecord) -> list[RenderableType]:
         return []
     parts: list[RenderableType] = []
     if record.lines.reason is not None:
-        parts += [Text(f"Which lines cost the accuracy was not found out: {clean(record.lines.reason)}"), Text()]
+        parts += [Text(unfinished(record.lines.reason)), Text()]
     for form, study in record.lines.formats.items():
         parts += [
             Text(f"Which lines cost {clean(form)} its accuracy", style="bold"),
@@ -71,10 +116,15 @@ def line_parts(record: AuditRecord) -> list[RenderableType]:
     return parts
 
 
-def line_hint(record: AuditRecord) -> list[RenderableType]:
-    """Say in one line how to find out which lines cost the accuracy, where a format ends early and nobody asked."""
+def unfinished(reason: str) -> str:
+    """Return why a study of the lines was stopped."""
+    return f"Which lines cost the accuracy was not found out: {clean(reason)}"
+
+
+def line_hint(record: AuditRecord) -> str:
+    """Say how to find out which lines cost the accuracy, where a format ends early and nobody asked; "" elsewhere."""
     if record.lines is not None or record.reach is None:
-        return []
+        return ""
     last = max((entry.levels[-1].level for entry in record.quantities.values()), default=0)
     ending = [
         clean(arm)
@@ -82,8 +132,8 @@ def line_hint(record: AuditRecord) -> list[RenderableType]:
         if "/" not in arm and (one.level is None or one.level < last)
     ]
     if not ending:
-        return []
-    return [Text(f"The option --lines finds out which lines cost {joined(ending)} {_their(ending)} accuracy.")]
+        return ""
+    return f"The option --lines finds out which lines cost {joined(ending)} {_their(ending)} accuracy."
 
 
 def _their(names: list[str]) -> str:
@@ -91,18 +141,46 @@ def _their(names: list[str]) -> str:
 
 
 def _study(record: AuditRecord, form: str, study: FormatLines) -> list[RenderableType]:
-    if not study.quantities:
-        return [Text(f"No figures on level {study.level}: {clean(study.reason or '')}.")]
+    parts: list[RenderableType] = [Text(study_words(record, form, study))]
+    name = shown_quantity(record, form, study)
+    if name is None:
+        return parts
+    rows: list[tuple[str, float | None]] = []
+    for listing in listings(record, study, name):
+        rows += _rows(listing)
+    if rows:
+        parts.append(Source(rows))
+    return [*parts, *_widenings(form, study)]
+
+
+def _rows(listing: Listing) -> Iterator[tuple[str, float | None]]:
+    if listing.file is None:
+        yield from ((f"({one.text})", one.share) for one in listing.lines)
+        return
+    before = listing.lines[0].line
+    yield f"{clean(listing.file)}, from line {before}", None
+    for one in listing.lines:
+        if before is not None and one.line is not None and one.line > before + 1:
+            yield "    ...", None
+        yield one.text, one.share
+        before = one.line
+
+
+def shown_quantity(record: AuditRecord, form: str, study: FormatLines) -> str | None:
+    """Return the quantity whose shares stand at the source: the one that decides; None where a study has none."""
     decider = record.verdict.finest_paying_level[form].decided_by
-    name = decider if decider in study.quantities else next(iter(study.quantities))
-    found = study.quantities[name]
+    return decider if decider in study.quantities else next(iter(study.quantities), None)
+
+
+def study_words(record: AuditRecord, form: str, study: FormatLines) -> str:
+    """Return what was studied, and to what the shares add up, or why there are none."""
+    name = shown_quantity(record, form, study)
+    if name is None:
+        return f"No figures on level {study.level}: {clean(study.reason or '')}."
     where = f"On level {study.level}, {count(study.steps)} {'step' if study.steps == 1 else 'steps'}, from "
     where += f"{count(study.paths)} paths of every run"
     where += f"; for {clean(name)}, others in lines.csv" if len(study.quantities) > 1 else ""
-    parts: list[RenderableType] = [Text(f"{where}. {_sum_words(found.error)}")]
-    if found.error.total is not None or any(part.error.share is not None for part in found.parts):
-        parts += _sources(record, study, found.parts)
-    return [*parts, *_widenings(form, study)]
+    return f"{where}. {_sum_words(study.quantities[name].error)}"
 
 
 def _sum_words(found: SumEntry) -> str:
@@ -115,30 +193,96 @@ def _sum_words(found: SumEntry) -> str:
     )
 
 
-def _sources(record: AuditRecord, study: FormatLines, parts: list[PartShare]) -> list[RenderableType]:
-    """Return the source of every file with a line that matters, and then the inputs that do."""
+def listings(record: AuditRecord, study: FormatLines, name: str) -> list[Listing]:
+    """Return the source of every file with a line that matters to a quantity, and then the inputs that do."""
     assert record.lines is not None  # it has this study
-    shares = {_key(study.parts[one.part]): one.error.share for one in parts}
-    matter = {key: share for key, share in shares.items() if share is not None and share >= _MATTERS}
-    shown: list[RenderableType] = []
-    rows: list[tuple[str, float | None]] = []
+    matter = {_key(study.parts[place]): share for place, share in _mattering(study.quantities[name]).items()}
+    found = []
     for file, lines in groupby(record.lines.source, key=lambda line: line.file):
-        own = list(lines)
-        if not any((file, line.line) in matter for line in own):
-            continue
-        rows.append((f"{clean(file)}, from line {own[0].line}", None))
-        before = own[0].line
-        for line in own:
-            if line.line > before + 1:
-                rows.append(("    ...", None))
-            rows.append((line.text, matter.get((file, line.line))))
-            before = line.line
-    inputs: list[tuple[str, float | None]] = [
-        (f"({words})", matter[kind, None]) for kind, words in _INPUTS.items() if (kind, None) in matter
+        own = [ListedLine(line.line, line.text, matter.get((file, line.line))) for line in lines]
+        if any(line.share is not None for line in own):
+            found.append(Listing(file, own))
+    inputs = [ListedLine(None, words, matter[kind, None]) for kind, words in _INPUTS.items() if (kind, None) in matter]
+    return [*found, Listing(None, inputs)] if inputs else found
+
+
+def _mattering(found: QuantityLines) -> dict[int, float]:
+    """Return the shares of the error variance that are large enough to be shown, by the place of their part."""
+    shares = {one.part: one.error.share for one in found.parts}
+    return {place: share for place, share in shares.items() if share is not None and share >= _MATTERS}
+
+
+def shares_table(record: AuditRecord, study: FormatLines, name: str) -> Ruled:
+    """Return the parts that matter to a quantity, largest share first, with the intervals of their shares."""
+    found = study.quantities[name]
+    entries, matter = {one.part: one for one in found.parts}, _mattering(found)
+    bounds = f"({confidence(record)} interval)"
+    columns: list[tuple[str, Kind]] = [
+        ("part", "words"),
+        (f"share\n{bounds}", "words"),
+        ("alone", "number"),
+        ("saved", "number"),
     ]
-    if rows or inputs:
-        shown.append(Source([*rows, *inputs]))
-    return shown
+    if coupled := any(one.correction is not None for one in found.parts):
+        columns.append((f"of the correction\n{bounds}", "words"))
+    table = Ruled(*columns, ("operations", "number"))
+    for place in sorted(matter, key=lambda place: -matter[place]):
+        one, part = entries[place], study.parts[place]
+        cells = [_name(part), _share(one.error), _percent(one.error.alone), _percent(one.error.saved)]
+        if coupled:
+            cells.append(NONE if one.correction is None else _share(one.correction))
+        table.add_row(*map(Text, (*cells, percent(part.operations))))
+    return table
+
+
+def _share(one: ShareEntry) -> str:
+    if one.share is None or one.share_low is None or one.share_high is None:
+        return _percent(one.share)
+    return f"{percent(one.share)} ({percent(one.share_low)} to {percent(one.share_high)})"
+
+
+def _percent(share: float | None) -> str:
+    return NONE if share is None else percent(share)
+
+
+def widening_table(form: str, study: FormatLines) -> Ruled:
+    """Return the format as it is, and the sets of parts whose widening makes it pay further."""
+    table = Ruled((f"kept in {clean(study.wide or '')}", "words"), *_PAYS, ("operations\nat wide cost", "number"))
+    for one in [study.plain, *(study.widenings or [])]:
+        if one is not None:
+            named = _named(study, one) if one.parts else f"nothing: {clean(form)} as it is"
+            table.add_row(*map(Text, (named, *_paying(one), percent(one.operations))))
+    return table
+
+
+def what_if_table(study: FormatLines) -> Ruled:
+    """Return how far the format would pay in other arithmetics."""
+    table = Ruled(("with", "words"), *_PAYS)
+    for one in study.what_ifs or ():
+        table.add_row(*map(Text, (clean(one.name), *_paying(one))))
+    return table
+
+
+def _paying(one: PaysEntry) -> tuple[str, str, str]:
+    if one.level is None:
+        return "on no level", NONE, figure(one.step_cost)
+    open_ended = f", perhaps {one.possible}" if one.possible is not None and one.possible > one.level else ""
+    return f"{one.level}{open_ended}", interval(one.gain, one.gain_low, one.gain_high), figure(one.step_cost)
+
+
+def best_widening(form: str, study: FormatLines) -> str:
+    """Return the set that makes the format pay furthest, in words; "" where no set makes it pay further."""
+    if not study.widenings:
+        return ""
+    best = study.widenings[-1]
+    return f"with {_named(study, best)} in {clean(study.wide or '')}, {clean(form)} {_pays(best)}"
+
+
+def widening_note(study: FormatLines) -> str:
+    """Return why no set of parts is named, "" where one is."""
+    if study.plain is None or study.widenings is None:
+        return f"No search for lines to widen: {clean(study.reason or '')}."
+    return "" if study.widenings else f"No few lines that are kept in {clean(study.wide or '')} make it pay further."
 
 
 def _key(part: LineEntry) -> tuple[str | None, int | None]:
@@ -151,7 +295,7 @@ def _widenings(form: str, study: FormatLines) -> list[RenderableType]:
         f"with {clean(one.name)} it {_pays(one)}; a step costs {figure(one.step_cost)}" for one in study.what_ifs or ()
     ]
     if study.plain is None or study.widenings is None:
-        none: list[RenderableType] = [Text(f"No search for lines to widen: {clean(study.reason or '')}.")]
+        none: list[RenderableType] = [Text(widening_note(study))]
         return [*none, *_bulleted([f"{clean(form)} {line}" for line in tried])]
     wide = clean(study.wide or "")
     lines = [f"{clean(form)} as it is {_pays(study.plain)}"]

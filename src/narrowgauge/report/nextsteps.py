@@ -7,7 +7,10 @@ from collections.abc import Iterable
 from msgspec import UnsetType
 
 from narrowgauge.record.audit import AuditRecord
+from narrowgauge.report.branches import branch_alarms
 from narrowgauge.report.canary import canary_alarms
+from narrowgauge.report.domain import refused_corners, scenarios_counted
+from narrowgauge.report.lines import best_widening, line_hint
 from narrowgauge.report.notes import rounded_up
 from narrowgauge.report.settings import assumed_costs, coupled, measured_to, narrow_formats, setting
 from narrowgauge.report.wording import clean, count, joined, levels_named
@@ -19,7 +22,8 @@ def next_steps(record: AuditRecord) -> list[str]:
     """Return what a reader can do about what the audit found; the last one is said of every audit."""
     steps = [*_unsound(record)]
     if not steps:
-        steps = [*_raised(record), *_asked(record), *_undecided(record), *_farther(record), *_run(record)]
+        steps = [*_parting(record), *_raised(record), *_asked(record), *_undecided(record), *_lines(record)]
+        steps += [*_farther(record), *_elsewhere(record), *_run(record)]
     return [
         *steps,
         "Take results that people rely on through your own model validation and change control: this page is evidence, "
@@ -36,6 +40,11 @@ def _unsound(record: AuditRecord) -> Iterable[str]:
     if not isinstance(record.canary, UnsetType) and (found := canary_alarms(record.canary)):
         arms = dict.fromkeys(one.partition(",")[0] for one in found)
         yield f"Build or write the kernel so that it rounds in {joined(arms)} as it claims. Then audit again."
+
+
+def _parting(record: AuditRecord) -> Iterable[str]:
+    if broken := branch_alarms(record):
+        yield f"Make both branches of a split give the same bits, or use no split: {'; '.join(broken)}."
 
 
 def _raised(record: AuditRecord) -> Iterable[str]:
@@ -85,6 +94,31 @@ def _undecided(record: AuditRecord) -> Iterable[str]:
     now = f" (now {count(most)})" if isinstance(most, int) else ""
     rest = "" if len(known) == len(needed) else "; for some of it, how many are enough cannot be told"
     yield f"To settle {what}, raise [sampling] most_paths{enough}{now}{rest}."
+
+
+def _lines(record: AuditRecord) -> Iterable[str]:
+    """Name the lines to widen, or say how to find them."""
+    for form, study in ({} if record.lines is None else record.lines.formats).items():
+        if best := best_widening(form, study):
+            yield f"To use {clean(form)} on more levels, keep its costliest lines wider: {best}."
+    if hint := line_hint(record):
+        yield hint
+
+
+def _elsewhere(record: AuditRecord) -> Iterable[str]:
+    if record.domain is None:
+        return
+    if found := refused_corners(record.domain):
+        most = f" and {count(len(found) - 1)} more" if len(found) > 1 else ""
+        yield (
+            f"Keep to the parameters that are claimed, or audit where the verdict fails: {found[0]}{most} "
+            f"{'are' if most else 'is'} refused."
+        )
+    open_ones = sum(one.outcome == "undecided" for one in record.domain.scenarios)
+    most_paths = setting(record, "domain.most_paths")
+    if open_ones:
+        now = f" (now {count(most_paths)})" if isinstance(most_paths, int) else ""
+        yield f"To settle {scenarios_counted(open_ones)} of [domain] left undecided, raise [domain] most_paths{now}."
 
 
 def _farther(record: AuditRecord) -> Iterable[str]:

@@ -65,6 +65,7 @@ def page(record: AuditRecord) -> str:
 
     from narrowgauge.report import headline
     from narrowgauge.report.blocks import visible
+    from narrowgauge.report.costly import DEPTHS
     from narrowgauge.report.nextsteps import next_steps
     from narrowgauge.report.palette import DARK, LIGHT, SERIES, variables
     from narrowgauge.report.settings import terms
@@ -82,7 +83,7 @@ def page(record: AuditRecord) -> str:
         finalize=lambda value: value if isinstance(value, markupsafe.Markup) else visible(value),
     )
     style = environment.get_template("page.css").render(
-        light=variables(LIGHT), dark=variables(DARK), roles=("ink", "muted", "rule", "paper", *SERIES)
+        light=variables(LIGHT), dark=variables(DARK), roles=("ink", "muted", "rule", "paper", *SERIES), depths=DEPTHS
     )
     digest = base64.b64encode(hashlib.sha256(style.encode()).digest()).decode("ascii")
     return environment.get_template("page.html").render(
@@ -100,29 +101,12 @@ def page(record: AuditRecord) -> str:
     )
 
 
-# What this version of the audit does not measure, until a part of the record holds it.
-_NOT_MEASURED = {
-    "branches": "whether the low branch run alone and the low half of the correction branch give the same bits. Every "
-    "figure of a split takes it for granted that they do.",
-    "lines": "how much of the error variance each line of the source brings.",
-    "range": "the largest and smallest magnitude on each line, and the headroom that a format leaves, in bits.",
-    "averaging": "what summing the paths in each format does to the mean. The figures hold for sums in float64.",
-    "domain": "other parameters than those of the audit file. The verdict holds for these alone, and there is no "
-    "deciding scenario.",
-}
-
 Answer = Callable[[AuditRecord], "list[Block] | str"]
 
 
 def _sections(record: AuditRecord) -> list[Section]:
     """Return the answers in the order in which a person asks."""
-    from narrowgauge.report import behind, sections, worth
-
-    def not_measured(part: str) -> Answer:
-        return lambda record: f"Not measured in this audit: {_NOT_MEASURED[part]}"
-
-    def ranges(record: AuditRecord) -> list[Block]:
-        return [Words(f"Not measured in this audit: {_NOT_MEASURED['range']}", "answer"), *behind.constants(record)]
+    from narrowgauge.report import behind, costly, elsewhere, inside, sections, worth
 
     asked: list[tuple[str, str, str, Answer]] = [
         (
@@ -134,11 +118,11 @@ def _sections(record: AuditRecord) -> list[Section]:
         ("law", "The law of rounding", "Does rounding follow \u03b4\u00b2/h, and which part rules?", sections.law),
         ("schemes", "Schemes and saving", "Which scheme on each level, and what does it save?", worth.schemes),
         ("draws", "Approximate draws", "What do approximate draws cost?", worth.draws),
-        ("branches", "Branches", "Do the branches cancel?", not_measured("branches")),
-        ("lines", "Source lines", "Which lines cost what?", not_measured("lines")),
-        ("range", "Range", "Is there range enough, and headroom?", ranges),
-        ("averaging", "Averaging", "What does averaging in a narrow format do?", not_measured("averaging")),
-        ("domain", "Domain", "Does it hold for other parameters?", not_measured("domain")),
+        ("branches", "Branches", "Do the branches cancel?", inside.branches),
+        ("lines", "Source lines", "Which lines cost what?", costly.source_lines),
+        ("range", "Range", "Is there range enough, and headroom?", inside.ranges),
+        ("averaging", "Averaging", "What does averaging in a narrow format do?", inside.averaging),
+        ("domain", "Domain", "Does it hold for other parameters?", elsewhere.domain),
         ("rounding", "Every operation", "Is every operation rounded?", behind.rounding),
         ("measured", "How it was measured", "How was it measured?", behind.measured),
         ("cautions", "Cautions", "What must be kept in mind?", behind.cautions),

@@ -2,7 +2,10 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+
+from rich.text import Text
 
 from narrowgauge.record.range import (
     LineArmEntry,
@@ -13,9 +16,10 @@ from narrowgauge.record.range import (
     ShiftEntry,
     WatchedEntry,
 )
-from narrowgauge.report.wording import clean, count, figure, joined, levels_named, percent
+from narrowgauge.report.layout import Kind, Ruled
+from narrowgauge.report.wording import NONE, clean, count, figure, joined, levels_named, percent
 
-__all__ = ["range_lines", "watched_on"]
+__all__ = ["Magnitudes", "magnitudes", "range_lines", "range_table", "room_table", "watched_on"]
 
 _LINES = 3  # of each kind
 _LEAST = 1e-2  # a smaller share of a line's results is left to audit.json
@@ -34,7 +38,7 @@ def range_lines(found: WatchedEntry | None) -> list[str]:
     """Return what there is to say of each format, on its worst level; formats without anything to say share a line."""
     if found is None:
         return []
-    arms = list(dict.fromkeys(arm for level in found.levels for arm in level.arms))
+    arms = _arms(found)
     quiet = [arm for arm in arms if _is_quiet(found, arm)]
     lines = [line for arm in arms if arm not in quiet for line in _arm(found, arm)]
     if quiet:
@@ -120,6 +124,82 @@ def _share(one: ShareEntry) -> str:
         return count(one.count)
     low, high = one.share_low or 0.0, 1.0 if one.share_high is None else one.share_high
     return f"{percent(one.share)} ({percent(low)} to {percent(high)})"
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Magnitudes:
+    """The results of one line on all levels that were watched, as exponents of two; None where there is no figure.
+
+    `headroom` has, for each arm, the bits to spare below and above; negative where an end is passed.
+    """
+
+    place: str
+    smallest: int | None
+    largest: int | None
+    headroom: dict[str, tuple[int, int]]
+
+
+def magnitudes(found: WatchedEntry) -> list[Magnitudes]:
+    """Return the magnitudes of each line, in the order of files and lines, all of its operations together."""
+    lines: dict[tuple[str, int], list[LineRangeEntry]] = {}
+    for level in found.levels:
+        for line in level.lines:
+            lines.setdefault((line.file or "", line.line or 0), []).append(line)
+    return [_together(lines[key]) for key in sorted(lines)]
+
+
+def _together(lines: Sequence[LineRangeEntry]) -> Magnitudes:
+    room: dict[str, tuple[int, int]] = {}
+    for line in lines:
+        for arm, own in line.arms.items():
+            if own.headroom_below is not None and own.headroom_above is not None:
+                below, above = room.get(arm, (own.headroom_below, own.headroom_above))
+                room[arm] = (min(below, own.headroom_below), min(above, own.headroom_above))
+    return Magnitudes(
+        place=_place(lines[0]),
+        smallest=min((line.smallest for line in lines if line.smallest is not None), default=None),
+        largest=max((line.largest for line in lines if line.largest is not None), default=None),
+        headroom=room,
+    )
+
+
+def room_table(found: WatchedEntry) -> Ruled:
+    """Return, line by line, the magnitudes of results and the bits that each format leaves below and above them."""
+    arms = _arms(found)
+    columns: list[tuple[str, Kind]] = [(clean(arm), "number") for arm in arms]
+    table = Ruled(("line", "words"), ("smallest", "number"), ("largest", "number"), *columns)
+    for one in magnitudes(found):
+        ends = (NONE if end is None else f"2^{end}" for end in (one.smallest, one.largest))
+        rooms = (f"{one.headroom[arm][0]}, {one.headroom[arm][1]}" if arm in one.headroom else NONE for arm in arms)
+        table.add_row(*map(Text, (one.place, *ends, *rooms)))
+    return table
+
+
+def range_table(found: WatchedEntry) -> Ruled:
+    """Return, by format and level, how many additions are lost and how many results leave the normal numbers."""
+    table = Ruled(
+        ("format", "unbroken"),
+        ("level", "number"),
+        ("lost additions", "words"),
+        ("below the normal numbers", "words"),
+        ("too large", "number"),
+        ("first that is not finite", "words"),
+    )
+    for arm in _arms(found):
+        for level in found.levels:
+            if arm not in level.arms:
+                continue
+            one = level.arms[arm]
+            first = (
+                NONE if one.first_nonfinite is None else f"{_place(one.first_nonfinite)}, {one.first_nonfinite.kind}"
+            )
+            cells = (clean(arm), str(level.level), _share(one.lost), _share(one.below), count(one.overflows), first)
+            table.add_row(*map(Text, cells))
+    return table
+
+
+def _arms(found: WatchedEntry) -> list[str]:
+    return list(dict.fromkeys(arm for level in found.levels for arm in level.arms))
 
 
 def _first(one: NonfiniteEntry) -> str:

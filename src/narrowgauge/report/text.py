@@ -89,12 +89,12 @@ def audit_text(record: AuditRecord, folder: Path | None) -> Group:
     assumed = assumptions(record)
     parts.append(_labelled("Assumed, since the audit file does not say", f"{assumed}." if assumed else "nothing."))
     parts += [Text(), *_heading("Cautions"), *_bullets(record.cautions)]
-    return Group(*parts, Text(), *line_hint(record), *speed_notes(record), *_files(folder, record))
+    return Group(*parts, Text(), *_hint(record), *speed_notes(record), *_files(folder, record))
 
 
 def verdict_text(record: AuditRecord, folder: Path | None) -> Group:
     """Return what is wrong, the verdict in words, and where the files are."""
-    return Group(*_alarms(record), *_verdict(record), *line_hint(record), *speed_notes(record), *_files(folder, record))
+    return Group(*_alarms(record), *_verdict(record), *_hint(record), *speed_notes(record), *_files(folder, record))
 
 
 def trial_text(trial: TrialEntry) -> Group:
@@ -236,6 +236,11 @@ def _domain(record: AuditRecord) -> list[RenderableType]:
 
 def _bounded(levels: Sequence[PlanEntry]) -> list[RenderableType]:
     words = bounded_levels(levels)
+    return [Text(words)] if words else []
+
+
+def _hint(record: AuditRecord) -> list[RenderableType]:
+    words = line_hint(record)
     return [Text(words)] if words else []
 
 
