@@ -96,7 +96,7 @@ def ranges(arms, lines, file=NAMES[0]):
         results = [
             LineRangeEntry(
                 file=file, line=line, operation=name, results=16384, smallest=-12 - line % 7, largest=6 + line % 11,
-                arms=small if line % 9 == 4 else own,
+                arms=small if (line % 9, name) == (4, "multiply") else own,
             )
             for line in range(1, lines + 1)
             for name in ("add", "multiply", "subtract")
