@@ -88,6 +88,20 @@ def test_a_point_that_fails_itself_gives_no_policy(record: AuditRecord) -> None:
         policy(with_domain(record, claimed=None))
 
 
+def test_a_box_without_a_scenario_is_the_audited_point(record: AuditRecord) -> None:
+    """Nothing but the audit itself speaks for it, and a caution says so."""
+    empty = ClaimedEntry(
+        parameters={"volatility": SpanEntry(low=0.25, high=0.35), "strike": SpanEntry(low=1.1, high=1.1)},
+        share=0.0,
+        scenarios=0,
+        levels=[],
+    )
+    document = policy(with_domain(record, claimed=empty))
+    assert {name: one.fixed for name, one in document.domain.parameters.items()} == record.asked["parameters"]
+    assert (document.domain.scenarios, document.domain.failing_below) == (1, None)
+    assert any(one.startswith("No scenario of the domain is known to pass") for one in document.cautions)
+
+
 def test_a_scheme_that_no_scenario_tried_is_not_claimed(record: AuditRecord) -> None:
     """Where the policy would take another scheme than the scenarios tried it takes the reference, and says so."""
     made = with_domain(paying(record))

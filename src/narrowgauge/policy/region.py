@@ -5,12 +5,16 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import replace
 
+import msgspec
+
 from narrowgauge.errors import PolicyError
 from narrowgauge.policy.choice import REFERENCE, Choice, scheme_of
 from narrowgauge.record.domain import ClaimedEntry, DomainEntry, SpanEntry
 from narrowgauge.record.policy import DomainPart, ParameterPart, Plain
 
 __all__ = ["claimed_box", "held_in_box", "single_point"]
+
+_ALONE = "No scenario of the domain is known to pass beside the audited parameters: the policy holds for these alone."
 
 
 def single_point(parameters: Mapping[str, Plain]) -> DomainPart:
@@ -26,7 +30,8 @@ def single_point(parameters: Mapping[str, Plain]) -> DomainPart:
 def claimed_box(entry: DomainEntry, parameters: Mapping[str, Plain]) -> DomainPart:
     """Return the box that an audit's scenarios leave, the other parameters fixed.
 
-    A side of which a single value is left is that value. Raises PolicyError where the audited point itself fails.
+    A side of which a single value is left is that value; a box in which no scenario lies is the audited point. Raises
+    PolicyError where the audited point itself fails.
     """
     claimed = entry.claimed
     if claimed is None:
@@ -34,6 +39,8 @@ def claimed_box(entry: DomainEntry, parameters: Mapping[str, Plain]) -> DomainPa
             "the audited point itself does not pass as a scenario of [domain]; accepted: an audit without [domain], or "
             "with a larger domain.most_paths"
         )
+    if not claimed.scenarios:
+        return msgspec.structs.replace(single_point(parameters), remarks=[_ALONE])
     sides = {name: _side(entry, name, span) for name, span in claimed.parameters.items()}
     fixed = {name: ParameterPart(fixed=value) for name, value in parameters.items() if name not in sides}
     return DomainPart(
