@@ -161,8 +161,8 @@ MISTAKES = {
         ('"output": total / span', '"output": total / (span * 1e-8)'),
         by=("finite", "error variance"),
     ),
-    "reserve: a discount by the number of steps": _of(
-        "reserve", ("math.exp(-rate * span)", "math.exp(-0.1 * steps)"), by=("rmse",)
+    "reserve: interest by the number of steps": _of(
+        "reserve", ("math.exp(-rate * span)", "math.exp(0.05 * steps)"), by=("rmse",)
     ),
     "reserve: a difference of large numbers": _of(
         "reserve",
@@ -205,7 +205,7 @@ MISTAKES = {
         "membrane",
         (
             "        slope = 2.0 / width**2 * y * inside\n",
-            "        slope = (np.exp(-(((y - 0.02) / width) ** 2)) - np.exp(-(((y + 0.02) / width) ** 2))) / 0.04\n",
+            "        slope = (np.exp(-(((y - 0.004) / width) ** 2)) - np.exp(-(((y + 0.004) / width) ** 2))) / 0.008\n",
         ),
         by=("error variance", "gain"),
     ),

@@ -2,7 +2,6 @@
 
 import math
 
-import numpy as np
 import pytest
 from policy_records import policy
 from scipy import stats
@@ -19,33 +18,23 @@ def test_the_quantile_is_students(alpha, dof):
     assert quantile(alpha, dof) == pytest.approx(float(stats.t.ppf(1 - alpha / 2, dof)), abs=left + 1e-4)
 
 
-@pytest.mark.parametrize("events", [3, 10, 40, 400])
-def test_bounds_of_a_variance_that_few_paths_carry_hold(events):
-    """A count of paths with an error of 1: bounds at 1 in 100 miss the truth in at most 2 in 100 of 20,000 samples.
-
-    False alarm: with a true rate of 1.2 in 100 that of a binomial past 2 in 100 is below 1e-20. What is accepted above
-    the nominal rate is that of the square root of a count of three.
-    """
-    paths, reach = 100_000, quantile(0.01, 10**6)
-    counts = np.random.default_rng(7).poisson(events, 20_000)
-    missed = 0
-    for count in counts:
-        variance = count / paths
-        se = math.sqrt(count) / paths
-        bounds = Spread.of(variance, se, float(count), paths, like=1.0).bounds(reach)
-        missed += not bounds.low <= events / paths <= bounds.high
-    assert missed / counts.size <= 0.02
+def bounds_of(events, alpha, carriers):
+    """Bounds of how many events were to be expected, from a count of them, each an error of 1."""
+    return Spread.of(float(events), math.sqrt(events), carriers, 1, like=1.0).bounds(quantile(alpha, 10**6))
 
 
-def test_without_the_count_the_same_bounds_do_not_hold():
-    """Negative control: standard errors of three events alone miss the truth far more often, and after none always."""
-    paths, reach = 100_000, quantile(0.01, 10**6)
-    counts = np.random.default_rng(7).poisson(3, 20_000)
-    missed = 0
-    for count in counts:
-        bounds = Spread.of(count / paths, math.sqrt(count) / paths, None, paths).bounds(reach)
-        missed += not bounds.low <= 3 / paths <= bounds.high
-    assert missed / counts.size > 0.04
+@pytest.mark.parametrize("alpha", [1e-2, 1e-4, 1e-6])
+def test_bounds_of_a_variance_that_few_paths_carry_hold(alpha):
+    """Exact: at either bound so many events, or so few, come with a probability of no more than alpha."""
+    for events in range(1, 300):
+        bounds = bounds_of(events, alpha, float(events))
+        assert stats.poisson.sf(events - 1, bounds.low) <= alpha
+        assert stats.poisson.cdf(events, bounds.high) <= alpha
+
+
+def test_a_standard_error_alone_would_fail_by_chance():
+    """Negative control: one event would pass for a proof of two hundredths of one, which bring it at 2 in 100."""
+    assert stats.poisson.sf(0, bounds_of(1, 1e-4, None).low) > 100 * 1e-4
 
 
 def test_no_event_leaves_what_none_of_so_many_paths_allows():

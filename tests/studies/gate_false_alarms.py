@@ -1,10 +1,10 @@
 """False alarms: gates of unchanged kernels, each with a seed of its own.
 
-Run as a program it writes reports/gate_false_alarms.md: `python tests/studies/gate_false_alarms.py KEPT [GATES]`. The
-reserve example is gated as it is, by the policy beside the examples, and once more on a ladder that ends at level 3
-and with a looser target: that policy takes float16 alone on two levels, so that the bias of float16 is judged, too. A
-gate takes less than a second, all in one process. What is done stands in the file KEPT, one line a gate, and is not
-done again: the same command goes on where it was stopped.
+Run as a program it writes reports/gate_false_alarms.md: `python tests/studies/gate_false_alarms.py KEPT [GATES
+GATES]`. The reserve example is gated as it is, by the policy beside the examples, and once more on a ladder that ends
+at level 3 and with a looser target: that policy takes float16 alone on two levels, so that the bias of float16 is
+judged, too. A gate takes less than a second, all in one process. What is done stands in the file KEPT, one line a
+gate, and is not done again: the same command goes on where it was stopped.
 
 What is asked: a gate is designed to fail for an unchanged kernel at most once in 10,000, so that of 1,000 at most 1 may
 fail; and at most 10 may be inconclusive.
@@ -59,22 +59,23 @@ def may(found: list[dict[str, object]]) -> bool:
 
 def main() -> int:
     """Write the report, and return 1 where more gates fail, or are inconclusive, than may."""
-    kept, number = Path(sys.argv[1]), int(sys.argv[2]) if len(sys.argv) > 2 else GATES
-    seeds = range(FIRST, FIRST + number)
+    kept, numbers = Path(sys.argv[1]), [int(one) for one in sys.argv[2:4]] or [GATES, GATES]
     with tempfile.TemporaryDirectory() as folder:
         audits = {"to level 3": cases.prepared("reserve", Path(folder)), "as it is": EXAMPLE}
-        found = {name: gates(name, audit, seeds, kept) for name, audit in audits.items()}
+        found = {
+            name: gates(name, audit, range(FIRST, FIRST + number), kept)
+            for (name, audit), number in zip(audits.items(), numbers, strict=True)
+        }
     head = (__doc__ or "").strip().split("\n\n")
     lines = ["# False alarms of the gate", "", head[0], "", head[1], "", head[2], ""]
+    lines += [f"Seeds from {FIRST} on. Measured twice: gates in which a claim failed at the first stage.", ""]
     lines += [
-        f"{number:,} gates each, seeds {seeds[0]} to {seeds[-1]}. Measured twice: gates in which a claim failed at "
+        "| reserve example | gates | claims | pass | fail | inconclusive | measured twice | most paths of a level |"
     ]
-    lines += ["the first stage.", ""]
-    lines += ["| reserve example | claims | pass | fail | inconclusive | measured twice | most paths of a level |"]
-    lines += ["|---" * 7 + "|"]
+    lines += ["|---" * 8 + "|"]
     for name, runs in found.items():
         verdicts, paths = Counter(one["verdict"] for one in runs), Counter(int(str(one["paths"])) for one in runs)
-        cells = [runs[0]["claims"], *(verdicts[one] for one in ("pass", "fail", "inconclusive"))]
+        cells = [len(runs), runs[0]["claims"], *(verdicts[one] for one in ("pass", "fail", "inconclusive"))]
         cells += [sum(bool(one["measured twice"]) for one in runs)]
         cells += [", ".join(f"{size:,} in {paths[size]}" for size in sorted(paths))]
         lines += [f"| {name} | {' | '.join(map(str, cells))} |"]
