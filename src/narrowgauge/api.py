@@ -127,11 +127,13 @@ def run_audit(
     watcher: Watcher | None = None,
     tell: Callable[[str], None] | None = None,
     open_levels: Callable[[AuditRecord], Collection[int]] | None = None,
+    watched: bool = True,
 ) -> Audit:
     """Run an audit and write its files into `out`, if given.
 
     With `resume` the blocks that an audit left there are not run again; `tell` hears where that is not as it may be
     thought. The levels that `open_levels` returns of a record draw more paths; without it those that are undecided.
+    `watched`: every number of a few paths is looked at, too.
     Raises AuditFolderError where `out` holds another audit, or an unfinished one that is not resumed, and
     `replace` is false, before anything is measured; KernelError inside another audit.
     """
@@ -156,7 +158,7 @@ def run_audit(
             def rule(so_far: Outcome) -> Collection[int]:
                 return open_levels(account(file, so_far, entry, {}))
 
-        outcome = run(file, kernel, watcher=watcher, engine=engine, ledger=ledger, open_levels=rule)
+        outcome = run(file, kernel, watcher=watcher, engine=engine, ledger=ledger, open_levels=rule, studied=watched)
         resumed = len(ledger.kept) if ledger is not None else 0
         damaged = ledger.damaged if ledger is not None else 0
         domain = explore(file, outcome, engine=engine, ledger=ledger, watcher=watcher)
@@ -342,7 +344,7 @@ def gate_held(held: Held, *, seed: int | None = None, who: Workers) -> GateEntry
             return levels_open(concerned(judge(policy, record, stale=stale), before), levels)
 
         try:
-            record = run_audit(smaller, None, workers=who, open_levels=rule).record
+            record = run_audit(smaller, None, workers=who, open_levels=rule, watched=held.settings.watch).record
         except (KernelError, DispatchError) as problem:
             return held.entry([*findings, stopped(problem)], None, seed=own, paths=paths)
         fresh = judge(policy, record, stale=stale)

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from typing import Any
 
+import msgspec
 import numpy as np
 import pytest
 
@@ -141,3 +142,24 @@ def test_every_set_of_the_best_parts_is_tried() -> None:
     assert some.share((7, 3)) == pytest.approx(0.2)
     few = Candidates(form=some.form, wide=some.wide, items={0: DRAWS}, operations={0: 0.1})
     assert few.sets() == [(), (0,)]
+
+
+def test_sets_are_not_judged_on_the_paths_by_which_they_were_chosen(monkeypatch: pytest.MonkeyPatch) -> None:
+    """No block of the level of the choice is run for it, and again for a verdict."""
+    used: list[tuple[int, int]] = []
+    judged = LineRunner.judged
+
+    def counted(self: LineRunner, level: int, block: int, runs: Any) -> Any:
+        used.append((level, block))
+        return judged(self, level, block, runs)
+
+    monkeypatch.setattr(LineRunner, "judged", counted)
+    file = milstein_file(level=1, paths=4096)
+    small = msgspec.structs.replace(
+        file,
+        ladder=msgspec.structs.replace(file.ladder, finest=1),
+        sampling=msgspec.structs.replace(file.sampling, paths=4096, most_paths=4096, block=1024),
+    )
+    LineStudy(finest={"float16": 0}, factors=1, coupled=True)(Bench(small, find_kernel(small)))
+    assert {level for level, _ in used} == {0, 1}
+    assert len(set(used)) == len(used)

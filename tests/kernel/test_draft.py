@@ -18,7 +18,7 @@ from narrowgauge.kernel.draft import draft
 
 # [library] and [command] are for kernels that are no function in a Python file; [domain] needs a parameter to vary.
 DRAFTED = sorted(key for key in RULES if key.partition(".")[0] not in ("library", "command", "domain"))
-GATE = ("policy.file", "gate.stale", "gate.paths", "gate.most_paths")
+GATE = ("policy.file", "gate.stale", "gate.paths", "gate.most_paths", "gate.watch")
 
 HESTON = '''"""Two factors, every kind of default."""
 

@@ -34,15 +34,15 @@ def test_without_tables_the_policy_lies_beside_the_audit_file(tmp_path):
     """Of its stem; a changed kernel is a note."""
     settings = gate_settings(written(tmp_path))
     assert settings.policy == tmp_path / "plant.policy.json"
-    assert (settings.stale, settings.paths, settings.most_paths) == ("note", 8192, None)
+    assert (settings.stale, settings.paths, settings.most_paths, settings.watch) == ("note", 8192, None, False)
 
 
 def test_what_the_tables_say_is_kept(tmp_path):
     """The policy is relative to the audit file."""
-    more = '[policy]\nfile = "../held.json"\n[gate]\nstale = "fail"\npaths = 2048\nmost_paths = 4096\n'
+    more = '[policy]\nfile = "../held.json"\n[gate]\nstale = "fail"\npaths = 2048\nmost_paths = 4096\nwatch = true\n'
     settings = gate_settings(written(tmp_path, more))
     assert settings.policy == tmp_path / ".." / "held.json"
-    assert (settings.stale, settings.paths, settings.most_paths) == ("fail", 2048, 4096)
+    assert (settings.stale, settings.paths, settings.most_paths, settings.watch) == ("fail", 2048, 4096, True)
 
 
 def test_an_audit_does_not_record_them(tmp_path):
@@ -55,7 +55,13 @@ def test_an_audit_does_not_record_them(tmp_path):
     ("more", "key", "said", "accepted"),
     [
         ('[gate]\nstale = "ignore"\n', "gate.stale", "'ignore' is not accepted", '"note" or "fail"'),
-        ('[gate]\nstael = "note"\n', "gate.stael", 'unknown key, perhaps "stale" is meant', "stale, paths, most_paths"),
+        ("[gate]\nwatch = 1\n", "gate.watch", "1 is not accepted", "a boolean"),
+        (
+            '[gate]\nstael = "note"\n',
+            "gate.stael",
+            'unknown key, perhaps "stale" is meant',
+            "stale, paths, most_paths, watch",
+        ),
         ("[gate]\npaths = 0\n", "gate.paths", "0 is not accepted", "an integer from 1 to 1099511627776"),
         ("[gate]\npaths = true\n", "gate.paths", "True is not accepted", "an integer from 1 to 1099511627776"),
         ("[gate]\nmost_paths = 100\n", "gate.most_paths", "100 is below gate.paths", "an integer of 8192 or more"),
@@ -139,7 +145,7 @@ def test_a_draft_shows_every_key_with_its_default(tmp_path):
     """Behind a #; without it what it shows is accepted, and is what counts anyway."""
     text = "\n".join(GATE_LINES)
     shown = re.findall(r"^# (\w+) = ", text, flags=re.MULTILINE)
-    assert shown == ["file", "stale", "paths", "most_paths"]
+    assert shown == ["file", "stale", "paths", "most_paths", "watch"]
     path = tmp_path / "audit.toml"
     path.write_text(AUDIT + re.sub(r"^# ", "", text, flags=re.MULTILINE), encoding="utf-8")
     given = gate_settings(path)

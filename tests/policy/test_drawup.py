@@ -17,6 +17,7 @@ from narrowgauge.policy.drawup import draw_up, read_audit, write_policy
 from narrowgauge.record.canary import CanaryEntry
 from narrowgauge.record.canonical import DocumentError
 from narrowgauge.record.costs import CostEntry
+from narrowgauge.record.lines import FormatLines, LineEntry, LinesEntry, WideningEntry
 from narrowgauge.record.policy import ParameterPart, policy_text, read_policy, read_policy_text
 
 
@@ -265,3 +266,35 @@ def test_shares_of_lost_additions_and_subnormals(record):
             assert (found.share, found.low, found.high) == (lost.share, lost.share_low, lost.share_high)
             assert found.operations == lost.of > 0
             assert arm.subnormals.share == seen[level.level][name].below.share
+
+
+class TestAdvice:
+    def test_without_a_study_there_is_none(self, record):
+        """The part is left out, of the text as well."""
+        document = policy(record)
+        assert document.advice is UNSET
+        assert '"advice"' not in policy_text(document)
+
+    def test_widened_lines_are_advice_with_the_hash_of_their_source(self, record):
+        """Lines in the order of the source, whether draws are wide, and what the study found of the set."""
+        figures = {"gain": 1.5, "gain_low": 1.4, "gain_high": 1.6, "edge": 0.5, "edge_low": 0.4, "edge_high": 0.6}
+        widening = WideningEntry(parts=[2, 1, 0], operations=0.25, step_cost=0.3125, level=2, possible=3, **figures)
+        parts = [
+            LineEntry(kind="line", file="model.py", line=8, role="payoff", operations=0.125),
+            LineEntry(kind="draws", file=None, line=None, role=None, operations=0.0625),
+            LineEntry(kind="line", file="model.py", line=7, role="state", operations=0.0625),
+        ]
+        study = FormatLines(
+            level=3, steps=32, paths=1024, wide="float32", parts=parts, quantities={}, plain=None,
+            widenings=[widening], what_ifs=None, reason=None,
+        )  # fmt: skip
+        made = changed(record, "lines", to=LinesEntry(formats={"float16": study}, source=[], reason=None))
+        (advice,) = policy(made).advice
+        assert advice.source == policy(made).kernel.raw
+        assert [(one.file, one.line) for one in advice.lines] == [("model.py", 7), ("model.py", 8)]
+        assert (advice.narrow, advice.wide, advice.draws) == ("float16", "float32", True)
+        assert (advice.operations, advice.step_cost, advice.level) == (0.25, 0.3125, 2)
+        assert (advice.gain, advice.gain_low, advice.gain_high) == (1.5, 1.4, 1.6)
+        text = policy_text(policy(made))
+        assert policy_text(read_policy_text(text, "p.json")) == text
+        assert [one.narrow for one in policy(made).levels] == [one.narrow for one in policy(record).levels]

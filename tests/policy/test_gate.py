@@ -278,7 +278,7 @@ def test_a_new_line_where_values_leave_fails_and_one_that_moved_does_not(record,
 def test_a_share_fails_where_its_lower_bound_is_above_one_and_a_quarter_of_the_policys_upper(
     record, held, low, state, names
 ):
-    """Where both have counted; once for all quantities. Records that count stand in for those of a later version."""
+    """Where both have counted; once for all quantities."""
     check, known, fresh = names
     part = SharePart(share=0.008, low=0.006, high=0.01, operations=10**6)
     counted = changed(held, "levels", 2, "measured", "end", "arms", "float16", known, to=part)
@@ -286,11 +286,14 @@ def test_a_share_fails_where_its_lower_bound_is_above_one_and_a_quarter_of_the_p
     share = SimpleNamespace(share=0.013, share_low=low, share_high=0.014)
     arm = SimpleNamespace(**{"lost": none, "below": none, fresh: share})
     levels = [SimpleNamespace(level=2, arms={"float16": arm, "bfloat16": arm})]
-    found = judge(counted, msgspec.structs.replace(record, range=SimpleNamespace(levels=levels)))
+    found = judge(
+        counted, msgspec.structs.replace(record, range=SimpleNamespace(watched=SimpleNamespace(levels=levels)))
+    )
     assert [(one.check, one.level, one.arm, one.state) for one in found if one.check == check] == [
         (check, 2, "float16", state)
     ]
-    assert not [one for one in judge(counted, record) if one.check == check]
+    unwatched = changed(record, "range", "watched", to=None)
+    assert not [one for one in judge(counted, unwatched) if one.check == check]
 
 
 def test_splits_without_a_comparison_of_branches_are_undecided(record, held):

@@ -34,7 +34,7 @@ def reduced(
     """Return the audit that a gate runs: every level, and of the narrow formats those that the policy uses.
 
     `arms` are the names of the arms in the policy. The wide formats stay: edges are measured against them. A policy of
-    the reference alone is tried in the first narrow format.
+    the reference alone is tried in the first narrow format. Scenarios and lines are left out: they are not held.
     """
     used = [Arm.named(name) for name in arms if name != REFERENCE]
     exact = {arm.format for arm in used if arm.exact} - {REFERENCE}
@@ -62,4 +62,6 @@ def reduced(
         draws=draws,
         branches=branches,
         sampling=sampling,
+        domain=None,
+        lines=None,
     )

@@ -44,12 +44,13 @@ class Changed:
 
 
 def on_ladder(
-    file: AuditFile, runner: LineRunner, changes: Mapping[str, Changed], confidence: float
+    file: AuditFile, runner: LineRunner, changes: Mapping[str, Changed], confidence: float, *, skip: int = 0
 ) -> dict[str, list[LevelJudgement]]:
     """Judge changes on one level after the other, each until a level on which it does not pay.
 
     Each level is looked at with sampling.paths, and where a verdict is open with twice and four times as many, up to
-    sampling.most_paths. `confidence` is that of all looks at a change together.
+    sampling.most_paths. `confidence` is that of all looks at a change together. The first `skip` blocks are not used:
+    those by which the changes were chosen.
     """
     judged: dict[str, list[LevelJudgement]] = {name: [] for name in changes}
     alpha = (1 - confidence) / _LOOKS
@@ -59,7 +60,8 @@ def on_ladder(
         tallies: dict[str, LevelTally] = {}
         found: dict[str, LevelJudgement] = {}
         for _ in range(_LOOKS):
-            new = tallies_of(runner, {name: changes[name] for name in open_ones}, level, done=done, paths=paths)
+            asked = {name: changes[name] for name in open_ones}
+            new = tallies_of(runner, asked, level, done=done, paths=paths, skip=skip)
             for name in open_ones:
                 tallies[name] = tallies[name] + new[name] if name in tallies else new[name]
                 found[name] = changes[name].judged(file, tallies[name], alpha)
@@ -77,14 +79,17 @@ def on_ladder(
 
 
 def tallies_of(
-    runner: LineRunner, changes: Mapping[str, Changed], level: int, *, done: int, paths: int
+    runner: LineRunner, changes: Mapping[str, Changed], level: int, *, done: int, paths: int, skip: int = 0
 ) -> dict[str, LevelTally]:
-    """Run the blocks after the first `done`, at least one, that a level lacks to have `paths` paths."""
+    """Run the blocks after the first `done`, at least one, that a level lacks to have `paths` paths.
+
+    Blocks are counted from the one after the first `skip` on.
+    """
     runs = {name: change.run for name, change in changes.items()}
     last = max(math.ceil(paths / runner.paths(level)), done + 1)
     total: dict[str, LevelTally] = {}
     for block in range(done, last):
-        for name, tally in runner.judged(level, block, runs).items():
+        for name, tally in runner.judged(level, skip + block, runs).items():
             total[name] = total[name] + tally if name in total else tally
     return total
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 import linecache
 import math
 from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.conduct.entries import finite
@@ -52,12 +52,13 @@ _FARTHEST = 12  # lines between two that were studied, up to which all of them a
 class LineStudy:
     """What to study: by format the finest level on which it pays; draws a step, and whether levels are coupled.
 
-    A task for a bench, of plain data.
+    `shifts` has by how much the exponents of a format would have to lie higher. A task for a bench, of plain data.
     """
 
     finest: Mapping[str, int | None]
     factors: int
     coupled: bool
+    shifts: Mapping[str, int] = field(default_factory=dict)
 
     def __call__(self, bench: Bench) -> LinesEntry:
         """Run the study; raises what running the kernel raises."""
@@ -65,7 +66,10 @@ class LineStudy:
         if file.kernel.takes == "rng":
             file = with_draws(file, self.factors, "sum" if self.coupled else "none")
         with pinned():
-            studies = {form: _Study(file, bench, form, level) for form, level in self.finest.items()}
+            studies = {
+                form: _Study(file, bench, form, level, shift=self.shifts.get(form, 0))
+                for form, level in self.finest.items()
+            }
             formats = {form: study.entry() for form, study in studies.items()}
         source = _source(file, [study.places for study in studies.values()])
         return LinesEntry(formats=formats, source=source, reason=None)
@@ -78,7 +82,9 @@ def line_study(file: AuditFile, record: AuditRecord) -> LineStudy | None:
     levels = {arm: one.level for arm, one in record.verdict.finest_paying_level.items()}
     named = file.lines.formats or [arm for arm in file.formats.narrow if _stops(levels[arm], file.ladder.finest)]
     chosen = {arm: levels[arm] for arm in named}
-    return LineStudy(finest=chosen, factors=file.kernel.factors, coupled=file.kernel.coupling == "sum")
+    watched = None if record.range is None else record.range.watched
+    shifts = {} if watched is None else {arm: one.exponent for arm, one in watched.shifts.items() if arm in chosen}
+    return LineStudy(finest=chosen, factors=file.kernel.factors, coupled=file.kernel.coupling == "sum", shifts=shifts)
 
 
 def studied(study: LineStudy | None, engine: Engine) -> LinesEntry | None:
@@ -100,11 +106,11 @@ def _stops(level: int | None, finest: int) -> bool:
 class _Study:
     """The study of one format."""
 
-    def __init__(self, file: AuditFile, bench: Bench, form: str, pays_to: int | None) -> None:
+    def __init__(self, file: AuditFile, bench: Bench, form: str, pays_to: int | None, *, shift: int) -> None:
         assert file.lines is not None  # or there is no study
         table: LinesTable = file.lines
         self._file, self._table, self._form, self._pays_to = file, table, FORMATS[form], pays_to
-        self._finest = file.ladder.finest
+        self._finest, self._shift = file.ladder.finest, shift
         first_refused = 0 if pays_to is None else min(pays_to + 1, self._finest)
         self.level = first_refused if table.level is None else table.level
         self._wide = table.wide or _next_wider(file, form)
@@ -249,7 +255,7 @@ class _Study:
         tried = None
         if self._table.what_ifs:
             wide = None if self._wide is None else FORMATS[self._wide]
-            tried = what_ifs(self._file, self._runner, self._form, wide, self._sums)
+            tried = what_ifs(self._file, self._runner, self._form, wide, self._sums, shift=self._shift)
         return FormatLines(
             level=self.level,
             steps=self._file.ladder.steps(self.level),

@@ -7,6 +7,7 @@
 | flushed subnormals  | a subnormal result is a zero                                                | as narrow   |
 | carried errors      | x = x + e carries the error of the addition, which joins e a step later     | as narrow   |
 | wide increments     | all but the additions x = x + e is wide; e is converted to the format once  | as computed |
+| exponents higher    | all exponents of the format lie so much higher or lower (values are scaled) | as narrow   |
 
 The further operations of carried errors are not charged, nor what a machine may ask for random numbers.
 """
@@ -17,6 +18,7 @@ from collections.abc import Mapping
 
 from narrowgauge.arithmetic.arithmetic import Arithmetic
 from narrowgauge.arithmetic.formats import Format
+from narrowgauge.arithmetic.indouble import InDouble
 from narrowgauge.arithmetic.stochastic import Stochastic
 from narrowgauge.conduct.laddered import Changed, on_ladder, pays_fields
 from narrowgauge.dispatch.byline import Widths
@@ -29,12 +31,18 @@ __all__ = ["what_ifs"]
 
 
 def what_ifs(
-    file: AuditFile, runner: LineRunner, form: Format, wide: Format | None, sums: Mapping[Operation, float]
+    file: AuditFile,
+    runner: LineRunner,
+    form: Format,
+    wide: Format | None,
+    sums: Mapping[Operation, float],
+    *,
+    shift: int = 0,
 ) -> list[WhatIfEntry]:
     """Return how far a narrow format pays in each what-if.
 
-    `sums` are the additions to the state with their shares of all operations; without any the last two what-ifs are
-    left out. Raises what running the kernel raises.
+    `sums` are the additions to the state with their shares of all operations; without any, carried errors and wide
+    increments are left out. So are exponents shifted by no power of two. Raises what running the kernel raises.
     """
     changes = {name: _narrow(file, form, variant) for name, variant in _variants(file, form).items()}
     if sums:
@@ -45,6 +53,11 @@ def what_ifs(
             cost = share * file.costs.step(form.name) + (1 - share) * file.costs.step(wide.name)
             run = Widths(rest=wide, at=dict.fromkeys(sums, form), converts=True)
             changes["wide increments"] = Changed(form=form.name, run=run, step_cost=cost)
+    if shift:
+        moved = form.shifted(shift)
+        changes[f"exponents {abs(shift)} {'higher' if shift > 0 else 'lower'}"] = _narrow(
+            file, form, Variant(make=lambda level, block: InDouble(moved))
+        )
     confidence = 1 - (1 - file.sampling.confidence) / len(changes)
     judged = on_ladder(file, runner, changes, confidence)
     return [

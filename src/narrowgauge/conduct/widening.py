@@ -9,6 +9,7 @@ those that are best at their cost each level of the ladder is judged.
 from __future__ import annotations
 
 import itertools
+import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
@@ -67,12 +68,13 @@ def searched(
 ) -> tuple[WideningEntry, list[WideningEntry]]:
     """Return the format as it is, and the sets that pay further than it, from cheapest to best.
 
-    The first choice is made on `paths` paths of one `level`. Raises what running the kernel raises.
+    The first choice is made on `paths` paths of one `level`, the verdicts rest on others: the best of many sets looks
+    better than it is where it was found. Raises what running the kernel raises.
     """
     chosen = _promising(file, runner, candidates, level, paths)
     changes = {str(parts): candidates.changed(file, parts) for parts in chosen}
     confidence = 1 - (1 - file.sampling.confidence) / len(chosen)
-    judged = on_ladder(file, runner, changes, confidence)
+    judged = on_ladder(file, runner, changes, confidence, skip=math.ceil(paths / runner.paths(level)))
     plain, *entries = [
         WideningEntry(
             parts=list(parts),

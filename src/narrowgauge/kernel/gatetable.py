@@ -38,6 +38,7 @@ _ROWS: Final = {
     "gate.stale": _Row(accepted='"note" or "fail"', holds=lambda v: v in ("note", "fail")),
     "gate.paths": _Row(accepted=f"an integer from 1 to {_MOST}", holds=_count),
     "gate.most_paths": _Row(accepted=f"an integer from gate.paths to {_MOST}", holds=_count),
+    "gate.watch": _Row(accepted="a boolean", holds=lambda v: type(v) is bool),
 }
 # What a draft says of them.
 GATE_LINES: Final = (
@@ -48,6 +49,7 @@ GATE_LINES: Final = (
     '# stale = "note"  # what a kernel is that changed and still holds, or "fail"',
     f"# paths = {_PATHS}  # paths of a level at the gate's first look",
     "# most_paths = 1048576  # the most that a level gets; the default is sampling.most_paths",
+    "# watch = false  # true: lost additions and subnormals are counted and held to the policy's, too",
 )
 _TABLES = tuple(dict.fromkeys(key.partition(".")[0] for key in _ROWS))
 
@@ -57,13 +59,15 @@ class GateSettings:
     """Where the policy stands, and how the gate is held.
 
     `stale` says what a policy is whose kernel changed and still holds. A level gets `paths` at the first look, twice
-    that at the next, up to `most_paths` (None: sampling.most_paths, or `paths` where that is less).
+    that at the next, up to `most_paths` (None: sampling.most_paths, or `paths` where that is less). With `watch` every
+    number of a few paths is looked at.
     """
 
     policy: Path
     stale: Literal["note", "fail"] = "note"
     paths: int = _PATHS
     most_paths: int | None = None
+    watch: bool = False
 
 
 def refusal_of(raw: Mapping[str, object]) -> tuple[str, str, str] | None:

@@ -24,6 +24,7 @@ from narrowgauge.kernel.audittables import (
     TargetTable,
 )
 from narrowgauge.measure.moments import BATCHES
+from narrowgauge.policy.advice import advised
 from narrowgauge.policy.cautions import cautions, unseen
 from narrowgauge.policy.choice import REFERENCE, Choice, chosen
 from narrowgauge.policy.plan import replanned
@@ -146,6 +147,7 @@ class _Draft:
             evidence=self._evidence(),
             assumed={key: _looked_up(record.asked, key) for key in _texts(record.asked["assumed"])},
             cautions=cautions(record, self._choices, domain),
+            **({"advice": advice} if (advice := advised(record)) else {}),
         )
 
     def _asked(self, kind: type[_Table]) -> _Table:

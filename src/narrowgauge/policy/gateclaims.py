@@ -6,7 +6,7 @@ import functools
 import math
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
-from typing import Any, Final
+from typing import Final
 
 from narrowgauge.policy.gatefigures import (
     REFERENCE,
@@ -194,8 +194,9 @@ class _Level:
 
     def shares(self) -> Iterator[Claim]:
         """Yield the claims on lost additions and subnormals of each arm, where policy and record have counted them."""
-        counted = getattr(self._record.range, "levels", ())  # records of this version count none
-        watched: Mapping[str, Any] = next((one.arms for one in counted if one.level == self._level.level), {})
+        seen = None if self._record.range is None else self._record.range.watched
+        levels = [] if seen is None else seen.levels
+        watched = next((one.arms for one in levels if one.level == self._level.level), {})
         for arm in (one for one in arms_of(self._plan) if one in watched and one in self._measured.arms):
             part, entry = self._measured.arms[arm], watched[arm]
             for check, known, fresh in _SHARES:

@@ -23,6 +23,7 @@ from narrowgauge.record.reading import converted, shown, text_of
 __all__ = [
     "LARGEST",
     "SCHEMA",
+    "AdvicePart",
     "ArmPart",
     "CostPart",
     "DomainPart",
@@ -33,6 +34,7 @@ __all__ = [
     "LawPart",
     "LawsPart",
     "LevelPart",
+    "LinePart",
     "MachinePart",
     "MeasuredPart",
     "ParameterPart",
@@ -291,8 +293,36 @@ class EvidencePart(Entry, frozen=True, kw_only=True):
     allowed_escapes: list[LineCount]
 
 
+class LinePart(Entry, frozen=True, kw_only=True):
+    """One line of the kernel's source."""
+
+    file: str
+    line: Number
+
+
+class AdvicePart(Entry, frozen=True, kw_only=True):
+    """Lines that, kept in the format `wide`, have `narrow` pay to a finer `level`, and whether the draws are, too.
+
+    Lines are those of the source with the raw hash `source`. No level of the policy is run so: the kernel would have to
+    be changed first, and audited anew. `operations` is the share charged at the wide cost; gains are those of `level`
+    at the parameters that the audit file names.
+    """
+
+    source: Digest
+    narrow: FormatName
+    wide: FormatName
+    lines: list[LinePart]
+    draws: bool
+    operations: Share
+    step_cost: NotNegative
+    level: LevelNumber
+    gain: float | None
+    gain_low: float | None
+    gain_high: float | None
+
+
 class PolicyDocument(Entry, frozen=True, kw_only=True):
-    """One policy: `levels` holds one entry for each level of the ladder, coarsest first."""
+    """One policy: `levels` has one entry for each level, coarsest first; `advice` is there where there is any."""
 
     schema: Literal["narrowgauge-policy/1"]
     written_by: str
@@ -310,6 +340,7 @@ class PolicyDocument(Entry, frozen=True, kw_only=True):
     evidence: EvidencePart
     assumed: dict[str, Plain]
     cautions: list[str]
+    advice: list[AdvicePart] | UnsetType = UNSET
 
     def __post_init__(self) -> None:
         if [one.level for one in self.levels] != list(range(self.ladder.finest + 1)):
