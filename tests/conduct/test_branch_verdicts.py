@@ -6,10 +6,12 @@ import io
 from pathlib import Path
 from typing import Any
 
-from branch_cases import PAIR, PATH, audit_file, defective
+import pytest
+from branch_cases import PAIR, PATH, audit_file, checked, defective
 from rich.console import Console
 
 from narrowgauge.api import audit, run_audit
+from narrowgauge.conduct.branches import broken_splits
 from narrowgauge.measure.workers import Workers
 from narrowgauge.record.audit import AuditRecord
 from narrowgauge.record.canonical import read_strict
@@ -137,6 +139,30 @@ def test_numpys_own_sum_is_named_in_the_alarm(tmp_path: Path) -> None:
     assert "hand both branches their draws in the same order." in alone
 
 
+BY_DESCENT = """import numpy as np
+
+def path(dW, h):
+    mixed = np.einsum("psf,gf->psg", dW, np.eye(3, dtype=dW.dtype))
+    return np.exp(mixed).mean(axis=(1, 2))
+
+def correction(draws, h):
+    low, high = draws if isinstance(draws, tuple) else (draws, draws)
+    return path(low, h), path(high, h)
+"""
+
+
+@pytest.mark.parametrize("rounds", ["", '"itself"'])
+def test_an_operand_that_lies_as_the_draws_do_by_descent_is_numpys_own(tmp_path: Path, rounds: str) -> None:
+    """A mean over two axes of a product that keeps the layout of the draws: nothing to hold against one function."""
+    formats = {"narrow": '["float16", "float32"]', "wide": '["float64"]'}
+    kernel = {"rounds": rounds, "factors": "3", "layout": '"paths, steps, factors"'}
+    for branches in (None, {"correction": '"kernel.py:correction"'}):
+        entry = checked(tmp_path, BY_DESCENT, kernel=kernel, formats=formats, branches=branches)
+        assert {one.arm for one in entry.mismatches} == {"float32"}
+        assert all(one.condition == "layout" and one.numpys_own for one in entry.mismatches)
+        assert broken_splits(entry, 1) == ({"float32"} if branches else set())
+
+
 def test_branches_that_agree_take_one_line(tmp_path: Path) -> None:
     """Nothing is said first, and the record has what was compared."""
     record = audited(tmp_path, PATH + PAIR, "0.002")
@@ -149,3 +175,14 @@ def test_branches_that_agree_take_one_line(tmp_path: Path) -> None:
         "paths a call, in 4 memory layouts, in 2 threads at once, repeated and with other draws on 3 paths, which must "
         "not show on the rest." in text
     )
+
+
+def test_a_correction_that_raises_is_said_first(tmp_path: Path) -> None:
+    """No split of the format is used, and the kernel itself raised nowhere."""
+    source = PATH + "\ndef correction(draws, h):\n    raise ArithmeticError('no high part yet')\n"
+    record = audited(tmp_path, source, "0.002")
+    assert {reason for _, reason in verdicts(record)} == {"branches"}
+    text = shown(record)
+    alarm = "float16: no split is used on any level, since a branch raised: level 0, arm float16: ArithmeticError"
+    assert alarm in text[: text.index("Words of the tables")]
+    assert "a branch raises in every format that a split could use" in text

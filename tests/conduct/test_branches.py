@@ -7,8 +7,10 @@ from pathlib import Path
 import pytest
 from branch_cases import OWN_DEFECTS, PAIR, PATH, audit_file, checked, defective, entry_for, lines
 
-from narrowgauge.conduct.branches import broken_splits
+from narrowgauge.conduct.branches import branches_entry, broken_splits
 from narrowgauge.errors import KernelError
+from narrowgauge.kernel.loading import find_kernel
+from narrowgauge.measure.block import BlockRunner
 
 EMULATED = {"kernel": {"rounds": ""}, "branches": {"correction": '"kernel.py:correction"'}}
 ORDERED = """
@@ -155,7 +157,7 @@ def test_a_correction_that_raises_in_a_format_ends_its_splits(tmp_path: Path) ->
 
 def test_a_correction_that_returns_no_pair_is_refused(tmp_path: Path) -> None:
     """With what it returned, and what is accepted."""
-    with pytest.raises(KernelError, match=r"the correction returned a ndarray; accepted: a pair, its low and its high"):
+    with pytest.raises(KernelError, match=r"the correction returned one array; accepted: a pair, its low and its high"):
         checked(tmp_path, PATH + "\ndef correction(draws, h):\n    return path(draws[0], h)\n")
 
 
@@ -193,3 +195,17 @@ def test_a_finding_is_a_function_of_the_audit_file(tmp_path: Path) -> None:
     source, _ = defective("reordered sum")
     file = audit_file(tmp_path, source)
     assert entry_for(file) == entry_for(file)
+
+
+@pytest.mark.parametrize(("quick", "paths"), [(True, 1024), (False, 3072)])
+def test_no_more_paths_are_compared_than_asked(tmp_path: Path, quick: bool, paths: int) -> None:
+    """A block larger than what is asked is not run whole: a trial is one of 1,024 paths."""
+    sampling = {"block": "16384", "paths": "16384", "most_paths": "16384"}
+    asked = {"correction": '"kernel.py:correction"', "paths": "2500"}
+    file = audit_file(
+        tmp_path, PATH + PAIR, branches=asked, sampling=sampling, ladder={"horizon": "0.7", "finest": "1"}
+    )
+    kernel = find_kernel(file)
+    entry = branches_entry(file, kernel, BlockRunner(file, kernel), quick=quick)
+    assert entry is not None
+    assert {one.paths for one in entry.tried} == {paths}

@@ -9,7 +9,7 @@ import numpy as np
 from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.conduct.branchcauses import Case, Run
 from narrowgauge.draws.coarsen import Draws
-from narrowgauge.draws.streams import Purpose
+from narrowgauge.draws.streams import GRAIN, Purpose, apart
 from narrowgauge.draws.tape import Tape
 from narrowgauge.errors import KernelError
 from narrowgauge.judge.branches import Doubles, differs, ulps
@@ -79,10 +79,13 @@ class Comparer:
         return Run(source=self.sources[side], arm=self.arm, wide=self.wide, level=level, rows=self.rows)
 
     def level(self, level: int, paths: int) -> dict[str, Mismatch]:
-        """Compare whole blocks of a level, at least so many paths, and return what each quantity differs by."""
+        """Compare blocks of a level, at least so many paths, and return what each quantity differs by."""
         found: dict[str, Mismatch] = {}
-        for block in range(-(-paths // self._runner.paths(level))):
-            draws = self._runner.draws(level, block, Purpose.BRANCHES)
+        ladder = self.sources[0].file.ladder
+        size = min(self._runner.paths(level), -(-paths // GRAIN) * GRAIN)
+        size = apart(size, ladder.steps(level), ladder.refinement)
+        for block in range(-(-paths // size)):
+            draws = self._runner.draws(level, block, Purpose.BRANCHES, size)
             pairs = self._pairs(draws, level)
             low, correction = pairs[0]
             for other in (correction, *(one for pair in pairs[1:] for one in pair)):

@@ -276,8 +276,9 @@ class _Check:
     def _varied(self, run: Run, found: Found) -> MismatchEntry:
         """Return what a condition changes.
 
-        NumPy's own differences break a claim about float32 and float64 alone. Those of another layout break it where
-        two functions are named, which need not get their draws in the same one, and nowhere else.
+        NumPy's own differences break a claim where NumPy's arithmetic is the one that runs: in float32, and in a
+        function that rounds for itself. Those of another layout break it where two functions are named, which need not
+        get their draws in the same one, and nowhere else.
         """
         one = Mismatch()
         size = found.before.size - found.before.size % 32  # moments go by 32 batches
@@ -290,7 +291,8 @@ class _Check:
         differ = differs(found.before, found.after)
         one.apart = [ulps(found.before[differ], found.after[differ], FORMATS[run.arm])]
         kept = found.condition == "layout" and not self._named
-        concerned = not found.numpys_own or (FORMATS[run.arm].native and not kept)
+        numpy_computes = FORMATS[run.arm].native or run.source.rounds == "itself"
+        concerned = not found.numpys_own or (numpy_computes and not kept)
         splits = "within budget" if within(self._file, {found.quantity: interval}) else "not admissible"
         return self._mismatch(
             (run.arm, run.level, found.quantity),

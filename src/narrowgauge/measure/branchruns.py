@@ -26,7 +26,7 @@ from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.arithmetic.rounding import Floats
 from narrowgauge.dispatch.copies import Maker, PrivateCopy, new_setting
 from narrowgauge.dispatch.looser import LooserSetting, Manner
-from narrowgauge.dispatch.setting import Observer
+from narrowgauge.dispatch.setting import Observer, Wrapped
 from narrowgauge.draws.coarsen import Draws, coarse_draws, fine_draws
 from narrowgauge.draws.tape import Tape
 from narrowgauge.errors import KernelError, said
@@ -263,7 +263,10 @@ class _Picked:
         given = draws if self._wider is None else (draws, self._wider.beside(draws))
         found = self.__wrapped__(given, h, *placed, **keywords)
         if not isinstance(found, tuple | list) or len(found) != 2:
-            what = f"{len(found)} results" if isinstance(found, tuple | list) else described(found)
+            if isinstance(found, Wrapped | np.ndarray):
+                what = "one array"
+            else:
+                what = f"{len(found)} results" if isinstance(found, tuple | list) else described(found)
             raise KernelError(
                 f"the correction returned {what}; accepted: a pair, its low and its high part, each an array of shape "
                 "(paths,) or a mapping of names to such arrays"

@@ -20,7 +20,7 @@ _MOST = 12  # mismatches that are shown
 def branch_summary(entry: BranchesEntry) -> str:
     """Return what was tried and whether it all agreed."""
     if not entry.tried:
-        return "not compared: the kernel raises in every format that a split could use."
+        return "not compared: a branch raises in every format that a split could use."
     found = "all bits agree" if not entry.mismatches else "they do not agree"
     what = "the kernel is both"
     if any(one.paths for one in entry.tried):
@@ -63,6 +63,11 @@ def branch_alarms(record: AuditRecord) -> list[str]:
         where = "any level" if everywhere else levels_named(one.level for one in found)
         why = joined(dict.fromkeys(map(_reason, found)))
         lines.append(f"{clean(arm)}: no split is used on {where}, since {why}")
+    if entry.low != entry.correction:  # else the kernel raises as such, which is said anyway
+        lines += [
+            f"{clean(arm)}: no split is used on any level, since a branch raised: {clean(what)}"
+            for arm, what in entry.raised.items()
+        ]
     return lines
 
 
@@ -87,8 +92,8 @@ def _tried(entry: BranchesEntry) -> Iterable[str]:
         if levels:
             compared.setdefault(levels, []).append(clean(arm))
     for levels, arms in compared.items():
-        most = max(one.paths for one in entry.tried)
-        yield f"{joined(arms)} on {levels_named(levels)}, at least {count(most)} paths each"
+        least = min(one.paths for one in entry.tried if one.arm in arms and one.level in levels)
+        yield f"{joined(arms)} on {levels_named(levels)}, at least {count(least)} paths each"
     varied = [one for one in entry.tried if one.varied]
     conditions: dict[str, list[TriedEntry]] = {}
     for one in varied:
@@ -111,7 +116,8 @@ def _grouped(mismatches: Sequence[MismatchEntry]) -> list[tuple[MismatchEntry, i
 
 
 def _alike(further: int) -> str:
-    return f" {count(further)} further {'tries' if further > 1 else 'try'} of that kind differ, too." if further else ""
+    what = "tries of that kind differ" if further > 1 else "try of that kind differs"
+    return f" {count(further)} further {what}, too." if further else ""
 
 
 def _conditions(one: TriedEntry) -> str:
@@ -155,7 +161,7 @@ def _condition(one: MismatchEntry) -> str:
     where = "" if one.function is None else f" in {clean(one.function)}"
     if one.condition == "influence":
         return f"{where} because {clean(one.detail)}: paths influence one another"
-    return f"{where} with {clean(one.detail)}"
+    return f"{where} with {'draws in memory ' if one.condition == 'layout' else ''}{clean(one.detail)}"
 
 
 def _where(where: WhereEntry) -> str:
