@@ -74,6 +74,23 @@ def test_the_claimed_box_takes_its_place(record: AuditRecord) -> None:
     assert "Scenarios that do not pass leave 72.7% of the box that was asked for." in document.cautions
 
 
+@pytest.mark.parametrize("span", [SpanEntry(low=1.1, high=1.1), SpanEntry(low=1.1, high=1.2)])
+def test_without_a_scenario_in_what_is_left_it_is_the_audited_point(record: AuditRecord, span: SpanEntry) -> None:
+    """Where all scenarios fail, or what they leave holds none that passes, no box is claimed; a caution says so."""
+    sides = {"volatility": SpanEntry(low=0.3, high=0.3), "strike": span}
+    document = policy(with_domain(record, claimed=replace(CLAIMED, parameters=sides, share=0.0, scenarios=0)))
+    assert {name: one.fixed for name, one in document.domain.parameters.items()} == record.asked["parameters"]
+    assert (document.domain.scenarios, document.domain.failing_below) == (1, None)
+    assert any(one.endswith("only the audited point is claimed.") for one in document.cautions)
+    assert not any("Paths are planned" in one for one in document.cautions)
+
+
+def test_the_paths_of_a_box_are_those_of_the_audited_point(record: AuditRecord) -> None:
+    """A caution says so: another variance has another error, and no scenario was planned for."""
+    assert any("planned from the variances at the audited point" in one for one in policy(with_domain(record)).cautions)
+    assert not any("planned from the variances at the audited point" in one for one in policy(record).cautions)
+
+
 def test_a_box_that_passes_whole_says_nothing_of_refusals(record: AuditRecord) -> None:
     """Neither is a share of what fails named that is not known."""
     whole = replace(CLAIMED, share=1.0)
