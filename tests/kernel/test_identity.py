@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import functools
 import importlib.util
 import subprocess
@@ -98,6 +99,18 @@ class TestOrigin:
         found = find_kernel(audit_file_from(mapping)).origin()
         assert (found.covers, found.fingerprint) == ("code", fingerprint({}, space["value"]))
         assert identity(space["value"], covers="code", modules=()) == found.fingerprint
+
+    def test_draws_of_ones_own_are_no_part_of_it(self):
+        """A kernel without a file is known again although its audit made normals with a function of the user's."""
+        space = {"__name__": "typed_in"}
+        exec("def value(dW, h):\n    return dW.sum(0)\ndef normals(u):\n    return u", space)
+        kernel = {"run": space["value"], "takes": "increments"}
+        mapping = {"kernel": kernel, "ladder": {"horizon": 1.0, "finest": 1}}
+        found = find_kernel(audit_file_from(mapping))
+        other = find_kernel(audit_file_from({**mapping, "kernel": {**kernel, "run": space["normals"]}}))
+        with_draws = dataclasses.replace(found, approximation=other)
+        assert with_draws.digest() != found.digest()
+        assert with_draws.origin() == found.origin()
 
 
 class TestIdentity:

@@ -7,16 +7,19 @@ import math
 
 import pytest
 from msgspec import UNSET
-from policy_records import AUDIT, KERNEL, LEVELS, changed, judged, policy, run
+from msgspec.structs import fields
+from policy_records import AUDIT, KERNEL, LEVELS, changed, judged, paying, policy, run
 from scipy import stats
 
 from narrowgauge import __version__
 from narrowgauge.errors import PolicyError
 from narrowgauge.kernel.identity import identity_of
 from narrowgauge.policy.drawup import draw_up, read_audit, write_policy
+from narrowgauge.record.branches import MismatchEntry
 from narrowgauge.record.canary import CanaryEntry
 from narrowgauge.record.canonical import DocumentError
 from narrowgauge.record.costs import CostEntry
+from narrowgauge.record.draws import DrawsEntry
 from narrowgauge.record.lines import FormatLines, LineEntry, LinesEntry, WideningEntry
 from narrowgauge.record.policy import ParameterPart, policy_text, read_policy, read_policy_text
 
@@ -114,6 +117,12 @@ class TestContents:
             steps = ("quantities", name, "levels", 1)
             made = changed(made, *steps, "arms", to=level.arms | more)
             made = changed(made, *steps, "corrections", to=level.corrections | pair)
+        draws = DrawsEntry(
+            approximate="linear", cells=None, intervals=8, degree=1, mean=0.0, variance=1.0, mean_square_error=1e-4
+        )
+        said = "Approximate draws, on level 1, are those of the audit alone: linear, intervals = 8, degree = 1."
+        assert said in policy(changed(made, "draws", to=draws)).cautions
+        assert said not in policy(changed(record, "draws", to=draws)).cautions
         one = policy(made).levels[1]
         assert (one.narrow, one.wide, one.draws, one.edge_low) == (
             "float16",
@@ -166,6 +175,24 @@ class TestCautions:
             found.count("In float16 the kernel does not round: what is said of that format is said of what was run.")
             == 1
         )
+
+    def test_branches_that_differ_within_the_budget(self, record):
+        """Where a split is used although its branches are not the same bits, that is said; elsewhere it is not."""
+        mismatch = {one.name: None for one in fields(MismatchEntry)}
+        mismatch |= {"arm": "float16", "level": 1, "splits": "within budget"}
+        made = changed(paying(record), "branches", "mismatches", to=[MismatchEntry(**mismatch)])
+        assert made.verdict.schemes[1].kind == "split"
+        said = "The two branches of the split on level 1 are not the same bits"
+        assert [one.startswith(said) for one in policy(made).cautions].count(True) == 1
+        for steps, to in ((("splits",), "not concerned"), (("arm",), "bfloat16")):
+            other = changed(made, "branches", "mismatches", 0, *steps, to=to)
+            assert not any("are not the same bits" in one for one in policy(other).cautions)
+
+    def test_branches_in_other_files(self, record):
+        """The fingerprint does not cover a branch in a file of its own."""
+        assert not any("branches" in one for one in policy(record).kernel.unseen)
+        other = changed(record, "branches", "low", to="fast.py:value")
+        assert any("the branches fast.py:value and" in one for one in policy(other).kernel.unseen)
 
     def test_a_discretisation_error_past_the_target(self, record):
         """The target does not count what the finest level leaves; where that is more it is said."""

@@ -123,7 +123,7 @@ class TestOutside:
             ),
             (1, [1, 1.0], [True, np.True_]),
             (0.0, [0, -0.0], [False, None, ""]),
-            (2**53 + 1, [2**53 + 1, np.int64(2**53 + 1)], [2**53, float(2**53)]),
+            (2**53 + 1, [2**53 + 1, np.int64(2**53 + 1)], [2**53, float(2**53), np.float64(2**53)]),
             (True, [True, np.True_], [1, 1.0, False, "True"]),
             ("euler", ["euler", np.str_("euler")], ["Euler", b"euler", 0, ["euler"]]),
             ([1, 2], [[1, 2], (1.0, 2.0), np.array([1, 2])], [[1], [1, 2, 3], [1, math.nan], np.array([[1, 2]]), 1]),

@@ -74,6 +74,23 @@ def test_the_claimed_box_takes_its_place(record: AuditRecord) -> None:
     assert "Scenarios that do not pass leave 72.7% of the box that was asked for." in document.cautions
 
 
+@pytest.mark.parametrize("span", [SpanEntry(low=1.1, high=1.1), SpanEntry(low=1.1, high=1.2)])
+def test_without_a_scenario_in_what_is_left_it_is_the_audited_point(record: AuditRecord, span: SpanEntry) -> None:
+    """Where all scenarios fail, or what they leave holds none that passes, no box is claimed; a caution says so."""
+    sides = {"volatility": SpanEntry(low=0.3, high=0.3), "strike": span}
+    document = policy(with_domain(record, claimed=replace(CLAIMED, parameters=sides, share=0.0, scenarios=0)))
+    assert {name: one.fixed for name, one in document.domain.parameters.items()} == record.asked["parameters"]
+    assert (document.domain.scenarios, document.domain.failing_below) == (1, None)
+    assert any(one.endswith("only the audited point is claimed.") for one in document.cautions)
+    assert not any("Paths are planned" in one for one in document.cautions)
+
+
+def test_the_paths_of_a_box_are_those_of_the_audited_point(record: AuditRecord) -> None:
+    """A caution says so: another variance has another error, and no scenario was planned for."""
+    assert any("planned from the variances at the audited point" in one for one in policy(with_domain(record)).cautions)
+    assert not any("planned from the variances at the audited point" in one for one in policy(record).cautions)
+
+
 def test_a_box_that_passes_whole_says_nothing_of_refusals(record: AuditRecord) -> None:
     """Neither is a share of what fails named that is not known."""
     whole = replace(CLAIMED, share=1.0)
@@ -86,20 +103,6 @@ def test_a_point_that_fails_itself_gives_no_policy(record: AuditRecord) -> None:
     """There is no box to claim, and the point alone would be claimed against what the scenarios showed."""
     with pytest.raises(PolicyError, match=r"^audit: no policy: the audited point itself does not pass as a scenario"):
         policy(with_domain(record, claimed=None))
-
-
-def test_a_box_without_a_scenario_is_the_audited_point(record: AuditRecord) -> None:
-    """Nothing but the audit itself speaks for it, and a caution says so."""
-    empty = ClaimedEntry(
-        parameters={"volatility": SpanEntry(low=0.25, high=0.35), "strike": SpanEntry(low=1.1, high=1.1)},
-        share=0.0,
-        scenarios=0,
-        levels=[],
-    )
-    document = policy(with_domain(record, claimed=empty))
-    assert {name: one.fixed for name, one in document.domain.parameters.items()} == record.asked["parameters"]
-    assert (document.domain.scenarios, document.domain.failing_below) == (1, None)
-    assert any(one.startswith("No scenario of the domain is known to pass") for one in document.cautions)
 
 
 def test_a_scheme_that_no_scenario_tried_is_not_claimed(record: AuditRecord) -> None:

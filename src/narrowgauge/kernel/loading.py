@@ -74,7 +74,7 @@ class KernelSource:
         Raises AuditFileError where a file cannot be read.
         """
         try:
-            own = fingerprint(self.sources.texts(), self.function) if self.foreign is None else self.foreign.digest()
+            own = self._own_digest()
             further = {**({} if self.approximation is None else {"draws": self.approximation}), **self.branches}
             texts = {name: source.digest().encode() for name, source in further.items()}
             return fingerprint({"kernel": own.encode(), **texts}) if texts else own
@@ -94,11 +94,18 @@ class KernelSource:
         if own.endswith(".py") and Path(own).is_file():
             with contextlib.suppress(OSError):  # a module that cannot be read, of which `digest` tells
                 return origin_of_sources(Path(own), name, self.sources)
+        self.digest()  # which says what cannot be read
         return Origin(
-            fingerprint=self.digest(),
+            fingerprint=self._own_digest(),
             covers="code" if self.foreign is None else "bytes",
             modules=self.sources.listed,
         )
+
+    def _own_digest(self) -> str:
+        """Return the digest without functions that are called beside the kernel; raises OSError."""
+        if self.foreign is not None:
+            return self.foreign.digest()
+        return fingerprint(self.sources.texts(), self.function)
 
 
 @contextmanager

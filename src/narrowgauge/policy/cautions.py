@@ -41,6 +41,8 @@ def cautions(record: AuditRecord, choices: Mapping[int, Choice], domain: DomainP
         found.append(_ASSUMED)
     found += _undecided(choices)
     found += _replaced(choices)
+    found += _draws(record, choices)
+    found += _branches(record, choices)
     found += _bounded(record)
     found += _left_over(record)
     found += _false_formats(record)
@@ -60,6 +62,9 @@ def unseen(record: AuditRecord, source: SourceEntry, shared: Sequence[str]) -> l
         found.append(f"modules that were shared and not rounded: {', '.join(shared)}")
     if source.covers == "syntax trees":
         found.append("values that a module or a closure gets when it is executed, and compiled extensions")
+    branches = record.branches
+    if source.covers != "code" and branches is not None and {branches.low, branches.correction} != {record.kernel.run}:
+        found.append(f"the branches {branches.low} and {branches.correction}, where they are not in the kernel's file")
     approximate = getattr(record.draws, "approximate", "")
     if approximate.rpartition(":")[0]:
         found.append(f"the function {approximate} that makes approximate draws, which the raw hash covers")
@@ -86,6 +91,30 @@ def _replaced(choices: Mapping[int, Choice]) -> Iterable[str]:
         else:
             why = f"{choice.asked.narrow}, which the audit planned, does not pay for every quantity"
         yield f"Level {level} uses {choice.scheme}: {why}."
+
+
+def _draws(record: AuditRecord, choices: Mapping[int, Choice]) -> Iterable[str]:
+    """Say which approximate draws a level uses: a rule says no more than that they are approximate."""
+    levels = [str(level) for level, one in choices.items() if record.arms[one.scheme.narrow].draws == "approximate"]
+    draws = record.draws
+    if not levels or draws is None or isinstance(draws, UnsetType):
+        return
+    sizes = (("cells", draws.cells), ("intervals", draws.intervals), ("degree", draws.degree))
+    made = ", ".join([draws.approximate, *(f"{name} = {size}" for name, size in sizes if size is not None)])
+    yield f"Approximate draws, on level {', '.join(levels)}, are those of the audit alone: {made}."
+
+
+def _branches(record: AuditRecord, choices: Mapping[int, Choice]) -> Iterable[str]:
+    """Say where the branches of a split that is used are not the same bits, although it stays admissible."""
+    mismatches = [] if record.branches is None else record.branches.mismatches
+    within = {(one.level, one.arm) for one in mismatches if one.splits == "within budget"}
+    used = {(level, one.scheme.narrow) for level, one in choices.items() if one.scheme.wide is not None}
+    levels = [str(level) for level, _ in sorted(within & used)]
+    if levels:
+        yield (
+            f"The two branches of the split on level {', '.join(levels)} are not the same bits: the mean shifts by "
+            "what they differ by, which is within its share of the target."
+        )
 
 
 def _because(reason: str | None) -> str:

@@ -104,8 +104,11 @@ class Policy:
         self._boxes = [(name, low, high) for name, _, low, high in self._limits if low <= high and name not in packed]
         others = {name: part.fixed for name, part, low, high in self._limits if low > high}
         self._others = [(name, type(value), value) for name, value in others.items()]
-        # All names are looked up then, so that an unknown one does not pass; arrays are never compared quickly.
-        self._quickly = -1 if any(isinstance(value, list) for value in others.values()) else len(parameters)
+        # All names are looked up then, so that an unknown one does not pass. Arrays are never compared quickly, nor are
+        # whole numbers that may be no double: NumPy's float64 compares with those as doubles.
+        slow = any(isinstance(value, list) for value in others.values())
+        slow = slow or any(isinstance(low, int) and abs(low) >= _WHOLE for _, _, low, _ in self._limits)
+        self._quickly = -1 if slow else len(parameters)
         self._lock = threading.Lock()
         self._reasons = {name: f"parameter {name}" for name in parameters}
         self._fallbacks = dict.fromkeys([BEYOND, *self._reasons.values()], 0)
@@ -175,7 +178,7 @@ class Policy:
             return self._answer(number, BEYOND, None)
         for name, part, low, high in self._limits:
             value = parameters[name]
-            if low <= value <= high if isinstance(value, float) else _inside(value, part):
+            if low <= value <= high if type(value) is float else _inside(value, part):
                 continue
             return self._answer(number, self._reasons[name], value)
         return self._rules[number]

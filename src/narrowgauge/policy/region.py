@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import replace
 
-import msgspec
+from msgspec import structs
 
 from narrowgauge.errors import PolicyError
 from narrowgauge.policy.choice import REFERENCE, Choice, scheme_of
@@ -14,7 +14,14 @@ from narrowgauge.record.policy import DomainPart, ParameterPart, Plain
 
 __all__ = ["claimed_box", "held_in_box", "single_point"]
 
-_ALONE = "No scenario of the domain is known to pass beside the audited parameters: the policy holds for these alone."
+_ALONE = (
+    "The policy was tried in a box of parameters, and no scenario that passes lies in what the others leave of it: "
+    "only the audited point is claimed."
+)
+_PATHS = (
+    "Paths are planned from the variances at the audited point: elsewhere in the box a run by the policy may miss the "
+    "target, and its standard errors say so."
+)
 
 
 def single_point(parameters: Mapping[str, Plain]) -> DomainPart:
@@ -30,8 +37,8 @@ def single_point(parameters: Mapping[str, Plain]) -> DomainPart:
 def claimed_box(entry: DomainEntry, parameters: Mapping[str, Plain]) -> DomainPart:
     """Return the box that an audit's scenarios leave, the other parameters fixed.
 
-    A side of which a single value is left is that value; a box in which no scenario lies is the audited point. Raises
-    PolicyError where the audited point itself fails.
+    A side of which a single value is left is that value. Where no scenario lies in what is left, the audited point
+    alone is claimed: nothing was tried around it that passed. Raises PolicyError where the audited point itself fails.
     """
     claimed = entry.claimed
     if claimed is None:
@@ -39,8 +46,8 @@ def claimed_box(entry: DomainEntry, parameters: Mapping[str, Plain]) -> DomainPa
             "the audited point itself does not pass as a scenario of [domain]; accepted: an audit without [domain], or "
             "with a larger domain.most_paths"
         )
-    if not claimed.scenarios:
-        return msgspec.structs.replace(single_point(parameters), remarks=[_ALONE])
+    if claimed.scenarios == 0:
+        return structs.replace(single_point(parameters), remarks=[_ALONE])
     sides = {name: _side(entry, name, span) for name, span in claimed.parameters.items()}
     fixed = {name: ParameterPart(fixed=value) for name, value in parameters.items() if name not in sides}
     return DomainPart(
@@ -79,4 +86,4 @@ def _remarks(entry: DomainEntry, claimed: ClaimedEntry) -> list[str]:
     found = [f"The policy was tried in a box of parameters, not everywhere in it: {words}."]
     if claimed.share < 1.0:
         found.append(f"Scenarios that do not pass leave {claimed.share:.1%} of the box that was asked for.")
-    return found
+    return [*found, _PATHS]
