@@ -174,6 +174,15 @@ def test_a_service(tmp_path, language, flags):
     assert subprocess.run([built(tmp_path, language, SERVICE, *flags)], check=False).returncode == 0
 
 
+def test_names_that_system_headers_define(tmp_path):
+    """What is included before it may define names of parameters in lower case."""
+    names = ["errno", "complex", "imaginary", "noreturn", "assert", "stdin", "signbit"]
+    write_c_header(with_parameters(dict.fromkeys(names, 1.5)), tmp_path / "p.h")
+    headers = ["assert", "complex", "errno", "math", "stdio", "stdnoreturn"]
+    included = "".join(f"#include <{name}.h>\n" for name in headers)
+    built(tmp_path, "C99", included + '#include "p.h"\nint main(void) { return 0; }\n')
+
+
 @pytest.mark.parametrize("language", COMPILERS)
 def test_a_header_that_nobody_asks(tmp_path, language):
     """Included and not used it gives no warning either, and two of other kernels live beside it."""

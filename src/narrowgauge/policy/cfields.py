@@ -15,7 +15,7 @@ __all__ = ["Field", "comment", "fields_of", "literal"]
 
 _ACCEPTED = "accepted in a C header: numbers, booleans, texts, and arrays of numbers with rows of one length"
 _LONGEST_TEXT = 4095  # bytes that every C99 compiler takes in a literal
-# Not to be the name of a field: keywords of C and C++, and what compilers define in lower case.
+# Not to be the name of a field: keywords of C and C++, and what compilers and system headers define in lower case.
 _WORDS = """
     alignas alignof and and_eq asm atomic_cancel atomic_commit atomic_noexcept auto bitand bitor bool break case catch
     char char8_t char16_t char32_t class co_await co_return co_yield compl concept const const_cast consteval constexpr
@@ -25,6 +25,7 @@ _WORDS = """
     short signed sizeof static static_assert static_cast struct switch synchronized template this thread_local throw
     true try typedef typeid typename typeof typeof_unqual union unix unsigned using virtual void volatile wchar_t
     while xor xor_eq
+    complex errno hyper imaginary interface noreturn small
 """
 _TAKEN = frozenset(_WORDS.split())
 _PLAIN_NAME = re.compile(r"[a-z][a-z0-9]*(_[a-z0-9]+)*")
