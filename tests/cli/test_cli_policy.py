@@ -100,7 +100,7 @@ def test_a_c_header(here, capsys):
             "without: no policy: the audit file has no [target], so that nobody knows how much rounding may ",
         ),
         (["nowhere"], f"nowhere: there is no such folder; {FOLDER}\n"),
-        (["with.json"], f"with.json: is no folder; {FOLDER}\n"),
+        (["with.json"], f"with.json: there is no such folder; {FOLDER}\n"),
         (["damaged"], "damaged/audit.json: kernel.run: 3 is not accepted; accepted: text\n"),
         (["with", "--out", "none/p.json"], "none/p.json: cannot be written: No such file or directory\n"),
         (["with", "--c-header", "none/p.h"], "none/p.h: cannot be written: No such file or directory\n"),
