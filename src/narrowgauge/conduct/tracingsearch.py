@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from abc import ABC, abstractmethod
 from collections.abc import Iterator, Sequence
 from typing import Literal, NamedTuple
 
@@ -36,7 +37,7 @@ def searched(low: Trace, correction: Trace) -> list[Found | None]:
     return [judge(one, other, _leading(other)).first() for one, other in ((low, correction), (correction, low))]
 
 
-class _Judge:
+class _Judge(ABC):
     """One side of a comparison: which of its rows the other side does not have."""
 
     def __init__(self, trace: Trace, other: Trace, there: set[Key]) -> None:
@@ -44,17 +45,17 @@ class _Judge:
         self.other = other
         self._there = there
 
+    @abstractmethod
     def strange(self, number: int, operand: Kept, place: int) -> list[Key]:
         """Return the rows of operand number `place` of an operation that the other side does not have."""
-        raise NotImplementedError
 
+    @abstractmethod
     def differing(self, number: int) -> list[Key]:
         """Return the rows of an operation's results that the other side does not have."""
-        raise NotImplementedError
 
+    @abstractmethod
     def ends(self) -> list[Key]:
         """Return the rows that were returned and that the other side does not have."""
-        raise NotImplementedError
 
     def first(self) -> Found | None:
         """Return the first operation at which the two sides part."""
