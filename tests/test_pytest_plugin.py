@@ -8,38 +8,12 @@ from pathlib import Path
 import pytest
 
 from narrowgauge.cli import main
+from small_audit import AUDIT, KERNEL, TARGET
 
 pytest_plugins = ["pytester"]
 
 ROOT = Path(__file__).parents[1]
-KERNEL = """
-import numpy as np
-
-
-def value(dW, h):
-    x = np.full(dW.shape[1], 1.0)
-    for dw in dW:
-        x = x + 0.2 * x * dw
-    return x
-"""
-AUDIT = """
-[kernel]
-run = "model.py:value"
-takes = "increments"
-[ladder]
-horizon = 1.0
-finest = 1
-[formats]
-narrow = ["float32"]
-[target]
-rmse = 0.01
-[sampling]
-block = 4096
-paths = 4096
-most_paths = 4096
-[policy]
-file = "model.policy.json"
-"""
+HELD = AUDIT + TARGET + '[policy]\nfile = "model.policy.json"\n'
 SUITE = """
 import unittest
 
@@ -100,9 +74,9 @@ def models(tmp_path_factory):
     folder.mkdir()
     (folder / "model.py").write_text(KERNEL, encoding="utf-8")
     (folder / "changed.py").write_text(KERNEL.replace("0.2 * x", "0.9 * x"), encoding="utf-8")
-    (folder / "good.toml").write_text(AUDIT, encoding="utf-8")
-    (folder / "bad.toml").write_text(AUDIT.replace("model.py:value", "changed.py:value"), encoding="utf-8")
-    (folder / "short.toml").write_text(AUDIT + "[gate]\npaths = 1024\nmost_paths = 1024\n", encoding="utf-8")
+    (folder / "good.toml").write_text(HELD, encoding="utf-8")
+    (folder / "bad.toml").write_text(HELD.replace("model.py:value", "changed.py:value"), encoding="utf-8")
+    (folder / "short.toml").write_text(HELD + "[gate]\npaths = 1024\nmost_paths = 1024\n", encoding="utf-8")
     assert main(["audit", str(folder / "good.toml"), "--out", str(folder / "done"), "--quiet"]) == 0
     assert main(["policy", str(folder / "done"), "--out", str(folder / "model.policy.json")]) == 0
     return folder

@@ -10,33 +10,8 @@ import pytest
 
 from narrowgauge.cli import main
 from narrowgauge.record.canonical import canonical_text
+from small_audit import AUDIT, KERNEL, TARGET
 
-KERNEL = """
-import numpy as np
-
-
-def value(dW, h):
-    x = np.full(dW.shape[1], 1.0)
-    for dw in dW:
-        x = x + 0.2 * x * dw
-    return x
-"""
-AUDIT = """
-[kernel]
-run = "model.py:value"
-takes = "increments"
-[ladder]
-horizon = 1.0
-finest = 1
-[formats]
-narrow = ["float32"]
-[target]
-rmse = 0.01
-[sampling]
-block = 4096
-paths = 4096
-most_paths = 4096
-"""
 FORMS = {"--junit": "gate.xml", "--sarif": "gate.sarif", "--summary": "gate.md", "--json": "gate.json"}
 
 
@@ -46,7 +21,7 @@ def audited(tmp_path_factory):
     folder = tmp_path_factory.mktemp("models")
     (folder / "pyproject.toml").write_text('[tool.narrowgauge]\naudits = ["model.toml"]\n', encoding="utf-8")
     (folder / "model.py").write_text(KERNEL, encoding="utf-8")
-    (folder / "model.toml").write_text(AUDIT, encoding="utf-8")
+    (folder / "model.toml").write_text(AUDIT + TARGET, encoding="utf-8")
     assert main(["audit", str(folder / "model.toml"), "--out", str(folder / "done"), "--quiet"]) == 0
     assert main(["policy", str(folder / "done"), "--out", str(folder / "model.policy.json")]) == 0
     return folder

@@ -10,33 +10,7 @@ import pytest
 from narrowgauge.cli import main
 from narrowgauge.policy.cheader import c_header
 from narrowgauge.record.policy import policy_text, read_policy
-
-KERNEL = """
-import numpy as np
-
-
-def value(dW, h):
-    x = np.full(dW.shape[1], 1.0)
-    for dw in dW:
-        x = x + 0.2 * x * dw
-    return x
-"""
-AUDIT = """
-[kernel]
-run = "model.py:value"
-takes = "increments"
-[ladder]
-horizon = 1.0
-finest = 1
-[formats]
-narrow = ["float32"]
-[sampling]
-block = 4096
-paths = 4096
-most_paths = 4096
-"""
-TARGET = "[target]\nrmse = 0.01\n"
-
+from small_audit import AUDIT, KERNEL, TARGET
 
 FOLDER = "accepted: a folder into which narrowgauge audit has written"
 

@@ -15,35 +15,10 @@ import yaml
 from example_files import EXAMPLES
 
 from narrowgauge.policy.gatefile import audit_files, held_to
+from small_audit import AUDIT, KERNEL, TARGET
 
 ROOT = EXAMPLES.parent
 CI = EXAMPLES / "ci"
-KERNEL = """
-import numpy as np
-
-
-def value(dW, h):
-    x = np.full(dW.shape[1], 1.0)
-    for dw in dW:
-        x = x + 0.2 * x * dw
-    return x
-"""
-AUDIT = """
-[kernel]
-run = "model.py:value"
-takes = "increments"
-[ladder]
-horizon = 1.0
-finest = 1
-[formats]
-narrow = ["float32"]
-[target]
-rmse = 0.01
-[sampling]
-block = 4096
-paths = 4096
-most_paths = 4096
-"""
 
 
 @pytest.fixture(scope="module")
@@ -52,7 +27,7 @@ def repository(tmp_path_factory, run):
     folder = tmp_path_factory.mktemp("repository")
     (folder / "pyproject.toml").write_text('[tool.narrowgauge]\naudits = ["model.toml"]\n', encoding="utf-8")
     (folder / "model.py").write_text(KERNEL, encoding="utf-8")
-    (folder / "model.toml").write_text(AUDIT, encoding="utf-8")
+    (folder / "model.toml").write_text(AUDIT + TARGET, encoding="utf-8")
     finished = folder.parent / "finished"
     assert run(folder, "audit", "model.toml", "--out", str(finished)).returncode == 0
     assert run(folder, "policy", str(finished), "--out", "model.policy.json").returncode == 0
