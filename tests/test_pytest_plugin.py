@@ -86,6 +86,8 @@ def models(tmp_path_factory):
 def suite(pytester, monkeypatch):
     """Run a suite with the plugin in a new process, whether or not it is installed here."""
     monkeypatch.setenv("PYTEST_DISABLE_PLUGIN_AUTOLOAD", "1")
+    for name in ("CI", "BUILD_NUMBER"):  # pytest prints a failure twice, whole, where one of them is set
+        monkeypatch.delenv(name, raising=False)
 
     def run(source, *options):
         pytester.makepyfile(test_suite=source)
