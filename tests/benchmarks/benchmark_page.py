@@ -26,6 +26,11 @@ TITLES: dict[str, tuple[str, str]] = {
         "run makes the same draws once, runs fine and coarse path of each level in plain NumPy and keeps mean and "
         "variance of their difference.",
     ),
+    "watch": (
+        "A run that looks at every number",
+        "Fine paths alone, 256 of 64 steps, looked at as an audit looks at ranges and lost additions when it has "
+        "measured: in each round plain NumPy in float64, then each format without the watch and with it.",
+    ),
     "workers": ("Workers", "In each round the audit with one worker, with two processes, and with two dask workers."),
     "memory": ("Memory", "In each round a process for each number of paths."),
     "start": ("Start-up", "In each round both commands."),

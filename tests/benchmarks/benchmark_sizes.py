@@ -14,6 +14,7 @@ class Size:
     name: str
     blocks: tuple[int, ...]  # paths of a kernel that is timed alone
     steps: int  # of its paths
+    watched_steps: int  # of its paths where every number is looked at
     least: float  # seconds of one measurement of it
     rounds: int
     slow_rounds: int  # of whole audits
@@ -30,6 +31,7 @@ SIZES: dict[str, Size] = {
             name="full",
             blocks=(4096, 8192, 16384, 32768, 65536, 131072),
             steps=16,
+            watched_steps=64,
             least=0.02,
             rounds=15,
             slow_rounds=5,
@@ -42,6 +44,7 @@ SIZES: dict[str, Size] = {
             name="quick",
             blocks=(1024, 2048),
             steps=2,
+            watched_steps=2,
             least=0.0,
             rounds=2,
             slow_rounds=1,

@@ -26,6 +26,7 @@ from policy_questions import policy_questions
 from several_workers import several_workers
 from start_up import start_up
 from threadpoolctl import threadpool_limits
+from watched_run import watched_run
 from whole_audit import whole_audit
 
 from narrowgauge.measure.provenance import provenance
@@ -34,6 +35,7 @@ BENCHMARKS: dict[str, Callable[[Size], Section]] = {
     "kernel": kernel_alone,
     "uncompiled": kernel_alone_uncompiled,
     "audit": whole_audit,
+    "watch": watched_run,
     "workers": several_workers,
     "memory": peak_memory,
     "start": start_up,
@@ -57,6 +59,7 @@ def main(arguments: list[str]) -> None:
     if given.quick and given.out is None:
         parser.error("--quick needs --out: its figures mean nothing")
     folder = given.out or REPORTS
+    folder.mkdir(parents=True, exist_ok=True)
     document = _kept(folder / "benchmarks.json")
     os.environ.update(PINNED)  # for the processes that are started from here
     for name in given.names or BENCHMARKS:

@@ -27,6 +27,7 @@ __all__ = ["several_workers"]
 KERNEL = "stochastic volatility"
 SERIAL, PROCESSES, DASK = "one worker", "two processes", "two dask workers"
 ASKED = 1.7
+MOST_GROWTH = 8  # times the paths of the try before: of a short audit a good part is start-up
 
 Run = Callable[[Mapping[str, Any]], narrowgauge.Audit]
 
@@ -67,7 +68,7 @@ def _long_enough(size: Size) -> dict[str, Any]:
         seconds = time.perf_counter() - start
         if seconds >= size.worker_seconds:
             return tables
-        paths *= max(2, math.ceil(1.1 * size.worker_seconds / seconds))
+        paths *= min(MOST_GROWTH, max(2, math.ceil(1.1 * size.worker_seconds / seconds)))
 
 
 def _cluster(stack: ExitStack) -> Any:

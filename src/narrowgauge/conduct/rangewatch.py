@@ -201,6 +201,10 @@ class RangeWatch:
         """Note how large constants are that meet the reference."""
         if not self._reference:
             return
+        if type(constant) is float:  # nearly all of them
+            if self._largest < abs(constant) <= self._most:
+                self._largest = abs(constant)
+            return
         try:
             self._note(np.asarray(constant, np.float64))
         except (OverflowError, TypeError, ValueError):  # an integer past float64, or no number
