@@ -61,7 +61,7 @@ def levels_of(found: FormatLines) -> dict[str, int | None]:
 
 @pytest.mark.parametrize("allow", ["", ALLOWED])
 def test_the_study_of_the_lines_refuses_the_same_splits(tmp_path: Path, allow: str) -> None:
-    """With no other scheme than the split neither the format nor a what-if pays anywhere; where it is allowed all do."""
+    """With no other scheme than the split neither the format nor a what-if pays; where it is allowed all do."""
     lines = {"formats": '["float16"]', "level": "2", "paths": "1024", "what_ifs": "true"}
     record = audited(tmp_path, allow, lines=lines)
     assert record.lines is not None
