@@ -133,8 +133,8 @@ def _parser() -> argparse.ArgumentParser:
         "--timeout",
         metavar="SECONDS",
         type=_seconds,
-        help="time limit of the trial run, of each block and of the study of the lines; a worker past it is replaced, "
-        "and the block run once more",
+        help="time limit of the trial run, of each block, of each look at a scenario and of the study of the lines; a "
+        "worker past it is replaced, and what it did is run once more",
     )
     audit.add_argument(
         "--lines", action="store_true", help="find out which lines cost the accuracy, as with a table [lines]"

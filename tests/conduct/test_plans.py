@@ -102,7 +102,7 @@ def test_the_plan_of_one_quantity_is_its_own(tmp_path: Path) -> None:
         (
             "def value(dW, h):\n    return {'a': 1.0 + dW[0], 'b': 1.0 + 0.0 * dW[0]}\n",
             {"target": {"rmse": "{ a = 0.1, b = 0.1 }"}},
-            "b: a level without a finite scheme",
+            "b: nothing varies on any level, so that costs cannot be compared",
         ),
         (TWO, {"target": TARGET, "kernel": {"coupling": '"none"', "takes": '"uniforms"'}}, None),
     ],
@@ -176,3 +176,17 @@ def test_the_rules_are_those_of_the_audit_file(tmp_path: Path, target: dict[str,
         bias_share=0.5 if target else defaults.bias_share,
         levels_sharing=3,
     )
+
+
+def test_a_level_on_which_nothing_varies_is_named(tmp_path: Path) -> None:
+    """An integral from the left is a constant after one step; with two it is not, and paths are planned."""
+    integral = RUNNING_SUM.replace("        x = x +", "        total = total + x\n        x = x +").replace(
+        "        total = total + x\n    return total", "    return total"
+    )
+    target = {"rmse": "0.1"}
+    record = audit_of(tmp_path, integral, target=target)
+    reason = "nothing varies on level 0, so that costs cannot be compared there: begin the ladder with more steps"
+    assert record.verdict.plan.reason == f"{reason} (ladder.coarsest_steps)"
+    assert record.quantities["value"].allocation.reason == record.verdict.plan.reason
+    more = audit_of(tmp_path, integral, target=target, ladder={"coarsest_steps": "2"})
+    assert more.verdict.plan.reason is None

@@ -80,7 +80,7 @@ def test_the_gain_of_narrow_operations_on_the_state_as_it_is(searched: FormatLin
     file, step_cost = milstein_file(), searched.widenings[0].step_cost
     named = {Place(milstein.__code__.co_filename, STATE): FORMATS["float32"]}
     change = Changed(form="float16", run=Widths(rest=FORMATS["float16"], named=named), step_cost=step_cost)
-    found = on_ladder(file, LineRunner(file, find_kernel(file), "float16"), {"state": change}, 0.99)
+    found = on_ladder(file, LineRunner(file, find_kernel(file), "float16"), {"state": change}, 0.99, broken={})
     pays = pays_fields(found["state"], "float16")
     assert pays["level"] == 4
     assert pays["gain"] == pytest.approx(1.09, abs=0.03)

@@ -96,12 +96,12 @@ def c_policies(draw: st.DrawFn) -> PolicyDocument:
 
 @st.composite
 def questions(draw: st.DrawFn, made: PolicyDocument) -> tuple[int, dict[str, Any]]:
-    """Return a level and parameters: about half of the time all as they were audited."""
+    """Return a level and parameters: about half of the time all as they were audited, else up to three that are not."""
     level = draw(st.integers(0, len(made.levels) + 1))
     parameters = {name: draw(_near(part)) for name, part in made.domain.parameters.items()}
     if parameters and draw(st.booleans()):
-        name = draw(st.sampled_from(list(parameters)))
-        parameters[name] = draw(_far(made.domain.parameters[name]))
+        for name in draw(st.lists(st.sampled_from(list(parameters)), min_size=1, max_size=3, unique=True)):
+            parameters[name] = draw(_far(made.domain.parameters[name]))
     return level, parameters
 
 

@@ -161,6 +161,8 @@ int main(void)
     if (rule.scheme != reserve_value_scheme_split || rule.narrow != reserve_value_format_float16) return 2;
     if (rule.wide != reserve_value_format_float32 || rule.draws != reserve_value_draws_exact) return 3;
     if (reserve_value_at(RESERVE_VALUE_LEVELS, &given).outside != reserve_value_outside_level) return 4;
+    if (reserve_value_at(1u, NULL).outside != reserve_value_outside_parameter_rate) return 5;
+    if (reserve_value_at(1u, NULL).narrow != reserve_value_format_float64) return 6;
     return 0;
 }
 """

@@ -23,6 +23,7 @@ import narrowgauge
 from narrowgauge.errors import OutsidePolicyError, PolicyError
 from narrowgauge.policy.guard import Policy, Rule
 from narrowgauge.record.canonical import DocumentError
+from narrowgauge.record.policy import policy_text
 
 AUDITED = {name: one.fixed for name, one in document().domain.parameters.items()}
 BOX = {"rate": 0.01, "volatility": (0.1, 0.4)}
@@ -171,6 +172,17 @@ class TestOutside:
         policy.fallbacks()["level"] = 7
         assert counted(policy) == {"level": 1, "parameter rate": 1}
 
+    @pytest.mark.parametrize("first", range(7))
+    def test_the_first_of_several_is_the_reason(self, first):
+        """In the order of the policy, whether a parameter packs to bytes (2, 3.5), is a box, a text or a boolean."""
+        audited = {"a": 2, "b": (0.1, 0.4), "c": 3.5, "d": "euler", "e": 2.5, "f": True, "g": 4}
+        policy = Policy(with_parameters(audited), outside="reference")
+        given = audited | {"b": 0.2}
+        assert policy.at(0, **given).outside is None
+        for name in list(audited)[first:]:
+            given |= {name: "milstein" if name == "d" else 9.0}
+            assert policy.at(0, **given).outside == f"parameter {list(audited)[first]}"
+
     def test_threads_count_together(self, monkeypatch):
         """8 threads with 500 questions each make 4,000, though each addition is cut in two."""
         policy = box(outside="reference")
@@ -229,8 +241,9 @@ class TestMistakes:
 
     def test_an_unknown_name_in_the_place_of_a_boolean(self):
         """As many names as there should be are not enough."""
-        with pytest.raises(PolicyError, match="unknown parameter 'flags'"):
-            Policy(with_parameters({"rate": 0.01, "flag": True})).at(0, rate=0.01, flags=1.0)
+        for rate in (0.01, 0.02):
+            with pytest.raises(PolicyError, match="unknown parameter 'flags'"):
+                Policy(with_parameters({"rate": 0.01, "flag": True})).at(0, rate=rate, flags=1.0)
 
     def test_a_word_for_outside(self):
         """Anything but the two words is refused."""
@@ -273,6 +286,33 @@ class TestKernel:
         """The message begins with the policy, too."""
         with pytest.raises(PolicyError, match=r"p\.json: kernel: the kernel is no Python function; accepted: "):
             Policy.load(folder / "p.json", kernel=len)
+
+    def written(self, folder, run):
+        """Return the path of a policy of a kernel that is known by its bytes."""
+        kernel = msgspec.structs.replace(document().kernel, run=run, covers="bytes", modules=[])
+        text = policy_text(msgspec.structs.replace(document(), kernel=kernel))
+        (folder / "p.json").write_text(text, encoding="utf-8")
+        return folder / "p.json"
+
+    @pytest.mark.parametrize("run", ["./inflow", "inflow", "python3 inflow.py --scale 1:2"])
+    def test_a_command(self, folder, run):
+        """It has no file of its own to compare: that is said, not that it is another kernel."""
+        path = self.written(folder, run)
+        with pytest.raises(PolicyError) as caught:
+            Policy.load(path, kernel=folder / "reserve.py")
+        assert str(caught.value) == (
+            f"{path}: kernel: the policy's kernel is the command {run}, which cannot be compared; accepted: no kernel, "
+            "and narrowgauge gate to see whether the policy still holds"
+        )
+        assert Policy.load(path).document.kernel.run == run
+
+    def test_a_library(self, folder):
+        """It has one: the hash of its bytes says whether it is another, and that there is none is said."""
+        path = self.written(folder, "rounded.so:value")
+        with pytest.raises(PolicyError, match=r"p\.json: kernel: this is another kernel than rounded\.so:value, which"):
+            Policy.load(path, kernel=folder / "reserve.py")
+        with pytest.raises(PolicyError, match=r"p\.json: kernel: the kernel cannot be read: .*none\.so: No such file"):
+            Policy.load(path, kernel=folder / "none.so")
 
     def test_no_policy(self, folder):
         """What is wrong with the file is the reader's message."""

@@ -123,6 +123,17 @@ def test_nothing_claimed_and_all_claimed_are_said() -> None:
     assert "Of what is claimed" not in shown(whole, 200)
 
 
+def test_a_box_without_a_scenario_is_not_claimed() -> None:
+    """As in the policy, the audited point alone is."""
+    point = {"spot": SpanEntry(low=50.0, high=100.0)}
+    text = shown(replace(CASE, claimed=replace(PART, parameters=point, scenarios=0)), 200)
+    assert "The verdict is claimed for the audited point alone: no scenario that passes lies in what the others" in text
+    assert "of its scales" not in text
+    assert "only ones that pass; 1 scenario lies in it." in shown(
+        replace(CASE, claimed=replace(PART, scenarios=1)), 200
+    )
+
+
 def test_many_that_fail_are_cut_short() -> None:
     """The first five are named, the others counted."""
     many = replace(CASE, scenarios=[scenario(number, 1e5, ("refused", "bias")) for number in range(1, 10)])

@@ -94,6 +94,31 @@ class TestSource:
             "(1.05 to 1.11) there; 12.5% of the operations are charged at the wide cost, a step costs 0.281"
         ) in text
 
+    @pytest.mark.parametrize(("possible", "words"), [(None, ""), (3, " for sure, perhaps to 3")])
+    def test_a_level_that_is_undecided_is_not_called_refuted(self, possible, words):
+        """The study may end with an open verdict, as the audit may."""
+        entry = record()
+        study = entry.lines.formats["float16"]
+        open_one = replace(study, plain=replace(study.plain, level=None, possible=possible))
+        lines = replace(entry.lines, formats={"float16": open_one})
+        text = flat(audit_text(replace(entry, lines=lines), None), 120)
+        assert f"- float16 as it is pays on no level{words} - with" in text
+
+    def test_a_quantity_without_shares_gives_way_to_one_that_has_some(self):
+        """A yes/no quantity that decides may never change: the shares of another one stand at the source then."""
+        entry = record()
+        study = entry.lines.formats["float16"]
+        nothing = SumEntry(variance=None, total=None, reason="no error that varies")
+        shares = study.quantities["value"]
+        both = {"value": replace(shares, error=nothing, parts=[]), "other": shares}
+        lines = replace(entry.lines, formats={"float16": replace(study, quantities=both)})
+        text = flat(audit_text(replace(entry, lines=lines), None), 120)
+        assert "from 16,384 paths of every run; for other, others in lines.csv. A share is" in text
+        neither = dict.fromkeys(both, both["value"])
+        lines = replace(entry.lines, formats={"float16": replace(study, quantities=neither)})
+        text = flat(audit_text(replace(entry, lines=lines), None), 120)
+        assert "for value, others in lines.csv. No shares: no error that varies." in text
+
     def test_how_nearly_shares_add_up_is_said(self):
         """The total stands beside the level and the paths."""
         text = flat(audit_text(record(), None), 120)

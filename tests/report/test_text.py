@@ -133,6 +133,18 @@ class TestFigures:
         assert "\N{EN DASH} no noise of bfloat16 on level 4: non-finite values." in words
         assert "\N{EN DASH} no gain where no scheme is finite." in words
 
+    def test_a_level_on_which_nothing_varies(self):
+        """It has no scheme for want of a variance, not of finite values."""
+        entry = made.quantity_entry()
+        reference = replace(entry.levels[0].reference, level_variance=0.0)
+        words = flat(
+            audit_text(made.audit_record(value=made.with_level(entry, 0, reference=reference, best=None)), None)
+        )
+        assert " 0 nothing varies" in words
+        assert "\N{EN DASH} no gain where nothing varies." in words
+        assert "finite scheme" not in words
+        assert "is finite" not in words
+
     def test_raised(self):
         """What the kernel raised in a format is shown with file and line."""
         expected = "On levels 0 to 4 the kernel raised ZeroDivisionError: division by zero (/home/user/reserve.py:7)."

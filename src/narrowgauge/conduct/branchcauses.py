@@ -9,66 +9,23 @@ from itertools import combinations
 import numpy as np
 
 from narrowgauge.arithmetic.formats import FORMATS
+from narrowgauge.conduct.branchemulation import Case, Emulation, Run
 from narrowgauge.conduct.firstdifference import Located, Side, first_difference
-from narrowgauge.conduct.tracing import MOST_PATHS, Trace
+from narrowgauge.conduct.tracing import Trace
 from narrowgauge.conduct.tracingcauses import Cause, explains
 from narrowgauge.conduct.tracingown import run_traced
-from narrowgauge.dispatch.looser import LooserSetting, Manner
+from narrowgauge.dispatch.looser import Manner
 from narrowgauge.dispatch.setting import Place
 from narrowgauge.errors import NarrowgaugeError
-from narrowgauge.judge.branches import Doubles, differs
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.contract import quantities_of
-from narrowgauge.measure.branchruns import Branch, BranchError, BranchSource, Given, Order, its_own, laid
+from narrowgauge.measure.branchruns import Branch, BranchError, Given, Order, its_own, laid
 from narrowgauge.record.branches import PointEntry, WhereEntry
 
-__all__ = ["MOST_STEPS", "Case", "Causes", "Run", "follow", "located", "narrow_down", "where_entry"]
+__all__ = ["MOST_STEPS", "Causes", "follow", "located", "narrow_down", "where_entry"]
 
 MOST_STEPS = 256  # of a level on which causes are looked for: all results of a run are kept
-_MOST_DIFFERING = 192  # of the paths that are followed; the rest agree
 _MOST_LINES = 5  # with two products in a sum: 32 choices
-_MOST_OF_EACH = 1024  # paths that differ, and that agree, which an explanation has to give
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Run:
-    """A function of a split in one format on one level; `wide` is the other format, `rows` as a kernel of one path."""
-
-    source: BranchSource
-    arm: str
-    wide: str | None
-    level: int
-    rows: bool
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Case:
-    """Paths of a block, of which the first `differing` have other results; `level` is that of the path, fine or coarse.
-
-    Some that agree are among them: what explains the others must leave these alone.
-    """
-
-    level: int
-    draws: Given
-    low: Doubles
-    correction: Doubles
-    differing: int
-
-    @classmethod
-    def of(cls, level: int, draws: Given, low: Doubles, correction: Doubles) -> Case:
-        """Return the case of a block, whose results differ on some path."""
-        differ = differs(low, correction)
-        first = np.flatnonzero(differ)[:_MOST_OF_EACH]
-        chosen = np.concatenate([first, np.flatnonzero(~differ)[:_MOST_OF_EACH]])
-        return cls(
-            level=level, draws=draws.of(chosen), low=low[chosen], correction=correction[chosen], differing=first.size
-        )
-
-    def followed(self) -> Given:
-        """Return the draws of the paths of which all results are kept, to find where the branches part."""
-        first = min(self.differing, _MOST_DIFFERING)
-        further = range(self.differing, min(self.low.size, self.differing + MOST_PATHS - first))
-        return self.draws.of([*range(first), *further])
 
 
 @dataclass(slots=True)
@@ -142,30 +99,15 @@ def narrow_down(causes: Causes, runs: tuple[Run, Run], case: Case, quantity: str
     of the other one, all bits, also on paths that agree as it is. A function whose own bits are not those of its
     emulation, since it casts to formats of its choice, is not asked.
     """
-    (low, correction), draws = runs, Given(case.draws.narrow, None)
-    sides = ((low, case.low, case.correction), (correction, case.correction, case.low))
-    usual = [run.source.python and _gives(run, draws, quantity, None, own) for run, own, _ in sides]
+    sides = [
+        Emulation(runs[0], case, quantity, own=case.low, wanted=case.correction),
+        Emulation(runs[1], case, quantity, own=case.correction, wanted=case.low),
+    ]
     sides_found = (None, None) if found is None else (found.low, found.correction)
     places = [None if one is None else one.place for one in sides_found]
     if causes.left is None:
-        further = [one for run, own in zip((low, correction), usual, strict=True) if own for one in _of_two(run, draws)]
-        causes.left = _manners(low.arm, places, further)
-    causes.left = [
-        (manner, side)
-        for manner, side in causes.left
-        if usual[side] and _gives(sides[side][0], draws, quantity, manner, sides[side][2])
-    ]
-
-
-def _of_two(run: Run, draws: Given) -> list[Place | None]:
-    """Return the lines of a function that add two products, of which a compiler may fuse either."""
-    try:
-        branch = Branch(run.source.emulated(), run.arm, rows=run.rows, manner=Manner("fused", across=True))
-        branch.on(draws, run.level)
-    except (BranchError, NarrowgaugeError):  # what cannot be emulated explains nothing
-        return []
-    setting = branch.copy.setting
-    return list(setting.of_two) if isinstance(setting, LooserSetting) else []
+        causes.left = _manners(runs[0].arm, places, [line for side in sides for line in side.lines_of_two()])
+    causes.left = [(manner, side) for manner, side in causes.left if sides[side].gives(manner)]
 
 
 def _manners(arm: str, places: Sequence[Place | None], of_two: Sequence[Place | None]) -> list[tuple[Manner, int]]:
@@ -178,20 +120,11 @@ def _manners(arm: str, places: Sequence[Place | None], of_two: Sequence[Place | 
     choices = [
         frozenset(some) for count in range(len(of_two) + 1) for some in combinations(of_two[:_MOST_LINES], count)
     ]
-    manners += [Manner("fused", last=last, across=across) for across in (False, True) for last in choices]
+    # Across lines first: where nothing was fused across lines, that run answers for the other one.
+    manners += [Manner("fused", last=last, across=across) for across in (True, False) for last in choices]
     both = [(manner, side) for manner in manners for side in (0, 1)]
     alone = [(replace(manner, only=place), side) for manner, side in both if (place := places[side]) is not None]
     return [*both, *alone]
-
-
-def _gives(run: Run, draws: Given, quantity: str, manner: Manner | None, wanted: Doubles) -> bool:
-    """Whether a function emulated in some manner, or as usual, gives these results."""
-    try:
-        branch = Branch(run.source.emulated(), run.arm, rows=run.rows, manner=manner)
-        found = branch.on(draws, run.level).get(quantity)
-    except (BranchError, NarrowgaugeError):  # what cannot be emulated explains nothing
-        return False
-    return found is not None and not differs(found, wanted).any()
 
 
 def where_entry(file: AuditFile, found: Located | None, cause: Cause | None = None) -> WhereEntry | None:

@@ -7,7 +7,7 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from narrowgauge.arithmetic.formats import FORMATS
-from narrowgauge.conduct.branchcauses import Case, Run
+from narrowgauge.conduct.branchemulation import Case, Run
 from narrowgauge.draws.coarsen import Draws
 from narrowgauge.draws.streams import GRAIN, Purpose, apart
 from narrowgauge.draws.tape import Tape

@@ -16,8 +16,9 @@ import numpy as np
 
 from narrowgauge.arithmetic.arithmetic import arithmetic_named
 from narrowgauge.arithmetic.formats import FORMATS
-from narrowgauge.conduct.branchcauses import MOST_STEPS, Causes, Run, located, narrow_down, where_entry
+from narrowgauge.conduct.branchcauses import MOST_STEPS, Causes, located, narrow_down, where_entry
 from narrowgauge.conduct.branchcomparison import Comparer, Mismatch
+from narrowgauge.conduct.branchemulation import Run
 from narrowgauge.conduct.branchvariations import REPEATS, Found, Varied, vary
 from narrowgauge.conduct.entries import finite, interval_fields
 from narrowgauge.conduct.trial import NOT_IDENTICAL, same_bits

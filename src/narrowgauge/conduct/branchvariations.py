@@ -16,7 +16,8 @@ from typing import TypeVar
 import numpy as np
 
 from narrowgauge.arithmetic.formats import FORMATS
-from narrowgauge.conduct.branchcauses import Run, follow
+from narrowgauge.conduct.branchcauses import follow
+from narrowgauge.conduct.branchemulation import Run
 from narrowgauge.conduct.firstdifference import Located, first_difference
 from narrowgauge.conduct.tracing import MOST_PATHS, Trace
 from narrowgauge.conduct.tracingrepeats import repeated

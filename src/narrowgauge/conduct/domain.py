@@ -10,6 +10,7 @@ import functools
 from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 
+from narrowgauge.conduct.branches import broken_splits
 from narrowgauge.conduct.domainentries import domain_entry
 from narrowgauge.conduct.run import Outcome, Watcher
 from narrowgauge.conduct.scenarios import block_of, looks_of, scenarios_of, steps_of
@@ -63,6 +64,7 @@ class _Explorer:
                 for level, tally in sorted(outcome.tallies.items())
             },
             alpha=(1 - file.sampling.confidence) / len(self._looks),
+            broken={level: broken_splits(outcome.branches, level) for level in outcome.tallies},
             names=frozenset(outcome.tallies[0].quantities),
             dropping=any(tally.dropped for tally in outcome.tallies.values()),
         )

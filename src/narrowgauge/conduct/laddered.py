@@ -1,14 +1,15 @@
 """A changed narrow format judged on every level of the ladder, by the rules of the formats themselves.
 
 What is changed, lines kept wide or another way of rounding, takes the place of the narrow format in an audit file that
-has its cost: it then has errors, rivals and verdicts like any format.
+has its cost: it then has errors, rivals and verdicts like any format. A split that the audit refuses, since its
+branches do not cancel, is refused of the changed format, too: nobody has compared its own.
 """
 
 from __future__ import annotations
 
 import itertools
 import math
-from collections.abc import Mapping, Sequence
+from collections.abc import Collection, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -38,19 +39,27 @@ class Changed:
         costs = replace(file.costs, **{self.form: self.step_cost})
         return replace(file, formats=replace(file.formats, narrow=(self.form,)), draws=None, timed=costs)
 
-    def judged(self, file: AuditFile, tally: LevelTally, alpha: float) -> LevelJudgement:
-        """Judge it on one level."""
-        return judge_level(tally, self.file(file), alpha)
+    def judged(
+        self, file: AuditFile, tally: LevelTally, alpha: float, broken: Mapping[int, Collection[str]]
+    ) -> LevelJudgement:
+        """Judge it on one level; `broken` has, by level, the formats of which no split is admissible."""
+        return judge_level(tally, self.file(file), alpha, broken.get(tally.level, ()))
 
 
 def on_ladder(
-    file: AuditFile, runner: LineRunner, changes: Mapping[str, Changed], confidence: float, *, skip: int = 0
+    file: AuditFile,
+    runner: LineRunner,
+    changes: Mapping[str, Changed],
+    confidence: float,
+    *,
+    broken: Mapping[int, Collection[str]],
+    skip: int = 0,
 ) -> dict[str, list[LevelJudgement]]:
     """Judge changes on one level after the other, each until a level on which it does not pay.
 
     Each level is looked at with sampling.paths, and where a verdict is open with twice and four times as many, up to
     sampling.most_paths. `confidence` is that of all looks at a change together. The first `skip` blocks are not used:
-    those by which the changes were chosen.
+    those by which the changes were chosen. No split of a `broken` format is admissible, by level.
     """
     judged: dict[str, list[LevelJudgement]] = {name: [] for name in changes}
     alpha = (1 - confidence) / _LOOKS
@@ -64,7 +73,7 @@ def on_ladder(
             new = tallies_of(runner, asked, level, done=done, paths=paths, skip=skip)
             for name in open_ones:
                 tallies[name] = tallies[name] + new[name] if name in tallies else new[name]
-                found[name] = changes[name].judged(file, tallies[name], alpha)
+                found[name] = changes[name].judged(file, tallies[name], alpha, broken)
             done, paths = tallies[open_ones[0]].blocks, 2 * paths
             open_ones = [name for name in open_ones if not found[name].settled]
             if not open_ones or paths > file.sampling.most_paths:

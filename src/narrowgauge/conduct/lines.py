@@ -8,6 +8,7 @@ from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 
 from narrowgauge.arithmetic.formats import FORMATS
+from narrowgauge.conduct.branches import broken_splits
 from narrowgauge.conduct.entries import finite
 from narrowgauge.conduct.lineroles import Seen, lasting, roles
 from narrowgauge.conduct.whatifs import what_ifs
@@ -52,13 +53,15 @@ _FARTHEST = 12  # lines between two that were studied, up to which all of them a
 class LineStudy:
     """What to study: by format the finest level on which it pays; draws a step, and whether levels are coupled.
 
-    `shifts` has by how much the exponents of a format would have to lie higher. A task for a bench, of plain data.
+    `shifts` has by how much the exponents of a format would have to lie higher, `broken`, by level, the formats of
+    which no split is admissible. A task for a bench, of plain data.
     """
 
     finest: Mapping[str, int | None]
     factors: int
     coupled: bool
     shifts: Mapping[str, int] = field(default_factory=dict)
+    broken: Mapping[int, frozenset[str]] = field(default_factory=dict)
 
     def __call__(self, bench: Bench) -> LinesEntry:
         """Run the study; raises what running the kernel raises."""
@@ -67,7 +70,7 @@ class LineStudy:
             file = with_draws(file, self.factors, "sum" if self.coupled else "none")
         with pinned():
             studies = {
-                form: _Study(file, bench, form, level, shift=self.shifts.get(form, 0))
+                form: _Study(file, bench, form, level, shift=self.shifts.get(form, 0), broken=self.broken)
                 for form, level in self.finest.items()
             }
             formats = {form: study.entry() for form, study in studies.items()}
@@ -84,7 +87,13 @@ def line_study(file: AuditFile, record: AuditRecord) -> LineStudy | None:
     chosen = {arm: levels[arm] for arm in named}
     watched = None if record.range is None else record.range.watched
     shifts = {} if watched is None else {arm: one.exponent for arm, one in watched.shifts.items() if arm in chosen}
-    return LineStudy(finest=chosen, factors=file.kernel.factors, coupled=file.kernel.coupling == "sum", shifts=shifts)
+    return LineStudy(
+        finest=chosen,
+        factors=file.kernel.factors,
+        coupled=file.kernel.coupling == "sum",
+        shifts=shifts,
+        broken={level: found for level in file.ladder.levels if (found := broken_splits(record.branches, level))},
+    )
 
 
 def studied(study: LineStudy | None, engine: Engine) -> LinesEntry | None:
@@ -106,11 +115,20 @@ def _stops(level: int | None, finest: int) -> bool:
 class _Study:
     """The study of one format."""
 
-    def __init__(self, file: AuditFile, bench: Bench, form: str, pays_to: int | None, *, shift: int) -> None:
+    def __init__(
+        self,
+        file: AuditFile,
+        bench: Bench,
+        form: str,
+        pays_to: int | None,
+        *,
+        shift: int,
+        broken: Mapping[int, frozenset[str]],
+    ) -> None:
         assert file.lines is not None  # or there is no study
         table: LinesTable = file.lines
         self._file, self._table, self._form, self._pays_to = file, table, FORMATS[form], pays_to
-        self._finest, self._shift = file.ladder.finest, shift
+        self._finest, self._shift, self._broken = file.ladder.finest, shift, broken
         first_refused = 0 if pays_to is None else min(pays_to + 1, self._finest)
         self.level = first_refused if table.level is None else table.level
         self._wide = table.wide or _next_wider(file, form)
@@ -250,12 +268,15 @@ class _Study:
                 wide=FORMATS[self._wide],
                 items={place: self._items[place] for place in places},
                 operations={place: self._entries[place].operations for place in places},
+                broken=self._broken,
             )
             plain, widenings = searched(self._file, self._runner, candidates, self.level, self._paths)
         tried = None
         if self._table.what_ifs:
             wide = None if self._wide is None else FORMATS[self._wide]
-            tried = what_ifs(self._file, self._runner, self._form, wide, self._sums, shift=self._shift)
+            tried = what_ifs(
+                self._file, self._runner, self._form, wide, self._sums, broken=self._broken, shift=self._shift
+            )
         return FormatLines(
             level=self.level,
             steps=self._file.ladder.steps(self.level),

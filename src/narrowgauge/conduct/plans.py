@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from typing import Any
 
 from narrowgauge.conduct.entries import finite, interval_fields, scheme_entry
@@ -70,9 +71,20 @@ def _schemes(file: AuditFile, outcome: Outcome, name: str) -> tuple[dict[int, Sc
     for level in levels:
         judged = outcome.judgements[level]
         if judged.joint is None or judged.best[name] is None:
-            return None, "a level without a finite scheme"
+            return None, _without_scheme(level, _views(outcome, name))
         found[level] = judged.joint
     return found, None
+
+
+def _without_scheme(level: int, views: Mapping[int, LevelView]) -> str:
+    """Return why no scheme can be chosen: the first step of many kernels moves nothing that they return."""
+    still = {one for one, view in views.items() if view.tally.differences[REFERENCE].moments.variance == 0}
+    if level not in still:
+        return "a level without a finite scheme"
+    if len(still) == len(views):
+        return "nothing varies on any level, so that costs cannot be compared"
+    advice = ": begin the ladder with more steps (ladder.coarsest_steps)" if level == 0 else ""
+    return f"nothing varies on level {level}, so that costs cannot be compared there{advice}"
 
 
 def _views(outcome: Outcome, name: str) -> dict[int, LevelView]:

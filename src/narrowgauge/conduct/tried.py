@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Collection, Mapping, Sequence
 from dataclasses import dataclass, field
 
 from narrowgauge.conduct.scenarios import Scenario
@@ -21,13 +21,15 @@ _OUTSIDE = SchemeFigures(outcome="refused", reason="reference", edge=None, bias=
 class Trials:
     """What all scenarios share: the audit file with its costs, the scheme of each level, and 1 - confidence of a look.
 
-    `names` are the quantities; `dropping` says that the reference is not finite on some paths of the audit itself, so
-    that such paths say nothing against a scenario.
+    `broken` has, by level, the formats of which no split is admissible; `names` are the quantities; `dropping` says
+    that the reference is not finite on some paths of the audit itself, so that such paths say nothing against a
+    scenario.
     """
 
     file: AuditFile
     schemes: Mapping[int, Scheme]
     alpha: float
+    broken: Mapping[int, Collection[str]]
     names: frozenset[str]
     dropping: bool
 
@@ -86,7 +88,7 @@ class Tried:
 
     def _judge(self, level: int, trials: Trials) -> None:
         tally = self.tallies[level]
-        judged = self.judged[level] = judge_level(tally, trials.file, trials.alpha)
+        judged = self.judged[level] = judge_level(tally, trials.file, trials.alpha, trials.broken[level])
         self.figures[level] = judge_scheme(tally, judged, trials.file, trials.alpha, trials.schemes[level])
         if tally.dropped and not trials.dropping:
             self.figures[level] = _OUTSIDE

@@ -14,7 +14,7 @@ The further operations of carried errors are not charged, nor what a machine may
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Collection, Mapping
 
 from narrowgauge.arithmetic.arithmetic import Arithmetic
 from narrowgauge.arithmetic.formats import Format
@@ -37,12 +37,14 @@ def what_ifs(
     wide: Format | None,
     sums: Mapping[Operation, float],
     *,
+    broken: Mapping[int, Collection[str]],
     shift: int = 0,
 ) -> list[WhatIfEntry]:
     """Return how far a narrow format pays in each what-if.
 
     `sums` are the additions to the state with their shares of all operations; without any, carried errors and wide
-    increments are left out. So are exponents shifted by no power of two. Raises what running the kernel raises.
+    increments are left out. So are exponents shifted by no power of two. `broken` has, by level, the formats of which
+    no split is admissible. Raises what running the kernel raises.
     """
     changes = {name: _narrow(file, form, variant) for name, variant in _variants(file, form).items()}
     if sums:
@@ -59,7 +61,7 @@ def what_ifs(
             file, form, Variant(make=lambda level, block: InDouble(moved))
         )
     confidence = 1 - (1 - file.sampling.confidence) / len(changes)
-    judged = on_ladder(file, runner, changes, confidence)
+    judged = on_ladder(file, runner, changes, confidence, broken=broken)
     return [
         WhatIfEntry(name=name, step_cost=changes[name].step_cost, **pays_fields(levels, form.name))
         for name, levels in judged.items()

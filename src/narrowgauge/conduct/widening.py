@@ -10,8 +10,8 @@ from __future__ import annotations
 
 import itertools
 import math
-from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from collections.abc import Collection, Mapping, Sequence
+from dataclasses import dataclass, field
 
 from narrowgauge.arithmetic.formats import Format
 from narrowgauge.conduct.laddered import Changed, edge_of, on_ladder, pays_fields, tallies_of
@@ -32,13 +32,15 @@ _PLAIN: tuple[int, ...] = ()
 class Candidates:
     """What may be kept in the `wide` format: parts by their places, the one that saves most first.
 
-    `operations` are their shares of all operations.
+    `operations` are their shares of all operations; `broken` has, by level, the formats of which no split is
+    admissible.
     """
 
     form: Format
     wide: Format
     items: Mapping[int, Item]
     operations: Mapping[int, float]
+    broken: Mapping[int, Collection[str]] = field(default_factory=dict)
 
     def share(self, parts: tuple[int, ...]) -> float:
         """Return the share of the operations that is charged at the wide cost."""
@@ -74,7 +76,8 @@ def searched(
     chosen = _promising(file, runner, candidates, level, paths)
     changes = {str(parts): candidates.changed(file, parts) for parts in chosen}
     confidence = 1 - (1 - file.sampling.confidence) / len(chosen)
-    judged = on_ladder(file, runner, changes, confidence, skip=math.ceil(paths / runner.paths(level)))
+    skip = math.ceil(paths / runner.paths(level))
+    judged = on_ladder(file, runner, changes, confidence, broken=candidates.broken, skip=skip)
     plain, *entries = [
         WideningEntry(
             parts=list(parts),
@@ -110,7 +113,8 @@ def _promising(
     tallies = tallies_of(runner, changes, level, done=0, paths=paths)
     runner.forget(list(changes))
     alpha, form = 1 - file.sampling.confidence, candidates.form.name
-    edges = {s: edge_of(changes[str(s)].judged(file, tallies[str(s)], alpha), form) for s in sets}
+    judged = {s: changes[str(s)].judged(file, tallies[str(s)], alpha, candidates.broken) for s in sets}
+    edges = {s: edge_of(judged[s], form) for s in sets}
     best, found = edges[_PLAIN], []
     for parts in sorted(sets[1:], key=lambda one: (candidates.share(one), -edges[one])):
         if edges[parts] > best:

@@ -57,16 +57,19 @@ class _Kept:
 class LooserSetting(Setting):
     """A setting whose sums and products are those of a manner.
 
-    `of_two` are the lines that added two products of which either could have been fused.
+    `of_two` are the lines that added two products of which either could have been fused; `crossed` says whether one
+    operation started from what another line had stored, which takes a manner `across`. Nothing else that is asked of
+    a manner changes from run to run: another of its kind that says the same of these gives the same bits.
     """
 
-    __slots__ = ("_kept", "_manner", "of_two")
+    __slots__ = ("_kept", "_manner", "crossed", "of_two")
 
     def __init__(self, *placed: Any, manner: Manner, **named: Any) -> None:
         super().__init__(*placed, **named)
         self.direct = {}
         self._manner = manner
         self.of_two: dict[Place | None, None] = {}
+        self.crossed = False
         self._kept: dict[int, _Kept] = {}
 
     def operate(
@@ -131,13 +134,18 @@ class LooserSetting(Setting):
         known = self._kept.get(id(carrier))
         if known is None or known.rounded is not carrier:
             return ()
-        if self._manner.across:
+        if self._in_expression(known):
             return known.parts
+        self.crossed |= self._manner.across and bool(known.parts)
+        return known.parts if self._manner.across else ()
+
+    def _in_expression(self, known: _Kept) -> bool:
+        """Return whether a result has not been stored, returned or left behind since."""
         frame = self.frame()
         if frame is None or id(frame) != known.frame or frame.f_code is not known.code or frame.f_lasti <= known.at:
-            return ()
+            return False
         stores = _stores(frame.f_code)
-        return () if bisect_right(stores, known.at) < bisect_right(stores, frame.f_lasti) else known.parts
+        return bisect_right(stores, known.at) >= bisect_right(stores, frame.f_lasti)
 
 
 @lru_cache(maxsize=256)

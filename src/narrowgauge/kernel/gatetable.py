@@ -43,7 +43,7 @@ _ROWS: Final = {
 # What a draft says of them.
 GATE_LINES: Final = (
     "[policy]",
-    '# file = "audit.policy.json"  # what narrowgauge gate holds the kernel to; the default is this file\'s name',
+    '# file = "audit.policy.json"  # what the gate holds the kernel to; default: the name of this file, .policy.json',
     "",
     "[gate]",
     '# stale = "note"  # what a kernel is that changed and still holds, or "fail"',

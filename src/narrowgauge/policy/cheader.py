@@ -48,8 +48,9 @@ def c_header(document: PolicyDocument) -> str:
 
     `PREFIX_at(level, &parameters)` gives the rule of a level, with `outside` where Python's guard would raise or
     answer with the reference. Parameters are fields of `PREFIX_parameters`: numbers as double (as int64_t where a
-    double does not hold it), texts, booleans, and arrays of numbers with their count, row by row. Raises PolicyError,
-    with the parameter's name, for other arrays and for texts that C does not hold.
+    double does not hold it), texts, booleans, and arrays of numbers with their count, row by row. Of a NULL pointer the
+    first parameter is outside. Raises PolicyError, with the parameter's name, for other arrays and for texts that C
+    does not hold.
     """
     prefix = _prefix(document.kernel.run)
     fields = fields_of(document.domain.parameters)
@@ -186,9 +187,10 @@ def _examined(prefix: str, fields: Sequence[Field]) -> list[str]:
     for one in fields:
         lines += one.table(prefix)
     lines += [
-        "/* Return whether the parameters are as they were audited, or the first that is not. */",
+        "/* Return whether the parameters are as they were audited, or the first that is not; of NULL the first. */",
         f"static inline {prefix}_outside {prefix}_examined(const {prefix}_parameters *given)",
         "{",
+        f"    if (given == NULL) return {prefix}_outside_parameter_{fields[0].name};",
         *(f"    if ({one.refused(prefix)}) return {prefix}_outside_parameter_{one.name};" for one in fields),
         f"    return {prefix}_inside;",
         "}",

@@ -101,6 +101,10 @@ class Policy:
         packed = {name: part.fixed for name, part in parameters.items() if _packs(part.fixed)}
         self._pack = struct.Struct(f"{len(packed)}d").pack
         self._packed, self._packed_of = self._pack(*packed.values()), _values_of(tuple(packed))
+        self._number, self._bits = int.from_bytes(self._packed, "big"), 8 * len(self._packed)
+        self._known_by_bytes = list(packed)
+        self._left: dict[int, list[tuple[str, ParameterPart, float, float]]] = {}
+        self._rest_of = _values_of(tuple(name for name in parameters if name not in packed))
         self._boxes = [(name, low, high) for name, _, low, high in self._limits if low <= high and name not in packed]
         others = {name: part.fixed for name, part, low, high in self._limits if low > high}
         self._others = [(name, type(value), value) for name, value in others.items()]
@@ -127,7 +131,7 @@ class Policy:
 
         `kernel` is the function that is going to run, "file.py:function", or the path of a library. Raises
         DocumentError where the file is no policy, PolicyError where the kernel is another one than was audited, or
-        cannot be compared.
+        cannot be compared, as a command never can.
         """
         document = read_policy(Path(path))
         if kernel is not None:
@@ -142,21 +146,22 @@ class Policy:
         a parameter is missing or unknown, and OutsidePolicyError, one of these, as `outside` says.
         """
         try:
-            if (
-                type(level) is int
-                and 0 <= level < len(self._rules)
-                and len(parameters) == self._quickly
-                and self._pack(*self._packed_of(parameters)) == self._packed
-            ):
-                for name, low, high in self._boxes:
-                    value = parameters[name]
-                    if not (isinstance(value, float) or type(value) is int) or not low <= value <= high:
-                        return self._examined(level, parameters)
-                for name, kind, fixed in self._others:
-                    value = parameters[name]
-                    if type(value) is not kind or value != fixed:
-                        return self._examined(level, parameters)
-                return self._rules[level]
+            if type(level) is int and 0 <= level < len(self._rules) and len(parameters) == self._quickly:
+                packed = self._pack(*self._packed_of(parameters))
+                if packed == self._packed:
+                    for name, low, high in self._boxes:
+                        value = parameters[name]
+                        if not (isinstance(value, float) or type(value) is int) or not low <= value <= high:
+                            break
+                    else:
+                        for name, kind, fixed in self._others:
+                            value = parameters[name]
+                            if type(value) is not kind or value != fixed:
+                                break
+                        else:
+                            return self._rules[level]
+                self._rest_of(parameters)  # a KeyError where another name stands in the place of one
+                return self._from_the_first(level, parameters, packed)
         except (KeyError, struct.error):  # a name that is missing, no number
             pass
         return self._examined(level, parameters)
@@ -171,19 +176,36 @@ class Policy:
 
     def _examined(self, level: object, parameters: dict[str, object]) -> Rule:
         """Return what `at` does, for whatever it is asked."""
-        number = level if type(level) is int and level >= 0 else self._number(level)
+        number = level if type(level) is int and level >= 0 else self._numbered(level)
         if parameters.keys() != self._parameters.keys():
             self._refuse_names(parameters)
         if number >= len(self._rules):
             return self._answer(number, BEYOND, None)
-        for name, part, low, high in self._limits:
+        return self._looked_at(number, parameters, self._limits)
+
+    def _from_the_first(self, level: int, parameters: dict[str, object], packed: bytes) -> Rule:
+        """Return what `_examined` does for a level and names that are known, and values that pack to these bytes.
+
+        The highest bit that differs says up to where they are those of the audit; what they say is not looked at again.
+        """
+        alike = (self._bits - (int.from_bytes(packed, "big") ^ self._number).bit_length()) // 64
+        left = self._left.get(alike)
+        if left is None:
+            known = set(self._known_by_bytes[:alike])
+            left = self._left[alike] = [one for one in self._limits if one[0] not in known]
+        return self._looked_at(level, parameters, left)
+
+    def _looked_at(
+        self, level: int, parameters: dict[str, object], limits: list[tuple[str, ParameterPart, float, float]]
+    ) -> Rule:
+        for name, part, low, high in limits:
             value = parameters[name]
             if low <= value <= high if type(value) is float else _inside(value, part):
                 continue
-            return self._answer(number, self._reasons[name], value)
-        return self._rules[number]
+            return self._answer(level, self._reasons[name], value)
+        return self._rules[level]
 
-    def _number(self, level: object) -> int:
+    def _numbered(self, level: object) -> int:
         try:
             number = -1 if isinstance(level, bool) else operator.index(level)  # type: ignore[arg-type]
         except TypeError:
@@ -263,6 +285,11 @@ def _dtype(name: FormatName) -> np.dtype[Any]:
 
 def _compare(known: KernelPart, kernel: Callable[..., Any] | str | Path, source: str) -> None:
     """Raise PolicyError where a kernel is not the one that the policy was drawn up for."""
+    if _is_command(known):
+        raise PolicyError(
+            f"{source}: kernel: the policy's kernel is the command {known.run}, which cannot be compared; accepted: no "
+            "kernel, and narrowgauge gate to see whether the policy still holds"
+        )
     try:
         found = identity_of(kernel, run=known.run, covers=known.covers, modules=known.modules)
     except PolicyError as problem:
@@ -275,6 +302,12 @@ def _compare(known: KernelPart, kernel: Callable[..., Any] | str | Path, source:
             f"its fingerprint is {found}, the policy's {known.fingerprint}, of {covered}; accepted: the kernel as it "
             "was audited, or the policy of a new audit"
         )
+
+
+def _is_command(known: KernelPart) -> bool:
+    """Return whether what was audited is a command: known by its bytes, and not as "library:symbol"."""
+    _, colon, symbol = known.run.rpartition(":")
+    return known.covers == "bytes" and not (colon and symbol.isascii() and symbol.isidentifier())
 
 
 def _packs(value: object) -> bool:

@@ -259,11 +259,17 @@ def _claim(claimed: ClaimedEntry | None, sides: Mapping[str, SideEntry]) -> str:
         return "Nothing is claimed: a scenario at the audited point itself does not pass."
     if all((one.low, one.high) == (sides[name].low, sides[name].high) for name, one in claimed.parameters.items()):
         return "The verdict is claimed for the whole box."
+    if not claimed.scenarios:
+        return (
+            "The verdict is claimed for the audited point alone: no scenario that passes lies in what the others leave "
+            "of the box."
+        )
     box = joined(_span(clean(name), one) for name, one in claimed.parameters.items())
+    lie = f"{scenarios_counted(claimed.scenarios)} {'lies' if claimed.scenarios == 1 else 'lie'} in it."
     where = f"{percent(claimed.share)} of the box in the coordinates of its scales" if claimed.share else "no more"
     return (
         f"The verdict is claimed for {box}: {where}. It is the largest box that holds the audited point and, of the "
-        f"scenarios, only ones that pass; {scenarios_counted(claimed.scenarios)} lie in it."
+        f"scenarios, only ones that pass; {lie}"
     )
 
 

@@ -167,9 +167,14 @@ def _rows(listing: Listing) -> Iterator[tuple[str, float | None]]:
 
 
 def shown_quantity(record: AuditRecord, form: str, study: FormatLines) -> str | None:
-    """Return the quantity whose shares stand at the source: the one that decides; None where a study has none."""
+    """Return the quantity whose shares stand at the source; None where a study has none.
+
+    It is the one that decides, or where that has no shares, as a yes/no quantity may, the first that has.
+    """
     decider = record.verdict.finest_paying_level[form].decided_by
-    return decider if decider in study.quantities else next(iter(study.quantities), None)
+    names = sorted(study.quantities, key=lambda name: name != decider)
+    shared = (name for name in names if (total := study.quantities[name].error.total) and total.share is not None)
+    return next(shared, next(iter(names), None))
 
 
 def study_words(record: AuditRecord, form: str, study: FormatLines) -> str:
@@ -265,7 +270,8 @@ def what_if_table(study: FormatLines) -> Ruled:
 
 def _paying(one: PaysEntry) -> tuple[str, str, str]:
     if one.level is None:
-        return "on no level", NONE, figure(one.step_cost)
+        none = "on no level" if one.possible is None else f"on no level for sure, perhaps to {one.possible}"
+        return none, NONE, figure(one.step_cost)
     open_ended = f", perhaps {one.possible}" if one.possible is not None and one.possible > one.level else ""
     return f"{one.level}{open_ended}", interval(one.gain, one.gain_low, one.gain_high), figure(one.step_cost)
 
@@ -311,7 +317,7 @@ def _bulleted(lines: list[str]) -> list[RenderableType]:
 
 def _pays(one: PaysEntry) -> str:
     if one.level is None:
-        return "pays on no level"
+        return "pays on no level" if one.possible is None else f"pays on no level for sure, perhaps to {one.possible}"
     open_ended = f", perhaps to level {one.possible}" if one.possible is not None and one.possible > one.level else ""
     return (
         f"pays to level {one.level}{open_ended}, with a gain of {interval(one.gain, one.gain_low, one.gain_high)} there"

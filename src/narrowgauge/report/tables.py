@@ -96,7 +96,8 @@ def best_table(record: AuditRecord, entry: QuantityEntry) -> Ruled:
     for level in entry.levels:
         best = level.best
         if best is None:
-            table.add_row(*_plain(str(level.level), "none is finite", NONE, NONE))
+            what = "nothing varies" if level.reference.level_variance == 0 else "none is finite"
+            table.add_row(*_plain(str(level.level), what, NONE, NONE))
             continue
         correction = level.corrections.get(f"{best.narrow}:{best.wide}")
         gain = interval(best.gain, best.gain_low, best.gain_high)
@@ -227,8 +228,11 @@ def missing_gains(record: AuditRecord, entry: QuantityEntry) -> Iterable[str]:
         yield f"no gain on {levels_named(nothing)}: {today(record)} has no finite variance there to compare with"
     if any(level.best is not None and level.best.wide is None for level in levels):
         yield "no break-even ratio for a scheme of one format: it has no correction"
-    if any(level.best is None for level in levels):
+    still = [level.reference.level_variance == 0 for level in levels if level.best is None]
+    if not all(still):
         yield "no gain where no scheme is finite"
+    if any(still):
+        yield "no gain where nothing varies"
 
 
 def _why(arm: ArmEntry | None) -> str:
