@@ -34,15 +34,15 @@ def test_without_tables_the_policy_lies_beside_the_audit_file(tmp_path):
     """Of its stem; a changed kernel is a note."""
     settings = gate_settings(written(tmp_path))
     assert settings.policy == tmp_path / "plant.policy.json"
-    assert (settings.stale, settings.paths, settings.most_paths, settings.watch) == ("note", 8192, None, False)
+    assert (settings.stale, settings.paths, settings.most_paths, settings.watch) == ("note", 8192, None, True)
 
 
 def test_what_the_tables_say_is_kept(tmp_path):
     """The policy is relative to the audit file."""
-    more = '[policy]\nfile = "../held.json"\n[gate]\nstale = "fail"\npaths = 2048\nmost_paths = 4096\nwatch = true\n'
+    more = '[policy]\nfile = "../held.json"\n[gate]\nstale = "fail"\npaths = 2048\nmost_paths = 4096\nwatch = false\n'
     settings = gate_settings(written(tmp_path, more))
     assert settings.policy == tmp_path / ".." / "held.json"
-    assert (settings.stale, settings.paths, settings.most_paths, settings.watch) == ("fail", 2048, 4096, True)
+    assert (settings.stale, settings.paths, settings.most_paths, settings.watch) == ("fail", 2048, 4096, False)
 
 
 def test_an_audit_does_not_record_them(tmp_path):
