@@ -1,5 +1,7 @@
 """The box of parameters that a policy claims: what of its scenarios holds, and whole gates that try its corners."""
 
+import dataclasses
+import math
 from types import SimpleNamespace
 
 import msgspec
@@ -243,6 +245,9 @@ most_paths = 4096
 """
 
 
+BOXED = (("spot", 50.0, 200.0), ("volatility", 0.1, 0.4))
+
+
 @pytest.fixture(scope="module")
 def audit(tmp_path_factory):
     """An audit file whose policy claims its whole box, with its finished audit in `out`."""
@@ -254,6 +259,22 @@ def audit(tmp_path_factory):
     assert document.domain.parameters["spot"].high == 200.0
     write_policy(document, folder / "audit.policy.json")
     return folder / "audit.toml"
+
+
+@pytest.mark.parametrize(("least", "paths"), [(0.9, 1024), (math.inf, 4096)])
+def test_a_corner_whose_edge_has_come_near_enough_draws_no_more_paths(audit, least, paths):
+    """Of a format that costs what float64 costs it is about 1: no number of paths would show it to be above."""
+    box = {name: ParameterPart(low=low, high=high, scale="linear") for name, low, high in BOXED}
+    file = read_audit_file(audit)
+    cost = msgspec.structs.replace(file.cost, float16=1.0, float64=1.0)
+    sampling = msgspec.structs.replace(file.sampling, most_paths=8192, confidence=0.999)
+    file = msgspec.structs.replace(file, cost=cost, sampling=sampling, domain=None)
+    asked = claimed_corners(file, box, dict.fromkeys((0, 1), ("float16",)), quantities=1, least_edge=least)
+    asked = dataclasses.replace(asked, domain=msgspec.structs.replace(asked.domain, most_paths=4096))
+    record = run_audit(file, None, corners=asked, watched=False).record
+    assert [one.kind for one in record.domain.scenarios] == ["corner"] * 4
+    assert max(level.paths for one in record.domain.scenarios for level in one.levels) == paths
+    assert all(level.edge_low > 0.9 for one in record.domain.scenarios for level in one.levels)
 
 
 def gated(audit, source, folder):
