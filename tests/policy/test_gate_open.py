@@ -190,6 +190,16 @@ def test_claims_and_corners_share_the_false_alarms_of_a_gate(record, claims, cor
     assert claims * each**2 + corners * 1e-6 <= 1e-4 * (1 + 1e-12)
 
 
+@pytest.mark.parametrize(
+    ("table", "key", "value"), [("kernel", "shared", ["tables"]), ("target", "largest_correction", 1e-9)]
+)
+def test_what_would_hide_an_error_is_a_setting_of_the_policy(record, held, table, key, value):
+    """A module that is no longer rounded, and a bound that somebody declares; the policy was made without."""
+    assert f"{table}.{key}" in held.assumed
+    found = judge(held, changed(record, "asked", to={**record.asked, table: {**record.asked[table], key: value}}))
+    assert keys(found, "fails") == {("settings", None, None)}
+
+
 def test_a_cost_of_approximate_draws_is_a_setting_of_a_policy_that_has_one(record, held):
     """Its edges rest on it."""
     dear = changed(held, "cost", "approximate_draws", to=0.25)

@@ -16,6 +16,8 @@ from narrowgauge.record.policy import FormatName, PolicyDocument
 
 __all__ = ["FACTS", "fact", "facts_of", "settings_facts"]
 
+# A policy knows of these where the audit took the default; with another value less is rounded, or an error is hidden.
+_DEFAULTS = ("kernel.shared", "target.largest_correction")
 FACTS = ("settings", "fingerprint", "run", "escapes", "branches", "finite")
 
 
@@ -64,6 +66,9 @@ def _differing(policy: PolicyDocument, asked: Mapping[str, object]) -> Iterator[
         yield from _unlike(f"target.rmse, {name},", rmse.get(name) if isinstance(rmse, dict) else rmse, value)
     for key in ("bias_share", "worthwhile"):
         yield from _unlike(f"target.{key}", target.get(key), getattr(policy.target, key))
+    for key in (one for one in _DEFAULTS if one in policy.assumed):
+        table, _, name = key.partition(".")
+        yield from _unlike(key, _table(asked, table).get(name), policy.assumed[key])
     yield from _unlike("formats.today", _table(asked, "formats").get("today"), policy.today)
     if policy.cost.source != "measured":
         for name in get_args(FormatName):
