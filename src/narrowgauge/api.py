@@ -16,8 +16,8 @@ from msgspec.structs import replace as changed
 
 from narrowgauge.conduct.account import account
 from narrowgauge.conduct.branches import branches_entry
-from narrowgauge.conduct.domain import explore
-from narrowgauge.conduct.gate import gate_seed, reduced
+from narrowgauge.conduct.domain import Corners, explore
+from narrowgauge.conduct.gate import claimed_corners, gate_seed, reduced
 from narrowgauge.conduct.lines import line_study, studied
 from narrowgauge.conduct.owntrial import examine_own
 from narrowgauge.conduct.run import Outcome, Watcher, run
@@ -34,6 +34,7 @@ from narrowgauge.measure.store import Identity, Ledger
 from narrowgauge.measure.task import Bench, pinned
 from narrowgauge.measure.workers import Workers, engine_for
 from narrowgauge.policy.gate import ALPHA, concerned, fails_for_now, judge, levels_open, second
+from narrowgauge.policy.gatedomain import DOMAIN, LEAST_EDGE
 from narrowgauge.policy.gatefacts import settings_facts
 from narrowgauge.policy.gatefigures import arms_of
 from narrowgauge.policy.gatefile import Held, held_to, stopped
@@ -128,12 +129,13 @@ def run_audit(
     tell: Callable[[str], None] | None = None,
     open_levels: Callable[[AuditRecord], Collection[int]] | None = None,
     watched: bool = True,
+    corners: Corners | None = None,
 ) -> Audit:
     """Run an audit and write its files into `out`, if given.
 
     With `resume` the blocks that an audit left there are not run again; `tell` hears where that is not as it may be
     thought. The levels that `open_levels` returns of a record draw more paths; without it those that are undecided.
-    `watched`: every number of a few paths is looked at, too.
+    `watched`: every number of a few paths is looked at, too. `corners` are tried in place of [domain].
     Raises AuditFolderError where `out` holds another audit, or an unfinished one that is not resumed, and
     `replace` is false, before anything is measured; KernelError inside another audit.
     """
@@ -161,7 +163,7 @@ def run_audit(
         outcome = run(file, kernel, watcher=watcher, engine=engine, ledger=ledger, open_levels=rule, studied=watched)
         resumed = len(ledger.kept) if ledger is not None else 0
         damaged = ledger.damaged if ledger is not None else 0
-        domain = explore(file, outcome, engine=engine, ledger=ledger, watcher=watcher)
+        domain = explore(file, outcome, engine=engine, ledger=ledger, watcher=watcher, corners=corners)
         where = outcome.fingerprints if domain is None else tuple(sorted({*outcome.fingerprints, *domain.fingerprints}))
         made = provenance(time.perf_counter() - start, engine.title, where, resumed, damaged)
         made["imported"] = versions_of(source.imports)
@@ -333,21 +335,33 @@ def gate_held(held: Held, *, seed: int | None = None, who: Workers) -> GateEntry
     settings = settings_facts(policy, file.asked())
     if any(one.state == "fails" for one in settings):  # figures of other settings say nothing of these
         return held.entry(settings, None, seed=own)
-    arms = {arm for level in policy.levels for arm in arms_of(level)}
-    levels = [level.level for level in policy.levels]
+    arms = {level.level: arms_of(level) for level in policy.levels}
+    levels = list(arms)
     findings: list[Finding] = []
     paths = [0] * len(levels)
     for stage in (1, 2):
-        smaller = reduced(file, arms, held.settings, seed=gate_seed(own, stage), confidence=1 - ALPHA)
+        used = {arm for both in arms.values() for arm in both}
+        smaller = reduced(file, used, policy.cost, held.settings, seed=gate_seed(own, stage), confidence=1 - ALPHA)
+        tried = stage == 1 or any(one.check == DOMAIN and one.state == "fails" for one in findings)
+        corners = claimed_corners(
+            smaller, policy.domain.parameters, arms, quantities=len(policy.target.rmse), least_edge=LEAST_EDGE
+        )
 
         def rule(record: AuditRecord, before: Sequence[Finding] = tuple(findings)) -> Collection[int]:
             return levels_open(concerned(judge(policy, record, stale=stale), before), levels)
 
         try:
-            record = run_audit(smaller, None, workers=who, open_levels=rule, watched=held.settings.watch).record
+            record = run_audit(
+                smaller,
+                None,
+                workers=who,
+                open_levels=rule,
+                watched=held.settings.watch,
+                corners=corners if tried else None,
+            ).record
         except (KernelError, DispatchError) as problem:
             return held.entry([*findings, stopped(problem)], None, seed=own, paths=paths)
-        fresh = judge(policy, record, stale=stale)
+        fresh = judge(policy, record, stale=stale, counted=held.settings.watch)
         findings = second(findings, fresh) if findings else fresh
         drawn = next(iter(record.quantities.values())).levels
         paths = [before + level.paths for before, level in zip(paths, drawn, strict=True)]

@@ -53,7 +53,8 @@ def gated(options: argparse.Namespace, show: Callable[[str], None]) -> int:
     All files are read before anything is measured, so that what is wrong with one is said at once.
     """
     from narrowgauge.errors import AuditFileError
-    from narrowgauge.policy.gatefile import audit_files, held_to, judge_finished
+    from narrowgauge.policy.gatefile import audit_files, held_to
+    from narrowgauge.policy.gatefinished import judge_finished
     from narrowgauge.policy.gateoutputs import GateFiles
     from narrowgauge.record.gate import report_of
     from narrowgauge.report.gate import gate_lines
@@ -71,8 +72,10 @@ def gated(options: argparse.Namespace, show: Callable[[str], None]) -> int:
 
         entries = [gate_held(one, seed=options.seed, who=gate_workers(options.workers)) for one in held]
     report = report_of(entries, f"narrowgauge {__version__}")
-    show(gate_lines(report, shutil.get_terminal_size((100, 24)).columns))
-    outputs.write(report)
+    try:
+        show(gate_lines(report, shutil.get_terminal_size((100, 24)).columns))
+    finally:  # whether or not anybody reads the table
+        outputs.write(report)
     return report.exit_code
 
 

@@ -93,6 +93,21 @@ def test_a_kernel_that_raises_anything_still_fails_in_every_file(audited, tmp_pa
     assert "&lt;b&gt;" in (tmp_path / "gate.md").read_text(encoding="utf-8")
 
 
+def test_they_are_written_though_nobody_reads_the_table(judge, tmp_path, monkeypatch):
+    """A reader that goes away is no reason for a service to find nothing, or what an earlier gate left."""
+
+    class Gone:
+        def write(self, text):
+            raise BrokenPipeError
+
+    (tmp_path / "gate.xml").write_text("of an earlier gate", encoding="utf-8")
+    with monkeypatch.context() as patched:
+        patched.setattr("sys.stdout", Gone())
+        code, _ = judge("--junit", "gate.xml")
+    assert code == 141
+    assert ElementTree.parse(tmp_path / "gate.xml").getroot().tag == "testsuites"
+
+
 def test_the_page_is_appended_to_the_steps_own(judge, tmp_path, monkeypatch):
     """What earlier steps said stays; without the option nothing is added."""
     page = tmp_path / "step.md"

@@ -32,8 +32,18 @@ BASES = {
     "reserve": ("reserve", 3, "{ option = 0.1, output = 0.004 }", ()),
     "compensated": ("reserve", 6, "{ option = 0.1, output = 0.004 }", COMPENSATED),
     "branched": ("reserve", 2, "{ option = 0.1, output = 0.004 }", ()),
+    "boxed": ("reserve", 2, "{ option = 0.1, output = 0.004 }", ()),
     "membrane": ("membrane", 2, "{ energy = 0.01, crossed = 0.02 }", ()),
 }
+
+
+BOX = """
+[domain]
+parameters.price_volatility = { low = 0.25, high = 0.45 }
+parameters.fee = { low = 45.0, high = 60.0 }
+scenarios = 8
+most_paths = 8192
+"""
 
 
 def prepared(base, folder):
@@ -52,7 +62,7 @@ def prepared(base, folder):
         assert found == 1, key
     audit = folder / "audit.toml"
     text = text.partition("\n[policy]\n")[0] + '\n[policy]\nfile = "held.policy.json"\n'
-    text += '\n[branches]\nlow = "reserve.py:cheap"\n' if base == "branched" else ""
+    text += {"branched": '\n[branches]\nlow = "reserve.py:cheap"\n', "boxed": BOX}.get(base, "")
     audit.write_text(text, encoding="utf-8")
     run_audit(read_audit_file(audit), folder / "out")
     write_policy(draw_up(*read_audit(folder / "out")), folder / "held.policy.json")

@@ -362,11 +362,11 @@ def test_a_finished_audit_fails_at_one_in_a_million_only(record, held):
 
 def test_a_number_is_not_shown_on_the_other_side_of_its_limit(record, held):
     """The digits of a figure go as far as its limit needs them."""
-    from narrowgauge.policy.gateclaims import _beside
+    from narrowgauge.policy.gateclaims import beside
 
-    assert _beside(1.49999, 1.5) == "1.49999"
-    assert _beside(1.42, 1.5) == "1.42"
-    assert _beside(1.5, 1.5) == "1.5"
+    assert beside(1.49999, 1.5) == "1.49999"
+    assert beside(1.42, 1.5) == "1.42"
+    assert beside(1.5, 1.5) == "1.5"
 
 
 def test_the_verdict_needs_no_numpy():

@@ -61,6 +61,31 @@ def test_a_mistake_is_caught(name, audits, tmp_path):
         assert [one.state for one in entry.findings if one.check == "fingerprint"] == ["note"]
 
 
+def test_a_kernel_that_raises_in_half_precision_alone_fails_at_its_line(audits, tmp_path):
+    """No figure of that format is there to be compared, and the reference is sound."""
+    old = "    saved = np.exp(x) * np.maximum(q, 0.0) - fee\n"
+    audit = changed(audits("reserve"), tmp_path, (old, f"{old}    if np.isinf(saved * 1e4).any():\n        1 / 0\n"))
+    entry = cases.gated(audit)
+    (one, *_) = failed = [one for one in entry.findings if one.state == "fails"]
+    assert {one.check for one in failed} == {"run"}
+    assert "float16 raised ZeroDivisionError" in one.message
+    lines = (audit.parent / one.place.file).read_text(encoding="utf-8").splitlines()
+    assert lines[one.place.line - 1] == "        1 / 0"
+
+
+@pytest.mark.parametrize("watch", ["true", "false"])
+def test_lost_additions_and_subnormals_are_counted_where_somebody_wants_it(watch, audits, tmp_path):
+    """On the levels on which the policy has them."""
+    audit = changed(audits("reserve"), tmp_path)
+    with audit.open("a", encoding="utf-8") as file:
+        file.write(f"\n[gate]\nwatch = {watch}\n")
+    entry = cases.gated(audit)
+    assert entry.verdict == "pass"
+    counted = {one.level for one in entry.findings if one.check == "lost additions"}
+    assert counted == ({0, 2, 3} if watch == "true" else set())
+    assert counted == {one.level for one in entry.findings if one.check == "subnormals"}
+
+
 def test_fifty_gates_of_the_unchanged_example_pass(audits):
     """None fails.
 

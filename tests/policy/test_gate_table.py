@@ -12,6 +12,7 @@ models/bad.toml: the gate FAILS
 policy models/reserve.policy.json, kernel reserve.py:value
   (models/reserve.py:25)
 4,096 to 8,192 paths a level, seed 7
+the policy is of this class of machine, Linux x86_64 (AVX2)
 
 check    found             nearest to its limit
 escapes  1 fails
@@ -94,6 +95,24 @@ def test_for_a_figure_with_a_most_the_upper_bound_counts():
         finding(level=2, estimate=0.5, low=0.4, high=0.6, **side),
     )
     assert "0.100 (0 to 0.900), at most 1: level 1" in gate_lines(report(entry(wide, large)))
+
+
+def test_a_gate_that_measured_nothing_says_what_the_policy_is_of():
+    """Whatever machine it was held on."""
+    text = gate_lines(report(entry(finding(), machine=None, same_machine=None)), 200)
+    assert "\nthe policy is of Linux x86_64 (AVX2)\n" in text
+
+
+def test_an_inconclusive_gate_says_how_it_is_decided():
+    """With more paths, or by measuring at all; a fact that is open no number of paths decides."""
+    waits = finding("undecided", "bias", message="it is open")
+    assert "to decide what is open: a larger most_paths under [gate] in models/reserve.toml" in gate_lines(
+        report(entry(waits)), 200
+    )
+    assert "to decide what is open: the gate without --measured\n" in gate_lines(report(entry(waits, seed=None)), 200)
+    unknown = finding("undecided", "branches", limit=None, estimate=None, low=None, high=None, compared=None)
+    for other in (report(entry(unknown)), report(entry(waits, finding("fails")))):
+        assert "to decide what is open" not in gate_lines(other, 200)
 
 
 def test_another_class_of_machine_is_named():

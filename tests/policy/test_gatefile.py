@@ -34,6 +34,20 @@ def test_places_are_relative_to_the_repository(audit, record):
     assert (entry.seed, entry.paths, entry.verdict) == (3, [1024], "pass")
 
 
+def test_a_project_inside_a_repository_is_not_its_root(audit):
+    """A hosting service knows a file by its path from the root of all projects."""
+    (audit.parent / "pyproject.toml").write_text("", encoding="utf-8")
+    assert held_to(audit).entry([], None, seed=1).audit == "models/path/audit.toml"
+
+
+def test_a_command_to_renew_can_be_pasted_into_a_shell(audit, record):
+    """A blank in a name is no end of it."""
+    (audit.parents[2] / "my models").mkdir()
+    moved = audit.rename(audit.parents[2] / "my models" / "audit.toml")
+    write_policy(policy(record), moved.parent / "audit.policy.json")
+    assert held_to(moved).entry([], None, seed=1).renew == "narrowgauge policy 'my models/audit.toml'"
+
+
 def test_a_place_of_the_record_is_relative_to_the_audit_file(audit, record):
     """One that is not to be found is where the kernel is."""
     found = [

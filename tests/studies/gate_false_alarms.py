@@ -1,10 +1,11 @@
 """False alarms: gates of unchanged kernels, each with a seed of its own.
 
-Run as a program it writes reports/gate_false_alarms.md: `python tests/studies/gate_false_alarms.py KEPT [GATES
-GATES]`. The reserve example is gated as it is, by the policy beside the examples, and once more on a ladder that ends
-at level 3 and with a looser target: that policy takes float16 alone on two levels, so that the bias of float16 is
-judged, too. A gate takes less than a second, all in one process. What is done stands in the file KEPT, one line a
-gate, and is not done again: the same command goes on where it was stopped.
+Run as a program it writes reports/gate_false_alarms.md: `python tests/studies/gate_false_alarms.py KEPT [GATES GATES
+GATES]`. The reserve example is gated as it is, by the policy beside the examples; once more on a ladder that ends at
+level 3 and with a looser target: that policy takes float16 alone on two levels, so that the bias of float16 is judged,
+too; and on one that ends at level 2 with a policy that claims a box of two parameters, whose four corners are tried. A
+gate takes about a second, all in one process. What is done stands in the file KEPT, one line a gate, and is not done
+again: the same command goes on where it was stopped.
 
 What is asked: a gate is designed to fail for an unchanged kernel at most once in 10,000, so that of 1,000 at most 1 may
 fail; and at most 10 may be inconclusive.
@@ -59,9 +60,13 @@ def may(found: list[dict[str, object]]) -> bool:
 
 def main() -> int:
     """Write the report, and return 1 where more gates fail, or are inconclusive, than may."""
-    kept, numbers = Path(sys.argv[1]), [int(one) for one in sys.argv[2:4]] or [GATES, GATES]
+    kept, numbers = Path(sys.argv[1]), [int(one) for one in sys.argv[2:5]] or [GATES, GATES, GATES]
     with tempfile.TemporaryDirectory() as folder:
-        audits = {"to level 3": cases.prepared("reserve", Path(folder)), "as it is": EXAMPLE}
+        audits = {
+            "to level 3": cases.prepared("reserve", Path(folder, "short")),
+            "as it is": EXAMPLE,
+            "in a box": cases.prepared("boxed", Path(folder, "boxed")),
+        }
         found = {
             name: gates(name, audit, range(FIRST, FIRST + number), kept)
             for (name, audit), number in zip(audits.items(), numbers, strict=True)

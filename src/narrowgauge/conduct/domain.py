@@ -7,24 +7,32 @@ until the budget ends. The scenarios share the engine of the audit and its ledge
 from __future__ import annotations
 
 import functools
+import math
 from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
+
+import msgspec
 
 from narrowgauge.conduct.branches import broken_splits
 from narrowgauge.conduct.domainentries import domain_entry
 from narrowgauge.conduct.run import Outcome, Watcher
-from narrowgauge.conduct.scenarios import block_of, looks_of, scenarios_of, steps_of
+from narrowgauge.conduct.scenarios import Scenario, block_of, corners_of, looks_of, scenarios_of, steps_of
 from narrowgauge.conduct.stepcosts import with_costs
 from narrowgauge.conduct.tried import Trials, Tried
-from narrowgauge.judge.domain import tried_scheme
+from narrowgauge.judge.domain import SchemeFigures, tried_scheme
+from narrowgauge.judge.gain import Scheme
 from narrowgauge.kernel.auditfile import AuditFile
+from narrowgauge.kernel.domaintable import DomainTable
 from narrowgauge.measure.engines import Engine, Errand
 from narrowgauge.measure.scenarios import Look, Wanted, run_look
 from narrowgauge.measure.store import Ledger
 from narrowgauge.measure.task import pinned
 from narrowgauge.record.domain import DomainEntry
 
-__all__ = ["Explored", "explore"]
+__all__ = ["Corners", "Explored", "explore"]
+
+_MOST_CORNERS = 8  # of a box that is tried at its corners alone
+_OF_THE_EDGE = ("budget", "edge")  # why a scheme is undecided of which all else is known
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -35,23 +43,80 @@ class Explored:
     fingerprints: frozenset[str]
 
 
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Corners:
+    """What is tried in place of the scenarios of [domain]: given schemes, by level, at the corners of a box alone.
+
+    A corner with an edge whose lower bound is `least_edge` or more, of which nothing else is open, needs no more paths.
+    `quantities` is how many of them are judged.
+    """
+
+    domain: DomainTable
+    schemes: Mapping[int, Scheme]
+    least_edge: float
+    quantities: int
+
+    def asked(self, file: AuditFile) -> tuple[AuditFile, tuple[Scenario, ...]]:
+        """Return the audit file with this box, and its corners; with the quantities they share its confidence."""
+        boxed = msgspec.structs.replace(file, domain=self.domain)
+        points = corners_of(boxed, _MOST_CORNERS)
+        alpha = (1 - file.sampling.confidence) / (len(points) * self.quantities)
+        sampling = msgspec.structs.replace(file.sampling, confidence=1 - alpha)
+        scenarios = (Scenario(number=number, values=one, drawn=False) for number, one in enumerate(points, start=1))
+        return msgspec.structs.replace(boxed, sampling=sampling), tuple(scenarios)
+
+
 def explore(
-    file: AuditFile, outcome: Outcome, *, engine: Engine, ledger: Ledger | None = None, watcher: Watcher | None = None
+    file: AuditFile,
+    outcome: Outcome,
+    *,
+    engine: Engine,
+    ledger: Ledger | None = None,
+    watcher: Watcher | None = None,
+    corners: Corners | None = None,
 ) -> Explored | None:
-    """Try the schemes of an audit's verdict in the scenarios of [domain]; None without that table.
+    """Try the schemes of an audit's verdict in the scenarios of [domain], or what `corners` say; None without either.
 
     What the `ledger` has is not run again, and what is finished is put there. Raises what a worker that fails raises; a
     kernel that raises is a result.
     """
-    if file.domain is None:
+    if corners is not None:
+        file, scenarios = corners.asked(file)
+    elif file.domain is not None:
+        scenarios = scenarios_of(file)
+    else:
         return None
     with pinned():  # the same sums in the same order, whatever machine
-        return _Explorer(with_costs(file, outcome.costs), outcome, engine, ledger, watcher).explored()
+        file = with_costs(file, outcome.costs)
+        schemes = _schemes(file, outcome) if corners is None else corners.schemes
+        explorer = _Explorer(file, outcome, engine, ledger, watcher, scenarios=scenarios, schemes=schemes)
+        return explorer.explored(math.inf if corners is None else corners.least_edge)
+
+
+def _schemes(file: AuditFile, outcome: Outcome) -> dict[int, Scheme]:
+    """Return the scheme of each level that the verdict recommends."""
+    return {
+        level: tried_scheme(tally, outcome.judgements[level], file, outcome.alpha)
+        for level, tally in sorted(outcome.tallies.items())
+    }
+
+
+def _near(figures: SchemeFigures, least_edge: float) -> bool:
+    """Return whether nothing but the edge of a scheme is open, and its lower bound is so much at least."""
+    return figures.reason in _OF_THE_EDGE and figures.edge is not None and figures.edge.low >= least_edge
 
 
 class _Explorer:
     def __init__(
-        self, file: AuditFile, outcome: Outcome, engine: Engine, ledger: Ledger | None, watcher: Watcher | None
+        self,
+        file: AuditFile,
+        outcome: Outcome,
+        engine: Engine,
+        ledger: Ledger | None,
+        watcher: Watcher | None,
+        *,
+        scenarios: Sequence[Scenario],
+        schemes: Mapping[int, Scheme],
     ) -> None:
         assert file.domain is not None  # `explore` has seen to it
         self._file, self._outcome = file, outcome
@@ -59,23 +124,24 @@ class _Explorer:
         self._looks = looks_of(file.domain)
         self._trials = Trials(
             file=file,
-            schemes={
-                level: tried_scheme(tally, outcome.judgements[level], file, outcome.alpha)
-                for level, tally in sorted(outcome.tallies.items())
-            },
+            schemes=schemes,
             alpha=(1 - file.sampling.confidence) / len(self._looks),
             broken={level: broken_splits(outcome.branches, level) for level in outcome.tallies},
             names=frozenset(outcome.tallies[0].quantities),
             dropping=any(tally.dropped for tally in outcome.tallies.values()),
         )
-        self._tried = {scenario.number: Tried(scenario=scenario) for scenario in scenarios_of(file)}
+        self._tried = {scenario.number: Tried(scenario=scenario) for scenario in scenarios}
         self._fingerprints: set[str] = set()
 
-    def explored(self) -> Explored:
-        """Look at all scenarios until each is decided or the budget ends."""
+    def explored(self, least_edge: float) -> Explored:
+        """Look at all scenarios until each is decided, but for an edge of so much, or the budget ends."""
         for look, paths in enumerate(self._looks):
             pending = {
-                number: levels for number, tried in self._tried.items() if (levels := tried.pending(self._trials))
+                number: levels
+                for number, tried in self._tried.items()
+                if (
+                    levels := [level for level in tried.pending(self._trials) if not _near(tried.on(level), least_edge)]
+                )
             }
             if not pending:
                 break

@@ -5,18 +5,22 @@ What is judged, and how, is handed in: this module draws.
 
 from __future__ import annotations
 
-from collections.abc import Collection
+from collections.abc import Collection, Mapping, Sequence
 
 import msgspec
 import numpy as np
 
+from narrowgauge.conduct.domain import Corners
 from narrowgauge.draws.streams import GRAIN, Purpose
+from narrowgauge.judge.gain import Scheme
 from narrowgauge.kernel.arms import Arm
 from narrowgauge.kernel.auditfile import AuditFile
+from narrowgauge.kernel.domaintable import AxisTable, DomainTable
 from narrowgauge.kernel.gatetable import GateSettings
 from narrowgauge.measure.arms import REFERENCE
+from narrowgauge.record.policy import CostPart, ParameterPart
 
-__all__ = ["gate_seed", "reduced"]
+__all__ = ["claimed_corners", "gate_seed", "reduced"]
 
 
 def gate_seed(seed: int, stage: int) -> int:
@@ -29,12 +33,14 @@ def gate_seed(seed: int, stage: int) -> int:
 
 
 def reduced(
-    file: AuditFile, arms: Collection[str], settings: GateSettings, *, seed: int, confidence: float
+    file: AuditFile, arms: Collection[str], cost: CostPart, settings: GateSettings, *, seed: int, confidence: float
 ) -> AuditFile:
     """Return the audit that a gate runs: every level, and of the narrow formats those that the policy uses.
 
     `arms` are the names of the arms in the policy. The wide formats stay: edges are measured against them. A policy of
-    the reference alone is tried in the first narrow format. Scenarios and lines are left out: they are not held.
+    the reference alone is tried in the first narrow format. Measured costs are those of the policy's `cost`: a gate is
+    not about the speed of the machine that it runs on. Lines are left out, and the scenarios of [domain]: what a policy
+    claims of them is tried by `claimed_corners`.
     """
     used = [Arm.named(name) for name in arms if name != REFERENCE]
     exact = {arm.format for arm in used if arm.exact} - {REFERENCE}
@@ -56,7 +62,7 @@ def reduced(
         confidence=confidence,
         seed=seed,
     )
-    return msgspec.structs.replace(
+    made = msgspec.structs.replace(
         file,
         formats=msgspec.structs.replace(file.formats, narrow=narrow),
         draws=draws,
@@ -64,4 +70,39 @@ def reduced(
         sampling=sampling,
         domain=None,
         lines=None,
+    )
+    if cost.source != "measured" or not set(made.used_formats) <= set(cost.steps):
+        return made
+    return msgspec.structs.replace(made, cost=msgspec.structs.replace(made.cost, measured=False, **cost.steps))
+
+
+def claimed_corners(
+    file: AuditFile,
+    parameters: Mapping[str, ParameterPart],
+    arms: Mapping[int, Sequence[str]],
+    *,
+    quantities: int,
+    least_edge: float,
+) -> Corners | None:
+    """Return what a gate tries of the box that a policy claims, by the `arms` of each level; None where it claims none.
+
+    `file` is the audit that the gate runs. A corner has the paths of a scenario at the first look, and goes on as the
+    levels of the gate do, until its edge has come to `least_edge`.
+    """
+    sides = {
+        name: AxisTable(low=part.low, high=part.high, scale=part.scale or "linear")
+        for name, part in parameters.items()
+        if part.low is not None and part.high is not None
+    }
+    if not sides:
+        return None
+    domain = DomainTable(parameters=sides)
+    return Corners(
+        domain=msgspec.structs.replace(domain, most_paths=max(domain.paths, file.sampling.most_paths)),
+        schemes={
+            level: Scheme(kind="split" if wide else "alone", narrow=narrow, wide=wide[0] if wide else None)
+            for level, (narrow, *wide) in arms.items()
+        },
+        least_edge=least_edge,
+        quantities=quantities,
     )

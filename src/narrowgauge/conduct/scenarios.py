@@ -16,7 +16,17 @@ from narrowgauge.measure.arms import arms_of
 from narrowgauge.measure.scenarios import Speed
 from narrowgauge.measure.task import Key
 
-__all__ = ["DomainPlan", "Scenario", "audited_point", "block_of", "domain_plan", "looks_of", "scenarios_of", "steps_of"]
+__all__ = [
+    "DomainPlan",
+    "Scenario",
+    "audited_point",
+    "block_of",
+    "corners_of",
+    "domain_plan",
+    "looks_of",
+    "scenarios_of",
+    "steps_of",
+]
 
 _MOST_CORNERS = 32
 
@@ -51,8 +61,7 @@ class DomainPlan:
 def scenarios_of(file: AuditFile) -> tuple[Scenario, ...]:
     """Return scrambled Sobol points of the box of [domain], then its corners; they follow from the audit file alone.
 
-    Of a box with at most 32 corners these are all of them, lower ends first; else both ends of each side in turn, with
-    the other parameters at the audited point. The scrambling is keyed by the seed of the audit.
+    The scrambling is keyed by the seed of the audit.
     """
     domain = _domain(file)
     axes = list(domain.parameters.values())
@@ -61,16 +70,22 @@ def scenarios_of(file: AuditFile) -> tuple[Scenario, ...]:
     sobol = qmc.Sobol(len(axes), scramble=True, seed=source)
     places = sobol.random_base2(domain.scenarios.bit_length() - 1)
     drawn = [tuple(axis.value(float(place)) for axis, place in zip(axes, row, strict=True)) for row in places]
-    ends = [(axis.low, axis.high) for axis in axes]
-    if 2 ** len(axes) <= _MOST_CORNERS:
-        corners = list(itertools.product(*ends))
-    else:
-        point = audited_point(file)
-        corners = [(*point[:side], end, *point[side + 1 :]) for side, both in enumerate(ends) for end in both]
     return tuple(
         Scenario(number=number, values=values, drawn=number <= len(drawn))
-        for number, values in enumerate([*drawn, *corners], start=1)
+        for number, values in enumerate([*drawn, *corners_of(file, _MOST_CORNERS)], start=1)
     )
+
+
+def corners_of(file: AuditFile, most: int) -> list[tuple[float, ...]]:
+    """Return the corners of the box of [domain], lower ends first, where there are at most so many.
+
+    Else both ends of each side in turn, with the other parameters at the audited point.
+    """
+    ends = [(axis.low, axis.high) for axis in _domain(file).parameters.values()]
+    if 2 ** len(ends) <= most:
+        return list(itertools.product(*ends))
+    point = audited_point(file)
+    return [(*point[:side], end, *point[side + 1 :]) for side, both in enumerate(ends) for end in both]
 
 
 def audited_point(file: AuditFile) -> tuple[float, ...]:

@@ -11,7 +11,6 @@ and the command leaves `result.npy` there, (outputs, paths) in that type or a wi
 from __future__ import annotations
 
 import contextlib
-import hashlib
 import json
 import os
 import shutil
@@ -29,6 +28,7 @@ from narrowgauge.arithmetic.formats import Format
 from narrowgauge.errors import AuditFileError, KernelError
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.audittables import axes_of
+from narrowgauge.kernel.identity import identity_of_command
 from narrowgauge.kernel.owntables import CommandTable
 
 __all__ = ["Command", "abandon", "how_ended"]
@@ -56,17 +56,8 @@ class Command:
             raise AuditFileError(file.source, "command.run", what, "a program that may be executed, and its arguments")
 
     def digest(self) -> str:
-        """Return the fingerprint of the command's words and of the files among them that lie beside the audit file.
-
-        Other programs count by their name: a record must not differ because of where they are installed.
-        """
-        total = hashlib.sha256()
-        for word in self._table.run:
-            path = self._folder / word
-            inside = path.resolve().is_relative_to(self._folder.resolve())
-            text = path.read_bytes() if inside and path.is_file() else b""
-            total.update(f"{word} {hashlib.sha256(text).hexdigest()}\n".encode("utf-8", "surrogateescape"))
-        return f"sha256:{total.hexdigest()}"
+        """Return the fingerprint of the command's words and of the files among them that lie beside the audit file."""
+        return identity_of_command(self._folder, self._table.run)
 
     def check(self, formats: object) -> None:
         """Leave it: which formats a command offers shows when it is run."""

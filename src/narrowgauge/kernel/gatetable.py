@@ -15,7 +15,15 @@ from typing import Any, Final, Literal
 
 from narrowgauge.errors import AuditFileError
 
-__all__ = ["GATE_LINES", "GateSettings", "audit_files_of", "gate_settings", "project_file", "refusal_of"]
+__all__ = [
+    "GATE_LINES",
+    "GateSettings",
+    "audit_files_of",
+    "gate_settings",
+    "plain_tables",
+    "project_file",
+    "refusal_of",
+]
 
 _PATHS, _MOST = 8192, 2**40  # of a level at the first look, and the most that can be asked for
 _PROJECT = "pyproject.toml"
@@ -60,7 +68,7 @@ class GateSettings:
 
     `stale` says what a policy is whose kernel changed and still holds. A level gets `paths` at the first look, twice
     that at the next, up to `most_paths` (None: sampling.most_paths, or `paths` where that is less). With `watch` every
-    number of a few paths is looked at.
+    number of a few paths is looked at, for the shares of lost additions and of subnormals.
     """
 
     policy: Path
@@ -94,7 +102,7 @@ def refusal_of(raw: Mapping[str, object]) -> tuple[str, str, str] | None:
 def gate_settings(path: Path) -> GateSettings:
     """Return what an audit file says of its gate; AuditFileError says what is wrong with it, and where."""
     source = str(path)
-    raw = _toml(path)
+    raw = plain_tables(path)
     refusal = refusal_of(raw)
     if refusal is not None:
         raise AuditFileError(source, *refusal)
@@ -107,14 +115,14 @@ def project_file(folder: Path) -> Path | None:
     """Return the nearest pyproject.toml in a folder or above it that has a table [tool.narrowgauge]."""
     for place in (folder, *folder.parents):
         path = place / _PROJECT
-        if path.is_file() and isinstance(_toml(path).get("tool", {}).get("narrowgauge"), dict):
+        if path.is_file() and isinstance(plain_tables(path).get("tool", {}).get("narrowgauge"), dict):
             return path
     return None
 
 
 def audit_files_of(project: Path) -> list[Path]:
     """Return the audit files that [tool.narrowgauge] names, relative to its folder; AuditFileError if it is wrong."""
-    table = _toml(project)["tool"]["narrowgauge"]
+    table = plain_tables(project)["tool"]["narrowgauge"]
     key, accepted = "tool.narrowgauge", 'audits = ["path/of/audit.toml", ...]'
     unknown = next((name for name in table if name != "audits"), None)
     if unknown is not None:
@@ -125,7 +133,8 @@ def audit_files_of(project: Path) -> list[Path]:
     return [project.parent / name for name in names]
 
 
-def _toml(path: Path) -> dict[str, Any]:
+def plain_tables(path: Path) -> dict[str, Any]:
+    """Return what a TOML file holds, unchecked; AuditFileError where it cannot be read, or is none."""
     try:
         return tomllib.loads(path.read_text(encoding="utf-8-sig"))
     except FileNotFoundError:

@@ -11,7 +11,6 @@ import hashlib
 import sys
 from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass
-from importlib import metadata
 from pathlib import Path
 from types import FunctionType
 from typing import Any, Literal
@@ -20,7 +19,15 @@ from narrowgauge.dispatch.modules import Sources
 from narrowgauge.errors import PolicyError
 from narrowgauge.kernel.syntax import imported_names, syntax_digest
 
-__all__ = ["Covers", "Origin", "identity_of", "origin_of_sources", "versions_of"]
+__all__ = [
+    "Covers",
+    "Origin",
+    "identity_beside",
+    "identity_of",
+    "identity_of_command",
+    "origin_of_sources",
+    "versions_of",
+]
 
 Covers = Literal["syntax trees", "bytes", "code"]
 
@@ -84,8 +91,47 @@ def identity_of(kernel: Callable[..., Any] | str | Path, *, run: str, covers: Co
         raise PolicyError(f"the kernel cannot be read: {problem.filename}: {problem.strerror}") from None
 
 
+def identity_beside(folder: Path, run: str, *, modules: Sequence[str], shared: Sequence[str]) -> str:
+    """Return the fingerprint of the Python kernel that an audit file in a folder names; nothing is imported or run.
+
+    `run`, `modules` and `shared` are what its table [kernel] says. Raises PolicyError where something is not there.
+    """
+    target, _, name = run.rpartition(":")
+    inside = not target.endswith(".py")
+    found = Sources([folder]).find(target) if inside else None
+    file = folder / target if not inside else Path((found.file if found is not None else None) or "")
+    if not file.is_file():
+        raise PolicyError(f"there is no {target}")
+    path = file.resolve()
+    sources = Sources([folder] if inside else [path.parent, folder], modules, shared, last=[path.parent])
+    sources.place(sources.name_of(path) or (target if inside else path.stem), str(path))
+    missing = next((module for module in modules if sources.find(module) is None), None)
+    if missing is not None:
+        raise PolicyError(f"there is no module {missing!r}, which kernel.modules lists")
+    try:
+        return origin_of_sources(path, name, sources).fingerprint
+    except OSError as problem:
+        raise PolicyError(f"{problem.filename} cannot be read: {problem.strerror}") from None
+
+
+def identity_of_command(folder: Path, words: Sequence[str]) -> str:
+    """Return the fingerprint of a command's words and of the files among them that lie in the audit file's folder.
+
+    Other programs count by their name: a record must not differ because of where they are installed. Raises OSError.
+    """
+    total = hashlib.sha256()
+    for word in words:
+        path = folder / word
+        inside = path.resolve().is_relative_to(folder.resolve())
+        text = path.read_bytes() if inside and path.is_file() else b""
+        total.update(f"{word} {hashlib.sha256(text).hexdigest()}\n".encode("utf-8", "surrogateescape"))
+    return f"sha256:{total.hexdigest()}"
+
+
 def versions_of(imports: Iterable[str]) -> dict[str, str]:
     """Return the versions of the packages that these top-level modules belong to, as far as they are installed."""
+    from importlib import metadata  # a gate on a finished audit does without
+
     found: dict[str, str] = {}
     others: list[str] = []
     for name in sorted(set(imports)):

@@ -24,8 +24,11 @@ which is four standard errors of its logarithm away or more once it is decided. 
 such room: it is the policy's own lower bound. With s the standard error of the fresh one and p that of the policy's, a
 failure needs the two to be 3.3 s + 2.6 p apart, which is at least 3.8 of sqrt(s^2 + p^2) for s and p of which neither
 is below half of the other: less than 1 of 10,000 for a claim at one stage. A policy that is unlucky in that way fails
-its gate again and again, and is to be renewed. A finished audit cannot be drawn again: it is judged at 1 in a million
-at once, and what it decided at its own confidence holds (`alone`).
+its gate again and again, and is to be renewed from draws of another seed. The corners of a claimed box are judged as
+scenarios are: a level is refused at 1 in 1,000, all corners and quantities together, and again on fresh draws, where an
+edge is below 1 for certain that was above 1 for certain when the policy was drawn up; the levels take their shares of
+the 1 in 10,000. A finished audit cannot be drawn again: it is judged at 1 in a million at once, and what it decided at
+its own confidence holds (`alone`).
 
 What writes a verdict down takes the report as `record.gate` has it:
 
@@ -46,6 +49,7 @@ from dataclasses import dataclass
 import msgspec
 
 from narrowgauge.policy.gateclaims import RESOLUTION, Claim, claims_of
+from narrowgauge.policy.gatedomain import DOMAIN, domain_findings
 from narrowgauge.policy.gatefacts import FACTS, facts_of
 from narrowgauge.policy.gatefigures import confidence_of, looks_of
 from narrowgauge.record.audit import AuditRecord
@@ -56,6 +60,7 @@ __all__ = ["ALPHA", "FALSE_ALARMS", "concerned", "fails_for_now", "judge", "leve
 
 ALPHA = 1e-3  # of a claim, at one stage
 FALSE_ALARMS = 1e-4  # of a gate
+_NEVER = 3e4  # times nearer that bounds would have to come, by a billion times the paths
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -66,30 +71,45 @@ class _Sides:
     holds: float
 
 
-def judge(policy: PolicyDocument, record: AuditRecord, *, stale: str = "note", alone: bool = False) -> list[Finding]:
+def judge(
+    policy: PolicyDocument,
+    record: AuditRecord,
+    *,
+    stale: str = "note",
+    alone: bool = False,
+    counted: bool = False,
+) -> list[Finding]:
     """Return a finding for each fact and each claim of a policy, from a fresh record of its kernel.
 
     `stale` says whether a kernel that changed and still holds is a "note" or has to "fail"; with `alone` a claim that
-    fails cannot be measured again, and fails at 1 in a million only.
+    fails cannot be measured again, and fails at 1 in a million only; with `counted` it is open what the record does not
+    say of lost additions and subnormals.
     """
     facts = facts_of(policy, record, stale)
     if any(one.check in ("settings", "run") and one.state == "fails" for one in facts):
         return facts
-    claims = list(claims_of(policy, record))
-    sides = _sides(record, len(claims), alone=alone)
-    return [*facts, *(_found(claim, sides) for claim in claims)]
+    claims = list(claims_of(policy, record, counted=counted))
+    corners = list(domain_findings(policy, record, alone=alone))
+    sides = _sides(record, len(claims), len(corners), alone=alone)
+    return [*facts, *(_found(claim, sides) for claim in claims), *corners]
 
 
 def second(first: Sequence[Finding], fresh: Sequence[Finding]) -> list[Finding]:
     """Return the findings of both stages: of the claims that failed at the first, what the fresh draws show.
 
-    Facts and claims that did not fail stay as they are. Both lists are of one policy, in the same order.
+    Claims that did not fail stay as they are, and so do facts; one that fails on the fresh draws alone fails, too: a
+    path that is not finite is no chance of the sample.
     """
     again = {_key(one): one for one in fresh}
-    return [
+    found = [
         msgspec.structs.replace(again[_key(one)], stages=2) if _repeats(one) and _key(one) in again else one
         for one in first
     ]
+    broken = [one for one in fresh if _is_fact(one) and one.state == "fails"]
+    known = {_key(one) for one in found if one.state == "fails"}
+    new = [one for one in broken if _key(one) not in known]
+    kept = {one.check for one in new}
+    return [*(one for one in found if one.state != "holds" or not _is_fact(one) or one.check not in kept), *new]
 
 
 def concerned(fresh: Iterable[Finding], before: Sequence[Finding]) -> list[Finding]:
@@ -101,12 +121,13 @@ def concerned(fresh: Iterable[Finding], before: Sequence[Finding]) -> list[Findi
 def levels_open(findings: Iterable[Finding], levels: Sequence[int]) -> list[int]:
     """Return the levels whose undecided claims need more paths; a claim on all levels needs them on each.
 
-    None where a fact fails: nothing that more paths show would change the verdict.
+    None where a fact fails: nothing that more paths show would change the verdict. What is tried elsewhere draws paths
+    of its own.
     """
     findings = list(findings)
-    if any(one.state == "fails" and one.check in FACTS for one in findings):
+    if any(one.state == "fails" and _is_fact(one) for one in findings):
         return []
-    waiting = {one.level for one in findings if one.state == "undecided" and one.check not in FACTS}
+    waiting = {one.level for one in findings if one.state == "undecided" and one.check not in (*FACTS, DOMAIN)}
     return [level for level in levels if level in waiting or None in waiting]
 
 
@@ -122,16 +143,22 @@ def fails_for_now(findings: Iterable[Finding]) -> bool:
 
 
 def _repeats(finding: Finding) -> bool:
-    return finding.state == "fails" and finding.check not in FACTS
+    return finding.state == "fails" and not _is_fact(finding)
+
+
+def _is_fact(finding: Finding) -> bool:
+    """Return whether no other sample could show otherwise; of what is tried elsewhere a figure has a limit."""
+    return finding.check in FACTS or (finding.check == DOMAIN and finding.limit is None)
 
 
 def _key(finding: Finding) -> tuple[str, int | None, str | None, str | None]:
     return finding.check, finding.level, finding.quantity, finding.arm
 
 
-def _sides(record: AuditRecord, claims: int, *, alone: bool) -> _Sides:
+def _sides(record: AuditRecord, claims: int, corners: int, *, alone: bool) -> _Sides:
+    """Return the rates of a claim where so many `corners`, levels of a box, are judged at 1 in 1,000 beside them."""
     looks = looks_of(record)
-    each = min(ALPHA, math.sqrt(FALSE_ALARMS / max(1, claims)))
+    each = min(ALPHA, math.sqrt((FALSE_ALARMS - corners * ALPHA**2) / max(1, claims)))  # a ladder has at most 65
     if alone:
         return _Sides(fails=each**2 / looks, holds=max(each, 1 - confidence_of(record)) / looks)
     return _Sides(fails=each / looks, holds=each / looks)
@@ -147,7 +174,7 @@ def _found(claim: Claim, sides: _Sides) -> Finding:
         room = _log(bounds.estimate, RESOLUTION * claim.limit)
         width = _log(bounds.estimate, bounds.low)
     else:
-        fails, holds = strict.low > claim.limit, bounds.high <= claim.limit
+        fails, holds = strict.low > claim.limit, claim.settled or bounds.high <= claim.limit
         room, width = claim.limit - bounds.estimate, bounds.high - bounds.estimate
     if fails:
         return claim.finding(state="fails", bounds=strict, paths_needed=None)
@@ -165,5 +192,5 @@ def _needed(paths: int, width: float, room: float) -> int | None:
 
     Beyond its limit a claim has as far to go to fail.
     """
-    times = (width / abs(room)) ** 2 if room else math.inf
-    return math.ceil(paths * times) if 1.0 <= times < 1e9 else None
+    times = width / abs(room) if room else math.inf
+    return math.ceil(paths * times**2) if 1.0 <= times < _NEVER else None

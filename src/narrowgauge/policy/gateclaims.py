@@ -24,7 +24,7 @@ from narrowgauge.record.audit import ArmEntry, AuditRecord, LevelEntry
 from narrowgauge.record.gate import Check, Finding, State
 from narrowgauge.record.policy import ArmPart, LevelPart, PolicyDocument, SharePart
 
-__all__ = ["BATCHES", "RESOLUTION", "Claim", "claims_of"]
+__all__ = ["BATCHES", "RESOLUTION", "Claim", "beside", "claims_of"]
 
 BATCHES = 32  # of a block: what a standard error of the record rests on
 RESOLUTION = 0.9  # of a gain or an edge: how near to its limit the lower bound has to come
@@ -44,7 +44,8 @@ class Claim:
     """One claim: `bounds` gives the fresh figure at a two-sided error rate, None where it does not exist.
 
     `figure` is what it is, in words; it has to be at most `limit`, or with `at_least` no less. `paths` are those of
-    the level, the least of all levels for a claim on the whole.
+    the level, the least of all levels for a claim on the whole. What does not fail holds where it is `settled`: more
+    paths are not to be had for it.
     """
 
     check: Check
@@ -56,6 +57,7 @@ class Claim:
     at_least: bool
     paths: int
     bounds: Callable[[float], Bounds | None]
+    settled: bool = False
 
     def finding(self, *, state: State, bounds: Bounds | None, paths_needed: int | None) -> Finding:
         """Return what came of it."""
@@ -63,7 +65,7 @@ class Claim:
         if bounds is None:
             message = f"{self.figure} does not exist"
         else:
-            shown = [_beside(value, self.limit) for value in (bounds.estimate, bounds.low, bounds.high)]
+            shown = [beside(value, self.limit) for value in (bounds.estimate, bounds.low, bounds.high)]
             message = f"{self.figure} is {shown[0]} ({shown[1]} to {shown[2]}), {side} {self.limit:.4g} is accepted"
         if state == "undecided" and paths_needed is not None:
             where = "on every level" if self.level is None else "of the level"
@@ -84,8 +86,11 @@ class Claim:
         )
 
 
-def claims_of(policy: PolicyDocument, record: AuditRecord) -> Iterator[Claim]:
-    """Return every claim of a policy, quantity by quantity and level by level; the whole of a quantity comes last."""
+def claims_of(policy: PolicyDocument, record: AuditRecord, *, counted: bool = False) -> Iterator[Claim]:
+    """Return every claim of a policy, quantity by quantity and level by level; the whole of a quantity comes last.
+
+    `counted`: lost additions and subnormals are to be counted, so that it is open what a record does not say of them.
+    """
     costs, first = Costs(policy.cost, record.asked), next(iter(record.quantities))
     for name, quantity in record.quantities.items():
         reaches = [_Reach(level) for level in quantity.levels]
@@ -94,7 +99,7 @@ def claims_of(policy: PolicyDocument, record: AuditRecord) -> Iterator[Claim]:
             below = quantity.levels[level.level - 1].steps if level.level else 0
             yield from view.telescoping()
             if name == first:  # operations are those of all quantities
-                yield from view.shares()
+                yield from view.shares(counted=counted)
             for arm in arms_of(plan):
                 if arm != REFERENCE:
                     yield from view.errors(arm)
@@ -165,6 +170,7 @@ class _Level:
         *,
         arm: str | None = None,
         at_least: bool = False,
+        settled: bool = False,
     ) -> Claim:
         where = f"level {self._level.level}, {self._name}" + (f", {arm}" if arm else "")
         return Claim(
@@ -177,41 +183,53 @@ class _Level:
             at_least=at_least,
             paths=self._level.paths,
             bounds=bounds,
+            settled=settled,
         )
 
     def telescoping(self) -> Iterator[Claim]:
         found = self._level.telescoping
-        if found is None or found.difference is None or not found.se:
+        if found is None:
             return
-        size = abs(found.difference) / found.se
+        figure = "what the mean of its coarse paths is off that of the fine ones below, in standard errors past chance,"
+        if found.difference is None or found.se is None:
+            yield self._claim("levels", figure, 0.0, _unknown)
+            return
+        apart = abs(found.difference)
+        size = apart / found.se if found.se else math.inf if apart else 0.0
 
         def bounds(alpha: float) -> Bounds:
             excess = max(0.0, size - self._reach.of(alpha))  # known to differ or not: more paths would decide nothing
             return Bounds(estimate=excess, low=excess, high=excess)
 
-        figure = "what the mean of its coarse paths is off that of the fine ones below, in standard errors past chance,"
         yield self._claim("levels", figure, 0.0, bounds)
 
-    def shares(self) -> Iterator[Claim]:
-        """Yield the claims on lost additions and subnormals of each arm, where policy and record have counted them."""
+    def shares(self, *, counted: bool) -> Iterator[Claim]:
+        """Yield the claims on lost additions and subnormals of each arm that the policy has counted."""
         seen = None if self._record.range is None else self._record.range.watched
         levels = [] if seen is None else seen.levels
         watched = next((one.arms for one in levels if one.level == self._level.level), {})
-        for arm in (one for one in arms_of(self._plan) if one in watched and one in self._measured.arms):
-            part, entry = self._measured.arms[arm], watched[arm]
+        for arm in (one for one in arms_of(self._plan) if one in self._measured.arms):
+            part, entry = self._measured.arms[arm], watched.get(arm)
             for check, known, fresh in _SHARES:
-                before, now = getattr(part, known), getattr(entry, fresh)
-                if isinstance(before, SharePart) and now.share is not None:
+                before = getattr(part, known)
+                if not isinstance(before, SharePart) or (entry is None and not counted):
+                    continue
+                limit, figure = _TIMES_SHARE * before.high, f"its share of {check}, by its lower bound,"
+                now = None if entry is None else getattr(entry, fresh)
+                if now is None:
+                    yield self._claim(check, figure, limit, _unknown, arm=arm)
+                elif now.share is not None:  # or there is nothing of which it could be a share
+                    found = Bounds(estimate=now.share, low=now.share_low, high=now.share_high)
                     # Above its limit for certain or not: what a few paths show of it is all that is asked.
-                    high = now.share_low if now.share_low <= _TIMES_SHARE * before.high else now.share_high
-                    found = Bounds(estimate=now.share, low=now.share_low, high=high)
-                    figure = f"its share of {check}, by its lower bound,"
-                    yield self._claim(check, figure, _TIMES_SHARE * before.high, _constant(found), arm=arm)
+                    yield self._claim(check, figure, limit, _constant(found), arm=arm, settled=True)
 
     def errors(self, arm: str) -> Iterator[Claim]:
         """Yield the claims on the variance and on the mean of the rounding error of one arm."""
-        entry, known = self._level.arms.get(arm), self._measured.arms.get(arm)
-        if entry is None or known is None or entry.error_variance is None or known.error_variance is None:
+        entry, known = self._level.arms[arm], self._measured.arms.get(arm)
+        if known is None or known.error_variance is None:
+            return
+        if entry.error_variance is None:
+            yield self._claim("error variance", "its error variance", 0.0, _unknown, arm=arm)
             return
         mine, was = self._carriers(arm), known.effective_size
         spread, before = self._spreads(entry, known, arm)
@@ -225,7 +243,6 @@ class _Level:
                 lambda alpha: _times(spread.bounds(self._reach.of(alpha)), 1 / most),
                 arm=arm,
             )
-            yield from self._mean(entry, known, arm, before)
         elif spread.variance:  # the policy saw no path with an error: so much may still come as none of its paths shows
             yield self._claim(
                 "error variance",
@@ -234,6 +251,8 @@ class _Level:
                 lambda alpha: spread.bounds(self._reach.of(alpha)),
                 arm=arm,
             )
+        if before.variance or not spread.variance:  # else the variance alone says how large an error may come
+            yield from self._mean(entry, known, arm, before)
 
     def _carriers(self, arm: str) -> float | None:
         entry = self._level.corrections.get(f"{arm}:{REFERENCE}")
@@ -252,24 +271,30 @@ class _Level:
 
     def _mean(self, entry: ArmEntry, known: ArmPart, arm: str, before: Spread) -> Iterator[Claim]:
         mean, se = entry.error_mean, entry.error_mean_se
-        if mean is None or se is None or known.error_mean_low is None or known.error_mean_high is None:
+        if known.error_mean_low is None or known.error_mean_high is None:
             return
-        limit = max(-known.error_mean_low, known.error_mean_high, _OF_SPREAD * math.sqrt(before.variance))
+        most = max(-known.error_mean_low, known.error_mean_high, _OF_SPREAD * math.sqrt(before.variance))
+        figure = "the size of its mean error" + (" over the policy's bound of it" if most else ", where it had none,")
 
-        def bounds(alpha: float) -> Bounds:
+        def bounds(alpha: float) -> Bounds | None:
+            if mean is None or se is None:
+                return None
             half = self._reach.of(alpha) * se
             size = abs(mean)
-            return _times(Bounds(estimate=size, low=max(0.0, size - half), high=size + half), 1 / limit)
+            return _times(Bounds(estimate=size, low=max(0.0, size - half), high=size + half), 1 / (most or 1.0))
 
-        figure = "the size of its mean error over the policy's bound of it"
-        yield self._claim("error mean", figure, _TIMES, bounds, arm=arm)
+        yield self._claim("error mean", figure, _TIMES if most else 0.0, bounds, arm=arm)
 
     def bias(self) -> Iterator[Claim]:
         """Yield the claim on what the widest arm shifts the mean by."""
         top = arms_of(self._plan)[-1]
         budget = self._policy.target.bias_budget[self._name]
+        if top == REFERENCE:
+            return
+        figure = "the shift of its mean by rounding, over its share of the target,"
         entry = self._level.corrections.get(f"{top}:{REFERENCE}")
-        if top == REFERENCE or entry is None or entry.mean is None or entry.mean_se is None or budget <= 0:
+        if entry is None or entry.mean is None or entry.mean_se is None or not budget:
+            yield self._claim("bias", figure, 1.0, _unknown, arm=top)
             return
         size, se, few = abs(entry.mean), entry.mean_se, entry.counted and entry.events < 20
         counted = self._counted(top) if few else None
@@ -281,7 +306,6 @@ class _Level:
             high = max(size + half, counted(alpha) if counted is not None else 0.0)
             return _times(Bounds(estimate=size, low=max(0.0, size - half), high=high), 1 / budget)
 
-        figure = "the shift of its mean by rounding, over its share of the target,"
         yield self._claim("bias", figure, 1.0, bounds, arm=top)
 
     def _counted(self, top: str) -> Callable[[float], float] | None:
@@ -311,23 +335,28 @@ class _Level:
 
         yield self._claim("gain", "its gain", known.gain_low, gains, arm=arm, at_least=True)
         entry, own = self._level.arms[arm], gains(0.5)
-        if known.edge_low is None or entry.edge is None or entry.gain is None or own is None:
+        if known.edge_low is None:
             return
-        # Where the fresh audit weighs another scheme the edge is brought to the policy's by their gains.
-        by = own.estimate / entry.gain
         of_record = self._reach.of((1 - confidence_of(self._record)) / looks_of(self._record))
 
         def edges(alpha: float) -> Bounds | None:
-            if not entry.edge or not entry.edge_low or not entry.edge_high:
+            if own is None or not (entry.gain and entry.edge and entry.edge_low):
                 return None
             wider = self._reach.of(alpha) / of_record
+            high_of_record = math.inf if entry.edge_high is None else entry.edge_high
             low, high = (
                 entry.edge * math.exp(wider * math.log(bound / entry.edge))
-                for bound in (entry.edge_low, entry.edge_high)
+                for bound in (entry.edge_low, high_of_record)
             )
-            return _times(Bounds(estimate=entry.edge, low=low, high=high), by)
+            # Where the fresh audit weighs another scheme the edge is brought to the policy's by their gains.
+            return _times(Bounds(estimate=entry.edge, low=low, high=high), own.estimate / entry.gain)
 
         yield self._claim("edge", "its edge", known.edge_low, edges, arm=arm, at_least=True)
+
+
+def _unknown(alpha: float) -> Bounds | None:
+    """Return no figure: what the policy claims and a fresh audit cannot say is undecided."""
+    return None
 
 
 def _constant(bounds: Bounds) -> Callable[[float], Bounds]:
@@ -342,7 +371,7 @@ def _finite(value: float) -> float | None:
     return value if math.isfinite(value) else None
 
 
-def _beside(value: float, limit: float) -> str:
+def beside(value: float, limit: float) -> str:
     """Return a number with so many digits that it does not round across its limit."""
     for digits in range(3, 18):
         text = f"{value:.{digits}g}"

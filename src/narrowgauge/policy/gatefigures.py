@@ -134,7 +134,8 @@ def gain(planned: LevelPart, level: LevelEntry, below: int, today: str, *, costs
     arms = arms_of(planned)
     narrow, reference = level.arms[arms[0]].level_variance, level.reference
     v = level.arms[today].level_variance if today in level.arms else None
-    if not narrow or not v or not reference.level_variance:
+    ratio, level_se = _ratio_se(level, arms[0], today), reference.level_variance_se
+    if not narrow or not v or not reference.level_variance or ratio is None or level_se is None:
         return None
     low = math.sqrt(narrow * costs.path(level, below, arms[0]))
     share, correction = 0.0, Bounds(estimate=0.0, low=0.0, high=0.0)
@@ -146,9 +147,8 @@ def gain(planned: LevelPart, level: LevelEntry, below: int, today: str, *, costs
         found = spread_of(entry, level.paths).bounds(reach)
         correction = Bounds(**{name: math.sqrt(getattr(found, name) * root) for name in ("estimate", "low", "high")})
         share = correction.estimate / (low + correction.estimate)
-    ratio = _ratio_se(level, arms[0], today)
-    level_se = (reference.level_variance_se or 0.0) / reference.level_variance
-    slack = math.exp(min(reach * (share * level_se + (1.0 - share) * ratio), _MOST))
+    spread = share * level_se / reference.level_variance + (1.0 - share) * ratio
+    slack = math.exp(min(reach * spread, _MOST))
     cost = v * costs.path(level, below, today)
     at = {name: cost / (low + getattr(correction, name)) ** 2 for name in ("estimate", "low", "high")}
     return Bounds(estimate=at["estimate"], low=at["high"] / slack, high=at["low"] * slack)
@@ -157,15 +157,18 @@ def gain(planned: LevelPart, level: LevelEntry, below: int, today: str, *, costs
 def rmse(
     planned: Mapping[int, LevelPart], levels: Mapping[int, LevelEntry], reaches: Mapping[int, float]
 ) -> Bounds | None:
-    """Return the root-mean-square error of a run with the planned paths: sampling of all branches, and bias."""
+    """Return the root-mean-square error of a run with the planned paths: sampling of all branches, and bias.
+
+    None where a figure that it rests on does not exist.
+    """
     total, low, high = 0.0, 0.0, 0.0
     bias, reach_of_bias = 0.0, 0.0
     for number, plan in planned.items():
         level, reach, arms = levels[number], reaches[number], arms_of(plan)
         reference, variance = level.reference, level.arms[arms[0]].level_variance
-        if variance is None or not reference.level_variance:
+        if variance is None or not reference.level_variance or reference.level_variance_se is None:
             return None
-        relative = (reference.level_variance_se or 0.0) / reference.level_variance
+        relative = reference.level_variance_se / reference.level_variance
         parts = [(Spread(variance=variance, se=relative, carriers=None, size=0.0), plan.paths)]
         if plan.wide is not None:
             entry = level.corrections[f"{arms[0]}:{plan.wide}"]
@@ -179,8 +182,10 @@ def rmse(
             high += ((found.high - found.estimate) / paths) ** 2
         if arms[-1] != REFERENCE:
             shift = level.corrections[f"{arms[-1]}:{REFERENCE}"]
-            bias -= shift.mean or 0.0
-            reach_of_bias = math.hypot(reach_of_bias, reach * (shift.mean_se or 0.0))
+            if shift.mean is None or shift.mean_se is None:
+                return None
+            bias -= shift.mean
+            reach_of_bias = math.hypot(reach_of_bias, reach * shift.mean_se)
     least, most = max(0.0, abs(bias) - reach_of_bias), abs(bias) + reach_of_bias
     return Bounds(
         estimate=math.hypot(math.sqrt(total), bias),
@@ -210,17 +215,22 @@ def _sampling(record: AuditRecord) -> dict[str, Any]:
     return sampling if isinstance(sampling, dict) else {}
 
 
-def _ratio_se(level: LevelEntry, narrow: str, today: str) -> float:
-    """Return a bound of the standard error of log(V today / V narrow); 0 where they are the same arm."""
+def _ratio_se(level: LevelEntry, narrow: str, today: str) -> float | None:
+    """Return a bound of the standard error of log(V today / V narrow), None where there is none to be had.
+
+    It is 0 where they are the same arm.
+    """
     if narrow == today:
         return 0.0
-    found = 0.0
-    for arm in (narrow, today):
+    found, v, kurtosis = 0.0, level.reference.level_variance, level.reference.level_kurtosis
+    for arm in (one for one in (narrow, today) if one != REFERENCE):
         entry = level.corrections.get(f"{arm}:{REFERENCE}")
-        v, kurtosis = level.reference.level_variance, level.reference.level_kurtosis or 3.0
-        if entry is None or not entry.variance or not v:
+        if entry is None or entry.variance is None or not v:
+            return None
+        if not entry.variance:
             continue
-        share = entry.variance / v
-        tails = (kurtosis * (entry.kurtosis or 3.0)) ** 0.25
-        found += 2 * tails * math.sqrt(share / level.paths) + (entry.variance_se or 0.0) / v
+        if kurtosis is None or entry.kurtosis is None or entry.variance_se is None:
+            return None
+        tails = (kurtosis * entry.kurtosis) ** 0.25
+        found += 2 * tails * math.sqrt(entry.variance / v / level.paths) + entry.variance_se / v
     return found

@@ -1,9 +1,10 @@
-"""Around a gate: the policy that an audit file names, where its kernel stands, and a finished audit; no numpy."""
+"""Around a gate: the policy that an audit file names, and where its kernel stands; no numpy."""
 
 from __future__ import annotations
 
 import ast
 import re
+import shlex
 from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -11,19 +12,17 @@ from typing import Any
 
 import msgspec
 
-from narrowgauge.errors import AuditFileError, DispatchError, KernelError, PolicyError
+from narrowgauge.errors import AuditFileError, DispatchError, KernelError
 from narrowgauge.kernel.gatetable import GateSettings, audit_files_of, gate_settings, project_file
-from narrowgauge.kernel.identity import identity_of
-from narrowgauge.policy.gate import judge, verdict_of
+from narrowgauge.policy.gate import verdict_of
 from narrowgauge.policy.gatefacts import fact
 from narrowgauge.record.audit import AuditRecord
-from narrowgauge.record.auditreading import read_audit
 from narrowgauge.record.gate import Finding, GateEntry, Place
 from narrowgauge.record.policy import MachinePart, PolicyDocument, read_policy
 
-__all__ = ["Held", "audit_files", "held_to", "judge_finished", "stopped"]
+__all__ = ["Held", "audit_files", "held_to", "stopped"]
 
-_ROOTS = (".git", "pyproject.toml")  # what lies at the root of a repository
+_ROOTS = (".git", "pyproject.toml")  # what lies at the root of a repository, the surer sign first
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -52,7 +51,7 @@ class Held:
             policy_machine=self.policy.evidence.machine,
             machine=here,
             same_machine=None if here is None else here == self.policy.evidence.machine,
-            renew=f"narrowgauge policy {self._shown(self.audit)}",
+            renew=f"narrowgauge policy {shlex.quote(self._shown(self.audit))}",
         )
 
     def place(self) -> Place:
@@ -101,14 +100,6 @@ def held_to(audit: Path) -> Held:
     return Held(audit=audit, settings=settings, policy=read_policy(settings.policy), root=_root_of(audit))
 
 
-def judge_finished(held: Held, folder: Path) -> GateEntry:
-    """Return the verdict on the finished audit in a folder; one of another state of the kernel never passes."""
-    record, _ = read_audit(folder)
-    findings = [*_present(held, record), *judge(held.policy, record, stale=held.settings.stale, alone=True)]
-    paths = [level.paths for level in next(iter(record.quantities.values())).levels]
-    return held.entry(findings, record, seed=None, paths=paths)
-
-
 def stopped(problem: KernelError | DispatchError) -> Finding:
     """Return the finding of a gate that the kernel stopped: it raised, ended its process, or let a value leave."""
     text = str(problem)
@@ -116,22 +107,6 @@ def stopped(problem: KernelError | DispatchError) -> Finding:
     found = re.match(r"(?:level \d+(?:, arm \S+)?: )?([^\s:][^:\n]*):([1-9]\d*): ", text)
     place = None if found is None else Place(file=found[1], line=int(found[2]))
     return fact("escapes" if isinstance(problem, DispatchError) else "run", "fails", text, place=place)
-
-
-def _present(held: Held, record: AuditRecord) -> list[Finding]:
-    """Return a finding where the audit is not one of the kernel that is there now."""
-    known, source = held.policy.kernel, record.source
-    if isinstance(source, msgspec.UnsetType) or source.covers != "syntax trees":
-        return [fact("fingerprint", "note", "whether the audit is one of this state of the kernel was not looked into")]
-    target, _, name = record.kernel.run.rpartition(":")
-    place = str(held.audit.parent / target) if target.endswith(".py") else target
-    try:
-        now = identity_of(f"{place}:{name}", run=known.run, covers="syntax trees", modules=source.modules)
-    except (PolicyError, SyntaxError, ValueError) as problem:
-        return [fact("run", "fails", f"the kernel that is there now cannot be read: {problem}")]
-    if now != source.fingerprint:
-        return [fact("run", "fails", "the audit is one of another state of the kernel; audit the kernel anew")]
-    return []
 
 
 def _machine_of(record: AuditRecord) -> MachinePart:
@@ -146,9 +121,10 @@ def _machine_of(record: AuditRecord) -> MachinePart:
 def _root_of(audit: Path) -> Path:
     """Return the folder that paths are relative to: of the repository, else the current one, else the audit file's."""
     folder = audit.resolve().parent
-    for place in (folder, *folder.parents):
-        if any((place / name).exists() for name in _ROOTS):
-            return place
+    for name in _ROOTS:
+        for place in (folder, *folder.parents):
+            if (place / name).exists():
+                return place
     here = Path.cwd().resolve()
     return here if folder.is_relative_to(here) else folder
 

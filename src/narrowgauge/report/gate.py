@@ -54,6 +54,14 @@ def _entry(entry: GateEntry, width: int) -> Iterator[str]:
         yield ""
     for check in asked:
         yield from _folded(f"{check} asks whether {CHECKS[check]}", width)
+    if entry.verdict == "inconclusive" and any(one.state == "undecided" and one.limit is not None for one in shown):
+        yield ""
+        by = (
+            f"a larger most_paths under [gate] in {entry.audit}"
+            if entry.seed is not None
+            else "the gate without --measured"
+        )
+        yield from _folded(f"to decide what is open: {by}", width)
     if entry.verdict == "fail" or any(one.state == "note" for one in shown):
         yield ""
         yield from _folded(f"to renew the policy, where the change is meant: {entry.renew}", width)
@@ -65,11 +73,13 @@ def _head(entry: GateEntry) -> Iterator[str]:
     if any(entry.paths):
         drawn = " to ".join(f"{number:,}" for number in sorted({min(entry.paths), max(entry.paths)}))
         yield f"{drawn} paths a level, " + ("a finished audit" if entry.seed is None else f"seed {entry.seed}")
-    if entry.same_machine is False and entry.machine is not None and entry.policy_machine is not None:
-        yield (
-            f"another class of machine: the policy is of {_machine(entry.policy_machine)}, "
-            f"this was measured on {_machine(entry.machine)}"
-        )
+    if entry.policy_machine is None:
+        return
+    made = _machine(entry.policy_machine)
+    if entry.same_machine is False and entry.machine is not None:
+        yield f"another class of machine: the policy is of {made}, this was measured on {_machine(entry.machine)}"
+    else:
+        yield f"the policy is of {'this class of machine, ' if entry.same_machine else ''}{made}"
 
 
 def _table(findings: Sequence[Finding], width: int) -> Iterator[str]:

@@ -1,0 +1,338 @@
+"""The box of parameters that a policy claims: what of its scenarios holds, and whole gates that try its corners."""
+
+import dataclasses
+import math
+from types import SimpleNamespace
+
+import msgspec
+import pytest
+from policy_records import changed, policy
+
+from narrowgauge.api import gate_held, run_audit
+from narrowgauge.conduct.gate import claimed_corners
+from narrowgauge.kernel.auditfile import audit_file_from, read_audit_file
+from narrowgauge.measure.workers import Workers
+from narrowgauge.policy.drawup import draw_up, read_audit, write_policy
+from narrowgauge.policy.gate import fails_for_now, judge, levels_open, second, verdict_of
+from narrowgauge.policy.gatefile import held_to
+from narrowgauge.policy.gatefinished import judge_finished
+from narrowgauge.record.plan import SchemeEntry
+from narrowgauge.record.policy import ParameterPart
+
+BOX = {
+    "rate": ParameterPart(fixed=0.05),
+    "volatility": ParameterPart(low=0.2, high=0.4, scale="linear"),
+    "strike": ParameterPart(fixed=1.1),
+}
+SPLIT = SchemeEntry(kind="split", narrow="float16", wide="float32")
+
+
+@pytest.fixture(scope="module")
+def held(record):
+    """A policy on four levels that claims a box of volatilities."""
+    return changed(policy(record), "domain", "parameters", to=BOX)
+
+
+def scenario(volatility, outcome="passes", reason=None, *, level=2, message=None, needed=None, edge=1.5):
+    """A scenario that passes on all levels but one."""
+    levels = [
+        SimpleNamespace(
+            level=number,
+            outcome=outcome if number == level else "passes",
+            reason=reason if number == level else None,
+            edge=edge if number == level else 2.0,
+            edge_low=edge - 0.2 if number == level else 1.8,
+            edge_high=edge + 0.2 if number == level else 2.2,
+            paths_needed=needed if number == level else None,
+        )
+        for number in range(4 if message is None else level)
+    ]
+    return SimpleNamespace(
+        parameters={"volatility": volatility},
+        outcome=outcome,
+        reason=reason,
+        level=None if outcome == "passes" else level,
+        message=message,
+        levels=levels,
+    )
+
+
+def tried(record, *scenarios, schemes=(SPLIT,) * 4):
+    """A record in which these scenarios were tried."""
+    levels = [SimpleNamespace(level=number, scheme=scheme) for number, scheme in enumerate(schemes)]
+    return msgspec.structs.replace(record, domain=SimpleNamespace(levels=levels, scenarios=list(scenarios)))
+
+
+def found(held, fresh, **more):
+    return [one for one in judge(held, fresh, **more) if one.check == "domain"]
+
+
+def test_a_policy_of_one_point_claims_no_box(record):
+    """There is nothing to try."""
+    assert found(policy(record), record) == []
+
+
+def test_each_level_holds_where_all_that_lies_in_the_box_passes(record, held):
+    """With the least edge of them; what lies outside the box was never claimed."""
+    fresh = tried(record, scenario(0.2, edge=1.4), scenario(0.4), scenario(0.5, "refused", "edge"))
+    levels = found(held, fresh)
+    assert [(one.level, one.state) for one in levels] == [(number, "holds") for number in range(4)]
+    assert (levels[2].estimate, levels[2].limit) == (1.4, 1.0)
+    assert levels[2].low == pytest.approx(1.2)
+
+
+@pytest.mark.parametrize(("reason", "alone", "state"), [
+    ("edge", False, "fails"),
+    ("bias", False, "fails"),
+    ("edge", True, "undecided"),
+    ("nonfinite", True, "fails"),
+    ("raised", True, "fails"),
+])  # fmt: skip
+def test_a_refused_scenario_fails_its_level(record, held, reason, alone, state):
+    """What hangs on the sample fails once it is tried twice; a value that is not finite is so at once."""
+    fresh = tried(record, scenario(0.2), scenario(0.4, "refused", reason, edge=0.5), scenario(0.3, "undecided"))
+    levels = found(held, fresh, alone=alone)
+    assert [one.state for one in levels] == ["holds", "holds", state, "holds"]
+    assert "1 of the 3 points" in levels[2].message
+    assert "volatility = 0.4" in levels[2].message
+    assert fails_for_now(levels) == (state == "fails" and reason in ("edge", "bias"))
+
+
+def test_a_kernel_that_does_not_run_in_the_box_fails_from_that_level_on(record, held):
+    """The message of the kernel is told; it is no chance of the sample."""
+    fresh = tried(record, scenario(0.2), scenario(0.4, "refused", "reference", message="the kernel raised"))
+    levels = found(held, fresh)
+    assert [one.state for one in levels] == ["holds", "holds", "fails", "fails"]
+    assert levels[2].message.endswith("at volatility = 0.4: the kernel raised")
+    assert not fails_for_now(levels)
+
+
+def test_an_undecided_scenario_is_no_pass_and_says_what_it_needs(record, held):
+    """Its level of the audited point draws no more paths for it."""
+    fresh = tried(record, scenario(0.2, "undecided", "budget", needed=40960, edge=1.05), scenario(0.4))
+    levels = found(held, fresh)
+    assert [one.state for one in levels] == ["holds", "holds", "undecided", "holds"]
+    assert levels[2].paths_needed == 40960
+    assert "about 40,960 paths there would decide" in levels[2].message
+    assert verdict_of(levels) == "inconclusive"
+    assert levels_open(levels, range(4)) == []
+
+
+@pytest.mark.parametrize(
+    ("edge", "reason", "state"),
+    [(1.11, "budget", "holds"), (1.11, "edge", "holds"), (1.09, "budget", "undecided"), (1.5, "bias", "undecided")],
+)
+def test_an_edge_that_is_open_has_to_come_within_a_tenth_of_1(record, held, edge, reason, state):
+    """With a lower bound 0.2 below it; and nothing else may be open."""
+    fresh = tried(record, scenario(0.2, "undecided", reason, edge=edge))
+    assert [one.state for one in found(held, fresh)] == ["holds", "holds", state, "holds"]
+
+
+def test_a_refusal_has_its_figure_and_says_what_to_do(record, held):
+    """An edge that is not rounded across 1."""
+    fresh = tried(record, scenario(0.4, "refused", "edge", edge=0.7999))
+    (one,) = [one for one in found(held, fresh) if one.state == "fails"]
+    assert (
+        "at volatility = 0.4: its edge is 0.8 (0.6 to 0.9999), at least 1 is accepted; where nothing has" in one.message
+    )
+    (one,) = [one for one in found(held, fresh, alone=True) if one.state == "undecided"]
+    assert one.message.endswith("; the gate without --measured tries the corners of the box")
+
+
+@pytest.mark.parametrize("scenarios", [(), (0.5,)])
+def test_a_box_in_which_nothing_was_tried_is_undecided(record, held, scenarios):
+    """Also where an audit had scenarios elsewhere, or none at all."""
+    for fresh in (tried(record, *(scenario(one) for one in scenarios)), record):
+        (one,) = found(held, fresh)
+        assert (one.state, one.level) == ("undecided", None)
+        assert verdict_of([one]) == "inconclusive"
+
+
+def test_scenarios_of_another_scheme_say_nothing_of_the_policys(record, held):
+    """A finished audit may have taken another one on a level."""
+    other = SchemeEntry(kind="alone", narrow="float64", wide=None)
+    fresh = tried(record, scenario(0.2), schemes=(SPLIT, SPLIT, other, SPLIT))
+    assert [one.state for one in found(held, fresh)] == ["holds", "holds", "undecided", "holds"]
+
+
+def test_a_corner_refused_once_fails_only_if_it_is_refused_again(record, held):
+    """On fresh draws, as every claim."""
+    bad, good = (tried(record, scenario(0.4, outcome, reason, edge=0.5)) for outcome, reason in (
+        ("refused", "edge"), ("passes", None)
+    ))  # fmt: skip
+    first = found(held, bad)
+    assert verdict_of(second(first, found(held, good))) == "pass"
+    again = second(first, found(held, bad))
+    assert [(one.state, one.stages) for one in again if one.level == 2] == [("fails", 2)]
+
+
+MAPPING = {
+    "kernel": {"run": "model.py:value", "takes": "increments"},
+    "parameters": {"a": 1.0, "b": 2, "c": 3.0, "d": 4.0, "e": 5.0},
+    "ladder": {"horizon": 1.0, "finest": 1},
+    "sampling": {"confidence": 0.999},
+}
+
+
+@pytest.mark.parametrize(
+    ("sides", "corners"),
+    [
+        ("a", [(0.0,), (9.0,)]),
+        ("abc", [(x, y, z) for x in (0.0, 9.0) for y in (0.0, 9.0) for z in (0.0, 9.0)]),
+        ("abcd", [tuple({place: end}.get(side, side + 1.0) for side in range(4)) for place in range(4)
+                  for end in (0.0, 9.0)]),
+    ],
+)  # fmt: skip
+def test_corners_are_all_up_to_eight_and_else_both_ends_of_each_side(sides, corners):
+    """With the quantities they share the gate's rate of error."""
+    file = audit_file_from(MAPPING)
+    parameters = {
+        name: ParameterPart(low=0.0, high=9.0, scale="linear") if name in sides else ParameterPart(fixed=value)
+        for name, value in file.parameters.items()
+    }
+    arms = {0: ("float16", "float32"), 1: ("float64",)}
+    asked = claimed_corners(file, parameters, arms, quantities=2, least_edge=0.9)
+    boxed, scenarios = asked.asked(file)
+    assert [one.values for one in scenarios] == corners
+    assert list(boxed.domain.parameters) == list(sides)
+    assert 1 - boxed.sampling.confidence == pytest.approx(0.001 / len(corners) / 2)
+    assert [(one.kind, one.narrow, one.wide) for one in asked.schemes.values()] == [
+        ("split", "float16", "float32"),
+        ("alone", "float64", None),
+    ]
+
+
+# A price path, as a share of where it began. INVENTED DATA.
+KERNEL = """
+import numpy as np
+
+def value(dW, h, *, spot, volatility):
+    x = np.full(dW.shape[-1], spot)
+    for dw in dW:
+        x = x + (0.05 * h * x + volatility * x * dw)
+    return x / spot
+"""
+AUDIT = """
+[kernel]
+run = "model.py:value"
+takes = "increments"
+
+[parameters]
+spot = 100.0
+volatility = 0.2
+
+[ladder]
+horizon = 1.0
+finest = 1
+
+[target]
+rmse = 0.01
+
+[formats]
+narrow = ["float16"]
+wide = ["float64"]
+
+[sampling]
+block = 8192
+paths = 8192
+most_paths = 65536
+
+[domain]
+parameters.spot = { low = 50.0, high = 200.0, scale = "log" }
+parameters.volatility = { low = 0.1, high = 0.4 }
+scenarios = 8
+most_paths = 4096
+"""
+
+
+BOXED = (("spot", 50.0, 200.0), ("volatility", 0.1, 0.4))
+
+
+@pytest.fixture(scope="module")
+def audit(tmp_path_factory):
+    """An audit file whose policy claims its whole box, with its finished audit in `out`."""
+    folder = tmp_path_factory.mktemp("boxed")
+    (folder / "model.py").write_text(KERNEL, encoding="utf-8")
+    (folder / "audit.toml").write_text(AUDIT, encoding="utf-8")
+    run_audit(read_audit_file(folder / "audit.toml"), folder / "out")
+    document = draw_up(*read_audit(folder / "out"))
+    assert document.domain.parameters["spot"].high == 200.0
+    write_policy(document, folder / "audit.policy.json")
+    return folder / "audit.toml"
+
+
+@pytest.mark.parametrize(("least", "paths"), [(0.9, 1024), (math.inf, 4096)])
+def test_a_corner_whose_edge_has_come_near_enough_draws_no_more_paths(audit, least, paths):
+    """Of a format that costs what float64 costs it is about 1: no number of paths would show it to be above."""
+    box = {name: ParameterPart(low=low, high=high, scale="linear") for name, low, high in BOXED}
+    file = read_audit_file(audit)
+    cost = msgspec.structs.replace(file.cost, float16=1.0, float64=1.0)
+    sampling = msgspec.structs.replace(file.sampling, most_paths=8192, confidence=0.999)
+    file = msgspec.structs.replace(file, cost=cost, sampling=sampling, domain=None)
+    asked = claimed_corners(file, box, dict.fromkeys((0, 1), ("float16",)), quantities=1, least_edge=least)
+    asked = dataclasses.replace(asked, domain=msgspec.structs.replace(asked.domain, most_paths=4096))
+    record = run_audit(file, None, corners=asked, watched=False).record
+    assert [one.kind for one in record.domain.scenarios] == ["corner"] * 4
+    assert max(level.paths for one in record.domain.scenarios for level in one.levels) == paths
+    assert all(level.edge_low > 0.9 for one in record.domain.scenarios for level in one.levels)
+
+
+def gated(audit, source, folder):
+    """The gate of a kernel with the policy of another."""
+    (folder / "model.py").write_text(source, encoding="utf-8")
+    for name in ("audit.toml", "audit.policy.json"):
+        (folder / name).write_bytes((audit.parent / name).read_bytes())
+    return gate_held(held_to(folder / "audit.toml"), who=Workers())
+
+
+def test_an_unchanged_kernel_passes_at_the_corners(audit, tmp_path):
+    """Four of them, on each level; and its finished audit is judged by its scenarios."""
+    entry = gated(audit, KERNEL, tmp_path)
+    assert entry.verdict == "pass", [one.message for one in entry.findings if one.state != "holds"]
+    corners = [one for one in entry.findings if one.check == "domain"]
+    assert [one.level for one in corners] == [0, 1]
+    assert all("4 of the 4 points" in one.message for one in corners)
+    measured = [one for one in judge_finished(held_to(audit), audit.parent / "out").findings if one.check == "domain"]
+    assert [one.state for one in measured] == ["holds", "holds"]
+    assert all("12 of the 12 points" in one.message for one in measured)
+
+
+@pytest.mark.parametrize(
+    ("change", "stages", "said"),
+    [
+        (("return x / spot", "return x * 250.0 / 250.0 / spot"), 1, "spot = 200"),
+        (
+            ("return x / spot", "far = 4e4 * (volatility < 0.15)\n    return ((x + far) - far) / spot"),
+            2,
+            "volatility = 0.1",
+        ),
+        (
+            ("    x = np", "    if volatility > 0.3:\n        raise ValueError('wild')\n    x = np"),
+            1,
+            "ValueError: wild",
+        ),
+    ],
+)
+def test_a_mistake_that_only_a_corner_shows_is_caught(audit, tmp_path, change, stages, said):
+    """A price that overflows float16, a difference of large numbers, an exception: nothing else fails.
+
+    Predicted power: above .9999 each. Half of the paths overflow; the edge is below a half.
+    """
+    old, new = change
+    assert KERNEL.count(old) == 1
+    entry = gated(audit, KERNEL.replace(old, new), tmp_path)
+    assert entry.verdict == "fail"
+    failed = [one for one in entry.findings if one.state == "fails"]
+    assert {one.check for one in failed} == {"domain"}
+    assert all(said in one.message and one.stages == stages for one in failed)
+
+
+def test_a_kernel_that_ends_its_process_at_a_corner_never_passes(audit, tmp_path):
+    """The audited point does not show it."""
+    entry = gated(
+        audit,
+        KERNEL.replace("    x = np", "    if volatility > 0.3:\n        raise SystemExit(0)\n    x = np"),
+        tmp_path,
+    )
+    assert entry.verdict == "fail"
+    assert any("SystemExit" in one.message for one in entry.findings if one.state == "fails")
