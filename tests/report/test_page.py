@@ -9,6 +9,7 @@ import re
 import subprocess
 import sys
 from functools import cache
+from itertools import pairwise
 
 import made_records as made
 import numpy as np
@@ -94,6 +95,14 @@ class TestWhole:
         assert re.findall(r'<section id="(\w+)"', text) == [*ASKED, "words"]
         assert re.findall(r'<li><a href="#(\w+)"', text) == ["verdict", *ASKED, "words"]
 
+    def test_headings_are_nested(self):
+        """What belongs to a quantity stands one heading below it, and none is skipped."""
+        found = re.findall(r"<h([1-6])[^>]*>([^<]*)<", built(made.audit_record))
+        assert ("3", "Quantity option") in found
+        assert ("4", "float16 for option") in found
+        depths = [int(depth) for depth, _ in found]
+        assert all(after <= before + 1 for before, after in pairwise(depths))
+
     def test_nothing_is_fetched_or_run(self):
         """No script, no address, no style outside the one that the policy names by its hash."""
         text = built(pages.large_record)
@@ -160,12 +169,18 @@ class TestFirstScreen:
         shown = words(pages.sound_record)
         assert "To settle float16 on level 3 and bfloat16 on level 1, raise [sampling] most_paths" in shown
         assert "to about 1,300,000 (now 65,536); for some of it, how many are enough cannot be told." in shown
-        assert "model validation and change control: this page is evidence, not approval." in shown
+        assert "model validation and change control: this audit is evidence, not approval." in shown
 
     def test_nothing_pays(self):
         """Then the answer is no, and what to keep."""
+        assert "No: lower precision does not pay here. Keep float64." in words(pages.refused_record)
+
+    def test_nothing_is_finite(self):
+        """Then float64 is nothing to keep: there is no verdict, and the levels where that is so are named."""
         shown = words(pages.nonfinite_record)
-        assert "No: lower precision does not pay here. Keep float64." in shown
+        assert "No verdict: on levels 0 to 4 float64 itself has no finite results to compare with." in shown
+        assert "Find out why the kernel has no finite results in float64 on levels 0 to 4. Then audit again." in shown
+        assert "Keep float64" not in shown
 
     def test_nothing_is_settled(self):
         """Then it is not yet known."""
@@ -316,7 +331,7 @@ class TestWriting:
         with pytest.raises(ReportError, match=r"^there: cannot be written: No such file or directory$"):
             write_page(pages.sound_record(), tmp_path / "no" / "report.html", "there")
 
-    @pytest.mark.parametrize("name", ["audit.json", "levels.csv", "blocks.sqlite"])
+    @pytest.mark.parametrize("name", ["audit.json", "levels.csv", "lines.csv", "blocks.sqlite", "policy.json"])
     def test_no_file_of_an_audit_is_overwritten(self, tmp_path, name):
         """Whatever --out says."""
         with pytest.raises(ReportError, match=f"^{re.escape(name)}: is a file of an audit; accepted: another name"):

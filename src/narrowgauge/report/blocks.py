@@ -5,7 +5,7 @@ All of it is plain text; the template escapes it. Only the `drawings` of a figur
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable
 from dataclasses import dataclass
 from typing import ClassVar
 
@@ -13,6 +13,7 @@ from narrowgauge.report.layout import Ruled
 from narrowgauge.report.tables import VERDICT_STYLES
 
 __all__ = [
+    "MARKS",
     "Block",
     "Cell",
     "Drawing",
@@ -29,7 +30,8 @@ __all__ = [
 ]
 
 _PHONE = 40  # characters across
-_MARKS = dict(zip(VERDICT_STYLES.values(), ("yes", "no", "open"), strict=True))
+MARKS = {"pays": "yes", "undecided": "open", "does not pay": "no"}
+_MARKS = {VERDICT_STYLES[verdict]: mark for verdict, mark in MARKS.items()}
 
 
 @dataclass(frozen=True, slots=True)
@@ -143,8 +145,8 @@ def tabled(caption: str, ruled: Ruled) -> Table:
 
 def points(texts: Iterable[str]) -> list[Block]:
     """Return a list of these sentences, or nothing where there are none."""
-    found: Sequence[str] = tuple(texts)
-    return [Points(tuple(found))] if found else []
+    found = tuple(texts)
+    return [Points(found)] if found else []
 
 
 def visible(text: object) -> str:

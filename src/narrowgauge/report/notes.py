@@ -28,7 +28,9 @@ from narrowgauge.report.wording import (
     shown_edge,
 )
 
-__all__ = ["accumulation", "format_notes", "nonfinite", "orders", "rounded_up", "separation_notes"]
+__all__ = ["REJECTED_BELOW", "accumulation", "format_notes", "nonfinite", "orders", "rounded_up", "separation_notes"]
+
+REJECTED_BELOW = 0.001  # of p: the law fits badly, as `judge.accumulation` has it
 
 
 def format_notes(record: AuditRecord, quantity: str, name: str) -> list[str]:
@@ -170,7 +172,7 @@ def _law(one: AccumulationEntry) -> str:
         found += f"; slope {interval(law.slope, law.slope_low, law.slope_high)}"
     if law.deviation is not None:
         found += f"; largest misfit {figure(law.deviation, 2)}%"
-    return found + (f", p = {figure(law.fit_p, 2)}." if law.fit_p is not None else ".")
+    return found + (f", p = {shown_edge(law.fit_p, (REJECTED_BELOW,), 2)}." if law.fit_p is not None else ".")
 
 
 def orders(entry: QuantityEntry) -> str:
