@@ -45,6 +45,8 @@ def test_what_was_found_is_said_in_the_same_words():
     terminal, page = flat(audit_text(record, None), 400), words(pages.full_record)
     for sentence in (
         "float16: on every level where both were measured the noise stays below the signal",
+        "the walk of step roundings (\u03b4\u00b2/h) rules on every level. Walk 0.500 (0.490 to 0.510) u\u00b2 a step",
+        "1.00 (0.970 to 1.03)",
         "The walks of the formats agree within 5%",
         "The cheapest scheme of each level of value",
         "Branches of a split:",

@@ -20,6 +20,7 @@ from msgspec.structs import replace
 
 from narrowgauge.record.audit import CanaryEntry
 from narrowgauge.report import page as page_module
+from narrowgauge.report.blocks import Cell
 from narrowgauge.report.page import ReportError, page, write_page
 
 ASKED = [
@@ -102,6 +103,24 @@ class TestWhole:
         assert ("4", "float16 for option") in found
         depths = [int(depth) for depth, _ in found]
         assert all(after <= before + 1 for before, after in pairwise(depths))
+
+    @pytest.mark.parametrize(
+        ("text", "second"),
+        [
+            ("0.500 (0.490 to 0.510)", "(0.490 to 0.510)"),
+            ("-1.3e-04 (at least -2)", "(at least -2)"),
+            ("1.05 (no interval)", ""),
+            ("the kernel raised (line 7)", ""),
+        ],
+    )
+    def test_an_interval_is_one_piece(self, text, second):
+        """It is not broken at the end of a line; other words are."""
+        assert Cell(text).pieces[1] == second
+        assert "".join(Cell(text).pieces) == text
+        assert (
+            '<td role="cell" class="words" data-label="slope">1.00 <span class="unbroken">(0.970 to 1.03)</span></td>'
+            in built(pages.full_record)
+        )
 
     def test_nothing_is_fetched_or_run(self):
         """No script, no address, no style outside the one that the policy names by its hash."""

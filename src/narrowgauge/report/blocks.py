@@ -5,6 +5,7 @@ All of it is plain text; the template escapes it. Only the `drawings` of a figur
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterable
 from dataclasses import dataclass
 from typing import ClassVar
@@ -29,6 +30,7 @@ __all__ = [
     "visible",
 ]
 
+_INTERVAL = re.compile(r"(\S+ )(\([^()]*\d\))")
 _PHONE = 40  # characters across
 MARKS = {"pays": "yes", "undecided": "open", "does not pay": "no"}
 _MARKS = {VERDICT_STYLES[verdict]: mark for verdict, mark in MARKS.items()}
@@ -57,6 +59,12 @@ class Cell:
 
     text: str
     mark: str = ""
+
+    @property
+    def pieces(self) -> tuple[str, str]:
+        """The text in two: a figure and its interval in brackets, which must not be broken; else "" for the second."""
+        found = _INTERVAL.fullmatch(self.text)
+        return (found[1], found[2]) if found else (self.text, "")
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

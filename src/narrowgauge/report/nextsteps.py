@@ -47,7 +47,7 @@ def _unsound(record: AuditRecord) -> Iterable[str]:
 
 def _parting(record: AuditRecord) -> Iterable[str]:
     if broken := branch_alarms(record):
-        yield f"Make both branches of a split give the same bits, or use no split: {'; '.join(broken)}."
+        yield f"Make both branches of a split give the same bits, or use no split. As it is: {'; '.join(broken)}."
 
 
 def _raised(record: AuditRecord) -> Iterable[str]:
