@@ -102,6 +102,10 @@ BROKEN_LINKS = """
 BROKEN_INTERVALS = """
 [...document.querySelectorAll('td .unbroken')].filter(e => e.getClientRects().length > 1).map(e => e.innerText)
 """
+BELOW_ITS_LABEL = """
+[...document.querySelectorAll('.stacked td .unbroken')].filter(e => getComputedStyle(e.closest('td')).display === 'grid'
+  && e.getBoundingClientRect().left < e.closest('td').getBoundingClientRect().left + 80).map(e => e.innerText)
+"""
 DOUBLE_IDS = """
 [...document.querySelectorAll('[id]')].map(e => e.id).filter((id, n, all) => all.indexOf(id) !== n)
 """
@@ -115,7 +119,7 @@ def test_the_page_is_whole_everywhere(browser, opened, scripts, width, dark):
     assert {url for url in requested if not url.startswith("data:")} == {opened.absolute().as_uri()}
     assert browser.told("Log.entryAdded", "Runtime.consoleAPICalled", "Runtime.exceptionThrown") == []
     assert browser.value("document.documentElement.scrollWidth") <= width
-    for expression in (WIDER, NOT_DRAWN, CUT, OVERLAID, BROKEN_LINKS, BROKEN_INTERVALS, DOUBLE_IDS):
+    for expression in (WIDER, NOT_DRAWN, CUT, OVERLAID, BROKEN_LINKS, BROKEN_INTERVALS, BELOW_ITS_LABEL, DOUBLE_IDS):
         assert browser.value(expression) == [], expression
     ground = browser.value("getComputedStyle(document.body).backgroundColor")
     assert (ground == "rgb(20, 24, 27)") == dark
