@@ -24,7 +24,8 @@ from narrowgauge.report.palette import LIGHT
 ROOT = Path(__file__).parents[2]
 FOLDER = ROOT / "reports" / "samples"
 KEPT = ("report.html", "audit.json", "policy.json")
-LARGEST = 1_000_000  # bytes of a file, for a repository
+LARGEST, TOGETHER = 1_000_000, 2_000_000  # bytes of a file and of all of them, for a repository
+_AROUND = 12  # pixels of paper around the picture
 
 _LINES = """
 [lines]                       # which lines cost the accuracy
@@ -70,9 +71,12 @@ def picture(record: AuditRecord) -> str:
     colours = [f".k-{role}{{stroke:{colour}}}.f-{role}{{fill:{colour}}}" for role, colour in LIGHT.items()]
     style = ElementTree.Element("style")
     style.text = f"text{{font-family:sans-serif}}{''.join(colours)}"
+    _, _, width, height = map(float, root.attrib["viewBox"].split())
+    frame = [str(round(number)) for number in (-_AROUND, -_AROUND, width + 2 * _AROUND, height + 2 * _AROUND)]
+    paper = dict(zip(("x", "y", "width", "height"), frame, strict=True))
     root.insert(0, style)
-    root.insert(1, ElementTree.Element("rect", {"width": "100%", "height": "100%", "class": "f-paper"}))
-    root.set("xmlns", "http://www.w3.org/2000/svg")
+    root.insert(1, ElementTree.Element("rect", {**paper, "class": "f-paper"}))
+    root.attrib = {"xmlns": "http://www.w3.org/2000/svg", "viewBox": " ".join(frame)}
     return ElementTree.tostring(root, encoding="unicode") + "\n"
 
 
@@ -82,6 +86,9 @@ def main() -> int:
         sample(example, added, FOLDER / example)
     record = audit_in(FOLDER / "reserve")
     (FOLDER / "reserve" / "crossing.svg").write_text(picture(record), encoding="utf-8")
+    written = sum(one.stat().st_size for one in FOLDER.rglob("*") if one.is_file())
+    if written > TOGETHER:
+        raise RuntimeError(f"the samples are larger than {TOGETHER:,} bytes together")
     return 0
 
 
