@@ -188,6 +188,12 @@ class TestFirstScreen:
         assert "to about 1,300,000 (now 65,536); for some of it, how many are enough cannot be told." in shown
         assert "model validation and change control: this audit is evidence, not approval." in shown
 
+    def test_a_saving_is_drawn_where_the_answer_is_yes(self):
+        """A bar of costs would say more than the sentence above it where nothing is decided, refused or wrong."""
+        assert '<ul class="gauges">' in built(pages.sound_record)
+        for record in (pages.undecided_record, pages.refused_record, made.troubled_record):
+            assert "gauges" not in built(record).partition("</style>")[2]
+
     def test_nothing_pays(self):
         """Then the answer is no, and what to keep."""
         assert "No: lower precision does not pay here. Keep float64." in words(pages.refused_record)

@@ -72,6 +72,7 @@ def page(record: AuditRecord) -> str:
     from narrowgauge.report.settings import terms
     from narrowgauge.report.verdict import alarms
 
+    found = headline.headline(record)
     with np.errstate(all="ignore"):  # a kernel of this process may have asked NumPy to raise
         sections = _sections(record)
     environment = jinja2.Environment(
@@ -93,8 +94,8 @@ def page(record: AuditRecord) -> str:
         markup=markupsafe.Markup,
         kernel=record.kernel.run,
         alarms=[(mark, text.plain) for mark, text in alarms(record)],
-        headline=headline.headline(record),
-        gauges=headline.gauges(record),
+        headline=found,
+        gauges=headline.gauges(record) if found.mark == "yes" else [],  # else what is saved is not to be relied on
         formats=headline.format_rows(record),
         steps=next_steps(record),
         sections=sections,
