@@ -316,7 +316,7 @@ class TestAudit:
         assert "look 1" not in done.stderr
         assert "\x1b" not in done.stdout + done.stderr
         assert done.stdout.startswith("Audit of kernel.py:growth\n")
-        for heading in ("Quantity value", "Verdict", "Behind the figures", "Cautions"):
+        for heading in ("Verdict", "What to do next", "How was it measured?", "What must be kept in mind?"):
             assert f"\n{heading}\n" in done.stdout
         words = " ".join(done.stdout.split())
         assert "float32: finest level where it still pays: 2 or finer, not extrapolated." in words
@@ -333,7 +333,7 @@ class TestAudit:
         assert (done.returncode, done.stderr) == (0, "")
         assert done.stdout.startswith("Verdict\n")
         assert "Written to elsewhere:" in done.stdout
-        assert "Quantity" not in done.stdout
+        assert "Signal and noise" not in done.stdout
 
     def test_folder_is_taken(self, tmp_path):
         """A folder with another audit is refused, unless it may be replaced."""

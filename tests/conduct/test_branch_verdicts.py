@@ -184,5 +184,5 @@ def test_a_correction_that_raises_is_said_first(tmp_path: Path) -> None:
     assert {reason for _, reason in verdicts(record)} == {"branches"}
     text = shown(record)
     alarm = "float16: no split is used on any level, since a branch raised: level 0, arm float16: ArithmeticError"
-    assert alarm in text[: text.index("Words of the tables")]
+    assert alarm in text[: text.index("Audit of")]
     assert "a branch raises in every format that a split could use" in text

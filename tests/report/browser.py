@@ -118,10 +118,3 @@ class Browser:
     def told(self, *methods):
         """The parameters of what the browser has told since a file was opened."""
         return [event["params"] for event in self.events if event.get("method") in methods]
-
-    def picture(self, path):
-        """Save what a reader sees of the whole page."""
-        import base64
-
-        data = self.call("Page.captureScreenshot", format="png", captureBeyondViewport=True)["data"]
-        Path(path).write_bytes(base64.b64decode(data))

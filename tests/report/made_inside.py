@@ -25,7 +25,7 @@ def filled(record, *, levels=5, lines=6, scenarios=32, hostile=NAMES):
     return replace(
         record,
         branches=branches(arms, quantities, words, file),
-        lines=line_studies(arms[:3], quantities, lines, words, file),
+        lines=line_studies(arms, quantities, lines, words, file),
         range=replace(record.range, watched=ranges(arms, lines, file)),
         averaging=sums_of(quantities, levels),
         domain=domain(levels, scenarios, words, file),

@@ -165,6 +165,8 @@ LAW = LawEntry(
     slope_high=1.03,
     deviation=1.234,
     fit_p=0.43,
+    floor_without_drift=3.0,
+    walk_without_drift=0.5,
     levels=[1, 2, 3, 4],
     reason=None,
 )

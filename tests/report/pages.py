@@ -62,6 +62,14 @@ def undecided_record() -> AuditRecord:
     return made.audit_record(value=replace(entry, finest_paying_level=finest))
 
 
+def refused_record() -> AuditRecord:
+    """No format pays, on any level."""
+    refused = FinestEntry(level=None, cautious=None, possible=None, extrapolated=False, reason="edge")
+    return made.audit_record(
+        value=replace(made.quantity_entry(), finest_paying_level=dict.fromkeys(made.FORMATS, refused))
+    )
+
+
 def nonfinite_record() -> AuditRecord:
     """Nothing is finite, in no format and in no level: no figure exists."""
     entry = made.quantity_entry()

@@ -104,14 +104,16 @@ def test_no_part_is_named_where_no_interval_says_so():
 def test_rounding_noise_is_that_of_exact_draws():
     """The table of signal and noise has no column for an arm whose error is not one of rounding alone."""
     text = rendered(audit_text(record(), None), 120)
-    head = text[text.index("Quantity value") :].split("\n\n")[0]
+    head = text[text.index("Signal and noise of value") :].split("\n\n")[0]
     assert "float16" in head
     assert "approximate" not in head
 
 
 def test_nothing_of_it_without_approximate_draws():
     """An audit without them has none of the words."""
-    assert "pproximate" not in rendered(audit_text(made.audit_record(), None))
+    text = rendered(audit_text(made.audit_record(), None))
+    assert "Not measured in this audit: approximate draws," in text
+    assert text.count("pproximate") == 1
 
 
 def test_the_short_form_names_the_arm():

@@ -16,7 +16,7 @@ from narrowgauge.report.parts import gain_chart, law_chart, law_shares
 U = 2.0**-11
 
 
-def record_of(variances, *, signal=None, law=(0.0, 1.0, 0.0), order=1.0):
+def record_of(variances, *, signal=None, law=(0.0, 1.0, 0.0), order=1.0, drift_low=0.0, fit_p=0.43):
     """An audit whose float16 has these error variances, and a signal of 4^-l unless given; with a law of its own."""
     entry = made.quantity_entry()
     signal = signal or [4.0**-level for level in made.LEVELS]
@@ -25,7 +25,8 @@ def record_of(variances, *, signal=None, law=(0.0, 1.0, 0.0), order=1.0):
         reference = replace(entry.levels[level].reference, level_variance=own)
         entry = made.with_level(entry, level, reference=reference)
     floor, walk, drift = law
-    fitted = replace(made.LAW, floor=floor, walk=walk, drift=drift)
+    parts = {"floor": floor, "walk": walk, "floor_without_drift": floor, "walk_without_drift": walk}
+    fitted = replace(made.LAW, **parts, drift=drift, drift_low=drift_low, fit_p=fit_p)
     one = made.AccumulationEntry(error=fitted, correction=fitted, sentence="float16: made.")
     orders = replace(entry.orders, level_variance=order)
     entry = replace(entry, accumulation={"float16": one}, orders=orders)
@@ -49,6 +50,26 @@ def test_a_crossing_by_the_law():
     assert (one.how, one.level) == ("law", 7)
     decay = signal_of(record, record.quantities["value"])
     assert decay.at(7) == pytest.approx(-7.0)
+
+
+@pytest.mark.parametrize(("drift_low", "level"), [(0.0, 7), (0.01, 6)])
+def test_a_drift_that_is_not_significant_does_not_go_on(drift_low, level):
+    """The page goes on by the law of the verdict: u^2 n reaches 2^-2l at l = 7, and u^2 (n + n^2 / 16) at 6 already."""
+    record = record_of([1e-9] * 5, law=(0.0, 1.0, 1.0 / 16.0), order=2.0, drift_low=drift_low)
+    one = found(record)
+    assert (one.how, one.level) == ("law", level)
+    shares = law_shares(record.quantities["value"], "float16")
+    assert (shares[4][3] == 0.0) == (drift_low == 0.0)
+
+
+def test_a_law_that_is_rejected_is_not_drawn_beyond_the_ladder():
+    """As nothing is extrapolated from it in the verdict."""
+    record = record_of([1e-9] * 5, order=2.0, fit_p=0.0009)
+    one, entry = found(record), record.quantities["value"]
+    assert (one.how, one.reason) == ("unknown", "the law does not fit")
+    fine = replace(entry.accumulation["float16"], error=made.LAW)
+    chart = crossing_chart(record, replace(entry, accumulation={**entry.accumulation, "float32": fine}))
+    assert [series.label for series in chart.series if series.dashed] == ["signal", "float32"]
 
 
 def test_the_law_may_never_cross():

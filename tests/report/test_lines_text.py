@@ -77,7 +77,7 @@ class TestSource:
     def test_bars_and_figures_stand_right_of_the_lines_that_matter(self):
         """Lines below a hundredth have neither; the draws follow the source; nothing stands at its left."""
         text = rendered(audit_text(record(), None))
-        block = text[text.index("Which lines cost float16 its accuracy") :]
+        block = text[text.index("Lines of float16") :]
         assert "share of error variance\n" in block
         assert "        move = S * (rate * h + 0.2 * dw)              #                    6.30%\n" in block
         assert "        S = S + move                                  ##################   91.4%\n" in block

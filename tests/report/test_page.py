@@ -9,6 +9,7 @@ import re
 import subprocess
 import sys
 from functools import cache
+from itertools import pairwise
 
 import made_records as made
 import numpy as np
@@ -19,6 +20,7 @@ from msgspec.structs import replace
 
 from narrowgauge.record.audit import CanaryEntry
 from narrowgauge.report import page as page_module
+from narrowgauge.report.blocks import Cell
 from narrowgauge.report.page import ReportError, page, write_page
 
 ASKED = [
@@ -94,6 +96,30 @@ class TestWhole:
         assert re.findall(r'<section id="(\w+)"', text) == [*ASKED, "words"]
         assert re.findall(r'<li><a href="#(\w+)"', text) == ["verdict", *ASKED, "words"]
 
+    def test_headings_are_nested(self):
+        """What belongs to a quantity stands one heading below it, and none is skipped."""
+        found = re.findall(r"<h([1-6])[^>]*>([^<]*)<", built(made.audit_record))
+        assert ("3", "Quantity option") in found
+        assert ("4", "float16 for option") in found
+        depths = [int(depth) for depth, _ in found]
+        assert all(after <= before + 1 for before, after in pairwise(depths))
+
+    @pytest.mark.parametrize(
+        ("text", "second"),
+        [
+            ("0.500 (0.490 to 0.510)", "(0.490 to 0.510)"),
+            ("-1.3e-04 (at least -2)", "(at least -2)"),
+            ("1.05 (no interval)", ""),
+            ("the kernel raised (line 7)", ""),
+        ],
+    )
+    def test_an_interval_is_one_piece(self, text, second):
+        """It is not broken at the end of a line; other words are."""
+        assert Cell(text).pieces[1] == second
+        assert "".join(Cell(text).pieces) == text
+        cell = 'data-label="slope"><span>1.00 <span class="unbroken">(0.970 to 1.03)</span></span></td>'
+        assert cell in built(pages.full_record)
+
     def test_nothing_is_fetched_or_run(self):
         """No script, no address, no style outside the one that the policy names by its hash."""
         text = built(pages.large_record)
@@ -160,12 +186,24 @@ class TestFirstScreen:
         shown = words(pages.sound_record)
         assert "To settle float16 on level 3 and bfloat16 on level 1, raise [sampling] most_paths" in shown
         assert "to about 1,300,000 (now 65,536); for some of it, how many are enough cannot be told." in shown
-        assert "model validation and change control: this page is evidence, not approval." in shown
+        assert "model validation and change control: this audit is evidence, not approval." in shown
+
+    def test_a_saving_is_drawn_where_the_answer_is_yes(self):
+        """A bar of costs would say more than the sentence above it where nothing is decided, refused or wrong."""
+        assert '<ul class="gauges">' in built(pages.sound_record)
+        for record in (pages.undecided_record, pages.refused_record, made.troubled_record):
+            assert "gauges" not in built(record).partition("</style>")[2]
 
     def test_nothing_pays(self):
         """Then the answer is no, and what to keep."""
+        assert "No: lower precision does not pay here. Keep float64." in words(pages.refused_record)
+
+    def test_nothing_is_finite(self):
+        """Then float64 is nothing to keep: there is no verdict, and the levels where that is so are named."""
         shown = words(pages.nonfinite_record)
-        assert "No: lower precision does not pay here. Keep float64." in shown
+        assert "No verdict: on levels 0 to 4 float64 itself has no finite results to compare with." in shown
+        assert "Find out why the kernel has no finite results in float64 on levels 0 to 4. Then audit again." in shown
+        assert "Keep float64" not in shown
 
     def test_nothing_is_settled(self):
         """Then it is not yet known."""
@@ -316,7 +354,7 @@ class TestWriting:
         with pytest.raises(ReportError, match=r"^there: cannot be written: No such file or directory$"):
             write_page(pages.sound_record(), tmp_path / "no" / "report.html", "there")
 
-    @pytest.mark.parametrize("name", ["audit.json", "levels.csv", "blocks.sqlite"])
+    @pytest.mark.parametrize("name", ["audit.json", "levels.csv", "lines.csv", "blocks.sqlite", "policy.json"])
     def test_no_file_of_an_audit_is_overwritten(self, tmp_path, name):
         """Whatever --out says."""
         with pytest.raises(ReportError, match=f"^{re.escape(name)}: is a file of an audit; accepted: another name"):

@@ -5,12 +5,16 @@ Skipped where there is no Chromium; the continuous integration installs one.
 
 from __future__ import annotations
 
+import json
+
 import made_records as made
 import pages
 import pytest
 import test_approximate_text as approximate
 from browser import Browser, chromium
+from msgspec.structs import replace
 
+from narrowgauge.report.blocks import visible
 from narrowgauge.report.page import page
 
 RECORDS = {
@@ -45,6 +49,21 @@ def opened(request, tmp_path_factory):
     return path
 
 
+SEEN = visible(pages.CONTROL)  # as a page shows it
+HOSTILE_PLACES = [
+    ("h3", f"Quantity {pages.BRACKETS}"),
+    ("caption", pages.SCRIPT),
+    ("#branches li", pages.SCRIPT),
+    ("#lines .source code", "a\\x1b[31mb\\u202ec\\x00d"),
+    ("#lines caption", pages.SCRIPT),
+    ("#range th", pages.SCRIPT),
+    ("#domain th", pages.SCRIPT),
+    ("#rounding td", pages.BRACKETS),
+    ("#measured tbody th", f"parameters.{pages.SCRIPT}"),
+    ("#measured tbody td", SEEN),
+    ("#measured tbody td", f"[1.5, {SEEN}]"),
+    ("#cautions li", pages.SCRIPT),
+]
 # What every page must satisfy, as an expression that gives a list of what does not.
 WIDER = """
 [...document.querySelectorAll('body *')].filter(e => e.getBoundingClientRect().right > innerWidth + 1
@@ -80,6 +99,13 @@ BROKEN_LINKS = """
 [...document.querySelectorAll('a[href]')].map(a => a.getAttribute('href'))
   .filter(h => !h.startsWith('#') || !document.getElementById(h.slice(1)))
 """
+BROKEN_INTERVALS = """
+[...document.querySelectorAll('td .unbroken')].filter(e => e.getClientRects().length > 1).map(e => e.innerText)
+"""
+BELOW_ITS_LABEL = """
+[...document.querySelectorAll('.stacked td .unbroken')].filter(e => getComputedStyle(e.closest('td')).display === 'grid'
+  && e.getBoundingClientRect().left < e.closest('td').getBoundingClientRect().left + 80).map(e => e.innerText)
+"""
 DOUBLE_IDS = """
 [...document.querySelectorAll('[id]')].map(e => e.id).filter((id, n, all) => all.indexOf(id) !== n)
 """
@@ -93,7 +119,7 @@ def test_the_page_is_whole_everywhere(browser, opened, scripts, width, dark):
     assert {url for url in requested if not url.startswith("data:")} == {opened.absolute().as_uri()}
     assert browser.told("Log.entryAdded", "Runtime.consoleAPICalled", "Runtime.exceptionThrown") == []
     assert browser.value("document.documentElement.scrollWidth") <= width
-    for expression in (WIDER, NOT_DRAWN, CUT, OVERLAID, BROKEN_LINKS, DOUBLE_IDS):
+    for expression in (WIDER, NOT_DRAWN, CUT, OVERLAID, BROKEN_LINKS, BROKEN_INTERVALS, BELOW_ITS_LABEL, DOUBLE_IDS):
         assert browser.value(expression) == [], expression
     ground = browser.value("getComputedStyle(document.body).backgroundColor")
     assert (ground == "rgb(20, 24, 27)") == dark
@@ -109,6 +135,22 @@ def test_markup_in_names_is_text(browser, tmp_path):
     for shown in (pages.SCRIPT, pages.BRACKETS, "{{ 7 * 7 }}", "&amp;", "\\x1b[31m", "\\u202e", "\\x00"):
         assert shown in text, shown
     assert browser.told("Page.javascriptDialogOpening") == []
+
+
+@pytest.mark.parametrize("name", [pages.SCRIPT, pages.BRACKETS])
+def test_a_hostile_name_is_shown_where_it_belongs(browser, tmp_path, name):
+    """The kernel's own name, as it is, at the top; names and values of users in each section that has them."""
+    record = pages.hostile_record()
+    path = tmp_path / "report.html"
+    path.write_text(page(replace(record, kernel=replace(record.kernel, run=name))), encoding="utf-8")
+    browser.open(path)
+    assert browser.value("document.title") == f"Precision audit of {name}"
+    assert browser.value("document.querySelector('.eyebrow code').innerText") == name
+    for place, shown in HOSTILE_PLACES:
+        seen = (
+            f"[...document.querySelectorAll({json.dumps(place)})].some(e => e.innerText.includes({json.dumps(shown)}))"
+        )
+        assert browser.value(seen), f"{shown} at {place}"
 
 
 def test_a_page_that_asks_for_something_is_noticed(browser, tmp_path):

@@ -27,7 +27,9 @@ class TestBranches:
     def test_it_is_the_first_thing_to_do(self):
         """With the format and the level."""
         steps = words(pages.full_record).partition("What to do next")[2]
-        assert steps.startswith(" Make both branches of a split give the same bits, or use no split: float16: no split")
+        assert steps.startswith(
+            " Make both branches of a split give the same bits, or use no split. As it is: float16: no"
+        )
 
 
 class TestLines:

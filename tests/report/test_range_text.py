@@ -88,3 +88,10 @@ def test_without_values_that_vary_nothing_is_claimed():
     assert averaging_lines(replace(AVERAGING, quantities={"value": [empty]})) == [
         "Nothing is known of sums, since no branch has values that vary."
     ]
+
+
+def test_an_error_just_above_the_bound_is_not_shown_as_the_bound():
+    """0.1004 standard errors are more than a tenth."""
+    formats = {"float32": (sums(0.1004, 45_000), sums(0.002, None))}
+    (line,) = averaging_lines(replace(AVERAGING, quantities={"value": [averaged(0, 45_210, formats)]}))
+    assert "err by 0.1004 standard errors" in line

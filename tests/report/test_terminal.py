@@ -82,7 +82,14 @@ class TestTerminal:
         text = rendered(audit_text(record, Path(HOSTILE)), force_terminal=True, color_system="truecolor")
         assert all(character.isprintable() for character in COLOUR.sub("", text).replace("\n", ""))
         words = flat(audit_text(record, Path(HOSTILE)), 200)
-        for place in ("Audit of {}", "Quantity {}", "- {}", "float16 for {}", "does not pay: {}", "Written to {}:"):
+        for place in (
+            "Audit of {}",
+            "Quantity {}",
+            "- {}",
+            "What float16 is worth for {}",
+            "does not pay: {}",
+            "Written to {}:",
+        ):
             assert place.format(shown) in words
         assert "Quantity [/]" in words
         assert "Quantity [2J" in words
@@ -99,7 +106,7 @@ class TestTerminal:
         """A name longer than the terminal is wide is folded, not cut."""
         name = "x" * 150
         text = rendered(audit_text(made.audit_record(**{name: made.quantity_entry()}), None), 60)
-        assert f"Quantity{name}" in text.replace("\n", "").replace(" ", "")
+        assert f"Thecheapestschemeofeachlevelof{name}" in text.replace("\n", "").replace(" ", "")
 
 
 PLAN = SimpleNamespace(

@@ -7,18 +7,23 @@ NAME.actual.txt; look at it, and accept it with NARROWGAUGE_ACCEPT=1 in the envi
 from __future__ import annotations
 
 import os
+import re
 import sys
 from pathlib import Path
 from typing import get_args
 
 import made_records as made
+import pages
 import pytest
 from msgspec.structs import replace
 from rendering import flat, rendered
 
+from narrowgauge.judge.accumulation import AccumulationFit, rejected
 from narrowgauge.judge.schemes import Reason
 from narrowgauge.record.audit import FinestEntry
 from narrowgauge.report import tables
+from narrowgauge.report.notes import REJECTED_BELOW, accumulation
+from narrowgauge.report.questions import QUESTIONS
 from narrowgauge.report.text import audit_text, trial_text, verdict_text
 from narrowgauge.report.verdict import finest_words
 
@@ -79,11 +84,16 @@ class TestOrder:
         assert "- value, level 2 against level 1: difference 0.123, standard error 0.0123, so 10.0 of them." in words
         assert words.index("PATHS WERE DROPPED.") < words.index("Audit of")
         assert "3 of 32,768 on level 1" in words
-        assert "No verdict: the levels do not fit together." in words
+        assert "No verdict: the levels of this simulation do not fit together, so its figures" in words
 
     def test_sound_ladder_has_no_alarm(self):
         """An audit without trouble begins with the name of the kernel."""
         assert rendered(audit_text(made.audit_record(), None)).startswith("Audit of reserve.py:value\n")
+
+    def test_without_a_finite_reference_there_is_no_verdict(self):
+        """As on the page."""
+        said = flat(verdict_text(pages.nonfinite_record(), None))
+        assert "No verdict: on levels 0 to 4 float64 itself has no finite results to compare with. What follows" in said
 
     def test_alarms_in_the_short_form(self):
         """The short form does not leave the alarm out."""
@@ -98,6 +108,24 @@ class TestFigures:
     def test_never_across_a_threshold(self):
         """The undecided edge of 1.0497 (0.9996 to 1.0501) is not shown as 1.05 (1.00 to 1.05)."""
         assert "1.0497 (0.9996 to 1.0501)" in rendered(audit_text(made.audit_record(), None))
+
+    def test_nor_does_a_noise_across_the_signal(self):
+        """A noise of 1.04 above a signal of 1.02 is not shown as 1.0."""
+        entry = made.with_arm(made.quantity_entry(), 4, "bfloat16", error_variance=1.04**2)
+        reference = replace(entry.levels[4].reference, level_variance=1.02**2)
+        entry = made.with_level(entry, 4, reference=reference)
+        words = flat(audit_text(made.audit_record(value=entry), None), 120)
+        assert re.search(r" 4 32 32,768 1\.02 0\.0021 1\.04 2\.6e-07 ", words)
+
+    def test_nor_does_the_p_value_of_a_law(self):
+        """0.00099996 is below the limit of the test by which the judge rejects a law."""
+        assert rejected(AccumulationFit(fit_p=0.00099996))
+        assert not rejected(AccumulationFit(fit_p=REJECTED_BELOW))
+        entry = made.quantity_entry()
+        one = entry.accumulation["float16"]
+        badly = replace(one, error=replace(one.error, fit_p=0.00099996))
+        (line,) = (line for line in accumulation(replace(entry, accumulation={"float16": badly})) if "p =" in line)
+        assert line.endswith("p = 9.9996e-04.")
 
     def test_undecided_level(self):
         """An undecided level has estimate, interval, the reason and the paths needed."""
@@ -214,7 +242,7 @@ class TestPlan:
         """Several quantities have one table of paths, in the verdict, which says which of them needs so many."""
         text = rendered(audit_text(made.audit_record(), None))
         assert text.count("share\n") == 1
-        assert text.index("Paths for all quantities together") > text.index("\nVerdict\n")
+        assert text.index("Paths for all quantities together") > text.index(QUESTIONS["schemes"].words)
         assert "    0  float16 with float64  1,175,885  option       1,878  output  99.9999%" in text
         assert "Paths for an RMSE" not in text
         words = " ".join(text.split())
@@ -226,9 +254,9 @@ class TestPlan:
         assert "as the scheme that serves all quantities on each level (99% interval)." in words
 
     def test_one_quantity(self):
-        """A single quantity has its plan beside its tables, and nothing is said about others."""
+        """A single quantity has its plan beside what it saves, and nothing is said about others."""
         text = rendered(audit_text(made.audit_record(value=made.quantity_entry()), None))
-        assert text.index("Paths for an RMSE of 0.05 in value") < text.index("\nVerdict\n")
+        assert text.index("Paths for an RMSE of 0.05 in value") > text.index(QUESTIONS["schemes"].words)
         words = " ".join(text.split())
         assert "all quantities" not in words
         assert "as the cheapest scheme on each level (99% interval). The cheapest schemes cost 9,000" in words
@@ -299,9 +327,13 @@ class TestFinest:
     @pytest.mark.parametrize(
         ("level", "possible", "words"),
         [
-            (2, 3, "Low precision pays in float16, bfloat16 and float32 (from level 0 on, measured to level 4)."),
-            (None, 3, "It is undecided whether low precision pays in float16, bfloat16 or float32"),
-            (None, None, "Low precision does not pay in float16, bfloat16 or float32"),
+            (2, 3, "Yes: at the same accuracy, the cheapest mix of formats costs 31.8%"),
+            (
+                None,
+                3,
+                "Not decided yet: whether lower precision pays in float16, bfloat16 or float32 needs more paths.",
+            ),
+            (None, None, "No: lower precision does not pay here. Keep float64."),
         ],
     )
     def test_lead(self, level, possible, words):

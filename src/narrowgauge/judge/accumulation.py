@@ -19,6 +19,8 @@ import numpy as np
 from scipy.optimize import nnls
 from scipy.stats import chi2, t
 
+from narrowgauge.record.audit import LawEntry
+
 __all__ = [
     "AccumulationFit",
     "Agreement",
@@ -27,6 +29,7 @@ __all__ = [
     "SignalDecay",
     "agreement",
     "correction_at",
+    "established",
     "fit",
     "rejected",
     "rules",
@@ -166,9 +169,8 @@ def fit(
     has no coarse half). Points that are not finite or have no variance are passed over. With fewer than 4
     distinct numbers of steps nothing is fitted, and `reason` says so.
 
-    Weighted least squares with weights 1 / (SE^2 + (.01 Var)^2), first of the measured variances, then twice
-    of the fitted ones. The chi-square test counts the parts above 0 as fitted and takes the standard errors
-    as known.
+    Weighted least squares with weights 1 / (SE^2 + (.01 Var)^2), first of the measured variances, then twice of the
+    fitted ones. The chi-square test counts the parts above 0 as fitted and takes the standard errors as known.
     """
     given = sorted(filter(_measurable, points), key=lambda point: (point.steps, point.level, point.variance))
     finer = [point for point in given if point.level != 0]
@@ -206,9 +208,19 @@ def fit(
     )
 
 
-def rejected(fit: AccumulationFit) -> bool:
+def rejected(fit: AccumulationFit | LawEntry) -> bool:
     """Return whether the chi-square test rejects the law: p below 0.001, which is its false-alarm rate."""
     return fit.fit_p is not None and fit.fit_p < _REJECTED_BELOW
+
+
+def established(fit: AccumulationFit | LawEntry) -> tuple[float, float, float]:
+    """Return floor, walk and drift as far as they are established: with the drift, or fitted without it."""
+    if fit.floor is None or fit.walk is None or fit.drift is None:
+        raise ValueError(f"the law is not fitted: {fit.reason}; accepted: a fit without a reason")
+    if fit.drift_low is not None and fit.drift_low > 0.0:
+        return fit.floor, fit.walk, fit.drift
+    # Dropping the term alone would leave too little: part of the walk may have been fitted as drift.
+    return fit.floor_without_drift or 0.0, fit.walk_without_drift or 0.0, 0.0
 
 
 def rules(fit: AccumulationFit, steps: int) -> Part:
@@ -216,7 +228,7 @@ def rules(fit: AccumulationFit, steps: int) -> Part:
 
     Raises ValueError when the law was not fitted.
     """
-    sizes = [part * float(steps) ** power for power, part in enumerate(_established(fit))]
+    sizes = [part * float(steps) ** power for power, part in enumerate(established(fit))]
     return _PARTS[sizes.index(max(sizes))]
 
 
@@ -270,7 +282,7 @@ def correction_at(fit: AccumulationFit, steps: int, u: float, *, with_drift_high
     With `with_drift_high` the upper bound of the drift takes its place, significant or not. Raises ValueError
     when the law was not fitted.
     """
-    floor, walk, drift = _established(fit)
+    floor, walk, drift = established(fit)
     if with_drift_high and fit.drift_high is not None:
         drift = fit.drift_high
     n = float(steps)
@@ -303,16 +315,6 @@ def _badly(fit: AccumulationFit) -> str:
 
 def _measurable(point: LawPoint) -> bool:
     return 0.0 < point.variance < math.inf and math.isfinite(point.se) and math.isfinite(point.mean)
-
-
-def _established(fit: AccumulationFit) -> tuple[float, float, float]:
-    """Return floor, walk and drift as far as they are established: with the drift, or fitted without it."""
-    if fit.floor is None or fit.walk is None or fit.drift is None:
-        raise ValueError(f"the law is not fitted: {fit.reason}; accepted: a fit without a reason")
-    if fit.drift_low is not None and fit.drift_low > 0.0:
-        return fit.floor, fit.walk, fit.drift
-    # Dropping the term alone would leave too little: part of the walk may have been fitted as drift.
-    return fit.floor_without_drift or 0.0, fit.walk_without_drift or 0.0, 0.0
 
 
 def _data(points: Sequence[LawPoint], u: float) -> _Data:
@@ -360,10 +362,9 @@ def _gains(design: _Array, errors: _Array) -> _Array:
 def _half_widths(gains: _Array, se: _Array, law: _Array, dof: _Array, confidence: float) -> _Array:
     """Return half the width of the Student t interval of each row of gains @ y.
 
-    The squared error of a level is that of its sample, se^2 with its degrees of freedom, and that of the law,
-    law^2, which is known. Degrees of freedom of the sum: F. E. Satterthwaite, "An approximate distribution of
-    estimates of variance components", Biometrics Bulletin 2(6), 1946, doi 10.2307/3002019 (recalled from
-    memory).
+    The squared error of a level is that of its sample, se^2 with its degrees of freedom, and that of the law, law^2,
+    which is known. Degrees of freedom of the sum: F. E. Satterthwaite, "An approximate distribution of estimates of
+    variance components", Biometrics Bulletin 2(6), 1946, doi 10.2307/3002019 (recalled from memory).
     """
     sampled = gains**2 * se**2
     total = np.sum(sampled + gains**2 * law**2, axis=1)

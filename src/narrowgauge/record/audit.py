@@ -217,7 +217,10 @@ class LevelEntry(Entry, frozen=True, kw_only=True):
 
 
 class LawEntry(Entry, frozen=True, kw_only=True):
-    """The accumulation law fitted to a variance: u^2 (floor + walk n + drift n^2), n steps."""
+    """The accumulation law fitted to a variance: u^2 (floor + walk n + drift n^2), n steps.
+
+    Where the drift is not significant, `drift_low` 0, the law is `floor_without_drift` + `walk_without_drift` n.
+    """
 
     floor: float | None
     floor_low: float | None
@@ -233,6 +236,8 @@ class LawEntry(Entry, frozen=True, kw_only=True):
     slope_high: float | None
     deviation: float | None
     fit_p: float | None
+    floor_without_drift: float | None
+    walk_without_drift: float | None
     levels: list[int]
     reason: str | None
 

@@ -9,7 +9,7 @@ from rich.text import Text
 from narrowgauge.record.averaging import AveragedEntry, AveragingEntry, FormatSumsEntry, SumEntry
 from narrowgauge.report.layout import Ruled
 from narrowgauge.report.tables import VERDICT_STYLES
-from narrowgauge.report.wording import NONE, clean, count, figure, joined
+from narrowgauge.report.wording import NONE, clean, count, figure, joined, shown_edge
 
 __all__ = ["averaged_over", "averaging_lines", "sums_tables"]
 
@@ -86,7 +86,7 @@ def _format(entries: list[AveragedEntry], name: str, share: float, *, planned: b
         ones = [_Worst(entry, _sums(entry.formats[name], order)) for entry in entries]
         one = max(ones, key=_planned_harm) if planned else min(ones, key=_fewest)
         if planned and _planned_harm(one) > share:
-            parts.append(f"{words}, {_harm(one)}")
+            parts.append(f"{words}, {_harm(one, share)}")
         elif not planned and one.sums.largest is not None:
             parts.append(f"{words}, {_paths(one.sums.largest)} paths may be summed on level {one.entry.level}")
     return "; ".join(parts)
@@ -106,10 +106,10 @@ def _fewest(one: _Worst) -> float:
     return float("inf") if one.sums.largest is None else one.sums.largest
 
 
-def _harm(one: _Worst) -> str:
+def _harm(one: _Worst, share: float) -> str:
     entry, sums = one
     where = f"the {'corrections' if entry.branch == 'correction' else 'paths'} of level {entry.level}"
-    size = "pass its range" if sums.share is None else f"err by {figure(sums.share, 2)} standard errors"
+    size = "pass its range" if sums.share is None else f"err by {shown_edge(sums.share, (share,), 2)} standard errors"
     known = "" if sums.largest is None else f", {_paths(sums.largest)} stay within bounds"
     return f"sums of {where} {size} ({count(entry.paths or 0)} are planned{known})"
 

@@ -1,4 +1,4 @@
-"""The last sections of the page: range, how the kernel rounds, how it was measured with every number, cautions."""
+"""The last sections of the page: how the kernel rounds, how it was measured with every number, cautions."""
 
 from __future__ import annotations
 
@@ -8,38 +8,25 @@ from msgspec import UnsetType
 from rich.text import Text
 
 from narrowgauge.record.audit import AuditRecord, QuantityEntry
-from narrowgauge.report.blocks import Block, Cell, Part, Points, Table, Words, points, tabled, visible
-from narrowgauge.report.canary import CANNOT_SHOW, canary_lines
-from narrowgauge.report.constants import constant_lines, no_constants
+from narrowgauge.report.blocks import Block, Cell, Table, Words, points, tabled, visible
+from narrowgauge.report.canary import CANNOT_SHOW, HELD_AGAINST, canary_lines
 from narrowgauge.report.layout import Ruled
 from narrowgauge.report.sections import per_quantity
 from narrowgauge.report.settings import arithmetics, bias_share, measured_costs
-from narrowgauge.report.trial import reach_notes, reach_summary, reach_table
+from narrowgauge.report.trial import ROUNDED, reach_notes, reach_summary, reach_table
 from narrowgauge.report.wording import NONE, clean, count, figure, interval, setting_value, shown_edge
 from narrowgauge.report.workers import speed_notes
 
-__all__ = ["cautions", "constants", "measured", "rounding"]
-
-
-def constants(record: AuditRecord) -> list[Block]:
-    """Return the constants of the kernel that a format cannot take."""
-    title = "Constants that a format cannot take"
-    if record.range is None:
-        why = "the kernel rounds for itself" if not isinstance(record.canary, UnsetType) else "the audit has none"
-        return [Part(title, (Words(f"Not looked for: {why}."),))]
-    lines = constant_lines(record.range)
-    return [Part(title, (Points(tuple(lines)) if lines else Words(no_constants(record.range)),))]
+__all__ = ["cautions", "measured", "rounding"]
 
 
 def rounding(record: AuditRecord) -> list[Block]:
     """Return whether every operation is rounded: the reach of the emulation, or the canary."""
     blocks: list[Block] = []
     if not isinstance(record.canary, UnsetType):
-        words = "The kernel rounds for itself, and was held against wider and narrower formats on the same draws."
-        blocks += [Words(words, "answer"), *points(canary_lines(record.canary)), Words(CANNOT_SHOW, "note")]
+        blocks += [Words(HELD_AGAINST, "answer"), *points(canary_lines(record.canary)), Words(CANNOT_SHOW, "note")]
     if record.reach is not None:
-        words = f"The kernel was run with every elementary operation rounded. {reach_summary(record.reach)}"
-        blocks.append(Words(words, "answer"))
+        blocks.append(Words(f"{ROUNDED} {reach_summary(record.reach)}", "answer"))
         if record.reach.lines:
             blocks.append(tabled("Operations of the trial run, by line of the kernel", reach_table(record.reach)))
         blocks += points(map(clean, reach_notes(record.reach)))

@@ -5,7 +5,8 @@ All of it is plain text; the template escapes it. Only the `drawings` of a figur
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+import re
+from collections.abc import Iterable
 from dataclasses import dataclass
 from typing import ClassVar
 
@@ -13,6 +14,7 @@ from narrowgauge.report.layout import Ruled
 from narrowgauge.report.tables import VERDICT_STYLES
 
 __all__ = [
+    "MARKS",
     "Block",
     "Cell",
     "Drawing",
@@ -28,8 +30,10 @@ __all__ = [
     "visible",
 ]
 
+_INTERVAL = re.compile(r"(\S+ )(\([^()]*\d\))")
 _PHONE = 40  # characters across
-_MARKS = dict(zip(VERDICT_STYLES.values(), ("yes", "no", "open"), strict=True))
+MARKS = {"pays": "yes", "undecided": "open", "does not pay": "no"}
+_MARKS = {VERDICT_STYLES[verdict]: mark for verdict, mark in MARKS.items()}
 
 
 @dataclass(frozen=True, slots=True)
@@ -55,6 +59,12 @@ class Cell:
 
     text: str
     mark: str = ""
+
+    @property
+    def pieces(self) -> tuple[str, str]:
+        """The text in two: a figure and its interval in brackets, which must not be broken; else "" for the second."""
+        found = _INTERVAL.fullmatch(self.text)
+        return (found[1], found[2]) if found else (self.text, "")
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -143,8 +153,8 @@ def tabled(caption: str, ruled: Ruled) -> Table:
 
 def points(texts: Iterable[str]) -> list[Block]:
     """Return a list of these sentences, or nothing where there are none."""
-    found: Sequence[str] = tuple(texts)
-    return [Points(tuple(found))] if found else []
+    found = tuple(texts)
+    return [Points(found)] if found else []
 
 
 def visible(text: object) -> str:

@@ -7,8 +7,9 @@ from collections.abc import Iterable, Sequence
 from narrowgauge.record.canary import CanaryEntry
 from narrowgauge.report.wording import clean, count, figure, joined, percent
 
-__all__ = ["CANNOT_SHOW", "canary_alarms", "canary_lines"]
+__all__ = ["CANNOT_SHOW", "HELD_AGAINST", "canary_alarms", "canary_lines"]
 
+HELD_AGAINST = "The kernel rounds for itself, and was held against wider and narrower formats on the same draws."
 CANNOT_SHOW = (
     "From outside it shows whether the state is rounded in the format, and how results err. It cannot show whether "
     "every operation is rounded: wider intermediates inside an expression, fused products and approximate functions "

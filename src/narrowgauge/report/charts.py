@@ -6,11 +6,12 @@ Heights are logarithms to base two throughout; what is zero or does not exist ha
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Sequence
+from collections.abc import Container, Iterable, Sequence
 from dataclasses import dataclass
 
 from scipy.stats import t
 
+from narrowgauge.measure.moments import BATCHES
 from narrowgauge.record.audit import AuditRecord, LevelEntry
 from narrowgauge.report.palette import Look
 from narrowgauge.report.settings import setting
@@ -24,13 +25,13 @@ __all__ = [
     "SpanChart",
     "SpanRow",
     "Tick",
+    "deviations",
     "extent",
     "interval_of",
     "power",
     "spoken",
 ]
 
-_BATCHES = 32  # of a block, over which the standard errors were taken
 _SUPERSCRIPTS = str.maketrans("-0123456789", "\u207b\u2070\u00b9\u00b2\u00b3\u2074\u2075\u2076\u2077\u2078\u2079")
 
 
@@ -125,6 +126,24 @@ class SpanChart:
     lines: tuple[SpanRow, ...]
 
 
+def deviations(
+    record: AuditRecord,
+    measured: Iterable[tuple[LevelEntry, float | None, float | None]],
+    rests_on: Container[float] | None = None,
+) -> tuple[Dot, ...]:
+    """Return standard deviations against levels, from levels with a variance and its standard error.
+
+    A variance that is 0, or not there, has no place. Dots are filled on the levels that a fit `rests_on`.
+    """
+    found = []
+    for level, variance, se in measured:
+        if variance is not None and variance > 0.0:
+            low, high = interval_of(record, level, variance, se)
+            filled = rests_on is None or level.level in rests_on
+            found.append(Dot(level.level, 0.5 * math.log2(variance), low, high, filled))
+    return tuple(found)
+
+
 def interval_of(record: AuditRecord, level: LevelEntry, variance: float, se: float | None) -> tuple[float, float]:
     """Return the interval of a standard deviation, in logarithms to base two, from the standard error of a variance.
 
@@ -133,7 +152,7 @@ def interval_of(record: AuditRecord, level: LevelEntry, variance: float, se: flo
     middle = 0.5 * math.log2(variance)
     if se is None:
         return middle, middle
-    quantile = float(t.ppf(1.0 - _alpha(record) / 2.0, _BATCHES * level.blocks - 1))
+    quantile = float(t.ppf(1.0 - _alpha(record) / 2.0, BATCHES * level.blocks - 1))
     half = 0.5 * quantile * se / (variance * math.log(2.0))
     return middle - half, middle + half
 

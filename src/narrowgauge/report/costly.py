@@ -21,7 +21,7 @@ from narrowgauge.report.lines import (
     widening_note,
     widening_table,
 )
-from narrowgauge.report.wording import clean, percent
+from narrowgauge.report.wording import begun, clean, percent
 
 __all__ = ["DEPTHS", "source_lines"]
 
@@ -52,7 +52,7 @@ def source_lines(record: AuditRecord) -> list[Block] | str:
 
 def _study(record: AuditRecord, form: str, study: FormatLines) -> Iterator[Block]:
     if best := best_widening(form, study):
-        yield Words(f"{best[0].upper()}{best[1:]}.")
+        yield Words(f"{begun(best)}.")
     yield Words(study_words(record, form, study))
     name = shown_quantity(record, form, study)
     if name is None:
@@ -81,14 +81,12 @@ def _source(listing: Listing, form: str) -> Source:
         rows = tuple(SourceRow(0, one.text, *_share(one.share)) for one in listing.lines)
         return Source(caption=f"Inputs that cost {clean(form)} accuracy", first="input", heading=HEADING, rows=rows)
     found: list[SourceRow] = []
-    before = listing.lines[0].line
     for one in listing.lines:
-        if before is not None and one.line is not None and one.line > before + 1:
+        if one.gap:
             found.append(SourceRow(0, f"from line {one.line}", gap=True))
         text = one.text.expandtabs(_TAB).rstrip()
         bare = text.lstrip(" ")
         found.append(SourceRow(min(len(text) - len(bare), DEPTHS), bare, *_share(one.share)))
-        before = one.line
     caption = f"{visible(listing.file)}, from line {listing.lines[0].line}"
     return Source(caption=caption, first="source", heading=HEADING, rows=tuple(found))
 

@@ -8,14 +8,29 @@ from itertools import pairwise
 from typing import Literal
 
 from narrowgauge.arithmetic.formats import FORMATS
+from narrowgauge.judge.accumulation import established, rejected
 from narrowgauge.record.audit import AuditRecord, LawEntry, LevelEntry, QuantityEntry
-from narrowgauge.report.charts import Dot, LineChart, Series, Tick, interval_of
-from narrowgauge.report.palette import Look, look_of
+from narrowgauge.report.charts import Dot, LineChart, Series, Tick, deviations
+from narrowgauge.report.palette import SIGNAL, look_of
 from narrowgauge.report.settings import coupled, exact_formats, setting
-from narrowgauge.report.wording import count
+from narrowgauge.report.wording import clean, count
 
-__all__ = ["Crossing", "Signal", "crossing_chart", "crossing_of", "fitted_law", "law_at", "signal_of"]
+__all__ = [
+    "NO_NOISE",
+    "Crossing",
+    "Signal",
+    "crossing_chart",
+    "crossing_of",
+    "crossing_words",
+    "fitted_law",
+    "law_at",
+    "law_parts",
+    "noise_dots",
+    "signal_dots",
+    "signal_of",
+]
 
+NO_NOISE = "No format was measured with exact draws, so there is no rounding noise by itself."
 _FARTHEST = 64  # levels beyond the ladder at which nobody looks any more
 _MOST_STEPS = 500.0  # their logarithm to base two: the square of so many is still a number
 _DRAWN_BEYOND = 6
@@ -59,6 +74,8 @@ def crossing_of(record: AuditRecord, entry: QuantityEntry, arm: str) -> Crossing
     law, decay = fitted_law(entry, arm), signal_of(record, entry)
     if law is None:
         return Crossing(how="unknown", level=None, reason="the law is not fitted")
+    if rejected(law):
+        return Crossing(how="unknown", level=None, reason="the law does not fit")
     if decay is None:
         return Crossing(how="unknown", level=None, reason="how the signal falls with h is not known")
     for number in range(finest.level + 1, finest.level + _FARTHEST + 1):
@@ -68,10 +85,48 @@ def crossing_of(record: AuditRecord, entry: QuantityEntry, arm: str) -> Crossing
     return Crossing(how="law", level=None, reason=f"not within {_FARTHEST} levels")
 
 
+def crossing_words(record: AuditRecord, entry: QuantityEntry, arm: str) -> str:
+    """Return where the noise of a format crosses the signal of a quantity, in a sentence."""
+    found, name = crossing_of(record, entry, arm), clean(arm)
+    finest = entry.levels[-1].level
+    if all(level.arms[arm].error_variance is None for level in entry.levels):
+        return f"{name}: no noise was measured."
+    if all(not level.arms[arm].error_variance for level in entry.levels):
+        return f"{name}: no rounding error was seen on any level."
+    if found.how == "measured":
+        return f"{name}: {_measured_words(entry, found)}"
+    held = f"{name}: on every level where both were measured the noise stays below the signal"
+    if found.how == "unknown":
+        return f"{held}; where they cross beyond cannot be told, since {found.reason}."
+    if found.level is None:
+        return f"{held}; by its law they do not cross beyond either, at least {found.reason}."
+    span = f"between levels {found.level - 1} and {found.level}"
+    return f"{held}; by its law they cross {span} (extrapolated, measured to level {finest})."
+
+
+def _measured_words(entry: QuantityEntry, found: Crossing) -> str:
+    first = entry.levels[0].level
+    if found.level == first:
+        return f"the noise is above the signal on level {first} already."
+    before = max(level.level for level in entry.levels if found.level is not None and level.level < found.level)
+    return f"the noise crosses the signal between levels {before} and {found.level}, as measured."
+
+
 def fitted_law(entry: QuantityEntry, arm: str) -> LawEntry | None:
     """Return the law of the error of an arm, or None where it is not fitted."""
-    found = entry.accumulation.get(arm)
-    return None if found is None or found.error.reason is not None or found.error.walk is None else found.error
+    if arm not in entry.accumulation:
+        return None
+    law = entry.accumulation[arm].error
+    return None if law.reason is not None or None in (law.floor, law.walk, law.drift) else law
+
+
+def law_parts(law: LawEntry, steps: float) -> tuple[float, float, float]:
+    """Return what floor, walk and drift of a fitted law bring at a number of steps, in units of u^2.
+
+    It is the law by which the verdict was found: a drift that is not significant has no part in it.
+    """
+    floor, walk, drift = established(law)
+    return floor, walk * steps, drift * steps**2
 
 
 def signal_of(record: AuditRecord, entry: QuantityEntry) -> Signal | None:
@@ -88,19 +143,16 @@ def signal_of(record: AuditRecord, entry: QuantityEntry) -> Signal | None:
 
 def law_at(record: AuditRecord, law: LawEntry, arm: str, finest: LevelEntry, level: float) -> float | None:
     """Return the logarithm to base two of the noise that a law gives on a level; None where it gives none."""
-    if law.floor is None or law.walk is None or law.drift is None:
-        return None
     logarithm = math.log2(finest.steps) + (level - finest.level) * math.log2(_refinement(record))
     if logarithm > _MOST_STEPS:
         return None
-    n = 2.0**logarithm
-    total = law.floor + law.walk * n + law.drift * n**2
+    total = sum(law_parts(law, 2.0**logarithm))
     return math.log2(_roundoff(record, arm)) + 0.5 * math.log2(total) if total > 0.0 else None
 
 
 def crossing_chart(record: AuditRecord, entry: QuantityEntry) -> LineChart | None:
     """Return the chart of signal and noise by level, or None where there are not two levels with a signal."""
-    signal = _dots(record, entry, None)
+    signal = signal_dots(record, entry)
     if len(signal) < 2:
         return None
     finest, end = entry.levels[-1], _end(record, entry)
@@ -109,7 +161,7 @@ def crossing_chart(record: AuditRecord, entry: QuantityEntry) -> LineChart | Non
     lines = [
         Series(
             label="signal",
-            look=Look(role="ink", marker="D", dash=(5.0, 2.5)),
+            look=SIGNAL,
             dots=signal,
             solid=tuple((dot.x, dot.y) for dot in signal),
             dashed=tuple((x, decay.at(x)) for x in _along(finest.level, end)) if decay and beyond else (),
@@ -117,16 +169,17 @@ def crossing_chart(record: AuditRecord, entry: QuantityEntry) -> LineChart | Non
         )
     ]
     for arm in exact_formats(record):
-        law, dots = fitted_law(entry, arm), _dots(record, entry, arm)
+        law, dots = fitted_law(entry, arm), noise_dots(record, entry, arm)
         if not dots:
             continue
+        further = law if law and beyond and not rejected(law) else None
         lines.append(
             Series(
                 label=record.arms[arm].format,
                 look=look_of(record.arms[arm].format),
                 dots=dots,
                 solid=_curve(record, law, arm, entry, (dots[0].x, finest.level)) if law else (),
-                dashed=_curve(record, law, arm, entry, (finest.level, end)) if law and beyond else (),
+                dashed=_curve(record, further, arm, entry, (finest.level, end)) if further else (),
             )
         )
     met = [_meeting(lines[0], noise) for noise in lines[1:]]
@@ -176,19 +229,17 @@ def _end(record: AuditRecord, entry: QuantityEntry) -> int:
     return max(near, default=most if wanted else finest)
 
 
-def _dots(record: AuditRecord, entry: QuantityEntry, arm: str | None) -> tuple[Dot, ...]:
-    """Return the measured standard deviations of the signal, or of the noise of a format."""
-    found = []
-    law = None if arm is None else fitted_law(entry, arm)
-    for level in entry.levels:
-        own = level.reference if arm is None else level.arms[arm]
-        variance = own.level_variance if arm is None else level.arms[arm].error_variance
-        se = level.reference.level_variance_se if arm is None else level.arms[arm].error_variance_se
-        if variance is not None and variance > 0.0:
-            low, high = interval_of(record, level, variance, se)
-            filled = arm is None or (law is not None and level.level in law.levels)
-            found.append(Dot(level.level, 0.5 * math.log2(variance), low, high, filled))
-    return tuple(found)
+def signal_dots(record: AuditRecord, entry: QuantityEntry) -> tuple[Dot, ...]:
+    """Return the measured standard deviations of the signal, by level."""
+    owns = ((level, level.reference) for level in entry.levels)
+    return deviations(record, ((level, own.level_variance, own.level_variance_se) for level, own in owns))
+
+
+def noise_dots(record: AuditRecord, entry: QuantityEntry, arm: str) -> tuple[Dot, ...]:
+    """Return the measured standard deviations of the error of a format, by level."""
+    owns, law = ((level, level.arms[arm]) for level in entry.levels), fitted_law(entry, arm)
+    measured = ((level, own.error_variance, own.error_variance_se) for level, own in owns)
+    return deviations(record, measured, () if law is None else law.levels)
 
 
 def _curve(

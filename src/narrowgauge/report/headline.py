@@ -3,17 +3,16 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 
 from narrowgauge.record.audit import AuditRecord
-from narrowgauge.report.settings import assumed_costs, confidence, measured_to, today
-from narrowgauge.report.verdict import ending, finest_words
-from narrowgauge.report.wording import clean, joined, levels_named, percent
+from narrowgauge.report.blocks import MARKS
+from narrowgauge.report.settings import assumed_costs, confidence, measured_to, narrow_formats, today
+from narrowgauge.report.verdict import ending, finest_words, paying_and_open, unreferenced
+from narrowgauge.report.wording import begun, clean, joined, levels_named, percent
 
 __all__ = ["FormatRow", "Gauge", "Headline", "format_rows", "gauges", "headline"]
-
-_STATES = {"pays": "yes", "does not pay": "no", "undecided": "open"}
 
 
 @dataclass(frozen=True, slots=True)
@@ -50,19 +49,20 @@ class Gauge:
 
 def headline(record: AuditRecord) -> Headline:
     """Return the verdict as a manager understands it."""
-    entries = record.verdict.finest_paying_level
     if not record.verdict.sound:
         sentence = "No verdict: the levels of this simulation do not fit together, so its figures cannot be relied on."
         return Headline(sentence, "open", "What follows is what the figures would say.")
-    paying = [clean(name) for name, entry in entries.items() if entry.level is not None]
-    hoping = [clean(name) for name, entry in entries.items() if entry.level is None and entry.possible is not None]
+    if lost := unreferenced(record):
+        sentence = f"No verdict: on {levels_named(lost)} float64 itself has no finite results to compare with."
+        return Headline(sentence, "open", "What follows is what the figures would say.")
+    paying, hoping = paying_and_open(record)
     where = "on its only level" if measured_to(record) == 0 else f"measured on levels 0 to {measured_to(record)}"
     if not paying and hoping:
         sentence = f"Not decided yet: whether lower precision pays in {joined(hoping, 'or')} needs more paths."
         return Headline(sentence, "open", f"The simulation was {where}.")
     if not paying:
         sentence = f"No: lower precision does not pay here. Keep {today(record)}."
-        return Headline(sentence, "no", f"Tried: {joined(map(clean, entries))}, {where}.")
+        return Headline(sentence, "no", f"Tried: {joined(map(clean, narrow_formats(record)))}, {where}.")
     found = gauges(record)
     if not found:
         sentence = f"Yes: lower precision pays in {joined(paying)}, up to the levels named below."
@@ -109,7 +109,7 @@ def format_rows(record: AuditRecord) -> list[FormatRow]:
         levels = tuple(_states(record, name))
         decides = entry.decided_by is not None and len(record.quantities) > 1
         why = ending(record, name)
-        why = f"{why[0].upper()}{why[1:]}." if why else ""
+        why = f"{begun(why)}." if why else ""
         rows.append(
             FormatRow(
                 name=clean(name),
@@ -124,16 +124,13 @@ def format_rows(record: AuditRecord) -> list[FormatRow]:
 
 def _states(record: AuditRecord, name: str) -> Iterable[tuple[int, str]]:
     for levels in zip(*(entry.levels for entry in record.quantities.values()), strict=True):
-        marks = {_STATES.get(level.arms[name].verdict or "", "open") for level in levels}
+        marks = {MARKS.get(level.arms[name].verdict or "", "open") for level in levels}
         yield levels[0].level, next(mark for mark in ("no", "open", "yes") if mark in marks)
 
 
-def _spoken(levels: Iterable[tuple[int, str]]) -> str:
-    marks: dict[str, list[int]] = {"yes": [], "open": [], "no": []}
-    for level, mark in levels:
-        marks[mark].append(level)
-    words = {"yes": "pays", "open": "undecided", "no": "does not pay"}
-    return "; ".join(f"{words[mark]} on {levels_named(found)}" for mark, found in marks.items() if found)
+def _spoken(levels: Sequence[tuple[int, str]]) -> str:
+    found = {verdict: [level for level, own in levels if own == mark] for verdict, mark in MARKS.items()}
+    return "; ".join(f"{verdict} on {levels_named(there)}" for verdict, there in found.items() if there)
 
 
 def _why_no_saving(record: AuditRecord) -> str:

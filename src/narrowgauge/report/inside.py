@@ -4,19 +4,21 @@ from __future__ import annotations
 
 from collections.abc import Iterable
 
+from msgspec import UnsetType
+
 from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.record.audit import AuditRecord
 from narrowgauge.record.range import WatchedEntry
 from narrowgauge.report.averaging import averaged_over, averaging_lines, sums_tables
-from narrowgauge.report.behind import constants
 from narrowgauge.report.blocks import Block, Drawing, Part, Words, points, tabled
 from narrowgauge.report.branches import branch_lines, branch_summary
 from narrowgauge.report.charts import SpanChart, SpanRow, power
+from narrowgauge.report.constants import constant_lines, no_constants
 from narrowgauge.report.figures import NARROW, WIDE
 from narrowgauge.report.palette import Look, look_of
 from narrowgauge.report.range import Magnitudes, magnitudes, range_lines, range_table, room_table, watched_on
 from narrowgauge.report.spans import spans
-from narrowgauge.report.wording import clean
+from narrowgauge.report.wording import begun, clean
 
 __all__ = ["averaging", "branches", "ranges"]
 
@@ -48,12 +50,22 @@ def ranges(record: AuditRecord) -> list[Block]:
             "Not measured in this audit: the largest and smallest magnitude on each line, and the headroom that a "
             "format leaves, in bits."
         )
-        return [Words(words, "answer"), *constants(record)]
-    blocks: list[Block] = [Words(_sentence(watched_on(found)), "answer"), *points(range_lines(found))]
+        return [Words(words, "answer"), *_constants(record)]
+    blocks: list[Block] = [Words(begun(watched_on(found)), "answer"), *points(range_lines(found))]
     if found is not None and found.levels:
         blocks += _magnitudes(record, found)
         blocks.append(tabled("Lost additions and results outside the normal numbers", range_table(found)))
-    return [*blocks, *constants(record)]
+    return [*blocks, *_constants(record)]
+
+
+def _constants(record: AuditRecord) -> list[Block]:
+    """Return the constants of the kernel that a format cannot take."""
+    title = "Constants that a format cannot take"
+    if record.range is None:
+        why = "the kernel rounds for itself" if not isinstance(record.canary, UnsetType) else "the audit has none"
+        return [Part(title, (Words(f"Not looked for: {why}."),))]
+    lines = points(constant_lines(record.range))
+    return [Part(title, tuple(lines or [Words(no_constants(record.range))]))]
 
 
 def _magnitudes(record: AuditRecord, found: WatchedEntry) -> Iterable[Block]:
@@ -150,7 +162,3 @@ def averaging(record: AuditRecord) -> list[Block] | str:
             ]
             blocks.append(Part(f"Sums of {clean(name)}", tuple(shown)))
     return blocks
-
-
-def _sentence(words: str) -> str:
-    return f"{words[0].upper()}{words[1:]}"

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from itertools import groupby
+from itertools import groupby, pairwise
 from typing import NamedTuple
 
 from rich.console import Console, ConsoleOptions, RenderableType, RenderResult
@@ -20,7 +20,7 @@ from narrowgauge.record.lines import (
     WideningEntry,
 )
 from narrowgauge.report.layout import Hanging, Kind, Ruled
-from narrowgauge.report.settings import confidence
+from narrowgauge.report.settings import confidence, measured_to
 from narrowgauge.report.wording import NONE, clean, count, figure, interval, joined, percent
 
 __all__ = [
@@ -53,11 +53,12 @@ _INPUTS = {"draws": "the draws", "step size": "the step size", "constants": "all
 
 
 class ListedLine(NamedTuple):
-    """A line of source or an input by name, with its share of a variance where that matters."""
+    """A line of source or an input by name, with its share of a variance where that matters, and if a gap precedes."""
 
     line: int | None
     text: str
     share: float | None
+    gap: bool = False
 
 
 class Listing(NamedTuple):
@@ -106,14 +107,10 @@ def line_parts(record: AuditRecord) -> list[RenderableType]:
         return []
     parts: list[RenderableType] = []
     if record.lines.reason is not None:
-        parts += [Text(unfinished(record.lines.reason)), Text()]
+        parts += [Text(), Text(f"{unfinished(record.lines.reason)}.")]
     for form, study in record.lines.formats.items():
-        parts += [
-            Text(f"Which lines cost {clean(form)} its accuracy", style="bold"),
-            *_study(record, form, study),
-            Text(),
-        ]
-    return parts
+        parts += [Text(), Text(f"Lines of {clean(form)}", style="bold"), *_study(record, form, study)]
+    return parts[1:]
 
 
 def unfinished(reason: str) -> str:
@@ -125,11 +122,10 @@ def line_hint(record: AuditRecord) -> str:
     """Say how to find out which lines cost the accuracy, where a format ends early and nobody asked; "" elsewhere."""
     if record.lines is not None or record.reach is None:
         return ""
-    last = max((entry.levels[-1].level for entry in record.quantities.values()), default=0)
     ending = [
         clean(arm)
         for arm, one in record.verdict.finest_paying_level.items()
-        if "/" not in arm and (one.level is None or one.level < last)
+        if "/" not in arm and (one.level is None or one.level < measured_to(record))
     ]
     if not ending:
         return ""
@@ -157,13 +153,11 @@ def _rows(listing: Listing) -> Iterator[tuple[str, float | None]]:
     if listing.file is None:
         yield from ((f"({one.text})", one.share) for one in listing.lines)
         return
-    before = listing.lines[0].line
-    yield f"{clean(listing.file)}, from line {before}", None
+    yield f"{clean(listing.file)}, from line {listing.lines[0].line}", None
     for one in listing.lines:
-        if before is not None and one.line is not None and one.line > before + 1:
+        if one.gap:
             yield "    ...", None
         yield one.text, one.share
-        before = one.line
 
 
 def shown_quantity(record: AuditRecord, form: str, study: FormatLines) -> str | None:
@@ -204,7 +198,11 @@ def listings(record: AuditRecord, study: FormatLines, name: str) -> list[Listing
     matter = {_key(study.parts[place]): share for place, share in _mattering(study.quantities[name]).items()}
     found = []
     for file, lines in groupby(record.lines.source, key=lambda line: line.file):
-        own = [ListedLine(line.line, line.text, matter.get((file, line.line))) for line in lines]
+        first, *rest = lines
+        own = [
+            ListedLine(line.line, line.text, matter.get((file, line.line)), gap=line.line > before.line + 1)
+            for before, line in pairwise([first, first, *rest])
+        ]
         if any(line.share is not None for line in own):
             found.append(Listing(file, own))
     inputs = [ListedLine(None, words, matter[kind, None]) for kind, words in _INPUTS.items() if (kind, None) in matter]

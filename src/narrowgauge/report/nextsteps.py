@@ -13,6 +13,7 @@ from narrowgauge.report.domain import refused_corners, scenarios_counted
 from narrowgauge.report.lines import best_widening, line_hint
 from narrowgauge.report.notes import rounded_up
 from narrowgauge.report.settings import assumed_costs, coupled, measured_to, narrow_formats, setting
+from narrowgauge.report.verdict import unreferenced
 from narrowgauge.report.wording import clean, count, joined, levels_named
 
 __all__ = ["next_steps"]
@@ -26,8 +27,8 @@ def next_steps(record: AuditRecord) -> list[str]:
         steps += [*_farther(record), *_elsewhere(record), *_run(record)]
     return [
         *steps,
-        "Take results that people rely on through your own model validation and change control: this page is evidence, "
-        "not approval.",
+        "Take results that people rely on through your own model validation and change control: this audit is "
+        "evidence, not approval.",
     ]
 
 
@@ -37,6 +38,8 @@ def _unsound(record: AuditRecord) -> Iterable[str]:
             "Put the kernel or the coupling of its draws right: coarse paths must have the law of the fine paths one "
             "level below. Then audit again."
         )
+    if lost := unreferenced(record):
+        yield f"Find out why the kernel has no finite results in float64 on {levels_named(lost)}. Then audit again."
     if not isinstance(record.canary, UnsetType) and (found := canary_alarms(record.canary)):
         arms = dict.fromkeys(one.partition(",")[0] for one in found)
         yield f"Build or write the kernel so that it rounds in {joined(arms)} as it claims. Then audit again."
@@ -44,7 +47,7 @@ def _unsound(record: AuditRecord) -> Iterable[str]:
 
 def _parting(record: AuditRecord) -> Iterable[str]:
     if broken := branch_alarms(record):
-        yield f"Make both branches of a split give the same bits, or use no split: {'; '.join(broken)}."
+        yield f"Make both branches of a split give the same bits, or use no split. As it is: {'; '.join(broken)}."
 
 
 def _raised(record: AuditRecord) -> Iterable[str]:

@@ -28,7 +28,9 @@ from narrowgauge.report.wording import (
     shown_edge,
 )
 
-__all__ = ["accumulation", "format_notes", "nonfinite", "orders", "rounded_up", "separation_notes"]
+__all__ = ["REJECTED_BELOW", "accumulation", "format_notes", "nonfinite", "orders", "rounded_up", "separation_notes"]
+
+REJECTED_BELOW = 0.001  # of p: the law fits badly, as `judge.accumulation` has it
 
 
 def format_notes(record: AuditRecord, quantity: str, name: str) -> list[str]:
@@ -149,7 +151,9 @@ def _nonfinite(levels: list[LevelEntry], name: str) -> str:
 
 def accumulation(entry: QuantityEntry) -> list[str]:
     """Return, for each arm, which part of the law rules where, and its figures; and whether the formats agree."""
-    lines = [clean(one.sentence) + _law(one) for one in entry.accumulation.values()]
+    lines = [
+        clean(one.sentence).replace("delta^2/h", "\u03b4\u00b2/h") + _law(one) for one in entry.accumulation.values()
+    ]
     one = entry.agreement
     if one.reason is not None:
         lines.append(f"Whether the walk is the same in all formats cannot be told: {clean(one.reason)}.")
@@ -165,12 +169,12 @@ def _law(one: AccumulationEntry) -> str:
     if law.reason is not None or law.walk is None:
         return ""
     walk = interval(law.walk, law.walk_low, law.walk_high, (0.0,))
-    found = f" Walk {walk} u^2 a step"
+    found = f" Walk {walk} u\u00b2 a step"
     if law.slope is not None:
-        found += f"; slope {interval(law.slope, law.slope_low, law.slope_high)}"
+        found += f"; slope {interval(law.slope, law.slope_low, law.slope_high, (0.0,))}"
     if law.deviation is not None:
         found += f"; largest misfit {figure(law.deviation, 2)}%"
-    return found + (f", p = {figure(law.fit_p, 2)}." if law.fit_p is not None else ".")
+    return found + (f", p = {shown_edge(law.fit_p, (REJECTED_BELOW,), 2)}." if law.fit_p is not None else ".")
 
 
 def orders(entry: QuantityEntry) -> str:

@@ -17,11 +17,12 @@ from narrowgauge.errors import NarrowgaugeError
 from narrowgauge.record.audit import AuditRecord
 from narrowgauge.record.canonical import write_atomically
 from narrowgauge.report.blocks import Block, Section, Words
+from narrowgauge.report.questions import QUESTIONS
 
 __all__ = ["PAGE_FILE", "ReportError", "missing_packages", "need_packages", "page", "write_page"]
 
 PAGE_FILE = "report.html"
-_KEPT = ("audit.json", "levels.csv", "blocks.sqlite")
+_KEPT = ("audit.json", "levels.csv", "lines.csv", "blocks.sqlite", "policy.json")
 _NEEDED = ("matplotlib", "jinja2")
 _TEMPLATES = Path(__file__).parent / "templates"
 
@@ -71,6 +72,7 @@ def page(record: AuditRecord) -> str:
     from narrowgauge.report.settings import terms
     from narrowgauge.report.verdict import alarms
 
+    found = headline.headline(record)
     with np.errstate(all="ignore"):  # a kernel of this process may have asked NumPy to raise
         sections = _sections(record)
     environment = jinja2.Environment(
@@ -92,11 +94,12 @@ def page(record: AuditRecord) -> str:
         markup=markupsafe.Markup,
         kernel=record.kernel.run,
         alarms=[(mark, text.plain) for mark, text in alarms(record)],
-        headline=headline.headline(record),
-        gauges=headline.gauges(record),
+        headline=found,
+        gauges=headline.gauges(record) if found.mark == "yes" else [],  # else what is saved is not to be relied on
         formats=headline.format_rows(record),
         steps=next_steps(record),
         sections=sections,
+        legend=QUESTIONS["words"],
         terms=terms(record),
     )
 
@@ -108,28 +111,24 @@ def _sections(record: AuditRecord) -> list[Section]:
     """Return the answers in the order in which a person asks."""
     from narrowgauge.report import behind, costly, elsewhere, inside, sections, worth
 
-    asked: list[tuple[str, str, str, Answer]] = [
-        (
-            "crossing",
-            "Noise and signal",
-            "Where does rounding noise cross the level\u2019s own signal?",
-            sections.crossing,
-        ),
-        ("law", "The law of rounding", "Does rounding follow \u03b4\u00b2/h, and which part rules?", sections.law),
-        ("schemes", "Schemes and saving", "Which scheme on each level, and what does it save?", worth.schemes),
-        ("draws", "Approximate draws", "What do approximate draws cost?", worth.draws),
-        ("branches", "Branches", "Do the branches cancel?", inside.branches),
-        ("lines", "Source lines", "Which lines cost what?", costly.source_lines),
-        ("range", "Range", "Is there range enough, and headroom?", inside.ranges),
-        ("averaging", "Averaging", "What does averaging in a narrow format do?", inside.averaging),
-        ("domain", "Domain", "Does it hold for other parameters?", elsewhere.domain),
-        ("rounding", "Every operation", "Is every operation rounded?", behind.rounding),
-        ("measured", "How it was measured", "How was it measured?", behind.measured),
-        ("cautions", "Cautions", "What must be kept in mind?", behind.cautions),
-    ]
+    answers: dict[str, Answer] = {
+        "crossing": sections.crossing,
+        "law": sections.law,
+        "schemes": worth.schemes,
+        "draws": worth.draws,
+        "branches": inside.branches,
+        "lines": costly.source_lines,
+        "range": inside.ranges,
+        "averaging": inside.averaging,
+        "domain": elsewhere.domain,
+        "rounding": behind.rounding,
+        "measured": behind.measured,
+        "cautions": behind.cautions,
+    }
     return [
-        Section(key=key, short=short, question=question, blocks=_blocks(answer(record)))
-        for key, short, question, answer in asked
+        Section(key=key, short=short, question=words, blocks=_blocks(answers[key](record)))
+        for key, (short, words) in QUESTIONS.items()
+        if key != "words"
     ]
 
 

@@ -10,7 +10,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-__all__ = ["DARK", "GROUNDS", "LIGHT", "SERIES", "TEXTS", "Look", "look_of", "variables"]
+__all__ = ["DARK", "GROUNDS", "LIGHT", "SERIES", "SIGNAL", "TEXTS", "Look", "look_of", "variables"]
 
 # What things stand on, and what is written or drawn on it; a rule only parts one thing from the next.
 GROUNDS = ("paper", "panel")
@@ -72,6 +72,7 @@ _LOOKS = {
     "e4m3": Look(role="s5", marker="v", dash=(6.0, 1.5)),
     "e5m2": Look(role="s6", marker="p", dash=(1.2, 2.4)),
 }
+SIGNAL = Look(role="ink", marker="D", dash=(5.0, 2.5))
 _REFERENCE = Look(role="ink", marker="x", dash=(5.0, 3.0))
 
 

@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 
 from narrowgauge.arithmetic.formats import FORMATS
 from narrowgauge.record.audit import AuditRecord, PartsEntry, QuantityEntry
-from narrowgauge.report.charts import Dot, GainChart, GainRow, LineChart, Series, Tick, interval_of
-from narrowgauge.report.crossing import fitted_law
-from narrowgauge.report.palette import Look, look_of
+from narrowgauge.report.charts import GainChart, GainRow, LineChart, Series, Tick, deviations
+from narrowgauge.report.crossing import fitted_law, law_parts, noise_dots, signal_dots
+from narrowgauge.report.palette import SIGNAL, Look, look_of
 from narrowgauge.report.settings import exact_formats, today
 from narrowgauge.report.wording import count, scheme_words
 
@@ -19,7 +20,6 @@ _PARTS = {
     "draws": Look(role="s2", marker="s", dash=(1.5, 1.5)),
     "both": Look(role="s4", marker="^", dash=(3.0, 1.2)),
 }
-_SIGNAL = Look(role="ink", marker="D", dash=(5.0, 2.5))
 _DRAWN_STRAIGHT = 24  # parts in which a curve is drawn
 
 
@@ -29,25 +29,23 @@ def law_chart(record: AuditRecord, entry: QuantityEntry) -> LineChart | None:
     None where no format has two such points.
     """
     lines = []
+    steps = {float(level.level): math.log2(level.steps) for level in entry.levels}
     for arm in exact_formats(record):
         form = FORMATS[record.arms[arm].format]
-        law, dots = fitted_law(entry, arm), []
-        for level in entry.levels:
-            figures = level.arms[arm]
-            if figures.error_variance is None or figures.error_variance <= 0.0:
-                continue
-            scaled = 2.0 * math.log2(form.unit_roundoff)
-            low, high = interval_of(record, level, figures.error_variance, figures.error_variance_se)
-            middle = math.log2(figures.error_variance) - scaled
-            filled = law is not None and level.level in law.levels
-            dots.append(Dot(math.log2(level.steps), middle, 2.0 * low - scaled, 2.0 * high - scaled, filled))
+        law, scaled = fitted_law(entry, arm), 2.0 * math.log2(form.unit_roundoff)
+        dots = [
+            replace(
+                one, x=steps[one.x], y=2.0 * one.y - scaled, low=2.0 * one.low - scaled, high=2.0 * one.high - scaled
+            )
+            for one in noise_dots(record, entry, arm)
+        ]
         if len(dots) < 2:
             continue
         curve = []
-        if law is not None and law.floor is not None and law.walk is not None and law.drift is not None:
+        if law is not None:
             for number in range(_DRAWN_STRAIGHT + 1):
                 x = dots[0].x + (dots[-1].x - dots[0].x) * number / _DRAWN_STRAIGHT
-                total = law.floor + law.walk * 2.0**x + law.drift * 4.0**x
+                total = sum(law_parts(law, 2.0**x))
                 curve += [(x, math.log2(total))] if total > 0.0 else []
         lines.append(Series(label=form.name, look=look_of(form.name), dots=tuple(dots), solid=tuple(curve)))
     if not lines:
@@ -73,14 +71,14 @@ def _guide(lines: list[Series], ticks: tuple[Tick, ...]) -> tuple[tuple[tuple[fl
 def law_shares(entry: QuantityEntry, arm: str) -> list[tuple[int, float, float, float]]:
     """Return, for each level, the shares of floor, walk and drift in the law of an arm; [] where it is not fitted."""
     law = fitted_law(entry, arm)
-    if law is None or law.floor is None or law.walk is None or law.drift is None:
+    if law is None:
         return []
     found: list[tuple[int, float, float, float]] = []
     for level in entry.levels:
-        walk, drift = law.walk * level.steps, law.drift * level.steps**2
-        total = law.floor + walk + drift
+        floor, walk, drift = law_parts(law, level.steps)
+        total = floor + walk + drift
         if total > 0.0:
-            found.append((level.level, law.floor / total, walk / total, drift / total))
+            found.append((level.level, floor / total, walk / total, drift / total))
     return found
 
 
@@ -109,25 +107,14 @@ def draws_chart(record: AuditRecord, entry: QuantityEntry, parts: list[PartsEntr
     """Return the chart of what arithmetic, draws and both do to the correction, or None where nothing was measured."""
     lines = []
     for name, look in _PARTS.items():
-        dots = []
-        for level, one in zip(entry.levels, parts, strict=True):
-            variance, se = getattr(one, name), getattr(one, f"{name}_se")
-            if variance is not None and variance > 0.0:
-                low, high = interval_of(record, level, variance, se)
-                dots.append(Dot(level.level, 0.5 * math.log2(variance), low, high))
+        rows = zip(entry.levels, parts, strict=True)
+        dots = deviations(record, ((level, getattr(one, name), getattr(one, f"{name}_se")) for level, one in rows))
         if dots:
-            lines.append(Series(label=name, look=look, dots=tuple(dots), solid=tuple((dot.x, dot.y) for dot in dots)))
+            lines.append(Series(label=name, look=look, dots=dots, solid=tuple((dot.x, dot.y) for dot in dots)))
     if not lines or max(len(line.dots) for line in lines) < 2:
         return None
-    signal = []
-    for level in entry.levels:
-        variance = level.reference.level_variance
-        if variance is not None and variance > 0.0:
-            low, high = interval_of(record, level, variance, level.reference.level_variance_se)
-            signal.append(Dot(level.level, 0.5 * math.log2(variance), low, high))
-    whole = Series(
-        label="signal", look=_SIGNAL, dots=tuple(signal), solid=tuple((d.x, d.y) for d in signal), thick=True
-    )
+    signal = signal_dots(record, entry)
+    whole = Series(label="signal", look=SIGNAL, dots=signal, solid=tuple((d.x, d.y) for d in signal), thick=True)
     return LineChart(
         across="level",
         below="steps",

@@ -10,7 +10,7 @@ from rich.text import Text
 from narrowgauge.record.policy import LevelPart, PolicyDocument
 from narrowgauge.report.layout import Hanging, Ruled
 from narrowgauge.report.tables import VERDICT_STYLES
-from narrowgauge.report.wording import NONE, clean, count, figure, interval, joined, million, setting_value
+from narrowgauge.report.wording import NONE, clean, count, interval, joined, million, setting_value, shown_edge
 
 __all__ = ["policy_lines"]
 
@@ -66,5 +66,5 @@ def _cells(one: LevelPart) -> list[tuple[str, str]]:
 def _cost(document: PolicyDocument) -> str:
     text = f"A run costs {million(document.plan.cost)} in the unit of the cost table"
     if document.plan.saving is not None:
-        text += f"; {document.today} alone costs {figure(document.plan.saving)} times as much"
+        text += f"; {document.today} alone costs {shown_edge(document.plan.saving)} times as much"
     return f"{text}{_ASSUMED[document.cost.source]}."

@@ -9,18 +9,16 @@ from rich.text import Text
 from narrowgauge.record.audit import AuditRecord, QuantityEntry
 from narrowgauge.report.blocks import Block, Drawing, Part, Table, Words, points, tabled
 from narrowgauge.report.charts import LineChart, spoken
-from narrowgauge.report.crossing import Crossing, crossing_chart, crossing_of
+from narrowgauge.report.crossing import NO_NOISE, crossing_chart, crossing_words
 from narrowgauge.report.figures import NARROW, WIDE, lines
 from narrowgauge.report.layout import Ruled
-from narrowgauge.report.notes import accumulation, nonfinite, orders
+from narrowgauge.report.notes import REJECTED_BELOW, accumulation, nonfinite, orders
 from narrowgauge.report.parts import law_chart, law_shares
 from narrowgauge.report.settings import confidence, coupled, exact_formats, measured_to
 from narrowgauge.report.tables import missing_noise, signal_table
 from narrowgauge.report.wording import NONE, clean, figure, interval, levels_named, percent, shown_edge
 
-__all__ = ["crossing", "drawn", "law", "per_quantity"]
-
-_REJECTED_BELOW = 0.001  # of p, as `judge.accumulation` has it
+__all__ = ["crossing", "drawn", "law", "per_quantity", "place_of"]
 
 
 def per_quantity(record: AuditRecord, blocks: Callable[[str, QuantityEntry], Iterable[Block]]) -> list[Block]:
@@ -46,13 +44,13 @@ def crossing(record: AuditRecord) -> list[Block]:
     """Return where rounding noise crosses the level's own signal: the answer, the drawing, the table."""
 
     def one(name: str, entry: QuantityEntry) -> Iterable[Block]:
-        yield from points(_crossing_words(record, entry, arm) for arm in exact_formats(record))
+        yield from points(crossing_words(record, entry, arm) for arm in exact_formats(record))
         chart = crossing_chart(record, entry)
         if chart is None:
             words = "There is nothing to draw along a ladder: fewer than two levels have a signal."
             yield Words(f"{words} The table has what was measured.", "note")
         else:
-            key = f"crossing-{_place(record, name)}"
+            key = f"crossing-{place_of(record, name)}"
             yield drawn(chart, key, f"Signal and rounding noise of {clean(name)}", _crossing_caption(record))
         yield tabled(f"Signal and noise of {clean(name)}: standard deviations", signal_table(record, entry))
         yield from (Words(f"{NONE} {why}.", "note") for why in missing_noise(record, entry))
@@ -61,7 +59,7 @@ def crossing(record: AuditRecord) -> list[Block]:
         yield Words(f"Non-finite values, with bounds at 99%: {nonfinite(record, entry)}")
 
     if not exact_formats(record):
-        return [Words("No format was measured with exact draws, so there is no rounding noise by itself.", "answer")]
+        return [Words(NO_NOISE, "answer")]
     lead = (
         "The signal is what a level adds to the estimate; the noise is what a format's rounding does to it, path by "
         "path. A format has something to offer on the levels where its noise lies well below the signal."
@@ -76,32 +74,6 @@ def _crossing_caption(record: AuditRecord) -> str:
         "hollow one is not. Dashed lines are extrapolated: the law with more steps, the signal by its order in h. A "
         "ring shows where a noise crosses the signal."
     )
-
-
-def _crossing_words(record: AuditRecord, entry: QuantityEntry, arm: str) -> str:
-    found, name = crossing_of(record, entry, arm), clean(arm)
-    finest = entry.levels[-1].level
-    if all(level.arms[arm].error_variance is None for level in entry.levels):
-        return f"{name}: no noise was measured."
-    if all(not level.arms[arm].error_variance for level in entry.levels):
-        return f"{name}: no rounding error was seen on any level."
-    if found.how == "measured":
-        return f"{name}: {_measured_words(entry, found)}"
-    held = f"{name}: on every measured level the noise stays below the signal"
-    if found.how == "unknown":
-        return f"{held}; where they cross beyond cannot be told, since {found.reason}."
-    if found.level is None:
-        return f"{held}; by its law it does so on the next levels too ({found.reason})."
-    span = f"between levels {found.level - 1} and {found.level}"
-    return f"{held}; by its law they cross {span} (extrapolated, measured to level {finest})."
-
-
-def _measured_words(entry: QuantityEntry, found: Crossing) -> str:
-    first = entry.levels[0].level
-    if found.level == first:
-        return f"the noise is above the signal on level {first} already."
-    before = max(level.level for level in entry.levels if found.level is not None and level.level < found.level)
-    return f"the noise crosses the signal between levels {before} and {found.level}, as measured."
 
 
 def law(record: AuditRecord) -> list[Block]:
@@ -119,7 +91,7 @@ def law(record: AuditRecord) -> list[Block]:
                 f"Marks are measured, with {confidence(record)} intervals; lines are the fitted law."
             )
             title = f"Error variance of {clean(name)} in units of u squared"
-            yield drawn(chart, f"law-{_place(record, name)}", title, caption)
+            yield drawn(chart, f"law-{place_of(record, name)}", title, caption)
         if entry.accumulation:
             yield tabled(f"The fitted law of the error of {clean(name)}", _coefficients(record, entry, "error"))
             yield from _shares(entry, name)
@@ -129,7 +101,7 @@ def law(record: AuditRecord) -> list[Block]:
     lead = (
         "Over n steps the error variance is u\u00b2 (floor + walk n + drift n\u00b2). The walk is the \u03b4\u00b2/h "
         "law of independent roundings; the floor is what inputs and final operations leave at any step; the drift is "
-        "systematic."
+        "systematic, and counts only where its interval is above 0; elsewhere the law is drawn without it."
     )
     return [Words(lead, "answer"), *per_quantity(record, one)]
 
@@ -158,7 +130,7 @@ def _coefficients(record: AuditRecord, entry: QuantityEntry, which: str) -> Rule
                     for part in ("floor", "walk", "drift", "slope")
                 ),
                 misfit,
-                shown_edge(one.fit_p, (_REJECTED_BELOW,)),
+                shown_edge(one.fit_p, (REJECTED_BELOW,), 2),
                 levels_named(one.levels),
             )
         table.add_row(*map(Text, (clean(arm), *cells)))
@@ -184,5 +156,6 @@ def _parts(parts: Sequence[float]) -> str:
     return ", ".join(f"{word} {percent(part, (0.0, 0.5, 1.0))}" for part, word in named if part > 0.0)
 
 
-def _place(record: AuditRecord, name: str) -> int:
+def place_of(record: AuditRecord, name: str) -> int:
+    """Return the place of a quantity among all: an id of the page that no name can spoil."""
     return list(record.quantities).index(name)

@@ -41,7 +41,6 @@ __all__ = [
     "bounded_levels",
     "common_table",
     "format_table",
-    "missing_figures",
     "missing_gains",
     "missing_noise",
     "parts_table",
@@ -78,8 +77,8 @@ def signal_table(record: AuditRecord, entry: QuantityEntry) -> Ruled:
                 str(level.level),
                 count(level.steps),
                 count(level.paths),
-                _deviation(level.reference.level_variance, 3),
-                *(_deviation(arm.error_variance if arm else None, 2) for arm in arms),
+                _signal(level.reference.level_variance),
+                *(_noise(arm.error_variance if arm else None, level.reference.level_variance) for arm in arms),
             )
         )
     return table
@@ -102,7 +101,7 @@ def best_table(record: AuditRecord, entry: QuantityEntry) -> Ruled:
         correction = level.corrections.get(f"{best.narrow}:{best.wide}")
         gain = interval(best.gain, best.gain_low, best.gain_high)
         ratio = correction.breakeven_cost_ratio if correction else None
-        table.add_row(*_plain(str(level.level), scheme_words(best), gain, _ratio(ratio)))
+        table.add_row(*_plain(str(level.level), scheme_words(best), gain, shown_edge(ratio, (1.0,), 2)))
     return table
 
 
@@ -131,8 +130,8 @@ def parts_table(entry: QuantityEntry, parts: Sequence[PartsEntry]) -> Ruled:
         table.add_row(
             *_plain(
                 str(level.level),
-                _deviation(level.reference.level_variance, 3),
-                *(_deviation(variance, 2) for variance in (one.arithmetic, one.draws, one.both)),
+                _signal(level.reference.level_variance),
+                *(_noise(own, level.reference.level_variance) for own in (one.arithmetic, one.draws, one.both)),
                 one.larger or ("not settled" if known else NONE),
             )
         )
@@ -200,11 +199,6 @@ def _shares(levels: Sequence[PlanEntry]) -> list[str]:
     return [percent(one.cost / total) if total > 0 else NONE for one in levels]
 
 
-def missing_figures(record: AuditRecord, entry: QuantityEntry) -> list[str]:
-    """Return why there are en dashes in the first two tables, one sentence for each kind."""
-    return [*missing_noise(record, entry), *missing_gains(record, entry)]
-
-
 def missing_noise(record: AuditRecord, entry: QuantityEntry) -> list[str]:
     """Return why there are en dashes in the table of signal and noise."""
     found = []
@@ -244,20 +238,20 @@ def _why(arm: ArmEntry | None) -> str:
     return REFUSED.get(arm.reason or "", "fewer than two paths are finite")
 
 
-def _ratio(ratio: float | None) -> str:
-    """Return a break-even ratio in two digits, or as many more as keep it below 1, where no narrow step is cheaper."""
-    text = figure(ratio, 2)
-    return shown_edge(ratio) if ratio is not None and ratio < 1.0 <= float(text) else text
-
-
 def _inside(record: AuditRecord) -> str:
     """Return what stands below the heading of a figure that has an interval and depends on the costs."""
     assumed = "\ncosts assumed" if assumed_costs(record) else ""
     return f"({confidence(record)} interval){assumed}"
 
 
-def _deviation(variance: float | None, digits: int) -> str:
-    return NONE if variance is None else figure(math.sqrt(variance), digits)
+def _signal(variance: float | None) -> str:
+    return NONE if variance is None else figure(math.sqrt(variance))
+
+
+def _noise(variance: float | None, signal: float | None) -> str:
+    """Return a standard deviation in two digits, or as many more as keep it on its side of the signal's."""
+    thresholds = () if signal is None else (math.sqrt(signal),)
+    return NONE if variance is None else shown_edge(math.sqrt(variance), thresholds, 2)
 
 
 def _plain(*cells: str) -> list[Text]:

@@ -10,8 +10,9 @@ from narrowgauge.record.audit import DecisionEntry, LineCount, ReachEntry, Reach
 from narrowgauge.report.layout import Ruled
 from narrowgauge.report.wording import clean, count, percent
 
-__all__ = ["decisions", "reach_notes", "reach_summary", "reach_table"]
+__all__ = ["ROUNDED", "decisions", "reach_notes", "reach_summary", "reach_table"]
 
+ROUNDED = "In a trial run the emulation met"
 _LINES = 10  # of each kind of note
 
 # The routes in the order of their columns, and how a column is called; a route without a row is shown by its name.

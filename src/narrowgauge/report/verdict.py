@@ -11,7 +11,6 @@ from narrowgauge.record.audit import AuditRecord, DecidedEntry, FinestEntry, Qua
 from narrowgauge.report.branches import branch_alarms
 from narrowgauge.report.canary import canary_alarms
 from narrowgauge.report.settings import assumed_costs, confidence, coupled, measured_to, today
-from narrowgauge.report.tables import VERDICT_STYLES
 from narrowgauge.report.wording import (
     clean,
     count,
@@ -25,7 +24,16 @@ from narrowgauge.report.wording import (
 )
 from narrowgauge.report.workers import worker_alarms
 
-__all__ = ["alarms", "common_cost", "ending", "finest_words", "lead", "savings", "verdict_sentences"]
+__all__ = [
+    "alarms",
+    "common_cost",
+    "ending",
+    "finest_words",
+    "paying_and_open",
+    "savings",
+    "unreferenced",
+    "verdict_sentences",
+]
 
 # Why the run of paying levels ends, after "on level 5 ": the format does not pay there, or that is not known.
 _ENDS = {
@@ -73,7 +81,7 @@ def alarms(record: AuditRecord) -> list[tuple[str, Text]]:
         found += [("", text), *(("- ", Text(line)) for line in unsound)]
     if differ := branch_alarms(record):
         text = Text("THE BRANCHES OF A SPLIT DO NOT CANCEL. ", style="bold red")
-        text.append("What differs, and where, is said behind the figures.", style="not bold default")
+        text.append("What differs, and where, is said below, under branches of a split.", style="not bold default")
         found += [("", text), *(("- ", Text(f"{line}.")) for line in differ)]
     return found + [("", text) for text in worker_alarms(record)]
 
@@ -98,26 +106,17 @@ def _dropped(record: AuditRecord) -> Iterable[str]:
             yield f"{count(level.reference.nonfinite)} of {count(level.paths)} on level {level.level}"
 
 
-def lead(record: AuditRecord) -> Text:
-    """Return the first sentence of the verdict."""
-    entries = record.verdict.finest_paying_level
-    finest = measured_to(record)
-    paying = [name for name, entry in entries.items() if entry.level is not None]
-    hoping = [name for name, entry in entries.items() if entry.level is None and entry.possible is not None]
-    text = Text()
-    if not record.verdict.sound:
-        text.append("No verdict: the levels do not fit together. What follows is what the figures would say. ")
-    where = "on the only level" if finest == 0 else f"from level 0 on, measured to level {finest}"
-    if paying:
-        text.append("Low precision pays", style=VERDICT_STYLES["pays"])
-        text.append(f" in {joined(map(clean, paying))} ({where}).")
-    elif hoping:
-        text.append("It is undecided", style=VERDICT_STYLES["undecided"])
-        text.append(f" whether low precision pays in {joined(map(clean, hoping), 'or')} ({where}).")
-    else:
-        text.append("Low precision does not pay", style=VERDICT_STYLES["does not pay"])
-        text.append(f" in {joined(map(clean, entries), 'or')} ({where}).")
-    return text
+def paying_and_open(record: AuditRecord) -> tuple[list[str], list[str]]:
+    """Return the formats that pay on level 0 at least, and those of which that is not known."""
+    entries = record.verdict.finest_paying_level.items()
+    paying = [clean(name) for name, entry in entries if entry.level is not None]
+    return paying, [clean(name) for name, entry in entries if entry.level is None and entry.possible is not None]
+
+
+def unreferenced(record: AuditRecord) -> list[int]:
+    """Return the levels on which the reference has no finite figures of some quantity, so that there is no verdict."""
+    levels = (level for entry in record.quantities.values() for level in entry.levels)
+    return sorted({level.level for level in levels if level.reference.level_variance is None})
 
 
 def verdict_sentences(record: AuditRecord) -> list[Text]:

@@ -16,6 +16,7 @@ if TYPE_CHECKING:
 __all__ = [
     "NONE",
     "at_most",
+    "begun",
     "clean",
     "clean_lines",
     "count",
@@ -41,6 +42,11 @@ _UNITS_OF_TIME = ((90.0, 1.0, "s"), (90 * 60.0, 60.0, "min"), (48 * 3600.0, 3600
 _SMALLEST_FIXED, _LARGEST_FIXED = -3, 6  # exponents of ten between which a figure is written without one
 
 
+def begun(words: str) -> str:
+    """Return words as the beginning of a sentence: with a capital."""
+    return f"{words[:1].upper()}{words[1:]}"
+
+
 def figure(value: float | None, digits: int = _DIGITS) -> str:
     """Return a number with `digits` significant digits; for example 29.1, 0.0123, 1.5e-06 or 32,768.
 
@@ -57,16 +63,17 @@ def figure(value: float | None, digits: int = _DIGITS) -> str:
     return f"{mantissa}e{power}"
 
 
-def shown_edge(value: float | None, thresholds: Sequence[float] = (1.0,)) -> str:
-    """Return a number with three significant digits, or as many more as keep it on its side of every threshold.
+def shown_edge(value: float | None, thresholds: Sequence[float] = (1.0,), digits: int = 0) -> str:
+    """Return a number with some significant digits, or as many more as keep it on its side of every threshold.
 
-    So 0.9996 is not shown as 1.00; a number that equals a threshold is shown as equal to it. Below a tenth two
-    digits do.
+    So 0.9996 is not shown as 1.00; a number that equals a threshold is shown as equal to it. Without `digits` they are
+    three, and two below a tenth.
     """
     if value is None:
         return NONE
-    for digits in range(_DIGITS if abs(value) >= _COARSER_BELOW else _DIGITS - 1, _EXACT_DIGITS + 1):
-        text = figure(value, digits)
+    least = digits or (_DIGITS if abs(value) >= _COARSER_BELOW else _DIGITS - 1)
+    for number in range(least, _EXACT_DIGITS + 1):
+        text = figure(value, number)
         read = float(text.replace(",", ""))
         if all(_side(read, threshold) == _side(value, threshold) for threshold in thresholds):
             return text

@@ -11,7 +11,7 @@ from narrowgauge.report.blocks import Block, Drawing, Part, Words, points, table
 from narrowgauge.report.figures import NARROW, WIDE, gains
 from narrowgauge.report.notes import format_notes, separation_notes
 from narrowgauge.report.parts import draws_chart, gain_chart
-from narrowgauge.report.sections import drawn, per_quantity
+from narrowgauge.report.sections import drawn, per_quantity, place_of
 from narrowgauge.report.settings import approximate_draws, assumed_costs, confidence, measured_to, narrow_formats, today
 from narrowgauge.report.tables import (
     best_table,
@@ -44,8 +44,8 @@ def schemes(record: AuditRecord) -> list[Block]:
                 "equal variance of the level; a filled mark is a scheme of one format alone, a hollow one a split, and "
                 "the shape is that of the narrow format.",
                 alternative=f"{title}. One row for each level. {'; '.join(rows)}. The table below has the figures.",
-                wide=gains(chart, WIDE, f"gain-{_place(record, name)}-wide"),
-                narrow=gains(chart, NARROW, f"gain-{_place(record, name)}-narrow"),
+                wide=gains(chart, WIDE, f"gain-{place_of(record, name)}-wide"),
+                narrow=gains(chart, NARROW, f"gain-{place_of(record, name)}-narrow"),
             )
         yield tabled(f"The cheapest scheme of each level of {clean(name)}", best_table(record, entry))
         yield from (Words(f"{NONE} {why}.", "note") for why in missing_gains(record, entry))
@@ -95,7 +95,7 @@ def draws(record: AuditRecord) -> list[Block] | str:
         for number, (arm, parts) in enumerate(found.parts.items()):
             chart = draws_chart(record, entry, parts)
             if chart is not None:
-                key = f"draws-{_place(record, name)}-{number}"
+                key = f"draws-{place_of(record, name)}-{number}"
                 caption = (
                     "Standard deviations of the correction to float64: of the format with exact draws (arithmetic), of "
                     "float64 with approximate draws (draws), and of the format with approximate draws (both)."
@@ -114,7 +114,3 @@ def draws(record: AuditRecord) -> list[Block] | str:
 
 def _note(words: str) -> list[Block]:
     return [Words(words, "note")] if words else []
-
-
-def _place(record: AuditRecord, name: str) -> int:
-    return list(record.quantities).index(name)
