@@ -13,10 +13,12 @@ from narrowgauge.record.lines import (
     LineEntry,
     LinesEntry,
     PartShare,
+    PaysEntry,
     QuantityLines,
     ShareEntry,
     SourceLine,
     SumEntry,
+    WhatIfEntry,
     WideningEntry,
 )
 from narrowgauge.record.linetable import line_rows, lines_csv
@@ -93,6 +95,20 @@ class TestSource:
             "with kernel.py:5 (the state) in float32 it pays to level 4, perhaps to level 5, with a gain of 1.08 "
             "(1.05 to 1.11) there; 12.5% of the operations are charged at the wide cost, a step costs 0.281"
         ) in text
+
+    @pytest.mark.parametrize("name", ["carried errors", "stochastic rounding"])
+    def test_what_ifs_that_need_an_addition_to_the_state_are_missed_aloud(self, name):
+        """Where the study saw no such addition it has no entry of theirs."""
+        entry = record()
+        study = entry.lines.formats["float16"]
+        figures = {field: getattr(study.plain, field) for field in PaysEntry.__struct_fields__}
+        asked = replace(study, what_ifs=[WhatIfEntry(name=name, **figures)])
+        lines = replace(entry.lines, formats={"float16": asked})
+        text = flat(audit_text(replace(entry, lines=lines), None), 120)
+        assert f"with {name} it pays to level 2" in text
+        assert ("no addition x = x + e was seen whose result the next step starts from" in text) == (
+            "carried" not in name
+        )
 
     @pytest.mark.parametrize(("possible", "words"), [(None, ""), (3, " for sure, perhaps to 3")])
     def test_a_level_that_is_undecided_is_not_called_refuted(self, possible, words):

@@ -25,7 +25,7 @@ from narrowgauge.dispatch.byline import Widths
 from narrowgauge.dispatch.placed import Carried, Fused, Operation
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.measure.linearms import LineRunner, Variant
-from narrowgauge.record.lines import WhatIfEntry
+from narrowgauge.record.lines import CARRIED, WhatIfEntry
 
 __all__ = ["what_ifs"]
 
@@ -49,7 +49,7 @@ def what_ifs(
     changes = {name: _narrow(file, form, variant) for name, variant in _variants(file, form).items()}
     if sums:
         places = frozenset(sums)
-        changes["carried errors"] = _narrow(file, form, Variant(make=lambda level, block: Carried(form, places)))
+        changes[CARRIED] = _narrow(file, form, Variant(make=lambda level, block: Carried(form, places)))
         if wide is not None:
             share = sum(sums.values())
             cost = share * file.costs.step(form.name) + (1 - share) * file.costs.step(wide.name)

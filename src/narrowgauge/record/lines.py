@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
-from typing import Literal
+from typing import Final, Literal
 
 from narrowgauge.record.plan import Entry
 
 __all__ = [
+    "CARRIED",
     "FormatLines",
     "LineEntry",
     "LinesEntry",
@@ -22,6 +23,7 @@ __all__ = [
 
 Kind = Literal["line", "draws", "step size", "constants"]
 Role = Literal["state", "step", "payoff", "set-up"]
+CARRIED: Final = "carried errors"  # the what-if that needs an addition to the state
 
 
 class LineEntry(Entry, frozen=True, kw_only=True):

@@ -17,6 +17,7 @@ from narrowgauge.report.lines import (
     shown_quantity,
     study_words,
     unfinished,
+    what_if_note,
     what_if_table,
     widening_note,
     widening_table,
@@ -74,6 +75,8 @@ def _study(record: AuditRecord, form: str, study: FormatLines) -> Iterator[Block
         yield Words(note, "note")
     if study.what_ifs:
         yield tabled(f"How far {clean(form)} would pay in another arithmetic", what_if_table(study))
+    if note := what_if_note(study):
+        yield Words(note, "note")
 
 
 def _source(listing: Listing, form: str) -> Source:

@@ -11,6 +11,7 @@ from rich.text import Text
 
 from narrowgauge.record.audit import AuditRecord
 from narrowgauge.record.lines import (
+    CARRIED,
     FormatLines,
     LineEntry,
     PaysEntry,
@@ -35,6 +36,7 @@ __all__ = [
     "shown_quantity",
     "study_words",
     "unfinished",
+    "what_if_note",
     "what_if_table",
     "widening_note",
     "widening_table",
@@ -289,6 +291,16 @@ def widening_note(study: FormatLines) -> str:
     return "" if study.widenings else f"No few lines that are kept in {clean(study.wide or '')} make it pay further."
 
 
+def what_if_note(study: FormatLines) -> str:
+    """Return why carried errors were not tried, "" where they were, or nothing was asked for."""
+    if not study.what_ifs or any(one.name == CARRIED for one in study.what_ifs):
+        return ""
+    return (
+        "Carried errors and wide increments were not tried: no addition x = x + e was seen whose result the next step "
+        "starts from. A state that is stored in the rows of an array is not followed there."
+    )
+
+
 def _key(part: LineEntry) -> tuple[str | None, int | None]:
     return (part.file, part.line) if part.kind == "line" else (part.kind, None)
 
@@ -300,13 +312,18 @@ def _widenings(form: str, study: FormatLines) -> list[RenderableType]:
     ]
     if study.plain is None or study.widenings is None:
         none: list[RenderableType] = [Text(widening_note(study))]
-        return [*none, *_bulleted([f"{clean(form)} {line}" for line in tried])]
+        return [*none, *_bulleted([f"{clean(form)} {line}" for line in tried]), *_untried(study)]
     wide = clean(study.wide or "")
     lines = [f"{clean(form)} as it is {_pays(study.plain)}"]
     lines += [f"with {_named(study, one)} in {wide} it {_pays(one)}; {_charged(one)}" for one in study.widenings]
     if not study.widenings:
         lines.append(f"no few lines that are kept in {wide} make it pay further")
-    return _bulleted([*lines, *tried])
+    return [*_bulleted([*lines, *tried]), *_untried(study)]
+
+
+def _untried(study: FormatLines) -> list[RenderableType]:
+    note = what_if_note(study)
+    return [Text(note)] if note else []
 
 
 def _bulleted(lines: list[str]) -> list[RenderableType]:
