@@ -94,7 +94,7 @@ class TestSource:
             "(1.05 to 1.11) there; 12.5% of the operations are charged at the wide cost, a step costs 0.281"
         ) in text
 
-    @pytest.mark.parametrize(("possible", "words"), [(None, ""), (3, " for sure, perhaps to 3")])
+    @pytest.mark.parametrize(("possible", "words"), [(None, ""), (3, " for sure, perhaps to level 3")])
     def test_a_level_that_is_undecided_is_not_called_refuted(self, possible, words):
         """The study may end with an open verdict, as the audit may."""
         entry = record()
