@@ -103,6 +103,27 @@ def test_additions_to_the_state_are_told_from_other_sums(tmp_path: Path) -> None
     assert sorted(found) == [8, 9, 9, 10]
 
 
+def test_a_sum_that_is_held_back_at_its_ends_is_one_to_the_state(tmp_path: Path) -> None:
+    """In x = clip(x + a) the sum is carried on; what is clamped within an increment, or scaled behind it, is not."""
+    source = """
+        import numpy as np
+
+        def value(dW, h):
+            x = dW[0] * 0.0
+            y = dW[0] + 1.0
+            z = dW[0] + 2.0
+            v = dW[0] + 3.0
+            for dw in dW:
+                x = np.clip(x + h * x + dw, -1.0, 1.0)
+                y = np.minimum(np.maximum(y - dw, 0.0), 9.0)
+                z = 0.5 * np.maximum(z + dw, 0.0)
+                v = v + np.maximum(1.0 - v, 0.0) * dw
+            return x + y + z + v
+    """
+    found = [one.place.line for one in seen(tmp_path, source, 2).sums]
+    assert sorted(found) == [9, 9, 10, 12]
+
+
 def test_the_state_of_a_single_path_is_found_too(tmp_path: Path) -> None:
     """A kernel of one path a call computes with numbers, not with arrays."""
     source = """

@@ -106,11 +106,10 @@ class TestSource:
         lines = replace(entry.lines, formats={"float16": asked})
         text = flat(audit_text(replace(entry, lines=lines), None), 120)
         assert f"with {name} it pays to level 2" in text
-        assert ("no addition x = x + e was seen whose result the next step starts from" in text) == (
-            "carried" not in name
-        )
+        missed = "no addition x = x + e was seen whose result the next step starts from" in text
+        assert missed == ("carried" not in name)
 
-    @pytest.mark.parametrize(("possible", "words"), [(None, ""), (3, " for sure, perhaps to 3")])
+    @pytest.mark.parametrize(("possible", "words"), [(None, ""), (3, " for sure, perhaps to level 3")])
     def test_a_level_that_is_undecided_is_not_called_refuted(self, possible, words):
         """The study may end with an open verdict, as the audit may."""
         entry = record()

@@ -24,6 +24,7 @@ from narrowgauge.record.lines import Role
 __all__ = ["Seen", "lasting", "roles"]
 
 _SUMS = ("add", "subtract")
+_CLAMPS = ("clip", "maximum", "minimum")  # of a sum: on all paths that they do not hold back it is their result
 _LATEST = 512  # results that are remembered: a value used later than so many operations on is not followed
 
 
@@ -47,6 +48,7 @@ class Seen:
         self.carried: set[Place] = set()
         self.constants: set[tuple[Place | None, float]] = set()
         self._additions: Counter[Operation] = Counter()  # to what the same line left a step ago
+        self._clamps: set[Operation] = set()  # of such additions, on the same line
         self._feeds: set[tuple[Operation, Operation]] = set()
         self._back: set[Operation] = set()
         self._results: dict[int, _Result] = {}
@@ -72,11 +74,15 @@ class Seen:
                 self._back.add(one.operation)
                 self.carried.add(one.operation.place)
                 added |= one.operation.place == place
-            elif one.operation in self._additions and one.operation.place == place:
+            elif one.operation.place == place and (
+                one.operation in self._additions or (operation in _CLAMPS and one.operation in self._clamps)
+            ):
                 self._feeds.add((one.operation, here))
                 added = True
         if added and operation in _SUMS:
             self._additions[here] += np.size(result)
+        elif added and operation in _CLAMPS:
+            self._clamps.add(here)
         if isinstance(result, (np.ndarray, float, np.floating)):
             self._results.pop(id(result), None)  # so that it stands last
             self._results[id(result)] = _Result(frame.f_code, here, result)
@@ -101,9 +107,13 @@ class Seen:
     def sums(self) -> dict[Operation, int]:
         """The additions x = x + e of lines that leave x to the next step, and how many numbers they have computed.
 
-        In x = x + a + b both are such additions; in x = x + c * (m - x) the difference is none.
+        In x = x + a + b both are such additions, and in x = maximum(x + a, 0) the one; in x = x + c * (m - x) the
+        difference is none.
         """
-        found = {one for one in self._additions if one in self._back}
+        left = set(self._back)
+        while more := {one for one, other in self._feeds if other in left & self._clamps and one not in left}:
+            left |= more
+        found = {one for one in self._additions if one in left}
         while more := {one for one, other in self._feeds if other in found and one not in found}:
             found |= more
         return {one: count for one, count in self._additions.items() if one in found}

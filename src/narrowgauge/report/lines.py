@@ -332,7 +332,11 @@ def _bulleted(lines: list[str]) -> list[RenderableType]:
 
 def _pays(one: PaysEntry) -> str:
     if one.level is None:
-        return "pays on no level" if one.possible is None else f"pays on no level for sure, perhaps to {one.possible}"
+        return (
+            "pays on no level"
+            if one.possible is None
+            else f"pays on no level for sure, perhaps to level {one.possible}"
+        )
     open_ended = f", perhaps to level {one.possible}" if one.possible is not None and one.possible > one.level else ""
     return (
         f"pays to level {one.level}{open_ended}, with a gain of {interval(one.gain, one.gain_low, one.gain_high)} there"
