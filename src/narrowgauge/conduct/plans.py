@@ -82,7 +82,7 @@ def _without_scheme(level: int, views: Mapping[int, LevelView]) -> str:
     if level not in still:
         return "a level without a finite scheme"
     if len(still) == len(views):
-        return "nothing varies on any level, so that costs cannot be compared"
+        return "nothing varies on any level, so that costs cannot be compared: leave it out of what the kernel returns"
     advice = ": begin the ladder with more steps (ladder.coarsest_steps)" if level == 0 else ""
     return f"nothing varies on level {level}, so that costs cannot be compared there{advice}"
 
