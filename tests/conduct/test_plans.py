@@ -102,7 +102,8 @@ def test_the_plan_of_one_quantity_is_its_own(tmp_path: Path) -> None:
         (
             "def value(dW, h):\n    return {'a': 1.0 + dW[0], 'b': 1.0 + 0.0 * dW[0]}\n",
             {"target": {"rmse": "{ a = 0.1, b = 0.1 }"}},
-            "b: nothing varies on any level, so that costs cannot be compared",
+            "b: nothing varies on any level, so that costs cannot be compared there: leave it out of what the kernel "
+            "returns",
         ),
         (TWO, {"target": TARGET, "kernel": {"coupling": '"none"', "takes": '"uniforms"'}}, None),
     ],

@@ -195,6 +195,12 @@ class TestFigures:
             '[formats] narrow = ["float16", "bfloat16", "float32"]; [cost] draws = 0; [sampling] confidence = 0.99.'
         ) in flat(audit_text(made.audit_record(), None))
 
+    def test_what_was_worked_out_is_not_called_assumed(self):
+        """A kernel that draws for itself has no array of draws, and its audit file may not say how many there are."""
+        asked = {**made.ASKED, "kernel": {**made.ASKED["kernel"], "takes": "rng"}}
+        text = flat(audit_text(replace(made.audit_record(), asked=asked), None))
+        assert "Assumed, since the audit file does not say: [target] largest_correction = none;" in text
+
     def test_worthwhile_without_target(self):
         """What is worthwhile without a target is printed as the record's rules have it."""
         record = made.troubled_record()

@@ -98,7 +98,11 @@ def measured_costs(record: AuditRecord) -> str:
 def assumptions(record: AuditRecord) -> str:
     """Return every default that was used, with its value, as one sentence a table; "" if the file gave every key."""
     tables: dict[str, list[str]] = {}
+    # A kernel that draws for itself has no array of draws: these keys were worked out, and may not be given.
+    worked_out = ("kernel.factors", "kernel.layout") if setting(record, "kernel.takes") == "rng" else ()
     for key in _assumed(record):
+        if key in worked_out:
+            continue
         table, _, name = key.partition(".")
         value = worthwhile(record) if key == "target.worthwhile" else setting(record, key)
         tables.setdefault(table, []).append(f"{clean(name)} = {setting_value(value)}")
