@@ -76,10 +76,10 @@ def test_a_product_of_another_line_is_rounded_first():
 LOOP = "s = x[0] * 0.0\nfor dx in x:\n    s = s + (dx + 0.0)\nreturn s"
 
 
-def sums_at(body, line):
+def sums_at(body, line, drawn=DRAWN):
     """The last sum of a line: the one whose result is the state."""
     seen = Sums()
-    run(body, Fused(HALF), observer=seen)
+    run(body, Fused(HALF), drawn, observer=seen)
     return frozenset({max(one for one in seen.found if one.place.line == line)})
 
 
@@ -101,3 +101,20 @@ def test_carried_errors_keep_the_error_at_the_last_rounding():
     carried = np.abs(run(LOOP, Carried(HALF, sums_at(LOOP, 6)), small) - exact).max()
     assert carried <= 2.0**-8  # half of the spacing of float16 between 4 and 8 is 2^-9
     assert naive > 4 * carried
+
+
+@pytest.mark.parametrize("kept", ["np.minimum(sum, 1e4)", "np.clip(sum, 0.0, 1e4)", "sum.copy()", "np.array([*sum])"])
+def test_an_error_is_carried_by_a_state_that_was_clipped_or_copied(kept):
+    """It is another array by then, with the same values."""
+    body = LOOP.replace("s + (dx + 0.0)", kept.replace("sum", "(s + (dx + 0.0))"))
+    ones = np.ones((4096, 2))
+    assert np.array_equal(run(body, Carried(HALF, frozenset()), ones), [2048.0, 2048.0])
+    assert np.array_equal(run(body, Carried(HALF, sums_at(body, 6)), ones), [4096.0, 4096.0])
+
+
+def test_no_error_is_carried_by_a_path_that_begins_anew():
+    """2051 is 2052 in float16, an error of -1: the first path is set to 0 there, and 2045 ones follow."""
+    body = LOOP.replace("return s", "    s = np.where(s > np.array([2050.0] + [1e4] * 7), s * 0.0, s)\nreturn s")
+    ones = np.ones((4096, 8))
+    found = run(body, Carried(HALF, sums_at(body, 6, ones)), ones)
+    assert np.array_equal(found, [2045.0] + [4096.0] * 7)

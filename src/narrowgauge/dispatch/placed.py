@@ -6,6 +6,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence, Set
+from dataclasses import dataclass
 from typing import Any, NamedTuple
 
 import numpy as np
@@ -25,6 +26,28 @@ class Operation(NamedTuple):
 
     place: Place
     instruction: int
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Left:
+    """What an addition left: its result, the values that this had then, and the error of each."""
+
+    result: Any
+    values: Floats
+    error: Floats
+
+    def alike(self, state: Any) -> bool:
+        """Whether a state has the shape of the result."""
+        return bool(np.shape(state) == self.values.shape)
+
+    def same(self, state: Any) -> Any:
+        """Return where a state still is what was left."""
+        return np.asarray(state) == self.values
+
+    def of(self, state: Any) -> Any:
+        """Return the error that a state carries, 0 where it is another value by now."""
+        error = np.where(self.same(state), self.error, self.error.dtype.type(0))
+        return error if error.ndim else error[()]
 
 
 class Placed(Arithmetic):
@@ -89,16 +112,20 @@ class Carried(Placed):
     """The error of an addition to the state is carried along and joins what is added next, in the same format.
 
     `sums` are the additions x = x + e whose result comes back as x. e is first made e plus the error that x carries,
-    rounded; then x + e is rounded, and its own error is carried on. Compensated summation: "Further remarks on reducing
-    truncation errors", Communications of the ACM 8(1), 1965, doi 10.1145/363707.363723 (recalled from memory).
+    rounded; then x + e is rounded, and its own error is carried on, on the paths where x still is what the addition
+    left: a state that was clipped, or stored elsewhere, is told by its values. Compensated summation: "Further remarks
+    on reducing truncation errors", Communications of the ACM 8(1), 1965, doi 10.1145/363707.363723 (recalled from
+    memory).
     """
 
     _sums: Set[Operation]
-    _errors: dict[int, tuple[Any, Any]]
+    _errors: dict[int, _Left]
+    _last: dict[Operation, _Left]
 
     def __init__(self, form: Format, sums: Set[Operation]) -> None:
         object.__setattr__(self, "_sums", sums)
         object.__setattr__(self, "_errors", {})
+        object.__setattr__(self, "_last", {})
         super().__init__(format=form)
 
     def apply(
@@ -109,21 +136,32 @@ class Carried(Placed):
         call: Callable[..., Any] | None = None,
     ) -> Any:
         """Compute as `Arithmetic.apply` does, but for the additions to the state."""
-        if ufunc not in (np.add, np.subtract) or self.operation() not in self._sums:
+        if ufunc not in (np.add, np.subtract) or (here := self.operation()) not in self._sums or here is None:
             return super().apply(ufunc, operands, out, call)
-        x, y = operands
-        swapped = ufunc is np.add and id(x) not in self._errors and id(y) in self._errors
-        state, added = (y, x) if swapped else (x, y)
+        state, added = operands
         known = self._errors.get(id(state))
+        if known is None and ufunc is np.add and id(added) in self._errors:
+            state, added = added, state
+            known = self._errors[id(state)]
+        known = known or self._by_values(state)
         if known is not None:
+            error = known.of(state)
             # x - e carries the error of x in e with the other sign
-            added = super().apply(ufunc, [added, known[1]])
+            added = super().apply(ufunc, [added, error])
         with np.errstate(all="ignore"):
             exact = ufunc(np.asarray(state, np.float64), np.asarray(added, np.float64))
             result = super().apply(ufunc, [state, added], out)
             error = self.cast(np.asarray(exact - np.asarray(result, np.float64)))
-        _remember(self._errors, result, (result, error if error.ndim else error[()]))
+        left = _Left(result, np.array(result), error)
+        _remember(self._errors, result, left)
+        self._last[here] = left
         return result
+
+    def _by_values(self, state: Any) -> _Left | None:
+        """Return the latest sum of an operation that most values of a state still are."""
+        shares = {one: np.count_nonzero(one.same(state)) for one in self._last.values() if one.alike(state)}
+        best = max(shares, key=shares.__getitem__, default=None)
+        return best if best is not None and 2 * shares[best] > np.size(state) else None
 
 
 def _remember(known: dict[int, Any], result: Any, row: Any) -> None:
