@@ -155,8 +155,14 @@ class TestDomain:
         assert "corner 35 (reserve.py = 0.4500, spot fine = 85.00) and 1 more are refused." in words(pages.full_record)
 
     def test_what_would_settle_a_scenario(self):
-        """With how many there are."""
-        assert "To settle 1 scenario of [domain] left undecided, raise [domain] most_paths." in words(pages.full_record)
+        """With how many there are, and the most paths that any of their open levels needs, where it is known."""
+        text = "To settle 1 scenario of [domain] left undecided, raise [domain] most_paths"
+        record = pages.full_record()
+        assert f"{text}; for some of it, how many are enough cannot be told." in words(lambda: record)
+        scenarios = [replace(one, levels=[replace(level, paths_needed=41_234) for level in one.levels])
+                     for one in record.domain.scenarios]  # fmt: skip
+        known = replace(record, domain=replace(record.domain, scenarios=scenarios))
+        assert f"{text} to about 42,000." in words(lambda: known)
 
     def test_nothing_claimed(self):
         """Leaves the columns of the claim empty."""

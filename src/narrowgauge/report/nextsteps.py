@@ -117,11 +117,16 @@ def _elsewhere(record: AuditRecord) -> Iterable[str]:
             f"Keep to the parameters that are claimed, or audit where the verdict fails: {found[0]}{most} "
             f"{'are' if most else 'is'} refused."
         )
-    open_ones = sum(one.outcome == "undecided" for one in record.domain.scenarios)
+    open_ones = [one for one in record.domain.scenarios if one.outcome == "undecided"]
     most_paths = setting(record, "domain.most_paths")
     if open_ones:
+        levels = [level for one in open_ones for level in one.levels if level.outcome == "undecided"]
+        known = [level.paths_needed for level in levels if level.paths_needed is not None]
+        enough = f" to about {rounded_up(max(known))}" if known else ""
         now = f" (now {count(most_paths)})" if isinstance(most_paths, int) else ""
-        yield f"To settle {scenarios_counted(open_ones)} of [domain] left undecided, raise [domain] most_paths{now}."
+        rest = "" if len(known) == len(levels) else "; for some of it, how many are enough cannot be told"
+        left = f"{scenarios_counted(len(open_ones))} of [domain] left undecided"
+        yield f"To settle {left}, raise [domain] most_paths{enough}{now}{rest}."
 
 
 def _farther(record: AuditRecord) -> Iterable[str]:
