@@ -48,8 +48,8 @@ from dataclasses import dataclass
 
 import msgspec
 
-from narrowgauge.policy.gateclaims import RESOLUTION, Claim, claims_of
-from narrowgauge.policy.gatedomain import DOMAIN, domain_findings
+from narrowgauge.policy.gateclaims import RESOLUTION, SHARES, Claim, claims_of, counted_shares
+from narrowgauge.policy.gatedomain import DOMAIN, claims_box, domain_findings
 from narrowgauge.policy.gatefacts import FACTS, facts_of
 from narrowgauge.policy.gatefigures import confidence_of, looks_of
 from narrowgauge.record.audit import AuditRecord
@@ -89,9 +89,8 @@ def judge(
     if any(one.check in ("settings", "run") and one.state == "fails" for one in facts):
         return facts
     claims = list(claims_of(policy, record, counted=counted))
-    corners = list(domain_findings(policy, record, alone=alone))
-    sides = _sides(record, len(claims), len(corners), alone=alone)
-    return [*facts, *(_found(claim, sides) for claim in claims), *corners]
+    sides = _sides(policy, record, claims, alone=alone)
+    return [*facts, *(_found(claim, sides) for claim in claims), *domain_findings(policy, record, alone=alone)]
 
 
 def second(first: Sequence[Finding], fresh: Sequence[Finding]) -> list[Finding]:
@@ -155,10 +154,16 @@ def _key(finding: Finding) -> tuple[str, int | None, str | None, str | None]:
     return finding.check, finding.level, finding.quantity, finding.arm
 
 
-def _sides(record: AuditRecord, claims: int, corners: int, *, alone: bool) -> _Sides:
-    """Return the rates of a claim where so many `corners`, levels of a box, are judged at 1 in 1,000 beside them."""
+def _sides(policy: PolicyDocument, record: AuditRecord, claims: Sequence[Claim], *, alone: bool) -> _Sides:
+    """Return the rates of a claim where the levels of a box are judged at 1 in 1,000 beside them.
+
+    They are the same while more paths are drawn as in the end, when shares are counted and corners are tried, too.
+    """
     looks = looks_of(record)
-    each = min(ALPHA, math.sqrt((FALSE_ALARMS - corners * ALPHA**2) / max(1, claims)))  # a ladder has at most 65
+    shares = counted_shares(policy, next(iter(record.quantities)))
+    number = max(1, sum(claim.check not in SHARES for claim in claims) + shares)
+    corners = len(policy.levels) if claims_box(policy) else 0  # a ladder has at most 65
+    each = min(ALPHA, math.sqrt((FALSE_ALARMS - corners * ALPHA**2) / number))
     if alone:
         return _Sides(fails=each**2 / looks, holds=max(each, 1 - confidence_of(record)) / looks)
     return _Sides(fails=each / looks, holds=each / looks)

@@ -24,7 +24,7 @@ from narrowgauge.record.audit import ArmEntry, AuditRecord, LevelEntry
 from narrowgauge.record.gate import Check, Finding, State
 from narrowgauge.record.policy import ArmPart, LevelPart, PolicyDocument, SharePart
 
-__all__ = ["BATCHES", "RESOLUTION", "Claim", "beside", "claims_of"]
+__all__ = ["BATCHES", "RESOLUTION", "SHARES", "Claim", "beside", "claims_of", "counted_shares"]
 
 BATCHES = 32  # of a block: what a standard error of the record rests on
 RESOLUTION = 0.9  # of a gain or an edge: how near to its limit the lower bound has to come
@@ -35,6 +35,7 @@ _SHARES: Final[tuple[tuple[Check, str, str], ...]] = (
     ("lost additions", "lost_additions", "lost"),
     ("subnormals", "subnormals", "below"),
 )
+SHARES = tuple(check for check, _, _ in _SHARES)
 _MANY = 10**6  # degrees of freedom that make no difference any more
 _NONE_SEEN = 10.0  # events of which none is seen in 1 of 20,000 samples
 
@@ -120,6 +121,12 @@ def claims_of(policy: PolicyDocument, record: AuditRecord, *, counted: bool = Fa
             paths=min(level.paths for level in quantity.levels),
             bounds=functools.partial(_whole, planned, levels, reaches, limit),
         )
+
+
+def counted_shares(policy: PolicyDocument, quantity: str) -> int:
+    """Return how many shares of its own arms a policy has counted, whether or not a record says anything of them."""
+    parts = [plan.measured[quantity].arms.get(arm) for plan in policy.levels for arm in arms_of(plan)]
+    return sum(isinstance(getattr(part, known, None), SharePart) for part in parts for _, known, _ in _SHARES)
 
 
 def _whole(

@@ -27,7 +27,7 @@ from narrowgauge.record.domain import DomainEntry, ScenarioEntry, ScenarioLevelE
 from narrowgauge.record.gate import Finding, State
 from narrowgauge.record.policy import LevelPart, ParameterPart, PolicyDocument
 
-__all__ = ["DOMAIN", "LEAST_EDGE", "domain_findings"]
+__all__ = ["DOMAIN", "LEAST_EDGE", "claims_box", "domain_findings"]
 
 DOMAIN: Final = "domain"  # the check
 _EDGE = 1.0  # what the edge of a format that pays is above
@@ -47,15 +47,19 @@ _TOO_MUCH = (
 )
 
 
+def claims_box(policy: PolicyDocument) -> bool:
+    """Return whether a policy claims more than one point."""
+    return any(part.low is not None for part in policy.domain.parameters.values())
+
+
 def domain_findings(policy: PolicyDocument, record: AuditRecord, *, alone: bool = False) -> Iterator[Finding]:
     """Yield a finding for each level of a policy that claims a box of parameters, by the table above; else nothing.
 
     With `alone` what was refused cannot be tried again on fresh draws.
     """
-    parameters = policy.domain.parameters
-    if all(part.low is None for part in parameters.values()):
+    if not claims_box(policy):
         return
-    known = record.domain
+    known, parameters = record.domain, policy.domain.parameters
     inside = [] if known is None else [one for one in known.scenarios if _inside(one.parameters, parameters)]
     if known is None or not inside:
         what = f"the policy claims a box of parameters, and nothing was tried in it; {_AGAIN}"
