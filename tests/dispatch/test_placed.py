@@ -104,9 +104,10 @@ def test_carried_errors_keep_the_error_at_the_last_rounding():
 
 
 @pytest.mark.parametrize("kept", ["np.minimum(sum, 1e4)", "np.clip(sum, 0.0, 1e4)", "sum.copy()", "np.array([*sum])"])
-def test_an_error_is_carried_by_a_state_that_was_clipped_or_copied(kept):
+@pytest.mark.parametrize("added", ["(s + (dx + 0.0))", "((dx + 0.0) + s)"])
+def test_an_error_is_carried_by_a_state_that_was_clipped_or_copied(kept, added):
     """It is another array by then, with the same values."""
-    body = LOOP.replace("s + (dx + 0.0)", kept.replace("sum", "(s + (dx + 0.0))"))
+    body = LOOP.replace("s + (dx + 0.0)", kept.replace("sum", added))
     ones = np.ones((4096, 2))
     assert np.array_equal(run(body, Carried(HALF, frozenset()), ones), [2048.0, 2048.0])
     assert np.array_equal(run(body, Carried(HALF, sums_at(body, 6)), ones), [4096.0, 4096.0])
@@ -118,3 +119,10 @@ def test_no_error_is_carried_by_a_path_that_begins_anew():
     ones = np.ones((4096, 8))
     found = run(body, Carried(HALF, sums_at(body, 6, ones)), ones)
     assert np.array_equal(found, [2045.0] + [4096.0] * 7)
+
+
+def test_no_error_is_carried_into_the_next_call():
+    """A call that begins where the last one ended, at 2048 with an error of 1, knows nothing of that one."""
+    body = LOOP.replace("x[0] * 0.0", "x[0] * 2048.0")
+    ones, arithmetic = np.ones((1, 4)), Carried(HALF, sums_at(body, 6))
+    assert [run(body, arithmetic, ones)[0] for _ in range(3)] == [2048.0] * 3

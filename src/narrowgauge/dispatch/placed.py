@@ -7,6 +7,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence, Set
 from dataclasses import dataclass
+from types import FrameType
 from typing import Any, NamedTuple
 
 import numpy as np
@@ -121,11 +122,13 @@ class Carried(Placed):
     _sums: Set[Operation]
     _errors: dict[int, _Left]
     _last: dict[Operation, _Left]
+    _call: FrameType | None
 
     def __init__(self, form: Format, sums: Set[Operation]) -> None:
         object.__setattr__(self, "_sums", sums)
         object.__setattr__(self, "_errors", {})
         object.__setattr__(self, "_last", {})
+        object.__setattr__(self, "_call", None)
         super().__init__(format=form)
 
     def apply(
@@ -143,7 +146,11 @@ class Carried(Placed):
         if known is None and ufunc is np.add and id(added) in self._errors:
             state, added = added, state
             known = self._errors[id(state)]
-        known = known or self._by_values(state)
+        self._see_call()
+        if known is None:
+            known = self._by_values(state)
+            if known is None and ufunc is np.add and (known := self._by_values(added)) is not None:
+                state, added = added, state
         if known is not None:
             error = known.of(state)
             # x - e carries the error of x in e with the other sign
@@ -156,6 +163,18 @@ class Carried(Placed):
         _remember(self._errors, result, left)
         self._last[here] = left
         return result
+
+    def _see_call(self) -> None:
+        """Forget the values of an earlier call of the kernel: the state of this one is its own."""
+        assert self._setting is not None  # an operation among the sums has a place
+        outermost = frame = self._setting.frame()
+        while frame is not None:
+            if frame.f_code.co_filename in self._setting.files:
+                outermost = frame
+            frame = frame.f_back
+        if outermost is not self._call:  # which is kept, so that no other frame has its id
+            object.__setattr__(self, "_call", outermost)
+            self._last.clear()
 
     def _by_values(self, state: Any) -> _Left | None:
         """Return the latest sum of an operation that most values of a state still are."""
