@@ -201,8 +201,11 @@ class TestFirstScreen:
     def test_nothing_is_finite(self):
         """Then float64 is nothing to keep: there is no verdict, and the levels where that is so are named."""
         shown = words(pages.nonfinite_record)
-        assert "No verdict: on levels 0 to 4 float64 itself has no finite results to compare with." in shown
-        assert "Find out why the kernel has no finite results in float64 on levels 0 to 4. Then audit again." in shown
+        assert "No verdict: on levels 0 to 4 float64 itself has no results of finite variance to compare with." in shown
+        assert (
+            "Find out why the kernel has no results of finite variance in float64 on levels 0 to 4. Then audit again."
+            in shown
+        )
         assert "Keep float64" not in shown
 
     def test_nothing_is_settled(self):

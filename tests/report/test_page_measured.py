@@ -48,9 +48,9 @@ def hostile(dW, h, *, label):
 hostile.__name__ = hostile.__qualname__ = pages.SCRIPT
 
 CASES = {
-    "nothing finite": (not_finite, 4, "No verdict: on levels 0 to 4 float64 itself has no finite results"),
+    "nothing finite": (not_finite, 4, "No verdict: on levels 0 to 4 float64 itself has no results of finite variance"),
     "nothing varies": (still, 4, "fewer than two levels have a signal"),
-    "too large in every format": (too_large, 4, "the noise"),
+    "too large in every format": (too_large, 4, "float32: no noise was measured."),
     "raised in every format": (raises, 4, "No: lower precision does not pay here."),
     "one level": (walk, 0, "on its only level"),
     "two levels": (walk, 1, "measured on levels 0 to 1"),

@@ -93,7 +93,7 @@ class TestOrder:
     def test_without_a_finite_reference_there_is_no_verdict(self):
         """As on the page."""
         said = flat(verdict_text(pages.nonfinite_record(), None))
-        assert "No verdict: on levels 0 to 4 float64 itself has no finite results to compare with. What follows" in said
+        assert "on levels 0 to 4 float64 itself has no results of finite variance to compare with. What follows" in said
 
     def test_alarms_in_the_short_form(self):
         """The short form does not leave the alarm out."""

@@ -22,6 +22,7 @@ from scipy.stats import chi2, t
 from narrowgauge.record.audit import LawEntry
 
 __all__ = [
+    "REJECTED_BELOW",
     "AccumulationFit",
     "Agreement",
     "LawPoint",
@@ -46,7 +47,7 @@ _LEAST_LEVELS = 4
 _LAW_ERROR = 0.01  # the law itself is good to about 1% of a variance; measured, no source
 _REWEIGHTINGS = 2
 _AGREEMENT = 0.05
-_REJECTED_BELOW = 0.001  # of p: a law that holds is rejected once in a thousand fits
+REJECTED_BELOW = 0.001  # of p: a law that holds is rejected once in a thousand fits
 _DECAY_LEVELS = 4
 _PARTS: tuple[Part, ...] = ("floor", "walk", "drift")  # in order of the power of n
 _WORDS: dict[Part, str] = {
@@ -210,7 +211,7 @@ def fit(
 
 def rejected(fit: AccumulationFit | LawEntry) -> bool:
     """Return whether the chi-square test rejects the law: p below 0.001, which is its false-alarm rate."""
-    return fit.fit_p is not None and fit.fit_p < _REJECTED_BELOW
+    return fit.fit_p is not None and fit.fit_p < REJECTED_BELOW
 
 
 def established(fit: AccumulationFit | LawEntry) -> tuple[float, float, float]:

@@ -53,7 +53,9 @@ def headline(record: AuditRecord) -> Headline:
         sentence = "No verdict: the levels of this simulation do not fit together, so its figures cannot be relied on."
         return Headline(sentence, "open", "What follows is what the figures would say.")
     if lost := unreferenced(record):
-        sentence = f"No verdict: on {levels_named(lost)} float64 itself has no finite results to compare with."
+        sentence = (
+            f"No verdict: on {levels_named(lost)} float64 itself has no results of finite variance to compare with."
+        )
         return Headline(sentence, "open", "What follows is what the figures would say.")
     paying, hoping = paying_and_open(record)
     where = "on its only level" if measured_to(record) == 0 else f"measured on levels 0 to {measured_to(record)}"

@@ -39,7 +39,8 @@ def _unsound(record: AuditRecord) -> Iterable[str]:
             "level below. Then audit again."
         )
     if lost := unreferenced(record):
-        yield f"Find out why the kernel has no finite results in float64 on {levels_named(lost)}. Then audit again."
+        what = f"the kernel has no results of finite variance in float64 on {levels_named(lost)}"
+        yield f"Find out why {what}. Then audit again."
     if not isinstance(record.canary, UnsetType) and (found := canary_alarms(record.canary)):
         arms = dict.fromkeys(one.partition(",")[0] for one in found)
         yield f"Build or write the kernel so that it rounds in {joined(arms)} as it claims. Then audit again."

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable
 
+from narrowgauge.judge.accumulation import REJECTED_BELOW
 from narrowgauge.record.audit import (
     AccumulationEntry,
     ArmEntry,
@@ -28,9 +29,7 @@ from narrowgauge.report.wording import (
     shown_edge,
 )
 
-__all__ = ["REJECTED_BELOW", "accumulation", "format_notes", "nonfinite", "orders", "rounded_up", "separation_notes"]
-
-REJECTED_BELOW = 0.001  # of p: the law fits badly, as `judge.accumulation` has it
+__all__ = ["accumulation", "format_notes", "nonfinite", "orders", "rounded_up", "separation_notes"]
 
 
 def format_notes(record: AuditRecord, quantity: str, name: str) -> list[str]:

@@ -6,13 +6,14 @@ from collections.abc import Callable, Iterable, Sequence
 
 from rich.text import Text
 
+from narrowgauge.judge.accumulation import REJECTED_BELOW
 from narrowgauge.record.audit import AuditRecord, QuantityEntry
 from narrowgauge.report.blocks import Block, Drawing, Part, Table, Words, points, tabled
 from narrowgauge.report.charts import LineChart, spoken
 from narrowgauge.report.crossing import NO_NOISE, crossing_chart, crossing_words
 from narrowgauge.report.figures import NARROW, WIDE, lines
 from narrowgauge.report.layout import Ruled
-from narrowgauge.report.notes import REJECTED_BELOW, accumulation, nonfinite, orders
+from narrowgauge.report.notes import accumulation, nonfinite, orders
 from narrowgauge.report.parts import law_chart, law_shares
 from narrowgauge.report.settings import confidence, coupled, exact_formats, measured_to
 from narrowgauge.report.tables import missing_noise, signal_table

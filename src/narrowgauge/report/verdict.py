@@ -10,6 +10,7 @@ from rich.text import Text
 from narrowgauge.record.audit import AuditRecord, DecidedEntry, FinestEntry, QuantityEntry
 from narrowgauge.report.branches import branch_alarms
 from narrowgauge.report.canary import canary_alarms
+from narrowgauge.report.questions import QUESTIONS
 from narrowgauge.report.settings import assumed_costs, confidence, coupled, measured_to, today
 from narrowgauge.report.wording import (
     clean,
@@ -81,7 +82,7 @@ def alarms(record: AuditRecord) -> list[tuple[str, Text]]:
         found += [("", text), *(("- ", Text(line)) for line in unsound)]
     if differ := branch_alarms(record):
         text = Text("THE BRANCHES OF A SPLIT DO NOT CANCEL. ", style="bold red")
-        text.append("What differs, and where, is said below, under branches of a split.", style="not bold default")
+        text.append(f'What differs, and where: see "{QUESTIONS["branches"].words}".', style="not bold default")
         found += [("", text), *(("- ", Text(f"{line}.")) for line in differ)]
     return found + [("", text) for text in worker_alarms(record)]
 
