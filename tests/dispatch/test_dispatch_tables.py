@@ -128,7 +128,7 @@ def test_methods_and_keywords_agree_with_numpy_and_stay_in_the_format(call):
     check(call)
 
 
-@pytest.mark.parametrize("function", FUNCTIONS, ids=name_of)
+@pytest.mark.parametrize("function", sorted(FUNCTIONS, key=name_of), ids=name_of)
 def test_every_argument_is_handled_or_refused_by_name(function):
     """The row names what NumPy's signature names, in its order; what is refused is refused in the stated words."""
     row = row_for(function)
