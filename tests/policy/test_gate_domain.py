@@ -57,10 +57,11 @@ def scenario(volatility, outcome="passes", reason=None, *, level=2, message=None
     )
 
 
-def tried(record, *scenarios, schemes=(SPLIT,) * 4):
-    """A record in which these scenarios were tried."""
+def tried(record, *scenarios, schemes=(SPLIT,) * 4, sides=(("volatility", 0.2, 0.5),)):
+    """A record in which these scenarios were tried, of a box with these sides."""
     levels = [SimpleNamespace(level=number, scheme=scheme) for number, scheme in enumerate(schemes)]
-    return msgspec.structs.replace(record, domain=SimpleNamespace(levels=levels, scenarios=list(scenarios)))
+    box = {name: SimpleNamespace(low=low, high=high) for name, low, high in sides}
+    return msgspec.structs.replace(record, domain=SimpleNamespace(sides=box, levels=levels, scenarios=list(scenarios)))
 
 
 def found(held, fresh, **more):
@@ -164,6 +165,80 @@ def test_a_corner_refused_once_fails_only_if_it_is_refused_again(record, held):
     assert verdict_of(second(first, found(held, good))) == "pass"
     again = second(first, found(held, bad))
     assert [(one.state, one.stages) for one in again if one.level == 2] == [("fails", 2)]
+
+
+@pytest.mark.parametrize("sides", [
+    [("volatility", 0.2, 0.39)],
+    [("volatility", 0.21, 0.4)],
+    [],
+    [("rate", 0.0, 1.0)],
+])  # fmt: skip
+def test_scenarios_of_a_part_of_the_box_say_nothing_of_all_of_it(record, held, sides):
+    """A narrower box, or one without a side; what fails in a part fails in the whole."""
+    fine, infinite = scenario(0.3), scenario(0.3, "refused", "nonfinite")
+    for one in (fine, infinite):
+        one.parameters = {name: 0.3 if name == "volatility" else 0.05 for name, *_ in sides}
+    levels = found(held, tried(record, fine, sides=sides), alone=True)
+    assert [(one.level, one.state) for one in levels] == [(number, "undecided") for number in range(4)]
+    assert all(one.message.endswith("the gate without --measured tries the corners of the box") for one in levels)
+    assert [one.state for one in found(held, tried(record, infinite, sides=sides), alone=True)][2] == "fails"
+    whole = tried(record, scenario(0.3), sides=[("volatility", 0.2, 0.4)])
+    assert {one.state for one in found(held, whole, alone=True)} == {"holds"}
+
+
+@pytest.mark.parametrize(("needs", "point", "said"), [
+    ((2048, 40960, 512), "0.3", "; about 40,960 paths there would decide"),
+    ((2048, 512, None), "0.4", ""),
+])  # fmt: skip
+def test_of_several_open_points_the_one_that_needs_most_is_named(record, held, needs, point, said):
+    """No number where one of them cannot be told."""
+    points = [
+        scenario(at, "undecided", "budget", needed=needed, edge=1.0)
+        for at, needed in zip((0.2, 0.3, 0.4), needs, strict=True)
+    ]
+    one = found(held, tried(record, *points))[2]
+    assert one.message == f"level 2: 3 of the 3 points that were tried in the box of the policy are undecided, at " + (
+        f"volatility = {point}{said}"
+    )
+    assert one.paths_needed == (40960 if said else None)
+
+
+def test_a_level_is_refused_for_its_own_reason_where_another_one_stopped(record, held):
+    """The sample refuses level 1, the kernel ends on level 3: that is no fact of level 1."""
+    stopped = scenario(0.4, "refused", "reference", level=3, message="the kernel raised")
+    stopped.levels[1] = scenario(0.4, "refused", "edge", level=1, edge=0.5).levels[1]
+    stopped.level = 1
+    levels = found(held, tried(record, stopped))
+    assert [one.state for one in levels] == ["holds", "fails", "holds", "fails"]
+    assert "its edge is 0.5 (" in levels[1].message
+    assert fails_for_now(levels[1:2])
+    assert levels[3].message.endswith("at volatility = 0.4: the kernel raised")
+
+
+def test_a_kernel_that_stops_with_more_paths_fails_where_it_may_have(record, held):
+    """All levels were looked at before: on each one that is not refused for its own reason."""
+    stopped = scenario(0.4, "refused", "edge", level=1, edge=0.5)
+    stopped.message = "the kernel raised"
+    levels = found(held, tried(record, stopped))
+    assert [one.state for one in levels] == ["fails"] * 4
+    assert ["the kernel raised" in one.message for one in levels] == [True, False, True, True]
+
+
+def test_a_level_that_is_not_finite_stops_no_other_one(record, held):
+    """Its own entry says so."""
+    stopped = scenario(0.4, "refused", "reference", level=2)
+    stopped.message = "level 2: the reference is not finite on 3 of 1024 paths"
+    levels = found(held, tried(record, stopped))
+    assert [one.state for one in levels] == ["holds", "holds", "fails", "holds"]
+    assert levels[2].message.endswith(stopped.message)
+
+
+def test_a_corner_that_breaks_on_fresh_draws_alone_stands_there_once(record, held):
+    """It fails, and nothing says that it holds."""
+    first = found(held, tried(record, scenario(0.4)))
+    broken = found(held, tried(record, scenario(0.4, "refused", "nonfinite")))
+    both = second(first, broken)
+    assert sorted((one.level, one.state) for one in both) == [(0, "holds"), (1, "holds"), (2, "fails"), (3, "holds")]
 
 
 MAPPING = {

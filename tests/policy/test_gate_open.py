@@ -234,3 +234,35 @@ def test_a_cost_of_approximate_draws_is_a_setting_of_a_policy_that_has_one(recor
     assert keys(judge(dear, record), "fails") == {("settings", None, None)}
     asked = {**record.asked, "cost": {**record.asked["cost"], "approximate_draws": 0.25}}
     assert not keys(judge(dear, changed(record, "asked", to=asked)), "fails")
+
+
+def with_costs(record, **more):
+    """A record of an audit with these settings of [cost]."""
+    return changed(record, "asked", "cost", to={**record.asked["cost"], **more})
+
+
+UNGIVEN = dict.fromkeys(("float64", "float32", "float16", "bfloat16"))
+
+
+@pytest.mark.parametrize(
+    ("now", "said"),
+    [
+        ({"measured": True, **UNGIVEN}, []),
+        ({}, []),  # what was measured, given: so does a gate, which times nothing
+        ({"measured": True, **UNGIVEN, "draws": 0.25}, ["cost.draws is 0.25"]),
+        ({"measured": True, **UNGIVEN, "path": 0.25}, ["cost.path is 0.25"]),
+        ({"measured": False, "float32": 0.3}, ["cost.measured is False in the audit file and True in the policy"]),
+    ],
+)
+def test_measured_costs_are_measured_and_all_others_are_the_policys(record, held, now, said):
+    """Costs of draws and paths are given, whoever measured those of a step."""
+    timed = changed(held, "cost", "source", to="measured")
+    failed = [one.message for one in judge(timed, with_costs(record, **now)) if one.check == "settings"]
+    failed = [one for one in failed if one.startswith("cost.")]
+    assert [one[: len(text)] for one, text in zip(failed, said, strict=True)] == said
+
+
+def test_given_costs_are_not_measured_ones(record, held):
+    """Figures at the costs of a machine say nothing of those that the policy was drawn up with."""
+    (one,) = [one for one in judge(held, with_costs(record, measured=True, **UNGIVEN)) if one.state == "fails"]
+    assert one.message == "cost.measured is True in the audit file and False in the policy"
