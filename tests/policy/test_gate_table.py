@@ -3,6 +3,7 @@
 import pytest
 from gate_reports import HOSTILE, REPORTS, entry, every_state, finding, report
 from hypothesis import given
+from msgspec.structs import replace
 
 from narrowgauge.record.policy import MachinePart
 from narrowgauge.report.gate import gate_lines
@@ -104,7 +105,7 @@ def test_a_gate_that_measured_nothing_says_what_the_policy_is_of():
 
 
 def test_an_inconclusive_gate_says_how_it_is_decided():
-    """With more paths, or by measuring at all; what no number of paths decides is a fact, or a figure that is not there."""
+    """With more paths, or by measuring at all; a fact and a figure that is not there no number of paths decides."""
     waits = finding("undecided", "bias", message="it is open")
     assert "to decide what is open: a larger most_paths under [gate] in models/reserve.toml" in gate_lines(
         report(entry(waits)), 200
