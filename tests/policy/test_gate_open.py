@@ -4,9 +4,14 @@ from types import SimpleNamespace
 
 import msgspec
 import pytest
-from policy_records import changed, policy
+from policy_records import AUDIT, changed, policy, run
 
+from narrowgauge.api import gate_held
+from narrowgauge.measure.workers import Workers
+from narrowgauge.policy.drawup import draw_up, write_policy
 from narrowgauge.policy.gate import _sides, judge, second, verdict_of
+from narrowgauge.policy.gatefile import held_to
+from narrowgauge.policy.gatefinished import judge_finished
 from narrowgauge.record.audit import RaisedEntry
 from narrowgauge.record.gate import Place
 from narrowgauge.record.policy import ParameterPart, SharePart
@@ -266,3 +271,34 @@ def test_given_costs_are_not_measured_ones(record, held):
     """Figures at the costs of a machine say nothing of those that the policy was drawn up with."""
     (one,) = [one for one in judge(held, with_costs(record, measured=True, **UNGIVEN)) if one.state == "fails"]
     assert one.message == "cost.measured is True in the audit file and False in the policy"
+
+
+OWN = """
+import numpy as np
+
+def value(dW, h, *, rate, volatility, strike):
+    one = dW.dtype.type
+    x = np.ones(dW.shape[1], dW.dtype)
+    for dw in dW:
+        x = x + (one(rate * h) * x + one(volatility) * x * dw)
+    return {"end": x, "call": np.maximum(x - one(strike), one(0.0))}
+"""
+MEASURED = "[cost]\nmeasured = true\ndraws = 0.125\n\n"
+
+
+def test_a_gate_takes_measured_costs_from_the_policy_and_holds_the_given_ones(tmp_path):
+    """It times nothing, which is no other setting; what a draw costs is one, also in a finished audit."""
+    text = AUDIT[: AUDIT.index("[cost]")] + MEASURED + AUDIT[AUDIT.index("[sampling]") :]
+    text = text.replace("[parameters]", 'rounds = "itself"\n\n[parameters]')
+    text = text.replace('schemes = ["split"]', 'narrow = ["float16"]\nwide = ["float32"]')
+    text += "\n[gate]\npaths = 1024\nmost_paths = 1024\n"
+    document = draw_up(*run(tmp_path, text, OWN))
+    write_policy(document, tmp_path / "audit.policy.json")
+    assert document.cost.source == "measured"
+    audit = tmp_path / "audit.toml"
+    for state in ("holds", "fails"):
+        entries = gate_held(held_to(audit), who=Workers()), judge_finished(held_to(audit), tmp_path / "out")
+        for entry in entries:
+            assert {one.state for one in entry.findings if one.check == "settings"} >= {state}
+            assert (entry.verdict == "fail") == (state == "fails")
+        audit.write_text(text.replace("draws = 0.125", "draws = 0.25"), encoding="utf-8")
