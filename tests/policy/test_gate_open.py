@@ -4,7 +4,8 @@ from types import SimpleNamespace
 
 import msgspec
 import pytest
-from policy_records import AUDIT, changed, policy, run
+from policy_records import AUDIT, changed, policy
+from policy_records import run as audited
 
 from narrowgauge.api import gate_held
 from narrowgauge.measure.workers import Workers
@@ -292,7 +293,7 @@ def test_a_gate_takes_measured_costs_from_the_policy_and_holds_the_given_ones(tm
     text = text.replace("[parameters]", 'rounds = "itself"\n\n[parameters]')
     text = text.replace('schemes = ["split"]', 'narrow = ["float16"]\nwide = ["float32"]')
     text += "\n[gate]\npaths = 1024\nmost_paths = 1024\n"
-    document = draw_up(*run(tmp_path, text, OWN))
+    document = draw_up(*audited(tmp_path, text, OWN))
     write_policy(document, tmp_path / "audit.policy.json")
     assert document.cost.source == "measured"
     audit = tmp_path / "audit.toml"
