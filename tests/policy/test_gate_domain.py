@@ -224,6 +224,12 @@ def test_a_level_that_is_not_finite_stops_no_other_one(record, held):
     assert levels[2].message.endswith(stopped.message)
 
 
+def test_a_split_whose_branches_differ_runs_all_the_same(record, held):
+    """It is refused for what it is."""
+    levels = found(held, tried(record, scenario(0.4, "refused", "branches")))
+    assert levels[2].message.endswith("at volatility = 0.4: the two branches of its split differ")
+
+
 def test_a_corner_that_breaks_on_fresh_draws_alone_stands_there_once(record, held):
     """It fails, and nothing says that it holds."""
     first = found(held, tried(record, scenario(0.4)))

@@ -39,6 +39,7 @@ _WORDS = {
     "raised": "the kernel raises in a narrow format",
     "bias": "rounding shifts a mean by more than its share of the target",
     "edge": "its edge is below 1",
+    "branches": "the two branches of its split differ",
 }
 _OF_THE_SAMPLE = ("edge", "bias")
 _AGAIN = "the gate without --measured tries the corners of the box"
