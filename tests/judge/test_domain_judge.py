@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
-from judge_cases import audit, differences, level_tally, quantity, shape, uneven
+from judge_cases import PATHS, audit, differences, level_tally, quantity, shape, uneven
 from test_schemes import ALONE_ONLY, ALPHA, SPLIT_ONLY, alone, noise_of, noisy, shifted, split
 
 from narrowgauge.judge.domain import arm_figures, judge_scheme, tried_scheme, worse
@@ -93,6 +95,36 @@ def test_an_open_verdict_has_the_reference_tried():
         judged = judge_level(tally, file, ALPHA)
         assert judged.joint == SPLIT
         assert tried_scheme(tally, judged, file, ALPHA) == scheme
+
+
+def both(one, other):
+    """A level of the quantities of two tallies, in this order."""
+    return level_tally({f"q{number}": tally.quantities["value"] for number, tally in enumerate((one, other))})
+
+
+@pytest.mark.parametrize("turned", [False, True])
+def test_a_quantity_without_an_edge_is_not_hidden_by_one_that_has_it(turned):
+    """Whichever comes first: an edge near 1 of the one says nothing of the other, of which nothing is known."""
+    file = audit(formats=SPLIT_ONLY)
+    near = noisy(noise_of(1.2), spread=0.9)
+    constant = level_tally(quantity({name: np.zeros(PATHS) for name in ("float64", "float16")}))
+    assert figures(near, file).edge is not None
+    found = figures(both(*((constant, near) if turned else (near, constant))), file)
+    assert (found.outcome, found.reason, found.edge) == ("undecided", "no_variance", None)
+
+
+@pytest.mark.parametrize("place", [0, 1])
+def test_an_open_edge_that_nobody_knows_leaves_none(place):
+    """For want of paths, too, as of an event that no path has met yet; one that pays has no part in it."""
+    file = audit(formats=SPLIT_ONLY)
+    tally = both(noisy(noise_of(1.2), spread=0.9), noisy(noise_of(1.2), spread=0.9))
+    level = judge_level(tally, file, ALPHA)
+    name = f"q{place}"
+    unseen = replace(level.arms[name]["float16"], edge=None, paths_needed=None)
+    for arm, edge in ((unseen, False), (replace(unseen, verdict="pays", reason=None), True)):
+        changed = replace(level, arms={**level.arms, name: {**level.arms[name], "float16": arm}})
+        found = judge_scheme(tally, changed, file, ALPHA, SPLIT)
+        assert (found.reason, found.edge is not None) == ("budget", edge)
 
 
 def test_the_worst_quantity_is_told_of_a_format():

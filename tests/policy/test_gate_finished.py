@@ -85,6 +85,49 @@ def test_an_audit_file_is_what_its_own_audit_was_made_with(tmp_path, more, cost)
     assert list(_otherwise(tomllib.loads(text), read_audit_file(tmp_path / "audit.toml").asked())) == []
 
 
+BOTH = MORE + 'allow = "within budget"\npaths = 4096\n'
+
+
+@pytest.mark.parametrize(
+    ("key", "said"),
+    [
+        (
+            'allow = "within budget"\n',
+            ["branches.allow is not what the audit was made with, within budget, but not there"],
+        ),
+        ("cells = 64\n", ["draws.cells is not what the audit was made with, 64, but not there"]),
+        (
+            'low = "model.py:value"\n',
+            ["branches.low is not what the audit was made with, model.py:value, but not there"],
+        ),
+        ("confidence = 0.95\n", ["sampling.confidence is not what the audit was made with, 0.95, but not there"]),
+        ("paths = 4096\n", []),
+    ],
+)
+def test_a_key_that_was_taken_out_of_a_table_is_noticed(tmp_path, key, said):
+    """But for what says how much is drawn."""
+    text = AUDIT + "confidence = 0.95\n" + BOTH
+    assert text.count(key) == 1
+    (tmp_path / "audit.toml").write_text(text, encoding="utf-8")
+    asked = read_audit_file(tmp_path / "audit.toml").asked()
+    assert list(_otherwise(tomllib.loads(text), asked)) == []
+    left = _otherwise(tomllib.loads(text.replace(key, "")), asked)
+    assert [one.message.partition(";")[0] for one in left] == said
+
+
+@pytest.mark.parametrize(("confidence", "states"), [(0.95, ["fails"]), (0.99, [])])
+def test_what_says_how_much_is_drawn_may_change_and_the_confidence_may_not(tmp_path, confidence, states):
+    """Of [sampling] all else, and how long a command may take; the audit had the default."""
+    text = AUDIT + BOTH
+    (tmp_path / "audit.toml").write_text(text, encoding="utf-8")
+    now = tomllib.loads(text.replace("8192", "16384").replace("4096", "1024"))
+    now["sampling"] |= {"seed": 2, "confidence": confidence}
+    asked = read_audit_file(tmp_path / "audit.toml").asked()
+    command = {"run": ["kernel"], "seconds": 60.0}
+    found = _otherwise(now | {"command": command | {"seconds": 90.0}}, asked | {"command": command})
+    assert [one.state for one in found] == states
+
+
 PACKAGE = {
     "models/__init__.py": "",
     "models/paths.py": "from models.rates import more\n" + KERNEL.replace("rate * h", "more(rate) * h"),

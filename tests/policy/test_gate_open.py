@@ -4,9 +4,15 @@ from types import SimpleNamespace
 
 import msgspec
 import pytest
-from policy_records import changed, policy
+from policy_records import AUDIT, changed, policy
+from policy_records import run as audited
 
+from narrowgauge.api import gate_held
+from narrowgauge.measure.workers import Workers
+from narrowgauge.policy.drawup import draw_up, write_policy
 from narrowgauge.policy.gate import _sides, judge, second, verdict_of
+from narrowgauge.policy.gatefile import held_to
+from narrowgauge.policy.gatefinished import judge_finished
 from narrowgauge.record.audit import RaisedEntry
 from narrowgauge.record.gate import Place
 from narrowgauge.record.policy import ParameterPart, SharePart
@@ -234,3 +240,66 @@ def test_a_cost_of_approximate_draws_is_a_setting_of_a_policy_that_has_one(recor
     assert keys(judge(dear, record), "fails") == {("settings", None, None)}
     asked = {**record.asked, "cost": {**record.asked["cost"], "approximate_draws": 0.25}}
     assert not keys(judge(dear, changed(record, "asked", to=asked)), "fails")
+
+
+def with_costs(record, **more):
+    """A record of an audit with these settings of [cost]."""
+    return changed(record, "asked", "cost", to={**record.asked["cost"], **more})
+
+
+UNGIVEN = dict.fromkeys(("float64", "float32", "float16", "bfloat16"))
+
+
+@pytest.mark.parametrize(
+    ("now", "said"),
+    [
+        ({"measured": True, **UNGIVEN}, []),
+        ({}, []),  # what was measured, given: so does a gate, which times nothing
+        ({"measured": True, **UNGIVEN, "draws": 0.25}, ["cost.draws is 0.25"]),
+        ({"measured": True, **UNGIVEN, "path": 0.25}, ["cost.path is 0.25"]),
+        ({"measured": False, "float32": 0.3}, ["cost.measured is False in the audit file and True in the policy"]),
+    ],
+)
+def test_measured_costs_are_measured_and_all_others_are_the_policys(record, held, now, said):
+    """Costs of draws and paths are given, whoever measured those of a step."""
+    timed = changed(held, "cost", "source", to="measured")
+    failed = [one.message for one in judge(timed, with_costs(record, **now)) if one.check == "settings"]
+    failed = [one for one in failed if one.startswith("cost.")]
+    assert [one[: len(text)] for one, text in zip(failed, said, strict=True)] == said
+
+
+def test_given_costs_are_not_measured_ones(record, held):
+    """Figures at the costs of a machine say nothing of those that the policy was drawn up with."""
+    (one,) = [one for one in judge(held, with_costs(record, measured=True, **UNGIVEN)) if one.state == "fails"]
+    assert one.message == "cost.measured is True in the audit file and False in the policy"
+
+
+OWN = """
+import numpy as np
+
+def value(dW, h, *, rate, volatility, strike):
+    one = dW.dtype.type
+    x = np.ones(dW.shape[1], dW.dtype)
+    for dw in dW:
+        x = x + (one(rate * h) * x + one(volatility) * x * dw)
+    return {"end": x, "call": np.maximum(x - one(strike), one(0.0))}
+"""
+MEASURED = "[cost]\nmeasured = true\ndraws = 0.125\n\n"
+
+
+def test_a_gate_takes_measured_costs_from_the_policy_and_holds_the_given_ones(tmp_path):
+    """It times nothing, which is no other setting; what a draw costs is one, also in a finished audit."""
+    text = AUDIT[: AUDIT.index("[cost]")] + MEASURED + AUDIT[AUDIT.index("[sampling]") :]
+    text = text.replace("[parameters]", 'rounds = "itself"\n\n[parameters]')
+    text = text.replace('schemes = ["split"]', 'narrow = ["float16"]\nwide = ["float32"]')
+    text += "\n[gate]\npaths = 1024\nmost_paths = 1024\n"
+    document = draw_up(*audited(tmp_path, text, OWN))
+    write_policy(document, tmp_path / "audit.policy.json")
+    assert document.cost.source == "measured"
+    audit = tmp_path / "audit.toml"
+    for state in ("holds", "fails"):
+        entries = gate_held(held_to(audit), who=Workers()), judge_finished(held_to(audit), tmp_path / "out")
+        for entry in entries:
+            assert {one.state for one in entry.findings if one.check == "settings"} >= {state}
+            assert (entry.verdict == "fail") == (state == "fails")
+        audit.write_text(text.replace("draws = 0.125", "draws = 0.25"), encoding="utf-8")

@@ -3,6 +3,7 @@
 import pytest
 from gate_reports import HOSTILE, REPORTS, entry, every_state, finding, report
 from hypothesis import given
+from msgspec.structs import replace
 
 from narrowgauge.record.policy import MachinePart
 from narrowgauge.report.gate import gate_lines
@@ -104,14 +105,16 @@ def test_a_gate_that_measured_nothing_says_what_the_policy_is_of():
 
 
 def test_an_inconclusive_gate_says_how_it_is_decided():
-    """With more paths, or by measuring at all; a fact that is open no number of paths decides."""
+    """With more paths, or by measuring at all; a fact and a figure that is not there no number of paths decides."""
     waits = finding("undecided", "bias", message="it is open")
     assert "to decide what is open: a larger most_paths under [gate] in models/reserve.toml" in gate_lines(
         report(entry(waits)), 200
     )
     assert "to decide what is open: the gate without --measured\n" in gate_lines(report(entry(waits, seed=None)), 200)
     unknown = finding("undecided", "branches", limit=None, estimate=None, low=None, high=None, compared=None)
-    for other in (report(entry(unknown)), report(entry(waits, finding("fails")))):
+    missing = finding("undecided", "gain", estimate=None, low=None, high=None)
+    assert "a larger most_paths" in gate_lines(report(entry(replace(missing, paths_needed=4096))), 200)
+    for other in (report(entry(unknown)), report(entry(missing)), report(entry(waits, finding("fails")))):
         assert "to decide what is open" not in gate_lines(other, 200)
 
 

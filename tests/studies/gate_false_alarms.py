@@ -59,9 +59,16 @@ def may(found: list[dict[str, object]]) -> bool:
     return verdicts["fail"] <= FAILING and verdicts["inconclusive"] <= INCONCLUSIVE
 
 
+def asked_for(words: list[str]) -> tuple[Path, list[int]]:
+    """Return the file KEPT and how many gates of each audit are held; SystemExit for anything but one or four words."""
+    if len(words) not in (1, 4) or not all(one.isdecimal() for one in words[1:]):
+        raise SystemExit("accepted: KEPT, or KEPT GATES GATES GATES, three whole numbers")
+    return Path(words[0]), [int(one) for one in words[1:]] or [GATES, GATES, GATES]
+
+
 def main() -> int:
     """Write the report, and return 1 where more gates fail, or are inconclusive, than may."""
-    kept, numbers = Path(sys.argv[1]), [int(one) for one in sys.argv[2:5]] or [GATES, GATES, GATES]
+    kept, numbers = asked_for(sys.argv[1:])
     with tempfile.TemporaryDirectory() as folder:
         audits = {
             "to level 3": cases.prepared("reserve", Path(folder, "short")),

@@ -1,6 +1,7 @@
 """Small runs of the studies of the gate's false alarms and of its power."""
 
 import json
+from pathlib import Path
 
 import gate_false_alarms as alarms
 import gate_power as power
@@ -21,6 +22,17 @@ def test_gates_of_the_unchanged_kernel_pass_and_are_not_held_twice(audit, tmp_pa
     monkeypatch.setattr(alarms.cases, "gated", None)
     assert alarms.gates("short", audit, range(3), kept) == first
     assert len(kept.read_text().splitlines()) == 3
+
+
+@pytest.mark.parametrize(
+    "words", [[], ["kept", "5"], ["kept", "5", "5"], ["kept", "5", "5", "5", "5"], ["kept", *"55x"]]
+)
+def test_a_study_that_was_asked_for_wrongly_holds_no_gate(words):
+    """It says so at once, not after all of them; a number for each audit file, or none at all."""
+    with pytest.raises(SystemExit, match="KEPT GATES GATES GATES"):
+        alarms.asked_for(words)
+    assert alarms.asked_for(["kept", *"567"]) == (Path("kept"), [5, 6, 7])
+    assert alarms.asked_for(["kept"]) == (Path("kept"), [alarms.GATES] * 3)
 
 
 def test_as_many_may_fail_as_the_design_allows():

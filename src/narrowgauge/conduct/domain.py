@@ -27,12 +27,11 @@ from narrowgauge.measure.engines import Engine, Errand
 from narrowgauge.measure.scenarios import Look, Wanted, run_look
 from narrowgauge.measure.store import Ledger
 from narrowgauge.measure.task import pinned
-from narrowgauge.record.domain import DomainEntry
+from narrowgauge.record.domain import DomainEntry, near_enough
 
 __all__ = ["Corners", "Explored", "explore"]
 
 _MOST_CORNERS = 8  # of a box that is tried at its corners alone
-_OF_THE_EDGE = ("budget", "edge")  # why a scheme is undecided of which all else is known
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -103,7 +102,7 @@ def _schemes(file: AuditFile, outcome: Outcome) -> dict[int, Scheme]:
 
 def _near(figures: SchemeFigures, least_edge: float) -> bool:
     """Return whether nothing but the edge of a scheme is open, and its lower bound is so much at least."""
-    return figures.reason in _OF_THE_EDGE and figures.edge is not None and figures.edge.low >= least_edge
+    return near_enough(figures.reason, None if figures.edge is None else figures.edge.low, least_edge)
 
 
 class _Explorer:

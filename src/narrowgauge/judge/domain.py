@@ -25,6 +25,7 @@ from narrowgauge.judge.schemes import ArmJudgement, LevelJudgement, admission
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.measure.arms import REFERENCE
 from narrowgauge.measure.tally import LevelTally
+from narrowgauge.record.domain import edge_alone
 
 __all__ = ["ArmFigures", "Outcome", "SchemeFigures", "arm_figures", "judge_scheme", "tried_scheme", "worse"]
 
@@ -36,7 +37,8 @@ _ORDER: tuple[Outcome, ...] = ("passes", "undecided", "refused")
 class SchemeFigures:
     """How a scheme does on one level of a scenario; `reason` is None where it passes.
 
-    `edge` and `bias` are those of the quantity that is worst off, None where there are none.
+    `edge` and `bias` are those of the quantity that is worst off, None where there are none. With several quantities an
+    undecided scheme has the reason of one of which more than the edge is open, and no edge where an open one has none.
     """
 
     outcome: Outcome
@@ -97,7 +99,9 @@ def judge_scheme(
     elif all(arm.verdict == "pays" for arm in arms):
         outcome, reason, needed = "passes", None, None
     else:
-        reason = next((arm.reason for arm in arms if arm.verdict != "pays"), None)
+        waiting = [arm for arm in arms if arm.verdict != "pays"]
+        reason = next((arm.reason for arm in waiting if not edge_alone(arm.reason)), waiting[0].reason)
+        edge = None if any(arm.edge is None for arm in waiting) else edge
     return SchemeFigures(outcome=outcome, reason=reason, edge=edge, bias=bias, paths_needed=needed)
 
 

@@ -96,8 +96,8 @@ def judge(
 def second(first: Sequence[Finding], fresh: Sequence[Finding]) -> list[Finding]:
     """Return the findings of both stages: of the claims that failed at the first, what the fresh draws show.
 
-    Claims that did not fail stay as they are, and so do facts; one that fails on the fresh draws alone fails, too: a
-    path that is not finite is no chance of the sample.
+    Claims that did not fail stay as they are, and so do facts; one that fails on the fresh draws alone fails, too, in
+    the place of what the first stage said of the same: a path that is not finite is no chance of the sample.
     """
     again = {_key(one): one for one in fresh}
     found = [
@@ -107,8 +107,9 @@ def second(first: Sequence[Finding], fresh: Sequence[Finding]) -> list[Finding]:
     broken = [one for one in fresh if _is_fact(one) and one.state == "fails"]
     known = {_key(one) for one in found if one.state == "fails"}
     new = [one for one in broken if _key(one) not in known]
-    kept = {one.check for one in new}
-    return [*(one for one in found if one.state != "holds" or not _is_fact(one) or one.check not in kept), *new]
+    checks, keys = {one.check for one in new}, {_key(one) for one in new}
+    kept = [one for one in found if _key(one) not in keys]
+    return [*(one for one in kept if one.state != "holds" or not _is_fact(one) or one.check not in checks), *new]
 
 
 def concerned(fresh: Iterable[Finding], before: Sequence[Finding]) -> list[Finding]:

@@ -11,11 +11,13 @@ level, and the reason of one that is refused:
 | no                                | yes           | undecided                                        |
 | no                                | no            | holds                                            |
 
-Where no scenario lies in the box, or another scheme was tried, the claim is undecided.
+Where no scenario lies in the box, or another scheme was tried, the claim is undecided. It does not hold, either, where
+the scenarios are those of a box that has not all of the claimed one.
 """
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterator, Mapping, Sequence
 from typing import Final
 
@@ -23,7 +25,7 @@ from narrowgauge.policy.gateclaims import RESOLUTION, beside
 from narrowgauge.policy.gatefacts import fact
 from narrowgauge.policy.gatefigures import arms_of
 from narrowgauge.record.audit import AuditRecord
-from narrowgauge.record.domain import DomainEntry, ScenarioEntry, ScenarioLevelEntry
+from narrowgauge.record.domain import DomainEntry, ScenarioEntry, ScenarioLevelEntry, near_enough
 from narrowgauge.record.gate import Finding, State
 from narrowgauge.record.policy import LevelPart, ParameterPart, PolicyDocument
 
@@ -37,9 +39,9 @@ _WORDS = {
     "raised": "the kernel raises in a narrow format",
     "bias": "rounding shifts a mean by more than its share of the target",
     "edge": "its edge is below 1",
+    "branches": "the two branches of its split differ",
 }
 _OF_THE_SAMPLE = ("edge", "bias")
-_OF_THE_EDGE = ("budget", "edge")  # why a level is open of which all else is known
 _AGAIN = "the gate without --measured tries the corners of the box"
 _TOO_MUCH = (
     "where nothing has changed there the policy claims too much: let [domain] end at the box of the policy, whose "
@@ -66,11 +68,24 @@ def domain_findings(policy: PolicyDocument, record: AuditRecord, *, alone: bool 
         yield fact(DOMAIN, "undecided", what)
         return
     for level in policy.levels:
-        if _tried(known, level):
-            yield _on(level.level, inside, alone=alone)
-        else:
+        if not _tried(known, level):
             what = f"level {level.level}: the scenarios tried another scheme than the policy's; {_AGAIN}"
             yield fact(DOMAIN, "undecided", what, level=level.level)
+            continue
+        found = _on(level.level, inside, levels=len(known.levels), alone=alone)
+        if found.state == "holds" and not _covered(known, parameters):
+            what = f"level {level.level}: the scenarios are of a box that has not all of the policy's; {_AGAIN}"
+            found = fact(DOMAIN, "undecided", what, level=level.level)
+        yield found
+
+
+def _covered(known: DomainEntry, parameters: Mapping[str, ParameterPart]) -> bool:
+    """Return whether the box in which scenarios were tried has all of the box that is claimed."""
+    return all(
+        name in known.sides and known.sides[name].low <= part.low and known.sides[name].high >= part.high
+        for name, part in parameters.items()
+        if part.low is not None and part.high is not None
+    )
 
 
 def _inside(values: Mapping[str, float], parameters: Mapping[str, ParameterPart]) -> bool:
@@ -87,23 +102,26 @@ def _tried(known: DomainEntry, level: LevelPart) -> bool:
     return [(one.narrow, one.wide) for one in schemes] == [(arms_of(level)[0], level.wide)]
 
 
-def _on(level: int, inside: Sequence[ScenarioEntry], *, alone: bool) -> Finding:
-    found = [(one, _entry(one, level)) for one in inside]
+def _on(level: int, inside: Sequence[ScenarioEntry], *, levels: int, alone: bool) -> Finding:
+    found = [(one, _entry(one, level, levels)) for one in inside]
     refused = [(one, entry) for one, entry in found if entry is None or entry.outcome == "refused"]
     waiting = [(one, entry) for one, entry in found if entry is not None and _waits(entry)]
     certain = [(one, entry) for one, entry in refused if entry is None or entry.reason not in _OF_THE_SAMPLE]
     where = f"level {level}"
     if certain:
         one, entry = certain[0]
-        why = one.message or _why(entry)
+        own = entry is not None and entry.reason != "reference"
+        why = _why(entry) if own or one.message is None else one.message
         message = f"{where}: {_counted(len(certain), inside)} refused, at {_shown(one)}: {why}"
         return fact(DOMAIN, "fails", message, level=level)
     edges = [entry for _, entry in found if entry is not None and entry.edge_low is not None]
     state: State = "undecided" if waiting or refused else "holds"
     message, needed = f"{where}: {_counted(len(inside), inside)} fine", None
     if waiting:
-        needed = max((entry.paths_needed or 0 for _, entry in waiting), default=0) or None
-        message = f"{where}: {_counted(len(waiting), inside)} undecided, at {_shown(waiting[0][0])}"
+        # What nobody can tell is more than any number.
+        one, most = max(waiting, key=lambda pair: math.inf if pair[1].paths_needed is None else pair[1].paths_needed)
+        needed = most.paths_needed
+        message = f"{where}: {_counted(len(waiting), inside)} undecided, at {_shown(one)}"
         message += f"; about {needed:,} paths there would decide" if needed is not None else ""
     if refused:
         one, entry = refused[0]
@@ -132,13 +150,19 @@ def _waits(entry: ScenarioLevelEntry) -> bool:
     """Return whether it is open that a scheme is fine: for another reason than its edge, or far below 1."""
     if entry.outcome != "undecided":
         return False
-    return entry.reason not in _OF_THE_EDGE or entry.edge_low is None or entry.edge_low < LEAST_EDGE
+    return not near_enough(entry.reason, entry.edge_low, LEAST_EDGE)
 
 
-def _entry(scenario: ScenarioEntry, level: int) -> ScenarioLevelEntry | None:
-    """Return how a level does in a scenario; None where the kernel did not come so far."""
-    stopped = scenario.message is not None and scenario.level in (None, level)
-    return None if stopped else next((one for one in scenario.levels if one.level == level), None)
+def _entry(scenario: ScenarioEntry, level: int, levels: int) -> ScenarioLevelEntry | None:
+    """Return how a level, of so many, does in a scenario; None where the kernel stopped before it was known.
+
+    A kernel that stopped once all levels had been looked at did so on any one that is not refused for its own reason.
+    """
+    entry = next((one for one in scenario.levels if one.level == level), None)
+    if scenario.message is None or entry is None or entry.outcome == "refused":
+        return entry
+    shown = len(scenario.levels) < levels or any(one.reason == "reference" for one in scenario.levels)
+    return entry if shown else None
 
 
 def _why(entry: ScenarioLevelEntry | None) -> str:

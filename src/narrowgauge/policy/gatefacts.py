@@ -70,15 +70,27 @@ def _differing(policy: PolicyDocument, asked: Mapping[str, object]) -> Iterator[
         table, _, name = key.partition(".")
         yield from _unlike(key, _table(asked, table).get(name), policy.assumed[key])
     yield from _unlike("formats.today", _table(asked, "formats").get("today"), policy.today)
-    if policy.cost.source != "measured":
-        for name in get_args(FormatName):
-            if name in policy.cost.steps:
-                yield from _unlike(f"cost.{name}", cost.get(name), policy.cost.steps[name])
-        # What an approximate draw costs was asked where such draws were.
-        cheap = () if policy.cost.approximate_draws is None else ("approximate_draws",)
-        for key in ("draws", *cheap, "path"):
-            yield from _unlike(f"cost.{key}", cost.get(key), getattr(policy.cost, key))
+    yield from _costs(policy, cost)
     yield from _parameters(policy, _table(asked, "parameters"))
+
+
+def _costs(policy: PolicyDocument, cost: Mapping[str, Any]) -> Iterator[tuple[str, object, object]]:
+    """Yield what differs of the costs; those of a step that were measured are measured again, or taken as they were."""
+    steps = [
+        unlike
+        for name in get_args(FormatName)
+        if name in policy.cost.steps
+        for unlike in _unlike(f"cost.{name}", cost.get(name), policy.cost.steps[name])
+    ]
+    measured, was = cost.get("measured", False), policy.cost.source == "measured"
+    if steps and measured != was:
+        yield "cost.measured", measured, was
+    elif not was:
+        yield from steps
+    # What an approximate draw costs was asked where such draws were.
+    cheap = () if policy.cost.approximate_draws is None else ("approximate_draws",)
+    for key in ("draws", *cheap, "path"):
+        yield from _unlike(f"cost.{key}", cost.get(key), getattr(policy.cost, key))
 
 
 def _parameters(policy: PolicyDocument, given: Mapping[str, Any]) -> Iterator[tuple[str, object, object]]:

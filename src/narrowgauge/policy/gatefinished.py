@@ -24,7 +24,8 @@ from narrowgauge.record.gate import Finding, GateEntry
 __all__ = ["judge_finished"]
 
 _ANEW = "audit the kernel anew"
-# What an audit measures follows from these, and from nothing else of an audit file but how much is drawn.
+# What is judged follows from these, but for their keys in _DRAWN. Of [domain] the box is looked at where its claim
+# is judged, and nothing is judged that [lines] asks for.
 _TABLES: Final = (
     "kernel",
     "library",
@@ -36,6 +37,16 @@ _TABLES: Final = (
     "draws",
     "branches",
     "cost",
+    "sampling",
+)
+# They say how much is drawn, how long that may take, and from which streams.
+_DRAWN: Final = (
+    "branches.paths",
+    "command.seconds",
+    "sampling.block",
+    "sampling.paths",
+    "sampling.most_paths",
+    "sampling.seed",
 )
 # Functions in files of their own, which a policy's fingerprint does not cover.
 _BESIDE: Final = (("draws", "approximate"), ("branches", "low"), ("branches", "correction"), ("branches", "library"))
@@ -98,7 +109,9 @@ def _otherwise(given: Mapping[str, Any], asked: Mapping[str, object]) -> Iterato
         now, then = _table(given, name), _table(asked, name)
         for key in dict.fromkeys([*now, *then]):
             dotted = f"{name}.{key}"
-            if key in now and (key in then or name == "parameters" or not then):
+            if dotted in _DRAWN:
+                same = True
+            elif key in now and (key in then or name == "parameters" or not then):
                 same = key in then and _same(now[key], then[key], spaced=dotted == "kernel.layout")
             elif key in now:
                 same = True  # it says nothing of such a kernel, as the audit knew
@@ -112,12 +125,9 @@ def _otherwise(given: Mapping[str, Any], asked: Mapping[str, object]) -> Iterato
 
 def _was_given(dotted: str, value: object, given: Mapping[str, Any], assumed: list[Any]) -> bool:
     """Return whether a key that the audit file has not stood in the one that was audited."""
-    table = dotted.partition(".")[0]
     if dotted in assumed or value is None:
         return False
-    if table == "kernel" and ("library" in given or "command" in given):
-        return False  # these two say what is run
-    return table not in ("draws", "branches") or table not in given  # of which further keys follow from those given
+    return not (dotted.startswith("kernel.") and ("library" in given or "command" in given))  # these say what is run
 
 
 def _same(now: object, then: object, *, spaced: bool = False) -> bool:

@@ -20,9 +20,22 @@ __all__ = [
     "ScenarioLevelEntry",
     "SideEntry",
     "SpanEntry",
+    "edge_alone",
+    "near_enough",
 ]
 
 OutcomeWord = Literal["passes", "undecided", "refused"]
+_OF_THE_EDGE = ("budget", "edge")  # why a level is open of which all else is known
+
+
+def edge_alone(reason: str | None) -> bool:
+    """Return whether an edge is all that is open of a level that is undecided for this reason."""
+    return reason in _OF_THE_EDGE
+
+
+def near_enough(reason: str | None, edge_low: float | None, least: float) -> bool:
+    """Return whether an edge is all that is open of a level, and its lower bound is so much at least."""
+    return edge_alone(reason) and edge_low is not None and edge_low >= least
 
 
 class SpanEntry(Entry, frozen=True, kw_only=True):
@@ -43,6 +56,7 @@ class ScenarioLevelEntry(Entry, frozen=True, kw_only=True):
     """How the scheme of a level does in one scenario; `reason` is None where it passes.
 
     `edge` is that of the scheme's narrow format, `bias` that of the scheme, each of the quantity that is worst off.
+    An undecided level has no edge where a quantity that is open has none.
     """
 
     level: int

@@ -71,7 +71,7 @@ CHECKS: Final[dict[str, str]] = {
     "rmse": "a run with the planned paths still reaches the target",
     "lost additions": "the share of additions that change nothing has not grown",
     "subnormals": "the share of subnormal results has not grown",
-    "domain": "the schemes of the policy hold at the corners of the box of parameters that it claims",
+    "domain": "the schemes of the policy hold where the box of parameters that it claims was tried",
 }
 
 # 1 before 3: what failed is to be put right, whatever else is open. Wrong usage, 2, leaves as an error.

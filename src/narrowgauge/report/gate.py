@@ -54,7 +54,7 @@ def _entry(entry: GateEntry, width: int) -> Iterator[str]:
         yield ""
     for check in asked:
         yield from _folded(f"{check} asks whether {CHECKS[check]}", width)
-    if entry.verdict == "inconclusive" and any(one.state == "undecided" and one.limit is not None for one in shown):
+    if entry.verdict == "inconclusive" and any(_waits(one) for one in shown):
         yield ""
         by = (
             f"a larger most_paths under [gate] in {entry.audit}"
@@ -65,6 +65,12 @@ def _entry(entry: GateEntry, width: int) -> Iterator[str]:
     if entry.verdict == "fail" or any(one.state == "note" for one in shown):
         yield ""
         yield from _folded(f"to renew the policy, where the change is meant: {entry.renew}", width)
+
+
+def _waits(one: Finding) -> bool:
+    """Return whether more paths may decide a finding: a figure that does not exist is none however many there are."""
+    figure = one.limit is not None and (one.estimate is not None or one.paths_needed is not None)
+    return one.state == "undecided" and figure
 
 
 def _head(entry: GateEntry) -> Iterator[str]:
