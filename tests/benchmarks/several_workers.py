@@ -73,8 +73,12 @@ def _long_enough(size: Size) -> dict[str, Any]:
 
 def _cluster(stack: ExitStack) -> Any:
     """Return the executor of a dask cluster of two workers, one thread each, that ends with the stack."""
+    import dask
     from distributed import Client, LocalCluster
 
+    # Left as it is, glibc gives memory back after every array: the workers were half as fast, and so was, with that in
+    # the environment of this process, all that is started after them.
+    stack.enter_context(dask.config.set({"distributed.nanny.pre-spawn-environ": {}}))
     cluster = stack.enter_context(LocalCluster(n_workers=2, threads_per_worker=1, dashboard_address=None))
     return stack.enter_context(Client(cluster)).get_executor(pure=False)
 

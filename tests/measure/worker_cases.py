@@ -96,6 +96,11 @@ def blocks_until(
     return found, fingerprints, None
 
 
+def handed(bench: Bench) -> str | None:
+    """What a worker has in its environment of how to give memory back; a task."""
+    return os.environ.get("MALLOC_TRIM_THRESHOLD_")
+
+
 def finest(bench: Bench) -> int:
     """A task: the finest level."""
     return bench.file.ladder.finest

@@ -22,22 +22,9 @@ from scipy.stats import chi2, t
 from narrowgauge.record.audit import LawEntry
 
 __all__ = [
-    "REJECTED_BELOW",
-    "AccumulationFit",
-    "Agreement",
-    "LawPoint",
-    "Part",
-    "SignalDecay",
-    "agreement",
-    "correction_at",
-    "established",
-    "fit",
-    "rejected",
-    "rules",
-    "sentence",
-    "signal_decay",
-    "usable",
-]
+    "REJECTED_BELOW", "AccumulationFit", "Agreement", "LawPoint", "Part", "SignalDecay", "agreement", "correction_at",
+    "established", "fit", "rejected", "rules", "sentence", "signal_decay", "usable",
+]  # fmt: skip
 
 Part = Literal["floor", "walk", "drift"]
 _Array = np.ndarray[Any, np.dtype[np.float64]]

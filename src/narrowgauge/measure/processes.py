@@ -49,6 +49,9 @@ _FALLING = 5.0  # seconds for a process to end once its pipe is cut
 _TEMPORARY = ("TMPDIR", "TEMP", "TMP")
 # Read by libraries that a kernel imports only later, when they can no longer be pinned in time.
 _ONE_THREAD = dict.fromkeys(("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS"), "1")
+# A dask cluster begun in the same program leaves this in the environment: glibc then gives memory back after every
+# array, and most of the time goes into page faults.
+_TRIMMING = "MALLOC_TRIM_THRESHOLD_"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -155,6 +158,7 @@ class _Slot(threading.Thread):
         # What a worker that is ended leaves in the folder for temporary files goes with the engine.
         self._scratch = scratch
         self._environment = {**os.environ, **_ONE_THREAD, **dict.fromkeys(_TEMPORARY, scratch)}
+        self._environment.pop(_TRIMMING, None)
         self._job, self._timeout, self._tasks = job, timeout, tasks
         self._trace = tempfile.TemporaryFile()  # noqa: SIM115  # `run` closes it; without a name, nothing is left of it
         self._lock = threading.Lock()  # around all of the following
