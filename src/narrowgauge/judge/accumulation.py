@@ -19,10 +19,10 @@ import numpy as np
 from scipy.optimize import nnls
 from scipy.stats import chi2, t
 
-from narrowgauge.record.audit import LawEntry
+from narrowgauge.record.audit import REJECTED_BELOW, LawEntry
 
 __all__ = [
-    "REJECTED_BELOW", "AccumulationFit", "Agreement", "LawPoint", "Part", "SignalDecay", "agreement", "correction_at",
+    "AccumulationFit", "Agreement", "LawPoint", "Part", "SignalDecay", "agreement", "correction_at",
     "established", "fit", "rejected", "rules", "sentence", "signal_decay", "usable",
 ]  # fmt: skip
 
@@ -34,7 +34,6 @@ _LEAST_LEVELS = 4
 _LAW_ERROR = 0.01  # the law itself is good to about 1% of a variance; measured, no source
 _REWEIGHTINGS = 2
 _AGREEMENT = 0.05
-REJECTED_BELOW = 0.001  # of p: a law that holds is rejected once in a thousand fits
 _DECAY_LEVELS = 4
 _PARTS: tuple[Part, ...] = ("floor", "walk", "drift")  # in order of the power of n
 _WORDS: dict[Part, str] = {

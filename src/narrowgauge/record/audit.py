@@ -41,6 +41,7 @@ from narrowgauge.record.reach import (
 from narrowgauge.record.source import SourceEntry
 
 __all__ = [
+    "REJECTED_BELOW",
     "SCHEMA",
     "AccumulationEntry",
     "AllocationEntry",
@@ -86,6 +87,7 @@ __all__ = [
 ]
 
 SCHEMA = "narrowgauge-audit/1"
+REJECTED_BELOW = 0.001  # of `fit_p`: a law that holds is rejected once in a thousand fits
 
 
 class KernelEntry(Entry, frozen=True, kw_only=True):

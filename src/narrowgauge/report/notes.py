@@ -4,8 +4,8 @@ from __future__ import annotations
 
 from collections.abc import Iterable
 
-from narrowgauge.judge.accumulation import REJECTED_BELOW
 from narrowgauge.record.audit import (
+    REJECTED_BELOW,
     AccumulationEntry,
     ArmEntry,
     AuditRecord,

@@ -6,8 +6,7 @@ from collections.abc import Callable, Iterable, Sequence
 
 from rich.text import Text
 
-from narrowgauge.judge.accumulation import REJECTED_BELOW
-from narrowgauge.record.audit import AuditRecord, QuantityEntry
+from narrowgauge.record.audit import REJECTED_BELOW, AuditRecord, QuantityEntry
 from narrowgauge.report.blocks import Block, Drawing, Part, Table, Words, points, tabled
 from narrowgauge.report.charts import LineChart, spoken
 from narrowgauge.report.crossing import NO_NOISE, crossing_chart, crossing_words
