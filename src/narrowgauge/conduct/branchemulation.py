@@ -109,8 +109,12 @@ class Emulation:
         """Return the lines that add two products, of which a compiler may fuse either."""
         if not self._usual:
             return []
-        found, setting = self._emulated(Manner("fused", across=True), self._draws)
-        return [] if found is None or setting is None else list(setting.of_two)
+        manner = Manner("fused", across=True)
+        found, setting = self._emulated(manner, self._draws)
+        if found is None or setting is None:
+            return []
+        self._keep(manner, setting, gave=not differs(found, self._wanted).any())
+        return list(setting.of_two)
 
     def gives(self, manner: Manner) -> bool:
         """Return whether the function emulated in a manner gives what is wanted on every path."""
@@ -127,8 +131,11 @@ class Emulation:
         found, setting = self._emulated(manner, draws)
         gave = found is not None and not differs(found, wanted).any()
         if manner is not None and setting is not None and not (gave and draws is self._few):
-            self._done.append(_Done(manner, frozenset(setting.of_two), setting.crossed, gave))
+            self._keep(manner, setting, gave=gave)
         return gave
+
+    def _keep(self, manner: Manner, setting: LooserSetting, *, gave: bool) -> None:
+        self._done.append(_Done(manner, frozenset(setting.of_two), setting.crossed, gave))
 
     def _emulated(self, manner: Manner | None, draws: Given) -> tuple[Doubles | None, LooserSetting | None]:
         """Return the results in a manner, or as usual; None where it cannot be emulated so, which explains nothing."""

@@ -25,7 +25,10 @@ __all__ = [
     "identity_beside",
     "identity_of",
     "identity_of_command",
+    "module_named",
+    "named_file",
     "origin_of_sources",
+    "sources_beside",
     "versions_of",
 ]
 
@@ -91,20 +94,46 @@ def identity_of(kernel: Callable[..., Any] | str | Path, *, run: str, covers: Co
         raise PolicyError(f"the kernel cannot be read: {problem.filename}: {problem.strerror}") from None
 
 
+def named_file(target: str, folder: Path) -> Path | None:
+    """Return the file of a path relative to a folder, or of an importable module; None where it is not there.
+
+    Nothing is imported.
+    """
+    if target.endswith(".py"):
+        path = folder / target
+        return path.resolve() if path.is_file() else None
+    found = Sources([folder]).find(target)
+    return None if found is None or found.file is None else Path(found.file)
+
+
+def sources_beside(
+    folder: Path, path: Path | None, *, packaged: bool, modules: Sequence[str], shared: Sequence[str]
+) -> Sources:
+    """Return where listed modules are searched for: the folder of a kernel that is no part of a package comes first.
+
+    `folder` is that of the audit file, `path` the kernel's file.
+    """
+    beside = [] if path is None else [path.parent]
+    # A package may hold a module of its own name, which must not hide it: its folder comes last.
+    return Sources([folder] if packaged else [*beside, folder], modules, shared, last=beside)
+
+
+def module_named(sources: Sources, path: Path, target: str) -> str:
+    """Return the name of the kernel's module: that under which it was found, else that of its file, or what it says."""
+    return sources.name_of(path) or (path.stem if target.endswith(".py") else target)
+
+
 def identity_beside(folder: Path, run: str, *, modules: Sequence[str], shared: Sequence[str]) -> str:
     """Return the fingerprint of the Python kernel that an audit file in a folder names; nothing is imported or run.
 
     `run`, `modules` and `shared` are what its table [kernel] says. Raises PolicyError where something is not there.
     """
     target, _, name = run.rpartition(":")
-    inside = not target.endswith(".py")
-    found = Sources([folder]).find(target) if inside else None
-    file = folder / target if not inside else Path((found.file if found is not None else None) or "")
-    if not file.is_file():
+    path = named_file(target, folder)
+    if path is None:
         raise PolicyError(f"there is no {target}")
-    path = file.resolve()
-    sources = Sources([folder] if inside else [path.parent, folder], modules, shared, last=[path.parent])
-    sources.place(sources.name_of(path) or (target if inside else path.stem), str(path))
+    sources = sources_beside(folder, path, packaged=not target.endswith(".py"), modules=modules, shared=shared)
+    sources.place(module_named(sources, path, target), str(path))
     missing = next((module for module in modules if sources.find(module) is None), None)
     if missing is not None:
         raise PolicyError(f"there is no module {missing!r}, which kernel.modules lists")

@@ -11,6 +11,7 @@ from narrowgauge.dispatch.setting import Place
 from narrowgauge.errors import AuditFileError
 from narrowgauge.kernel.auditfile import AuditFile
 from narrowgauge.kernel.audittables import RULES, shown
+from narrowgauge.kernel.identity import named_file, sources_beside
 
 __all__ = ["TWICE", "allowed_lines", "check_listed", "compiled_code", "located_file", "sources_of"]
 
@@ -21,12 +22,10 @@ TWICE = "a module that can be executed twice; else list it under kernel.shared, 
 def sources_of(
     audit_file: AuditFile, function: Callable[..., object] | None, path: Path | None, target: str
 ) -> Sources:
-    """Return where listed modules are searched for: the folder of a kernel that is no part of a package comes first."""
-    beside = [] if path is None else [path.parent]
-    inside = "." in function.__module__ if function is not None else not target.endswith(".py")
-    # A package may hold a module of its own name, which must not hide it: its folder comes last.
-    folders = [audit_file.folder] if inside else [*beside, audit_file.folder]
-    return Sources(folders, audit_file.kernel.modules, audit_file.kernel.shared, last=beside)
+    """Return where the listed modules of an audit file are searched for; its kernel may have been handed over."""
+    packaged = "." in function.__module__ if function is not None else not target.endswith(".py")
+    table = audit_file.kernel
+    return sources_beside(audit_file.folder, path, packaged=packaged, modules=table.modules, shared=table.shared)
 
 
 def check_listed(audit_file: AuditFile, sources: Sources) -> None:
@@ -89,19 +88,16 @@ def compiled_code(sources: Sources, found: Found, key: str, source: str) -> Code
 
 def located_file(target: str, audit_file: AuditFile) -> Path:
     """Return the file of a path or of an importable module; nothing is imported."""
+    path = named_file(target, audit_file.folder)
+    if path is not None:
+        return path
     if target.endswith(".py"):
-        path = audit_file.folder / target
-        if path.is_file():
-            return path.resolve()
         raise AuditFileError(
             audit_file.source,
             "kernel.run",
-            f"no such file: {path}",
+            f"no such file: {audit_file.folder / target}",
             "a Python file, relative to the audit file",
         )
-    found = Sources([audit_file.folder]).find(target)
-    if found is not None and found.file is not None:
-        return Path(found.file)
     raise AuditFileError(
         audit_file.source,
         "kernel.run",

@@ -26,7 +26,7 @@ from narrowgauge.kernel.audittables import KernelTable, LibraryTable
 from narrowgauge.kernel.branchlibrary import PairLibrary
 from narrowgauge.kernel.command import Command
 from narrowgauge.kernel.fingerprint import fingerprint
-from narrowgauge.kernel.identity import Origin, origin_of_sources
+from narrowgauge.kernel.identity import Origin, module_named, origin_of_sources
 from narrowgauge.kernel.library import Library
 from narrowgauge.kernel.listed import TWICE, allowed_lines, check_listed, compiled_code, located_file, sources_of
 
@@ -156,7 +156,7 @@ def find_kernel(audit_file: AuditFile) -> KernelSource:
     sources = sources_of(audit_file, function, path, target)
     code, module = None, target
     if function is None and path is not None:
-        module = sources.name_of(path) or (path.stem if target.endswith(".py") else target)
+        module = module_named(sources, path, target)
         code = compiled_code(sources, sources.place(module, str(path)), "kernel.run", source)
     check_listed(audit_file, sources)
     return KernelSource(
